@@ -1,0 +1,37 @@
+"""Atomic writing and hashing; floor 0, light."""
+
+from __future__ import annotations
+
+import hashlib
+import os
+import tempfile
+from pathlib import Path
+
+__all__ = ["sha256_of", "write_atomic"]
+
+
+def write_atomic(path: str | os.PathLike[str], data: bytes) -> None:
+    """Write a file so that a reader sees the old bytes or the new ones, never a part.
+
+    The data go to a temporary file in the same folder, are flushed to disk, and take the name in one
+    step. OSError passes through, with the temporary file removed.
+    """
+    path = Path(path)
+    path.parent.mkdir(parents=True, exist_ok=True)
+    fd, temporary = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.", suffix=".part")
+    try:
+        with os.fdopen(fd, "wb") as f:
+            f.write(data)
+            f.flush()
+            os.fsync(f.fileno())
+        Path(temporary).chmod(0o644)
+        Path(temporary).replace(path)
+    except BaseException:
+        Path(temporary).unlink(missing_ok=True)
+        raise
+
+
+def sha256_of(path: str | os.PathLike[str]) -> str:
+    """SHA-256 of a file's bytes, as hexadecimal text."""
+    with Path(path).open("rb") as f:
+        return hashlib.file_digest(f, "sha256").hexdigest()

@@ -1,0 +1,14 @@
+"""The tolerance ladder: every tolerance a test may use, each with its reason.
+
+A test takes a rung by name. A new rung needs a reason here; none is loosened to make a test pass.
+Relative to the value unless "of scale" is said (`distill.query.scale_of`).
+"""
+
+EXACT = 0.0  # enumeration in rational arithmetic, or the same graph run twice
+CLOSED_FORM = 1e-12  # float64 formula against enumeration or mpmath: a few hundred roundings
+QUADRATURE = 1e-9  # of scale: fast quadrature against the oracle's adaptive one, which is asked for 1e-11
+RELATIVE_TAIL = 1e-6  # relative, VOC down to 1e-30 of scale: what the labels promise
+STANDARD_ERRORS = 4.0  # Monte Carlo at a fixed seed: a miss has odds of 6e-5 a check
+PUBLISHED = 0.5  # units of the last place printed: what a rounded table can hold
+ONNX_DOUBLE = 0.0  # a double graph with one thread repeats the estimator bit for bit
+ONNX_FLOAT = 1e-5  # on a unit-scale target, where the graph computes in float32

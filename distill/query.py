@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -11,7 +12,7 @@ from distill import schema
 from distill.errors import InputError
 from distill.tree import BeliefTree, Floats, Ints
 
-__all__ = ["Priced", "Query", "scale_of"]
+__all__ = ["Priced", "Query", "net_value", "resolve", "scale_of", "to_output"]
 
 
 @dataclass(frozen=True)
@@ -93,3 +94,50 @@ def scale_of(tree: BeliefTree) -> float:
         total = tree.alpha + tree.beta
         sd = (tree.high - tree.low) * np.sqrt(tree.alpha / total * (tree.beta / total) / (total + 1))
     return float(np.max(gain[tree.leaf_nodes] * sd))
+
+
+def resolve(
+    tree: BeliefTree,
+    *,
+    horizon: float | None = None,
+    batch: int | None = None,
+    rate: bool = False,
+    remaining: int | None = None,
+    tolerance: float | None = None,
+) -> Query:
+    """The query for one tree: a given argument beats the record's scalar; else dynamic and batch 1.
+
+    Raises InputError for a rate whose `remaining` neither the caller nor the record gives.
+    """
+    if horizon is None:
+        horizon = tree.horizon if tree.horizon is not None else math.inf
+    if remaining is None:
+        remaining = tree.remaining
+    if rate:
+        return Query(horizon, None, remaining, tolerance)
+    if batch is None:
+        batch = tree.batch if tree.batch is not None else 1
+    return Query(horizon, batch, remaining, tolerance)
+
+
+def net_value(tree: BeliefTree, query: Query, priced: Priced) -> Floats:
+    """VOC - batch x cost, or rate - cost; shape (n_leaves,), the unit of `priced.voc`."""
+    assert tree.cost is not None
+    return priced.voc - (tree.cost if query.rate else priced.batch * tree.cost)
+
+
+def to_output(tree: BeliefTree, query: Query, priced: Priced) -> dict[str, Any]:
+    """The JSON object that `price` prints for one tree.
+
+    Keys: `voc`, `batch`, `error` per leaf in node order, `value` per root action in child order, `best`
+    (0-based leaf position of the best net value, the first on ties), `method`, `id`.
+    """
+    return {
+        "id": tree.id,
+        "voc": priced.voc.tolist(),
+        "batch": priced.batch.tolist(),
+        "value": priced.value.tolist(),
+        "error": priced.error.tolist(),
+        "best": int(np.argmax(net_value(tree, query, priced))),
+        "method": priced.method,
+    }

@@ -1,0 +1,25 @@
+"""`python -m distill` and the console command `voc-distill`."""
+
+from __future__ import annotations
+
+import sys
+
+
+def main() -> int:
+    """Run the command line; on a light installation say in one line what is missing."""
+    try:
+        from distill.cli import run
+    except ModuleNotFoundError as e:
+        if (e.name or "").partition(".")[0] == "distill":
+            raise
+        print(
+            f"voc-distill: error: the command line needs the train extra (no module {e.name!r}): "
+            "pip install 'voc-distill[train]'",
+            file=sys.stderr,
+        )
+        return 2
+    return run(sys.argv[1:])
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -1,0 +1,1 @@
+"""Exact value of computation, one file a method; floor 2."""

@@ -13,19 +13,24 @@ from distill import schema
 from distill.errors import InputError
 from distill.tree import BeliefTree, Floats, Ints
 
-__all__ = ["from_record", "parse_record", "to_record"]
+__all__ = ["from_record", "parse_json", "parse_record", "to_record"]
 
 _PROB_SUM_SLACK = 1e-9  # the record's rule for probabilities under a chance node
 _COV_SLACK = 1e-9  # rounding allowed in symmetry and eigenvalues, of the largest variance
 
 
 def parse_record(text: str | bytes) -> BeliefTree:
-    """One `belief-tree/1` record from JSON text; InputError names key, rule and value.
+    """One `belief-tree/1` record from JSON text; InputError names key, rule and value."""
+    return from_record(parse_json(text))
+
+
+def parse_json(text: str | bytes) -> object:
+    """JSON text as Python objects; InputError names place and rule.
 
     Stricter than plain JSON readers: NaN and infinities, repeated keys and invalid UTF-8 are errors.
     """
     try:
-        obj = json.loads(text, parse_constant=_no_constant, object_pairs_hook=_no_repeats)
+        obj: object = json.loads(text, parse_constant=_no_constant, object_pairs_hook=_no_repeats)
     except json.JSONDecodeError as e:
         raise InputError(f"column {e.colno}", f"must be valid JSON ({e.msg})") from None
     except UnicodeDecodeError as e:
@@ -34,7 +39,7 @@ def parse_record(text: str | bytes) -> BeliefTree:
         raise InputError("record", "must not be nested so deeply") from None
     except ValueError as e:  # whole numbers of more digits than Python converts
         raise InputError("record", f"must be valid JSON ({e})") from None
-    return from_record(obj)
+    return obj
 
 
 def from_record(obj: object) -> BeliefTree:

@@ -1,0 +1,1 @@
+"""Closed-loop search with a simulator: record belief trees, compare ways to choose rollouts."""

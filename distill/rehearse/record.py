@@ -1,0 +1,165 @@
+"""Record the belief trees that a search meets, as traces."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from distill.allocation import RULES
+from distill.errors import InputError
+from distill.rehearse.gym_tables import GymTable
+from distill.rehearse.search import Rule, Search, Settings, estimate_prior
+from distill.rehearse.simulator import Simulator, State
+from distill.traces import write_trees
+from distill.tree import BeliefTree, Floats
+
+__all__ = ["POINTS", "SIMULATORS", "Recorded", "make_simulator", "record_traces", "recorded_trees"]
+
+POINTS = (0.0, 0.125, 0.25, 0.5, 0.75)  # shares of the budget spent when a tree is recorded
+_DIGITS = 9  # significant digits of a recorded belief: far below what a rollout's noise leaves unsaid
+_EXPLORE = 0.2  # share of recorded decisions that are played at random, so that states vary
+_EPISODE = 40  # decisions after which a recorded episode starts over
+
+
+@dataclass(frozen=True)
+class Recorded:
+    """What a recording wrote."""
+
+    trees: int
+    decisions: int
+    leaves: tuple[int, int]  # fewest and most
+    size: int  # bytes
+
+
+def _taxi() -> tuple[Simulator, Settings]:
+    return GymTable("taxi", discount=0.98, skill=0.9), Settings(depth=2, length=30)
+
+
+def _cliff_walking() -> tuple[Simulator, Settings]:
+    return GymTable("cliff_walking", discount=0.98, skill=0.9), Settings(depth=3, length=30)
+
+
+def _frozen_lake(name: str) -> tuple[Simulator, Settings]:
+    return GymTable(name, discount=0.99), Settings(depth=1, length=60)
+
+
+# name on the command line -> the simulator and how deep its search looks
+SIMULATORS: dict[str, Callable[[], tuple[Simulator, Settings]]] = {
+    "taxi": _taxi,
+    "cliff_walking": _cliff_walking,
+    "frozen_lake_4x4": lambda: _frozen_lake("frozen_lake_4x4"),
+    "frozen_lake_8x8": lambda: _frozen_lake("frozen_lake_8x8"),
+}
+
+
+def make_simulator(name: str) -> tuple[Simulator, Settings]:
+    """A simulator by name, with the look-ahead that suits it; InputError for an unknown name."""
+    if name not in SIMULATORS:
+        raise InputError("simulator", f"must be one of {', '.join(SIMULATORS)}", name)
+    return SIMULATORS[name]()
+
+
+def record_traces(
+    simulator: Simulator | str,
+    out: str | os.PathLike[str],
+    *,
+    decisions: int,
+    rollouts: int = 128,
+    seed: int = 0,
+    rule: Rule | None = None,
+    settings: Settings | None = None,
+    progress: Callable[[int], None] | None = None,
+) -> Recorded:
+    """Let the reference search play, and write its belief trees as JSON Lines of `belief-tree/1`.
+
+    out : a `.jsonl` or `.jsonl.gz` file, written in one step. The same arguments give the same bytes.
+    The other arguments are those of `recorded_trees`; `progress` is called with the number of
+    each decision, from 0, as its trees come in.
+    """
+    path = str(out)
+    if not path.endswith((".jsonl", ".jsonl.gz")):
+        raise InputError(path, "must end in .jsonl or .jsonl.gz")  # before the work, not after it
+    trees = []
+    for decision, tree in recorded_trees(
+        simulator, decisions=decisions, rollouts=rollouts, seed=seed, rule=rule, settings=settings
+    ):
+        trees.append(tree)
+        if progress is not None:
+            progress(decision)
+    write_trees(path, trees)
+    leaves = [tree.n_leaves for tree in trees]
+    return Recorded(len(trees), decisions, (min(leaves), max(leaves)), Path(path).stat().st_size)
+
+
+def recorded_trees(
+    simulator: Simulator | str,
+    *,
+    decisions: int,
+    rollouts: int = 128,
+    seed: int = 0,
+    rule: Rule | None = None,
+    settings: Settings | None = None,
+) -> Iterator[tuple[int, BeliefTree]]:
+    """(decision, tree) for each decision of the reference search, at the POINTS of its budget.
+
+    simulator : one that follows the protocol, with its `settings`, or a name of SIMULATORS.
+    decisions : how many. rollouts : budget of each. seed : of everything random.
+    rule : how rollouts are given out; None draws one of the named rules for each decision, so that
+        the trees are not those of one rule alone.
+
+    Each tree carries `count`, `remaining`, `id` and in `extra` the environment, state, decision and
+    rule. The prior comes from pilot rollouts of their own. The search plays its best action, one
+    time in five a random one, and restarts at the end of an episode.
+    """
+    if decisions < 1:
+        raise InputError("decisions", "must be at least 1", decisions)
+    if rollouts < 1:
+        raise InputError("rollouts", "must be at least 1", rollouts)
+    if isinstance(simulator, str):
+        simulator, usual = make_simulator(simulator)
+        settings = settings or usual
+    settings = settings or Settings()
+    pilot_rng, rng = (np.random.default_rng(s) for s in np.random.SeedSequence(seed).spawn(2))
+    prior = estimate_prior(simulator, settings, pilot_rng)
+    points = sorted({int(share * rollouts) for share in POINTS})
+    state, played = simulator.start(rng), 0
+    for decision in range(decisions):
+        now = rule if rule is not None else RULES[int(rng.integers(len(RULES)))]
+        search = Search(simulator, state, settings, prior, rng)
+        for stop, point in enumerate([*points, rollouts]):
+            search.spend(now, point - search.used, rollouts - search.used, rng)
+            if stop < len(points):
+                yield decision, _labelled(search, simulator.name, state, decision, now, rollouts - point)
+        action = search.best_action()
+        if rng.random() < _EXPLORE:
+            choices = simulator.actions(state)
+            action = choices[int(rng.random() * len(choices))]
+        state, _ = simulator.step(state, action, rng)
+        played += 1
+        if simulator.is_terminal(state) or played == _EPISODE:
+            state, played = simulator.start(rng), 0
+
+
+def _labelled(
+    search: Search, name: str, state: State, decision: int, rule: Rule, remaining: int
+) -> BeliefTree:
+    extra: dict[str, Any] = {
+        "environment": name,
+        "state": state if isinstance(state, int) else str(state),
+        "decision": decision,
+        "rule": rule if isinstance(rule, str) else getattr(rule, "__name__", "custom"),
+    }
+    tree = search.tree(remaining=remaining, id=f"{name}-{decision}-{search.used}", extra=extra)
+    assert tree.mean is not None
+    assert tree.var is not None
+    assert tree.noise_var is not None
+    return replace(tree, mean=_short(tree.mean), var=_short(tree.var), noise_var=_short(tree.noise_var))
+
+
+def _short(column: Floats) -> Floats:
+    return np.array([float(f"{x:.{_DIGITS}g}") for x in column])

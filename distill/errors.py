@@ -5,11 +5,12 @@ DistillError            anything the tool refuses; the command line prints it an
 +-- RefusedError        well-formed, but no method here can do it exactly
 |   +-- ToleranceError  a method exists and misses the tolerance that was asked for
 +-- ScorerFileError     a scorer file that the loader does not accept
++-- ExportError         an estimator that cannot be shipped as it is, or a file that fails its checks
 """
 
 from __future__ import annotations
 
-__all__ = ["DistillError", "InputError", "RefusedError", "ToleranceError", "ScorerFileError"]
+__all__ = ["DistillError", "InputError", "RefusedError", "ToleranceError", "ScorerFileError", "ExportError"]
 
 
 class DistillError(Exception):
@@ -52,6 +53,10 @@ class ToleranceError(RefusedError):
 
 class ScorerFileError(DistillError):
     """A scorer file that the loader refuses; the text gives the reason."""
+
+
+class ExportError(DistillError):
+    """An estimator that cannot be shipped, or whose file does not repeat it; nothing was written."""
 
 
 def _short(value: object, limit: int = 60) -> str:

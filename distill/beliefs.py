@@ -9,6 +9,8 @@ inside the search kernels of `distill.allocation`.
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 
 from distill.tree import Floats, Ints
@@ -24,7 +26,7 @@ __all__ = [
 ]
 
 
-def gaussian_mean_update(mean, var, noise_var, rollouts, observed):  # type: ignore[no-untyped-def]
+def gaussian_mean_update(mean: Any, var: Any, noise_var: Any, rollouts: Any, observed: Any) -> Any:
     r"""Posterior mean of a leaf value after `rollouts` whose average was `observed`.
 
     .. math:: m' = m + \frac{k v}{k v + n} (y - m)
@@ -38,7 +40,7 @@ def gaussian_mean_update(mean, var, noise_var, rollouts, observed):  # type: ign
     return mean + rollouts * var / (rollouts * var + noise_var) * (observed - mean)
 
 
-def gaussian_var_update(var, noise_var, rollouts):  # type: ignore[no-untyped-def]
+def gaussian_var_update(var: Any, noise_var: Any, rollouts: Any) -> Any:
     r"""Posterior variance of a leaf value after `rollouts`; shapes and units as for the mean.
 
     .. math:: v' = \frac{v\, n}{k v + n}
@@ -85,7 +87,7 @@ def dense_gaussian_update(
     return mean + white.T @ surprise, new
 
 
-def win_loss_update(alpha, beta, rollouts, wins):  # type: ignore[no-untyped-def]
+def win_loss_update(alpha: Any, beta: Any, rollouts: Any, wins: Any) -> Any:
     """Posterior Beta parameters of a win/loss leaf after `wins` of `rollouts`; all broadcast.
 
     >>> win_loss_update(1.0, 1.0, 3, 2)
@@ -94,7 +96,7 @@ def win_loss_update(alpha, beta, rollouts, wins):  # type: ignore[no-untyped-def
     return alpha + wins, beta + (rollouts - wins)
 
 
-def win_loss_mean(alpha, beta, low, high):  # type: ignore[no-untyped-def]
+def win_loss_mean(alpha: Any, beta: Any, low: Any, high: Any) -> Any:
     """Mean of low + (high - low) p, p ~ Beta(alpha, beta), u; all broadcast.
 
     >>> win_loss_mean(1.0, 3.0, 0.0, 8.0)
@@ -103,7 +105,7 @@ def win_loss_mean(alpha, beta, low, high):  # type: ignore[no-untyped-def]
     return low + (high - low) * (alpha / (alpha + beta))
 
 
-def win_loss_var(alpha, beta, low, high):  # type: ignore[no-untyped-def]
+def win_loss_var(alpha: Any, beta: Any, low: Any, high: Any) -> Any:
     r"""Variance of low + (high - low) p, p ~ Beta(alpha, beta), u^2; all broadcast.
 
     .. math:: (high - low)^2 \frac{\alpha\beta}{(\alpha+\beta)^2 (\alpha+\beta+1)}
@@ -115,7 +117,7 @@ def win_loss_var(alpha, beta, low, high):  # type: ignore[no-untyped-def]
     return (high - low) ** 2 * (alpha / total) * (beta / total) / (total + 1)
 
 
-def win_loss_noise_var(alpha, beta, low, high):  # type: ignore[no-untyped-def]
+def win_loss_noise_var(alpha: Any, beta: Any, low: Any, high: Any) -> Any:
     """Expected variance of one win/loss rollout given p, u^2; all broadcast.
 
     It is the variance of the value times alpha + beta, so that k rollouts shrink the variance of the

@@ -76,18 +76,14 @@ def _records(name: str) -> Iterator[tuple[str, bytes | InputError | object]]:
     if not name.endswith(_SUFFIXES):
         raise InputError(name, f"must end in {', '.join(_SUFFIXES)}, or be - for standard input")
     try:
-        size = Path(name).stat().st_size
-        stream = Path(name).open("rb")
-    except OSError as e:
-        raise InputError(name, f"must be a readable file ({e.strerror})") from None
-    with stream:
-        try:
+        with Path(name).open("rb") as stream:
             if name.endswith(".json"):
                 yield from _document(stream, name)
             else:
-                yield from _lines(stream, name, size if name.endswith(".gz") else None)
-        except OSError as e:
-            raise InputError(name, f"must be a readable file ({e.strerror or e})") from None
+                packed_size = os.fstat(stream.fileno()).st_size if name.endswith(".gz") else None
+                yield from _lines(stream, name, packed_size)
+    except OSError as e:
+        raise InputError(name, f"must be a readable file ({e.strerror or e})") from None
 
 
 def _document(stream: BinaryIO, name: str) -> Iterator[tuple[str, bytes | InputError | object]]:
@@ -125,7 +121,10 @@ def _lines(
             return
         taken += len(line)
         if packed_size is not None and taken > _FREE + _MOST_RATIO * packed_size:
-            yield place, InputError("gzip", f"must not unpack to more than {_MOST_RATIO} times the file's size")
+            yield (
+                place,
+                InputError("gzip", f"must not unpack to more than {_MOST_RATIO} times the file's size"),
+            )
             return
         if len(line) > _MOST_LINE:
             yield place, InputError("record", f"must be at most {_MOST_LINE >> 20} MB long")

@@ -1,0 +1,373 @@
+"""Labelled trees on disk: Parquet shards and their manifest; floor 4.
+
+A dataset is a folder:
+    manifest.json               what was asked of what, shard list with row counts and SHA-256
+    trees-NNNNN.parquet         one row a tree: the full record, with list columns
+    candidates-NNNNN.parquet    one row a candidate: the leaf's columns, its label and error bound
+    aside-NNNNN.parquet         trees that got no label good enough, with the reason; only where there are any
+Every file is written in one step and named by the manifest only after that. Any Parquet reader opens
+them; meaning and unit of each column are in the Parquet metadata.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import math
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any, Final
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
+from numpy.typing import NDArray
+
+from distill import schema
+from distill.errors import InputError, RefusedError
+from distill.files import sha256_of, write_atomic
+from distill.query import Priced, Query
+from distill.tree import BeliefTree, LeafTable, leaf_table
+
+__all__ = [
+    "Labelled",
+    "read_candidates",
+    "read_manifest",
+    "read_trees",
+    "verify",
+    "write_manifest",
+    "write_shard",
+]
+
+MANIFEST: Final = "manifest.json"
+_KINDS: Final = ("trees", "candidates", "aside")
+
+_I32, _I64, _F64, _TEXT = pa.int32(), pa.int64(), pa.float64(), pa.string()
+_FLOATS = pa.list_(_F64)
+
+# Column -> (type, meaning and unit). `u` is the tree's unit of utility.
+_LEAF_COLUMNS: Final = {
+    "mean": "u; posterior mean of the leaf value",
+    "var": "u^2; posterior variance of the leaf value (diagonal of the covariance, where there is one)",
+    "noise_var": "u^2; variance of one rollout around the leaf value",
+    "alpha": "1; Beta belief over the win probability",
+    "beta": "1; Beta belief over the win probability",
+    "low": "u; value of a loss",
+    "high": "u; value of a win",
+    "count": "rollouts so far",
+    "cost": "u a rollout",
+}
+_TREE_COLUMNS: Final[dict[str, tuple[pa.DataType, str]]] = {
+    "tree": (_I64, "number of the tree in this dataset"),
+    "parent": (pa.list_(_I32), "per node: its parent, -1 for the root; parents come before children"),
+    "kind": (pa.list_(pa.int8()), "per node: 0 decision, 1 chance, 2 leaf"),
+    "reward": (_FLOATS, "u; per node: reward of the edge into it"),
+    "discount": (_FLOATS, "1; per node: discount of the edge into it"),
+    "prob": (_FLOATS, "1; per node: probability of the edge into it, 1 unless under a chance node"),
+    **{name: (_FLOATS, f"per leaf, in node order: {what}") for name, what in _LEAF_COLUMNS.items()},
+    "cov": (_FLOATS, "u^2; leaves x leaves, row by row: covariance of the leaf values; then var is null"),
+    "horizon": (_F64, "rollouts a leaf still receives; the record's, null if it gave none"),
+    "batch": (_I64, "rollouts a candidate; the record's, null if it gave none"),
+    "remaining": (_I64, "rollouts left; the record's, null if it gave none"),
+    "id": (_TEXT, "the record's id, as JSON"),
+    "extra": (_TEXT, "the record's extra, as JSON"),
+}
+_TREE_LABELS: Final[dict[str, tuple[pa.DataType, str]]] = {
+    "value": (_FLOATS, "u; per root action, in child order: exact value V_h"),
+    "method": (_TEXT, "name of the exact method"),
+}
+_ASIDE_LABELS: Final[dict[str, tuple[pa.DataType, str]]] = {
+    "reason": (_TEXT, "why the tree has no label in this dataset"),
+}
+_CANDIDATE_COLUMNS: Final[dict[str, tuple[pa.DataType, str]]] = {
+    "tree": (_I64, "number of the tree in this dataset"),
+    "leaf": (_I32, "0-based position of the leaf, in node order"),
+    "action": (_I32, "0-based position of the leaf's root action, in child order"),
+    "gain": (_F64, "1; product of the discounts from the root; null where a leaf table cannot hold the tree"),
+    "offset": (_F64, "u; discounted rewards from the root; null where a leaf table cannot hold the tree"),
+    **{name: (_F64, what) for name, what in _LEAF_COLUMNS.items()},
+    "remaining": (_I64, "rollouts left, as the label assumes; null where neither record nor query gave it"),
+    "horizon": (_F64, "rollouts a leaf still receives, as the label assumes; 0 static, inf dynamic"),
+    "batch": (_I64, "rollouts of the candidate; null where the label is a rate"),
+    "label": (_F64, "exact VOC, u; where batch is null the rate, u a rollout"),
+    "label_batch": (_I64, "rollouts that the label assumes: the batch, or the best one of the rate"),
+    "error": (_F64, "bound on the absolute error of label, same unit"),
+}
+
+
+@dataclass(frozen=True, eq=False)
+class Labelled:
+    """One tree of a dataset with its exact labels, or with the reason why it has none."""
+
+    number: int
+    tree: BeliefTree
+    query: Query
+    priced: Priced | None
+    reason: str = ""
+
+
+# --- writing ---------------------------------------------------------------------------------------
+
+
+def write_shard(folder: Path, part: int, rows: Sequence[Labelled]) -> dict[str, Any]:
+    """Write one shard's files; returns its manifest entry (row counts, and SHA-256 by file name).
+
+    The same rows give the same bytes. Rows without labels go to the `aside` file.
+    """
+    good = [r for r in rows if r.priced is not None]
+    aside = [r for r in rows if r.priced is None]
+    tables = {"trees": _trees_table(good), "candidates": _candidates_table(good)}
+    if aside:
+        tables["aside"] = _trees_table(aside)
+    files = {}
+    for kind, table in tables.items():
+        name = f"{kind}-{part:05d}.parquet"
+        sink = pa.BufferOutputStream()
+        pq.write_table(table, sink, compression="zstd", row_group_size=1 << 17)
+        data = sink.getvalue().to_pybytes()
+        write_atomic(folder / name, data)
+        files[name] = hashlib.sha256(data).hexdigest()
+    return {
+        "part": part,
+        "trees": len(good),
+        "candidates": tables["candidates"].num_rows,
+        "aside": len(aside),
+        "files": files,
+    }
+
+
+def _trees_table(rows: Sequence[Labelled]) -> pa.Table:
+    trees = [r.tree for r in rows]
+    columns: dict[str, Any] = {"tree": [r.number for r in rows]}
+    for name in ("parent", "kind", "reward", "discount", "prob", *_LEAF_COLUMNS, "cov"):
+        columns[name] = _list_column([getattr(t, name) for t in trees], _TREE_COLUMNS[name][0])
+    for name in ("horizon", "batch", "remaining"):
+        columns[name] = [getattr(t, name) for t in trees]
+    for name in ("id", "extra"):
+        values = (getattr(t, name) for t in trees)
+        columns[name] = [None if v is None else json.dumps(v, sort_keys=False) for v in values]
+    described = dict(_TREE_COLUMNS)
+    if rows and rows[0].priced is None:
+        columns["reason"] = [r.reason for r in rows]
+        described |= _ASIDE_LABELS
+    else:
+        priced = [r.priced for r in rows]
+        columns["value"] = _list_column([p.value for p in priced if p is not None], _FLOATS)
+        columns["method"] = [p.method for p in priced if p is not None]
+        described |= _TREE_LABELS
+    return _table(columns, described)
+
+
+def _candidates_table(rows: Sequence[Labelled]) -> pa.Table:
+    parts: dict[str, list[Any]] = {name: [] for name in _CANDIDATE_COLUMNS}
+    for r in rows:
+        assert r.priced is not None
+        n = r.tree.n_leaves
+        table = _flat(r.tree)
+        columns: dict[str, Any] = {
+            "tree": r.number,
+            "leaf": np.arange(n),
+            "action": _actions(r.tree) if table is None else table.action,
+            "gain": None if table is None else table.gain,
+            "offset": None if table is None else table.offset,
+            **{name: getattr(r.tree, name) for name in _LEAF_COLUMNS},
+            "remaining": r.query.remaining,
+            "horizon": r.query.horizon,
+            "batch": r.query.batch,
+            "label": r.priced.voc,
+            "label_batch": r.priced.batch,
+            "error": r.priced.error,
+        }
+        if r.tree.cov is not None:
+            columns["var"] = np.diag(r.tree.cov)
+        for name, value in columns.items():
+            parts[name].append(_run_of(value, n, _CANDIDATE_COLUMNS[name][0]))
+    arrays = {
+        name: pa.concat_arrays(runs) if runs else pa.array([], _CANDIDATE_COLUMNS[name][0])
+        for name, runs in parts.items()
+    }
+    return _table(arrays, _CANDIDATE_COLUMNS)
+
+
+def _flat(tree: BeliefTree) -> LeafTable | None:
+    try:
+        return leaf_table(tree)
+    except RefusedError:
+        return None
+
+
+def _actions(tree: BeliefTree) -> NDArray[np.int64]:
+    action = np.full(tree.n_nodes, -1)
+    action[tree.action_nodes] = np.arange(len(tree.action_nodes))
+    for c, p in enumerate(tree.parent.tolist()):
+        if p > 0:
+            action[c] = action[p]
+    return action[tree.leaf_nodes]
+
+
+def _run_of(value: Any, n: int, kind: pa.DataType) -> pa.Array:
+    if value is None:
+        return pa.nulls(n, kind)
+    return pa.array(np.broadcast_to(np.asarray(value), n), kind)
+
+
+def _list_column(arrays: Sequence[Any], kind: pa.DataType) -> pa.Array:
+    lengths = [0 if a is None else a.size for a in arrays]
+    offsets = np.concatenate([[0], np.cumsum(lengths)]).astype(np.int32)
+    given = [a.ravel() for a in arrays if a is not None]
+    values = pa.array(np.concatenate(given) if given else [], kind.value_type)
+    mask = pa.array([a is None for a in arrays], pa.bool_())
+    return pa.ListArray.from_arrays(pa.array(offsets), values, type=kind, mask=mask)
+
+
+def _table(columns: dict[str, Any], described: dict[str, tuple[pa.DataType, str]]) -> pa.Table:
+    fields = [
+        pa.field(name, kind, metadata={"description": what}) for name, (kind, what) in described.items()
+    ]
+    about = {
+        "format": schema.DATASET_FORMAT,
+        "columns": json.dumps({n: w for n, (_, w) in described.items()}),
+    }
+    return pa.table({f.name: columns[f.name] for f in fields}, pa.schema(fields, metadata=about))
+
+
+# --- the manifest ----------------------------------------------------------------------------------
+
+
+def write_manifest(folder: Path, manifest: dict[str, Any]) -> None:
+    """Write the manifest in one step."""
+    write_atomic(folder / MANIFEST, (json.dumps(manifest, indent=1, allow_nan=False) + "\n").encode())
+
+
+def read_manifest(folder: str | Path, *, partial: bool = False) -> dict[str, Any]:
+    """The manifest of a dataset; InputError where it is missing, broken, or of an unfinished run.
+
+    partial : accept a run that was stopped before its end.
+    """
+    path = Path(folder) / MANIFEST
+    try:
+        manifest = json.loads(path.read_bytes())
+    except OSError as e:
+        raise InputError(str(path), f"must be a readable file ({e.strerror})") from None
+    except (ValueError, RecursionError) as e:
+        raise InputError(str(path), f"must be valid JSON ({e})") from None
+    if not isinstance(manifest, dict) or manifest.get("format") != schema.DATASET_FORMAT:
+        found = manifest.get("format") if isinstance(manifest, dict) else manifest
+        raise InputError(f"{path}: format", f"must be {schema.DATASET_FORMAT!r}", found)
+    entries = manifest.get("shards")
+    whole = isinstance(entries, list) and all(
+        isinstance(e, dict)
+        and isinstance(e.get("files"), dict)
+        and all(type(e.get(key)) is int for key in ("part", "trees", "candidates", "aside"))
+        and all(Path(name).name == name and isinstance(sha, str) for name, sha in e["files"].items())
+        for e in entries
+    )
+    if not whole:
+        raise InputError(f"{path}: shards", "must list part, trees, candidates, aside and files of each")
+    if not partial and not manifest.get("complete"):
+        raise InputError(
+            str(path), f"must be complete; {len(manifest['shards'])} shards are there: run generate again"
+        )
+    return manifest
+
+
+def verify(folder: str | Path, entries: Sequence[dict[str, Any]]) -> None:
+    """Compare the files of shard entries with their SHA-256; InputError names the first that differs."""
+    for entry in entries:
+        for name, expected in entry["files"].items():
+            path = Path(folder) / name
+            if not path.is_file():
+                raise InputError(str(path), "is missing; the manifest lists it")
+            found = sha256_of(path)
+            if found != expected:
+                raise InputError(
+                    str(path), f"must have the manifest's SHA-256 {expected[:16]}...", found[:16]
+                )
+
+
+# --- reading ---------------------------------------------------------------------------------------
+
+
+def read_candidates(
+    folder: str | Path, *, columns: Sequence[str] | None = None, check: bool = True
+) -> dict[str, NDArray[Any]]:
+    """All candidates of a dataset, one NumPy array a column, ordered by tree and leaf.
+
+    columns : which ones; default all that are not null throughout. A null in a column of numbers
+        becomes NaN, and the column float64.
+    check : compare every file with its hash first.
+    Peak memory is about the arrays returned plus one shard.
+    """
+    manifest = read_manifest(folder)
+    if check:
+        verify(folder, manifest["shards"])
+    names = list(columns) if columns is not None else list(_CANDIDATE_COLUMNS)
+    for name in names:
+        if name not in _CANDIDATE_COLUMNS:
+            raise InputError("columns", f"must be among {', '.join(_CANDIDATE_COLUMNS)}", name)
+    total = sum(e["candidates"] for e in manifest["shards"])
+    out: dict[str, NDArray[Any]] = {}
+    given = dict.fromkeys(names, 0)
+    at = 0
+    for path in _paths(folder, manifest, "candidates"):
+        table = pq.read_table(path, columns=names)
+        for name in names:
+            column = table.column(name)
+            dtype = column.type.to_pandas_dtype()
+            if column.null_count and name not in out:
+                dtype = np.float64
+            if name not in out:
+                out[name] = np.empty(total, dtype)
+            elif column.null_count and out[name].dtype != np.float64:
+                out[name] = out[name].astype(np.float64)
+            out[name][at : at + table.num_rows] = column.to_numpy()
+            given[name] += table.num_rows - column.null_count
+        at += table.num_rows
+    if columns is None:
+        out = {name: array for name, array in out.items() if given[name] or not total}
+    return out
+
+
+def read_trees(
+    folder: str | Path, *, aside: bool = False, check: bool = True
+) -> Iterator[tuple[int, BeliefTree]]:
+    """Yields (number, tree) in order; bit for bit the trees that were labelled.
+
+    aside : the trees that were kept aside instead. check : compare every file with its hash first.
+    """
+    manifest = read_manifest(folder)
+    if check:
+        verify(folder, manifest["shards"])
+    for path in _paths(folder, manifest, "aside" if aside else "trees"):
+        for row in pq.read_table(path, columns=list(_TREE_COLUMNS)).to_pylist():
+            yield row["tree"], _tree_of(row)
+
+
+def _paths(folder: str | Path, manifest: dict[str, Any], kind: str) -> Iterator[Path]:
+    for entry in manifest["shards"]:
+        for name in entry["files"]:
+            if name.startswith(kind + "-"):
+                yield Path(folder) / name
+
+
+def _tree_of(row: dict[str, Any]) -> BeliefTree:
+    leaf: dict[str, Any] = {
+        name: None if row[name] is None else np.array(row[name], dtype=float)
+        for name in (*_LEAF_COLUMNS, "cov")
+    }
+    if leaf["cov"] is not None:
+        leaf["cov"] = leaf["cov"].reshape(math.isqrt(len(leaf["cov"])), -1)
+    return BeliefTree(
+        parent=np.array(row["parent"], dtype=np.int64),
+        kind=np.array(row["kind"], dtype=np.int8),
+        reward=np.array(row["reward"], dtype=float),
+        discount=np.array(row["discount"], dtype=float),
+        prob=np.array(row["prob"], dtype=float),
+        horizon=row["horizon"],
+        batch=row["batch"],
+        remaining=row["remaining"],
+        id=None if row["id"] is None else json.loads(row["id"]),
+        extra=None if row["extra"] is None else json.loads(row["extra"]),
+        **leaf,
+    )

@@ -11,7 +11,8 @@ from typing import Any
 import numpy as np
 
 from distill.allocation import RULES
-from distill.errors import InputError
+from distill.errors import InputError, RefusedError
+from distill.rehearse.cold_store import ColdStore
 from distill.rehearse.gym_tables import GymTable
 from distill.rehearse.search import Rule, Search, Settings, estimate_prior
 from distill.rehearse.simulator import Simulator, State
@@ -24,6 +25,8 @@ POINTS = (0.0, 0.125, 0.25, 0.5, 0.75)  # shares of the budget spent when a tree
 _DIGITS = 9  # significant digits of a recorded belief: far below what a rollout's noise leaves unsaid
 _EXPLORE = 0.2  # share of recorded decisions that are played at random, so that states vary
 _EPISODE = 40  # decisions after which a recorded episode starts over
+
+_MOST_IDLE = 100_000  # states without a choice after which none is expected any more
 
 
 @dataclass(frozen=True)
@@ -44,6 +47,10 @@ def _cliff_walking() -> tuple[Simulator, Settings]:
     return GymTable("cliff_walking", discount=0.98, skill=0.9), Settings(depth=3, length=30)
 
 
+def _cold_store() -> tuple[Simulator, Settings]:
+    return ColdStore(jobs=8), Settings(depth=2, length=30, plans=True)
+
+
 def _frozen_lake(name: str) -> tuple[Simulator, Settings]:
     return GymTable(name, discount=0.99), Settings(depth=1, length=60)
 
@@ -52,6 +59,7 @@ def _frozen_lake(name: str) -> tuple[Simulator, Settings]:
 SIMULATORS: dict[str, Callable[[], tuple[Simulator, Settings]]] = {
     "taxi": _taxi,
     "cliff_walking": _cliff_walking,
+    "cold_store": _cold_store,
     "frozen_lake_4x4": lambda: _frozen_lake("frozen_lake_4x4"),
     "frozen_lake_8x8": lambda: _frozen_lake("frozen_lake_8x8"),
 }
@@ -127,8 +135,19 @@ def recorded_trees(
     pilot_rng, rng = (np.random.default_rng(s) for s in np.random.SeedSequence(seed).spawn(2))
     prior = estimate_prior(simulator, settings, pilot_rng)
     points = sorted({int(share * rollouts) for share in POINTS})
-    state, played = simulator.start(rng), 0
-    for decision in range(decisions):
+    state, played, decision, idle = simulator.start(rng), 0, 0, 0
+    while decision < decisions:
+        if simulator.is_terminal(state) or played == _EPISODE:
+            state, played = simulator.start(rng), 0
+        played += 1
+        choices = simulator.actions(state)
+        if len(choices) == 1:  # nothing to decide
+            idle += 1
+            if idle > _MOST_IDLE:
+                raise RefusedError(f"{simulator.name}: {_MOST_IDLE} states in a row leave no choice")
+            state, _ = simulator.step(state, choices[0], rng)
+            continue
+        idle = 0
         now = rule if rule is not None else RULES[int(rng.integers(len(RULES)))]
         search = Search(simulator, state, settings, prior, rng)
         for stop, point in enumerate([*points, rollouts]):
@@ -137,12 +156,9 @@ def recorded_trees(
                 yield decision, _labelled(search, simulator.name, state, decision, now, rollouts - point)
         action = search.best_action()
         if rng.random() < _EXPLORE:
-            choices = simulator.actions(state)
             action = choices[int(rng.random() * len(choices))]
         state, _ = simulator.step(state, action, rng)
-        played += 1
-        if simulator.is_terminal(state) or played == _EPISODE:
-            state, played = simulator.start(rng), 0
+        decision += 1
 
 
 def _labelled(
@@ -150,7 +166,7 @@ def _labelled(
 ) -> BeliefTree:
     extra: dict[str, Any] = {
         "environment": name,
-        "state": state if isinstance(state, int) else str(state),
+        "state": _plain(state),
         "decision": decision,
         "rule": rule if isinstance(rule, str) else getattr(rule, "__name__", "custom"),
     }
@@ -159,6 +175,13 @@ def _labelled(
     assert tree.var is not None
     assert tree.noise_var is not None
     return replace(tree, mean=_short(tree.mean), var=_short(tree.var), noise_var=_short(tree.noise_var))
+
+
+def _plain(state: object) -> object:
+    """A state as JSON holds it: numbers and text as they are, tuples as arrays, others as text."""
+    if isinstance(state, tuple):
+        return [_plain(part) for part in state]
+    return state if isinstance(state, (int, float, str)) else str(state)
 
 
 def _short(column: Floats) -> Floats:

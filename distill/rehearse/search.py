@@ -7,6 +7,8 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from scipy.optimize import brentq
+from scipy.special import digamma, polygamma
 
 from distill import schema
 from distill.allocation import Search as Posterior
@@ -16,6 +18,8 @@ from distill.rehearse.simulator import Action, Simulator, State
 from distill.tree import BeliefTree, Floats
 
 __all__ = ["Prior", "Rule", "Search", "Settings", "estimate_prior"]
+
+_MOST_WEIGHT = 1e6  # degrees of freedom beyond which trees are taken to share one noise
 
 # Either the name of a rule of `distill.allocation`, or a function of the tree so far (its `remaining`
 # says how many rollouts are left) and a generator, which returns the position of a leaf.
@@ -89,8 +93,8 @@ def estimate_prior(
     typical = float(np.average(noise, weights=freedom)) if noise else 0.0
     if not typical > 0:
         raise RefusedError(f"{simulator.name}: pilot rollouts do not vary; there is nothing to search")
-    weight, centre = _noise_spread(np.array(noise), np.array(freedom, dtype=float), typical)
-    return Prior(max(float(np.mean(between)), centre / 100), centre, weight)
+    weight = _noise_weight(np.array(noise), np.array(freedom, dtype=float), typical)
+    return Prior(max(float(np.mean(between)), typical / 100), typical, weight)
 
 
 class Search:
@@ -182,25 +186,22 @@ def _wander(simulator: Simulator, rng: np.random.Generator, n: int) -> list[Stat
     return found
 
 
-def _noise_spread(noise: Floats, freedom: Floats, typical: float) -> tuple[float, float]:
-    """(weight, centre) of the scaled inverse chi square that noise estimates of many trees come from."""
-    from scipy.special import digamma, polygamma
+def _noise_weight(noise: Floats, freedom: Floats, typical: float) -> float:
+    """Weight (degrees of freedom) of the inverse chi square behind many trees' noise estimates.
 
-    positive = noise > 0
-    if np.count_nonzero(positive) < 3:
-        return np.inf, typical
-    half = freedom[positive] / 2
-    logs = np.log(noise[positive]) - digamma(half) + np.log(half)
+    The logarithm of an estimate with d degrees of freedom varies by trigamma(d / 2), that of the tree's
+    own noise by trigamma(weight / 2): the weight solves for what the first leaves over. Trees whose
+    rollouts hardly vary at all say nothing about the others and are left out.
+    """
+    told = noise > 1e-6 * typical
+    if np.count_nonzero(told) < 3:
+        return np.inf
+    half = freedom[told] / 2
+    logs = np.log(noise[told]) - digamma(half) + np.log(half)
     excess = float(np.var(logs, ddof=1) - np.mean(polygamma(1, half)))
-    if excess <= 0:
-        return np.inf, typical
-    low, high = 1e-3, 1e6  # trigamma(weight / 2) = excess: it falls in the weight
-    for _ in range(200):
-        middle = np.sqrt(low * high)
-        low, high = (middle, high) if polygamma(1, middle) > excess else (low, middle)
-    half_weight = float(np.sqrt(low * high))
-    centre = float(np.exp(np.mean(logs) + digamma(half_weight) - np.log(half_weight)))
-    return 2 * half_weight, centre
+    if excess <= polygamma(1, _MOST_WEIGHT / 2):
+        return np.inf
+    return 2 * float(brentq(lambda x: polygamma(1, x) - excess, 1e-4, _MOST_WEIGHT / 2, xtol=1e-12))
 
 
 def _backed_up_means(tree: BeliefTree) -> Floats:

@@ -12,6 +12,7 @@ solved exactly by `optimum.solve`.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from itertools import pairwise
 from typing import Final, NamedTuple
 
 import numpy as np
@@ -158,7 +159,7 @@ class ColdStore:
         """Odds of each number of ticks that the doors on a route cost: a sum of independent waits."""
         if route not in self._wait_cache:
             odds = np.ones(1)
-            for a, b in zip(route[:-1], route[1:], strict=True):
+            for a, b in pairwise(route):
                 for door in self.doors:
                     if min(a, b) < door.cell <= max(a, b):
                         odds = np.convolve(odds, self._waits[door])
@@ -173,7 +174,7 @@ def _wait_odds(door: Door) -> list[float]:
 
 
 def _after(shift: Shift, action: Action, route: tuple[int, ...], wait: int) -> tuple[Shift, float]:
-    driven = sum(abs(b - a) for a, b in zip(route[:-1], route[1:], strict=True))
+    driven = sum(abs(b - a) for a, b in pairwise(route))
     energy = shift.energy - driven
     spent = ENERGY_PRICE * driven
     if action == CHARGE:

@@ -19,6 +19,7 @@ from distill.tree import BeliefTree, Floats
 
 __all__ = ["Prior", "Rule", "Search", "Settings", "estimate_prior"]
 
+_SAME = 1e-10  # returns that differ by less, as a share of the largest, differ by rounding
 _MOST_WEIGHT = 1e6  # degrees of freedom beyond which trees are taken to share one noise
 
 # Either the name of a rule of `distill.allocation`, or a function of the tree so far (its `remaining`
@@ -77,8 +78,10 @@ def estimate_prior(
     averages less noise / rollouts, kept at or above a hundredth of the noise of one rollout. Noise
     differs between trees as a scaled inverse chi square, whose weight comes from the spread of the
     logarithms of the trees' noise estimates (Smyth 2004, section 6.2).
+
+    Raises RefusedError where rollouts do not vary.
     """
-    noise, between, freedom = [], [], []
+    noise, between, freedom, top = [], [], [], 0.0
     for state in _wander(simulator, rng, trees):
         tree = settings.tree(simulator, state, rng)
         open_leaves = np.flatnonzero(~tree.sure)
@@ -86,13 +89,14 @@ def estimate_prior(
             continue
         chosen = rng.permutation(open_leaves)[:leaves]
         returns = _returns(simulator, tree, chosen, rollouts, settings.length, rng)
+        top = max(top, float(np.abs(returns).max()))
         within = float(returns.var(axis=1, ddof=1).mean())
         noise.append(within)
         between.append(float(returns.mean(axis=1).var(ddof=1)) - within / rollouts)
         freedom.append(len(chosen) * (rollouts - 1))
     typical = float(np.average(noise, weights=freedom)) if noise else 0.0
-    if not typical > 0:
-        raise RefusedError(f"{simulator.name}: pilot rollouts do not vary; there is nothing to search")
+    if not typical > (_SAME * top) ** 2:
+        raise RefusedError(f"{simulator.name}: pilot rollouts do not vary; one at each leaf tells all")
     weight = _noise_weight(np.array(noise), np.array(freedom, dtype=float), typical)
     return Prior(max(float(np.mean(between)), typical / 100), typical, weight)
 

@@ -29,7 +29,7 @@ def test_steps_follow_the_model():
 
 
 def test_a_doors_wait_is_a_cut_geometric():
-    """Expected wait at one crossing: sum over w >= 1 of P(wait >= w) = sum of (1 - p)^w up to the patience."""
+    """Expected wait at one crossing: sum of P(wait >= w) = (1 - p)^w over w from 1 to the patience."""
     store = ColdStore(doors=(Door(5, 0.25, 3),))
     shift = Shift(0, 4, CAPACITY, (Job(0, 4, 5, 99, 1.0),))
     ways = store.outcomes(shift, 0)

@@ -26,8 +26,8 @@ from numba import njit
 from numpy.typing import NDArray
 
 __all__ = [
-    "compiled", "gain", "gain_ratio", "gauss_legendre", "legendre_antiderivative", "log_gain", "log_norm_cdf", "mills",
-    "norm_cdf", "norm_pdf",
+    "compiled", "gain", "gain_ratio", "gauss_legendre", "legendre_antiderivative", "log_gain", "log_norm_cdf",
+    "mills", "norm_cdf", "norm_pdf",
 ]  # fmt: skip
 
 Floats = NDArray[np.float64]
@@ -91,7 +91,8 @@ def gain_ratio(t: float) -> float:
     b2 = 0.0
     for k in range(_SERIES_TOP, 0, -1):
         b1, b2 = 2.0 * u * b1 - b2 + _SERIES[k], b1
-    return (u * b1 - b2 + _SERIES[0]) / (t * t + 1.5 * t + 1.0)
+    series: float = u * b1 - b2 + _SERIES[0]
+    return series / (t * t + 1.5 * t + 1.0)
 
 
 @compiled

@@ -27,6 +27,7 @@ import onnxruntime as ort
 from numpy.typing import NDArray
 from onnx import TensorProto, helper
 
+from distill.closed_form import LOSS_A, LOSS_B, LOSS_P, LOSS_Q, PEAK
 from distill.errors import InputError
 from distill.onnx_nodes import IR_VERSION, OPSET, Nodes, typed
 from distill.tree import Floats
@@ -59,12 +60,6 @@ _RATIO_LIMIT: Final = 1e18  # of noise to variance, either way
 _FAR: Final = 1e9  # standard deviations; Phi is 1 there
 _FEATURE_LIMIT: Final = 40.0
 _PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
-
-# f(-z) / phi(z) for z >= 0 as a sum of (a + b z) / (z^2 + p z + q); relative error 1.2e-7 on [0, 45].
-_LOSS_P: Final = (4.00784443, 3.79671751, 3.43685931)
-_LOSS_Q: Final = (4.24084249, 5.83015642, 10.41195629)
-_LOSS_A: Final = (11.51409415, -10.08967894, 0.16193711)
-_LOSS_B: Final = (3.38642359, -3.74393112, 0.35750722)
 
 
 class FeatureMatrix(NamedTuple):
@@ -138,7 +133,7 @@ def build_graph(*, points: int = 12) -> onnx.ModelProto:
     noise = g("Max", g("Min", noise, g.double(_RATIO_LIMIT)), g.double(1 / _RATIO_LIMIT))
     u = g("Div", gap, g("Max", g("Mul", influence, sd), tiny))
     u2 = g("Mul", u, u)
-    shape = g("Add", g("Div", g.double(0.6189), g("Add", u2, g.double(0.29506))), g.double(0.5229))
+    shape = g("Add", g("Div", g.double(PEAK[1]), g("Add", u2, g.double(PEAK[2]))), g.double(PEAK[0]))
     k = g("Mul", g("Mul", u2, shape), noise)
     k = g("Floor", g("Add", g("Min", g("Max", k, one), "remaining"), g.double(0.5)))
     k_safe = g("Max", k, one)
@@ -150,11 +145,11 @@ def build_graph(*, points: int = 12) -> onnx.ModelProto:
     # f(-z), z = gap / (w s).
     z1 = g("Min", g("Div", gap, g("Max", g("Mul", influence, s), tiny)), g.double(_Z_LIMIT))
     z_column = g("Unsqueeze", z1, column)
-    bottom = g("Add", g("Mul", g("Add", z_column, g.double(_LOSS_P)), z_column), g.double(_LOSS_Q))
+    bottom = g("Add", g("Mul", g("Add", z_column, g.double(LOSS_P)), z_column), g.double(LOSS_Q))
     root = 1 / np.sqrt(2 * np.pi)
-    top_a, top_b = (g.double(np.multiply(c, root)) for c in (_LOSS_A, _LOSS_B))
+    top_a, top_b = (g.double(np.multiply(c, root)) for c in (LOSS_A, LOSS_B))
     top = g("Add", g("Mul", z_column, top_b), top_a)
-    tail = g("Reshape", g("MatMul", g("Div", top, bottom), g.double(np.ones((len(_LOSS_P), 1)))), flat)
+    tail = g("Reshape", g("MatMul", g("Div", top, bottom), g.double(np.ones((len(LOSS_P), 1)))), flat)
     f = g("Mul", tail, g("Exp", g("Mul", g("Mul", z1, z1), g.double(-0.5))))
     ratio = g("Mul", influence, f)
     g("Mul", unit, ratio, out="first_order")
@@ -235,29 +230,35 @@ class FeatureGraph:
         numbers, equal ones side by side) says which rows belong together; without it all do.
         Raises InputError for a missing column, unequal lengths or a split tree.
         """
+        names = ["features", "unit", "first_order", "batch"]
+        parts = [self._session.run(names, feed) for feed in self.table(columns)]
+        if not parts:
+            none = np.empty(0)
+            x = np.empty((0, len(self.names)), np.float32)
+            return FeatureMatrix(x, none, none, none.astype(np.int64))
+        return FeatureMatrix(*(np.concatenate(part) for part in zip(*parts, strict=True)))
+
+    @staticmethod
+    def table(columns: Mapping[str, Any]) -> list[dict[str, NDArray[Any]]]:
+        """The graph's inputs, one dictionary a tree; columns and errors as for `matrix`."""
         table = {}
         for name in INPUTS:
             if name not in columns:
                 raise InputError(name, "is missing")
             dtype = np.int64 if name == "action" else np.float64
             table[name] = np.ascontiguousarray(columns[name], dtype=dtype)
-        n = len(table["mean"])
-        table["remaining"] = np.ascontiguousarray(np.broadcast_to(table["remaining"], (n,)))
+        n = table["mean"].size
+        if table["remaining"].size == 1:
+            table["remaining"] = np.full(n, table["remaining"].item())
         for name, column in table.items():
             if column.shape != (n,):
                 raise InputError(name, f"must have {n} rows, as 'mean'", column.shape)
-        starts = _tree_starts(columns.get("tree"), n)
-        parts = []
-        for a, b in pairwise(starts):
+        feeds = []
+        for a, b in pairwise(_tree_starts(columns.get("tree"), n)):
             feed = {name: column[a:b] for name, column in table.items()}
             feed["remaining"] = feed["remaining"][:1]
-            parts.append(self._session.run(["features", "unit", "first_order", "batch"], feed))
-        if not parts:
-            empty = np.empty(0)
-            return FeatureMatrix(
-                np.empty((0, len(FEATURE_NAMES)), np.float32), empty, empty, empty.astype(np.int64)
-            )
-        return FeatureMatrix(*(np.concatenate(part) for part in zip(*parts, strict=True)))
+            feeds.append(feed)
+        return feeds
 
 
 def _tree_starts(tree: Any, n: int) -> list[int]:

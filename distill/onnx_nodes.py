@@ -52,7 +52,7 @@ class Nodes:
 
     def constant(self, value: NDArray[Any]) -> str:
         """The name of a constant; equal constants share one."""
-        value = np.ascontiguousarray(value)
+        value = np.asarray(value, order="C")
         key = (value.tobytes(), value.dtype.str, value.shape)
         if key not in self._constants:
             name = f"{self.prefix}_c{len(self._constants)}"

@@ -1,0 +1,77 @@
+"""The static rate of independent Gaussian leaves in closed form, fast; floor 1, light.
+
+A runtime falls back to it, and the features start from the same two fits.
+"""
+
+from __future__ import annotations
+
+from typing import Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+__all__ = ["LOSS_A", "LOSS_B", "LOSS_P", "LOSS_Q", "PEAK", "static_rates"]
+
+Floats = NDArray[np.float64]
+
+# f(-z) / phi(z) for z >= 0, f(z) = z Phi(z) + phi(z), as a sum of (a + b z) / (z^2 + p z + q): a rational
+# function fitted to 50-digit values; relative error at most 1.2e-7 on [0, 45].
+LOSS_P: Final = (4.00784443, 3.79671751, 3.43685931)
+LOSS_Q: Final = (4.24084249, 5.83015642, 10.41195629)
+LOSS_A: Final = (11.51409415, -10.08967894, 0.16193711)
+LOSS_B: Final = (3.38642359, -3.74393112, 0.35750722)
+
+# Where s_k f(-gap / s_k) / k peaks over real k > 0: k v / n = u^2 (a + b / (u^2 + c)), u = gap / sd.
+# The rate there is within 0.4 % of the best for every u. (a, b, c).
+PEAK: Final = (0.5229, 0.6189, 0.29506)
+
+_TINY: Final = 1e-300
+_Z_LIMIT: Final = 40.0  # exp(-z^2 / 2) is 0 in double precision
+
+
+def static_rates(
+    mean: Floats, var: Floats, noise_var: Floats, gain: Floats, offset: Floats, remaining: float
+) -> tuple[Floats, NDArray[np.int64]]:
+    r"""The static rate of every leaf of a decision-only tree, u a rollout, and its batch; shape (n,).
+
+    .. math:: \max_{1 \le k \le R} s_k f(-|m_i - c_i| / s_k) / k, \quad s_k^2 = v^2 / (v + n / k)
+
+    with m = gain mean + offset, v = gain^2 var, n = gain^2 noise_var and c_i the largest m of the other
+    leaves (Frazier and Powell 2010, section 4). VOC(k) / k has a single peak here. The batch is a
+    neighbour of the fitted peak; the rate is within 0.5 % of the best batch's. No leaf alone, no leaf
+    without variance and nothing with remaining = 0 is worth anything.
+
+    >>> rate, batch = static_rates(*np.array([[0, 0.1], [1, 1], [4, 4], [1, 1], [0, 0.0]]), 100)
+    >>> rate.round(4).tolist(), batch.tolist()
+    ([0.1329, 0.1329], [1, 1])
+    """
+    n = len(mean)
+    if n < 2 or remaining < 1:
+        return np.zeros(n), np.zeros(n, dtype=np.int64)
+    with np.errstate(all="ignore"):
+        m = gain * mean + offset
+        top = int(np.argmax(m))
+        rival = np.full(n, m[top])
+        rival[top] = max(np.max(m[:top], initial=-np.inf), np.max(m[top + 1 :], initial=-np.inf))
+        gap = np.abs(m - rival)
+        sd = np.abs(gain) * np.sqrt(var)
+        noise = np.clip(noise_var / np.maximum(var, _TINY), 1 / 1e18, 1e18)
+        u2 = np.square(gap / np.maximum(sd, _TINY))
+        peak = np.clip(u2 * (PEAK[0] + PEAK[1] / (u2 + PEAK[2])) * noise, 1.0, np.floor(remaining))
+        low = np.floor(peak)
+        options = []
+        for k in (low, np.minimum(low + 1, np.floor(remaining))):
+            s = sd * np.sqrt(k / (k + noise))
+            z = np.minimum(gap / np.maximum(s, _TINY), _Z_LIMIT)
+            options.append(s * _loss(z) / k)
+    upper = options[1] > options[0]
+    batch = np.where(upper, np.minimum(low + 1, np.floor(remaining)), low).astype(np.int64)
+    return np.where(upper, options[1], options[0]), batch
+
+
+def _loss(z: Floats) -> Floats:
+    """f(-z) for z >= 0; 0 from z = 40 on."""
+    ratio = sum(
+        (a + b * z) / (z * z + p * z + q) for p, q, a, b in zip(LOSS_P, LOSS_Q, LOSS_A, LOSS_B, strict=True)
+    )
+    return np.asarray(ratio * np.exp(-0.5 * z * z) / np.sqrt(2 * np.pi))

@@ -1,0 +1,292 @@
+"""One ONNX file: the feature graph, the estimator behind it, and the decision; floor 5.
+
+    t = estimator(features)        the learner's transform of value / unit
+    voc = unit max(t, 0)^2         transform "sqrt"
+    voc = first_order exp(t)       transform "log_ratio", t cut at +-20
+    voc = max(voc, 1e-4 first_order), so that candidates the learner sees as worthless keep an order
+    pick = first argmax of voc - cost,  worth_it = max of voc - cost > 0
+
+What the estimator sees is cut to the ranges of its training rows; `in_range` says where nothing was cut.
+Before anything is written, the file's own answers are held against the estimator's.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+from collections.abc import Mapping
+from typing import Any, Final
+
+import numpy as np
+import onnx
+import onnxruntime as ort
+from numpy.typing import NDArray
+from onnx import TensorProto, helper
+from sklearn.ensemble import HistGradientBoostingRegressor
+
+from distill import scorer_file
+from distill.converters import convert, folded
+from distill.errors import ExportError
+from distill.features import INPUTS, FeatureGraph, FeatureMatrix
+from distill.files import write_atomic
+from distill.onnx_nodes import IR_VERSION, ML_OPSET, OPSET, Nodes, typed
+from distill.tree import Floats
+
+__all__ = ["TRANSFORMS", "export_scorer", "mapped_back", "with_facts"]
+
+TRANSFORMS: Final = ("sqrt", "log_ratio")
+_LOG_RATIO_LIMIT: Final = 20.0
+_FLOOR: Final = 1e-4
+_DENSE_PARITY: Final = 1e-5  # of the largest t: networks and linear models run in float32
+_PARITY_ROWS: Final = 20_000
+
+
+def mapped_back(t: Floats, unit: Floats, first_order: Floats, transform: str) -> Floats:
+    """Value of a learned t, u a rollout; see the module's table. All of shape (n,).
+
+    >>> mapped_back(np.array([0.5, -1.0]), np.array([2.0, 2.0]), np.array([0.1, 0.1]), "sqrt").tolist()
+    [0.5, 1e-05]
+    """
+    if transform == "sqrt":
+        voc = unit * np.square(np.maximum(t, 0.0))
+    else:
+        voc = first_order * np.exp(np.clip(t, -_LOG_RATIO_LIMIT, _LOG_RATIO_LIMIT))
+    return np.maximum(voc, _FLOOR * first_order)
+
+
+def export_scorer(
+    estimator: Any,
+    feature_graph: FeatureGraph,
+    *,
+    transform: str,
+    ranges: Any,
+    metadata: Mapping[str, Any],
+    self_test_columns: Mapping[str, Any],
+    path: str | os.PathLike[str] | None = None,
+) -> bytes:
+    """The scorer file as bytes, also written to `path` (atomically) if given.
+
+    estimator : a fitted HistGradientBoostingRegressor, MLPRegressor or linear model, the last two also
+        behind a StandardScaler in a Pipeline; it maps feature rows to t.
+    transform : one of TRANSFORMS. ranges : (d, 2), least and largest of each feature in training.
+    metadata : JSON values (family, dataset hash, recipe, ...), kept in the file as they are.
+    self_test_columns : rows as for FeatureGraph.matrix; a few trees. Parity with the estimator is checked
+        on them and on random rows within the ranges, and the file carries them with their answers.
+
+    The same arguments give the same bytes. Raises ExportError where the estimator cannot be converted
+    exactly, an argument is not usable, or the file does not repeat the estimator; nothing is written then.
+    """
+    if transform not in TRANSFORMS:
+        raise ExportError(f"transform must be one of {', '.join(TRANSFORMS)}; got {transform!r}")
+    limits = np.asarray(ranges, dtype=np.float32)
+    if limits.shape != (len(feature_graph.names), 2):
+        raise ExportError(f"ranges must have shape ({len(feature_graph.names)}, 2); got {limits.shape}")
+    if not np.all(np.isfinite(limits)) or np.any(limits[:, 0] > limits[:, 1]):
+        raise ExportError("ranges must be finite, least before largest")
+    converted = convert(estimator, len(feature_graph.names))
+    _check_estimator(estimator, converted, limits)
+    model = _assemble(feature_graph.model, converted, transform, limits)
+    session = _session(model)
+    matrix = feature_graph.matrix(self_test_columns)
+    answers, cases = _answers(session, self_test_columns)
+    _check_file(estimator, transform, limits, matrix, answers)
+    _set_metadata(model, feature_graph, transform, limits, metadata, cases)
+    onnx.checker.check_model(model, full_check=True)
+    data: bytes = model.SerializeToString(deterministic=True)
+    scorer_file.check(data)
+    if path is not None:
+        write_atomic(path, data)
+    return data
+
+
+def with_facts(data: bytes, facts: Mapping[str, Any]) -> bytes:
+    """The same file with measured facts (JSON values) under the metadata key `measured`."""
+    model = onnx.load_model_from_string(data)
+    kept = {p.key: p.value for p in model.metadata_props}
+    helper.set_model_props(model, dict(sorted({**kept, "measured": _json(facts)}.items())))
+    out: bytes = model.SerializeToString(deterministic=True)
+    scorer_file.check(out)
+    return out
+
+
+def _assemble(
+    features: onnx.ModelProto, converted: onnx.ModelProto, transform: str, limits: NDArray[np.float32]
+) -> onnx.ModelProto:
+    """Feature nodes as they are, the estimator's nodes, and the decision, as one model."""
+    boosting = converted.graph.node[0].op_type == "TreeEnsemble"
+    g = Nodes("s")
+    clipped = g("Max", g("Min", "features", g.single(limits[:, 1])), g.single(limits[:, 0]))
+    same = g("Cast", g("Equal", clipped, "features"), to=TensorProto.FLOAT)
+    inside = g("Cast", g("ReduceMin", same, g.whole(1), keepdims=0), to=TensorProto.BOOL)
+    g("And", inside, g("GreaterOrEqual", "action", g.whole(0)), out="in_range")
+    x = g("Cast", clipped, to=TensorProto.DOUBLE) if boosting else clipped
+
+    renamed, t = _renamed(converted, x)
+    tail = Nodes("d")
+    t = tail("Reshape", t, tail.whole(-1))
+    if not boosting:
+        t = tail("Cast", t, to=TensorProto.DOUBLE)
+    if transform == "sqrt":
+        t = tail("Max", t, tail.double(0.0))
+        voc = tail("Mul", "unit", tail("Mul", t, t))
+    else:
+        limit = _LOG_RATIO_LIMIT
+        t = tail("Max", tail("Min", t, tail.double(limit)), tail.double(-limit))
+        voc = tail("Mul", "first_order", tail("Exp", t))
+    tail("Max", voc, tail("Mul", "first_order", tail.double(_FLOOR)), out="voc")
+    net = tail("Sub", "voc", "cost")
+    tail("ArgMax", net, axis=0, keepdims=0, out="pick")
+    tail("Greater", tail("ReduceMax", net, keepdims=0), tail.constant(np.array(0.0)), out="worth_it")
+
+    nodes = [*features.graph.node, *g.nodes, *renamed.node, *tail.nodes]
+    initializers = [*features.graph.initializer, *g.initializers, *renamed.initializer, *tail.initializers]
+    outputs = [
+        typed("voc", TensorProto.DOUBLE, ["n"]),
+        typed("batch", TensorProto.INT64, ["n"]),
+        typed("in_range", TensorProto.BOOL, ["n"]),
+        typed("pick", TensorProto.INT64, []),
+        typed("worth_it", TensorProto.BOOL, []),
+    ]
+    graph = helper.make_graph(nodes, "scorer", list(features.graph.input), outputs, initializers)
+    opsets = [helper.make_opsetid("", OPSET)]
+    if boosting:
+        opsets.append(helper.make_opsetid("ai.onnx.ml", ML_OPSET))
+    model = helper.make_model(graph, opset_imports=opsets, ir_version=IR_VERSION)
+    model.producer_name = "voc-distill"
+    return model
+
+
+def _renamed(converted: onnx.ModelProto, x: str) -> tuple[onnx.GraphProto, str]:
+    """The estimator's graph reading `x`, every other name prefixed; and the name of its output."""
+    graph = onnx.GraphProto()
+    graph.CopyFrom(converted.graph)
+
+    def name_of(name: str) -> str:
+        return x if name == graph.input[0].name else f"e_{name}"
+
+    for node in graph.node:
+        node.input[:] = [name_of(name) for name in node.input]
+        node.output[:] = [name_of(name) for name in node.output]
+        node.name = node.output[0]
+    for tensor in graph.initializer:
+        tensor.name = name_of(tensor.name)
+    return graph, name_of(graph.output[0].name)
+
+
+def _session(model: onnx.ModelProto) -> Any:
+    options = ort.SessionOptions()
+    options.intra_op_num_threads = options.inter_op_num_threads = 1
+    data = model.SerializeToString(deterministic=True)
+    return ort.InferenceSession(data, options, providers=["CPUExecutionProvider"])
+
+
+# --- parity ----------------------------------------------------------------------------------------
+
+
+def _check_estimator(estimator: Any, converted: onnx.ModelProto, limits: NDArray[np.float32]) -> None:
+    """The converted nodes against the estimator on random rows within the ranges, and on every split."""
+    rng = np.random.default_rng(0)
+    rows = rng.uniform(limits[:, 0], limits[:, 1], (_PARITY_ROWS, len(limits))).astype(np.float32)
+    x = rows
+    if isinstance(folded(estimator), HistGradientBoostingRegressor):
+        x = rows.astype(np.float64)
+        for predictors in estimator._predictors:
+            inner = predictors[0].nodes[predictors[0].nodes["is_leaf"] == 0]
+            at = rng.integers(len(x), size=len(inner))
+            x[at, inner["feature_idx"]] = inner["num_threshold"]
+        x[rng.random(x.shape) < 0.001] = np.nan
+    got = _session(converted).run(None, {"x": x})[0].ravel()
+    _compare(estimator, x, got, "random rows")
+
+
+def _compare(estimator: Any, x: NDArray[Any], got: NDArray[Any], where: str) -> None:
+    expected = np.asarray(estimator.predict(x), dtype=float).ravel()
+    if not np.all(np.isfinite(expected)):
+        raise ExportError(f"the estimator is not finite on {where}")
+    off = float(np.max(np.abs(got - expected)))
+    boosting = isinstance(folded(estimator), HistGradientBoostingRegressor)
+    allowed = 0.0 if boosting else _DENSE_PARITY * max(1.0, float(np.max(np.abs(expected))))
+    if not off <= allowed:
+        raise ExportError(
+            f"the file differs from the estimator by {off:.3g} on {where}; allowed {allowed:.3g}"
+        )
+
+
+def _check_file(
+    estimator: Any,
+    transform: str,
+    limits: NDArray[np.float32],
+    matrix: FeatureMatrix,
+    answers: Mapping[str, NDArray[Any]],
+) -> None:
+    """The assembled file's `voc` against the estimator's through the transform."""
+    x = np.clip(matrix.x, limits[:, 0], limits[:, 1])
+    t = np.asarray(estimator.predict(x), dtype=float)
+    expected = mapped_back(t, matrix.unit, matrix.first_order, transform)
+    boosting = isinstance(folded(estimator), HistGradientBoostingRegressor)
+    slope = _DENSE_PARITY * max(1.0, float(np.max(np.abs(t), initial=0.0)))
+    low, high = (mapped_back(t + d, matrix.unit, matrix.first_order, transform) for d in (-slope, slope))
+    rounding = 4 * np.finfo(float).eps * expected
+    allowed = rounding if boosting else high - low + rounding
+    off = np.abs(answers["voc"] - expected)
+    if not np.all(off <= allowed):
+        row = int(np.argmax(off - allowed))
+        raise ExportError(
+            f"the file gives {answers['voc'][row]!r} where the estimator gives {expected[row]!r} "
+            f"on self-test row {row}"
+        )
+    if np.any(answers["batch"] != matrix.batch):
+        raise ExportError("the file's batches differ from the feature graph's on the self-test rows")
+
+
+def _answers(
+    session: Any, columns: Mapping[str, Any]
+) -> tuple[dict[str, NDArray[Any]], list[dict[str, Any]]]:
+    """The file's own answers on the self-test rows, whole and tree by tree."""
+    table = FeatureGraph.table(columns)
+    names = [o.name for o in session.get_outputs()]
+    whole: dict[str, list[NDArray[Any]]] = {name: [] for name in names}
+    cases = []
+    for feed in table:
+        out = dict(zip(names, session.run(names, feed), strict=True))
+        for name in names:
+            whole[name].append(np.atleast_1d(out[name]))
+        cases.append(
+            {
+                "inputs": {name: feed[name].tolist() for name in INPUTS},
+                "outputs": {name: out[name].tolist() for name in names},
+            }
+        )
+    if not cases:
+        raise ExportError("self_test_columns must hold at least one row")
+    return {name: np.concatenate(parts) for name, parts in whole.items()}, cases
+
+
+# --- metadata --------------------------------------------------------------------------------------
+
+
+def _json(value: Any) -> str:
+    try:
+        return json.dumps(value, sort_keys=True, allow_nan=False, separators=(",", ":"))
+    except (TypeError, ValueError) as e:
+        raise ExportError(f"metadata must be finite JSON values ({e})") from None
+
+
+def _set_metadata(
+    model: onnx.ModelProto,
+    feature_graph: FeatureGraph,
+    transform: str,
+    limits: NDArray[np.float32],
+    metadata: Mapping[str, Any],
+    cases: list[dict[str, Any]],
+) -> None:
+    names = feature_graph.names
+    props = {
+        "format": scorer_file.FORMAT,
+        "about": _json(dict(metadata)),
+        "features": _json(list(names)),
+        "ranges": _json({name: [float(a), float(b)] for name, (a, b) in zip(names, limits, strict=True)}),
+        "self_test": _json(cases),
+        "transform": transform,
+    }
+    helper.set_model_props(model, props)

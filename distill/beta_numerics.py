@@ -14,7 +14,7 @@ from __future__ import annotations
 
 import math
 
-from numba import njit
+from distill.numerics import compiled
 
 __all__ = [
     "beta_density",
@@ -28,7 +28,7 @@ __all__ = [
 _HALF_LOG_2PI = 0.9189385332046727
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def log1p_minus(u: float) -> float:
     """log(1 + u) - u for u > -1, relative accuracy near u = 0 too; unit-free, <= 0.
 
@@ -48,7 +48,7 @@ def log1p_minus(u: float) -> float:
     return -u * r + 2.0 * r * s * series
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def stirling_rest(z: float) -> float:
     """d(z) = log Gamma(z + 1) - (z + 1/2) log z + z - log(2 pi) / 2, for z > 0; between 0 and 1/(12 z).
 
@@ -67,7 +67,7 @@ def stirling_rest(z: float) -> float:
     return (1.0 / 12.0 - s * c) / z
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def beta_log_constant(a: float, b: float) -> float:
     """log_c of the saddle-point density of Beta(a, b); a, b > 0."""
     n = a + b
@@ -75,7 +75,7 @@ def beta_log_constant(a: float, b: float) -> float:
     return rest + 0.5 * (math.log(a / n) + math.log(b)) - _HALF_LOG_2PI
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def beta_divergence(a: float, b: float, p: float, q: float) -> float:
     """n KL(mu || p) = a log(mu / p) + b log((1 - mu) / q) >= 0, for Beta(a, b), 0 < p < 1, q = 1 - p.
 
@@ -91,7 +91,7 @@ def beta_divergence(a: float, b: float, p: float, q: float) -> float:
     return -(a * left + b * right)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def beta_density(a: float, b: float, log_c: float, p: float, q: float) -> float:
     """Density of Beta(a, b) at p, where log_c = beta_log_constant(a, b), 0 < p < 1 and q = 1 - p.
 
@@ -101,7 +101,7 @@ def beta_density(a: float, b: float, log_c: float, p: float, q: float) -> float:
     return math.exp(log_c - beta_divergence(a, b, p, q)) / (p * q)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def lower_tail(a: float, b: float, p: float) -> float:
     """I_p(a, b) = P(Beta(a, b) <= p) close to 0: for p <= 1/4 and p (a + b) of the order of 1 or less.
 

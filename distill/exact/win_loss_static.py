@@ -1,7 +1,7 @@
 """Static value of trials at win/loss leaves, on any tree of decision and chance nodes; floor 2.
 
 As a function of one leaf's posterior mean p the root maximum is max(C, slope p + B): one kink, at
-(C - B) / slope. VOC(k) = slope x the worth of k trials against a sure value there (`crossings`). One
+(C - B) / slope. VOC(k) = slope x the worth of k trials against a sure value there (`trial_walk`). One
 upward and one downward pass find the kinks of all leaves in O(nodes); each batch 1 ... k is O(1) more.
 """
 
@@ -10,11 +10,11 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from distill import schema
-from distill.exact.crossings import crossing_best_rate, crossing_gain, crossing_limit, first_crossing
+from distill.exact.trial_walk import crossing_best_rate, crossing_gain, crossing_limit, first_crossing
+from distill.numerics import compiled
 from distill.query import Priced, Query
 from distill.tree import BeliefTree, Floats, Ints
 
@@ -99,7 +99,7 @@ def _walk_rates(
     return rate, batch, error + np.where(seen < remaining, np.maximum(unseen - rate, 0.0), 0.0)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _gains(alpha: Floats, beta: Floats, kink: Floats, first: Floats, k: int) -> Floats:
     out = np.zeros(len(kink))
     for i in range(len(kink)):
@@ -108,7 +108,7 @@ def _gains(alpha: Floats, beta: Floats, kink: Floats, first: Floats, k: int) -> 
     return out
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _rates(
     alpha: Floats, beta: Floats, kink: Floats, first: Floats, last: int, limit: Floats
 ) -> tuple[Floats, Ints, Ints]:
@@ -121,7 +121,7 @@ def _rates(
     return rate, batch, seen
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _root_kinks(
     parent: Ints,
     kind: NDArray[np.int8],

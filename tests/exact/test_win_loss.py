@@ -17,7 +17,7 @@ from ladder import CLOSED_FORM, RELATIVE_TAIL
 from win_loss_builders import arms, change, random_tree
 
 from distill.errors import InputError
-from distill.exact.crossings import crossing_gain, crossing_limit, first_crossing
+from distill.exact.trial_walk import crossing_gain, crossing_limit, first_crossing
 from distill.exact.win_loss import price
 from distill.oracle import win_loss as oracle
 from distill.query import Query, scale_of

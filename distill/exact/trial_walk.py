@@ -17,10 +17,10 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit
 from scipy.special import betainc, betaincc
 
 from distill.beta_numerics import beta_divergence, beta_log_constant
+from distill.numerics import compiled
 from distill.tree import Floats
 
 __all__ = ["crossing_best_rate", "crossing_gain", "crossing_limit", "first_crossing"]
@@ -28,7 +28,7 @@ __all__ = ["crossing_best_rate", "crossing_gain", "crossing_limit", "first_cross
 _BIG = 1e200  # probabilities are carried with a power of this, so that none underflows
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def crossing_gain(alpha: float, beta: float, c: float, k: int) -> float:
     """E[max(m_k, c)] - max(m_0, c), m_t the posterior mean of Beta(alpha, beta) after t trials.
 
@@ -41,7 +41,7 @@ def crossing_gain(alpha: float, beta: float, c: float, k: int) -> float:
     return crossing_best_rate(alpha, beta, c, k, k, math.inf)[0]
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def crossing_best_rate(
     alpha: float, beta: float, c: float, first: int, last: int, limit: float
 ) -> tuple[float, int, int]:
@@ -102,7 +102,7 @@ def crossing_limit(alpha: Floats, beta: Floats, c: Floats) -> Floats:
     return np.where(inside, bound, 0.0)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _peaks(alpha: Floats, beta: Floats, c: Floats) -> Floats:
     out = np.empty(len(c))
     for i in range(len(c)):

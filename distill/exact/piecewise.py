@@ -19,10 +19,9 @@ Each breakpoint carries bounds on two rounding errors: of the intercept change d
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 
 from distill import schema
-from distill.numerics import gain, norm_cdf, norm_pdf
+from distill.numerics import compiled, gain, norm_cdf, norm_pdf
 from distill.tree import Floats, Ints
 
 __all__ = ["expected_rise", "root_breakpoints"]
@@ -39,7 +38,7 @@ _SLOPE, _Q, _SLOPE_ERR, _Q_ERR, _OWNER, _PLACE, _BEGIN = 4, 5, 6, 7, 8, 9, 10
 _ROWS = 11
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def root_breakpoints(
     kind: Ints, n_children: Ints, leaf: Ints, gap: Floats, gap_err: Floats, slopes: Floats, sd: Floats
 ) -> tuple[Ints, Floats]:
@@ -89,7 +88,7 @@ def root_breakpoints(
     return start, out[:, : start[n_leaves]].copy()
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _sum(low: int, top: int, stack: Floats, first: Ints, point: Floats) -> None:
     """Functions low..top-1 of the stack added into place `low`: slopes add, breakpoints merge."""
     size, a, b = 0.0, first[low], first[top]
@@ -104,7 +103,7 @@ def _sum(low: int, top: int, stack: Floats, first: Ints, point: Floats) -> None:
         point[row, a:b] = point[row, a:b][order]
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _maximum(
     low: int, top: int, stack: Floats, first: Ints, point: Floats, line: Floats, hull: Ints, reach: float
 ) -> int:
@@ -173,16 +172,16 @@ def _maximum(
             )
         end += 1
     stack[0, low], stack[1, low] = base, err
-    return end
+    return int(end)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _neighbours(line: Floats, old: int, new: int) -> bool:
     """Whether two lines follow each other in one function."""
-    return line[_OWNER, old] == line[_OWNER, new] and line[_PLACE, new] == line[_PLACE, old] + 1
+    return bool(line[_OWNER, old] == line[_OWNER, new] and line[_PLACE, new] == line[_PLACE, old] + 1)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _lines(
     f: int, stack: Floats, first: Ints, point: Floats, line: Floats, n: int, slope: float, reach: float
 ) -> int:
@@ -217,7 +216,7 @@ def _lines(
     return n
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _add_line(
     line: Floats,
     n: int,
@@ -238,7 +237,7 @@ def _add_line(
     return n + 1
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def expected_rise(start: Ints, point: Floats, direction: Ints, sd: Floats) -> tuple[Floats, Floats]:
     """E[h(T)], T ~ N(0, sd^2), of the root's rise in given directions; and a bound on its rounding error.
 

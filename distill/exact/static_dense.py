@@ -14,8 +14,10 @@ import numpy as np
 
 from distill import schema
 from distill.errors import RefusedError
+from distill.exact import double_double as dd
 from distill.exact.best_batch import best_batch
 from distill.exact.piecewise import expected_rise, root_breakpoints
+from distill.numerics import compiled
 from distill.query import Priced, Query
 from distill.tree import BeliefTree, Floats, Ints
 
@@ -23,9 +25,9 @@ __all__ = ["METHOD", "price"]
 
 METHOD = "static dense, closed form"
 
-_LONG = np.longdouble
-_EPS = float(np.finfo(np.float64).eps)
-_LONG_EPS = float(np.finfo(_LONG).eps)
+_EPS = 2.0**-52
+_DD_EPS = 2.0**-100  # relative rounding of a few double-double operations
+_DECISION, _CHANCE, _LEAF = schema.DECISION, schema.CHANCE, schema.LEAF
 
 
 def price(tree: BeliefTree, query: Query) -> Priced:
@@ -46,8 +48,10 @@ def price(tree: BeliefTree, query: Query) -> Priced:
         raise RefusedError("static dense pricing is for Gaussian leaves; this tree has win/loss leaves")
     if query.horizon != 0:
         raise RefusedError(f"static dense pricing is for horizon 0, not {query.horizon:g}")
-    assert tree.var is not None or tree.cov is not None
-    cov = np.diag(tree.var) if tree.cov is None else tree.cov
+    cov = tree.cov
+    if cov is None:
+        assert tree.var is not None
+        cov = np.diag(tree.var)
     program = _compile(tree)
     var, noise, n = np.diag(cov), tree.noise_var, tree.n_leaves
     most = query.remaining if query.rate else query.batch
@@ -91,7 +95,7 @@ def _directions(cov: Floats) -> Floats:
 
 @dataclass(frozen=True)
 class _Program:
-    """The tree in post-order, with the gaps of every child at the current means.
+    """The tree in post-order, with the gap of every child at the current means.
 
     A decision node under a decision node is merged into it, a chance node under a chance node too.
     """
@@ -107,75 +111,91 @@ class _Program:
 
 def _compile(tree: BeliefTree) -> _Program:
     assert tree.mean is not None
-    n, parent, kind = tree.n_nodes, tree.parent.tolist(), tree.kind.tolist()
-    reward, discount, prob = (list(map(_LONG, c.tolist())) for c in (tree.reward, tree.discount, tree.prob))
-    position = np.full(n, -1, dtype=np.int64)
-    position[tree.leaf_nodes] = np.arange(tree.n_leaves)
-
-    # Contribution of each node to the root at the current means, in extended precision: gaps between
-    # siblings are then good to double precision even where the values are 12 decades larger.
-    zero = _LONG(0)
-    gain, roundings = [_LONG(1)] * n, [1] * n
-    for c in range(1, n):
-        p = parent[c]
-        gain[c] = gain[p] * discount[c] * prob[c]
-        roundings[c] = roundings[p] + 2
-    worth: list[np.longdouble] = [zero] * n  # without the reward of the edge into the node
-    here: list[np.longdouble] = [zero] * n  # with it
-    slip: list[np.longdouble] = [zero] * n  # bound on the rounding behind them
-    seen = [False] * n
-    for v in range(n - 1, -1, -1):
-        if kind[v] == schema.LEAF:
-            worth[v] = gain[v] * _LONG(tree.mean[position[v]])
-            slip[v] = roundings[v] * _LONG_EPS * abs(worth[v])
-        if v == 0:
-            break
-        p = parent[v]
-        edge = gain[p] * prob[v] * reward[v]
-        here[v] = worth[v] + edge
-        slip[v] += _LONG_EPS * (roundings[v] * abs(edge) + abs(here[v]))
-        if kind[p] == schema.DECISION:
-            worth[p] = max(worth[p], here[v]) if seen[p] else here[v]
-            slip[p] = max(slip[p], slip[v])
-        else:
-            worth[p] += here[v]
-            slip[p] += slip[v] + _LONG_EPS * abs(worth[p])
-        seen[p] = True
-
-    # The group that a node is merged into, and its gap to the best member of that group.
-    group = list(range(n))
-    gap, err = [zero] * n, [zero] * n
-    children: list[list[int]] = [[] for _ in range(n)]
-    for c in range(1, n):
-        p = parent[c]
-        if kind[p] == schema.DECISION:
-            gap[c] = worth[p] - here[c]
-            err[c] = slip[p] + slip[c] + _LONG_EPS * gap[c]
-        if group[p] != p:
-            gap[c], err[c] = gap[c] + gap[p], err[c] + err[p]
-        if kind[c] == kind[p]:
-            group[c] = group[p]
-        else:
-            children[group[p]].append(c)
-    order = _post_order(children)
-    as_floats = lambda column: np.array([float(column[v]) for v in order])  # noqa: E731
-    gaps = as_floats(gap)
+    order, n_children, leaf, gap, gap_err, gain, value = _post_order(
+        tree.parent, tree.kind.astype(np.int64), tree.reward, tree.discount, tree.prob, tree.mean
+    )
     return _Program(
-        kind=np.array([kind[v] for v in order], dtype=np.int64),
-        n_children=np.array([len(children[v]) for v in order], dtype=np.int64),
-        leaf=position[order],
-        gap=gaps,
-        gap_err=as_floats(err) + _EPS * gaps,
-        gain=np.array([float(gain[v]) for v in tree.leaf_nodes]),
-        value=np.array([float(here[a]) for a in tree.action_nodes]),
+        kind=tree.kind[order].astype(np.int64),
+        n_children=n_children[order],
+        leaf=leaf[order],
+        gap=gap[order],
+        gap_err=gap_err[order],
+        gain=gain[tree.leaf_nodes],
+        value=value[tree.action_nodes],
     )
 
 
-def _post_order(children: list[list[int]]) -> list[int]:
-    """Children before parents, each node's subtree in one piece; iterative, for trees of any depth."""
-    order, stack = [], [0]
-    while stack:
-        v = stack.pop()
-        order.append(v)
-        stack.extend(children[v])
-    return order[::-1]
+@compiled
+def _post_order(
+    parent: Ints, kind: Ints, reward: Floats, discount: Floats, prob: Floats, mean: Floats
+) -> tuple[Ints, Ints, Ints, Floats, Floats, Floats, Floats]:
+    """Node order with children first, each subtree in one piece, merged nodes left out; and node columns.
+
+    Returns order, then over all nodes: number of children after merging, leaf position, gap and its
+    error, gain, and r + g V of the edge.
+    """
+    n = len(parent)
+    leaf = np.full(n, -1)
+    at = len(mean)
+    best = np.zeros((n, 2))  # V in double-double arithmetic: gaps stay exact to double precision
+    total = np.zeros((n, 2))  # r + g V
+    slip = np.zeros(n)  # bound on the rounding of V, then of r + g V
+    seen = np.zeros(n, dtype=np.bool_)
+    for c in range(n - 1, 0, -1):
+        if kind[c] == _LEAF:
+            at -= 1
+            leaf[c] = at
+            best[c, 0] = mean[at]
+        hi, lo = dd.scale(best[c, 0], best[c, 1], discount[c])
+        hi, lo = dd.add(hi, lo, reward[c], 0.0)
+        total[c, 0], total[c, 1] = hi, lo
+        slip[c] += _DD_EPS * (abs(best[c, 0]) + abs(reward[c]))
+        p = parent[c]
+        if kind[p] == _CHANCE:
+            hi, lo = dd.scale(hi, lo, prob[c])
+            hi, lo = dd.add(best[p, 0], best[p, 1], hi, lo)
+            slip[p] += prob[c] * slip[c] + _DD_EPS * (abs(total[c, 0]) + abs(hi))
+            best[p, 0], best[p, 1] = hi, lo
+        else:
+            if not seen[p] or hi > best[p, 0] or (hi == best[p, 0] and lo > best[p, 1]):
+                best[p, 0], best[p, 1] = hi, lo
+            slip[p] = max(slip[p], slip[c])
+        seen[p] = True
+    gain = np.ones(n)
+    depth = np.zeros(n, dtype=np.int64)
+    group = np.arange(n)
+    gap, gap_err = np.zeros(n), np.zeros(n)
+    n_children = np.zeros(n, dtype=np.int64)
+    next_sibling, first_child = np.full(n, -1), np.full(n, -1)
+    for c in range(1, n):
+        p = parent[c]
+        top = group[p]
+        gain[c] = gain[p] * discount[c] * prob[c]
+        depth[c] = depth[p] + 1
+        if kind[p] == _DECISION:
+            behind = dd.subtract(best[p, 0], best[p, 1], total[c, 0], total[c, 1])
+            gap[c] = gain[p] * behind + (gap[p] if top != p else 0.0)
+            gap_err[c] = gain[p] * (slip[c] + slip[p]) + (gap_err[p] if top != p else 0.0)
+        if kind[c] == kind[p]:
+            group[c] = top
+        else:
+            n_children[top] += 1
+            next_sibling[c] = first_child[top]
+            first_child[top] = c
+    for c in range(1, n):
+        gap_err[c] += (4 * depth[c] + 2) * _EPS * gap[c]
+    order = np.empty(n, dtype=np.int64)
+    stack = np.empty(n, dtype=np.int64)
+    stack[0] = 0
+    waiting, done = 1, n
+    while waiting > 0:  # parents before children, written from the back
+        waiting -= 1
+        v = stack[waiting]
+        done -= 1
+        order[done] = v
+        c = first_child[v]
+        while c >= 0:
+            stack[waiting] = c
+            waiting += 1
+            c = next_sibling[c]
+    return order[done:], n_children, leaf, gap, gap_err, gain, total[:, 0].copy()

@@ -16,7 +16,6 @@ import math
 from collections.abc import Iterator
 from typing import Any
 
-import mpmath
 import numpy as np
 from numpy.typing import NDArray
 from scipy import integrate, stats
@@ -119,6 +118,8 @@ def _kinks(f: Any, a: float, b: float) -> Iterator[float]:
 
 def policies(tree: BeliefTree) -> Iterator[tuple[list[Any], Any]]:
     """Every way to fix the choice at each decision node: (weight of each leaf, constant), mpmath."""
+    import mpmath  # only here: the rest of the oracle needs no arbitrary precision
+
     leaf = {int(v): i for i, v in enumerate(tree.leaf_nodes)}
 
     def lines(v: int) -> list[tuple[list[Any], Any]]:
@@ -143,6 +144,8 @@ def policies(tree: BeliefTree) -> Iterator[tuple[list[Any], Any]]:
 
 def static_voc_policies(tree: BeliefTree, leaf: int, k: int, digits: int = 50) -> Any:
     """The same from the lines of all policies, at `digits` digits: for tails and for small trees."""
+    import mpmath
+
     with mpmath.workdps(digits):
         mpf = mpmath.mpf
         S, m = covariance(tree), tree.mean

@@ -70,6 +70,11 @@ class Search:
         self._topology = _topology(tree)
         self._scale = scale(self._topology, self._belief.var)
 
+    @property
+    def moments(self) -> tuple[Floats, Floats]:
+        """Posterior mean and variance of each leaf value, shape (n_leaves,); not to be written to."""
+        return self._belief.mean, self._belief.var
+
     def pick(
         self, rule: str, rng: np.random.Generator, *, remaining: int = 1, exploration: float = 1.0
     ) -> int:

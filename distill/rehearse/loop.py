@@ -1,0 +1,149 @@
+"""One decision in closed loop: a policy spends a budget, then the agent acts."""
+
+from __future__ import annotations
+
+import math
+import time
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from distill import voc
+from distill.allocation import Search as Posterior
+from distill.errors import InputError
+from distill.query import Query
+from distill.rehearse.policies import Policy
+from distill.rehearse.problems import Draw, action_values
+from distill.tree import BeliefTree, Floats
+
+__all__ = ["Budget", "Decided", "decide", "expected_maxima", "posterior_means"]
+
+
+@dataclass(frozen=True)
+class Budget:
+    """What one decision may cost: `rollouts`, or `seconds` at `rollout_seconds` each, or both.
+
+    >>> Budget(seconds=0.02, rollout_seconds=0.0)
+    Traceback (most recent call last):
+    distill.errors.InputError: rollout_seconds: must be above 0 where seconds are limited; got 0.0
+    """
+
+    rollouts: int | None = None
+    seconds: float | None = None
+    rollout_seconds: float = 0.0
+
+    def __post_init__(self) -> None:
+        if self.rollouts is None and self.seconds is None:
+            raise InputError("budget", "must limit rollouts or seconds")
+        if self.rollouts is not None and self.rollouts < 0:
+            raise InputError("rollouts", "must be >= 0", self.rollouts)
+        if self.seconds is not None and not self.seconds >= 0:
+            raise InputError("seconds", "must be >= 0", self.seconds)
+        if self.seconds is not None and not self.rollout_seconds > 0:
+            raise InputError(
+                "rollout_seconds", "must be above 0 where seconds are limited", self.rollout_seconds
+            )
+
+    def room(self, spent: int, elapsed: float) -> int:
+        """Rollouts that still fit, if choosing cost nothing from now on."""
+        room = math.inf if self.rollouts is None else self.rollouts - spent
+        if self.seconds is not None:
+            room = min(room, _whole((self.seconds - elapsed) / self.rollout_seconds))
+        return max(int(room), 0)
+
+    def left(self, spent: int, elapsed: float) -> int:
+        """Rollouts that still fit, if choosing goes on costing what it did on average."""
+        room = self.room(spent, elapsed)
+        if self.seconds is None or not spent or not room:
+            return room
+        choosing = max(elapsed / spent - self.rollout_seconds, 0.0)
+        # At least the next one, which fits if it is chosen fast.
+        return max(min(room, _whole((self.seconds - elapsed) / (self.rollout_seconds + choosing))), 1)
+
+
+@dataclass(frozen=True)
+class Decided:
+    """What came of one decision. Regrets in value units, times in seconds.
+
+    regret : of the root action with the largest value acted on, by default the expected maximum.
+    regret_by_mean : of the one with the largest backed-up mean.
+    rollouts : spent. choosing : time of the policy and of belief updates.
+    stopped : whether the policy stopped before the budget was used.
+    """
+
+    regret: float
+    regret_by_mean: float
+    rollouts: int
+    choosing: float
+    stopped: bool
+
+
+def _whole(rollouts: float) -> int:
+    """Rounded down, but the rounding of a sum of rollouts must not lose the last one."""
+    return math.floor(rollouts * (1 + 1e-12))
+
+
+def decide(
+    draw: Draw,
+    policy: Policy,
+    budget: Budget,
+    rng: np.random.Generator,
+    *,
+    values: Callable[[BeliefTree], Floats] | None = None,
+    clock: Callable[[], float] = time.perf_counter,
+) -> Decided:
+    """Let a policy search one decision, then act.
+
+    values : root action values of a tree, shape (n_actions,), to act on; None takes the expected maxima,
+        V_h with h infinite, from `distill.voc`. clock : seconds.
+
+    The clock counts the policy's own time as it is measured, belief updates included, and each rollout
+    at the budget's stated cost, however long it really took: so a simulator of any price can be
+    rehearsed, and policies differ by nothing but their choices and the time those take.
+    """
+    posterior = Posterior(draw.tree)
+    spent, elapsed, stopped = 0, 0.0, False
+    started = clock()
+    policy.begin(draw.tree)
+    elapsed += clock() - started
+    while (left := budget.left(spent, elapsed)) > 0:
+        started = clock()
+        choice = policy.choose(posterior, left, rng)
+        elapsed += clock() - started
+        if choice is None:
+            stopped = True
+            break
+        rollouts = min(choice.rollouts, budget.room(spent, elapsed))
+        if rollouts == 0:  # the policy thought the last rollout away
+            break
+        returns = [draw.roll(choice.leaf) for _ in range(rollouts)]
+        observed = math.fsum(returns) if draw.tree.belief == "win_loss" else math.fsum(returns) / rollouts
+        started = clock()
+        posterior.observe(choice.leaf, observed, rollouts)
+        elapsed += clock() - started + rollouts * budget.rollout_seconds
+        spent += rollouts
+    tree = posterior.tree()
+    return Decided(
+        regret=draw.regret(int(np.argmax((values or expected_maxima)(tree)))),
+        regret_by_mean=draw.regret(int(np.argmax(posterior_means(tree)))),
+        rollouts=spent,
+        choosing=elapsed - spent * budget.rollout_seconds,
+        stopped=stopped,
+    )
+
+
+def expected_maxima(tree: BeliefTree) -> Floats:
+    """Root action values if all uncertainty were resolved before each later decision; (n_actions,)."""
+    return voc.price(tree, Query()).value
+
+
+def posterior_means(tree: BeliefTree) -> Floats:
+    """Root action values at the leaves' posterior means; shape (n_actions,)."""
+    if tree.mean is not None:
+        return action_values(tree, tree.mean)
+    assert tree.alpha is not None
+    assert tree.beta is not None
+    assert tree.low is not None
+    assert tree.high is not None
+    return action_values(tree, tree.low + (tree.high - tree.low) * (tree.alpha / (tree.alpha + tree.beta)))

@@ -23,7 +23,7 @@ import numpy as np
 
 from distill import schema
 from distill.allocation_rules import RULES, Belief, Topology, observe, pick, run, scale
-from distill.beliefs import win_loss_mean, win_loss_noise_var, win_loss_var
+from distill.beliefs import dense_gaussian_update, win_loss_mean, win_loss_noise_var, win_loss_var
 from distill.errors import InputError
 from distill.tree import BeliefTree, Floats
 
@@ -57,7 +57,7 @@ class Search:
             cov = empty if tree.cov is None else tree.cov.copy()
             var = np.diag(cov).copy() if tree.var is None else tree.var.copy()
             self._belief = Belief(
-                tree.mean.copy(), var, tree.noise_var.copy(), none, none, none, none, cov, count
+                tree.mean.copy(), var, tree.noise_var.copy(), none, none, none, none, cov, count, np.zeros(n)
             )
         else:
             assert tree.alpha is not None
@@ -66,7 +66,8 @@ class Search:
             assert tree.high is not None
             shape = (tree.alpha.copy(), tree.beta.copy(), tree.low.copy(), tree.high.copy())
             moments = (win_loss_mean(*shape), win_loss_var(*shape), win_loss_noise_var(*shape))
-            self._belief = Belief(*moments, *shape, empty, count)
+            self._belief = Belief(*moments, *shape, empty, count, np.zeros(n))
+        self._visits = count.copy()
         self._topology = _topology(tree)
         self._scale = scale(self._topology, self._belief.var)
 
@@ -122,8 +123,15 @@ class Search:
         if len(b.alpha):
             fields |= {"alpha": b.alpha.copy(), "beta": b.beta.copy(), "low": t.low, "high": t.high}
         else:
-            fields |= {"mean": b.mean.copy(), "noise_var": t.noise_var}
-            fields |= {"cov": b.cov.copy()} if len(b.cov) else {"var": b.var.copy()}
+            fields |= {"mean": b.mean.copy(), "var": b.var.copy(), "noise_var": t.noise_var}
+            if t.cov is not None:
+                assert t.mean is not None
+                assert t.noise_var is not None
+                # All rollouts at once, from the covariance of the start: rank-one steps lose digits.
+                rollouts = b.visits - self._visits
+                average = b.returns / np.maximum(rollouts, 1)
+                posterior = dense_gaussian_update(t.mean, t.cov, t.noise_var, rollouts, average)
+                fields |= {"mean": posterior[0], "var": None, "cov": posterior[1]}
         return BeliefTree(t.parent, t.kind, t.reward, t.discount, t.prob, **fields)
 
 

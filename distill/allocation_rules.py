@@ -58,6 +58,7 @@ class Belief(NamedTuple):
     high: Floats
     cov: Floats
     visits: Ints
+    returns: Floats  # sum of what the rollouts since the start returned
 
 
 _mean_after = njit(cache=True, error_model="numpy")(gaussian_mean_update)
@@ -112,6 +113,7 @@ def _draw_rule(rng, share):  # type: ignore[no-untyped-def]
 def observe(b, i, observed, k):  # type: ignore[no-untyped-def]
     """Posterior update in place: `k` rollouts at leaf `i`, `observed` their average (win/loss: the wins)."""
     b.visits[i] += k
+    b.returns[i] += k * observed
     if len(b.alpha) > 0:
         b.alpha[i] += observed
         b.beta[i] += k - observed
@@ -119,7 +121,8 @@ def observe(b, i, observed, k):  # type: ignore[no-untyped-def]
         b.var[i] = _win_loss_var(b.alpha[i], b.beta[i], b.low[i], b.high[i])
         b.noise[i] = _win_loss_noise(b.alpha[i], b.beta[i], b.low[i], b.high[i])
     elif len(b.cov) > 0:
-        # Rank one: m' = m + g (y - m_i), S' = S - g S_i, with g = S_i / (S_ii + n_i / k).
+        # Rank one: m' = m + g (y - m_i), S' = S - g S_i, g = S_i / (S_ii + n_i / k). It loses digits where
+        # noise is tiny, which the rules can bear; `Search.tree` takes all rollouts in at once instead.
         n = len(b.mean)
         row = b.cov[i].copy()
         surprise = observed - b.mean[i]
@@ -127,8 +130,9 @@ def observe(b, i, observed, k):  # type: ignore[no-untyped-def]
         for j in range(n):
             g = k * row[j] / (k * row[i] + b.noise[i])
             b.mean[j] += g * surprise
-            for m in range(n):
+            for m in range(j + 1):  # one half, mirrored: symmetric to the last bit
                 b.cov[j, m] -= g * row[m]
+                b.cov[m, j] = b.cov[j, m]
         for j in range(n):  # along the leaf itself nothing is subtracted: S'_ij = S_ij n / (k S_ii + n)
             b.cov[i, j] = row[j] * kept
             b.cov[j, i] = row[j] * kept

@@ -58,9 +58,10 @@ def dense_gaussian_update(
 ) -> tuple[Floats, Floats]:
     r"""Joint posterior of correlated leaf values after rollouts at any of them.
 
-    .. math:: m' = m + S_{:A} (S_{AA} + D)^{-1} (y_A - m_A), \quad S' = S - S_{:A} (S_{AA} + D)^{-1} S_{A:}
+    .. math:: S' = L (I + L^T D L)^{-1} L^T, \quad m' = m + S' D (y - m), \quad S = L L^T
 
-    with A the leaves that were rolled out and D the diagonal of n_i / k_i.
+    with D the diagonal of k_i / n_i: the information form, for any rank of S. Nothing is subtracted
+    from S, so S' is positive semidefinite to its own rounding even where noise is tiny beside S.
 
     mean, noise_var, rollouts, observed : shape (n,); `observed` is the average return, and is read
         only where `rollouts` > 0.
@@ -69,22 +70,21 @@ def dense_gaussian_update(
 
     >>> m, S = dense_gaussian_update(np.zeros(2), np.array([[1.0, 0.5], [0.5, 1.0]]), np.ones(2),
     ...                              np.array([1, 0]), np.array([2.0, np.nan]))
-    >>> m, S
+    >>> m.round(12), S.round(12)
     (array([1. , 0.5]), array([[0.5  , 0.25 ], [0.25 , 0.875]]))
     """
-    seen = np.flatnonzero(rollouts)
-    if not len(seen):
+    seen = rollouts > 0
+    if not np.any(seen):
         return mean.copy(), cov.copy()
-    total = cov[np.ix_(seen, seen)] + np.diag(noise_var[seen] / rollouts[seen])
-    # Whitened by the Cholesky factor, the reduction is W' W: symmetric, and never below zero.
-    factor = np.linalg.cholesky(total)
-    white = np.linalg.solve(factor, cov[seen])
-    surprise = np.linalg.solve(factor, observed[seen] - mean[seen])
-    new = cov - white.T @ white
-    new = (new + new.T) / 2
-    diagonal = np.einsum("ii->i", new)
-    np.maximum(diagonal, 0.0, out=diagonal)
-    return mean + white.T @ surprise, new
+    spectrum, basis = np.linalg.eigh(cov)
+    root = basis * np.sqrt(np.maximum(spectrum, 0.0))
+    root[np.diag(cov) == 0] = 0.0  # a sure leaf stays sure to the last bit
+    weight = np.where(seen, rollouts / noise_var, 0.0)
+    surprise = np.where(seen, weight * (observed - mean), 0.0)
+    information = np.eye(len(cov)) + root.T @ (weight[:, None] * root)
+    white = np.linalg.solve(np.linalg.cholesky(information), root.T)
+    new = white.T @ white
+    return mean + white.T @ (white @ surprise), (new + new.T) / 2
 
 
 def win_loss_update(alpha: Any, beta: Any, rollouts: Any, wins: Any) -> Any:

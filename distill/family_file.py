@@ -4,7 +4,7 @@ Every field is a distribution: a number (always that), [a, b] (uniform between, 
 fields), or a table with one of
     uniform = [a, b]
     log_uniform = [a, b]         0 < a <= b
-    normal = [mean, sd]          only where a field has no bounds
+    normal = [mean, sd]          for rewards and means only
     choice = [x, y, ...]         optionally with weights = [..]
 `FIELDS` lists all of them with bounds and defaults; datasets/README.md explains them by example.
 """
@@ -28,7 +28,6 @@ from distill.tree import Floats
 
 __all__ = ["Distribution", "Family", "load_family", "parse_family"]
 
-_INF: Final = math.inf
 _MOST_LEAVES: Final = 65_536
 _MOST_CORRELATED: Final = 1_024  # their covariance is written out in full
 
@@ -56,7 +55,7 @@ class Distribution:
     @property
     def support(self) -> tuple[float, float]:
         """The smallest and the largest value that can be drawn."""
-        return (-_INF, _INF) if self.kind == "normal" else (min(self.args), max(self.args))
+        return (-math.inf, math.inf) if self.kind == "normal" else (min(self.args), max(self.args))
 
     def draw(self, rng: np.random.Generator, size: int) -> Floats:
         """`size` independent values, float64."""
@@ -85,15 +84,22 @@ class _Field:
     """What one field of the file may hold; `default` None means it must be given."""
 
     default: float | None
-    low: float = -_INF
-    high: float = _INF
+    low: float
+    high: float
     whole: bool = False
-    open_low: bool = False  # `low` itself is excluded
+    normal: bool = False  # a normal distribution is allowed: the bounds hold for its mean and sd
     scalar: bool = False  # a plain number, not a distribution
 
 
-_SIZE = {"low": -1e9, "high": 1e9}
-_POSITIVE = {"low": 0.0, "high": 1e9, "open_low": True}
+# The bounds keep every product and square of fields far inside double precision's range.
+def _any(default: float | None, normal: bool = False) -> _Field:
+    return _Field(default, -1e9, 1e9, normal=normal)
+
+
+def _positive(default: float | None) -> _Field:
+    return _Field(default, 1e-9, 1e9)
+
+
 _SHAPE: Final = {
     "actions": _Field(None, 1, _MOST_LEAVES, whole=True),
     "leaves": _Field(None, 1, _MOST_LEAVES, whole=True),
@@ -111,7 +117,7 @@ _SEARCH: Final = {
 }
 _COMMON: Final = {
     "shape": _SHAPE,
-    "edge": {"reward": _Field(0), "discount": _Field(1, 0, 1, open_low=True)},
+    "edge": {"reward": _any(0, normal=True), "discount": _Field(1, 1e-3, 1)},
     "chance": {
         "share": _Field(None, 0, 1, scalar=True),
         "evenness": _Field(1, 1e-3, 1e6),
@@ -130,29 +136,28 @@ FIELDS: Final[dict[str, dict[str, dict[str, _Field]]]] = {
     "gaussian": {
         **_COMMON,
         "prior": {
-            "scale": _Field(1, **_POSITIVE),  # type: ignore[arg-type]
-            "action": _Field(0),
-            "mean": _Field(0),
+            "scale": _positive(1),
+            "action": _any(0, normal=True),
+            "mean": _any(0, normal=True),
             "tree_sd": _Field(1, 0, 1e9),
             "sd": _Field(None, 0, 1e9),
         },
-        "noise": {"tree_sd": _Field(1, **_POSITIVE), "sd": _Field(None, **_POSITIVE)},  # type: ignore[arg-type]
+        "noise": {"tree_sd": _positive(1), "sd": _positive(None)},
         "correlation": {"shared": _Field(None, 0, 1)},
     },
     "win_loss": {
         **_COMMON,
         "prior": {
-            "scale": _Field(1, **_POSITIVE),  # type: ignore[arg-type]
+            "scale": _positive(1),
             "strength": _Field(None, 1e-3, 1e9),
             "win_rate": _Field(None, 1e-9, 1 - 1e-9),
-            "low": _Field(0, **_SIZE),  # type: ignore[arg-type]
-            "span": _Field(1, **_POSITIVE),  # type: ignore[arg-type]
+            "low": _any(0),
+            "span": _positive(1),
         },
     },
 }
 _OPTIONAL_SECTIONS: Final = ("edge", "chance", "cost", "correlation")
 _OPTIONAL_FIELDS: Final = ("budget.horizon",)
-_NO_BOUNDS: Final = ("edge.reward", "prior.action", "prior.mean")  # in size at most 1e9, normal allowed
 
 
 @dataclass(frozen=True)
@@ -260,6 +265,14 @@ def _across(fields: dict[str, Distribution]) -> None:
         raise InputError(
             "shape.leaves", f"times shape.actions must be at most {limit} leaves a tree", int(most)
         )
+    if "prior.span" in fields:
+        size = max(abs(x) for x in fields["prior.low"].support)
+        if fields["prior.span"].support[0] < 1e-9 * size:
+            raise InputError(
+                "prior.span",
+                f"must be at least 1e-9 of prior.low's size, {size:g}",
+                fields["prior.span"].support[0],
+            )
     if sum(fields[f"search.{rule}"].args[0] for rule in ("even", "uct", "thompson", "static_rate")) <= 0:
         raise InputError("search", "must give some allocation rule a weight above 0")
 
@@ -280,21 +293,13 @@ def _distribution(value: object, place: str, rule: _Field) -> Distribution:
             out = _choice(value, place, rule)
         else:
             out = _pair(kind, value[kind], f"{place}.{kind}", rule)
-    bounded = math.isfinite(rule.low) or math.isfinite(rule.high)
-    if out.kind == "normal" and bounded:
-        raise InputError(place, f"must not be normal: it has bounds, {_bounds(rule)}", list(out.args))
+    bounds = f"at least {rule.low:g} and at most {rule.high:g}"
+    if out.kind == "normal" and not rule.normal:
+        raise InputError(place, f"must not be normal: it must be {bounds}", list(out.args))
     for x in out.args:
-        low_ok = x > rule.low if rule.open_low else x >= rule.low
-        if not (low_ok and x <= rule.high):
-            raise InputError(place, f"must be {_bounds(rule)}", x)
-        if place in _NO_BOUNDS and abs(x) > 1e9:
-            raise InputError(place, "must be at most 1e+09 in size", x)
+        if not rule.low <= x <= rule.high:
+            raise InputError(place, f"must be {bounds}", x)
     return out
-
-
-def _bounds(rule: _Field) -> str:
-    low = f"above {rule.low:g}" if rule.open_low else f"at least {rule.low:g}"
-    return f"{low} and at most {rule.high:g}"
 
 
 def _pair(kind: str, value: object, place: str, rule: _Field) -> Distribution:

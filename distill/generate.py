@@ -9,6 +9,7 @@ workers.
 from __future__ import annotations
 
 import contextlib
+import dataclasses
 import functools
 import hashlib
 import importlib.metadata
@@ -24,16 +25,16 @@ import numpy as np
 from joblib import Parallel, delayed
 
 from distill import schema, shards, traces, voc
-from distill.errors import InputError, RefusedError
+from distill.errors import InputError, RefusedError, ToleranceError
 from distill.family import Family, draw
-from distill.query import Query, resolve
+from distill.query import Priced, Query, resolve
 from distill.record import to_record
 from distill.shards import Labelled
 from distill.tree import BeliefTree
 
 __all__ = ["Asked", "Traces", "generate"]
 
-_SHARD_TREES: Final = 1000
+_SHARD_TREES: Final = 500
 
 
 @dataclass(frozen=True)
@@ -164,21 +165,35 @@ def generate(
 def _label_shard(
     folder: Path, part: int, first: int, trees: Callable[[], Iterable[BeliefTree]], asked: Asked
 ) -> dict[str, Any]:
-    rows = []
-    for number, tree in enumerate(trees(), first):
+    drawn = list(trees())
+    queries = []
+    for number, tree in enumerate(drawn, first):
         try:
-            query = asked.query(tree)
-            rows.append(_label(number, tree, query))
+            queries.append(asked.query(tree))
         except InputError as e:
             raise e.at(f"tree {number}") from None
-    return shards.write_shard(folder, part, rows)
+    # Trees that are asked the same go to the engine together, which has faster ways for some of them.
+    alike: dict[Query, list[int]] = {}
+    for i, query in enumerate(queries):
+        alike.setdefault(query if query.rate else dataclasses.replace(query, remaining=None), []).append(i)
+    rows: dict[int, Labelled] = {}
+    for query, group in alike.items():
+        answers = _price([drawn[i] for i in group], query)
+        for i, (priced, reason) in zip(group, answers, strict=True):
+            rows[i] = Labelled(first + i, drawn[i], queries[i], priced, reason)
+    return shards.write_shard(folder, part, [rows[i] for i in range(len(drawn))])
 
 
-def _label(number: int, tree: BeliefTree, query: Query) -> Labelled:
+def _price(trees: list[BeliefTree], query: Query) -> list[tuple[Priced | None, str]]:
+    """Labels, and for each tree the reason to keep it aside, empty where there is none."""
     try:
-        return Labelled(number, tree, query, voc.price(tree, query))
+        return [(priced, "") for priced in voc.price_many(trees, query)]
     except RefusedError as e:
-        return Labelled(number, tree, query, None, f"{type(e).__name__}: {e}")
+        if len(trees) > 1:
+            return [answer for tree in trees for answer in _price([tree], query)]
+        if isinstance(e, ToleranceError):
+            return [(voc.price(trees[0], dataclasses.replace(query, tolerance=None)), f"tolerance: {e}")]
+        return [(None, f"refused: {e}")]
 
 
 # --- where trees come from -------------------------------------------------------------------------

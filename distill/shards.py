@@ -4,7 +4,7 @@ A dataset is a folder:
     manifest.json               what was asked of what, shard list with row counts and SHA-256
     trees-NNNNN.parquet         one row a tree: the full record, with list columns
     candidates-NNNNN.parquet    one row a candidate: the leaf's columns, its label and error bound
-    aside-NNNNN.parquet         trees that got no label good enough, with the reason; only where there are any
+    aside-NNNNN.parquet         trees without a label good enough, with the reason; where there are any
 Every file is written in one step and named by the manifest only after that. Any Parquet reader opens
 them; meaning and unit of each column are in the Parquet metadata.
 """
@@ -78,7 +78,12 @@ _TREE_LABELS: Final[dict[str, tuple[pa.DataType, str]]] = {
     "method": (_TEXT, "name of the exact method"),
 }
 _ASIDE_LABELS: Final[dict[str, tuple[pa.DataType, str]]] = {
-    "reason": (_TEXT, "why the tree has no label in this dataset"),
+    "reason": (_TEXT, "why the tree is not among the labelled ones"),
+    "label": (
+        _FLOATS,
+        "per leaf: the value reached, beyond the tolerance; null where no method prices the tree",
+    ),
+    "error": (_FLOATS, "per leaf: bound on the absolute error of label; null with it"),
 }
 _CANDIDATE_COLUMNS: Final[dict[str, tuple[pa.DataType, str]]] = {
     "tree": (_I64, "number of the tree in this dataset"),
@@ -98,7 +103,10 @@ _CANDIDATE_COLUMNS: Final[dict[str, tuple[pa.DataType, str]]] = {
 
 @dataclass(frozen=True, eq=False)
 class Labelled:
-    """One tree of a dataset with its exact labels, or with the reason why it has none."""
+    """One tree of a dataset with its exact labels.
+
+    A tree with a `reason` is kept aside: `priced` then misses the tolerance, or is None.
+    """
 
     number: int
     tree: BeliefTree
@@ -113,10 +121,10 @@ class Labelled:
 def write_shard(folder: Path, part: int, rows: Sequence[Labelled]) -> dict[str, Any]:
     """Write one shard's files; returns its manifest entry (row counts, and SHA-256 by file name).
 
-    The same rows give the same bytes. Rows without labels go to the `aside` file.
+    The same rows give the same bytes. Rows with a reason go to the `aside` file.
     """
-    good = [r for r in rows if r.priced is not None]
-    aside = [r for r in rows if r.priced is None]
+    good = [r for r in rows if not r.reason]
+    aside = [r for r in rows if r.reason]
     tables = {"trees": _trees_table(good), "candidates": _candidates_table(good)}
     if aside:
         tables["aside"] = _trees_table(aside)
@@ -148,13 +156,15 @@ def _trees_table(rows: Sequence[Labelled]) -> pa.Table:
         values = (getattr(t, name) for t in trees)
         columns[name] = [None if v is None else json.dumps(v, sort_keys=False) for v in values]
     described = dict(_TREE_COLUMNS)
-    if rows and rows[0].priced is None:
+    priced = [r.priced for r in rows]
+    if rows and rows[0].reason:
         columns["reason"] = [r.reason for r in rows]
+        columns["label"] = _list_column([None if p is None else p.voc for p in priced], _FLOATS)
+        columns["error"] = _list_column([None if p is None else p.error for p in priced], _FLOATS)
         described |= _ASIDE_LABELS
     else:
-        priced = [r.priced for r in rows]
-        columns["value"] = _list_column([p.value for p in priced if p is not None], _FLOATS)
-        columns["method"] = [p.method for p in priced if p is not None]
+        columns["value"] = _list_column([None if p is None else p.value for p in priced], _FLOATS)
+        columns["method"] = [None if p is None else p.method for p in priced]
         described |= _TREE_LABELS
     return _table(columns, described)
 

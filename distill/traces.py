@@ -26,6 +26,7 @@ __all__ = ["read_trees", "write_trees"]
 _SUFFIXES: Final = (".jsonl", ".jsonl.gz", ".json")
 _MOST_LINE: Final = 64 * 2**20  # bytes; 1,024 leaves with all their covariance take about 20 MB
 _MOST_RATIO: Final = 200  # unpacked bytes a packed byte: traces stay below 50, bombs reach 1,000
+_MOST_BLANK: Final = 100_000
 _FREE: Final = 2**20  # unpacked bytes that need no packed ones
 
 
@@ -108,7 +109,7 @@ def _lines(
     raw: BinaryIO, name: str, packed_size: int | None
 ) -> Iterator[tuple[str, bytes | InputError | object]]:
     stream: Any = raw if packed_size is None else gzip.GzipFile(fileobj=raw)
-    number, taken = 0, 0
+    number, taken, blank = 0, 0, 0
     while True:
         number += 1
         place = f"{name} line {number}"
@@ -131,3 +132,8 @@ def _lines(
             return
         if line.strip():
             yield place, line
+            continue
+        blank += 1
+        if blank > _MOST_BLANK:
+            yield place, InputError("record", f"must not come after more than {_MOST_BLANK} blank lines")
+            return

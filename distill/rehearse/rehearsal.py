@@ -1,0 +1,219 @@
+"""Policies compared on the same decisions over a grid of problems and budgets; resumable."""
+
+from __future__ import annotations
+
+import hashlib
+import io
+import json
+import os
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import asdict, dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+from distill import __version__
+from distill.errors import InputError
+from distill.files import write_atomic
+from distill.rehearse.loop import Budget, Decided, decide
+from distill.rehearse.policies import Policy
+from distill.rehearse.problems import Problem
+from distill.tree import BeliefTree, Floats
+
+__all__ = ["Cell", "Compared", "compare", "rehearse"]
+
+_COLUMNS = ("regret", "regret_by_mean", "rollouts", "choosing", "stopped")
+_RESAMPLES = 2000
+
+
+@dataclass(frozen=True, eq=False)
+class Cell:
+    """All decisions of one policy on one problem under one budget; arrays over seeds, in seed order.
+
+    regret, regret_by_mean : value units. rollouts : spent. choosing : seconds. stopped : early.
+    """
+
+    problem: str
+    budget: Budget
+    policy: str
+    regret: Floats
+    regret_by_mean: Floats
+    rollouts: Floats
+    choosing: Floats
+    stopped: Floats
+
+    @property
+    def choosing_share(self) -> float:
+        """Share of all time that went into choosing, given the budget's cost of a rollout; else nan."""
+        rolling = float(self.rollouts.sum()) * self.budget.rollout_seconds
+        choosing = float(self.choosing.sum())
+        return choosing / (choosing + rolling) if rolling > 0 else float("nan")
+
+
+def rehearse(
+    problems: Sequence[Problem],
+    policies: Sequence[Policy],
+    budgets: Sequence[Budget],
+    folder: str | os.PathLike[str],
+    *,
+    seeds: int = 400,
+    first_seed: int = 0,
+    values: Callable[[BeliefTree], Floats] | None = None,
+    progress: Callable[[int, int], None] | None = None,
+) -> list[Cell]:
+    """Every policy on every problem under every budget, on the same `seeds` decisions.
+
+    folder : takes one Parquet file a cell, written in one step when the cell is done. Run again with the
+        same arguments, cells that are there are read instead of run: a killed rehearsal resumes.
+    values : what the agent acts on, as for `decide`. progress : called with cells done and in all.
+
+    Raises InputError for repeated names, fewer than 2 seeds, or a folder of another rehearsal.
+    """
+    _check_names("problem", [p.name for p in problems])
+    _check_names("policy", [p.name for p in policies])
+    if seeds < 2:
+        raise InputError("seeds", "must be at least 2", seeds)
+    folder = Path(folder)
+    _claim(folder, {"seeds": seeds, "first_seed": first_seed, "version": __version__})
+    todo = [(problem, budget, policy) for problem in problems for budget in budgets for policy in policies]
+    cells = []
+    for done, (problem, budget, policy) in enumerate(todo):
+        path = folder / _file_name(problem.name, budget, policy.name)
+        if path.exists():
+            cells.append(_read(path, problem.name, budget, policy.name, seeds))
+        else:
+            results = list(_run(problem, policy, budget, range(first_seed, first_seed + seeds), values))
+            columns = {c: np.array([getattr(r, c) for r in results], dtype=np.float64) for c in _COLUMNS}
+            cells.append(Cell(problem.name, budget, policy.name, **columns))
+            _write(path, cells[-1], first_seed)
+        if progress is not None:
+            progress(done + 1, len(todo))
+    return cells
+
+
+def _run(
+    problem: Problem,
+    policy: Policy,
+    budget: Budget,
+    seeds: range,
+    values: Callable[[BeliefTree], Floats] | None,
+) -> Iterator[Decided]:
+    # Compiling and first use belong to no decision's clock. The seed is none of those compared.
+    decide(
+        problem.draw(_warm_seed(seeds)), policy, Budget(rollouts=2), np.random.default_rng(0), values=values
+    )
+    for seed in seeds:
+        rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
+        yield decide(problem.draw(seed), policy, budget, rng, values=values)
+
+
+def _warm_seed(seeds: range) -> int:
+    return seeds.stop
+
+
+@dataclass(frozen=True)
+class Compared:
+    """One policy against the best of some rivals on the same decisions.
+
+    regret, rival_regret : means over seeds, value units; rival : the one with the smallest mean.
+    ratio : regret / rival_regret, with a 95 % interval `low` to `high`; nan where the rival has none.
+    """
+
+    problem: str
+    budget: Budget
+    policy: str
+    rival: str
+    regret: float
+    rival_regret: float
+    ratio: float
+    low: float
+    high: float
+
+
+def compare(
+    cells: Sequence[Cell], policy: str, rivals: Sequence[str], *, by_mean: bool = False, seed: int = 0
+) -> list[Compared]:
+    """A policy against the better of its rivals, cell by cell, with paired bootstrap intervals.
+
+    Decisions are resampled, each with the regrets of both policies: what a hard decision costs both
+    cancels (percentile bootstrap, Efron and Tibshirani 1993, chapter 13). The rival is the best on all
+    decisions and stays fixed under resampling, which favours the rival.
+    """
+    column = "regret_by_mean" if by_mean else "regret"
+    groups: dict[tuple[str, Budget], dict[str, Cell]] = {}
+    for cell in cells:
+        groups.setdefault((cell.problem, cell.budget), {})[cell.policy] = cell
+    out = []
+    for (problem, budget), group in groups.items():
+        missing = [name for name in (policy, *rivals) if name not in group]
+        if missing:
+            raise InputError("policy", f"must be in every cell; missing in {problem}", missing[0])
+        ours: Floats = getattr(group[policy], column)
+        rival = min(rivals, key=lambda name: float(getattr(group[name], column).mean()))
+        theirs: Floats = getattr(group[rival], column)
+        rng = np.random.default_rng(seed)
+        picked = rng.integers(len(ours), size=(_RESAMPLES, len(ours)))
+        with np.errstate(divide="ignore", invalid="ignore"):
+            ratios = ours[picked].mean(axis=1) / theirs[picked].mean(axis=1)
+            ratio = float(ours.mean() / theirs.mean()) if theirs.mean() > 0 else float("nan")
+        low, high = np.quantile(ratios, [0.025, 0.975]) if np.all(np.isfinite(ratios)) else (np.nan, np.nan)
+        out.append(
+            Compared(
+                problem, budget, policy, rival,
+                float(ours.mean()), float(theirs.mean()), ratio, float(low), float(high),
+            )
+        )  # fmt: skip
+    return out
+
+
+# --- files -----------------------------------------------------------------------------------------
+
+
+def _check_names(what: str, names: Sequence[str]) -> None:
+    for name in names:
+        if names.count(name) > 1:
+            raise InputError(what, "must have a name of its own", name)
+
+
+def _claim(folder: Path, settings: Mapping[str, Any]) -> None:
+    """The folder's settings, written the first time and compared ever after."""
+    path = folder / "rehearsal.json"
+    if not path.exists():
+        write_atomic(path, (json.dumps(settings, indent=1) + "\n").encode())
+        return
+    try:
+        found = json.loads(path.read_text())
+    except ValueError:
+        found = None
+    if found != dict(settings):
+        raise InputError(str(path), f"must hold {json.dumps(settings)} to be continued", found)
+
+
+def _file_name(problem: str, budget: Budget, policy: str) -> str:
+    """Unique for a cell: what is readable of it, and a hash of all of it."""
+    key = json.dumps([problem, asdict(budget), policy])
+    readable = "".join(c if c.isalnum() else "-" for c in f"{problem}--{policy}")
+    return f"{readable[:80]}--{hashlib.sha256(key.encode()).hexdigest()[:12]}.parquet"
+
+
+def _write(path: Path, cell: Cell, first_seed: int) -> None:
+    about = {"problem": cell.problem, "policy": cell.policy, "budget": asdict(cell.budget)}
+    columns = {"seed": np.arange(first_seed, first_seed + len(cell.regret))}
+    columns |= {c: getattr(cell, c) for c in _COLUMNS}
+    table = pa.table(columns).replace_schema_metadata({"rehearsal": json.dumps(about)})
+    buffer = io.BytesIO()
+    pq.write_table(table, buffer)
+    write_atomic(path, buffer.getvalue())
+
+
+def _read(path: Path, problem: str, budget: Budget, policy: str, seeds: int) -> Cell:
+    try:
+        table = pq.read_table(path)
+    except (OSError, pa.ArrowException) as e:
+        raise InputError(str(path), f"must be a readable Parquet file ({e})") from None
+    if table.num_rows != seeds or not set(_COLUMNS) <= set(table.column_names):
+        raise InputError(str(path), f"must hold {seeds} decisions", table.num_rows)
+    return Cell(problem, budget, policy, **{c: table[c].to_numpy() for c in _COLUMNS})

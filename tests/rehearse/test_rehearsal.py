@@ -1,0 +1,129 @@
+"""Comparing policies: paired, resumable, with intervals that cover."""
+
+from __future__ import annotations
+
+import json
+
+import numpy as np
+import pytest
+from ladder import CLOSED_FORM
+
+from distill import voc
+from distill.errors import InputError
+from distill.rehearse.loop import Budget, posterior_means
+from distill.rehearse.policies import ByRule, ByValue
+from distill.rehearse.problems import TreeProblem
+from distill.rehearse.rehearsal import Cell, compare, rehearse
+
+PROBLEMS = [TreeProblem(3), TreeProblem(2, 2, 2, noise_var=None)]
+POLICIES = [ByRule("even"), ByRule("thompson")]
+BUDGETS = [Budget(rollouts=6), Budget(rollouts=24)]
+
+
+def run(folder, policies=POLICIES, **settings):
+    return rehearse(PROBLEMS, policies, BUDGETS, folder, values=posterior_means, **({"seeds": 12} | settings))
+
+
+class Unwilling:
+    """A policy that must not be asked."""
+
+    name = "thompson"
+
+    def begin(self, _tree):
+        raise AssertionError
+
+
+def test_cells_are_paired_and_resumed(tmp_path):
+    seen = []
+    cells = run(tmp_path, progress=lambda done, of: seen.append((done, of)))
+    assert seen == [(i, 8) for i in range(1, 9)]
+    assert [(c.problem, c.budget, c.policy) for c in cells][:2] == [
+        (PROBLEMS[0].name, BUDGETS[0], "even"),
+        (PROBLEMS[0].name, BUDGETS[0], "thompson"),
+    ]
+    again = run(tmp_path, policies=[POLICIES[0], Unwilling()])  # read, not run
+    for a, b in zip(cells, again, strict=True):
+        for column in ("regret", "regret_by_mean", "rollouts", "choosing", "stopped"):
+            assert np.array_equal(getattr(a, column), getattr(b, column))
+
+
+def test_a_killed_rehearsal_resumes_to_the_same_regrets(tmp_path):
+    whole = run(tmp_path / "whole")
+    run(tmp_path / "part")
+    for lost in sorted((tmp_path / "part").glob("*.parquet"))[::2]:
+        lost.unlink()
+    for a, b in zip(whole, run(tmp_path / "part"), strict=True):
+        assert np.array_equal(a.regret, b.regret)
+        assert np.array_equal(a.rollouts, b.rollouts)
+
+
+def test_another_rehearsals_folder_is_refused(tmp_path):
+    run(tmp_path)
+    with pytest.raises(InputError, match=r"rehearsal\.json: must hold .*to be continued"):
+        run(tmp_path, seeds=13)
+    cell = next(tmp_path.glob("*.parquet"))
+    cell.write_bytes(cell.read_bytes()[:100])
+    with pytest.raises(InputError, match="must be a readable Parquet file"):
+        run(tmp_path)
+
+
+def test_repeated_names_and_single_seeds_are_refused(tmp_path):
+    with pytest.raises(InputError, match="policy: must have a name of its own; got 'even'"):
+        run(tmp_path, policies=[ByRule("even"), ByRule("even")])
+    with pytest.raises(InputError, match="seeds: must be at least 2; got 1"):
+        run(tmp_path, seeds=1)
+
+
+def cell(policy, regret, budget=BUDGETS[0], **columns):
+    regret = np.asarray(regret, dtype=float)
+    zeros = np.zeros(len(regret))
+    given = {"regret_by_mean": regret, "rollouts": zeros, "choosing": zeros, "stopped": zeros} | columns
+    return Cell("p", budget, policy, regret, **given)
+
+
+def test_pairing_cancels_what_is_common():
+    """Half the rival's regret on every decision: the ratio is 0.5 with no width, however regrets vary."""
+    hard = np.random.default_rng(0).exponential(size=200)
+    cells = [cell("ours", hard / 2), cell("good", hard), cell("bad", 2 * hard)]
+    (found,) = compare(cells, "ours", ["bad", "good"])
+    assert found.rival == "good"
+    assert (found.ratio, found.low, found.high) == pytest.approx((0.5, 0.5, 0.5), rel=CLOSED_FORM)
+
+
+def test_intervals_cover_the_true_ratio():
+    """95 % intervals for a true ratio of 0.8, 200 times: binomial(200, 0.95) stays within 4 sd, +- 12."""
+    rng, covered = np.random.default_rng(1), 0
+    for _ in range(200):
+        cells = [cell("ours", 0.8 * rng.exponential(size=100)), cell("rival", rng.exponential(size=100))]
+        (found,) = compare(cells, "ours", ["rival"])
+        covered += found.low <= 0.8 <= found.high
+    assert 178 <= covered <= 200
+
+
+def test_no_regret_gives_no_ratio():
+    (found,) = compare([cell("ours", [0, 0]), cell("rival", [0, 0])], "ours", ["rival"])
+    assert np.isnan([found.ratio, found.low, found.high]).all()
+    with pytest.raises(InputError, match="missing in p; got 'other'"):
+        compare([cell("ours", [0, 0])], "ours", ["other"])
+
+
+def test_choosing_share():
+    timed = Budget(seconds=1.0, rollout_seconds=0.01)
+    busy = cell("a", [0, 0], timed, rollouts=np.array([10.0, 20.0]), choosing=np.array([0.05, 0.05]))
+    assert busy.choosing_share == pytest.approx(0.1 / 0.4, rel=CLOSED_FORM)
+    assert np.isnan(cell("a", [0, 0]).choosing_share)
+
+
+@pytest.mark.slow
+def test_static_rate_beats_even_on_gaussian_trees(tmp_path):
+    """Knowledge gradients were made for this: 4 actions, 128 rollouts; a wide, sure gap."""
+    problem = TreeProblem(4, 4, 2, noise_var=4.0)
+    policies = [ByRule("even"), ByValue(voc.price, horizon=0.0)]
+    cells = rehearse([problem], policies, [Budget(rollouts=128)], tmp_path, seeds=400, values=posterior_means)
+    (found,) = compare(cells, "exact_static_rate", ["even"])
+    assert found.high < 1
+
+
+def test_the_folder_says_what_it_holds(tmp_path):
+    run(tmp_path)
+    assert json.loads((tmp_path / "rehearsal.json").read_text())["seeds"] == 12

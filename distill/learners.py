@@ -25,7 +25,7 @@ from sklearn.neural_network import MLPRegressor
 from sklearn.pipeline import make_pipeline
 from sklearn.preprocessing import StandardScaler
 from sklearn.utils.validation import _check_sample_weight, check_is_fitted, validate_data
-from threadpoolctl import threadpool_limits
+from threadpoolctl import threadpool_limits  # comes with scikit-learn
 
 from distill.errors import InputError
 from distill.tree import Floats

@@ -1,0 +1,156 @@
+"""Labelled candidate rows: read from a dataset, split by tree; floor 5."""
+
+from __future__ import annotations
+
+import hashlib
+import math
+import os
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from distill.errors import InputError, RefusedError
+from distill.files import sha256_of
+from distill.metrics import Groups
+from distill.shards import MANIFEST, read_candidates, read_manifest
+from distill.tree import Floats
+
+__all__ = ["LEAF_COLUMNS", "PARTS", "Candidates", "Split", "split_by_tree"]
+
+PARTS: Final = {"fit": 0.75, "choose": 0.10, "held_out": 0.15}
+LEAF_COLUMNS: Final = ("mean", "var", "noise_var", "gain", "offset", "action", "cost", "remaining")
+_BELIEF_COLUMNS: Final = ("mean", "var", "noise_var", "gain", "offset", "action")
+
+
+@dataclass(frozen=True, eq=False)
+class Candidates:
+    """Labelled candidate rows, the rows of a tree together, leaves in node order.
+
+    columns : LEAF_COLUMNS, each of shape (n,). tree : the tree of each row. label : exact value, u a
+    rollout for a rate. batch : rollouts of the label. error : bound on the label's error, same unit.
+    """
+
+    columns: Mapping[str, NDArray[Any]]
+    tree: NDArray[np.int64]
+    label: Floats
+    batch: Floats
+    error: Floats
+    is_rate: bool = True
+
+    @classmethod
+    def read(cls, dataset: str | os.PathLike[str]) -> tuple[Candidates, dict[str, Any]]:
+        """The candidates of a dataset folder, and what they are: `value` asked for, and `data` source.
+
+        Raises InputError where values of more than one kind are mixed or no `remaining` is given, and
+        RefusedError for trees that a Gaussian leaf table cannot hold.
+        """
+        folder = Path(dataset)
+        manifest = read_manifest(folder)
+        rows = read_candidates(folder)
+        if len(rows["tree"]) == 0:
+            raise InputError(str(folder), "must hold at least one labelled tree")
+        if not set(_BELIEF_COLUMNS) <= rows.keys() or any(np.isnan(rows[n]).any() for n in _BELIEF_COLUMNS):
+            raise RefusedError(
+                f"{folder}: holds trees with chance nodes, covariance or win/loss leaves; "
+                "this scorer reads independent Gaussian leaves under decision nodes"
+            )
+        if "remaining" not in rows or np.isnan(rows["remaining"]).any():
+            raise InputError(f"{folder}: remaining", "must be given for every tree")
+        batch = rows.get("batch", np.array([np.nan]))
+        for name, column in (("horizon", rows["horizon"]), ("batch", batch)):
+            kinds = np.unique(column)
+            if len(kinds) > 1:
+                raise InputError(f"{folder}: {name}", "must be one for the whole dataset", kinds[:3].tolist())
+        h, is_rate = float(rows["horizon"][0]), bool(np.isnan(batch[0]))
+        about = {
+            "value": {
+                "horizon": "inf" if math.isinf(h) else h,
+                "batch": None if is_rate else int(batch[0]),
+            },
+            "data": {
+                "source": manifest["source"]["name"],
+                "source_sha256": manifest["source"]["sha256"],
+                "seed": manifest["seed"],
+                "dataset_sha256": sha256_of(folder / MANIFEST),
+                "trees": manifest["totals"]["trees"],
+                "aside": manifest["totals"]["aside"],
+            },
+        }
+        columns = {name: rows[name] for name in LEAF_COLUMNS}
+        columns["action"] = columns["action"].astype(np.int64)
+        columns["remaining"] = columns["remaining"].astype(float)
+        return cls(
+            columns, rows["tree"], rows["label"], rows["label_batch"].astype(float), rows["error"], is_rate
+        ), about
+
+    @property
+    def groups(self) -> Groups:
+        """The rows grouped by tree."""
+        return Groups.of(self.tree)
+
+    def of_trees(self, keep: NDArray[np.bool_]) -> Candidates:
+        """The rows of the trees marked in `keep`, one mark a tree in order of appearance."""
+        rows = self.groups.spread(keep)
+        return Candidates(
+            {name: x[rows] for name, x in self.columns.items()},
+            self.tree[rows],
+            self.label[rows],
+            self.batch[rows],
+            self.error[rows],
+            self.is_rate,
+        )
+
+    def fingerprints(self) -> NDArray[np.uint64]:
+        """A number a tree from its beliefs alone; the same for trees that differ in name or budget only."""
+        table = np.stack([np.asarray(self.columns[name], dtype="<f8") for name in _BELIEF_COLUMNS], axis=1)
+        table += 0.0  # -0.0 and 0.0 are one value
+        return np.array(
+            [
+                int.from_bytes(hashlib.blake2b(table[a : a + n].tobytes(), digest_size=8).digest(), "little")
+                for a, n in zip(self.groups.starts, self.groups.sizes, strict=True)
+            ],
+            dtype=np.uint64,
+        )
+
+
+@dataclass(frozen=True, eq=False)
+class Split:
+    """The parts of a dataset; no tree, and no two trees of equal beliefs, stand in two parts."""
+
+    fit: Candidates
+    choose: Candidates
+    held_out: Candidates
+
+
+def split_by_tree(candidates: Candidates, seed: int) -> Split:
+    """Split by a hash of each tree's beliefs and the seed, in the shares of PARTS.
+
+    A tree keeps its part when others are added to the dataset. Raises InputError where a part stays
+    empty or holds no value above 0.
+    """
+    u = _uniform(candidates.fingerprints(), seed)
+    edges = np.cumsum(list(PARTS.values()))[:-1]
+    part = np.searchsorted(edges, u, side="right")
+    out = []
+    for i, name in enumerate(PARTS):
+        if not np.any(part == i):
+            raise InputError("dataset", f"must hold trees enough for the part {name!r}", len(u))
+        chosen = candidates.of_trees(part == i)
+        if not np.any(chosen.label > 0):
+            raise InputError("dataset", f"must hold a value above 0 in the part {name!r}")
+        out.append(chosen)
+    return Split(*out)
+
+
+def _uniform(keys: NDArray[np.uint64], seed: int) -> Floats:
+    """A number in [0, 1) from each key and the seed: the finaliser of SplitMix64 (Steele et al. 2014)."""
+    with np.errstate(over="ignore"):
+        z = keys + np.uint64(seed) * np.uint64(0x9E3779B97F4A7C15)
+        z = (z ^ (z >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
+        z = (z ^ (z >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
+        z = z ^ (z >> np.uint64(31))
+    return np.asarray((z >> np.uint64(11)).astype(float) / 2.0**53)

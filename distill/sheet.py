@@ -1,0 +1,109 @@
+"""The sheet: measured facts that travel with a scorer file, as JSON and as a readable page; floor 4."""
+
+from __future__ import annotations
+
+import json
+import os
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any, Final
+
+from distill.files import write_atomic
+
+__all__ = ["SHEET_FORMAT", "sheet_page", "write_sheet"]
+
+SHEET_FORMAT: Final = "voc-sheet/1"
+
+
+def write_sheet(sheet: Mapping[str, Any], scorer_file: str | os.PathLike[str]) -> tuple[Path, Path]:
+    """Write the sheet beside the scorer file, as `<name>.json` and `<name>.md`; returns the two paths."""
+    page, data = Path(scorer_file).with_suffix(".md"), Path(scorer_file).with_suffix(".json")
+    write_atomic(data, (json.dumps(sheet, indent=1, allow_nan=True) + "\n").encode())
+    write_atomic(page, sheet_page(sheet).encode())
+    return data, page
+
+
+def sheet_page(sheet: Mapping[str, Any]) -> str:
+    """The sheet as a Markdown page, most important figures first."""
+    accuracy, decision, data = sheet["accuracy"], sheet["decision"], sheet["data"]
+    parts = data["parts"]
+    held_out = (
+        f"{parts['held_out']['trees']:,} held-out trees ({parts['held_out']['candidates']:,} candidates)"
+    )
+    lines = [
+        f"# {sheet['file']['name']}",
+        "",
+        f"{_value_text(sheet['value'])}. Learner: {sheet['recipe']} ({sheet['chosen']}).",
+        "The scorer only spends search effort; it is no safety function.",
+        "",
+        f"## On {held_out}",
+        "",
+        "| | forgone share, % | relative forgone, % | picks that are best, % | rank correlation |",
+        "| --- | --- | --- | --- | --- |",
+        _accuracy_row("**this scorer**", accuracy),
+        *(_accuracy_row(name, m) for name, m in sheet["beside"].items()),
+        "",
+        f"Square brackets: {100 * accuracy['interval_level']:g} % bootstrap intervals over trees.",
+        f"Trees whose best value is 0, left out of both shares: {accuracy['trees_with_best_zero']}.",
+        "",
+        f"## One decision over {decision['leaves']} leaves, one thread",
+        "",
+        "| | p50, us | p99, us | times this scorer's p50 |",
+        "| --- | --- | --- | --- |",
+        f"| this scorer | {_us(decision['scorer'])} | 1 |",
+        *(
+            f"| exact {name} | {_us(t)} | {decision['times_faster'][name]:,.0f} |"
+            for name, t in decision["exact"].items()
+        ),
+        "",
+        "## The scorers that were trained",
+        "",
+        "| | on the front | forgone share, % | relative forgone, % | p50, us | p99, us | KB | fit, s |",
+        "| --- | --- | --- | --- | --- | --- | --- | --- |",
+        *(_front_row(e) for e in sheet["front"]),
+        "",
+        "## Where it comes from",
+        "",
+        *(f"- {name}: {value}" for name, value in data.items() if name != "parts"),
+        *(f"- {name}: {p['trees']:,} trees, {p['candidates']:,} candidates" for name, p in parts.items()),
+        f"- seed {sheet['seed']}; {', '.join(f'{k} {v}' for k, v in sheet['made_with'].items())}",
+        f"- SHA-256 of the file: `{sheet['file']['sha256']}`",
+        f"- features: {', '.join(sheet['features'])}",
+    ]
+    return "\n".join(lines) + "\n"
+
+
+def _value_text(value: Mapping[str, Any]) -> str:
+    h = value["horizon"]
+    which = {"inf": "dynamic", 0: "static"}.get(h, f"horizon {h}")
+    if value["batch"] is None:
+        return f"Scores the {which} rate: the best VOC a rollout over batches within the rollouts left"
+    return f"Scores the {which} VOC of {value['batch']} rollout(s)"
+
+
+def _accuracy_row(name: str, m: Mapping[str, Any]) -> str:
+    cells = (_estimate(m.get(k)) for k in _FIGURES)
+    return f"| {name} | {' | '.join(cells)} |"
+
+
+_FIGURES = ("forgone_percent", "relative_forgone_percent", "top1_percent", "rank_correlation")
+
+
+def _estimate(e: Mapping[str, float] | None) -> str:
+    if e is None:
+        return ""
+    text = f"{e['value']:.3g}"
+    return f"{text} [{e['low']:.3g}, {e['high']:.3g}]" if "low" in e else text
+
+
+def _us(t: Mapping[str, float]) -> str:
+    return f"{t['p50_us']:,.1f} | {t['p99_us']:,.1f}"
+
+
+def _front_row(e: Mapping[str, Any]) -> str:
+    held = e["held_out"]
+    return (
+        f"| {e['recipe']} | {'yes' if e['on_front'] else 'no'} | {_estimate(held['forgone_percent'])} "
+        f"| {_estimate(held['relative_forgone_percent'])} | {_us(e['latency'])} "
+        f"| {e['bytes'] / 1024:.0f} | {e['fit_seconds']:.1f} |"
+    )

@@ -1,0 +1,122 @@
+"""What one decision costs: a scorer's call, and the exact methods on the same trees; floor 5.
+
+A decision is what an agent does: raw arrays of the leaves in, the pick out, on one thread.
+"""
+
+from __future__ import annotations
+
+import math
+import time
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from distill import schema
+from distill.query import Query
+from distill.runtime import Scorer
+from distill.tree import BeliefTree
+from distill.voc import price
+
+__all__ = ["Decision", "Timing", "decisions", "time_exact", "time_scorer", "tree_of"]
+
+_COLUMNS = ("mean", "var", "noise_var", "gain", "offset", "action", "cost")
+
+
+@dataclass(frozen=True)
+class Timing:
+    """Microseconds a decision over repeated calls, and how many there were."""
+
+    p50: float
+    p99: float
+    calls: int
+
+    def to_json(self) -> dict[str, float]:
+        """Plain numbers for a sheet."""
+        return {"p50_us": self.p50, "p99_us": self.p99, "calls": self.calls}
+
+
+@dataclass(frozen=True, eq=False)
+class Decision:
+    """One decision to time: the leaf table's arrays and the rollouts left, and the same as a tree."""
+
+    columns: Mapping[str, NDArray[Any]]
+    remaining: int
+    tree: BeliefTree
+
+
+def decisions(columns: Mapping[str, NDArray[Any]], n_leaves: int, count: int, seed: int) -> list[Decision]:
+    """Decisions of exactly `n_leaves` leaves, pooled from candidate rows.
+
+    columns : candidate rows of many trees, with `tree` and `remaining`. Each decision pools whole trees
+    drawn at random, joined action by action, until it has enough leaves, so its leaves are such as the
+    scorer meets; `remaining` comes from the first.
+    """
+    rng = np.random.default_rng(seed)
+    tree = columns["tree"]
+    starts = np.flatnonzero(np.r_[True, tree[1:] != tree[:-1]])
+    ends = np.r_[starts[1:], len(tree)]
+    out = []
+    for _ in range(count):
+        rows: list[int] = []
+        while len(rows) < n_leaves:
+            t = int(rng.integers(len(starts)))
+            rows.extend(range(starts[t], ends[t]))
+        at = np.array(rows[:n_leaves])
+        at = at[np.argsort(columns["action"][at], kind="stable")]
+        arrays = {name: np.ascontiguousarray(columns[name][at]) for name in _COLUMNS}
+        arrays["action"] = np.unique(arrays["action"], return_inverse=True)[1].astype(np.int64)
+        remaining = max(1, int(columns["remaining"][rows[0]]))
+        out.append(Decision(arrays, remaining, tree_of(arrays)))
+    return out
+
+
+def tree_of(arrays: Mapping[str, NDArray[Any]]) -> BeliefTree:
+    """Root, one decision node an action, and the leaves with gain and offset on their edges."""
+    n, n_actions = len(arrays["mean"]), int(arrays["action"].max()) + 1
+    inner = 1 + n_actions
+    return BeliefTree(
+        parent=np.r_[-1, np.zeros(n_actions), arrays["action"] + 1].astype(np.int64),
+        kind=np.r_[np.full(inner, schema.DECISION), np.full(n, schema.LEAF)].astype(np.int8),
+        reward=np.r_[np.zeros(inner), arrays["offset"]],
+        discount=np.r_[np.ones(inner), arrays["gain"]],
+        prob=np.ones(inner + n),
+        mean=np.array(arrays["mean"]),
+        var=np.array(arrays["var"]),
+        noise_var=np.array(arrays["noise_var"]),
+        cost=np.array(arrays["cost"]),
+    )
+
+
+def time_scorer(scorer: Scorer, cases: Sequence[Decision], *, calls: int = 2000) -> Timing:
+    """Time of `scorer.pick` on the cases in turn, after a warm-up."""
+
+    def pick(case: Decision) -> None:
+        scorer.pick(**case.columns, remaining=case.remaining)
+
+    return _timed(pick, cases, calls, warm_up=200)
+
+
+def time_exact(cases: Sequence[Decision], *, rate: bool, calls: int = 20) -> Timing:
+    """Time of the exact dynamic VOC of every candidate, one rollout or the rate, on the same cases."""
+
+    def act(case: Decision) -> None:
+        query = Query(horizon=math.inf, batch=None if rate else 1, remaining=case.remaining)
+        price(case.tree, query)
+
+    return _timed(act, cases, calls, warm_up=1)
+
+
+def _timed(act: Callable[[Decision], None], cases: Sequence[Decision], calls: int, warm_up: int) -> Timing:
+    for i in range(warm_up):
+        act(cases[i % len(cases)])
+    spent = np.empty(calls)
+    for i in range(calls):
+        case = cases[i % len(cases)]
+        start = time.perf_counter_ns()
+        act(case)
+        spent[i] = time.perf_counter_ns() - start
+    p50, p99 = np.percentile(spent, [50, 99]) / 1e3
+    return Timing(float(p50), float(p99), calls)

@@ -8,26 +8,18 @@ and any number of batches is then cheap. O(n log n) a candidate on a tree of n l
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 
-from distill import schema
 from distill.errors import RefusedError
-from distill.exact import double_double as dd
 from distill.exact.best_batch import best_batch
+from distill.exact.gaps import post_order
 from distill.exact.piecewise import expected_rise, root_breakpoints
-from distill.numerics import compiled
 from distill.query import Priced, Query
 from distill.tree import BeliefTree, Floats, Ints
 
 __all__ = ["METHOD", "price"]
 
 METHOD = "static dense, closed form"
-
-_EPS = 2.0**-52
-_DD_EPS = 2.0**-100  # relative rounding of a few double-double operations
-_DECISION, _CHANCE, _LEAF = schema.DECISION, schema.CHANCE, schema.LEAF
 
 
 def price(tree: BeliefTree, query: Query) -> Priced:
@@ -52,7 +44,7 @@ def price(tree: BeliefTree, query: Query) -> Priced:
     if cov is None:
         assert tree.var is not None
         cov = np.diag(tree.var)
-    program = _compile(tree)
+    program = post_order(tree)
     var, noise, n = np.diag(cov), tree.noise_var, tree.n_leaves
     most = query.remaining if query.rate else query.batch
     assert most is not None
@@ -91,111 +83,3 @@ def _directions(cov: Floats) -> Floats:
     sd = np.sqrt(np.maximum(np.diag(cov), 0))
     most = sd[:, None] * sd
     return np.where(np.abs(cov) > most * (1 + 1e-12), np.sign(cov) * most, cov)
-
-
-@dataclass(frozen=True)
-class _Program:
-    """The tree in post-order, with the gap of every child at the current means.
-
-    A decision node under a decision node is merged into it, a chance node under a chance node too.
-    """
-
-    kind: Ints
-    n_children: Ints
-    leaf: Ints
-    gap: Floats
-    gap_err: Floats
-    gain: Floats  # (n_leaves,), product of discounts and probabilities from the root
-    value: Floats  # (n_actions,), the static values
-
-
-def _compile(tree: BeliefTree) -> _Program:
-    assert tree.mean is not None
-    order, n_children, leaf, gap, gap_err, gain, value = _post_order(
-        tree.parent, tree.kind.astype(np.int64), tree.reward, tree.discount, tree.prob, tree.mean
-    )
-    return _Program(
-        kind=tree.kind[order].astype(np.int64),
-        n_children=n_children[order],
-        leaf=leaf[order],
-        gap=gap[order],
-        gap_err=gap_err[order],
-        gain=gain[tree.leaf_nodes],
-        value=value[tree.action_nodes],
-    )
-
-
-@compiled
-def _post_order(
-    parent: Ints, kind: Ints, reward: Floats, discount: Floats, prob: Floats, mean: Floats
-) -> tuple[Ints, Ints, Ints, Floats, Floats, Floats, Floats]:
-    """Node order with children first, each subtree in one piece, merged nodes left out; and node columns.
-
-    Returns order, then over all nodes: number of children after merging, leaf position, gap and its
-    error, gain, and r + g V of the edge.
-    """
-    n = len(parent)
-    leaf = np.full(n, -1)
-    at = len(mean)
-    best = np.zeros((n, 2))  # V in double-double arithmetic: gaps stay exact to double precision
-    total = np.zeros((n, 2))  # r + g V
-    slip = np.zeros(n)  # bound on the rounding of V, then of r + g V
-    seen = np.zeros(n, dtype=np.bool_)
-    for c in range(n - 1, 0, -1):
-        if kind[c] == _LEAF:
-            at -= 1
-            leaf[c] = at
-            best[c, 0] = mean[at]
-        hi, lo = dd.scale(best[c, 0], best[c, 1], discount[c])
-        hi, lo = dd.add(hi, lo, reward[c], 0.0)
-        total[c, 0], total[c, 1] = hi, lo
-        slip[c] += _DD_EPS * (abs(best[c, 0]) + abs(reward[c]))
-        p = parent[c]
-        if kind[p] == _CHANCE:
-            hi, lo = dd.scale(hi, lo, prob[c])
-            hi, lo = dd.add(best[p, 0], best[p, 1], hi, lo)
-            slip[p] += prob[c] * slip[c] + _DD_EPS * (abs(total[c, 0]) + abs(hi))
-            best[p, 0], best[p, 1] = hi, lo
-        else:
-            if not seen[p] or hi > best[p, 0] or (hi == best[p, 0] and lo > best[p, 1]):
-                best[p, 0], best[p, 1] = hi, lo
-            slip[p] = max(slip[p], slip[c])
-        seen[p] = True
-    gain = np.ones(n)
-    depth = np.zeros(n, dtype=np.int64)
-    group = np.arange(n)
-    gap, gap_err = np.zeros(n), np.zeros(n)
-    n_children = np.zeros(n, dtype=np.int64)
-    next_sibling, first_child = np.full(n, -1), np.full(n, -1)
-    for c in range(1, n):
-        p = parent[c]
-        top = group[p]
-        gain[c] = gain[p] * discount[c] * prob[c]
-        depth[c] = depth[p] + 1
-        if kind[p] == _DECISION:
-            behind = dd.subtract(best[p, 0], best[p, 1], total[c, 0], total[c, 1])
-            gap[c] = gain[p] * behind + (gap[p] if top != p else 0.0)
-            gap_err[c] = gain[p] * (slip[c] + slip[p]) + (gap_err[p] if top != p else 0.0)
-        if kind[c] == kind[p]:
-            group[c] = top
-        else:
-            n_children[top] += 1
-            next_sibling[c] = first_child[top]
-            first_child[top] = c
-    for c in range(1, n):
-        gap_err[c] += (4 * depth[c] + 2) * _EPS * gap[c]
-    order = np.empty(n, dtype=np.int64)
-    stack = np.empty(n, dtype=np.int64)
-    stack[0] = 0
-    waiting, done = 1, n
-    while waiting > 0:  # parents before children, written from the back
-        waiting -= 1
-        v = stack[waiting]
-        done -= 1
-        order[done] = v
-        c = first_child[v]
-        while c >= 0:
-            stack[waiting] = c
-            waiting += 1
-            c = next_sibling[c]
-    return order[done:], n_children, leaf, gap, gap_err, gain, total[:, 0].copy()

@@ -33,6 +33,7 @@ class Settings:
 
     depth : steps of look-ahead. length : most steps of a rollout beyond its leaf.
     plans : leaves are plans of actions (`plan_ahead`) instead of states (`look_ahead`).
+    samples : outcomes drawn per action where the simulator has no model and steps are random.
     opening : (leaves, rollouts each) spent before the search to set this tree's prior mean and noise.
         They are the prior's alone: the search's budget and its beliefs at leaves do not count them.
     """
@@ -40,12 +41,14 @@ class Settings:
     depth: int = 2
     length: int = 30
     plans: bool = False
+    samples: int = 1
     opening: tuple[int, int] = (4, 4)
 
     def tree(self, simulator: Simulator, state: State, rng: np.random.Generator) -> Lookahead:
         """The look-ahead tree from a state."""
-        grow = plan_ahead if self.plans else look_ahead
-        return grow(simulator, state, self.depth, rng)
+        if self.plans:
+            return plan_ahead(simulator, state, self.depth, rng)
+        return look_ahead(simulator, state, self.depth, rng, samples=self.samples)
 
 
 @dataclass(frozen=True)

@@ -164,7 +164,7 @@ _OPTIONAL_FIELDS: Final = ("budget.horizon",)
 class Family:
     """A validated family: draw from it with `distill.family.draw`.
 
-    name, description, belief : from the file. sha256 : of its bytes, for manifests.
+    name, description, belief : from the file. text, sha256 : the file and its hash, for datasets.
     fields : "section.field" -> Distribution; sections that the file leaves out and that have no
         meaning then (chance, correlation) are absent.
     """
@@ -172,6 +172,7 @@ class Family:
     name: str
     belief: str
     description: str
+    text: str = field(repr=False)
     sha256: str
     fields: Mapping[str, Distribution] = field(repr=False)
 
@@ -210,12 +211,12 @@ def parse_family(data: bytes, place: str = "family") -> Family:
     except (tomllib.TOMLDecodeError, RecursionError, ValueError) as e:
         raise InputError(place, f"must be valid TOML ({e})") from None
     try:
-        return _family(obj, hashlib.sha256(data).hexdigest())
+        return _family(obj, data)
     except InputError as e:
         raise e.at(place) from None
 
 
-def _family(obj: dict[str, Any], digest: str) -> Family:
+def _family(obj: dict[str, Any], data: bytes) -> Family:
     text = {}
     for key, required in (("format", True), ("name", True), ("belief", True), ("description", False)):
         if key not in obj and required:
@@ -254,7 +255,8 @@ def _family(obj: dict[str, Any], digest: str) -> Family:
             elif place not in _OPTIONAL_FIELDS:
                 raise InputError(place, "is missing")
     _across(fields)
-    return Family(text["name"], text["belief"], text["description"], digest, fields)
+    digest = hashlib.sha256(data).hexdigest()
+    return Family(text["name"], text["belief"], text["description"], data.decode(), digest, fields)
 
 
 def _across(fields: dict[str, Distribution]) -> None:

@@ -25,8 +25,10 @@ import numpy as np
 from joblib import Parallel, delayed
 
 from distill import schema, shards, traces, voc
+from distill.datasheet import datasheet
 from distill.errors import InputError, RefusedError, ToleranceError
 from distill.family import Family, draw
+from distill.files import write_atomic
 from distill.query import Priced, Query, resolve
 from distill.record import to_record
 from distill.shards import Labelled
@@ -137,6 +139,8 @@ def generate(
         job = _TraceJob(source, seed, trees)
     folder = Path(out)
     manifest = _open(folder, _plan(source, job.total, seed, asked, shard_trees))
+    if isinstance(source, Family):
+        write_atomic(folder / "family.toml", source.text.encode())
     done = {entry["part"]: entry for entry in manifest["shards"]}
     todo = [p for p in range(math.ceil(job.total / shard_trees)) if p not in done]
     calls = (
@@ -158,6 +162,8 @@ def generate(
             key: sum(e[key] for e in manifest["shards"]) for key in ("trees", "candidates", "aside")
         }
         manifest["complete"] = True
+        page = datasheet(manifest, shards.described_columns())
+        write_atomic(folder / "README.md", page.encode())
         shards.write_manifest(folder, manifest)
     return manifest
 

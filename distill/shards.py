@@ -32,6 +32,7 @@ from distill.tree import BeliefTree, LeafTable, leaf_table
 
 __all__ = [
     "Labelled",
+    "described_columns",
     "read_candidates",
     "read_manifest",
     "read_trees",
@@ -41,7 +42,6 @@ __all__ = [
 ]
 
 MANIFEST: Final = "manifest.json"
-_KINDS: Final = ("trees", "candidates", "aside")
 
 _I32, _I64, _F64, _TEXT = pa.int32(), pa.int64(), pa.float64(), pa.string()
 _FLOATS = pa.list_(_F64)
@@ -240,6 +240,16 @@ def _table(columns: dict[str, Any], described: dict[str, tuple[pa.DataType, str]
         "columns": json.dumps({n: w for n, (_, w) in described.items()}),
     }
     return pa.table({f.name: columns[f.name] for f in fields}, pa.schema(fields, metadata=about))
+
+
+def described_columns() -> dict[str, dict[str, str]]:
+    """File kind -> column -> meaning and unit, as the Parquet metadata has them."""
+    kinds = {
+        "trees": _TREE_COLUMNS | _TREE_LABELS,
+        "candidates": _CANDIDATE_COLUMNS,
+        "aside": _TREE_COLUMNS | _ASIDE_LABELS,
+    }
+    return {kind: {name: what for name, (_, what) in columns.items()} for kind, columns in kinds.items()}
 
 
 # --- the manifest ----------------------------------------------------------------------------------

@@ -1,0 +1,356 @@
+"""When does a leaf matter? The distribution of its threshold, for every leaf of a tree at once; floor 2.
+
+Fix everything but leaf i. Its root action is worth  const + max(x_i, T_i)  for a random threshold T_i
+that depends on the other leaves alone: below it some rival is taken, above it the action rises with x_i.
+So the influence of the leaf is the distribution function of T_i, and one pass up and one pass down give
+every threshold:
+
+    up       value of a maximum: product of distribution functions; of a sum: convolution
+    down     top of an action: T = -inf
+             child c of a maximum: T_c = max(T, siblings)
+             part c of a sum:      T_c = T - the other parts
+
+Every T is independent of its node's own leaves, which makes these plain products and convolutions again.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, field
+
+import numpy as np
+from numba import njit
+
+from distill.exact.distributions import (
+    REACH,
+    WIDTH,
+    Distribution,
+    N,
+    add,
+    add_normal,
+    evaluate,
+    fit,
+    lay_out,
+    reflected,
+    resolved,
+    shifted,
+)
+from distill.exact.max_sum import Max, Normal, Sum
+from distill.numerics import norm_cdf
+from distill.tree import Floats
+
+__all__ = ["Threshold", "thresholds"]
+
+_SURE = 4e-15  # of the span: a standard deviation that doubles cannot resolve counts as 0
+_SD_TO_W1 = 0.7978845608028654  # sqrt(2 / pi): Wasserstein-1 distance of N(m, s^2) from m, over s
+
+
+@dataclass(frozen=True)
+class Threshold:
+    """Leaf i is worth max(x_i + rest, T), rest the other leaves added to it: variance `rest_var`.
+
+    `mean` is the mean of x_i + rest, on the axis of `T`.
+    """
+
+    T: Distribution
+    mean: float
+    rest_var: float
+
+
+def thresholds(top: Max, var: Floats) -> tuple[float, float, dict[int, Threshold]]:
+    """E of a maximum at the top of an action, its error bound, and the threshold of every leaf below it.
+
+    var : variance that each leaf contributes to the root (W^2 times its variance), u^2.
+    """
+    passes = _Passes(var)
+    order: list[Max | Sum] = []
+    stack: list[Max | Sum] = [top]
+    while stack:
+        node = stack.pop()
+        order.append(node)
+        stack.extend(
+            node.maxima if isinstance(node, Sum) else (m for m in node.members if isinstance(m, Sum))
+        )
+    for node in reversed(order):
+        passes.up(node)
+    whole = passes.value[id(top)]
+    passes.down_from(top)
+    return top.shift + whole.mean, whole.error, passes.found
+
+
+@dataclass
+class _Parts:
+    """A sum of maxima as a binary tree of partial sums."""
+
+    value: Distribution
+    of: Max | None = None
+    left: _Parts | None = None
+    right: _Parts | None = None
+
+
+@dataclass
+class _Passes:
+    var: Floats
+    value: dict[int, Distribution] = field(default_factory=dict)
+    parts: dict[int, _Parts] = field(default_factory=dict)
+    found: dict[int, Threshold] = field(default_factory=dict)
+
+    def up(self, node: Max | Sum) -> None:
+        if isinstance(node, Max):
+            self.value[id(node)] = _Rivals(node, self, None).maximum()
+            return
+        row = [_Parts(self.value[id(m)], of=m) for m in node.maxima]
+        while len(row) > 1:
+            pairs = zip(row[::2], row[1::2], strict=False)
+            row = [_Parts(add(a.value, b.value), None, a, b) for a, b in pairs] + row[len(row) & ~1 :]
+        self.parts[id(node)] = row[0]
+        sd = self.sd(node.leaves)
+        self.value[id(node)] = add_normal(row[0].value, sd) if sd > 0 else row[0].value
+
+    def down_from(self, top: Max) -> None:
+        stack: list[tuple[Max | Sum, Distribution | None]] = [(top, None)]
+        while stack:
+            node, T = stack.pop()
+            if isinstance(node, Max):
+                for member, T_member in zip(node.members, _Rivals(node, self, T).others(), strict=True):
+                    if isinstance(member, Normal):
+                        self.record(member.leaves, T_member, member.shift)
+                    else:
+                        stack.append((member, shifted(T_member, -member.shift)))
+                continue
+            assert T is not None
+            parts = self.parts[id(node)]
+            if node.leaves:
+                self.record(node.leaves, add(T, reflected(parts.value)), 0.0)
+                sd = self.sd(node.leaves)
+                T = add_normal(T, sd) if sd > 0 else T
+            stack.extend(_split(parts, T))
+
+    def record(self, leaves: list[int], T: Distribution, mean: float) -> None:
+        own = self.var[leaves]
+        before = np.concatenate(([0.0], np.cumsum(own)[:-1]))
+        after = np.concatenate((np.cumsum(own[::-1])[::-1][1:], [0.0]))
+        for leaf, rest in zip(leaves, (before + after).tolist(), strict=True):
+            self.found[leaf] = Threshold(T, mean, rest)
+
+    def sd(self, leaves: list[int]) -> float:
+        return math.sqrt(float(self.var[leaves].sum()))
+
+
+def _split(parts: _Parts, T: Distribution) -> list[tuple[Max, Distribution]]:
+    """Thresholds of the maxima of a sum, from the threshold of the sum."""
+    out: list[tuple[Max, Distribution]] = []
+    stack = [(parts, T)]
+    while stack:
+        part, T = stack.pop()
+        if part.of is not None:
+            out.append((part.of, T))
+            continue
+        assert part.left is not None
+        assert part.right is not None
+        stack.append((part.left, add(T, reflected(part.right.value))))
+        stack.append((part.right, add(T, reflected(part.left.value))))
+    return out
+
+
+class _Rivals:
+    """What competes in a maximum: its floor, normals, sums, and the threshold from above if there is one."""
+
+    def __init__(self, node: Max, passes: _Passes, T: Distribution | None) -> None:
+        self.floor = node.floor
+        members = node.members
+        self.normal = [c for c, m in enumerate(members) if isinstance(m, Normal)]
+        self.n_members = len(members)
+        self.mu = np.array([members[c].shift for c in self.normal])
+        self.sd = np.array([passes.sd(members[c].leaves) for c in self.normal])
+        self.sums: list[tuple[int, Distribution]] = [
+            (c, shifted(passes.value[id(m)], m.shift)) for c, m in enumerate(members) if isinstance(m, Sum)
+        ]
+        if T is not None:
+            self.sums.append((len(members), T))
+        self.n = len(members) + (T is not None)
+        self.low, self.high = np.full(self.n, -math.inf), np.full(self.n, -math.inf)
+        self.low[self.normal] = self.mu - REACH * self.sd
+        self.high[self.normal] = self.mu + REACH * self.sd
+        for c, d in self.sums:
+            self.low[c], self.high[c] = d.edges[0], d.edges[-1]
+        top = max(float(self.high.max()), self.floor)
+        span = top - float(self.low.min())
+        # Sure, or as good as sure: a floor for the others.
+        self.sure = np.full(self.n, -math.inf)
+        is_sure = self.sd <= _SURE * max(span, abs(top))
+        normal = np.array(self.normal, dtype=np.int64)
+        self.sure[normal[is_sure]] = self.mu[is_sure]
+        self.error = np.zeros(self.n)
+        self.error[normal[is_sure]] = _SD_TO_W1 * self.sd[is_sure]
+        self.spread = np.zeros(self.n)
+        self.spread[normal] = self.sd
+        for c, d in self.sums:
+            self.error[c], self.spread[c] = d.error, d.spread
+        keep = ~is_sure
+        self.normal = normal[keep].tolist()
+        self.mu, self.sd = self.mu[keep], self.sd[keep]
+
+    def maximum(self) -> Distribution:
+        """The distribution of the largest."""
+        floor = max(self.floor, float(self.sure.max()))
+        low = max(float(self.low.max()), floor)
+        high = max(float(self.high.max()), low)
+        edges, hard = self._edges(low, high, [floor])
+
+        def density(at: Floats) -> Floats:
+            F, f = self._table(at)
+            return _all_of(F, f)
+
+        edges, hard, values = resolved(edges, hard, density)
+        atom_at = self._atom_places(low, [floor])
+        G, jump = self._jumps(atom_at, floor)
+        mass = _jump_of_all(G, jump)
+        return fit(edges, hard, values, atom_at, mass, float(self.spread.max()), float(self.error.sum()))
+
+    def others(self) -> list[Distribution]:
+        """For each member, the distribution of the largest of the others."""
+        floors = np.maximum(self.floor, _largest_other(self.sure))[: self.n_members]
+        lows = np.maximum(_largest_other(self.low)[: self.n_members], floors)
+        highs = np.maximum(_largest_other(self.high)[: self.n_members], lows)
+        low, high = float(lows.min()), float(highs.max())
+        unique_floors = np.unique(floors).tolist()
+        edges, hard = self._edges(low, high, [*unique_floors])
+        n_members = self.n_members
+
+        def density(at: Floats) -> Floats:
+            F, f = self._table(at)
+            return _leave_one_out(F, f)[1][:n_members]
+
+        edges, hard, values = resolved(edges, hard, density)
+        places = self._atom_places(low, unique_floors)
+        spreads = np.maximum(_largest_other(self.spread), 0.0)
+        out = []
+        for c in range(self.n_members):
+            # Panels that lie under the floor, or where nothing of the others is left.
+            first = int(np.searchsorted(edges, floors[c])) if floors[c] >= low else 0
+            last = max(int(np.searchsorted(edges, highs[c])), first)
+            G, jump = self._jumps(places, float(floors[c]))
+            G[c], jump[c] = 1.0, 0.0
+            mass = _jump_of_all(G, jump)
+            mass[places < floors[c]] = 0.0
+            held = mass > 0
+            out.append(
+                fit(
+                    edges[first : last + 1],
+                    hard[first : last + 1],
+                    values[c].reshape(-1, N)[first:last],
+                    places[held],
+                    mass[held],
+                    float(spreads[c]),
+                    float(self.error.sum() - self.error[c]),
+                )
+            )
+        return out
+
+    def _edges(self, low: float, high: float, floors: list[float]) -> tuple[Floats, np.ndarray]:
+        breaks = np.concatenate([np.array(floors), *(d.edges[d.hard] for _, d in self.sums)])
+        wide = REACH * self.sd
+        panels = np.concatenate(
+            [
+                np.column_stack((self.mu - wide, self.mu + wide, WIDTH * self.sd)),
+                *(np.column_stack((d.edges[:-1], d.edges[1:], np.diff(d.edges))) for _, d in self.sums),
+            ]
+        )
+        return lay_out(low, high, breaks, panels)
+
+    def _table(self, at: Floats) -> tuple[Floats, Floats]:
+        """Distribution function and density of every competitor at ascending points; (n, len(at)) each."""
+        F, f = np.ones((self.n, len(at))), np.zeros((self.n, len(at)))
+        _normals(np.array(self.normal, dtype=np.int64), self.mu, self.sd, at, F, f)
+        for c, d in self.sums:
+            F[c], f[c] = evaluate(d, at)
+        return F, f
+
+    def _atom_places(self, low: float, floors: list[float]) -> Floats:
+        places = np.concatenate([np.array(floors), *(d.atom_at for _, d in self.sums)])
+        return np.unique(places[places >= low])
+
+    def _jumps(self, at: Floats, floor: float) -> tuple[Floats, Floats]:
+        """Distribution functions at points, and how much of it is a jump there; last row the floor."""
+        F, _ = self._table(at)
+        jump = np.zeros_like(F)
+        for c, d in self.sums:
+            for a, m in zip(d.atom_at, d.atom_mass, strict=True):
+                jump[c, at == a] += m
+        floor_row = (at >= floor).astype(float)
+        floor_jump = (at == floor).astype(float)
+        return np.vstack((F, floor_row)), np.vstack((jump, floor_jump))
+
+
+def _largest_other(x: Floats) -> Floats:
+    """max over j != i of x_j, for every i; -inf where there is no other."""
+    if len(x) < 2:
+        return np.full(len(x), -math.inf)
+    top = int(np.argmax(x))
+    out = np.full(len(x), x[top])
+    out[top] = np.delete(x, top).max()
+    return out
+
+
+@njit(cache=True, error_model="numpy")
+def _normals(rows: np.ndarray, mu: Floats, sd: Floats, at: Floats, F: Floats, f: Floats) -> None:
+    for i in range(len(rows)):
+        c = rows[i]
+        for j in range(len(at)):
+            z = (at[j] - mu[i]) / sd[i]
+            if z < REACH:
+                F[c, j] = norm_cdf(z)
+                f[c, j] = 0.3989422804014327 * math.exp(-0.5 * z * z) / sd[i]
+
+
+@njit(cache=True, error_model="numpy")
+def _all_of(F: Floats, f: Floats) -> Floats:
+    """Density of the maximum, shape (1, len)."""
+    out = np.empty((1, F.shape[1]))
+    for j in range(F.shape[1]):
+        P = 1.0
+        p = 0.0
+        for c in range(F.shape[0]):
+            p = p * F[c, j] + P * f[c, j]
+            P *= F[c, j]
+        out[0, j] = p
+    return out
+
+
+@njit(cache=True, error_model="numpy")
+def _leave_one_out(F: Floats, f: Floats) -> tuple[Floats, Floats]:
+    """Distribution function and density of the maximum of all but one, for each; no division."""
+    n, m = F.shape
+    G = np.empty((n, m))
+    g = np.empty((n, m))
+    for j in range(m):
+        P = 1.0
+        p = 0.0
+        for c in range(n):
+            G[c, j] = P
+            g[c, j] = p
+            p = p * F[c, j] + P * f[c, j]
+            P *= F[c, j]
+        P = 1.0
+        p = 0.0
+        for c in range(n - 1, -1, -1):
+            g[c, j] = g[c, j] * P + G[c, j] * p
+            G[c, j] *= P
+            p = p * F[c, j] + P * f[c, j]
+            P *= F[c, j]
+    return G, g
+
+
+@njit(cache=True, error_model="numpy")
+def _jump_of_all(F: Floats, jump: Floats) -> Floats:
+    """Jump of the product of distribution functions, from each one's value and jump: no subtraction."""
+    out = np.zeros(F.shape[1])
+    for j in range(F.shape[1]):
+        P = 1.0
+        p = 0.0
+        for c in range(F.shape[0]):
+            p = p * F[c, j] + P * jump[c, j]  # before c: the full values; after it: what lies below
+            P *= max(F[c, j] - jump[c, j], 0.0)
+        out[j] = p
+    return out

@@ -33,7 +33,9 @@ class InputError(DistillError):
         self.rule = rule
         self.value = value
         got = f"; got {_short(value[0])}" if value else ""
-        super().__init__(f"{place}: {rule}{got}")
+        # A hostile input may choose the key that is named.
+        shown = place if len(place) <= 300 else f"{place[:200]}...{place[-60:]}"
+        super().__init__(f"{shown}: {rule}{got}")
 
     def at(self, outer: str) -> InputError:
         """The same error seen from one level further out."""

@@ -14,7 +14,8 @@ from distill.allocation import Search as Posterior
 from distill.errors import InputError
 from distill.query import Query
 from distill.rehearse.policies import Policy
-from distill.rehearse.problems import Draw, action_values
+from distill.rehearse.problems import Draw
+from distill.rehearse.search import action_values
 from distill.tree import BeliefTree, Floats
 
 __all__ = ["Budget", "Decided", "decide", "expected_maxima", "posterior_means"]

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
-from itertools import product
+from itertools import islice
 from typing import Protocol
 
 import numpy as np
@@ -12,13 +13,14 @@ import numpy as np
 from distill import schema
 from distill.errors import InputError, RefusedError
 from distill.rehearse.optimum import solve
-from distill.rehearse.search import Prior, Search, Settings, estimate_prior
+from distill.rehearse.search import Prior, Search, Settings, action_values, estimate_prior
 from distill.rehearse.simulator import Modelled, State
 from distill.tree import BeliefTree, Floats
 
-__all__ = ["Draw", "Problem", "SimulatorProblem", "TreeProblem", "action_values", "grid"]
+__all__ = ["Draw", "Problem", "SimulatorProblem", "TreeProblem"]
 
 _MOST_TRIES = 1000  # states looked at for one where the choice matters
+_KEPT = 20  # solved parts of a simulator that are remembered
 
 
 @dataclass(frozen=True, eq=False)
@@ -49,27 +51,6 @@ class Problem(Protocol):
 
     def draw(self, seed: int) -> Draw:
         """The decision of one seed."""
-
-
-def action_values(tree: BeliefTree, leaf_values: Floats) -> Floats:
-    """Root action values when leaf values are as given (shape (n_leaves,)); shape (n_actions,).
-
-    >>> from distill.record import from_record
-    >>> t = from_record({"format": "belief-tree/1", "parent": [-1, 0, 0],
-    ...     "kind": ["decision", "leaf", "leaf"], "reward": [0, 1, 0],
-    ...     "mean": [None, 0, 0], "var": [None, 1, 1], "noise_var": [None, 1, 1]})
-    >>> action_values(t, np.array([2.0, 2.5]))
-    array([3. , 2.5])
-    """
-    value = np.where(tree.kind == schema.DECISION, -np.inf, 0.0)
-    value[tree.leaf_nodes] = leaf_values
-    parent, decision = tree.parent.tolist(), (tree.kind == schema.DECISION).tolist()
-    for v in range(tree.n_nodes - 1, 0, -1):
-        q = tree.reward[v] + tree.discount[v] * value[v]
-        p = parent[v]
-        value[p] = max(value[p], q) if decision[p] else value[p] + tree.prob[v] * q
-    actions = tree.action_nodes
-    return np.asarray(tree.reward[actions] + tree.discount[actions] * value[actions])
 
 
 @dataclass(frozen=True)
@@ -156,17 +137,6 @@ class TreeProblem:
         )
 
 
-def grid() -> list[TreeProblem]:
-    """The synthetic grid: branching, depth, noise and chance, Gaussian and win/loss."""
-    shapes = [(2, 8, 2), (4, 4, 2), (6, 2, 2), (3, 3, 3)]
-    noises = [1.0, 4.0, 16.0, None]
-    flat = [TreeProblem(a, b, d, noise) for (a, b, d), noise in product(shapes, noises)]
-    chancy = [
-        TreeProblem(a, b, d, noise, chance=True) for (a, b, d), noise in product([(4, 3, 3)], [4.0, None])
-    ]
-    return [*flat, *chancy]
-
-
 @dataclass(eq=False)
 class SimulatorProblem:
     """States of a simulator with an exact model; regret is against the exact optimum.
@@ -185,7 +155,8 @@ class SimulatorProblem:
     least_gap: float = 1e-6
     max_states: int = 200_000
     _prior: Prior | None = None
-    _worth: dict[State, Mapping[State, Floats]] = field(default_factory=dict)
+    _solved: deque[Mapping[State, Floats]] = field(default_factory=lambda: deque(maxlen=_KEPT))
+    _decisions: dict[int, tuple[State, Floats]] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
         self.name = self.name or self.simulator.name
@@ -203,7 +174,9 @@ class SimulatorProblem:
         state_rng, tree_rng, luck = (
             np.random.default_rng(s) for s in np.random.SeedSequence(seed, spawn_key=(2,)).spawn(3)
         )
-        state, worth = self._decision(state_rng)
+        if seed not in self._decisions:  # every policy asks for it, and to solve is dear
+            self._decisions[seed] = self._decision(state_rng)
+        state, worth = self._decisions[seed]
         search = Search(self.simulator, state, self.settings, self.prior, tree_rng)
         seeds = luck.integers(2**63, size=search.lookahead.n_leaves)
         streams: dict[int, np.random.Generator] = {}
@@ -216,30 +189,28 @@ class SimulatorProblem:
         return Draw(search.tree(), roll, worth)
 
     def _decision(self, rng: np.random.Generator) -> tuple[State, Floats]:
-        for tried, (start, state) in enumerate(self._states(rng)):
-            if tried == _MOST_TRIES:
-                break
-            worth = self._worth_of(start, state)
+        for state in islice(self._states(rng), _MOST_TRIES):
+            worth = self._worth_of(state)
             if np.ptp(worth) >= self.least_gap:
                 return state, worth
         raise RefusedError(f"{self.name}: no state of {_MOST_TRIES} where the choice matters")
 
-    def _states(self, rng: np.random.Generator) -> Iterator[tuple[State, State]]:
-        """(start of the episode, state): after a random number of random steps, over and over."""
+    def _states(self, rng: np.random.Generator) -> Iterator[State]:
+        """States after a random number of random steps from a start, over and over."""
         while True:
-            start = state = self.simulator.start(rng)
+            state = self.simulator.start(rng)
             for _ in range(int(rng.integers(20))):
                 choices: Sequence[int] = self.simulator.actions(state)
                 after, _ = self.simulator.step(state, choices[int(rng.random() * len(choices))], rng)
                 if self.simulator.is_terminal(after):
                     break
                 state = after
-            yield start, state
+            yield state
 
-    def _worth_of(self, start: State, state: State) -> Floats:
-        """Exact action values; a solved start answers for every state that it leads to."""
-        for solved in self._worth.values():
+    def _worth_of(self, state: State) -> Floats:
+        """Exact action values; what was solved for one state answers for all that it leads to."""
+        for solved in self._solved:
             if state in solved:
                 return solved[state]
-        self._worth[start] = solve(self.simulator, [start], max_states=self.max_states).action_values
-        return self._worth[start][state]
+        self._solved.append(solve(self.simulator, [state], max_states=self.max_states).action_values)
+        return self._solved[-1][state]

@@ -12,14 +12,13 @@ import numpy as np
 
 from distill.allocation import RULES
 from distill.errors import InputError, RefusedError
-from distill.rehearse.cold_store import ColdStore
-from distill.rehearse.gym_tables import GymTable
+from distill.rehearse.catalogue import make_simulator
 from distill.rehearse.search import Rule, Search, Settings, estimate_prior
 from distill.rehearse.simulator import Simulator, State
 from distill.traces import write_trees
 from distill.tree import BeliefTree, Floats
 
-__all__ = ["POINTS", "SIMULATORS", "Recorded", "make_simulator", "record_traces", "recorded_trees"]
+__all__ = ["POINTS", "Recorded", "record_traces", "recorded_trees"]
 
 POINTS = (0.0, 0.125, 0.25, 0.5, 0.75)  # shares of the budget spent when a tree is recorded
 _DIGITS = 9  # significant digits of a recorded belief: far below what a rollout's noise leaves unsaid
@@ -37,39 +36,6 @@ class Recorded:
     decisions: int
     leaves: tuple[int, int]  # fewest and most
     size: int  # bytes
-
-
-def _taxi() -> tuple[Simulator, Settings]:
-    return GymTable("taxi", discount=0.98, skill=0.9), Settings(depth=2, length=30)
-
-
-def _cliff_walking() -> tuple[Simulator, Settings]:
-    return GymTable("cliff_walking", discount=0.98, skill=0.9), Settings(depth=3, length=30)
-
-
-def _cold_store() -> tuple[Simulator, Settings]:
-    return ColdStore(jobs=8), Settings(depth=2, length=30, plans=True)
-
-
-def _frozen_lake(name: str) -> tuple[Simulator, Settings]:
-    return GymTable(name, discount=0.99), Settings(depth=1, length=60)
-
-
-# name on the command line -> the simulator and how deep its search looks
-SIMULATORS: dict[str, Callable[[], tuple[Simulator, Settings]]] = {
-    "taxi": _taxi,
-    "cliff_walking": _cliff_walking,
-    "cold_store": _cold_store,
-    "frozen_lake_4x4": lambda: _frozen_lake("frozen_lake_4x4"),
-    "frozen_lake_8x8": lambda: _frozen_lake("frozen_lake_8x8"),
-}
-
-
-def make_simulator(name: str) -> tuple[Simulator, Settings]:
-    """A simulator by name, with the look-ahead that suits it; InputError for an unknown name."""
-    if name not in SIMULATORS:
-        raise InputError("simulator", f"must be one of {', '.join(SIMULATORS)}", name)
-    return SIMULATORS[name]()
 
 
 def record_traces(
@@ -115,14 +81,14 @@ def recorded_trees(
 ) -> Iterator[tuple[int, BeliefTree]]:
     """(decision, tree) for each decision of the reference search, at the POINTS of its budget.
 
-    simulator : one that follows the protocol, with its `settings`, or a name of SIMULATORS.
+    simulator : one that follows the protocol, with its `settings`, or a name of `catalogue.SIMULATORS`.
     decisions : how many. rollouts : budget of each. seed : of everything random.
     rule : how rollouts are given out; None draws one of the named rules for each decision, so that
         the trees are not those of one rule alone.
 
     Each tree carries `count`, `remaining`, `id` and in `extra` the environment, state, decision and
-    rule. The prior comes from pilot rollouts of their own. The search plays its best action, one
-    time in five a random one, and restarts at the end of an episode.
+    rule. The prior comes from pilot rollouts of their own. The search plays the action with
+    the largest backed-up mean, one time in five a random one, and restarts at the end of an episode.
     """
     if decisions < 1:
         raise InputError("decisions", "must be at least 1", decisions)

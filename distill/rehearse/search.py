@@ -17,7 +17,7 @@ from distill.rehearse.lookahead import Lookahead, look_ahead, plan_ahead
 from distill.rehearse.simulator import Action, Simulator, State
 from distill.tree import BeliefTree, Floats
 
-__all__ = ["Prior", "Rule", "Search", "Settings", "estimate_prior"]
+__all__ = ["Prior", "Rule", "Search", "Settings", "action_values", "estimate_prior"]
 
 _SAME = 1e-10  # returns that differ by less, as a share of the largest, differ by rounding
 _MOST_WEIGHT = 1e6  # degrees of freedom beyond which trees are taken to share one noise
@@ -166,8 +166,29 @@ class Search:
     def best_action(self) -> Action:
         """The root action with the largest backed-up mean; the first on ties."""
         tree = self.tree()
-        values = _backed_up_means(tree)
-        return self.lookahead.actions[int(np.argmax(values))]
+        assert tree.mean is not None
+        return self.lookahead.actions[int(np.argmax(action_values(tree, tree.mean)))]
+
+
+def action_values(tree: BeliefTree, leaf_values: Floats) -> Floats:
+    """Root action values when leaf values are as given (shape (n_leaves,)); shape (n_actions,).
+
+    >>> from distill.record import from_record
+    >>> t = from_record({"format": "belief-tree/1", "parent": [-1, 0, 0],
+    ...     "kind": ["decision", "leaf", "leaf"], "reward": [0, 1, 0],
+    ...     "mean": [None, 0, 0], "var": [None, 1, 1], "noise_var": [None, 1, 1]})
+    >>> action_values(t, np.array([2.0, 2.5]))
+    array([3. , 2.5])
+    """
+    value = np.where(tree.kind == schema.DECISION, -np.inf, 0.0)
+    value[tree.leaf_nodes] = leaf_values
+    parent, decision = tree.parent.tolist(), (tree.kind == schema.DECISION).tolist()
+    for v in range(tree.n_nodes - 1, 0, -1):
+        q = tree.reward[v] + tree.discount[v] * value[v]
+        p = parent[v]
+        value[p] = max(value[p], q) if decision[p] else value[p] + tree.prob[v] * q
+    actions = tree.action_nodes
+    return np.asarray(tree.reward[actions] + tree.discount[actions] * value[actions])
 
 
 def _returns(
@@ -209,15 +230,3 @@ def _noise_weight(noise: Floats, freedom: Floats, typical: float) -> float:
     if excess <= polygamma(1, _MOST_WEIGHT / 2):
         return np.inf
     return 2 * float(brentq(lambda x: polygamma(1, x) - excess, 1e-4, _MOST_WEIGHT / 2, xtol=1e-12))
-
-
-def _backed_up_means(tree: BeliefTree) -> Floats:
-    assert tree.mean is not None
-    value = np.where(tree.kind == schema.DECISION, -np.inf, 0.0)
-    value[tree.leaf_nodes] = tree.mean
-    for v in range(tree.n_nodes - 1, 0, -1):
-        p = tree.parent[v]
-        q = tree.reward[v] + tree.discount[v] * value[v]
-        value[p] = max(value[p], q) if tree.kind[p] == schema.DECISION else value[p] + tree.prob[v] * q
-    actions = tree.action_nodes
-    return np.asarray(tree.reward[actions] + tree.discount[actions] * value[actions])

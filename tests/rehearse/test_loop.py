@@ -14,11 +14,12 @@ from ladder import CLOSED_FORM, STANDARD_ERRORS
 from distill import voc
 from distill.allocation import Search
 from distill.errors import InputError
+from distill.rehearse.catalogue import environment_problems, synthetic_problems
 from distill.rehearse.gym_tables import GymTable
 from distill.rehearse.loop import Budget, decide, posterior_means
 from distill.rehearse.policies import ByRule, ByScorer, ByValue, Choice, TopTwoThompson, leaf_actions
-from distill.rehearse.problems import SimulatorProblem, TreeProblem, action_values, grid
-from distill.rehearse.search import Settings
+from distill.rehearse.problems import SimulatorProblem, TreeProblem
+from distill.rehearse.search import Settings, action_values
 from distill.runtime import Scorer
 
 STATIC = {"horizon": 0.0}
@@ -55,7 +56,7 @@ def run(problem, policy, budget, seed=0, clock=time.perf_counter):
     return decide(problem.draw(seed), policy, budget, rng, values=posterior_means, clock=clock)
 
 
-@pytest.mark.parametrize("problem", grid(), ids=lambda p: p.name)
+@pytest.mark.parametrize("problem", synthetic_problems(), ids=lambda p: p.name)
 def test_every_grid_cell_runs_and_spends_its_budget(problem):
     for policy in (
         ByRule("even"),
@@ -209,6 +210,7 @@ def test_action_values_pass_chance_and_decisions():
 def test_simulator_problems_know_their_optimum():
     table = GymTable("cliff_walking", discount=0.98, skill=0.9)
     problem = SimulatorProblem(table, Settings(depth=2, length=30))
+    assert problem.name == "cliff_walking"
     worths = list(table.optimum().action_values.values())
     regrets = []
     for seed in range(12):
@@ -218,6 +220,17 @@ def test_simulator_problems_know_their_optimum():
         assert problem.draw(seed).roll(2) == draw.roll(2)
         regrets.append(run(problem, ByRule("even"), Budget(rollouts=200), seed).regret)
     assert np.mean(regrets) < 3  # against about 25 of the average action; the cliff costs 100
+
+
+@pytest.mark.parametrize("problem", environment_problems(), ids=lambda p: p.name)
+def test_every_environment_can_be_rehearsed(problem):
+    """Rollouts spread evenly find an action that is better than a random one."""
+    regrets, random_regrets = [], []
+    for seed in range(8):
+        draw = problem.draw(seed)
+        random_regrets.append(float(draw.worth.max() - draw.worth.mean()))
+        regrets.append(run(problem, ByRule("even"), Budget(rollouts=200), seed).regret_by_mean)
+    assert np.mean(regrets) < np.mean(random_regrets)
 
 
 @pytest.mark.parametrize(

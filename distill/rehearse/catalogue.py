@@ -1,0 +1,63 @@
+"""The simulators and problems that come along, by name."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from itertools import product
+from typing import Final
+
+from distill.errors import InputError
+from distill.rehearse.cold_store import ColdStore
+from distill.rehearse.gym_tables import GymTable
+from distill.rehearse.problems import Problem, SimulatorProblem, TreeProblem
+from distill.rehearse.search import Settings
+from distill.rehearse.simulator import Modelled
+
+__all__ = ["SIMULATORS", "environment_problems", "make_simulator", "synthetic_problems"]
+
+
+def _table(name: str, discount: float, skill: float, depth: int, length: int) -> tuple[Modelled, Settings]:
+    return GymTable(name, discount=discount, skill=skill), Settings(depth=depth, length=length)
+
+
+# name -> the simulator, and how its search looks ahead
+SIMULATORS: Final[dict[str, Callable[[], tuple[Modelled, Settings]]]] = {
+    "taxi": lambda: _table("taxi", 0.98, 0.9, 2, 30),
+    "cliff_walking": lambda: _table("cliff_walking", 0.98, 0.9, 3, 30),
+    "cold_store": lambda: (ColdStore(jobs=8), Settings(depth=2, length=30, plans=True)),
+    "cold_store_small": lambda: (ColdStore(jobs=4), Settings(depth=2, length=30, plans=True)),
+    "cliff_walking_slippery": lambda: _table("cliff_walking_slippery", 0.98, 0.9, 1, 60),
+    "frozen_lake_4x4": lambda: _table("frozen_lake_4x4", 0.99, 0.5, 1, 100),
+    "frozen_lake_8x8": lambda: _table("frozen_lake_8x8", 0.99, 0.5, 1, 200),
+}
+_SOLVABLE: Final = (
+    "taxi",
+    "cliff_walking",
+    "cliff_walking_slippery",
+    "frozen_lake_4x4",
+    "frozen_lake_8x8",
+    "cold_store_small",
+)
+
+
+def make_simulator(name: str) -> tuple[Modelled, Settings]:
+    """A simulator by name, with the look-ahead that suits it; InputError for an unknown name."""
+    if name not in SIMULATORS:
+        raise InputError("simulator", f"must be one of {', '.join(SIMULATORS)}", name)
+    return SIMULATORS[name]()
+
+
+def environment_problems() -> list[Problem]:
+    """Public environments and the small cold store, each judged by its exact optimum.
+
+    The slippery ones grow chance nodes; the cold store is searched by plans of two jobs.
+    """
+    return [SimulatorProblem(*make_simulator(name), name=name) for name in _SOLVABLE]
+
+
+def synthetic_problems() -> list[Problem]:
+    """The grid of trees with known leaf values: branching, depth, noise and chance, both beliefs."""
+    shapes = [(2, 8, 2), (4, 4, 2), (6, 2, 2), (3, 3, 3)]
+    noises = [1.0, 4.0, 16.0, None]
+    flat = [TreeProblem(a, b, d, noise) for (a, b, d), noise in product(shapes, noises)]
+    return [*flat, *(TreeProblem(4, 3, 3, noise, chance=True) for noise in (4.0, None))]

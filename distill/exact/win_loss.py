@@ -5,7 +5,10 @@ A leaf is worth low + (high - low) p, p ~ Beta(alpha, beta); a rollout is one tr
 
 from __future__ import annotations
 
+import math
+
 from distill.errors import InputError, RefusedError
+from distill.exact.win_loss_dynamic import price_dynamic
 from distill.exact.win_loss_static import price_static
 from distill.query import Priced, Query
 from distill.tree import BeliefTree
@@ -26,8 +29,12 @@ def price(tree: BeliefTree, query: Query) -> Priced:
     >>> price(t, Query(horizon=0)).voc.round(6)  # 1/30: only a win of the first leaf changes the choice
     array([0.033333, 0.      ])
     """
-    if query.horizon != float("inf") and query.horizon != int(query.horizon):
+    if query.horizon != math.inf and query.horizon != int(query.horizon):
         raise InputError("horizon", 'must be whole or "inf" for win/loss leaves', query.horizon)
     if query.horizon == 0:
         return price_static(tree, query)
-    raise RefusedError("win/loss leaves with h > 0 have no exact method yet")
+    if tree.has_chance:
+        raise RefusedError("win/loss leaves under chance nodes with h > 0 have no exact method")
+    if query.horizon == math.inf:
+        return price_dynamic(tree, query)
+    raise RefusedError("win/loss leaves with a finite horizon above 0 have no exact method yet")

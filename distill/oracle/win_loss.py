@@ -10,15 +10,21 @@ import math
 from collections.abc import Sequence
 from fractions import Fraction
 
-import numpy as np
 from scipy.integrate import quad
-from scipy.stats import beta as beta_law
+from scipy.special import betainc, betaincinv
 
 from distill import schema
 from distill.errors import RefusedError
 from distill.tree import BeliefTree
 
-__all__ = ["beliefs", "beta_binomial", "root_action_values", "value_now", "voc"]
+__all__ = [
+    "beliefs",
+    "beta_binomial",
+    "expected_max_of_whole_betas",
+    "root_action_values",
+    "value_now",
+    "voc",
+]
 
 Number = Fraction | float
 Belief = tuple[Fraction, Fraction]
@@ -114,7 +120,7 @@ def _expected_max(tree: BeliefTree, action: int, held: Sequence[Belief]) -> Frac
     """E[max] = top - integral of the product of CDFs, over the affine terms of an action's leaves."""
     if tree.has_chance:
         raise RefusedError("the oracle integrates E[max] under decision nodes only")
-    laws = []
+    laws: list[tuple[float, float, float, float]] = []
     for i, node in enumerate(tree.leaf_nodes.tolist()):
         gain, offset, c = Fraction(1), Fraction(0), node
         while c > 0:
@@ -122,18 +128,47 @@ def _expected_max(tree: BeliefTree, action: int, held: Sequence[Belief]) -> Frac
             offset = Fraction(float(tree.reward[c])) + Fraction(float(tree.discount[c])) * offset
             last, c = c, int(tree.parent[c])
         if last == action:
-            a, b = held[i]
             low, high = (float(offset + gain * _worth(tree, i, Fraction(p))) for p in (0, 1))
-            laws.append(beta_law(float(a), float(b), loc=low, scale=high - low))
-    bottom, top = max(law.support()[0] for law in laws), max(law.support()[1] for law in laws)
+            laws.append((float(held[i][0]), float(held[i][1]), low, high))
+    bottom, top = max(law[2] for law in laws), max(law[3] for law in laws)
     cuts = {bottom, top}
-    for law in laws:  # where a law's mass sits, or the adaptive rule may step over it
-        cuts.update(float(law.ppf(q)) for q in (0, 1e-12, 1e-6, 1e-3, 0.1, 0.5, 0.9, 1 - 1e-3, 1 - 1e-6, 1))
+    for a, b, low, high in laws:  # where a law's mass sits, or the adaptive rule may step over it
+        ranks = (0.0, 1e-12, 1e-6, 1e-3, 0.1, 0.5, 0.9, 1 - 1e-3, 1 - 1e-6, 1.0)
+        cuts.update(low + (high - low) * float(betaincinv(a, b, rank)) for rank in ranks)
     edges = sorted(c for c in cuts if bottom <= c <= top)
-    missing = 0.0
-    for left, right in itertools.pairwise(edges):
-        missing += quad(
-            lambda y: float(np.prod([law.cdf(y) for law in laws])), left, right, epsabs=1e-13, epsrel=1e-12,
-            limit=200,
-        )[0]  # fmt: skip
-    return Fraction(top) - Fraction(missing)
+
+    def all_below(y: float) -> float:
+        below = 1.0
+        for a, b, low, high in laws:
+            below *= float(betainc(a, b, min(max((y - low) / (high - low), 0.0), 1.0)))
+        return below
+
+    # full_output: a piece whose error estimate misses 1e-13 is no reason to warn, the sum is good to 1e-11.
+    pieces = [
+        quad(all_below, left, right, epsabs=1e-13, epsrel=1e-12, limit=200, full_output=True)
+        for left, right in itertools.pairwise(edges)
+    ]
+    if sum(piece[1] for piece in pieces) > 1e-10 * max(1.0, abs(top), abs(bottom)):
+        raise RefusedError("the oracle's adaptive quadrature did not converge")
+    return Fraction(top) - sum((Fraction(piece[0]) for piece in pieces), Fraction(0))
+
+
+def expected_max_of_whole_betas(leaves: Sequence[tuple[int, int]]) -> Fraction:
+    """E[max p_j], p_j ~ Beta(a_j, b_j) with whole exponents: the CDFs are polynomials, all in fractions.
+
+    >>> expected_max_of_whole_betas([(1, 1), (2, 2), (5, 5)])
+    Fraction(1997, 2860)
+    """
+    product = [Fraction(1)]
+    for a, b in leaves:
+        n = a + b - 1  # I_y(a, b) = sum over j >= a of C(n, j) y^j (1 - y)^(n - j)
+        law = [Fraction(0)] * (n + 1)
+        for j in range(a, n + 1):
+            for i in range(n - j + 1):
+                law[j + i] += math.comb(n, j) * math.comb(n - j, i) * (-1) ** i
+        longer = [Fraction(0)] * (len(product) + n)
+        for i, x in enumerate(product):
+            for j in range(a, n + 1):
+                longer[i + j] += x * law[j]
+        product = longer
+    return 1 - sum((c / (i + 1) for i, c in enumerate(product)), Fraction(0))

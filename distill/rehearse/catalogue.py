@@ -20,15 +20,16 @@ def _table(name: str, discount: float, skill: float, depth: int, length: int) ->
     return GymTable(name, discount=discount, skill=skill), Settings(depth=depth, length=length)
 
 
-# name -> the simulator, and how its search looks ahead
+# name -> the simulator, and how its search looks ahead. Slippery ones need two steps: with no decision
+# below the root, dynamic and static value are the same and policies that use them cannot differ.
 SIMULATORS: Final[dict[str, Callable[[], tuple[Modelled, Settings]]]] = {
     "taxi": lambda: _table("taxi", 0.98, 0.9, 2, 30),
     "cliff_walking": lambda: _table("cliff_walking", 0.98, 0.9, 3, 30),
     "cold_store": lambda: (ColdStore(jobs=8), Settings(depth=2, length=30, plans=True)),
     "cold_store_small": lambda: (ColdStore(jobs=4), Settings(depth=2, length=30, plans=True)),
-    "cliff_walking_slippery": lambda: _table("cliff_walking_slippery", 0.98, 0.9, 1, 60),
-    "frozen_lake_4x4": lambda: _table("frozen_lake_4x4", 0.99, 0.5, 1, 100),
-    "frozen_lake_8x8": lambda: _table("frozen_lake_8x8", 0.99, 0.5, 1, 200),
+    "cliff_walking_slippery": lambda: _table("cliff_walking_slippery", 0.98, 0.9, 2, 60),
+    "frozen_lake_4x4": lambda: _table("frozen_lake_4x4", 0.99, 0.5, 2, 100),
+    "frozen_lake_8x8": lambda: _table("frozen_lake_8x8", 0.99, 0.5, 2, 200),
 }
 _SOLVABLE: Final = (
     "taxi",

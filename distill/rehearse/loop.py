@@ -71,6 +71,7 @@ class Decided:
     regret_by_mean : of the one with the largest backed-up mean.
     rollouts : spent. choosing : time of the policy and of belief updates.
     stopped : whether the policy stopped before the budget was used.
+    choices : made; fallbacks : those of them that the policy's own values did not make.
     """
 
     regret: float
@@ -78,6 +79,8 @@ class Decided:
     rollouts: int
     choosing: float
     stopped: bool
+    choices: int
+    fallbacks: int
 
 
 def _whole(rollouts: float) -> int:
@@ -104,7 +107,7 @@ def decide(
     rehearsed, and policies differ by nothing but their choices and the time those take.
     """
     posterior = Posterior(draw.tree)
-    spent, elapsed, stopped = 0, 0.0, False
+    spent, elapsed, stopped, choices, fallbacks = 0, 0.0, False, 0, 0
     started = clock()
     policy.begin(draw.tree)
     elapsed += clock() - started
@@ -118,6 +121,8 @@ def decide(
         rollouts = min(choice.rollouts, budget.room(spent, elapsed))
         if rollouts == 0:  # the policy thought the last rollout away
             break
+        choices += 1
+        fallbacks += choice.fell_back
         returns = [draw.roll(choice.leaf) for _ in range(rollouts)]
         observed = math.fsum(returns) if draw.tree.belief == "win_loss" else math.fsum(returns) / rollouts
         started = clock()
@@ -131,6 +136,8 @@ def decide(
         rollouts=spent,
         choosing=elapsed - spent * budget.rollout_seconds,
         stopped=stopped,
+        choices=choices,
+        fallbacks=fallbacks,
     )
 
 

@@ -19,10 +19,14 @@ __all__ = ["ByRule", "ByScorer", "ByValue", "Choice", "Policy", "TopTwoThompson"
 
 
 class Choice(NamedTuple):
-    """Roll out `leaf` `rollouts` times before choosing again."""
+    """Roll out `leaf` `rollouts` times before choosing again.
+
+    fell_back : another rule chose, because the policy's own values told no leaf apart.
+    """
 
     leaf: int
     rollouts: int = 1
+    fell_back: bool = False
 
 
 class Policy(Protocol):
@@ -100,7 +104,8 @@ class ByValue:
     horizon : 0 static, inf dynamic. rate : best VOC a rollout over batches, else of one rollout.
     commit : spend the rate's whole batch before choosing again; else one rollout at a time.
     rollout_price : value units; the search stops where no candidate is worth more a rollout.
-    Where no value stands out from 0 the static rate decides, so that late rollouts keep an order.
+    Where no value stands out from 0 the static rate decides, so that late rollouts keep an order. Such
+    choices are marked: a policy that mostly falls back is the static rate under another name.
     """
 
     def __init__(
@@ -134,7 +139,7 @@ class ByValue:
         if self.rollout_price > 0 and priced.voc[best] <= self.rollout_price:
             return None
         if not priced.voc[best] > priced.error[best]:
-            return Choice(posterior.pick("static_rate", rng, remaining=remaining))
+            return Choice(posterior.pick("static_rate", rng, remaining=remaining), fell_back=True)
         return Choice(best, int(priced.batch[best]) if self.commit else 1)
 
 

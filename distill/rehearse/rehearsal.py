@@ -25,7 +25,7 @@ from distill.tree import BeliefTree, Floats
 
 __all__ = ["Cell", "Compared", "compare", "rehearse"]
 
-_COLUMNS = ("regret", "regret_by_mean", "rollouts", "choosing", "stopped")
+_COLUMNS = ("regret", "regret_by_mean", "rollouts", "choosing", "stopped", "choices", "fallbacks")
 _RESAMPLES = 2000
 
 
@@ -34,6 +34,7 @@ class Cell:
     """All decisions of one policy on one problem under one budget; arrays over seeds, in seed order.
 
     regret, regret_by_mean : value units. rollouts : spent. choosing : seconds. stopped : early.
+    choices : made. fallbacks : of them, made by another rule.
     """
 
     problem: str
@@ -44,6 +45,14 @@ class Cell:
     rollouts: Floats
     choosing: Floats
     stopped: Floats
+    choices: Floats
+    fallbacks: Floats
+
+    @property
+    def fallback_share(self) -> float:
+        """Share of choices that another rule made: near 1, the cell does not show its policy at all."""
+        choices = float(self.choices.sum())
+        return float(self.fallbacks.sum()) / choices if choices > 0 else float("nan")
 
     @property
     def choosing_share(self) -> float:

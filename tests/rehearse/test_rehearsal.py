@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -43,7 +44,7 @@ def test_cells_are_paired_and_resumed(tmp_path):
     ]
     again = run(tmp_path, policies=[POLICIES[0], Unwilling()])  # read, not run
     for a, b in zip(cells, again, strict=True):
-        for column in ("regret", "regret_by_mean", "rollouts", "choosing", "stopped"):
+        for column in ("regret", "regret_by_mean", "rollouts", "choosing", "stopped", "choices", "fallbacks"):
             assert np.array_equal(getattr(a, column), getattr(b, column))
 
 
@@ -77,7 +78,8 @@ def test_repeated_names_and_single_seeds_are_refused(tmp_path):
 def cell(policy, regret, budget=BUDGETS[0], **columns):
     regret = np.asarray(regret, dtype=float)
     zeros = np.zeros(len(regret))
-    given = {"regret_by_mean": regret, "rollouts": zeros, "choosing": zeros, "stopped": zeros} | columns
+    given = {"regret_by_mean": regret, "rollouts": zeros, "choosing": zeros, "stopped": zeros}
+    given |= {"choices": zeros, "fallbacks": zeros} | columns
     return Cell("p", budget, policy, regret, **given)
 
 
@@ -105,6 +107,25 @@ def test_no_regret_gives_no_ratio():
     assert np.isnan([found.ratio, found.low, found.high]).all()
     with pytest.raises(InputError, match="missing in p; got 'other'"):
         compare([cell("ours", [0, 0])], "ours", ["other"])
+
+
+def test_a_cell_says_how_often_its_policy_did_not_choose(tmp_path):
+    """Values that are all 0 leave every choice to the static rate: same regrets, and it shows."""
+
+    def nothing(tree, query):
+        return replace(voc.price(tree, query), voc=np.zeros(tree.n_leaves), error=np.zeros(tree.n_leaves))
+
+    policies = [
+        ByValue(nothing, horizon=0.0, name="blind"),
+        ByValue(voc.price, horizon=0.0, name="seeing"),
+        ByRule("static_rate"),
+    ]
+    settings = {"seeds": 12, "values": posterior_means}
+    cells = rehearse([TreeProblem(3)], policies, [Budget(rollouts=24)], tmp_path, **settings)
+    blind, seeing, rule = cells
+    assert [c.fallback_share for c in cells] == [1.0, 0.0, 0.0]
+    assert np.array_equal(blind.regret, rule.regret)
+    assert np.all(seeing.choices == 24)
 
 
 def test_choosing_share():

@@ -38,6 +38,11 @@ def test_the_sample_holds_what_it_says(name, actions):
     assert len(trees) == 50 * len(POINTS)
     assert len({tree.id for tree in trees}) == len(trees)
     assert len({tree.n_leaves for tree in trees}) >= 5
+    row = next(
+        line for line in (TRACES / "README.md").read_text().splitlines() if f"`{name}.jsonl.gz`" in line
+    )
+    fewest, most = (f([tree.n_leaves for tree in trees]) for f in (min, max))
+    assert row.endswith(f"| {len(trees)} | {row.split('|')[4].strip()} | {fewest} to {most} |")
     assert {tree.extra["rule"] for tree in trees} == {"even", "uct", "thompson", "static_rate"}
     for tree in trees:
         assert tree.belief == "gaussian"

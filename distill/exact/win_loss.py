@@ -9,6 +9,7 @@ import math
 
 from distill.errors import InputError, RefusedError
 from distill.exact.win_loss_dynamic import price_dynamic
+from distill.exact.win_loss_horizon import price_horizon
 from distill.exact.win_loss_static import price_static
 from distill.query import Priced, Query
 from distill.tree import BeliefTree
@@ -19,8 +20,8 @@ __all__ = ["price"]
 def price(tree: BeliefTree, query: Query) -> Priced:
     """VOC_h or RATE_h of every leaf of a win/loss tree.
 
-    h = 0: any tree. Raises InputError for an h that is neither whole nor infinite, RefusedError by name
-    for what no method here can do.
+    h = 0: any tree; h > 0, whole or infinite: decision nodes only. Raises InputError for an h that is
+    neither whole nor infinite, RefusedError by name for what no method here can do.
 
     >>> from distill.record import from_record
     >>> t = from_record({"format": "belief-tree/1", "parent": [-1, 0, 0],
@@ -37,4 +38,4 @@ def price(tree: BeliefTree, query: Query) -> Priced:
         raise RefusedError("win/loss leaves under chance nodes with h > 0 have no exact method")
     if query.horizon == math.inf:
         return price_dynamic(tree, query)
-    raise RefusedError("win/loss leaves with a finite horizon above 0 have no exact method yet")
+    return price_horizon(tree, query)

@@ -1,0 +1,357 @@
+"""Value of trials at win/loss leaves when h more follow at every leaf, h finite; decision nodes; floor 2.
+
+After h more trials leaf j's posterior mean is low_j + width_j (a_j + s) / (n_j + h), s beta-binomial: an
+action is worth V = E max of such atoms. With T(y) = E (best atom of the other leaves - y)+, piecewise
+linear, and c the best rival's value, x wins in k trials on a leaf make its action worth c + g(x),
+
+    g(x) = E[y - c + T(y)],  y = low + width (a + x + s) / (n + k + h),  s beta-binomial given x,
+
+which rises in x. Action behind: VOC = sum of P(x) g(x)+. Action best: VOC = sum of P(x) g(x)- + rise,
+where the rise E T(y after k + h) - E T(y after h) is what k more trials add even if the action is kept: a
+sum over single trials of p T(up) + q T(down) - T(here) >= 0, taken of T or of U(y) = E (y - best)+,
+whichever is smaller there (both bend alike). All sums have positive terms.
+"""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from distill.errors import RefusedError
+from distill.exact.best_batch import best_batch
+from distill.numerics import compiled
+from distill.query import Priced, Query
+from distill.tree import BeliefTree, Floats, Ints, LeafTable, leaf_table
+
+__all__ = ["METHOD", "beta_binomial_law", "price_horizon"]
+
+METHOD = "win/loss, finite horizon: sums over outcomes"
+
+_MAX_NUMBERS = 2**26  # leaves x atoms of one action
+_MAX_WORK = 2**27  # outcomes of the batch x outcomes of the horizon
+_EVERY_BATCH = 200  # up to this many rollouts left the rate prices every batch
+_STEPWISE = 512  # trials up to which the rise is summed trial by trial
+_EPS = 2.0**-52
+
+
+def price_horizon(tree: BeliefTree, query: Query) -> Priced:
+    """VOC_h or RATE_h of every win/loss leaf, h >= 0 whole and finite; decision nodes only.
+
+    Exact sums; the error covers roundings, and for a rate the certificate of the search. Raises
+    RefusedError for chance nodes, and where h or the batch needs too many outcomes.
+    """
+    h = int(query.horizon)
+    flat = leaf_table(tree)
+    last = query.remaining if query.batch is None else query.batch
+    assert last is not None
+    if (h + 1) * (last + h + 1) > _MAX_WORK:
+        raise RefusedError(
+            f"win/loss leaves at horizon {h}: {last} rollouts have too many outcomes to sum over"
+        )
+    actions = _actions(flat, h)
+    value = np.array([action.value for action in actions])
+    n = len(flat.gain)
+    voc, error, batch = np.zeros(n), np.zeros(n), np.zeros(n, dtype=np.int64)
+    for x, action in enumerate(actions):
+        others = np.delete(value, x)
+        rival = float(others.max()) if len(others) else -math.inf
+        voc[action.members], batch[action.members], error[action.members] = action.price(rival, query, last)
+    return Priced(voc, batch, value + actions[0].centre, error, METHOD)
+
+
+def _actions(flat: LeafTable, h: int) -> list[_Action]:
+    assert flat.alpha is not None
+    assert flat.beta is not None
+    assert flat.low is not None
+    assert flat.high is not None
+    width = flat.gain * (flat.high - flat.low)
+    low = flat.offset + flat.gain * flat.low
+    centre = float(np.max(low + width * (flat.alpha / (flat.alpha + flat.beta))))
+    rounding = 8 * _EPS * float(np.max(np.abs(flat.offset) + np.abs(flat.gain * flat.low) + width))
+    actions = []
+    for x in range(int(flat.action.max()) + 1):
+        members = np.flatnonzero(flat.action == x)
+        columns = (flat.alpha[members], flat.beta[members], low[members] - centre, width[members])
+        actions.append(_Action(members, columns, h, centre, rounding))
+    return actions
+
+
+class _Action:
+    """The leaves of one root action h trials on: V, and T and U of every leaf at the atoms of all."""
+
+    def __init__(
+        self,
+        members: Ints,
+        columns: tuple[Floats, Floats, Floats, Floats],
+        h: int,
+        centre: float,
+        rounding: float,
+    ) -> None:
+        self.members, self.columns, self.h, self.centre = members, columns, h, centre
+        a, b, low, width = columns
+        if len(a) * len(a) * (h + 1) > _MAX_NUMBERS:
+            raise RefusedError(
+                f"win/loss leaves at horizon {h}: {len(a)} leaves of one action need too many atoms"
+            )
+        self.tables = _tables(a, b, low, width, h)
+        mean = low + width * (a / (a + b))
+        best = int(np.argmax(mean))
+        self.value = float(mean[best]) + _expected_tail(*(c[best] for c in columns), h, best, *self.tables)
+        self.rounding = rounding + 8 * _EPS * float(np.max(self.tables[2][:, 0], initial=0.0))
+
+    def price(self, rival: float, query: Query, last: int) -> tuple[Floats, Ints, Floats]:
+        """VOC (or rate), batch and error of every leaf of the action."""
+        n = len(self.members)
+
+        def voc_at(leaf: Ints, k: Ints) -> tuple[Floats, Floats]:
+            return _price_pairs(
+                leaf, k, *self.columns, self.h, self.value, rival, self.rounding, *self.tables
+            )
+
+        if not query.rate:
+            batch = np.full(n, last, dtype=np.int64)
+            voc, error = voc_at(np.arange(n), batch)
+            return voc, batch, error
+        if last == 0 or last > _EVERY_BATCH:
+            return best_batch(voc_at, n, last)
+        every = np.arange(1, last + 1)
+        rate, batch, error = np.zeros(n), np.ones(n, dtype=np.int64), np.zeros(n)
+        for i in range(n):
+            voc, err = voc_at(np.full(last, i), every)
+            best = int(np.argmax(voc / every))
+            rate[i], batch[i] = voc[best] / every[best], best + 1
+            error[i] = np.max((voc + err) / every) - rate[i]
+        return rate, batch, error
+
+
+@compiled
+def beta_binomial_law(a: float, b: float, k: int) -> Floats:
+    """P(x wins in k trials), x = 0 ... k, p ~ Beta(a, b); ratios from the mode out, divided by their total.
+
+    >>> beta_binomial_law(1.0, 1.0, 3)
+    array([0.25, 0.25, 0.25, 0.25])
+    """
+    out = np.empty(k + 1)
+    n = a + b
+    if a >= 1.0 and b >= 1.0:
+        top = 0 if n <= 2.0 else min(k, int((k + 1) * ((a - 1.0) / (n - 2.0))))
+        split = k
+    elif b >= 1.0:
+        top, split = 0, k
+    elif a >= 1.0:
+        top, split = k, k
+    else:  # heavy at both ends: each half from its own end
+        top, split = 0, k // 2
+    out[top] = 1.0
+    for x in range(top, split):
+        out[x + 1] = out[x] * ((k - x) / (x + 1.0)) * ((a + x) / (b + (k - x - 1)))
+    if split < k:
+        out[k] = 1.0
+        for s in range(k):
+            out[k] *= (a + s) / (b + s)
+    for x in range(top if split == k else k, 0 if split == k else split + 1, -1):
+        out[x - 1] = out[x] * (x / (k - x + 1.0)) * ((b + (k - x)) / (a + (x - 1)))
+    return out / np.sum(out)
+
+
+@compiled
+def _tables(
+    a: Floats, b: Floats, low: Floats, width: Floats, h: int
+) -> tuple[Floats, Floats, Floats, Floats]:
+    """Atoms of all leaves, ascending, (M,), and for every leaf at them, (L, M): P(rest > y), T and U.
+
+    P(rest > y) holds from its atom to the next.
+    """
+    n_leaves = len(a)
+    count = n_leaves * (h + 1)
+    atom, owner, rank = np.empty(count), np.empty(count, dtype=np.int64), np.empty(count, dtype=np.int64)
+    below, above = np.empty((n_leaves, h + 1)), np.empty((n_leaves, h + 1))
+    for j in range(n_leaves):
+        law = beta_binomial_law(a[j], b[j], h)
+        below[j] = np.cumsum(law)
+        passed = 0.0
+        for s in range(h, -1, -1):
+            above[j, s] = passed
+            passed += law[s]
+            m = j * (h + 1) + s
+            atom[m], owner[m], rank[m] = low[j] + width[j] * ((a[j] + s) / (a[j] + b[j] + h)), j, s
+    order = np.argsort(atom)
+    atom = atom[order]
+    now_below, now_above = np.zeros(n_leaves), np.ones(n_leaves)
+    more, tail, lead = np.empty((n_leaves, count)), np.empty((n_leaves, count)), np.empty((n_leaves, count))
+    less = np.empty(n_leaves)
+    after_p, after_q = np.ones(n_leaves + 1), np.zeros(n_leaves + 1)
+    for m in range(count):
+        j, s = owner[order[m]], rank[order[m]]
+        for i in range(n_leaves):
+            lead[i, m] = 0.0 if m == 0 else lead[i, m - 1] + (atom[m] - atom[m - 1]) * less[i]
+        now_below[j], now_above[j] = min(below[j, s], 1.0), above[j, s]
+        for i in range(n_leaves - 1, -1, -1):
+            after_p[i] = after_p[i + 1] * now_below[i]
+            after_q[i] = after_q[i + 1] + after_p[i + 1] * now_above[i]
+        before_p, before_q = 1.0, 0.0
+        for i in range(n_leaves):
+            less[i] = before_p * after_p[i + 1]
+            more[i, m] = before_q + before_p * after_q[i + 1]
+            before_q += before_p * now_above[i]
+            before_p *= now_below[i]
+    for i in range(n_leaves):
+        tail[i, count - 1] = 0.0
+        for m in range(count - 2, -1, -1):
+            tail[i, m] = tail[i, m + 1] + (atom[m + 1] - atom[m]) * more[i, m]
+    return atom, more, tail, lead
+
+
+@compiled
+def _read(y: Floats, atom: Floats, more: Floats, tail: Floats, lead: Floats) -> tuple[Floats, Floats, Ints]:
+    """T and U of one leaf at ascending y, and the position of the last atom at or below each y."""
+    t, u, at = np.empty(len(y)), np.empty(len(y)), np.empty(len(y), dtype=np.int64)
+    m, last = -1, len(atom) - 1
+    for z in range(len(y)):
+        while m < last and atom[m + 1] <= y[z]:
+            m += 1
+        at[z] = m
+        if m < 0:
+            t[z], u[z] = tail[0] + (atom[0] - y[z]), 0.0
+        elif m == last:
+            t[z], u[z] = 0.0, lead[last] + (y[z] - atom[last])
+        else:
+            t[z] = tail[m + 1] + (atom[m + 1] - y[z]) * more[m]
+            share = (y[z] - atom[m]) / (atom[m + 1] - atom[m])
+            u[z] = lead[m] + share * (lead[m + 1] - lead[m])
+    return t, u, at
+
+
+@compiled
+def _means(a: float, b: float, low: float, width: float, trials: int) -> Floats:
+    """What the leaf is worth after 0 ... trials wins in as many trials."""
+    y = np.empty(trials + 1)
+    for z in range(trials + 1):
+        y[z] = low + width * ((a + z) / (a + b + trials))
+    return y
+
+
+@compiled
+def _expected_tail(
+    a: float,
+    b: float,
+    low: float,
+    width: float,
+    h: int,
+    leaf: int,
+    atom: Floats,
+    more: Floats,
+    tail: Floats,
+    lead: Floats,
+) -> float:
+    """E T(y) after h trials: what choosing later adds to the leaf's mean."""
+    if len(more) == 1:
+        return 0.0
+    t, _, _ = _read(_means(a, b, low, width, h), atom, more[leaf], tail[leaf], lead[leaf])
+    return float(np.sum(beta_binomial_law(a, b, h) * t))
+
+
+@compiled
+def _rises(
+    a: float,
+    b: float,
+    low: float,
+    width: float,
+    h: int,
+    most: int,
+    atom: Floats,
+    more: Floats,
+    tail: Floats,
+    lead: Floats,
+) -> tuple[Floats, Floats]:
+    """E T(y after h + k) - E T(y after h), k = 0 ... most, and its error."""
+    out, error = np.zeros(most + 1), np.zeros(most + 1)
+    odds = beta_binomial_law(a, b, h)
+    t, u, _ = _read(_means(a, b, low, width, h), atom, more, tail, lead)
+    for k in range(most):
+        level = h + k
+        n = a + b + level
+        t_next, u_next, at = _read(_means(a, b, low, width, level + 1), atom, more, tail, lead)
+        rise, noise = 0.0, 0.0
+        ahead = np.zeros(level + 2)
+        for z in range(level + 1):
+            p, q = (a + z) / n, (b + (level - z)) / n
+            if at[z + 1] > at[z]:  # between two atoms nothing bends
+                if t[z] <= u[z]:
+                    bend = p * t_next[z + 1] + q * t_next[z] - t[z]
+                    size = t[z] + (t_next[z] - t_next[z + 1]) * (n + 1.0) * (1.0 + abs(low) / width)
+                else:
+                    bend = p * u_next[z + 1] + q * u_next[z] - u[z]
+                    size = u[z] + (u_next[z + 1] - u_next[z]) * (n + 1.0) * (1.0 + abs(low) / width)
+                rise += odds[z] * max(bend, 0.0)
+                noise += odds[z] * size * 4.0 * _EPS
+            ahead[z] += odds[z] * q
+            ahead[z + 1] += odds[z] * p
+        out[k + 1], error[k + 1] = out[k] + rise, error[k] + noise
+        odds, t, u = ahead, t_next, u_next
+    return out, error
+
+
+@compiled
+def _price_pairs(
+    leaf: Ints,
+    batch: Ints,
+    a: Floats,
+    b: Floats,
+    low: Floats,
+    width: Floats,
+    h: int,
+    value: float,
+    rival: float,
+    rounding: float,
+    atom: Floats,
+    more: Floats,
+    tail: Floats,
+    lead: Floats,
+) -> tuple[Floats, Floats]:
+    """VOC and its error of every pair (leaf, batch) of one action; pairs of one leaf side by side."""
+    voc, error = np.empty(len(leaf)), np.empty(len(leaf))
+    best = value >= rival
+    rises, noise = np.zeros(1), np.zeros(1)
+    known = -1
+    for c in range(len(leaf)):
+        i, k = leaf[c], batch[c]
+        ai, bi, lo, wi = a[i], b[i], low[i], width[i]
+        n = ai + bi
+        y = _means(ai, bi, lo, wi, k + h)
+        t, _, _ = _read(y, atom, more[i], tail[i], lead[i])
+        if len(more) == 1:
+            t[:] = 0.0
+        gain, in_doubt = 0.0, 0.0
+        sure = rounding + _EPS * wi * math.sqrt(k + h + 1.0)
+        if rival > -math.inf:
+            odds = beta_binomial_law(ai, bi, k)
+            for m in range(k + 1):
+                x = m if best else k - m
+                later = beta_binomial_law(ai + x, bi + (k - x), h)
+                g = 0.0
+                for s in range(h + 1):
+                    g += later[s] * ((y[x + s] - rival) + t[x + s])
+                if (g >= 0.0) == best:
+                    in_doubt += odds[x] * sure if abs(g) <= sure else 0.0
+                    break
+                gain += odds[x] * abs(g)
+                in_doubt += odds[x] * sure
+        error[c] = in_doubt
+        if best and len(more) > 1:
+            if k > _STEPWISE:
+                law, before = beta_binomial_law(ai, bi, k + h), beta_binomial_law(ai, bi, h)
+                t0, _, _ = _read(_means(ai, bi, lo, wi, h), atom, more[i], tail[i], lead[i])
+                gain += max(float(np.sum(law * t)) - float(np.sum(before * t0)), 0.0)
+                error[c] += _EPS * tail[i, 0] * math.sqrt(n + k + h)
+            else:
+                if known != i or len(rises) <= k:
+                    most = min(np.max(batch), _STEPWISE)
+                    rises, noise = _rises(ai, bi, lo, wi, h, most, atom, more[i], tail[i], lead[i])
+                    known = i
+                gain += rises[k]
+                error[c] += noise[k]
+        voc[c] = gain
+        error[c] += gain * _EPS * (k + h + 16.0)
+    return voc, error

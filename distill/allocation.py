@@ -109,7 +109,12 @@ class Search:
         weights : rule -> weight; a rule is drawn at the start, and again before a pick with
             probability `switch`.
         rollouts : how many to spend, of `budget` in all. batch : rollouts a pick.
+        Raises InputError for an unknown rule, and where no rule has a weight above 0.
         """
+        for rule in weights:
+            _rule(rule)
+        if not any(w > 0 for w in weights.values()) or any(w < 0 for w in weights.values()):
+            raise InputError("weights", "must be >= 0 and give some rule more than 0", dict(weights))
         share = np.cumsum([weights.get(name, 0.0) for name in RULES])
         c = exploration * self._scale
         run(rng, self._topology, self._belief, truth, share, rollouts, budget, batch, switch, c)

@@ -224,6 +224,8 @@ def _family(obj: dict[str, Any], data: bytes) -> Family:
         text[key] = obj.get(key, "")
         if not isinstance(text[key], str) or (required and not text[key]):
             raise InputError(key, "must be text", text[key])
+    if not text["name"].isprintable() or len(text["name"]) > 80:
+        raise InputError("name", "must be one printable line of at most 80 characters", text["name"])
     if text["format"] != schema.FAMILY_FORMAT:
         raise InputError("format", f"must be {schema.FAMILY_FORMAT!r}", text["format"])
     if text["belief"] not in FIELDS:

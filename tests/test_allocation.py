@@ -263,3 +263,13 @@ def test_unknown_rule_is_named():
         InputError, match=r"rule: must be one of even, uct, thompson, static_rate; got 'best'"
     ):
         Search(_bandit([0], [1])).pick("best", np.random.default_rng(0))
+    with pytest.raises(InputError, match="rule: must be one of"):
+        Search(_bandit([0], [1])).run(
+            np.zeros(1), {"best": 1}, np.random.default_rng(0), rollouts=1, budget=1
+        )
+
+
+@pytest.mark.parametrize("weights", [{}, {"even": 0}, {"even": 2, "uct": -1}, {"even": math.nan}])
+def test_weights_must_name_some_rule(weights):
+    with pytest.raises(InputError, match="weights: must be >= 0 and give some rule more than 0"):
+        Search(_bandit([0], [1])).run(np.zeros(1), weights, np.random.default_rng(0), rollouts=1, budget=1)

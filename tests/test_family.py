@@ -54,6 +54,7 @@ BAD = {
     "format missing": ({"format": None}, "f.toml: format: is missing"),
     "format other": ({"format": '"tree-family/9"'}, "f.toml: format: must be 'tree-family/1'"),
     "name empty": ({"name": '""'}, "f.toml: name: must be text"),
+    "name of two lines": ({"name": '"a\\nb"'}, "f.toml: name: must be one printable line"),
     "name number": ({"name": "7"}, "f.toml: name: must be text; got 7"),
     "belief other": ({"belief": '"coin"'}, "f.toml: belief: must be one of gaussian, win_loss"),
     "belief list": ({"belief": "[1]"}, "f.toml: belief: must be text"),
@@ -141,6 +142,33 @@ def test_bad_bytes_and_missing_files_are_named(tmp_path):
         load_family(tmp_path / "gone.toml")
     with pytest.raises(InputError, match="must be valid TOML"):
         parse_family(b"a = " + b"[" * 100_000, "f.toml")
+
+
+def test_damaged_files_are_read_or_refused_in_one_line():
+    """Bytes changed, cut out and doubled at random: a family or one short InputError, nothing else."""
+    rng = np.random.default_rng(0)
+    original = (FAMILIES / "cold-store.toml").read_bytes()
+    refused = 0
+    for _ in range(600):
+        data = bytearray(original)
+        for _ in range(rng.integers(1, 4)):
+            at, size = rng.integers(len(data)), int(rng.integers(1, 20))
+            how = rng.integers(3)
+            if how == 0:
+                data[at] = rng.integers(256)
+            elif how == 1:
+                del data[at : at + size]
+            else:
+                data[at:at] = data[at : at + size]
+        try:
+            family = parse_family(bytes(data), "f.toml")
+            assert family.belief == "gaussian"
+        except InputError as e:
+            refused += 1
+            assert str(e).startswith("f.toml: ")
+            assert "\n" not in str(e)
+            assert len(str(e)) < 500
+    assert 200 < refused < 600
 
 
 def test_win_loss_span_must_not_drown_in_its_low():

@@ -21,8 +21,10 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from distill import schema
 from distill.errors import RefusedError
@@ -68,10 +70,10 @@ def price_many(trees: Sequence[BeliefTree], query: Query) -> list[Priced]:
         return []
     node_start = _starts([len(t.parent) for t in trees])
     leaf_start = _starts([len(t.mean) for t in trees])  # type: ignore[arg-type]
-    columns = [
-        np.concatenate([getattr(t, name) for t in trees])
-        for name in ("parent", "kind", "reward", "discount", "prob", "mean", "var", "noise_var")
-    ]
+
+    def column(name: str) -> Any:
+        return np.concatenate([getattr(tree, name) for tree in trees])
+
     most = query.remaining if query.rate else query.batch
     assert most is not None
     n_leaves = leaf_start[-1]
@@ -80,8 +82,10 @@ def price_many(trees: Sequence[BeliefTree], query: Query) -> list[Priced]:
     value = np.empty(node_start[-1])
     value_start = np.empty(len(trees) + 1, dtype=np.int64)
     _price_packed(
-        node_start, leaf_start, *columns, float(most), query.rate, voc, batch, error, value, value_start
-    )
+        node_start, leaf_start, column("parent"), column("kind"), column("reward"), column("discount"),
+        column("prob"), column("mean"), column("var"), column("noise_var"), float(most), query.rate,
+        voc, batch, error, value, value_start,
+    )  # fmt: skip
     ends, value_ends = leaf_start.tolist(), value_start.tolist()
     return [
         Priced(voc[a:b], batch[a:b], value[c:d], error[a:b], METHOD)
@@ -98,7 +102,7 @@ def _price_packed(
     node_start: Ints,
     leaf_start: Ints,
     parent: Ints,
-    kind: Ints,
+    kind: NDArray[np.int8],
     reward: Floats,
     discount: Floats,
     prob: Floats,

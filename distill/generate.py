@@ -36,7 +36,7 @@ from distill.tree import BeliefTree
 
 __all__ = ["Asked", "Traces", "generate"]
 
-_SHARD_TREES: Final = 500
+_MOST_SHARD_TREES: Final = 1000
 
 
 @dataclass(frozen=True)
@@ -109,7 +109,7 @@ def generate(
     seed: int = 0,
     asked: Asked | None = None,
     workers: int = 1,
-    shard_trees: int = _SHARD_TREES,
+    shard_trees: int | None = None,
     progress: bool = False,
 ) -> dict[str, Any]:
     """Label `trees` trees of a family, or recorded ones, into the dataset folder `out`; returns its manifest.
@@ -117,7 +117,7 @@ def generate(
     trees : how many; traces default to all, and give a seeded sample where fewer are asked for.
     asked : what value; default the rate.
     workers : processes. The bytes do not depend on it.
-    shard_trees : trees a shard; the step in which work is saved.
+    shard_trees : trees a shard, the step in which work is saved; default a twentieth of all, 50 to 1,000.
     progress : show a bar with rate and time left on standard error.
 
     A folder that holds part of the same plan is completed, a finished one is verified and left alone.
@@ -137,6 +137,8 @@ def generate(
         job = _FamilyJob(source, seed, trees)
     else:
         job = _TraceJob(source, seed, trees)
+    if shard_trees is None:
+        shard_trees = min(max(job.total // 20, 50), _MOST_SHARD_TREES)
     folder = Path(out)
     manifest = _open(folder, _plan(source, job.total, seed, asked, shard_trees))
     if isinstance(source, Family):
@@ -347,7 +349,8 @@ def _bar(show: bool, total: int, done: int) -> Iterator[Callable[[int], None]]:
 
         def advance(n: int) -> None:
             bar.advance(task, n)
-            speed = bar.tasks[task].speed
-            bar.update(task, rate=f"{speed:,.0f}/s" if speed else "")
+            now = bar.tasks[task]
+            if now.elapsed:
+                bar.update(task, rate=f"{(now.completed - done) / now.elapsed:,.0f}/s")
 
         yield advance

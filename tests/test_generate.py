@@ -3,6 +3,7 @@ from __future__ import annotations
 import errno
 import json
 import os
+import re
 import signal
 import subprocess
 import sys
@@ -62,6 +63,12 @@ def test_labels_are_the_engine_s_answers_to_the_family_s_trees(tmp_path):
     assert manifest["totals"] == {"trees": 42, "candidates": len(found["label"]), "aside": 0}
     assert len(manifest["shards"]) == 6
     assert np.any(found["label"] > 0)
+
+
+@pytest.mark.parametrize(("trees", "sizes"), [(30, [30]), (120, [50, 50, 20]), (1300, [65] * 20)])
+def test_shards_are_a_twentieth_within_limits(tmp_path, trees, sizes):
+    manifest = generate(COLD, tmp_path, trees=trees, asked=Asked(horizon=0, batch=1))
+    assert [entry["trees"] for entry in manifest["shards"]] == sizes
 
 
 @pytest.mark.parametrize("asked", [Asked(horizon=0, batch=3), Asked(horizon=0, remaining=5)])
@@ -348,8 +355,8 @@ def test_bad_arguments_are_named(tmp_path, changed, message):
 def test_progress_is_shown_with_rate_and_time_left(tmp_path, capfd):
     _again(tmp_path / "d", progress=True)
     err = capfd.readouterr().err
-    assert "42/42" in err
-    assert "trees" in err
+    assert "42/42 trees" in err
+    assert re.search(r"[\d,]+/s .* left", err)
 
 
 def test_the_datasheet_says_what_the_dataset_is(tmp_path):

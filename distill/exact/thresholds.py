@@ -21,21 +21,10 @@ from dataclasses import dataclass, field
 import numpy as np
 from numba import njit
 
-from distill.exact.distributions import (
-    REACH,
-    WIDTH,
-    Distribution,
-    N,
-    add,
-    add_normal,
-    evaluate,
-    fit,
-    lay_out,
-    reflected,
-    resolved,
-    shifted,
-)
+from distill.exact.distributions import REACH, WIDTH, Distribution, N, evaluate, fit, shifted
 from distill.exact.max_sum import Max, Normal, Sum
+from distill.exact.panels import lay_out, merged, resolved
+from distill.exact.sums import remainders, total
 from distill.numerics import norm_cdf
 from distill.tree import Floats
 
@@ -79,33 +68,17 @@ def thresholds(top: Max, var: Floats) -> tuple[float, float, dict[int, Threshold
 
 
 @dataclass
-class _Parts:
-    """A sum of maxima as a binary tree of partial sums."""
-
-    value: Distribution
-    of: Max | None = None
-    left: _Parts | None = None
-    right: _Parts | None = None
-
-
-@dataclass
 class _Passes:
     var: Floats
     value: dict[int, Distribution] = field(default_factory=dict)
-    parts: dict[int, _Parts] = field(default_factory=dict)
     found: dict[int, Threshold] = field(default_factory=dict)
 
     def up(self, node: Max | Sum) -> None:
         if isinstance(node, Max):
             self.value[id(node)] = _Rivals(node, self, None).maximum()
             return
-        row = [_Parts(self.value[id(m)], of=m) for m in node.maxima]
-        while len(row) > 1:
-            pairs = zip(row[::2], row[1::2], strict=False)
-            row = [_Parts(add(a.value, b.value), None, a, b) for a, b in pairs] + row[len(row) & ~1 :]
-        self.parts[id(node)] = row[0]
-        sd = self.sd(node.leaves)
-        self.value[id(node)] = add_normal(row[0].value, sd) if sd > 0 else row[0].value
+        parts = [self.value[id(m)] for m in node.maxima]
+        self.value[id(node)] = total(parts, self.sd(node.leaves))
 
     def down_from(self, top: Max) -> None:
         stack: list[tuple[Max | Sum, Distribution | None]] = [(top, None)]
@@ -119,12 +92,11 @@ class _Passes:
                         stack.append((member, shifted(T_member, -member.shift)))
                 continue
             assert T is not None
-            parts = self.parts[id(node)]
-            if node.leaves:
-                self.record(node.leaves, add(T, reflected(parts.value)), 0.0)
-                sd = self.sd(node.leaves)
-                T = add_normal(T, sd) if sd > 0 else T
-            stack.extend(_split(parts, T))
+            parts = [self.value[id(m)] for m in node.maxima]
+            rest, whole = remainders(T, parts, self.sd(node.leaves), bool(node.leaves))
+            if whole is not None:
+                self.record(node.leaves, whole, 0.0)
+            stack.extend(zip(node.maxima, rest, strict=True))
 
     def record(self, leaves: list[int], T: Distribution, mean: float) -> None:
         own = self.var[leaves]
@@ -135,22 +107,6 @@ class _Passes:
 
     def sd(self, leaves: list[int]) -> float:
         return math.sqrt(float(self.var[leaves].sum()))
-
-
-def _split(parts: _Parts, T: Distribution) -> list[tuple[Max, Distribution]]:
-    """Thresholds of the maxima of a sum, from the threshold of the sum."""
-    out: list[tuple[Max, Distribution]] = []
-    stack = [(parts, T)]
-    while stack:
-        part, T = stack.pop()
-        if part.of is not None:
-            out.append((part.of, T))
-            continue
-        assert part.left is not None
-        assert part.right is not None
-        stack.append((part.left, add(T, reflected(part.right.value))))
-        stack.append((part.right, add(T, reflected(part.left.value))))
-    return out
 
 
 class _Rivals:
@@ -206,7 +162,9 @@ class _Rivals:
         atom_at = self._atom_places(low, [floor])
         G, jump = self._jumps(atom_at, floor)
         mass = _jump_of_all(G, jump)
-        return fit(edges, hard, values, atom_at, mass, float(self.spread.max()), float(self.error.sum()))
+        return merged(
+            fit(edges, hard, values[0], atom_at, mass, float(self.spread.max()), float(self.error.sum()))
+        )
 
     def others(self) -> list[Distribution]:
         """For each member, the distribution of the largest of the others."""
@@ -236,14 +194,16 @@ class _Rivals:
             mass[places < floors[c]] = 0.0
             held = mass > 0
             out.append(
-                fit(
-                    edges[first : last + 1],
-                    hard[first : last + 1],
-                    values[c].reshape(-1, N)[first:last],
-                    places[held],
-                    mass[held],
-                    float(spreads[c]),
-                    float(self.error.sum() - self.error[c]),
+                merged(
+                    fit(
+                        edges[first : last + 1],
+                        hard[first : last + 1],
+                        values[c, first * N : last * N],
+                        places[held],
+                        mass[held],
+                        float(spreads[c]),
+                        float(self.error.sum() - self.error[c]),
+                    )
                 )
             )
         return out
@@ -273,6 +233,8 @@ class _Rivals:
 
     def _jumps(self, at: Floats, floor: float) -> tuple[Floats, Floats]:
         """Distribution functions at points, and how much of it is a jump there; last row the floor."""
+        if not len(at):
+            return np.empty((self.n + 1, 0)), np.empty((self.n + 1, 0))
         F, _ = self._table(at)
         jump = np.zeros_like(F)
         for c, d in self.sums:

@@ -1,0 +1,190 @@
+"""Where the panels of a piecewise distribution go: laid out, halved where too wide, merged; floor 2."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+
+import numpy as np
+from numba import njit
+
+from distill.exact.distributions import COEFFICIENTS, Distribution, N, chebyshev, fit, nodes_of
+from distill.numerics import gauss_legendre
+from distill.tree import Floats
+
+__all__ = ["lay_out", "merged", "resolved"]
+
+_PANEL_TOLERANCE = 1e-11  # of the span, Wasserstein-1, a panel
+_MAX_HALVINGS = 8
+_EPS = 2.0**-52
+_T, _W = gauss_legendre(N)
+
+
+@njit(cache=True, error_model="numpy")
+def _greedy_edges(low: float, high: float, breaks: Floats, panels: Floats) -> Floats:
+    """Panel edges from low to high, as wide as allowed, never across a break.
+
+    breaks : ascending. panels : (Q, 3) rows (from, to, width): a panel that reaches into [from, to] is at
+        most `width` wide, or ends at `from`.
+    """
+    out = [low]
+    a = low
+    b = 0
+    while a < high:
+        while b < len(breaks) and breaks[b] <= a:
+            b += 1
+        stop = breaks[b] if b < len(breaks) and breaks[b] < high else high
+        w = stop - a
+        for q in range(len(panels)):
+            if panels[q, 1] > a and panels[q, 0] < a + w:
+                w = min(w, max(panels[q, 2], panels[q, 0] - a))
+        # Even panels up to the stop where the rest of the way asks for no more than this width.
+        n = math.ceil((stop - a) / w * (1 - 1e-9))
+        end = stop if n <= 1 else a + w
+        if not end > a:  # the scale is below the spacing of doubles: nothing can be resolved there
+            end = min(stop, a + abs(a) * 4.5e-16 + 1e-300)
+        out.append(end)
+        a = end
+    return np.array(out)
+
+
+def lay_out(low: float, high: float, breaks: Floats, panels: Floats) -> tuple[Floats, np.ndarray]:
+    """Edges, and which of them are hard; breaks below `low` are dropped, the lowest edge may be one."""
+    breaks = np.unique(breaks[(breaks >= low) & (breaks <= high)])
+    edges = _greedy_edges(low, high, breaks, panels)
+    return edges, np.isin(edges, breaks)
+
+
+def resolved(
+    edges: Floats, hard: np.ndarray, density: Callable[[Floats], Floats]
+) -> tuple[Floats, np.ndarray, Floats]:
+    """Edges halved until the panels hold every density; `density` maps nodes to (curves, nodes) values.
+
+    Returns edges, hard flags and values (curves, P N).
+    """
+    values = density(nodes_of(edges))
+    curves = len(values)
+    for _ in range(_MAX_HALVINGS):
+        bad = _unresolved(edges, values)
+        if not bad.any():
+            break
+        where = np.flatnonzero(bad) + 1
+        middle = 0.5 * (edges[where - 1] + edges[where])
+        edges, hard = np.insert(edges, where, middle), np.insert(hard, where, False)
+        fresh = np.repeat(bad, 1 + bad)
+        old, values = values.reshape(curves, -1, N), np.empty((curves, len(fresh), N))
+        values[:, ~fresh] = old[:, ~bad]
+        at = nodes_of(edges).reshape(-1, N)[fresh].ravel()
+        values[:, fresh] = density(at).reshape(curves, -1, N)
+        values = values.reshape(curves, -1)
+    return edges, hard, values
+
+
+@njit(cache=True, error_model="numpy")
+def _unresolved(edges: Floats, values: Floats) -> np.ndarray:
+    """Panels whose last coefficients say that 16 nodes are too few, shape (P,)."""
+    P = len(edges) - 1
+    out = np.zeros(P, dtype=np.bool_)
+    span = edges[P] - edges[0]
+    for p in range(P):
+        half = 0.5 * (edges[p + 1] - edges[p])
+        if half < 1e-14 * span:
+            continue
+        for c in range(len(values)):
+            last = 0.0
+            before = 0.0
+            largest = 0.0
+            for i in range(N):
+                v = values[c, p * N + i]
+                last += COEFFICIENTS[N - 1, i] * v
+                before += COEFFICIENTS[N - 2, i] * v
+                largest = max(largest, v)
+            tail = abs(last) + abs(before)
+            if tail * half * half > _PANEL_TOLERANCE * span and tail > 1e-13 * largest:
+                out[p] = True
+    return out
+
+
+@njit(cache=True, error_model="numpy")
+def merged(x: Distribution) -> Distribution:
+    """The same distribution on as few panels as hold it; `error` grows by what that leaves out.
+
+    From the left, each panel is the widest tried whose last coefficients are negligible and whose 16 nodes
+    find the mass that the finer panels have there, so that no narrow peak slips between nodes.
+    """
+    P = len(x.edges) - 1
+    span = x.edges[P] - x.edges[0]
+    values = np.empty(N)
+    edges = [x.edges[0]]
+    flags = [x.hard[0]]
+    p = 0
+    while p < P:
+        a = edges[-1]
+        stop = P
+        for q in range(p + 1, P):
+            if x.hard[q]:
+                stop = q
+                break
+        w = min(4.0 * (x.edges[p + 1] - a), x.edges[stop] - a)
+        while True:
+            end = a + w
+            if w <= (x.edges[p + 1] - a) * (1 + 1e-9):
+                end = x.edges[p + 1]
+                break
+            if x.edges[stop] - end < 0.1 * w:
+                end = x.edges[stop]
+            if _one_panel_holds(x, p, a, end, values, _PANEL_TOLERANCE * span):
+                break
+            w *= 0.8
+        while p < P and x.edges[p + 1] <= end:
+            p += 1
+        edges.append(end)
+        flags.append(x.hard[p] if end == x.edges[p] else False)
+    if len(edges) > 0.85 * (P + 1):
+        return x
+    new_edges = np.array(edges)
+    out = np.empty((len(edges) - 1) * N)
+    q = 0
+    for r in range(len(edges) - 1):
+        half = 0.5 * (new_edges[r + 1] - new_edges[r])
+        for i in range(N):
+            at = new_edges[r] + half * (1.0 + _T[i])
+            while q < P - 1 and x.edges[q + 1] <= at:
+                q += 1
+            out[r * N + i] = _on_panel(x, q, at)
+    return fit(new_edges, np.array(flags), out, x.atom_at, x.atom_mass, x.spread, x.error)
+
+
+@njit(cache=True, error_model="numpy")
+def _on_panel(x: Distribution, p: int, at: float) -> float:
+    """Density at a point of panel p."""
+    t = (at - x.edges[p]) / (x.edges[p + 1] - x.edges[p]) * 2.0 - 1.0
+    return max(chebyshev(x.density, p, N - 1, t), 0.0)
+
+
+@njit(cache=True, error_model="numpy")
+def _one_panel_holds(x: Distribution, p: int, a: float, b: float, values: Floats, tolerance: float) -> bool:
+    """Whether one panel from a (in panel p of X) to b carries the density."""
+    half = 0.5 * (b - a)
+    mass = 0.0
+    q = p
+    P = len(x.edges) - 1
+    for i in range(N):
+        at = a + half * (1.0 + _T[i])
+        while q < P - 1 and x.edges[q + 1] <= at:
+            q += 1
+        values[i] = _on_panel(x, q, at)
+        mass += _W[i] * half * values[i]
+    last = 0.0
+    before = 0.0
+    for i in range(N):
+        last += COEFFICIENTS[N - 1, i] * values[i]
+        before += COEFFICIENTS[N - 2, i] * values[i]
+    if (abs(last) + abs(before)) * half * half > tolerance:
+        return False
+    while q < P - 1 and x.edges[q + 1] < b:
+        q += 1
+    exact = chebyshev(x.cumulative, q, N, (b - x.edges[q]) / (x.edges[q + 1] - x.edges[q]) * 2.0 - 1.0)
+    exact -= chebyshev(x.cumulative, p, N, (a - x.edges[p]) / (x.edges[p + 1] - x.edges[p]) * 2.0 - 1.0)
+    # Cumulative values carry the atoms of their panel's left edge; hard edges are never crossed.
+    return abs(mass - exact) * (x.edges[P] - x.edges[0]) <= tolerance + 8.0 * _EPS * (x.edges[P] - x.edges[0])

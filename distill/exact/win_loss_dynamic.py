@@ -48,7 +48,8 @@ def price_dynamic(tree: BeliefTree, query: Query) -> Priced:
     mean = low + width * (a / (a + b))
     # Values are kept relative to the best mean; the rounding of what was before stays.
     centre = float(mean.max())
-    rounding = 4 * _EPS * float(np.max(np.abs(flat.offset) + np.abs(flat.gain * flat.low) + width))
+    size = 4 * np.abs(flat.offset) + 4 * np.abs(flat.gain * flat.low) + width
+    rounding = 0.5 * _EPS * float(np.max(size))
     low = low - centre
     members = [np.flatnonzero(flat.action == x) for x in range(len(tree.action_nodes))]
     tables = [_Action(a[i], b[i], low[i], width[i]) for i in members]
@@ -71,7 +72,7 @@ class _Action:
         self.leaves = a, b, low, width
         mean = low + width * (a / (a + b))
         best = int(np.argmax(mean))
-        self.value, self.error = float(mean[best]), 2 * _EPS * float(abs(mean[best]))
+        self.value, self.error = float(mean[best]), _EPS * float(abs(mean[best]))
         if len(a) == 1:
             return
         panels = cut_panels(a, b, low, width)
@@ -81,8 +82,8 @@ class _Action:
         inside, edge, misfit = best_of_rest(below, above, panels[1], panels[2])
         gain = expected_gain(below, above, panels[1], panels[2], best)
         self.tables = (*panels, inside, edge)
-        # A relative error of a distribution's total moves every integral over it by as much.
-        self.table_error = misfit + (float(defect.sum()) + 4 * _EPS) * np.abs(edge[:, 0])
+        # Dividing by the total takes out most of what it was off by; half of that is allowed for.
+        self.table_error = misfit + (0.5 * float(defect.sum()) + _EPS) * np.abs(edge[:, 0])
         self.value += gain
         self.error += float(self.table_error[best]) if gain > 0 else 0.0
 

@@ -261,8 +261,8 @@ def _stretch(a: float, b: float, table_error: float, race: Race) -> _Stretch:
         others += v[r] * tail[r]
     lone = others < size
     weight = others if lone else size
-    sure = table_error + weight * (2.0 * abs(total - 1.0) + 8.0 * _EPS)
-    sure += 2.0 * _EPS * (abs(race.low - race.rival) + race.width)
+    sure = table_error + weight * (abs(total - 1.0) + 2.0 * _EPS)
+    sure += 0.5 * _EPS * (abs(race.low - race.rival) + race.width)
     n = a + b
     return _Stretch(p, q, v, tail if lone else g, lone, sure, a / n, math.sqrt(a * b / (n + 1.0)) / n, n)
 

@@ -5,6 +5,9 @@ panels that every leaf's density fits: on each, density and distribution functio
 15 through 16 Gauss-Legendre nodes, to about 1e-13. Where a density is singular (an exponent below 12 that
 is no whole number) the panels halve towards that end, and the last one takes the tail's power series.
 
+Below a floor the best of any action's leaves but one lies with odds of e^-46 only, so no panels are laid
+there: what is below matters by its mass alone.
+
 A node is kept as (anchor, offset): offsets from the nearest end of a support are exact, however far from 0
 the axis lies, so a density that blows up there keeps its digits.
 """
@@ -27,6 +30,7 @@ __all__ = [
     "cut_panels",
     "distribution_functions",
     "expected_gain",
+    "floor_of",
     "is_singular",
 ]
 
@@ -39,6 +43,7 @@ _FROM_RIGHT = np.ascontiguousarray(_FROM_LEFT[::-1, ::-1])
 _HIGHEST = np.array([(k + 0.5) * W * np.polynomial.legendre.Legendre.basis(k)(X) for k in range(N - 4, N)])
 
 _SMOOTH_FROM = 12.0  # from this exponent on a density starts so flat that 16 nodes see no singularity
+_NEVER = 46.0  # odds of exp(-this), 1e-20, count as none
 _NEGLIGIBLE = 40.0  # a density is left alone where it is below exp(-this) of its peak
 _MAX_PANELS = 100_000
 
@@ -91,23 +96,51 @@ def _fits(a: float, b: float, p0: float, q0: float, p1: float, q1: float) -> boo
 
 
 @compiled
-def cut_panels(a: Floats, b: Floats, low: Floats, width: Floats) -> tuple[Floats, Floats, Floats]:
+def floor_of(a: Floats, b: Floats, low: Floats, width: Floats) -> float:
+    """A value that the best leaf exceeds for sure (odds 1 - 1e-20), whichever one leaf is left out.
+
+    P(Y_j < y) <= exp(-n KL(mu_j || p)) below the mean (Chernoff), so the sum of these exponents over all
+    leaves but the largest must reach 46; or two supports begin above. Shape (L,) each, L >= 2.
+    """
+    order = np.sort(low)
+    sure, top = order[-2], np.max(low + width)
+    for _ in range(30):
+        y = 0.5 * (sure + top)
+        total, largest = 0.0, 0.0
+        for j in range(len(a)):
+            p = (y - low[j]) / width[j]
+            if p * (a[j] + b[j]) < a[j]:
+                exponent = beta_divergence(a[j], b[j], p, 1.0 - p) if p > 0.0 else math.inf
+                total += min(exponent, _NEVER)
+                largest = max(largest, min(exponent, _NEVER))
+        if total - largest >= _NEVER:
+            sure = y
+        else:
+            top = y
+    return sure
+
+
+@compiled
+def cut_panels(
+    a: Floats, b: Floats, low: Floats, width: Floats, floor: float
+) -> tuple[Floats, Floats, Floats]:
     """Panels (anchor, left, right) of an action's axis, ascending: panel = anchor + [left, right].
 
     a, b : exponents of the leaves; low, width : Y_j = low_j + width_j p_j. All of shape (L,).
-    Covers every support. Returns arrays of shape (P,).
+    Covers every support above the floor. Returns arrays of shape (P,); P = 0 where too many were needed.
     """
     n_leaves = len(a)
+    top = np.max(low + width)
     ends = np.empty(2 * n_leaves)
     count = 0
     for j in range(n_leaves):
-        if a[j] < _SMOOTH_FROM:
+        if a[j] < _SMOOTH_FROM and low[j] > floor:
             ends[count] = low[j]
             count += 1
-        if b[j] < _SMOOTH_FROM:
+        if b[j] < _SMOOTH_FROM and low[j] + width[j] > floor:
             ends[count] = low[j] + width[j]
             count += 1
-    edges = np.append(ends[:count], np.array([np.min(low), np.max(low + width)]))
+    edges = np.append(ends[:count], np.array([floor, top]))
     edges = np.unique(edges)
     anchor, left, right = np.empty(_MAX_PANELS), np.empty(_MAX_PANELS), np.empty(_MAX_PANELS)
     stack = np.empty((2, 200))
@@ -144,12 +177,20 @@ def cut_panels(a: Floats, b: Floats, low: Floats, width: Floats) -> tuple[Floats
 
 @compiled
 def distribution_functions(
-    a: Floats, b: Floats, low: Floats, width: Floats, anchor: Floats, left: Floats, right: Floats
+    a: Floats,
+    b: Floats,
+    low: Floats,
+    width: Floats,
+    start: Floats,
+    anchor: Floats,
+    left: Floats,
+    right: Floats,
 ) -> tuple[Floats, Floats, Floats]:
     """F_j and 1 - F_j at the nodes of every panel, shape (L, P, N), and how far F_j's total was off 1.
 
-    F is summed up from the left and 1 - F from the right, so both keep their small values; both are then
-    divided by their total, whose distance from 1 tells how well the panels fit the density.
+    start : F_j at the floor, (L,). F is summed up from the left and 1 - F from the right, so both keep
+    their small values; both are then divided by their total, whose distance from 1 tells how well the
+    panels fit the density.
     """
     n_leaves, panels = len(a), len(anchor)
     below, above = np.zeros((n_leaves, panels, N)), np.zeros((n_leaves, panels, N))
@@ -194,9 +235,9 @@ def distribution_functions(
                     up += _FROM_LEFT[r, c] * density[c]
                     down += _FROM_RIGHT[r, c] * density[c]
                 below[j, s, r], above[j, s, r] = max(up, 0.0), max(down, 0.0)
-        total = np.sum(mass)
+        total = start[j] + np.sum(mass)
         defect[j] = abs(total - 1.0)
-        passed = 0.0
+        passed = start[j]
         for s in range(panels):
             for r in range(N):
                 below[j, s, r] = (passed + below[j, s, r]) / total
@@ -254,9 +295,29 @@ def best_of_rest(below: Floats, above: Floats, left: Floats, right: Floats) -> t
 
 
 @compiled
-def expected_gain(below: Floats, above: Floats, left: Floats, right: Floats, leaf: int) -> float:
+def expected_gain(
+    a: Floats,
+    b: Floats,
+    low: Floats,
+    width: Floats,
+    start: Floats,
+    below: Floats,
+    above: Floats,
+    anchor: Floats,
+    left: Floats,
+    right: Floats,
+    leaf: int,
+) -> float:
     """E (R - Y)+ for Y = Y_leaf, R the best other leaf: integral of F_leaf P(R > t), a positive sum."""
     gain = 0.0
+    p = ((anchor[0] + left[0]) - low[leaf]) / width[leaf]
+    if p > 0.0 and start[leaf] > 0.0:  # below the floor R exceeds t for sure: E (floor - Y)+
+        n = a[leaf] + b[leaf]
+        q = 1.0 - p
+        peak = 0.0
+        if q > 0.0:
+            peak = math.exp(beta_log_constant(a[leaf], b[leaf]) - beta_divergence(a[leaf], b[leaf], p, q)) / n
+        gain += width[leaf] * max((p - a[leaf] / n) * start[leaf] + peak, 0.0)
     for s in range(len(left)):
         for r in range(N):
             product, rest = 1.0, 0.0

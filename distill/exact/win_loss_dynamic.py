@@ -11,9 +11,16 @@ from __future__ import annotations
 import math
 
 import numpy as np
+from scipy.special import betainc
 
 from distill.errors import RefusedError
-from distill.exact.beta_panels import best_of_rest, cut_panels, distribution_functions, expected_gain
+from distill.exact.beta_panels import (
+    best_of_rest,
+    cut_panels,
+    distribution_functions,
+    expected_gain,
+    floor_of,
+)
 from distill.exact.win_loss_static import price_crossings
 from distill.exact.win_loss_walk import Race, endless_gain, reachable_gap, walk
 from distill.numerics import compiled
@@ -75,12 +82,14 @@ class _Action:
         self.value, self.error = float(mean[best]), _EPS * float(abs(mean[best]))
         if len(a) == 1:
             return
-        panels = cut_panels(a, b, low, width)
+        floor = floor_of(a, b, low, width)
+        self.start = np.asarray(betainc(a, b, np.clip((floor - low) / width, 0.0, 1.0)))
+        panels = cut_panels(a, b, low, width, floor)
         if len(panels[0]) == 0 or len(a) * len(panels[0]) * 16 > _MAX_NUMBERS:
             raise RefusedError(f"win/loss, dynamic: {len(a)} leaves of one action need too many panels")
-        below, above, defect = distribution_functions(a, b, low, width, *panels)
+        below, above, defect = distribution_functions(a, b, low, width, self.start, *panels)
         inside, edge, misfit = best_of_rest(below, above, panels[1], panels[2])
-        gain = expected_gain(below, above, panels[1], panels[2], best)
+        gain = expected_gain(a, b, low, width, self.start, below, above, *panels, best)
         self.tables = (*panels, inside, edge)
         # Dividing by the total takes out most of what it was off by; half of that is allowed for.
         self.table_error = misfit + (0.5 * float(defect.sum()) + _EPS) * np.abs(edge[:, 0])
@@ -107,6 +116,7 @@ class _Action:
             rival,
             slack,
             self.table_error,
+            self.start,
             *self.tables,
             query.rate,
             last,
@@ -124,6 +134,7 @@ def _price_leaves(
     rival: float,
     slack: float,
     table_error: Floats,
+    start: Floats,
     anchor: Floats,
     left: Floats,
     right: Floats,
@@ -141,6 +152,11 @@ def _price_leaves(
     for i in range(n_leaves):
         race = Race(low[i], width[i], rival, anchor, left, right, inside[i], edge[i])
         off = slack + table_error[i]
+        # G has slope 1 at most, so h moves by no more than the leaf's mean does.
+        n = a[i] + b[i]
+        reach = width[i] * (last / (n + last)) * ((a[i] if value >= rival else b[i]) / n)
+        if abs(value - rival) > reach * _SLACK + off:
+            continue
         worst, best, crossing = reachable_gap(race)
         if worst >= 0.0 or best <= 0.0:  # no outcome changes the choice
             if min(abs(worst), abs(best)) <= off:
@@ -148,7 +164,7 @@ def _price_leaves(
             continue
         limit = math.inf
         if rate or last > walked:
-            limit = endless_gain(a[i], b[i], crossing, value >= rival, race) * _SLACK + off
+            limit = endless_gain(a[i], b[i], crossing, value >= rival, start[i], race) * _SLACK + off
         first = 1 if rate else walked
         gain, k, seen, err = walk(a[i], b[i], first, walked, limit, off, race)
         if rate:

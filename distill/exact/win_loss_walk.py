@@ -41,6 +41,7 @@ class Race(NamedTuple):
 
     low, width : the leaf is worth low + width p. rival : value of the best other action.
     anchor, left, right : panels, (P,). inside, edge : T on them, (P, N) and (P + 1,), see `beta_panels`.
+    They begin at the floor: below it the others are better for sure, so T has slope -1 and G is flat.
     """
 
     low: float
@@ -82,48 +83,58 @@ def _edge_of_window(a: float, b: float, start: float, stop: float) -> float:
 
 
 @compiled
+def _floor(race: Race) -> tuple[float, float]:
+    """(p, G) at the floor; p <= 0 where the leaf's support begins above it."""
+    y = race.anchor[0] + race.left[0]
+    return (y - race.low) / race.width, (y - race.rival) + race.edge[0]
+
+
+@compiled
+def _overlap(race: Race, s: int, first: float, last: float) -> tuple[float, float]:
+    """Offsets from the anchor of panel s between which first <= p <= last; empty where they do not ascend."""
+    from_low, to_high = race.anchor[s] - race.low, (race.low + race.width) - race.anchor[s]
+    d0, d1 = race.left[s], race.right[s]
+    d0 = max(d0, race.width * first - from_low if first > 0.0 else -from_low)
+    d1 = min(d1, race.width * last - from_low if last < 1.0 else to_high)
+    return d0, d1
+
+
+@compiled
 def _lay_nodes(
-    a: float,
-    b: float,
-    p_min: float,
-    p_max: float,
-    race: Race,
+    a: float, b: float, p_min: float, p_max: float, race: Race
 ) -> tuple[Floats, Floats, Floats, Floats, Floats]:
     """Nodes p and q = 1 - p, their shares v of the density of Beta(a, b), G and T; p_min <= p <= p_max.
 
-    The sum of v G is E[G; p_min <= p <= p_max]. A last piece at a singular end is one node, at the mean of
-    what lies in it.
+    The sum of v G is E[G; p_min <= p <= p_max], what lies below the floor left out. A last piece at a
+    singular end is one node, at the mean of what lies in it.
     """
-    low, width, anchor, left, right, inside = (
-        race.low, race.width, race.anchor, race.left, race.right, race.inside
-    )  # fmt: skip
     n = a + b
     mean = a / n
     spread = math.sqrt(mean * (b / n) / (n + 1.0))
+    p_min = min(max(p_min, _floor(race)[0]), p_max)
     peak = min(max(mean, p_min), p_max)
     first = _edge_of_window(a, b, peak, p_min)
     last = _edge_of_window(a, b, peak, p_max)
     piece = _SUB * spread
     if peak != mean and 0.0 < peak < 1.0:
         piece = min(piece, 16.0 / abs(a / peak - b / (1.0 - peak)))
+    piece *= race.width
     log_c = beta_log_constant(a, b)
     room = 0
-    for s in range(len(anchor)):
-        d0 = max(left[s], (low - anchor[s]) + width * first)
-        d1 = min(right[s], (low - anchor[s]) + width * last)
-        if d1 > d0:
-            room += max(1, math.ceil((d1 - d0) / (width * piece)))
+    for s in range(len(race.anchor)):
+        d0, d1 = _overlap(race, s, first, last)
+        room += max(1, math.ceil((d1 - d0) / piece)) if d1 > d0 else 0
     p, q, v = np.empty(room * N), np.empty(room * N), np.empty(room * N)
     g, tail = np.empty(room * N), np.empty(room * N)
     count = 0
-    for s in range(len(anchor)):
-        from_low, to_high = anchor[s] - low, (low + width) - anchor[s]
-        d0 = max(left[s], width * first - from_low)
-        d1 = min(right[s], width * last - from_low) if last < 1.0 else min(right[s], to_high)
+    for s in range(len(race.anchor)):
+        d0, d1 = _overlap(race, s, first, last)
         if d1 <= d0:
             continue
-        half, middle = 0.5 * (right[s] - left[s]), 0.5 * (left[s] + right[s])
-        p1, q0 = (from_low + d1) / width, (to_high - d0) / width
+        inside = race.inside[s]
+        from_low, to_high = race.anchor[s] - race.low, (race.low + race.width) - race.anchor[s]
+        half, middle = 0.5 * (race.right[s] - race.left[s]), 0.5 * (race.left[s] + race.right[s])
+        p1, q0 = (from_low + d1) / race.width, (to_high - d0) / race.width
         at_low = from_low + d0 == 0.0 and a < 1.0 and is_singular(a) and p1 * n < 1.0
         at_high = to_high - d1 == 0.0 and b < 1.0 and is_singular(b) and q0 * n < 1.0
         if at_low or at_high:
@@ -131,29 +142,29 @@ def _lay_nodes(
                 p[count] = p1 * a / (a + 1.0)
                 q[count] = 1.0 - p[count]
                 v[count] = lower_tail(a, b, p1)
-                d = width * p[count] - from_low
+                d = race.width * p[count] - from_low
             else:
                 q[count] = q0 * b / (b + 1.0)
                 p[count] = 1.0 - q[count]
                 v[count] = lower_tail(b, a, q0)
-                d = to_high - width * q[count]
-            tail[count] = _through(inside[s], (d - middle) / half)
-            g[count] = ((anchor[s] - race.rival) + d) + tail[count]
+                d = to_high - race.width * q[count]
+            tail[count] = _through(inside, (d - middle) / half)
+            g[count] = ((race.anchor[s] - race.rival) + d) + tail[count]
             count += 1
             continue
-        pieces = max(1, math.ceil((d1 - d0) / (width * piece)))
-        whole = pieces == 1 and d0 == left[s] and d1 == right[s]
+        pieces = max(1, math.ceil((d1 - d0) / piece))
+        whole = pieces == 1 and d0 == race.left[s] and d1 == race.right[s]
         step = (d1 - d0) / pieces
         for m in range(pieces):
             for r in range(N):
                 d = d0 + step * (m + 0.5 * (1.0 + X[r]))
-                p[count] = (from_low + d) / width
-                q[count] = (to_high - d) / width
+                p[count] = (from_low + d) / race.width
+                q[count] = (to_high - d) / race.width
                 if p[count] <= 0.0 or q[count] <= 0.0:
                     continue
-                v[count] = 0.5 * step / width * W[r] * beta_density(a, b, log_c, p[count], q[count])
-                tail[count] = inside[s, r] if whole else _through(inside[s], (d - middle) / half)
-                g[count] = ((anchor[s] - race.rival) + d) + tail[count]
+                v[count] = 0.5 * step / race.width * W[r] * beta_density(a, b, log_c, p[count], q[count])
+                tail[count] = inside[r] if whole else _through(inside, (d - middle) / half)
+                g[count] = ((race.anchor[s] - race.rival) + d) + tail[count]
                 count += 1
     return p[:count], q[:count], v[:count], g[:count], tail[:count]
 
@@ -193,7 +204,7 @@ def _gap_at(
         tail = edge[s + 1]
         d = right[s] if s < len(anchor) - 1 else d
     elif d <= left[s]:
-        tail = edge[s]
+        tail, d = edge[s], left[s]
     else:
         half = 0.5 * (right[s] - left[s])
         tail = _through(inside[s], (d - left[s]) / half - 1.0)
@@ -217,34 +228,31 @@ def reachable_gap(race: Race) -> tuple[float, float, float]:
 
 
 @compiled
-def endless_gain(
-    a: float,
-    b: float,
-    crossing: float,
-    above: bool,
-    race: Race,
-) -> float:
+def endless_gain(a: float, b: float, crossing: float, above: bool, under_floor: float, race: Race) -> float:
     """Worth of endless trials: E[G(p)+] where the action is behind, E[G(p)-] where it is best.
 
-    crossing : where G changes sign. above : the action is best now.
+    crossing : where G changes sign. above : the action is best now. under_floor : mass below the floor.
     """
     p_min, p_max = (0.0, crossing) if above else (crossing, 1.0)
     _, _, v, g, _ = _lay_nodes(a, b, p_min, p_max, race)
-    return abs(_dot(v, g))
+    flat = max(-_floor(race)[1], 0.0) * under_floor if above else 0.0
+    return abs(_dot(v, g)) + flat
 
 
 class _Stretch(NamedTuple):
-    """Nodes for a part of the walk: h = base + sum of v f.
+    """Nodes for a part of the walk: h = base + slope x mean win rate + sum of v f, off by `sure` at most.
 
-    lone : f is T and base the leaf's mean less the rival, exact where the other leaves hardly matter;
-    otherwise f is G and base 0. sure : error of h.
+    One of three forms. f = T, base + slope x mean rate the leaf's mean less the rival: exact where the
+    other leaves hardly matter. f = G alone. f = G less its value at the floor, the base: where the leaf's
+    mass reaches below the floor, where G is flat.
     """
 
     p: Floats
     q: Floats
     v: Floats
     f: Floats
-    lone: bool
+    base: float
+    slope: float
     sure: float
     mean: float
     spread: float
@@ -253,25 +261,31 @@ class _Stretch(NamedTuple):
 
 @compiled
 def _stretch(a: float, b: float, table_error: float, race: Race) -> _Stretch:
+    n = a + b
+    mean, spread = a / n, math.sqrt(a * b / (n + 1.0)) / n
+    floor, flat = _floor(race)
     p, q, v, g, tail = _lay_nodes(a, b, 0.0, 1.0, race)
+    if floor > 0.0 and (floor >= mean or beta_divergence(a, b, floor, 1.0 - floor) < _WINDOW):
+        g -= flat
+        size = _dot(v, g)
+        sure = table_error + 4.0 * _EPS * size + 0.5 * _EPS * (abs(flat) + race.width)
+        return _Stretch(p, q, v, g, flat, 0.0, sure, mean, spread, n)
     total, size, others = 0.0, 0.0, 0.0
     for r in range(len(v)):
         total += v[r]
         size += v[r] * abs(g[r])
         others += v[r] * tail[r]
-    lone = others < size
-    weight = others if lone else size
-    sure = table_error + weight * (abs(total - 1.0) + 2.0 * _EPS)
+    sure = table_error + min(others, size) * (abs(total - 1.0) + 2.0 * _EPS)
     sure += 0.5 * _EPS * (abs(race.low - race.rival) + race.width)
-    n = a + b
-    return _Stretch(p, q, v, tail if lone else g, lone, sure, a / n, math.sqrt(a * b / (n + 1.0)) / n, n)
+    if others < size:
+        return _Stretch(p, q, v, tail, race.low - race.rival, race.width, sure, mean, spread, n)
+    return _Stretch(p, q, v, g, 0.0, 0.0, sure, mean, spread, n)
 
 
 @compiled
-def _worth(now: _Stretch, share: float, race: Race) -> float:
-    """h, where the leaf's mean win rate is `share`."""
-    base = (race.low - race.rival) + race.width * share if now.lone else 0.0
-    return base + _dot(now.v, now.f)
+def _worth(now: _Stretch, rate: float) -> float:
+    """h, where the leaf's mean win rate is `rate`."""
+    return (now.base + now.slope * rate) + _dot(now.v, now.f)
 
 
 @compiled
@@ -291,7 +305,7 @@ def walk(
     """
     n = a + b
     now = _stretch(a, b, table_error, race)
-    h = _worth(now, a / n, race)
+    h = _worth(now, a / n)
     above = h >= 0.0
     wins, t, stretch = 0, 0, 0
     prob, power = 1.0, 0
@@ -329,7 +343,7 @@ def walk(
             wins += 1
         t += 1
         stretch += 1
-        h = _worth(now, (a + wins) / (n + t), race)
+        h = _worth(now, (a + wins) / (n + t))
         turned = turned or above != (h >= 0.0)
         above = h >= 0.0
         share = wins / t if above else (t - wins) / t
@@ -368,7 +382,7 @@ def _first_turn(
         trial = min(known + step, last) if found > last else (known + found) // 2
         wins, losses = (0, trial) if above else (trial, 0)
         then = _stretch(a + wins, b + losses, 0.0, race)
-        if (_worth(then, (a + wins) / (a + b + trial), race) >= 0.0) != above:
+        if (_worth(then, (a + wins) / (a + b + trial)) >= 0.0) != above:
             found = trial
         else:
             known, step = trial, 2 * step

@@ -1,17 +1,31 @@
 """The features as one ONNX graph over the Gaussian leaf table; floor 4.
 
 The trainer runs this graph to make its matrix and a scorer file contains the same nodes, so there is no
-second implementation to drift apart. One call covers one tree. Per action a a table of
+second implementation to drift apart. One call covers one tree, so the number of its nodes decides its time.
 
-    F_a(x) = product over its leaves of Phi((x - m_i) / s_i)        m = gain mean + offset, s = gain sd
+*Table.* Leaf i counts m_i + s_i Z at the root, m = gain mean + offset, s = |gain| sd. On the midpoints of
+equal cells between the action's largest m - 7 s and its largest m + 3.5 s (equal cells converge fastest for
+functions that level off on both sides: Goodwin 1949; Trefethen and Weideman 2014),
 
-on Gauss-Legendre points between the largest m - c s and the largest m + c s gives the action's expected
-maximum V_a, and F_a / Phi_i, the leaves' leave-one-out maxima and influences w_i = d V_a / d m_i.
-The first-order rate takes V_a as linear in the leaf's posterior mean:
+    F = product over the action's leaves of Phi((x - m_j) / s_j),    R_i = F / Phi((x - m_i) / s_i)
 
-    max over k of  w s_k f(-gap / (w s_k)) / k,   f(z) = z Phi(z) + phi(z),   s_k^2 = v^2 / (v + n / k)
+give the action's expected maximum V, and mean mu_i and variance r_i^2 of the maximum of leaf i's siblings.
 
-with gap the distance of V_a to the best other action (the idea of KG(*), Frazier and Powell 2010).
+*Threshold.* With the siblings' maximum taken as normal, the action is worth, if leaf i's mean moves by t,
+
+    G(t) = mu + theta f((m + t - mu) / theta),   f(p) = p Phi(p) + phi(p),   theta^2 = s^2 + r^2
+
+(Clark 1961 for two normals). It meets the rival's value C, the best other action's, at
+
+    t0 = C - m - theta q(y),   y = (C - mu) / theta,   q(y) = y - f^{-1}(y)
+
+Nothing changes the choice where y <= 0: the siblings alone beat the rival.
+
+*Start value.* k rollouts move the mean by s_k Z, s_k^2 = v^2 / (v + n / k). The start of the learner is
+
+    max over k of  s_k f(-|t0| / s_k) g(y) / k,   g(y) = 1 - exp(-1.97 y), for the slope of G at t0
+
+which is right in its exponent however small it is; the learner sees what is left, a factor near 1.
 Differences are taken in double precision; only unit-free numbers are rounded to float32.
 """
 
@@ -27,7 +41,7 @@ import onnxruntime as ort
 from numpy.typing import NDArray
 from onnx import TensorProto, helper
 
-from distill.closed_form import LOSS_A, LOSS_B, LOSS_P, LOSS_Q, PEAK
+from distill.closed_form import PEAK
 from distill.errors import InputError
 from distill.onnx_nodes import IR_VERSION, OPSET, Nodes, typed
 from distill.tree import Floats
@@ -37,37 +51,36 @@ __all__ = ["FEATURE_NAMES", "INPUTS", "FeatureGraph", "FeatureMatrix", "build_gr
 INPUTS: Final = ("mean", "var", "noise_var", "gain", "offset", "action", "cost", "remaining")
 
 FEATURE_NAMES: Final = (
-    "best",  # 1 where the leaf's action is the best one
-    "influence",  # w, d V_a / d m_i
-    "first_z",  # gap / (w s_k)
-    "first_root",  # sqrt(w f(-first_z)), the square root of the first-order rate over the unit
-    "own_loss",  # sqrt((V_a - V_a without the leaf) / s_k)
-    "own_lead",  # (m_i - V_a without the leaf) / s_k
-    "rest_gap",  # (rival - V_a without the leaf) / s_k
-    "leaf_gap",  # (rival - m_i) / s_k
-    "resolved",  # s_k^2 / v, the share of the leaf's variance that k rollouts resolve
+    "threshold",  # |t0| / s_k, at most 40
+    "log_slope",  # log g(y), at least -27.6
+    "step",  # s_k / theta
     "log_batch",  # log k
-    "log_noise",  # log(n / v)
-    "log_budget",  # log(R v / n), R rollouts left
-    "log_spread",  # log of the action's grid width / s_k
+    "lead",  # (V - C) / s_k, cut at +-40; positive where the leaf's action is the best one
 )
 
-_REACH: Final = 4.0  # c: the table spans the largest m - c s to the largest m + c s
+_BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s
+_PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
+_FAR: Final = 1e9  # standard deviations; Phi is 1 there
 _LARGE: Final = 1e300
 _TINY: Final = 1e-300
 _Z_LIMIT: Final = 40.0  # exp(-z^2 / 2) is 0 in double precision
+_LEAD_LIMIT: Final = 40.0
 _RATIO_LIMIT: Final = 1e18  # of noise to variance, either way
-_FAR: Final = 1e9  # standard deviations; Phi is 1 there
-_FEATURE_LIMIT: Final = 40.0
-_PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
+_SLOPE_FLOOR: Final = 1e-12
+
+# q(y) = y - f^{-1}(y) as a v / sqrt(v + c), v = -log(1 - exp(-b y)); fitted by least squares to the exact
+# inverse, absolute error at most 0.006 for f^{-1}(y) from -8 up. (a, b, c).
+_Q_FIT: Final = (np.sqrt(1.94647), 1.96789, 4.0114)
+# f(-z) exp(z^2 / 2) as 1 / (a + z (b + c z)); within 5 % for every z from 0 to 30, exact at 0.
+_LOSS_FIT: Final = tuple(np.sqrt(2 * np.pi) * np.array([1.0, 0.93642524, 0.92409791]))
 
 
 class FeatureMatrix(NamedTuple):
     """What the graph says of each row.
 
     x : (n, d) float32, unit-free, columns FEATURE_NAMES. unit : (n,), u a rollout, the leaf's own
-    s_k / k at the first-order best batch k. first_order : (n,), u a rollout, the first-order rate.
-    batch : (n,), k.
+    s_k / k at the start value's best batch k, a real number. first_order : (n,), u a rollout, the start
+    value. batch : (n,), k rounded.
     """
 
     x: NDArray[np.float32]
@@ -76,106 +89,124 @@ class FeatureMatrix(NamedTuple):
     batch: NDArray[np.int64]
 
 
-def build_graph(*, points: int = 12) -> onnx.ModelProto:
+def build_graph(*, points: int = 16) -> onnx.ModelProto:
     """The feature graph of the Gaussian leaf table, one tree a call.
 
     Inputs, shape (n,) unless said: mean, var, noise_var, gain, offset, cost (double), action (int64,
     0 to n - 1), remaining (double, shape (1,)). Outputs as in FeatureMatrix, named features, unit,
-    first_order, batch. points : Gauss-Legendre points of the table.
+    first_order, batch. points : cells of the table.
     """
     g = Nodes("f")
-    one, tiny, column = g.double(1.0), g.double(_TINY), g.whole(1)
-    # Leaves as the root sees them, means relative to the largest.
+    # Leaves as the root sees them. From here on most values are rows, shape (1, n).
     m = g("Add", g("Mul", "gain", "mean"), "offset")
-    m = g("Sub", m, g("ReduceMax", m))
-    sd = g("Mul", "gain", g("Sqrt", "var"))
-    row = g("Unsqueeze", "action", column)
+    s = g("Abs", g("Mul", "gain", g("Sqrt", "var")))
+    s_safe = g("Max", s, g.double(_TINY))
+    low, high, joint, rest = _table(g, m, s, s_safe, points)
+    value, others, spread2 = _moments(g, low, high, joint, rest, points)
 
-    # The table: each action's edges, z of each leaf at each point, Phi.
-    m_column = g("Unsqueeze", m, column)
-    reach = g("Mul", g("Unsqueeze", sd, column), g.double([[-_REACH, _REACH]]))
-    edges = g("Add", m_column, reach)
-    edges = g("ScatterND", g("Min", edges, g.double(-_LARGE)), row, edges, reduction="max")
-    edges = g("Gather", edges, "action")
-    scaled = g("Div", g("Sub", edges, m_column), g("Unsqueeze", g("Max", sd, tiny), column))
-    scaled = g("Cast", g("Min", scaled, g.double(_FAR)), to=TensorProto.FLOAT)
-    abscissa, share = np.polynomial.legendre.leggauss(points)
-    t, weight = (abscissa + 1) / 2, g.single(share[:, None] / 2)
-    z = g("MatMul", scaled, g.single(np.stack([1 - t, t]) / np.sqrt(2)))
+    # The best other action.
+    best = g("Equal", "action", g("Gather", "action", g("Reshape", g("ArgMax", value, axis=1), g.whole(1))))
+    second = g("ReduceMax", g("Where", best, g.double(-_LARGE), value))
+    rival = g("Where", best, second, g("ReduceMax", value))
+
+    # Threshold t0, in units of u.
+    theta = g("Sqrt", g("Add", spread2, g("Mul", s, s)))
+    theta = g("Max", theta, g.double(_TINY))
+    a, b, c = _Q_FIT
+    y = g("Max", g("Div", g("Sub", rival, others), theta), g.double(0.0))
+    slope = g("Sub", g.double(1.0), g("Exp", g("Mul", y, g.double(-b))))
+    log_slope = g("Log", g("Max", slope, g.double(_SLOPE_FLOOR)))
+    q = g("Div", g("Mul", log_slope, theta), g("Sqrt", g("Sub", g.double(c), log_slope)))
+    t0 = g("Abs", g("Add", g("Sub", rival, m), g("Mul", q, g.double(a))), out="t0")
+
+    unit, z, k, k_safe, s_k = _best_batch(g, t0, s, s_safe)
+    at_zero, linear, square = (g.double(x) for x in _LOSS_FIT)
+    bottom = g("Add", g("Mul", g("Add", g("Mul", z, square), linear), z), at_zero)
+    tail = g("Div", g("Exp", g("Mul", g("Mul", z, z), g.double(-0.5))), bottom)
+    start = g("Mul", g("Mul", unit, slope), tail)
+
+    flat = g.whole(-1)
+    g("Reshape", unit, flat, out="unit")
+    g("Reshape", start, flat, out="first_order")
+    rounded = g("Floor", g("Add", k, g.double(0.5)))
+    g("Reshape", g("Cast", rounded, to=TensorProto.INT64), flat, out="batch")
+    lead = g("Div", g("Sub", value, rival), s_k)
+    lead = g("Max", g("Min", lead, g.double(_LEAD_LIMIT)), g.double(-_LEAD_LIMIT))
+    columns = (z, log_slope, g("Div", s_k, theta), g("Log", k_safe), lead)
+    assert len(columns) == len(FEATURE_NAMES)
+    stacked = g("Cast", g("Concat", *columns, axis=0), to=TensorProto.FLOAT)
+    g("Transpose", stacked, perm=[1, 0], out="features")
+    return _model(g)
+
+
+def _table(g: Nodes, m: str, s: str, s_safe: str, points: int) -> tuple[str, str, str, str]:
+    """Ends of each leaf's action table, shape (1, n), and F and R at its points, shape (n, points)."""
+    row = g("Unsqueeze", "action", g.whole(1))
+    ends = g("Add", g("Mul", s, g.double([[-_BELOW], [_ABOVE]])), m)
+    ends = g("Transpose", ends, perm=[1, 0])
+    ends = g("ScatterND", g("Min", ends, g.double(-_LARGE)), row, ends, reduction="max")
+    ends = g("Transpose", g("Gather", ends, "action"), perm=[1, 0])
+    low, high = g.split(ends, 2, axis=0)
+    z = g("Min", g("Div", g("Sub", ends, m), s_safe), g.double(_FAR))
+    z = g("Cast", z, to=TensorProto.FLOAT)
+    t = _midpoints(points)
+    z = g("Gemm", z, g.single(np.stack([1 - t, t]) / np.sqrt(2)), transA=1)
     phi = g("Add", g("Mul", g("Erf", z), g.single(_PHI_SLOPE)), g.single(0.5))
     joint = g("ScatterND", g("Max", phi, g.single(1.0)), row, phi, reduction="mul")
     joint = g("Gather", joint, "action")
-    rest = g("Div", joint, phi)
+    return low, high, joint, g("Div", joint, phi)
 
-    # Expected maximum of the action, its loss without the leaf, and the leaf's influence.
-    flat = g.whole(-1)
 
-    def total(table: str, weights: str) -> str:
-        """Weighted sum of each row, as a double column of shape (n,)."""
-        return g("Cast", g("Reshape", g("MatMul", table, weights), flat), to=TensorProto.DOUBLE)
+def _moments(g: Nodes, low: str, high: str, joint: str, rest: str, points: int) -> tuple[str, str, str]:
+    """V, and mean and variance of the siblings' maximum; shape (1, n).
 
-    low, high = (g("Reshape", edge, flat) for edge in g.split(edges, 2, axis=1))
+    V = high - integral of F. The siblings' maximum X: E[X - low] = integral of 1 - R,
+    E[(X - low)^2] = integral of 2 (x - low) (1 - R).
+    """
+    t, w = _midpoints(points), np.full(points, 1 / points)
+    weights = np.zeros((3, 2 * points))
+    weights[0, :points] = w
+    weights[1, points:] = -w
+    weights[2, points:] = -2 * w * t
+    # Midpoints overstate the second integral by h^2 / 12, from its slope at the lower end.
+    constant = np.array([[0.0], [w.sum()], [2 * w @ t - 1 / (12 * points**2)]])
+    both = g("Concat", joint, rest, axis=1)
+    sums = g("Gemm", g.single(weights), both, g.single(constant), transB=1)
+    below, first, second = g.split(g("Cast", sums, to=TensorProto.DOUBLE), 3, axis=0)
     width = g("Sub", high, low)
-    value = g("Sub", high, g("Mul", width, total(joint, weight)))
-    loss = g("Mul", width, total(g("Sub", rest, joint), weight))
-    mass = g("Gemm", phi, *map(g.single, _steps(points)))
-    influence = total(g("Mul", rest, mass), g.single(np.ones((points, 1))))
+    value = g("Sub", high, g("Mul", width, below), out="value")
+    others = g("Add", low, g("Mul", width, first), out="others")
+    spread2 = g("Max", g("Sub", second, g("Mul", first, first)), g.double(0.0))
+    return value, others, g("Mul", g("Mul", width, width), spread2, out="spread2")
 
-    # The best other action, and the gap to it.
-    best = g("Equal", "action", g("Gather", "action", g("ArgMax", value, keepdims=1)))
-    second = g("ReduceMax", g("Where", best, g.double(-_LARGE), value))
-    rival = g("Where", best, second, g("ReduceMax", value))
-    gap = g("Abs", g("Sub", value, rival))
 
-    # First-order best batch: k v / n = u^2 (a + b / (u^2 + c)), u = gap / (w sd), fitted to within 0.4 %
-    # of the best rate; then between 1 and the rollouts left, which is right as the peak is single.
-    noise = g("Div", "noise_var", g("Max", "var", tiny))
+def _best_batch(g: Nodes, t0: str, s: str, s_safe: str) -> tuple[str, ...]:
+    """The best real batch k for a threshold t0, and what follows from it; shape (1, n).
+
+    s_k f(-t0 / s_k) / k has a single peak, so the best k within 1 and the rollouts left is the peak cut
+    to them. Returns unit, z = t0 / s_k, k, max(k, 1), s_k.
+    """
+    one = g.double(1.0)
+    noise = g("Div", "noise_var", g("Max", "var", g.double(_TINY)))
     noise = g("Max", g("Min", noise, g.double(_RATIO_LIMIT)), g.double(1 / _RATIO_LIMIT))
-    u = g("Div", gap, g("Max", g("Mul", influence, sd), tiny))
+    u = g("Div", t0, s_safe)
     u2 = g("Mul", u, u)
     shape = g("Add", g("Div", g.double(PEAK[1]), g("Add", u2, g.double(PEAK[2]))), g.double(PEAK[0]))
-    k = g("Mul", g("Mul", u2, shape), noise)
-    k = g("Floor", g("Add", g("Min", g("Max", k, one), "remaining"), g.double(0.5)))
-    k_safe = g("Max", k, one)
+    k = g("Min", g("Max", g("Mul", g("Mul", u2, shape), noise), one), "remaining")
     resolved = g("Div", k, g("Add", k, noise))
-    s = g("Mul", sd, g("Sqrt", resolved))
-    s_safe = g("Max", s, tiny)
-    unit = g("Div", s, k_safe, out="unit")
+    s_k = g("Mul", s, g("Sqrt", resolved))
+    s_k_safe = g("Max", s_k, g.double(_TINY))
+    k_safe = g("Max", k, one)
+    z = g("Min", g("Div", t0, s_k_safe), g.double(_Z_LIMIT))
+    return g("Div", s_k, k_safe), z, k, k_safe, s_k_safe
 
-    # f(-z), z = gap / (w s).
-    z1 = g("Min", g("Div", gap, g("Max", g("Mul", influence, s), tiny)), g.double(_Z_LIMIT))
-    z_column = g("Unsqueeze", z1, column)
-    bottom = g("Add", g("Mul", g("Add", z_column, g.double(LOSS_P)), z_column), g.double(LOSS_Q))
-    root = 1 / np.sqrt(2 * np.pi)
-    top_a, top_b = (g.double(np.multiply(c, root)) for c in (LOSS_A, LOSS_B))
-    top = g("Add", g("Mul", z_column, top_b), top_a)
-    tail = g("Reshape", g("MatMul", g("Div", top, bottom), g.double(np.ones((len(LOSS_P), 1)))), flat)
-    f = g("Mul", tail, g("Exp", g("Mul", g("Mul", z1, z1), g.double(-0.5))))
-    ratio = g("Mul", influence, f)
-    g("Mul", unit, ratio, out="first_order")
-    g("Cast", k, to=TensorProto.INT64, out="batch")
 
-    columns = (
-        g("Cast", best, to=TensorProto.DOUBLE),
-        influence,
-        z1,
-        g("Sqrt", ratio),
-        g("Sqrt", g("Div", loss, s_safe)),
-        g("Div", g("Sub", m, g("Sub", value, loss)), s_safe),
-        g("Div", g("Sub", rival, g("Sub", value, loss)), s_safe),
-        g("Div", g("Sub", rival, m), s_safe),
-        resolved,
-        g("Log", k_safe),
-        g("Log", noise),
-        g("Log", g("Div", g("Max", "remaining", one), noise)),
-        g("Log", g("Max", g("Div", width, s_safe), tiny)),
-    )
-    assert len(columns) == len(FEATURE_NAMES)
-    stacked = g("Reshape", g("Concat", *columns, axis=0), g.whole(len(columns), -1))
-    limit = _FEATURE_LIMIT
-    stacked = g("Max", g("Min", stacked, g.double(limit)), g.double(-limit))
-    g("Transpose", g("Cast", stacked, to=TensorProto.FLOAT), perm=[1, 0], out="features")
+def _midpoints(points: int) -> Floats:
+    """Midpoints of equal cells of [0, 1]."""
+    return (np.arange(points) + 0.5) / points
 
+
+def _model(g: Nodes) -> onnx.ModelProto:
     inputs = [typed(name, TensorProto.DOUBLE, ["n"]) for name in INPUTS]
     inputs[INPUTS.index("action")] = typed("action", TensorProto.INT64, ["n"])
     inputs[INPUTS.index("remaining")] = typed("remaining", TensorProto.DOUBLE, [1])
@@ -189,19 +220,6 @@ def build_graph(*, points: int = 12) -> onnx.ModelProto:
     model = helper.make_model(graph, opset_imports=[helper.make_opsetid("", OPSET)], ir_version=IR_VERSION)
     model.producer_name = "voc-distill"
     return model
-
-
-def _steps(points: int) -> tuple[Floats, Floats]:
-    """(D, d) so that phi @ D + d is the mass of dPhi that falls to each point, by the trapezoid rule."""
-    D = np.zeros((points, points))
-    for j in range(points):
-        D[min(j + 1, points - 1), j] += 0.5
-        D[max(j - 1, 0), j] -= 0.5
-    D[0, 0] += 1.0  # all mass below the first point
-    D[-1, -1] -= 1.0
-    last = np.zeros(points)
-    last[-1] = 1.0
-    return D, last
 
 
 class FeatureGraph:

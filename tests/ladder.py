@@ -12,3 +12,5 @@ STANDARD_ERRORS = 4.0  # Monte Carlo at a fixed seed: a miss has odds of 6e-5 a 
 PUBLISHED = 0.5  # units of the last place printed: what a rounded table can hold
 ONNX_DOUBLE = 0.0  # a double graph with one thread repeats the estimator bit for bit
 ONNX_FLOAT = 1e-5  # on a unit-scale target, where the graph computes in float32
+FEATURE_TABLE = 2e-3  # of the largest sd: moments from a table of 16 cells, where a learner starts, no result
+FEATURE_FIT = 0.06  # of the start value: the fit of f(-z) in the features, 5 % off at most

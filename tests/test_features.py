@@ -1,0 +1,210 @@
+"""The feature graph: what its numbers mean, and what must not change them."""
+
+from __future__ import annotations
+
+import numpy as np
+import onnx
+import onnxruntime
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from ladder import FEATURE_FIT, FEATURE_TABLE
+from leaf_tables import rows, table
+from scipy import integrate, optimize, stats
+
+from distill.closed_form import static_rates
+from distill.errors import InputError
+from distill.features import FeatureGraph, build_graph
+from distill.onnx_nodes import typed
+
+GRAPH = FeatureGraph()
+seeds = st.integers(0, 2**32 - 1)
+
+
+def slow_moments(t):
+    """Expected maximum of each leaf's action, and mean and variance of its siblings' maximum."""
+    m = t["gain"] * t["mean"] + t["offset"]
+    s = t["gain"] * np.sqrt(t["var"])
+    n = len(m)
+    value, others, spread2 = np.zeros(n), np.zeros(n), np.zeros(n)
+
+    def moments(at):
+        low, high = np.max(m[at] - 9 * s[at]), np.max(m[at] + 9 * s[at])
+
+        def tail(x, power):
+            upper = -np.expm1(np.sum(stats.norm.logcdf((x - m[at]) / s[at])))
+            return upper * (2 * (x - low)) ** power
+
+        options = {"epsabs": 1e-11, "limit": 400, "points": np.clip(m[at], low, high)}
+        first, second = (integrate.quad(tail, low, high, (power,), **options)[0] for power in (0, 1))
+        return low + first, second - first**2
+
+    for i in range(n):
+        mine = np.flatnonzero(t["action"] == t["action"][i])
+        rest = mine[mine != i]
+        value[i] = moments(mine)[0]
+        if len(rest):
+            others[i], spread2[i] = moments(rest)
+    return s, value, others, spread2
+
+
+def inner(t, *names):
+    """Values inside the graph, by name."""
+    model = build_graph()
+    model.graph.output.extend(typed(name, onnx.TensorProto.DOUBLE, [1, "n"]) for name in names)
+    session = onnxruntime.InferenceSession(model.SerializeToString(), providers=["CPUExecutionProvider"])
+    return [x.ravel() for x in session.run(list(names), FeatureGraph.table(t)[0])]
+
+
+@pytest.mark.parametrize("seed", range(5))
+def test_moments_agree_with_adaptive_quadrature(seed):
+    rng = np.random.default_rng(seed)
+    t = table(rng, 14, 2)
+    t["var"] = rng.uniform(0.5, 2, 14)
+    s, value, others, spread2 = slow_moments(t)
+    got_value, got_others, got_spread2 = inner(t, "value", "others", "spread2")
+    np.testing.assert_allclose(got_value, value, rtol=0, atol=FEATURE_TABLE * s.max())
+    np.testing.assert_allclose(got_others, others, rtol=0, atol=FEATURE_TABLE * s.max())
+    np.testing.assert_allclose(got_spread2, spread2, rtol=0, atol=4 * FEATURE_TABLE * s.max() ** 2)
+
+
+def test_two_leaf_actions_have_their_threshold_where_the_action_meets_the_rival():
+    """One sibling is a normal maximum, so only the fit of the inverse is left between t0 and the truth."""
+    rng = np.random.default_rng(7)
+    t = table(rng, 12, 6)
+    t["action"] = np.repeat(np.arange(6), 2)
+    value, (t0,) = inner(t, "value")[0], inner(t, "t0")
+    m, s = t["gain"] * t["mean"] + t["offset"], t["gain"] * np.sqrt(t["var"])
+    order = np.sort(np.unique(value))
+    for i in range(12):
+        j = i ^ 1
+        rival = order[-1] if value[i] < order[-1] else order[-2]
+        theta = np.hypot(s[i], s[j])
+
+        def g(x, i=i, j=j, theta=theta):
+            p = (m[i] + x - m[j]) / theta
+            return m[j] + theta * (p * stats.norm.cdf(p) + stats.norm.pdf(p))
+
+        if rival - m[j] < 1e-3 * theta:
+            continue
+        slow = optimize.brentq(lambda x, g=g, rival=rival: g(x) - rival, -40, 40)
+        assert abs(t0[i] - abs(slow)) <= 0.01 * theta
+
+
+def test_single_leaf_actions_start_at_the_static_rate():
+    rng = np.random.default_rng(1)
+    for n in (2, 5, 40):
+        t = table(rng, n, n)
+        t["noise_var"] *= 30  # large best batches, so that rounding them is nothing
+        t["remaining"] = 10**6
+        columns = {k: t[k] for k in ("mean", "var", "noise_var", "gain", "offset")}
+        rate, batch = static_rates(**columns, remaining=t["remaining"])
+        got = GRAPH.matrix(t)
+        near = rate > 1e-30
+        np.testing.assert_allclose(got.first_order[near], rate[near], rtol=FEATURE_FIT)
+        assert np.all(np.abs(got.batch - batch) <= 1 + 0.01 * batch)
+
+
+@settings(deadline=None, max_examples=30, derandomize=True)
+@given(seeds, st.sampled_from([1e-8, 1e-3, 7.0, 1e6, 1e100]), st.sampled_from([0.0, 1e-3, 5.0, -1e4]))
+def test_scale_and_shift_of_utilities_change_no_feature(seed, scale, shift):
+    rng = np.random.default_rng(seed)
+    n = int(rng.integers(1, 50))
+    t = table(rng, n, int(rng.integers(1, n + 1)))
+    moved = {
+        **t,
+        "mean": t["mean"] * scale,
+        "var": t["var"] * scale**2,
+        "noise_var": t["noise_var"] * scale**2,
+        "offset": (t["offset"] + shift) * scale,
+    }
+    a, b = GRAPH.matrix(t), GRAPH.matrix(moved)
+    np.testing.assert_allclose(b.x, a.x, rtol=1e-4, atol=1e-4)
+    np.testing.assert_allclose(b.unit, a.unit * scale, rtol=1e-6)
+    assert np.all(np.abs(a.batch - b.batch) <= 1)
+
+
+@settings(deadline=None, max_examples=30, derandomize=True)
+@given(seeds)
+def test_relabelling_leaves_and_actions_permutes_the_rows(seed):
+    rng = np.random.default_rng(seed)
+    n = int(rng.integers(2, 50))
+    n_actions = int(rng.integers(1, min(n, 8) + 1))
+    t = table(rng, n, n_actions)
+    order = rng.permutation(n)
+    name = rng.permutation(n_actions)
+    moved = {k: v[order] if isinstance(v, np.ndarray) else v for k, v in t.items()}
+    moved["action"] = name[moved["action"]]
+    a, b = GRAPH.matrix(t), GRAPH.matrix(moved)
+    np.testing.assert_allclose(b.x, a.x[order], rtol=1e-4, atol=1e-4)
+
+
+@settings(deadline=None, max_examples=60, derandomize=True)
+@given(seeds, st.floats(-12, 12), st.floats(-8, 8), st.floats(-8, 8))
+def test_decades_of_scale_and_variance_give_finite_numbers(seed, scale, spread, noise):
+    rng = np.random.default_rng(seed)
+    n = int(rng.integers(1, 60))
+    t = table(rng, n, int(rng.integers(1, n + 1)), int(10 ** rng.uniform(0, 15)))
+    t["var"] = t["var"] * 10.0 ** (scale + spread * rng.random(n)) * (rng.random(n) < 0.8)
+    t["noise_var"] = t["noise_var"] * 10.0 ** (scale + noise * rng.random(n))
+    t["mean"] = t["mean"] * 10.0 ** (scale / 2 + rng.uniform(-3, 3))
+    got = GRAPH.matrix(t)
+    assert all(np.all(np.isfinite(part)) for part in got)
+    assert np.all(got.first_order >= 0)
+    assert np.all(got.unit >= 0)
+    assert np.all(got.unit[t["var"] == 0] == 0)
+    assert np.all((got.batch >= 1) & (got.batch <= t["remaining"]))
+
+
+def test_extreme_finite_inputs_give_finite_numbers():
+    for mean in (-1e100, 0.0, 1e100):
+        for var in (0.0, 1e-300, 1e200):
+            for noise in (1e-300, 1.0, 1e200):
+                t = table(np.random.default_rng(2), 6, 3)
+                t["mean"][2], t["var"][2], t["noise_var"][2] = mean, var, noise
+                got = GRAPH.matrix(t)
+                assert all(np.all(np.isfinite(part)) for part in got), (mean, var, noise)
+
+
+def test_one_action_and_no_rollout_left_are_worth_nothing():
+    rng = np.random.default_rng(3)
+    for n in (1, 7, 300):
+        assert np.all(GRAPH.matrix(table(rng, n, 1)).first_order == 0)
+    got = GRAPH.matrix(table(rng, 9, 4, remaining=0))
+    assert np.all(got.first_order == 0)
+    assert np.all(got.unit == 0)
+    assert np.all(got.batch == 0)
+
+
+def test_thousands_of_leaves():
+    rng = np.random.default_rng(4)
+    for n_actions in (1, 2, 64, 4096):
+        got = GRAPH.matrix(table(rng, 4096, n_actions))
+        assert all(np.all(np.isfinite(part)) for part in got)
+
+
+def test_rows_of_many_trees_equal_each_tree_alone():
+    columns = rows(np.random.default_rng(5), 12)
+    whole = GRAPH.matrix(columns)
+    for i in range(12):
+        at = columns["tree"] == i
+        alone = GRAPH.matrix({k: v[at] for k, v in columns.items() if k != "tree"})
+        for a, b in zip(whole, alone, strict=True):
+            np.testing.assert_array_equal(a[at], b)
+
+
+def test_bad_columns_are_named():
+    t = table(np.random.default_rng(6), 6, 2)
+    with pytest.raises(InputError, match="var: is missing"):
+        GRAPH.matrix({k: v for k, v in t.items() if k != "var"})
+    with pytest.raises(InputError, match="var: must have 6 rows"):
+        GRAPH.matrix({**t, "var": t["var"][:5]})
+    with pytest.raises(InputError, match="side by side"):
+        GRAPH.matrix({**t, "tree": np.array([0, 1, 0, 1, 0, 1])})
+
+
+def test_the_graph_is_clean_and_the_same_every_time():
+    model = build_graph()
+    onnx.checker.check_model(model, full_check=True)
+    again = build_graph()
+    assert model.SerializeToString(deterministic=True) == again.SerializeToString(deterministic=True)

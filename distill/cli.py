@@ -11,12 +11,20 @@ import json
 import math
 import os
 import sys
+import time
 from collections.abc import Sequence
 from pathlib import Path
+from typing import TYPE_CHECKING
+
+import numpy as np
 
 from distill import __version__
 from distill.errors import DistillError, InputError
 from distill.files import write_atomic
+
+if TYPE_CHECKING:  # the command line must answer --help at once
+    from distill.query import Priced, Query
+    from distill.tree import BeliefTree
 
 __all__ = ["run"]
 
@@ -59,22 +67,94 @@ def _parser() -> argparse.ArgumentParser:
     commands = parser.add_subparsers(title="commands", metavar="COMMAND", required=True)
 
     price = commands.add_parser("price", help="exact VOC of every candidate of each tree")
-    price.add_argument("trees", metavar="TREES", help="belief-tree/1 records, .jsonl, .jsonl.gz or .json; - reads standard input")
+    price.add_argument(
+        "trees",
+        metavar="TREES",
+        help="belief-tree/1 records, .jsonl, .jsonl.gz or .json; - reads standard input",
+    )
     _add_query_flags(price)
     price.add_argument("--table", action="store_true", help="a readable table instead of JSON Lines")
     price.add_argument("--out", type=Path, metavar="FILE", help="write here instead of standard output")
     price.set_defaults(command=_price)
+
+    generate = commands.add_parser(
+        "generate", help="draw or read trees and label them exactly into a dataset"
+    )
+    source = generate.add_mutually_exclusive_group(required=True)
+    source.add_argument(
+        "--family", metavar="TOML", help="a family file, or the name of one that comes with the tool"
+    )
+    source.add_argument("--traces", nargs="+", metavar="FILE", help="recorded trees")
+    generate.add_argument("--trees", type=_whole(1), metavar="N", help="how many (traces: default all)")
+    generate.add_argument(
+        "--out", type=Path, required=True, metavar="FOLDER", help="the dataset; a started one goes on"
+    )
+    generate.add_argument("--seed", type=_whole(0), default=0)
+    generate.add_argument(
+        "--workers", type=_whole(1), default=os.cpu_count() or 1, help="processes (default: all cores)"
+    )
+    _add_query_flags(generate, rate_is_default=True)
+    generate.set_defaults(command=_generate)
+
+    train = commands.add_parser("train", help="fit the front of scorers on a dataset, validate and time each")
+    train.add_argument("dataset", metavar="DATASET")
+    train.add_argument(
+        "--out", type=Path, required=True, metavar="FOLDER", help="scorer files and front.json"
+    )
+    train.add_argument("--seed", type=_whole(0), default=0)
+    train.set_defaults(command=_train)
+
+    ship = commands.add_parser(
+        "ship", help="copy one scorer of a trained front, with its sheet, to where agents load it"
+    )
+    ship.add_argument("trained", metavar="FOLDER", help="what train left")
+    ship.add_argument("--out", type=Path, required=True, metavar="FILE.onnx")
+    which = ship.add_mutually_exclusive_group()
+    which.add_argument(
+        "--latency",
+        type=_microseconds,
+        metavar="40us",
+        help="most accurate within this median time a decision",
+    )
+    which.add_argument("--scorer", metavar="NAME", help="by its name on the front")
+    ship.set_defaults(command=_ship)
+
+    validate = commands.add_parser("validate", help="a scorer file against exact labels")
+    validate.add_argument("scorer", metavar="FILE.onnx")
+    validate.add_argument("dataset", metavar="DATASET")
+    validate.add_argument("--seed", type=_whole(0), default=0, help="of the bootstrap")
+    validate.add_argument("--out", type=Path, metavar="FILE.json", help="write the figures here too")
+    validate.set_defaults(command=_validate)
+
+    record = commands.add_parser(
+        "record", help="let the reference search play a simulator and record its belief trees"
+    )
+    record.add_argument("--simulator", required=True, metavar="NAME")
+    record.add_argument("--decisions", type=_whole(1), required=True, metavar="N")
+    record.add_argument(
+        "--rollouts", type=_whole(1), default=128, metavar="R", help="budget of a decision (default 128)"
+    )
+    record.add_argument("--seed", type=_whole(0), default=0)
+    record.add_argument("--out", type=Path, required=True, metavar="FILE", help=".jsonl or .jsonl.gz")
+    record.set_defaults(command=_record)
+
+    tour = commands.add_parser("tour", help="the whole job on the sample data, in a few minutes")
+    tour.add_argument("out", type=Path, nargs="?", default=Path("tour-out"), metavar="FOLDER")
+    tour.set_defaults(command=_tour)
     return parser
 
 
-def _add_query_flags(parser: argparse.ArgumentParser) -> None:
+def _add_query_flags(parser: argparse.ArgumentParser, rate_is_default: bool = False) -> None:
     parser.add_argument(
         "--value", type=_horizon, metavar="static|dynamic|H",
-        help="which value: as if no rollouts followed, as if all uncertainty were resolved, or H rollouts a leaf",
+        help="as if no rollouts followed, as if all uncertainty were resolved, or H more rollouts a leaf",
     )  # fmt: skip
     size = parser.add_mutually_exclusive_group()
-    size.add_argument("--batch", type=_whole(1), metavar="K", help="rollouts a candidate (default 1)")
-    size.add_argument("--rate", action="store_true", help="best VOC a rollout over batches within the rollouts left")
+    one, rate = ("", " (default)") if rate_is_default else (" (default 1)", "")
+    size.add_argument("--batch", type=_whole(1), metavar="K", help=f"rollouts a candidate{one}")
+    size.add_argument(
+        "--rate", action="store_true", help=f"best VOC a rollout over batches within the rollouts left{rate}"
+    )
     parser.add_argument("--remaining", type=_whole(0), metavar="R", help="rollouts left; bounds the rate")
     parser.add_argument(
         "--tolerance", type=_positive, metavar="T",
@@ -117,6 +197,11 @@ def _positive(text: str) -> float:
     return x
 
 
+def _microseconds(text: str) -> float:
+    number = text.removesuffix("us").removesuffix("µs").strip()
+    return _positive(number)
+
+
 # --- price -----------------------------------------------------------------------------------------
 
 
@@ -152,3 +237,102 @@ def _emit(text: str, out: Path | None) -> None:
         sys.stdout.write(text)
     else:
         write_atomic(out, text.encode())
+
+
+def _price_table(tree: BeliefTree, query: Query, priced: Priced) -> str:
+    """One tree for people: value per root action, then a row a leaf, the best net value marked."""
+    from distill.query import net_value
+
+    which = {0.0: "static", math.inf: "dynamic"}.get(query.horizon, f"horizon {query.horizon:g}")
+    unit = "a rollout, best batch" if query.rate else f"of {query.batch} rollout{'s' * (query.batch != 1)}"
+    net = net_value(tree, query, priced)
+    best = int(np.argmax(net))
+    width = len(str(len(priced.voc)))
+    lines = [
+        f"tree {tree.id if tree.id is not None else '-'}: {which} VOC {unit}; {priced.method}",
+        "  root action values: " + ", ".join(f"{v:.6g}" for v in priced.value),
+        f"  {'leaf':>{width + 4}}  {'VOC':>12}  {'net':>12}  {'batch':>8}  {'error <':>9}",
+    ]
+    for i in range(len(net)):
+        mark = " <- best" if i == best else ""
+        lines.append(
+            f"  {i:>{width + 4}}  {priced.voc[i]:>12.6g}  {net[i]:>12.6g}  {priced.batch[i]:>8}"
+            f"  {priced.error[i]:>9.1e}{mark}"
+        )
+    return "\n".join(lines) + "\n"
+
+
+# --- the other commands ----------------------------------------------------------------------------
+
+
+def _generate(args: argparse.Namespace) -> None:
+    from distill.family import load_family
+    from distill.generate import Asked, Traces, generate
+    from distill.sample_data import family_path
+
+    source = Traces.read(args.traces) if args.traces else load_family(family_path(args.family))
+    asked = Asked(args.value, args.batch, args.remaining, args.tolerance)
+    start = time.perf_counter()
+    manifest = generate(
+        source, args.out, trees=args.trees, seed=args.seed, asked=asked, workers=args.workers, progress=True
+    )
+    totals = manifest["totals"]
+    print(
+        f"{args.out}: {totals['trees']:,} trees, {totals['candidates']:,} exact labels, "
+        f"{totals['aside']:,} trees set aside, in {time.perf_counter() - start:.1f} s"
+    )
+
+
+def _train(args: argparse.Namespace) -> None:
+    from distill.sheet import accuracy_table, front_table
+    from distill.train import train
+
+    front = train(args.dataset, args.out, seed=args.seed, progress=True)
+    parts = front["parts"]
+    print(
+        f"{args.out}: {len(front['scorers'])} scorers from {parts['fit']['trees']:,} trees, judged on "
+        f"{parts['held_out']['trees']:,} held-out trees; time of one decision over {front['leaves']} leaves\n"
+    )
+    print("\n".join([*front_table(front["scorers"]), "", *accuracy_table(front["beside"])]))
+
+
+def _ship(args: argparse.Namespace) -> None:
+    from distill.ship import ship
+
+    sheet = ship(args.trained, args.out, latency_us=args.latency, scorer=args.scorer)
+    print(f"{args.out}: {sheet['recipe']}, {sheet['chosen']}; its sheet stands beside it as .json and .md")
+
+
+def _validate(args: argparse.Namespace) -> None:
+    from distill.sheet import accuracy_table
+    from distill.validate import validate
+
+    figures = validate(args.scorer, args.dataset, seed=args.seed)
+    accuracy = figures["accuracy"]
+    which = "held-out trees" if figures["part"] == "held_out" else "trees"
+    print(f"{args.scorer} on {accuracy['trees']:,} {which} of {args.dataset}\n")
+    print("\n".join(accuracy_table({"the scorer": accuracy, **figures["beside"]})))
+    if args.out:
+        write_atomic(args.out, (json.dumps(figures, indent=1) + "\n").encode())
+
+
+def _record(args: argparse.Namespace) -> None:
+    from distill.rehearse.record import record_traces
+    from distill.terminal import bar
+
+    with bar("recording", args.decisions, "decisions") as advance:
+        done = record_traces(
+            args.simulator,
+            args.out,
+            decisions=args.decisions,
+            rollouts=args.rollouts,
+            seed=args.seed,
+            progress=advance,
+        )
+    print(f"{args.out}: {done.trees:,} trees of {done.decisions:,} decisions, {done.size:,} bytes")
+
+
+def _tour(args: argparse.Namespace) -> None:
+    from distill.tour import tour
+
+    tour(args.out)

@@ -8,7 +8,6 @@ workers.
 
 from __future__ import annotations
 
-import contextlib
 import dataclasses
 import functools
 import hashlib
@@ -32,6 +31,7 @@ from distill.files import write_atomic
 from distill.query import Priced, Query, resolve
 from distill.record import to_record
 from distill.shards import Labelled
+from distill.terminal import bar
 from distill.tree import BeliefTree
 
 __all__ = ["Asked", "Traces", "generate"]
@@ -153,7 +153,8 @@ def generate(
     pool = Parallel(
         n_jobs=min(workers, max(len(todo), 1)), return_as="generator_unordered", pre_dispatch="2*n_jobs"
     )
-    with _bar(progress, job.total, sum(e["trees"] + e["aside"] for e in done.values())) as advance:
+    labelled = sum(e["trees"] + e["aside"] for e in done.values())
+    with bar("labelling", job.total, "trees", done=labelled, shown=progress) as advance:
         for entry in pool(calls):
             done[entry["part"]] = entry
             manifest["shards"] = [done[p] for p in sorted(done)]
@@ -323,34 +324,3 @@ def _open(folder: Path, plan: dict[str, Any]) -> dict[str, Any]:
     manifest = {**plan, "complete": False, "totals": {}, "shards": []}
     shards.write_manifest(folder, manifest)
     return manifest
-
-
-@contextlib.contextmanager
-def _bar(show: bool, total: int, done: int) -> Iterator[Callable[[int], None]]:
-    if not show:
-        yield lambda _: None
-        return
-    from rich.console import Console
-    from rich.progress import (
-        BarColumn,
-        MofNCompleteColumn,
-        Progress,
-        TextColumn,
-        TimeElapsedColumn,
-        TimeRemainingColumn,
-    )
-
-    columns = (
-        TextColumn("labelling"), BarColumn(), MofNCompleteColumn(), TextColumn("trees"),
-        TextColumn("{task.fields[rate]}"), TimeElapsedColumn(), TextColumn("left"), TimeRemainingColumn(),
-    )  # fmt: skip
-    with Progress(*columns, console=Console(stderr=True)) as bar:
-        task = bar.add_task("labelling", total=total, completed=done, rate="")
-
-        def advance(n: int) -> None:
-            bar.advance(task, n)
-            now = bar.tasks[task]
-            if now.elapsed:
-                bar.update(task, rate=f"{(now.completed - done) / now.elapsed:,.0f}/s")
-
-        yield advance

@@ -4,15 +4,25 @@ from __future__ import annotations
 
 import json
 import os
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any, Final
 
 from distill.files import write_atomic
 
-__all__ = ["SHEET_FORMAT", "sheet_page", "write_sheet"]
+__all__ = [
+    "FRONT_FILE",
+    "FRONT_FORMAT",
+    "SHEET_FORMAT",
+    "accuracy_table",
+    "front_table",
+    "sheet_page",
+    "write_sheet",
+]
 
 SHEET_FORMAT: Final = "voc-sheet/1"
+FRONT_FORMAT: Final = "voc-front/1"
+FRONT_FILE: Final = "front.json"  # beside the scorer files that `train` leaves
 
 
 def write_sheet(sheet: Mapping[str, Any], scorer_file: str | os.PathLike[str]) -> tuple[Path, Path]:
@@ -38,10 +48,7 @@ def sheet_page(sheet: Mapping[str, Any]) -> str:
         "",
         f"## On {held_out}",
         "",
-        "| | forgone share, % | relative forgone, % | picks that are best, % | rank correlation |",
-        "| --- | --- | --- | --- | --- |",
-        _accuracy_row("**this scorer**", accuracy),
-        *(_accuracy_row(name, m) for name, m in sheet["beside"].items()),
+        *accuracy_table({"**this scorer**": accuracy, **sheet["beside"]}),
         "",
         f"Square brackets: {100 * accuracy['interval_level']:g} % bootstrap intervals over trees.",
         f"Trees whose best value is 0, left out of both shares: {accuracy['trees_with_best_zero']}.",
@@ -58,9 +65,7 @@ def sheet_page(sheet: Mapping[str, Any]) -> str:
         "",
         "## The scorers that were trained",
         "",
-        "| | on the front | forgone share, % | relative forgone, % | p50, us | p99, us | KB | fit, s |",
-        "| --- | --- | --- | --- | --- | --- | --- | --- |",
-        *(_front_row(e) for e in sheet["front"]),
+        *front_table(sheet["front"]),
         "",
         "## Where it comes from",
         "",
@@ -71,6 +76,24 @@ def sheet_page(sheet: Mapping[str, Any]) -> str:
         f"- features: {', '.join(sheet['features'])}",
     ]
     return "\n".join(lines) + "\n"
+
+
+def accuracy_table(rows: Mapping[str, Mapping[str, Any]]) -> list[str]:
+    """Markdown lines: a row for each name, the accuracy figures of `metrics.Metrics.to_json`."""
+    return [
+        "| | forgone share, % | relative forgone, % | picks that are best, % | rank correlation |",
+        "| --- | --- | --- | --- | --- |",
+        *(_accuracy_row(name, m) for name, m in rows.items()),
+    ]
+
+
+def front_table(scorers: Sequence[Mapping[str, Any]]) -> list[str]:
+    """Markdown lines: a row for each trained scorer, held-out accuracy beside decision latency."""
+    return [
+        "| | on the front | forgone share, % | relative forgone, % | p50, us | p99, us | KB | fit, s |",
+        "| --- | --- | --- | --- | --- | --- | --- | --- |",
+        *(_front_row(e) for e in scorers),
+    ]
 
 
 def _value_text(value: Mapping[str, Any]) -> str:

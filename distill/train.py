@@ -6,9 +6,9 @@ learners -> each exported, validated from its file on held-out trees and timed -
 
 from __future__ import annotations
 
+import json
 import os
 import platform
-import tempfile
 import time
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
@@ -18,8 +18,6 @@ from typing import Any
 import numpy as np
 import onnxruntime
 import sklearn
-from rich.console import Console
-from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeElapsedColumn
 
 from distill import __version__
 from distill.candidates import Candidates, Split, split_by_tree
@@ -30,8 +28,9 @@ from distill.files import sha256_of, write_atomic
 from distill.learners import BoostingLearner, DenseLearner, LinearLearner
 from distill.metrics import Groups
 from distill.runtime import Scorer
-from distill.sheet import SHEET_FORMAT, write_sheet
-from distill.timing import Timing, decisions, time_exact, time_scorer
+from distill.sheet import FRONT_FILE, FRONT_FORMAT
+from distill.terminal import bar
+from distill.timing import decisions, time_exact, time_scorer
 from distill.tree import Floats
 from distill.validate import baselines, examine
 
@@ -39,6 +38,7 @@ __all__ = ["RECIPES", "Recipe", "row_weights", "train"]
 
 _LEAVES = 64  # of the decision whose latency the sheet states
 _SELF_TEST_TREES = 8
+_LEAST_WEIGHT = 1e-3
 
 
 @dataclass(frozen=True)
@@ -48,35 +48,43 @@ class Recipe:
     name: str
     make: Callable[[int], Any]
 
+    @property
+    def file(self) -> str:
+        """Name of its scorer file."""
+        return self.name.replace(" ", "-") + ".onnx"
+
 
 def _boosting(n_trees: int, n_leaves: int) -> Recipe:
     def make(seed: int) -> BoostingLearner:
-        return BoostingLearner(n_trees=n_trees, n_leaves=n_leaves, monotone=MONOTONE, random_state=seed)
+        return BoostingLearner(target=_TARGET, n_trees=n_trees, n_leaves=n_leaves, random_state=seed)
 
     return Recipe(f"boosting {n_trees}x{n_leaves}", make)
 
 
-# The value never falls as the first-order value of the same candidate grows, all else equal.
-MONOTONE = tuple(int(name == "first_root") for name in FEATURE_NAMES)
+# The ratio to the first-order value serves tiny values as well as large ones; sqrt serves large ones only.
+_TARGET = "log_ratio"
 RECIPES: Mapping[str, Recipe] = {
     recipe.name: recipe
     for recipe in (
-        Recipe("linear", lambda seed: LinearLearner(random_state=seed)),
+        Recipe("linear", lambda seed: LinearLearner(target=_TARGET, random_state=seed)),
         _boosting(25, 8),
         _boosting(100, 31),
         _boosting(300, 31),
-        Recipe("dense 32-32", lambda seed: DenseLearner(layers=(32, 32), random_state=seed)),
+        Recipe("dense 32-32", lambda seed: DenseLearner(target=_TARGET, layers=(32, 32), random_state=seed)),
     )
 }
 
 
 def row_weights(groups: Groups, label: Floats) -> Floats:
-    """Weight of each row in training: a candidate matters as far as its tree could pick it.
+    """Weight of each row in training, the square of its value over the best of its tree, plus 0.001.
 
-    A row counts by its value over the best of its tree; trees count alike, whatever their unit.
+    An error d of a log-ratio moves a value by d x value, so these weights make squared error that of the
+    value as a share of the best: a candidate counts as far as its tree could pick it, and trees count
+    alike, whatever their unit. The small rest keeps candidates of little worth from being scored high.
     """
     best = groups.spread(groups.highest(label))
-    return np.asarray(np.where(best > 0, label / np.where(best > 0, best, 1), 0.0) + 0.02)
+    share = np.where(best > 0, label / np.where(best > 0, best, 1), 0.0)
+    return np.asarray(np.square(share) + _LEAST_WEIGHT)
 
 
 def train(
@@ -85,53 +93,58 @@ def train(
     *,
     seed: int = 0,
     recipes: Sequence[str] | None = None,
-    latency_us: float | None = None,
     n_boot: int = 1000,
-    progress: bool = True,
+    progress: bool = False,
 ) -> dict[str, Any]:
-    """Train the front on a labelled dataset, ship the chosen scorer as `out`, and return its sheet.
+    """Train every recipe on a labelled dataset; leave one scorer file each, and `front.json`, in `out`.
 
-    out : the scorer file, .onnx; the sheet goes beside it as .json and .md. latency_us : take the most
-    accurate scorer whose median decision over 64 leaves fits; None takes the most accurate. recipes :
-    names in RECIPES, None for all. The same dataset, seed and versions give the same .onnx bytes with
-    any number of threads. Raises InputError on a dataset too small to split or a budget that none meets.
+    recipes : names in RECIPES, None for all. Returns what `front.json` holds: accuracy of each file on
+    held-out trees, its decision latency, the closed forms on the same trees, and the exact methods' time
+    in the same run. The same dataset, seed and versions give the same .onnx bytes with any number of
+    threads. Raises InputError on a dataset too small to split.
     """
     started = time.perf_counter()
     out = Path(out)
-    if out.suffix != ".onnx":
-        raise InputError("out", "must end in .onnx", str(out))
-    chosen_recipes = _recipes(recipes)
+    chosen = _recipes(recipes)
     data, about = Candidates.read(dataset)
     split = split_by_tree(data, seed)
-    graph = FeatureGraph()
-    with _bar(progress) as bar, tempfile.TemporaryDirectory() as folder:
-        task = bar.add_task("features", total=2 + 2 * len(chosen_recipes))
-        matrices = [
+    out.mkdir(parents=True, exist_ok=True)
+    with bar("features", 2 + 2 * len(chosen), "steps", shown=progress) as advance:
+        graph = FeatureGraph()
+        fit, choose, held_out = (
             graph.matrix({**c.columns, "tree": c.tree}) for c in (split.fit, split.choose, split.held_out)
-        ]
-        bar.advance(task)
+        )
+        del choose
         cases = decisions({**split.held_out.columns, "tree": split.held_out.tree}, _LEAVES, 50, seed)
-        front: list[dict[str, Any]] = []
-        for recipe in chosen_recipes:
-            bar.update(task, description=f"train {recipe.name}")
-            path = Path(folder) / f"{len(front)}.onnx"
-            fit_seconds = _fit_and_export(recipe, split, matrices[0], graph, about, seed, path)
-            bar.advance(task)
-            bar.update(task, description=f"validate {recipe.name}")
-            front.append(_examine(recipe, path, split, cases, fit_seconds, n_boot, seed))
-            bar.advance(task)
-        _mark_front(front)
-        best = _choose(front, latency_us)
-        bar.update(task, description="exact methods and closed forms")
-        beside = baselines(split.held_out, matrices[2].first_order, n_boot=n_boot, seed=seed)
+        scorers: list[dict[str, Any]] = []
+        for recipe in chosen:
+            advance(1, f"train {recipe.name}")
+            path = out / recipe.file
+            fit_seconds = _fit_and_export(recipe, split, fit, graph, about, seed, path)
+            advance(1, f"validate {recipe.name}")
+            scorers.append(_examine(recipe, path, split, cases, fit_seconds, n_boot, seed))
+        advance(1, "closed forms and exact methods")
+        beside = baselines(split.held_out, held_out.first_order, n_boot=n_boot, seed=seed)
         exact = {"dynamic VOC": time_exact(cases, rate=False), "dynamic rate": time_exact(cases, rate=True)}
-        bar.advance(task)
-        data_bytes = (Path(folder) / f"{front.index(best)}.onnx").read_bytes()
-    write_atomic(out, data_bytes)
-    sheet = _sheet(out, about, split, front, best, beside, exact, seed, latency_us)
-    sheet["train_seconds"] = round(time.perf_counter() - started, 2)
-    write_sheet(sheet, out)
-    return sheet
+        advance(1)
+    _mark_front(scorers)
+    front = {
+        "format": FRONT_FORMAT,
+        **about,
+        "parts": {
+            name: {"trees": len(c.groups.sizes), "candidates": len(c.tree)} for name, c in vars(split).items()
+        },
+        "seed": seed,
+        "scorers": scorers,
+        "beside": beside,
+        "leaves": _LEAVES,
+        "exact": {name: t.to_json() for name, t in exact.items()},
+        "features": list(FEATURE_NAMES),
+        "made_with": _made_with(),
+        "train_seconds": round(time.perf_counter() - started, 2),
+    }
+    write_atomic(out / FRONT_FILE, (json.dumps(front, indent=1) + "\n").encode())
+    return front
 
 
 # --- one recipe ------------------------------------------------------------------------------------
@@ -176,6 +189,8 @@ def _examine(
     scorer = Scorer.load(path)
     return {
         "recipe": recipe.name,
+        "file": path.name,
+        "sha256": sha256_of(path),
         "held_out": examine(scorer, split.held_out, n_boot=n_boot, seed=seed),
         "choose": examine(scorer, split.choose, n_boot=n_boot, seed=seed),
         "latency": time_scorer(scorer, cases).to_json(),
@@ -209,74 +224,12 @@ def _mark_front(front: list[dict[str, Any]]) -> None:
         entry["on_front"] = not any(u <= us and x <= loss and (u, x) != (us, loss) for u, x in points)
 
 
-def _choose(front: Sequence[dict[str, Any]], latency_us: float | None) -> dict[str, Any]:
-    """The most accurate scorer within the budget, judged on the part `choose`, not on the held-out trees."""
-    fitting = [e for e in front if latency_us is None or _cost_and_loss(e)[0] <= latency_us]
-    if not fitting:
-        fastest = min(_cost_and_loss(e)[0] for e in front)
-        raise InputError(
-            "latency", f"must be at least {fastest:.1f} us, the fastest scorer trained", latency_us
-        )
-    return min(fitting, key=lambda e: (_cost_and_loss(e)[1], _cost_and_loss(e)[0]))
-
-
-# --- what is said about it --------------------------------------------------------------------------
-
-
-def _sheet(
-    out: Path,
-    about: Mapping[str, Any],
-    split: Split,
-    front: Sequence[dict[str, Any]],
-    best: dict[str, Any],
-    beside: Mapping[str, Any],
-    exact: Mapping[str, Timing],
-    seed: int,
-    latency_us: float | None,
-) -> dict[str, Any]:
-    p50 = best["latency"]["p50_us"]
+def _made_with() -> dict[str, str]:
     return {
-        "format": SHEET_FORMAT,
-        "file": {"name": out.name, "sha256": sha256_of(out), "bytes": best["bytes"]},
-        "recipe": best["recipe"],
-        "chosen": "most accurate" if latency_us is None else f"most accurate within {latency_us:g} us",
-        "value": about["value"],
-        "data": {
-            **about["data"],
-            "parts": {
-                name: {"trees": len(c.groups.sizes), "candidates": len(c.tree)}
-                for name, c in vars(split).items()
-            },
-        },
-        "seed": seed,
-        "accuracy": best["held_out"],
-        "beside": beside,
-        "decision": {
-            "leaves": _LEAVES,
-            "scorer": best["latency"],
-            "exact": {name: t.to_json() for name, t in exact.items()},
-            "times_faster": {name: t.p50 / p50 for name, t in exact.items()},
-        },
-        "front": front,
-        "features": list(FEATURE_NAMES),
-        "made_with": {
-            "voc-distill": __version__,
-            "python": platform.python_version(),
-            "numpy": np.__version__,
-            "scikit-learn": sklearn.__version__,
-            "onnxruntime": onnxruntime.__version__,
-            "machine": f"{platform.machine()}, {os.cpu_count()} cores",
-        },
+        "voc-distill": __version__,
+        "python": platform.python_version(),
+        "numpy": np.__version__,
+        "scikit-learn": sklearn.__version__,
+        "onnxruntime": onnxruntime.__version__,
+        "machine": f"{platform.machine()}, {os.cpu_count()} cores",
     }
-
-
-def _bar(shown: bool) -> Progress:
-    return Progress(
-        TextColumn("{task.description}"),
-        BarColumn(),
-        MofNCompleteColumn(),
-        TimeElapsedColumn(),
-        console=Console(stderr=True),
-        disable=not shown,
-        transient=True,
-    )

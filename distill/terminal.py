@@ -30,7 +30,9 @@ def bar(
         TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TextColumn(unit),
         TextColumn("{task.fields[rate]}"), TimeElapsedColumn(), TextColumn("left"), TimeRemainingColumn(),
     )  # fmt: skip
-    with Progress(*columns, console=Console(stderr=True), transient=True, disable=not shown) as progress:
+    console = Console(stderr=True)
+    hidden = not (shown and console.is_terminal)  # a log file wants the results, not the bar
+    with Progress(*columns, console=console, transient=True, disable=hidden) as progress:
         task = progress.add_task(doing, total=total, completed=done, rate="")
 
         def advance(steps: int = 1, doing: str | None = None) -> None:

@@ -40,11 +40,15 @@ search = { even = 1 }
 """
 
 
-def _family(text=SMALL, **changed):
+def family_text(text=SMALL, **changed):
     """`text` with lines replaced by key (None removes one), or added."""
     lines = [x for x in text.strip().splitlines() if x.split(" = ")[0] not in changed]
     lines += [f"{key} = {value}" for key, value in changed.items() if value is not None]
-    return parse_family("\n".join(lines).encode(), "f.toml")
+    return "\n".join(lines)
+
+
+def _family(text=SMALL, **changed):
+    return parse_family(family_text(text, **changed).encode(), "f.toml")
 
 
 # --- the file --------------------------------------------------------------------------------------

@@ -1,0 +1,207 @@
+"""The command line: outputs, and one clear line with exit code 2 for what is wrong."""
+
+from __future__ import annotations
+
+import gzip
+import io
+import json
+import math
+import subprocess
+import sys
+
+import numpy as np
+import pytest
+from builders import chance_record, flat_record, win_loss_record
+from test_family import BAD as MALFORMED_FAMILIES
+from test_family import family_text
+from test_record import BAD_TEXT, MALFORMED
+
+from distill import voc
+from distill.cli import run
+from distill.query import Query
+from distill.record import from_record
+
+
+@pytest.fixture
+def trees(tmp_path):
+    path = tmp_path / "trees.jsonl"
+    path.write_text("\n".join(json.dumps(flat_record(id=i, remaining=20)) for i in range(2)) + "\n")
+    return path
+
+
+def refused(capsys, *argv):
+    """The one line of an exit with code 2; nothing on standard output."""
+    assert run([str(a) for a in argv]) == 2
+    out, err = capsys.readouterr()
+    assert out == ""
+    assert err.startswith("voc-distill: error: ")
+    assert err.count("\n") == 1
+    return err
+
+
+def test_price_writes_the_fixed_keys(trees, capsys):
+    assert run(["price", str(trees)]) == 0
+    lines = capsys.readouterr().out.splitlines()
+    assert len(lines) == 2
+    got = json.loads(lines[1])
+    assert set(got) == {"voc", "batch", "value", "error", "best", "method", "id"}
+    expected = voc.price(from_record(flat_record()), Query())
+    assert got["voc"] == expected.voc.tolist()
+    assert got["value"] == expected.value.tolist()
+    assert got["batch"] == [1, 1, 1]
+    assert got["best"] == int(np.argmax(expected.voc))
+    assert got["id"] == 1
+
+
+@pytest.mark.parametrize(
+    ("flags", "query"),
+    [
+        (["--value", "static"], Query(0.0)),
+        (["--value", "2.5", "--batch", "3"], Query(2.5, 3)),
+        (["--rate"], Query(math.inf, None, 20)),
+        (["--rate", "--remaining", "4", "--value", "static"], Query(0.0, None, 4)),
+    ],
+)
+def test_price_flags_ask_the_engine(trees, capsys, flags, query):
+    assert run(["price", str(trees), *flags]) == 0
+    got = json.loads(capsys.readouterr().out.splitlines()[0])
+    expected = voc.price(from_record(flat_record()), query)
+    assert got["voc"] == expected.voc.tolist()
+    assert got["batch"] == expected.batch.tolist()
+
+
+def test_a_flag_beats_the_record_and_the_record_the_default(tmp_path, capsys):
+    path = tmp_path / "one.json"
+    path.write_text(json.dumps(flat_record(horizon=0, batch=7), indent=2))
+    for flags, query in (([], Query(0.0, 7)), (["--value", "dynamic", "--batch", "2"], Query(math.inf, 2))):
+        assert run(["price", str(path), *flags]) == 0
+        expected = voc.price(from_record(flat_record()), query)
+        assert json.loads(capsys.readouterr().out)["voc"] == expected.voc.tolist()
+
+
+def test_best_counts_the_cost(tmp_path, capsys):
+    path = tmp_path / "one.jsonl"
+    free = voc.price(from_record(flat_record()), Query(math.inf, 3)).voc
+    dear = [None, None, 0.0, 0.0, 0.0]
+    dear[2 + int(np.argmax(free))] = 1e3
+    path.write_text(json.dumps(flat_record(cost=dear)))
+    assert run(["price", str(path), "--batch", "3"]) == 0
+    assert json.loads(capsys.readouterr().out)["best"] == int(np.argsort(free)[-2])
+
+
+def test_price_reads_standard_input_and_gz(trees, tmp_path, capsys, monkeypatch):
+    assert run(["price", str(trees)]) == 0
+    expected = capsys.readouterr().out
+    packed = tmp_path / "trees.jsonl.gz"
+    packed.write_bytes(gzip.compress(trees.read_bytes()))
+    assert run(["price", str(packed)]) == 0
+    assert capsys.readouterr().out == expected
+    monkeypatch.setattr(sys, "stdin", io.TextIOWrapper(io.BytesIO(trees.read_bytes())))
+    assert run(["price", "-"]) == 0
+    assert capsys.readouterr().out == expected
+
+
+def test_price_table_marks_the_best_leaf(trees, capsys):
+    assert run(["price", str(trees), "--table", "--rate"]) == 0
+    out = capsys.readouterr().out
+    assert out.count("<- best") == 2
+    assert "dynamic VOC a rollout, best batch" in out
+
+
+@pytest.mark.parametrize("name", MALFORMED)
+def test_malformed_record_exits_2_and_writes_nothing(tmp_path, capsys, name):
+    path, out = tmp_path / "bad.jsonl", tmp_path / "out.jsonl"
+    path.write_text(json.dumps(flat_record()) + "\n" + json.dumps(MALFORMED[name][0]) + "\n")
+    assert "line 2" in refused(capsys, "price", path, "--out", out)
+    assert not out.exists()
+
+
+@pytest.mark.parametrize("name", [n for n in BAD_TEXT if n != "empty"])
+def test_malformed_text_exits_2(tmp_path, capsys, name):
+    text = BAD_TEXT[name][0]
+    path = tmp_path / "bad.jsonl"
+    path.write_bytes(text if isinstance(text, bytes) else text.encode())
+    assert "line 1" in refused(capsys, "price", path)
+
+
+@pytest.mark.parametrize("name", MALFORMED_FAMILIES)
+def test_malformed_family_exits_2_and_makes_no_folder(tmp_path, capsys, name):
+    change, _ = MALFORMED_FAMILIES[name]
+    path, out = tmp_path / "bad.toml", tmp_path / "dataset"
+    path.write_text(change if isinstance(change, str) else family_text(**change))
+    refused(capsys, "generate", "--family", path, "--trees", 5, "--out", out)
+    assert not out.exists()
+
+
+def test_refusals_name_the_case(tmp_path, capsys):
+    assert "No such file" in refused(capsys, "price", tmp_path / "none.jsonl")
+    (tmp_path / "empty.jsonl").write_text("")
+    assert "empty.jsonl" in refused(capsys, "price", tmp_path / "empty.jsonl")
+    no_budget = tmp_path / "no_budget.jsonl"
+    no_budget.write_text(json.dumps(flat_record()))
+    assert "remaining: must be given for a rate" in refused(capsys, "price", no_budget, "--rate")
+    assert "must be a .toml file or one of" in refused(
+        capsys, "generate", "--family", "frozen-pizza", "--trees", 1, "--out", tmp_path / "d"
+    )
+    assert "must be a folder that train left" in refused(
+        capsys, "ship", tmp_path, "--out", tmp_path / "s.onnx"
+    )
+    assert "none.onnx" in refused(capsys, "validate", tmp_path / "none.onnx", tmp_path)
+    assert "simulator" in refused(
+        capsys, "record", "--simulator", "chess", "--decisions", 1, "--out", tmp_path / "t.jsonl"
+    )
+
+
+@pytest.mark.parametrize(
+    "record", [chance_record(), win_loss_record(), flat_record(var=None, cov=np.eye(3).tolist())]
+)
+def test_every_kind_of_tree_is_priced_or_refused_by_name(tmp_path, capsys, record):
+    """Never approximated silently: a sampling method says so in its name."""
+    path = tmp_path / "one.jsonl"
+    path.write_text(json.dumps(record))
+    code = run(["price", str(path)])
+    out, err = capsys.readouterr()
+    if code == 0:
+        assert json.loads(out)["method"]
+    else:
+        assert code == 2
+        assert err.count("\n") == 1
+
+
+def test_tolerance_is_honoured_or_refused(trees, capsys):
+    assert run(["price", str(trees), "--tolerance", "1e-6"]) == 0
+    capsys.readouterr()
+    assert "tolerance" in refused(capsys, "price", trees, "--tolerance", "1e-40")
+
+
+@pytest.mark.parametrize(
+    "argv",
+    [
+        ["price", "x", "--value", "-1"],
+        ["price", "x", "--value", "nan"],
+        ["price", "x", "--batch", "0"],
+        ["price", "x", "--batch", "2", "--rate"],
+        ["price", "x", "--remaining", "1.5"],
+        ["price", "x", "--tolerance", "0"],
+        ["generate", "--out", "d"],
+        ["ship", "d", "--out", "s.onnx", "--latency", "fast"],
+        [],
+        ["haul"],
+    ],
+)
+def test_bad_flags_exit_2(argv, capsys):
+    with pytest.raises(SystemExit) as caught:
+        run(argv)
+    assert caught.value.code == 2
+    assert "error:" in capsys.readouterr().err
+
+
+def test_module_runs_from_anywhere(tmp_path, trees):
+    done = subprocess.run(
+        [sys.executable, "-m", "distill", "price", str(trees)],
+        cwd=tmp_path,
+        capture_output=True,
+        text=True,
+        check=True,
+    )
+    assert len(done.stdout.splitlines()) == 2

@@ -100,10 +100,10 @@ class Metrics:
     level: float
 
     def to_json(self) -> dict[str, object]:
-        """Plain numbers for a sheet."""
+        """Plain numbers for a sheet; None for a figure that no tree defines."""
 
-        def plain(e: Estimate) -> dict[str, float]:
-            return {"value": e.value, "low": e.low, "high": e.high}
+        def plain(e: Estimate) -> dict[str, float | None]:
+            return {k: None if np.isnan(x) else x for k, x in vars(e).items()}
 
         return {
             "forgone_percent": plain(self.forgone),

@@ -112,8 +112,8 @@ def _accuracy_row(name: str, m: Mapping[str, Any]) -> str:
 _FIGURES = ("forgone_percent", "relative_forgone_percent", "top1_percent", "rank_correlation")
 
 
-def _estimate(e: Mapping[str, float] | None) -> str:
-    if e is None:
+def _estimate(e: Mapping[str, float | None] | None) -> str:
+    if e is None or e["value"] is None:
         return ""
     text = f"{e['value']:.3g}"
     return f"{text} [{e['low']:.3g}, {e['high']:.3g}]" if "low" in e else text

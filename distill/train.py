@@ -111,10 +111,7 @@ def train(
     out.mkdir(parents=True, exist_ok=True)
     with bar("features", 2 + 2 * len(chosen), "steps", shown=progress) as advance:
         graph = FeatureGraph()
-        fit, choose, held_out = (
-            graph.matrix({**c.columns, "tree": c.tree}) for c in (split.fit, split.choose, split.held_out)
-        )
-        del choose
+        fit, held_out = (graph.matrix({**c.columns, "tree": c.tree}) for c in (split.fit, split.held_out))
         cases = decisions({**split.held_out.columns, "tree": split.held_out.tree}, _LEAVES, 50, seed)
         scorers: list[dict[str, Any]] = []
         for recipe in chosen:

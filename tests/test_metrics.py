@@ -149,6 +149,9 @@ def test_json_is_plain() -> None:
     sheet = json.loads(json.dumps(measure(tree, exact, score, prices=[1.0]).to_json()))
     assert sheet["forgone_percent"].keys() == {"value", "low", "high"}
     assert sheet["stop_loss"][0]["price"] == 1.0
+    undefined = measure([0, 1], np.zeros(2), np.zeros(2)).to_json()
+    assert undefined["forgone_percent"] == {"value": None, "low": None, "high": None}
+    json.dumps(undefined, allow_nan=False)
 
 
 @pytest.mark.parametrize(

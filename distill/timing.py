@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from distill import schema
+from distill.metrics import Groups
 from distill.query import Query
 from distill.runtime import Scorer
 from distill.tree import BeliefTree
@@ -50,20 +51,19 @@ class Decision:
 def decisions(columns: Mapping[str, NDArray[Any]], n_leaves: int, count: int, seed: int) -> list[Decision]:
     """Decisions of exactly `n_leaves` leaves, pooled from candidate rows.
 
-    columns : candidate rows of many trees, with `tree` and `remaining`. Each decision pools whole trees
-    drawn at random, joined action by action, until it has enough leaves, so its leaves are such as the
-    scorer meets; `remaining` comes from the first.
+    columns : candidate rows of many trees, with `tree` and `remaining`. Each decision pools trees drawn
+    at random, each in units of its own scale and joined action by action, until it has enough leaves, so
+    its leaves are such as the scorer meets; `remaining` comes from the first.
     """
     rng = np.random.default_rng(seed)
-    tree = columns["tree"]
-    starts = np.flatnonzero(np.r_[True, tree[1:] != tree[:-1]])
-    ends = np.r_[starts[1:], len(tree)]
+    groups = Groups.of(columns["tree"])
+    columns = _in_units_of_scale(columns, groups)
     out = []
     for _ in range(count):
         rows: list[int] = []
         while len(rows) < n_leaves:
-            t = int(rng.integers(len(starts)))
-            rows.extend(range(starts[t], ends[t]))
+            t = int(rng.integers(len(groups.starts)))
+            rows.extend(range(groups.starts[t], groups.starts[t] + groups.sizes[t]))
         at = np.array(rows[:n_leaves])
         at = at[np.argsort(columns["action"][at], kind="stable")]
         arrays = {name: np.ascontiguousarray(columns[name][at]) for name in _COLUMNS}
@@ -71,6 +71,14 @@ def decisions(columns: Mapping[str, NDArray[Any]], n_leaves: int, count: int, se
         remaining = max(1, int(columns["remaining"][rows[0]]))
         out.append(Decision(arrays, remaining, tree_of(arrays)))
     return out
+
+
+def _in_units_of_scale(columns: Mapping[str, NDArray[Any]], groups: Groups) -> dict[str, NDArray[Any]]:
+    """The same rows with each tree's scale as its unit of utility."""
+    scale = groups.highest(columns["gain"] * np.sqrt(columns["var"]))
+    unit = groups.spread(np.where(scale > 0, scale, 1.0))
+    powers = {"mean": 1, "offset": 1, "cost": 1, "var": 2, "noise_var": 2}
+    return {name: x / unit ** powers[name] if name in powers else x for name, x in columns.items()}
 
 
 def tree_of(arrays: Mapping[str, NDArray[Any]]) -> BeliefTree:

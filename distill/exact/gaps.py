@@ -27,7 +27,7 @@ _DECISION, _CHANCE, _LEAF = schema.DECISION, schema.CHANCE, schema.LEAF
 
 @dataclass(frozen=True)
 class PostOrder:
-    """The nodes in post-order, each subtree in one piece; columns of shape (n_kept,) unless said.
+    """The nodes in post-order, siblings in order; columns of shape (n_kept,) unless said.
 
     kind, leaf : as in schema; leaf position, -1 on inner nodes.
     n_children : after merging.
@@ -124,17 +124,18 @@ def _walk(
             gap_err[c] = gain[p] * (slip[c] + slip[p]) + (gap_err[p] if top != p else 0.0)
         if kind[c] == kind[p] and (merge_root or p > 0):
             group[c] = top
-        else:
+    for c in range(n - 1, 0, -1):
+        gap_err[c] += (4 * depth[c] + 2) * _EPS * gap[c]
+        if group[c] == c:
+            top = group[parent[c]]
             n_children[top] += 1
             next_sibling[c] = first_child[top]
             first_child[top] = c
-    for c in range(1, n):
-        gap_err[c] += (4 * depth[c] + 2) * _EPS * gap[c]
     order = np.empty(n, dtype=np.int64)
     stack = np.empty(n, dtype=np.int64)
     stack[0] = 0
     waiting, done = 1, n
-    while waiting > 0:  # parents before children, written from the back
+    while waiting > 0:  # a parent, then its children from the last to the first; written from the back
         waiting -= 1
         v = stack[waiting]
         done -= 1

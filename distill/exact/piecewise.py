@@ -24,7 +24,7 @@ from distill import schema
 from distill.numerics import compiled, gain, norm_cdf, norm_pdf
 from distill.tree import Floats, Ints
 
-__all__ = ["expected_rise", "root_breakpoints"]
+__all__ = ["expected_rise", "node_functions", "root_breakpoints", "work_arrays"]
 
 _EPS = 2.0**-52
 _REACH = 40.0  # standard deviations: f(-40) is below the smallest double
@@ -55,29 +55,23 @@ def root_breakpoints(
     n_leaves, n_nodes = slopes.shape[0], len(kind)
     start = np.zeros(n_leaves + 1, dtype=np.int64)
     out = np.empty((4, 8 * n_leaves + 64))
-    stack = np.empty((4, n_nodes))  # functions: slope at 0, its error, gap, gap error
-    first = np.zeros(n_nodes + 1, dtype=np.int64)  # where a function's breakpoints begin
-    point = np.empty((4, n_leaves + 1))
-    line = np.empty((_ROWS, n_leaves + 1))
-    hull = np.empty(n_leaves + 1, dtype=np.int64)
+    stack, first, point, line, hull = work_arrays(n_nodes, n_leaves)
     for i in range(n_leaves):
-        top = 0
-        for v in range(n_nodes):
-            if kind[v] == _LEAF:
-                stack[0, top] = slopes[i, leaf[v]]
-                stack[1, top] = 4 * _EPS * abs(stack[0, top])
-                first[top + 1] = first[top]
-            else:
-                low = top - n_children[v]
-                end = first[top]
-                if kind[v] == _DECISION:
-                    end = _maximum(low, top, stack, first, point, line, hull, _REACH * sd[i])
-                elif top - low > 1:
-                    _sum(low, top, stack, first, point)
-                first[low + 1] = end
-                top = low
-            stack[2, top], stack[3, top] = gap[v], gap_err[v]
-            top += 1
+        node_functions(
+            kind,
+            n_children,
+            leaf,
+            gap,
+            gap_err,
+            slopes[i],
+            _REACH * sd[i],
+            n_nodes,
+            stack,
+            first,
+            point,
+            line,
+            hull,
+        )
         a, b = start[i], start[i] + first[1]
         if b > out.shape[1]:
             grown = np.empty((4, 2 * b))
@@ -86,6 +80,59 @@ def root_breakpoints(
         out[:, a:b] = point[:, : first[1]]
         start[i + 1] = b
     return start, out[:, : start[n_leaves]].copy()
+
+
+@compiled
+def node_functions(
+    kind: Ints,
+    n_children: Ints,
+    leaf: Ints,
+    gap: Floats,
+    gap_err: Floats,
+    slopes: Floats,
+    reach: float,
+    n_nodes: int,
+    stack: Floats,
+    first: Ints,
+    point: Floats,
+    line: Floats,
+    hull: Ints,
+) -> int:
+    """Walk the first n_nodes nodes in post-order; functions left: all roots of the subtrees walked.
+
+    stack (4, n): slope at 0, its error, gap, gap error of each function left; its breakpoints are at
+    first[f]:first[f + 1] of point. Breakpoints further out than `reach` are dropped.
+    """
+    top = 0
+    for v in range(n_nodes):
+        if kind[v] == _LEAF:
+            stack[0, top] = slopes[leaf[v]]
+            stack[1, top] = 4 * _EPS * abs(stack[0, top])
+            first[top + 1] = first[top]
+        else:
+            low = top - n_children[v]
+            end = first[top]
+            if kind[v] == _DECISION:
+                end = _maximum(low, top, stack, first, point, line, hull, reach)
+            elif top - low > 1:
+                _sum(low, top, stack, first, point)
+            first[low + 1] = end
+            top = low
+        stack[2, top], stack[3, top] = gap[v], gap_err[v]
+        top += 1
+    return top
+
+
+@compiled
+def work_arrays(n_nodes: int, n_leaves: int) -> tuple[Floats, Ints, Floats, Floats, Ints]:
+    """stack, first, point, line, hull of `node_functions`."""
+    return (
+        np.empty((4, n_nodes)),
+        np.zeros(n_nodes + 1, dtype=np.int64),
+        np.empty((4, n_leaves + 1)),
+        np.empty((_ROWS, n_leaves + 1)),
+        np.empty(n_leaves + 1, dtype=np.int64),
+    )
 
 
 @compiled

@@ -17,7 +17,7 @@ from distill.exact.piecewise import expected_rise, root_breakpoints
 from distill.query import Priced, Query
 from distill.tree import BeliefTree, Floats, Ints
 
-__all__ = ["METHOD", "price"]
+__all__ = ["METHOD", "directions", "price"]
 
 METHOD = "static dense, closed form"
 
@@ -60,7 +60,7 @@ def price(tree: BeliefTree, query: Query) -> Priced:
         program.leaf,
         program.gap,
         program.gap_err,
-        _directions(cov) * program.gain,
+        directions(cov) * program.gain,
         sd_of_t(leaves, max(most, 1)),
     )
 
@@ -78,7 +78,7 @@ def price(tree: BeliefTree, query: Query) -> Priced:
     return Priced(voc, batch, program.value, error, METHOD)
 
 
-def _directions(cov: Floats) -> Floats:
+def directions(cov: Floats) -> Floats:
     """Row i: the change of every leaf mean along leaf i's line; |S_li| at most sqrt(S_ii S_ll)."""
     sd = np.sqrt(np.maximum(np.diag(cov), 0))
     most = sd[:, None] * sd

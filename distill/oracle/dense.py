@@ -4,7 +4,7 @@ root_value(tree, x)           the root maximum at leaf values x, straight from t
 static_voc(tree, leaf, k)     horizon 0, adaptive quadrature of the definition along the line m + b Z
 static_voc_policies(...)      horizon 0, every policy's line, in mpmath at any precision: small trees
 expected_max(mean, cov)       E[max] of up to three normals in any dependence (Afonja 1972)
-action_values(tree, h, ...)   V_h of every root action of a decision-only tree, up to three leaves an action
+action_values(tree, ...)      V_h of every root action, at most three affine options at a decision node
 voc(tree, leaf, k, h)         horizon h > 0 of such trees: adaptive quadrature outside, closed form inside
 monte_carlo_voc(...)          any horizon and tree: plain nested sampling, with its standard error
 """
@@ -18,7 +18,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import integrate, stats
+from scipy import integrate, special
 
 from distill import schema
 from distill.tree import BeliefTree
@@ -36,6 +36,10 @@ __all__ = [
 ]
 
 Array = NDArray[np.float64]
+
+
+def _density(z: float) -> float:
+    return math.exp(-z * z / 2) / math.sqrt(2 * math.pi)
 
 
 def action_worth(tree: BeliefTree, x: Array) -> list[float]:
@@ -98,7 +102,7 @@ def static_voc(tree: BeliefTree, leaf: int, k: int) -> float:
     total = 0.0
     for a, c in itertools.pairwise(edges):
         total += integrate.quad(
-            lambda z: (rise(z) - tangent * z) * stats.norm.pdf(z), a, c, epsabs=1e-15, epsrel=1e-12, limit=200
+            lambda z: (rise(z) - tangent * z) * _density(z), a, c, epsabs=1e-15, epsrel=1e-12, limit=200
         )[0]
     return total
 
@@ -193,7 +197,7 @@ def expected_max(mean: Array, cov: Array) -> float:
         rivals = [j for j in range(n) if j != i]
         d = [(mean[i] - mean[j]) / a(i, j) for j in rivals]
         if n == 2:
-            total += mean[i] * stats.norm.cdf(d[0]) + a(i, rivals[0]) * stats.norm.pdf(d[0]) / 2
+            total += mean[i] * special.ndtr(d[0]) + a(i, rivals[0]) * _density(d[0]) / 2
             continue
         j, k = rivals
         # Correlation of X_i - X_j and X_i - X_k.
@@ -202,53 +206,66 @@ def expected_max(mean: Array, cov: Array) -> float:
         for (x, y), r in (((0, 1), j), ((1, 0), k)):
             # Given X_i = X_r the other rival loses with this probability.
             rest = (d[y] - rho * d[x]) / math.sqrt(1 - rho * rho)
-            total += a(i, r) * stats.norm.pdf(d[x]) * stats.norm.cdf(rest) / 2
+            total += a(i, r) * _density(d[x]) * special.ndtr(rest) / 2
     return float(total)
 
 
 def _bivariate_cdf(h: float, k: float, rho: float) -> float:
-    """P(X <= h, Y <= k), standard normals of correlation rho, |rho| < 1, by conditioning on X."""
+    """P(X <= h, Y <= k), standard normals of correlation rho, |rho| < 1, by Owen's T (Owen 1956, eq. 2.1)."""
+    h, k = h or 1e-300, k or 1e-300
     c = math.sqrt(1 - rho * rho)
-    top = min(h, 9.0)
-    return float(
-        integrate.quad(
-            lambda x: stats.norm.pdf(x) * stats.norm.cdf((k - rho * x) / c), -9, top, epsabs=1e-13, limit=200
-        )[0]
-        if top > -9
-        else 0.0
-    )
-
-
-def _affine(tree: BeliefTree) -> tuple[Array, Array, NDArray[np.int64]]:
-    """Gain, offset and root action of every leaf of a decision-only tree."""
-    gain, offset, action = [], [], []
-    for v in tree.leaf_nodes.tolist():
-        path = [v]
-        while path[-1] != 0:
-            path.append(int(tree.parent[path[-1]]))
-        g, o = 1.0, 0.0
-        for c in reversed(path[:-1]):
-            o += g * float(tree.reward[c])
-            g *= float(tree.discount[c])
-        gain.append(g)
-        offset.append(o)
-        action.append(tree.action_nodes.tolist().index(path[-2]))
-    return np.array(gain), np.array(offset), np.array(action)
+    tails = special.owens_t(h, (k / h - rho) / c) + special.owens_t(k, (h / k - rho) / c)
+    return float((special.ndtr(h) + special.ndtr(k)) / 2 - tails - (0.5 if h * k < 0 else 0.0))
 
 
 def action_values(tree: BeliefTree, mean: Array, R: Array) -> list[float]:
-    """V(a) = E[Q_a(M)], M ~ N(mean, R), on a decision-only tree of up to three leaves an action."""
-    gain, offset, action = _affine(tree)
-    out = []
-    for a in range(len(tree.action_nodes)):
-        own = np.flatnonzero(action == a)
-        g = gain[own]
-        out.append(expected_max(g * mean[own] + offset[own], g[:, None] * g * R[np.ix_(own, own)]))
-    return out
+    """V(a) = E[Q_a(M)], M ~ N(mean, R), where at most three affine options meet at each decision node.
+
+    Chance nodes keep expectations linear, wherever they are; a decision node must lie above affine
+    options only (leaves, or chance nodes without a choice below), nested decision nodes counting as one.
+    """
+    leaf = {int(v): i for i, v in enumerate(tree.leaf_nodes)}
+
+    def options(v: int) -> list[tuple[Array, float]] | None:
+        """The affine options between which V(v) is the best; None where there is more to it."""
+        if v in leaf:
+            return [(np.eye(tree.n_leaves)[leaf[v]], 0.0)]
+        below = []
+        for c in np.flatnonzero(tree.parent == v).tolist():
+            under = options(c)
+            if under is None:
+                return None
+            g, r = float(tree.discount[c]), float(tree.reward[c])
+            below.append([(g * w, r + g * q) for w, q in under])
+        if tree.kind[v] == schema.DECISION:
+            return [line for lines in below for line in lines]
+        if any(len(lines) > 1 for lines in below):
+            return None
+        p = tree.prob[np.flatnonzero(tree.parent == v)]
+        return [
+            (
+                np.sum([x * lines[0][0] for x, lines in zip(p, below, strict=True)], axis=0),
+                math.fsum(x * lines[0][1] for x, lines in zip(p.tolist(), below, strict=True)),
+            )
+        ]
+
+    def expected(v: int) -> float:
+        lines = options(v)
+        if lines is not None:
+            W = np.array([w for w, _ in lines])
+            return expected_max(W @ mean + [q for _, q in lines], W @ R @ W.T)
+        if tree.kind[v] == schema.DECISION:
+            raise ValueError("a decision node above chance nodes that lie above decision nodes")
+        return math.fsum(
+            float(tree.prob[c]) * (float(tree.reward[c]) + float(tree.discount[c]) * expected(c))
+            for c in np.flatnonzero(tree.parent == v).tolist()
+        )
+
+    return [float(tree.reward[a]) + float(tree.discount[a]) * expected(int(a)) for a in tree.action_nodes]
 
 
 def voc(tree: BeliefTree, leaf: int, k: int, h: float) -> float:
-    """VOC_h of a decision-only tree of up to three leaves an action; absolute error about 1e-10 of scale."""
+    """VOC_h of a tree that `action_values` covers; absolute error about 1e-10 of scale."""
     assert tree.noise_var is not None
     b, left = posterior(tree, leaf, k)
     m = np.asarray(tree.mean)
@@ -256,7 +273,7 @@ def voc(tree: BeliefTree, leaf: int, k: int, h: float) -> float:
     R = resolved_covariance(left, tree.noise_var, h)
 
     def rise(z: float) -> float:
-        return (max(action_values(tree, m + b * z, R)) - now) * float(stats.norm.pdf(z))
+        return (max(action_values(tree, m + b * z, R)) - now) * float(_density(z))
 
     edges = np.linspace(-9, 9, 19)
     return math.fsum(

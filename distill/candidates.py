@@ -77,6 +77,7 @@ class Candidates:
                 "seed": manifest["seed"],
                 "dataset_sha256": sha256_of(folder / MANIFEST),
                 "trees": manifest["totals"]["trees"],
+                "candidates": manifest["totals"]["candidates"],
                 "aside": manifest["totals"]["aside"],
             },
         }

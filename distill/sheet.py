@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import os
 from collections.abc import Mapping, Sequence
 from pathlib import Path
@@ -28,7 +29,7 @@ FRONT_FILE: Final = "front.json"  # beside the scorer files that `train` leaves
 def write_sheet(sheet: Mapping[str, Any], scorer_file: str | os.PathLike[str]) -> tuple[Path, Path]:
     """Write the sheet beside the scorer file, as `<name>.json` and `<name>.md`; returns the two paths."""
     page, data = Path(scorer_file).with_suffix(".md"), Path(scorer_file).with_suffix(".json")
-    write_atomic(data, (json.dumps(sheet, indent=1, allow_nan=True) + "\n").encode())
+    write_atomic(data, (json.dumps(sheet, indent=1, allow_nan=False) + "\n").encode())
     write_atomic(page, sheet_page(sheet).encode())
     return data, page
 
@@ -97,11 +98,12 @@ def front_table(scorers: Sequence[Mapping[str, Any]]) -> list[str]:
 
 
 def _value_text(value: Mapping[str, Any]) -> str:
-    h = value["horizon"]
-    which = {"inf": "dynamic", 0: "static"}.get(h, f"horizon {h}")
+    h = float(value["horizon"])
+    kind = {math.inf: "dynamic {}", 0.0: "static {}"}.get(h, f"{{}} at horizon {h:g}")
     if value["batch"] is None:
-        return f"Scores the {which} rate: the best VOC a rollout over batches within the rollouts left"
-    return f"Scores the {which} VOC of {value['batch']} rollout(s)"
+        what = kind.format("rate")
+        return f"Scores the {what}: the best VOC a rollout over batches within the rollouts left"
+    return f"Scores the {kind.format('VOC')} of {value['batch']} rollout{'s' * (value['batch'] != 1)}"
 
 
 def _accuracy_row(name: str, m: Mapping[str, Any]) -> str:

@@ -140,7 +140,7 @@ def train(
         "made_with": _made_with(),
         "train_seconds": round(time.perf_counter() - started, 2),
     }
-    write_atomic(out / FRONT_FILE, (json.dumps(front, indent=1) + "\n").encode())
+    write_atomic(out / FRONT_FILE, (json.dumps(front, indent=1, allow_nan=False) + "\n").encode())
     return front
 
 

@@ -1,0 +1,171 @@
+"""Training from a dataset to a front of scorer files: no leak, same bytes, honest figures, clear errors."""
+
+from __future__ import annotations
+
+import json
+import os
+import subprocess
+import sys
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+from small_dataset import labelled
+
+from distill import candidates
+from distill.candidates import Candidates, split_by_tree
+from distill.errors import InputError
+from distill.metrics import Groups
+from distill.runtime import Scorer
+from distill.sheet import FRONT_FILE
+from distill.train import RECIPES, _mark_front, row_weights, train
+
+TREES = 250
+QUICK = ["linear", "boosting 25x8", "dense 32-32"]
+
+
+@pytest.fixture(scope="module")
+def dataset(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    return labelled(tmp_path_factory.mktemp("train") / "data", trees=TREES)
+
+
+@pytest.fixture(scope="module")
+def trained(dataset: Path) -> tuple[Path, dict[str, Any]]:
+    folder = dataset.parent / "front"
+    return folder, train(dataset, folder, seed=2, recipes=QUICK, n_boot=200)
+
+
+def test_the_front_beats_the_closed_forms_on_held_out_trees(trained: tuple[Path, dict[str, Any]]) -> None:
+    _, front = trained
+    forgone = {e["recipe"]: e["held_out"]["forgone_percent"]["value"] for e in front["scorers"]}
+    beside = {name: m["forgone_percent"]["value"] for name, m in front["beside"].items()}
+    assert forgone["dense 32-32"] < beside["first-order closed form"]
+    assert beside["first-order closed form"] < beside["static closed form"] < beside["random pick"]
+    for entry in front["scorers"]:
+        accuracy = entry["held_out"]
+        assert accuracy["forgone_percent"]["low"] <= accuracy["forgone_percent"]["value"]
+        assert accuracy["forgone_percent"]["value"] <= accuracy["forgone_percent"]["high"]
+        assert accuracy["relative_forgone_percent"]["value"] < 5
+        assert accuracy["in_range_percent"] > 95
+
+
+def test_every_file_of_the_front_loads_and_is_the_one_measured(trained: tuple[Path, dict[str, Any]]) -> None:
+    folder, front = trained
+    assert [e["recipe"] for e in front["scorers"]] == QUICK
+    for entry in front["scorers"]:
+        scorer = Scorer.load(folder / entry["file"], strict=True)
+        assert scorer.facts["about"]["recipe"] == entry["recipe"]
+        assert scorer.facts["about"]["value"] == {"horizon": "inf", "batch": None}
+        assert entry["bytes"] == (folder / entry["file"]).stat().st_size
+        assert 0 < entry["latency"]["p50_us"] <= entry["latency"]["p99_us"]
+    assert {p.name for p in folder.iterdir()} == {FRONT_FILE, *(e["file"] for e in front["scorers"])}
+
+
+def test_front_json_is_what_train_returns(trained: tuple[Path, dict[str, Any]]) -> None:
+    folder, front = trained
+    written = json.loads((folder / FRONT_FILE).read_text(), parse_constant=pytest.fail)
+    assert written == json.loads(json.dumps(front))
+    parts = front["parts"]
+    assert sum(p["trees"] for p in parts.values()) == TREES
+    assert sum(p["candidates"] for p in parts.values()) == front["data"]["candidates"]
+    assert front["exact"]["dynamic rate"]["p50_us"] > 0
+    assert front["data"]["source"] == "cold-store"
+
+
+def test_labels_of_held_out_trees_do_not_touch_the_scorer(
+    dataset: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    whole, about = Candidates.read(dataset)
+    split = split_by_tree(whole, 2)
+
+    def trained_with(spoiled: Candidates, name: str) -> list[bytes]:
+        rng = np.random.default_rng(0)
+        label = whole.label.copy()
+        at = np.isin(whole.tree, spoiled.tree)
+        label[at] = rng.permutation(label[at]) * 100
+        monkeypatch.setattr(
+            candidates.Candidates, "read", classmethod(lambda *_: (replace(whole, label=label), about))
+        )
+        recipes = ["linear", "boosting 25x8"]
+        front = train(dataset, tmp_path / name, seed=2, recipes=recipes, n_boot=2)
+        return [(tmp_path / name / e["file"]).read_bytes() for e in front["scorers"]]
+
+    nothing = trained_with(whole.of_trees(np.zeros(TREES, dtype=bool)), "clean")
+    assert trained_with(split.held_out, "held-out") == nothing
+    assert trained_with(split.choose, "choose") == nothing
+    assert all(a != b for a, b in zip(trained_with(split.fit, "fit"), nothing, strict=True))
+
+
+def test_same_bytes_twice_whatever_the_threads(
+    trained: tuple[Path, dict[str, Any]], dataset: Path, tmp_path: Path
+) -> None:
+    folder, front = trained
+    program = (
+        "import sys; from distill.train import train; "
+        f"train(sys.argv[1], sys.argv[2], seed=2, recipes={QUICK!r}, n_boot=2)"
+    )
+    for threads in ("1", "2"):
+        env = {**os.environ, "OMP_NUM_THREADS": threads, "OPENBLAS_NUM_THREADS": threads}
+        again = tmp_path / threads
+        subprocess.run([sys.executable, "-c", program, dataset, again], check=True, env=env, timeout=300)
+        for entry in front["scorers"]:
+            assert (again / entry["file"]).read_bytes() == (folder / entry["file"]).read_bytes()
+
+
+def test_another_seed_splits_anew_and_gives_another_file(
+    trained: tuple[Path, dict[str, Any]], dataset: Path, tmp_path: Path
+) -> None:
+    folder, front = trained
+    other = train(dataset, tmp_path / "front", seed=3, recipes=["linear"], n_boot=2)
+    assert other["parts"] != front["parts"]
+    assert (tmp_path / "front" / "linear.onnx").read_bytes() != (folder / "linear.onnx").read_bytes()
+
+
+def test_rows_weigh_by_their_worth_within_their_tree_whatever_its_unit() -> None:
+    groups = Groups.of([0, 0, 0, 1, 1, 2])
+    label = np.array([1.0, 0.5, 0.0, 4e-30, 2e-30, 0.0])
+    assert row_weights(groups, label) == pytest.approx([1.001, 0.251, 0.001, 1.001, 0.251, 0.001])
+
+
+def test_the_front_holds_what_no_other_beats_in_both() -> None:
+    def entry(us: float, loss: float) -> dict[str, Any]:
+        return {"latency": {"p50_us": us}, "choose": {"forgone_percent": {"value": loss}}}
+
+    front = [entry(10, 5.0), entry(20, 1.0), entry(30, 1.0), entry(40, 0.5), entry(15, 5.0), entry(40, 0.5)]
+    _mark_front(front)
+    assert [e["on_front"] for e in front] == [True, True, False, True, False, True]
+
+
+def test_recipes_cover_the_three_learners() -> None:
+    kinds = {type(r.make(0)).__name__ for r in RECIPES.values()}
+    assert kinds == {"LinearLearner", "BoostingLearner", "DenseLearner"}
+    assert len({r.file for r in RECIPES.values()}) == len(RECIPES)
+
+
+@pytest.mark.parametrize(
+    ("recipes", "message"),
+    [(["forest"], "recipes: must be among linear, .*; got 'forest'"), ([], "must name at least one")],
+)
+def test_unknown_recipes_are_named(dataset: Path, tmp_path: Path, recipes: list[str], message: str) -> None:
+    with pytest.raises(InputError, match=message):
+        train(dataset, tmp_path / "front", recipes=recipes)
+    assert not (tmp_path / "front").exists()
+
+
+def test_a_dataset_too_small_to_split_is_named(tmp_path: Path) -> None:
+    with pytest.raises(InputError, match="trees enough for the part"):
+        train(labelled(tmp_path / "data", trees=2), tmp_path / "front")
+    assert not (tmp_path / "front").exists()
+
+
+@pytest.mark.slow
+def test_accuracy_on_the_default_family(tmp_path: Path) -> None:
+    """8,000 trees: the figures that the project promises, on held-out trees."""
+    front = train(labelled(tmp_path / "data", trees=8000, seed=1), tmp_path / "front")
+    forgone = {e["recipe"]: e["held_out"]["forgone_percent"]["value"] for e in front["scorers"]}
+    relative = {e["recipe"]: e["held_out"]["relative_forgone_percent"]["value"] for e in front["scorers"]}
+    assert min(forgone.values()) <= 0.10
+    assert min(x for name, x in forgone.items() if "boosting" in name) <= 0.25
+    assert min(relative.values()) <= 1.0

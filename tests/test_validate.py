@@ -1,0 +1,128 @@
+"""A scorer file against labelled trees: the right trees, the right figures, the closed forms beside it."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+from ladder import CLOSED_FORM, RELATIVE_TAIL
+from small_dataset import labelled
+
+from distill.candidates import Candidates, split_by_tree
+from distill.errors import InputError
+from distill.features import FeatureGraph
+from distill.metrics import measure
+from distill.query import Query
+from distill.runtime import Scorer
+from distill.shards import read_trees
+from distill.train import train
+from distill.validate import baselines, examine, static_rates, validate
+from distill.voc import price
+
+
+@pytest.fixture(scope="module")
+def shipped(tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, Path, dict[str, Any]]:
+    folder = tmp_path_factory.mktemp("validate")
+    dataset = labelled(folder / "data", trees=300)
+    front = train(dataset, folder / "front", seed=4, recipes=["linear"], n_boot=200)
+    return folder / "front" / "linear.onnx", dataset, front
+
+
+def test_on_its_own_dataset_only_held_out_trees_count(shipped: tuple[Path, Path, dict[str, Any]]) -> None:
+    file, dataset, front = shipped
+    found = validate(file, dataset, n_boot=200, seed=4)
+    assert found["part"] == "held_out"
+    assert found["accuracy"]["trees"] == front["parts"]["held_out"]["trees"] < 300
+    assert found["accuracy"] == front["scorers"][0]["held_out"]
+    assert found["beside"] == front["beside"]
+    json.dumps(found, allow_nan=False)
+
+
+def test_more_trees_of_the_same_draw_do_not_bring_training_trees_back(
+    shipped: tuple[Path, Path, dict[str, Any]], tmp_path: Path
+) -> None:
+    file, dataset, _ = shipped
+    longer = labelled(tmp_path / "data", trees=400)  # trees 0 to 299 are those of training
+    found = validate(file, longer, n_boot=2)
+    fit = set(split_by_tree(Candidates.read(dataset)[0], 4).fit.tree.tolist())
+    kept = set(split_by_tree(Candidates.read(longer)[0], 4).held_out.tree.tolist())
+    assert found["part"] == "held_out"
+    assert found["accuracy"]["trees"] == len(kept)
+    assert not fit & kept
+
+
+def test_on_fresh_trees_all_count(shipped: tuple[Path, Path, dict[str, Any]], tmp_path: Path) -> None:
+    file, _, _ = shipped
+    found = validate(Scorer.load(file), labelled(tmp_path / "data", trees=60, seed=77), n_boot=50)
+    assert found["part"] == "all"
+    assert found["accuracy"]["trees"] == 60
+
+
+def test_figures_are_those_of_picks_made_one_tree_at_a_time(
+    shipped: tuple[Path, Path, dict[str, Any]], tmp_path: Path
+) -> None:
+    file, _, _ = shipped
+    scorer = Scorer.load(file)
+    dataset = labelled(tmp_path / "data", trees=50, seed=78)
+    whole, _ = Candidates.read(dataset)
+    lost = best = 0.0
+    for a, n in zip(whole.groups.starts, whole.groups.sizes, strict=True):
+        table = {name: x[a : a + n] for name, x in whole.columns.items()}
+        table["cost"] = np.zeros(n)  # the figures rank by gross value
+        pick = scorer.pick(**{**table, "remaining": table["remaining"][0]})
+        lost += whole.label[a : a + n].max() - whole.label[a + pick]
+        best += whole.label[a : a + n].max()
+    found = examine(scorer, whole, prices=[0.01, 1.0], n_boot=2)
+    assert found["forgone_percent"]["value"] == pytest.approx(100 * lost / best, rel=CLOSED_FORM)
+    assert [e["price"] for e in found["stop_loss"]] == [0.01, 1.0]
+
+
+def test_static_rates_are_the_exact_engines(tmp_path: Path) -> None:
+    dataset = labelled(tmp_path / "data", trees=30)
+    whole, _ = Candidates.read(dataset)
+    expected = [
+        price(tree, Query(horizon=0.0, batch=None, remaining=tree.remaining)).voc
+        for _, tree in read_trees(dataset)
+    ]
+    # The tree is rebuilt flat, so rewards add up in another order.
+    assert static_rates(whole) == pytest.approx(np.concatenate(expected), rel=RELATIVE_TAIL, abs=0)
+
+
+def test_closed_forms_are_measured_like_scorers(tmp_path: Path) -> None:
+    whole, _ = Candidates.read(labelled(tmp_path / "data", trees=60))
+    first = FeatureGraph().matrix({**whole.columns, "tree": whole.tree}).first_order
+    beside = baselines(whole, first, n_boot=50, seed=1)
+    assert (
+        beside["first-order closed form"]
+        == measure(whole.tree, whole.label, first, n_boot=50, seed=1).to_json()
+    )
+    assert set(beside) == {"static closed form", "first-order closed form", "random pick"}
+
+
+def test_exact_labels_as_scores_lose_nothing(
+    shipped: tuple[Path, Path, dict[str, Any]], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    file, _, _ = shipped
+    whole, _ = Candidates.read(labelled(tmp_path / "data", trees=40, seed=79))
+    scorer = Scorer.load(file)
+    real = scorer.score
+
+    def perfect(**columns: Any) -> Any:
+        return real(**columns)._replace(voc=whole.label)
+
+    monkeypatch.setattr(scorer, "score", perfect)
+    found = examine(scorer, whole, prices=[0.1], n_boot=2)
+    assert found["forgone_percent"]["value"] == 0
+    assert found["stop_loss"][0]["value"] == 0
+
+
+def test_a_dataset_of_another_value_is_refused(
+    shipped: tuple[Path, Path, dict[str, Any]], tmp_path: Path
+) -> None:
+    file, _, _ = shipped
+    static = labelled(tmp_path / "data", trees=30, horizon=0.0)
+    with pytest.raises(InputError, match="value: must be the scorer's"):
+        validate(file, static)

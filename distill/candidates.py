@@ -3,14 +3,16 @@
 from __future__ import annotations
 
 import hashlib
+import json
 import math
 import os
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
+import pyarrow.parquet as pq
 from numpy.typing import NDArray
 
 from distill.errors import InputError, RefusedError
@@ -32,6 +34,8 @@ class Candidates:
 
     columns : LEAF_COLUMNS, each of shape (n,). tree : the tree of each row. label : exact value, u a
     rollout for a rate. batch : rollouts of the label. error : bound on the label's error, same unit.
+    is_rate : whether the label is a rate. decision : of recorded trees, a number of the decision that each
+    row's tree was met in; None where no record says.
     """
 
     columns: Mapping[str, NDArray[Any]]
@@ -40,6 +44,7 @@ class Candidates:
     batch: Floats
     error: Floats
     is_rate: bool = True
+    decision: NDArray[np.uint64] | None = None
 
     @classmethod
     def read(cls, dataset: str | os.PathLike[str]) -> tuple[Candidates, dict[str, Any]]:
@@ -84,9 +89,9 @@ class Candidates:
         columns = {name: rows[name] for name in LEAF_COLUMNS}
         columns["action"] = columns["action"].astype(np.int64)
         columns["remaining"] = columns["remaining"].astype(float)
-        return cls(
-            columns, rows["tree"], rows["label"], rows["label_batch"].astype(float), rows["error"], is_rate
-        ), about
+        batches = rows["label_batch"].astype(float)
+        out = cls(columns, rows["tree"], rows["label"], batches, rows["error"], is_rate)
+        return replace(out, decision=_decisions(folder, manifest, out)), about
 
     @property
     def groups(self) -> Groups:
@@ -103,7 +108,17 @@ class Candidates:
             self.batch[rows],
             self.error[rows],
             self.is_rate,
+            None if self.decision is None else self.decision[rows],
         )
+
+    @property
+    def clusters(self) -> NDArray[np.uint64] | None:
+        """The decision of each tree, where recorded: its stages are no independent trees."""
+        return None if self.decision is None else self.decision[self.groups.starts]
+
+    def keys(self) -> NDArray[np.uint64]:
+        """A number a tree; trees of equal numbers belong together: one decision, or the same beliefs."""
+        return self.fingerprints() if self.clusters is None else self.clusters
 
     def fingerprints(self) -> NDArray[np.uint64]:
         """A number a tree from its beliefs alone; the same for trees that differ in name or budget only."""
@@ -111,11 +126,30 @@ class Candidates:
         table += 0.0  # -0.0 and 0.0 are one value
         return np.array(
             [
-                int.from_bytes(hashlib.blake2b(table[a : a + n].tobytes(), digest_size=8).digest(), "little")
+                _number(table[a : a + n].tobytes())
                 for a, n in zip(self.groups.starts, self.groups.sizes, strict=True)
             ],
             dtype=np.uint64,
         )
+
+
+def _decisions(folder: Path, manifest: Mapping[str, Any], out: Candidates) -> NDArray[np.uint64] | None:
+    """Rows' decision numbers, from trees whose `extra` names a `decision`; others are their own."""
+    files = [f for entry in manifest["shards"] for f in entry["files"] if f.startswith("trees-")]
+    extras = [pq.read_table(folder / f, columns=["extra"]).column("extra") for f in files]
+    texts = [text for column in extras for text in column.to_pylist()]
+    named = [text is not None and "decision" in json.loads(text) for text in texts]
+    if not any(named):
+        return None
+    keys = out.fingerprints()
+    for i, text in enumerate(texts):
+        if named[i]:
+            keys[i] = _number(text.encode())
+    return np.asarray(out.groups.spread(keys))
+
+
+def _number(data: bytes) -> int:
+    return int.from_bytes(hashlib.blake2b(data, digest_size=8).digest(), "little")
 
 
 @dataclass(frozen=True, eq=False)
@@ -128,12 +162,13 @@ class Split:
 
 
 def split_by_tree(candidates: Candidates, seed: int) -> Split:
-    """Split by a hash of each tree's beliefs and the seed, in the shares of PARTS.
+    """Split by a hash of each tree's key and the seed, in the shares of PARTS.
 
-    A tree keeps its part when others are added to the dataset. Raises InputError where a part stays
+    A tree keeps its part when others are added to the dataset, and stages of one recorded decision stay
+    together: they are nearly the same tree. Raises InputError where a part stays
     empty or holds no value above 0.
     """
-    u = _uniform(candidates.fingerprints(), seed)
+    u = _uniform(candidates.keys(), seed)
     edges = np.cumsum(list(PARTS.values()))[:-1]
     part = np.searchsorted(edges, u, side="right")
     out = []

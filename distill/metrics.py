@@ -1,7 +1,8 @@
 """How good a scorer's picks are, measured against exact labels, by tree; floor 4.
 
 Every figure is a ratio of two sums over trees, so one bootstrap over trees serves them all: a tree,
-never a candidate, is the unit that is drawn again. Candidates of one tree stand together.
+never a candidate, is the unit that is drawn again (or a cluster of trees). Candidates of one tree stand
+together.
 """
 
 from __future__ import annotations
@@ -155,6 +156,7 @@ def measure(
     score: Floats,
     *,
     weight: Floats | None = None,
+    cluster: Sequence[int] | NDArray[np.integer] | None = None,
     prices: Sequence[float] = (),
     rollouts: Floats | float = 1.0,
     n_boot: int = 1000,
@@ -165,7 +167,8 @@ def measure(
 
     tree : tree of each row; a tree's rows stand together. exact : exact VOC or rate, u, >= 0.
     score : what the scorer gives; any scale serves, except for `prices`. weight : one a tree, in order
-    of first appearance (for samples drawn towards close calls). rollouts : as in `stop_loss`.
+    of first appearance (for samples drawn towards close calls). cluster : one a tree; trees of one cluster,
+    such as the stages of one decision, are drawn again together. rollouts : as in `stop_loss`.
     Intervals are percentile bootstrap intervals over trees; the same seed gives the same interval.
     Raises InputError on unequal lengths, a negative or non-finite exact value, or a NaN score.
 
@@ -194,6 +197,11 @@ def measure(
     ]
     numerators = np.stack([w * a for a, _ in columns], axis=1)
     denominators = np.stack([w * b for _, b in columns], axis=1)
+    if cluster is not None:
+        member = np.unique(np.asarray(cluster), return_inverse=True)[1]
+        if member.shape != w.shape:
+            raise InputError("cluster", f"must have shape ({len(w)},)", member.shape)
+        numerators, denominators = _sums(numerators, member), _sums(denominators, member)
     forgone, relative, top1, rank, *losses = _bootstrap(numerators, denominators, n_boot, level, seed)
     return Metrics(
         _percent(forgone),
@@ -249,6 +257,13 @@ def _ranks(groups: Groups, x: Floats) -> Floats:
     ranks = np.empty(len(x))
     ranks[order] = np.repeat(mean_position, run_length) - groups.spread(groups.starts) + 1
     return ranks
+
+
+def _sums(columns: Floats, member: Ints) -> Floats:
+    """Sums of the rows of each cluster."""
+    out = np.zeros((int(member.max()) + 1, columns.shape[1]))
+    np.add.at(out, member, columns)
+    return out
 
 
 def _bootstrap(

@@ -35,6 +35,7 @@ def examine(
         candidates.tree,
         candidates.label,
         scores.voc,
+        cluster=candidates.clusters,
         prices=prices,
         rollouts=rollouts,
         n_boot=n_boot,
@@ -65,7 +66,9 @@ def baselines(
     share, relative = random_forgone(candidates.tree, candidates.label)
 
     def of(score: Floats) -> dict[str, object]:
-        return measure(candidates.tree, candidates.label, score, n_boot=n_boot, seed=seed).to_json()
+        return measure(
+            candidates.tree, candidates.label, score, cluster=candidates.clusters, n_boot=n_boot, seed=seed
+        ).to_json()
 
     return {
         "static closed form": of(static_rates(candidates)),

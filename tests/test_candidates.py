@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -14,7 +15,7 @@ from small_dataset import labelled
 from distill.candidates import LEAF_COLUMNS, PARTS, Candidates, split_by_tree
 from distill.errors import InputError, RefusedError
 from distill.family import parse_family
-from distill.generate import Asked, generate
+from distill.generate import Asked, Traces, generate
 from distill.shards import read_trees
 from distill.tree import leaf_table
 
@@ -121,6 +122,20 @@ def test_one_rollout_is_no_rate(tmp_path: Path) -> None:
     assert about["value"] == {"horizon": 2.5, "batch": 3}
     assert not got.is_rate
     assert np.all(got.batch == 3)
+
+
+def test_stages_of_one_recorded_decision_stay_together(tmp_path: Path) -> None:
+    trees = [tree for _, tree in read_trees(labelled(tmp_path / "family", trees=120))]
+    recorded = [replace(t, extra={"decision": i // 4, "rule": "even"}) for i, t in enumerate(trees[:80])]
+    generate(Traces("agent", [*recorded, *trees[80:]]), tmp_path / "traces")
+    whole, _ = Candidates.read(tmp_path / "traces")
+    assert whole.clusters is not None
+    assert len(np.unique(whole.clusters)) == 20 + 40
+    split = split_by_tree(whole, 1)
+    decisions = [{t // 4 for t in p.tree.tolist() if t < 80} for p in vars(split).values()]
+    assert sum(map(len, decisions)) == len(set.union(*decisions)) == 20
+    assert all(len(p.clusters) == len(p.groups.sizes) for p in vars(split).values())
+    assert Candidates.read(tmp_path / "family")[0].clusters is None
 
 
 CHANCE = b"""

@@ -134,6 +134,25 @@ def test_same_seed_same_interval_and_chunks_do_not_matter(monkeypatch: pytest.Mo
     assert once == measure(tree, exact, score, seed=3)
 
 
+def test_trees_of_one_cluster_are_drawn_together() -> None:
+    # Forty decisions, each met five times with the same outcome: as uncertain as forty trees, not 200.
+    rng = np.random.default_rng(0)
+    gone = rng.random(40)
+
+    def interval(trees: np.ndarray, cluster: np.ndarray | None) -> float:
+        exact = np.stack([np.ones(len(trees)), gone[trees]], axis=1).ravel()
+        ids = np.repeat(np.arange(len(trees)), 2)
+        m = measure(ids, exact, np.tile([0.0, 1.0], len(trees)), cluster=cluster)
+        assert m.forgone.value == pytest.approx(100 * np.mean(1 - gone), rel=CLOSED_FORM)
+        return m.forgone.high - m.forgone.low
+
+    stages = np.repeat(np.arange(40), 5)
+    assert interval(stages, stages) == pytest.approx(interval(np.arange(40), None), rel=CLOSED_FORM)
+    assert interval(stages, None) < 0.6 * interval(stages, stages)
+    with pytest.raises(InputError, match="cluster"):
+        measure([0, 1], np.ones(2), np.ones(2), cluster=[1])
+
+
 def test_infinite_scores_and_all_zero_values() -> None:
     m = measure([0, 0, 1], np.array([1.0, 2.0, 3.0]), np.array([-np.inf, np.inf, -np.inf]))
     assert m.forgone.value == 0

@@ -32,6 +32,7 @@ __all__ = [
     "expected_gain",
     "floor_of",
     "is_singular",
+    "rates_at",
 ]
 
 N = 16  # nodes a panel
@@ -52,6 +53,17 @@ _MAX_PANELS = 100_000
 def is_singular(a: float) -> bool:
     """Whether p^(a - 1) needs panels that halve towards 0."""
     return a < _SMOOTH_FROM and a != math.floor(a)
+
+
+@compiled
+def rates_at(from_low: float, to_high: float, d: float, width: float) -> tuple[float, float]:
+    """(p, q = 1 - p) at offset d from an anchor that lies from_low above a support's low end, to_high below
+    its high end. Taken from the nearer end, where it is exact; the other follows, so that p + q = 1."""
+    if abs(from_low) <= abs(to_high):
+        p = (from_low + d) / width
+        return p, 1.0 - p
+    q = (to_high - d) / width
+    return 1.0 - q, q
 
 
 @compiled
@@ -100,8 +112,10 @@ def floor_of(a: Floats, b: Floats, low: Floats, width: Floats) -> float:
     """A value that the best leaf exceeds for sure (odds 1 - 1e-20), whichever one leaf is left out.
 
     P(Y_j < y) <= exp(-n KL(mu_j || p)) below the mean (Chernoff), so the sum of these exponents over all
-    leaves but the largest must reach 46; or two supports begin above. Shape (L,) each, L >= 2.
+    leaves but the largest must reach 46; or two supports begin above. Shape (L,) each; -inf for L = 1.
     """
+    if len(a) < 2:
+        return -math.inf
     order = np.sort(low)
     sure, top = order[-2], np.max(low + width)
     for _ in range(30):
@@ -157,8 +171,8 @@ def cut_panels(
                 fits = True
                 for j in range(n_leaves):
                     from_low, to_high = base - low[j], (low[j] + width[j]) - base
-                    p0, p1 = (from_low + d0) / width[j], (from_low + d1) / width[j]
-                    q0, q1 = (to_high - d0) / width[j], (to_high - d1) / width[j]
+                    p0, q0 = rates_at(from_low, to_high, d0, width[j])
+                    p1, q1 = rates_at(from_low, to_high, d1, width[j])
                     if not _fits(a[j], b[j], p0, q0, p1, q1):
                         fits = False
                         break
@@ -203,8 +217,8 @@ def distribution_functions(
         for s in range(panels):
             from_low, to_high = anchor[s] - low[j], (low[j] + width[j]) - anchor[s]
             half, middle = 0.5 * (right[s] - left[s]) / width[j], 0.5 * (left[s] + right[s])
-            p0, p1 = (from_low + left[s]) / width[j], (from_low + right[s]) / width[j]
-            q0, q1 = (to_high - left[s]) / width[j], (to_high - right[s]) / width[j]
+            p0, q0 = rates_at(from_low, to_high, left[s], width[j])
+            p1, q1 = rates_at(from_low, to_high, right[s], width[j])
             if p1 <= 0.0 or q0 <= 0.0:
                 mass[s] = 0.0
                 continue
@@ -222,8 +236,7 @@ def distribution_functions(
                 continue
             total = 0.0
             for r in range(N):
-                d = middle + half * width[j] * X[r]
-                p, q = (from_low + d) / width[j], (to_high - d) / width[j]
+                p, q = rates_at(from_low, to_high, middle + half * width[j] * X[r], width[j])
                 density[r] = beta_density(a[j], b[j], log_c, p, q) * half if p > 0.0 and q > 0.0 else 0.0
                 total += W[r] * density[r]
             mass[s] = total
@@ -255,12 +268,12 @@ def best_of_rest(below: Floats, above: Floats, left: Floats, right: Floats) -> t
     """What the other leaves add above y: T_i(y) = E (R_i - y)+, R_i the best leaf of the action but i.
 
     below, above : F_j and 1 - F_j from `distribution_functions`. T_i(y) is the integral of P(R_i > t) over
-    t > y. Returns T at the nodes, (L, P, N), T at the panels' left ends and the last right end, (L, P + 1),
-    and an error estimate of T, (L,), from the Legendre coefficients of the integrand: the last pair, and
-    what it foretells of the first pair that the panel cannot hold.
+    t > y. Returns T at the nodes, (L, P, N), in the place of `above`; T at the panels' left ends and the
+    last right end, (L, P + 1); and an error estimate of T, (L,), from the Legendre coefficients of the
+    integrand: the last pair, and what it foretells of the first pair that the panel cannot hold.
     """
     n_leaves, panels = len(below), len(left)
-    inside, edge = np.empty((n_leaves, panels, N)), np.zeros((n_leaves, panels + 1))
+    edge = np.zeros((n_leaves, panels + 1))
     error = np.zeros(n_leaves)
     after_p, after_q = np.empty((n_leaves + 1, N)), np.empty((n_leaves + 1, N))
     rest = np.empty(N)
@@ -289,9 +302,9 @@ def best_of_rest(below: Floats, above: Floats, left: Floats, right: Floats) -> t
                 part = 0.0
                 for c in range(N):
                     part += _FROM_RIGHT[r, c] * rest[c]
-                inside[j, s, r] = edge[j, s + 1] + half * part
+                above[j, s, r] = edge[j, s + 1] + half * part
             edge[j, s] = edge[j, s + 1] + half * total
-    return inside, edge, error
+    return above, edge, error
 
 
 @compiled

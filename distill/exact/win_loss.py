@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import math
 
-from distill.errors import InputError, RefusedError
+from distill.errors import InputError
 from distill.exact.win_loss_dynamic import price_dynamic
 from distill.exact.win_loss_horizon import price_horizon
 from distill.exact.win_loss_static import price_static
@@ -20,8 +20,9 @@ __all__ = ["price"]
 def price(tree: BeliefTree, query: Query) -> Priced:
     """VOC_h or RATE_h of every leaf of a win/loss tree.
 
-    h = 0: any tree; h > 0, whole or infinite: decision nodes only. Raises InputError for an h that is
-    neither whole nor infinite, RefusedError by name for what no method here can do.
+    h = 0: any tree. h > 0, whole or infinite: chance nodes only where nothing below the root has been
+    chosen yet. Raises InputError for an h that is neither whole nor infinite, RefusedError by name for
+    what no method here can do.
 
     >>> from distill.record import from_record
     >>> t = from_record({"format": "belief-tree/1", "parent": [-1, 0, 0],
@@ -34,8 +35,6 @@ def price(tree: BeliefTree, query: Query) -> Priced:
         raise InputError("horizon", 'must be whole or "inf" for win/loss leaves', query.horizon)
     if query.horizon == 0:
         return price_static(tree, query)
-    if tree.has_chance:
-        raise RefusedError("win/loss leaves under chance nodes with h > 0 have no exact method")
     if query.horizon == math.inf:
         return price_dynamic(tree, query)
     return price_horizon(tree, query)

@@ -1,9 +1,9 @@
-"""Dynamic value (h infinite) of trials at win/loss leaves under decision nodes; floor 2.
+"""Dynamic value (h infinite) of trials at win/loss leaves; floor 2.
 
-With endless rollouts to come every win rate will be known, so an action is worth V = E max of its leaves'
-Y_j = low_j + width_j p_j: one integral over a product of beta distribution functions, on panels that all
-leaves of the action share (`beta_panels`). Each leaf's trials then cost one walk (`win_loss_walk`), and a
-leaf that is alone in its action one walk without any integral (`trial_walk`).
+With endless rollouts to come every win rate will be known, so a group of leaves to choose from is worth
+V = E max of Y_j = low_j + width_j p_j: one integral over a product of beta distribution functions, on
+panels that all leaves of the group share (`beta_panels`). Each leaf's trials then cost one walk
+(`win_loss_walk`), and a leaf that is alone in its group one walk without any integral (`trial_walk`).
 """
 
 from __future__ import annotations
@@ -21,11 +21,12 @@ from distill.exact.beta_panels import (
     expected_gain,
     floor_of,
 )
+from distill.exact.win_loss_groups import Group, price_groups
 from distill.exact.win_loss_static import price_crossings
 from distill.exact.win_loss_walk import Race, endless_gain, reachable_gap, walk
 from distill.numerics import compiled
 from distill.query import Priced, Query
-from distill.tree import BeliefTree, Floats, Ints, leaf_table
+from distill.tree import BeliefTree, Floats, Ints
 
 __all__ = ["METHOD", "price_dynamic"]
 
@@ -33,75 +34,58 @@ METHOD = "win/loss, dynamic: beta panels and crossing sum"
 
 # Longest walk a leaf; beyond, VOC(k) lies between VOC(_MAX_WALK) and VOC(infinity), and the error says so.
 _MAX_WALK = 2**17
-_MAX_NUMBERS = 2**27  # leaves x nodes of one action: 1 GB a table
+_MAX_NUMBERS = 2**26  # leaves x nodes of one group: half a gigabyte a table
 _SLACK = 1.0 + 1e-6  # on the worth of endless trials, which only bounds
 _EPS = 2.0**-52
 
 
 def price_dynamic(tree: BeliefTree, query: Query) -> Priced:
-    """VOC_inf or RATE_inf of every win/loss leaf; decision nodes only, any batch.
+    """VOC_inf or RATE_inf of every win/loss leaf, any batch; chance nodes above all choices only.
 
     The error covers the panels' fit, roundings, and for more than 2^17 trials the gap to what endless
-    trials would buy. Raises RefusedError for chance nodes, and where one action's tables would not fit.
+    trials would buy. Raises RefusedError for other chance nodes, and where one group's tables would not fit.
     """
-    flat = leaf_table(tree)
-    assert flat.alpha is not None
-    assert flat.beta is not None
-    assert flat.low is not None
-    assert flat.high is not None
-    a, b = flat.alpha, flat.beta
-    width = flat.gain * (flat.high - flat.low)
-    low = flat.offset + flat.gain * flat.low
-    mean = low + width * (a / (a + b))
-    # Values are kept relative to the best mean; the rounding of what was before stays.
-    centre = float(mean.max())
-    size = 4 * np.abs(flat.offset) + 4 * np.abs(flat.gain * flat.low) + width
-    rounding = 0.5 * _EPS * float(np.max(size))
-    low = low - centre
-    members = [np.flatnonzero(flat.action == x) for x in range(len(tree.action_nodes))]
-    tables = [_Action(a[i], b[i], low[i], width[i]) for i in members]
-    value = np.array([t.value for t in tables])
-    n = len(a)
-    voc, error, batch = np.zeros(n), np.zeros(n), np.zeros(n, dtype=np.int64)
-    for x, (mine, table) in enumerate(zip(members, tables, strict=True)):
-        rivals = [y for y in range(len(tables)) if y != x]
-        best = max(rivals, key=value.__getitem__, default=-1)
-        rival = float(value[best]) if rivals else -math.inf
-        slack = rounding + (max(tables[y].error for y in rivals) if rivals else 0.0)
-        voc[mine], batch[mine], error[mine] = table.price(rival, slack, query)
-    return Priced(voc, batch, value + centre, error, METHOD)
+    return price_groups(tree, query, _Tables, METHOD)
 
 
-class _Action:
-    """The leaves of one root action: V, and the table of what the others add to each."""
+class _Tables:
+    """A group's V, and the table of what the others add to each leaf."""
 
-    def __init__(self, a: Floats, b: Floats, low: Floats, width: Floats) -> None:
-        self.leaves = a, b, low, width
+    def __init__(self, group: Group) -> None:
+        a, b, low, width = self.leaves = group.a, group.b, group.low, group.width
         mean = low + width * (a / (a + b))
         best = int(np.argmax(mean))
         self.value, self.error = float(mean[best]), _EPS * float(abs(mean[best]))
-        if len(a) == 1:
+        self.lone = len(a) == 1 and group.sure == -math.inf
+        if self.lone:
             return
-        floor = floor_of(a, b, low, width)
+        floor = max(group.sure, floor_of(a, b, low, width))
+        if floor >= np.max(low + width):  # the sure value is beyond every leaf
+            self.value, self.error, self.hopeless = group.sure, _EPS * abs(group.sure), True
+            return
         self.start = np.asarray(betainc(a, b, np.clip((floor - low) / width, 0.0, 1.0)))
         panels = cut_panels(a, b, low, width, floor)
         if len(panels[0]) == 0 or len(a) * len(panels[0]) * 16 > _MAX_NUMBERS:
-            raise RefusedError(f"win/loss, dynamic: {len(a)} leaves of one action need too many panels")
+            raise RefusedError(f"win/loss, dynamic: {len(a)} leaves to choose from need too many panels")
         below, above, defect = distribution_functions(a, b, low, width, self.start, *panels)
-        inside, edge, misfit = best_of_rest(below, above, panels[1], panels[2])
         gain = expected_gain(a, b, low, width, self.start, below, above, *panels, best)
+        inside, edge, misfit = best_of_rest(below, above, panels[1], panels[2])
         self.tables = (*panels, inside, edge)
         # Dividing by the total takes out most of what it was off by; half of that is allowed for.
         self.table_error = misfit + (0.5 * float(defect.sum()) + _EPS) * np.abs(edge[:, 0])
         self.value += gain
         self.error += float(self.table_error[best]) if gain > 0 else 0.0
 
+    hopeless = False
+
     def price(self, rival: float, slack: float, query: Query) -> tuple[Floats, Ints, Floats]:
-        """Worth, batch and error of trials on every leaf; rival: value of the best other action."""
+        """Worth, batch and error of trials on every leaf; see `win_loss_groups.Choice`."""
         a, b, low, width = self.leaves
         if query.rate and query.remaining == 0:
             return np.zeros(len(a)), np.zeros(len(a), dtype=np.int64), np.zeros(len(a))
-        if len(a) == 1 or rival == -math.inf:
+        if self.hopeless:
+            rival = -math.inf
+        if self.lone or rival == -math.inf:
             worth, batch, error = price_crossings(a, b, (rival - low) / width, slack / width + _EPS, query)
             return width * worth, batch, width * error
         last = query.remaining if query.batch is None else query.batch

@@ -1,8 +1,8 @@
-"""Value of trials at win/loss leaves when h more follow at every leaf, h finite; decision nodes; floor 2.
+"""Value of trials at win/loss leaves when h more follow at every leaf, h finite; floor 2.
 
-After h more trials leaf j's posterior mean is low_j + width_j (a_j + s) / (n_j + h), s beta-binomial: an
-action is worth V = E max of such atoms. With T(y) = E (best atom of the other leaves - y)+, piecewise
-linear, and c the best rival's value, x wins in k trials on a leaf make its action worth c + g(x),
+After h more trials leaf j's posterior mean is low_j + width_j (a_j + s) / (n_j + h), s beta-binomial: a
+group of leaves to choose from is worth V = E max of such atoms. With T(y) = E (best atom of the other
+leaves - y)+, piecewise linear, and c the rival's value, x wins in k trials on a leaf make it worth c + g(x),
 
     g(x) = E[y - c + T(y)],  y = low + width (a + x + s) / (n + k + h),  s beta-binomial given x,
 
@@ -20,9 +20,10 @@ import numpy as np
 
 from distill.errors import RefusedError
 from distill.exact.best_batch import best_batch
+from distill.exact.win_loss_groups import Group, price_groups
 from distill.numerics import compiled
 from distill.query import Priced, Query
-from distill.tree import BeliefTree, Floats, Ints, LeafTable, leaf_table
+from distill.tree import BeliefTree, Floats, Ints
 
 __all__ = ["METHOD", "beta_binomial_law", "price_horizon"]
 
@@ -36,77 +37,48 @@ _EPS = 2.0**-52
 
 
 def price_horizon(tree: BeliefTree, query: Query) -> Priced:
-    """VOC_h or RATE_h of every win/loss leaf, h >= 0 whole and finite; decision nodes only.
+    """VOC_h or RATE_h of every win/loss leaf, h >= 0 whole and finite; chance nodes above all choices only.
 
     Exact sums; the error covers roundings, and for a rate the certificate of the search. Raises
-    RefusedError for chance nodes, and where h or the batch needs too many outcomes.
+    RefusedError for other chance nodes, and where h or the batch needs too many outcomes.
     """
     h = int(query.horizon)
-    flat = leaf_table(tree)
     last = query.remaining if query.batch is None else query.batch
     assert last is not None
     if (h + 1) * (last + h + 1) > _MAX_WORK:
         raise RefusedError(
             f"win/loss leaves at horizon {h}: {last} rollouts have too many outcomes to sum over"
         )
-    actions = _actions(flat, h)
-    value = np.array([action.value for action in actions])
-    n = len(flat.gain)
-    voc, error, batch = np.zeros(n), np.zeros(n), np.zeros(n, dtype=np.int64)
-    for x, action in enumerate(actions):
-        others = np.delete(value, x)
-        rival = float(others.max()) if len(others) else -math.inf
-        voc[action.members], batch[action.members], error[action.members] = action.price(rival, query, last)
-    return Priced(voc, batch, value + actions[0].centre, error, METHOD)
+    return price_groups(tree, query, lambda group: _Tables(group, h), METHOD)
 
 
-def _actions(flat: LeafTable, h: int) -> list[_Action]:
-    assert flat.alpha is not None
-    assert flat.beta is not None
-    assert flat.low is not None
-    assert flat.high is not None
-    width = flat.gain * (flat.high - flat.low)
-    low = flat.offset + flat.gain * flat.low
-    centre = float(np.max(low + width * (flat.alpha / (flat.alpha + flat.beta))))
-    rounding = 8 * _EPS * float(np.max(np.abs(flat.offset) + np.abs(flat.gain * flat.low) + width))
-    actions = []
-    for x in range(int(flat.action.max()) + 1):
-        members = np.flatnonzero(flat.action == x)
-        columns = (flat.alpha[members], flat.beta[members], low[members] - centre, width[members])
-        actions.append(_Action(members, columns, h, centre, rounding))
-    return actions
+class _Tables:
+    """A group's V h trials on, and T and U of every leaf at the atoms of all."""
 
-
-class _Action:
-    """The leaves of one root action h trials on: V, and T and U of every leaf at the atoms of all."""
-
-    def __init__(
-        self,
-        members: Ints,
-        columns: tuple[Floats, Floats, Floats, Floats],
-        h: int,
-        centre: float,
-        rounding: float,
-    ) -> None:
-        self.members, self.columns, self.h, self.centre = members, columns, h, centre
-        a, b, low, width = columns
+    def __init__(self, group: Group, h: int) -> None:
+        a, b, low, width = self.columns = group.a, group.b, group.low, group.width
+        self.h, self.sure = h, group.sure
         if len(a) * len(a) * (h + 1) > _MAX_NUMBERS:
             raise RefusedError(
-                f"win/loss leaves at horizon {h}: {len(a)} leaves of one action need too many atoms"
+                f"win/loss leaves at horizon {h}: {len(a)} leaves to choose from need too many atoms"
             )
-        self.tables = _tables(a, b, low, width, h)
+        self.tables = _tables(a, b, low, width, h, group.sure)
         mean = low + width * (a / (a + b))
         best = int(np.argmax(mean))
-        self.value = float(mean[best]) + _expected_tail(*(c[best] for c in columns), h, best, *self.tables)
-        self.rounding = rounding + 8 * _EPS * float(np.max(self.tables[2][:, 0], initial=0.0))
+        self.value = float(mean[best]) + _expected_tail(
+            *(c[best] for c in self.columns), h, best, *self.tables
+        )
+        self.error = 8 * _EPS * float(group.size + np.max(width) + np.max(self.tables[2][:, 0], initial=0.0))
 
-    def price(self, rival: float, query: Query, last: int) -> tuple[Floats, Ints, Floats]:
-        """VOC (or rate), batch and error of every leaf of the action."""
-        n = len(self.members)
+    def price(self, rival: float, slack: float, query: Query) -> tuple[Floats, Ints, Floats]:
+        """VOC (or rate), batch and error of every leaf; see `win_loss_groups.Choice`."""
+        n = len(self.columns[0])
+        last = query.remaining if query.batch is None else query.batch
+        assert last is not None
 
         def voc_at(leaf: Ints, k: Ints) -> tuple[Floats, Floats]:
             return _price_pairs(
-                leaf, k, *self.columns, self.h, self.value, rival, self.rounding, *self.tables
+                leaf, k, *self.columns, self.h, self.value, rival, self.error + slack, *self.tables
             )
 
         if not query.rate:
@@ -157,14 +129,17 @@ def beta_binomial_law(a: float, b: float, k: int) -> Floats:
 
 @compiled
 def _tables(
-    a: Floats, b: Floats, low: Floats, width: Floats, h: int
+    a: Floats, b: Floats, low: Floats, width: Floats, h: int, sure: float
 ) -> tuple[Floats, Floats, Floats, Floats]:
     """Atoms of all leaves, ascending, (M,), and for every leaf at them, (L, M): P(rest > y), T and U.
 
-    P(rest > y) holds from its atom to the next.
+    P(rest > y) holds from its atom to the next. A sure value is one atom more, below which the rest never
+    is; a leaf alone gets one atom at -inf, above which nothing is.
     """
     n_leaves = len(a)
-    count = n_leaves * (h + 1)
+    if n_leaves == 1 and sure == -math.inf:
+        return np.array([-math.inf]), np.zeros((1, 1)), np.zeros((1, 1)), np.zeros((1, 1))
+    count = n_leaves * (h + 1) + (sure > -math.inf)
     atom, owner, rank = np.empty(count), np.empty(count, dtype=np.int64), np.empty(count, dtype=np.int64)
     below, above = np.empty((n_leaves, h + 1)), np.empty((n_leaves, h + 1))
     for j in range(n_leaves):
@@ -176,17 +151,24 @@ def _tables(
             passed += law[s]
             m = j * (h + 1) + s
             atom[m], owner[m], rank[m] = low[j] + width[j] * ((a[j] + s) / (a[j] + b[j] + h)), j, s
+    if sure > -math.inf:
+        atom[-1], owner[-1] = sure, -1
     order = np.argsort(atom)
     atom = atom[order]
     now_below, now_above = np.zeros(n_leaves), np.ones(n_leaves)
     more, tail, lead = np.empty((n_leaves, count)), np.empty((n_leaves, count)), np.empty((n_leaves, count))
     less = np.empty(n_leaves)
     after_p, after_q = np.ones(n_leaves + 1), np.zeros(n_leaves + 1)
+    if sure > -math.inf:
+        after_p[-1], after_q[-1] = 0.0, 1.0
     for m in range(count):
         j, s = owner[order[m]], rank[order[m]]
         for i in range(n_leaves):
             lead[i, m] = 0.0 if m == 0 else lead[i, m - 1] + (atom[m] - atom[m - 1]) * less[i]
-        now_below[j], now_above[j] = min(below[j, s], 1.0), above[j, s]
+        if j < 0:
+            after_p[-1], after_q[-1] = 1.0, 0.0
+        else:
+            now_below[j], now_above[j] = min(below[j, s], 1.0), above[j, s]
         for i in range(n_leaves - 1, -1, -1):
             after_p[i] = after_p[i + 1] * now_below[i]
             after_q[i] = after_q[i + 1] + after_p[i + 1] * now_above[i]
@@ -246,8 +228,6 @@ def _expected_tail(
     lead: Floats,
 ) -> float:
     """E T(y) after h trials: what choosing later adds to the leaf's mean."""
-    if len(more) == 1:
-        return 0.0
     t, _, _ = _read(_means(a, b, low, width, h), atom, more[leaf], tail[leaf], lead[leaf])
     return float(np.sum(beta_binomial_law(a, b, h) * t))
 
@@ -321,8 +301,6 @@ def _price_pairs(
         n = ai + bi
         y = _means(ai, bi, lo, wi, k + h)
         t, _, _ = _read(y, atom, more[i], tail[i], lead[i])
-        if len(more) == 1:
-            t[:] = 0.0
         gain, in_doubt = 0.0, 0.0
         sure = rounding + _EPS * wi * math.sqrt(k + h + 1.0)
         if rival > -math.inf:
@@ -339,7 +317,7 @@ def _price_pairs(
                 gain += odds[x] * abs(g)
                 in_doubt += odds[x] * sure
         error[c] = in_doubt
-        if best and len(more) > 1:
+        if best and len(atom) > 1:
             if k > _STEPWISE:
                 law, before = beta_binomial_law(ai, bi, k + h), beta_binomial_law(ai, bi, h)
                 t0, _, _ = _read(_means(ai, bi, lo, wi, h), atom, more[i], tail[i], lead[i])

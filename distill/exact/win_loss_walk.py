@@ -20,7 +20,7 @@ from typing import NamedTuple
 import numpy as np
 
 from distill.beta_numerics import beta_density, beta_divergence, beta_log_constant, lower_tail
-from distill.exact.beta_panels import N, W, X, is_singular
+from distill.exact.beta_panels import N, W, X, is_singular, rates_at
 from distill.numerics import compiled
 from distill.tree import Floats
 
@@ -158,8 +158,7 @@ def _lay_nodes(
         for m in range(pieces):
             for r in range(N):
                 d = d0 + step * (m + 0.5 * (1.0 + X[r]))
-                p[count] = (from_low + d) / race.width
-                q[count] = (to_high - d) / race.width
+                p[count], q[count] = rates_at(from_low, to_high, d, race.width)
                 if p[count] <= 0.0 or q[count] <= 0.0:
                     continue
                 v[count] = 0.5 * step / race.width * W[r] * beta_density(a, b, log_c, p[count], q[count])

@@ -18,6 +18,8 @@ from distill.errors import RefusedError
 from distill.exact.win_loss import price
 from distill.oracle import win_loss as oracle
 from distill.query import Query, scale_of
+from distill.record import from_record
+from distill.tree import BeliefTree
 
 PUBLISHED = json.loads((Path(__file__).parents[1] / "data" / "published_win_loss.json").read_text())[
     "entries"
@@ -214,8 +216,84 @@ def test_endless_budget_is_certified():
     assert np.all(endless.error <= 1e-12)
 
 
-def test_chance_nodes_are_refused_by_name():
-    tree = random_tree(np.random.default_rng(0))
-    assert tree.has_chance
-    with pytest.raises(RefusedError, match="chance"):
-        price(tree, ONE)
+def test_chance_below_a_later_choice_is_refused_by_name():
+    tree = fan("decision", "chance")
+    for query in (ONE, Query(horizon=3)):
+        with pytest.raises(RefusedError, match="chance node below a decision node"):
+            price(tree, query)
+
+
+def fan(second: str, third: str) -> BeliefTree:
+    """Two actions; the first a node with two children, each a node with two leaves; rewards, discounts."""
+    none = [None] * 4
+    return from_record(
+        {
+            "format": "belief-tree/1",
+            "parent": [-1, 0, 1, 1, 2, 2, 3, 3, 0],
+            "kind": ["decision", second, third, third, *["leaf"] * 5],
+            "reward": [0, 0.2, 0.1, -0.1, 0, 0.05, 0, 0, 0.231],
+            "discount": [1, 0.9, 0.95, 1, 1, 0.9, 1, 1, 1],
+            "prob": [1, 1, *([0.3, 0.7] if second == "chance" else [1, 1]),
+                     *([0.4, 0.6, 0.5, 0.5] if third == "chance" else [1] * 4), 1],
+            "alpha": [*none, 1, 3, 2, 1.5, 3],
+            "beta": [*none, 1, 2, 2, 0.5, 2],
+            "low": [*none, 0, 0, 0, -0.2, 0],
+            "high": [*none, 1, 1, 1, 1, 1],
+        }
+    )  # fmt: skip
+
+
+def test_chance_before_the_choice_adds_up_what_the_outcomes_are_worth():
+    """V of the first action is the sum of two expected maxima: priced against a tree for each outcome."""
+    tree = fan("chance", "decision")
+    k = 3
+    priced = price(tree, Query(batch=k))
+    outcomes = []  # (alpha, beta, low, high) of both leaves of each outcome
+    for weight, constant, leaves, rewards, discounts in (
+        (0.9 * 0.3 * 0.95, 0.9 * 0.3 * 0.1, (0, 1), (0, 0.05), (1, 0.9)),
+        (0.9 * 0.7, -0.9 * 0.7 * 0.1, (2, 3), (0, 0), (1, 1)),
+    ):
+        rows = []
+        for i, r, g in zip(leaves, rewards, discounts, strict=True):
+            low, high = (weight * (r + g * x) + constant for x in (tree.low[i], tree.high[i]))
+            rows.append((float(tree.alpha[i]), float(tree.beta[i]), float(low), float(high)))
+        outcomes.append(rows)
+    values = [float(oracle.value_now(arms(rows), math.inf)[0]) for rows in outcomes]
+    assert priced.value[0] == pytest.approx(0.2 + sum(values), abs=QUADRATURE)
+    for o, rows in enumerate(outcomes):
+        rival = float(priced.value[1]) - 0.2 - values[1 - o]
+        stand_in = arms(rows, [(1.0, 1.0, rival - 1e-9, rival + 1e-9)])
+        for j in range(2):
+            truth = oracle.voc(stand_in, math.inf, j, k)
+            assert abs(priced.voc[2 * o + j] - truth) <= 2 * QUADRATURE
+    assert np.all(priced.voc[:4] > 0)
+
+
+@pytest.mark.parametrize("h", [1, 2])
+def test_chance_before_the_choice_at_finite_horizons(h):
+    tree = fan("chance", "decision")
+    priced = price(tree, Query(horizon=h, batch=2))
+    assert priced.value == pytest.approx([float(v) for v in oracle.value_now(tree, h)], rel=CLOSED_FORM)
+    for i in range(tree.n_leaves):
+        miss = abs(priced.voc[i] - oracle.voc(tree, h, i, 2))
+        assert miss <= CLOSED_FORM * scale_of(tree)
+        assert miss <= priced.error[i]
+
+
+def test_leaves_too_narrow_to_tell_from_sure_are_sure():
+    """A floor under the others, and worth no trial; also one that lies above everything."""
+    for sure in (0.2, 0.55, 3.0):
+        narrow = (2.0, 3.0, sure, sure + 1e-14)
+        plain = price(arms([(1.0, 1.0), (2.0, 1.0)], [(4, 1.5)]), Query(batch=4))
+        tree = arms([(1.0, 1.0), narrow, (2.0, 1.0)], [(4, 1.5)])
+        for query in (Query(batch=4), Query(horizon=3, batch=4)):
+            priced = price(tree, query)
+            assert priced.voc[1] <= priced.error[1] <= 1e-14
+            value = float(oracle.value_now(tree, query.horizon)[0])
+            assert priced.value[0] == pytest.approx(value, rel=QUADRATURE)
+            if sure == 3.0:
+                assert np.all(priced.voc <= priced.error)
+            for i in (0, 2):
+                truth = oracle.voc(tree, query.horizon, i, 4)
+                assert abs(priced.voc[i] - truth) <= QUADRATURE * scale_of(tree)
+    assert plain.voc.max() > 0

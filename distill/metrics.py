@@ -84,6 +84,8 @@ class Metrics:
     relative_forgone : 100 x mean(1 - VOC of the pick / best), trees with best > 0.
     top1 : 100 x share of trees whose pick has the best VOC (ties count as agreement).
     rank_correlation : mean Spearman correlation within trees, where it is defined.
+    stop_share : 100 x sum(stop loss at the leaves' own cost) / sum of the best net values above 0; where no
+        cost is given, rollouts are free.
     stop_loss : price -> value lost a tree, u; empty when no price was asked for.
     n_trees, n_candidates : what was measured.
     n_zero : trees whose best VOC is 0; they count in neither share.
@@ -94,6 +96,7 @@ class Metrics:
     relative_forgone: Estimate
     top1: Estimate
     rank_correlation: Estimate
+    stop_share: Estimate
     stop_loss: Mapping[float, Estimate]
     n_trees: int
     n_candidates: int
@@ -111,6 +114,7 @@ class Metrics:
             "relative_forgone_percent": plain(self.relative_forgone),
             "top1_percent": plain(self.top1),
             "rank_correlation": plain(self.rank_correlation),
+            "stop_loss_percent": plain(self.stop_share),
             "stop_loss": [{"price": p, **plain(e)} for p, e in self.stop_loss.items()],
             "trees": self.n_trees,
             "candidates": self.n_candidates,
@@ -131,11 +135,11 @@ def picks(groups: Groups, score: Floats) -> Ints:
 
 
 def stop_loss(
-    groups: Groups, exact: Floats, score: Floats, price: float, rollouts: Floats | float = 1.0
+    groups: Groups, exact: Floats, score: Floats, price: Floats | float, rollouts: Floats | float = 1.0
 ) -> Floats:
     """Value lost by each tree where the scorer stops and exact VOC goes on, or the other way round, u.
 
-    price : u a rollout. rollouts : rollouts that each row's value pays for; 1 for a rate.
+    price : u a rollout, one or one a row. rollouts : rollouts that each row's value pays for; 1 for a rate.
     Where both go on, a wrong pick is the forgone share's matter and costs nothing here. Stopping
     wrongly loses the best net value; going on wrongly loses what the pick costs beyond its value.
 
@@ -157,6 +161,7 @@ def measure(
     *,
     weight: Floats | None = None,
     cluster: Sequence[int] | NDArray[np.integer] | None = None,
+    cost: Floats | float = 0.0,
     prices: Sequence[float] = (),
     rollouts: Floats | float = 1.0,
     n_boot: int = 1000,
@@ -168,7 +173,8 @@ def measure(
     tree : tree of each row; a tree's rows stand together. exact : exact VOC or rate, u, >= 0.
     score : what the scorer gives; any scale serves, except for `prices`. weight : one a tree, in order
     of first appearance (for samples drawn towards close calls). cluster : one a tree; trees of one cluster,
-    such as the stages of one decision, are drawn again together. rollouts : as in `stop_loss`.
+    such as the stages of one decision, are drawn again together. cost : u a rollout at each row, for the
+    stop loss; prices : the same for all rows. rollouts : as in `stop_loss`.
     Intervals are percentile bootstrap intervals over trees; the same seed gives the same interval.
     Raises InputError on unequal lengths, a negative or non-finite exact value, or a NaN score.
 
@@ -187,12 +193,14 @@ def measure(
 
     best, got = groups.highest(exact), exact[picks(groups, score)]
     positive = best > 0
+    best_net = groups.highest(exact - np.multiply(cost, rollouts))
     rho, defined = rank_correlation(groups, exact, score)
     columns: list[tuple[NDArray[Any], NDArray[Any]]] = [
         (best - got, best),
         (np.where(positive, 1 - got / np.where(positive, best, 1), 0.0), positive),
         (got == best, np.ones_like(best)),
         (np.where(defined, rho, 0.0), defined),
+        (stop_loss(groups, exact, score, cost, rollouts), np.maximum(best_net, 0)),
         *((stop_loss(groups, exact, score, p, rollouts), np.ones_like(best)) for p in prices),
     ]
     numerators = np.stack([w * a for a, _ in columns], axis=1)
@@ -202,12 +210,13 @@ def measure(
         if member.shape != w.shape:
             raise InputError("cluster", f"must have shape ({len(w)},)", member.shape)
         numerators, denominators = _sums(numerators, member), _sums(denominators, member)
-    forgone, relative, top1, rank, *losses = _bootstrap(numerators, denominators, n_boot, level, seed)
+    forgone, relative, top1, rank, stop, *losses = _bootstrap(numerators, denominators, n_boot, level, seed)
     return Metrics(
         _percent(forgone),
         _percent(relative),
         _percent(top1),
         rank,
+        _percent(stop),
         dict(zip(map(float, prices), losses, strict=True)),
         len(groups.starts),
         groups.n_rows,

@@ -53,6 +53,8 @@ def sheet_page(sheet: Mapping[str, Any]) -> str:
         "",
         f"Square brackets: {100 * accuracy['interval_level']:g} % bootstrap intervals over trees.",
         f"Trees whose best value is 0, left out of both shares: {accuracy['trees_with_best_zero']}.",
+        "Stop loss: net value lost by stopping or going on wrongly at the leaves' own cost, of all that the",
+        "best candidates net.",
         "",
         f"## One decision over {decision['leaves']} leaves, one thread",
         "",
@@ -82,8 +84,8 @@ def sheet_page(sheet: Mapping[str, Any]) -> str:
 def accuracy_table(rows: Mapping[str, Mapping[str, Any]]) -> list[str]:
     """Markdown lines: a row for each name, the accuracy figures of `metrics.Metrics.to_json`."""
     return [
-        "| | forgone share, % | relative forgone, % | picks that are best, % | rank correlation |",
-        "| --- | --- | --- | --- | --- |",
+        "| | forgone share, % | relative forgone, % | best picks, % | rank correlation | stop loss, % |",
+        "| --- | --- | --- | --- | --- | --- |",
         *(_accuracy_row(name, m) for name, m in rows.items()),
     ]
 
@@ -111,7 +113,13 @@ def _accuracy_row(name: str, m: Mapping[str, Any]) -> str:
     return f"| {name} | {' | '.join(cells)} |"
 
 
-_FIGURES = ("forgone_percent", "relative_forgone_percent", "top1_percent", "rank_correlation")
+_FIGURES = (
+    "forgone_percent",
+    "relative_forgone_percent",
+    "top1_percent",
+    "rank_correlation",
+    "stop_loss_percent",
+)
 
 
 def _estimate(e: Mapping[str, float | None] | None) -> str:

@@ -18,7 +18,7 @@ from distill.timing import tree_of
 from distill.tree import Floats
 from distill.voc import price
 
-__all__ = ["baselines", "examine", "static_rates", "validate"]
+__all__ = ["baselines", "examine", "static_values", "validate"]
 
 
 def examine(
@@ -30,54 +30,60 @@ def examine(
     a rollout, for the stop loss. n_boot, seed : of the bootstrap over trees.
     """
     scores = scorer.score(**candidates.columns, tree=candidates.tree)
-    rollouts = 1.0 if candidates.is_rate else candidates.batch
-    found = measure(
-        candidates.tree,
-        candidates.label,
-        scores.voc,
-        cluster=candidates.clusters,
-        prices=prices,
-        rollouts=rollouts,
-        n_boot=n_boot,
-        seed=seed,
-    )
-    return {**found.to_json(), "in_range_percent": 100 * float(np.mean(scores.in_range))}
+    found = _measured(candidates, scores.voc, prices, n_boot, seed)
+    return {**found, "in_range_percent": 100 * float(np.mean(scores.in_range))}
 
 
-def static_rates(candidates: Candidates) -> Floats:
-    """The static closed form's rate of each row: the baseline that costs almost nothing; shape (n,)."""
+def static_values(candidates: Candidates) -> Floats:
+    """The static value of each row, a rate where the label is one: it costs almost nothing; shape (n,)."""
     groups = candidates.groups
     rates = []
     for a, n in zip(groups.starts, groups.sizes, strict=True):
         table = {name: x[a : a + n] for name, x in candidates.columns.items()}
-        query = Query(horizon=0.0, batch=None, remaining=int(table["remaining"][0]))
+        batch = None if candidates.is_rate else int(candidates.batch[a])
+        query = Query(horizon=0.0, batch=batch, remaining=int(table["remaining"][0]))
         rates.append(price(tree_of(table), query).voc)
     return np.concatenate(rates)
 
 
 def baselines(
-    candidates: Candidates, first_order: Floats, *, n_boot: int, seed: int
-) -> dict[str, dict[str, object]]:
+    candidates: Candidates,
+    first_order: Floats,
+    *,
+    prices: Sequence[float] = (),
+    n_boot: int = 1000,
+    seed: int = 0,
+) -> dict[str, dict[str, Any]]:
     """The same figures for picks that cost almost nothing, on the same trees.
 
-    static closed form : the exact rate with no rollout to follow. first-order closed form : the
-    scorer's own starting point. random pick : its expectation, without interval.
+    static closed form : the exact value if no rollout followed. first-order closed form : the scorer's own
+    starting point. random pick : its expectation, without interval.
     """
     share, relative = random_forgone(candidates.tree, candidates.label)
-
-    def of(score: Floats) -> dict[str, object]:
-        return measure(
-            candidates.tree, candidates.label, score, cluster=candidates.clusters, n_boot=n_boot, seed=seed
-        ).to_json()
-
     return {
-        "static closed form": of(static_rates(candidates)),
-        "first-order closed form": of(first_order),
+        "static closed form": _measured(candidates, static_values(candidates), prices, n_boot, seed),
+        "first-order closed form": _measured(candidates, first_order, prices, n_boot, seed),
         "random pick": {
-            "forgone_percent": {"value": share},
-            "relative_forgone_percent": {"value": relative},
+            "forgone_percent": {"value": None if np.isnan(share) else share},
+            "relative_forgone_percent": {"value": None if np.isnan(relative) else relative},
         },
     }
+
+
+def _measured(
+    candidates: Candidates, score: Floats, prices: Sequence[float], n_boot: int, seed: int
+) -> dict[str, Any]:
+    return measure(
+        candidates.tree,
+        candidates.label,
+        score,
+        cluster=candidates.clusters,
+        cost=candidates.columns["cost"],
+        prices=prices,
+        rollouts=1.0 if candidates.is_rate else candidates.batch,
+        n_boot=n_boot,
+        seed=seed,
+    ).to_json()
 
 
 def validate(
@@ -110,5 +116,5 @@ def validate(
         **about,
         "part": "held_out" if same_trees else "all",
         "accuracy": examine(scorer, candidates, prices=prices, n_boot=n_boot, seed=seed),
-        "beside": baselines(candidates, first_order, n_boot=n_boot, seed=seed),
+        "beside": baselines(candidates, first_order, prices=prices, n_boot=n_boot, seed=seed),
     }

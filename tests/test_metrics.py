@@ -102,6 +102,15 @@ def test_stop_loss_charges_the_rollouts_that_a_batch_needs() -> None:
     assert stop_loss(groups, exact, np.array([90.0, 0.0]), 3.0, rollouts) == pytest.approx([9.0])
 
 
+def test_stop_share_is_of_all_that_the_best_candidates_net() -> None:
+    # Tree 0 nets 2 and is stopped wrongly, tree 1 nets 6 and goes on, tree 2 goes on at a loss of 1.
+    exact, cost = np.array([5.0, 1.0, 8.0, 2.0]), np.array([3.0, 3.0, 2.0, 3.0])
+    m = measure([0, 0, 1, 2], exact, np.array([1.0, 1.0, 9.0, 9.0]), cost=cost)
+    assert m.stop_share.value == pytest.approx(100 * (2 + 1) / 8, rel=CLOSED_FORM)
+    assert measure([0, 0, 1, 2], exact, exact, cost=cost).stop_share.value == 0
+    assert measure([0, 0, 1, 2], exact, np.ones(4)).stop_share.value == 0  # free rollouts: going on is right
+
+
 def test_random_pick_is_the_mean_over_every_pick() -> None:
     tree, exact, _ = random_case(4)
     groups = Groups.of(tree)

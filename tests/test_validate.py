@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -14,12 +15,13 @@ from small_dataset import labelled
 from distill.candidates import Candidates, split_by_tree
 from distill.errors import InputError
 from distill.features import FeatureGraph
+from distill.generate import Traces, generate
 from distill.metrics import measure
 from distill.query import Query
 from distill.runtime import Scorer
 from distill.shards import read_trees
 from distill.train import train
-from distill.validate import baselines, examine, static_rates, validate
+from distill.validate import baselines, examine, static_values, validate
 from distill.voc import price
 
 
@@ -80,7 +82,7 @@ def test_figures_are_those_of_picks_made_one_tree_at_a_time(
     assert [e["price"] for e in found["stop_loss"]] == [0.01, 1.0]
 
 
-def test_static_rates_are_the_exact_engines(tmp_path: Path) -> None:
+def test_static_values_are_the_exact_engines(tmp_path: Path) -> None:
     dataset = labelled(tmp_path / "data", trees=30)
     whole, _ = Candidates.read(dataset)
     expected = [
@@ -88,7 +90,7 @@ def test_static_rates_are_the_exact_engines(tmp_path: Path) -> None:
         for _, tree in read_trees(dataset)
     ]
     # The tree is rebuilt flat, so rewards add up in another order.
-    assert static_rates(whole) == pytest.approx(np.concatenate(expected), rel=RELATIVE_TAIL, abs=0)
+    assert static_values(whole) == pytest.approx(np.concatenate(expected), rel=RELATIVE_TAIL, abs=0)
 
 
 def test_closed_forms_are_measured_like_scorers(tmp_path: Path) -> None:
@@ -117,6 +119,27 @@ def test_exact_labels_as_scores_lose_nothing(
     found = examine(scorer, whole, prices=[0.1], n_boot=2)
     assert found["forgone_percent"]["value"] == 0
     assert found["stop_loss"][0]["value"] == 0
+    assert found["stop_loss_percent"]["value"] == 0
+
+
+def test_static_values_take_the_batch_of_the_label(tmp_path: Path) -> None:
+    dataset = labelled(tmp_path / "data", trees=20, batch=3)
+    whole, _ = Candidates.read(dataset)
+    expected = [price(tree, Query(horizon=0.0, batch=3)).voc for _, tree in read_trees(dataset)]
+    assert static_values(whole) == pytest.approx(np.concatenate(expected), rel=RELATIVE_TAIL, abs=0)
+
+
+def test_a_dataset_without_worth_has_no_shares(
+    shipped: tuple[Path, Path, dict[str, Any]], tmp_path: Path
+) -> None:
+    file, _, _ = shipped
+    sure = [replace(t, var=np.zeros(t.n_leaves)) for _, t in read_trees(labelled(tmp_path / "a", trees=5))]
+    generate(Traces("sure", sure), tmp_path / "b")
+    found = validate(file, tmp_path / "b", n_boot=10)
+    assert found["accuracy"]["forgone_percent"]["value"] is None
+    assert found["accuracy"]["trees_with_best_zero"] == 5
+    assert found["beside"]["random pick"]["forgone_percent"]["value"] is None
+    json.dumps(found, allow_nan=False)
 
 
 def test_a_dataset_of_another_value_is_refused(

@@ -46,6 +46,7 @@ _HIGHEST = np.array([(k + 0.5) * W * np.polynomial.legendre.Legendre.basis(k)(X)
 _SMOOTH_FROM = 12.0  # from this exponent on a density starts so flat that 16 nodes see no singularity
 _NEVER = 46.0  # odds of exp(-this), 1e-20, count as none
 _NEGLIGIBLE = 40.0  # a density is left alone where it is below exp(-this) of its peak
+_CLOSE = 1e-3  # a mean this close to an end needs offsets from there
 _MAX_PANELS = 100_000
 
 
@@ -148,10 +149,11 @@ def cut_panels(
     ends = np.empty(2 * n_leaves)
     count = 0
     for j in range(n_leaves):
-        if a[j] < _SMOOTH_FROM and low[j] > floor:
+        n = a[j] + b[j]
+        if (a[j] < _SMOOTH_FROM or a[j] < _CLOSE * n) and low[j] > floor:
             ends[count] = low[j]
             count += 1
-        if b[j] < _SMOOTH_FROM and low[j] + width[j] > floor:
+        if (b[j] < _SMOOTH_FROM or b[j] < _CLOSE * n) and low[j] + width[j] > floor:
             ends[count] = low[j] + width[j]
             count += 1
     edges = np.append(ends[:count], np.array([floor, top]))
@@ -250,6 +252,8 @@ def distribution_functions(
                 below[j, s, r], above[j, s, r] = max(up, 0.0), max(down, 0.0)
         total = start[j] + np.sum(mass)
         defect[j] = abs(total - 1.0)
+        if defect[j] > 0.5:  # nothing fits: the error says so
+            total, defect[j] = 1.0, 2.0
         passed = start[j]
         for s in range(panels):
             for r in range(N):

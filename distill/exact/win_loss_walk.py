@@ -68,6 +68,14 @@ def _through(values: Floats, x: float) -> float:
 
 
 @compiled
+def _spread(a: float, b: float) -> float:
+    """Standard deviation, or where a density is singular its smooth part's width: exponents at least 1."""
+    a, b = max(a, 1.0), max(b, 1.0)
+    n = a + b
+    return math.sqrt((a / n) * (b / n) / (n + 1.0))
+
+
+@compiled
 def _edge_of_window(a: float, b: float, start: float, stop: float) -> float:
     """The point between start and stop where the density has fallen by exp(-_WINDOW) from start."""
     base = beta_divergence(a, b, start, 1.0 - start) if 0.0 < start < 1.0 else 0.0
@@ -110,12 +118,11 @@ def _lay_nodes(
     """
     n = a + b
     mean = a / n
-    spread = math.sqrt(mean * (b / n) / (n + 1.0))
     p_min = min(max(p_min, _floor(race)[0]), p_max)
     peak = min(max(mean, p_min), p_max)
     first = _edge_of_window(a, b, peak, p_min)
     last = _edge_of_window(a, b, peak, p_max)
-    piece = _SUB * spread
+    piece = _SUB * _spread(a, b)
     if peak != mean and 0.0 < peak < 1.0:
         piece = min(piece, 16.0 / abs(a / peak - b / (1.0 - peak)))
     piece *= race.width
@@ -261,7 +268,7 @@ class _Stretch(NamedTuple):
 @compiled
 def _stretch(a: float, b: float, table_error: float, race: Race) -> _Stretch:
     n = a + b
-    mean, spread = a / n, math.sqrt(a * b / (n + 1.0)) / n
+    mean, spread = a / n, _spread(a, b)
     floor, flat = _floor(race)
     p, q, v, g, tail = _lay_nodes(a, b, 0.0, 1.0, race)
     if floor > 0.0 and (floor >= mean or beta_divergence(a, b, floor, 1.0 - floor) < _WINDOW):

@@ -1,9 +1,9 @@
 """One ONNX file: the feature graph, the estimator behind it, and the decision; floor 5.
 
     t = estimator(features)        the learner's transform of value / unit
-    voc = unit max(t, 0)^2         transform "sqrt"
     voc = first_order exp(t)       transform "log_ratio", t cut at +-20
-    voc = max(voc, 1e-4 first_order), so that candidates the learner sees as worthless keep an order
+    voc = unit max(t, 0)^2         transform "sqrt", and at least 1e-4 first_order, so that candidates
+                                   which the learner sees as worthless keep an order
     pick = first argmax of voc - cost,  worth_it = max of voc - cost > 0
 
 What the estimator sees is cut to the ranges of its training rows; `in_range` says where nothing was cut.
@@ -48,10 +48,8 @@ def mapped_back(t: Floats, unit: Floats, first_order: Floats, transform: str) ->
     [0.5, 1e-05]
     """
     if transform == "sqrt":
-        voc = unit * np.square(np.maximum(t, 0.0))
-    else:
-        voc = first_order * np.exp(np.clip(t, -_LOG_RATIO_LIMIT, _LOG_RATIO_LIMIT))
-    return np.maximum(voc, _FLOOR * first_order)
+        return np.maximum(unit * np.square(np.maximum(t, 0.0)), _FLOOR * first_order)
+    return np.asarray(first_order * np.exp(np.clip(t, -_LOG_RATIO_LIMIT, _LOG_RATIO_LIMIT)))
 
 
 def export_scorer(
@@ -116,8 +114,8 @@ def _assemble(
     boosting = converted.graph.node[0].op_type == "TreeEnsemble"
     g = Nodes("s")
     clipped = g("Max", g("Min", "features", g.single(limits[:, 1])), g.single(limits[:, 0]))
-    same = g("Cast", g("Equal", clipped, "features"), to=TensorProto.FLOAT)
-    inside = g("Cast", g("ReduceMin", same, g.whole(1), keepdims=0), to=TensorProto.BOOL)
+    outside = g("ReduceL1", g("Sub", "features", clipped), g.whole(1), keepdims=0)
+    inside = g("LessOrEqual", outside, g.single(0.0))
     g("And", inside, g("GreaterOrEqual", "action", g.whole(0)), out="in_range")
     x = g("Cast", clipped, to=TensorProto.DOUBLE) if boosting else clipped
 
@@ -129,14 +127,13 @@ def _assemble(
     if transform == "sqrt":
         t = tail("Max", t, tail.double(0.0))
         voc = tail("Mul", "unit", tail("Mul", t, t))
+        tail("Max", voc, tail("Mul", "first_order", tail.double(_FLOOR)), out="voc")
     else:
-        limit = _LOG_RATIO_LIMIT
-        t = tail("Max", tail("Min", t, tail.double(limit)), tail.double(-limit))
-        voc = tail("Mul", "first_order", tail("Exp", t))
-    tail("Max", voc, tail("Mul", "first_order", tail.double(_FLOOR)), out="voc")
+        t = tail("Clip", t, tail.scalar(-_LOG_RATIO_LIMIT), tail.scalar(_LOG_RATIO_LIMIT))
+        tail("Mul", "first_order", tail("Exp", t), out="voc")
     net = tail("Sub", "voc", "cost")
     tail("ArgMax", net, axis=0, keepdims=0, out="pick")
-    tail("Greater", tail("ReduceMax", net, keepdims=0), tail.constant(np.array(0.0)), out="worth_it")
+    tail("Greater", tail("ReduceMax", net, keepdims=0), tail.scalar(0.0), out="worth_it")
 
     nodes = [*features.graph.node, *g.nodes, *renamed.node, *tail.nodes]
     initializers = [*features.graph.initializer, *g.initializers, *renamed.initializer, *tail.initializers]
@@ -176,6 +173,7 @@ def _renamed(converted: onnx.ModelProto, x: str) -> tuple[onnx.GraphProto, str]:
 def _session(model: onnx.ModelProto) -> Any:
     options = ort.SessionOptions()
     options.intra_op_num_threads = options.inter_op_num_threads = 1
+    options.log_severity_level = 3
     data = model.SerializeToString(deterministic=True)
     return ort.InferenceSession(data, options, providers=["CPUExecutionProvider"])
 

@@ -52,10 +52,9 @@ INPUTS: Final = ("mean", "var", "noise_var", "gain", "offset", "action", "cost",
 
 FEATURE_NAMES: Final = (
     "threshold",  # |t0| / s_k, at most 40
-    "log_slope",  # log g(y), at least -27.6
+    "sibling_help",  # -q(y) up to a constant factor: what the siblings take off the threshold, in theta
     "step",  # s_k / theta
-    "log_batch",  # log k
-    "lead",  # (V - C) / s_k, cut at +-40; positive where the leaf's action is the best one
+    "best",  # 1 where the leaf's action is the best one, else 0
 )
 
 _BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s
@@ -63,10 +62,9 @@ _PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite 
 _FAR: Final = 1e9  # standard deviations; Phi is 1 there
 _LARGE: Final = 1e300
 _TINY: Final = 1e-300
-_Z_LIMIT: Final = 40.0  # exp(-z^2 / 2) is 0 in double precision
-_LEAD_LIMIT: Final = 40.0
+_THRESHOLD_LIMIT: Final = 40.0  # exp(-z^2 / 2) is 0 in double precision
 _RATIO_LIMIT: Final = 1e18  # of noise to variance, either way
-_SLOPE_FLOOR: Final = 1e-12
+_SLOPE_FLOOR: Final = 1e-30  # where the siblings alone beat the rival: below any value that matters
 
 # q(y) = y - f^{-1}(y) as a v / sqrt(v + c), v = -log(1 - exp(-b y)); fitted by least squares to the exact
 # inverse, absolute error at most 0.006 for f^{-1}(y) from -8 up. (a, b, c).
@@ -89,37 +87,41 @@ class FeatureMatrix(NamedTuple):
     batch: NDArray[np.int64]
 
 
-def build_graph(*, points: int = 16) -> onnx.ModelProto:
+def build_graph(*, points: int = 12) -> onnx.ModelProto:
     """The feature graph of the Gaussian leaf table, one tree a call.
 
     Inputs, shape (n,) unless said: mean, var, noise_var, gain, offset, cost (double), action (int64,
-    0 to n - 1), remaining (double, shape (1,)). Outputs as in FeatureMatrix, named features, unit,
+    0 to n - 1), remaining (double, scalar). Outputs as in FeatureMatrix, named features, unit,
     first_order, batch. points : cells of the table.
     """
     g = Nodes("f")
-    # Leaves as the root sees them. From here on most values are rows, shape (1, n).
+    # Leaves as the root sees them. From the table on, values are rows, shape (1, n).
     m = g("Add", g("Mul", "gain", "mean"), "offset")
-    s = g("Abs", g("Mul", "gain", g("Sqrt", "var")))
+    v = g("Mul", "var", g("Mul", "gain", "gain"))
+    s = g("Sqrt", v)
     s_safe = g("Max", s, g.double(_TINY))
     low, high, joint, rest = _table(g, m, s, s_safe, points)
     value, others, spread2 = _moments(g, low, high, joint, rest, points)
 
-    # The best other action.
-    best = g("Equal", "action", g("Gather", "action", g("Reshape", g("ArgMax", value, axis=1), g.whole(1))))
-    second = g("ReduceMax", g("Where", best, g.double(-_LARGE), value))
-    rival = g("Where", best, second, g("ReduceMax", value))
+    # The best other action; Where would cost more than the arithmetic.
+    best = g("Equal", "action", g("Gather", "action", g("ArgMax", value, axis=1, keepdims=0)))
+    best = g("Reshape", g("Cast", best, to=TensorProto.DOUBLE), g.whole(1, -1))
+    first = g("ReduceMax", value)
+    second = g("ReduceMax", g("Sub", value, g("Mul", best, g.double(_LARGE))))
+    rival = g("Sub", first, g("Mul", best, g("Sub", first, second)))
 
-    # Threshold t0, in units of u.
-    theta = g("Sqrt", g("Add", spread2, g("Mul", s, s)))
-    theta = g("Max", theta, g.double(_TINY))
+    # Threshold t0.
+    theta = g("Max", g("Sqrt", g("Add", spread2, v)), g.double(_TINY))
     a, b, c = _Q_FIT
-    y = g("Max", g("Div", g("Sub", rival, others), theta), g.double(0.0))
+    y = g("Div", g("Sub", rival, others), theta)
     slope = g("Sub", g.double(1.0), g("Exp", g("Mul", y, g.double(-b))))
-    log_slope = g("Log", g("Max", slope, g.double(_SLOPE_FLOOR)))
-    q = g("Div", g("Mul", log_slope, theta), g("Sqrt", g("Sub", g.double(c), log_slope)))
-    t0 = g("Abs", g("Add", g("Sub", rival, m), g("Mul", q, g.double(a))), out="t0")
+    slope = g("Max", slope, g.double(_SLOPE_FLOOR))
+    log_slope = g("Log", slope)
+    help_ = g("Div", log_slope, g("Sqrt", g("Sub", g.double(c), log_slope)))
+    t0 = g("Mul", g("Mul", help_, theta), g.double(a))
+    t0 = g("Abs", g("Add", g("Sub", rival, m), t0), out="t0")
 
-    unit, z, k, k_safe, s_k = _best_batch(g, t0, s, s_safe)
+    unit, z, k, s_k = _best_batch(g, t0, s, s_safe)
     at_zero, linear, square = (g.double(x) for x in _LOSS_FIT)
     bottom = g("Add", g("Mul", g("Add", g("Mul", z, square), linear), z), at_zero)
     tail = g("Div", g("Exp", g("Mul", g("Mul", z, z), g.double(-0.5))), bottom)
@@ -128,11 +130,8 @@ def build_graph(*, points: int = 16) -> onnx.ModelProto:
     flat = g.whole(-1)
     g("Reshape", unit, flat, out="unit")
     g("Reshape", start, flat, out="first_order")
-    rounded = g("Floor", g("Add", k, g.double(0.5)))
-    g("Reshape", g("Cast", rounded, to=TensorProto.INT64), flat, out="batch")
-    lead = g("Div", g("Sub", value, rival), s_k)
-    lead = g("Max", g("Min", lead, g.double(_LEAD_LIMIT)), g.double(-_LEAD_LIMIT))
-    columns = (z, log_slope, g("Div", s_k, theta), g("Log", k_safe), lead)
+    g("Reshape", g("Cast", g("Add", k, g.double(0.5)), to=TensorProto.INT64), flat, out="batch")
+    columns = (z, help_, g("Div", s_k, theta), best)
     assert len(columns) == len(FEATURE_NAMES)
     stacked = g("Cast", g("Concat", *columns, axis=0), to=TensorProto.FLOAT)
     g("Transpose", stacked, perm=[1, 0], out="features")
@@ -180,25 +179,23 @@ def _moments(g: Nodes, low: str, high: str, joint: str, rest: str, points: int) 
     return value, others, g("Mul", g("Mul", width, width), spread2, out="spread2")
 
 
-def _best_batch(g: Nodes, t0: str, s: str, s_safe: str) -> tuple[str, ...]:
-    """The best real batch k for a threshold t0, and what follows from it; shape (1, n).
+def _best_batch(g: Nodes, t0: str, s: str, s_safe: str) -> tuple[str, str, str, str]:
+    """The best real batch k for a threshold t0; shape (1, n).
 
     s_k f(-t0 / s_k) / k has a single peak, so the best k within 1 and the rollouts left is the peak cut
-    to them. Returns unit, z = t0 / s_k, k, max(k, 1), s_k.
+    to them.
+    Returns unit = s_k / k, z = t0 / s_k, k, s_k.
     """
-    one = g.double(1.0)
     noise = g("Div", "noise_var", g("Max", "var", g.double(_TINY)))
-    noise = g("Max", g("Min", noise, g.double(_RATIO_LIMIT)), g.double(1 / _RATIO_LIMIT))
+    noise = g("Clip", noise, g.scalar(1 / _RATIO_LIMIT), g.scalar(_RATIO_LIMIT))
     u = g("Div", t0, s_safe)
     u2 = g("Mul", u, u)
     shape = g("Add", g("Div", g.double(PEAK[1]), g("Add", u2, g.double(PEAK[2]))), g.double(PEAK[0]))
-    k = g("Min", g("Max", g("Mul", g("Mul", u2, shape), noise), one), "remaining")
+    k = g("Clip", g("Mul", g("Mul", u2, shape), noise), g.scalar(1.0), "remaining")
     resolved = g("Div", k, g("Add", k, noise))
     s_k = g("Mul", s, g("Sqrt", resolved))
-    s_k_safe = g("Max", s_k, g.double(_TINY))
-    k_safe = g("Max", k, one)
-    z = g("Min", g("Div", t0, s_k_safe), g.double(_Z_LIMIT))
-    return g("Div", s_k, k_safe), z, k, k_safe, s_k_safe
+    z = g("Min", g("Div", t0, g("Max", s_k, g.double(_TINY))), g.double(_THRESHOLD_LIMIT))
+    return g("Div", s_k, g("Max", k, g.double(1.0))), z, k, s_k
 
 
 def _midpoints(points: int) -> Floats:
@@ -209,7 +206,7 @@ def _midpoints(points: int) -> Floats:
 def _model(g: Nodes) -> onnx.ModelProto:
     inputs = [typed(name, TensorProto.DOUBLE, ["n"]) for name in INPUTS]
     inputs[INPUTS.index("action")] = typed("action", TensorProto.INT64, ["n"])
-    inputs[INPUTS.index("remaining")] = typed("remaining", TensorProto.DOUBLE, [1])
+    inputs[INPUTS.index("remaining")] = typed("remaining", TensorProto.DOUBLE, [])
     outputs = [
         typed("features", TensorProto.FLOAT, ["n", len(FEATURE_NAMES)]),
         typed("unit", TensorProto.DOUBLE, ["n"]),
@@ -232,6 +229,7 @@ class FeatureGraph:
         self.model = build_graph() if model is None else model
         options = ort.SessionOptions()
         options.intra_op_num_threads = options.inter_op_num_threads = 1
+        options.enable_mem_reuse = False  # a tenth faster
         self._session = ort.InferenceSession(
             self.model.SerializeToString(deterministic=True), options, providers=["CPUExecutionProvider"]
         )
@@ -274,7 +272,7 @@ class FeatureGraph:
         feeds = []
         for a, b in pairwise(_tree_starts(columns.get("tree"), n)):
             feed = {name: column[a:b] for name, column in table.items()}
-            feed["remaining"] = feed["remaining"][:1]
+            feed["remaining"] = feed["remaining"][:1].reshape(())
             feeds.append(feed)
         return feeds
 

@@ -63,6 +63,10 @@ class Nodes:
         """The name of a double constant; a scalar has shape (1,)."""
         return self.constant(np.atleast_1d(np.asarray(value, dtype=np.float64)))
 
+    def scalar(self, value: float) -> str:
+        """The name of a double constant without dimensions, as Clip wants its bounds."""
+        return self.constant(np.array(value, dtype=np.float64))
+
     def single(self, value: Any) -> str:
         """The name of a float32 constant; a scalar has shape (1,)."""
         return self.constant(np.atleast_1d(np.asarray(value, dtype=np.float32)))

@@ -23,6 +23,7 @@ from distill.exact.distributions import (
     fit,
     near_nodes,
     node_room,
+    shifted,
 )
 from distill.exact.panels import lay_out, merged, resolved
 from distill.numerics import gauss_legendre
@@ -36,20 +37,22 @@ _T, _W = gauss_legendre(N)
 
 def convolved(x: Distribution, y: Distribution) -> Distribution:
     """The distribution of X + Y, X and Y independent."""
+    center = x.mean + y.mean
+    x, y = shifted(x, -x.mean), shifted(y, -y.mean)  # fine features of either are kept apart near 0 only
     spread = math.hypot(x.spread, y.spread)
-    mean = x.mean + y.mean
     reach = REACH * spread
-    low = max(x.edges[0] + y.edges[0], mean - reach)
-    high = max(min(x.edges[-1] + y.edges[-1], mean + reach), low)
+    low = max(x.edges[0] + y.edges[0], -reach)
+    high = max(min(x.edges[-1] + y.edges[-1], reach), low)
     breaks = (x.edges[x.hard][:, None] + y.edges[y.hard]).ravel()
-    edges, hard = lay_out(low, high, breaks, _sum_panels(x.edges, y.edges))
+    edges, hard = lay_out(low, high, breaks, _sum_panels(x, y))
     atom_at = (x.atom_at[:, None] + y.atom_at).ravel()
     atom_mass = (x.atom_mass[:, None] * y.atom_mass).ravel()
     order = np.argsort(atom_at, kind="stable")
     order = order[(atom_at[order] >= low) & (atom_at[order] <= high)]
     atom_at, atom_mass = atom_at[order], atom_mass[order]
     edges, hard, values = resolved(edges, hard, lambda at: _sum_density(x, y, at)[None])
-    return merged(fit(edges, hard, values[0], atom_at, atom_mass, spread, x.error + y.error))
+    out = fit(edges, hard, values[0], atom_at, atom_mass, spread, x.error + y.error)
+    return shifted(merged(out), center)
 
 
 def convolved_with_normal(x: Distribution, sd: float) -> Distribution:
@@ -58,27 +61,34 @@ def convolved_with_normal(x: Distribution, sd: float) -> Distribution:
     reach = REACH * spread
     low = max(x.edges[0] - REACH * sd, x.mean - reach)
     high = max(min(x.edges[-1] + REACH * sd, x.mean + reach), low)
-    panels = _normal_sum_panels(x.edges, sd)
+    panels = _normal_sum_panels(x, sd)
     edges, hard = lay_out(low, high, np.empty(0), panels)
     edges, hard, values = resolved(edges, hard, lambda at: _normal_sum_density(x, sd, at)[None])
     return merged(fit(edges, hard, values[0], np.empty(0), np.empty(0), spread, x.error))
 
 
-def _sum_panels(x: Floats, y: Floats) -> Floats:
-    """Each pair of panels spreads over the sum of both intervals and is as smooth as the wider one."""
-    low = (x[:-1, None] + y[:-1]).ravel()
-    high = (x[1:, None] + y[1:]).ravel()
-    width = np.hypot(np.diff(x)[:, None], np.diff(y)).ravel()
-    return np.column_stack((low, high, width))
+def _sum_panels(x: Distribution, y: Distribution) -> Floats:
+    """Each pair of panels spreads over the sum of both intervals, as smooth as both together.
+
+    A hard edge counts as a panel of width 0: the other density shows there at its own scale.
+    """
+    a = _with_hard_edges(x)
+    b = _with_hard_edges(y)
+    low = (a[:, None, 0] + b[:, 0]).ravel()
+    high = (a[:, None, 1] + b[:, 1]).ravel()
+    width = np.hypot((a[:, 1] - a[:, 0])[:, None], b[:, 1] - b[:, 0]).ravel()
+    return np.column_stack((low, high, width))[width > 0]
 
 
-def _normal_sum_panels(x: Floats, sd: float) -> Floats:
-    width = np.hypot(np.diff(x), WIDTH * sd)
-    panels = np.column_stack((x[:-1] - REACH * sd, x[1:] + REACH * sd, width))
-    rest = np.array(
-        [[x[0] - REACH * sd, x[-1] + REACH * sd, max(WIDTH * sd, float(np.max(width, initial=0)))]]
-    )
-    return np.concatenate((panels, rest))
+def _with_hard_edges(x: Distribution) -> Floats:
+    hard = x.edges[x.hard]
+    return np.column_stack((np.append(x.edges[:-1], hard), np.append(x.edges[1:], hard)))
+
+
+def _normal_sum_panels(x: Distribution, sd: float) -> Floats:
+    a = _with_hard_edges(x)
+    width = np.hypot(a[:, 1] - a[:, 0], WIDTH * sd)
+    return np.column_stack((a[:, 0] - REACH * sd, a[:, 1] + REACH * sd, width))
 
 
 @njit(cache=True, error_model="numpy")

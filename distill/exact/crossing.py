@@ -112,27 +112,30 @@ def _crossing(T: Distribution, tau: float, target: float, start: float, t: Float
 
 @njit(cache=True, error_model="numpy")
 def _room_to(T: Distribution, a: float, tau: float, up: bool) -> float:
-    """How far from a, up or down, F_tau is smooth enough for one panel."""
+    """How far from a, up or down, F_tau is smooth enough for one panel.
+
+    Panels and hard edges of T show within REACH tau of where they are, at their own scale and tau together.
+    """
     P = len(T.edges) - 1
+    if tau * _ROOM <= 8.0 * _EPS * abs(a):  # no step of that size can be taken
+        tau = 0.0
+    spread = REACH * tau
     w = math.inf
-    if up:
-        for p in range(P):
-            if T.edges[p + 1] > a and T.edges[p] < a + w:
-                w = min(w, max(T.edges[p + 1] - T.edges[p], _ROOM * tau, T.edges[p] - a))
-        if T.edges[P] > a:  # F = 1 from there on
-            w = min(w, max(T.edges[P] - a, _ROOM * tau))
-        for j in range(P + 1):
-            if T.hard[j] and a < T.edges[j] < a + w:
-                w = max(T.edges[j] - a, min(w, _ROOM * tau))
-        return w
-    for p in range(P - 1, -1, -1):
-        if T.edges[p] < a and T.edges[p + 1] > a - w:
-            w = min(w, max(T.edges[p + 1] - T.edges[p], _ROOM * tau, a - T.edges[p + 1]))
-    if T.edges[P] < a:
-        w = min(w, max(a - T.edges[P], _ROOM * tau))
-    for j in range(P, -1, -1):
-        if T.hard[j] and a - w < T.edges[j] < a:
-            w = max(a - T.edges[j], min(w, _ROOM * tau))
+    for step in range(2 * P + 1):
+        # From near to far: what lies close may already end the panel.
+        if step < P:
+            p = step if up else P - 1 - step
+            first, last = T.edges[p], T.edges[p + 1]
+            width = math.hypot(last - first, _ROOM * tau)
+        else:
+            j = step - P if up else 2 * P - step
+            if not T.hard[j]:
+                continue
+            first = last = T.edges[j]
+            width = _ROOM * tau
+        near, far = (first - spread - a, last + spread - a) if up else (a - last - spread, a - first + spread)
+        if far > 0.0 and near < w:
+            w = min(w, max(width, near))
     return w
 
 
@@ -193,7 +196,7 @@ def _unresolved(values: Floats) -> float:
         before += COEFFICIENTS[N - 2, i] * values[i]
         largest = max(largest, values[i])
     tail = abs(last) + abs(before)
-    return 4.0 * tail * min(tail / largest, 1.0) if largest > 0.0 else 0.0
+    return 8.0 * tail * min(tail / largest, 1.0) if largest > 0.0 else 0.0
 
 
 @njit(cache=True, error_model="numpy")

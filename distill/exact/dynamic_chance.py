@@ -28,13 +28,14 @@ from distill.exact.crossing import threshold_voc
 from distill.exact.max_sum import Constant, Max, Normal, Sum, max_sum_form, path_weights
 from distill.exact.thresholds import Threshold, thresholds
 from distill.numerics import gain
-from distill.query import Priced, Query
+from distill.query import Priced, Query, scale_of
 from distill.tree import BeliefTree, Floats, Ints
 
 __all__ = ["METHOD", "price"]
 
 METHOD = "dynamic with chance nodes, threshold distributions"
 
+_RESOLUTION = 1e-14  # of scale
 _EPS = 2.0**-52
 
 
@@ -80,6 +81,7 @@ class _Prices:
         self.weight = path_weights(tree)[0][tree.leaf_nodes]
         self.v, self.noise = tree.var, tree.noise_var
         self.var_now = self._to_come(self.v) * self.weight**2
+        self.scale = scale_of(tree)
         self.leaves: dict[int, _Leaf] = {}
         actions = max_sum_form(tree)
         self.value, self.error = np.zeros(len(actions)), np.zeros(len(actions))
@@ -93,15 +95,15 @@ class _Prices:
             self.leaves.update((leaf, _Leaf(a, None)) for leaf in action.leaves)
         tops = [action] if isinstance(action, Max) else action.maxima if isinstance(action, Sum) else []
         for top in tops:
-            value, error, found = thresholds(top, self.var_now)
+            value, error, found = thresholds(top, self.var_now, _RESOLUTION * self.scale)
             self.value[a] += value
             self.error[a] += error
             self.leaves.update((leaf, _Leaf(a, threshold)) for leaf, threshold in found.items())
 
     def _to_come(self, v: Floats) -> Floats:
         """v^2 / (v + n / h): variance of the posterior mean after h more rollouts."""
-        noise = self.noise / self.query.horizon
-        with np.errstate(invalid="ignore"):
+        with np.errstate(invalid="ignore", over="ignore"):
+            noise = self.noise / self.query.horizon
             return np.where(v > 0, v * (v / (v + noise)), 0.0)
 
     def all(self) -> Priced:

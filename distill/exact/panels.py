@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Callable
 
 import numpy as np
@@ -12,9 +11,11 @@ from distill.exact.distributions import COEFFICIENTS, Distribution, N, chebyshev
 from distill.numerics import gauss_legendre
 from distill.tree import Floats
 
-__all__ = ["lay_out", "merged", "resolved"]
+__all__ = ["collapsed", "lay_out", "merged", "resolved"]
 
 _PANEL_TOLERANCE = 1e-11  # of the span, Wasserstein-1, a panel
+_FINEST = 1e-11  # of the span: narrower features become atoms
+_NOTHING = 1e-60  # mass that no label can tell from none
 _MAX_HALVINGS = 8
 _EPS = 2.0**-52
 _T, _W = gauss_legendre(N)
@@ -38,9 +39,7 @@ def _greedy_edges(low: float, high: float, breaks: Floats, panels: Floats) -> Fl
         for q in range(len(panels)):
             if panels[q, 1] > a and panels[q, 0] < a + w:
                 w = min(w, max(panels[q, 2], panels[q, 0] - a))
-        # Even panels up to the stop where the rest of the way asks for no more than this width.
-        n = math.ceil((stop - a) / w * (1 - 1e-9))
-        end = stop if n <= 1 else a + w
+        end = a + w if w < stop - a else stop
         if not end > a:  # the scale is below the spacing of doubles: nothing can be resolved there
             end = min(stop, a + abs(a) * 4.5e-16 + 1e-300)
         out.append(end)
@@ -106,12 +105,103 @@ def _unresolved(edges: Floats, values: Floats) -> np.ndarray:
 
 
 @njit(cache=True, error_model="numpy")
+def collapsed(x: Distribution) -> Distribution:
+    """X with what is narrower than 1e-11 of its span turned into atoms, `error` grown by how far that moves.
+
+    Features that fine cannot be kept apart from where they sit in double precision.
+    """
+    P = len(x.edges) - 1
+    finest = _FINEST * (x.edges[P] - x.edges[0])
+    if P == 0 or np.min(x.edges[1:] - x.edges[:-1]) > finest:
+        return x
+    edges = [x.edges[0]]
+    flags = [x.hard[0]]
+    keep = np.zeros(P, dtype=np.bool_)
+    atom_at = []
+    atom_mass = []
+    moved = 0.0
+    p = 0
+    atom = 0
+    while p < P:
+        q = p  # panels p, ..., q - 1 lie within one finest width
+        while q < P and x.edges[q + 1] - x.edges[p] <= finest:
+            q += 1
+        mass = 0.0
+        moment = 0.0
+        while atom < len(x.atom_at) and x.atom_at[atom] <= x.edges[q]:
+            if q == p and x.atom_at[atom] > x.edges[p]:
+                break
+            mass += x.atom_mass[atom]
+            moment += x.atom_mass[atom] * (x.atom_at[atom] - x.edges[p])
+            atom += 1
+        for r in range(p, q):
+            mass += x.panel_mass[r]
+            moment += x.panel_moment[r] - x.edges[p] * x.panel_mass[r]
+        if q > p:
+            moved += mass * (x.edges[q] - x.edges[p])
+            inside = max(moment / mass, 0.0) if mass > 0.0 else 0.0
+            edges[-1] = min(x.edges[p] + inside, x.edges[q])
+            flags[-1] = True
+        if mass > 0.0:
+            atom_at.append(edges[-1])
+            atom_mass.append(mass)
+        if q == P:
+            break
+        keep[q] = True
+        edges.append(x.edges[q + 1])
+        flags.append(x.hard[q + 1])
+        p = q + 1
+    while atom < len(x.atom_at):
+        atom_at.append(x.atom_at[atom])
+        atom_mass.append(x.atom_mass[atom])
+        atom += 1
+    new_edges = np.array(edges)
+    values = np.empty(keep.sum() * N)
+    n = 0
+    for p in range(P):
+        if keep[p]:  # its mass stays, though an edge may have moved
+            half = 0.5 * (new_edges[n // N + 1] - new_edges[n // N])
+            moved += finest * x.panel_mass[p] * (1.0 if 2.0 * half < 100.0 * finest else 0.01)
+            for i in range(N):
+                values[n] = x.mass[p * N + i] / (_W[i] * half)
+                n += 1
+    out = fit(new_edges, np.array(flags), values, np.array(atom_at), np.array(atom_mass), x.spread, 0.0)
+    return Distribution(
+        out.edges, out.hard, out.density, out.cumulative, out.nodes, out.mass, out.panel_mass,
+        out.panel_moment, out.atom_at, out.atom_mass, x.mean, x.spread, max(x.error, out.error) + moved,
+    )  # fmt: skip
+
+
+@njit(cache=True, error_model="numpy")
+def trimmed(x: Distribution) -> Distribution:
+    """X without the panels at either end that carry nothing."""
+    P = len(x.edges) - 1
+    first, last = 0, P
+    while first < last and x.panel_mass[first] <= _NOTHING:
+        if len(x.atom_at) and x.atom_at[0] <= x.edges[first]:
+            break
+        first += 1
+    while last > first and x.panel_mass[last - 1] <= _NOTHING:
+        if len(x.atom_at) and x.atom_at[-1] >= x.edges[last]:
+            break
+        last -= 1
+    if first == 0 and last == P:
+        return x
+    return Distribution(
+        x.edges[first : last + 1], x.hard[first : last + 1], x.density[first:last], x.cumulative[first:last],
+        x.nodes[first * N : last * N], x.mass[first * N : last * N], x.panel_mass[first:last],
+        x.panel_moment[first:last], x.atom_at, x.atom_mass, x.mean, x.spread, x.error,
+    )  # fmt: skip
+
+
+@njit(cache=True, error_model="numpy")
 def merged(x: Distribution) -> Distribution:
     """The same distribution on as few panels as hold it; `error` grows by what that leaves out.
 
     From the left, each panel is the widest tried whose last coefficients are negligible and whose 16 nodes
     find the mass that the finer panels have there, so that no narrow peak slips between nodes.
     """
+    x = collapsed(trimmed(x))
     P = len(x.edges) - 1
     span = x.edges[P] - x.edges[0]
     values = np.empty(N)

@@ -32,6 +32,7 @@ Complex = NDArray[np.complex128]
 
 _FADED = 1e-13  # what is left out is below it, and so is what interpolation lets through
 _MAX_PHASE = 11.0  # half a panel times the frequency: 16 nodes integrate that to 1e-12
+_MAX_PIECES = 64  # that a panel may be cut into
 _BLOCK = 32  # frequencies between looks
 _MAX_FREQUENCIES = 1024
 _ROUNDING = 4e-15  # of the window, Wasserstein-1
@@ -132,7 +133,10 @@ class _Spectra:
         if not self.window > 0:
             return None
         walks = [_Walk(p, self.step) for p in self.parts]
+        widest = max(float(np.max(np.diff(p.edges), initial=0.0)) for p in self.parts)
         for count in range(_BLOCK, _MAX_FREQUENCIES + 1, _BLOCK):
+            if count * self.step * widest > _MAX_PIECES * _MAX_PHASE:
+                return None
             spectra = np.empty((len(walks), count), dtype=np.complex128)
             for r, walk in enumerate(walks):
                 spectra[r] = walk.until(count) if self.signs[r] > 0 else walk.until(count).conj()

@@ -30,8 +30,9 @@ from distill.tree import Floats
 
 __all__ = ["Threshold", "thresholds"]
 
-_SURE = 4e-15  # of the span: a standard deviation that doubles cannot resolve counts as 0
-_SD_TO_W1 = 0.7978845608028654  # sqrt(2 / pi): Wasserstein-1 distance of N(m, s^2) from m, over s
+# E |X - E X| <= spread: what is this narrow counts as sure, and its spread as an error.
+_NARROW = 2e-12  # of the widest rival
+_UNRESOLVED = 4e-15  # of where it lies
 
 
 @dataclass(frozen=True)
@@ -46,12 +47,13 @@ class Threshold:
     rest_var: float
 
 
-def thresholds(top: Max, var: Floats) -> tuple[float, float, dict[int, Threshold]]:
+def thresholds(top: Max, var: Floats, resolution: float) -> tuple[float, float, dict[int, Threshold]]:
     """E of a maximum at the top of an action, its error bound, and the threshold of every leaf below it.
 
     var : variance that each leaf contributes to the root (W^2 times its variance), u^2.
+    resolution : standard deviations below it count as 0, and as an error.
     """
-    passes = _Passes(var)
+    passes = _Passes(var, resolution)
     order: list[Max | Sum] = []
     stack: list[Max | Sum] = [top]
     while stack:
@@ -70,6 +72,7 @@ def thresholds(top: Max, var: Floats) -> tuple[float, float, dict[int, Threshold
 @dataclass
 class _Passes:
     var: Floats
+    resolution: float
     value: dict[int, Distribution] = field(default_factory=dict)
     found: dict[int, Threshold] = field(default_factory=dict)
 
@@ -119,33 +122,28 @@ class _Rivals:
         self.n_members = len(members)
         self.mu = np.array([members[c].shift for c in self.normal])
         self.sd = np.array([passes.sd(members[c].leaves) for c in self.normal])
-        self.sums: list[tuple[int, Distribution]] = [
+        sums = [
             (c, shifted(passes.value[id(m)], m.shift)) for c, m in enumerate(members) if isinstance(m, Sum)
         ]
         if T is not None:
-            self.sums.append((len(members), T))
+            sums.append((len(members), T))
         self.n = len(members) + (T is not None)
-        self.low, self.high = np.full(self.n, -math.inf), np.full(self.n, -math.inf)
-        self.low[self.normal] = self.mu - REACH * self.sd
-        self.high[self.normal] = self.mu + REACH * self.sd
-        for c, d in self.sums:
-            self.low[c], self.high[c] = d.edges[0], d.edges[-1]
-        top = max(float(self.high.max()), self.floor)
-        span = top - float(self.low.min())
-        # Sure, or as good as sure: a floor for the others.
-        self.sure = np.full(self.n, -math.inf)
-        is_sure = self.sd <= _SURE * max(span, abs(top))
+        place, self.spread, self.error = np.zeros(self.n), np.zeros(self.n), np.zeros(self.n)
+        self.low, self.high = np.zeros(self.n), np.zeros(self.n)
         normal = np.array(self.normal, dtype=np.int64)
-        self.sure[normal[is_sure]] = self.mu[is_sure]
-        self.error = np.zeros(self.n)
-        self.error[normal[is_sure]] = _SD_TO_W1 * self.sd[is_sure]
-        self.spread = np.zeros(self.n)
-        self.spread[normal] = self.sd
-        for c, d in self.sums:
-            self.error[c], self.spread[c] = d.error, d.spread
-        keep = ~is_sure
-        self.normal = normal[keep].tolist()
-        self.mu, self.sd = self.mu[keep], self.sd[keep]
+        place[normal], self.spread[normal] = self.mu, self.sd
+        self.low[normal], self.high[normal] = self.mu - REACH * self.sd, self.mu + REACH * self.sd
+        for c, d in sums:
+            place[c], self.spread[c], self.error[c] = d.mean, d.spread, d.error
+            self.low[c], self.high[c] = d.edges[0], d.edges[-1]
+        # Sure, or too narrow to be told from it: a floor for the others.
+        narrow = max(_NARROW * float(self.spread.max()), passes.resolution)
+        is_sure = self.spread <= np.maximum(narrow, _UNRESOLVED * np.abs(place))
+        self.sure = np.where(is_sure, place, -math.inf)
+        self.error += np.where(is_sure, self.spread, 0.0)
+        self.normal = normal[~is_sure[normal]].tolist()
+        self.mu, self.sd = self.mu[~is_sure[normal]], self.sd[~is_sure[normal]]
+        self.sums = [(c, d) for c, d in sums if not is_sure[c]]
 
     def maximum(self) -> Distribution:
         """The distribution of the largest."""

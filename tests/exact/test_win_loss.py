@@ -13,7 +13,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import CLOSED_FORM, RELATIVE_TAIL
+from ladder import CLOSED_FORM, QUADRATURE, RELATIVE_TAIL
 from win_loss_builders import arms, change, random_tree
 
 from distill.errors import InputError
@@ -181,11 +181,9 @@ def test_static_properties(actions, k, up, times):
     shifted = price(change(tree, low=tree.low + up, high=tree.high + up), query)
     assert np.all(np.abs(shifted.voc - plain.voc) <= shifted.error + plain.error + CLOSED_FORM * scale)
     scaled = price(change(tree, low=tree.low * times, high=tree.high * times), query)
-    assert scaled.voc == pytest.approx(
-        plain.voc * times, rel=1e3 * CLOSED_FORM, abs=CLOSED_FORM * scale * times
-    )
+    assert scaled.voc == pytest.approx(plain.voc * times, rel=QUADRATURE, abs=CLOSED_FORM * scale * times)
     turned = price(arms(*[leaves[::-1] for leaves in actions[::-1]]), query)
-    assert turned.voc[::-1] == pytest.approx(plain.voc, rel=1e3 * CLOSED_FORM, abs=CLOSED_FORM * scale)
+    assert turned.voc[::-1] == pytest.approx(plain.voc, rel=QUADRATURE, abs=CLOSED_FORM * scale)
 
 
 def test_extremes_are_finite_and_bounded():
@@ -212,7 +210,7 @@ def test_endless_budget_is_certified():
     priced = price(arms([(1, 1)], [(2, 2)]), Query(horizon=0, batch=None, remaining=2**53))
     near = price(arms([(1, 1)], [(2, 2)]), Query(horizon=0, batch=None, remaining=100))
     assert priced.voc.tolist() == near.voc.tolist()
-    assert np.all(priced.error < 1e-14)
+    assert np.all(priced.error < CLOSED_FORM)
 
 
 @pytest.mark.parametrize("h", [0.5, 1.25])

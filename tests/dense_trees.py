@@ -100,3 +100,78 @@ def random_tree(rng: np.random.Generator, leaves: int, chance: bool = True, **mo
             **more,
         }
     )
+
+
+def effects_tree(nested: Any, mean: Any = None, cov: Any = None) -> BeliefTree:
+    """One root action over a tree ["node", [[mean, sd, subtree], ...]] or ["leaf"] of effects on edges.
+
+    A leaf is the sum of the effects on its way. `mean` and `cov`, when given, replace what follows.
+    """
+    parent, kind, means, sds = [-1, 0], ["decision", "decision"], [0.0, 0.0], [0.0, 0.0]
+
+    def grow(node: int, subtree: Any) -> None:
+        for m, sd, below in subtree[1]:
+            parent.append(node)
+            kind.append("leaf" if below[0] == "leaf" else "decision")
+            means.append(means[node] + m)
+            sds.append(sd)
+            if below[0] != "leaf":
+                grow(len(parent) - 1, below)
+
+    grow(1, nested)
+    leaves = [v for v, k in enumerate(kind) if k == "leaf"]
+    if mean is None:
+        mean = [means[v] for v in leaves]
+    if cov is None:
+        on_way = ways(parent)[leaves]
+        cov = (on_way * np.square(sds)) @ on_way.T
+    values = iter(np.asarray(mean, dtype=float).tolist())
+    return from_record(
+        {
+            "format": "belief-tree/1",
+            "parent": parent,
+            "kind": kind,
+            "mean": [next(values) if k == "leaf" else None for k in kind],
+            "cov": np.asarray(cov).tolist(),
+            "noise_var": [1.0 if k == "leaf" else None for k in kind],
+        }
+    )
+
+
+def ways(parent: list[int]) -> np.ndarray:
+    """Row v: 1 at every node on the way from v to the root, both included."""
+    out = np.eye(len(parent))
+    for v in range(1, len(parent)):
+        out[v] += out[parent[v]]
+    return out
+
+
+def nested_effects(
+    rng: np.random.Generator, depth: int, branching: tuple[int, int], rollouts: int
+) -> BeliefTree:
+    """A decision tree whose nodes all add an effect, after some rollouts at random leaves."""
+    parent, kind, level = [-1], ["decision"], [0]
+    for d in range(depth):
+        here, level = level, []
+        for node in here:
+            for _ in range(int(rng.integers(branching[0], branching[1] + 1))):
+                parent.append(node)
+                kind.append("leaf" if d == depth - 1 or rng.random() < 0.15 else "decision")
+                if kind[-1] == "decision":
+                    level.append(len(parent) - 1)
+    leaves = [v for v, k in enumerate(kind) if k == "leaf"]
+    on_way = ways(parent)[leaves]
+    cov = (on_way * rng.uniform(0.2, 1.5, size=len(parent))) @ on_way.T
+    for leaf in rng.integers(len(leaves), size=rollouts):
+        cov = cov - np.outer(cov[leaf], cov[leaf]) / (cov[leaf, leaf] + rng.uniform(0.5, 3))
+    cov = (cov + cov.T) / 2
+    return from_record(
+        {
+            "format": "belief-tree/1",
+            "parent": parent,
+            "kind": kind,
+            "mean": [float(rng.normal()) if k == "leaf" else None for k in kind],
+            "cov": cov.tolist(),
+            "noise_var": [float(rng.uniform(0.5, 2)) if k == "leaf" else None for k in kind],
+        }
+    )

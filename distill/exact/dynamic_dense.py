@@ -27,15 +27,17 @@ from scipy.stats import qmc
 
 from distill import schema
 from distill.errors import RefusedError
+from distill.exact import ancestral
 from distill.exact.best_batch import best_batch
 from distill.exact.gaps import PostOrder, post_order
 from distill.exact.sampled_outcome import mean_over_outcomes, outer_expectation
 from distill.exact.sampled_rises import by_breakpoints, by_envelope, mean_values
 from distill.exact.static_dense import directions
+from distill.numerics import gain
 from distill.query import Priced, Query, scale_of
 from distill.tree import BeliefTree, Floats, Ints
 
-__all__ = ["METHOD", "price"]
+__all__ = ["METHOD", "price", "sampled"]
 
 METHOD = "dynamic dense, scrambled Sobol sampling"
 
@@ -47,11 +49,23 @@ _RATE_TOL = 1e-4
 
 
 def price(tree: BeliefTree, query: Query) -> Priced:
-    """VOC or rate at h > 0 of every leaf of a Gaussian tree with `cov` (or without), any node kinds.
+    """VOC or rate at h > 0 of every leaf of a Gaussian tree with `cov`, any node kinds.
 
-    `error` is 4 standard errors over independent scrambles plus the effect of a wrong choice within them
-    (see the module). With query.tolerance, points are added until error <= tolerance x scale, up to 2,048
-    a scramble. Raises RefusedError for horizon 0 and for win/loss leaves.
+    Exact by `ancestral` where that covers the tree, else `sampled`. Raises RefusedError for horizon 0 and
+    for win/loss leaves.
+    """
+    try:
+        return ancestral.price(tree, query)
+    except RefusedError:
+        return sampled(tree, query)
+
+
+def sampled(tree: BeliefTree, query: Query) -> Priced:
+    """The same by sampling alone, with `cov` or without.
+
+    `error` is 4 standard errors over independent scrambles, plus the effect of a wrong choice within them,
+    plus an allowance for what no sample met. With query.tolerance, points are added until error <=
+    tolerance x scale, up to 2,048 a scramble.
     """
     if tree.mean is None or tree.noise_var is None:
         raise RefusedError("dense sampling is for Gaussian leaves; this tree has win/loss leaves")
@@ -73,7 +87,7 @@ def price(tree: BeliefTree, query: Query) -> Priced:
         ) -> tuple[Floats, Floats]:
             pairs = [sampler.voc(int(todo[i]), float(x)) for i, x in zip(leaf, k, strict=True)]
             found = np.array(pairs).reshape(-1, 2)
-            return found[:, 0], found[:, 1] + 1e-9 * scale
+            return found[:, 0], found[:, 1]
 
         if query.rate:
             assert query.remaining is not None
@@ -93,6 +107,7 @@ class _Sampler:
 
     order: PostOrder
     cov: Floats
+    R: Floats
     left: Floats  # S - R
     noise_var: Floats
     sample: Floats  # (n_leaves, points) of M - m, for the shape along the outcome
@@ -101,6 +116,8 @@ class _Sampler:
     now: Floats  # (scrambles, actions)
     value: Floats  # (actions,) V_h
     offset: Floats | None  # (n_leaves,) at the means, on decision-only trees
+    scale: float
+    now_points: int
 
     @classmethod
     def of(cls, tree: BeliefTree, h: float, log_shape: int, log_now: int) -> _Sampler:
@@ -134,6 +151,7 @@ class _Sampler:
         return cls(
             order=order,
             cov=cov,
+            R=R,
             left=left,
             noise_var=tree.noise_var,
             sample=sample,
@@ -142,6 +160,8 @@ class _Sampler:
             now=now,
             value=now.mean(axis=0) + order.value.max(),
             offset=None if tree.has_chance else _offsets(order),
+            scale=scale_of(tree),
+            now_points=points[0].size,
         )
 
     def voc(self, i: int, k: float) -> tuple[float, float]:
@@ -150,16 +170,43 @@ class _Sampler:
             return 0.0, 0.0
         tau = math.sqrt(self.cov[i, i] + self.noise_var[i] / k)
         tau_left = math.sqrt(self.left[i, i] + self.noise_var[i] / k)
-        gain = self.order.gain
+        weight = self.order.gain
         b, c = self.cov[i] / tau, self.left[i] / tau_left
         z = (self.sample[i] + tau_left * self.xi) / tau
         more = np.zeros_like(self.now)
         if np.any(c != 0):
             still = np.zeros_like(z)
-            rise = self._along(gain * c, still, np.zeros_like(c), still)
+            rise = self._along(weight * c, still, np.zeros_like(c), still)
             more = np.maximum(mean_over_outcomes(*rise) - rise[0][:, :, rise[0].shape[2] // 2], 0.0)
-        voc, error = outer_expectation(self.now, more, *self._along(gain * b, z, gain * c, self.xi))
-        return float(voc), float(error)
+        voc, error = outer_expectation(self.now, more, *self._along(weight * b, z, weight * c, self.xi))
+        return float(voc), float(error) + self._unseen(more, weight * c)
+
+    def _unseen(self, more: Floats, c: Floats) -> float:
+        """Allowance for what no sample may have met, so that no standard error shows it.
+
+        N points miss an event of probability e^-x / N with odds e^(-e^-x); of those likely to be missed,
+        gains add up to about 1 / N of the largest spread. For `more`, which rests on fewer points, the
+        allowance is made where scrambles disagree about it, and only up to what the action can gain at all.
+        """
+        allowance = self.scale / self.now_points
+        uneven = np.std(more, axis=0) >= 0.5 * np.mean(more, axis=0)
+        for a in np.flatnonzero(uneven & np.any(c != 0)):
+            own = np.flatnonzero(self.order.action == a)
+            spread = float(np.ptp(c[own]))
+            if self.offset is not None and spread > 0:
+                best = own[np.argmax(self.offset[own])]
+                R = self.R[np.ix_(own, own)] * np.outer(self.order.gain[own], self.order.gain[own])
+                at = int(np.flatnonzero(own == best)[0])
+                sd = np.sqrt(np.maximum(np.diag(R) - 2 * R[at] + R[at, at], 0) + (c[own] - c[best]) ** 2)
+                others = np.flatnonzero((own != best) & (sd > 0))
+                behind = self.offset[best] - self.offset[own[others]]
+                most = sum(
+                    s * gain(-d / s) for s, d in zip(sd[others].tolist(), behind.tolist(), strict=True)
+                )
+                allowance += min(most, spread / len(self.xi))
+            else:
+                allowance += spread / len(self.xi)
+        return allowance
 
     def _along(
         self, slopes: Floats, shift: Floats, lift: Floats, noise: Floats

@@ -12,8 +12,10 @@ from dense_trees import flat, random_tree, two_level
 from ladder import CLOSED_FORM, QUADRATURE
 
 from distill.errors import RefusedError
-from distill.exact import static_dense
-from distill.exact.dynamic_dense import METHOD, price
+from distill.exact import ancestral, static_dense
+from distill.exact.dynamic_dense import METHOD
+from distill.exact.dynamic_dense import price as price_best
+from distill.exact.dynamic_dense import sampled as price
 from distill.oracle import dense as oracle
 from distill.query import Query, scale_of
 from distill.record import from_record
@@ -221,6 +223,17 @@ def test_rate_against_every_batch():
 def test_static_and_win_loss_are_refused():
     with pytest.raises(RefusedError, match="horizons above 0"):
         price(flat([0.0, 1.0], np.eye(2)), Query(horizon=0))
+
+
+def test_ancestral_effects_are_priced_exactly_and_all_else_is_sampled():
+    cov = np.kron(np.eye(2), np.full((3, 3), 0.4)) + 0.2 + 0.4 * np.eye(6)
+    tree = two_level([[0.0, 0.2, 0.4], [0.1, 0.3, 0.2]], cov)
+    exact, rough = price_best(tree, Query(batch=2)), price(tree, Query(batch=2))
+    assert exact.method == ancestral.METHOD
+    assert np.all(np.abs(exact.voc - rough.voc) <= rough.error)
+    assert price_best(tree, Query(horizon=3, batch=2)).method == METHOD
+    wild = two_level([[0.0, 0.2, 0.4], [0.1, 0.3, 0.2]], random_covariance(np.random.default_rng(0), 6))
+    assert price_best(wild, Query(batch=2)).method == METHOD
 
 
 @pytest.mark.slow

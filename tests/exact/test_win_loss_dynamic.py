@@ -69,10 +69,11 @@ def exact_voc(actions: list[list[tuple[int, int]]], action: int, leaf: int, k: i
         ([[(1, 12), (1, 10)], [(12, 3), (2, 2)]], 12),
         ([[(15, 2), (1, 9)], [(2, 14), (1, 12)]], 20),
         ([[(1, 30), (1, 1)], [(25, 1)]], 24),
+        ([[(1, 30), (1, 9)], [(30, 11)]], 90),
     ],
 )
 def test_agrees_with_fractions_relatively(actions, k):
-    """Late in a search, too: VOC down to 1e-20 of scale keeps its digits."""
+    """Late in a search, too: VOC down to 1e-28 keeps its digits."""
     tree = arms(*actions)
     priced = price(tree, Query(batch=k))
     i = 0

@@ -43,8 +43,8 @@ METHOD = "dynamic dense, scrambled Sobol sampling"
 
 _SCRAMBLES = 24
 _SEED = 20240229  # any; fixed, so that a tree always gets the same answer
-_LEVELS = ((7, 12), (9, 13), (11, 14))  # log2 of points a scramble: along the outcome, at present
-_MOST_NUMBERS = 2**23  # normal numbers at present held at once
+_LEVELS = ((8, 12), (10, 13), (11, 14))  # log2 of points a scramble: along the outcome, at present
+_MOST_NUMBERS = 2**24  # normal numbers at present held at once
 _RATE_TOL = 1e-4
 
 
@@ -111,6 +111,7 @@ class _Sampler:
     left: Floats  # S - R
     noise_var: Floats
     sample: Floats  # (n_leaves, points) of M - m, for the shape along the outcome
+    by_action: Ints  # leaves in the order of the columns of `contribution`
     contribution: Floats  # (points, n_leaves) the same, times the gains
     xi: Floats  # (points,)
     now: Floats  # (scrambles, actions)
@@ -147,7 +148,8 @@ class _Sampler:
         )
         few = 2**log_shape
         sample = np.ascontiguousarray(everything.reshape(n, _SCRAMBLES, -1)[:, :, :few]).reshape(n, -1)
-        contribution = np.ascontiguousarray((sample * order.gain[:, None]).T)
+        by_action = np.arange(n) if tree.has_chance else np.argsort(order.action, kind="stable")
+        contribution = np.ascontiguousarray((sample * order.gain[:, None])[by_action].T)
         return cls(
             order=order,
             cov=cov,
@@ -155,6 +157,7 @@ class _Sampler:
             left=left,
             noise_var=tree.noise_var,
             sample=sample,
+            by_action=by_action,
             contribution=contribution,
             xi=np.ascontiguousarray(points[0, :, :few].reshape(-1)),
             now=now,
@@ -218,10 +221,10 @@ class _Sampler:
                 order.kind, order.n_children, order.leaf, order.gap, self.contribution, slopes, shift, lift,
                 noise, _SCRAMBLES, n_actions,
             )  # fmt: skip
-        by_slope = np.lexsort((slopes, order.action))
-        first = np.searchsorted(order.action[by_slope], np.arange(n_actions + 1))
+        by = self.by_action
+        first = np.searchsorted(order.action[by], np.arange(n_actions + 1))
         return by_envelope(
-            self.contribution, self.offset, slopes, shift, lift, noise, by_slope, first, _SCRAMBLES
+            self.contribution, self.offset[by], slopes[by], shift, lift[by], noise, first, _SCRAMBLES
         )
 
 
@@ -258,7 +261,7 @@ def _factor(R: Floats, gain: Floats) -> Floats:
     return np.asarray(vectors[:, keep] * np.sqrt(values[keep]) / weight[:, None])
 
 
-@lru_cache(maxsize=8)
+@lru_cache(maxsize=3)
 def _points(dims: int, log_points: int) -> Floats:
     """Standard normal points, (dims, scrambles, points); a shorter set is the start of a longer one."""
     if dims > qmc.Sobol.MAXDIM:

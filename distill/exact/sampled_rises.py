@@ -34,15 +34,14 @@ def by_envelope(
     shift: Floats,
     lift: Floats,
     noise: Floats,
-    order: Ints,
     first: Ints,
     scrambles: int,
 ) -> tuple[Floats, Floats, Floats]:
     """Mean values, (scrambles, actions, bins + 1), up to a constant; slope changes and second moments.
 
-    Leaf l of sample j is worth offset_l + sample_jl + lift_l noise_j + slopes_l (z - shift_j).
+    Leaves are sorted by action, those of action a at first[a]:first[a + 1]; leaf l of sample j is worth
+    offset_l + sample_jl + lift_l noise_j + slopes_l (z - shift_j).
     sample : (scrambles x points, n_leaves), one scramble's points next to each other.
-    order, first : leaves sorted by action, within it by slope; action a at order[first[a]:first[a + 1]].
     """
     n_samples, n_leaves = sample.shape
     n_actions = len(first) - 1
@@ -50,43 +49,59 @@ def by_envelope(
     bend = np.zeros((scrambles, n_actions, _BINS, 3))  # moments 0, 1, 2 of the slope changes in a bin
     rate = np.zeros((scrambles, n_actions))  # slope at z = -REACH
     y = np.empty(n_leaves)
-    b = slopes[order]
-    hull = np.empty(n_leaves, dtype=np.int64)
+    near, hull = np.empty(n_leaves, dtype=np.int64), np.empty(n_leaves, dtype=np.int64)
     begin = np.empty(n_leaves)
     for j in range(n_samples):
         s = j // (n_samples // scrambles)
+        e, x = noise[j], shift[j]
+        row = sample[j]
+        for w in range(n_leaves):
+            y[w] = offset[w] + row[w] + lift[w] * e - slopes[w] * x
         for a in range(n_actions):
             best = first[a]
-            for w in range(first[a], first[a + 1]):
-                leaf = order[w]
-                y[w] = offset[leaf] + sample[j, leaf] + lift[leaf] * noise[j] - b[w] * shift[j]
+            for w in range(first[a] + 1, first[a + 1]):
                 if y[w] > y[best]:
                     best = w
-            m = 0
+            top, steep = y[best], slopes[best]
+            count = 0
             for w in range(first[a], first[a + 1]):
-                if y[w] + abs(b[w] - b[best]) * REACH < y[best]:
-                    continue  # stays below the leaf that is best at z = 0
-                at = -np.inf
-                while m > 0:
-                    old = hull[m - 1]
-                    rise = b[w] - b[old]
-                    if rise > 0:
-                        at = (y[old] - y[w]) / rise
-                        if at > begin[m - 1]:
-                            break
-                    elif y[w] <= y[old]:
-                        at = np.inf
-                        break
-                    at = -np.inf
-                    m -= 1
-                if at < REACH:
-                    hull[m] = w
-                    begin[m] = max(at, -REACH)
-                    m += 1
-            rate[s, a] += b[hull[0]]
+                if y[w] + abs(slopes[w] - steep) * REACH >= top:  # else below the best, all the way
+                    place = count
+                    while place > 0 and slopes[near[place - 1]] > slopes[w]:
+                        near[place] = near[place - 1]
+                        place -= 1
+                    near[place] = w
+                    count += 1
+            m = _hull(y, slopes, near, count, hull, begin)
+            rate[s, a] += slopes[hull[0]]
             for h in range(1, m):
-                _put(bend[s, a], begin[h], b[hull[h]] - b[hull[h - 1]], step)
+                _put(bend[s, a], begin[h], slopes[hull[h]] - slopes[hull[h - 1]], step)
     return _on_grid(bend, rate, n_samples // scrambles)
+
+
+@compiled
+def _hull(y: Floats, slopes: Floats, near: Ints, count: int, hull: Ints, begin: Floats) -> int:
+    """Upper envelope of lines y + slope z within the reach; `near` in order of slope. Size of the hull."""
+    m = 0
+    for w in near[:count]:
+        at = -np.inf
+        while m > 0:
+            old = hull[m - 1]
+            rise = slopes[w] - slopes[old]
+            if rise > 0:
+                at = (y[old] - y[w]) / rise
+                if at > begin[m - 1]:
+                    break
+            elif y[w] <= y[old]:
+                at = np.inf
+                break
+            at = -np.inf
+            m -= 1
+        if at < REACH:
+            hull[m] = w
+            begin[m] = max(at, -REACH)
+            m += 1
+    return m
 
 
 @compiled

@@ -93,7 +93,7 @@ def test_nested_choices_against_plain_sampling():
     tree = from_record(record)
     got = price(tree, Query(batch=4))
     for leaf in (0, 3):
-        want, se = oracle.monte_carlo_voc(tree, leaf, 4, math.inf, rng, 2000, 20_000)
+        want, se = oracle.monte_carlo_voc(tree, leaf, 4, math.inf, rng, 1000, 20_000)
         assert got.voc[leaf] > 0.02
         # The reference shares its inner draws over outcomes: their error, below 2 / sqrt(inner), is on top.
         assert abs(got.voc[leaf] - want) <= 4 * se + got.error[leaf] + 2 / math.sqrt(20_000)

@@ -273,9 +273,9 @@ def test_relabelling_permutes_and_shifting_changes_nothing(seed, n):
     assert np.allclose(shifted, base, rtol=0, atol=slack)
 
 
-def test_growth_with_leaves_and_4096_of_them():
+@pytest.mark.parametrize("n", [512, pytest.param(4096, marks=pytest.mark.slow)])
+def test_many_leaves(n):
     rng = np.random.default_rng(17)
-    n = 4096
     factor = rng.normal(size=(n, 3))
     cov = factor @ factor.T
     tree = flat_unchecked(rng.normal(size=n), cov, np.ones(n))

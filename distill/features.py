@@ -87,7 +87,7 @@ class FeatureMatrix(NamedTuple):
     batch: NDArray[np.int64]
 
 
-def build_graph(*, points: int = 12) -> onnx.ModelProto:
+def build_graph(*, points: int = 16) -> onnx.ModelProto:
     """The feature graph of the Gaussian leaf table, one tree a call.
 
     Inputs, shape (n,) unless said: mean, var, noise_var, gain, offset, cost (double), action (int64,

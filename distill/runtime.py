@@ -11,7 +11,6 @@ was refused - the closed-form static rate answers instead, and is counted.
 
 from __future__ import annotations
 
-import json
 import os
 import threading
 from collections import OrderedDict
@@ -121,10 +120,8 @@ class Scorer:
     def from_bytes(cls, data: bytes, *, strict: bool = False, name: str = "scorer") -> Scorer:
         """As `load`, from bytes; `name` stands in messages."""
         try:
-            scorer_file.check(data)
-            session = _session(data)
-            facts = _facts(session)
-            scorer = cls(facts, strict, _session=session)
+            facts = scorer_file.check(data)
+            scorer = cls(facts, strict, _session=_session(data))
             scorer._self_test()
         except ScorerFileError as e:
             raise ScorerFileError(f"{name}: {e}") from None
@@ -376,24 +373,6 @@ def _session(data: bytes) -> Any:
         return ort.InferenceSession(data, options, providers=["CPUExecutionProvider"])._sess
     except Exception as e:  # onnxruntime raises its own types
         raise ScorerFileError(f"onnxruntime refuses it: {_first_line(e)}") from None
-
-
-def _facts(session: Any) -> dict[str, Any]:
-    """The file's metadata, JSON values parsed."""
-    facts: dict[str, Any] = {}
-    for key, text in session.model_meta.custom_metadata_map.items():
-        if key in ("format", "transform"):
-            facts[key] = text
-            continue
-        try:
-            facts[key] = json.loads(text)
-        except (ValueError, RecursionError):
-            raise ScorerFileError(f"metadata {key!r} must be JSON") from None
-    if facts.get("format") != scorer_file.FORMAT:
-        raise ScorerFileError(f"format must be {scorer_file.FORMAT!r}; got {facts.get('format')!r}")
-    if not isinstance(facts.get("self_test"), list) or not facts["self_test"]:
-        raise ScorerFileError("metadata 'self_test' must hold at least one case")
-    return facts
 
 
 def _first_line(error: BaseException) -> str:

@@ -14,3 +14,6 @@ ONNX_DOUBLE = 0.0  # a double graph with one thread repeats the estimator bit fo
 ONNX_FLOAT = 1e-5  # on a unit-scale target, where the graph computes in float32
 FEATURE_TABLE = 2e-3  # of the largest sd: moments from a table of 16 cells, where a learner starts, no result
 FEATURE_FIT = 0.06  # of the start value: the fit of f(-z) in the features, 5 % off at most
+ORACLE_GRID = (
+    1e-7  # of scale: an oracle that tabulates distributions on a fixed grid, halving of which moves it less
+)

@@ -87,7 +87,7 @@ def resolved_covariance(S: Array, noise_var: Array, h: float) -> Array:
     return np.asarray(S @ np.linalg.solve(S + np.diag(noise_var) / h, S))
 
 
-def static_voc(tree: BeliefTree, leaf: int, k: int) -> float:
+def static_voc(tree: BeliefTree, leaf: int, k: float) -> float:
     """E[root(m + b Z)] - root(m), adaptive quadrature between the kinks; absolute error 1e-12 of scale."""
     b, _ = posterior(tree, leaf, k)
     m = np.asarray(tree.mean)

@@ -14,37 +14,18 @@ from collections.abc import Callable
 from typing import cast
 
 import numpy as np
-from scipy.integrate import quad, quad_vec
+from scipy.integrate import quad_vec
 from scipy.optimize import brentq
 from scipy.stats import norm
 
-from distill import schema
+from distill.oracle.dense import static_voc
 from distill.tree import BeliefTree, Floats, leaf_table
 
-__all__ = ["action_values", "expected_max", "rate", "root_value", "voc"]
+__all__ = ["action_values", "expected_max", "rate", "voc"]
 
 _WANTED = 1e-12  # of the scale, asked of every quadrature
 _WIDTH = 9.0  # standard deviations integrated over: 1e-19 lies beyond
 _ORDER = 12  # Gauss-Legendre nodes a panel of the outcome
-
-
-def root_value(tree: BeliefTree, mean: Floats) -> float:
-    """Value of the root when the leaves are worth `mean`, by recursion over the nodes."""
-    children: list[list[int]] = [[] for _ in range(tree.n_nodes)]
-    for c, p in enumerate(tree.parent.tolist()):
-        if p >= 0:
-            children[p].append(c)
-    leaf = dict(zip(tree.leaf_nodes.tolist(), mean.tolist(), strict=True))
-
-    def value(node: int) -> float:
-        if node in leaf:
-            return float(leaf[node])
-        offers = [float(tree.reward[c]) + float(tree.discount[c]) * value(c) for c in children[node]]
-        if tree.kind[node] == schema.CHANCE:
-            return math.fsum(float(tree.prob[c]) * q for c, q in zip(children[node], offers, strict=True))
-        return max(offers)
-
-    return value(0)
 
 
 def expected_max(mean: Floats, sd: Floats) -> Floats:
@@ -97,7 +78,7 @@ def voc(tree: BeliefTree, leaf: int, batch: float, horizon: float = math.inf) ->
     if v == 0:
         return 0.0
     if horizon == 0:
-        return _static(tree, leaf, float(_later_sd(np.array(v), np.array(n), batch)))
+        return static_voc(tree, leaf, batch)
     t = leaf_table(tree)
     centre, sd = t.offset + t.gain * tree.mean, t.gain * _later_sd(tree.var, tree.noise_var, horizon)
     own = np.flatnonzero(t.action == t.action[leaf])
@@ -154,15 +135,3 @@ def _mean_over_outcomes(f: Callable[[Floats], Floats], cuts: list[float], scale:
             break
         before = total
     return total
-
-
-def _static(tree: BeliefTree, leaf: int, s: float) -> float:
-    assert tree.mean is not None
-    mean = tree.mean
-    step = s * np.eye(len(mean))[leaf]
-    now = root_value(tree, mean)
-    rise, _ = quad(
-        lambda z: (root_value(tree, mean + z * step) - now) * norm.pdf(z),
-        -_WIDTH, _WIDTH, points=[0.0], epsabs=_WANTED * s, epsrel=0, limit=2000,
-    )  # fmt: skip
-    return float(rise)

@@ -50,6 +50,7 @@ def ship(
         "seed": front["seed"],
         "accuracy": entry["held_out"],
         "beside": front["beside"],
+        "pairs": entry.get("pairs"),
         "decision": {
             "leaves": front["leaves"],
             "scorer": entry["latency"],
@@ -58,7 +59,7 @@ def ship(
                 name: t["p50_us"] / entry["latency"]["p50_us"] for name, t in front["exact"].items()
             },
         },
-        "front": front["scorers"],
+        "front": [{key: x for key, x in e.items() if key != "pairs"} for e in front["scorers"]],
         "features": front["features"],
         "made_with": front["made_with"],
     }

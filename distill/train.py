@@ -32,7 +32,7 @@ from distill.sheet import FRONT_FILE, FRONT_FORMAT
 from distill.terminal import bar
 from distill.timing import decisions, time_exact, time_scorer
 from distill.tree import Floats
-from distill.validate import baselines, examine
+from distill.validate import baselines, examine, sample_pairs
 
 __all__ = ["RECIPES", "Recipe", "row_weights", "train"]
 
@@ -190,6 +190,7 @@ def _examine(
         "sha256": sha256_of(path),
         "held_out": examine(scorer, split.held_out, n_boot=n_boot, seed=seed),
         "choose": examine(scorer, split.choose, n_boot=n_boot, seed=seed),
+        "pairs": sample_pairs(scorer, split.held_out, seed=seed),
         "latency": time_scorer(scorer, cases).to_json(),
         "bytes": path.stat().st_size,
         "fit_seconds": round(fit_seconds, 2),

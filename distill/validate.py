@@ -18,7 +18,7 @@ from distill.timing import tree_of
 from distill.tree import Floats
 from distill.voc import price
 
-__all__ = ["baselines", "examine", "static_values", "validate"]
+__all__ = ["baselines", "examine", "sample_pairs", "static_values", "validate"]
 
 
 def examine(
@@ -32,6 +32,40 @@ def examine(
     scores = scorer.score(**candidates.columns, tree=candidates.tree)
     found = _measured(candidates, scores.voc, prices, n_boot, seed)
     return {**found, "in_range_percent": 100 * float(np.mean(scores.in_range))}
+
+
+def sample_pairs(
+    scorer: Scorer, candidates: Candidates, *, limit: int = 600, least: float = 1e-8, seed: int = 0
+) -> dict[str, Any]:
+    """Exact and predicted values side by side, for a picture, as JSON values; four digits each.
+
+    Values are shares of the tree's scale (a rollout, where the label is a rate). A random `limit` of the
+    candidates where one of the two reaches `least`, from trees drawn at random; `candidates` and `smaller`
+    count those that do and do not in the trees drawn. A predicted value below 0 counts as 0.
+    """
+    rng = np.random.default_rng(seed)
+    sizes = candidates.groups.sizes
+    order = rng.permutation(len(sizes))
+    before = np.cumsum(sizes[order]) - sizes[order]
+    keep = np.zeros(len(sizes), dtype=bool)
+    keep[order[before < 8 * limit]] = True  # some to spare: many candidates are worth next to nothing
+    drawn = candidates.of_trees(keep)
+    groups, columns = drawn.groups, drawn.columns
+    scale = groups.spread(groups.highest(columns["gain"] * np.sqrt(columns["var"])))
+    uncertain = scale > 0
+    unit = np.where(uncertain, scale, 1)
+    exact = drawn.label / unit
+    predicted = np.maximum(scorer.score(**columns, tree=drawn.tree).voc / unit, 0)
+    shown = np.flatnonzero(uncertain & (np.maximum(exact, predicted) >= least))
+    chosen = np.sort(rng.permutation(shown)[:limit])
+    return {
+        "exact": [float(f"{x:.4g}") for x in exact[chosen]],
+        "predicted": [float(f"{x:.4g}") for x in predicted[chosen]],
+        "least": least,
+        "trees": len(groups.sizes),
+        "candidates": len(shown),
+        "smaller": len(exact) - len(shown),
+    }
 
 
 def static_values(candidates: Candidates) -> Floats:
@@ -97,7 +131,8 @@ def validate(
     """A scorer file against the exact labels of a dataset, as JSON values.
 
     `part` says which trees: "held_out" where the dataset draws on the trees that the scorer was trained
-    on, else "all". `accuracy` is as from `examine`; `beside` has the closed forms on the same trees.
+    on, else "all". `accuracy` is as from `examine`; `beside` has the closed forms on the same trees; `pairs`
+    is as from `sample_pairs`.
     Raises InputError where the dataset's value is another than the scorer was trained on.
     """
     if not isinstance(scorer, Scorer):
@@ -117,4 +152,5 @@ def validate(
         "part": "held_out" if same_trees else "all",
         "accuracy": examine(scorer, candidates, prices=prices, n_boot=n_boot, seed=seed),
         "beside": baselines(candidates, first_order, prices=prices, n_boot=n_boot, seed=seed),
+        "pairs": sample_pairs(scorer, candidates, seed=seed),
     }

@@ -21,7 +21,7 @@ from distill.query import Query
 from distill.runtime import Scorer
 from distill.shards import read_trees
 from distill.train import train
-from distill.validate import baselines, examine, static_values, validate
+from distill.validate import baselines, examine, sample_pairs, static_values, validate
 from distill.voc import price
 
 
@@ -80,6 +80,37 @@ def test_figures_are_those_of_picks_made_one_tree_at_a_time(
     found = examine(scorer, whole, prices=[0.01, 1.0], n_boot=2)
     assert found["forgone_percent"]["value"] == pytest.approx(100 * lost / best, rel=CLOSED_FORM)
     assert [e["price"] for e in found["stop_loss"]] == [0.01, 1.0]
+
+
+def test_sampled_pairs_are_candidates_with_both_their_values(
+    shipped: tuple[Path, Path, dict[str, Any]], tmp_path: Path
+) -> None:
+    file, _, _ = shipped
+    scorer = Scorer.load(file)
+    whole, _ = Candidates.read(labelled(tmp_path / "data", trees=40, seed=6))
+    least = 1e-6
+    expected = []
+    for tree in np.unique(whole.tree):
+        rows = whole.tree == tree
+        columns = {name: x[rows] for name, x in whole.columns.items()}
+        scale = np.max(columns["gain"] * np.sqrt(columns["var"]))
+        predicted = scorer.score(**columns, tree=whole.tree[rows]).voc / scale
+        expected += zip(whole.label[rows] / scale, predicted, strict=True)
+    large = [pair for pair in expected if max(pair) >= least]
+    everything = sample_pairs(scorer, whole, limit=len(expected), least=least)
+    assert everything["trees"] == 40
+    assert everything["candidates"] == len(large) > 100
+    assert everything["smaller"] == len(expected) - len(large) > 0
+    got = list(zip(everything["exact"], everything["predicted"], strict=True))
+    four_digits = [tuple(float(f"{x:.4g}") for x in pair) for pair in large]
+    assert got == four_digits
+
+    few = sample_pairs(scorer, whole, limit=20, least=least, seed=3)
+    assert few == sample_pairs(scorer, whole, limit=20, least=least, seed=3)
+    assert len(few["exact"]) == len(few["predicted"]) == 20
+    assert set(zip(few["exact"], few["predicted"], strict=True)) <= set(four_digits)
+    assert few["candidates"] <= everything["candidates"]
+    json.dumps(few, allow_nan=False)
 
 
 def test_static_values_are_the_exact_engines(tmp_path: Path) -> None:

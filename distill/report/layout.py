@@ -1,0 +1,113 @@
+"""The page as a whole: opening, pictures, tables, words, origin; floor 7.
+
+The page asks the network for nothing, runs no script, and reads at phone and desk width, light and dark. It
+is built as a tree of elements, so every text from a file is escaped by construction, and it is XML as well.
+"""
+
+from __future__ import annotations
+
+import math
+import os
+import xml.etree.ElementTree as ET
+from typing import Any
+
+from distill.files import write_atomic
+from distill.report.elements import Child, between, element, number, section, word_list
+from distill.report.facts import SHARES, Facts, Figures, gaps_refused
+from distill.report.pictures import front_picture, pictures
+from distill.report.tables import origin, tables
+from distill.report.theme import THEME_CSS, one_line, standalone
+from distill.report.words import CAUTION, SHARE_NAMES, STYLE, WORDS
+
+__all__ = ["front_svg", "page", "write_page"]
+
+_NO_REQUESTS = "default-src 'none'; style-src 'unsafe-inline'"
+
+
+def page(figures: Figures) -> str:
+    """The page of `front.json` as `train` leaves it, of a shipped scorer's sheet, or of a tour's summary.
+
+    The same figures give the same text. Raises InputError where they are none of these, or lack a part.
+    """
+    with gaps_refused():
+        facts = Facts.read(figures)
+        body = element(
+            "main",
+            _opening(facts),
+            section("In pictures", element("div", *pictures(facts), class_="pictures")),
+            *tables(facts),
+            section("What the words mean", word_list((term, [text]) for term, text in WORDS.items())),
+            section("Where it comes from", word_list(origin(facts))),
+        )
+        head = element(
+            "head",
+            element("meta", charset="utf-8"),
+            element("meta", name="viewport", content="width=device-width, initial-scale=1"),
+            element("meta", http_equiv="Content-Security-Policy", content=_NO_REQUESTS),
+            element("title", f"{one_line(facts.title)}: what its picks lose and what they cost"),
+            element("style", f"{THEME_CSS}\n{STYLE}"),
+        )
+    html = element("html", head, element("body", body), lang="en")
+    return f"<!DOCTYPE html>\n{ET.tostring(html, encoding='unicode')}\n"
+
+
+def write_page(figures: Figures, path: str | os.PathLike[str]) -> None:
+    """Write `page(figures)` to a file."""
+    write_atomic(path, page(figures).encode())
+
+
+def front_svg(figures: Figures) -> str:
+    """The front as a picture of its own, light or dark as its reader; takes what `page` takes."""
+    with gaps_refused():
+        return standalone(front_picture(Facts.read(figures), width=640, height=400))
+
+
+def _opening(facts: Facts) -> ET.Element:
+    """What this is about, how it was judged, the caution, and the figures that matter most."""
+    held_out = facts.parts["held_out"]
+    judged: list[Child] = [
+        "Judged on ", number(held_out["trees"]), " trees that had no part in training, ",
+        number(held_out["candidates"]), f" candidates in all, from {facts.data['source']}. ",
+        _scored(facts.value),
+    ]  # fmt: skip
+    sheet = facts.sheet
+    learner = [element("p", f"Learner: {sheet['recipe']} ({sheet['chosen']}).")] if sheet is not None else []
+    tiles = [element("dl", *_tiles(sheet), class_="tiles")] if sheet is not None else []
+    caution = element("p", CAUTION, class_="caution")
+    return element(
+        "header", element("h1", one_line(facts.title)), *learner, element("p", *judged), caution, *tiles
+    )
+
+
+def _scored(value: Figures) -> str:
+    """What the scorers score, in plain words."""
+    h = float(value["horizon"])
+    kind = {math.inf: "dynamic {}", 0.0: "static {}"}.get(h, f"{{}} at horizon {h:g}")
+    if value["batch"] is None:
+        what = kind.format("rate")
+        return f"What is scored is the {what}: the best value a rollout, within the rollouts left."
+    what = kind.format("value")
+    return f"What is scored is the {what} of {value['batch']} rollout{'s' * (value['batch'] != 1)} at a leaf."
+
+
+def _tiles(sheet: Figures) -> list[ET.Element]:
+    accuracy, decision = sheet["accuracy"], sheet["decision"]
+    shares = [
+        _tile(SHARE_NAMES[key], accuracy[key]["value"], " %", between(accuracy[key]) or "no interval")
+        for key in SHARES
+    ]
+    decides = _tile(
+        f"a decision over {decision['leaves']} leaves", decision["scorer"]["p50_us"], " µs", "median"
+    )
+    faster = [
+        _tile(f"faster than exact {name}", times, " times", "medians of the same run")
+        for name, times in decision["times_faster"].items()
+    ]
+    return [*shares, decides, *faster]
+
+
+def _tile(name: str, value: Any, unit: str, small: str) -> ET.Element:
+    large = element("strong", number(value), unit)
+    return element(
+        "div", element("dt", name), element("dd", large, element("span", small, class_="interval"))
+    )

@@ -1,0 +1,563 @@
+"""The report page: figures as in the JSON, nothing from outside, every text escaped, the same bytes again."""
+
+from __future__ import annotations
+
+import copy
+import json
+import re
+import subprocess
+import sys
+import xml.etree.ElementTree as ET
+from collections.abc import Iterator
+from html.parser import HTMLParser
+from itertools import combinations
+from pathlib import Path
+from typing import Any
+
+import matplotlib
+import numpy as np
+import pytest
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from small_dataset import labelled
+
+from distill.errors import InputError
+from distill.report import CAUTION, charts, front_svg, page, pictures, theme, write_page
+from distill.report.elements import text_of
+from distill.report.words import COLUMNS, WORDS
+from distill.ship import ship
+from distill.train import train
+from distill.validate import validate
+
+VOID = {"meta", "br"}
+
+
+def estimate(value: float | None, spread: float = 0.3) -> dict[str, float | None]:
+    if value is None:
+        return {"value": None, "low": None, "high": None}
+    return {"value": value, "low": value * (1 - spread), "high": value * (1 + spread)}
+
+
+def accuracy(forgone: float | None, relative: float | None) -> dict[str, Any]:
+    return {
+        "forgone_percent": estimate(forgone),
+        "relative_forgone_percent": estimate(relative),
+        "top1_percent": estimate(71.23),
+        "rank_correlation": estimate(0.6543),
+        "stop_loss_percent": estimate(1.987),
+        "stop_loss": [],
+        "trees": 1754,
+        "candidates": 45485,
+        "trees_with_best_zero": 3,
+        "interval_level": 0.95,
+        "in_range_percent": 99.9934,
+    }
+
+
+def scorer(recipe: str, us: float, forgone: float | None, on_front: bool) -> dict[str, Any]:
+    return {
+        "recipe": recipe,
+        "file": f"{recipe}.onnx",
+        "sha256": "ab" * 32,
+        "held_out": accuracy(forgone, 9.1 + us / 7),
+        "choose": accuracy(forgone, 9.2),
+        "pairs": {
+            "exact": [0.0, 2e-6, 0.0123, 0.2],
+            "predicted": [3e-7, 0.0, 0.0125, 0.19],
+            "least": 1e-8,
+            "trees": 184,
+            "candidates": 2577,
+            "smaller": 2242,
+        },
+        "latency": {"p50_us": us, "p99_us": us * 1.7, "calls": 2000},
+        "bytes": 347397,
+        "fit_seconds": 34.51,
+        "on_front": on_front,
+    }
+
+
+def front_figures() -> dict[str, Any]:
+    random_pick = {"forgone_percent": {"value": 88.82}, "relative_forgone_percent": {"value": 90.1}}
+    return {
+        "format": "voc-front/1",
+        "value": {"horizon": "inf", "batch": None},
+        "data": {"source": "cold-store", "source_sha256": "cd" * 32, "seed": 7, "trees": 12000},
+        "parts": {
+            "fit": {"trees": 9055, "candidates": 235752},
+            "choose": {"trees": 1191, "candidates": 31006},
+            "held_out": {"trees": 1754, "candidates": 45485},
+        },
+        "seed": 11,
+        "scorers": [
+            scorer("linear", 24.1, 6.107, True),
+            scorer("boosting 25x8", 38.4, 0.5928, False),
+            scorer("boosting 100x31", 170.2, 0.0663, True),
+            scorer("dense 32-32", 36.6, 0.0212, True),
+        ],
+        "beside": {
+            "static closed form": accuracy(23.76, 43.5),
+            "first-order closed form": accuracy(9.843, 33.5),
+            "random pick": random_pick,
+        },
+        "leaves": 64,
+        "exact": {
+            "dynamic VOC": {"p50_us": 318.8, "p99_us": 419.4, "calls": 20},
+            "dynamic rate": {"p50_us": 10293.9, "p99_us": 20005.6, "calls": 20},
+        },
+        "features": ["best", "influence"],
+        "made_with": {"python": "3.11.7", "machine": "x86_64, 2 cores"},
+    }
+
+
+def sheet_figures() -> dict[str, Any]:
+    front = front_figures()
+    entry = front["scorers"][3]
+    return {
+        "format": "voc-sheet/1",
+        "file": {"name": "shuttle.onnx", "sha256": entry["sha256"], "bytes": entry["bytes"]},
+        "recipe": entry["recipe"],
+        "chosen": "most accurate",
+        "value": front["value"],
+        "data": {**front["data"], "parts": front["parts"]},
+        "seed": front["seed"],
+        "accuracy": entry["held_out"],
+        "pairs": entry["pairs"],
+        "beside": front["beside"],
+        "decision": {
+            "leaves": 64,
+            "scorer": entry["latency"],
+            "exact": front["exact"],
+            "times_faster": {"dynamic VOC": 8.7104, "dynamic rate": 281.254},
+        },
+        "front": front["scorers"],
+        "features": front["features"],
+        "made_with": front["made_with"],
+    }
+
+
+def summary_figures() -> dict[str, Any]:
+    rows = {
+        "scorer trained on the family alone": accuracy(0.167, 1.77),
+        "scorer trained on traces": accuracy(0.58, 1.79),
+        **front_figures()["beside"],
+    }
+    one_tree = {"exact": [0.0001368, 0.0], "scorer": [0.00014, 2.2e-22], "exact_pick": 0, "scorer_pick": 0}
+    return {"scorer": sheet_figures(), "on traces": rows, "one tree": one_tree, "seconds": 626.2}
+
+
+ALL = {"front": front_figures, "sheet": sheet_figures, "summary": summary_figures}
+every_kind = pytest.mark.parametrize("figures", [f() for f in ALL.values()], ids=list(ALL))
+
+
+def parsed(text: str) -> ET.Element:
+    return ET.fromstring(text.removeprefix("<!DOCTYPE html>"))
+
+
+def numbers_in(x: Any) -> Iterator[float]:
+    if isinstance(x, dict):
+        for value in x.values():
+            yield from numbers_in(value)
+    elif isinstance(x, list):
+        yield from (n for value in x for n in numbers_in(value))
+    elif isinstance(x, int | float):
+        yield x
+
+
+def text_in(e: ET.Element | None) -> str:
+    assert e is not None
+    return "".join(e.itertext())
+
+
+# --- the page as a document ------------------------------------------------------------------------
+
+
+@every_kind
+def test_it_is_xml_and_html_with_links_that_hold(figures: dict[str, Any]) -> None:
+    text = page(figures)
+    root = parsed(text)
+    ids = [e.get("id") for e in root.iter() if e.get("id")]
+    assert len(ids) == len(set(ids)) > 0
+    links = re.findall(r'(?:href="|url\()#([^")]*)', text)
+    assert links
+    assert set(links) <= set(ids)
+
+    class Tags(HTMLParser):
+        """Outside of SVG, HTML closes only void elements within their tag."""
+
+        depth = 0
+
+        def handle_startendtag(self, tag: str, _: Any) -> None:
+            assert self.depth > 0 or tag in VOID, tag
+
+        def handle_starttag(self, tag: str, _: Any) -> None:
+            assert tag not in VOID
+            self.depth += tag == "svg"
+
+        def handle_endtag(self, tag: str) -> None:
+            self.depth -= tag == "svg"
+
+    Tags().feed(text)
+
+
+@every_kind
+def test_it_asks_for_nothing_and_runs_nothing(figures: dict[str, Any]) -> None:
+    text = page(figures)
+    assert "http" not in text.replace('http-equiv="Content-Security-Policy"', "")
+    assert "@import" not in text
+    assert all(target.startswith("#") for target in re.findall(r"url\(([^)]*)", text))
+    for e in parsed(text).iter():
+        assert e.tag not in {"script", "link", "img", "image", "iframe", "object", "embed", "base"}
+        assert not any(name.startswith("on") or name in {"src", "srcset"} for name in e.attrib)
+        assert e.get("href", "#").startswith("#")
+
+
+@every_kind
+def test_the_caution_and_every_word_stand_on_it(figures: dict[str, Any]) -> None:
+    root = parsed(page(figures))
+    assert CAUTION in text_in(root)
+    for name in [*figures.get("scorer", figures)["beside"], *COLUMNS.values()]:
+        assert name.removesuffix(", %") in WORDS
+    pictured = root.findall(".//figure")
+    assert len(pictured) >= 4
+    for figure in pictured:
+        picture = figure.find("svg")
+        assert picture is not None
+        assert picture.get("aria-label")
+        assert len(text_in(figure.find("figcaption"))) > 40
+
+
+@every_kind
+def test_the_same_figures_give_the_same_bytes(figures: dict[str, Any]) -> None:
+    text = page(figures)
+    with matplotlib.rc_context({"svg.fonttype": "path", "lines.linewidth": 9, "font.size": 30}):
+        assert page(copy.deepcopy(figures)) == text
+
+
+def test_another_process_gives_the_same_bytes(tmp_path: Path) -> None:
+    figures = summary_figures()
+    (tmp_path / "figures.json").write_text(json.dumps(figures))
+    code = "import json, sys; from distill.report import write_page; "
+    code += "write_page(json.load(sys.stdin), 'page.html')"
+    with (tmp_path / "figures.json").open() as given:
+        subprocess.run([sys.executable, "-c", code], cwd=tmp_path, stdin=given, check=True)
+    assert (tmp_path / "page.html").read_bytes() == page(figures).encode()
+
+
+# --- figures ---------------------------------------------------------------------------------------
+
+
+@every_kind
+def test_every_figure_is_one_of_the_json(figures: dict[str, Any]) -> None:
+    known = set(numbers_in(figures)) | {4}  # 4 pairs are drawn
+    shown = list(parsed(page(figures)).iter("data"))
+    assert len(shown) > 60
+    for e in shown:
+        value = json.loads(e.get("value", ""))
+        assert value in known
+        assert e.text == text_of(value)
+
+
+def rows_of(root: ET.Element, title: str) -> dict[str, list[list[float]]]:
+    """Name -> cells, each the exact values of the figures in it, of the table below a heading."""
+    (section,) = (s for s in root.iter("section") if (text_in(s.find("h2"))).startswith(title))
+
+    def cells(tr: ET.Element) -> list[list[float]]:
+        return [[float(d.get("value", "")) for d in td.iter("data")] for td in tr.iter("td")]
+
+    return {tr.findtext("th", ""): cells(tr) for tr in section.findall(".//tbody/tr")}
+
+
+def spread(e: dict[str, Any]) -> list[float]:
+    return [e[k] for k in ("value", "low", "high") if k in e]
+
+
+@every_kind
+def test_tables_hold_the_right_figures_in_the_right_cells(figures: dict[str, Any]) -> None:
+    root = parsed(page(figures))
+    top = figures.get("scorer", figures)
+    scorers = top.get("scorers") or top["front"]
+    trained = rows_of(root, "The scorers that were trained")
+    assert list(trained) == [e["recipe"] for e in scorers]
+    for e in scorers:
+        shares = [spread(e["held_out"][k]) for k in ("forgone_percent", "relative_forgone_percent")]
+        rest = [e["latency"]["p50_us"], e["latency"]["p99_us"], e["bytes"], e["fit_seconds"]]
+        assert trained[e["recipe"]] == [*shares, *([x] for x in rest)]
+
+    judged = rows_of(root, "Accuracy on held-out trees")
+    shown = {"this scorer": top["accuracy"]} if "accuracy" in top else {}
+    shown = shown or {e["recipe"]: e["held_out"] for e in scorers if e["on_front"]}
+    assert list(judged) == [*shown, *top["beside"]]
+    for name, m in {**shown, **top["beside"]}.items():
+        cells = [m.get(k, {}) for k in COLUMNS]
+        assert judged[name] == [spread(c) if isinstance(c, dict) else [c] for c in cells]
+
+    times = rows_of(root, "Time of one decision")
+    exact = top["exact"] if "exact" in top else top["decision"]["exact"]
+    for name, t in exact.items():
+        assert times[f"exact {name}"][:3] == [[t["p50_us"]], [t["p99_us"]], [t["calls"]]]
+    if "decision" in top:
+        assert times["exact dynamic rate"][3] == [281.254]
+        assert times["this scorer"][0] == [36.6]
+    if "on traces" in figures:
+        on_traces = rows_of(root, "Accuracy on recorded trees")
+        assert on_traces["scorer trained on traces"][0] == spread(estimate(0.58))
+        tree = rows_of(root, "One tree")
+        assert tree == {"leaf 0": [[0.0001368], [0.00014]], "leaf 1": [[0.0], [2.2e-22]]}
+
+
+@pytest.fixture
+def drawn(monkeypatch: pytest.MonkeyPatch) -> dict[str, Any]:
+    """The figures that become pictures, by name."""
+    caught: dict[str, Any] = {}
+
+    def svg(figure: Any, name: str, meaning: str) -> ET.Element:
+        caught[name] = figure
+        return theme.svg(figure, name, meaning)
+
+    monkeypatch.setattr(pictures, "svg", svg)
+    return caught
+
+
+def lines(figure: Any, gid: str, panel: int = 0) -> list[tuple[list[float], list[float]]]:
+    found = [line for line in figure.axes[panel].lines if line.get_gid() == gid]
+    return [(list(map(float, line.get_xdata())), list(map(float, line.get_ydata()))) for line in found]
+
+
+def bar_widths(figure: Any, panel: int) -> list[float]:
+    return [p.get_x() + p.get_width() for p in figure.axes[panel].patches if p.get_gid() == "bar"]
+
+
+def test_the_front_stands_where_the_figures_say(drawn: dict[str, Any]) -> None:
+    figures = front_figures()
+    figures["beside"]["static closed form"]["latency"] = {"p50_us": 12.5, "p99_us": 20.0, "calls": 9}
+    page(figures)
+    by_time = sorted(figures["scorers"], key=lambda e: e["latency"]["p50_us"])
+    loss = {e["recipe"]: e["held_out"]["forgone_percent"] for e in by_time}
+    time = {e["recipe"]: e["latency"]["p50_us"] for e in by_time}
+    assert lines(drawn["front"], "scorer") == [([time[n]], [loss[n]["value"]]) for n in loss]
+    intervals = [([time[n], time[n]], [loss[n]["low"], loss[n]["high"]]) for n in loss]
+    assert lines(drawn["front"], "interval") == intervals
+    on_front = ["linear", "dense 32-32", "boosting 100x31"]  # in order of time
+    assert lines(drawn["front"], "front") == [
+        ([time[n] for n in on_front], [loss[n]["value"] for n in on_front])
+    ]
+    peers = lines(drawn["front"], "peer")
+    assert peers[0] == ([12.5], [23.76])
+    assert [y for _, y in peers[1:]] == [[9.843, 9.843], [88.82, 88.82]]
+    assert drawn["front"].axes[0].get_xscale() == drawn["front"].axes[0].get_yscale() == "log"
+
+
+def test_bars_and_pairs_stand_where_the_figures_say(drawn: dict[str, Any]) -> None:
+    figures = summary_figures()
+    page(figures)
+    sheet = figures["scorer"]
+    rows = [sheet["accuracy"], *sheet["beside"].values()]
+    for panel, key in enumerate(("forgone_percent", "relative_forgone_percent")):
+        assert bar_widths(drawn["loss"], panel) == [m[key]["value"] for m in rows]
+        assert [x for x, _ in lines(drawn["loss"], "interval", panel)] == [
+            spread(m[key])[1:] for m in rows[:3]
+        ]
+        on_traces = [m[key]["value"] for m in figures["on traces"].values()]
+        assert bar_widths(drawn["traces"], panel) == on_traces
+    assert bar_widths(drawn["time"], 0) == [36.6, 318.8, 10293.9]
+    assert drawn["time"].axes[0].get_xscale() == "log"
+    least = sheet["pairs"]["least"]
+    exact, predicted = ([max(x, least) for x in sheet["pairs"][k]] for k in ("exact", "predicted"))
+    assert lines(drawn["pairs-0"], "pairs") == [(exact, predicted)]
+
+
+def test_a_loss_of_zero_stands_on_an_edge_marked_zero(drawn: dict[str, Any]) -> None:
+    figures = front_figures()
+    figures["scorers"][3] = scorer("dense 32-32", 36.6, 0.0, True)
+    figures["scorers"][0] = scorer("linear", 24.1, None, True)
+    root = parsed(page(figures))
+    ax = drawn["front"].axes[0]
+    floor = ax.get_ylim()[0]
+    assert ax.get_yticks()[0] == floor
+    assert ax.get_yticklabels()[0].get_text() == "0"
+    assert ([36.6], [floor]) in lines(drawn["front"], "scorer")
+    assert 24.1 not in [x for (x,), _ in lines(drawn["front"], "scorer")]  # no loss is known
+    assert rows_of(root, "The scorers that were trained")["linear"][0] == []
+
+
+def test_figures_keep_three_digits_and_nearly_all_is_not_all() -> None:
+    assert text_of(99.99987) == "99.9999"
+    assert text_of(0.0005839) == "5.84 × 10⁻⁴"  # noqa: RUF001
+    rng = np.random.default_rng(0)
+    for x in 10 ** rng.uniform(-30, 7, 300):
+        plain = re.sub(r" × 10(\S+)", lambda m: "e" + m[1].translate(_LOWERED), text_of(x))  # noqa: RUF001
+        assert float(plain.replace(",", "")) == pytest.approx(x, rel=0.005)
+
+
+_LOWERED = str.maketrans("⁻⁰¹²³⁴⁵⁶⁷⁸⁹", "-0123456789")
+
+
+# --- pictures --------------------------------------------------------------------------------------
+
+
+def test_labels_do_not_hide_one_another(drawn: dict[str, Any]) -> None:
+    page(sheet_figures())
+    ax = drawn["front"].axes[0]
+    renderer = FigureCanvasAgg(drawn["front"]).get_renderer()
+    boxes = [t.get_window_extent(renderer) for t in ax.texts]
+    assert len(boxes) == 7
+    for a, b in combinations(boxes, 2):
+        assert not a.overlaps(b)
+    inside = ax.get_window_extent(renderer).padded(1)
+    assert all(inside.contains(*corner) for b in boxes for corner in (b.min, b.max))
+
+
+def contrast(a: str, b: str) -> float:
+    """Contrast of two colours, W3C WCAG 2.2 (2023), definition of contrast ratio."""
+
+    def luminance(colour: str) -> float:
+        c = np.array([int(colour[i : i + 2], 16) for i in (1, 3, 5)]) / 255
+        linear = np.where(c <= 0.04045, c / 12.92, ((c + 0.055) / 1.055) ** 2.4)
+        return float(linear @ [0.2126, 0.7152, 0.0722])
+
+    low, high = sorted((luminance(a), luminance(b)))
+    return (high + 0.05) / (low + 0.05)
+
+
+def test_both_themes_can_be_read() -> None:
+    light, dark = (dict(re.findall(r"--(\w+):(#\w+)", part)) for part in theme.THEME_CSS.split("@media"))
+    assert light.keys() == dark.keys()
+    assert contrast(light["paper"], "#000000") == 21
+    for colours in (light, dark):
+        for role in ("ink", "quiet", "scorer", "peer", "exact"):
+            assert contrast(colours[role], colours["paper"]) >= 4.5
+
+
+@every_kind
+def test_the_front_alone_is_a_picture_with_its_own_colours(figures: dict[str, Any]) -> None:
+    text = front_svg(figures)
+    root = ET.fromstring(text)
+    assert root.tag == "{http://www.w3.org/2000/svg}svg"
+    assert text.count("http") == 1
+    assert "prefers-color-scheme:dark" in text
+    used = set(re.findall(r"var\(--(\w+)\)", text))
+    assert {"ink", "paper", "scorer", "peer"} <= used <= set(re.findall(r"--(\w+):#", text))
+    body = text.partition("</style>")[2]
+    assert not re.search(r"#[0-9a-f]{6}\b", body)  # every colour is the theme's
+    assert not re.search(r"#[0-9a-f]{6}\b", page(figures).partition("</style>")[2].replace("#m", ""))
+    assert front_svg(copy.deepcopy(figures)) == text
+
+
+# --- what comes from files -------------------------------------------------------------------------
+
+HOSTILE = '<script src="http://evil.example/x.js">&\'"]]><!-- $\\frac{$ %s {0} \x00\x1b\ud800\u202e\n世界'
+
+
+def test_hostile_names_are_text() -> None:
+    figures = summary_figures()
+    sheet = figures["scorer"]
+    harmless = page(figures)
+    sheet["file"]["name"] = sheet["recipe"] = sheet["front"][0]["recipe"] = sheet["chosen"] = HOSTILE
+    sheet["data"] |= {"source": HOSTILE, HOSTILE: HOSTILE}
+    sheet["made_with"] = {HOSTILE: HOSTILE}
+    sheet["features"] = [HOSTILE]
+    sheet["beside"][HOSTILE] = accuracy(1.0, 2.0)
+    sheet["decision"]["exact"][HOSTILE] = {"p50_us": 5.0, "p99_us": 6.0, "calls": 1}
+    figures["on traces"][HOSTILE] = accuracy(1.0, 2.0)
+    text = page(figures)
+    root = parsed(text)
+    assert {e.tag for e in root.iter()} == {e.tag for e in parsed(harmless).iter()}
+    assert not [c for c in root.iter() if callable(c.tag)]  # no comment either
+    seen = HOSTILE.replace("\n", " ").translate(
+        {0: "\ufffd", 0x1B: "\ufffd", 0xD800: "\ufffd", 0x202E: "\ufffd"}
+    )
+    assert text_in(root.find(".//h1")) == seen
+    assert [th.text for th in root.iter("th")].count(seen) >= 3
+    assert "<script" not in text
+    picture = front_svg(figures)
+    assert "<script" not in picture
+    ET.fromstring(picture)
+
+
+def test_a_picture_cuts_long_names_and_the_table_does_not() -> None:
+    figures = front_figures()
+    long = "boosting " * 40
+    figures["scorers"][0]["recipe"] = long
+    root = parsed(page(figures))
+    assert any(th.text == long.strip() for th in root.iter("th"))
+    assert max(len(t.text or "") for svg in root.iter("svg") for t in svg.iter("text")) < 60
+
+
+def without(*path: Any) -> dict[str, Any]:
+    figures = front_figures()
+    inner: Any = figures
+    for key in path[:-1]:
+        inner = inner[key]
+    del inner[path[-1]]
+    return figures
+
+
+def with_(value: Any, *path: Any) -> dict[str, Any]:
+    figures = front_figures()
+    inner: Any = figures
+    for key in path[:-1]:
+        inner = inner[key]
+    inner[path[-1]] = value
+    return figures
+
+
+@pytest.mark.parametrize(
+    ("figures", "says"),
+    [
+        ({}, "format"),
+        ({"format": "voc-front/2"}, "voc-front/2"),
+        ({"scorer": {"format": "belief-tree/1"}}, "belief-tree/1"),
+        ([1, 2], "report"),
+        (without("beside"), "beside"),
+        (without("exact", "dynamic VOC", "p99_us"), "p99_us"),
+        (without("scorers", 2, "held_out", "relative_forgone_percent"), "relative_forgone_percent"),
+        (without("scorers", 0, "pairs", "least"), "least"),
+        (without("parts", "held_out"), "held_out"),
+        (with_("fast", "scorers", 1, "latency", "p50_us"), "fast"),
+        (with_(0.0, "scorers", 1, "latency", "p50_us"), "p50_us"),
+        (with_(float("nan"), "beside", "random pick", "forgone_percent", "value"), "nan"),
+        (with_(True, "scorers", 1, "bytes"), "True"),
+        (with_([1.0], "scorers", 0, "pairs", "exact"), "report"),
+        (with_(None, "scorers"), "report"),
+        (with_("soon", "value", "horizon"), "soon"),
+    ],
+)
+def test_figures_that_lack_a_part_are_refused_by_name(figures: Any, says: str, tmp_path: Path) -> None:
+    with pytest.raises(InputError) as refused:
+        write_page(figures, tmp_path / "page.html")
+    assert says in str(refused.value)
+    assert list(tmp_path.iterdir()) == []
+
+
+def test_older_figures_without_pairs_serve() -> None:
+    sheet = sheet_figures()
+    sheet["pairs"] = None
+    figures = front_figures()
+    for e in figures["scorers"]:
+        del e["pairs"]
+    assert "exact and by" not in page(sheet) + page(figures)
+    assert "exact and by" in page(sheet_figures())
+
+
+# --- on what the other commands leave --------------------------------------------------------------
+
+
+def test_what_train_ship_and_validate_leave_makes_a_page(tmp_path: Path) -> None:
+    dataset = labelled(tmp_path / "data", trees=150)
+    front = train(dataset, tmp_path / "trained", recipes=["linear"], n_boot=50)
+    sheet = ship(tmp_path / "trained", tmp_path / "scorer.onnx")
+    assert "pairs" not in sheet["front"][0]
+    for figures in (json.loads(json.dumps(front)), json.loads((tmp_path / "scorer.json").read_text())):
+        root = parsed(page(figures))
+        judged = rows_of(root, "Accuracy on held-out trees")
+        name = "this scorer" if "recipe" in figures else "linear"
+        assert judged[name][0] == spread(front["scorers"][0]["held_out"]["forgone_percent"])
+        assert len(root.findall(".//figure")) == 4  # with exact against predicted values
+    again = validate(tmp_path / "scorer.onnx", dataset, n_boot=2)
+    assert again["pairs"] == front["scorers"][0]["pairs"] == sheet["pairs"]
+
+
+def test_the_charts_take_nothing_at_all() -> None:
+    figure = charts.front([], [], x_label="x", y_label="y")
+    assert theme.svg(figure, "empty", "nothing").tag == "svg"
+    figure = charts.pairs([], [], 1e-8)
+    assert theme.svg(figure, "empty", "nothing").tag == "svg"

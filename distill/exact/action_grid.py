@@ -27,7 +27,7 @@ __all__ = ["LEFT", "N", "NODES", "WEIGHTS", "Grid", "build", "expected_gain"]
 
 N = 16  # Gauss-Legendre nodes a panel
 NODES, WEIGHTS = gauss_legendre(N)
-REACH = 3.0  # panel length in standard deviations: products of three such functions to about 1e-14
+REACH = 2.0  # panel length in standard deviations: products of three such functions to about 1e-14
 LEFT = 12.5  # standard deviations left of a mean beyond which Phi < 4e-36 is taken as 0
 _BEND = 2.5  # most that log F may bend over a panel
 _NOTHING = -85.0  # log F below which the rest of an action plays no part
@@ -59,49 +59,54 @@ def build(d: Floats, rho: Floats, cut: float, right: float) -> Grid:
     stop = start
     for j in range(m):
         stop = max(stop, d[j] + right * rho[j])
-    room = 8
+    room = 16
     edges = np.empty(room + 1)
     logs = np.empty((room, m, N))
     edges[0] = start
     p = 0
     longest = math.inf
     while edges[p] < stop:
+        if p == room:
+            edges, logs = _more_room(edges, logs)
+            room = len(logs)
         a = edges[p]
-        b = stop
+        b = min(stop, a + longest)
         for j in range(m):
-            z = (a - d[j]) / rho[j]
-            if z < right and (j != top or a >= join):
+            if a < d[j] + right * rho[j] and (j != top or a >= join):
                 b = min(b, a + REACH * rho[j])
         if a < join < b:
             b = join
-        b = min(b, a + longest)
         if stop - b < 0.1 * (b - a):
             b = stop
-        if p == room:
-            room *= 2
-            edges = _longer(edges, room + 1)
-            more = np.empty((room, m, N))
-            more[:p] = logs
-            logs = more
         while True:
             bend, end = _tabulate(d, rho, right, a, b, top if b <= join else -1, logs[p])
             if bend <= _BEND or end < _NOTHING or b - a <= 1e-12 * abs(a):
                 break
             b = a + (b - a) * max(0.25, math.sqrt(2.0 / bend))
             longest = 0.0
-        longest = 2.5 * (b - a) if longest < math.inf else math.inf
+        if longest < math.inf:
+            longest = 2.5 * (b - a)
         p += 1
         edges[p] = b
-    rest = np.empty((p, m, N))
-    for q in range(p):
-        rest[q, m - 1] = 0.0
-        for j in range(m - 1, 0, -1):
-            rest[q, j - 1] = rest[q, j] + logs[q, j]
-        before = np.zeros(N)
-        for j in range(m):
-            rest[q, j] += before
-            before += logs[q, j]
-    return Grid(edges[: p + 1].copy(), logs[:p].copy(), rest)
+    return Grid(edges[: p + 1].copy(), logs[:p].copy(), _all_but_one(logs, p))
+
+
+@compiled
+def _all_but_one(logs: Cube, n: int) -> Cube:
+    """Of the first n panels: for each leaf the sum over the others, prefix plus suffix."""
+    m = logs.shape[1]
+    rest = np.empty((n, m, N))
+    for p in range(n):
+        for q in range(N):
+            after = 0.0
+            for j in range(m - 1, -1, -1):
+                rest[p, j, q] = after
+                after += logs[p, j, q]
+            before = 0.0
+            for j in range(m):
+                rest[p, j, q] += before
+                before += logs[p, j, q]
+    return rest
 
 
 @compiled
@@ -153,23 +158,29 @@ def _tabulate(
     total = np.zeros(N)
     least = 0.0
     for j in range(len(d)):
-        if (a - d[j]) / rho[j] >= right:
-            out[j] = 0.0
-            continue
-        for n in range(N):
-            out[j, n] = log_norm_cdf((middle + half * NODES[n] - d[j]) / rho[j])
+        decided = (a - d[j]) / rho[j] >= right
+        for q in range(N):
+            out[j, q] = 0.0 if decided else log_norm_cdf((middle + half * NODES[q] - d[j]) / rho[j])
+            if j != skip:
+                total[q] += out[j, q]
         if j != skip:
-            total += out[j]
             least = min(least, out[j, N - 1])
     bend = 0.5 * (total[N // 2 - 1] + total[N // 2] - total[0] - total[N - 1])
     return bend, total[N - 1] - least
 
 
 @compiled
-def _longer(a: Floats, length: int) -> Floats:
-    out = np.empty(length)
-    out[: len(a)] = a
-    return out
+def _more_room(edges: Floats, logs: Cube) -> tuple[Floats, Cube]:
+    p, m, _ = logs.shape
+    more_edges = np.empty(2 * p + 1)
+    more_logs = np.empty((2 * p, m, N))
+    for q in range(p + 1):
+        more_edges[q] = edges[q]
+    for q in range(p):
+        for j in range(m):
+            for n in range(N):
+                more_logs[q, j, n] = logs[q, j, n]
+    return more_edges, more_logs
 
 
 @compiled

@@ -13,6 +13,7 @@ import numpy as np
 
 from distill.exact.looks import Looks, later_sd, voc_at
 from distill.numerics import compiled, gain_ratio
+from distill.tree import Floats
 
 __all__ = ["best_rate"]
 
@@ -115,9 +116,8 @@ def _every_peak(looks: Looks, remaining: float) -> tuple[float, float, float]:
     if last / remaining > best:
         best_k, best = remaining, last / remaining
     room = 64
-    opened = np.empty((room, 4))  # a, b, VOC(b) + its error, the bound
-    opened[0] = (1.0, remaining, last + error, (last + error) / 2.0)
-    count = 1
+    opened = np.empty((room, 4))  # intervals not priced inside: a, b, ceiling of VOC(b), bound of the rate
+    count = _open(opened, 0, 1.0, remaining, last + error)
     for _ in range(_MOST_BATCHES):
         j = 0
         for q in range(count):
@@ -125,11 +125,12 @@ def _every_peak(looks: Looks, remaining: float) -> tuple[float, float, float]:
                 j = q
         if count == 0 or opened[j, 3] <= best * (1.0 + _CERTAIN):
             break
-        a, b, top, _ = opened[j]
+        a = opened[j, 0]
+        b = opened[j, 1]
+        top = opened[j, 2]
         count -= 1
-        opened[j] = opened[count]
-        if b - a <= 1.0:
-            continue
+        for q in range(4):
+            opened[j, q] = opened[count, q]
         k = min(max(math.floor(math.sqrt(a) * math.sqrt(b)), a + 1.0), b - 1.0)
         voc, error, _, _ = voc_at(looks, k)
         ceiling = max(ceiling, (voc + error) / k)
@@ -138,14 +139,24 @@ def _every_peak(looks: Looks, remaining: float) -> tuple[float, float, float]:
         if count + 2 > room:
             room *= 2
             wider = np.empty((room, 4))
-            wider[:count] = opened[:count]
+            for q in range(count):
+                for r in range(4):
+                    wider[q, r] = opened[q, r]
             opened = wider
-        if k - a > 1.0:
-            opened[count] = (a, k, voc + error, (voc + error) / (a + 1.0))
-            count += 1
-        if b - k > 1.0:
-            opened[count] = (k, b, top, top / (k + 1.0))
-            count += 1
+        count = _open(opened, count, a, k, voc + error)
+        count = _open(opened, count, k, b, top)
     for q in range(count):
         ceiling = max(ceiling, opened[q, 3])
     return best_k, best, ceiling - best
+
+
+@compiled
+def _open(opened: Floats, count: int, a: float, b: float, top: float) -> int:
+    """Keep (a, b), if there is a whole number inside; returns how many are kept."""
+    if b - a <= 1.0:
+        return count
+    opened[count, 0] = a
+    opened[count, 1] = b
+    opened[count, 2] = top
+    opened[count, 3] = top / (a + 1.0)
+    return count + 1

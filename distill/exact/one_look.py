@@ -27,7 +27,7 @@ from typing import NamedTuple
 import numpy as np
 
 from distill.exact.action_grid import NODES, N
-from distill.exact.rest_of_action import Nodes, Rest, gather, value_at
+from distill.exact.rest_of_action import Nodes, Rest, gather, tail_at, value_at
 from distill.numerics import compiled, gain, gauss_legendre, norm_cdf, norm_pdf
 
 __all__ = ["Worth", "rise", "worth"]
@@ -40,10 +40,7 @@ _STEP = 1e-14  # sigma / tau below which the outcome leaves no doubt
 _FAR = 76.0  # twice the log of what is cut off a normal tail, of the tail itself
 _SLOPES = 12  # g' over a stretch of at most 0.9 sigma is a polynomial of degree 11 to 1e-13
 _SLOPE_NODES, _SLOPE_WEIGHTS = gauss_legendre(_SLOPES)
-_TO_SLOPES = np.ascontiguousarray(
-    (np.polynomial.legendre.legvander(_SLOPE_NODES, _SLOPES - 1) * _SLOPE_WEIGHTS[:, None]).T
-    * (np.arange(_SLOPES) + 0.5)[:, None]
-)
+_TO_SLOPES = np.linalg.inv(np.polynomial.chebyshev.chebvander(_SLOPE_NODES, _SLOPES - 1))
 _OUTCOMES = 16
 _OUTCOME_NODES, _OUTCOME_WEIGHTS = gauss_legendre(_OUTCOMES)
 
@@ -147,13 +144,12 @@ def _smoothed(rest: Rest, nodes: Nodes, y: float, sigma: float) -> tuple[float, 
     """g(y) = E D(y + sigma t) and its slope."""
     if sigma == 0.0:
         p = int(np.searchsorted(rest.edges, y, side="right")) - 1
-        D, F, _ = value_at(rest, p, y)
-        return D, F
+        return value_at(rest, p, y)
     reach = _window(rest) * sigma
     fine = _FINE * sigma
     g = 0.0
     slope = 0.0
-    for q in range(gather(rest, nodes, y - reach, y + reach, y - reach, y + reach, fine, fine)):
+    for q in range(gather(rest, nodes, y - reach, y + reach, y - reach, y + reach, fine, fine, False)):
         t = (nodes.x[q] - y) / sigma
         kernel = nodes.w[q] * math.exp(-0.5 * t * t)
         g += kernel * nodes.D[q]
@@ -183,14 +179,16 @@ def _one_sum(
         fine_a = a
         fine_b = a
     else:
-        width = 9.0 * sigma * (tau / s)
+        # Phi(a(x)) turns at `turn`; where it is not 1 its product with the density has the scale of sigma.
+        width = sigma * (tau / s)
         turn = mu + (tau / s) * (tau / s) * (y0 - mu)
-        fine_a = turn - width
-        fine_b = turn + width
+        tail = 9.0 + max(side * (y0 - mu), 0.0) / s * (sigma / tau)
+        fine_a = turn - width * (tail if side > 0.0 else 9.0)
+        fine_b = turn + width * (9.0 if side > 0.0 else tail)
     total = 0.0
     terms = 0.0
     lean = (s / tau) * (s / tau)
-    for q in range(gather(rest, nodes, a, b, fine_a, fine_b, _FINE * sigma, _FINE * tau)):
+    for q in range(gather(rest, nodes, a, b, fine_a, fine_b, _FINE * sigma, _FINE * tau, False)):
         u = nodes.x[q] - mu
         t = u / tau
         ahead = side * (lean * u + (mu - y0))
@@ -217,7 +215,7 @@ def _positive(
     a = min(y0, far) - reach
     b = max(y0, far) + reach
     slopes = np.zeros(_SLOPES)
-    count = gather(rest, nodes, a, b, a, b, fine, fine)
+    count = gather(rest, nodes, a, b, a, b, fine, fine, False)
     for k in range(_SLOPES):
         y = middle + half * _SLOPE_NODES[k]
         for q in range(count):
@@ -232,12 +230,12 @@ def _positive(
     for piece in range(pieces):
         for j in range(_OUTCOMES):
             t = (2 * piece + 1 + _OUTCOME_NODES[j]) / pieces - 1.0
-            before = 0.0
+            before = t
             now = 1.0
             steep = 0.0
             for k in range(_SLOPES):
                 steep += coefficients[k] * now
-                before, now = now, ((2 * k + 1) * t * now - k * before) / (k + 1)
+                before, now = now, 2.0 * t * now - before
             y = middle + half * t
             total += _OUTCOME_WEIGHTS[j] / pieces * steep * norm_cdf(-side * (y - mu) / s)
     return total * abs(half) * _INV_SQRT_2PI / sigma
@@ -247,7 +245,8 @@ def _positive(
 def rise(rest: Rest, nodes: Nodes, mu: float, rho: float, tau: float, steeper: float) -> float:
     """E V_after - V_now of the leaf's own action; steeper = 1 / rho - 1 / tau, without cancellation."""
     p = int(np.searchsorted(rest.edges, mu, side="right")) - 1
-    _, F_mu, S_mu = value_at(rest, p, mu)
+    _, F_mu = value_at(rest, p, mu)
+    S_mu = tail_at(rest, p, mu)
     n = len(rest.edges) - 1
     low = rest.edges[0]
     high = rest.edges[n]
@@ -260,7 +259,7 @@ def rise(rest: Rest, nodes: Nodes, mu: float, rho: float, tau: float, steeper: f
     b = min(high, mu + 13.5 * tau)
     if not a < b:
         return total
-    count = gather(rest, nodes, a, b, mu - 13.5 * rho, mu + 13.5 * rho, 4.0 * rho, _FINE * tau)
+    count = gather(rest, nodes, a, b, mu - 13.5 * rho, mu + 13.5 * rho, 4.0 * rho, _FINE * tau, True)
     for q in range(count):
         u = nodes.x[q] - mu
         up = F_mu - nodes.F[q] if F_mu < 0.5 else nodes.S[q] - S_mu

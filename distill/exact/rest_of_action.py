@@ -23,13 +23,11 @@ from distill.exact.action_grid import NODES, WEIGHTS, Grid, N
 from distill.numerics import compiled, gain, legendre_antiderivative, norm_cdf
 from distill.tree import Floats
 
-__all__ = ["Nodes", "Rest", "gather", "nodes_for", "rest_of", "value_at"]
+__all__ = ["Nodes", "Rest", "gather", "nodes_for", "rest_of", "tail_at", "value_at"]
 
 _UNDECIDED = -83.0  # log F below which the rest is taken as above for sure
 _CUMULATE = legendre_antiderivative(N)
-_LEGENDRE = np.ascontiguousarray(
-    (np.polynomial.legendre.legvander(NODES, N - 1) * WEIGHTS[:, None]).T * (np.arange(N) + 0.5)[:, None]
-)  # node values to Legendre coefficients
+_SERIES = np.linalg.inv(np.polynomial.chebyshev.chebvander(NODES, N - 1))  # node values to Chebyshev series
 _EXTRA = 80  # pieces that windows may add to those of the grid
 
 
@@ -38,7 +36,8 @@ class Rest(NamedTuple):
 
     edges (P + 1,); at the nodes of each panel, (P, N): F, its complement S = 1 - F, log F, and `area`,
     which is D less (x - c) or, from the left, D plus kappa. Left of the panels F = 0, right of them F = 1.
-    coefficients (2, P, N), of log F and area, are made when first needed; `made` (P,) says where.
+    series (3, P, N), Chebyshev, of log F, area and S without its trend, are made when first needed; `made`
+    (2, P) says where the first two and the third are.
     """
 
     edges: Floats
@@ -46,7 +45,7 @@ class Rest(NamedTuple):
     S: NDArray[np.float64]
     logs: NDArray[np.float64]
     area: NDArray[np.float64]
-    coefficients: NDArray[np.float64]
+    series: NDArray[np.float64]
     made: NDArray[np.bool_]
     from_left: bool
     c: float
@@ -110,11 +109,10 @@ def rest_of(grid: Grid, i: int, mu: float, rho: float, c: float, lead: float) ->
         for p in range(n - 1, -1, -1):
             half = 0.5 * (edges[p + 1] - edges[p])
             running = _cumulate(S[p], half, running, area[p], False)
-    coefficients = np.empty((2, n, N))
+    series = np.empty((3, n, N))
+    made = np.zeros((2, n), dtype=np.bool_)
     total = running if from_left else 0.0
-    return Rest(
-        edges, F, S, logs, area, coefficients, np.zeros(n, dtype=np.bool_), from_left, c, kappa, total
-    )
+    return Rest(edges, F, S, logs, area, series, made, from_left, c, kappa, total)
 
 
 @compiled
@@ -145,9 +143,17 @@ def _cumulate(f: Floats, half: float, running: float, out: Floats, from_left: bo
 
 @compiled
 def gather(
-    rest: Rest, out: Nodes, a: float, b: float, fine_a: float, fine_b: float, fine: float, coarse: float
+    rest: Rest,
+    out: Nodes,
+    a: float,
+    b: float,
+    fine_a: float,
+    fine_b: float,
+    fine: float,
+    coarse: float,
+    tails: bool,
 ) -> int:
-    """Quadrature nodes of the curve over [a, b]; returns how many.
+    """Quadrature nodes of the curve over [a, b]; returns how many. S is filled if `tails`.
 
     Pieces are no longer than `coarse`, and than `fine` where they meet [fine_a, fine_b]. Panels that are
     short enough are taken whole, also where they reach beyond [a, b]; others are cut and interpolated.
@@ -157,7 +163,7 @@ def gather(
     high = rest.edges[n]
     count = 0
     if a < low:
-        count = _cut(rest, out, count, -1, a, min(b, low), fine_a, fine_b, fine, coarse)
+        count = _cut(rest, out, count, -1, a, min(b, low), fine_a, fine_b, fine, coarse, tails)
     for p in range(n):
         left = rest.edges[p]
         right = rest.edges[p + 1]
@@ -178,9 +184,11 @@ def gather(
                 )
                 count += 1
         else:
-            count = _cut(rest, out, count, p, max(a, left), min(b, right), fine_a, fine_b, fine, coarse)
+            count = _cut(
+                rest, out, count, p, max(a, left), min(b, right), fine_a, fine_b, fine, coarse, tails
+            )
     if b > high:
-        count = _cut(rest, out, count, n, max(a, high), b, fine_a, fine_b, fine, coarse)
+        count = _cut(rest, out, count, n, max(a, high), b, fine_a, fine_b, fine, coarse, tails)
     return count
 
 
@@ -196,6 +204,7 @@ def _cut(
     fine_b: float,
     fine: float,
     coarse: float,
+    tails: bool,
 ) -> int:
     """Pieces of [a, b], all inside panel p (-1 and n: left and right of all)."""
     first = min(max(fine_a, a), b)
@@ -212,45 +221,70 @@ def _cut(
             middle = left + half * (2 * piece + 1)
             for j in range(N):
                 x = middle + half * NODES[j]
-                D, F, S = value_at(rest, p, x)
                 out.x[count] = x
                 out.w[count] = half * WEIGHTS[j]
-                out.D[count] = D
-                out.F[count] = F
-                out.S[count] = S
+                out.D[count], out.F[count] = value_at(rest, p, x)
+                if tails:
+                    out.S[count] = tail_at(rest, p, x)
                 count += 1
     return count
 
 
 @compiled
-def value_at(rest: Rest, p: int, x: float) -> tuple[float, float, float]:
-    """D(x), F(x), S(x) for x in panel p (-1 and n: left and right of all panels)."""
+def value_at(rest: Rest, p: int, x: float) -> tuple[float, float]:
+    """D(x) and F(x) for x in panel p (-1 and n: left and right of all panels)."""
     n = len(rest.edges) - 1
     if p < 0:
-        return -rest.kappa, 0.0, 1.0
+        return -rest.kappa, 0.0
     if p >= n:
         if rest.from_left:
-            return (rest.total - rest.kappa) + (x - rest.edges[n]), 1.0, 0.0
-        return x - rest.c, 1.0, 0.0
-    if not rest.made[p]:
+            return (rest.total - rest.kappa) + (x - rest.edges[n]), 1.0
+        return x - rest.c, 1.0
+    if not rest.made[0, p]:
         for k in range(N):
             logs = 0.0
             area = 0.0
             for j in range(N):
-                logs += _LEGENDRE[k, j] * rest.logs[p, j]
-                area += _LEGENDRE[k, j] * rest.area[p, j]
-            rest.coefficients[0, p, k] = logs
-            rest.coefficients[1, p, k] = area
-        rest.made[p] = True
+                logs += _SERIES[k, j] * rest.logs[p, j]
+                area += _SERIES[k, j] * rest.area[p, j]
+            rest.series[0, p, k] = logs
+            rest.series[1, p, k] = area
+        rest.made[0, p] = True
     t = (2.0 * x - rest.edges[p] - rest.edges[p + 1]) / (rest.edges[p + 1] - rest.edges[p])
     logs = 0.0
     area = 0.0
-    before = 0.0
+    before = t
     now = 1.0
     for k in range(N):
-        logs += rest.coefficients[0, p, k] * now
-        area += rest.coefficients[1, p, k] * now
-        before, now = now, ((2 * k + 1) * t * now - k * before) / (k + 1)
-    logs = min(logs, 0.0)
-    D = area - rest.kappa if rest.from_left else area + (x - rest.c)
-    return D, math.exp(logs), -math.expm1(logs)
+        logs += rest.series[0, p, k] * now
+        area += rest.series[1, p, k] * now
+        before, now = now, 2.0 * t * now - before
+    return area - rest.kappa if rest.from_left else area + (x - rest.c), math.exp(min(logs, 0.0))
+
+
+@compiled
+def tail_at(rest: Rest, p: int, x: float) -> float:
+    """S(x) = 1 - F(x) with relative accuracy, for x in panel p as in `value_at`.
+
+    S is freed of its exponential trend over the panel before it is interpolated.
+    """
+    n = len(rest.edges) - 1
+    if p < 0 or p >= n:
+        return 1.0 if p < 0 else 0.0
+    last = max(rest.S[p, N - 1], 1e-300)
+    slope = math.log(last / max(rest.S[p, 0], 1e-300)) / (NODES[N - 1] - NODES[0])
+    if not rest.made[1, p]:
+        for k in range(N):
+            one = 0.0
+            for j in range(N):
+                one += _SERIES[k, j] * (rest.S[p, j] * math.exp(slope * (NODES[N - 1] - NODES[j])))
+            rest.series[2, p, k] = one
+        rest.made[1, p] = True
+    t = (2.0 * x - rest.edges[p] - rest.edges[p + 1]) / (rest.edges[p + 1] - rest.edges[p])
+    before = t
+    now = 1.0
+    total = 0.0
+    for k in range(N):
+        total += rest.series[2, p, k] * now
+        before, now = now, 2.0 * t * now - before
+    return max(total * math.exp(slope * (t - NODES[N - 1])), 0.0)

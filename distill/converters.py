@@ -74,12 +74,13 @@ def folded(estimator: Any) -> Any:
     if not isinstance(model, (HistGradientBoostingRegressor, MLPRegressor, *_LINEAR)):
         raise ExportError(f"no converter for {type(model).__name__}")
     check_is_fitted(model)
+    outputs = np.size(model.intercept_) if isinstance(model, _LINEAR) else getattr(model, "n_outputs_", 1)
+    if outputs != 1:
+        raise ExportError(f"the estimator must have one output; it has {outputs}")
     for scaler in reversed(steps[:-1]):
         if isinstance(model, HistGradientBoostingRegressor) or not isinstance(scaler, StandardScaler):
             raise ExportError(f"no converter for {type(scaler).__name__} before {type(model).__name__}")
         model = _fold(scaler, model)
-    if np.ndim(getattr(model, "n_outputs_", 1)) or getattr(model, "n_outputs_", 1) != 1:
-        raise ExportError("the estimator must have one output")
     return model
 
 

@@ -1,0 +1,67 @@
+"""Small fitted estimators and scorer files for tests, made from a rule instead of labels."""
+
+from __future__ import annotations
+
+import functools
+from typing import Any
+
+import numpy as np
+from leaf_tables import rows
+from sklearn.ensemble import HistGradientBoostingRegressor
+from sklearn.linear_model import Ridge
+from sklearn.neural_network import MLPRegressor
+from sklearn.pipeline import make_pipeline
+from sklearn.preprocessing import StandardScaler
+
+from distill.export import export_scorer
+from distill.features import FeatureGraph, FeatureMatrix
+
+KINDS = ("boosting", "dense", "linear")
+
+
+@functools.cache
+def graph() -> FeatureGraph:
+    return FeatureGraph()
+
+
+@functools.cache
+def training(n_trees: int = 60) -> FeatureMatrix:
+    return graph().matrix(rows(np.random.default_rng(11), n_trees))
+
+
+@functools.cache
+def fitted(kind: str, transform: str = "log_ratio") -> Any:
+    """An estimator fitted to a smooth rule of the features."""
+    x = training().x.astype(float)
+    t = 0.3 * np.sin(x[:, 0]) - 0.2 * x[:, 2] + 0.1 * x[:, 3]
+    if transform == "sqrt":
+        t = np.exp(t)
+    model: Any
+    if kind == "boosting":
+        model = HistGradientBoostingRegressor(max_iter=12, max_leaf_nodes=8)
+    elif kind == "dense":
+        net = MLPRegressor(
+            hidden_layer_sizes=(8, 8), solver="lbfgs", max_iter=300, max_fun=10**6, random_state=0, tol=0.1
+        )
+        model = make_pipeline(StandardScaler(), net)
+    else:
+        model = make_pipeline(StandardScaler(), Ridge())
+    return model.fit(training().x, t)
+
+
+def arguments(kind: str = "dense", transform: str = "log_ratio") -> dict[str, Any]:
+    """Arguments of export_scorer, by name."""
+    x = training().x
+    return {
+        "estimator": fitted(kind, transform),
+        "feature_graph": graph(),
+        "transform": transform,
+        "ranges": np.stack([x.min(axis=0), x.max(axis=0)], axis=1),
+        "metadata": {"recipe": kind, "family": "rule"},
+        "self_test_columns": rows(np.random.default_rng(12), 3, most=10),
+    }
+
+
+@functools.cache
+def scorer_bytes(kind: str = "dense", transform: str = "log_ratio") -> bytes:
+    return export_scorer(**arguments(kind, transform))

@@ -159,7 +159,7 @@ def _bar(ax: Axes, i: int, row: Bar, start: float) -> None:
 @styled
 def pairs(exact: Sequence[float], predicted: Sequence[float], least: float) -> Figure:
     """Predicted against exact values, log-log; what is below `least` stands on the edge."""
-    figure, (ax,) = _figure(WIDTH, 400)
+    figure, (ax,) = _figure(WIDTH, 375)
     top = 2 * max([10 * least, *exact, *predicted])
     ax.set(xscale="log", yscale="log", xlim=(least / 1.6, top), ylim=(least / 1.6, top), aspect="equal")
     ax.set(xlabel="exact value, share of the tree's scale", ylabel="scorer's value, the same unit")
@@ -255,8 +255,11 @@ _ON_LINE: Final = (
 )  # fmt: skip
 
 
+_PER_STEP: Final = 6.0  # square pixels that a label may rather hide than go one place further off
+
+
 def _place(ax: Axes, labels: Sequence[_Label]) -> None:
-    """Each label at the first place where it hides nothing, or where it hides least."""
+    """Each label near its point, where it hides least."""
     figure = ax.get_figure(root=True)
     assert figure is not None
     figure.draw_without_rendering()
@@ -266,10 +269,10 @@ def _place(ax: Axes, labels: Sequence[_Label]) -> None:
     taken = np.vstack([np.empty((0, 4)), *(_covered(line) for line in ax.lines)])
     for label in sorted(labels, key=lambda one: one.x is not None):
         best: tuple[float, Any, Floats] | None = None
-        for text in _attempts(ax, label):
+        for nth, text in enumerate(_attempts(ax, label)):
             box = np.array(text.get_window_extent(renderer).extents)
             outside = _overlap(box, box[None]) - _overlap(box, inside[None])
-            harm = _overlap(box, taken) + 2 * outside
+            harm = _overlap(box, taken) + 2 * outside + _PER_STEP * nth
             if best is None or harm < best[0] - 1e-6:
                 if best is not None:
                     best[1].remove()

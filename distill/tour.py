@@ -15,6 +15,7 @@ from typing import Any
 
 import numpy as np
 
+from distill import report as pages
 from distill import voc
 from distill.family import draw, load_family
 from distill.files import write_atomic
@@ -33,10 +34,6 @@ __all__ = ["tour"]
 TREES = 12_000  # of the cold-store family: about 310,000 exact labels
 _TREES_A_DECISION = 5  # how often the recorder looks at one decision
 _TRACE_SHARE = 0.7  # of each environment's recorded decisions, for training
-CAUTION = (
-    "The scorer only spends search effort; it is no safety function. Where machines move loads near people, "
-    "machine-safety standards, local codes and licensed practice decide."
-)
 
 
 def tour(
@@ -56,7 +53,7 @@ def tour(
             lines.append(text)
             say(text)
 
-    report("# voc-distill: the whole job on a cold store's pallet shuttle", "", CAUTION, "")
+    report("# voc-distill: the whole job on a cold store's pallet shuttle", "", pages.CAUTION, "")
     summary: dict[str, Any] = {}
     steps: tuple[tuple[str, Callable[[Path, int, Callable[..., None]], dict[str, Any]]], ...] = (
         ("Label trees of the cold-store family exactly", _label),
@@ -72,10 +69,12 @@ def tour(
     summary["seconds"] = round(time.perf_counter() - started, 1)
     report(
         f"Done in {summary['seconds']:.0f} s. In {out}: scorer.onnx (load it with distill.runtime.Scorer), "
-        "its sheet scorer.md and .json, scorer-traces.onnx, the datasets, summary.md and summary.json."
+        "its sheet scorer.md and .json, scorer-traces.onnx, the datasets, summary.md and .json, and report.html "
+        "with pictures."
     )
     write_atomic(out / "summary.json", (json.dumps(summary, indent=1) + "\n").encode())
     write_atomic(out / "summary.md", ("\n".join(lines) + "\n").encode())
+    pages.write_page(summary, out / "report.html")
     return summary
 
 

@@ -178,7 +178,7 @@ def _normal_sum_density(x: Distribution, sd: float, at: Floats) -> Floats:
         n, _mass, _moment = near_nodes(x, at[j], sd, REACH, t, m)
         total = 0.0
         for i in range(n):
-            z = (at[j] - t[i]) / sd
+            z = t[i] / sd
             total += m[i] * math.exp(-0.5 * z * z)
         out[j] = total * (0.3989422804014327 / sd)
     return out

@@ -43,7 +43,7 @@ def _slope(T: Distribution, y: float, tau: float, t: Floats, m: Floats) -> float
                 total += m[i]
             return total
         for i in range(n):
-            total += m[i] * norm_cdf((y - t[i]) / tau)
+            total += m[i] * norm_cdf(t[i] / tau)
         if total > _BULK:
             break
     return total
@@ -58,7 +58,7 @@ def _excess(T: Distribution, y: float, tau: float, t: Floats, m: Floats) -> tupl
         n, slope, moment = near_nodes(T, y, tau, up, t, m)
         value = -moment
         for i in range(n):
-            d = y - t[i]
+            d = t[i]
             if tau == 0.0:
                 slope += m[i]
                 value += m[i] * d
@@ -172,7 +172,7 @@ def _beyond(
             values[i] = F * norm_cdf(sign * (mu - y) / s)
             piece += _W[i] * half * values[i]
         total += piece
-        error += half * _unresolved(values) + 1e-14 * piece
+        error += half * _unresolved(values) + 5e-14 * piece
         a += sign * w
         z = sign * (a - mu) / s
         rest = s * gain(-z) * (1.0 if up else lowest)
@@ -202,29 +202,38 @@ def _unresolved(values: Floats) -> float:
 @njit(cache=True, error_model="numpy")
 def _gain_of_variance(
     T: Distribution, mu: float, sd_now: float, sd_after: float, t: Floats, m: Floats
-) -> float:
-    """e_after - e_now = integral over u from sd_now to sd_after of E phi((mu - T) / u): positive."""
+) -> tuple[float, float]:
+    """e_after - e_now = integral over u from sd_now to sd_after of E phi((mu - T) / u), and its error."""
     total = 0.0
+    error = 0.0
     high = sd_after
-    for _ in range(1200):
+    ratio = 0.5
+    values = np.empty(N)
+    for _ in range(2000):
         if not high > sd_now:
             break
-        low = max(sd_now, 0.5 * high)
+        low = max(sd_now, ratio * high)
         half = 0.5 * (high - low)
         piece = 0.0
         for i in range(N):
             u = low + half + half * _T[i]
             n, _mass, _moment = near_nodes(T, mu, u, _UP, t, m)
-            d = 0.0
+            values[i] = 0.0
             for j in range(n):
-                z = (mu - t[j]) / u
-                d += m[j] * math.exp(-0.5 * z * z)
-            piece += _W[i] * half * d
-        total += piece * _INV_SQRT_2PI
+                z = t[j] / u
+                values[i] += m[j] * math.exp(-0.5 * z * z)
+            piece += _W[i] * half * values[i]
+        left = half * _unresolved(values)
+        if left > 1e-14 * (total + piece) and ratio < 0.999:
+            ratio = math.sqrt(ratio)  # exp(-z^2 / 2) is steep in u: shorter steps
+            continue
+        total += piece
+        error += left
         high = low
         if piece <= 1e-17 * total or high < 1e-300:
             break
-    return total
+        ratio = max(0.5, ratio * ratio)
+    return total * _INV_SQRT_2PI, error * _INV_SQRT_2PI
 
 
 @njit(cache=True, error_model="numpy")
@@ -260,8 +269,8 @@ def threshold_voc(
         if best:
             sd_after = math.sqrt(s[k] * s[k] + tau[k] * tau[k])
             if sd_after > sd_now * (1.0 + 1e-14):
-                voc[k] = _gain_of_variance(T, mu, sd_now, sd_after, t, m)
-                error[k] = 1e-13 * voc[k] + 0.25 * T.error * min(math.log(sd_after / sd_now), 8.0)
+                voc[k], error[k] = _gain_of_variance(T, mu, sd_now, sd_after, t, m)
+                error[k] += 1e-13 * voc[k] + 0.25 * T.error * min(math.log(sd_after / sd_now), 8.0)
         if target <= -slack:
             continue
         if target <= 0.0:
@@ -275,4 +284,4 @@ def threshold_voc(
         _e0, slope0 = _excess(T, y0, tau[k], t, m)
         z = (mu - y0) / s[k] if not best else (y0 - mu) / s[k]
         odds = norm_cdf(z + min(slack / (s[k] * max(slope0, 1e-300)), 1e6))
-        error[k] += quad + 2.0 * slack * odds
+        error[k] += quad + 2.0 * (slack + _EPS * (abs(y0) + abs(mu))) * odds

@@ -86,12 +86,22 @@ def fit(
     spread: float,
     error: float,
 ) -> Distribution:
-    """The distribution with density `values` (P N,) at the nodes of `edges`; `error` is inherited.
+    """The distribution with density `values` (P N,) at the nodes of `edges`, scaled to a total of 1.
 
-    Adds to `error` what the interpolation on each panel leaves out (its last coefficients), the total mass
-    that is missing or too much, and rounding.
+    `error` is inherited. Added are what the interpolation on each panel leaves out (its last
+    coefficients), how far the total was off, and rounding.
     """
     P = len(edges) - 1
+    total = atom_mass.sum()
+    for p in range(P):
+        half = 0.5 * (edges[p + 1] - edges[p])
+        for i in range(N):
+            total += values[p * N + i] * _W[i] * half
+    error += abs(1.0 - total) * max(edges[P] - edges[0], spread)
+    error += 2.0 * _EPS * max(abs(edges[0]), abs(edges[P]))
+    if total > 0.0:
+        values = values / total
+        atom_mass = atom_mass / total
     density, cumulative = np.empty((P, N)), np.empty((P, N + 1))
     nodes, mass = np.empty(P * N), np.empty(P * N)
     panel_mass, panel_moment = np.zeros(P), np.zeros(P)
@@ -118,13 +128,10 @@ def fit(
         _antiderivative(density[p], half, below, cumulative[p])
         below += panel_mass[p]
         mean += panel_moment[p]
-        error += (abs(density[p, N - 1]) + abs(density[p, N - 2])) * half * half
+        # An error that oscillates N times over the panel moves F by its height x half / N.
+        error += (abs(density[p, N - 1]) + abs(density[p, N - 2])) * half * half * (4.0 / N)
     for a in range(len(atom_at)):
         mean += atom_at[a] * atom_mass[a]
-    missing = 1.0 - panel_mass.sum() - atom_mass.sum()
-    mean += missing * edges[P]
-    error += abs(missing) * max(edges[P] - edges[0], spread)
-    error += 2.0 * _EPS * max(abs(edges[0]), abs(edges[P]))
     return Distribution(
         edges, hard, density, cumulative, nodes, mass, panel_mass, panel_moment, atom_at, atom_mass, mean,
         spread, error,
@@ -208,12 +215,13 @@ def evaluate(x: Distribution, at: Floats) -> tuple[Floats, Floats]:
 
 @njit(cache=True, error_model="numpy")
 def near_nodes(
-    x: Distribution, y: float, sd: float, up: float, t: Floats, m: Floats
+    x: Distribution, y: float, sd: float, up: float, d: Floats, m: Floats
 ) -> tuple[int, float, float]:
     """Quadrature of X fine enough for functions of scale `sd` around y.
 
-    Fills t, m with nodes and masses between y - REACH sd and y + up sd, atoms among them, and returns
-    their number with the mass and the first moment about y of all that lies below.
+    Fills d with y - node, m with masses, for nodes between y - REACH sd and y + up sd, atoms among them,
+    and returns their number with the mass and the first moment about y of all that lies below. Distances,
+    not nodes: they keep their digits where sd is tiny beside y.
     """
     low, high = y - REACH * sd, y + up * sd
     n = 0
@@ -221,7 +229,7 @@ def near_nodes(
     moment = 0.0
     for a in range(len(x.atom_at)):
         if low <= x.atom_at[a] <= high:
-            t[n] = x.atom_at[a]
+            d[n] = y - x.atom_at[a]
             m[n] = x.atom_mass[a]
             n += 1
         elif x.atom_at[a] < low:
@@ -236,7 +244,7 @@ def near_nodes(
             moment += x.panel_moment[p] - y * x.panel_mass[p]
         elif right - left <= 3.0 * sd:
             for i in range(p * N, (p + 1) * N):
-                t[n] = x.nodes[i]
+                d[n] = y - x.nodes[i]
                 m[n] = x.mass[i]
                 n += 1
         else:
@@ -245,18 +253,18 @@ def near_nodes(
                 half = 0.5 * (low - left)
                 for i in range(N):
                     v = left + half + half * _T[i]
-                    d = _W[i] * half * max(chebyshev(x.density, p, N - 1, (v - left) * scale - 1.0), 0.0)
-                    mass += d
-                    moment += d * (v - y)
-            a, end = max(left, low), min(right, high)
-            pieces = math.ceil((end - a) / (3.0 * sd))
-            half = 0.5 * (end - a) / pieces
+                    part = _W[i] * half * max(chebyshev(x.density, p, N - 1, (v - left) * scale - 1.0), 0.0)
+                    mass += part
+                    moment += part * (v - y)
+            start, end = min(y - left, REACH * sd), max(y - right, -up * sd)
+            pieces = math.ceil((start - end) / (3.0 * sd))
+            half = 0.5 * (start - end) / pieces
             for k in range(pieces):
-                mid = a + (2 * k + 1) * half
+                mid = start - (2 * k + 1) * half
                 for i in range(N):
-                    v = mid + half * _T[i]
-                    t[n] = v
-                    m[n] = _W[i] * half * max(chebyshev(x.density, p, N - 1, (v - left) * scale - 1.0), 0.0)
+                    d[n] = mid - half * _T[i]
+                    u = min(max((y - d[n] - left) * scale - 1.0, -1.0), 1.0)
+                    m[n] = _W[i] * half * max(chebyshev(x.density, p, N - 1, u), 0.0)
                     n += 1
     return n, mass, moment
 

@@ -142,7 +142,7 @@ class _Prices:
                 for j in np.flatnonzero(s > 0):
                     z = abs(ahead) / s[j]
                     voc[j] = s[j] * gain(-z)
-                    error[j] = slack * gain(-max(z - slack / s[j], 0.0)) + 1e-14 * voc[j]
+                    error[j] = slack * gain(-max(z - slack / s[j], 0.0)) + 5e-14 * voc[j]
             return voc, error
         threshold = leaf.threshold
         sd_now = math.sqrt(float(self.var_now[i]) + threshold.rest_var)

@@ -13,7 +13,7 @@ from distill.tree import Floats
 
 __all__ = ["collapsed", "lay_out", "merged", "resolved"]
 
-_PANEL_TOLERANCE = 1e-11  # of the span, Wasserstein-1, a panel
+TOLERANCE = 1e-11  # of the span, Wasserstein-1, a panel
 _FINEST = 1e-11  # of the span: narrower features become atoms
 _NOTHING = 1e-60  # mass that no label can tell from none
 _MAX_HALVINGS = 8
@@ -64,7 +64,7 @@ def resolved(
     values = density(nodes_of(edges))
     curves = len(values)
     for _ in range(_MAX_HALVINGS):
-        bad = _unresolved(edges, values)
+        bad = _unresolved(edges, values, TOLERANCE)
         if not bad.any():
             break
         where = np.flatnonzero(bad) + 1
@@ -80,7 +80,7 @@ def resolved(
 
 
 @njit(cache=True, error_model="numpy")
-def _unresolved(edges: Floats, values: Floats) -> np.ndarray:
+def _unresolved(edges: Floats, values: Floats, tolerance: float) -> np.ndarray:
     """Panels whose last coefficients say that 16 nodes are too few, shape (P,)."""
     P = len(edges) - 1
     out = np.zeros(P, dtype=np.bool_)
@@ -99,7 +99,7 @@ def _unresolved(edges: Floats, values: Floats) -> np.ndarray:
                 before += COEFFICIENTS[N - 2, i] * v
                 largest = max(largest, v)
             tail = abs(last) + abs(before)
-            if tail * half * half > _PANEL_TOLERANCE * span and tail > 1e-13 * largest:
+            if tail * half * half > tolerance * span and tail > 1e-13 * largest:
                 out[p] = True
     return out
 
@@ -194,11 +194,17 @@ def trimmed(x: Distribution) -> Distribution:
     )  # fmt: skip
 
 
-@njit(cache=True, error_model="numpy")
 def merged(x: Distribution) -> Distribution:
     """The same distribution on as few panels as hold it; `error` grows by what that leaves out.
 
-    From the left, each panel is the widest tried whose last coefficients are negligible and whose 16 nodes
+    Ends that carry nothing are dropped, features too fine for double precision become atoms.
+    """
+    return _merged(x, TOLERANCE)
+
+
+@njit(cache=True, error_model="numpy")
+def _merged(x: Distribution, tolerance: float) -> Distribution:
+    """From the left, each panel is the widest tried whose last coefficients are negligible and whose nodes
     find the mass that the finer panels have there, so that no narrow peak slips between nodes.
     """
     x = collapsed(trimmed(x))
@@ -223,7 +229,7 @@ def merged(x: Distribution) -> Distribution:
                 break
             if x.edges[stop] - end < 0.1 * w:
                 end = x.edges[stop]
-            if _one_panel_holds(x, p, a, end, values, _PANEL_TOLERANCE * span):
+            if _one_panel_holds(x, p, a, end, values, tolerance * span):
                 break
             w *= 0.8
         while p < P and x.edges[p + 1] <= end:
@@ -242,7 +248,22 @@ def merged(x: Distribution) -> Distribution:
             while q < P - 1 and x.edges[q + 1] <= at:
                 q += 1
             out[r * N + i] = _on_panel(x, q, at)
-    return fit(new_edges, np.array(flags), out, x.atom_at, x.atom_mass, x.spread, x.error)
+    new = fit(new_edges, np.array(flags), out, x.atom_at, x.atom_mass, x.spread, x.error)
+    # Mass that has changed sides of an edge moves the distribution function between edges.
+    moved = 0.0
+    q = 0
+    for r in range(len(edges) - 1):
+        end = new_edges[r + 1]
+        while q < P - 1 and x.edges[q + 1] < end:
+            q += 1
+        lag = min((end - x.edges[q]) / (x.edges[q + 1] - x.edges[q]) * 2.0 - 1.0, 1.0)
+        old = chebyshev(x.cumulative, q, N, lag)
+        now = chebyshev(new.cumulative, r, N, 1.0)
+        moved += abs(now - old) * (end - new_edges[r])
+    return Distribution(
+        new.edges, new.hard, new.density, new.cumulative, new.nodes, new.mass, new.panel_mass,
+        new.panel_moment, new.atom_at, new.atom_mass, new.mean, new.spread, new.error + 2.0 * moved,
+    )  # fmt: skip
 
 
 @njit(cache=True, error_model="numpy")

@@ -32,6 +32,7 @@ Complex = NDArray[np.complex128]
 
 _FADED = 1e-13  # what is left out is below it, and so is what interpolation lets through
 _MAX_PHASE = 11.0  # half a panel times the frequency: 16 nodes integrate that to 1e-12
+_NEGLIGIBLE = 1e-11  # a part this narrow beside another only adds its mean, and its spread as an error
 _MAX_PIECES = 64  # that a panel may be cut into
 _BLOCK = 32  # frequencies between looks
 _MAX_FREQUENCIES = 1024
@@ -42,8 +43,8 @@ _PANEL_PHASE = 12.0  # panel width times the frequency above which less than 1e-
 
 def total(parts: Sequence[Distribution], sd: float) -> Distribution:
     """The distribution of the sum of the parts + sd Z, all independent, Z standard normal, sd >= 0."""
-    if len(parts) == 1 and sd == 0.0:
-        return parts[0]
+    if len(parts) == 1 and sd <= _NEGLIGIBLE * parts[0].spread:
+        return parts[0]._replace(error=parts[0].error + sd)
     spectra = _Spectra(parts, np.ones(len(parts)), sd)
     every = np.arange(len(parts))
     product = spectra.products([every])
@@ -63,8 +64,8 @@ def remainders(
     n = len(parts)
     factors = [T, *parts]
     others = [np.delete(np.arange(n + 1), j + 1) for j in range(n)]
-    if n == 1 and sd == 0.0:
-        return [T], _sum(T, reflected(parts[0])) if whole else None
+    if n == 1 and sd <= _NEGLIGIBLE * T.spread:
+        return [T._replace(error=T.error + sd)], _sum(T, reflected(parts[0])) if whole else None
     spectra = _Spectra(factors, np.array([1.0] + [-1.0] * n), sd)
     products = spectra.products(others)
     all_but = (
@@ -91,9 +92,10 @@ def _halves(T: Distribution, parts: list[Distribution]) -> list[Distribution]:
 def _sum(x: Distribution, y: Distribution) -> Distribution:
     """X + Y, whichever way works."""
     for sure, other in ((x, y), (y, x)):
-        if len(sure.edges) == 1:
-            moved = shifted(other, float(sure.edges[0]))
-            return moved._replace(error=moved.error + sure.error)
+        if len(sure.edges) == 1 or sure.spread <= _NEGLIGIBLE * other.spread:
+            moved = shifted(other, sure.mean)
+            width = sure.spread if len(sure.edges) > 1 else 0.0
+            return moved._replace(error=moved.error + sure.error + width)
     spectra = _Spectra([x, y], np.ones(2), 0.0)
     both = np.arange(2)
     product = spectra.products([both])

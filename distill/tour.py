@@ -69,8 +69,8 @@ def tour(
     summary["seconds"] = round(time.perf_counter() - started, 1)
     report(
         f"Done in {summary['seconds']:.0f} s. In {out}: scorer.onnx (load it with distill.runtime.Scorer), "
-        "its sheet scorer.md and .json, scorer-traces.onnx, the datasets, summary.md and .json, and report.html "
-        "with pictures."
+        "its sheet scorer.md and .json, scorer-traces.onnx, the datasets, summary.md and .json, "
+        "and report.html with pictures."
     )
     write_atomic(out / "summary.json", (json.dumps(summary, indent=1) + "\n").encode())
     write_atomic(out / "summary.md", ("\n".join(lines) + "\n").encode())

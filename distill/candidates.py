@@ -38,7 +38,7 @@ class Candidates:
     row's tree was met in; None where no record says.
     """
 
-    columns: Mapping[str, NDArray[Any]]
+    columns: Mapping[str, Any]
     tree: NDArray[np.int64]
     label: Floats
     batch: Floats

@@ -43,7 +43,7 @@ class Timing:
 class Decision:
     """One decision to time: the leaf table's arrays and the rollouts left, and the same as a tree."""
 
-    columns: Mapping[str, NDArray[Any]]
+    columns: Mapping[str, Any]
     remaining: int
     tree: BeliefTree
 

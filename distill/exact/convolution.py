@@ -96,7 +96,7 @@ def _density_at(x: Distribution, at: float) -> float:
     P = len(x.edges) - 1
     if not (x.edges[0] <= at <= x.edges[P]) or P == 0:
         return 0.0
-    p = min(np.searchsorted(x.edges, at, side="right") - 1, P - 1)
+    p = min(int(np.searchsorted(x.edges, at, side="right")) - 1, P - 1)
     t = (at - x.edges[p]) / (x.edges[p + 1] - x.edges[p]) * 2.0 - 1.0
     return max(chebyshev(x.density, p, N - 1, t), 0.0)
 

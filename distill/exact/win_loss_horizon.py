@@ -66,7 +66,7 @@ class _Tables:
         mean = low + width * (a / (a + b))
         best = int(np.argmax(mean))
         self.value = float(mean[best]) + _expected_tail(
-            *(c[best] for c in self.columns), h, best, *self.tables
+            a[best], b[best], low[best], width[best], h, best, *self.tables
         )
         self.error = 8 * _EPS * float(group.size + np.max(width) + np.max(self.tables[2][:, 0], initial=0.0))
 
@@ -325,7 +325,7 @@ def _price_pairs(
                 error[c] += _EPS * tail[i, 0] * math.sqrt(n + k + h)
             else:
                 if known != i or len(rises) <= k:
-                    most = min(np.max(batch), _STEPWISE)
+                    most = int(min(int(np.max(batch)), _STEPWISE))
                     rises, noise = _rises(ai, bi, lo, wi, h, most, atom, more[i], tail[i], lead[i])
                     known = i
                 gain += rises[k]

@@ -64,7 +64,7 @@ _LARGE: Final = 1e300
 _TINY: Final = 1e-300
 _THRESHOLD_LIMIT: Final = 40.0  # exp(-z^2 / 2) is 0 in double precision
 _RATIO_LIMIT: Final = 1e18  # of noise to variance, either way
-_SLOPE_FLOOR: Final = 1e-30  # where the siblings alone beat the rival: below any value that matters
+_SLOPE_FLOOR: Final = 1e-300  # where the siblings alone beat the rival: below the least value of any tree
 
 # q(y) = y - f^{-1}(y) as a v / sqrt(v + c), v = -log(1 - exp(-b y)); fitted by least squares to the exact
 # inverse, absolute error at most 0.006 for f^{-1}(y) from -8 up. (a, b, c).

@@ -37,7 +37,7 @@ from distill.tree import Floats
 __all__ = ["TARGETS", "BoostingLearner", "DenseLearner", "LinearLearner", "decode", "encode"]
 
 TARGETS = ("sqrt", "log_ratio")
-_STEPS_A_PHASE = 3000
+_STEPS_A_PHASE = 2000
 _LOG_RATIO_LIMIT = 20.0  # a learner that meets larger ratios would spend itself on values of no matter
 
 
@@ -97,10 +97,11 @@ class _Learner(RegressorMixin, BaseEstimator):  # type: ignore[misc]
         t = encode(np.asarray(y, dtype=float), base, self.target)
         if self.target == "log_ratio":
             weight = np.where((y > 0) & (base > 0), weight, 0.0)
-        if not np.any(weight > 0):
+        rows = weight > 0  # others would only fill batches and leaves
+        if not np.any(rows):
             raise InputError("sample_weight", "must be above 0 for at least one row that can be learned")
         with _one_blas_thread():
-            self.model_ = self._fit_transformed(X, t, weight)
+            self.model_ = self._fit_transformed(X[rows], t[rows], weight[rows])
         return self
 
     def predict(self, X: Any, first_order: Any = None) -> Floats:
@@ -172,8 +173,8 @@ class DenseLearner(_Learner):
     """A small fully connected network, inputs standardised, trained by Adam (Kingma and Ba 2015).
 
     layers : hidden widths. rates : learning rate of each phase; a falling rate settles the network.
-    epochs : passes over the rows in each phase; None takes as many as make about 3,000 steps, from 4 to
-    100. batch : rows a step. alpha : L2 penalty.
+    epochs : passes over the rows in each phase; None takes as many as make about 2,000 steps, from 4 to
+    100. batch : rows a step, fewer where that leaves fewer than 32 steps an epoch. alpha : L2 penalty.
     """
 
     def __init__(
@@ -182,9 +183,9 @@ class DenseLearner(_Learner):
         target: str = "sqrt",
         layers: Sequence[int] = (32, 32),
         activation: str = "relu",
-        rates: Sequence[float] = (3e-3, 1e-3, 3e-4, 1e-4),
+        rates: Sequence[float] = (1e-2, 3e-3, 1e-3, 2e-4),
         epochs: int | None = None,
-        batch: int = 512,
+        batch: int = 2048,
         alpha: float = 1e-7,
         random_state: int | None = 0,
     ) -> None:
@@ -202,7 +203,7 @@ class DenseLearner(_Learner):
         rows = scaler.transform(X)
         # The network learns a target of unit size; its last layer is scaled back afterwards.
         size = float(np.sqrt(np.average(t * t, weights=weight))) or 1.0
-        batch = min(self.batch, len(rows))
+        batch = int(np.clip(len(rows) // 32, min(32, len(rows)), self.batch))
         epochs = self.epochs or int(np.clip(_STEPS_A_PHASE * batch / len(rows), 4, 100))
         t, weight = t.astype(rows.dtype), weight.astype(rows.dtype)  # float32 rows train in float32
         net = MLPRegressor(

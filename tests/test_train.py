@@ -20,7 +20,7 @@ from distill.errors import InputError
 from distill.metrics import Groups
 from distill.runtime import Scorer
 from distill.sheet import FRONT_FILE
-from distill.train import RECIPES, _mark_front, row_weights, train
+from distill.train import RECIPES, _mark_front, _ranges, row_weights, train
 
 TREES = 250
 QUICK = ["linear", "boosting 25x8", "dense 32-32"]
@@ -127,6 +127,11 @@ def test_rows_weigh_by_their_worth_within_their_tree_whatever_its_unit() -> None
     groups = Groups.of([0, 0, 0, 1, 1, 2])
     label = np.array([1.0, 0.5, 0.0, 4e-30, 2e-30, 0.0])
     assert row_weights(groups, label) == pytest.approx([1.001, 0.251, 0.001, 1.001, 0.251, 0.001])
+
+
+def test_ranges_reach_a_twentieth_of_the_span_beyond_the_rows() -> None:
+    x = np.array([[0.0, -10.0, 3.0], [1.0, 10.0, 3.0], [0.5, 0.0, 3.0]], dtype=np.float32)
+    assert _ranges(x) == pytest.approx(np.array([[-0.05, 1.05], [-11.0, 11.0], [3.0, 3.0]], dtype=np.float32))
 
 
 def test_the_front_holds_what_no_other_beats_in_both() -> None:

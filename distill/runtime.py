@@ -5,15 +5,18 @@
                        remaining=100)
 
 A call copies the arrays into buffers that onnxruntime reads in place, and runs on the calling thread;
-threads may share a scorer. Where the file cannot answer - a leaf unlike those of training, a file that
-was refused - the closed-form static rate answers instead, and is counted.
+threads may share a scorer, each has buffers of its own. Where the file has no answer - a leaf unlike
+those of training, invalid values, a deadline that has passed, a file that was refused - the closed-form
+static rate answers instead, and is counted.
 """
 
 from __future__ import annotations
 
+import hashlib
 import os
 import threading
-from collections import OrderedDict
+import time
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Final, NamedTuple
@@ -24,23 +27,17 @@ from numpy.typing import NDArray
 
 from distill import scorer_file
 from distill.closed_form import static_rates
-from distill.errors import InputError, ScorerFileError
+from distill.errors import DistillError, InputError, ScorerFileError
+from distill.leaf_buffers import BELIEFS, FLOATS, INPUTS, MAX_LEAVES, LeafBuffers, number_array
 
 __all__ = ["Counters", "Scorer", "Scores"]
 
 Floats = NDArray[np.float64]
 
-_FLOATS: Final = ("mean", "var", "noise_var", "gain", "offset", "cost")
-_OUTPUTS: Final = {
-    "voc": np.float64,
-    "batch": np.int64,
-    "in_range": np.bool_,
-    "pick": np.int64,
-    "worth_it": np.bool_,
-}
-_KEPT_SIZES: Final = 32  # buffers kept a thread, one set a number of leaves
-_MAX_ROLLOUTS: Final = 2**53
-_SELF_TEST_SLACK: Final = 1e-4  # of the largest value of a case: other processors round differently
+_KEPT_SIZES: Final = 32  # sets of buffers kept a thread, one a number of leaves
+# A leaf next to a split of a tree ensemble may fall on its other side on another processor.
+_SELF_TEST_SLACK: Final = 1e-4  # of the largest value of a case
+_SELF_TEST_SHARE: Final = 0.1  # of the leaves of a case that may be further off
 
 
 class Scores(NamedTuple):
@@ -49,7 +46,8 @@ class Scores(NamedTuple):
     voc : (n,), the value it was trained on, by default the rate, u a rollout; gross of cost.
     batch : (n,), the rollouts that value assumes. in_range : (n,), False where the leaf is unlike those
     of training, and `voc` is the closed-form static rate. pick : position of the largest voc - cost, the
-    first on ties. worth_it : whether that is above 0. With `tree`, pick and worth_it have one entry a tree.
+    first on ties. worth_it : whether that is above 0. With `tree`, pick (a position within its tree) and
+    worth_it have one entry a tree.
     """
 
     voc: Floats
@@ -61,32 +59,25 @@ class Scores(NamedTuple):
 
 @dataclass
 class Counters:
-    """How often what happened, since the scorer was loaded; approximate when threads share it.
+    """How often what happened since the scorer was loaded; approximate when threads share it.
 
-    decisions : calls answered. out_of_range : calls with at least one leaf out of range.
-    fallback : calls that the closed form answered alone. refused : calls with invalid input.
+    decisions : calls answered. out_of_range : calls with some leaf unlike those of training.
+    invalid : calls with values that a leaf table cannot hold. late : calls after their deadline.
+    fallback : calls that the closed form answered alone.
     """
 
     decisions: int = 0
     out_of_range: int = 0
+    invalid: int = 0
+    late: int = 0
     fallback: int = 0
-    refused: int = 0
-
-
-@dataclass
-class _Buffers:
-    """Arrays that a binding reads and writes, for one number of leaves on one thread."""
-
-    inputs: dict[str, NDArray[Any]]
-    outputs: dict[str, NDArray[Any]]
-    binding: Any
 
 
 class _Local(threading.local):
-    """Buffers of the calling thread, the least recently used dropped first."""
+    """Buffers of the calling thread, by number of leaves; the oldest is dropped first."""
 
     def __init__(self) -> None:
-        self.kept: OrderedDict[int, _Buffers] = OrderedDict()
+        self.kept: dict[int, LeafBuffers] = {}
 
 
 @dataclass(eq=False)
@@ -94,27 +85,45 @@ class Scorer:
     """A scorer file, checked and ready. Make one with `Scorer.load`.
 
     facts : the file's metadata (format, about, features, ranges, transform, measured ...).
-    strict : raise on invalid input and on a failing file instead of falling back.
+    strict : raise on invalid values and on a failing file instead of falling back.
+    refused : why the file was refused, with `load(..., guard=True)`; else None.
     """
 
     facts: dict[str, Any]
     strict: bool = False
+    refused: str | None = None
     counters: Counters = field(default_factory=Counters)
-    _session: Any = None
+    _session: Any = field(default=None, repr=False)
     _local: _Local = field(default_factory=_Local, repr=False)
 
     @classmethod
-    def load(cls, path: str | os.PathLike[str], *, strict: bool = False) -> Scorer:
-        """Check the file and make it ready; ScorerFileError says why a file is refused.
+    def load(
+        cls,
+        path: str | os.PathLike[str],
+        *,
+        strict: bool = False,
+        guard: bool = False,
+        sha256: str | None = None,
+    ) -> Scorer:
+        """Check a file and make it ready; ScorerFileError says why a file is refused.
 
-        Its bytes are checked before onnxruntime sees them, and it must repeat its own stored answers.
+        Its bytes are checked before onnxruntime sees them, and it must repeat the answers stored in it.
+        sha256 : the digest it must have, as its sheet states it. guard : a refused file gives a scorer
+        that answers by the closed form, with the reason in `refused`, instead of an error.
         """
         try:
-            with Path(path).open("rb") as f:
-                data = f.read(scorer_file.MAX_BYTES + 1)
-        except OSError as e:
-            raise ScorerFileError(f"{path}: {e.strerror}") from None
-        return cls.from_bytes(data, strict=strict, name=str(path))
+            try:
+                with Path(path).open("rb") as f:
+                    data = f.read(scorer_file.MAX_BYTES + 1)
+            except OSError as e:
+                raise ScorerFileError(f"{path}: {e.strerror}") from None
+            if sha256 is not None and hashlib.sha256(data).hexdigest() != sha256.lower():
+                raise ScorerFileError(f"{path}: has another SHA-256 than the one asked for")
+            return cls.from_bytes(data, strict=strict, name=str(path))
+        except ScorerFileError as e:
+            if not guard:
+                raise
+            return cls({}, strict, refused=str(e))
 
     @classmethod
     def from_bytes(cls, data: bytes, *, strict: bool = False, name: str = "scorer") -> Scorer:
@@ -144,22 +153,25 @@ class Scorer:
         cost: Any,
         remaining: Any,
         tree: Any = None,
+        deadline: float | None = None,
     ) -> Scores:
         """Score every leaf of one tree, or of many with `tree`.
 
         Leaf i counts gain_i X_i + offset_i under root action action_i, X_i ~ N(mean_i, var_i); one
         rollout adds noise of variance noise_var_i and costs cost_i. All arrays have length n; action
-        holds whole numbers from 0 to n - 1. remaining : rollouts left, a whole number. tree : (n,), rows
-        of one tree side by side; remaining may then differ by tree and has length n or 1.
-        Raises InputError for wrong shapes or types; for invalid values too if `strict`.
+        holds whole numbers from 0 to n - 1. remaining : rollouts left. tree : (n,), the rows of a tree
+        side by side; remaining may then be an array of length n, and each tree is scored as if alone.
+        deadline : a time of time.perf_counter(); once it has passed, the closed form answers.
+        Raises InputError for arrays that form no leaf table (shapes, kinds of numbers); for invalid
+        values only if `strict`, else they are flagged and the closed form scores the other rows.
         """
         columns = (mean, var, noise_var, gain, offset, cost)
         if tree is not None:
-            return self._score_many(columns, action, remaining, tree)
-        buffers, clean = self._run(columns, action, remaining)
-        out = buffers.outputs
+            return self._score_many(columns, action, remaining, tree, deadline)
+        buffers, clean = self._run(columns, action, remaining, deadline)
         if not clean:
             return self._mend(buffers)
+        out = buffers.out
         return Scores(
             out["voc"].copy(),
             out["batch"].copy(),
@@ -179,107 +191,101 @@ class Scorer:
         action: Any,
         cost: Any,
         remaining: Any,
+        deadline: float | None = None,
     ) -> int:
         """Position of the leaf with the largest voc - cost, the first on ties; arguments as for `score`."""
-        buffers, clean = self._run((mean, var, noise_var, gain, offset, cost), action, remaining)
-        return int(buffers.outputs["pick"]) if clean else int(self._mend(buffers).pick)
+        buffers, clean = self._run((mean, var, noise_var, gain, offset, cost), action, remaining, deadline)
+        return int(buffers.pick) if clean else int(self._mend(buffers).pick)
 
     # --- one call ---------------------------------------------------------------------------------
 
-    def _run(self, columns: tuple[Any, ...], action: Any, remaining: Any) -> tuple[_Buffers, bool]:
+    def _run(
+        self, columns: tuple[Any, ...], action: Any, remaining: Any, deadline: float | None
+    ) -> tuple[LeafBuffers, bool]:
         """Fill the buffers and run; False where the answer needs mending."""
         try:
-            n = len(columns[0])
-        except TypeError:
-            raise InputError("mean", "must be an array over leaves", columns[0]) from None
-        kept = self._local.kept
-        buffers = kept.get(n)
-        if buffers is None:
-            if n == 0:
-                raise InputError("mean", "must have at least one leaf")
-            buffers = self._new_buffers(n)
-            kept[n] = buffers
-            if len(kept) > _KEPT_SIZES:
-                kept.popitem(last=False)
-        inputs = buffers.inputs
-        for name, column in zip(_FLOATS, columns, strict=True):
-            _fill(inputs[name], name, column)
-        _fill(inputs["action"], "action", action)
-        _fill(inputs["remaining"], "remaining", remaining)
+            buffers = self._local.kept[len(columns[0])]
+            buffers.fill(columns, action, remaining)
+        except (AttributeError, KeyError, OverflowError, TypeError, ValueError):
+            buffers = self._fill_with_care(columns, action, remaining)
         self.counters.decisions += 1
-        if self._session is None:
-            return buffers, False
-        try:
-            self._session.run_with_iobinding(buffers.binding, None)
-        except Exception as e:  # onnxruntime raises its own types, e.g. for an action out of bounds
-            _check_values(inputs, self.strict)
-            if self.strict:
-                raise ScorerFileError(f"the file failed: {_first_line(e)}") from None
-            buffers.outputs["in_range"][:] = False
-            return buffers, False
-        return buffers, b"\0" not in buffers.outputs["in_range"].tobytes()
+        if deadline is not None and time.perf_counter() >= deadline:
+            self.counters.late += 1
+        elif self._session is not None and buffers.finite():
+            try:
+                self._session.run_with_iobinding(buffers.binding)
+                return buffers, b"\0" not in buffers.in_range.tobytes()
+            except Exception as e:  # onnxruntime raises its own types, e.g. for an action out of bounds
+                buffers.usable(self.strict)
+                if self.strict:
+                    raise ScorerFileError(f"the file failed: {_first_line(e)}") from None
+        buffers.in_range[:] = False
+        return buffers, False
 
-    def _new_buffers(self, n: int) -> _Buffers:
-        inputs: dict[str, NDArray[Any]] = {name: np.zeros(n) for name in _FLOATS}
-        inputs["action"] = np.zeros(n, dtype=np.int64)
-        inputs["remaining"] = np.zeros(())
-        outputs: dict[str, NDArray[Any]] = {
-            name: np.zeros(() if name in ("pick", "worth_it") else n, dtype=dtype)
-            for name, dtype in _OUTPUTS.items()
-        }
-        binding = None
-        if self._session is not None:
-            binding = ort.capi._pybind_state.SessionIOBinding(self._session)
-            cpu = ort.capi._pybind_state.OrtDevice(0, 0, 0)
-            for name, array in inputs.items():
-                binding.bind_input(name, cpu, array.dtype.type, list(array.shape), array.ctypes.data)
-            for name, array in outputs.items():
-                binding.bind_output(name, cpu, array.dtype.type, list(array.shape), array.ctypes.data)
-        return _Buffers(inputs, outputs, binding)
+    def _fill_with_care(self, columns: tuple[Any, ...], action: Any, remaining: Any) -> LeafBuffers:
+        """The way in for a first call and for anything but plain arrays; InputError names what is wrong."""
+        first = number_array(FLOATS[0], columns[0], "f")
+        if first.ndim != 1 or not 1 <= len(first) <= MAX_LEAVES:
+            raise InputError("mean", f"must have shape (n,), n from 1 to {MAX_LEAVES}", first.shape)
+        n = len(first)
+        arrays = {name: number_array(name, x, "f") for name, x in zip(FLOATS, columns, strict=True)}
+        arrays["action"] = number_array("action", action, "i")
+        for name, x in arrays.items():
+            if x.shape != (n,):
+                raise InputError(name, f"must have shape ({n},), as 'mean'", x.shape)
+        left = number_array("remaining", remaining, "f")
+        if left.size != 1:
+            raise InputError("remaining", "must be one number", left.shape)
+        kept = self._local.kept
+        if n not in kept:
+            if len(kept) >= _KEPT_SIZES:
+                del kept[next(iter(kept))]
+            kept[n] = LeafBuffers(n, self._session)
+        kept[n].fill_with_care(arrays, left.item())
+        return kept[n]
 
-    def _mend(self, buffers: _Buffers) -> Scores:
+    def _mend(self, buffers: LeafBuffers) -> Scores:
         """The closed form where the file has no answer; counted."""
-        inputs, out = buffers.inputs, buffers.outputs
-        usable = _check_values(inputs, self.strict)
-        in_range = out["in_range"] & usable if self._session is not None else np.zeros_like(usable)
+        usable = buffers.usable(self.strict)
+        in_range = buffers.in_range & usable
         if not usable.all():
-            self.counters.refused += 1
-            in_range[:] = False  # one bad leaf spoils its neighbours' features
+            self.counters.invalid += 1
+            in_range[:] = False  # one bad leaf spoils the features of the others
         elif in_range.any():
             self.counters.out_of_range += 1
         if not in_range.any():
             self.counters.fallback += 1
-        voc, batch = np.zeros(len(usable)), np.zeros(len(usable), dtype=np.int64)
+        n = len(usable)
+        voc, batch = np.zeros(n), np.zeros(n, dtype=np.int64)
         if usable.any():
-            rows = {name: inputs[name][usable] for name in _FLOATS if name != "cost"}
-            voc[usable], batch[usable] = static_rates(**rows, remaining=float(inputs["remaining"]))
-        voc = np.where(in_range, out["voc"], voc)
-        batch = np.where(in_range, out["batch"], batch)
-        net = np.where(usable, voc - inputs["cost"], -np.inf)
+            rows = {name: buffers.columns[name][usable] for name in BELIEFS}
+            voc[usable], batch[usable] = static_rates(**rows, remaining=float(buffers.remaining))
+        voc[in_range] = buffers.out["voc"][in_range]
+        batch[in_range] = buffers.out["batch"][in_range]
+        net = np.where(usable, voc - buffers.columns["cost"], -np.inf)
         pick = int(np.argmax(net))
         return Scores(voc, batch, in_range, pick, bool(net[pick] > 0))
 
-    def _score_many(self, columns: tuple[Any, ...], action: Any, remaining: Any, tree: Any) -> Scores:
-        arrays = [np.asarray(c) for c in (*columns, action)]
-        tree = np.asarray(tree)
-        n = len(arrays[0]) if arrays[0].ndim else 0
-        for name, array in zip((*_FLOATS, "action", "tree"), (*arrays, tree), strict=True):
-            if array.shape != (n,):
-                raise InputError(name, f"must have shape ({n},), as 'mean'", array.shape)
-        remaining = np.asarray(remaining)
-        if remaining.size == 1:
-            remaining = np.full(n, remaining.item())
-        if remaining.shape != (n,):
-            raise InputError("remaining", f"must be one number or have shape ({n},)", remaining.shape)
-        starts = np.flatnonzero(np.r_[True, tree[1:] != tree[:-1]]) if n else np.empty(0, dtype=int)
-        if len(np.unique(tree)) != len(starts):
+    def _score_many(
+        self, columns: Sequence[Any], action: Any, remaining: Any, tree: Any, deadline: float | None
+    ) -> Scores:
+        names = (*FLOATS, "action", "tree")
+        kinds = "ffffffii"
+        arrays = [number_array(*x) for x in zip(names, (*columns, action, tree), kinds, strict=True)]
+        n = arrays[0].size
+        left = number_array("remaining", remaining, "f")
+        left = np.full(n, left.item()) if left.size == 1 else left
+        for name, x in zip((*names, "remaining"), (*arrays, left), strict=True):
+            if x.shape != (n,) or n == 0:
+                raise InputError(name, f"must have shape ({n},), at least one leaf", x.shape)
+        labels = arrays[-1]
+        starts = np.flatnonzero(np.r_[True, labels[1:] != labels[:-1]]).tolist()
+        if len(np.unique(labels)) != len(starts):
             raise InputError("tree", "rows of one tree must be side by side")
         parts = []
         for a, b in zip(starts, [*starts[1:], n], strict=True):
-            part = dict(zip((*_FLOATS, "action"), (array[a:b] for array in arrays), strict=True))
-            parts.append(self.score(**part, remaining=remaining[a]))
-        if not parts:
-            raise InputError("mean", "must have at least one leaf")
+            part = {name: x[a:b] for name, x in zip(names[:-1], arrays, strict=False)}
+            parts.append(self.score(**part, remaining=float(left[a]), deadline=deadline))
         return Scores(
             np.concatenate([p.voc for p in parts]),
             np.concatenate([p.batch for p in parts]),
@@ -290,78 +296,23 @@ class Scorer:
 
     def _self_test(self) -> None:
         """Hold the file against the answers stored in it."""
+        compared = 0
         for i, case in enumerate(self.facts["self_test"]):
             try:
-                expected = case["outputs"]
-                got = self.score(
-                    **{k: np.asarray(v) for k, v in case["inputs"].items() if k != "remaining"},
-                    remaining=case["inputs"]["remaining"],
-                )
-                want = np.asarray(expected["voc"], dtype=float)
-            except (KeyError, TypeError, ValueError, IndexError, InputError) as e:
+                inputs: dict[str, Any] = {name: np.asarray(case["inputs"][name]) for name in INPUTS}
+                got = self.score(**inputs)
+                want = np.asarray(case["outputs"]["voc"], dtype=float)
+                inside = np.asarray(case["outputs"]["in_range"], dtype=bool) & got.in_range
+                off = np.abs(got.voc - want)[inside]
+            except (AttributeError, IndexError, KeyError, TypeError, ValueError, DistillError) as e:
                 raise ScorerFileError(f"self-test case {i} cannot be run: {_first_line(e)}") from None
-            if want.shape != got.voc.shape:
-                raise ScorerFileError(f"self-test case {i} has {want.size} answers for {got.voc.size} leaves")
-            stored_range = np.asarray(expected["in_range"], dtype=bool)
-            compared = stored_range & got.in_range
-            off = np.abs(got.voc - want)[compared]
-            # A leaf next to a split of a tree ensemble may fall on its other side on another processor.
-            if np.sum(~(off <= _SELF_TEST_SLACK * np.max(want, initial=0.0))) > 0.1 * len(want):
-                raise ScorerFileError(f"self-test case {i}: voc differs by up to {np.max(off):.3g}")
+            missed = np.sum(~(off <= _SELF_TEST_SLACK * np.max(want, initial=0.0)))
+            if missed > _SELF_TEST_SHARE * len(off):
+                raise ScorerFileError(f"self-test case {i} gives other values than those stored")
+            compared += len(off)
+        if compared == 0:
+            raise ScorerFileError("self-test: no stored leaf is in the file's own range")
         self.counters = Counters()
-
-
-def _fill(buffer: NDArray[Any], name: str, value: Any) -> None:
-    """Copy into a buffer: same length, and no kind of number that would lose by it."""
-    if not isinstance(value, np.ndarray):
-        value = _as_array(name, value)
-    if value.shape != buffer.shape:
-        if name == "remaining" and value.size == 1:
-            value = value.reshape(())
-        else:
-            raise InputError(name, f"must have shape {buffer.shape}", value.shape)
-    try:
-        np.copyto(buffer, value, casting="same_kind")
-    except TypeError:
-        kind = "whole numbers" if buffer.dtype.kind == "i" else "real numbers"
-        raise InputError(name, f"must hold {kind}", str(value.dtype)) from None
-
-
-def _as_array(name: str, value: Any) -> NDArray[Any]:
-    try:
-        array = np.asarray(value)
-    except (ValueError, TypeError, OverflowError):
-        raise InputError(name, "must be an array of numbers", value) from None
-    if array.dtype.kind not in "iuf":
-        raise InputError(name, "must hold numbers", str(array.dtype))
-    return array
-
-
-def _check_values(inputs: dict[str, NDArray[Any]], strict: bool) -> NDArray[np.bool_]:
-    """Rows whose values a leaf table may hold; with `strict` the first other one is an error."""
-    n = len(inputs["mean"])
-    rules = {
-        "mean": (np.isfinite(inputs["mean"]), "must be finite"),
-        "var": ((inputs["var"] >= 0) & np.isfinite(inputs["var"]), "must be finite and >= 0"),
-        "noise_var": ((inputs["noise_var"] > 0) & np.isfinite(inputs["noise_var"]), "must be finite and > 0"),
-        "gain": (np.isfinite(inputs["gain"]), "must be finite"),
-        "offset": (np.isfinite(inputs["offset"]), "must be finite"),
-        "action": ((inputs["action"] >= 0) & (inputs["action"] < n), f"must be from 0 to {n - 1}"),
-        "cost": (np.isfinite(inputs["cost"]), "must be finite"),
-    }
-    left = inputs["remaining"]
-    whole = bool(0 <= left <= _MAX_ROLLOUTS)
-    if strict:
-        for name, (ok, rule) in rules.items():
-            if not ok.all():
-                row = int(np.argmin(ok))
-                raise InputError(f"{name}[{row}]", rule, inputs[name][row].item())
-        if not whole:
-            raise InputError("remaining", "must be from 0 to 2^53", left.item())
-    usable = np.full(n, whole)
-    for ok, _ in rules.values():
-        usable &= ok
-    return usable
 
 
 def _session(data: bytes) -> Any:
@@ -370,7 +321,7 @@ def _session(data: bytes) -> Any:
     options.enable_mem_reuse = False  # a tenth faster
     options.log_severity_level = 4
     try:
-        return ort.InferenceSession(data, options, providers=["CPUExecutionProvider"])._sess
+        return ort.InferenceSession(data, options, providers=["CPUExecutionProvider"])
     except Exception as e:  # onnxruntime raises its own types
         raise ScorerFileError(f"onnxruntime refuses it: {_first_line(e)}") from None
 

@@ -1,0 +1,111 @@
+"""A leaf table laid out for onnxruntime: arrays that it reads and writes in place; floor 3, light."""
+
+from __future__ import annotations
+
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from distill.errors import InputError
+
+__all__ = ["BELIEFS", "FLOATS", "INPUTS", "MAX_LEAVES", "LeafBuffers", "number_array"]
+
+FLOATS: Final = ("mean", "var", "noise_var", "gain", "offset", "cost")
+BELIEFS: Final = FLOATS[:5]
+INPUTS: Final = (*FLOATS, "action", "remaining")
+MAX_LEAVES: Final = 2**20
+MAX_ROLLOUTS: Final = 2**53
+_OUTPUTS: Final = {
+    "voc": np.float64,
+    "batch": np.int64,
+    "in_range": np.bool_,
+    "pick": np.int64,
+    "worth_it": np.bool_,
+}
+_SCALARS: Final = ("pick", "worth_it")
+
+
+class LeafBuffers:
+    """Inputs and outputs of a scorer for n leaves, bound to its session once; for one thread.
+
+    `columns` are views into `floats`, so that one copy and one check serve all six.
+    """
+
+    def __init__(self, n: int, session: Any) -> None:
+        self.shape = (n,)
+        self.floats = np.zeros(len(FLOATS) * n)
+        self._is_finite = np.zeros(len(FLOATS) * n, dtype=bool)
+        self.action = np.zeros(n, dtype=np.int64)
+        self.remaining = np.zeros(())
+        self.columns = dict(zip(FLOATS, self.floats.reshape(len(FLOATS), n), strict=True))
+        self.out: dict[str, NDArray[Any]] = {
+            name: np.zeros(() if name in _SCALARS else n, dtype=kind) for name, kind in _OUTPUTS.items()
+        }
+        self.pick, self.in_range = self.out["pick"], self.out["in_range"]
+        self.binding: Any = None
+        if session is not None:
+            self.binding = session.io_binding()
+            for name, x in {**self.columns, "action": self.action, "remaining": self.remaining}.items():
+                self.binding.bind_input(name, "cpu", 0, x.dtype.type, list(x.shape), x.ctypes.data)
+            for name, x in self.out.items():
+                self.binding.bind_output(name, "cpu", 0, x.dtype.type, list(x.shape), x.ctypes.data)
+
+    def fill(self, columns: tuple[Any, ...], action: Any, remaining: Any) -> None:
+        """Copy plain arrays in; ValueError, TypeError or AttributeError where something else came."""
+        shape = self.shape
+        for column in columns:
+            if column.shape != shape:
+                raise ValueError
+        if action.shape != shape or type(remaining) not in (int, float):
+            raise ValueError
+        np.concatenate(columns, out=self.floats, casting="same_kind")
+        np.copyto(self.action, action, casting="same_kind")
+        self.remaining[()] = remaining
+
+    def fill_with_care(self, arrays: dict[str, NDArray[Any]], remaining: float) -> None:
+        """Copy arrays in that are known to be numbers of the right shapes."""
+        with np.errstate(over="ignore"):
+            for name in FLOATS:
+                np.copyto(self.columns[name], arrays[name], casting="same_kind")
+        np.copyto(self.action, arrays["action"], casting="same_kind")
+        self.remaining[()] = remaining
+
+    def finite(self) -> bool:
+        """Whether every number is finite."""
+        np.isfinite(self.floats, out=self._is_finite)
+        # Searching the bytes takes a quarter of the time of `all`.
+        return b"\0" not in self._is_finite.tobytes() and bool(0 <= self.remaining <= MAX_ROLLOUTS)
+
+    def usable(self, strict: bool) -> NDArray[np.bool_]:
+        """Rows whose values a leaf table may hold; with `strict` the first other one is an error."""
+        n = len(self.action)
+        columns = self.columns
+        finite = {name: np.isfinite(x) for name, x in columns.items()}
+        rules = {name: (finite[name], "must be finite") for name in ("mean", "gain", "offset", "cost")}
+        rules["var"] = (finite["var"] & (columns["var"] >= 0), "must be finite and >= 0")
+        rules["noise_var"] = (finite["noise_var"] & (columns["noise_var"] > 0), "must be finite and > 0")
+        rules["action"] = ((self.action >= 0) & (self.action < n), f"must be from 0 to {n - 1}")
+        left = bool(0 <= self.remaining <= MAX_ROLLOUTS)
+        usable = np.full(n, left)
+        for name, (ok, rule) in rules.items():
+            if strict and not ok.all():
+                row = int(np.argmin(ok))
+                value = self.action[row] if name == "action" else columns[name][row]
+                raise InputError(f"{name}[{row}]", rule, value.item())
+            usable &= ok
+        if strict and not left:
+            raise InputError("remaining", "must be from 0 to 2^53", self.remaining.item())
+        return usable
+
+
+def number_array(name: str, value: Any, kind: str) -> NDArray[Any]:
+    """`value` as an array of numbers; whole ones where kind is "i"."""
+    try:
+        array = np.asarray(value)
+    except (ValueError, TypeError, OverflowError):
+        raise InputError(name, "must be an array of numbers") from None
+    if array.dtype.kind not in ("iu" if kind == "i" else "iuf"):
+        what = "whole numbers" if kind == "i" else "numbers"
+        raise InputError(name, f"must hold {what}", str(array.dtype))
+    return array

@@ -9,6 +9,8 @@ def main() -> int:
     """Run the command line; on a light installation say in one line what is missing."""
     try:
         from distill.cli import run
+
+        return run(sys.argv[1:])
     except ModuleNotFoundError as e:
         if (e.name or "").partition(".")[0] == "distill":
             raise
@@ -18,7 +20,6 @@ def main() -> int:
             file=sys.stderr,
         )
         return 2
-    return run(sys.argv[1:])
 
 
 if __name__ == "__main__":

@@ -12,7 +12,6 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit
 
 from distill.exact.distributions import (
     REACH,
@@ -26,7 +25,7 @@ from distill.exact.distributions import (
     shifted,
 )
 from distill.exact.panels import lay_out, merged, resolved
-from distill.numerics import gauss_legendre
+from distill.numerics import compiled, gauss_legendre
 from distill.tree import Floats
 
 __all__ = ["convolved", "convolved_with_normal"]
@@ -91,7 +90,7 @@ def _normal_sum_panels(x: Distribution, sd: float) -> Floats:
     return np.column_stack((a[:, 0] - REACH * sd, a[:, 1] + REACH * sd, width))
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _density_at(x: Distribution, at: float) -> float:
     P = len(x.edges) - 1
     if not (x.edges[0] <= at <= x.edges[P]) or P == 0:
@@ -101,7 +100,7 @@ def _density_at(x: Distribution, at: float) -> float:
     return max(chebyshev(x.density, p, N - 1, t), 0.0)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _sum_density(x: Distribution, y: Distribution, at: Floats) -> Floats:
     """Density of X + Y at ascending points."""
     P, Q = len(x.edges) - 1, len(y.edges) - 1
@@ -150,7 +149,7 @@ def _sum_density(x: Distribution, y: Distribution, at: Floats) -> Floats:
     return out
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _product_integral(
     x: Distribution, p: int, y: Distribution, s: int, z: float, u: float, v: float
 ) -> float:
@@ -167,7 +166,7 @@ def _product_integral(
     return half * total
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _normal_sum_density(x: Distribution, sd: float, at: Floats) -> Floats:
     """Density of X + sd Z at each point."""
     room = node_room(x, REACH)

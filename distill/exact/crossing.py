@@ -17,10 +17,9 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numba import njit
 
 from distill.exact.distributions import COEFFICIENTS, REACH, Distribution, N, near_nodes, node_room
-from distill.numerics import gain, gauss_legendre, norm_cdf
+from distill.numerics import compiled, gain, gauss_legendre, norm_cdf
 from distill.tree import Floats
 
 __all__ = ["threshold_voc"]
@@ -33,7 +32,7 @@ _ROOM = 5.0  # widest panel, in standard deviations of what is smooth: 16 nodes 
 _INV_SQRT_2PI = 0.3989422804014327
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _slope(T: Distribution, y: float, tau: float, t: Floats, m: Floats) -> float:
     """F_tau(y)."""
     for up in (REACH, _UP):  # the far side matters only where nothing is near
@@ -49,7 +48,7 @@ def _slope(T: Distribution, y: float, tau: float, t: Floats, m: Floats) -> float
     return total
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _excess(T: Distribution, y: float, tau: float, t: Floats, m: Floats) -> tuple[float, float]:
     """e(y) and its slope."""
     value = 0.0
@@ -75,7 +74,7 @@ def _excess(T: Distribution, y: float, tau: float, t: Floats, m: Floats) -> tupl
     return value, slope
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _crossing(T: Distribution, tau: float, target: float, start: float, t: Floats, m: Floats) -> float:
     """y with e(y) = target > 0: Newton's method, on log e where it is far off; e convex, increasing."""
     low, high = -math.inf, math.inf
@@ -110,7 +109,7 @@ def _crossing(T: Distribution, tau: float, target: float, start: float, t: Float
     return y
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _room_to(T: Distribution, a: float, tau: float, up: bool) -> float:
     """How far from a, up or down, F_tau is smooth enough for one panel.
 
@@ -139,7 +138,7 @@ def _room_to(T: Distribution, a: float, tau: float, up: bool) -> float:
     return w
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _beyond(
     T: Distribution, y0: float, mu: float, s: float, tau: float, up: bool, t: Floats, m: Floats
 ) -> tuple[float, float]:
@@ -181,7 +180,7 @@ def _beyond(
     return total, error
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _unresolved(values: Floats) -> float:
     """What Gauss-Legendre leaves out of an integrand, from how its Chebyshev coefficients fall.
 
@@ -199,7 +198,7 @@ def _unresolved(values: Floats) -> float:
     return 8.0 * tail * min(tail / largest, 1.0) if largest > 0.0 else 0.0
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _gain_of_variance(
     T: Distribution, mu: float, sd_now: float, sd_after: float, t: Floats, m: Floats
 ) -> tuple[float, float]:
@@ -236,7 +235,7 @@ def _gain_of_variance(
     return total * _INV_SQRT_2PI, error * _INV_SQRT_2PI
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def threshold_voc(
     T: Distribution,
     mu: float,

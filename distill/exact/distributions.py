@@ -20,9 +20,8 @@ import math
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 
-from distill.numerics import gauss_legendre
+from distill.numerics import compiled, gauss_legendre
 from distill.tree import Floats
 
 __all__ = [
@@ -76,7 +75,7 @@ def nodes_of(edges: Floats) -> Floats:
     return ((edges[:-1] + half)[:, None] + half[:, None] * _T).ravel()
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def fit(
     edges: Floats,
     hard: np.ndarray,
@@ -138,7 +137,7 @@ def fit(
     )  # fmt: skip
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _antiderivative(density: Floats, half: float, start: float, out: Floats) -> None:
     """Chebyshev coefficients of F: T_k integrates to T_(k+1) / (2 (k+1)) - T_(k-1) / (2 (k-1))."""
     out[:] = 0.0
@@ -179,7 +178,7 @@ def reflected(x: Distribution) -> Distribution:
     return mirrored._replace(mean=-x.mean, error=x.error)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def chebyshev(c: Floats, p: int, top: int, t: float) -> float:
     """sum over k <= top of c[p, k] T_k(t), by Clenshaw's recurrence."""
     t2 = 2.0 * t
@@ -190,7 +189,7 @@ def chebyshev(c: Floats, p: int, top: int, t: float) -> float:
     return c[p, 0] + t * b1 - b2
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def evaluate(x: Distribution, at: Floats) -> tuple[Floats, Floats]:
     """Distribution function (atoms included) and density at ascending points, each of the shape of `at`."""
     F = np.empty(len(at))
@@ -213,7 +212,7 @@ def evaluate(x: Distribution, at: Floats) -> tuple[Floats, Floats]:
     return F, f
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def near_nodes(
     x: Distribution, y: float, sd: float, up: float, d: Floats, m: Floats
 ) -> tuple[int, float, float]:
@@ -269,7 +268,7 @@ def near_nodes(
     return n, mass, moment
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def node_room(x: Distribution, up: float) -> int:
     """How many nodes `near_nodes` may write."""
     P = len(x.edges) - 1

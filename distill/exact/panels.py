@@ -5,10 +5,9 @@ from __future__ import annotations
 from collections.abc import Callable
 
 import numpy as np
-from numba import njit
 
-from distill.exact.distributions import COEFFICIENTS, Distribution, N, chebyshev, fit, nodes_of
-from distill.numerics import gauss_legendre
+from distill.exact.distributions import COEFFICIENTS, Distribution, N, chebyshev, evaluate, fit, nodes_of
+from distill.numerics import compiled, gauss_legendre
 from distill.tree import Floats
 
 __all__ = ["collapsed", "lay_out", "merged", "resolved"]
@@ -21,7 +20,7 @@ _EPS = 2.0**-52
 _T, _W = gauss_legendre(N)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _greedy_edges(low: float, high: float, breaks: Floats, panels: Floats) -> Floats:
     """Panel edges from low to high, as wide as allowed, never across a break.
 
@@ -79,7 +78,7 @@ def resolved(
     return edges, hard, values
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _unresolved(edges: Floats, values: Floats, tolerance: float) -> np.ndarray:
     """Panels whose last coefficients say that 16 nodes are too few, shape (P,)."""
     P = len(edges) - 1
@@ -104,7 +103,7 @@ def _unresolved(edges: Floats, values: Floats, tolerance: float) -> np.ndarray:
     return out
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def collapsed(x: Distribution) -> Distribution:
     """X with what is narrower than 1e-11 of its span turned into atoms, `error` grown by how far that moves.
 
@@ -172,7 +171,7 @@ def collapsed(x: Distribution) -> Distribution:
     )  # fmt: skip
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def trimmed(x: Distribution) -> Distribution:
     """X without the panels at either end that carry nothing."""
     P = len(x.edges) - 1
@@ -202,7 +201,7 @@ def merged(x: Distribution) -> Distribution:
     return _merged(x, TOLERANCE)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _merged(x: Distribution, tolerance: float) -> Distribution:
     """From the left, each panel is the widest tried whose last coefficients are negligible and whose nodes
     find the mass that the finer panels have there, so that no narrow peak slips between nodes.
@@ -249,31 +248,33 @@ def _merged(x: Distribution, tolerance: float) -> Distribution:
                 q += 1
             out[r * N + i] = _on_panel(x, q, at)
     new = fit(new_edges, np.array(flags), out, x.atom_at, x.atom_mass, x.spread, x.error)
-    # Mass that has changed sides of an edge moves the distribution function between edges.
-    moved = 0.0
-    q = 0
-    for r in range(len(edges) - 1):
-        end = new_edges[r + 1]
-        while q < P - 1 and x.edges[q + 1] < end:
-            q += 1
-        lag = min((end - x.edges[q]) / (x.edges[q + 1] - x.edges[q]) * 2.0 - 1.0, 1.0)
-        old = chebyshev(x.cumulative, q, N, lag)
-        now = chebyshev(new.cumulative, r, N, 1.0)
-        moved += abs(now - old) * (end - new_edges[r])
     return Distribution(
         new.edges, new.hard, new.density, new.cumulative, new.nodes, new.mass, new.panel_mass,
-        new.panel_moment, new.atom_at, new.atom_mass, new.mean, new.spread, new.error + 2.0 * moved,
+        new.panel_moment, new.atom_at, new.atom_mass, new.mean, new.spread, x.error + 2.0 * _distance(x, new),
     )  # fmt: skip
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
+def _distance(x: Distribution, y: Distribution) -> float:
+    """Wasserstein-1 distance of two distributions on the same range: the area between F_X and F_Y."""
+    F, _f = evaluate(x, y.nodes)
+    G, _g = evaluate(y, y.nodes)
+    area = 0.0
+    for p in range(len(y.edges) - 1):
+        half = 0.5 * (y.edges[p + 1] - y.edges[p])
+        for i in range(N):
+            area += _W[i] * half * abs(F[p * N + i] - G[p * N + i])
+    return area
+
+
+@compiled
 def _on_panel(x: Distribution, p: int, at: float) -> float:
     """Density at a point of panel p."""
     t = (at - x.edges[p]) / (x.edges[p + 1] - x.edges[p]) * 2.0 - 1.0
     return max(chebyshev(x.density, p, N - 1, t), 0.0)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _one_panel_holds(x: Distribution, p: int, a: float, b: float, values: Floats, tolerance: float) -> bool:
     """Whether one panel from a (in panel p of X) to b carries the density."""
     half = 0.5 * (b - a)

@@ -17,13 +17,12 @@ import math
 from collections.abc import Sequence
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from distill.exact.convolution import convolved, convolved_with_normal
 from distill.exact.distributions import REACH, Distribution, N, chebyshev, fit, reflected, shifted
 from distill.exact.panels import merged, resolved
-from distill.numerics import gauss_legendre
+from distill.numerics import compiled, gauss_legendre
 from distill.tree import Floats
 
 __all__ = ["remainders", "total"]
@@ -198,7 +197,7 @@ class _Walk:
         return self.phi[:count]
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _finer(x: Distribution, width: float) -> tuple[Floats, Floats]:
     """Quadrature of X's density on panels no wider than `width`."""
     P = len(x.edges) - 1
@@ -225,7 +224,7 @@ def _finer(x: Distribution, width: float) -> tuple[Floats, Floats]:
     return nodes, mass
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _turn(re: Floats, im: Floats, turn_re: Floats, turn_im: Floats, out: Complex) -> None:
     n = len(re)
     for m in range(len(out)):
@@ -250,7 +249,7 @@ def _turn(re: Floats, im: Floats, turn_re: Floats, turn_im: Floats, out: Complex
         out[m] = complex(a0 + a1, b0 + b1)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _inverse(phi: Complex, step: float, at: Floats) -> Floats:
     """Density at points relative to the mean, from phi at step, 2 step, ..."""
     n = len(at)

@@ -19,13 +19,12 @@ import math
 from dataclasses import dataclass, field
 
 import numpy as np
-from numba import njit
 
 from distill.exact.distributions import REACH, WIDTH, Distribution, N, evaluate, fit, shifted
 from distill.exact.max_sum import Max, Normal, Sum
 from distill.exact.panels import lay_out, merged, resolved
 from distill.exact.sums import remainders, total
-from distill.numerics import norm_cdf
+from distill.numerics import compiled, norm_cdf
 from distill.tree import Floats
 
 __all__ = ["Threshold", "thresholds"]
@@ -253,7 +252,7 @@ def _largest_other(x: Floats) -> Floats:
     return out
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _normals(rows: np.ndarray, mu: Floats, sd: Floats, at: Floats, F: Floats, f: Floats) -> None:
     for i in range(len(rows)):
         c = rows[i]
@@ -264,7 +263,7 @@ def _normals(rows: np.ndarray, mu: Floats, sd: Floats, at: Floats, F: Floats, f:
                 f[c, j] = 0.3989422804014327 * math.exp(-0.5 * z * z) / sd[i]
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _all_of(F: Floats, f: Floats) -> Floats:
     """Density of the maximum, shape (1, len)."""
     out = np.empty((1, F.shape[1]))
@@ -278,7 +277,7 @@ def _all_of(F: Floats, f: Floats) -> Floats:
     return out
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _leave_one_out(F: Floats, f: Floats) -> tuple[Floats, Floats]:
     """Distribution function and density of the maximum of all but one, for each; no division."""
     n, m = F.shape
@@ -302,7 +301,7 @@ def _leave_one_out(F: Floats, f: Floats) -> tuple[Floats, Floats]:
     return G, g
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _jump_of_all(F: Floats, jump: Floats) -> Floats:
     """Jump of the product of distribution functions, from each one's value and jump: no subtraction."""
     out = np.zeros(F.shape[1])

@@ -17,3 +17,5 @@ FEATURE_FIT = 0.06  # of the start value: the fit of f(-z) in the features, 5 % 
 ORACLE_GRID = (
     1e-7  # of scale: an oracle that tabulates distributions on a fixed grid, halving of which moves it less
 )
+CLOSED_FORM_RATE = 5e-3  # the runtime's fallback: best batch by a fit that costs 0.4 % of the rate at most
+LOSS_FIT = 2e-7  # f(-z) of that fallback: a rational fit within 1.2e-7

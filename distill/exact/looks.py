@@ -12,6 +12,8 @@ from distill.numerics import compiled, gain, norm_cdf, norm_pdf
 __all__ = ["Looks", "later_sd", "voc_at"]
 
 _EPS = 2.220446049250313e-16
+_QUADRATURE = 3e-14  # relative; covers what 16-node panels leave, as held against 80-bit arithmetic in tests
+_CUT_OFF = 1e-36  # of the tree's unit: what normal tails beyond 12.5 standard deviations may hold
 
 
 class Looks(NamedTuple):
@@ -73,15 +75,33 @@ def voc_at(looks: Looks, k: float) -> tuple[float, float, float, float]:
     if looks.rivals:
         one = worth(looks.rest, looks.nodes, looks.best, looks.mu, s, sigma, tau)
         voc = one.voc
-        error = one.beyond * looks.slack + 8.0 * _EPS * one.terms + 1e-13 * voc
+        if voc > 0.0:
+            error = one.beyond * looks.slack + 4.0 * _EPS * one.terms + _relative(voc, s) * voc + _CUT_OFF
+        elif (
+            looks.best and looks.rest.kappa <= 0.0
+        ):  # kept at 0 by a rest that beats the rival even without the leaf
+            error = max(0.0, looks.slack + looks.rest.kappa)
+        else:
+            error = _CUT_OFF
         climb = one.slope * growth
         y0 = one.y0
     if looks.h < math.inf and (looks.best or not looks.rivals):
         tau = later_sd(looks.gain, v, n, looks.h + k)
         root_now = math.sqrt(v + n / looks.h)
         root_then = math.sqrt(v + n / (looks.h + k))
-        steeper = n / looks.h * (k / (looks.h + k)) / (root_now + root_then) / (looks.gain * v)
+        steeper = 1e290  # of a spread now that underflows
+        if root_now < math.inf:
+            steeper = n / looks.h * (k / (looks.h + k)) / (root_now + root_then) / (looks.gain * v)
         more = rise(looks.rest, looks.nodes, looks.mu, looks.rho, tau, steeper)
         voc += more
-        error += 1e-13 * more
+        error += _relative(more, tau) * more + _CUT_OFF
     return voc, error, climb, y0
+
+
+@compiled
+def _relative(value: float, spread: float) -> float:
+    """Relative error of a tail integral: quadrature, and the rounding of spreads and distances.
+
+    A tail value f(-z) moves by about z^2 times the relative error of z, and z^2 < 2 log(spread / value).
+    """
+    return _QUADRATURE + 16.0 * _EPS * max(0.0, math.log(spread) - math.log(value)) if value > 0.0 else 0.0

@@ -7,6 +7,7 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
+from distill import schema
 from distill.errors import InputError
 
 __all__ = ["BELIEFS", "FLOATS", "INPUTS", "MAX_LEAVES", "LeafBuffers", "number_array"]
@@ -15,7 +16,6 @@ FLOATS: Final = ("mean", "var", "noise_var", "gain", "offset", "cost")
 BELIEFS: Final = FLOATS[:5]
 INPUTS: Final = (*FLOATS, "action", "remaining")
 MAX_LEAVES: Final = 2**20
-MAX_ROLLOUTS: Final = 2**53
 _OUTPUTS: Final = {
     "voc": np.float64,
     "batch": np.int64,
@@ -75,18 +75,23 @@ class LeafBuffers:
         """Whether every number is finite."""
         np.isfinite(self.floats, out=self._is_finite)
         # Searching the bytes takes a quarter of the time of `all`.
-        return b"\0" not in self._is_finite.tobytes() and bool(0 <= self.remaining <= MAX_ROLLOUTS)
+        return b"\0" not in self._is_finite.tobytes() and bool(0 <= self.remaining <= schema.MAX_ROLLOUTS)
 
     def usable(self, strict: bool) -> NDArray[np.bool_]:
         """Rows whose values a leaf table may hold; with `strict` the first other one is an error."""
         n = len(self.action)
         columns = self.columns
-        finite = {name: np.isfinite(x) for name, x in columns.items()}
-        rules = {name: (finite[name], "must be finite") for name in ("mean", "gain", "offset", "cost")}
-        rules["var"] = (finite["var"] & (columns["var"] >= 0), "must be finite and >= 0")
-        rules["noise_var"] = (finite["noise_var"] & (columns["noise_var"] > 0), "must be finite and > 0")
+        u, u2 = schema.MAX_UTILITY, schema.MAX_VARIANCE
+        rules = {
+            name: (np.abs(columns[name]) <= u, f"must be at most {u:g} in size")
+            for name in ("mean", "offset", "cost")
+        }
+        var, noise, gain = (columns[name] for name in ("var", "noise_var", "gain"))
+        rules["var"] = ((var >= 0) & (var <= u2), f"must be from 0 to {u2:g}")
+        rules["noise_var"] = ((noise > 0) & (noise <= u2), f"must be above 0 and at most {u2:g}")
+        rules["gain"] = ((gain >= 0) & (gain <= 1), "must be from 0 to 1")
         rules["action"] = ((self.action >= 0) & (self.action < n), f"must be from 0 to {n - 1}")
-        left = bool(0 <= self.remaining <= MAX_ROLLOUTS)
+        left = bool(0 <= self.remaining <= schema.MAX_ROLLOUTS)
         usable = np.full(n, left)
         for name, (ok, rule) in rules.items():
             if strict and not ok.all():

@@ -112,7 +112,7 @@ BAD_VALUES = {
     "mean": [np.nan, np.inf, -np.inf],
     "var": [np.nan, np.inf, -1.0, -1e-300],
     "noise_var": [np.nan, np.inf, 0.0, -2.0],
-    "gain": [np.nan, np.inf],
+    "gain": [np.nan, np.inf, 1e300, -1e300],
     "offset": [np.nan, -np.inf],
     "action": [-1, 20, 2**62, -(2**62)],
     "cost": [np.nan, np.inf],

@@ -11,10 +11,11 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from leaf_tables import NAMES, rows, table
-from scorers import KINDS, graph, scorer_bytes, training
+from scorers import KINDS, arguments, graph, scorer_bytes, training
 
 from distill.closed_form import static_rates
 from distill.errors import DistillError, InputError, ScorerFileError
+from distill.export import export_scorer
 from distill.runtime import Scorer
 
 SCORER = Scorer.from_bytes(scorer_bytes("dense"))
@@ -42,9 +43,11 @@ def test_pick_is_the_largest_net_value_and_the_first_on_ties():
     dear = {**t, "cost": np.full(20, 1e9)}
     assert not SCORER.score(**dear).worth_it
     np.testing.assert_array_equal(SCORER.score(**dear).voc, got.voc)  # gross of cost
-    twins = {k: np.repeat(v[:1], 6) if isinstance(v, np.ndarray) else v for k, v in t.items()}
-    twins["action"] = np.arange(6)
-    assert SCORER.pick(**twins) == 0
+    twins = {k: np.repeat(v, 2) if isinstance(v, np.ndarray) else v for k, v in t.items()}
+    for scorer in (SCORER, Scorer.closed_form()):
+        both = scorer.score(**twins)
+        np.testing.assert_array_equal(both.voc[::2], both.voc[1::2])
+        assert both.pick % 2 == 0
 
 
 def test_batch_is_between_one_and_what_remains():
@@ -165,19 +168,19 @@ def test_no_rollout_left_and_a_single_action_are_worth_nothing():
 
 
 def test_leaves_unlike_those_of_training_take_the_closed_form_one_by_one():
+    narrow = arguments("dense")
+    narrow["ranges"] = narrow["ranges"].copy()
+    narrow["ranges"][0, 1] = 2.0  # as if training had met thresholds up to 2 only
+    scorer = Scorer.from_bytes(export_scorer(**narrow))
     t = inside_table()
-    scorer = Scorer.from_bytes(scorer_bytes("dense"))
-    before = scorer.score(**t)
-    t["noise_var"] = t["noise_var"].copy()
-    t["var"] = t["var"].copy()
-    t["noise_var"][3] *= 1e12  # s_k / theta far below all of training
-    got = scorer.score(**t)
-    assert not got.in_range[3]
-    assert got.in_range.sum() == 19
-    np.testing.assert_array_equal(np.delete(got.voc, 3), np.delete(before.voc, 3))
-    assert got.voc[3] == closed_form(t)[0][3]
-    assert scorer.counters.out_of_range == 1
-    assert scorer.counters.fallback == 0
+    got, wide = scorer.score(**t), SCORER.score(**t)
+    near = graph().matrix(t).x[:, 0] <= 2.02
+    assert 0 < near.sum() < 20
+    np.testing.assert_array_equal(got.in_range, near)
+    np.testing.assert_array_equal(got.voc[near], wide.voc[near])
+    np.testing.assert_array_equal(got.voc[~near], closed_form(t)[0][~near])
+    assert got.pick == int(np.argmax(got.voc - t["cost"])) == scorer.pick(**t)
+    assert (scorer.counters.out_of_range, scorer.counters.fallback) == (2, 0)
 
 
 def test_after_the_deadline_the_closed_form_answers():

@@ -8,6 +8,7 @@ EXACT = 0.0  # enumeration in rational arithmetic, or the same graph run twice
 CLOSED_FORM = 1e-12  # float64 formula against enumeration or mpmath: a few hundred roundings
 QUADRATURE = 1e-9  # of scale: fast quadrature against the oracle's adaptive one, which is asked for 1e-11
 RELATIVE_TAIL = 1e-6  # relative, VOC down to 1e-30 of scale: what the labels promise
+CHANCE_LABEL = 1e-6  # of scale: what a label through chance nodes may be off by before it says so
 STANDARD_ERRORS = 4.0  # Monte Carlo at a fixed seed: a miss has odds of 6e-5 a check
 PUBLISHED = 0.5  # units of the last place printed: what a rounded table can hold
 ONNX_DOUBLE = 0.0  # a double graph with one thread repeats the estimator bit for bit

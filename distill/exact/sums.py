@@ -29,7 +29,7 @@ __all__ = ["remainders", "total"]
 
 Complex = NDArray[np.complex128]
 
-_FADED = 1e-13  # what is left out is below it, and so is what interpolation lets through
+FADED = 1e-13  # what is left out is below it, and so is what interpolation lets through
 _MAX_PHASE = 11.0  # half a panel times the frequency: 16 nodes integrate that to 1e-12
 _NEGLIGIBLE = 1e-11  # a part this narrow beside another only adds its mean, and its spread as an error
 _MAX_PIECES = 64  # that a panel may be cut into
@@ -143,7 +143,7 @@ class _Spectra:
                 spectra[r] = walk.until(count) if self.signs[r] > 0 else walk.until(count).conj()
             normal = np.exp(-0.5 * (self.step * self.sd * np.arange(1, count + 1)) ** 2)
             last = np.abs(spectra[:, -_BLOCK:])
-            if all((last[rows].prod(axis=0) * normal[-_BLOCK:]).max() < _FADED for rows in wanted):
+            if all((last[rows].prod(axis=0) * normal[-_BLOCK:]).max() < FADED for rows in wanted):
                 return [spectra[rows].prod(axis=0) * normal for rows in wanted]
         return None
 
@@ -156,7 +156,7 @@ class _Spectra:
         top = self.step * (live[-1] + 2 if len(live) else 1)
         n = min(max(math.ceil((high - low) * top / _PANEL_PHASE), 4), 256)
         edges = np.linspace(low, high, n + 1)
-        faded = np.flatnonzero(size > 1e-2 * _FADED)
+        faded = np.flatnonzero(size > 1e-2 * FADED)
         kept = product[: faded[-1] + 1 if len(faded) else 1]
         edges, hard, values = resolved(
             edges, np.zeros(n + 1, dtype=np.bool_), lambda at: _inverse(kept, self.step, at - mean)[None]
@@ -192,7 +192,7 @@ class _Walk:
                 self.start(*_finer(self.x, 2.0 * self.half))
             block = self.phi[self.count : count]
             _turn(self.re, self.im, self.turn_re, self.turn_im, block)
-            self.faded = bool(np.abs(block).max() < _FADED)
+            self.faded = bool(np.abs(block).max() < FADED)
         self.count = count
         return self.phi[:count]
 

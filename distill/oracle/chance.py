@@ -166,7 +166,7 @@ def action_values(tree: BeliefTree, mean: Floats, var: Floats, panels: int = 24)
 
 
 def voc(
-    tree: BeliefTree, leaf: int, batch: float, horizon: float, panels: int = 24, outcomes: int = 16
+    tree: BeliefTree, leaf: int, batch: float, horizon: float, panels: int = 24, outcomes: int = 2
 ) -> float:
     """VOC_h(leaf, batch) by definition: E_Z[max_a V_h(a | after)] - max_a V_h(a | now); u."""
     assert tree.mean is not None
@@ -198,12 +198,12 @@ def voc(
         moved[leaf] += s * z
         return float(action_values(tree, moved, spread, panels)[mine])
 
-    ends = [-_REACH, _REACH]
+    ends = [-_REACH, -5.0, -2.0, 0.0, 2.0, 5.0, _REACH]
     if touched(-_REACH) < rival < touched(_REACH):
-        ends.insert(1, brentq(lambda z: touched(z) - rival, -_REACH, _REACH, xtol=1e-13))
+        ends.append(brentq(lambda z: touched(z) - rival, -_REACH, _REACH, xtol=1e-13))
     u, w = _rule(outcomes)
     total = 0.0
-    for low, high in itertools.pairwise(ends):
+    for low, high in itertools.pairwise(sorted(ends)):
         z = low + (high - low) * u
         density = np.exp(-0.5 * z * z) / math.sqrt(2 * math.pi)
         # Measured from the best value now, so that nothing large is subtracted at the end.

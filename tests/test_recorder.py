@@ -18,12 +18,14 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from leaf_tables import table
 
 from distill import block_files, trace_line, traces
 from distill.errors import InputError
 from distill.family import draw, load_family
-from distill.record import to_record
+from distill.record import from_record, parse_record, to_record
 from distill.recorder import Recorder
 from distill.traces import read_trees
 from distill.tree import leaf_table
@@ -144,6 +146,47 @@ def test_a_sample_of_all_and_of_none(tmp_path):
 GOOD = small()
 
 
+NUMBERS = st.one_of(
+    st.floats(width=64),
+    st.sampled_from([0.0, -0.0, 1.0, 5e-324, 1e100, 1.1e100, 1e200, 1.1e200, -1.0, 2.0**53, 2.0**54]),
+)
+
+
+@settings(deadline=None, max_examples=300, derandomize=True)
+@given(st.data())
+def test_a_table_is_taken_exactly_when_its_record_is_valid(data):
+    """Against the record's own rules, on a record built the plain way."""
+    n = data.draw(st.integers(1, 4))
+    good = {"mean": 0.5, "var": 1.0, "noise_var": 2.0, "gain": 0.5, "offset": 0.25, "cost": 0.125}
+    columns = {name: np.full(n, value) for name, value in good.items()}
+    for name in data.draw(st.lists(st.sampled_from(list(good)), max_size=2)):
+        columns[name][data.draw(st.integers(0, n - 1))] = data.draw(NUMBERS)
+    actions = data.draw(st.lists(st.integers(0, n - 1), min_size=n, max_size=n))
+    remaining = data.draw(st.one_of(st.integers(-1, 2**53 + 1), NUMBERS))
+    present = sorted(set(actions))
+    inner = 1 + len(present)
+    plain = {
+        "format": "belief-tree/1",
+        "parent": [-1] + [0] * len(present) + [1 + present.index(a) for a in actions],
+        "kind": ["decision"] * inner + ["leaf"] * n,
+        "reward": [0] * inner + columns["offset"].tolist(),
+        "discount": [1] * inner + columns["gain"].tolist(),
+        "remaining": remaining,
+    }
+    for name in ("mean", "var", "noise_var", "cost"):
+        plain[name] = [None] * inner + columns[name].tolist()
+    try:
+        want = to_record(from_record(plain))
+    except InputError:
+        want = None
+    seen = trace_line.copy_table({**columns, "action": actions, "remaining": remaining}, None, (), {})
+    try:
+        got = to_record(parse_record(trace_line.trace_line(seen)))
+    except InputError:
+        got = None
+    assert got == want
+
+
 class Hostile:
     def __array__(self, *_, **__):
         raise RuntimeError("no array today")
@@ -158,11 +201,11 @@ INVALID = [
     ({"gain": [1.0, 0.0]}, r"gain[1]: must be above 0 and at most 1; got 0.0"),
     ({"gain": [1.5, 1.0]}, r"gain[0]: must be above 0 and at most 1; got 1.5"),
     ({"gain": [float("nan"), 1.0]}, "gain[0]: must be above 0"),
-    ({"mean": [float("nan"), 1.0]}, "must be finite"),
-    ({"var": [-1.0, 1.0]}, "must be >= 0"),
-    ({"noise_var": [0.0, 1.0]}, "must be > 0"),
-    ({"offset": [float("inf"), 0.0]}, "offset[0]: must be at most 1e+100"),
-    ({"cost": [-1.0, 0.0]}, "must be >= 0"),
+    ({"mean": [0.0, float("nan")]}, "mean[1]: must be finite"),
+    ({"var": [-1.0, 1.0]}, "var[0]: must be >= 0"),
+    ({"noise_var": [0.0, 1.0]}, "noise_var[0]: must be > 0"),
+    ({"offset": [float("inf"), 0.0]}, "offset[0]: must be finite and at most 1e+100"),
+    ({"cost": [-1.0, 0.0]}, "cost[0]: must be finite and >= 0"),
     ({"action": [0, -1]}, "action[1]: must be from 0 to 1; got -1"),
     ({"action": [0, 2]}, "action[1]: must be from 0 to 1; got 2"),
     ({"action": [0.0, 1.0]}, "action: must hold whole numbers"),
@@ -232,7 +275,9 @@ def test_parameters_out_of_range_are_named_at_once(tmp_path, options):
 
 def test_a_full_queue_drops_and_counts(tmp_path, monkeypatch):
     gate = threading.Event()
-    monkeypatch.setattr("distill.recorder.trace_line", lambda x: gate.wait(20) and trace_line.trace_line(x))
+    monkeypatch.setattr(
+        "distill.recorder.trace_line", lambda x, _: gate.wait(20) and trace_line.trace_line(x)
+    )
     with Recorder(tmp_path, queue_bytes=20_000) as recorder:
         for i in range(100):
             recorder.see(**small(i))

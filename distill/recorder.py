@@ -308,7 +308,10 @@ class Recorder:
         n = len(lines)
         try:
             block = pack(b"".join(lines))
-            if self._files.append(block):
+            if len(block) > self._files.most_file and n > 1:
+                self._write(lines[: n // 2])
+                self._write(lines[n // 2 :])
+            elif self._files.append(block):
                 self._count(written=n, bytes=len(block))
             else:
                 self._count(InputError("traces", "must stay under their size caps"), over_cap=n)

@@ -346,6 +346,15 @@ def test_files_rotate_below_their_cap(tmp_path):
     assert read_all(tmp_path) == (list(range(60)), [])
 
 
+def test_blocks_larger_than_a_file_are_split(tmp_path):
+    with Recorder(tmp_path, max_file_bytes=400, flush_seconds=1000) as recorder:
+        for i in range(40):
+            recorder.see(**{**small(i), "mean": np.random.default_rng(i).normal(size=2)})
+    assert recorder.counters.written == 40
+    assert max(p.stat().st_size for p in tmp_path.iterdir()) <= 400
+    assert read_all(tmp_path) == (list(range(40)), [])
+
+
 def test_the_first_are_kept_under_the_total(tmp_path):
     recorder = fill(tmp_path, max_total_bytes=3000)
     assert sum(p.stat().st_size for p in tmp_path.iterdir()) <= 3000
@@ -405,6 +414,15 @@ def test_recorders_share_a_folder_and_old_files_stay_as_they_are(tmp_path):
         assert (tmp_path / name).read_bytes() == data
     found, errors = read_all(tmp_path)
     assert (sorted(found), errors) == ([*range(5), 100, 101, 102, 200, 201, 202], [])
+
+
+def test_a_number_taken_meanwhile_is_passed_over(tmp_path, monkeypatch):
+    monkeypatch.setattr(block_files.BlockFiles, "_numbered", lambda _: [])  # as the folder was before
+    for i in range(3):
+        with Recorder(tmp_path) as recorder:
+            recorder.see(**small(i))
+        assert recorder.counters.written == 1
+    assert read_all(tmp_path) == ([0, 1, 2], [])
 
 
 def test_mere_repetition_is_packed_no_tighter_than_readers_allow(tmp_path):
@@ -600,7 +618,7 @@ def _run(code, folder):
         capture_output=True,
         text=True,
         check=False,
-        timeout=120,
+        timeout=60,
     )
     assert (done.returncode, done.stderr) == (0, "")
     return done.stdout
@@ -670,6 +688,18 @@ c = recorder.counters
 assert c.written == c.sampled, c
 """
     _run(code, tmp_path)
+
+
+def test_a_call_inside_a_call_does_not_wait_for_it(tmp_path):
+    code = """
+import sys
+from distill.recorder import Recorder
+recorder = Recorder(sys.argv[1])
+with recorder._lock:  # where a signal may arrive
+    recorder.see(mean=[0.0], var=[1.0], noise_var=[1.0], action=[0], extra={"i": 0})
+"""
+    _run(code, tmp_path)
+    assert read_all(tmp_path) == ([0], [])
 
 
 def test_importing_it_imports_nothing_heavy():

@@ -19,12 +19,11 @@ from distill.exact.distributions import (
     Distribution,
     N,
     chebyshev,
-    fit,
     near_nodes,
     node_room,
     shifted,
 )
-from distill.exact.panels import lay_out, merged, resolved
+from distill.exact.panels import held, lay_out, resolved
 from distill.numerics import compiled, gauss_legendre
 from distill.tree import Floats
 
@@ -50,8 +49,8 @@ def convolved(x: Distribution, y: Distribution) -> Distribution:
     order = order[(atom_at[order] >= low) & (atom_at[order] <= high)]
     atom_at, atom_mass = atom_at[order], atom_mass[order]
     edges, hard, values = resolved(edges, hard, lambda at: _sum_density(x, y, at)[None])
-    out = fit(edges, hard, values[0], atom_at, atom_mass, spread, x.error + y.error)
-    return shifted(merged(out), center)
+    out = held(edges, hard, values[0], atom_at, atom_mass, spread, x.error + y.error)
+    return shifted(out, center)
 
 
 def convolved_with_normal(x: Distribution, sd: float) -> Distribution:
@@ -63,7 +62,7 @@ def convolved_with_normal(x: Distribution, sd: float) -> Distribution:
     panels = _normal_sum_panels(x, sd)
     edges, hard = lay_out(low, high, np.empty(0), panels)
     edges, hard, values = resolved(edges, hard, lambda at: _normal_sum_density(x, sd, at)[None])
-    return merged(fit(edges, hard, values[0], np.empty(0), np.empty(0), spread, x.error))
+    return held(edges, hard, values[0], np.empty(0), np.empty(0), spread, x.error)
 
 
 def _sum_panels(x: Distribution, y: Distribution) -> Floats:

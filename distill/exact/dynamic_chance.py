@@ -88,6 +88,14 @@ class _Prices:
         for a, action in enumerate(actions):
             self._take(a, action)
         self.error += _EPS * np.abs(self.value).max() * 4
+        # Best rival's value less the action's own, and how far off that may be.
+        self.ahead = [(-math.inf, 0.0)]
+        if len(actions) > 1:
+            rivals = [(np.delete(self.value, a), np.delete(self.error, a)) for a in range(len(actions))]
+            self.ahead = [
+                (float(v.max() - self.value[a]), float(e.max() + self.error[a]))
+                for a, (v, e) in enumerate(rivals)
+            ]
 
     def _take(self, a: int, action: Constant | Normal | Max | Sum) -> None:
         self.value[a] = 0.0 if isinstance(action, Max) else action.shift
@@ -129,7 +137,7 @@ class _Prices:
 
     def _one_leaf(self, i: int, k: Floats) -> tuple[Floats, Floats]:
         leaf = self.leaves[i]
-        ahead, slack = self._ahead(leaf.action)
+        ahead, slack = self.ahead[leaf.action]
         v, noise, w = float(self.v[i]), self.noise[i] / k, float(self.weight[i])
         s = w * np.sqrt(v * (v / (v + noise)))
         v_after = v * (noise / (v + noise))
@@ -149,11 +157,3 @@ class _Prices:
         tau = np.sqrt(to_come + threshold.rest_var)
         threshold_voc(threshold.T, threshold.mean, sd_now, s, tau, ahead, slack, voc, error)
         return voc, error
-
-    def _ahead(self, action: int) -> tuple[float, float]:
-        """Best rival's value less this action's, and how far off it may be."""
-        rivals = np.delete(self.value, action)
-        if not len(rivals):
-            return -math.inf, 0.0
-        errors = np.delete(self.error, action)
-        return float(rivals.max() - self.value[action]), float(errors.max() + self.error[action])

@@ -10,7 +10,7 @@ from distill.exact.distributions import COEFFICIENTS, Distribution, N, chebyshev
 from distill.numerics import compiled, gauss_legendre
 from distill.tree import Floats
 
-__all__ = ["collapsed", "lay_out", "merged", "resolved"]
+__all__ = ["held", "lay_out", "resolved"]
 
 TOLERANCE = 1e-11  # of the span, Wasserstein-1, a panel
 _FINEST = 1e-11  # of the span: narrower features become atoms
@@ -193,12 +193,34 @@ def trimmed(x: Distribution) -> Distribution:
     )  # fmt: skip
 
 
-def merged(x: Distribution) -> Distribution:
-    """The same distribution on as few panels as hold it; `error` grows by what that leaves out.
+def held(
+    edges: Floats,
+    hard: np.ndarray,
+    values: Floats,
+    atom_at: Floats,
+    atom_mass: Floats,
+    spread: float,
+    error: float,
+) -> Distribution:
+    """`fit`, then the same distribution on as few panels as hold it; `error` grows by what that leaves out.
 
     Ends that carry nothing are dropped, features too fine for double precision become atoms.
     """
-    return _merged(x, TOLERANCE)
+    return _held(edges, hard, values, atom_at, atom_mass, spread, error, TOLERANCE)
+
+
+@compiled
+def _held(
+    edges: Floats,
+    hard: np.ndarray,
+    values: Floats,
+    atom_at: Floats,
+    atom_mass: Floats,
+    spread: float,
+    error: float,
+    tolerance: float,
+) -> Distribution:
+    return _merged(collapsed(trimmed(fit(edges, hard, values, atom_at, atom_mass, spread, error))), tolerance)
 
 
 @compiled
@@ -206,7 +228,6 @@ def _merged(x: Distribution, tolerance: float) -> Distribution:
     """From the left, each panel is the widest tried whose last coefficients are negligible and whose nodes
     find the mass that the finer panels have there, so that no narrow peak slips between nodes.
     """
-    x = collapsed(trimmed(x))
     P = len(x.edges) - 1
     span = x.edges[P] - x.edges[0]
     values = np.empty(N)

@@ -20,8 +20,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from distill.exact.convolution import convolved, convolved_with_normal
-from distill.exact.distributions import REACH, Distribution, N, chebyshev, fit, reflected, shifted
-from distill.exact.panels import merged, resolved
+from distill.exact.distributions import REACH, Distribution, N, chebyshev, reflected, shifted
+from distill.exact.panels import held, resolved
 from distill.numerics import compiled, gauss_legendre
 from distill.tree import Floats
 
@@ -45,10 +45,9 @@ def total(parts: Sequence[Distribution], sd: float) -> Distribution:
     if len(parts) == 1 and sd <= _NEGLIGIBLE * parts[0].spread:
         return parts[0]._replace(error=parts[0].error + sd)
     spectra = _Spectra(parts, np.ones(len(parts)), sd)
-    every = np.arange(len(parts))
-    product = spectra.products([every])
-    if product is not None:
-        return spectra.inverted(product[0], every)
+    found = spectra.sums_of([np.arange(len(parts) + 1)])
+    if found is not None:
+        return found[0]
     if len(parts) == 1:
         return convolved_with_normal(parts[0], sd)
     half = len(parts) // 2
@@ -61,20 +60,16 @@ def remainders(
 ) -> tuple[list[Distribution], Distribution | None]:
     """T - sd Z - (all parts but j), for every j; and, if `whole`, T - all parts (without the normal)."""
     n = len(parts)
-    factors = [T, *parts]
-    others = [np.delete(np.arange(n + 1), j + 1) for j in range(n)]
     if n == 1 and sd <= _NEGLIGIBLE * T.spread:
         return [T._replace(error=T.error + sd)], _sum(T, reflected(parts[0])) if whole else None
-    spectra = _Spectra(factors, np.array([1.0] + [-1.0] * n), sd)
-    products = spectra.products(others)
-    all_but = (
-        _halves(T if sd == 0.0 else total([T], sd), list(parts))
-        if products is None
-        else [spectra.inverted(p, rows) for p, rows in zip(products, others, strict=True)]
-    )
-    if not whole:
-        return all_but, None
-    return all_but, _sum(T, reflected(total(parts, 0.0)))
+    wanted = [np.delete(np.arange(n + 2), j + 1) for j in range(n)]  # T, parts, the normal
+    if whole:
+        wanted.append(np.arange(n + 1))
+    found = _Spectra([T, *parts], np.array([1.0] + [-1.0] * n), sd).sums_of(wanted)
+    if found is not None:
+        return found[:n], found[n] if whole else None
+    all_but = _halves(total([T], sd), list(parts))
+    return all_but, _sum(T, reflected(total(parts, 0.0))) if whole else None
 
 
 def _halves(T: Distribution, parts: list[Distribution]) -> list[Distribution]:
@@ -95,75 +90,70 @@ def _sum(x: Distribution, y: Distribution) -> Distribution:
             moved = shifted(other, sure.mean)
             width = sure.spread if len(sure.edges) > 1 else 0.0
             return moved._replace(error=moved.error + sure.error + width)
-    spectra = _Spectra([x, y], np.ones(2), 0.0)
-    both = np.arange(2)
-    product = spectra.products([both])
-    return convolved(x, y) if product is None else spectra.inverted(product[0], both)
+    found = _Spectra([x, y], np.ones(2), 0.0).sums_of([np.arange(2)])
+    return convolved(x, y) if found is None else found[0]
 
 
 class _Spectra:
-    """Characteristic functions of several parts at common frequencies, as far as their products need."""
+    """Characteristic functions of several parts at common frequencies, as far as their products need.
+
+    Parts count with a sign; a normal of mean 0 is the last row, after the parts.
+    """
 
     def __init__(self, parts: Sequence[Distribution], signs: Floats, sd: float) -> None:
         self.parts, self.signs, self.sd = parts, signs, sd
-        self.window = 1.05 * self._span(np.arange(len(parts)))
-        self.step = 2.0 * math.pi / self.window if self.window > 0 else math.inf
+        self.mean = np.append(signs * [p.mean for p in parts], 0.0)
+        self.spread = np.array([*(p.spread for p in parts), sd])
+        self.error = np.array([*(p.error for p in parts), 0.0])
+        ends = np.array([*((p.edges[0], p.edges[-1]) for p in parts), (-REACH * sd, REACH * sd)])
+        ends[:-1] *= signs[:, None]
+        self.low, self.high = ends.min(axis=1), ends.max(axis=1)
+        low, high = self.range(np.arange(len(parts) + 1))
+        self.window = 1.05 * (high - low)
 
-    def _span(self, rows: NDArray[np.int64]) -> float:
-        low, high = self._range(rows)
-        return high - low
+    def range(self, rows: NDArray[np.int64]) -> tuple[float, float]:
+        """Where the sum of these rows lies, but for what REACH leaves out."""
+        mean, reach = float(self.mean[rows].sum()), REACH * float(np.sqrt((self.spread[rows] ** 2).sum()))
+        low = max(float(self.low[rows].sum()), mean - reach)
+        return low, max(min(float(self.high[rows].sum()), mean + reach), low)
 
-    def _spread(self, rows: NDArray[np.int64]) -> float:
-        return math.sqrt(sum(self.parts[r].spread ** 2 for r in rows) + self.sd**2)
-
-    def _mean(self, rows: NDArray[np.int64]) -> float:
-        return math.fsum(self.signs[r] * self.parts[r].mean for r in rows)
-
-    def _range(self, rows: NDArray[np.int64]) -> tuple[float, float]:
-        low = high = 0.0
-        for r in rows:
-            first, last = self.parts[r].edges[0], self.parts[r].edges[-1]
-            low += first if self.signs[r] > 0 else -last
-            high += last if self.signs[r] > 0 else -first
-        mean, reach = self._mean(rows), REACH * self._spread(rows)
-        low = max(low - REACH * self.sd, mean - reach)
-        return low, max(min(high + REACH * self.sd, mean + reach), low)
-
-    def products(self, wanted: Sequence[NDArray[np.int64]]) -> list[Complex] | None:
-        """For each row set, the product of its characteristic functions from frequency 1 until it faded."""
+    def sums_of(self, wanted: Sequence[NDArray[np.int64]]) -> list[Distribution] | None:
+        """The distribution of each sum of rows; None where some spectrum does not fade in time."""
         if not self.window > 0:
             return None
-        walks = [_Walk(p, self.step) for p in self.parts]
+        step = 2.0 * math.pi / self.window
+        walks = [_Walk(p, step) for p in self.parts]
         widest = max(float(np.max(np.diff(p.edges), initial=0.0)) for p in self.parts)
         for count in range(_BLOCK, _MAX_FREQUENCIES + 1, _BLOCK):
-            if count * self.step * widest > _MAX_PIECES * _MAX_PHASE:
+            if count * step * widest > _MAX_PIECES * _MAX_PHASE:
                 return None
-            spectra = np.empty((len(walks), count), dtype=np.complex128)
+            spectra = np.empty((len(walks) + 1, count), dtype=np.complex128)
             for r, walk in enumerate(walks):
                 spectra[r] = walk.until(count) if self.signs[r] > 0 else walk.until(count).conj()
-            normal = np.exp(-0.5 * (self.step * self.sd * np.arange(1, count + 1)) ** 2)
+            spectra[-1] = np.exp(-0.5 * (step * self.sd * np.arange(1, count + 1)) ** 2)
             last = np.abs(spectra[:, -_BLOCK:])
-            if all((last[rows].prod(axis=0) * normal[-_BLOCK:]).max() < FADED for rows in wanted):
-                return [spectra[rows].prod(axis=0) * normal for rows in wanted]
+            if all(last[rows].prod(axis=0).max() < FADED for rows in wanted):
+                return [self.inverted(spectra[rows].prod(axis=0), step, rows) for rows in wanted]
         return None
 
-    def inverted(self, product: Complex, rows: NDArray[np.int64]) -> Distribution:
+    def inverted(self, product: Complex, step: float, rows: NDArray[np.int64]) -> Distribution:
         """The distribution with this characteristic function."""
-        low, high = self._range(rows)
-        mean = self._mean(rows)
+        low, high = self.range(rows)
+        mean = float(self.mean[rows].sum())
         size = np.abs(product)
         live = np.flatnonzero(size > 1e-5)
-        top = self.step * (live[-1] + 2 if len(live) else 1)
+        top = step * (live[-1] + 2 if len(live) else 1)
         n = min(max(math.ceil((high - low) * top / _PANEL_PHASE), 4), 256)
         edges = np.linspace(low, high, n + 1)
         faded = np.flatnonzero(size > 1e-2 * FADED)
         kept = product[: faded[-1] + 1 if len(faded) else 1]
         edges, hard, values = resolved(
-            edges, np.zeros(n + 1, dtype=np.bool_), lambda at: _inverse(kept, self.step, at - mean)[None]
+            edges, np.zeros(n + 1, dtype=np.bool_), lambda at: _inverse(kept, step, at - mean)[None]
         )
-        error = sum(self.parts[r].error for r in rows) + _ROUNDING * self.window
+        error = float(self.error[rows].sum()) + _ROUNDING * self.window
+        spread = float(np.sqrt((self.spread[rows] ** 2).sum()))
         none = np.empty(0)
-        return merged(fit(edges, hard, values[0], none, none, self._spread(rows), error))
+        return held(edges, hard, values[0], none, none, spread, error)
 
 
 class _Walk:

@@ -20,9 +20,9 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
-from distill.exact.distributions import REACH, WIDTH, Distribution, N, evaluate, fit, shifted
+from distill.exact.distributions import REACH, WIDTH, Distribution, N, evaluate, shifted
 from distill.exact.max_sum import Max, Normal, Sum
-from distill.exact.panels import lay_out, merged, resolved
+from distill.exact.panels import held, lay_out, resolved
 from distill.exact.sums import remainders, total
 from distill.numerics import compiled, norm_cdf
 from distill.tree import Floats
@@ -159,9 +159,7 @@ class _Rivals:
         atom_at = self._atom_places(low, [floor])
         G, jump = self._jumps(atom_at, floor)
         mass = _jump_of_all(G, jump)
-        return merged(
-            fit(edges, hard, values[0], atom_at, mass, float(self.spread.max()), float(self.error.sum()))
-        )
+        return held(edges, hard, values[0], atom_at, mass, float(self.spread.max()), float(self.error.sum()))
 
     def others(self) -> list[Distribution]:
         """For each member, the distribution of the largest of the others."""
@@ -189,18 +187,16 @@ class _Rivals:
             G[c], jump[c] = 1.0, 0.0
             mass = _jump_of_all(G, jump)
             mass[places < floors[c]] = 0.0
-            held = mass > 0
+            carried = mass > 0
             out.append(
-                merged(
-                    fit(
-                        edges[first : last + 1],
-                        hard[first : last + 1],
-                        values[c, first * N : last * N],
-                        places[held],
-                        mass[held],
-                        float(spreads[c]),
-                        float(self.error.sum() - self.error[c]),
-                    )
+                held(
+                    edges[first : last + 1],
+                    hard[first : last + 1],
+                    values[c, first * N : last * N],
+                    places[carried],
+                    mass[carried],
+                    float(spreads[c]),
+                    float(self.error.sum() - self.error[c]),
                 )
             )
         return out

@@ -71,7 +71,7 @@ def _rule(n: int) -> tuple[np.ndarray, np.ndarray]:
     return np.array(xs), np.array(ws)
 
 
-def panels(cuts: np.ndarray, low: float, high: float, n: int = 9) -> tuple[np.ndarray, np.ndarray]:
+def panels(cuts: np.ndarray, low: float, high: float, n: int = 13) -> tuple[np.ndarray, np.ndarray]:
     """Nodes and weights over [low, high], cut at `cuts`."""
     cuts = np.asarray(cuts, dtype=L)
     edges = np.unique(np.concatenate([[L(low)], cuts[(cuts > low) & (cuts < high)], [L(high)]]))
@@ -140,7 +140,7 @@ def voc(tree: BeliefTree, leaf: int, batch: int, horizon: float = math.inf) -> n
     if values:
         rival = max(values, key=lambda p: p[0] + p[1])
         lead = (rival[0] - own[0]) + (rival[1] - own[1])
-        total += _beyond(mean, wide, mu, sd[leaf], s, sigma, lead, rival[0] + rival[1])
+        total += _beyond(mean, wide, mu, sd[leaf], s, sigma, lead)
     if math.isfinite(horizon) and (not values or lead < 0) and len(mean):
         roots = np.sqrt(vi + ni / L(horizon)) + np.sqrt(vi + ni / (L(horizon) + batch))
         steeper = ni * batch / (L(horizon) * (L(horizon) + batch)) / roots / (g * vi)
@@ -157,21 +157,20 @@ def _rise(mean, wide, mu, rho, tau, steeper):
     reach = TAIL * max(float(tau), float(rho))
     cuts = np.concatenate([np.abs(_marks(mean, wide) - mu), _marks([L(0)], [rho]), _marks([L(0)], [tau])])
     u, w = panels(cuts, 0.0, reach)
-    between = np.zeros_like(u)
     x, weight = _rule(16)
-    for q in range(16):  # Phi(u / rho) - Phi(u / tau) = integral of phi, in 8 panels
-        for p in range(8):
-            share = (2 * p + 1 + x[q]) / 16
-            between += weight[q] / 16 * pdf(u / tau + share * u * steeper)
-    between *= u * steeper
+    narrow = np.minimum(u * steeper, 1)
+    between = np.zeros_like(u)  # Phi(u / rho) - Phi(u / tau), as an integral of phi where it would cancel
+    for q in range(16):
+        between += narrow * weight[q] / 2 * pdf(u / tau + (1 + x[q]) / 2 * narrow)
+    between = np.where(u * steeper < 1, between, cdf(-u / tau) - cdf(-u / rho))
     F_up, S_up = product(mu + u, mean, wide)
     F_down, S_down = product(mu - u, mean, wide)
     step = np.where(S_down < 0.5, S_down - S_up, F_up - F_down)
     return np.sum(w * between * step)
 
 
-def _beyond(mean, wide, mu, rho, s, sigma, lead, rival):
-    """E (g(y) - c)^+ where lead >= 0, E (c - g(y))^+ where the action is best; g(y) = E max(y + sigma t, W)."""
+def _beyond(mean, wide, mu, rho, s, sigma, lead):
+    """E (g(y) - c)^+, or E (c - g(y))^+ where the action is best; g(y) = E max(y + sigma t, W)."""
     if not len(mean):
         z = abs(lead) / s
         t, w = panels(np.arange(0, 60), 0.0, 40.0, 30)
@@ -230,7 +229,7 @@ def _beyond(mean, wide, mu, rho, s, sigma, lead, rival):
     end = L(14) if z < 0 else z + 110 / (z + np.sqrt(z * z + 110))
     cuts = start + (end - start) * np.arange(1, 24) / 24
     kinks = side * (np.concatenate([marks, _marks(mean, np.sqrt(wide * wide + sigma * sigma))]) - mu) / s
-    t, w = panels(np.concatenate([cuts, kinks]), float(start), float(end), 8)
+    t, w = panels(np.concatenate([cuts, kinks]), float(start), float(end), 11)
     slopes = np.array([smooth(mu + side * s * one)[1] for one in t])
     return s * np.sum(w * slopes * cdf(-t))
 

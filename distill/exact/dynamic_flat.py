@@ -223,7 +223,7 @@ def _action(d: Floats, rho: Floats, cut: float, h: float) -> tuple[Grid, float, 
             loose = max(loose, least)
     grid = build(d, rho, cut, 9.0 if h == math.inf else 12.5)
     base, added = expected_gain(grid, d, rho, cut)
-    return grid, base, added, loose + 4.0 * _EPS * abs(base) + 1e-14 * added
+    return grid, base, added, loose + 2.0 * _EPS * abs(base) + 3e-15 * added
 
 
 @compiled

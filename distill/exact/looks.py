@@ -12,8 +12,8 @@ from distill.numerics import compiled, gain, norm_cdf, norm_pdf
 __all__ = ["Looks", "later_sd", "voc_at"]
 
 _EPS = 2.220446049250313e-16
-_QUADRATURE = 3e-14  # relative; covers what 16-node panels leave, as held against 80-bit arithmetic in tests
-_CUT_OFF = 1e-36  # of the tree's unit: what normal tails beyond 12.5 standard deviations may hold
+_QUADRATURE = 4e-15  # relative; covers what 16-node panels leave, as held against 80-bit arithmetic in tests
+_CUT_OFF = 4e-36  # of the unit: what normal tails beyond 12.5 standard deviations may hold
 
 
 class Looks(NamedTuple):
@@ -76,7 +76,8 @@ def voc_at(looks: Looks, k: float) -> tuple[float, float, float, float]:
         one = worth(looks.rest, looks.nodes, looks.best, looks.mu, s, sigma, tau)
         voc = one.voc
         if voc > 0.0:
-            error = one.beyond * looks.slack + 4.0 * _EPS * one.terms + _relative(voc, s) * voc + _CUT_OFF
+            error = one.beyond * (looks.slack + looks.rest.loose[1]) + 1.5 * _EPS * one.terms + _CUT_OFF
+            error += (_relative(voc, s) + looks.rest.loose[0]) * voc
         elif (
             looks.best and looks.rest.kappa <= 0.0
         ):  # kept at 0 by a rest that beats the rival even without the leaf
@@ -92,9 +93,10 @@ def voc_at(looks: Looks, k: float) -> tuple[float, float, float, float]:
         steeper = 1e290  # of a spread now that underflows
         if root_now < math.inf:
             steeper = n / looks.h * (k / (looks.h + k)) / (root_now + root_then) / (looks.gain * v)
-        more = rise(looks.rest, looks.nodes, looks.mu, looks.rho, tau, steeper)
+        more, terms = rise(looks.rest, looks.nodes, looks.mu, looks.rho, tau, steeper)
         voc += more
-        error += _relative(more, tau) * more + _CUT_OFF
+        off = 2.0 * _EPS + max(looks.rest.loose[0], looks.rest.loose[2])
+        error += _relative(more, tau) * more + off * terms + _CUT_OFF
     return voc, error, climb, y0
 
 
@@ -104,4 +106,4 @@ def _relative(value: float, spread: float) -> float:
 
     A tail value f(-z) moves by about z^2 times the relative error of z, and z^2 < 2 log(spread / value).
     """
-    return _QUADRATURE + 16.0 * _EPS * max(0.0, math.log(spread) - math.log(value)) if value > 0.0 else 0.0
+    return _QUADRATURE + 8.0 * _EPS * max(0.0, math.log(spread) - math.log(value)) if value > 0.0 else 0.0

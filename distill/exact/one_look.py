@@ -242,8 +242,11 @@ def _positive(
 
 
 @compiled
-def rise(rest: Rest, nodes: Nodes, mu: float, rho: float, tau: float, steeper: float) -> float:
-    """E V_after - V_now of the leaf's own action; steeper = 1 / rho - 1 / tau, without cancellation."""
+def rise(rest: Rest, nodes: Nodes, mu: float, rho: float, tau: float, steeper: float) -> tuple[float, float]:
+    """E V_after - V_now of the leaf's own action, and the sum of the terms that its differences come from.
+
+    steeper = 1 / rho - 1 / tau, taken without cancellation.
+    """
     p = int(np.searchsorted(rest.edges, mu, side="right")) - 1
     _, F_mu = value_at(rest, p, mu)
     S_mu = tail_at(rest, p, mu)
@@ -251,21 +254,24 @@ def rise(rest: Rest, nodes: Nodes, mu: float, rho: float, tau: float, steeper: f
     low = rest.edges[0]
     high = rest.edges[n]
     total = 0.0
-    if mu > low:
+    if mu >= low:
         total += F_mu * _spread_gain(mu - low, rho, tau, steeper)
     if mu < high:
         total += S_mu * _spread_gain(high - mu, rho, tau, steeper)
     a = max(low, mu - 13.5 * tau)
     b = min(high, mu + 13.5 * tau)
     if not a < b:
-        return total
+        return total, total
+    terms = total
     count = gather(rest, nodes, a, b, mu - 13.5 * rho, mu + 13.5 * rho, 4.0 * rho, _FINE * tau, True)
     for q in range(count):
         u = nodes.x[q] - mu
+        mass = nodes.w[q] * _mass_between(abs(u), rho, tau, steeper)
+        # The difference has the sign of -u, and so has the mass.
         up = F_mu - nodes.F[q] if F_mu < 0.5 else nodes.S[q] - S_mu
-        # up has the sign of -u, and so has the other factor.
-        total += nodes.w[q] * abs(up) * _mass_between(abs(u), rho, tau, steeper)
-    return total
+        total += mass * abs(up)
+        terms += mass * (F_mu if F_mu < 0.5 else S_mu)
+    return total, terms
 
 
 @compiled

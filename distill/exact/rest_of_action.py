@@ -37,7 +37,8 @@ class Rest(NamedTuple):
     edges (P + 1,); at the nodes of each panel, (P, N): F, its complement S = 1 - F, log F, and `area`,
     which is D less (x - c) or, from the left, D plus kappa. Left of the panels F = 0, right of them F = 1.
     series (3, P, N), Chebyshev, of log F, area and S without its trend, are made when first needed; `made`
-    (2, P) says where the first two and the third are.
+    (2, P) says where the first two and the third are. `loose` (3,) is how far the last coefficients of any
+    of them let an interpolated F (relative), D (absolute) and S (relative) be off.
     """
 
     edges: Floats
@@ -47,6 +48,7 @@ class Rest(NamedTuple):
     area: NDArray[np.float64]
     series: NDArray[np.float64]
     made: NDArray[np.bool_]
+    loose: Floats
     from_left: bool
     c: float
     kappa: float
@@ -112,7 +114,7 @@ def rest_of(grid: Grid, i: int, mu: float, rho: float, c: float, lead: float) ->
     series = np.empty((3, n, N))
     made = np.zeros((2, n), dtype=np.bool_)
     total = running if from_left else 0.0
-    return Rest(edges, F, S, logs, area, series, made, from_left, c, kappa, total)
+    return Rest(edges, F, S, logs, area, series, made, np.zeros(3), from_left, c, kappa, total)
 
 
 @compiled
@@ -249,6 +251,8 @@ def value_at(rest: Rest, p: int, x: float) -> tuple[float, float]:
                 area += _SERIES[k, j] * rest.area[p, j]
             rest.series[0, p, k] = logs
             rest.series[1, p, k] = area
+        for q in range(2):
+            rest.loose[q] = max(rest.loose[q], _left_out(rest.series[q, p]))
         rest.made[0, p] = True
     t = (2.0 * x - rest.edges[p] - rest.edges[p + 1]) / (rest.edges[p + 1] - rest.edges[p])
     logs = 0.0
@@ -263,6 +267,12 @@ def value_at(rest: Rest, p: int, x: float) -> tuple[float, float]:
 
 
 @compiled
+def _left_out(series: Floats) -> float:
+    """About what a series leaves out: on these panels coefficients fall by 5 and more from each to the next."""
+    return 0.4 * max(abs(series[N - 1]), 0.2 * abs(series[N - 2]))
+
+
+@compiled
 def tail_at(rest: Rest, p: int, x: float) -> float:
     """S(x) = 1 - F(x) with relative accuracy, for x in panel p as in `value_at`.
 
@@ -272,19 +282,23 @@ def tail_at(rest: Rest, p: int, x: float) -> float:
     if p < 0 or p >= n:
         return 1.0 if p < 0 else 0.0
     last = max(rest.S[p, N - 1], 1e-300)
-    slope = math.log(last / max(rest.S[p, 0], 1e-300)) / (NODES[N - 1] - NODES[0])
+    trend = math.log(last / max(rest.S[p, 0], 1e-300)) / (NODES[N - 1] - NODES[0])
     if not rest.made[1, p]:
+        least = math.inf
         for k in range(N):
             one = 0.0
             for j in range(N):
-                one += _SERIES[k, j] * (rest.S[p, j] * math.exp(slope * (NODES[N - 1] - NODES[j])))
+                freed = rest.S[p, j] * math.exp(trend * (NODES[N - 1] - NODES[j]))
+                one += _SERIES[k, j] * freed
+                least = min(least, freed)
             rest.series[2, p, k] = one
+        rest.loose[2] = max(rest.loose[2], _left_out(rest.series[2, p]) / max(least, 1e-300))
         rest.made[1, p] = True
     t = (2.0 * x - rest.edges[p] - rest.edges[p + 1]) / (rest.edges[p + 1] - rest.edges[p])
+    total = 0.0
     before = t
     now = 1.0
-    total = 0.0
     for k in range(N):
         total += rest.series[2, p, k] * now
         before, now = now, 2.0 * t * now - before
-    return max(total * math.exp(slope * (t - NODES[N - 1])), 0.0)
+    return max(total * math.exp(trend * (t - NODES[N - 1])), 0.0)

@@ -27,7 +27,7 @@ from distill.exact.best_batch import best_batch
 from distill.exact.crossing import threshold_voc
 from distill.exact.max_sum import Constant, Max, Normal, Sum, max_sum_form, path_weights
 from distill.exact.thresholds import Threshold, thresholds
-from distill.numerics import gain
+from distill.numerics import gain, norm_cdf
 from distill.query import Priced, Query, scale_of
 from distill.tree import BeliefTree, Floats, Ints
 
@@ -150,7 +150,7 @@ class _Prices:
                 for j in np.flatnonzero(s > 0):
                     z = abs(ahead) / s[j]
                     voc[j] = s[j] * gain(-z)
-                    error[j] = slack * gain(-max(z - slack / s[j], 0.0)) + 5e-14 * voc[j]
+                    error[j] = slack * norm_cdf(-max(z - slack / s[j], 0.0)) + 5e-14 * voc[j]
             return voc, error
         threshold = leaf.threshold
         sd_now = math.sqrt(float(self.var_now[i]) + threshold.rest_var)

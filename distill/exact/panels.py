@@ -48,7 +48,11 @@ def _greedy_edges(low: float, high: float, breaks: Floats, panels: Floats) -> Fl
 
 def lay_out(low: float, high: float, breaks: Floats, panels: Floats) -> tuple[Floats, np.ndarray]:
     """Edges, and which of them are hard; breaks below `low` are dropped, the lowest edge may be one."""
-    breaks = np.unique(breaks[(breaks >= low) & (breaks <= high)])
+    breaks = breaks[(breaks >= low) & (breaks <= high)]
+    if not len(breaks):
+        edges = _greedy_edges(low, high, breaks, panels)
+        return edges, np.zeros(len(edges), dtype=np.bool_)
+    breaks = np.unique(breaks)
     edges = _greedy_edges(low, high, breaks, panels)
     return edges, np.isin(edges, breaks)
 

@@ -178,38 +178,43 @@ class _Rivals:
         edges, hard, values = resolved(edges, hard, density)
         places = self._atom_places(low, unique_floors)
         spreads = np.maximum(_largest_other(self.spread), 0.0)
+        error = float(self.error.sum())
         out = []
         for c in range(self.n_members):
             # Panels that lie under the floor, or where nothing of the others is left.
             first = int(np.searchsorted(edges, floors[c])) if floors[c] >= low else 0
             last = max(int(np.searchsorted(edges, highs[c])), first)
-            G, jump = self._jumps(places, float(floors[c]))
-            G[c], jump[c] = 1.0, 0.0
-            mass = _jump_of_all(G, jump)
-            mass[places < floors[c]] = 0.0
-            carried = mass > 0
+            at, mass = places, places
+            if len(places):
+                G, jump = self._jumps(places, float(floors[c]))
+                G[c], jump[c] = 1.0, 0.0
+                mass = _jump_of_all(G, jump)
+                carried = (mass > 0) & (places >= floors[c])
+                at, mass = places[carried], mass[carried]
             out.append(
                 held(
                     edges[first : last + 1],
                     hard[first : last + 1],
                     values[c, first * N : last * N],
-                    places[carried],
-                    mass[carried],
+                    at,
+                    mass,
                     float(spreads[c]),
-                    float(self.error.sum() - self.error[c]),
+                    max(error - float(self.error[c]), 0.0),
                 )
             )
         return out
 
     def _edges(self, low: float, high: float, floors: list[float]) -> tuple[Floats, np.ndarray]:
         breaks = np.concatenate([np.array(floors), *(d.edges[d.hard] for _, d in self.sums)])
-        wide = REACH * self.sd
-        panels = np.concatenate(
-            [
-                np.column_stack((self.mu - wide, self.mu + wide, WIDTH * self.sd)),
-                *(np.column_stack((d.edges[:-1], d.edges[1:], np.diff(d.edges))) for _, d in self.sums),
-            ]
-        )
+        n = len(self.mu)
+        panels = np.empty((n + sum(len(d.edges) - 1 for _, d in self.sums), 3))
+        panels[:n, 0], panels[:n, 1] = self.mu - REACH * self.sd, self.mu + REACH * self.sd
+        panels[:n, 2] = WIDTH * self.sd
+        for _, d in self.sums:
+            rows = panels[n : n + len(d.edges) - 1]
+            rows[:, 0], rows[:, 1] = d.edges[:-1], d.edges[1:]
+            rows[:, 2] = rows[:, 1] - rows[:, 0]
+            n += len(rows)
         return lay_out(low, high, breaks, panels)
 
     def _table(self, at: Floats) -> tuple[Floats, Floats]:
@@ -222,7 +227,8 @@ class _Rivals:
 
     def _atom_places(self, low: float, floors: list[float]) -> Floats:
         places = np.concatenate([np.array(floors), *(d.atom_at for _, d in self.sums)])
-        return np.unique(places[places >= low])
+        places = places[places >= low]
+        return np.unique(places) if len(places) else places
 
     def _jumps(self, at: Floats, floor: float) -> tuple[Floats, Floats]:
         """Distribution functions at points, and how much of it is a jump there; last row the floor."""

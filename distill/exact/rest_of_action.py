@@ -268,7 +268,7 @@ def value_at(rest: Rest, p: int, x: float) -> tuple[float, float]:
 
 @compiled
 def _left_out(series: Floats) -> float:
-    """About what a series leaves out: on these panels coefficients fall by 5 and more from each to the next."""
+    """About what a series leaves out: on these panels coefficients fall by a factor of 5 and more."""
     return 0.4 * max(abs(series[N - 1]), 0.2 * abs(series[N - 2]))
 
 

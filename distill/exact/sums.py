@@ -35,6 +35,7 @@ _NEGLIGIBLE = 1e-11  # a part this narrow beside another only adds its mean, and
 _MAX_PIECES = 64  # that a panel may be cut into
 _BLOCK = 32  # frequencies between looks
 _MAX_FREQUENCIES = 1024
+_EARLIEST_DOUBT = 128  # frequencies before a spectrum may be given up as too slow
 _ROUNDING = 4e-15  # of the window, Wasserstein-1
 _T, _W = gauss_legendre(N)
 _PANEL_PHASE = 12.0  # panel width times the frequency above which less than 1e-5 is left
@@ -108,6 +109,8 @@ class _Spectra:
         ends = np.array([*((p.edges[0], p.edges[-1]) for p in parts), (-REACH * sd, REACH * sd)])
         ends[:-1] *= signs[:, None]
         self.low, self.high = ends.min(axis=1), ends.max(axis=1)
+        # Spectra of atoms and jumps fade like 1 / w at best.
+        self.rough = np.array([*(bool(p.hard.any()) for p in parts), sd == 0.0])
         low, high = self.range(np.arange(len(parts) + 1))
         self.window = 1.05 * (high - low)
 
@@ -119,7 +122,7 @@ class _Spectra:
 
     def sums_of(self, wanted: Sequence[NDArray[np.int64]]) -> list[Distribution] | None:
         """The distribution of each sum of rows; None where some spectrum does not fade in time."""
-        if not self.window > 0:
+        if not self.window > 0 or any(self.rough[rows].all() for rows in wanted):
             return None
         step = 2.0 * math.pi / self.window
         walks = [_Walk(p, step) for p in self.parts]
@@ -132,8 +135,14 @@ class _Spectra:
                 spectra[r] = walk.until(count) if self.signs[r] > 0 else walk.until(count).conj()
             spectra[-1] = np.exp(-0.5 * (step * self.sd * np.arange(1, count + 1)) ** 2)
             last = np.abs(spectra[:, -_BLOCK:])
-            if all(last[rows].prod(axis=0).max() < FADED for rows in wanted):
+            left = max(float(last[rows].prod(axis=0).max()) for rows in wanted)
+            if left < FADED:
                 return [self.inverted(spectra[rows].prod(axis=0), step, rows) for rows in wanted]
+            # Even fading like a normal, exp(-w^2 sd^2 / 2), it would not be done at the last frequency.
+            if count >= _EARLIEST_DOUBT and math.log(left) * (_MAX_FREQUENCIES / count) ** 2 > math.log(
+                FADED
+            ):
+                return None
         return None
 
     def inverted(self, product: Complex, step: float, rows: NDArray[np.int64]) -> Distribution:

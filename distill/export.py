@@ -119,7 +119,7 @@ def _assemble(
     clipped = g("Max", g("Min", "features", g.single(limits[:, 1])), g.single(limits[:, 0]))
     outside = g("ReduceL1", g("Sub", "features", clipped), g.whole(1), keepdims=0)
     inside = g("LessOrEqual", outside, g.single(0.0))
-    valid = g("And", g("GreaterOrEqual", "action", g.whole(0)), g("Greater", "noise_var", g.double(0.0)))
+    valid = g("And", g("GreaterOrEqual", "action", g.whole(0)), g("Greater", "noise_ratio", g.double(0.0)))
     g("And", inside, valid, out="in_range")
     x = g("Cast", clipped, to=TensorProto.DOUBLE) if boosting else clipped
 

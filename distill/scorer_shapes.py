@@ -93,6 +93,12 @@ def _broadcast(node: Node, shapes: Shapes, _: Consts) -> Shape:
     return tuple(out)
 
 
+def _where(node: Node, shapes: Shapes, _: Consts) -> Shape:
+    _arity(node, shapes, 3)
+    two = Node(outputs=["_"])
+    return _broadcast(two, (_broadcast(two, shapes[:2], ()), shapes[2]), ())
+
+
 def _clip(node: Node, shapes: Shapes, _: Consts) -> Shape:
     _arity(node, shapes, 3)
     if shapes[1] != () or shapes[2] != ():
@@ -250,5 +256,6 @@ OPERATORS: Final[dict[str, tuple[tuple[str, ...], Rule]]] = {
     "Split": (("axis", "num_outputs"), _split),
     "Transpose": (("perm",), _transpose),
     "Unsqueeze": ((), _unsqueeze),
+    "Where": ((), _where),
     "ai.onnx.ml:TreeEnsemble": ((), _ensemble),
 }

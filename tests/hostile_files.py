@@ -288,7 +288,7 @@ def tree_cycle(m):
     ids[list(leafs).index(0)] = 0
 
 
-@hostile("must be from 0 to 3", "boosting")
+@hostile("must be from 0 to 2", "boosting")
 def feature_out_of_range(m):
     attribute(node_of(m, "TreeEnsemble"), "nodes_featureids").ints[0] = 10**9
 

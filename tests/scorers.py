@@ -33,7 +33,7 @@ def training(n_trees: int = 60) -> FeatureMatrix:
 def fitted(kind: str, transform: str = "log_ratio") -> Any:
     """An estimator fitted to a smooth rule of the features."""
     x = training().x.astype(float)
-    t = 0.3 * np.sin(x[:, 0]) - 0.2 * x[:, 2] + 0.1 * x[:, 3]
+    t = 0.3 * np.sin(x[:, 0]) - 0.2 * x[:, 2] + 0.02 * x[:, 1]
     if transform == "sqrt":
         t = np.exp(t)
     model: Any

@@ -88,7 +88,7 @@ def test_two_leaf_actions_have_their_threshold_where_the_action_meets_the_rival(
         if rival - m[j] < 1e-3 * theta:
             continue
         slow = optimize.brentq(lambda x, g=g, rival=rival: g(x) - rival, -40, 40)
-        assert abs(t0[i] - abs(slow)) <= 0.01 * theta
+        assert abs(t0[i] - slow) <= 0.01 * theta
 
 
 def test_single_leaf_actions_start_at_the_static_rate():

@@ -174,7 +174,7 @@ def test_leaves_unlike_those_of_training_take_the_closed_form_one_by_one():
     scorer = Scorer.from_bytes(export_scorer(**narrow))
     t = inside_table()
     got, wide = scorer.score(**t), SCORER.score(**t)
-    near = graph().matrix(t).x[:, 0] <= 2.02
+    near = graph().matrix(t).x[:, 0] <= scorer.facts["ranges"]["threshold"][1]
     assert 0 < near.sum() < 20
     np.testing.assert_array_equal(got.in_range, near)
     np.testing.assert_array_equal(got.voc[near], wide.voc[near])
@@ -237,6 +237,34 @@ def test_threads_share_a_scorer_and_get_the_bits_of_one_thread(kind):
         thread.start()
     for thread in threads:
         thread.join()
+    assert not wrong
+
+
+@pytest.mark.slow
+def test_hundreds_of_thousands_of_calls_on_eight_threads_keep_memory_and_bits():
+    import psutil
+
+    tables = [table(np.random.default_rng(i), 4 + i % 9, 3) for i in range(40)]
+    expected = [SCORER.score(**t).voc for t in tables]
+    wrong = []
+
+    def work(calls):
+        for i in range(calls):
+            j = i % len(tables)
+            if not np.array_equal(SCORER.score(**tables[j]).voc, expected[j]):
+                wrong.append(j)
+
+    def run(calls):
+        threads = [threading.Thread(target=work, args=(calls,)) for _ in range(8)]
+        for thread in threads:
+            thread.start()
+        for thread in threads:
+            thread.join()
+        gc.collect()
+        return psutil.Process().memory_info().rss
+
+    before = run(2_000)
+    assert run(30_000) - before < 8 * 2**20
     assert not wrong
 
 

@@ -37,7 +37,6 @@ __all__ = ["TRANSFORMS", "export_scorer", "mapped_back", "with_facts"]
 TRANSFORMS: Final = ("sqrt", "log_ratio")
 _LOG_RATIO_LIMIT: Final = 20.0
 _FLOOR: Final = 1e-4
-_SLACK: Final = 0.01  # of a feature's range: a value next to those of training is not unlike them
 _DENSE_PARITY: Final = 1e-5  # of the largest t: networks and linear models run in float32
 _PARITY_ROWS: Final = 20_000
 
@@ -67,8 +66,7 @@ def export_scorer(
 
     estimator : a fitted HistGradientBoostingRegressor, MLPRegressor or linear model, the last two also
         behind a StandardScaler in a Pipeline; it maps feature rows to t.
-    transform : one of TRANSFORMS. ranges : (d, 2), least and largest of each feature in training;
-        `in_range` allows 1 % of the range beyond.
+    transform : one of TRANSFORMS. ranges : (d, 2), least and largest of each feature that is in range.
     metadata : JSON values (family, dataset hash, recipe, ...), kept in the file as they are.
     self_test_columns : rows as for FeatureGraph.matrix; a few trees. Parity with the estimator is checked
         on them and on random rows within the ranges, and the file carries them with their answers.
@@ -78,12 +76,11 @@ def export_scorer(
     """
     if transform not in TRANSFORMS:
         raise ExportError(f"transform must be one of {', '.join(TRANSFORMS)}; got {transform!r}")
-    limits = np.array(ranges, dtype=np.float32)
+    limits = np.asarray(ranges, dtype=np.float32)
     if limits.shape != (len(feature_graph.names), 2):
         raise ExportError(f"ranges must have shape ({len(feature_graph.names)}, 2); got {limits.shape}")
     if not np.all(np.isfinite(limits)) or np.any(limits[:, 0] > limits[:, 1]):
         raise ExportError("ranges must be finite, least before largest")
-    limits += _SLACK * (limits[:, 1:] - limits[:, :1]) * np.array([-1, 1], dtype=np.float32)
     converted = convert(estimator, len(feature_graph.names))
     _check_estimator(estimator, converted, limits)
     model = _assemble(feature_graph.model, converted, transform, limits)

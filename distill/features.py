@@ -64,7 +64,7 @@ _LARGE: Final = 1e300
 _TINY: Final = 1e-300
 _THRESHOLD_LIMIT: Final = 40.0  # exp(-z^2 / 2) is 0 in double precision
 _PEAK_FLOOR: Final = 1e-30  # keeps 0 x infinity away where a leaf has no variance
-_SLOPE_FLOOR: Final = 1e-30  # where the siblings alone beat the rival: below any value that matters
+_SLOPE_FLOOR: Final = 1e-300  # where the siblings alone beat the rival: below the least value of any tree
 _SPREAD_FLOOR: Final = 1e-6  # of the table's width squared: above the rounding of float32 sums
 
 # q(y) = y - f^{-1}(y) as a v / sqrt(v + c), v = -log(1 - exp(-b y)); fitted by least squares to the exact

@@ -208,3 +208,12 @@ def test_the_graph_is_clean_and_the_same_every_time():
     onnx.checker.check_model(model, full_check=True)
     again = build_graph()
     assert model.SerializeToString(deterministic=True) == again.SerializeToString(deterministic=True)
+
+
+def test_a_leaf_whose_siblings_beat_the_rival_for_sure_starts_below_any_value():
+    t = table(np.random.default_rng(8), 4, 2)
+    t["mean"], t["var"] = np.array([9.0, 8.0, 0.0, 0.5]), np.full(4, 0.3)
+    t["gain"], t["offset"], t["action"] = np.ones(4), np.zeros(4), np.array([0, 0, 1, 1])
+    start = GRAPH.matrix(t).first_order
+    assert np.all(start[:2] < 1e-290)
+    assert np.all(start[2:] > 1e-60)

@@ -352,11 +352,16 @@ def test_bad_arguments_are_named(tmp_path, changed, message):
     assert not (tmp_path / "d").exists()
 
 
-def test_progress_is_shown_with_rate_and_time_left(tmp_path, capfd):
+def test_progress_is_shown_with_rate_and_time_left_on_a_terminal_only(tmp_path, capfd, monkeypatch):
+    monkeypatch.setenv("COLUMNS", "120")
+    monkeypatch.setenv("TTY_COMPATIBLE", "1")
     _again(tmp_path / "d", progress=True)
     err = capfd.readouterr().err
     assert "42/42 trees" in err
-    assert re.search(r"[\d,]+/s .* left", err)
+    assert re.search(r"[\d,.]+/s.* left", err)
+    monkeypatch.setenv("TTY_COMPATIBLE", "0")
+    _again(tmp_path / "e", progress=True)
+    assert capfd.readouterr().err == ""
 
 
 def test_the_datasheet_says_what_the_dataset_is(tmp_path):

@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import os
 import sys
 
 
 def main() -> int:
     """Run the command line; on a light installation say in one line what is missing."""
+    # Before OpenMP loads: threads that wait by spinning slow training many times over on busy cores.
+    os.environ.setdefault("OMP_WAIT_POLICY", "PASSIVE")
     try:
         from distill.cli import run
 

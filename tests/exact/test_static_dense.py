@@ -144,7 +144,7 @@ def test_rate_against_every_batch_on_random_trees():
 
 
 def test_independent_leaves_have_one_kink():
-    """VOC = s f(-gap / s), s^2 = v^2 / (v + n / k): the knowledge gradient (Frazier, Powell and Dayanik 2008)."""
+    """VOC = s f(-gap / s), s^2 = v^2 / (v + n / k): knowledge gradient (Frazier, Powell and Dayanik 2008)."""
     rng = np.random.default_rng(15)
     mean, var, noise = rng.normal(size=8), rng.exponential(size=8), rng.exponential(size=8)
     dense = static(flat(mean, np.diag(var), noise), 3)
@@ -156,7 +156,8 @@ def test_independent_leaves_have_one_kink():
     diagonal = from_record(
         {
             "format": "belief-tree/1", "parent": [-1] + [0] * 8, "kind": ["decision"] + ["leaf"] * 8,
-            "mean": [None, *mean.tolist()], "var": [None, *var.tolist()], "noise_var": [None, *noise.tolist()],
+            "mean": [None, *mean.tolist()], "var": [None, *var.tolist()],
+            "noise_var": [None, *noise.tolist()],
         }
     )  # fmt: skip
     assert np.array_equal(static(diagonal, 3).voc, dense.voc)

@@ -1,0 +1,75 @@
+"""What the README shows works as it is written."""
+
+from __future__ import annotations
+
+import re
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from distill.cli import run
+from distill.record import parse_record
+
+ROOT = Path(__file__).parents[1]
+README = (ROOT / "README.md").read_text()
+
+
+def blocks(language):
+    """Code blocks of one language."""
+    return re.findall(rf"```{language}\n(.*?)```", README, flags=re.S)
+
+
+def test_the_record_is_valid():
+    (record,) = blocks("json")
+    tree = parse_record(record)
+    assert tree.n_leaves == 3
+    assert tree.remaining == 60
+
+
+def test_the_embedding_runs(monkeypatch):
+    (code,) = (block for block in blocks("python") if "Scorer.load" in block)
+    monkeypatch.chdir(ROOT)
+    scope = {
+        "mean": np.array([3.1, 2.4, 2.9]),
+        "var": np.array([0.2, 1.1, 0.8]),
+        "noise": np.full(3, 4.0),
+        "gain": np.ones(3),
+        "offset": np.zeros(3),
+        "action": np.array([1, 0, 0]),
+        "cost": np.zeros(3),
+    }
+    arguments = re.search(r"scorer\.pick\((.*?)\n\)", code, flags=re.S)
+    assert arguments is not None
+    exec(code.replace("scorer.score(...)", f"scorer.score({arguments[1]}\n)"), scope)
+    assert scope["leaf"] == scope["scores"].pick
+    assert scope["scores"].voc.shape == (3,)
+
+
+def test_the_recorder_runs(monkeypatch, tmp_path):
+    (code,) = (block for block in blocks("python") if "Recorder" in block)
+    monkeypatch.chdir(tmp_path)
+    ones = np.ones(3)
+    scope = dict.fromkeys(("mean", "var", "noise", "gain", "offset", "cost"), ones)
+    scope["action"] = np.array([1, 0, 0])
+    exec(code.replace("sample=0.01", "sample=1"), scope)
+    recorder = scope["recorder"]
+    assert recorder.close()
+    assert recorder.counters.written == 1
+
+
+def test_the_commands_exist(capsys):
+    named = set(re.findall(r"voc-distill ([a-z]+) ", "\n".join(blocks("bash"))))
+    assert named >= {"tour", "price", "generate", "train", "ship", "validate"}
+    for command in named:
+        with pytest.raises(SystemExit) as done:
+            run([command, "--help"])
+        assert done.value.code == 0
+    capsys.readouterr()
+
+
+def test_pictures_and_files_it_points_to_exist():
+    for target in re.findall(r"!\[.*?\]\((.*?)\)", README):
+        assert (ROOT / target).is_file(), target
+    for path in re.findall(r"`((?:datasets|models)/[\w./-]*)`", README):
+        assert (ROOT / path).exists(), path

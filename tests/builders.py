@@ -69,8 +69,8 @@ def bush(mean: list[list[float]], var: list[list[float]], noise_var: float = 1.0
         for m, v in zip(ms, vs, strict=True):
             parent.append(node)
             kind.append("leaf")
-            columns["mean"].append(m)
-            columns["var"].append(v)
+            columns["mean"].append(float(m))
+            columns["var"].append(float(v))
             columns["noise_var"].append(noise_var)
     return from_record({"format": "belief-tree/1", "parent": parent, "kind": kind, **columns, **more})
 

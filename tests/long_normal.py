@@ -81,7 +81,8 @@ def panels(cuts: np.ndarray, low: float, high: float, n: int = 13) -> tuple[np.n
 
 
 def _marks(mean, sd) -> np.ndarray:
-    steps = np.arange(-TAIL, TAIL + 1).astype(L)
+    finer = 1 if len(mean) < 16 else 8  # many leaves make the product steeper than each
+    steps = np.arange(-TAIL * finer, TAIL * finer + 1).astype(L) / finer
     return np.concatenate([[m] if s == 0 else m + steps * s for m, s in zip(mean, sd, strict=True)])
 
 

@@ -1,8 +1,7 @@
 """VOC of independent Gaussian leaves, the slow and obvious way; floor 2.
 
-Both sides of VOC = E_Z[max_a V_h(a | after)] - max_a V_h(a | now) are computed as they stand: expected
-maxima by adaptive quadrature of 1 - product of normal distribution functions, the outcome Z by
-Gauss-Legendre panels that are doubled until the answer stands still, split where the best action changes.
+Both sides of VOC = E_Z[max_a V_h(a | after)] - max_a V_h(a | now) are computed as they stand, by nested
+adaptive quadrature: over the outcome Z, and of 1 - product of normal distribution functions inside.
 A difference of two numbers of the size of the values: absolute accuracy about 1e-11 of the scale, no more.
 """
 
@@ -10,13 +9,11 @@ from __future__ import annotations
 
 import itertools
 import math
-from collections.abc import Callable
-from typing import cast
+from collections.abc import Callable, Sequence
 
 import numpy as np
-from scipy.integrate import quad_vec
+from scipy.integrate import quad
 from scipy.optimize import brentq
-from scipy.stats import norm
 
 from distill.oracle.dense import static_voc
 from distill.tree import BeliefTree, Floats, leaf_table
@@ -25,37 +22,29 @@ __all__ = ["action_values", "expected_max", "rate", "voc"]
 
 _WANTED = 1e-12  # of the scale, asked of every quadrature
 _WIDTH = 9.0  # standard deviations integrated over: 1e-19 lies beyond
-_ORDER = 12  # Gauss-Legendre nodes a panel of the outcome
 
 
-def expected_max(mean: Floats, sd: Floats) -> Floats:
-    """E max over the first axis of independent N(mean, sd^2), by adaptive quadrature.
+def expected_max(mean: Sequence[float], sd: Sequence[float]) -> float:
+    """E max of independent N(mean, sd^2), sd = 0 allowed, by adaptive quadrature.
 
-    mean : shape (leaves, ...); sd : shape (leaves,), zero allowed. Returns shape (...).
-
-    >>> round(float(expected_max(np.zeros(2), np.ones(2))), 10)  # 1 / sqrt(pi)
+    >>> round(expected_max([0.0, 0.0], [1.0, 1.0]), 10)  # 1 / sqrt(pi)
     0.5641895835
     """
-    mean = np.asarray(mean, dtype=float)
-    sd = np.asarray(sd, dtype=float).reshape(-1, *[1] * (mean.ndim - 1))
-    others = tuple(range(1, mean.ndim))
-    low = float(np.max(np.min(mean - _WIDTH * sd, axis=others)))  # some leaf is above it, whatever happens
-    high = float(np.max(mean + _WIDTH * sd))
-    if not low < high:
-        return cast(Floats, np.max(mean, axis=0))
-    safe = np.where(sd > 0, sd, 1.0)
+    low = max(
+        m - _WIDTH * s for m, s in zip(mean, sd, strict=True)
+    )  # some leaf is above it, whatever happens
+    high = max(m + _WIDTH * s for m, s in zip(mean, sd, strict=True))
 
-    def some_leaf_above(x: float) -> Floats:
-        cdf = np.where(sd > 0, norm.cdf((x - mean) / safe), np.where(x >= mean, 1.0, 0.0))
-        return cast(Floats, 1 - np.prod(cdf, axis=0))
+    def some_leaf_above(x: float) -> float:
+        none = 1.0
+        for m, s in zip(mean, sd, strict=True):
+            none *= 0.5 * math.erfc((m - x) / (s * math.sqrt(2))) if s > 0 else float(x >= m)
+        return 1 - none
 
-    ends = [f(mean + t * sd, axis=others).ravel() for t in (-5, -2, 0, 2, 5) for f in (np.min, np.max)]
-    marks = np.unique(np.concatenate(ends))
-    marks = marks[(marks > low) & (marks < high)]
-    area, _ = quad_vec(
-        some_leaf_above, low, high, epsabs=_WANTED * float(np.max(sd)), epsrel=0, norm="max", points=marks
-    )
-    return cast(Floats, low + area)
+    marks = [
+        m + t * s for m, s in zip(mean, sd, strict=True) for t in ((-5, -1.5, 1.5, 5) if s > 0 else (0,))
+    ]
+    return low + _integral(some_leaf_above, low, high, marks, _WANTED * max(sd))
 
 
 def action_values(tree: BeliefTree, horizon: float) -> Floats:
@@ -64,9 +53,12 @@ def action_values(tree: BeliefTree, horizon: float) -> Floats:
     assert t.mean is not None
     assert t.var is not None
     assert t.noise_var is not None
-    centre, sd = t.offset + t.gain * t.mean, t.gain * _later_sd(t.var, t.noise_var, horizon)
-    n_actions = len(tree.action_nodes)
-    return np.array([float(expected_max(centre[t.action == a], sd[t.action == a])) for a in range(n_actions)])
+    centre = t.offset + t.gain * t.mean
+    sd = t.gain * [
+        _later_sd(v, n, horizon) for v, n in zip(t.var.tolist(), t.noise_var.tolist(), strict=True)
+    ]
+    members = [t.action == a for a in range(len(tree.action_nodes))]
+    return np.array([expected_max(centre[own].tolist(), sd[own].tolist()) for own in members])
 
 
 def voc(tree: BeliefTree, leaf: int, batch: float, horizon: float = math.inf) -> float:
@@ -80,30 +72,39 @@ def voc(tree: BeliefTree, leaf: int, batch: float, horizon: float = math.inf) ->
     if horizon == 0:
         return static_voc(tree, leaf, batch)
     t = leaf_table(tree)
-    centre, sd = t.offset + t.gain * tree.mean, t.gain * _later_sd(tree.var, tree.noise_var, horizon)
-    own = np.flatnonzero(t.action == t.action[leaf])
-    gain = float(t.gain[leaf])
-    s = gain * float(_later_sd(np.array(v), np.array(n), batch))
+    own = [int(i) for i in np.flatnonzero(t.action == t.action[leaf])]
+    at = own.index(leaf)
+    mean = (t.offset + t.gain * tree.mean)[own].tolist()
+    s = float(t.gain[leaf]) * _later_sd(v, n, batch)
     left = v * n / (batch * v + n)
-    sd_after = np.where(own == leaf, gain * _later_sd(np.array(left), np.array(n), horizon), sd[own])
+    later = [_later_sd(float(tree.var[i]), float(tree.noise_var[i]), horizon) for i in own]
+    later[at] = _later_sd(left, n, horizon)
+    sd = [float(t.gain[i]) * x for i, x in zip(own, later, strict=True)]
     now = action_values(tree, horizon)
     rivals = np.delete(now, t.action[leaf])
     rival = float(rivals.max()) if len(rivals) else -math.inf
+    best = float(now.max())
 
-    def value_after(z: Floats) -> Floats:
-        """V_h of the leaf's action after outcome z; shape of z."""
-        mean = np.repeat(centre[own][:, None], len(z), axis=1)
-        mean[own == leaf] += s * z
-        return expected_max(mean, sd_after)
+    def value_after(z: float) -> float:
+        """V_h of the leaf's action after outcome z."""
+        return expected_max([*mean[:at], mean[at] + s * z, *mean[at + 1 :]], sd)
 
-    def lead(z: float) -> float:
-        return float(value_after(np.array([z]))[0]) - rival
+    # The value bends where the leaf meets another one, and where the action overtakes its best rival.
+    marks = [
+        0.0,
+        *(
+            (m - mean[at] + t * math.hypot(x, sd[at])) / s
+            for m, x in zip(mean, sd, strict=True)
+            for t in (-2, 2)
+        ),
+    ]
+    if value_after(-_WIDTH) < rival < value_after(_WIDTH):
+        marks.append(brentq(lambda z: value_after(z) - rival, -_WIDTH, _WIDTH, xtol=1e-10))
 
-    cuts = [-_WIDTH, 0.0, _WIDTH]
-    if lead(-_WIDTH) < 0 < lead(_WIDTH):
-        cuts.append(brentq(lead, -_WIDTH, _WIDTH, xtol=1e-9))
-    after = _mean_over_outcomes(lambda z: np.maximum(value_after(z), rival), sorted(cuts), float(np.max(sd)))
-    return after - float(np.max(now))
+    def gain(z: float) -> float:
+        return (max(value_after(z), rival) - best) * math.exp(-z * z / 2) / math.sqrt(2 * math.pi)
+
+    return _integral(gain, -_WIDTH, _WIDTH, marks, 10 * _WANTED * max(*sd, s))
 
 
 def rate(tree: BeliefTree, leaf: int, remaining: int, horizon: float = math.inf) -> tuple[float, int]:
@@ -113,25 +114,25 @@ def rate(tree: BeliefTree, leaf: int, remaining: int, horizon: float = math.inf)
     return rates[best], best + 1
 
 
-def _later_sd(v: Floats, n: Floats, rollouts: float) -> Floats:
+def _later_sd(v: float, n: float, rollouts: float) -> float:
     """sqrt(v^2 / (v + n / rollouts)): spread of a posterior mean after so many rollouts."""
-    return cast(
-        Floats, np.sqrt(v) * np.sqrt(np.divide(v, v + n / rollouts, where=v > 0, out=np.zeros_like(v)))
-    )
+    return v / math.sqrt(v + n / rollouts) if v > 0 else 0.0
 
 
-def _mean_over_outcomes(f: Callable[[Floats], Floats], cuts: list[float], scale: float) -> float:
-    """E f(Z) over the standard normal Z, f smooth between the cuts."""
-    x, w = np.polynomial.legendre.leggauss(_ORDER)
-    before = math.inf
-    for pieces in (3, 6, 12, 24, 48, 96):
-        edges = np.unique(
-            np.concatenate([np.linspace(a, b, pieces + 1) for a, b in itertools.pairwise(cuts)])
-        )
-        half = np.diff(edges)[:, None] / 2
-        z = (edges[:-1, None] + half + half * x).ravel()
-        total = float((half * w).ravel() * norm.pdf(z) @ f(z))
-        if abs(total - before) <= _WANTED * scale:
-            break
-        before = total
-    return total
+def _integral(
+    f: Callable[[float], float], low: float, high: float, marks: Sequence[float], wanted: float
+) -> float:
+    """Adaptive quadrature of f over [low, high], cut at the marks."""
+    if not low < high:
+        return 0.0
+    inside = sorted(m for m in marks if low < m < high)
+    cuts = [low]
+    for m in inside:
+        if m - cuts[-1] > 1e-12 * (high - low):
+            cuts.append(m)
+    cuts.append(high)
+    pieces = [
+        quad(f, a, b, epsabs=wanted / len(cuts), epsrel=0, limit=200, full_output=1)[0]
+        for a, b in itertools.pairwise(cuts)
+    ]
+    return math.fsum(pieces)

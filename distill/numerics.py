@@ -17,13 +17,12 @@ The unit normal loss L(z) of the decision literature is gain(-z).
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from functools import cache
-from typing import Any, TypeVar, cast
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
+
+from distill.kernels import compiled
 
 __all__ = [
     "compiled", "gain", "gain_ratio", "gauss_legendre", "legendre_antiderivative", "log_gain", "log_norm_cdf",
@@ -31,12 +30,6 @@ __all__ = [
 ]  # fmt: skip
 
 Floats = NDArray[np.float64]
-_F = TypeVar("_F", bound=Callable[..., Any])
-
-# How every kernel of the project is compiled: cached on disk, division by zero as in NumPy, and no
-# fast-math, which would spend the relative accuracy of the tails. Keeps the function's type for mypy.
-compiled = cast(Callable[[_F], _F], njit(cache=True, error_model="numpy"))
-
 _INV_SQRT_2 = 0.7071067811865476
 _INV_SQRT_2PI = 0.3989422804014327
 _LOG_SQRT_2PI = 0.9189385332046727

@@ -59,9 +59,11 @@ def price(tree: BeliefTree, query: Query) -> Priced:
     assert most is not None
     voc, error = np.empty(n), np.empty(n)
     batch = np.empty(n, dtype=np.int64)
+    plain = np.ascontiguousarray  # for other layouts the kernel would be compiled anew
     value = _price(
-        tree.parent, tree.kind, tree.reward, tree.discount, tree.mean, tree.var, tree.noise_var,
-        float(query.horizon), float(most), query.rate, voc, batch, error,
+        plain(tree.parent), plain(tree.kind), plain(tree.reward), plain(tree.discount), plain(tree.mean),
+        plain(tree.var), plain(tree.noise_var), float(query.horizon), float(most), query.rate,
+        voc, batch, error,
     )  # fmt: skip
     return Priced(voc, batch, value, error, METHOD)
 

@@ -32,7 +32,6 @@ from distill.numerics import compiled, gain, gauss_legendre, norm_cdf, norm_pdf
 
 __all__ = ["Worth", "rise", "worth"]
 
-_EPS = 2.220446049250313e-16
 _INV_SQRT_2PI = 0.3989422804014327
 _FINE = 5.5  # longest piece, in standard deviations of the kernel on it
 _NARROW = 0.05  # s / sigma below which the all-positive form is used

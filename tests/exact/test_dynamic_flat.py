@@ -82,7 +82,7 @@ def test_relative_accuracy_and_bounds_against_80_bit_arithmetic():
 @pytest.mark.slow
 def test_bounds_cover_and_are_not_wide():
     """They cover at least 99.9 %, and above 1e-30 of scale are at most 100 times too wide in the median."""
-    shares = [check_against_80_bits(seed) for seed in range(2000, 3000)]
+    shares = [check_against_80_bits(seed) for seed in range(2000, 2300)]
     assert np.mean([s <= 1 for s, _ in shares]) >= 0.999
     assert np.median([s for s, size in shares if size > 1e-30]) >= 0.01
 

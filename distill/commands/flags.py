@@ -1,0 +1,73 @@
+"""Flags that several commands share, and how their texts are read."""
+
+from __future__ import annotations
+
+import argparse
+import math
+from collections.abc import Callable
+
+__all__ = ["add_query_flags", "horizon", "microseconds", "positive", "whole"]
+
+
+def add_query_flags(parser: argparse.ArgumentParser, rate_is_default: bool = False) -> None:
+    """--value, --batch or --rate, --remaining and --tolerance: what is asked of each tree."""
+    parser.add_argument(
+        "--value", type=horizon, metavar="static|dynamic|H",
+        help="as if no rollouts followed, as if all uncertainty were resolved, or H more rollouts a leaf",
+    )  # fmt: skip
+    size = parser.add_mutually_exclusive_group()
+    one, rate = ("", " (default)") if rate_is_default else (" (default 1)", "")
+    size.add_argument("--batch", type=whole(1), metavar="K", help=f"rollouts a candidate{one}")
+    size.add_argument(
+        "--rate", action="store_true", help=f"best VOC a rollout over batches within the rollouts left{rate}"
+    )
+    parser.add_argument("--remaining", type=whole(0), metavar="R", help="rollouts left; bounds the rate")
+    parser.add_argument(
+        "--tolerance", type=positive, metavar="T",
+        help="largest error accepted, as a share of the tree's scale; a method that misses it refuses",
+    )  # fmt: skip
+
+
+def horizon(text: str) -> float:
+    """static, dynamic, or rollouts a leaf."""
+    if text in ("static", "dynamic"):
+        return 0.0 if text == "static" else math.inf
+    try:
+        h = float(text)
+    except ValueError:
+        h = -1.0
+    if not h >= 0:
+        raise argparse.ArgumentTypeError(f"must be static, dynamic or a number >= 0; got {text!r}")
+    return h
+
+
+def whole(least: int) -> Callable[[str], int]:
+    """A whole number from `least` to 2^53."""
+
+    def parse(text: str) -> int:
+        try:
+            n = int(text)
+        except ValueError:
+            n = least - 1
+        if not least <= n <= 2**53:
+            raise argparse.ArgumentTypeError(f"must be a whole number from {least} to 2^53; got {text!r}")
+        return n
+
+    return parse
+
+
+def positive(text: str) -> float:
+    """A finite number above 0."""
+    try:
+        x = float(text)
+    except ValueError:
+        x = math.nan
+    if not 0 < x < math.inf:
+        raise argparse.ArgumentTypeError(f"must be a number above 0; got {text!r}")
+    return x
+
+
+def microseconds(text: str) -> float:
+    """A time such as 40us."""
+    number = text.removesuffix("us").removesuffix("µs").strip()
+    return positive(number)

@@ -1,0 +1,34 @@
+"""`voc-distill ship`: copy one scorer of a trained front, with its sheet, to where agents load it."""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+
+from distill.commands import flags
+
+__all__ = ["HELP", "add_arguments", "run"]
+
+HELP = "copy one scorer of a trained front, with its sheet, to where agents load it"
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """The command's flags."""
+    parser.add_argument("trained", metavar="FOLDER", help="what train left")
+    parser.add_argument("--out", type=Path, required=True, metavar="FILE.onnx")
+    which = parser.add_mutually_exclusive_group()
+    which.add_argument(
+        "--latency",
+        type=flags.microseconds,
+        metavar="40us",
+        help="most accurate within this median time a decision",
+    )
+    which.add_argument("--scorer", metavar="NAME", help="by its name on the front")
+
+
+def run(args: argparse.Namespace) -> None:
+    """Run the command."""
+    from distill.ship import ship
+
+    sheet = ship(args.trained, args.out, latency_us=args.latency, scorer=args.scorer)
+    print(f"{args.out}: {sheet['recipe']}, {sheet['chosen']}; its sheet stands beside it as .json and .md")

@@ -11,19 +11,26 @@ import numpy as np
 
 from distill import voc
 from distill.allocation import Search as Posterior
-from distill.errors import InputError
+from distill.errors import InputError, RefusedError
 from distill.query import Query
 from distill.rehearse.policies import Policy
 from distill.rehearse.problems import Draw
 from distill.rehearse.search import action_values
 from distill.tree import BeliefTree, Floats
 
-__all__ = ["Budget", "Decided", "decide", "expected_maxima", "posterior_means"]
+__all__ = ["Budget", "Decided", "decide", "expected_maxima", "posterior_means", "sampled_maxima"]
+
+_DRAWS = 1024
+_NO_ROLLOUTS = Query(batch=None, remaining=0)  # values alone: nothing is left to price
 
 
 @dataclass(frozen=True)
 class Budget:
     """What one decision may cost: `rollouts`, or `seconds` at `rollout_seconds` each, or both.
+
+    busy : whether a rollout really keeps the processor busy for `rollout_seconds`, all on the real clock.
+        Otherwise its stated cost is added to the really measured time of choosing: the same sum, without
+        the waiting, and less at the mercy of what else the machine does.
 
     >>> Budget(seconds=0.02, rollout_seconds=0.0)
     Traceback (most recent call last):
@@ -33,6 +40,7 @@ class Budget:
     rollouts: int | None = None
     seconds: float | None = None
     rollout_seconds: float = 0.0
+    busy: bool = False
 
     def __post_init__(self) -> None:
         if self.rollouts is None and self.seconds is None:
@@ -104,9 +112,12 @@ def decide(
 
     The clock counts the policy's own time as it is measured, belief updates included, and each rollout
     at the budget's stated cost, however long it really took: so a simulator of any price can be
-    rehearsed, and policies differ by nothing but their choices and the time those take.
+    rehearsed, and policies differ by nothing but their choices and the time those take. With
+    `budget.busy` rollouts really take at least their stated cost, and the clock counts what they took.
     """
     posterior = Posterior(draw.tree)
+    learn = getattr(policy, "observe", None)
+    rolling = 0.0
     spent, elapsed, stopped, choices, fallbacks = 0, 0.0, False, 0, 0
     started = clock()
     policy.begin(draw.tree)
@@ -123,18 +134,27 @@ def decide(
             break
         choices += 1
         fallbacks += choice.fell_back
+        started = clock()
         returns = [draw.roll(choice.leaf) for _ in range(rollouts)]
+        cost = rollouts * budget.rollout_seconds
+        if budget.busy:
+            while (took := clock() - started) < cost:
+                pass
+            cost = took
+        rolling += cost
         observed = math.fsum(returns) if draw.tree.belief == "win_loss" else math.fsum(returns) / rollouts
         started = clock()
         posterior.observe(choice.leaf, observed, rollouts)
-        elapsed += clock() - started + rollouts * budget.rollout_seconds
+        if learn is not None:
+            learn(choice.leaf, observed, rollouts)
+        elapsed += clock() - started + cost
         spent += rollouts
     tree = posterior.tree()
     return Decided(
         regret=draw.regret(int(np.argmax((values or expected_maxima)(tree)))),
         regret_by_mean=draw.regret(int(np.argmax(posterior_means(tree)))),
         rollouts=spent,
-        choosing=elapsed - spent * budget.rollout_seconds,
+        choosing=elapsed - rolling,
         stopped=stopped,
         choices=choices,
         fallbacks=fallbacks,
@@ -142,8 +162,29 @@ def decide(
 
 
 def expected_maxima(tree: BeliefTree) -> Floats:
-    """Root action values if all uncertainty were resolved before each later decision; (n_actions,)."""
-    return voc.price(tree, Query()).value
+    """Root action values if all uncertainty were resolved before each later decision; (n_actions,).
+
+    Exact, but for win/loss trees with chance below a choice, which no exact method covers: there the
+    average over _DRAWS draws of all leaf values, the same draws for equal beliefs.
+    """
+    try:
+        return voc.price(tree, _NO_ROLLOUTS).value
+    except RefusedError:
+        if tree.alpha is None:
+            raise
+        return sampled_maxima(tree)
+
+
+def sampled_maxima(tree: BeliefTree, draws: int = _DRAWS) -> Floats:
+    """`expected_maxima` of a win/loss tree by sampling; standard error below range / sqrt(draws) / 2."""
+    assert tree.alpha is not None
+    assert tree.beta is not None
+    assert tree.low is not None
+    assert tree.high is not None
+    rng = np.random.default_rng(0)
+    odds = rng.beta(tree.alpha[:, None], tree.beta[:, None], size=(tree.n_leaves, draws))
+    leaf_values = tree.low[:, None] + (tree.high - tree.low)[:, None] * odds
+    return np.asarray(action_values(tree, leaf_values).mean(axis=1))
 
 
 def posterior_means(tree: BeliefTree) -> Floats:

@@ -1,21 +1,17 @@
-"""Policies: ways to choose the next rollout, compared on the same decisions."""
+"""Policies that need no value of computation: even, UCT, Thompson sampling and its relatives."""
 
 from __future__ import annotations
 
-import math
-from collections.abc import Callable
-from dataclasses import dataclass
-from typing import Any, NamedTuple, Protocol
+from dataclasses import dataclass, replace
+from typing import NamedTuple, Protocol
 
 import numpy as np
 
 from distill.allocation import Search as Posterior
 from distill.errors import InputError
-from distill.query import Priced, Query
-from distill.runtime import Scorer
-from distill.tree import BeliefTree, Ints, leaf_table
+from distill.tree import BeliefTree, Ints
 
-__all__ = ["ByRule", "ByScorer", "ByValue", "Choice", "Policy", "TopTwoThompson", "leaf_actions"]
+__all__ = ["ByRule", "Choice", "Policy", "TopTwoThompson", "WithPrior", "leaf_actions"]
 
 
 class Choice(NamedTuple):
@@ -30,7 +26,11 @@ class Choice(NamedTuple):
 
 
 class Policy(Protocol):
-    """Chooses rollouts for one decision after another. `name` stands in tables and files."""
+    """Chooses rollouts for one decision after another. `name` stands in tables and files.
+
+    A policy with beliefs of its own may offer `observe(leaf, observed, rollouts)` too: it is called with
+    what `distill.allocation.Search.observe` takes, after every choice, on the policy's time.
+    """
 
     @property
     def name(self) -> str:
@@ -45,8 +45,9 @@ class Policy(Protocol):
 
 @dataclass
 class ByRule:
-    """One of the rules of `distill.allocation`: even, uct, thompson or static_rate.
+    """One of the rules of `distill.allocation` (even, uct, thompson, static_rate), or static_voc.
 
+    static_voc : the knowledge gradient of one rollout: the static rate when no batch but 1 is looked at.
     exploration : UCT's constant, in units of the tree's scale.
     """
 
@@ -63,6 +64,8 @@ class ByRule:
 
     def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice:
         """One rollout where the rule says."""
+        if self.rule == "static_voc":
+            return Choice(posterior.pick("static_rate", rng, remaining=1))
         return Choice(posterior.pick(self.rule, rng, remaining=remaining, exploration=self.exploration))
 
 
@@ -78,7 +81,7 @@ class TopTwoThompson:
             raise InputError("share", "must be above 0 and at most 1", share)
         self.share = share
         self.tries = tries
-        self.name = "top_two_thompson"
+        self.name = "top_two_thompson" if share == 0.5 else f"top_two_thompson-{share:g}"
         self._action: Ints = np.zeros(0, dtype=np.int64)
 
     def begin(self, tree: BeliefTree) -> None:
@@ -97,91 +100,44 @@ class TopTwoThompson:
         return Choice(leader)
 
 
-class ByValue:
-    """The candidate with the best value of computation, by any function that prices trees.
+class WithPrior:
+    """A policy that chooses by a prior of its own: tuned Thompson sampling is Thompson sampling so.
 
-    price : (tree, query) -> Priced, for instance `distill.voc.price`.
-    horizon : 0 static, inf dynamic. rate : best VOC a rollout over batches, else of one rollout.
-    commit : spend the rate's whole batch before choosing again; else one rollout at a time.
-    rollout_price : value units; the search stops where no candidate is worth more a rollout.
-    Where no value stands out from 0 the static rate decides, so that late rollouts keep an order. Such
-    choices are marked: a policy that mostly falls back is the static rate under another name.
+    width : factor on the standard deviation of every leaf's prior (win/loss: its trials are divided by
+        width^2, its mean kept). What is acted on in the end are the beliefs of the tree, as for everyone.
     """
 
-    def __init__(
-        self,
-        price: Callable[[BeliefTree, Query], Priced],
-        *,
-        horizon: float = math.inf,
-        rate: bool = True,
-        commit: bool = False,
-        rollout_price: float = 0.0,
-        name: str = "",
-    ) -> None:
-        if not rollout_price >= 0:
-            raise InputError("rollout_price", "must be >= 0", rollout_price)
-        self._price = price
-        self.horizon = horizon
-        self.rate = rate
-        self.commit = commit
-        self.rollout_price = rollout_price
-        words = {0.0: "static", math.inf: "dynamic"}.get(horizon, f"horizon{horizon:g}")
-        self.name = name or f"exact_{words}_{'rate' if rate else 'voc'}"
+    def __init__(self, policy: Policy, width: float) -> None:
+        if not 0 < width < np.inf:
+            raise InputError("width", "must be above 0 and finite", width)
+        self._policy = policy
+        self.width = width
+        self.name = policy.name if width == 1 else f"{policy.name}-prior{width:g}"
+        self._own: Posterior | None = None
 
     def begin(self, tree: BeliefTree) -> None:
-        """Nothing to prepare."""
+        """The tree with the policy's own prior."""
+        if tree.var is not None:
+            tree = replace(tree, var=tree.var * self.width**2)
+        elif tree.cov is not None:
+            tree = replace(tree, cov=tree.cov * self.width**2)
+        else:
+            assert tree.alpha is not None
+            assert tree.beta is not None
+            tree = replace(tree, alpha=tree.alpha / self.width**2, beta=tree.beta / self.width**2)
+        self._own = Posterior(tree)
+        self._policy.begin(tree)
 
     def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice | None:
-        """The best candidate, or None where none is worth `rollout_price`."""
-        query = Query(horizon=self.horizon, batch=None if self.rate else 1, remaining=remaining)
-        priced = self._price(posterior.tree(), query)
-        best = int(np.argmax(priced.voc))
-        if self.rollout_price > 0 and priced.voc[best] <= self.rollout_price:
-            return None
-        if not priced.voc[best] > priced.error[best]:
-            return Choice(posterior.pick("static_rate", rng, remaining=remaining), fell_back=True)
-        return Choice(best, int(priced.batch[best]) if self.commit else 1)
+        """The policy's choice under its own beliefs."""
+        del posterior
+        assert self._own is not None
+        return self._policy.choose(self._own, remaining, rng)
 
-
-class ByScorer:
-    """The leaf that a shipped scorer picks, from the arrays that an agent keeps anyway.
-
-    scorer : `distill.runtime.Scorer`, for independent Gaussian leaves under decision nodes.
-    commit, rollout_price : as for `ByValue`; both read all of the scorer's outputs instead of its pick.
-    """
-
-    def __init__(
-        self, scorer: Scorer, *, name: str = "scorer", commit: bool = False, rollout_price: float = 0.0
-    ) -> None:
-        if not rollout_price >= 0:
-            raise InputError("rollout_price", "must be >= 0", rollout_price)
-        self.scorer = scorer
-        self.commit = commit
-        self.rollout_price = rollout_price
-        self.name = name
-        self._fixed: dict[str, Any] = {}
-
-    def begin(self, tree: BeliefTree) -> None:
-        """The columns of the leaf table that rollouts do not change."""
-        table = leaf_table(tree)
-        self._fixed = {
-            "noise_var": table.noise_var,
-            "gain": table.gain,
-            "offset": table.offset,
-            "action": table.action,
-            "cost": table.cost,
-        }
-
-    def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice | None:
-        """One call of the scorer."""
-        del rng  # the protocol passes it
-        mean, var = posterior.moments
-        if not self.commit and self.rollout_price == 0:
-            return Choice(self.scorer.pick(mean=mean, var=var, remaining=remaining, **self._fixed))
-        scores = self.scorer.score(mean=mean, var=var, remaining=remaining, **self._fixed)
-        if self.rollout_price > 0 and scores.voc[scores.pick] <= self.rollout_price:
-            return None
-        return Choice(scores.pick, max(int(scores.batch[scores.pick]), 1) if self.commit else 1)
+    def observe(self, leaf: int, observed: float, rollouts: int) -> None:
+        """Keep the own beliefs up to date."""
+        assert self._own is not None
+        self._own.observe(leaf, observed, rollouts)
 
 
 def leaf_actions(tree: BeliefTree) -> Ints:

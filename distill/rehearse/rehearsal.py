@@ -6,7 +6,7 @@ import hashlib
 import io
 import json
 import os
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
+from joblib import Parallel, delayed
 
 from distill import __version__
 from distill.errors import InputError
@@ -21,6 +22,7 @@ from distill.files import write_atomic
 from distill.rehearse.loop import Budget, Decided, decide
 from distill.rehearse.policies import Policy
 from distill.rehearse.problems import Problem
+from distill.rehearse.remembered import Remembered
 from distill.tree import BeliefTree, Floats
 
 __all__ = ["Cell", "Compared", "compare", "rehearse"]
@@ -71,13 +73,16 @@ def rehearse(
     seeds: int = 400,
     first_seed: int = 0,
     values: Callable[[BeliefTree], Floats] | None = None,
+    workers: int = 1,
     progress: Callable[[int, int], None] | None = None,
 ) -> list[Cell]:
     """Every policy on every problem under every budget, on the same `seeds` decisions.
 
-    folder : takes one Parquet file a cell, written in one step when the cell is done. Run again with the
-        same arguments, cells that are there are read instead of run: a killed rehearsal resumes.
-    values : what the agent acts on, as for `decide`. progress : called with cells done and in all.
+    folder : takes one Parquet file a cell, written when all policies of its problem and budget are done:
+        they take turns, decision by decision, so that a busy spell of the machine falls on all alike. Run
+        again with the same arguments, cells that are there are read: a killed rehearsal resumes.
+    values : what the agent acts on, as for `decide`. workers : processes, each with a problem at a time.
+    progress : called with cells done and in all, in this process.
 
     Raises InputError for repeated names, fewer than 2 seeds, or a folder of another rehearsal.
     """
@@ -87,40 +92,73 @@ def rehearse(
         raise InputError("seeds", "must be at least 2", seeds)
     folder = Path(folder)
     _claim(folder, {"seeds": seeds, "first_seed": first_seed, "version": __version__})
-    todo = [(problem, budget, policy) for problem in problems for budget in budgets for policy in policies]
-    cells = []
-    for done, (problem, budget, policy) in enumerate(todo):
-        path = folder / _file_name(problem.name, budget, policy.name)
-        if path.exists():
-            cells.append(_read(path, problem.name, budget, policy.name, seeds))
-        else:
-            results = list(_run(problem, policy, budget, range(first_seed, first_seed + seeds), values))
-            columns = {c: np.array([getattr(r, c) for r in results], dtype=np.float64) for c in _COLUMNS}
-            cells.append(Cell(problem.name, budget, policy.name, **columns))
-            _write(path, cells[-1], first_seed)
+    span = range(first_seed, first_seed + seeds)
+    total = len(problems) * len(budgets) * len(policies)
+    cells: list[Cell] = []
+    if workers == 1:
+        parts: Iterable[list[Cell]] = (
+            part
+            for problem in problems
+            for part in _of_problem(problem, policies, budgets, folder, span, values)
+        )
+    else:
+        jobs = (
+            delayed(_all_of_problem)(problem, policies, budgets, folder, span, values) for problem in problems
+        )
+        parts = Parallel(n_jobs=workers, return_as="generator", batch_size=1)(jobs)
+    for part in parts:
+        cells += part
         if progress is not None:
-            progress(done + 1, len(todo))
+            progress(len(cells), total)
     return cells
+
+
+def _all_of_problem(*arguments: Any) -> list[Cell]:
+    return [cell for part in _of_problem(*arguments) for cell in part]
+
+
+def _of_problem(
+    problem: Problem,
+    policies: Sequence[Policy],
+    budgets: Sequence[Budget],
+    folder: Path,
+    seeds: range,
+    values: Callable[[BeliefTree], Floats] | None,
+) -> Iterator[list[Cell]]:
+    """The cells of one problem, a budget at a time, in the order of `policies`."""
+    remembered = Remembered(problem)
+    for budget in budgets:
+        paths = {policy.name: folder / _file_name(problem.name, budget, policy.name) for policy in policies}
+        missing = [policy for policy in policies if not paths[policy.name].exists()]
+        made = {}
+        for policy, results in zip(missing, _run(remembered, missing, budget, seeds, values), strict=True):
+            columns = {c: np.array([getattr(r, c) for r in results], dtype=np.float64) for c in _COLUMNS}
+            made[policy.name] = Cell(problem.name, budget, policy.name, **columns)
+            _write(paths[policy.name], made[policy.name], seeds.start)
+        yield [
+            made[name] if name in made else _read(path, problem.name, budget, name, len(seeds))
+            for name, path in paths.items()
+        ]
 
 
 def _run(
     problem: Problem,
-    policy: Policy,
+    policies: Sequence[Policy],
     budget: Budget,
     seeds: range,
     values: Callable[[BeliefTree], Floats] | None,
-) -> Iterator[Decided]:
-    # Compiling and first use belong to no decision's clock. The seed is none of those compared.
-    decide(
-        problem.draw(_warm_seed(seeds)), policy, Budget(rollouts=2), np.random.default_rng(0), values=values
-    )
+) -> list[list[Decided]]:
+    """What came of each policy's decisions."""
+    for policy in policies:
+        # Compiling and first use belong to no decision's clock. The seed is none of those compared.
+        warm = problem.draw(seeds.stop)
+        decide(warm, policy, Budget(rollouts=2), np.random.default_rng(0), values=values)
+    results: list[list[Decided]] = [[] for _ in policies]
     for seed in seeds:
-        rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
-        yield decide(problem.draw(seed), policy, budget, rng, values=values)
-
-
-def _warm_seed(seeds: range) -> int:
-    return seeds.stop
+        for policy, decided in zip(policies, results, strict=True):
+            rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
+            decided.append(decide(problem.draw(seed), policy, budget, rng, values=values))
+    return results
 
 
 @dataclass(frozen=True)

@@ -171,7 +171,9 @@ class Search:
 
 
 def action_values(tree: BeliefTree, leaf_values: Floats) -> Floats:
-    """Root action values when leaf values are as given (shape (n_leaves,)); shape (n_actions,).
+    """Root action values when leaf values are as given; shape (n_actions,) for shape (n_leaves,).
+
+    Several sets of leaf values at once, shape (n_leaves, m), give shape (n_actions, m).
 
     >>> from distill.record import from_record
     >>> t = from_record({"format": "belief-tree/1", "parent": [-1, 0, 0],
@@ -180,15 +182,19 @@ def action_values(tree: BeliefTree, leaf_values: Floats) -> Floats:
     >>> action_values(t, np.array([2.0, 2.5]))
     array([3. , 2.5])
     """
-    value = np.where(tree.kind == schema.DECISION, -np.inf, 0.0)
+    several = leaf_values.ndim == 2
+    value = np.zeros((tree.n_nodes, *leaf_values.shape[1:]))
+    value[tree.kind == schema.DECISION] = -np.inf
     value[tree.leaf_nodes] = leaf_values
     parent, decision = tree.parent.tolist(), (tree.kind == schema.DECISION).tolist()
+    largest = np.maximum if several else max  # the plain one is faster on single numbers
     for v in range(tree.n_nodes - 1, 0, -1):
         q = tree.reward[v] + tree.discount[v] * value[v]
         p = parent[v]
-        value[p] = max(value[p], q) if decision[p] else value[p] + tree.prob[v] * q
-    actions = tree.action_nodes
-    return np.asarray(tree.reward[actions] + tree.discount[actions] * value[actions])
+        value[p] = largest(value[p], q) if decision[p] else value[p] + tree.prob[v] * q
+    roots = tree.reward[tree.action_nodes], tree.discount[tree.action_nodes]
+    reward, discount = (x[:, None] for x in roots) if several else roots
+    return np.asarray(reward + discount * value[tree.action_nodes])
 
 
 def _returns(

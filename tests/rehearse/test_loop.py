@@ -17,9 +17,10 @@ from distill.errors import InputError
 from distill.rehearse.catalogue import environment_problems, synthetic_problems
 from distill.rehearse.gym_tables import GymTable
 from distill.rehearse.loop import Budget, decide, posterior_means
-from distill.rehearse.policies import ByRule, ByScorer, ByValue, Choice, TopTwoThompson, leaf_actions
+from distill.rehearse.policies import ByRule, Choice, TopTwoThompson, leaf_actions
 from distill.rehearse.problems import SimulatorProblem, TreeProblem
 from distill.rehearse.search import Settings, action_values
+from distill.rehearse.value_policies import ByScorer, ByValue
 from distill.runtime import Scorer
 
 STATIC = {"horizon": 0.0}

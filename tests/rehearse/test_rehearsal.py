@@ -12,9 +12,10 @@ from ladder import CLOSED_FORM
 from distill import voc
 from distill.errors import InputError
 from distill.rehearse.loop import Budget, posterior_means
-from distill.rehearse.policies import ByRule, ByValue
+from distill.rehearse.policies import ByRule
 from distill.rehearse.problems import TreeProblem
 from distill.rehearse.rehearsal import Cell, compare, rehearse
+from distill.rehearse.value_policies import ByValue
 
 PROBLEMS = [TreeProblem(3), TreeProblem(2, 2, 2, noise_var=None)]
 POLICIES = [ByRule("even"), ByRule("thompson")]
@@ -37,7 +38,7 @@ class Unwilling:
 def test_cells_are_paired_and_resumed(tmp_path):
     seen = []
     cells = run(tmp_path, progress=lambda done, of: seen.append((done, of)))
-    assert seen == [(i, 8) for i in range(1, 9)]
+    assert seen == [(2, 8), (4, 8), (6, 8), (8, 8)]  # both policies of a problem and budget at a time
     assert [(c.problem, c.budget, c.policy) for c in cells][:2] == [
         (PROBLEMS[0].name, BUDGETS[0], "even"),
         (PROBLEMS[0].name, BUDGETS[0], "thompson"),

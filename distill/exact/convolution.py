@@ -3,8 +3,7 @@
     f_(X+Y)(z) = sum over atoms + integral of f_X(x) f_Y(z - x) dx
 
 X's own quadrature serves where Y is smooth across its panels; where a jump or a much finer panel of Y falls
-into one, the panel is split at Y's edges, and polynomial times polynomial is integrated exactly. All terms
-are positive.
+into one, the panel is split at Y's edges, and polynomial times polynomial is integrated exactly.
 """
 
 from __future__ import annotations
@@ -96,7 +95,7 @@ def _density_at(x: Distribution, at: float) -> float:
         return 0.0
     p = min(int(np.searchsorted(x.edges, at, side="right")) - 1, P - 1)
     t = (at - x.edges[p]) / (x.edges[p + 1] - x.edges[p]) * 2.0 - 1.0
-    return max(chebyshev(x.density, p, N - 1, t), 0.0)
+    return float(chebyshev(x.density, p, N - 1, t))
 
 
 @compiled
@@ -143,7 +142,7 @@ def _sum_density(x: Distribution, y: Distribution, at: Floats) -> Floats:
                         s -= 1
                     if y.edges[0] <= v <= y.edges[Q]:
                         t = (v - y.edges[s]) / (y.edges[s + 1] - y.edges[s]) * 2.0 - 1.0
-                        total += x.mass[i] * max(chebyshev(y.density, s, N - 1, t), 0.0)
+                        total += x.mass[i] * chebyshev(y.density, s, N - 1, t)
         out[j] = total
     return out
 
@@ -161,7 +160,7 @@ def _product_integral(
         t = u + half + half * _T[i]
         f = chebyshev(x.density, p, N - 1, (t - x.edges[p]) * x_scale - 1.0)
         g = chebyshev(y.density, s, N - 1, (z - t - y.edges[s]) * y_scale - 1.0)
-        total += _W[i] * max(f, 0.0) * max(g, 0.0)
+        total += _W[i] * f * g
     return half * total
 
 

@@ -40,12 +40,12 @@ def _slope(T: Distribution, y: float, tau: float, t: Floats, m: Floats) -> float
         if tau == 0.0:
             for i in range(n):
                 total += m[i]
-            return total
+            return max(total, 0.0)
         for i in range(n):
             total += m[i] * norm_cdf(t[i] / tau)
         if total > _BULK:
             break
-    return total
+    return max(total, 0.0)
 
 
 @compiled
@@ -269,7 +269,11 @@ def threshold_voc(
             sd_after = math.sqrt(s[k] * s[k] + tau[k] * tau[k])
             if sd_after > sd_now * (1.0 + 1e-14):
                 voc[k], error[k] = _gain_of_variance(T, mu, sd_now, sd_after, t, m)
-                error[k] += 1e-13 * voc[k] + 0.25 * T.error * min(math.log(sd_after / sd_now), 8.0)
+                voc[k] = max(voc[k], 0.0)
+                # An error of T swings e by at most T.error, and each e averages it with its own normal:
+                # their difference by no more than the total variation between the two.
+                apart = min(0.5 * math.log(sd_after / sd_now), 1.0)
+                error[k] += 1e-13 * voc[k] + apart * T.error
         if target <= -slack:
             continue
         if target <= 0.0:
@@ -279,7 +283,8 @@ def threshold_voc(
         y0 = _crossing(T, tau[k], target, start, t, m)
         value, quad = _beyond(T, y0, mu, s[k], tau[k], not best, t, m)
         voc[k] += value
-        # What is known of the value at an outcome carries over with the odds of such an outcome.
+        # At an outcome y the value is known to T.error + slack, for e_tau(y) - e_now is off by T.error at
+        # most; that carries over with the odds of such an outcome. Twice it: T.error is partly estimated.
         _e0, slope0 = _excess(T, y0, tau[k], t, m)
         z = (mu - y0) / s[k] if not best else (y0 - mu) / s[k]
         odds = norm_cdf(z + min(slack / (s[k] * max(slope0, 1e-300)), 1e6))

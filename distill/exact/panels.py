@@ -7,7 +7,7 @@ from collections.abc import Callable
 import numpy as np
 
 from distill.exact.distributions import COEFFICIENTS, Distribution, N, chebyshev, evaluate, fit, nodes_of
-from distill.numerics import compiled, gauss_legendre
+from distill.numerics import compiled, gauss_legendre, legendre_antiderivative
 from distill.tree import Floats
 
 __all__ = ["held", "lay_out", "resolved"]
@@ -18,6 +18,7 @@ _NOTHING = 1e-60  # mass that no label can tell from none
 _MAX_HALVINGS = 8
 _EPS = 2.0**-52
 _T, _W = gauss_legendre(N)
+_CUMULATE = legendre_antiderivative(N)
 
 
 @compiled
@@ -180,11 +181,11 @@ def trimmed(x: Distribution) -> Distribution:
     """X without the panels at either end that carry nothing."""
     P = len(x.edges) - 1
     first, last = 0, P
-    while first < last and x.panel_mass[first] <= _NOTHING:
+    while first < last and abs(x.panel_mass[first]) <= _NOTHING:
         if len(x.atom_at) and x.atom_at[0] <= x.edges[first]:
             break
         first += 1
-    while last > first and x.panel_mass[last - 1] <= _NOTHING:
+    while last > first and abs(x.panel_mass[last - 1]) <= _NOTHING:
         if len(x.atom_at) and x.atom_at[-1] >= x.edges[last]:
             break
         last -= 1
@@ -281,22 +282,33 @@ def _merged(x: Distribution, tolerance: float) -> Distribution:
 
 @compiled
 def _distance(x: Distribution, y: Distribution) -> float:
-    """Wasserstein-1 distance of two distributions on the same range: the area between F_X and F_Y."""
+    """Largest | integral of F_X - F_Y over any interval |, both on the same range; Y's panels the wider."""
     F, _f = evaluate(x, y.nodes)
     G, _g = evaluate(y, y.nodes)
     area = 0.0
+    low = 0.0
+    high = 0.0
     for p in range(len(y.edges) - 1):
         half = 0.5 * (y.edges[p + 1] - y.edges[p])
+        whole = 0.0
         for i in range(N):
-            area += _W[i] * half * abs(F[p * N + i] - G[p * N + i])
-    return area
+            inside = 0.0
+            for j in range(N):
+                inside += _CUMULATE[i, j] * (F[p * N + j] - G[p * N + j])
+            low = min(low, area + half * inside)
+            high = max(high, area + half * inside)
+            whole += _W[i] * (F[p * N + i] - G[p * N + i])
+        area += half * whole
+        low = min(low, area)
+        high = max(high, area)
+    return high - low
 
 
 @compiled
 def _on_panel(x: Distribution, p: int, at: float) -> float:
     """Density at a point of panel p."""
     t = (at - x.edges[p]) / (x.edges[p + 1] - x.edges[p]) * 2.0 - 1.0
-    return max(chebyshev(x.density, p, N - 1, t), 0.0)
+    return float(chebyshev(x.density, p, N - 1, t))
 
 
 @compiled

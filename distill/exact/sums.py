@@ -218,7 +218,7 @@ def _finer(x: Distribution, width: float) -> tuple[Floats, Floats]:
             for i in range(N):
                 u = (2 * q + 1 + _T[i]) * half
                 nodes[n] = x.edges[p] + full * u
-                mass[n] = _W[i] * half * full * max(chebyshev(x.density, p, N - 1, 2.0 * u - 1.0), 0.0)
+                mass[n] = _W[i] * half * full * chebyshev(x.density, p, N - 1, 2.0 * u - 1.0)
                 n += 1
     return nodes, mass
 

@@ -35,7 +35,8 @@ class Candidates:
     columns : LEAF_COLUMNS, each of shape (n,). tree : the tree of each row. label : exact value, u a
     rollout for a rate. batch : rollouts of the label. error : bound on the label's error, same unit.
     is_rate : whether the label is a rate. decision : of recorded trees, a number of the decision that each
-    row's tree was met in; None where no record says.
+    row's tree was met in; None where no record says. weight : of each row's tree, where trees were sampled
+    with unequal chances; None where they all count alike.
     """
 
     columns: Mapping[str, Any]
@@ -45,6 +46,7 @@ class Candidates:
     error: Floats
     is_rate: bool = True
     decision: NDArray[np.uint64] | None = None
+    weight: Floats | None = None
 
     @classmethod
     def read(cls, dataset: str | os.PathLike[str]) -> tuple[Candidates, dict[str, Any]]:
@@ -91,6 +93,8 @@ class Candidates:
         columns["remaining"] = columns["remaining"].astype(float)
         batches = rows["label_batch"].astype(float)
         out = cls(columns, rows["tree"], rows["label"], batches, rows["error"], is_rate)
+        if "weight" in rows and np.any(rows["weight"] != 1):
+            out = replace(out, weight=rows["weight"])
         return replace(out, decision=_decisions(folder, manifest, out)), about
 
     @property
@@ -109,12 +113,18 @@ class Candidates:
             self.error[rows],
             self.is_rate,
             None if self.decision is None else self.decision[rows],
+            None if self.weight is None else self.weight[rows],
         )
 
     @property
     def clusters(self) -> NDArray[np.uint64] | None:
         """The decision of each tree, where recorded: its stages are no independent trees."""
         return None if self.decision is None else self.decision[self.groups.starts]
+
+    @property
+    def tree_weights(self) -> Floats | None:
+        """The weight of each tree, in order of appearance; None where all count alike."""
+        return None if self.weight is None else self.weight[self.groups.starts]
 
     def keys(self) -> NDArray[np.uint64]:
         """A number a tree; trees of equal numbers belong together: one decision, or the same beliefs."""

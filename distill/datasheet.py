@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any
 
 from distill import schema
@@ -15,30 +16,25 @@ def datasheet(manifest: dict[str, Any], columns: dict[str, dict[str, str]]) -> s
     columns : file kind -> column -> meaning and unit.
     """
     source, asked, totals = manifest["source"], manifest["asked"], manifest["totals"]
-    from_what = (
-        f"drawn from the family `{source['name']}` (`family.toml` here) with seed {manifest['seed']}"
-        if source["kind"] == "family"
-        else f"recorded: `{source['name']}`; where only a part was taken, picked with seed {manifest['seed']}"
-    )
     rate = asked["batch"] == "rate"
     what = "rate (best VOC a rollout over all batches)" if rate else f"VOC of {asked['batch']} rollouts"
-    code = ", ".join(f"{name} {version}" for name, version in manifest["code"].items())
     page = f"""\
 # Labelled belief trees: {source["name"]}
 
 {totals["trees"]:,} trees with {totals["candidates"]:,} candidates, each with its exact value of
 computation and an error bound.
 
-- **Trees**: {from_what}. SHA-256 of the source: `{source["sha256"]}`.
+- **Trees**: {_origin(manifest)}. SHA-256 of the source: `{source["sha256"]}`.
+- **Sampling**: {_sampling(manifest["sampling"])}
 - **Label**: {what}; horizon: {_horizon(asked["value"])}; rollouts left: {asked["remaining"]}.
 - **Tolerance**: {_tolerance(asked["tolerance"])}.
 - **Kept aside**: {totals["aside"]:,} trees without a label good enough, with the reason, in
   `aside-*.parquet`.
-- **Made with**: {code}.
+{_additions(manifest.get("added", ()))}- **Made with**: {_versions(manifest["code"])}.
 - **Files**: format `{schema.DATASET_FORMAT}`; {len(manifest["shards"])} shards, row counts and SHA-256 in
   `manifest.json`. Any Parquet reader opens them.
 - **Same again**: the source, the seed, the question and the versions above give the same bytes on the same
-  kind of machine, with any number of workers.
+  kind of machine, with any number of workers, on one machine or on a cluster.
 
 Synthetic trees say nothing about an agent whose trees look different: compare before use.
 """
@@ -47,6 +43,43 @@ Synthetic trees say nothing about an agent whose trees look different: compare b
         lines += ["", f"## {kind}-*.parquet", "", "| column | meaning and unit |", "| --- | --- |"]
         lines += [f"| `{name}` | {text} |" for name, text in described.items()]
     return page + "\n".join(lines) + "\n"
+
+
+def _origin(manifest: dict[str, Any]) -> str:
+    source, seed = manifest["source"], manifest["seed"]
+    family, traces = source.get("family", source)["name"], source.get("traces", source)["name"]
+    family = f"drawn from the family `{family}` (`family.toml` here) with seed {seed}"
+    traces = f"recorded: `{traces}`; where only a part was taken, picked with seed {seed}"
+    if source["kind"] == "mix":
+        return f"{source['recorded']:,} of {manifest['trees']:,} {traces}. The others {family}"
+    return family if source["kind"] == "family" else traces
+
+
+def _sampling(sampling: dict[str, Any]) -> str:
+    factor = sampling["close_calls"]
+    if factor == 1:
+        return "none; every tree has weight 1."
+    bounds, chances = sampling["bounds"], sampling["chances"]
+    rule = ", ".join(f"{c:g} from {b:g} on" for b, c in zip(bounds, chances[1:], strict=True))
+    return f"""\
+of {factor} trees looked at one was labelled, close calls more often. Chances in proportion to
+  {chances[0]:g}; {rule}, by what is at stake: the static value of all rollouts left at the best leaf, as a
+  share of the tree's scale. Weigh trees by `weight` for figures of the trees as they came."""
+
+
+def _additions(added: Sequence[dict[str, Any]]) -> str:
+    return "".join(
+        f"""\
+- **Added later**: {a["trees"]:,} recorded trees of `{a["name"]}`, from number {a["first_tree"]} on, with
+  weight 1; {a["known"]:,} more were here already. SHA-256 of the source: `{a["sha256"]}`.
+  Made with: {_versions(a["code"])}.
+"""
+        for a in added
+    )
+
+
+def _versions(code: dict[str, str]) -> str:
+    return ", ".join(f"{name} {version}" for name, version in code.items())
 
 
 def _horizon(value: object) -> str:

@@ -4,13 +4,22 @@ DistillError            anything the tool refuses; the command line prints it an
 +-- InputError          a record, family, dataset or flag breaks a rule
 +-- RefusedError        well-formed, but no method here can do it exactly
 |   +-- ToleranceError  a method exists and misses the tolerance that was asked for
++-- WorkersError        processes or a cluster that should have done the work were lost
 +-- ScorerFileError     a scorer file that the loader does not accept
 +-- ExportError         an estimator that cannot be shipped as it is, or a file that fails its checks
 """
 
 from __future__ import annotations
 
-__all__ = ["DistillError", "InputError", "RefusedError", "ToleranceError", "ScorerFileError", "ExportError"]
+__all__ = [
+    "DistillError",
+    "InputError",
+    "RefusedError",
+    "ToleranceError",
+    "WorkersError",
+    "ScorerFileError",
+    "ExportError",
+]
 
 
 class DistillError(Exception):
@@ -51,6 +60,10 @@ class RefusedError(DistillError):
 
 class ToleranceError(RefusedError):
     """A method exists, but its error bound exceeds the tolerance that was asked for."""
+
+
+class WorkersError(DistillError):
+    """Processes or a cluster that should have done the work were lost; what is done is kept."""
 
 
 class ScorerFileError(DistillError):

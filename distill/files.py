@@ -14,7 +14,7 @@ def write_atomic(path: str | os.PathLike[str], data: bytes) -> None:
     """Write a file so that a reader sees the old bytes or the new ones, never a part.
 
     The data go to a temporary file in the same folder, are flushed to disk, and take the name in one
-    step. OSError passes through, with the temporary file removed.
+    step. OSError passes through and names the path; the temporary file is removed.
     """
     path = Path(path)
     path.parent.mkdir(parents=True, exist_ok=True)
@@ -26,8 +26,10 @@ def write_atomic(path: str | os.PathLike[str], data: bytes) -> None:
             os.fsync(f.fileno())
         Path(temporary).chmod(0o644)
         Path(temporary).replace(path)
-    except BaseException:
+    except BaseException as e:
         Path(temporary).unlink(missing_ok=True)
+        if isinstance(e, OSError) and e.filename is None:
+            e.filename = str(path)  # a full disk does not say which file
         raise
 
 

@@ -1,326 +1,328 @@
 """Trees in, exact labels out: fills a dataset folder, shard by shard, and resumes where it stopped; floor 5.
 
-The plan (source, seed, what is asked, shard size, code version) fixes every byte of every shard, whoever
-writes it: shard p holds trees p x size to (p + 1) x size - 1. The manifest takes a shard in after its
-files are whole, so a run that is killed at any moment resumes to the same bytes, with any number of
-workers.
+The plan (source, seed, what is asked, sampling, shard size, code version) fixes every byte of every shard,
+whoever labels it: shard p holds trees p x size to (p + 1) x size - 1. The manifest takes a shard in after
+its files are whole, so a run that is killed at any moment resumes to the same bytes, with any number of
+workers, here or on a cluster. Only this process writes: workers send bytes back.
+
+Memory: this process holds the manifest, 8 bytes a recorded tree and the shards on their way; a worker
+holds one shard. About 25 kB a tree of 27 leaves, so 25 MB a shard of 1,000, whatever the size of the whole.
 """
 
 from __future__ import annotations
 
+import contextlib
 import dataclasses
-import functools
-import hashlib
-import importlib.metadata
-import json
+import errno
 import math
 import os
-from collections.abc import Callable, Iterable, Iterator, Sequence
-from dataclasses import dataclass
+from collections.abc import Iterable, Iterator
 from pathlib import Path
-from typing import Any, Final, Protocol
+from typing import Any, Final
 
 import numpy as np
-from joblib import Parallel, delayed
 
-from distill import schema, shards, traces, voc
+from distill import schema, shards
+from distill.close_calls import BOUNDS, CHANCES
 from distill.datasheet import datasheet
-from distill.errors import InputError, RefusedError, ToleranceError
-from distill.family import Family, draw
+from distill.errors import InputError, WorkersError
 from distill.files import write_atomic
-from distill.query import Priced, Query, resolve
-from distill.record import to_record
-from distill.shards import Labelled
+from distill.labelling import Asked, code_versions, label_shard
+from distill.sources import Batch, Mix, Plan, Source, Traces, plan_trees, tree_key
 from distill.terminal import bar
-from distill.tree import BeliefTree
+from distill.tree import Ints
+from distill.workers import run_calls
 
-__all__ = ["Asked", "Traces", "generate"]
+__all__ = ["Asked", "Mix", "Traces", "add", "generate"]
 
+_LEAST_SHARD_TREES: Final = 50
 _MOST_SHARD_TREES: Final = 1000
-
-
-@dataclass(frozen=True)
-class Asked:
-    """What is asked of every tree; None takes the tree's own scalar.
-
-    By default the rate, at the tree's own horizon (dynamic where it has none) and `remaining`.
-    horizon : h; 0 static, inf dynamic. batch : rollouts a candidate, instead of the rate.
-    remaining : rollouts left. tolerance : largest error, as a share of the tree's scale.
-    """
-
-    horizon: float | None = None
-    batch: int | None = None
-    remaining: int | None = None
-    tolerance: float | None = None
-
-    def query(self, tree: BeliefTree) -> Query:
-        """The query for one tree."""
-        return resolve(
-            tree,
-            horizon=self.horizon,
-            batch=self.batch,
-            rate=self.batch is None,
-            remaining=self.remaining,
-            tolerance=self.tolerance,
-        )
-
-    def describe(self) -> dict[str, Any]:
-        """As the manifest keeps it."""
-        h = self.horizon
-        return {
-            "value": "the tree's" if h is None else "inf" if math.isinf(h) else h,
-            "batch": "rate" if self.batch is None else self.batch,
-            "remaining": "the tree's" if self.remaining is None else self.remaining,
-            "tolerance": self.tolerance,
-        }
-
-
-class Traces:
-    """Recorded trees as a source of labels.
-
-    name : what they are called in the manifest. trees : the trees, in order.
-    """
-
-    def __init__(self, name: str, trees: Iterable[BeliefTree]) -> None:
-        self.name = name
-        self.trees = list(trees)
-        digest = hashlib.sha256()
-        for tree in self.trees:
-            digest.update(json.dumps(to_record(tree), separators=(",", ":")).encode() + b"\n")
-        self.sha256 = digest.hexdigest()
-
-    @classmethod
-    def read(
-        cls,
-        paths: Sequence[str | os.PathLike[str]],
-        *,
-        on_error: Callable[[InputError], None] | None = None,
-    ) -> Traces:
-        """Traces from files, one after the other; errors as in `distill.traces.read_trees`."""
-        found = [tree for path in paths for _, tree in traces.read_trees(path, on_error=on_error)]
-        return cls(", ".join(Path(p).name for p in paths), found)
+_FULL: Final = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG)
 
 
 def generate(
-    source: Family | Traces,
+    source: Source,
     out: str | os.PathLike[str],
     *,
     trees: int | None = None,
     seed: int = 0,
     asked: Asked | None = None,
     workers: int = 1,
+    dask: str | None = None,
     shard_trees: int | None = None,
+    close_calls: int = 1,
     progress: bool = False,
 ) -> dict[str, Any]:
-    """Label `trees` trees of a family, or recorded ones, into the dataset folder `out`; returns its manifest.
+    """Label trees of a family, recorded ones, or a mix, into the dataset folder `out`; returns its manifest.
 
     trees : how many; traces default to all, and give a seeded sample where fewer are asked for.
     asked : what value; default the rate.
-    workers : processes. The bytes do not depend on it.
+    workers : processes. dask : address of a Dask scheduler, whose workers label instead. The bytes depend
+        on neither.
     shard_trees : trees a shard, the step in which work is saved; default a twentieth of all, 50 to 1,000.
+    close_calls : trees looked at for each one labelled; above 1, those where more is at stake are labelled
+        more often, and weights correct for it.
     progress : show a bar with rate and time left on standard error.
 
     A folder that holds part of the same plan is completed, a finished one is verified and left alone.
-    InputError where it holds another plan, naming what differs. Trees that no exact method prices within
-    the tolerance go to the `aside` files with the reason, and are counted.
+    InputError where it holds another plan, naming what differs; WorkersError where processes or a cluster
+    were lost; OSError where the disk is full. After each of them the same call goes on. Trees that no exact
+    method prices within the tolerance go to the `aside` files with the reason, and are counted.
     """
     asked = asked or Asked()
-    for name, value in (("trees", trees), ("workers", workers), ("shard_trees", shard_trees)):
-        if value is not None and value < 1:
-            raise InputError(name, "must be a whole number from 1", value)
+    _whole_numbers(trees=trees, workers=workers, shard_trees=shard_trees, close_calls=close_calls)
     if seed < 0:
         raise InputError("seed", "must be a whole number >= 0", seed)
-    job: _Job
-    if isinstance(source, Family):
-        if trees is None:
-            raise InputError("trees", "must be given for a family")
-        job = _FamilyJob(source, seed, trees)
-    else:
-        job = _TraceJob(source, seed, trees)
-    if shard_trees is None:
-        shard_trees = min(max(job.total // 20, 50), _MOST_SHARD_TREES)
+    plan = plan_trees(source, trees, seed, factor=close_calls, remaining=asked.remaining)
+    size = shard_trees or _shard_trees(plan.total)
     folder = Path(out)
-    manifest = _open(folder, _plan(source, job.total, seed, asked, shard_trees))
-    if isinstance(source, Family):
-        write_atomic(folder / "family.toml", source.text.encode())
-    done = {entry["part"]: entry for entry in manifest["shards"]}
-    todo = [p for p in range(math.ceil(job.total / shard_trees)) if p not in done]
-    calls = (
-        delayed(_label_shard)(folder, part, first, job.slice(first, last), asked)
-        for part in todo
-        for first, last in [(part * shard_trees, min((part + 1) * shard_trees, job.total))]
-    )
-    pool = Parallel(
-        n_jobs=min(workers, max(len(todo), 1)), return_as="generator_unordered", pre_dispatch="2*n_jobs"
-    )
-    labelled = sum(e["trees"] + e["aside"] for e in done.values())
-    with bar("labelling", job.total, "trees", done=labelled, shown=progress) as advance:
-        for entry in pool(calls):
-            done[entry["part"]] = entry
-            manifest["shards"] = [done[p] for p in sorted(done)]
-            shards.write_manifest(folder, manifest)
-            advance(entry["trees"] + entry["aside"])
-    if not manifest["complete"]:
-        manifest["totals"] = {
-            key: sum(e[key] for e in manifest["shards"]) for key in ("trees", "candidates", "aside")
-        }
-        manifest["complete"] = True
-        page = datasheet(manifest, shards.described_columns())
-        write_atomic(folder / "README.md", page.encode())
-        shards.write_manifest(folder, manifest)
+    with _only_writer(folder), _room():
+        manifest = _open(folder, _described(plan, asked, size))
+        if plan.family is not None:
+            write_atomic(folder / "family.toml", plan.family.text.encode())
+        done = {entry["part"] for entry in manifest["shards"]}
+        todo = [part for part in range(math.ceil(plan.total / size)) if part not in done]
+        batches = plan.batches(todo, size)
+        _fill(
+            folder, manifest, batches, len(todo), asked, manifest["code"], plan.total, workers, dask, progress
+        )
+        if not manifest["complete"]:
+            _finish(folder, manifest)
     return manifest
 
 
-def _label_shard(
-    folder: Path, part: int, first: int, trees: Callable[[], Iterable[BeliefTree]], asked: Asked
+def add(
+    traces: Traces,
+    out: str | os.PathLike[str],
+    *,
+    workers: int = 1,
+    dask: str | None = None,
+    progress: bool = False,
 ) -> dict[str, Any]:
-    drawn = list(trees())
-    queries = []
-    for number, tree in enumerate(drawn, first):
-        try:
-            queries.append(asked.query(tree))
-        except InputError as e:
-            raise e.at(f"tree {number}") from None
-    # Trees that are asked the same go to the engine together, which has faster ways for some of them.
-    alike: dict[Query, list[int]] = {}
-    for i, query in enumerate(queries):
-        alike.setdefault(query if query.rate else dataclasses.replace(query, remaining=None), []).append(i)
-    rows: dict[int, Labelled] = {}
-    for query, group in alike.items():
-        answers = _price([drawn[i] for i in group], query)
-        for i, (priced, reason) in zip(group, answers, strict=True):
-            rows[i] = Labelled(first + i, drawn[i], queries[i], priced, reason)
-    return shards.write_shard(folder, part, [rows[i] for i in range(len(drawn))])
+    """Label recorded trees into new shards of a finished dataset, asked what it asks; returns its manifest.
+
+    Trees that the dataset holds already, labelled or aside, are left out and counted; `id`, `extra` and
+    `count` make no tree another. Added trees have weight 1. An addition that was stopped goes on when it is
+    asked for again, and until then the dataset is unfinished; the code may be another version than that of
+    the first shards, and the manifest has both. InputError where the dataset is unfinished, or another
+    addition to it is.
+    """
+    _whole_numbers(workers=workers)
+    folder = Path(out)
+    with _only_writer(folder, new=False), _room():
+        manifest = shards.read_manifest(folder, partial=True)
+        _sweep(folder, manifest)
+        shards.verify(folder, manifest["shards"])
+        added = manifest.setdefault("added", [])
+        entry = next((a for a in added if not a["complete"]), None)
+        if entry is None:
+            if not manifest["complete"]:
+                raise InputError(str(folder), "must be finished before trees are added: run generate again")
+            first = sum(e["trees"] + e["aside"] for e in manifest["shards"])
+            rows = _new_trees(traces, folder, first)
+            if len(rows) == 0:
+                return manifest
+            entry = {
+                **_of_addition(traces),
+                "trees": len(rows),
+                "known": len(traces) - len(rows),
+                "first_tree": first,
+                "first_part": 1 + max((e["part"] for e in manifest["shards"]), default=-1),
+                "shard_trees": _shard_trees(len(rows)),
+                "complete": False,
+            }
+            added.append(entry)
+            manifest["complete"] = False
+            shards.write_manifest(folder, manifest)
+        else:
+            _compare(f"{folder / shards.MANIFEST}: added", _of_addition(traces), entry)
+            rows = _new_trees(traces, folder, entry["first_tree"])
+        size, first_part = entry["shard_trees"], entry["first_part"]
+        done = {e["part"] for e in manifest["shards"]}
+        todo = [part for part in range(math.ceil(len(rows) / size)) if first_part + part not in done]
+        plan = Plan({}, len(rows), None, traces, rows, np.ones(len(rows)), 0, 1, None)
+        batches = (
+            (first_part + part, dataclasses.replace(batch, first=entry["first_tree"] + batch.first))
+            for part, batch in plan.batches(todo, size)
+        )
+        asked, total = Asked.described(manifest["asked"]), entry["first_tree"] + len(rows)
+        _fill(folder, manifest, batches, len(todo), asked, entry["code"], total, workers, dask, progress)
+        entry["complete"] = True
+        _finish(folder, manifest)
+    return manifest
 
 
-def _price(trees: list[BeliefTree], query: Query) -> list[tuple[Priced | None, str]]:
-    """Labels, and for each tree the reason to keep it aside, empty where there is none."""
+# --- the work --------------------------------------------------------------------------------------
+
+
+def _fill(
+    folder: Path,
+    manifest: dict[str, Any],
+    batches: Iterable[tuple[int, Batch]],
+    count: int,
+    asked: Asked,
+    code: dict[str, str],
+    total: int,
+    workers: int,
+    dask: str | None,
+    progress: bool,
+) -> None:
+    """Label batches and write their shards, each into the manifest when its files are whole."""
+    if count == 0:
+        return
+    calls = ((label_shard, (part, batch, asked)) for part, batch in batches)
+    done = {entry["part"]: entry for entry in manifest["shards"]}
+    labelled = sum(e["trees"] + e["aside"] for e in done.values())
+    results = run_calls(calls, workers=min(workers, count), dask=dask)
+    with (
+        contextlib.closing(results),
+        bar("labelling", total, "trees", done=labelled, shown=progress) as advance,
+    ):
+        for shard in results:
+            _compare("worker", code, shard.code)
+            for name, data in shard.files.items():
+                write_atomic(folder / name, data)
+            done[shard.entry["part"]] = shard.entry
+            manifest["shards"] = [done[part] for part in sorted(done)]
+            shards.write_manifest(folder, manifest)
+            advance(shard.entry["trees"] + shard.entry["aside"])
+
+
+def _finish(folder: Path, manifest: dict[str, Any]) -> None:
+    manifest["totals"] = {
+        key: sum(e[key] for e in manifest["shards"]) for key in ("trees", "candidates", "aside")
+    }
+    manifest["complete"] = True
+    page = datasheet(manifest, shards.described_columns())
+    write_atomic(folder / "README.md", page.encode())
+    shards.write_manifest(folder, manifest)
+
+
+@contextlib.contextmanager
+def _room() -> Iterator[None]:
+    """A full disk and lost workers say that the work can go on."""
+    kept = "finished shards are kept, and the same command goes on from there"
     try:
-        return [(priced, "") for priced in voc.price_many(trees, query)]
-    except RefusedError as e:
-        if len(trees) > 1:
-            return [answer for tree in trees for answer in _price([tree], query)]
-        if isinstance(e, ToleranceError):
-            return [(voc.price(trees[0], dataclasses.replace(query, tolerance=None)), f"tolerance: {e}")]
-        return [(None, f"refused: {e}")]
+        yield
+    except WorkersError as e:
+        raise WorkersError(f"{e}; {kept}") from None
+    except OSError as e:
+        if e.errno not in _FULL:
+            raise
+        raise OSError(e.errno, f"{e.strerror}: {kept} once there is room", e.filename) from None
 
 
-# --- where trees come from -------------------------------------------------------------------------
-
-
-class _Job(Protocol):
-    total: int
-
-    def slice(self, first: int, last: int) -> Callable[[], Iterable[BeliefTree]]:
-        """What a worker needs to have trees first .. last - 1."""
-
-
-@dataclass
-class _FamilyJob:
-    family: Family
-    seed: int
-    total: int
-
-    def slice(self, first: int, last: int) -> Callable[[], Iterable[BeliefTree]]:
-        return _Draws(self.family, self.seed, first, last)
-
-
-@dataclass
-class _Draws:
-    family: Family
-    seed: int
-    first: int
-    last: int
-
-    def __call__(self) -> Iterator[BeliefTree]:
-        return (draw(self.family, self.seed, i) for i in range(self.first, self.last))
-
-
-class _TraceJob:
-    def __init__(self, source: Traces, seed: int, trees: int | None) -> None:
-        n = len(source.trees)
-        if trees is not None and trees > n:
-            raise InputError("trees", f"must be at most {n}, the number of recorded trees", trees)
-        self._trees = source.trees
-        if trees is not None and trees < n:
-            picked = np.random.default_rng([seed, 0x7ACE]).choice(n, trees, replace=False)
-            self._trees = [source.trees[i] for i in np.sort(picked)]
-        self.total = len(self._trees)
-
-    def slice(self, first: int, last: int) -> Callable[[], Iterable[BeliefTree]]:
-        return _Given(self._trees[first:last])
-
-
-@dataclass
-class _Given:
-    trees: list[BeliefTree]
-
-    def __call__(self) -> Iterator[BeliefTree]:
-        return iter(self.trees)
+@contextlib.contextmanager
+def _only_writer(folder: Path, *, new: bool = True) -> Iterator[None]:
+    """Hold the folder, so that a second run cannot write into it; the system lets go of a killed one's."""
+    if new:
+        folder.mkdir(parents=True, exist_ok=True)
+    elif not (folder / shards.MANIFEST).is_file():
+        raise InputError(str(folder), "must be a dataset to add trees to; it holds no manifest.json")
+    try:
+        import fcntl
+    except ImportError:  # not on this system
+        yield
+        return
+    handle = os.open(folder, os.O_RDONLY)
+    try:
+        try:
+            fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except BlockingIOError:
+            raise InputError(str(folder), "must not be written by another run at the same time") from None
+        except OSError:  # a file system without locks
+            pass
+        yield
+    finally:
+        os.close(handle)
 
 
 # --- the plan and what is already there ------------------------------------------------------------
 
 
-def _plan(source: Family | Traces, total: int, seed: int, asked: Asked, shard_trees: int) -> dict[str, Any]:
-    kind = "family" if isinstance(source, Family) else "traces"
+def _whole_numbers(**values: int | None) -> None:
+    for name, value in values.items():
+        if value is not None and value < 1:
+            raise InputError(name, "must be a whole number from 1", value)
+
+
+def _shard_trees(total: int) -> int:
+    return min(max(total // 20, _LEAST_SHARD_TREES), _MOST_SHARD_TREES)
+
+
+def _described(plan: Plan, asked: Asked, size: int) -> dict[str, Any]:
+    sampling: dict[str, Any] = {"close_calls": plan.factor}
+    if plan.factor > 1:
+        sampling |= {"bounds": list(BOUNDS), "chances": list(CHANCES)}
     return {
         "format": schema.DATASET_FORMAT,
-        "source": {"kind": kind, "name": source.name, "sha256": source.sha256},
-        "seed": seed,
+        "source": plan.about,
+        "seed": plan.seed,
         "asked": asked.describe(),
-        "trees": total,
-        "shard_trees": shard_trees,
-        "code": _code(),
+        "trees": plan.total,
+        "sampling": sampling,
+        "shard_trees": size,
+        "code": code_versions(),
     }
 
 
-@functools.cache
-def _code() -> dict[str, str]:
-    """Versions that can change a byte: of the sources that draw and label, and of the libraries."""
-    here = Path(__file__).parent
-    digest = hashlib.sha256()
-    for path in sorted(here.rglob("*.py")):
-        name = path.relative_to(here).as_posix()
-        if name.split("/")[0].removesuffix(".py") in _LABELLING:
-            digest.update(name.encode() + b"\0" + path.read_bytes())
-    libraries = {name: importlib.metadata.version(name) for name in ("numpy", "numba", "scipy", "pyarrow")}
-    return {
-        "voc-distill": importlib.metadata.version("voc-distill"),
-        "sources": digest.hexdigest(),
-        **libraries,
-    }
+def _of_addition(traces: Traces) -> dict[str, Any]:
+    return {"name": traces.name, "sha256": traces.sha256, "code": code_versions()}
 
 
-_LABELLING: Final = (
-    "allocation", "allocation_rules", "beliefs", "beta_numerics", "exact", "family", "family_file",
-    "generate", "numerics", "query", "record", "schema", "shards", "tree", "voc",
-)  # fmt: skip
+def _new_trees(traces: Traces, folder: Path, first: int) -> Ints:
+    """Which recorded trees are not among the dataset's trees numbered below `first`, nor earlier here."""
+    known: set[int] = set()
+    for aside in (False, True):
+        for number, tree in shards.read_trees(folder, aside=aside, check=False, partial=True):
+            if number < first:
+                known.add(tree_key(tree))
+    rows = []
+    for i, key in enumerate(traces.keys.tolist()):
+        if key not in known:
+            known.add(key)
+            rows.append(i)
+    return np.array(rows, dtype=np.int64)
+
+
+def _compare(place: str, wanted: dict[str, Any], found: dict[str, Any]) -> None:
+    """InputError naming the first key of `wanted` that differs in `found`."""
+    for key, value in wanted.items():
+        other = found.get(key)
+        if other == value:
+            continue
+        if isinstance(value, dict) and isinstance(other, dict):
+            key, other, value = next(
+                (f"{key}.{k}", other.get(k), value.get(k))
+                for k in dict.fromkeys([*value, *other])
+                if other.get(k) != value.get(k)
+            )
+        rule = "as here" if place == "worker" else "to go on; choose another folder for another dataset"
+        raise InputError(f"{place}: {key}", f"must be {value!r} {rule}", other)
+
+
+def _sweep(folder: Path, manifest: dict[str, Any]) -> None:
+    """Remove what a killed run left: half-written files, and whole ones that the manifest does not list."""
+    listed = {name for entry in manifest["shards"] for name in entry["files"]}
+    for left in [*folder.glob(".*.part"), *shards.shard_files(folder)]:
+        if left.name not in listed:
+            left.unlink(missing_ok=True)
 
 
 def _open(folder: Path, plan: dict[str, Any]) -> dict[str, Any]:
     """The manifest to go on from: a new one, or that of the same plan with its files verified."""
-    folder.mkdir(parents=True, exist_ok=True)
-    for left in folder.glob(".*.part"):  # a killed writer's
-        left.unlink(missing_ok=True)
     if (folder / shards.MANIFEST).exists():
         manifest = shards.read_manifest(folder, partial=True)
-        for key, value in plan.items():
-            found = manifest.get(key)
-            if found != value:
-                if isinstance(value, dict) and isinstance(found, dict):
-                    key, found, value = next(
-                        (f"{key}.{k}", found.get(k), v) for k, v in value.items() if found.get(k) != v
-                    )
-                raise InputError(
-                    f"{folder / shards.MANIFEST}: {key}",
-                    f"must be {value!r} to go on; choose another folder for another dataset",
-                    found,
-                )
+        _compare(str(folder / shards.MANIFEST), plan, manifest)
+        if any(not a["complete"] for a in manifest.get("added", ())):
+            raise InputError(str(folder), "must have its addition finished first: run generate --add again")
+        _sweep(folder, manifest)
         shards.verify(folder, manifest["shards"])
         return manifest
     if any(folder.glob("*.parquet")):
         raise InputError(str(folder), "must be empty or hold a manifest.json beside its shards")
-    manifest = {**plan, "complete": False, "totals": {}, "shards": []}
+    for left in folder.glob(".*.part"):  # a writer's that was killed at its first file
+        left.unlink(missing_ok=True)
+    manifest = {**plan, "complete": False, "totals": {}, "added": [], "shards": []}
     shards.write_manifest(folder, manifest)
     return manifest

@@ -225,19 +225,24 @@ def measure(
     )
 
 
-def random_forgone(tree: Sequence[int] | NDArray[np.integer], exact: Floats) -> tuple[float, float]:
+def random_forgone(
+    tree: Sequence[int] | NDArray[np.integer], exact: Floats, *, weight: Floats | None = None
+) -> tuple[float, float]:
     """Forgone share and relative forgone, in percent, that a pick at random is expected to leave.
+
+    weight : one a tree, as in `measure`.
 
     >>> random_forgone([0, 0, 1], np.array([4.0, 0.0, 6.0]))
     (20.0, 25.0)
     """
     groups = Groups.of(tree)
     best, mean = groups.highest(exact), groups.total(exact) / groups.sizes
-    some = best > 0
+    w = np.ones(len(best)) if weight is None else _column("weight", weight, len(best))
+    some = (best > 0) & (w > 0)
     if not np.any(some):
         return float("nan"), float("nan")
-    share = float(100 * np.sum(best - mean) / np.sum(best))
-    return share, float(100 * np.mean(1 - mean[some] / best[some]))
+    share = float(100 * np.sum(w * (best - mean)) / np.sum(w * best))
+    return share, float(100 * np.average(1 - mean[some] / best[some], weights=w[some]))
 
 
 def rank_correlation(groups: Groups, exact: Floats, score: Floats) -> tuple[Floats, NDArray[np.bool_]]:

@@ -14,6 +14,7 @@ from __future__ import annotations
 import hashlib
 import json
 import math
+import re
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -25,6 +26,16 @@ import pyarrow.parquet as pq
 from numpy.typing import NDArray
 
 from distill import schema
+from distill.dataset_columns import (
+    ASIDE_LABELS,
+    CANDIDATE_COLUMNS,
+    FLOATS,
+    LEAF_COLUMNS,
+    TREE_COLUMNS,
+    TREE_LABELS,
+    Described,
+    described_columns,
+)
 from distill.errors import InputError, RefusedError
 from distill.files import sha256_of, write_atomic
 from distill.query import Priced, Query
@@ -33,79 +44,26 @@ from distill.tree import BeliefTree, LeafTable, leaf_table
 __all__ = [
     "Labelled",
     "described_columns",
+    "encode_shard",
     "read_candidates",
     "read_manifest",
     "read_trees",
+    "shard_files",
     "verify",
     "write_manifest",
     "write_shard",
 ]
 
 MANIFEST: Final = "manifest.json"
-
-_I32, _I64, _F64, _TEXT = pa.int32(), pa.int64(), pa.float64(), pa.string()
-_FLOATS = pa.list_(_F64)
-
-# Column -> (type, meaning and unit). `u` is the tree's unit of utility.
-_LEAF_COLUMNS: Final = {
-    "mean": "u; posterior mean of the leaf value",
-    "var": "u^2; posterior variance of the leaf value (diagonal of the covariance, where there is one)",
-    "noise_var": "u^2; variance of one rollout around the leaf value",
-    "alpha": "1; Beta belief over the win probability",
-    "beta": "1; Beta belief over the win probability",
-    "low": "u; value of a loss",
-    "high": "u; value of a win",
-    "count": "rollouts so far",
-    "cost": "u a rollout",
-}
-_TREE_COLUMNS: Final[dict[str, tuple[pa.DataType, str]]] = {
-    "tree": (_I64, "number of the tree in this dataset"),
-    "parent": (pa.list_(_I32), "per node: its parent, -1 for the root; parents come before children"),
-    "kind": (pa.list_(pa.int8()), "per node: 0 decision, 1 chance, 2 leaf"),
-    "reward": (_FLOATS, "u; per node: reward of the edge into it"),
-    "discount": (_FLOATS, "1; per node: discount of the edge into it"),
-    "prob": (_FLOATS, "1; per node: probability of the edge into it, 1 unless under a chance node"),
-    **{name: (_FLOATS, f"per leaf, in node order: {what}") for name, what in _LEAF_COLUMNS.items()},
-    "cov": (_FLOATS, "u^2; leaves x leaves, row by row: covariance of the leaf values; then var is null"),
-    "horizon": (_F64, "rollouts a leaf still receives; the record's, null if it gave none"),
-    "batch": (_I64, "rollouts a candidate; the record's, null if it gave none"),
-    "remaining": (_I64, "rollouts left; the record's, null if it gave none"),
-    "id": (_TEXT, "the record's id, as JSON"),
-    "extra": (_TEXT, "the record's extra, as JSON"),
-}
-_TREE_LABELS: Final[dict[str, tuple[pa.DataType, str]]] = {
-    "value": (_FLOATS, "u; per root action, in child order: exact value V_h"),
-    "method": (_TEXT, "name of the exact method"),
-}
-_ASIDE_LABELS: Final[dict[str, tuple[pa.DataType, str]]] = {
-    "reason": (_TEXT, "why the tree is not among the labelled ones"),
-    "label": (
-        _FLOATS,
-        "per leaf: the value reached, beyond the tolerance; null where no method prices the tree",
-    ),
-    "error": (_FLOATS, "per leaf: bound on the absolute error of label; null with it"),
-}
-_CANDIDATE_COLUMNS: Final[dict[str, tuple[pa.DataType, str]]] = {
-    "tree": (_I64, "number of the tree in this dataset"),
-    "leaf": (_I32, "0-based position of the leaf, in node order"),
-    "action": (_I32, "0-based position of the leaf's root action, in child order"),
-    "gain": (_F64, "1; product of the discounts from the root; null where a leaf table cannot hold the tree"),
-    "offset": (_F64, "u; discounted rewards from the root; null where a leaf table cannot hold the tree"),
-    **{name: (_F64, what) for name, what in _LEAF_COLUMNS.items()},
-    "remaining": (_I64, "rollouts left, as the label assumes; null where neither record nor query gave it"),
-    "horizon": (_F64, "rollouts a leaf still receives, as the label assumes; 0 static, inf dynamic"),
-    "batch": (_I64, "rollouts of the candidate; null where the label is a rate"),
-    "label": (_F64, "exact VOC, u; where batch is null the rate, u a rollout"),
-    "label_batch": (_I64, "rollouts that the label assumes: the batch, or the best one of the rate"),
-    "error": (_F64, "bound on the absolute error of label, same unit"),
-}
+_SHARD_FILE: Final = re.compile(r"(trees|candidates|aside)-\d{5,}\.parquet")
 
 
 @dataclass(frozen=True, eq=False)
 class Labelled:
     """One tree of a dataset with its exact labels.
 
-    A tree with a `reason` is kept aside: `priced` then misses the tolerance, or is None.
+    A tree with a `reason` is kept aside: `priced` then misses the tolerance, or is None. weight : how many
+    of the source's trees it stands for. source, draw : where it comes from, and its number there.
     """
 
     number: int
@@ -113,13 +71,16 @@ class Labelled:
     query: Query
     priced: Priced | None
     reason: str = ""
+    weight: float = 1.0
+    source: str | None = None
+    draw: int | None = None
 
 
 # --- writing ---------------------------------------------------------------------------------------
 
 
-def write_shard(folder: Path, part: int, rows: Sequence[Labelled]) -> dict[str, Any]:
-    """Write one shard's files; returns its manifest entry (row counts, and SHA-256 by file name).
+def encode_shard(part: int, rows: Sequence[Labelled]) -> tuple[dict[str, Any], dict[str, bytes]]:
+    """One shard's manifest entry (row counts, and SHA-256 by file name), and its files' bytes.
 
     The same rows give the same bytes. Rows with a reason go to the `aside` file.
     """
@@ -130,58 +91,72 @@ def write_shard(folder: Path, part: int, rows: Sequence[Labelled]) -> dict[str, 
         tables["aside"] = _trees_table(aside)
     files = {}
     for kind, table in tables.items():
-        name = f"{kind}-{part:05d}.parquet"
         sink = pa.BufferOutputStream()
         pq.write_table(table, sink, compression="zstd", row_group_size=1 << 17)
-        data = sink.getvalue().to_pybytes()
-        write_atomic(folder / name, data)
-        files[name] = hashlib.sha256(data).hexdigest()
-    return {
+        files[f"{kind}-{part:05d}.parquet"] = sink.getvalue().to_pybytes()
+    entry = {
         "part": part,
         "trees": len(good),
         "candidates": tables["candidates"].num_rows,
         "aside": len(aside),
-        "files": files,
+        "files": {name: hashlib.sha256(data).hexdigest() for name, data in files.items()},
     }
+    return entry, files
+
+
+def write_shard(folder: Path, part: int, rows: Sequence[Labelled]) -> dict[str, Any]:
+    """Write one shard's files; returns its manifest entry."""
+    entry, files = encode_shard(part, rows)
+    for name, data in files.items():
+        write_atomic(folder / name, data)
+    return entry
+
+
+def shard_files(folder: Path) -> Iterator[Path]:
+    """Every file in the folder that is named as a shard's, listed or not."""
+    return (path for path in folder.iterdir() if _SHARD_FILE.fullmatch(path.name))
 
 
 def _trees_table(rows: Sequence[Labelled]) -> pa.Table:
     trees = [r.tree for r in rows]
-    columns: dict[str, Any] = {"tree": [r.number for r in rows]}
-    for name in ("parent", "kind", "reward", "discount", "prob", *_LEAF_COLUMNS, "cov"):
-        columns[name] = _list_column([getattr(t, name) for t in trees], _TREE_COLUMNS[name][0])
+    columns: dict[str, Any] = {
+        "tree": [r.number for r in rows],
+        **{name: [getattr(r, name) for r in rows] for name in ("weight", "source", "draw")},
+    }
+    for name in ("parent", "kind", "reward", "discount", "prob", *LEAF_COLUMNS, "cov"):
+        columns[name] = _list_column([getattr(t, name) for t in trees], TREE_COLUMNS[name][0])
     for name in ("horizon", "batch", "remaining"):
         columns[name] = [getattr(t, name) for t in trees]
     for name in ("id", "extra"):
         values = (getattr(t, name) for t in trees)
         columns[name] = [None if v is None else json.dumps(v, sort_keys=False) for v in values]
-    described = dict(_TREE_COLUMNS)
+    described = dict(TREE_COLUMNS)
     priced = [r.priced for r in rows]
     if rows and rows[0].reason:
         columns["reason"] = [r.reason for r in rows]
-        columns["label"] = _list_column([None if p is None else p.voc for p in priced], _FLOATS)
-        columns["error"] = _list_column([None if p is None else p.error for p in priced], _FLOATS)
-        described |= _ASIDE_LABELS
+        columns["label"] = _list_column([None if p is None else p.voc for p in priced], FLOATS)
+        columns["error"] = _list_column([None if p is None else p.error for p in priced], FLOATS)
+        described |= ASIDE_LABELS
     else:
-        columns["value"] = _list_column([None if p is None else p.value for p in priced], _FLOATS)
+        columns["value"] = _list_column([None if p is None else p.value for p in priced], FLOATS)
         columns["method"] = [None if p is None else p.method for p in priced]
-        described |= _TREE_LABELS
+        described |= TREE_LABELS
     return _table(columns, described)
 
 
 def _candidates_table(rows: Sequence[Labelled]) -> pa.Table:
-    parts: dict[str, list[Any]] = {name: [] for name in _CANDIDATE_COLUMNS}
+    runs: dict[str, list[Any]] = {name: [] for name in CANDIDATE_COLUMNS}
     for r in rows:
         assert r.priced is not None
-        n = r.tree.n_leaves
         table = _flat(r.tree)
         columns: dict[str, Any] = {
             "tree": r.number,
-            "leaf": np.arange(n),
+            "weight": r.weight,
+            "leaf": np.arange(r.tree.n_leaves),
             "action": _actions(r.tree) if table is None else table.action,
             "gain": None if table is None else table.gain,
             "offset": None if table is None else table.offset,
-            **{name: getattr(r.tree, name) for name in _LEAF_COLUMNS},
+            **{name: getattr(r.tree, name) for name in LEAF_COLUMNS},
             "remaining": r.query.remaining,
             "horizon": r.query.horizon,
             "batch": r.query.batch,
@@ -192,12 +167,10 @@ def _candidates_table(rows: Sequence[Labelled]) -> pa.Table:
         if r.tree.cov is not None:
             columns["var"] = np.diag(r.tree.cov)
         for name, value in columns.items():
-            parts[name].append(_run_of(value, n, _CANDIDATE_COLUMNS[name][0]))
-    arrays = {
-        name: pa.concat_arrays(runs) if runs else pa.array([], _CANDIDATE_COLUMNS[name][0])
-        for name, runs in parts.items()
-    }
-    return _table(arrays, _CANDIDATE_COLUMNS)
+            runs[name].append(value)
+    sizes = np.array([r.tree.n_leaves for r in rows], dtype=np.int64)
+    arrays = {name: _column(values, sizes, CANDIDATE_COLUMNS[name][0]) for name, values in runs.items()}
+    return _table(arrays, CANDIDATE_COLUMNS)
 
 
 def _flat(tree: BeliefTree) -> LeafTable | None:
@@ -216,10 +189,15 @@ def _actions(tree: BeliefTree) -> NDArray[np.int64]:
     return action[tree.leaf_nodes]
 
 
-def _run_of(value: Any, n: int, kind: pa.DataType) -> pa.Array:
-    if value is None:
-        return pa.nulls(n, kind)
-    return pa.array(np.broadcast_to(np.asarray(value), n), kind)
+def _column(runs: list[Any], sizes: NDArray[np.int64], kind: pa.DataType) -> pa.Array:
+    """One column of all trees: an array a tree, or one number for all its leaves, or null."""
+    if all(run is None for run in runs):
+        return pa.nulls(int(sizes.sum()), kind)
+    dtype = kind.to_pandas_dtype()
+    filled = [np.zeros(1, dtype) if run is None else np.atleast_1d(np.asarray(run, dtype)) for run in runs]
+    spread = [x if len(x) == n else np.broadcast_to(x, n) for x, n in zip(filled, sizes, strict=True)]
+    mask = np.repeat([run is None for run in runs], sizes)
+    return pa.array(np.concatenate(spread), kind, mask=mask if mask.any() else None)
 
 
 def _list_column(arrays: Sequence[Any], kind: pa.DataType) -> pa.Array:
@@ -231,7 +209,7 @@ def _list_column(arrays: Sequence[Any], kind: pa.DataType) -> pa.Array:
     return pa.ListArray.from_arrays(pa.array(offsets), values, type=kind, mask=mask)
 
 
-def _table(columns: dict[str, Any], described: dict[str, tuple[pa.DataType, str]]) -> pa.Table:
+def _table(columns: dict[str, Any], described: Described) -> pa.Table:
     fields = [
         pa.field(name, kind, metadata={"description": what}) for name, (kind, what) in described.items()
     ]
@@ -240,16 +218,6 @@ def _table(columns: dict[str, Any], described: dict[str, tuple[pa.DataType, str]
         "columns": json.dumps({n: w for n, (_, w) in described.items()}),
     }
     return pa.table({f.name: columns[f.name] for f in fields}, pa.schema(fields, metadata=about))
-
-
-def described_columns() -> dict[str, dict[str, str]]:
-    """File kind -> column -> meaning and unit, as the Parquet metadata has them."""
-    kinds = {
-        "trees": _TREE_COLUMNS | _TREE_LABELS,
-        "candidates": _CANDIDATE_COLUMNS,
-        "aside": _TREE_COLUMNS | _ASIDE_LABELS,
-    }
-    return {kind: {name: what for name, (_, what) in columns.items()} for kind, columns in kinds.items()}
 
 
 # --- the manifest ----------------------------------------------------------------------------------
@@ -322,16 +290,16 @@ def read_candidates(
     manifest = read_manifest(folder)
     if check:
         verify(folder, manifest["shards"])
-    names = list(columns) if columns is not None else list(_CANDIDATE_COLUMNS)
+    names = list(columns) if columns is not None else list(CANDIDATE_COLUMNS)
     for name in names:
-        if name not in _CANDIDATE_COLUMNS:
-            raise InputError("columns", f"must be among {', '.join(_CANDIDATE_COLUMNS)}", name)
+        if name not in CANDIDATE_COLUMNS:
+            raise InputError("columns", f"must be among {', '.join(CANDIDATE_COLUMNS)}", name)
     total = sum(e["candidates"] for e in manifest["shards"])
     out: dict[str, NDArray[Any]] = {}
     given = dict.fromkeys(names, 0)
     at = 0
     for path in _paths(folder, manifest, "candidates"):
-        table = pq.read_table(path, columns=names)
+        table = _read(path, names, CANDIDATE_COLUMNS)
         for name in names:
             column = table.column(name)
             dtype = column.type.to_pandas_dtype()
@@ -350,18 +318,30 @@ def read_candidates(
 
 
 def read_trees(
-    folder: str | Path, *, aside: bool = False, check: bool = True
+    folder: str | Path, *, aside: bool = False, check: bool = True, partial: bool = False
 ) -> Iterator[tuple[int, BeliefTree]]:
     """Yields (number, tree) in order; bit for bit the trees that were labelled.
 
     aside : the trees that were kept aside instead. check : compare every file with its hash first.
+    partial : accept a run that was stopped before its end.
     """
-    manifest = read_manifest(folder)
+    manifest = read_manifest(folder, partial=partial)
     if check:
         verify(folder, manifest["shards"])
     for path in _paths(folder, manifest, "aside" if aside else "trees"):
-        for row in pq.read_table(path, columns=list(_TREE_COLUMNS)).to_pylist():
+        for row in _read(path, list(TREE_COLUMNS), TREE_COLUMNS).to_pylist():
             yield row["tree"], _tree_of(row)
+
+
+def _read(path: Path, names: list[str], described: Described) -> pa.Table:
+    """Columns of a file; one that a dataset of before the column's time lacks is null."""
+    with pq.ParquetFile(path) as file:
+        there = set(file.schema_arrow.names)
+        table = file.read([name for name in names if name in there])
+    for name in names:
+        if name not in there:
+            table = table.append_column(name, pa.nulls(table.num_rows, described[name][0]))
+    return table
 
 
 def _paths(folder: str | Path, manifest: dict[str, Any], kind: str) -> Iterator[Path]:
@@ -374,7 +354,7 @@ def _paths(folder: str | Path, manifest: dict[str, Any], kind: str) -> Iterator[
 def _tree_of(row: dict[str, Any]) -> BeliefTree:
     leaf: dict[str, Any] = {
         name: None if row[name] is None else np.array(row[name], dtype=float)
-        for name in (*_LEAF_COLUMNS, "cov")
+        for name in (*LEAF_COLUMNS, "cov")
     }
     if leaf["cov"] is not None:
         leaf["cov"] = leaf["cov"].reshape(math.isqrt(len(leaf["cov"])), -1)

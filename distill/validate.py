@@ -93,7 +93,7 @@ def baselines(
     static closed form : the exact value if no rollout followed. first-order closed form : the scorer's own
     starting point. random pick : its expectation, without interval.
     """
-    share, relative = random_forgone(candidates.tree, candidates.label)
+    share, relative = random_forgone(candidates.tree, candidates.label, weight=candidates.tree_weights)
     return {
         "static closed form": _measured(candidates, static_values(candidates), prices, n_boot, seed),
         "first-order closed form": _measured(candidates, first_order, prices, n_boot, seed),
@@ -111,6 +111,7 @@ def _measured(
         candidates.tree,
         candidates.label,
         score,
+        weight=candidates.tree_weights,
         cluster=candidates.clusters,
         cost=candidates.columns["cost"],
         prices=prices,

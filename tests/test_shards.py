@@ -145,7 +145,7 @@ def test_columns_can_be_chosen(tmp_path):
     folder = _dataset(tmp_path / "d", _rows("cold-store", 2))
     assert list(shards.read_candidates(folder, columns=["label", "tree"])) == ["label", "tree"]
     assert np.all(np.isnan(shards.read_candidates(folder, columns=["alpha"])["alpha"]))
-    with pytest.raises(InputError, match=r"columns: must be among tree, leaf, .*; got 'labels'"):
+    with pytest.raises(InputError, match=r"columns: must be among tree, weight, leaf, .*; got 'labels'"):
         shards.read_candidates(folder, columns=["labels"])
 
 

@@ -1,4 +1,4 @@
-"""`voc-distill generate`: draw or read trees and label them exactly into a dataset."""
+"""`voc-distill generate`: draw or read trees and label them exactly into a dataset; `--add` to one."""
 
 from __future__ import annotations
 
@@ -8,6 +8,7 @@ import time
 from pathlib import Path
 
 from distill.commands import flags
+from distill.errors import InputError
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -16,18 +17,33 @@ HELP = "draw or read trees and label them exactly into a dataset"
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
-    source = parser.add_mutually_exclusive_group(required=True)
-    source.add_argument(
+    parser.add_argument(
         "--family", metavar="TOML", help="a family file, or the name of one that comes with the tool"
     )
-    source.add_argument("--traces", nargs="+", metavar="FILE", help="recorded trees")
+    parser.add_argument("--traces", nargs="+", metavar="FILE", help="recorded trees; with --family, a mix")
+    parser.add_argument(
+        "--share", type=flags.positive, metavar="S",
+        help="of a mix, the share of recorded trees (default: each of them once)",
+    )  # fmt: skip
+    parser.add_argument(
+        "--add", nargs="+", metavar="FILE",
+        help="recorded trees to add to the finished dataset --out, asked what it asks; none twice",
+    )  # fmt: skip
     parser.add_argument("--trees", type=flags.whole(1), metavar="N", help="how many (traces: default all)")
     parser.add_argument(
         "--out", type=Path, required=True, metavar="FOLDER", help="the dataset; a started one goes on"
     )
-    parser.add_argument("--seed", type=flags.whole(0), default=0)
+    parser.add_argument("--seed", type=flags.whole(0), metavar="S", help="of draws and samples (default 0)")
     parser.add_argument(
+        "--close-calls", type=flags.whole(1), metavar="N",
+        help="look at N trees for each one labelled and prefer close calls; weights correct for it",
+    )  # fmt: skip
+    place = parser.add_mutually_exclusive_group()
+    place.add_argument(
         "--workers", type=flags.whole(1), default=os.cpu_count() or 1, help="processes (default: all cores)"
+    )
+    place.add_argument(
+        "--dask", metavar="ADDRESS", help="scheduler of a Dask cluster, whose workers label instead"
     )
     flags.add_query_flags(parser, rate_is_default=True)
 
@@ -35,17 +51,43 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> None:
     """Run the command."""
     from distill.family import load_family
-    from distill.generate import Asked, Traces, generate
+    from distill.generate import Asked, Mix, Traces, add, generate
     from distill.sample_data import family_path
+    from distill.sources import Source
 
-    source = Traces.read(args.traces) if args.traces else load_family(family_path(args.family))
-    asked = Asked(args.value, args.batch, args.remaining, args.tolerance)
+    _check(args)
     start = time.perf_counter()
-    manifest = generate(
-        source, args.out, trees=args.trees, seed=args.seed, asked=asked, workers=args.workers, progress=True
-    )
+    where = {"workers": args.workers, "dask": args.dask, "progress": True}
+    if args.add:
+        manifest = add(Traces.read(args.add), args.out, **where)
+    else:
+        source: Source
+        if not args.family:
+            source = Traces.read(args.traces)
+        else:
+            source = load_family(family_path(args.family))
+            if args.traces:
+                source = Mix(source, Traces.read(args.traces), args.share)
+        manifest = generate(
+            source, args.out, trees=args.trees, seed=args.seed or 0, close_calls=args.close_calls or 1,
+            asked=Asked(args.value, args.batch, args.remaining, args.tolerance), **where,
+        )  # fmt: skip
     totals = manifest["totals"]
     print(
         f"{args.out}: {totals['trees']:,} trees, {totals['candidates']:,} exact labels, "
         f"{totals['aside']:,} trees set aside, in {time.perf_counter() - start:.1f} s"
     )
+
+
+def _check(args: argparse.Namespace) -> None:
+    """Flags that do not go together."""
+    if args.add:
+        own = ("family", "traces", "share", "trees", "seed", "close_calls", "value", "batch", "remaining")
+        for name in (*own, "tolerance"):
+            if getattr(args, name) is not None:
+                flag = "--" + name.replace("_", "-")
+                raise InputError(flag, "must not be given with --add: the dataset says it")
+    elif not args.family and not args.traces:
+        raise InputError("generate", "needs --family, --traces, both, or --add")
+    elif args.share is not None and not (args.family and args.traces):
+        raise InputError("--share", "must come with --family and --traces")

@@ -20,6 +20,11 @@ def _table(name: str, discount: float, skill: float, depth: int, length: int) ->
     return GymTable(name, discount=discount, skill=skill), Settings(depth=depth, length=length)
 
 
+def _odds(name: str, skill: float, depth: int, length: int) -> tuple[Modelled, Settings]:
+    settings = Settings(depth=depth, length=length, plans=True, win_loss=(0.0, 1.0))
+    return GymTable(name, discount=1.0, skill=skill), settings
+
+
 # name -> the simulator, and how its search looks ahead. Slippery ones need two steps: with no decision
 # below the root, dynamic and static value are the same and policies that use them cannot differ.
 SIMULATORS: Final[dict[str, Callable[[], tuple[Modelled, Settings]]]] = {
@@ -30,6 +35,9 @@ SIMULATORS: Final[dict[str, Callable[[], tuple[Modelled, Settings]]]] = {
     "cliff_walking_slippery": lambda: _table("cliff_walking_slippery", 0.98, 0.9, 2, 60),
     "frozen_lake_4x4": lambda: _table("frozen_lake_4x4", 0.99, 0.5, 2, 100),
     "frozen_lake_8x8": lambda: _table("frozen_lake_8x8", 0.99, 0.5, 2, 200),
+    # Reach the gift or not, undiscounted: every rollout wins or loses. Plans of three moves.
+    "frozen_lake_4x4_odds": lambda: _odds("frozen_lake_4x4", 0.9, 3, 200),
+    "frozen_lake_8x8_odds": lambda: _odds("frozen_lake_8x8", 0.9, 3, 400),
 }
 _SOLVABLE: Final = (
     "taxi",
@@ -37,8 +45,12 @@ _SOLVABLE: Final = (
     "cliff_walking_slippery",
     "frozen_lake_4x4",
     "frozen_lake_8x8",
+    "frozen_lake_4x4_odds",
+    "frozen_lake_8x8_odds",
     "cold_store_small",
 )
+# Most random steps before the decision, where the usual 20 would leave little to decide.
+_STEPS: Final = {"cold_store_small": 2}
 
 
 def make_simulator(name: str) -> tuple[Modelled, Settings]:
@@ -53,7 +65,10 @@ def environment_problems() -> list[Problem]:
 
     The slippery ones grow chance nodes; the cold store is searched by plans of two jobs.
     """
-    return [SimulatorProblem(*make_simulator(name), name=name) for name in _SOLVABLE]
+    return [
+        SimulatorProblem(*make_simulator(name), name=name, most_steps=_STEPS.get(name, 20))
+        for name in _SOLVABLE
+    ]
 
 
 def synthetic_problems() -> list[Problem]:

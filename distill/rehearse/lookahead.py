@@ -12,7 +12,7 @@ from distill.errors import InputError, RefusedError
 from distill.rehearse.simulator import Action, Outcome, Simulator, State, outcomes_of, rollout
 from distill.tree import Floats, Ints
 
-__all__ = ["Lookahead", "look_ahead", "plan_ahead"]
+__all__ = ["Lookahead", "Settings", "look_ahead", "plan_ahead"]
 
 
 @dataclass(frozen=True, eq=False)
@@ -165,6 +165,37 @@ def plan_ahead(
         frontier = grown
     tree = _finish(root, simulator.actions(state))
     return Lookahead(**{**vars(tree), "starts": (state,) * tree.n_leaves})
+
+
+@dataclass(frozen=True)
+class Settings:
+    """How a search looks ahead.
+
+    depth : steps of look-ahead. length : most steps of a rollout beyond its leaf.
+    plans : leaves are plans of actions (`plan_ahead`) instead of states (`look_ahead`).
+    samples : outcomes drawn per action where the simulator has no model and steps are random.
+    opening : (leaves, rollouts each) spent before the search to set this tree's prior mean and noise.
+        They are the prior's alone: the search's budget and its beliefs at leaves do not count them.
+    win_loss : (low, high) where every rollout returns one of these two numbers: leaves then have
+        win/loss beliefs. None: Gaussian ones.
+    """
+
+    depth: int = 2
+    length: int = 30
+    plans: bool = False
+    samples: int = 1
+    opening: tuple[int, int] = (4, 4)
+    win_loss: tuple[float, float] | None = None
+
+    def __post_init__(self) -> None:
+        if self.win_loss is not None and not self.win_loss[0] < self.win_loss[1]:
+            raise InputError("win_loss", "must be a low and a higher number", self.win_loss)
+
+    def tree(self, simulator: Simulator, state: State, rng: np.random.Generator) -> Lookahead:
+        """The look-ahead tree from a state."""
+        if self.plans:
+            return plan_ahead(simulator, state, self.depth, rng)
+        return look_ahead(simulator, state, self.depth, rng, samples=self.samples)
 
 
 def _root(simulator: Simulator, state: State, depth: int) -> _Node:

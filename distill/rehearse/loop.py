@@ -5,20 +5,22 @@ from __future__ import annotations
 import math
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from distill import voc
+from distill import schema, voc
 from distill.allocation import Search as Posterior
 from distill.errors import InputError, RefusedError
 from distill.query import Query
 from distill.rehearse.policies import Policy
 from distill.rehearse.problems import Draw
-from distill.rehearse.search import action_values
+from distill.rehearse.search import action_values, posterior_means
 from distill.tree import BeliefTree, Floats
 
-__all__ = ["Budget", "Decided", "decide", "expected_maxima", "posterior_means", "sampled_maxima"]
+__all__ = [
+    "Budget", "Decided", "decide", "expected_loss", "expected_maxima", "posterior_means", "sampled_maxima",
+]  # fmt: skip
 
 _DRAWS = 1024
 _NO_ROLLOUTS = Query(batch=None, remaining=0)  # values alone: nothing is left to price
@@ -77,6 +79,9 @@ class Decided:
 
     regret : of the root action with the largest value acted on, by default the expected maximum.
     regret_by_mean : of the one with the largest backed-up mean.
+    expected_regret : what `regret` is on average over all that the returns seen leave open: the same mean
+        over seeds, with far less noise. nan where the beliefs are not those that the truth was drawn
+        from, and where it has no closed form (chance nodes).
     rollouts : spent. choosing : time of the policy and of belief updates.
     stopped : whether the policy stopped before the budget was used.
     choices : made; fallbacks : those of them that the policy's own values did not make.
@@ -84,6 +89,7 @@ class Decided:
 
     regret: float
     regret_by_mean: float
+    expected_regret: float
     rollouts: int
     choosing: float
     stopped: bool
@@ -150,8 +156,12 @@ def decide(
         elapsed += clock() - started + cost
         spent += rollouts
     tree = posterior.tree()
+    worth = (values or expected_maxima)(tree)
+    action = int(np.argmax(worth))
+    known = draw.believed and not tree.has_chance
     return Decided(
-        regret=draw.regret(int(np.argmax((values or expected_maxima)(tree)))),
+        regret=draw.regret(action),
+        expected_regret=expected_loss(tree, action) if known else math.nan,
         regret_by_mean=draw.regret(int(np.argmax(posterior_means(tree)))),
         rollouts=spent,
         choosing=elapsed - rolling,
@@ -175,6 +185,25 @@ def expected_maxima(tree: BeliefTree) -> Floats:
         return sampled_maxima(tree)
 
 
+def expected_loss(tree: BeliefTree, action: int) -> float:
+    """E[max_a Q_a] - E[Q_action] under a tree's independent beliefs; decision nodes only, value units.
+
+    The best root action is worth what the best leaf is: all leaves under one action are priced like a
+    root action of their own.
+    """
+    if tree.has_chance:
+        raise RefusedError("expected loss: decision nodes only")
+    together = replace(
+        tree,
+        parent=np.concatenate([[-1, 0], tree.parent[1:] + 1]),
+        kind=np.concatenate([[schema.DECISION], tree.kind]).astype(np.int8),
+        reward=np.concatenate([[0.0], tree.reward]),
+        discount=np.concatenate([[1.0], tree.discount]),
+        prob=np.concatenate([[1.0], tree.prob]),
+    )
+    return float(expected_maxima(together)[0] - expected_maxima(tree)[action])
+
+
 def sampled_maxima(tree: BeliefTree, draws: int = _DRAWS) -> Floats:
     """`expected_maxima` of a win/loss tree by sampling; standard error below range / sqrt(draws) / 2."""
     assert tree.alpha is not None
@@ -185,14 +214,3 @@ def sampled_maxima(tree: BeliefTree, draws: int = _DRAWS) -> Floats:
     odds = rng.beta(tree.alpha[:, None], tree.beta[:, None], size=(tree.n_leaves, draws))
     leaf_values = tree.low[:, None] + (tree.high - tree.low)[:, None] * odds
     return np.asarray(action_values(tree, leaf_values).mean(axis=1))
-
-
-def posterior_means(tree: BeliefTree) -> Floats:
-    """Root action values at the leaves' posterior means; shape (n_actions,)."""
-    if tree.mean is not None:
-        return action_values(tree, tree.mean)
-    assert tree.alpha is not None
-    assert tree.beta is not None
-    assert tree.low is not None
-    assert tree.high is not None
-    return action_values(tree, tree.low + (tree.high - tree.low) * (tree.alpha / (tree.alpha + tree.beta)))

@@ -13,7 +13,8 @@ import numpy as np
 from distill import schema
 from distill.errors import InputError, RefusedError
 from distill.rehearse.optimum import solve
-from distill.rehearse.search import Prior, Search, Settings, action_values, estimate_prior
+from distill.rehearse.priors import OddsPrior, Prior
+from distill.rehearse.search import Search, Settings, action_values, prior_of
 from distill.rehearse.simulator import Modelled, State
 from distill.tree import BeliefTree, Floats
 
@@ -31,11 +32,14 @@ class Draw:
     roll : leaf -> one return, in value units (for win/loss leaves 1 or 0). The j-th rollout at a leaf
         returns the same number whatever happened before it elsewhere.
     worth : shape (n_actions,), what each root action is truly worth, value units.
+    believed : whether `worth` was drawn from the very beliefs of `tree`, so that they tell the odds of
+        what a search leaves open.
     """
 
     tree: BeliefTree
     roll: Callable[[int], float]
     worth: Floats
+    believed: bool = False
 
     def regret(self, action: int) -> float:
         """What acting so loses against the best root action, value units."""
@@ -101,13 +105,14 @@ class TreeProblem:
 
         if self.noise_var is None:
             odds = truth_rng.random(n)
-            return Draw(tree, lambda i: float(stream(i).random() < odds[i]), action_values(tree, odds))
+            return Draw(tree, lambda i: float(stream(i).random() < odds[i]), action_values(tree, odds), True)
         truth = np.sqrt(self.prior_var) * truth_rng.standard_normal(n)
         sd = float(np.sqrt(self.noise_var))
         return Draw(
             tree,
             lambda i: float(truth[i] + sd * stream(i).standard_normal()),
             action_values(tree, truth),
+            True,
         )
 
     def _tree(self, rng: np.random.Generator) -> BeliefTree:
@@ -141,9 +146,10 @@ class TreeProblem:
 class SimulatorProblem:
     """States of a simulator with an exact model; regret is against the exact optimum.
 
-    States are met by random play; those where the best and the worst action differ by less than
-    `least_gap` (value units) are passed over, since there is nothing to decide. `name` defaults to
-    the simulator's. The prior comes from pilot rollouts on seeds that no draw uses.
+    States are met by random play of fewer than `most_steps` steps; those where the best and the worst
+    action differ by less than `least_gap` (value units) are passed over, since there is nothing to
+    decide. `name` defaults to the simulator's. The prior comes from pilot rollouts on seeds that no draw
+    uses.
 
     The optimum is that of the whole problem, while leaves are valued by rollouts of bounded length
     under the simulator's own advice: no policy can be expected to reach regret 0.
@@ -154,7 +160,8 @@ class SimulatorProblem:
     name: str = ""
     least_gap: float = 1e-6
     max_states: int = 200_000
-    _prior: Prior | None = None
+    most_steps: int = 20
+    _prior: Prior | OddsPrior | None = None
     _solved: deque[Mapping[State, Floats]] = field(default_factory=lambda: deque(maxlen=_KEPT))
     _decisions: dict[int, tuple[State, Floats]] = field(default_factory=dict)
 
@@ -162,11 +169,11 @@ class SimulatorProblem:
         self.name = self.name or self.simulator.name
 
     @property
-    def prior(self) -> Prior:
+    def prior(self) -> Prior | OddsPrior:
         """Empirical Bayes from pilot rollouts; computed once."""
         if self._prior is None:
             pilot = np.random.default_rng(np.random.SeedSequence(0, spawn_key=(1,)))
-            self._prior = estimate_prior(self.simulator, self.settings, pilot, trees=100)
+            self._prior = prior_of(self.simulator, self.settings, pilot, trees=100)
         return self._prior
 
     def draw(self, seed: int) -> Draw:
@@ -184,7 +191,7 @@ class SimulatorProblem:
         def roll(leaf: int) -> float:
             if leaf not in streams:
                 streams[leaf] = np.random.default_rng(seeds[leaf])
-            return search.lookahead.rollout(self.simulator, leaf, streams[leaf], self.settings.length)
+            return search.rolled(leaf, streams[leaf])
 
         return Draw(search.tree(), roll, worth)
 
@@ -199,7 +206,7 @@ class SimulatorProblem:
         """States after a random number of random steps from a start, over and over."""
         while True:
             state = self.simulator.start(rng)
-            for _ in range(int(rng.integers(20))):
+            for _ in range(int(rng.integers(self.most_steps))):
                 choices: Sequence[int] = self.simulator.actions(state)
                 after, _ = self.simulator.step(state, choices[int(rng.random() * len(choices))], rng)
                 if self.simulator.is_terminal(after):

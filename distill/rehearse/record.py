@@ -13,7 +13,7 @@ import numpy as np
 from distill.allocation import RULES
 from distill.errors import InputError, RefusedError
 from distill.rehearse.catalogue import make_simulator
-from distill.rehearse.search import Rule, Search, Settings, estimate_prior
+from distill.rehearse.search import Rule, Search, Settings, prior_of
 from distill.rehearse.simulator import Simulator, State
 from distill.traces import write_trees
 from distill.tree import BeliefTree, Floats
@@ -99,7 +99,7 @@ def recorded_trees(
         settings = settings or usual
     settings = settings or Settings()
     pilot_rng, rng = (np.random.default_rng(s) for s in np.random.SeedSequence(seed).spawn(2))
-    prior = estimate_prior(simulator, settings, pilot_rng)
+    prior = prior_of(simulator, settings, pilot_rng)
     points = sorted({int(share * rollouts) for share in POINTS})
     state, played, decision, idle = simulator.start(rng), 0, 0, 0
     while decision < decisions:
@@ -137,7 +137,8 @@ def _labelled(
         "rule": rule if isinstance(rule, str) else getattr(rule, "__name__", "custom"),
     }
     tree = search.tree(remaining=remaining, id=f"{name}-{decision}-{search.used}", extra=extra)
-    assert tree.mean is not None
+    if tree.mean is None:  # win/loss: counts of trials, short as they are
+        return tree
     assert tree.var is not None
     assert tree.noise_var is not None
     return replace(tree, mean=_short(tree.mean), var=_short(tree.var), noise_var=_short(tree.noise_var))

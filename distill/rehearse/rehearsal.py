@@ -27,7 +27,9 @@ from distill.tree import BeliefTree, Floats
 
 __all__ = ["Cell", "Compared", "compare", "rehearse"]
 
-_COLUMNS = ("regret", "regret_by_mean", "rollouts", "choosing", "stopped", "choices", "fallbacks")
+_COLUMNS = (
+    "regret", "regret_by_mean", "expected_regret", "rollouts", "choosing", "stopped", "choices", "fallbacks",
+)  # fmt: skip
 _RESAMPLES = 2000
 
 
@@ -35,7 +37,8 @@ _RESAMPLES = 2000
 class Cell:
     """All decisions of one policy on one problem under one budget; arrays over seeds, in seed order.
 
-    regret, regret_by_mean : value units. rollouts : spent. choosing : seconds. stopped : early.
+    regret, regret_by_mean, expected_regret : value units, see `Decided`. rollouts : spent.
+    choosing : seconds. stopped : early.
     choices : made. fallbacks : of them, made by another rule.
     """
 
@@ -44,6 +47,7 @@ class Cell:
     policy: str
     regret: Floats
     regret_by_mean: Floats
+    expected_regret: Floats
     rollouts: Floats
     choosing: Floats
     stopped: Floats

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from array import array
 from collections.abc import Callable
+from dataclasses import replace
 from typing import Final
 
 from distill.rehearse.problems import Draw, Problem
@@ -38,7 +39,7 @@ class Remembered:
         if seed not in self._draws:
             self._draws[seed] = (self._problem.draw(seed), {})
         first, returns = self._draws[seed]
-        return Draw(first.tree, self._dealer(first.roll, returns), first.worth)
+        return replace(first, roll=self._dealer(first.roll, returns))
 
     def _dealer(
         self, roll: Callable[[int], float], returns: dict[int, array[float]]

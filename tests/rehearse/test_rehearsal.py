@@ -79,7 +79,13 @@ def test_repeated_names_and_single_seeds_are_refused(tmp_path):
 def cell(policy, regret, budget=BUDGETS[0], **columns):
     regret = np.asarray(regret, dtype=float)
     zeros = np.zeros(len(regret))
-    given = {"regret_by_mean": regret, "rollouts": zeros, "choosing": zeros, "stopped": zeros}
+    given = {
+        "regret_by_mean": regret,
+        "expected_regret": regret,
+        "rollouts": zeros,
+        "choosing": zeros,
+        "stopped": zeros,
+    }
     given |= {"choices": zeros, "fallbacks": zeros} | columns
     return Cell("p", budget, policy, regret, **given)
 

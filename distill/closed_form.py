@@ -10,7 +10,7 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["LOSS_A", "LOSS_B", "LOSS_P", "LOSS_Q", "PEAK", "static_rates"]
+__all__ = ["LOSS_A", "LOSS_B", "LOSS_P", "LOSS_Q", "PEAK", "highest_rates", "static_rates"]
 
 Floats = NDArray[np.float64]
 
@@ -67,6 +67,26 @@ def static_rates(
     upper = options[1] > options[0]
     batch = np.where(upper, np.minimum(low + 1, np.floor(remaining)), low).astype(np.int64)
     return np.where(upper, options[1], options[0]), batch
+
+
+def highest_rates(var: Floats, noise_var: Floats, gain: Floats) -> Floats:
+    r"""A bound that no rate of a leaf exceeds, whatever the rest of the tree and the horizon; shape (n,).
+
+    .. math:: 2 f(0) s_1 = \sqrt{2 / \pi} \, v / \sqrt{v + n}
+
+    with v and n the leaf's variances at the root. Why: k rollouts move V_h of the leaf's action by a
+    function of the posterior mean that rises by at most 1 per unit, so the gain over any rival is at most
+    s_k f(0); where h is finite, the action's own V_h rises by at most the same again (it is 0 for h = 0
+    and infinity). And s_k / k = v / sqrt(k^2 v + k n) is largest at k = 1. The bound of a batch of k
+    rollouts is k times this.
+
+    >>> highest_rates(np.array([1.0, 0.0]), np.array([3.0, 3.0]), np.ones(2)).round(4).tolist()
+    [0.3989, 0.0]
+    """
+    with np.errstate(all="ignore"):
+        sd = np.abs(gain) * np.sqrt(var)
+        resolved = np.sqrt(1 / (1 + noise_var / np.maximum(var, _TINY)))
+        return np.asarray(np.sqrt(2 / np.pi) * sd * resolved)
 
 
 def _loss(z: Floats) -> Floats:

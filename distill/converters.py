@@ -27,9 +27,9 @@ from sklearn.utils.validation import check_is_fitted
 
 from distill.errors import ExportError
 from distill.onnx_nodes import IR_VERSION, ML_OPSET, OPSET
-from distill.tree import Floats
+from distill.tree import Floats, Ints
 
-__all__ = ["convert", "folded"]
+__all__ = ["convert", "folded", "single_tree"]
 
 _SKL2ONNX_ML: Final = 3
 _LINEAR: Final = (LinearRegression, Ridge, Lasso, ElasticNet)
@@ -99,6 +99,22 @@ def _fold(scaler: StandardScaler, model: Any) -> Any:
         model.coef_ = W
         model.intercept_ = float(np.ravel(model.intercept_)[0]) - float(mean @ W)
     return model
+
+
+def single_tree(feature: Ints, split: Floats, left: Ints, right: Ints, value: Floats) -> dict[str, Any]:
+    """Attributes of a double `TreeEnsemble` that holds one tree, root first; left = right = -1 at a leaf.
+
+    A row goes left where x[feature] <= split, and right where it is NaN.
+    """
+    kinds = [("is_leaf", "i8"), ("value", "f8"), ("feature_idx", "i8"), ("num_threshold", "f8")]
+    kinds += [("missing_go_to_left", "i8"), ("left", "i8"), ("right", "i8")]
+    nodes = np.zeros(len(value), dtype=kinds)
+    nodes["is_leaf"], nodes["value"] = left < 0, value
+    nodes["feature_idx"], nodes["num_threshold"] = feature, split
+    nodes["left"], nodes["right"] = left, right
+    flat = _FlatTrees()
+    flat.add(nodes, 0.0)
+    return flat.attributes()
 
 
 def _one_output(operator: Any) -> None:

@@ -4,6 +4,7 @@
     voc = first_order exp(t)       transform "log_ratio", t cut at +-20
     voc = unit max(t, 0)^2         transform "sqrt", and at least 1e-4 first_order, so that candidates
                                    which the learner sees as worthless keep an order
+    voc_high = factor voc                  one factor a bin of the features, see `calibration`
     pick = first argmax of voc - cost,  worth_it = max of voc - cost > 0
 
 What the estimator sees is cut to the ranges of its training rows; `in_range` says where nothing was cut.
@@ -25,7 +26,8 @@ from onnx import TensorProto, helper
 from sklearn.ensemble import HistGradientBoostingRegressor
 
 from distill import scorer_file
-from distill.converters import convert, folded
+from distill.calibration import UpperBound
+from distill.converters import convert, folded, single_tree
 from distill.errors import ExportError
 from distill.features import INPUTS, FeatureGraph, FeatureMatrix
 from distill.files import write_atomic
@@ -58,6 +60,7 @@ def export_scorer(
     *,
     transform: str,
     ranges: Any,
+    upper: UpperBound,
     metadata: Mapping[str, Any],
     self_test_columns: Mapping[str, Any],
     path: str | os.PathLike[str] | None = None,
@@ -67,6 +70,7 @@ def export_scorer(
     estimator : a fitted HistGradientBoostingRegressor, MLPRegressor or linear model, the last two also
         behind a StandardScaler in a Pipeline; it maps feature rows to t.
     transform : one of TRANSFORMS. ranges : (d, 2), least and largest of each feature that is in range.
+    upper : the calibrated factor of `voc_high`.
     metadata : JSON values (family, dataset hash, recipe, ...), kept in the file as they are.
     self_test_columns : rows as for FeatureGraph.matrix; a few trees. Parity with the estimator is checked
         on them and on random rows within the ranges, and the file carries them with their answers.
@@ -83,12 +87,12 @@ def export_scorer(
         raise ExportError("ranges must be finite, least before largest")
     converted = convert(estimator, len(feature_graph.names))
     _check_estimator(estimator, converted, limits)
-    model = _assemble(feature_graph.model, converted, transform, limits)
+    model = _assemble(feature_graph.model, converted, transform, limits, upper)
     session = _session(model)
     matrix = feature_graph.matrix(self_test_columns)
     answers, cases = _answers(session, self_test_columns)
-    _check_file(estimator, transform, limits, matrix, answers)
-    _set_metadata(model, feature_graph, transform, limits, metadata, cases)
+    _check_file(estimator, transform, limits, upper, matrix, answers)
+    _set_metadata(model, feature_graph, transform, limits, upper, metadata, cases)
     onnx.checker.check_model(model, full_check=True)
     data: bytes = model.SerializeToString(deterministic=True)
     scorer_file.check(data)
@@ -108,7 +112,11 @@ def with_facts(data: bytes, facts: Mapping[str, Any]) -> bytes:
 
 
 def _assemble(
-    features: onnx.ModelProto, converted: onnx.ModelProto, transform: str, limits: NDArray[np.float32]
+    features: onnx.ModelProto,
+    converted: onnx.ModelProto,
+    transform: str,
+    limits: NDArray[np.float32],
+    upper: UpperBound,
 ) -> onnx.ModelProto:
     """Feature nodes as they are, the estimator's nodes, and the decision, as one model."""
     boosting = converted.graph.node[0].op_type == "TreeEnsemble"
@@ -118,9 +126,9 @@ def _assemble(
     inside = g("LessOrEqual", outside, g.single(0.0))
     valid = g("And", g("GreaterOrEqual", "action", g.whole(0)), g("Greater", "noise_ratio", g.double(0.0)))
     g("And", inside, valid, out="in_range")
-    x = g("Cast", clipped, to=TensorProto.DOUBLE) if boosting else clipped
+    x = g("Cast", clipped, to=TensorProto.DOUBLE)
 
-    renamed, t = _renamed(converted, x)
+    renamed, t = _renamed(converted, x if boosting else clipped)
     tail = Nodes("d")
     t = tail("Reshape", t, tail.whole(-1))
     if not boosting:
@@ -132,6 +140,9 @@ def _assemble(
     else:
         t = tail("Clip", t, tail.scalar(-_LOG_RATIO_LIMIT), tail.scalar(_LOG_RATIO_LIMIT))
         tail("Mul", "first_order", tail("Exp", t), out="voc")
+    tree = single_tree(upper.feature, upper.split, upper.left, upper.right, upper.factor)
+    factor = tail("TreeEnsemble", x, domain="ai.onnx.ml", **tree)
+    tail("Mul", "voc", tail("Reshape", factor, tail.whole(-1)), out="voc_high")
     net = tail("Sub", "voc", "cost")
     tail("ArgMax", net, axis=0, keepdims=0, out="pick")
     tail("Greater", tail("ReduceMax", net, keepdims=0), tail.scalar(0.0), out="worth_it")
@@ -141,14 +152,13 @@ def _assemble(
     outputs = [
         typed("voc", TensorProto.DOUBLE, ["n"]),
         typed("batch", TensorProto.INT64, ["n"]),
+        typed("voc_high", TensorProto.DOUBLE, ["n"]),
         typed("in_range", TensorProto.BOOL, ["n"]),
         typed("pick", TensorProto.INT64, []),
         typed("worth_it", TensorProto.BOOL, []),
     ]
     graph = helper.make_graph(nodes, "scorer", list(features.graph.input), outputs, initializers)
-    opsets = [helper.make_opsetid("", OPSET)]
-    if boosting:
-        opsets.append(helper.make_opsetid("ai.onnx.ml", ML_OPSET))
+    opsets = [helper.make_opsetid("", OPSET), helper.make_opsetid("ai.onnx.ml", ML_OPSET)]
     model = helper.make_model(graph, opset_imports=opsets, ir_version=IR_VERSION)
     model.producer_name = "voc-distill"
     return model
@@ -215,10 +225,11 @@ def _check_file(
     estimator: Any,
     transform: str,
     limits: NDArray[np.float32],
+    upper: UpperBound,
     matrix: FeatureMatrix,
     answers: Mapping[str, NDArray[Any]],
 ) -> None:
-    """The assembled file's `voc` against the estimator's through the transform."""
+    """The assembled file's `voc` against the estimator's through the transform, and `voc_high` above it."""
     x = np.clip(matrix.x, limits[:, 0], limits[:, 1])
     t = np.asarray(estimator.predict(x), dtype=float)
     expected = mapped_back(t, matrix.unit, matrix.first_order, transform)
@@ -234,6 +245,8 @@ def _check_file(
             f"the file gives {answers['voc'][row]!r} where the estimator gives {expected[row]!r} "
             f"on self-test row {row}"
         )
+    if np.any(answers["voc_high"] != answers["voc"] * upper.of(x)):
+        raise ExportError("the file's upper bounds differ from the calibrated ones on the self-test rows")
     if np.any(answers["batch"] != matrix.batch):
         raise ExportError("the file's batches differ from the feature graph's on the self-test rows")
 
@@ -276,6 +289,7 @@ def _set_metadata(
     feature_graph: FeatureGraph,
     transform: str,
     limits: NDArray[np.float32],
+    upper: UpperBound,
     metadata: Mapping[str, Any],
     cases: list[dict[str, Any]],
 ) -> None:
@@ -283,6 +297,7 @@ def _set_metadata(
     props = {
         "format": scorer_file.FORMAT,
         "about": _json(dict(metadata)),
+        "calibration": _json(upper.facts()),
         "features": _json(list(names)),
         "ranges": _json({name: [float(a), float(b)] for name, (a, b) in zip(names, limits, strict=True)}),
         "self_test": _json(cases),

@@ -19,6 +19,7 @@ MAX_LEAVES: Final = 2**20
 _OUTPUTS: Final = {
     "voc": np.float64,
     "batch": np.int64,
+    "voc_high": np.float64,
     "in_range": np.bool_,
     "pick": np.int64,
     "worth_it": np.bool_,
@@ -44,11 +45,16 @@ class LeafBuffers:
         }
         self.pick, self.in_range = self.out["pick"], self.out["in_range"]
         self.binding: Any = None
+        self.has_bound = False
         if session is not None:
             self.binding = session.io_binding()
             for name, x in {**self.columns, "action": self.action, "remaining": self.remaining}.items():
                 self.binding.bind_input(name, "cpu", 0, x.dtype.type, list(x.shape), x.ctypes.data)
+            there = {output.name for output in session.get_outputs()}
+            self.has_bound = "voc_high" in there
             for name, x in self.out.items():
+                if name not in there:
+                    continue
                 self.binding.bind_output(name, "cpu", 0, x.dtype.type, list(x.shape), x.ctypes.data)
 
     def fill(self, columns: tuple[Any, ...], action: Any, remaining: Any) -> None:

@@ -26,7 +26,7 @@ import onnxruntime as ort
 from numpy.typing import NDArray
 
 from distill import scorer_file
-from distill.closed_form import static_rates
+from distill.closed_form import highest_rates, static_rates
 from distill.errors import DistillError, InputError, ScorerFileError
 from distill.leaf_buffers import BELIEFS, FLOATS, INPUTS, MAX_LEAVES, LeafBuffers, number_array
 
@@ -44,14 +44,17 @@ class Scores(NamedTuple):
     """What a scorer says of each leaf of one tree.
 
     voc : (n,), the value it was trained on, by default the rate, u a rollout; gross of cost.
-    batch : (n,), the rollouts that value assumes. in_range : (n,), False where the leaf is unlike those
-    of training, and `voc` is the closed-form static rate. pick : position of the largest voc - cost, the
-    first on ties. worth_it : whether that is above 0. With `tree`, pick (a position within its tree) and
-    worth_it have one entry a tree.
+    batch : (n,), the rollouts that value assumes. voc_high : (n,), calibrated upper bound, gross of cost:
+    the exact value lies at or below it as often as `facts["calibration"]` states. in_range : (n,), False
+    where the leaf is unlike those of training, and `voc` is the closed-form static rate; `voc_high` is
+    then, and with files that have none, a bound that no rate of such a leaf exceeds. pick : position of
+    the largest voc - cost, the first on ties. worth_it : whether that is above 0. With `tree`, pick (a
+    position within its tree) and worth_it have one entry a tree.
     """
 
     voc: Floats
     batch: NDArray[np.int64]
+    voc_high: Floats
     in_range: NDArray[np.bool_]
     pick: Any
     worth_it: Any
@@ -175,6 +178,7 @@ class Scorer:
         return Scores(
             out["voc"].copy(),
             out["batch"].copy(),
+            out["voc_high"].copy() if buffers.has_bound else self._bounds(buffers, slice(None)),
             out["in_range"].copy(),
             int(out["pick"]),
             bool(out["worth_it"]),
@@ -256,15 +260,24 @@ class Scorer:
         if not in_range.any():
             self.counters.fallback += 1
         n = len(usable)
-        voc, batch = np.zeros(n), np.zeros(n, dtype=np.int64)
+        voc, high, batch = np.zeros(n), np.zeros(n), np.zeros(n, dtype=np.int64)
         if usable.any():
             rows = {name: buffers.columns[name][usable] for name in BELIEFS}
             voc[usable], batch[usable] = static_rates(**rows, remaining=float(buffers.remaining))
+            high[usable] = self._bounds(buffers, usable)
         voc[in_range] = buffers.out["voc"][in_range]
         batch[in_range] = buffers.out["batch"][in_range]
+        if buffers.has_bound:
+            high[in_range] = buffers.out["voc_high"][in_range]
         net = np.where(usable, voc - buffers.columns["cost"], -np.inf)
         pick = int(np.argmax(net))
-        return Scores(voc, batch, in_range, pick, bool(net[pick] > 0))
+        return Scores(voc, batch, high, in_range, pick, bool(net[pick] > 0))
+
+    @staticmethod
+    def _bounds(buffers: LeafBuffers, rows: Any) -> Floats:
+        """The bound that no rate exceeds; 0 where nothing is left to roll out."""
+        some = float(buffers.remaining >= 1)
+        return some * highest_rates(*(buffers.columns[name][rows] for name in ("var", "noise_var", "gain")))
 
     def _score_many(
         self, columns: Sequence[Any], action: Any, remaining: Any, tree: Any, deadline: float | None
@@ -289,6 +302,7 @@ class Scorer:
         return Scores(
             np.concatenate([p.voc for p in parts]),
             np.concatenate([p.batch for p in parts]),
+            np.concatenate([p.voc_high for p in parts]),
             np.concatenate([p.in_range for p in parts]),
             np.array([p.pick for p in parts]),
             np.array([p.worth_it for p in parts]),

@@ -10,7 +10,7 @@ from typing import Final
 
 TREE_FORMAT: Final = "belief-tree/1"
 DATASET_FORMAT: Final = "voc-dataset/1"
-SCORER_FORMAT: Final = "voc-scorer/1"
+SCORER_FORMAT: Final = "voc-scorer/2"  # 2: with the output voc_high
 FAMILY_FORMAT: Final = "tree-family/1"
 
 # Node kinds: the names in records, and their codes in arrays.
@@ -42,6 +42,27 @@ LEAF_TABLE_UNITS: Final = {
     "gain": "1; product of the discounts from the root",
     "offset": "u; discounted rewards from the root",
     "action": "0-based position of the root action",
+    "cost": "u a rollout",
+}
+# Win/loss leaf table: the belief columns in place of mean and variances.
+WIN_LOSS_TABLE_UNITS: Final = {
+    "alpha": "1; Beta belief over the win probability",
+    "beta": "1; Beta belief over the win probability",
+    "low": "u; value of a loss (before gain)",
+    "high": "u; value of a win (before gain)",
+    **{name: LEAF_TABLE_UNITS[name] for name in ("gain", "offset", "action", "cost")},
+}
+# Record: one row a candidate, filled by `distill.backup`; chance nodes and correlation. A move of 1 is one
+# standard deviation of the leaf, with all that it moves beside the leaf.
+RECORD_VERSION: Final = 1
+RECORD_UNITS: Final = {
+    "crossing": "1; move at which another action becomes the best; below 0: as the leaf falls",
+    "slope": "u; at the crossing, how fast the other action gains on the best one, a move of 1",
+    "bend": "1; d log(slope) / d move at the crossing; above 0 where further moves gain ever faster",
+    "now": "1; the same slope at present, over `slope`",
+    "other_crossing": "1; the crossing of lesser value, on the other side of 0; 0 where there is none",
+    "other_slope": "u; slope there; 0 where there is none",
+    "noise_ratio": "1; noise variance of one rollout over the leaf's variance, alpha + beta for win/loss",
     "cost": "u a rollout",
 }
 SCORER_OUTPUTS: Final = ("voc", "batch", "voc_high", "in_range", "pick", "worth_it")

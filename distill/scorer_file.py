@@ -4,11 +4,14 @@ A file from elsewhere could make onnxruntime allocate terabytes, loop for ever o
 only what a scorer needs is let in: two operator sets at fixed versions, a short list of operators, fixed
 names, types and shapes of inputs and outputs, finite constants inside the file, shapes that grow with
 the leaves but not faster, and tree ensembles whose every index points where it may.
+
+Files of the format before, which lack the output `voc_high`, are read as well.
 """
 
 from __future__ import annotations
 
 import json
+from collections.abc import Mapping
 from typing import Any, Final
 
 import numpy as np
@@ -22,6 +25,7 @@ from distill.scorer_shapes import OPERATORS, check_shapes
 __all__ = ["FORMAT", "MAX_BYTES", "check"]
 
 FORMAT: Final = schema.SCORER_FORMAT
+_WITHOUT_BOUND: Final = "voc-scorer/1"
 MAX_BYTES: Final = 16 * 2**20
 _MAX_METADATA: Final = 4 * 2**20
 _MAX_NODES: Final = 1000
@@ -30,19 +34,23 @@ _MAX_CASES: Final = 100
 _IR_VERSION: Final = 10
 _OPSETS: Final = ({"": 18}, {"": 18, "ai.onnx.ml": 5})
 _METADATA: Final = ("format", "about", "features", "ranges", "self_test", "transform")
-_OPTIONAL: Final = ("measured",)
+_OPTIONAL: Final = ("measured", "calibration")
 _COLUMNS: Final = ("mean", "var", "noise_var", "gain", "offset", "action", "cost")
-_INPUTS: Final = {
+_INPUTS: Final[dict[str, tuple[int, tuple[str, ...]]]] = {
     **{name: (INT64 if name == "action" else DOUBLE, ("n",)) for name in _COLUMNS},
     "remaining": (DOUBLE, ()),
 }
-_OUTPUTS: Final = {
+_OUTPUTS: Final[dict[str, tuple[int, tuple[str, ...]]]] = {
     "voc": (DOUBLE, ("n",)),
     "batch": (INT64, ("n",)),
+    "voc_high": (DOUBLE, ("n",)),
     "in_range": (BOOL, ("n",)),
     "pick": (INT64, ()),
     "worth_it": (BOOL, ()),
 }
+
+
+_Ends = Mapping[str, tuple[int, tuple[str, ...]]]
 
 
 def check(data: bytes) -> dict[str, Any]:
@@ -58,9 +66,10 @@ def check(data: bytes) -> dict[str, Any]:
     if len(dict(model.opsets)) != len(model.opsets) or dict(model.opsets) not in _OPSETS:
         raise ScorerFileError(f"operator sets must be one of {_OPSETS}; got {model.opsets}")
     facts = _facts(model)
-    _check_ends(model)
+    outputs = {k: x for k, x in _OUTPUTS.items() if k != "voc_high" or facts["format"] == FORMAT}
+    _check_ends(model, outputs)
     _check_constants(model)
-    _check_nodes(model, len(facts["features"]))
+    _check_nodes(model, outputs, len(facts["features"]))
     check_shapes(model)
     return facts
 
@@ -84,7 +93,7 @@ def _facts(model: Model) -> dict[str, Any]:
             facts[name] = json.loads(text, parse_constant=_no_constant)
         except (ValueError, RecursionError):
             raise ScorerFileError(f"metadata {name!r}: must be JSON of finite numbers") from None
-    if facts["format"] != FORMAT:
+    if facts["format"] not in (FORMAT, _WITHOUT_BOUND):
         raise ScorerFileError(f"format must be {FORMAT!r}; got {facts['format'][:40]!r}")
     names = facts["features"]
     if not isinstance(names, list) or not names or not all(isinstance(x, str) for x in names):
@@ -99,9 +108,9 @@ def _no_constant(name: str) -> float:
     raise ValueError(name)
 
 
-def _check_ends(model: Model) -> None:
+def _check_ends(model: Model, outputs: _Ends) -> None:
     """Inputs and outputs are exactly those of a scorer, in any order."""
-    for found, allowed, kind in ((model.inputs, _INPUTS, "input"), (model.outputs, _OUTPUTS, "output")):
+    for found, allowed, kind in ((model.inputs, _INPUTS, "input"), (model.outputs, outputs, "output")):
         seen: set[str] = set()
         for info in found:
             if info.name not in allowed or info.name in seen:
@@ -129,7 +138,7 @@ def _check_constants(model: Model) -> None:
             raise ScorerFileError(f"initializer {name!r}: must be finite")
 
 
-def _check_nodes(model: Model, n_features: int) -> None:
+def _check_nodes(model: Model, outputs: _Ends, n_features: int) -> None:
     """Allowed operators, every input known before it is read, every output new."""
     if len(model.nodes) > _MAX_NODES:
         raise ScorerFileError(f"must have at most {_MAX_NODES} nodes; got {len(model.nodes)}")
@@ -147,7 +156,7 @@ def _check_nodes(model: Model, n_features: int) -> None:
             known.add(value)
         if node.op == "TreeEnsemble":
             _check_ensemble(node, n_features)
-    for value in _OUTPUTS:
+    for value in outputs:
         if value not in known:
             raise ScorerFileError(f"output {value!r}: is not computed")
 

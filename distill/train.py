@@ -21,9 +21,10 @@ import sklearn
 from numpy.typing import NDArray
 
 from distill import __version__
+from distill.calibration import calibrated
 from distill.candidates import Candidates, Split, split_by_tree
 from distill.errors import InputError
-from distill.export import export_scorer
+from distill.export import export_scorer, mapped_back
 from distill.features import FEATURE_NAMES, FeatureGraph, FeatureMatrix
 from distill.files import sha256_of, write_atomic
 from distill.learners import BoostingLearner, DenseLearner, LinearLearner
@@ -113,13 +114,13 @@ def train(
     out.mkdir(parents=True, exist_ok=True)
     with bar("features", 2 + 2 * len(chosen), "steps", shown=progress) as advance:
         graph = FeatureGraph()
-        fit, held_out = (graph.matrix({**c.columns, "tree": c.tree}) for c in (split.fit, split.held_out))
+        fit, choose, held_out = (graph.matrix({**c.columns, "tree": c.tree}) for c in vars(split).values())
         cases = decisions({**split.held_out.columns, "tree": split.held_out.tree}, _LEAVES, 50, seed)
         scorers: list[dict[str, Any]] = []
         for recipe in chosen:
             advance(1, f"train {recipe.name}")
             path = out / recipe.file
-            fit_seconds = _fit_and_export(recipe, split, fit, graph, about, seed, path)
+            fit_seconds = _fit_and_export(recipe, split, fit, choose, graph, about, seed, path)
             advance(1, f"validate {recipe.name}")
             scorers.append(_examine(recipe, path, split, cases, fit_seconds, n_boot, seed))
         advance(1, "closed forms and exact methods")
@@ -153,27 +154,41 @@ def _fit_and_export(
     recipe: Recipe,
     split: Split,
     matrix: FeatureMatrix,
+    choose: FeatureMatrix,
     graph: FeatureGraph,
     about: Mapping[str, Any],
     seed: int,
     path: Path,
 ) -> float:
-    """Fit on the part `fit`, write the scorer file; seconds that the fit took."""
+    """Fit on the part `fit`, calibrate on `choose`, write the scorer file; seconds that the fit took."""
     data = split.fit
     learner = recipe.make(seed)
     start = time.perf_counter()
     usable = matrix.unit > 0
     y = np.where(usable, data.label / np.where(usable, matrix.unit, 1), 0.0)
     first = np.where(usable, matrix.first_order / np.where(usable, matrix.unit, 1), 0.0)
-    weight = row_weights(data.groups, data.label) * usable
+    weight = row_weights(data.groups, data.label) * usable * (1 if data.weight is None else data.weight)
     learner.fit(matrix.x, y, sample_weight=weight, first_order=first)
     seconds = time.perf_counter() - start
+    ranges = _ranges(matrix.x)
+
+    def scored(m: FeatureMatrix, label: Floats) -> tuple[NDArray[np.float32], Floats, Floats]:
+        x = np.clip(m.x, ranges[:, 0], ranges[:, 1])
+        t = np.asarray(learner.model_.predict(x), dtype=float)
+        return x, label, mapped_back(t, m.unit, m.first_order, learner.target)
+
+    upper = calibrated(
+        *scored(choose, split.choose.label),
+        len(split.choose.groups.sizes),
+        training=scored(matrix, data.label),
+    )
     test = split.choose.of_trees(np.arange(len(split.choose.groups.sizes)) < _SELF_TEST_TREES)
     export_scorer(
         learner.model_,
         graph,
         transform=learner.target,
-        ranges=_ranges(matrix.x),
+        ranges=ranges,
+        upper=upper,
         metadata={"recipe": recipe.name, "seed": seed, **about},
         self_test_columns={**test.columns, "tree": test.tree},
         path=path,

@@ -260,6 +260,18 @@ def missing_output(m):
     m.graph.output.extend(keep)
 
 
+@hostile("output 'voc_high': is missing")
+def no_upper_bound(m):
+    keep = [o for o in m.graph.output if o.name != "voc_high"]
+    del m.graph.output[:]
+    m.graph.output.extend(keep)
+
+
+@hostile("output 'voc_high': has no place")
+def upper_bound_in_the_format_before(m):
+    put_metadata(m, "format", "voc-scorer/1")
+
+
 @hostile("output 'pick': must have")
 def output_of_absurd_count(m):
     o = next(o for o in m.graph.output if o.name == "pick")

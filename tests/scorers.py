@@ -6,6 +6,7 @@ import functools
 from typing import Any
 
 import numpy as np
+import onnx
 from leaf_tables import rows
 from sklearn.ensemble import HistGradientBoostingRegressor
 from sklearn.linear_model import Ridge
@@ -13,6 +14,7 @@ from sklearn.neural_network import MLPRegressor
 from sklearn.pipeline import make_pipeline
 from sklearn.preprocessing import StandardScaler
 
+from distill.calibration import UpperBound
 from distill.export import export_scorer
 from distill.features import FeatureGraph, FeatureMatrix
 
@@ -49,6 +51,12 @@ def fitted(kind: str, transform: str = "log_ratio") -> Any:
     return model.fit(training().x, t)
 
 
+def upper_bound() -> UpperBound:
+    """Two bins, split at a threshold of 1."""
+    nodes = (np.array(x) for x in ([0, 0, 0], [1.0, 0, 0], [1, -1, -1], [2, -1, -1], [1.0, 1.25, 1.75]))
+    return UpperBound(*nodes, coverage=0.95, trees=40, candidates=800)
+
+
 def arguments(kind: str = "dense", transform: str = "log_ratio") -> dict[str, Any]:
     """Arguments of export_scorer, by name."""
     x = training().x
@@ -57,6 +65,7 @@ def arguments(kind: str = "dense", transform: str = "log_ratio") -> dict[str, An
         "feature_graph": graph(),
         "transform": transform,
         "ranges": np.stack([x.min(axis=0), x.max(axis=0)], axis=1),
+        "upper": upper_bound(),
         "metadata": {"recipe": kind, "family": "rule"},
         "self_test_columns": rows(np.random.default_rng(12), 3, most=10),
     }
@@ -65,3 +74,17 @@ def arguments(kind: str = "dense", transform: str = "log_ratio") -> dict[str, An
 @functools.cache
 def scorer_bytes(kind: str = "dense", transform: str = "log_ratio") -> bytes:
     return export_scorer(**arguments(kind, transform))
+
+
+def without_upper_bound(data: bytes) -> bytes:
+    """The same scorer as a file of the format before, which had no `voc_high`."""
+    model = onnx.load_model_from_string(data)
+    kept = [node for node in model.graph.node if "voc_high" not in node.output]
+    del model.graph.node[:]
+    model.graph.node.extend(kept)
+    outputs = [output for output in model.graph.output if output.name != "voc_high"]
+    del model.graph.output[:]
+    model.graph.output.extend(outputs)
+    props = {p.key: p.value for p in model.metadata_props if p.key != "calibration"}
+    onnx.helper.set_model_props(model, {**props, "format": "voc-scorer/1"})
+    return bytes(model.SerializeToString(deterministic=True))

@@ -5,11 +5,11 @@ from __future__ import annotations
 import mpmath
 import numpy as np
 import pytest
-from ladder import CLOSED_FORM_RATE, LOSS_FIT
+from ladder import CLOSED_FORM_RATE, LOSS_FIT, RELATIVE_TAIL
 from leaf_tables import table
 
 from distill import voc
-from distill.closed_form import LOSS_A, LOSS_B, LOSS_P, LOSS_Q, static_rates
+from distill.closed_form import LOSS_A, LOSS_B, LOSS_P, LOSS_Q, highest_rates, static_rates
 from distill.query import Query
 from distill.timing import tree_of
 
@@ -59,3 +59,20 @@ def test_extremes_give_finite_numbers():
         assert np.all(np.isfinite(rate))
         assert np.all(rate >= 0)
         assert np.all(batch >= 1)
+
+
+@pytest.mark.parametrize("horizon", [0.0, 0.5, 7.0, np.inf])
+@pytest.mark.parametrize("seed", range(4))
+def test_no_rate_of_any_horizon_exceeds_the_highest(seed, horizon):
+    """Nor at a tie with a sure leaf, where a rollout is worth half of it."""
+    rng = np.random.default_rng(seed)
+    tables = [table(rng, n, 2, remaining=int(rng.integers(1, 50))) for n in (2, 3, 8)]
+    tie = table(rng, 2, 2)
+    tie.update(mean=np.zeros(2), offset=np.zeros(2), var=np.array([tie["var"][0], 0.0]))
+    shares = []
+    for t in (*tables, tie):
+        priced = voc.price(tree_of(t), Query(horizon=horizon, batch=None, remaining=t["remaining"]))
+        highest = highest_rates(t["var"], t["noise_var"], t["gain"])
+        assert np.all(priced.voc - priced.error <= highest)
+        shares.append(priced.voc[0] / highest[0])
+    assert shares[-1] == pytest.approx(0.5, rel=RELATIVE_TAIL)

@@ -12,7 +12,7 @@ import onnxruntime
 import pytest
 from ladder import ONNX_DOUBLE, ONNX_FLOAT
 from leaf_tables import rows, table
-from scorers import KINDS, arguments, fitted, graph, scorer_bytes, training
+from scorers import KINDS, arguments, fitted, graph, scorer_bytes, training, upper_bound
 from sklearn.ensemble import GradientBoostingRegressor, HistGradientBoostingRegressor
 from sklearn.linear_model import Ridge
 from sklearn.neural_network import MLPRegressor
@@ -162,6 +162,8 @@ def test_the_file_repeats_estimator_transform_and_decision(kind, transform):
         expected = mapped_back(learned, matrix.unit, matrix.first_order, transform)
         np.testing.assert_allclose(got.voc[inside], expected[inside], rtol=1e-4, atol=1e-30)
         np.testing.assert_array_equal(got.batch[inside], matrix.batch[inside])
+        clipped = np.clip(matrix.x, low, high)
+        np.testing.assert_array_equal(got.voc_high[inside], (got.voc * upper_bound().of(clipped))[inside])
         assert got.pick == int(np.argmax(got.voc - t["cost"]))
         assert got.worth_it == bool(np.max(got.voc - t["cost"]) > 0)
         assert scorer.pick(**t) == got.pick
@@ -197,9 +199,10 @@ def test_files_are_clean_and_the_same_in_every_process(tmp_path):
 def test_metadata_say_what_the_file_is():
     scorer = Scorer.from_bytes(with_facts(scorer_bytes(), {"p50_us": 41.5}))
     facts = scorer.facts
-    assert facts["format"] == "voc-scorer/1"
+    assert facts["format"] == "voc-scorer/2"
     assert facts["transform"] == "log_ratio"
     assert facts["features"] == list(graph().names)
+    assert facts["calibration"] == {"coverage": 0.95, "trees": 40, "candidates": 800, "bins": 2}
     assert facts["about"] == {"recipe": "dense", "family": "rule"}
     assert facts["measured"] == {"p50_us": 41.5}
     ranges = np.array([facts["ranges"][name] for name in facts["features"]])
@@ -251,6 +254,12 @@ def test_a_wrong_assembly_is_not_written(tmp_path, monkeypatch):
     with pytest.raises(ExportError, match="where the estimator gives"):
         export_scorer(**arguments(), path=tmp_path / "scorer.onnx")
     assert not list(tmp_path.iterdir())
+
+
+def test_other_bounds_than_the_calibrated_ones_are_not_written(monkeypatch):
+    monkeypatch.setattr("distill.calibration.UpperBound.of", lambda _, x: np.full(len(x), 1.3))
+    with pytest.raises(ExportError, match="upper bounds differ"):
+        export_scorer(**arguments())
 
 
 def test_leaves_in_rows_of_many_trees_score_as_each_tree_alone():

@@ -11,9 +11,9 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from leaf_tables import NAMES, rows, table
-from scorers import KINDS, arguments, graph, scorer_bytes, training
+from scorers import KINDS, arguments, graph, scorer_bytes, training, without_upper_bound
 
-from distill.closed_form import static_rates
+from distill.closed_form import highest_rates, static_rates
 from distill.errors import DistillError, InputError, ScorerFileError
 from distill.export import export_scorer
 from distill.runtime import Scorer
@@ -183,6 +183,40 @@ def test_leaves_unlike_those_of_training_take_the_closed_form_one_by_one():
     assert (scorer.counters.out_of_range, scorer.counters.fallback) == (2, 0)
 
 
+def bound_of_any_rate(t):
+    return highest_rates(t["var"], t["noise_var"], t["gain"])
+
+
+def test_the_upper_bound_is_the_files_where_it_answers_and_one_that_always_holds_elsewhere():
+    narrow = arguments("dense")
+    narrow["ranges"] = narrow["ranges"].copy()
+    narrow["ranges"][0, 1] = 2.0
+    scorer = Scorer.from_bytes(export_scorer(**narrow))
+    t = inside_table()
+    got, wide = scorer.score(**t), SCORER.score(**t)
+    near = got.in_range
+    assert 0 < near.sum() < 20
+    assert np.all(wide.voc_high >= wide.voc)
+    np.testing.assert_array_equal(got.voc_high[near], wide.voc_high[near])
+    np.testing.assert_array_equal(got.voc_high[~near], bound_of_any_rate(t)[~near])
+    t["mean"][3] = np.nan
+    bad = scorer.score(**t)
+    assert bad.voc_high[3] == 0
+    rest = np.arange(20) != 3
+    np.testing.assert_array_equal(bad.voc_high[rest], bound_of_any_rate(t)[rest])
+    assert not np.any(Scorer.closed_form().score(**{**t, "remaining": 0}).voc_high)
+
+
+def test_a_file_of_the_format_before_answers_with_the_bound_that_always_holds():
+    old = Scorer.from_bytes(without_upper_bound(scorer_bytes("dense")), strict=True)
+    assert old.facts["format"] == "voc-scorer/1"
+    t = inside_table()
+    got, new = old.score(**t), SCORER.score(**t)
+    np.testing.assert_array_equal(got.voc, new.voc)
+    assert got.pick == new.pick == old.pick(**t)
+    np.testing.assert_array_equal(got.voc_high, bound_of_any_rate(t))
+
+
 def test_after_the_deadline_the_closed_form_answers():
     scorer = Scorer.from_bytes(scorer_bytes("dense"))
     t = inside_table()
@@ -339,8 +373,8 @@ def check_fuzzed(seed):
         except DistillError as e:
             assert "\n" not in str(e)
             continue
-        assert np.all(np.isfinite(got.voc))
-        assert np.all(got.voc >= 0)
+        assert np.all(np.isfinite(got.voc) & np.isfinite(got.voc_high))
+        assert np.all((got.voc >= 0) & (got.voc_high >= got.voc))
         assert 0 <= got.pick < len(got.voc)
 
 
@@ -360,7 +394,7 @@ def test_twenty_thousand_hostile_tables():
 def test_many_trees_in_one_call():
     columns = rows(np.random.default_rng(4), 8)
     got = SCORER.score(**columns)
-    assert len(got.voc) == len(columns["mean"])
+    assert len(got.voc) == len(got.voc_high) == len(columns["mean"])
     assert len(got.pick) == len(got.worth_it) == 8
     one = SCORER.score(**{**columns, "remaining": 50})
     assert len(one.voc) == len(got.voc)

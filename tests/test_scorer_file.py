@@ -42,7 +42,7 @@ def test_there_are_enough_hostile_files():
 @pytest.mark.parametrize("kind", KINDS)
 def test_a_true_file_passes(kind):
     facts = scorer_file.check(scorer_bytes(kind))
-    assert facts["format"] == "voc-scorer/1"
+    assert facts["format"] == "voc-scorer/2"
 
 
 def test_bytes_that_are_no_model_are_refused():

@@ -14,9 +14,12 @@ from __future__ import annotations
 
 import math
 
-from distill.numerics import compiled
+import numpy as np
+
+from distill.numerics import Floats, compiled
 
 __all__ = [
+    "beta_binomial_law",
     "beta_density",
     "beta_divergence",
     "beta_log_constant",
@@ -124,3 +127,33 @@ def lower_tail(a: float, b: float, p: float) -> float:
         total += term
         n += 1
     return first * total
+
+
+@compiled
+def beta_binomial_law(a: float, b: float, k: int) -> Floats:
+    """P(x wins in k trials), x = 0 ... k, p ~ Beta(a, b); ratios from the mode out, divided by their total.
+
+    >>> beta_binomial_law(1.0, 1.0, 3)
+    array([0.25, 0.25, 0.25, 0.25])
+    """
+    out = np.empty(k + 1)
+    n = a + b
+    if a >= 1.0 and b >= 1.0:
+        top = 0 if n <= 2.0 else min(k, int((k + 1) * ((a - 1.0) / (n - 2.0))))
+        split = k
+    elif b >= 1.0:
+        top, split = 0, k
+    elif a >= 1.0:
+        top, split = k, k
+    else:  # heavy at both ends: each half from its own end
+        top, split = 0, k // 2
+    out[top] = 1.0
+    for x in range(top, split):
+        out[x + 1] = out[x] * ((k - x) / (x + 1.0)) * ((a + x) / (b + (k - x - 1)))
+    if split < k:
+        out[k] = 1.0
+        for s in range(k):
+            out[k] *= (a + s) / (b + s)
+    for x in range(top if split == k else k, 0 if split == k else split + 1, -1):
+        out[x - 1] = out[x] * (x / (k - x + 1.0)) * ((b + (k - x)) / (a + (x - 1)))
+    return out / np.sum(out)

@@ -71,6 +71,41 @@ def random_tree(
     return from_record({**record, "prob": prob, **columns})
 
 
+def later_choice(rng: np.random.Generator, *, deep: bool = False, whole: bool = True) -> BeliefTree:
+    """An action that chooses between a leaf and a chance node over two (leaves 2, 0 and 1); a rival leaf.
+
+    deep : choices below the chance nodes too, rewards and discounts. whole : whole alpha and beta.
+    """
+    parent, inner = [-1, 0, 1, 2, 2, 1, 0], {1: "decision", 2: "chance"}
+    if deep:
+        parent = [-1, 0, 1, 2, 2, 1, 1, 6, 6, 8, 8, 0, 11, 11]
+        inner |= {6: "chance", 8: "decision", 11: "decision"}
+    n = len(parent)
+    kind = ["decision", *(inner.get(v, "leaf") for v in range(1, n))]
+    prob: list[float | None] = [None] * n
+    columns: dict[str, list[float | None]] = {name: [None] * n for name in _COLUMNS}
+    for v in range(n):
+        if kind[v] == "chance":
+            prob[parent.index(v)] = x = float(rng.uniform(0.2, 0.8))
+            prob[parent.index(v) + parent[parent.index(v) :].index(v, 1)] = 1 - x
+        if kind[v] == "leaf":
+            a, b = rng.integers(1, 7, 2).tolist() if whole else np.exp(rng.normal(0.5, 1.2, 2)).tolist()
+            for name, value in zip(_COLUMNS, (a, b, 0.0, 1.0), strict=True):
+                columns[name][v] = value
+    reward, discount = [0.0] * n, [1.0] * n
+    if deep:
+        reward[1:], discount[1:] = rng.normal(0, 0.05, n - 1).tolist(), rng.uniform(0.8, 1, n - 1).tolist()
+    record = {
+        "format": "belief-tree/1",
+        "parent": parent,
+        "kind": kind,
+        "reward": reward,
+        "discount": discount,
+        "prob": prob,
+    }
+    return from_record({**record, **columns})
+
+
 def change(tree: BeliefTree, **columns: Any) -> BeliefTree:
     """The same tree with columns replaced."""
     fields = {name: value for name, value in vars(tree).items() if value is not None}

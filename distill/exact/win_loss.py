@@ -20,9 +20,8 @@ __all__ = ["price"]
 def price(tree: BeliefTree, query: Query) -> Priced:
     """VOC_h or RATE_h of every leaf of a win/loss tree.
 
-    h = 0: any tree. h > 0, whole or infinite: chance nodes only where nothing below the root has been
-    chosen yet. Raises InputError for an h that is neither whole nor infinite, RefusedError by name for
-    what no method here can do.
+    Any tree, h = 0, whole or infinite. Raises InputError for an h that is neither whole nor infinite,
+    RefusedError by name for what no method here can do: too many leaves below one choice, too many outcomes.
 
     >>> from distill.record import from_record
     >>> t = from_record({"format": "belief-tree/1", "parent": [-1, 0, 0],

@@ -4,10 +4,13 @@ With endless rollouts to come every win rate will be known, so a group of leaves
 V = E max of Y_j = low_j + width_j p_j: one integral over a product of beta distribution functions, on
 panels that all leaves of the group share (`beta_panels`). Each leaf's trials then cost one walk
 (`win_loss_walk`), and a leaf that is alone in its group one walk without any integral (`trial_walk`).
+Below chance nodes that follow a choice, what the others add to a leaf comes from `win_loss_later`, a table
+for each leaf.
 """
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
@@ -15,15 +18,18 @@ from scipy.special import betainc
 
 from distill.errors import RefusedError
 from distill.exact.beta_panels import (
+    N,
+    X,
     best_of_rest,
     cut_panels,
     distribution_functions,
     expected_gain,
     floor_of,
 )
-from distill.exact.win_loss_groups import Group, price_groups
+from distill.exact.win_loss_groups import Choice, Group, price_groups
+from distill.exact.win_loss_later import NARROW, Curve, Later, curves
 from distill.exact.win_loss_static import price_crossings
-from distill.exact.win_loss_walk import Race, endless_gain, reachable_gap, walk
+from distill.exact.win_loss_walk import Race, endless_gain, expected_gap, reachable_gap, walk
 from distill.numerics import compiled
 from distill.query import Priced, Query
 from distill.tree import BeliefTree, Floats, Ints
@@ -40,12 +46,17 @@ _EPS = 2.0**-52
 
 
 def price_dynamic(tree: BeliefTree, query: Query) -> Priced:
-    """VOC_inf or RATE_inf of every win/loss leaf, any batch; chance nodes above all choices only.
+    """VOC_inf or RATE_inf of every win/loss leaf, any batch, any tree.
 
-    The error covers the panels' fit, roundings, and for more than 2^17 trials the gap to what endless
-    trials would buy. Raises RefusedError for other chance nodes, and where one group's tables would not fit.
+    The error covers the panels' fit, the lattice below chance nodes that follow a choice, roundings, and for
+    more than 2^17 trials the gap to what endless trials would buy. Raises RefusedError where one group's
+    tables would not fit.
     """
-    return price_groups(tree, query, _Tables, METHOD)
+    return price_groups(tree, query, _choice, METHOD)
+
+
+def _choice(group: Group | Later) -> Choice:
+    return _Tables(group) if isinstance(group, Group) else _LaterTables(group)
 
 
 class _Tables:
@@ -106,6 +117,66 @@ class _Tables:
             last,
             walked,
         )
+
+
+class _LaterTables:
+    """The same for a group with chance nodes below its choice: a table for each leaf."""
+
+    def __init__(self, group: Later) -> None:
+        self.group = group
+        self.value, self.error, self.curves = curves(group, math.inf)
+
+    def price(self, rival: float, slack: float, query: Query) -> tuple[Floats, Ints, Floats]:
+        """Worth, batch and error of trials on every leaf; see `win_loss_groups.Choice`."""
+        group, n = self.group, len(self.group.a)
+        last = query.remaining if query.batch is None else query.batch
+        assert last is not None
+        voc, error = np.zeros(n), np.zeros(n)
+        batch = np.full(n, min(last, 1) if query.rate else last, dtype=np.int64)
+        if last == 0 or rival == -math.inf:
+            return voc, batch, error
+        for i, curve in enumerate(self.curves):
+            if group.width[i] <= NARROW * abs(group.low[i]):
+                error[i] = group.width[i]
+                continue
+            one = slice(i, i + 1)
+            a, b, low, width = group.a[one], group.b[one], group.low[one], group.width[one]
+            anchor, left, right, inside, edge = _curve_panels(a, b, low, width, curve)
+            # Against a rival of 0 the leaf is worth `value`; what the others add besides is the rest.
+            value = expected_gap(a[0], b[0], Race(low[0], width[0], 0.0, anchor, left, right, inside, edge))
+            off = self.error + curve.error
+            found = _price_leaves(
+                a, b, low, width, value, value + (rival - self.value), slack, np.array([off]), np.zeros(1),
+                anchor, left, right, inside[None], edge[None], query.rate, last, min(last, _MAX_WALK),
+            )  # fmt: skip
+            voc[i], batch[i], error[i] = (float(x[0]) for x in found)
+            if error[i] > 0 and abs(rival - self.value) <= off + slack:  # which is best now is in doubt
+                error[i] += (off + slack) / (batch[i] if query.rate else 1)
+        return voc, batch, error
+
+
+_PANEL = 4  # knots of a curve that a panel spans
+
+
+def _curve_panels(
+    a: Floats, b: Floats, low: Floats, width: Floats, curve: Curve
+) -> tuple[Floats, Floats, Floats, Floats, Floats]:
+    """Panels that fit one leaf's density and its curve: anchor, left, right, T at nodes, T at edges."""
+    rows: list[tuple[float, float, float]] = []
+    first, last = float(curve.y[0]), float(curve.y[-1])
+    widest = _PANEL * float(curve.y[1] - curve.y[0])
+    for anchor, d0, d1 in np.column_stack(cut_panels(a, b, low, width, float(low[0]))).tolist():
+        cuts = [d0, *(x - anchor for x in (first, last) if d0 < x - anchor < d1), d1]
+        for left, right in itertools.pairwise(cuts):
+            inside = anchor + right > first and anchor + left < last
+            pieces = max(1, math.ceil((right - left) / widest)) if inside else 1
+            ends = np.linspace(left, right, pieces + 1)
+            rows += [(anchor, x, y) for x, y in itertools.pairwise(ends.tolist()) if y > x]
+    anchor, left, right = (np.ascontiguousarray(x) for x in np.array(rows).T)
+    half, middle = 0.5 * (right - left), 0.5 * (left + right)
+    nodes = (anchor + middle)[:, None] + half[:, None] * X
+    edge = curve.at(np.append(anchor + left, anchor[-1] + right[-1]))
+    return anchor, left, right, curve.at(nodes.ravel()).reshape(-1, N), edge
 
 
 @compiled

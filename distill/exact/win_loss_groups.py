@@ -1,12 +1,13 @@
-"""Win/loss trees whose chance nodes all lie above their decisions, as sums of maxima; floor 2.
+"""Win/loss trees as sums of groups; floor 2.
 
-Below the root a search meets chance first and chooses later: an action is a sum, over outcomes, of maxima
-over leaves. Expectations pass through the sum, so
+Below the root a search meets chance first and chooses later: an action is a sum, over outcomes, of maxima.
+Expectations pass through the sum, so
 
     V(action) = sum over its groups of V(group),  V(group) = E max over leaves of (low_j + width_j p_j),
 
 in units of the root (discounts and probabilities multiplied in). A group competes with what the best other
-action offers less what the action's other groups add. A tree of decision nodes has one group an action.
+action offers less what the action's other groups add. A tree of decision nodes has one group an action. A
+group with chance nodes below its choice is a maximum of more than leaves (`win_loss_later`).
 """
 
 from __future__ import annotations
@@ -19,17 +20,13 @@ from typing import Protocol
 import numpy as np
 
 from distill import schema
-from distill.errors import RefusedError
+from distill.exact.win_loss_later import NARROW, Later, Shape
 from distill.query import Priced, Query
 from distill.tree import BeliefTree, Floats, Ints
 
 __all__ = ["Choice", "Group", "price_groups"]
 
 _EPS = 2.0**-52
-
-
-# A support narrower than this share of where it lies is a sure value: rounding leaves little of it.
-_NARROW = 1e3 * 2.0**-52
 
 
 @dataclass(frozen=True)
@@ -53,12 +50,16 @@ class Group:
     def settled(self, shift: float) -> Group:
         """The group shifted, its narrow leaves made a sure value."""
         low = self.low + shift
-        wide = self.width > _NARROW * np.abs(low)
+        wide = self.width > NARROW * np.abs(low)
         sure = float(np.max((low + self.width * (self.a / (self.a + self.b)))[~wide], initial=-math.inf))
         return Group(
             self.action, self.leaves[wide], self.a[wide], self.b[wide], low[wide], self.width[wide], sure,
             self.size + abs(shift),
         )  # fmt: skip
+
+    def static(self) -> float:
+        """Its value with every leaf at its mean."""
+        return float(np.max(self.low + self.width * (self.a / (self.a + self.b))))
 
 
 class Choice(Protocol):
@@ -72,11 +73,10 @@ class Choice(Protocol):
         ...
 
 
-def price_groups(tree: BeliefTree, query: Query, choose: Callable[[Group], Choice], method: str) -> Priced:
-    """Price every leaf of a win/loss tree, h > 0, with `choose` for the method of one group.
-
-    Raises RefusedError where a chance node lies below a decision node that lies below the root.
-    """
+def price_groups(
+    tree: BeliefTree, query: Query, choose: Callable[[Group | Later], Choice], method: str
+) -> Priced:
+    """Price every leaf of a win/loss tree, h > 0, with `choose` for the method of one group."""
     groups, constant = _groups(tree)
     n_actions = len(constant)
     value, error = np.zeros(n_actions), np.zeros(n_actions)
@@ -114,12 +114,11 @@ def price_groups(tree: BeliefTree, query: Query, choose: Callable[[Group], Choic
     return Priced(voc, batch, value + centre, wrong, method)
 
 
-def _centre(groups: list[Group], constant: Floats) -> float:
+def _centre(groups: list[Group | Later], constant: Floats) -> float:
     """The best action's value with every leaf at its mean: numbers near it keep their digits."""
     static = constant.copy()
     for g in groups:
-        mean = g.low + g.width * (g.a / (g.a + g.b))
-        static[g.action] += float(mean.max())
+        static[g.action] += g.static()
     return float(static.max())
 
 
@@ -133,7 +132,7 @@ def _ranges(tree: BeliefTree) -> Floats:
     return np.asarray(gain[tree.leaf_nodes] * (tree.high - tree.low))
 
 
-def _groups(tree: BeliefTree) -> tuple[list[Group], Floats]:
+def _groups(tree: BeliefTree) -> tuple[list[Group | Later], Floats]:
     """The groups, and the rewards that every outcome of an action earns before it chooses."""
     children: list[list[int]] = [[] for _ in range(tree.n_nodes)]
     parent, kind, prob = tree.parent.tolist(), tree.kind.tolist(), tree.prob.tolist()
@@ -144,7 +143,7 @@ def _groups(tree: BeliefTree) -> tuple[list[Group], Floats]:
     leaf_of = {node: i for i, node in enumerate(tree.leaf_nodes.tolist())}
     actions = tree.action_nodes.tolist()
     constant = np.array([reward[a] for a in actions])
-    groups: list[Group] = []
+    groups: list[Group | Later] = []
     for x, action in enumerate(actions):
         above = [(action, discount[action])]  # nodes that choose nothing yet, and their weights
         while above:
@@ -154,32 +153,42 @@ def _groups(tree: BeliefTree) -> tuple[list[Group], Floats]:
                     constant[x] += weight * prob[c] * reward[c]
                     above.append((c, weight * prob[c] * discount[c]))
                 continue
-            found: list[tuple[int, float, float]] = []  # leaf, weight, rewards on the way
-            below = [(node, weight, 0.0)]
+            shape, found = Shape(), []
+            # node, its place in the shape, weight, rewards on the way, whether it carries what all earn
+            below = [(node, -1, weight, 0.0, True)]
             while below:
-                v, w, earned = below.pop()
+                v, place, w, earned, carries = below.pop()
+                down, only = children[v], len(children[v]) == 1
                 if kind[v] == schema.LEAF:
-                    found.append((leaf_of[v], w, earned))
-                elif kind[v] == schema.CHANCE and len(children[v]) > 1:
-                    raise RefusedError(
-                        "win/loss leaves with h > 0: a chance node below a decision node below the root "
-                        "has no exact method"
-                    )
-                else:
-                    below.extend((c, w * discount[c], earned + w * reward[c]) for c in reversed(children[v]))
-            groups.append(_group(tree, x, found))
+                    shape.add(place, False, len(found))
+                    found.append((leaf_of[v], w, earned, carries))
+                    continue
+                total = kind[v] == schema.CHANCE
+                if not only and (place < 0 or shape.total[place] != total):
+                    place = shape.add(place, total)
+                share = [w * prob[c] if total else w for c in down]
+                for m in reversed(range(len(down))):
+                    c, first = down[m], m == 0 or not total
+                    earns = (earned if first else 0.0) + share[m] * reward[c]
+                    below.append((c, place, share[m] * discount[c], earns, carries and first))
+            groups.append(_group(tree, x, found, shape))
     return groups, constant
 
 
-def _group(tree: BeliefTree, action: int, found: list[tuple[int, float, float]]) -> Group:
+def _group(
+    tree: BeliefTree, action: int, found: list[tuple[int, float, float, bool]], shape: Shape
+) -> Group | Later:
     assert tree.alpha is not None
     assert tree.beta is not None
     assert tree.low is not None
     assert tree.high is not None
-    leaves = np.array([leaf for leaf, _, _ in found], dtype=np.int64)
-    weight, earned = np.array([w for _, w, _ in found]), np.array([r for _, _, r in found])
+    leaves = np.array([leaf for leaf, _, _, _ in found], dtype=np.int64)
+    weight, earned = np.array([w for _, w, _, _ in found]), np.array([r for _, _, r, _ in found])
     a, b = tree.alpha[leaves], tree.beta[leaves]
     width = weight * (tree.high[leaves] - tree.low[leaves])
     low = earned + weight * tree.low[leaves]
-    size = np.abs(earned) + np.abs(weight * tree.low[leaves])
-    return Group(action, leaves, a, b, low, width, -math.inf, float(np.max(2 * size + 0.25 * width)))
+    size = 2 * (np.abs(earned) + np.abs(weight * tree.low[leaves])) + 0.25 * width
+    if any(shape.total):
+        carries = np.array([c for _, _, _, c in found])
+        return Later(action, leaves, a, b, low, width, carries, shape, float(size.sum()))
+    return Group(action, leaves, a, b, low, width, -math.inf, float(size.max()))

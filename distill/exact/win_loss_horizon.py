@@ -18,14 +18,16 @@ import math
 
 import numpy as np
 
+from distill.beta_numerics import beta_binomial_law
 from distill.errors import RefusedError
-from distill.exact.best_batch import best_batch
-from distill.exact.win_loss_groups import Group, price_groups
+from distill.exact.best_batch import VocAt, best_batch
+from distill.exact.win_loss_groups import Choice, Group, price_groups
+from distill.exact.win_loss_later import NARROW, Curve, Later, curves
 from distill.numerics import compiled
 from distill.query import Priced, Query
 from distill.tree import BeliefTree, Floats, Ints
 
-__all__ = ["METHOD", "beta_binomial_law", "price_horizon"]
+__all__ = ["METHOD", "price_horizon"]
 
 METHOD = "win/loss, finite horizon: sums over outcomes"
 
@@ -37,10 +39,11 @@ _EPS = 2.0**-52
 
 
 def price_horizon(tree: BeliefTree, query: Query) -> Priced:
-    """VOC_h or RATE_h of every win/loss leaf, h >= 0 whole and finite; chance nodes above all choices only.
+    """VOC_h or RATE_h of every win/loss leaf, h >= 0 whole and finite, any tree.
 
-    Exact sums; the error covers roundings, and for a rate the certificate of the search. Raises
-    RefusedError for other chance nodes, and where h or the batch needs too many outcomes.
+    Exact sums; the error covers roundings, for a rate the certificate of the search, and below chance nodes
+    that follow a choice the lattice where one is needed. Raises RefusedError where h or the batch needs too
+    many outcomes.
     """
     h = int(query.horizon)
     last = query.remaining if query.batch is None else query.batch
@@ -49,7 +52,11 @@ def price_horizon(tree: BeliefTree, query: Query) -> Priced:
         raise RefusedError(
             f"win/loss leaves at horizon {h}: {last} rollouts have too many outcomes to sum over"
         )
-    return price_groups(tree, query, lambda group: _Tables(group, h), METHOD)
+
+    def choice(group: Group | Later) -> Choice:
+        return _Tables(group, h) if isinstance(group, Group) else _LaterTables(group, h)
+
+    return price_groups(tree, query, choice, METHOD)
 
 
 class _Tables:
@@ -81,50 +88,74 @@ class _Tables:
                 leaf, k, *self.columns, self.h, self.value, rival, self.error + slack, *self.tables
             )
 
-        if not query.rate:
-            batch = np.full(n, last, dtype=np.int64)
-            voc, error = voc_at(np.arange(n), batch)
-            return voc, batch, error
-        if last == 0 or last > _EVERY_BATCH:
-            return best_batch(voc_at, n, last)
-        every = np.arange(1, last + 1)
-        rate, batch, error = np.zeros(n), np.ones(n, dtype=np.int64), np.zeros(n)
-        for i in range(n):
-            voc, err = voc_at(np.full(last, i), every)
-            best = int(np.argmax(voc / every))
-            rate[i], batch[i] = voc[best] / every[best], best + 1
-            error[i] = np.max((voc + err) / every) - rate[i]
-        return rate, batch, error
+        return _best_batches(voc_at, n, query)
 
 
-@compiled
-def beta_binomial_law(a: float, b: float, k: int) -> Floats:
-    """P(x wins in k trials), x = 0 ... k, p ~ Beta(a, b); ratios from the mode out, divided by their total.
+class _LaterTables:
+    """The same for a group with chance nodes below its choice: atoms, T and U for each leaf."""
 
-    >>> beta_binomial_law(1.0, 1.0, 3)
-    array([0.25, 0.25, 0.25, 0.25])
-    """
-    out = np.empty(k + 1)
-    n = a + b
-    if a >= 1.0 and b >= 1.0:
-        top = 0 if n <= 2.0 else min(k, int((k + 1) * ((a - 1.0) / (n - 2.0))))
-        split = k
-    elif b >= 1.0:
-        top, split = 0, k
-    elif a >= 1.0:
-        top, split = k, k
-    else:  # heavy at both ends: each half from its own end
-        top, split = 0, k // 2
-    out[top] = 1.0
-    for x in range(top, split):
-        out[x + 1] = out[x] * ((k - x) / (x + 1.0)) * ((a + x) / (b + (k - x - 1)))
-    if split < k:
-        out[k] = 1.0
-        for s in range(k):
-            out[k] *= (a + s) / (b + s)
-    for x in range(top if split == k else k, 0 if split == k else split + 1, -1):
-        out[x - 1] = out[x] * (x / (k - x + 1.0)) * ((b + (k - x)) / (a + (x - 1)))
-    return out / np.sum(out)
+    def __init__(self, group: Later, h: int) -> None:
+        self.group, self.h = group, h
+        self.value, self.error, self.curves = curves(group, h)
+        self.tables = [_curve_tables(curve) for curve in self.curves]
+        columns = zip(group.a, group.b, group.low, group.width, self.tables, strict=True)
+        self.alone = [
+            low + width * (a / (a + b)) + _expected_tail(a, b, low, width, h, 0, *tables)
+            for a, b, low, width, tables in columns
+        ]
+
+    def price(self, rival: float, slack: float, query: Query) -> tuple[Floats, Ints, Floats]:
+        """VOC (or rate), batch and error of every leaf; see `win_loss_groups.Choice`."""
+        group, n = self.group, len(self.group.a)
+
+        def voc_at(leaf: Ints, k: Ints) -> tuple[Floats, Floats]:
+            voc, error = np.zeros(len(leaf)), np.zeros(len(leaf))
+            for i in np.unique(leaf).tolist():
+                rows, one = np.flatnonzero(leaf == i), slice(i, i + 1)
+                if group.width[i] <= NARROW * abs(group.low[i]):
+                    error[rows] = group.width[i]
+                    continue
+                off = self.error + self.curves[i].error
+                rounding = off + slack + 8 * _EPS * float(self.tables[i][2][0, 0] + group.width[i])
+                voc[rows], error[rows] = _price_pairs(
+                    np.zeros(len(rows), dtype=np.int64), k[rows], group.a[one], group.b[one], group.low[one],
+                    group.width[one], self.h, self.alone[i], self.alone[i] + (rival - self.value), rounding,
+                    *self.tables[i],
+                )  # fmt: skip
+                error[rows] += 2 * self.curves[i].error  # of the rise
+                if abs(self.value - rival) <= off + slack:  # which is best now is in doubt
+                    error[rows] += off + slack
+            return voc, error
+
+        return _best_batches(voc_at, n, query)
+
+
+def _curve_tables(curve: Curve) -> tuple[Floats, Floats, Floats, Floats]:
+    """Atoms, P(R > y), T and U of one leaf, as `_tables` has them."""
+    steps, falls = np.diff(curve.y), -np.diff(curve.T)
+    more = np.append(np.clip(falls / steps, 0.0, 1.0), 0.0)
+    lead = np.append(0.0, np.cumsum(steps * (1.0 - more[:-1])))
+    return curve.y, more[None], curve.T[None], lead[None]
+
+
+def _best_batches(voc_at: VocAt, n: int, query: Query) -> tuple[Floats, Ints, Floats]:
+    """The batch asked for, or the best one of every leaf."""
+    last = query.remaining if query.batch is None else query.batch
+    assert last is not None
+    if not query.rate:
+        batch = np.full(n, last, dtype=np.int64)
+        voc, error = voc_at(np.arange(n), batch)
+        return voc, batch, error
+    if last == 0 or last > _EVERY_BATCH:
+        return best_batch(voc_at, n, last)
+    every = np.arange(1, last + 1)
+    rate, batch, error = np.zeros(n), np.ones(n, dtype=np.int64), np.zeros(n)
+    for i in range(n):
+        voc, err = voc_at(np.full(last, i), every)
+        best = int(np.argmax(voc / every))
+        rate[i], batch[i] = voc[best] / every[best], best + 1
+        error[i] = np.max((voc + err) / every) - rate[i]
+    return rate, batch, error
 
 
 @compiled

@@ -24,7 +24,7 @@ from distill.exact.beta_panels import N, W, X, is_singular, rates_at
 from distill.numerics import compiled
 from distill.tree import Floats
 
-__all__ = ["Race", "endless_gain", "reachable_gap", "walk"]
+__all__ = ["Race", "endless_gain", "expected_gap", "reachable_gap", "walk"]
 
 _EPS = 2.0**-52
 _BIG = 1e200
@@ -292,6 +292,12 @@ def _stretch(a: float, b: float, table_error: float, race: Race) -> _Stretch:
 def _worth(now: _Stretch, rate: float) -> float:
     """h, where the leaf's mean win rate is `rate`."""
     return (now.base + now.slope * rate) + _dot(now.v, now.f)
+
+
+@compiled
+def expected_gap(a: float, b: float, race: Race) -> float:
+    """E G(p): what the leaf's action is worth now, less the rival."""
+    return _worth(_stretch(a, b, 0.0, race), a / (a + b))
 
 
 @compiled

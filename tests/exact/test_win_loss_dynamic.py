@@ -14,7 +14,6 @@ from hypothesis import strategies as st
 from ladder import CLOSED_FORM, QUADRATURE, RELATIVE_TAIL
 from win_loss_builders import arms, change, random_tree
 
-from distill.errors import RefusedError
 from distill.exact.win_loss import price
 from distill.oracle import win_loss as oracle
 from distill.query import Query, scale_of
@@ -215,13 +214,6 @@ def test_endless_budget_is_certified():
     endless, near = (price(tree, Query(batch=None, remaining=n)) for n in (2**53, 200))
     assert endless.voc == pytest.approx(near.voc, rel=CLOSED_FORM)
     assert np.all(endless.error <= CLOSED_FORM)
-
-
-def test_chance_below_a_later_choice_is_refused_by_name():
-    tree = fan("decision", "chance")
-    for query in (ONE, Query(horizon=3)):
-        with pytest.raises(RefusedError, match="chance node below a decision node"):
-            price(tree, query)
 
 
 def fan(second: str, third: str) -> BeliefTree:

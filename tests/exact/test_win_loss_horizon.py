@@ -12,9 +12,10 @@ from hypothesis import strategies as st
 from ladder import CLOSED_FORM, RELATIVE_TAIL
 from win_loss_builders import arms, change, random_tree
 
+from distill.beta_numerics import beta_binomial_law
 from distill.errors import RefusedError
 from distill.exact.win_loss import price
-from distill.exact.win_loss_horizon import beta_binomial_law, price_horizon
+from distill.exact.win_loss_horizon import price_horizon
 from distill.oracle import win_loss as oracle
 from distill.query import Query, scale_of
 

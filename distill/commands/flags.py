@@ -4,9 +4,22 @@ from __future__ import annotations
 
 import argparse
 import math
+import sys
 from collections.abc import Callable
+from typing import TYPE_CHECKING
 
-__all__ = ["add_query_flags", "horizon", "microseconds", "positive", "whole"]
+if TYPE_CHECKING:  # --help must answer at once
+    from distill.traces import BadLines
+
+__all__ = [
+    "add_query_flags",
+    "add_strict_flag",
+    "say_bad_lines",
+    "horizon",
+    "microseconds",
+    "positive",
+    "whole",
+]
 
 
 def add_query_flags(parser: argparse.ArgumentParser, rate_is_default: bool = False) -> None:
@@ -26,6 +39,21 @@ def add_query_flags(parser: argparse.ArgumentParser, rate_is_default: bool = Fal
         "--tolerance", type=positive, metavar="T",
         help="largest error accepted, as a share of the tree's scale; a method that misses it refuses",
     )  # fmt: skip
+
+
+def add_strict_flag(parser: argparse.ArgumentParser) -> None:
+    """--strict, for commands that pass over bad records of traces and say which."""
+    parser.add_argument(
+        "--strict", action="store_true",
+        help="stop at the first bad record of a trace; by default bad ones are passed over, and their number "
+        "and lines go to standard error",
+    )  # fmt: skip
+
+
+def say_bad_lines(bad: BadLines) -> None:
+    """Which records of traces were passed over, on standard error."""
+    if bad.count:
+        print(f"voc-distill: {bad.report()}", file=sys.stderr)
 
 
 def horizon(text: str) -> float:

@@ -6,9 +6,14 @@ import argparse
 import os
 import time
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from distill.commands import flags
 from distill.errors import InputError
+
+if TYPE_CHECKING:  # --help must answer at once
+    from distill.generate import Traces
+    from distill.traces import BadLines
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -46,37 +51,53 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--dask", metavar="ADDRESS", help="scheduler of a Dask cluster, whose workers label instead"
     )
     flags.add_query_flags(parser, rate_is_default=True)
+    flags.add_strict_flag(parser)
 
 
 def run(args: argparse.Namespace) -> None:
     """Run the command."""
     from distill.family import load_family
-    from distill.generate import Asked, Mix, Traces, add, generate
+    from distill.generate import Asked, Mix, add, generate
     from distill.sample_data import family_path
     from distill.sources import Source
+    from distill.traces import BadLines
 
     _check(args)
+    bad = BadLines(args.strict)
     start = time.perf_counter()
     where = {"workers": args.workers, "dask": args.dask, "progress": True}
     if args.add:
-        manifest = add(Traces.read(args.add), args.out, **where)
+        manifest = add(_recorded(args.add, bad), args.out, **where)
     else:
         source: Source
         if not args.family:
-            source = Traces.read(args.traces)
+            source = _recorded(args.traces, bad)
         else:
             source = load_family(family_path(args.family))
             if args.traces:
-                source = Mix(source, Traces.read(args.traces), args.share)
+                source = Mix(source, _recorded(args.traces, bad), args.share)
         manifest = generate(
             source, args.out, trees=args.trees, seed=args.seed or 0, close_calls=args.close_calls or 1,
             asked=Asked(args.value, args.batch, args.remaining, args.tolerance), **where,
         )  # fmt: skip
+    flags.say_bad_lines(bad)
     totals = manifest["totals"]
     print(
         f"{args.out}: {totals['trees']:,} trees, {totals['candidates']:,} exact labels, "
         f"{totals['aside']:,} trees set aside, in {time.perf_counter() - start:.1f} s"
     )
+
+
+def _recorded(paths: list[str], bad: BadLines) -> Traces:
+    """Traces without their bad records, which `bad` takes in."""
+    from distill.generate import Traces
+
+    found = Traces.read(paths, on_error=bad)
+    if len(found) == 0:
+        raise InputError(
+            ", ".join(paths), f"must hold at least one valid record; all {bad.count:,} are bad", *bad.first
+        )
+    return found
 
 
 def _check(args: argparse.Namespace) -> None:

@@ -34,6 +34,15 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     flags.add_query_flags(parser)
     parser.add_argument("--table", action="store_true", help="a readable table instead of JSON Lines")
     parser.add_argument("--out", type=Path, metavar="FILE", help="write here instead of standard output")
+    bad = parser.add_mutually_exclusive_group()
+    bad.add_argument(
+        "--strict", action="store_true",
+        help="stop at the first bad record and write nothing: the default here, where lines answer lines",
+    )  # fmt: skip
+    bad.add_argument(
+        "--skip-bad", action="store_true",
+        help="pass over bad records; their number and lines go to standard error",
+    )  # fmt: skip
 
 
 def run(args: argparse.Namespace) -> None:
@@ -42,7 +51,8 @@ def run(args: argparse.Namespace) -> None:
     from distill.query import resolve, to_output
 
     lines: list[str] = []
-    for place, tree in traces.read_trees(args.trees):
+    bad = traces.BadLines(strict=not args.skip_bad)
+    for place, tree in traces.read_many([args.trees], bad):
         try:
             query = resolve(
                 tree,
@@ -61,6 +71,7 @@ def run(args: argparse.Namespace) -> None:
             lines.append(_price_table(tree, query, priced))
         else:
             lines.append(json.dumps(to_output(tree, query, priced)))
+    flags.say_bad_lines(bad)
     _emit("\n".join(lines) + "\n", args.out)
 
 

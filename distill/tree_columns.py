@@ -1,0 +1,107 @@
+"""What a tree looks like in a few numbers, to compare one set of trees with another; floor 3."""
+
+from __future__ import annotations
+
+import json
+import math
+from collections.abc import Mapping, Sequence
+from typing import Final
+
+import numpy as np
+
+from distill import schema
+from distill.query import scale_of
+from distill.tree import BeliefTree, Floats, Ints
+
+__all__ = ["COLUMNS", "decision_key", "depths", "tree_columns"]
+
+# Column -> what it says, for people.
+COLUMNS: Final[Mapping[str, str]] = {
+    "actions": "root actions",
+    "leaves": "leaves",
+    "depth": "edges from the root to the deepest leaf",
+    "chance share": "share of inner nodes below the root that are chance nodes",
+    "discount": "mean discount of an edge",
+    "remaining": "rollouts left",
+    "spent": "rollouts so far",
+    "untried share": "share of leaves without a rollout",
+    "noise": "log10 of a rollout's sd over the leaf's present sd, median leaf",
+    "sd spread": "sd of log10 of the leaves' present sds",
+    "mean spread": "sd of the leaves' means over the tree's scale",
+    "reward spread": "sd of the edges' rewards over the tree's scale",
+    "cost": "log10 of the mean cost of a rollout over the tree's scale",
+    "scale": "log10 of the tree's scale",
+}
+
+
+def tree_columns(trees: Sequence[BeliefTree]) -> dict[str, Floats]:
+    """Column -> one number a tree; NaN where a tree has no such thing."""
+    rows = [_row(tree) for tree in trees]
+    # Six digits: what rounding tells apart is the same.
+    return {
+        name: np.array([float(f"{row.get(name, math.nan):.6g}") for row in rows], dtype=float)
+        for name in COLUMNS
+    }
+
+
+def _row(tree: BeliefTree) -> dict[str, float]:
+    inner = np.flatnonzero(tree.kind != schema.LEAF)[1:]
+    sd, mean, noise = _moments(tree)
+    scale = scale_of(tree)
+    uncertain = sd > 0
+    row: dict[str, float] = {
+        "actions": len(tree.action_nodes),
+        "leaves": tree.n_leaves,
+        "depth": int(depths(tree).max()),
+        "discount": float(np.mean(tree.discount[1:])),
+    }
+    if len(inner):
+        row["chance share"] = float(np.mean(tree.kind[inner] == schema.CHANCE))
+    if tree.remaining is not None:
+        row["remaining"] = tree.remaining
+    if tree.count is not None:
+        row |= {"spent": float(tree.count.sum()), "untried share": float(np.mean(tree.count == 0))}
+    if np.any(uncertain):
+        row["noise"] = float(np.median(np.log10(noise[uncertain] / sd[uncertain])))
+        row["sd spread"] = float(np.std(np.log10(sd[uncertain])))
+    if scale > 0:
+        row["scale"] = math.log10(scale)
+        row["mean spread"] = float(np.std(mean)) / scale
+        row["reward spread"] = float(np.std(tree.reward[1:])) / scale
+        assert tree.cost is not None
+        if np.any(tree.cost > 0):
+            row["cost"] = math.log10(float(np.mean(tree.cost)) / scale)
+    return row
+
+
+def _moments(tree: BeliefTree) -> tuple[Floats, Floats, Floats]:
+    """Standard deviation, mean and a rollout's standard deviation at each leaf, u."""
+    if tree.mean is not None:
+        var = np.diag(tree.cov) if tree.cov is not None else tree.var
+        assert var is not None
+        assert tree.noise_var is not None
+        return np.sqrt(var), tree.mean, np.sqrt(tree.noise_var)
+    assert tree.alpha is not None
+    assert tree.beta is not None
+    assert tree.low is not None
+    assert tree.high is not None
+    total = tree.alpha + tree.beta
+    rate, span = tree.alpha / total, tree.high - tree.low
+    one = np.sqrt(rate * (tree.beta / total))
+    return span * one / np.sqrt(total + 1), tree.low + span * rate, span * one
+
+
+def depths(tree: BeliefTree) -> Ints:
+    """Edges from the root to each node."""
+    out = np.zeros(tree.n_nodes, dtype=np.int64)
+    for c, p in enumerate(tree.parent.tolist()):
+        if c:
+            out[c] = out[p] + 1
+    return out
+
+
+def decision_key(tree: BeliefTree) -> str | None:
+    """What the stages of one recorded decision have in common; None where the record does not say."""
+    if tree.extra is None or "decision" not in tree.extra:
+        return None
+    return json.dumps(dict(tree.extra), sort_keys=True)

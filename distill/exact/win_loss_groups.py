@@ -153,7 +153,8 @@ def _groups(tree: BeliefTree) -> tuple[list[Group | Later], Floats]:
                     constant[x] += weight * prob[c] * reward[c]
                     above.append((c, weight * prob[c] * discount[c]))
                 continue
-            shape, found = Shape(), []
+            shape = Shape()
+            found: list[tuple[int, float, float, bool]] = []
             # node, its place in the shape, weight, rewards on the way, whether it carries what all earn
             below = [(node, -1, weight, 0.0, True)]
             while below:

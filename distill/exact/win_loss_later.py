@@ -20,7 +20,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
-from typing import TypeVar
+from typing import Any, TypeVar
 
 import numpy as np
 from scipy.interpolate import CubicSpline
@@ -221,10 +221,10 @@ def _curve(R: Sequence[Lattice], low: int, high: int, step: float, extrapolate: 
     error += 1.5 * step * float(near.max()) if near.max() > 2 * _HEAVY else 0.0
     excess = middle - fine[::2]
     if not extrapolate:
-        y = np.arange(4 * first, 4 * last + 1) * step
-        return Curve(y, fine, None, error + float(np.abs(excess).max()))
-    y = np.arange(2 * first, 2 * last + 1) * (2 * step)
-    curve = Curve(y, np.maximum(fine[::2] - excess / 3, 0.0), ends, 0.0)
+        y = np.arange(4.0 * first, 4.0 * last + 1) * step
+        return Curve(np.asarray(y), fine, None, error + float(np.abs(excess).max()))
+    y = np.arange(2.0 * first, 2.0 * last + 1) * (2 * step)
+    curve = Curve(np.asarray(y), np.maximum(fine[::2] - excess / 3, 0.0), ends, 0.0)
     before = middle[::2] - (coarse - middle[::2]) / 3
     between = fine[1::2] - (excess[1:] + excess[:-1]) / 6
     error += float(np.abs(curve.T[::2] - before).max())
@@ -263,9 +263,7 @@ def _span(group: Later) -> float:
     return max(float(span[0]), 1e3 * _EPS * group.size, 1e-300)
 
 
-def _passes(
-    shape: Shape, leaf: Sequence[_L], low: Sequence[float], high: Sequence[float]
-) -> tuple[_L, list[_L]]:
+def _passes(shape: Shape, leaf: Sequence[_L], low: Sequence[Any], high: Sequence[Any]) -> tuple[_L, list[_L]]:
     """The law of node 0 and the threshold of every leaf, cut to the node's range `low` ... `high`."""
     children = shape.children()
     n = len(shape.parent)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -16,8 +17,9 @@ from win_loss_builders import change, later_choice, random_tree
 from distill.errors import RefusedError
 from distill.exact import win_loss_laws
 from distill.exact.win_loss import price
-from distill.exact.win_loss_groups import price_groups
+from distill.exact.win_loss_groups import _groups, price_groups
 from distill.exact.win_loss_later import Later
+from distill.family import draw, parse_family
 from distill.oracle import win_loss as oracle
 from distill.query import Query, scale_of
 from distill.record import from_record
@@ -217,6 +219,18 @@ def test_too_many_leaves_below_one_choice_are_refused_by_name():
     )
     with pytest.raises(RefusedError, match="2049 leaves below one choice above chance nodes"):
         price(tree, Query())
+
+
+def test_families_draw_such_trees():
+    path = Path(__file__).parents[2] / "datasets" / "families" / "on-time.toml"
+    family = parse_family(path.read_bytes() + b"\n[chance]\nshare = 0.5\n", "on-time below chance nodes")
+    trees = [draw(family, 1, i) for i in range(30)]
+    nested = [t for t in trees if any(isinstance(g, Later) for g in _groups(t)[0])]
+    assert len(nested) > 3
+    for tree in nested:
+        priced = price(tree, Query(batch=None, remaining=20))
+        assert np.all(priced.voc >= 0)
+        assert np.all(priced.error <= 1e-3 * scale_of(tree))
 
 
 def test_nests_are_what_is_tested_here():

@@ -1,0 +1,287 @@
+"""The backup of a tree with correlated leaves: what one leaf shows moves every leaf; floor 2, light.
+
+When leaf i is observed, the posterior means move along b = S e_i / sqrt(S_ii). So each node carries, beside
+mean and variance of its V_h, the weight with which each leaf counts in it, and for every candidate how fast
+and with what bend its mean moves along b. A decision node takes its children two by two, the largest mean
+first, by Clark (1961), whose formula for the covariance of a maximum with a third normal keeps the weights
+going (eq. 6 there).
+
+Along b each root action's value is convex, with slopes A_- and A_+ at far moves. It is taken as
+
+    V(t) = V + A_- t + (A_+ - A_-) theta (f(p + t / theta) - f(p))
+
+with p and theta from slope and bend at present (f of `distill.normal_fits`): exact for two independent
+leaves. Where another action overtakes the best one is then searched on either side of t = 0.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import reduce
+from typing import Final
+
+import numpy as np
+
+from distill import schema
+from distill.errors import InputError, RefusedError
+from distill.normal_fits import inverse_cdf, norm_cdf, norm_pdf, unit_gain
+from distill.record_rows import Crossings, LeafMoments
+from distill.tree import BeliefTree, Floats, Ints
+
+__all__ = ["CorrelatedBackup"]
+
+_LEAST: Final = 1e-300
+_FAR_MOVE: Final = 40.0  # standard deviations: no crossing beyond is worth anything
+_FIRST_STEP, _STEP_GROWTH = 0.02, 1.5  # of the search for the crossing
+_HALVINGS: Final = 40
+_STRAIGHT: Final = 1e-9  # of the larger slope: slopes that differ by less make a straight line
+_WIDEST: Final = 1e6  # standard deviations: a bend wider than this is a straight line
+_LEAST_SHARE: Final = 1e-12
+
+
+@dataclass(frozen=True)
+class _Value:
+    """V_h of a node: mean and variance; weight of each leaf in it and its covariance with each, (n,).
+
+    Along each candidate's b, (n,): slope and bend of the mean at present, and slopes at far moves.
+    """
+
+    mean: float
+    var: float
+    weight: Floats
+    cov: Floats
+    slope: Floats
+    bend: Floats
+    low: Floats
+    high: Floats
+
+    def through(self, gain: float, reward: float) -> _Value:
+        """The same seen through an edge."""
+        return _Value(
+            gain * self.mean + reward,
+            gain * gain * self.var,
+            *(gain * x for x in (self.weight, self.cov, self.slope, self.bend, self.low, self.high)),
+        )
+
+
+def _sum(a: _Value, b: _Value) -> _Value:
+    return _Value(
+        a.mean + b.mean,
+        a.var + b.var + 2 * float(a.cov @ b.weight),
+        a.weight + b.weight,
+        a.cov + b.cov,
+        a.slope + b.slope,
+        a.bend + b.bend,
+        a.low + b.low,
+        a.high + b.high,
+    )
+
+
+def _maximum(a: _Value, b: _Value) -> _Value:
+    """Clark's maximum of two, a the one of larger mean."""
+    gap = a.mean - b.mean
+    theta = math.sqrt(max(a.var + b.var - 2 * float(a.cov @ b.weight), 0.0))
+    low, high = np.minimum(a.low, b.low), np.maximum(a.high, b.high)
+    if theta <= 1e-8 * gap or theta == 0.0:
+        return _Value(a.mean, a.var, a.weight, a.cov, a.slope, a.bend, low, high)
+    at = np.array(gap / theta)
+    q, density = float(norm_cdf(-at)), float(norm_pdf(at))
+    lift = theta * float(unit_gain(-at))
+    square = a.var * (1 - q) + (b.var + gap * gap) * q - gap * theta * density
+    return _Value(
+        a.mean + lift,
+        max(square - lift * lift, 0.0),
+        a.weight + q * (b.weight - a.weight),
+        a.cov + q * (b.cov - a.cov),
+        a.slope + q * (b.slope - a.slope),
+        a.bend + q * (b.bend - a.bend) + np.square(a.slope - b.slope) * (density / theta),
+        low,
+        high,
+    )
+
+
+class CorrelatedBackup:
+    """Moments, and what a record row is made of, of a Gaussian tree with `cov`.
+
+    tree : any node kinds. horizon : as for `distill.backup.Backup`. value : V_h of each root action, in child
+    order, u; value_var its variance. Every candidate moves every leaf, so `update` is a whole pass,
+    O(nodes x leaves).
+
+    >>> from distill.record import from_record
+    >>> t = from_record({"format": "belief-tree/1", "parent": [-1, 0, 0],
+    ...     "kind": ["decision", "leaf", "leaf"], "mean": [None, 0, 0.5], "noise_var": [None, 1, 1],
+    ...     "cov": [[1, 0.5], [0.5, 1]]})
+    >>> CorrelatedBackup(t).crossings().crossing.round(9).tolist()
+    [1.0, -1.0]
+    """
+
+    def __init__(self, tree: BeliefTree, horizon: float = math.inf) -> None:
+        if tree.cov is None:
+            raise RefusedError("this backup holds Gaussian leaves with 'cov'")
+        assert tree.mean is not None
+        self.horizon = horizon
+        self._tree = tree
+        self._children: list[list[int]] = [[] for _ in range(tree.n_nodes)]
+        for c, p in enumerate(tree.parent.tolist()):
+            if p >= 0:
+                self._children[p].append(c)
+        self.update(tree.mean, tree.cov)
+
+    def update(self, mean: Floats, cov: Floats) -> None:
+        """Take in the posterior after rollouts: means (n,) and covariance (n, n), in node order."""
+        tree, n = self._tree, self._tree.n_leaves
+        if np.shape(mean) != (n,) or np.shape(cov) != (n, n):
+            raise InputError("mean, cov", f"must have shapes ({n},) and ({n}, {n})", np.shape(cov))
+        assert tree.noise_var is not None
+        belief = {"mean": mean, "var": np.diag(cov), "noise_var": tree.noise_var}
+        self._leaf = LeafMoments.of(belief, math.inf)
+        later = self._later(np.asarray(cov, dtype=float))
+        along = cov / np.maximum(self._leaf.sd, _LEAST)  # column i: b of candidate i
+        values: list[_Value | None] = [None] * tree.n_nodes
+        leaf, none = n, np.zeros(n)
+        self.mean, self.var = np.full(tree.n_nodes, np.nan), np.full(tree.n_nodes, np.nan)
+        for c in reversed(range(1, tree.n_nodes)):
+            if tree.kind[c] == schema.LEAF:
+                leaf -= 1
+                own = none.copy()
+                own[leaf] = 1.0
+                b = along[leaf]
+                found = _Value(float(mean[leaf]), float(later[leaf, leaf]), own, later[leaf], b, none, b, b)
+            else:
+                parts = [x for k in self._children[c] if (x := values[k]) is not None]
+                if tree.kind[c] == schema.CHANCE:
+                    found = reduce(_sum, parts)
+                else:
+                    found = reduce(_maximum, sorted(parts, key=lambda x: -x.mean))
+            self.mean[c], self.var[c] = found.mean, found.var
+            p = float(tree.prob[c])
+            values[c] = found.through(float(tree.discount[c]) * p, float(tree.reward[c]) * p)
+        self._actions = [x for a in tree.action_nodes if (x := values[a]) is not None]
+
+    def _later(self, cov: Floats) -> Floats:
+        """Covariance R_h of the posterior means h rollouts a leaf later."""
+        if math.isinf(self.horizon):
+            return cov
+        if self.horizon == 0:
+            return np.zeros_like(cov)
+        assert self._tree.noise_var is not None
+        noise = np.diag(self._tree.noise_var / self.horizon)
+        return np.asarray(cov @ np.linalg.solve(cov + noise, cov))
+
+    @property
+    def value(self) -> Floats:
+        """V_h of each root action, in child order, u."""
+        return np.array([x.mean for x in self._actions])
+
+    @property
+    def value_var(self) -> Floats:
+        """Variance of each root action's value at horizon h, in child order, u^2."""
+        return np.array([x.var for x in self._actions])
+
+    def influence(self) -> Floats:
+        """d E[Q_a] / d m_i of every root action and leaf; shape (n_actions, n_leaves)."""
+        return np.array([x.weight for x in self._actions])
+
+    def rows(self) -> dict[str, Floats]:
+        """The record table at present, name -> column of shape (n_leaves,); see `schema.RECORD_UNITS`."""
+        return self.crossings().columns(self._tree.cost)
+
+    def crossings(self) -> Crossings:
+        """The crossing of larger first-order value on either side of 0, and the other one."""
+        sides = [_first_crossing(_Curves.of(self._actions), side) for side in (1, -1)]
+        worth = [slope * unit_gain(-np.abs(move)) for move, slope, _, _ in sides]
+        falls = worth[1] > worth[0]
+        move, slope, bend, now = (np.where(falls, b, a) for a, b in zip(*sides, strict=True))
+        other_move, other_slope = (
+            np.where(falls, a, b) for a, b in zip(sides[0][:2], sides[1][:2], strict=True)
+        )
+        other_move = np.where(other_slope > 0, other_move, 0.0)
+        return Crossings(move, slope, bend, now, other_move, other_slope, self._leaf.noise_ratio)
+
+
+@dataclass(frozen=True)
+class _Curves:
+    """V(t) of every action (rows) along every candidate's b (columns), and which action is the best now."""
+
+    top: int
+    value: Floats
+    slope: Floats
+    low: Floats
+    rise: Floats
+    theta: Floats
+    at: Floats
+
+    @classmethod
+    def of(cls, actions: list[_Value]) -> _Curves:
+        """From the root actions' values."""
+        slope, bend, low, high = (
+            np.array([getattr(x, name) for x in actions]) for name in ("slope", "bend", "low", "high")
+        )
+        rise = high - low
+        straight = rise <= _STRAIGHT * np.maximum(np.abs(high), np.abs(low))
+        safe = np.where(straight, 1.0, rise)
+        below = np.clip((slope - low) / safe, _LEAST_SHARE, 1.0)
+        above = np.clip((high - slope) / safe, _LEAST_SHARE, 1.0)
+        at = inverse_cdf(np.minimum(np.minimum(below, above), 0.5)) * np.where(below < above, 1.0, -1.0)
+        theta = safe * norm_pdf(at) / np.maximum(bend, _LEAST)
+        straight |= theta > _WIDEST
+        value = np.array([x.mean for x in actions])
+        return cls(
+            int(np.argmax(value)),
+            value,
+            slope,
+            np.where(straight, slope, low),
+            np.where(straight, 0.0, rise),
+            np.where(straight, 1.0, np.maximum(theta, 1 / _WIDEST)),
+            at,
+        )
+
+    def lead(self, t: Floats) -> tuple[Floats, Ints]:
+        """By how much the best of the other actions leads at moves t, and which one it is."""
+        lift = unit_gain(self.at + t / self.theta) - unit_gain(self.at)
+        v = self.value[:, None] + self.low * t + self.rise * self.theta * lift
+        best = v[self.top].copy()
+        v[self.top] = -np.inf
+        which = np.argmax(v, axis=0)
+        return v[which, np.arange(len(t))] - best, which
+
+    def gains(self, t: Floats, which: Ints, side: int) -> tuple[Floats, Floats, Floats]:
+        """How fast action `which` gains on the best one at t, the rate of that, and how fast at present."""
+        z = self.at + t / self.theta
+        slope, bend = self.low + self.rise * norm_cdf(z), self.rise * norm_pdf(z) / self.theta
+        i = np.arange(len(t))
+        return (
+            side * (slope[which, i] - slope[self.top]),
+            bend[which, i] - bend[self.top],
+            side * (self.slope[which, i] - self.slope[self.top]),
+        )
+
+
+def _first_crossing(curves: _Curves, side: int) -> tuple[Floats, Floats, Floats, Floats]:
+    """Move, slope, bend and present slope over slope where another action first overtakes, on one side."""
+    n = curves.slope.shape[1]
+    if len(curves.value) == 1:
+        return side * np.full(n, _FAR_MOVE), np.zeros(n), np.zeros(n), np.zeros(n)
+    near, far = np.zeros(n), np.full(n, _FAR_MOVE)
+    found, step = np.zeros(n, dtype=bool), _FIRST_STEP
+    while step < _FAR_MOVE and not found.all():
+        ahead = curves.lead(side * np.full(n, step))[0] > 0
+        far[ahead & ~found] = step
+        found |= ahead
+        near[~found] = step
+        step *= _STEP_GROWTH
+    for _ in range(_HALVINGS):
+        middle = (near + far) / 2
+        ahead = curves.lead(side * middle)[0] > 0
+        near, far = np.where(ahead, near, middle), np.where(ahead, middle, far)
+    move = side * np.where(found, far, _FAR_MOVE)
+    slope, bend, now = curves.gains(move, curves.lead(move)[1], side)
+    found &= slope > 0
+    safe = np.where(found, slope, 1.0)
+    return (
+        move,
+        np.where(found, slope, 0.0),
+        side * np.where(found, bend / safe, 0.0),
+        np.where(found, now / safe, 0.0),
+    )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable
 from itertools import product
 from typing import Final
@@ -13,7 +14,11 @@ from distill.rehearse.problems import Problem, SimulatorProblem, TreeProblem
 from distill.rehearse.search import Settings
 from distill.rehearse.simulator import Modelled
 
-__all__ = ["SIMULATORS", "environment_problems", "make_simulator", "synthetic_problems"]
+__all__ = ["SIMULATORS", "environment_problems", "make_problem", "make_simulator", "synthetic_problems"]
+
+_TREE: Final = re.compile(
+    r"tree-(\d+)x(\d+)\^(\d+)-(winloss|noise([\d.e+-]+?))(?:-prior([\d.e+-]+?))?(-chance)?"
+)
 
 
 def _table(name: str, discount: float, skill: float, depth: int, length: int) -> tuple[Modelled, Settings]:
@@ -65,10 +70,29 @@ def environment_problems() -> list[Problem]:
 
     The slippery ones grow chance nodes; the cold store is searched by plans of two jobs.
     """
-    return [
-        SimulatorProblem(*make_simulator(name), name=name, most_steps=_STEPS.get(name, 20))
-        for name in _SOLVABLE
-    ]
+    return [make_problem(name) for name in _SOLVABLE]
+
+
+def make_problem(name: str) -> Problem:
+    """A problem by name: a simulator's, or a synthetic tree's such as tree-4x4^1-noise4.
+
+    tree-ACTIONSxBRANCHING^LEVELS-noiseVARIANCE or -winloss, then -priorVARIANCE and -chance where wanted.
+
+    >>> make_problem("tree-4x3^2-noise4-prior2-chance").name
+    'tree-4x3^2-noise4-prior2-chance'
+    """
+    if name in _SOLVABLE:
+        return SimulatorProblem(*make_simulator(name), name=name, most_steps=_STEPS.get(name, 20))
+    found = _TREE.fullmatch(name)
+    if found is None:
+        rule = f"must be one of {', '.join(_SOLVABLE)}, or a tree such as tree-4x4^1-noise4"
+        raise InputError("problem", rule, name)
+    actions, branching, levels, kind, noise, prior, chance = found.groups()
+    try:
+        variances = None if kind == "winloss" else float(noise), float(prior or 1)
+    except ValueError:
+        raise InputError("problem", "variances must be numbers", name) from None
+    return TreeProblem(int(actions), int(branching), int(levels) + 1, *variances, chance=bool(chance))
 
 
 def synthetic_problems() -> list[Problem]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, replace
@@ -55,6 +56,37 @@ class Budget:
             raise InputError(
                 "rollout_seconds", "must be above 0 where seconds are limited", self.rollout_seconds
             )
+
+    @classmethod
+    def parse(cls, text: str) -> Budget:
+        """A budget from text: 128 rollouts, 20ms@100us (time, at this cost a rollout), or 20ms@100us!busy.
+
+        >>> Budget.parse("128") == Budget(rollouts=128), str(Budget.parse("20ms@100us!busy"))
+        (True, '20ms@100us!busy')
+        """
+        number = r"(\d+(?:\.\d+)?)"
+        timed = re.fullmatch(rf"{number}(ms|s)@{number}(us|ms)(!busy)?", text)
+        try:
+            if timed is None:
+                return cls(rollouts=int(text))
+        except ValueError:
+            raise InputError(
+                "budget", "must be rollouts (128), or time and cost (20ms@100us)", text
+            ) from None
+        size, unit, cost, cost_unit, busy = timed.groups()
+        units = {"s": 1.0, "ms": 1e-3, "us": 1e-6}
+        return cls(
+            seconds=float(size) * units[unit],
+            rollout_seconds=float(cost) * units[cost_unit],
+            busy=busy is not None,
+        )
+
+    def __str__(self) -> str:
+        if self.seconds is None:
+            return f"{self.rollouts}"
+        cap = "" if self.rollouts is None else f"{self.rollouts} in "
+        cost = self.rollout_seconds * 1e6
+        return f"{cap}{self.seconds * 1e3:g}ms@{cost:g}us{'!busy' if self.busy else ''}"
 
     def room(self, spent: int, elapsed: float) -> int:
         """Rollouts that still fit, if choosing cost nothing from now on."""
@@ -124,6 +156,8 @@ def decide(
     posterior = Posterior(draw.tree)
     learn = getattr(policy, "observe", None)
     rolling = 0.0
+    if (expect := getattr(policy, "expect", None)) is not None:
+        expect(budget.rollout_seconds)
     spent, elapsed, stopped, choices, fallbacks = 0, 0.0, False, 0, 0
     started = clock()
     policy.begin(draw.tree)

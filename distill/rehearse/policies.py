@@ -28,8 +28,10 @@ class Choice(NamedTuple):
 class Policy(Protocol):
     """Chooses rollouts for one decision after another. `name` stands in tables and files.
 
-    A policy with beliefs of its own may offer `observe(leaf, observed, rollouts)` too: it is called with
-    what `distill.allocation.Search.observe` takes, after every choice, on the policy's time.
+    A policy may offer more: `observe(leaf, observed, rollouts)`, called after every choice with what
+    `distill.allocation.Search.observe` takes, on the policy's time, for beliefs of its own;
+    `expect(rollout_seconds)`, called before `begin` with the cost of a rollout, 0 where that is not
+    known; `suits(tree)`, whether it can search such trees at all.
     """
 
     @property
@@ -48,16 +50,15 @@ class ByRule:
     """One of the rules of `distill.allocation` (even, uct, thompson, static_rate), or static_voc.
 
     static_voc : the knowledge gradient of one rollout: the static rate when no batch but 1 is looked at.
-    exploration : UCT's constant, in units of the tree's scale.
+    exploration : UCT's constant, in units of the tree's scale. name : by default the rule, with it.
     """
 
     rule: str
     exploration: float = 1.0
+    name: str = ""
 
-    @property
-    def name(self) -> str:
-        """The rule, and UCT's constant."""
-        return f"uct-{self.exploration:g}" if self.rule == "uct" else self.rule
+    def __post_init__(self) -> None:
+        self.name = self.name or (f"uct-{self.exploration:g}" if self.rule == "uct" else self.rule)
 
     def begin(self, tree: BeliefTree) -> None:
         """Nothing to prepare."""

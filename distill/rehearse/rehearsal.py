@@ -55,6 +55,11 @@ class Cell:
     fallbacks: Floats
 
     @property
+    def measured(self) -> Floats:
+        """The regret to compare by: `expected_regret` where that is known, else `regret`."""
+        return self.regret if np.any(np.isnan(self.expected_regret)) else self.expected_regret
+
+    @property
     def fallback_share(self) -> float:
         """Share of choices that another rule made: near 1, the cell does not show its policy at all."""
         choices = float(self.choices.sum())
@@ -185,15 +190,15 @@ class Compared:
 
 
 def compare(
-    cells: Sequence[Cell], policy: str, rivals: Sequence[str], *, by_mean: bool = False, seed: int = 0
+    cells: Sequence[Cell], policy: str, rivals: Sequence[str], *, column: str = "measured", seed: int = 0
 ) -> list[Compared]:
     """A policy against the better of its rivals, cell by cell, with paired bootstrap intervals.
 
     Decisions are resampled, each with the regrets of both policies: what a hard decision costs both
     cancels (percentile bootstrap, Efron and Tibshirani 1993, chapter 13). The rival is the best on all
     decisions and stays fixed under resampling, which favours the rival.
+    column : what is compared: measured, regret, expected_regret or regret_by_mean of `Cell`.
     """
-    column = "regret_by_mean" if by_mean else "regret"
     groups: dict[tuple[str, Budget], dict[str, Cell]] = {}
     for cell in cells:
         groups.setdefault((cell.problem, cell.budget), {})[cell.policy] = cell

@@ -3,29 +3,57 @@
 from __future__ import annotations
 
 import math
+import time
 from collections.abc import Callable
 from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
 
 from distill.allocation import Search as Posterior
 from distill.errors import InputError
-from distill.query import Priced, Query
+from distill.query import Priced, Query, scale_of
 from distill.rehearse.policies import Choice
+from distill.rehearse.scorer_inputs import ScorerInputs
 from distill.runtime import Scorer
-from distill.tree import BeliefTree, leaf_table
+from distill.tree import BeliefTree
 
 __all__ = ["ByScorer", "ByValue"]
 
+_REST: Final = 4  # rollouts by the static rate before a settled choice is looked at again
 
-class ByValue:
+
+class _Thrifty:
+    """Stops where no candidate is worth its price: `rollout_price` value units, or `stop` x the tree's scale.
+
+    The scale is that of the beliefs before the first rollout, so that one `stop` suits problems whose
+    values differ by orders of magnitude.
+    """
+
+    def __init__(self, rollout_price: float, stop: float) -> None:
+        for name, value in (("rollout_price", rollout_price), ("stop", stop)):
+            if not 0 <= value < math.inf:
+                raise InputError(name, "must be >= 0 and finite", value)
+        self.rollout_price = rollout_price
+        self.stop = stop
+        self._price = rollout_price
+
+    def _set_price(self, tree: BeliefTree) -> None:
+        if self.stop > 0:
+            self._price = self.rollout_price + self.stop * scale_of(tree)
+
+    def _too_dear(self, value: float) -> bool:
+        return self._price > 0 and value <= self._price
+
+
+class ByValue(_Thrifty):
     """The candidate with the best value of computation, by any function that prices trees.
 
     price : (tree, query) -> Priced, for instance `distill.voc.price`.
     horizon : 0 static, inf dynamic. rate : best VOC a rollout over batches, else of one rollout.
     commit : spend the rate's whole batch before choosing again; else one rollout at a time.
-    rollout_price : value units; the search stops where no candidate is worth more a rollout.
+    rollout_price, stop : what a rollout costs, in value units and in units of the tree's scale; the
+        search stops where no candidate is worth more a rollout.
     Where no value stands out from 0 the static rate decides, so that late rollouts keep an order. Such
     choices are marked: a policy that mostly falls back is the static rate under another name.
     """
@@ -38,42 +66,49 @@ class ByValue:
         rate: bool = True,
         commit: bool = False,
         rollout_price: float = 0.0,
+        stop: float = 0.0,
         name: str = "",
     ) -> None:
-        if not rollout_price >= 0:
-            raise InputError("rollout_price", "must be >= 0", rollout_price)
-        self._price = price
+        super().__init__(rollout_price, stop)
+        self._pricing = price
         self.horizon = horizon
         self.rate = rate
         self.commit = commit
-        self.rollout_price = rollout_price
         words = {0.0: "static", math.inf: "dynamic"}.get(horizon, f"horizon{horizon:g}")
-        self.name = name or f"exact_{words}_{'rate' if rate else 'voc'}"
+        self.name = name or f"exact_{words}_{'rate' if rate else 'voc'}{f'-stop{stop:g}' if stop else ''}"
 
     def begin(self, tree: BeliefTree) -> None:
-        """Nothing to prepare."""
+        """What a rollout costs on this tree."""
+        self._set_price(tree)
 
     def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice | None:
-        """The best candidate, or None where none is worth `rollout_price`."""
+        """The best candidate, or None where none is worth its price."""
         query = Query(horizon=self.horizon, batch=None if self.rate else 1, remaining=remaining)
-        priced = self._price(posterior.tree(), query)
+        priced = self._pricing(posterior.tree(), query)
         best = int(np.argmax(priced.voc))
-        if self.rollout_price > 0 and priced.voc[best] <= self.rollout_price:
+        if self._too_dear(float(priced.voc[best])):
             return None
         if not priced.voc[best] > priced.error[best]:
             return Choice(posterior.pick("static_rate", rng, remaining=remaining), fell_back=True)
         return Choice(best, int(priced.batch[best]) if self.commit else 1)
 
 
-class ByScorer:
+class ByScorer(_Thrifty):
     """Rollouts by a shipped scorer, from the arrays that an agent keeps anyway.
 
     scorer : a `distill.runtime.Scorer`, or the path of its file, which is then loaded at first use.
     commit : share of the batch that the rate assumes which is spent before scoring again; 0 is one
-        rollout at a time. spread : how many of the leaves with the best values get a rollout each (or
-        their share of a batch) from one scoring, so that its time is shared; 1 is the best one only.
-    rollout_price : value units; the search stops where no leaf is worth more a rollout.
-    Where the file says 0 of every leaf the static rate decides, as for `ByValue`.
+        rollout at a time.
+    spread : how many leaves, best first, get a rollout each from one scoring, so that it is paid once.
+    settled : where all rollouts left would, at the best rate, add less than this share of the tree's
+        scale, the static rate chooses the next rollouts, 4 or `spread`. A value that looks at one leaf
+        at a time underrates what many leaves together can still change, the dynamic one most; the
+        static rate goes on telling leaves apart.
+    share : scoring may take this share of the time that rollouts take, where their cost is known (see
+        `expect`): after a scoring the static rate, which costs next to nothing, chooses as many rollouts
+        as that asks for. 0 scores whenever nothing is queued.
+    rollout_price, stop : as for `ByValue`.
+    Where the file says 0 of every leaf the static rate decides too. Its choices are marked.
     """
 
     def __init__(
@@ -83,31 +118,45 @@ class ByScorer:
         name: str = "",
         commit: float = 0.0,
         spread: int = 1,
+        settled: float = 0.0,
+        share: float = 0.0,
         rollout_price: float = 0.0,
+        stop: float = 0.0,
     ) -> None:
-        if not rollout_price >= 0:
-            raise InputError("rollout_price", "must be >= 0", rollout_price)
+        super().__init__(rollout_price, stop)
         if not 0 <= commit <= 1:
             raise InputError("commit", "must be from 0 to 1", commit)
         if spread < 1:
             raise InputError("spread", "must be at least 1", spread)
+        if not 0 <= settled < math.inf:
+            raise InputError("settled", "must be >= 0 and finite", settled)
+        if not 0 <= share < math.inf:
+            raise InputError("share", "must be >= 0 and finite", share)
         self._path = None if isinstance(scorer, Scorer) else Path(scorer)
         self._scorer = scorer if isinstance(scorer, Scorer) else None
         self.commit = commit
         self.spread = spread
-        self.rollout_price = rollout_price
+        self.settled = settled
+        self.share = share
         words = [name or (self._path.stem if self._path else "scorer")]
-        words += [f"commit{commit:g}"] if commit else []
-        words += [f"spread{spread}"] if spread > 1 else []
+        if not name:
+            words += [f"commit{commit:g}"] if commit else []
+            words += [f"spread{spread}"] if spread > 1 else []
+            words += [f"settled{settled:g}"] if settled else []
+            words += [f"share{share:g}"] if share else []
+            words += [f"stop{stop:g}"] if stop else []
         self.name = "-".join(words)
-        self._fixed: dict[str, Any] = {}
-        self._queue: list[Choice] = []
+        self._inputs: ScorerInputs | None = None
+        self._scale = 0.0
+        self._queue: list[int] = []
+        self._resting = 0
+        self._rollout_seconds = 0.0
 
     def __getstate__(self) -> dict[str, Any]:
         """A loaded file stays in its process; another one loads it again."""
         if self._path is None:
             raise InputError("scorer", "must be given as a path to be used by several workers")
-        return {**self.__dict__, "_scorer": None}
+        return {**self.__dict__, "_scorer": None, "_inputs": None}
 
     @property
     def scorer(self) -> Scorer:
@@ -117,36 +166,44 @@ class ByScorer:
             self._scorer = Scorer.load(self._path)
         return self._scorer
 
+    def suits(self, tree: BeliefTree) -> bool:
+        """Whether the file can score such trees."""
+        return ScorerInputs.fit(self.scorer, tree)
+
+    def expect(self, rollout_seconds: float) -> None:
+        """What one rollout will cost, 0 where that is not known; told before a decision begins."""
+        self._rollout_seconds = rollout_seconds
+
     def begin(self, tree: BeliefTree) -> None:
-        """The columns of the leaf table that rollouts do not change."""
-        self._queue = []
-        table = leaf_table(tree)
-        self._fixed = {
-            "noise_var": table.noise_var,
-            "gain": table.gain,
-            "offset": table.offset,
-            "action": table.action,
-            "cost": table.cost,
-        }
+        """The columns that rollouts do not change."""
+        self._queue, self._resting = [], 0
+        self._set_price(tree)
+        self._scale = scale_of(tree)
+        self._inputs = ScorerInputs(self.scorer, tree)
 
     def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice | None:
         """What an earlier scoring still has to give, else one call of the scorer."""
         if self._queue:
-            return self._queue.pop()
-        mean, var = posterior.moments
-        scores = self.scorer.score(mean=mean, var=var, remaining=remaining, **self._fixed)
-        best = scores.pick
+            return Choice(self._queue.pop())
+        if self._resting:
+            self._resting -= 1
+            return Choice(posterior.pick("static_rate", rng, remaining=remaining), fell_back=True)
+        assert self._inputs is not None
+        started = time.perf_counter()
+        scores = self._inputs.score(posterior, remaining)
+        best = int(scores.pick)
         top = float(scores.voc[best])
-        if self.rollout_price > 0 and top <= self.rollout_price:
+        if self._too_dear(top):
             return None
-        if not top > 0:
+        if not top > 0 or top * remaining < self.settled * self._scale:
+            self._resting = max(self.spread, _REST) - 1
             return Choice(posterior.pick("static_rate", rng, remaining=remaining), fell_back=True)
         if self.spread > 1:
-            order = np.argsort(scores.voc)
-            best_few = order[-self.spread :]
-            self._queue = [self._choice(int(i), scores) for i in best_few if scores.voc[i] > 0]
-            return self._queue.pop()
-        return self._choice(best, scores)
-
-    def _choice(self, leaf: int, scores: Any) -> Choice:
-        return Choice(leaf, max(int(self.commit * scores.batch[leaf]), 1) if self.commit else 1)
+            few = np.argsort(scores.voc)[-self.spread :]
+            self._queue = few[scores.voc[few] > 0].tolist()
+            best = self._queue.pop()
+        if self.share > 0 and self._rollout_seconds > 0:
+            paid = self.share * self._rollout_seconds
+            due = math.ceil((time.perf_counter() - started) / paid)
+            self._resting = max(due - 1 - len(self._queue), 0)
+        return Choice(best, max(int(self.commit * scores.batch[best]), 1) if self.commit else 1)

@@ -242,7 +242,7 @@ def test_every_environment_can_be_rehearsed(problem):
         (lambda: Budget(seconds=1.0), "rollout_seconds: must be above 0"),
         (lambda: TreeProblem(0), "actions: must be at least 1; got 0"),
         (lambda: TreeProblem(2, noise_var=0.0), "noise_var: must be above 0; got 0.0"),
-        (lambda: ByValue(voc.price, rollout_price=-1.0), "rollout_price: must be >= 0; got -1.0"),
+        (lambda: ByValue(voc.price, rollout_price=-1.0), "rollout_price: must be >= 0 and finite; got -1.0"),
         (lambda: TopTwoThompson(0.0), "share: must be above 0"),
         (lambda: run(TreeProblem(2), ByRule("best"), Budget(rollouts=1)), "rule: must be one of even"),
     ],

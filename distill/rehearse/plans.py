@@ -1,0 +1,80 @@
+"""The rehearsals that come along: a quick one, and the full grid of problems, budgets and policies."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Final
+
+from distill.errors import InputError
+from distill.rehearse.campaign import Campaign
+
+__all__ = ["plan"]
+
+_TREES: Final = (
+    "tree-2x8^1-noise1", "tree-2x8^1-noise4", "tree-2x8^1-noise16", "tree-2x8^1-winloss",
+    "tree-4x4^1-noise1", "tree-4x4^1-noise4", "tree-4x4^1-noise16", "tree-4x4^1-winloss",
+    "tree-6x2^1-noise4", "tree-6x2^1-noise16", "tree-6x2^1-winloss",
+    "tree-3x3^2-noise4", "tree-3x3^2-noise4-prior4", "tree-3x3^2-winloss",
+    "tree-4x3^2-noise4-chance", "tree-4x3^2-winloss-chance",
+)  # fmt: skip
+_SIMULATORS: Final = (
+    "taxi", "cliff_walking", "cliff_walking_slippery", "frozen_lake_4x4", "frozen_lake_8x8",
+    "frozen_lake_4x4_odds", "frozen_lake_8x8_odds", "cold_store_small",
+)  # fmt: skip
+_BASELINES: Final = ("even", "uct", "thompson", "top-two", "static-voc", "static-rate")
+# 32 and 128 rollouts' worth of time at 100 us and at 1 ms; 128 at the ends of what simulators cost.
+_TIMED: Final = ("3.2ms@100us", "12.8ms@100us", "32ms@1ms", "128ms@1ms")
+_ENDS: Final = ("2.56ms@20us", "640ms@5ms")
+
+_PLANS: Final = {
+    "quick": Campaign(
+        problems=("tree-4x4^1-noise4", "cliff_walking"),
+        budgets=("12.8ms@100us",),
+        policies=("uct:c=1", "thompson", "static-rate"),
+        seeds=100,
+        tuning_seeds=0,
+    ),
+    "full": Campaign(
+        problems=(*_SIMULATORS, *_TREES),
+        budgets=("32", "128", *_TIMED, *_ENDS),
+        policies=(*_BASELINES, "exact-dynamic-rate"),
+    ),
+}
+# How a scorer file is used: at every rollout, and at most for a quarter of the time that rollouts take.
+_USES: Final = ("", ":settled=0.001:share=0.25")
+_STOPPING: Final = ":settled=0.001:share=0.25:stop=auto"
+
+
+def plan(
+    name: str | None,
+    *,
+    problems: Sequence[str] = (),
+    budgets: Sequence[str] = (),
+    policies: Sequence[str] = (),
+    scorers: Sequence[str] = (),
+    seeds: int | None = None,
+    tuning_seeds: int | None = None,
+) -> Campaign:
+    """A campaign by name ("quick", "full"), or of one's own; what is given replaces what the plan says.
+
+    scorers : files, each used in every way that the plan knows, beside the policies. Without a plan,
+    problems and budgets must be given; policies are then the tuned baselines.
+    """
+    if name is not None and name not in _PLANS:
+        raise InputError("plan", f"must be one of {', '.join(_PLANS)}", name)
+    base = _PLANS.get(name or "")
+    for what, given in (("problem", problems), ("budget", budgets)):
+        if base is None and not given:
+            raise InputError(f"--{what}", "must be given without --quick or --full")
+    chosen = tuple(policies) or (base.policies if base else _BASELINES)
+    for file in scorers:
+        chosen += tuple(f"scorer:{file}{use}" for use in _USES)
+        if name == "full":
+            chosen += (f"scorer:{file}{_STOPPING}",)
+    return Campaign(
+        problems=tuple(problems) or (base.problems if base else ()),
+        budgets=tuple(budgets) or (base.budgets if base else ()),
+        policies=chosen,
+        seeds=seeds if seeds is not None else base.seeds if base else 400,
+        tuning_seeds=tuning_seeds if tuning_seeds is not None else base.tuning_seeds if base else 100,
+    )

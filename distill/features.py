@@ -26,12 +26,24 @@ Nothing changes the choice where y <= 0: the siblings alone beat the rival.
     max over k of  s_k f(-|t0| / s_k) g(y) / k,   g(y) = 1 - exp(-1.97 y), for the slope of G at t0
 
 which is right in its exponent however small it is; the learner sees what is left, a factor near 1.
+Where a fixed batch is asked for, it stands for k, and its whole value is meant.
+
+*Other horizons.* For h = 0, means are what they will be: the rival of a leaf is the best other leaf, and
+the start is exact but for the fit of f. For finite h the table holds M_h, of variance v^2 / (v + n / h).
+An action that is best also gains by being known better after k + h rollouts than after h,
+
+    theta_k f(p) - theta_0 f(p) ~ phi((m - mu) / theta_k) (theta_k - theta_0) / k
+
+which is added to the start; where siblings alone beat the rival, the threshold is theirs, mu - m.
+
 onnxruntime takes about 0.3 microseconds a node whatever 64 leaves hold, so every node was weighed.
 Differences are taken in double precision; only unit-free numbers are rounded to float32.
 """
 
 from __future__ import annotations
 
+import json
+import math
 from collections.abc import Mapping
 from itertools import pairwise
 from typing import Any, Final, NamedTuple
@@ -56,6 +68,12 @@ FEATURE_NAMES: Final = (
     "sibling_help",  # -q(y) up to a constant factor: what the siblings take off the threshold, in theta
     "step",  # s_k / theta
 )
+_STATIC_NAMES: Final = ("threshold", "step")
+_FINITE_NAMES: Final = (
+    *FEATURE_NAMES,
+    "above_siblings",  # (m - mu) / theta_k, cut at +-40
+    "lead",  # of the action over its best rival, in theta, cut at +-40
+)
 
 _BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s
 _PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
@@ -77,9 +95,9 @@ _LOSS_FIT: Final = tuple(np.sqrt(2 * np.pi) * np.array([1.0, 0.93642524, 0.92409
 class FeatureMatrix(NamedTuple):
     """What the graph says of each row.
 
-    x : (n, d) float32, unit-free, columns FEATURE_NAMES. unit : (n,), u a rollout, the leaf's own
-    s_k / k at the start value's best batch k, a real number. first_order : (n,), u a rollout, the start
-    value. batch : (n,), k rounded.
+    x : (n, d) float32, unit-free, columns as `FeatureGraph.names`. unit : (n,), u a rollout, the leaf's
+    own s_k / k at the start value's best batch k, a real number; s_k for a fixed batch. first_order :
+    (n,), same unit, the start value. batch : (n,), k rounded.
     """
 
     x: NDArray[np.float32]
@@ -88,19 +106,24 @@ class FeatureMatrix(NamedTuple):
     batch: NDArray[np.int64]
 
 
-def build_graph(*, points: int = 16) -> onnx.ModelProto:
+def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | None = None) -> onnx.ModelProto:
     """The feature graph of the Gaussian leaf table, one tree a call.
 
     Inputs, shape (n,) unless said: mean, var, noise_var, gain, offset, cost (double), action (int64,
     0 to n - 1), remaining (double, scalar). Outputs as in FeatureMatrix, named features, unit,
-    first_order, batch. points : cells of the table.
+    first_order, batch. points : cells of the table. horizon, batch : of the value that is learned; None
+    is the rate. `static` features have no table: see `_static`.
     """
     g = Nodes("f")
     # Leaves as the root sees them. From the table on, values are rows, shape (1, n).
     m = g("Add", g("Mul", "gain", "mean"), "offset")
     v = g("Max", g("Mul", "var", g("Mul", "gain", "gain")), g.double(_TINY))
     s = g("Sqrt", v)
-    value, others, spread2 = _moments(g, *_table(g, m, s, points), points)
+    noise = g("Div", "noise_var", "var", out="noise_ratio")
+    if horizon == 0:
+        return _static(g, m, s, noise, batch)
+    known = v if math.isinf(horizon) else _learned(g, v, noise, horizon)
+    value, others, spread2 = _moments(g, *_table(g, m, s if known == v else g("Sqrt", known), points), points)
 
     # The best other action.
     best = g("Equal", "action", g("Gather", "action", g("ArgMax", value, axis=1, keepdims=0)))
@@ -108,7 +131,7 @@ def build_graph(*, points: int = 16) -> onnx.ModelProto:
     rival = g("Where", best, second, g("ReduceMax", value))
 
     # Threshold t0.
-    theta = g("Sqrt", g("Add", spread2, v))
+    theta = g("Sqrt", g("Add", spread2, known))
     a, b, c = _Q_FIT
     y = g("Div", g("Sub", rival, others), theta)
     slope = g("Sub", g.double(1.0), g("Exp", g("Mul", y, g.double(-b))))
@@ -118,25 +141,85 @@ def build_graph(*, points: int = 16) -> onnx.ModelProto:
     t0 = g("Mul", g("Mul", help_, theta), g.double(a))
     t0 = g("Add", g("Sub", rival, m), t0, out="t0")
 
-    k, s_k = _best_batch(g, t0, s)
-    z = g("Div", t0, g("Max", s_k, g.double(_TINY)))
-    z = g("Clip", z, g.scalar(-_THRESHOLD_LIMIT), g.scalar(_THRESHOLD_LIMIT))
-    unit = g("Div", s_k, g("Max", k, g.double(1.0)))
-    at_zero, linear, square = (g.double(x) for x in _LOSS_FIT)
-    size = g("Abs", z)
-    bottom = g("Add", g("Mul", g("Add", g("Mul", size, square), linear), size), at_zero)
-    tail = g("Div", g("Exp", g("Mul", g("Mul", z, z), g.double(-0.5))), bottom)
-    start = g("Mul", g("Mul", unit, slope), tail)
+    if math.isinf(horizon):
+        start = _Start(g, t0, s, noise, batch)
+        value = start.value(slope)
+        return start.model(value, (start.z, help_, g("Div", start.s_k, theta)), FEATURE_NAMES)
 
-    flat = g.whole(-1)
-    g("Reshape", unit, flat, out="unit")
-    g("Reshape", start, flat, out="first_order")
-    g("Reshape", g("Cast", g("Add", k, g.double(0.5)), to=TensorProto.INT64), flat, out="batch")
-    columns = (z, help_, g("Div", s_k, theta))
-    assert len(columns) == len(FEATURE_NAMES)
-    stacked = g("Cast", g("Concat", *columns, axis=0), to=TensorProto.FLOAT)
-    g("Transpose", stacked, perm=[1, 0], out="features")
-    return _model(g)
+    alone = g("LessOrEqual", y, g.double(0.0))
+    above = g("Sub", m, others)
+    start = _Start(g, g("Where", alone, g("Sub", g.double(0.0), above), t0), s, noise, batch)
+    later = _learned(g, v, noise, horizon, start.k)
+    theta_k = g("Sqrt", g("Add", spread2, later))
+    above = start.cut(g("Div", above, theta_k))
+    own = g("Exp", g("Mul", g("Mul", above, above), g.double(-0.5)))
+    own = g("Mul", g("Mul", own, g("Sub", theta_k, theta)), g.double(1 / math.sqrt(2 * math.pi)))
+    lead = start.cut(g("Div", g("Sub", value, rival), theta))
+    own = g("Where", g("GreaterOrEqual", lead, g.double(0.0)), own, g.double(0.0))
+    if batch is None:
+        own = g("Div", own, g("Max", start.k, g.double(1.0)))
+    total = g("Add", start.value(slope), g("Max", own, g.double(0.0)))
+    return start.model(total, (start.z, help_, g("Div", start.s_k, theta), above, lead), _FINITE_NAMES)
+
+
+def _static(g: Nodes, m: str, s: str, noise: str, batch: int | None) -> onnx.ModelProto:
+    """For h = 0: the rival of a leaf is the best other leaf, and theta is s."""
+    best = g("ReduceMax", m, keepdims=1)
+    column = g("Unsqueeze", m, g.whole(1))
+    first = g("Unsqueeze", g("ArgMax", m, axis=0, keepdims=1), g.whole(1))
+    masked = g("ScatterND", column, first, g.double([[-_LARGE]]), reduction="add")
+    second = g("ReduceMax", masked)
+    is_best = g("LessOrEqual", masked, g.double(-_LARGE / 2))
+    rival = g("Reshape", g("Where", is_best, second, best), g.whole(-1))
+    row = g("Unsqueeze", g("Sub", rival, m), g.whole(0))
+    start = _Start(g, row, s, noise, batch)
+    return start.model(start.value(None), (start.z, g("Div", start.s_k, s)), _STATIC_NAMES)
+
+
+def _learned(g: Nodes, v: str, noise: str, horizon: float, k: str | None = None) -> str:
+    """Variance of M_h, or of M_(k + h): v^2 / (v + n / h); shape of v, or of k."""
+    h = g.double(horizon) if k is None else g("Add", k, g.double(horizon))
+    return g("Mul", v, g("Div", h, g("Add", noise, h)))
+
+
+class _Start:
+    """The start value for a threshold t0, shape (1, n), at the best batch or a given one."""
+
+    def __init__(self, g: Nodes, t0: str, s: str, noise: str, batch: int | None) -> None:
+        self.g = g
+        self.rate = batch is None
+        if batch is None:
+            self.k, self.s_k = _best_batch(g, t0, s, noise)
+        else:
+            # "t0" gives the constant its shape.
+            self.k = g("Add", g("Mul", t0, g.double(0.0)), g.double(float(batch)))
+            self.s_k = g("Mul", s, g("Sqrt", g("Div", self.k, g("Add", self.k, noise))))
+        self.z = self.cut(g("Div", t0, g("Max", self.s_k, g.double(_TINY))))
+        self.unit = g("Div", self.s_k, g("Max", self.k, g.double(1.0))) if self.rate else self.s_k
+
+    def cut(self, z: str) -> str:
+        """z within +-40."""
+        return self.g("Clip", z, self.g.scalar(-_THRESHOLD_LIMIT), self.g.scalar(_THRESHOLD_LIMIT))
+
+    def value(self, slope: str | None) -> str:
+        """unit f(-|z|) slope."""
+        g = self.g
+        at_zero, linear, square = (g.double(x) for x in _LOSS_FIT)
+        size = g("Abs", self.z)
+        bottom = g("Add", g("Mul", g("Add", g("Mul", size, square), linear), size), at_zero)
+        tail = g("Div", g("Exp", g("Mul", g("Mul", self.z, self.z), g.double(-0.5))), bottom)
+        return g("Mul", self.unit if slope is None else g("Mul", self.unit, slope), tail)
+
+    def model(self, value: str, columns: tuple[str, ...], names: tuple[str, ...]) -> onnx.ModelProto:
+        """The graph with its outputs."""
+        g, flat = self.g, self.g.whole(-1)
+        g("Reshape", self.unit, flat, out="unit")
+        g("Reshape", value, flat, out="first_order")
+        whole = g("Cast", g("Add", self.k, g.double(0.5)), to=TensorProto.INT64)
+        g("Reshape", whole, flat, out="batch")
+        stacked = g("Cast", g("Concat", *columns, axis=0), to=TensorProto.FLOAT)
+        g("Transpose", stacked, perm=[1, 0], out="features")
+        return _model(g, names)
 
 
 def _table(g: Nodes, m: str, s: str, points: int) -> tuple[str, str, str, str]:
@@ -181,13 +264,12 @@ def _moments(g: Nodes, low: str, high: str, joint: str, rest: str, points: int) 
     return value, others, spread2
 
 
-def _best_batch(g: Nodes, t0: str, s: str) -> tuple[str, str]:
+def _best_batch(g: Nodes, t0: str, s: str, noise: str) -> tuple[str, str]:
     """The best real batch k for a threshold t0, and s_k; shape (1, n).
 
     s_k f(-|t0| / s_k) / k has a single peak, so the best k within 1 and the rollouts left is the peak cut
     to them. A leaf without variance has noise ratio infinity, hence s_k = 0 exactly.
     """
-    noise = g("Div", "noise_var", "var", out="noise_ratio")
     u = g("Div", t0, s)
     u2 = g("Mul", u, u)
     shape = g("Add", g("Div", g.double(PEAK[1]), g("Add", u2, g.double(PEAK[2]))), g.double(PEAK[0]))
@@ -202,12 +284,12 @@ def _midpoints(points: int) -> Floats:
     return (np.arange(points) + 0.5) / points
 
 
-def _model(g: Nodes) -> onnx.ModelProto:
+def _model(g: Nodes, names: tuple[str, ...]) -> onnx.ModelProto:
     inputs = [typed(name, TensorProto.DOUBLE, ["n"]) for name in INPUTS]
     inputs[INPUTS.index("action")] = typed("action", TensorProto.INT64, ["n"])
     inputs[INPUTS.index("remaining")] = typed("remaining", TensorProto.DOUBLE, [])
     outputs = [
-        typed("features", TensorProto.FLOAT, ["n", len(FEATURE_NAMES)]),
+        typed("features", TensorProto.FLOAT, ["n", len(names)]),
         typed("unit", TensorProto.DOUBLE, ["n"]),
         typed("first_order", TensorProto.DOUBLE, ["n"]),
         typed("batch", TensorProto.INT64, ["n"]),
@@ -215,13 +297,14 @@ def _model(g: Nodes) -> onnx.ModelProto:
     graph = helper.make_graph(g.nodes, "features", inputs, outputs, g.initializers)
     model = helper.make_model(graph, opset_imports=[helper.make_opsetid("", OPSET)], ir_version=IR_VERSION)
     model.producer_name = "voc-distill"
+    helper.set_model_props(model, {"features": json.dumps(names)})
     return model
 
 
 class FeatureGraph:
     """The feature graph in a session with one thread.
 
-    model : a graph with the inputs and outputs of `build_graph`; None builds the default one.
+    model : a graph as `build_graph` makes it; None builds the default one.
     """
 
     def __init__(self, model: onnx.ModelProto | None = None) -> None:
@@ -233,10 +316,15 @@ class FeatureGraph:
             self.model.SerializeToString(deterministic=True), options, providers=["CPUExecutionProvider"]
         )
 
+    @classmethod
+    def of_value(cls, value: Mapping[str, Any]) -> FeatureGraph:
+        """The graph for a dataset's `value`: its horizon, and its batch or None for the rate."""
+        return cls(build_graph(horizon=float(value["horizon"]), batch=value["batch"]))
+
     @property
     def names(self) -> tuple[str, ...]:
         """Column names of `x`."""
-        return FEATURE_NAMES
+        return tuple(json.loads(self.model.metadata_props[0].value))
 
     def matrix(self, columns: Mapping[str, Any]) -> FeatureMatrix:
         """Features of every row, tree by tree, exactly as a scorer meets them.

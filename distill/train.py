@@ -25,7 +25,7 @@ from distill.calibration import calibrated
 from distill.candidates import Candidates, Split, split_by_tree
 from distill.errors import InputError
 from distill.export import export_scorer, mapped_back
-from distill.features import FEATURE_NAMES, FeatureGraph, FeatureMatrix
+from distill.features import FeatureGraph, FeatureMatrix
 from distill.files import sha256_of, write_atomic
 from distill.learners import BoostingLearner, DenseLearner, LinearLearner
 from distill.metrics import Groups
@@ -113,7 +113,7 @@ def train(
     split = split_by_tree(data, seed)
     out.mkdir(parents=True, exist_ok=True)
     with bar("features", 2 + 2 * len(chosen), "steps", shown=progress) as advance:
-        graph = FeatureGraph()
+        graph = FeatureGraph.of_value(about["value"])
         fit, choose, held_out = (graph.matrix({**c.columns, "tree": c.tree}) for c in vars(split).values())
         cases = decisions({**split.held_out.columns, "tree": split.held_out.tree}, _LEAVES, 50, seed)
         scorers: list[dict[str, Any]] = []
@@ -139,7 +139,7 @@ def train(
         "beside": beside,
         "leaves": _LEAVES,
         "exact": {name: t.to_json() for name, t in exact.items()},
-        "features": list(FEATURE_NAMES),
+        "features": list(graph.names),
         "made_with": _made_with(),
         "train_seconds": round(time.perf_counter() - started, 2),
     }

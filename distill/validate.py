@@ -147,7 +147,8 @@ def validate(
     )
     if same_trees:
         candidates = split_by_tree(candidates, trained["seed"]).held_out
-    first_order = FeatureGraph().matrix({**candidates.columns, "tree": candidates.tree}).first_order
+    graph = FeatureGraph.of_value(about["value"])
+    first_order = graph.matrix({**candidates.columns, "tree": candidates.tree}).first_order
     return {
         **about,
         "part": "held_out" if same_trees else "all",

@@ -191,7 +191,8 @@ def _price(
         for q in range(starts[a], starts[a + 1]):
             i = members[q]
             rest = rest_of(grid, q - starts[a], centre[q], rho[q], c, lead)
-            loose = slack[a] + (slack[rival] if rival >= 0 else 0.0) + _EPS * abs(rest.edges[0])
+            loose = slack[a] + (slack[rival] if rival >= 0 else 0.0)
+            loose += _EPS * (abs(rest.edges[0]) + abs(centre[q]))  # rounding of where the curve and leaf lie
             looks = Looks(
                 rest, nodes, leaf_gain[i], var[i], noise_var[i], h, centre[q], rho[q], c, loose,
                 lead < 0.0, alone, rival >= 0,

@@ -97,7 +97,16 @@ def voc_at(looks: Looks, k: float) -> tuple[float, float, float, float]:
         voc += more
         off = 2.0 * _EPS + max(looks.rest.loose[0], looks.rest.loose[2])
         error += _relative(more, tau) * more + off * terms + _CUT_OFF
+        error += _steepness(more, tau) * looks.slack * more
     return voc, error, climb, y0
+
+
+@compiled
+def _steepness(value: float, spread: float) -> float:
+    """Relative change of a tail integral for each unit that its start is moved: about z / spread."""
+    if value <= 0.0:
+        return 0.0
+    return (1.0 + math.sqrt(2.0 * max(0.0, math.log(spread) - math.log(value)))) / spread
 
 
 @compiled

@@ -34,6 +34,7 @@ __all__ = ["Worth", "rise", "worth"]
 
 _INV_SQRT_2PI = 0.3989422804014327
 _FINE = 5.5  # longest piece, in standard deviations of the kernel on it
+_FALL = 44.0  # a piece's half times the slope of log density at its middle is at most a quarter: 1e-15
 _NARROW = 0.05  # s / sigma below which the all-positive form is used
 _STEP = 1e-14  # sigma / tau below which the outcome leaves no doubt
 _FAR = 76.0  # twice the log of what is cut off a normal tail, of the tail itself
@@ -187,7 +188,10 @@ def _one_sum(
     total = 0.0
     terms = 0.0
     lean = (s / tau) * (s / tau)
-    for q in range(gather(rest, nodes, a, b, fine_a, fine_b, _FINE * sigma, _FINE * tau, False)):
+    # Far out the density falls like exp(-z t): a piece spans no more of it than 16 nodes hold.
+    z = min(max(side * (y0 - mu) / tau, 0.0), 40.0)  # beyond, nothing is left
+    coarse = tau * min(_FINE, _FALL / (z + math.sqrt(z * z + _FALL)))
+    for q in range(gather(rest, nodes, a, b, fine_a, fine_b, min(_FINE * sigma, coarse), coarse, False)):
         u = nodes.x[q] - mu
         t = u / tau
         ahead = side * (lean * u + (mu - y0))

@@ -28,7 +28,7 @@ __all__ = ["Nodes", "Rest", "gather", "nodes_for", "rest_of", "tail_at", "value_
 _UNDECIDED = -83.0  # log F below which the rest is taken as above for sure
 _CUMULATE = legendre_antiderivative(N)
 _SERIES = np.linalg.inv(np.polynomial.chebyshev.chebvander(NODES, N - 1))  # node values to Chebyshev series
-_EXTRA = 80  # pieces that windows may add to those of the grid
+_EXTRA = 120  # pieces that windows may add to those of the grid; at most 70 are known of
 
 
 class Rest(NamedTuple):

@@ -48,42 +48,39 @@ def by_envelope(
     step = 2 * REACH / _BINS
     bend = np.zeros((scrambles, n_actions, _BINS, 3))  # moments 0, 1, 2 of the slope changes in a bin
     rate = np.zeros((scrambles, n_actions))  # slope at z = -REACH
-    y = np.empty(n_leaves)
-    near, hull = np.empty(n_leaves, dtype=np.int64), np.empty(n_leaves, dtype=np.int64)
-    begin = np.empty(n_leaves)
+    # Within an action in order of slope: the same for every sample.
+    order = np.empty(n_leaves, dtype=np.int64)
+    for a in range(n_actions):
+        order[first[a] : first[a + 1]] = first[a] + np.argsort(slopes[first[a] : first[a + 1]])
+    height, rise, up = offset[order], slopes[order], lift[order]
+    y, begin = np.empty(n_leaves), np.empty(n_leaves)
+    hull = np.empty(n_leaves, dtype=np.int64)
     for j in range(n_samples):
         s = j // (n_samples // scrambles)
         e, x = noise[j], shift[j]
         row = sample[j]
         for w in range(n_leaves):
-            y[w] = offset[w] + row[w] + lift[w] * e - slopes[w] * x
+            y[w] = height[w] + row[order[w]] + up[w] * e - rise[w] * x
         for a in range(n_actions):
-            best = first[a]
-            for w in range(first[a] + 1, first[a + 1]):
-                if y[w] > y[best]:
-                    best = w
-            top, steep = y[best], slopes[best]
-            count = 0
-            for w in range(first[a], first[a + 1]):
-                if y[w] + abs(slopes[w] - steep) * REACH >= top:  # else below the best, all the way
-                    place = count
-                    while place > 0 and slopes[near[place - 1]] > slopes[w]:
-                        near[place] = near[place - 1]
-                        place -= 1
-                    near[place] = w
-                    count += 1
-            m = _hull(y, slopes, near, count, hull, begin)
-            rate[s, a] += slopes[hull[0]]
+            m = _hull(y, rise, first[a], first[a + 1], hull, begin)
+            rate[s, a] += rise[hull[0]]
             for h in range(1, m):
-                _put(bend[s, a], begin[h], slopes[hull[h]] - slopes[hull[h - 1]], step)
+                _put(bend[s, a], begin[h], rise[hull[h]] - rise[hull[h - 1]], step)
     return _on_grid(bend, rate, n_samples // scrambles)
 
 
 @compiled
-def _hull(y: Floats, slopes: Floats, near: Ints, count: int, hull: Ints, begin: Floats) -> int:
-    """Upper envelope of lines y + slope z within the reach; `near` in order of slope. Size of the hull."""
+def _hull(y: Floats, slopes: Floats, low: int, high: int, hull: Ints, begin: Floats) -> int:
+    """Upper envelope within the reach of lines y + slope z at low ... high - 1, in order of slope; its size."""
+    best = low
+    for w in range(low + 1, high):
+        if y[w] > y[best]:
+            best = w
+    top, steep = y[best], slopes[best]
     m = 0
-    for w in near[:count]:
+    for w in range(low, high):
+        if y[w] + abs(slopes[w] - steep) * REACH < top:  # below the best, all the way
+            continue
         at = -np.inf
         while m > 0:
             old = hull[m - 1]

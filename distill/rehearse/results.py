@@ -53,6 +53,7 @@ def summarise(results: Results) -> dict[str, Any]:
         "comparisons": comparisons,
         "aims": _aims(comparisons, results.cells),
         "advice": _advice(results),
+        "break_even": _break_even(results),
         "stopping": _stopping(results),
         "tuning": results.tuning,
         "left_out": results.left_out,
@@ -203,6 +204,42 @@ def _advice(results: Results) -> list[dict[str, Any]]:
             }
         )
     return advice
+
+
+def _break_even(results: Results) -> list[dict[str, Any]]:
+    """Regret against the cost of a rollout: every policy as a multiple of the best sampling one.
+
+    A row for each policy, cost and time in rollouts; `ratio` is the geometric mean over the problems that
+    have the policy at each of these costs, and a regret above 0 everywhere.
+    """
+    campaign = results.campaign
+    sampling = _members(campaign, "sampling")
+    names = [n for group in (*GROUPS, "scorer") for n in _members(campaign, group)]
+    ratios: dict[tuple[int, str], dict[float, dict[str, float]]] = {}
+    for (problem, budget), here in _by_place(results.cells).items():
+        rivals = [float(here[name].measured.mean()) for name in sampling if name in here]
+        if budget.seconds is None or not rivals or min(rivals) <= 0:
+            continue
+        for name in names:
+            if name in here and (regret := float(here[name].measured.mean())) > 0:
+                by_cost = ratios.setdefault((budget.room(0, 0.0), name), {})
+                by_cost.setdefault(budget.rollout_seconds, {})[problem] = math.log(regret / min(rivals))
+    rows = []
+    for (rollouts, name), by_cost in ratios.items():
+        shared = set.intersection(*(set(found) for found in by_cost.values()))
+        for cost, found in sorted(by_cost.items()):
+            if shared:
+                logs = [found[problem] for problem in shared]
+                rows.append(
+                    {
+                        "rollouts": rollouts,
+                        "rollout_seconds": cost,
+                        "policy": name,
+                        "ratio": math.exp(math.fsum(logs) / len(logs)),
+                        "problems": len(shared),
+                    }
+                )
+    return rows
 
 
 def _stopping(results: Results) -> list[dict[str, Any]]:

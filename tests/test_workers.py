@@ -1,0 +1,146 @@
+"""The same bytes from a Dask cluster, and one clear error where processes are lost."""
+
+from __future__ import annotations
+
+import os
+import threading
+import time
+from pathlib import Path
+
+import numpy as np
+import pytest
+from dask_cluster import dask_cluster
+
+from distill import workers
+from distill.cli import run
+from distill.errors import InputError, WorkersError
+from distill.family import draw, load_family
+from distill.generate import Asked, Traces, add, generate
+from distill.traces import write_trees
+from distill.workers import run_calls
+
+FAMILIES = Path(__file__).parents[1] / "datasets" / "families"
+COLD = load_family(FAMILIES / "cold-store.toml")
+
+
+def _bytes(folder):
+    return {path.name: path.read_bytes() for path in folder.iterdir()}
+
+
+def _labelled(folder, trees=60, shard_trees=5, **how):
+    return generate(COLD, folder, trees=trees, seed=1, asked=Asked(horizon=0), shard_trees=shard_trees, **how)
+
+
+def test_results_come_from_this_process_and_from_others():
+    for n in (1, 2):
+        assert sorted(run_calls(((divmod, (i, 7)) for i in range(20)), workers=n)) == [
+            divmod(i, 7) for i in range(20)
+        ]
+
+
+def test_a_process_that_dies_is_one_clear_error():
+    with pytest.raises(WorkersError, match="a worker process died; was there memory enough"):
+        list(run_calls([(os._exit, (1,))] * 4, workers=2))
+
+
+def test_errors_of_a_call_pass_through():
+    with pytest.raises(ZeroDivisionError):
+        list(run_calls([(divmod, (1, 0))] * 3, workers=2))
+
+
+def test_stopping_early_is_quiet_and_ends_the_calls():
+    results = run_calls(((pow, (i, 2)) for i in range(1000)), workers=2)
+    assert next(results) is not None
+    results.close()
+
+
+def test_no_scheduler_at_the_address(tmp_path, monkeypatch, capsys):
+    monkeypatch.setattr(workers, "_CONNECT_SECONDS", 0.3)
+    for address in ("tcp://127.0.0.1:9", "127.0.0.1:9", "nonsense://x", ""):
+        with pytest.raises(InputError, match="dask: must be the address of a running scheduler"):
+            _labelled(tmp_path / "d", dask=address)
+    code = run(["generate", "--family", "cold-store", "--trees", "3", "--out", str(tmp_path / "e"),
+                "--dask", "127.0.0.1:9"])  # fmt: skip
+    err = capsys.readouterr().err
+    assert code == 2
+    assert len(err.splitlines()) == 1
+
+
+def test_a_cluster_writes_the_same_bytes(tmp_path):
+    """A family, a resumed half of it, and recorded trees that are added, each against one process here."""
+    traces = tmp_path / "more.jsonl"
+    write_trees(traces, [draw(COLD, 9, i) for i in range(8)])
+    _labelled(tmp_path / "here")
+    with dask_cluster(tmp_path) as cluster:
+        _labelled(tmp_path / "there", dask=cluster.address)
+        assert _bytes(tmp_path / "there") == _bytes(tmp_path / "here")
+        for folder, dask in (("here", None), ("there", cluster.address)):
+            add(Traces.read([traces]), tmp_path / folder, dask=dask)
+        assert _bytes(tmp_path / "there") == _bytes(tmp_path / "here")
+
+
+def test_no_worker_is_one_clear_error(tmp_path, monkeypatch):
+    monkeypatch.setattr(workers, "_NO_WORKER_SECONDS", 1.0)
+    with (
+        dask_cluster(tmp_path, workers=0) as cluster,
+        pytest.raises(WorkersError, match="no worker is left, or has come in time; finished shards are kept"),
+    ):
+        _labelled(tmp_path / "d", dask=cluster.address)
+
+
+# --- killed ----------------------------------------------------------------------------------------
+
+
+@pytest.fixture(scope="module")
+def whole(tmp_path_factory):
+    """400 trees in 80 shards, labelled in one go."""
+    folder = tmp_path_factory.mktemp("whole")
+    _labelled(folder, 400)
+    return _bytes(folder)
+
+
+def _kill_when(folder, shards, victims):
+    """Kill processes once the manifest lists that many shards."""
+
+    def wait():
+        end = time.monotonic() + 60
+        while time.monotonic() < end:
+            if len(list(folder.glob("trees-*.parquet"))) >= shards:
+                break
+            time.sleep(0.002)
+        for victim in victims:
+            victim.kill()
+
+    thread = threading.Thread(target=wait)
+    thread.start()
+    return thread
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("seed", range(8))
+def test_a_killed_worker_s_shards_are_done_by_the_other(tmp_path, whole, seed):
+    after = int(np.random.default_rng(seed).integers(0, 70))
+    with dask_cluster(tmp_path) as cluster:
+        killer = _kill_when(tmp_path / "d", after, cluster.workers[:1])
+        _labelled(tmp_path / "d", 400, dask=cluster.address)
+        killer.join()
+        assert cluster.workers[0].wait() != 0
+    assert _bytes(tmp_path / "d") == whole
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("seed", range(8))
+@pytest.mark.parametrize("victim", ["scheduler", "all workers"])
+def test_a_lost_cluster_is_one_error_and_the_run_resumes(tmp_path, whole, monkeypatch, seed, victim):
+    monkeypatch.setattr(workers, "_NO_WORKER_SECONDS", 1.5)
+    after = int(np.random.default_rng(seed).integers(1, 60))
+    with dask_cluster(tmp_path) as cluster:
+        killer = _kill_when(
+            tmp_path / "d", after, [cluster.scheduler] if victim == "scheduler" else cluster.workers
+        )
+        reason = "the scheduler was lost" if victim == "scheduler" else "no worker is left"
+        with pytest.raises(WorkersError, match=f"{reason}.*; finished shards are kept"):
+            _labelled(tmp_path / "d", 400, dask=cluster.address)
+        killer.join()
+    _labelled(tmp_path / "d", 400)
+    assert _bytes(tmp_path / "d") == whole

@@ -12,12 +12,12 @@ import sys
 from collections.abc import Sequence
 
 from distill import __version__
-from distill.commands import generate, price, record, ship, tour, train, validate
+from distill.commands import generate, price, record, rehearse, ship, tour, train, validate
 from distill.errors import DistillError
 
 __all__ = ["run"]
 
-_COMMANDS = (price, generate, train, ship, validate, record, tour)
+_COMMANDS = (price, generate, train, ship, validate, rehearse, record, tour)
 
 
 def run(argv: Sequence[str]) -> int:

@@ -56,7 +56,7 @@ class Asked:
         """As the manifest keeps it."""
         h = self.horizon
         return {
-            "value": "the tree's" if h is None else "inf" if math.isinf(h) else h,
+            "value": "the tree's" if h is None else "inf" if math.isinf(h) else float(h),
             "batch": "rate" if self.batch is None else self.batch,
             "remaining": "the tree's" if self.remaining is None else self.remaining,
             "tolerance": self.tolerance,

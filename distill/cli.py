@@ -1,6 +1,7 @@
 """The command line: reads flags, calls the functions that do the work, prints what they measured.
 
-Exit codes: 0 done, 2 bad input or refused (one line on standard error, nothing written), 130 interrupted.
+Exit codes: 0 done, 2 bad input or refused (one line on standard error, nothing written), 3 a scorer worse
+than promised (audit), 130 interrupted.
 """
 
 from __future__ import annotations
@@ -12,12 +13,24 @@ import sys
 from collections.abc import Sequence
 
 from distill import __version__
-from distill.commands import generate, price, record, rehearse, ship, tour, train, validate
+from distill.commands import (
+    audit,
+    generate,
+    infer,
+    look,
+    price,
+    record,
+    rehearse,
+    ship,
+    tour,
+    train,
+    validate,
+)
 from distill.errors import DistillError
 
 __all__ = ["run"]
 
-_COMMANDS = (price, generate, train, ship, validate, rehearse, record, tour)
+_COMMANDS = (price, infer, generate, look, train, ship, validate, audit, rehearse, record, tour)
 
 
 def run(argv: Sequence[str]) -> int:

@@ -43,6 +43,10 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--close-calls", type=flags.whole(1), metavar="N",
         help="look at N trees for each one labelled and prefer close calls; weights correct for it",
     )  # fmt: skip
+    parser.add_argument(
+        "--shard-trees", type=flags.whole(1), metavar="N",
+        help="trees a shard, the step in which work is saved (default: a twentieth of all, 50 to 1,000)",
+    )  # fmt: skip
     place = parser.add_mutually_exclusive_group()
     place.add_argument(
         "--workers", type=flags.whole(1), default=os.cpu_count() or 1, help="processes (default: all cores)"
@@ -78,7 +82,7 @@ def run(args: argparse.Namespace) -> None:
                 source = Mix(source, _recorded(args.traces, bad), args.share)
         manifest = generate(
             source, args.out, trees=args.trees, seed=args.seed or 0, close_calls=args.close_calls or 1,
-            asked=Asked(args.value, args.batch, args.remaining, args.tolerance), **where,
+            shard_trees=args.shard_trees, asked=Asked(args.value, args.batch, args.remaining, args.tolerance), **where,
         )  # fmt: skip
     flags.say_bad_lines(bad)
     totals = manifest["totals"]
@@ -104,7 +108,7 @@ def _check(args: argparse.Namespace) -> None:
     """Flags that do not go together."""
     if args.add:
         own = ("family", "traces", "share", "trees", "seed", "close_calls", "value", "batch", "remaining")
-        for name in (*own, "tolerance"):
+        for name in (*own, "tolerance", "shard_trees"):
             if getattr(args, name) is not None:
                 flag = "--" + name.replace("_", "-")
                 raise InputError(flag, "must not be given with --add: the dataset says it")

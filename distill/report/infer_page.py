@@ -1,0 +1,103 @@
+"""The page of `infer`: what the traces say, what does not fit, and drawn trees beside them; floor 7."""
+
+from __future__ import annotations
+
+import os
+import xml.etree.ElementTree as ET
+from typing import Any, Final
+
+from distill.files import write_atomic
+from distill.report import spreads
+from distill.report.elements import element, estimate, number, section, table, text_of
+from distill.report.facts import Figures, gaps_refused
+from distill.report.frame import document, framed, opening, tile
+from distill.report.theme import svg
+
+__all__ = ["infer_page", "write_infer_page"]
+
+_VERDICTS: Final = {"contradicts": "does not fit", "untold": "cannot be told", "fits": "fits"}
+
+
+def infer_page(figures: Figures) -> str:
+    """The page of what `distill.infer.infer` found; the same figures give the same text."""
+    with gaps_refused():
+        return document(
+            f"{figures['name']}: a family from recorded trees",
+            _opening(figures),
+            section("What fits, and what does not", _findings(figures)),
+            section("In pictures", element("div", *_pictures(figures), class_="pictures")),
+            section("What the traces say", _parameters(figures), _note(figures)),
+            section("The family file", element("pre", figures["family"])),
+        )
+
+
+def write_infer_page(figures: Figures, path: str | os.PathLike[str]) -> None:
+    """Write `infer_page(figures)` to a file."""
+    write_atomic(path, infer_page(figures).encode())
+
+
+def _opening(figures: Figures) -> ET.Element:
+    bad = [f for f in figures["findings"] if f["verdict"] == "contradicts"]
+    columns = figures["compared"]["columns"]
+    far = max(columns, key=lambda name: columns[name]["distance"])
+    tiles = [
+        tile("recorded trees", number(figures["trees"])),
+        tile("decisions", number(figures["decisions"])),
+        tile("findings that do not fit", number(len(bad))),
+        tile("largest distance of a column", number(columns[far]["distance"]), small=far),
+    ]
+    said = f"A {figures['belief'].replace('_', '/')} family inferred from {figures['source']}."
+    return opening(figures["name"], element("p", said), tiles=tiles)
+
+
+def _findings(figures: Figures) -> ET.Element:
+    order = list(_VERDICTS)
+    rows, marks = {}, {}
+    for f in sorted(figures["findings"], key=lambda f: order.index(f["verdict"])):
+        name = f["about"]
+        while name in rows:
+            name += " "
+        rows[name], marks[name] = [f["words"]], _VERDICTS[f["verdict"]]
+    return table(("finding",), rows, marks)
+
+
+def _pictures(figures: Figures) -> list[ET.Element]:
+    columns = figures["compared"]["columns"]
+    panels = {
+        name: (c["traces"], c["drawn"], f"distance {text_of(round(c['distance'], 3))}")
+        for name, c in columns.items()
+    }
+    out = [
+        framed(
+            "Recorded trees and trees drawn from the family",
+            svg(spreads.quantile_bars(panels), "compared", "Quantiles of recorded and of drawn trees"),
+            "Upper bar: recorded; lower bar, the other colour: ",
+            number(figures["compared"]["trees drawn"]),
+            " drawn trees. Dot: median; thick: middle half; thin: nine of ten. Distance is the largest "
+            "difference of the two distribution functions, 0 alike, 1 apart.",
+        )
+    ]
+    for f in figures["findings"]:
+        if f["sample"]:
+            picture = svg(spreads.normal_plot(f["sample"]), "moves", "Moves of means against a Gaussian")
+            caption = (
+                "Each dot is one move of a leaf's mean between two records, in units of the sd that the "
+                "beliefs foresee. Gaussian rollouts and sound beliefs put the dots on the line."
+            )
+            out.append(framed("Are rollouts Gaussian?", picture, caption))
+    return out
+
+
+def _parameters(figures: Figures) -> ET.Element:
+    rows: dict[str, list[Any]] = {name: [estimate(e)] for name, e in figures["parameters"].items()}
+    return table((f"estimate, {100 * figures['level']:g} % interval",), rows)
+
+
+def _note(figures: Figures) -> ET.Element:
+    del figures
+    text = (
+        "Standard deviations of noise, and means, rewards and costs, are in units of the typical prior sd. "
+        "Spreads of logs are standard deviations. Posterior means are corrected for what rollouts moved, "
+        "by an identity that holds whatever rule chose the leaves."
+    )
+    return element("p", text, class_="note")

@@ -47,7 +47,7 @@ def summarise(results: Results) -> dict[str, Any]:
     return {
         "format": FORMAT,
         "made_with": {"voc-distill": __version__},
-        "campaign": asdict(campaign),
+        "campaign": json.loads(json.dumps(asdict(campaign))),  # lists, as they are read back
         "measure": "expected regret given all that was seen where known, else regret; value units",
         "rows": [_row(cell) for cell in results.cells],
         "comparisons": comparisons,

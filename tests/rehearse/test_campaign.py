@@ -1,0 +1,205 @@
+"""A rehearsal from names: tuned, resumed, summed up, shown."""
+
+from __future__ import annotations
+
+import json
+import re
+import xml.etree.ElementTree as ET
+from dataclasses import replace
+
+import duckdb
+import numpy as np
+import pytest
+from ladder import CLOSED_FORM
+
+from distill.cli import run as command_line
+from distill.errors import InputError
+from distill.rehearse.campaign import TUNED, Campaign, Results, name_of, run
+from distill.rehearse.loop import Budget
+from distill.rehearse.plans import plan
+from distill.rehearse.rehearsal import Cell
+from distill.rehearse.results import aims_table, cells_table, summarise, write_results
+from distill.report.rehearsal_page import break_even_svg, rehearsal_page
+
+FAST = "models/cold-store-fast.onnx"
+SMALL = Campaign(
+    problems=("tree-3x2^1-noise1", "tree-2x2^1-winloss"),
+    budgets=("12", "2ms@100us"),
+    policies=("uct", "thompson", "static-rate", f"scorer:{FAST}", f"scorer:{FAST}:stop=auto"),
+    seeds=12,
+    tuning_seeds=6,
+)
+
+
+@pytest.fixture(scope="module")
+def small(tmp_path_factory):
+    folder = tmp_path_factory.mktemp("rehearsal")
+    results = run(SMALL, folder)
+    return folder, results, write_results(results, folder)
+
+
+def test_every_policy_is_there_or_its_absence_has_a_reason(small):
+    _, results, summary = small
+    found = {(row["problem"], row["budget"], row["policy"]) for row in summary["rows"]}
+    missing = {(x["problem"], x["budget"], x["policy"]) for x in summary["left_out"]}
+    budgets = [str(Budget.parse(b)) for b in SMALL.budgets]
+    wanted = {(p, b, name_of(s)) for p in SMALL.problems for b in budgets for s in SMALL.policies}
+    assert found | missing == wanted
+    assert not found & missing
+    assert {x["why"] for x in results.left_out} == {"the scorer does not take such trees"}
+    assert {x["problem"] for x in results.left_out} == {"tree-2x2^1-winloss"}
+
+
+def test_baselines_are_tuned_on_decisions_of_their_own(small):
+    folder, results, _ = small
+    for row in results.tuning:
+        tried = row["regret"]
+        if row["policy"] in TUNED:
+            assert set(tried) == set(TUNED[row["policy"]])
+            assert tried[row["chosen"]] == min(tried.values())
+    assert {row["policy"] for row in results.tuning} >= {"uct", "thompson"}
+    seeds = duckdb.sql(f"select min(seed) a, max(seed) b from '{folder}/tuning/*.parquet'").fetchall()
+    assert seeds == [(1_000_000, 1_000_005)]
+    assert duckdb.sql(f"select max(seed) from '{folder}/cells/*.parquet'").fetchall() == [(11,)]
+
+
+def test_a_killed_campaign_goes_on_to_the_same_regrets(small):
+    folder, results, _ = small
+    for lost in sorted((folder / "cells").glob("*.parquet"))[::3]:
+        lost.unlink()
+    again = run(SMALL, folder)
+    for a, b in zip(results.cells, again.cells, strict=True):
+        assert (a.problem, a.budget, a.policy) == (b.problem, b.budget, b.policy)
+        if a.budget.seconds is None:  # regret at equal time depends on the time that choosing took
+            assert np.array_equal(a.regret, b.regret)
+    with pytest.raises(InputError, match=r"campaign\.json: must hold .*to be continued"):
+        run(replace(SMALL, seeds=13), folder)
+
+
+def test_figures_are_readable_by_others(small):
+    folder, _, summary = small
+    rows = duckdb.sql(f"select policy, measured from '{folder}/cells.parquet' order by all").fetchall()
+    assert rows == sorted((row["policy"], row["measured"]) for row in summary["rows"])
+    assert json.loads((folder / "summary.json").read_text()) == summary
+
+
+def test_the_page_holds_every_cell_and_asks_for_nothing(small):
+    _, _, summary = small
+    page = rehearsal_page(summary)
+    tree = ET.fromstring(page.removeprefix("<!DOCTYPE html>\n"))
+    shown = {node.get("value") for node in tree.iter("data")}
+    assert {repr(row["measured"]) for row in summary["rows"]} <= shown
+    assert not re.search("https?:", page)
+    assert page == rehearsal_page(summary)
+    with pytest.raises(InputError, match="report: rows: is missing"):
+        rehearsal_page({k: v for k, v in summary.items() if k != "rows"})
+    with pytest.raises(InputError, match="report: format"):
+        rehearsal_page({})
+
+
+# --- what follows from the cells: from figures that are known ---------------------------------------
+
+TIMED = [Budget(seconds=100 * cost, rollout_seconds=cost) for cost in (20e-6, 100e-6, 1e-3)]
+
+
+def cell(policy, regret, budget, rollouts=100.0, choosing=0.0):
+    x, zeros = np.full(40, float(regret)), np.zeros(40)
+    columns = {"rollouts": zeros + rollouts, "choosing": zeros + choosing, "choices": zeros + rollouts}
+    return Cell(
+        "p", budget, policy, x, regret_by_mean=x, expected_regret=x, stopped=zeros, fallbacks=zeros, **columns
+    )
+
+
+def known(scorer, exact_choosing=0.0):
+    """Thompson 1, UCT 2, static 1.1, exact 1.2 at every cost; the scorer as given; and one that stops."""
+    policies = ("uct", "thompson", "static-rate", "exact-dynamic-rate", f"scorer:{FAST}:name=s")
+    stops = f"scorer:{FAST}:name=s:stop=0.01"
+    campaign = replace(SMALL, policies=(*policies, stops))
+    cells = []
+    for budget, regret in zip(TIMED, scorer, strict=True):
+        cells += [cell("uct", 2, budget), cell("thompson", 1, budget), cell("static_rate", 1.1, budget)]
+        cells += [cell("exact_dynamic_rate", 1.2, budget, choosing=exact_choosing), cell("s", regret, budget)]
+    return summarise(Results(campaign, cells))
+
+
+def test_aims_count_cells_of_dear_rollouts_only():
+    aims = known([5.0, 0.8, 1.15])["aims"]["s"]
+    assert aims["sampling"] == {"cells": 2, "reached": 1, "beyond": 1, "at_most": 0.85, "never_above": 1.1}
+    assert aims["static"] == {"cells": 2, "reached": 1, "beyond": 0, "at_most": 0.95, "never_above": 1.05}
+    assert "exact" not in aims  # it chooses in no time here
+    slow = known([5.0, 0.8, 1.15], exact_choosing=1.0)["aims"]["s"]["exact"]
+    assert (slow["cells"], slow["reached"]) == (2, 2)
+
+
+def test_the_closed_form_is_advised_unless_measurably_beaten():
+    advice = known([5.0, 0.8, 1.15])["advice"]
+    assert [a["use"] for a in advice] == ["thompson", "s", "thompson"]
+    assert [a["best_other"] for a in advice] == ["thompson", "s", "thompson"]
+    summary = known([5.0, 1.2, 1.15])
+    assert all(a["ratio"] == pytest.approx(1 / 1.1, rel=CLOSED_FORM) for a in summary["advice"])
+
+
+def test_break_even_rows_are_ratios_to_the_best_sampling():
+    rows = [r for r in known([5.0, 0.8, 1.15])["break_even"] if r["policy"] == "s"]
+    assert [r["rollout_seconds"] for r in rows] == [20e-6, 100e-6, 1e-3]
+    assert [r["ratio"] for r in rows] == pytest.approx([5.0, 0.8, 1.15], rel=CLOSED_FORM)
+    picture = break_even_svg(known([5.0, 0.8, 1.15]))
+    assert "cost of a rollout, µs (time: 100 rollouts)" in picture
+
+
+def test_stopping_is_held_against_going_on():
+    campaign = replace(SMALL, policies=("thompson", f"scorer:{FAST}", f"scorer:{FAST}:stop=0.01"))
+    names = [name_of(spec) for spec in campaign.policies]
+    cells = [cell("thompson", 1, TIMED[1]), cell(names[1], 1, TIMED[1]), cell(names[2], 1.02, TIMED[1], 60)]
+    (found,) = summarise(Results(campaign, cells))["stopping"]
+    assert found["saved"] == pytest.approx(0.4, rel=CLOSED_FORM)
+    assert found["ratio"] == pytest.approx(1.02, rel=CLOSED_FORM)
+
+
+def test_tables_show_every_cell():
+    summary = known([5.0, 0.8, 1.15])
+    lines = cells_table(summary)
+    assert len(lines) == 2 + len(TIMED)
+    assert "0.80 [0.80, 0.80] (thompson)" in lines[3]
+    assert any("| s | sampling | 2 | 0.85 | 1 (50%) | 1.1 | 1 |" in line for line in aims_table(summary))
+
+
+# --- the command -----------------------------------------------------------------------------------
+
+
+def test_the_command_leaves_a_page_and_says_where(tmp_path, capsys):
+    flags = ["--problem", "tree-2x2^1-noise1", "--budget", "6", "--policy", "thompson", "--seeds", "4"]
+    assert command_line(["rehearse", "--out", str(tmp_path), *flags, "--scorer", FAST]) == 0
+    assert "| tree-2x2^1-noise1 | 6 | cold-store-fast |" in capsys.readouterr().out
+    assert (tmp_path / "rehearsal.html").read_text().startswith("<!DOCTYPE html>")
+
+
+@pytest.mark.parametrize(
+    ("flags", "message"),
+    [
+        (["--budget", "6"], "--problem: must be given without --quick or --full"),
+        (["--quick", "--full"], "--quick: cannot go with --full"),
+        (["--quick", "--problem", "chess"], "problem: must be one of taxi,"),
+        (["--quick", "--budget", "fast"], "budget: must be rollouts (128), or time and cost (20ms@100us)"),
+        (["--quick", "--policy", "luck"], "policy 'luck': must begin with one of even,"),
+        (["--quick", "--policy", "uct:d=1"], "policy 'uct:d=1': options of uct are: c; got 'd'"),
+        (["--quick", "--policy", "uct:c=x"], "policy 'uct:c=x': c: must be a number; got 'x'"),
+        (["--quick", "--policy", "scorer:none.onnx"], "must name a file that exists; got 'none.onnx'"),
+    ],
+)
+def test_bad_flags_are_one_clear_line(tmp_path, capsys, flags, message):
+    assert command_line(["rehearse", "--out", str(tmp_path / "out"), *flags]) == 2
+    error = capsys.readouterr().err
+    assert message in error
+    assert error.count("\n") == 1
+
+
+def test_plans_know_the_scorers_uses():
+    campaign = plan("quick", scorers=[FAST])
+    assert [p for p in campaign.policies if p.startswith("scorer:")] == [
+        f"scorer:{FAST}",
+        f"scorer:{FAST}:settled=0.001:share=0.25",
+    ]
+    full = plan("full", scorers=[FAST])
+    assert full.seeds >= 400
+    assert any(p.endswith(":stop=auto") for p in full.policies)

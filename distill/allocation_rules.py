@@ -3,13 +3,13 @@
 The rules are described there. Everything here works on plain arrays of one tree.
 """
 
+# mypy: allow-untyped-calls
 from __future__ import annotations
 
 import math
 from typing import Final, NamedTuple
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
 from distill.beliefs import (
@@ -19,6 +19,7 @@ from distill.beliefs import (
     win_loss_noise_var,
     win_loss_var,
 )
+from distill.kernels import compiled
 from distill.tree import Floats, Ints
 
 __all__ = ["RULES", "Belief", "Topology", "observe", "pick", "run", "scale"]
@@ -61,14 +62,14 @@ class Belief(NamedTuple):
     returns: Floats  # sum of what the rollouts since the start returned
 
 
-_mean_after = njit(cache=True, error_model="numpy")(gaussian_mean_update)
-_var_after = njit(cache=True, error_model="numpy")(gaussian_var_update)
-_win_loss_mean = njit(cache=True, error_model="numpy")(win_loss_mean)
-_win_loss_var = njit(cache=True, error_model="numpy")(win_loss_var)
-_win_loss_noise = njit(cache=True, error_model="numpy")(win_loss_noise_var)
+_mean_after = compiled(gaussian_mean_update)
+_var_after = compiled(gaussian_var_update)
+_win_loss_mean = compiled(win_loss_mean)
+_win_loss_var = compiled(win_loss_var)
+_win_loss_noise = compiled(win_loss_noise_var)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def scale(t, var):  # type: ignore[no-untyped-def]
     """The largest standard deviation that any leaf contributes to the root, u."""
     gain = np.ones(len(t.parent))
@@ -80,7 +81,7 @@ def scale(t, var):  # type: ignore[no-untyped-def]
     return top
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def run(rng, t, b, truth, share, rollouts, budget, batch, switch, c):  # type: ignore[no-untyped-def]
     """Spend `rollouts` of `budget` around the true leaf values; `share` are the rules' cumulative weights."""
     rule = _draw_rule(rng, share)
@@ -100,7 +101,7 @@ def run(rng, t, b, truth, share, rollouts, budget, batch, switch, c):  # type: i
         used += k
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _draw_rule(rng, share):  # type: ignore[no-untyped-def]
     u = rng.random() * share[-1]
     for rule in range(len(share)):
@@ -109,7 +110,7 @@ def _draw_rule(rng, share):  # type: ignore[no-untyped-def]
     return len(share) - 1
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def observe(b, i, observed, k):  # type: ignore[no-untyped-def]
     """Posterior update in place: `k` rollouts at leaf `i`, `observed` their average (win/loss: the wins)."""
     b.visits[i] += k
@@ -144,7 +145,7 @@ def observe(b, i, observed, k):  # type: ignore[no-untyped-def]
         b.var[i] = _var_after(b.var[i], b.noise[i], k)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def pick(rule, rng, t, b, remaining, c):  # type: ignore[no-untyped-def]
     """The leaf that rule number `rule` rolls out next; `c` is UCT's constant in u."""
     if rule == _EVEN:
@@ -156,7 +157,7 @@ def pick(rule, rng, t, b, remaining, c):  # type: ignore[no-untyped-def]
     return _static_rate(rng, t, b, remaining)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _even(rng, visits):  # type: ignore[no-untyped-def]
     best, ties = 0, 0
     for i in range(len(visits)):
@@ -169,7 +170,7 @@ def _even(rng, visits):  # type: ignore[no-untyped-def]
     return best
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _backup(t, leaf_value):  # type: ignore[no-untyped-def]
     """Value of every node when leaf values are as given; children come after parents."""
     value = np.where(t.is_decision, -np.inf, 0.0)
@@ -185,7 +186,7 @@ def _backup(t, leaf_value):  # type: ignore[no-untyped-def]
     return value
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _by_chance(rng, t, v):  # type: ignore[no-untyped-def]
     """A child of a chance node, drawn with its probability."""
     u = rng.random()
@@ -199,7 +200,7 @@ def _by_chance(rng, t, v):  # type: ignore[no-untyped-def]
     return t.child[t.first[v]]
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _uct(rng, t, b, c):  # type: ignore[no-untyped-def]
     value = _backup(t, b.mean)
     visits = np.zeros(len(t.parent))
@@ -229,7 +230,7 @@ def _uct(rng, t, b, c):  # type: ignore[no-untyped-def]
     return np.searchsorted(t.leaf, v)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _thompson(rng, t, b):  # type: ignore[no-untyped-def]
     draw = np.empty(len(t.leaf))
     for i in range(len(t.leaf)):
@@ -253,7 +254,7 @@ def _thompson(rng, t, b):  # type: ignore[no-untyped-def]
     return np.searchsorted(t.leaf, v)
 
 
-@njit(cache=True, error_model="numpy")
+@compiled
 def _static_rate(rng, t, b, remaining):  # type: ignore[no-untyped-def]
     """Best leaf by max over k in 1, 2, 4, ... of VOC_0(k) / k; `even` where every value underflows.
 

@@ -6,12 +6,7 @@ deviation of the posterior mean after k rollouts,
 
     VOC(k) = A s f(-D / (A s)),    f(z) = z Phi(z) + phi(z).
 
-One pass up finds the values, one pass down the signed gap d = A m + B - C of every leaf: O(nodes) for all
-candidates. Going down, only differences between siblings enter, each taken in double-double arithmetic:
-
-    chance node:    d_child = d_parent
-    decision node:  d_child = min(d_parent, A_parent (best - second))        for the best child,
-                    d_child = min(d_parent, 0) - A_parent (best - q_child)   for the others.
+`root_gaps` finds A and D of all leaves in O(nodes).
 
 The rate max_k VOC(k) / k has one peak over real k > 0: with z = D / (A s) the derivative has the sign of
 n / (2 (k v + n)) - f(-z) / phi(z), and both terms are monotone in k, the first falling, the second rising.
@@ -28,7 +23,7 @@ from numpy.typing import NDArray
 
 from distill import schema
 from distill.errors import RefusedError
-from distill.exact import double_double as dd
+from distill.exact.root_gaps import gap_room, root_gaps
 from distill.numerics import compiled, gain, gain_ratio, norm_cdf
 from distill.query import Priced, Query
 from distill.tree import BeliefTree, Floats, Ints
@@ -38,7 +33,6 @@ __all__ = ["METHOD", "price", "price_many"]
 METHOD = "static independent, closed form"
 
 _LEAF = schema.LEAF
-_CHANCE = schema.CHANCE
 _EPS = 2.220446049250313e-16
 
 
@@ -125,67 +119,20 @@ def _price_packed(
     widest = 0
     for t in range(len(node_start) - 1):
         widest = max(widest, node_start[t + 1] - node_start[t])
-    slope = np.empty(widest)
-    gap = np.empty(widest)
-    depth = np.empty(widest, dtype=np.int64)
-    total = np.empty((widest, 2))  # q = r + g V, what a node offers its parent
-    best = np.empty((widest, 2))  # V of a node
-    second = np.empty((widest, 2))
-    chosen = np.empty(widest, dtype=np.int64)
+    found = gap_room(widest)
+    slope, gap, depth, total = found.slope, found.gap, found.depth, found.total
     value_start[0] = 0
     for t in range(len(node_start) - 1):
-        a = node_start[t]
-        n = node_start[t + 1] - a
-        leaf = leaf_start[t + 1]
-        largest = 0.0
-        best[:n] = 0.0
-        second[:n] = -math.inf
-        chosen[:n] = -1
-        for c in range(n - 1, 0, -1):
-            if kind[a + c] == _LEAF:
-                leaf -= 1
-                best[c, 0] = mean[leaf]
-            hi, lo = dd.scale(best[c, 0], best[c, 1], discount[a + c])
-            hi, lo = dd.add(hi, lo, reward[a + c], 0.0)
-            total[c, 0] = hi
-            total[c, 1] = lo
-            largest = max(largest, abs(best[c, 0]), abs(reward[a + c]))
-            p = parent[a + c]
-            if kind[a + p] == _CHANCE:
-                hi, lo = dd.scale(hi, lo, prob[a + c])
-                hi, lo = dd.add(best[p, 0], best[p, 1], hi, lo)
-                best[p, 0] = hi
-                best[p, 1] = lo
-            elif chosen[p] < 0 or hi > best[p, 0] or (hi == best[p, 0] and lo >= best[p, 1]):
-                # >= : children come last to first, and of equals the first is chosen.
-                second[p] = best[p] if chosen[p] >= 0 else second[p]
-                best[p] = total[c]
-                chosen[p] = c
-            elif hi > second[p, 0] or (hi == second[p, 0] and lo > second[p, 1]):
-                second[p] = total[c]
-        slope[0] = 1.0
-        gap[0] = math.inf
-        depth[0] = 0
+        a, b = node_start[t], node_start[t + 1]
+        leaf, last = leaf_start[t], leaf_start[t + 1]
+        largest = root_gaps(
+            parent[a:b], kind[a:b], reward[a:b], discount[a:b], prob[a:b], mean[leaf:last], found
+        )
         at = value_start[t]
-        for c in range(1, n):
-            p = parent[a + c]
-            depth[c] = depth[p] + 1
-            if p == 0:
+        for c in range(1, b - a):
+            if parent[a + c] == 0:
                 value[at] = total[c, 0]
                 at += 1
-            if kind[a + p] == _CHANCE:
-                gap[c] = gap[p]
-                slope[c] = slope[p] * prob[a + c] * discount[a + c]
-            else:
-                slope[c] = slope[p] * discount[a + c]
-                if c == chosen[p]:
-                    gap[c] = gap[p]
-                    if second[p, 0] > -math.inf:
-                        lead = dd.subtract(best[p, 0], best[p, 1], second[p, 0], second[p, 1])
-                        gap[c] = min(gap[p], slope[p] * lead)
-                else:
-                    lag = dd.subtract(best[p, 0], best[p, 1], total[c, 0], total[c, 1])
-                    gap[c] = min(gap[p], 0.0) - slope[p] * lag
             if kind[a + c] == _LEAF:
                 d = abs(gap[c])
                 k = most

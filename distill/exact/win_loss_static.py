@@ -10,9 +10,8 @@ from __future__ import annotations
 import math
 
 import numpy as np
-from numpy.typing import NDArray
 
-from distill import schema
+from distill.exact.root_gaps import gap_room, root_gaps
 from distill.exact.trial_walk import crossing_best_rate, crossing_gain, crossing_limit, first_crossing
 from distill.numerics import compiled
 from distill.query import Priced, Query
@@ -38,14 +37,17 @@ def price_static(tree: BeliefTree, query: Query) -> Priced:
     assert tree.low is not None
     assert tree.high is not None
     width = tree.high - tree.low
-    values = tree.low + width * (tree.alpha / (tree.alpha + tree.beta))
-    gain, offset, rival, action_values, magnitude = _root_kinks(
-        tree.parent, tree.kind, tree.reward, tree.discount, tree.prob, values, np.abs(tree.low) + width
+    rate = tree.alpha / (tree.alpha + tree.beta)
+    found = gap_room(tree.n_nodes)
+    largest = root_gaps(
+        tree.parent, tree.kind, tree.reward, tree.discount, tree.prob, tree.low + width * rate, found
     )
-    slope = gain * width
-    rounding = 4 * _EPS * magnitude
+    slope, gap = found.slope[tree.leaf_nodes] * width, found.gap[tree.leaf_nodes]
+    action_values = found.total[tree.action_nodes, 0]
+    # The means are rounded, wherever they lie; the differences of values hardly are.
+    rounding = 4 * _EPS * max(largest, float(np.max(np.abs(tree.low) + width)))
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        kink = np.where(slope > 0, (rival - offset - gain * tree.low) / slope, math.inf)
+        kink = np.where(slope > 0, rate - gap / slope, math.inf)
         shift = np.where(slope > 0, rounding / slope + _EPS, 0.0)
     worth, batch, error = price_crossings(tree.alpha, tree.beta, kink, shift, query)
     return Priced(slope * worth, batch, action_values, slope * error * (1 + 4 * _EPS), METHOD)
@@ -119,64 +121,3 @@ def _rates(
             gain, k, seen[i] = crossing_best_rate(alpha[i], beta[i], kink[i], 1, last, limit[i])
             rate[i], batch[i] = gain / k, k
     return rate, batch, seen
-
-
-@compiled
-def _root_kinks(
-    parent: Ints,
-    kind: NDArray[np.int8],
-    reward: Floats,
-    discount: Floats,
-    prob: Floats,
-    leaf_value: Floats,
-    leaf_size: Floats,
-) -> tuple[Floats, Floats, Floats, Floats, float]:
-    """Per leaf gain, B and C of root maximum = max(C, gain x + B), x the leaf's value; V_0 per action; size.
-
-    Sibling sums under a chance node are taken from both sides, never as a difference. The size bounds
-    every number that entered, for the rounding.
-    """
-    nodes = len(parent)
-    value, size = np.zeros(nodes), np.zeros(nodes)
-    best, second = np.full(nodes, -math.inf), np.full(nodes, -math.inf)
-    leaf = len(leaf_value)
-    for c in range(nodes - 1, 0, -1):
-        if kind[c] == schema.LEAF:
-            leaf -= 1
-            value[c], size[c] = leaf_value[leaf], leaf_size[leaf]
-        elif kind[c] == schema.DECISION:
-            value[c] = best[c]
-        q = reward[c] + discount[c] * value[c]
-        p = parent[c]
-        size[p] = max(size[p], abs(reward[c]) + discount[c] * size[c])
-        if kind[p] == schema.CHANCE:
-            value[p] += prob[c] * q
-        elif q > best[p]:
-            second[p], best[p] = best[p], q
-        elif q > second[p]:
-            second[p] = q
-    others = np.zeros(nodes)  # under chance nodes: what the siblings add
-    before, after = np.zeros(nodes), np.zeros(nodes)
-    for c in range(1, nodes):
-        others[c] += before[parent[c]]
-        before[parent[c]] += prob[c] * (reward[c] + discount[c] * value[c])
-    for c in range(nodes - 1, 0, -1):
-        others[c] += after[parent[c]]
-        after[parent[c]] += prob[c] * (reward[c] + discount[c] * value[c])
-    gain, offset, rival = np.ones(nodes), np.zeros(nodes), np.full(nodes, -math.inf)
-    for c in range(1, nodes):
-        p = parent[c]
-        gain[c] = gain[p] * prob[c] * discount[c]
-        offset[c] = offset[p] + gain[p] * prob[c] * reward[c]
-        rival[c] = rival[p]
-        if kind[p] == schema.CHANCE:
-            offset[c] += gain[p] * others[c]
-        else:
-            q = reward[c] + discount[c] * value[c]
-            sibling = second[p] if q == best[p] else best[p]
-            if sibling > -math.inf:
-                rival[c] = max(rival[c], offset[p] + gain[p] * sibling)
-    leaves = np.flatnonzero(kind == schema.LEAF)
-    actions = np.flatnonzero(parent == 0)
-    action_values = reward[actions] + discount[actions] * value[actions]
-    return gain[leaves], offset[leaves], rival[leaves], action_values, size[0]

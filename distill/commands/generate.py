@@ -81,9 +81,15 @@ def run(args: argparse.Namespace) -> None:
             if args.traces:
                 source = Mix(source, _recorded(args.traces, bad), args.share)
         manifest = generate(
-            source, args.out, trees=args.trees, seed=args.seed or 0, close_calls=args.close_calls or 1,
-            shard_trees=args.shard_trees, asked=Asked(args.value, args.batch, args.remaining, args.tolerance), **where,
-        )  # fmt: skip
+            source,
+            args.out,
+            trees=args.trees,
+            seed=args.seed or 0,
+            asked=Asked(args.value, args.batch, args.remaining, args.tolerance),
+            shard_trees=args.shard_trees,
+            close_calls=args.close_calls or 1,
+            **where,
+        )
     flags.say_bad_lines(bad)
     totals = manifest["totals"]
     print(

@@ -1,4 +1,4 @@
-"""`voc-distill record`: let the reference search play a simulator and record its belief trees."""
+"""`voc-distill record`: belief trees of the reference search, or those that a policy meets, as traces."""
 
 from __future__ import annotations
 
@@ -9,12 +9,18 @@ from distill.commands import flags
 
 __all__ = ["HELP", "add_arguments", "run"]
 
-HELP = "let the reference search play a simulator and record its belief trees"
+HELP = "belief trees that a search meets, as traces"
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
-    parser.add_argument("--simulator", required=True, metavar="NAME")
+    what = parser.add_mutually_exclusive_group(required=True)
+    what.add_argument("--simulator", metavar="NAME", help="played by the reference search, rules mixed")
+    what.add_argument(
+        "--problem", action="append", metavar="NAME",
+        help="of a rehearsal; decisions of their own, searched by --policy; may be given again",
+    )  # fmt: skip
+    parser.add_argument("--policy", metavar="POLICY", help="as for rehearse, e.g. scorer:FILE.onnx")
     parser.add_argument("--decisions", type=flags.whole(1), required=True, metavar="N")
     parser.add_argument(
         "--rollouts", type=flags.whole(1), default=128, metavar="R", help="budget of a decision (default 128)"
@@ -25,16 +31,56 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(args: argparse.Namespace) -> None:
     """Run the command."""
+    from distill.errors import InputError
+
+    if (args.problem is None) != (args.policy is None):
+        raise InputError("--policy", "goes with --problem, and --problem with it")
+    if args.problem is None:
+        _played(args)
+    else:
+        _met(args)
+
+
+def _played(args: argparse.Namespace) -> None:
     from distill.rehearse.record import record_traces
     from distill.terminal import bar
 
+    seen = 0
     with bar("recording", args.decisions, "decisions") as advance:
+
+        def progress(decision: int) -> None:
+            nonlocal seen
+            advance(decision + 1 - seen)  # a decision brings several trees
+            seen = decision + 1
+
         done = record_traces(
             args.simulator,
             args.out,
             decisions=args.decisions,
             rollouts=args.rollouts,
             seed=args.seed,
-            progress=advance,
+            progress=progress,
         )
     print(f"{args.out}: {done.trees:,} trees of {done.decisions:,} decisions, {done.size:,} bytes")
+
+
+def _met(args: argparse.Namespace) -> None:
+    from distill.errors import InputError
+    from distill.rehearse.catalogue import make_problem
+    from distill.rehearse.met_trees import FIRST_SEED, met_trees
+    from distill.rehearse.policy_specs import make_policy
+    from distill.traces import write_trees
+
+    if not str(args.out).endswith((".jsonl", ".jsonl.gz")):
+        raise InputError(str(args.out), "must end in .jsonl or .jsonl.gz")  # before the work, not after it
+    met = met_trees(
+        [make_problem(name) for name in args.problem],
+        make_policy(args.policy),
+        decisions=args.decisions,
+        rollouts=args.rollouts,
+        first_seed=FIRST_SEED + args.seed * args.decisions,
+    )
+    trees = list(met)
+    write_trees(args.out, trees)
+    decisions = args.decisions * len(args.problem)
+    print(f"{args.out}: {len(trees):,} trees of {decisions:,} decisions, {args.out.stat().st_size:,} bytes")

@@ -10,80 +10,24 @@ from __future__ import annotations
 
 import os
 import shutil
-from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Final
 
-import numpy as np
-
-from distill.allocation import Search as Posterior
 from distill.errors import InputError
 from distill.generate import Traces, add, generate
-from distill.rehearse.loop import Budget, decide, posterior_means
-from distill.rehearse.policies import Choice, Policy
+from distill.rehearse.met_trees import FIRST_SEED, met_trees
+from distill.rehearse.policies import Policy
 from distill.rehearse.problems import Problem
-from distill.rehearse.record import POINTS
 from distill.rehearse.value_policies import ByScorer
 from distill.ship import ship
 from distill.train import train
-from distill.tree import BeliefTree
 from distill.validate import validate
 
-__all__ = ["Round", "aggregate", "met_trees"]
+__all__ = ["Round", "aggregate"]
 
-_FIRST_SEED: Final = 2_000_000  # decisions that are recorded, apart from those rehearsed and tuned on
 _SEEDS_A_ROUND: Final = 100_000
-
-
-class _Recording:
-    """A policy, and the beliefs before its choices at given numbers of rollouts spent."""
-
-    def __init__(self, policy: Policy, budget: int) -> None:
-        self.name = policy.name
-        self.trees: list[BeliefTree] = []
-        self._policy = policy
-        self._points = sorted({int(share * budget) for share in POINTS})
-        self._budget = budget
-        self._due = list(self._points)
-
-    def begin(self, tree: BeliefTree) -> None:
-        self._due = list(self._points)
-        self._policy.begin(tree)
-
-    def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice | None:
-        if self._due and self._budget - remaining >= self._due[0]:
-            self._due.pop(0)
-            self.trees.append(posterior.tree(remaining=remaining))
-        return self._policy.choose(posterior, remaining, rng)
-
-
-def met_trees(
-    problems: Sequence[Problem],
-    policy: Policy,
-    *,
-    decisions: int,
-    rollouts: int = 128,
-    first_seed: int = _FIRST_SEED,
-) -> Iterator[BeliefTree]:
-    """Belief trees that a policy meets in its own search, at the POINTS of its budget.
-
-    decisions : of each problem, on seeds from `first_seed` on. rollouts : budget of each. Every tree
-    carries `remaining`, `count`, `id` and in `extra` the problem, the seed and the policy.
-    """
-    if decisions < 1:
-        raise InputError("decisions", "must be at least 1", decisions)
-    for problem in problems:
-        recording = _Recording(policy, rollouts)
-        for seed in range(first_seed, first_seed + decisions):
-            rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
-            decide(problem.draw(seed), recording, Budget(rollouts=rollouts), rng, values=posterior_means)
-            about = {"problem": problem.name, "seed": seed, "policy": policy.name}
-            for tree in recording.trees:
-                assert tree.remaining is not None
-                name = f"{problem.name}-{seed}-{rollouts - tree.remaining}"
-                yield replace(tree, id=name, extra=about)
-            recording.trees.clear()
 
 
 @dataclass(frozen=True)
@@ -135,7 +79,7 @@ def aggregate(
         front = train(data, out / f"trained-{number}", seed=seed, recipes=[recipe])
         scorer = out / f"scorer-{number}.onnx"
         ship(out / f"trained-{number}", scorer, scorer=recipe)
-        first = _FIRST_SEED + number * _SEEDS_A_ROUND
+        first = FIRST_SEED + number * _SEEDS_A_ROUND
         policy = ByScorer(scorer)
         judged = _labelled(problems, policy, max(decisions // 5, 1), rollouts, first, out / f"judge-{number}")
         accuracy = validate(scorer, judged, n_boot=100)["accuracy"]

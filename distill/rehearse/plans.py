@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Sequence
-from typing import Final
+from pathlib import Path
+from typing import Any, Final
 
 from distill.errors import InputError
-from distill.rehearse.campaign import Campaign
+from distill.rehearse.campaign import Campaign, run
+from distill.rehearse.results import write_results
 
-__all__ = ["plan"]
+__all__ = ["plan", "quick"]
 
 _TREES: Final = (
     "tree-2x8^1-noise1", "tree-2x8^1-noise4", "tree-2x8^1-noise16", "tree-2x8^1-winloss",
@@ -78,3 +81,11 @@ def plan(
         seeds=seeds if seeds is not None else base.seeds if base else 400,
         tuning_seeds=tuning_seeds if tuning_seeds is not None else base.tuning_seeds if base else 100,
     )
+
+
+def quick(
+    scorers: Sequence[str | os.PathLike[str]], folder: str | os.PathLike[str], *, seeds: int | None = None
+) -> dict[str, Any]:
+    """The quick plan with some scorer files, run into `folder`; returns the summary that it leaves there."""
+    campaign = plan("quick", scorers=[str(file) for file in scorers], seeds=seeds)
+    return write_results(run(campaign, folder), Path(folder))

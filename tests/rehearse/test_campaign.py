@@ -6,6 +6,7 @@ import json
 import re
 import xml.etree.ElementTree as ET
 from dataclasses import replace
+from pathlib import Path
 
 import duckdb
 import numpy as np
@@ -16,12 +17,12 @@ from distill.cli import run as command_line
 from distill.errors import InputError
 from distill.rehearse.campaign import TUNED, Campaign, Results, name_of, run
 from distill.rehearse.loop import Budget
-from distill.rehearse.plans import plan
+from distill.rehearse.plans import plan, quick
 from distill.rehearse.rehearsal import Cell
 from distill.rehearse.results import aims_table, cells_table, summarise, write_results
 from distill.report.rehearsal_page import break_even_svg, rehearsal_page
 
-FAST = "models/cold-store-fast.onnx"
+FAST = str(Path(__file__).parents[2] / "models" / "cold-store-fast.onnx")
 SMALL = Campaign(
     problems=("tree-3x2^1-noise1", "tree-2x2^1-winloss"),
     budgets=("12", "2ms@100us"),
@@ -192,6 +193,13 @@ def test_bad_flags_are_one_clear_line(tmp_path, capsys, flags, message):
     error = capsys.readouterr().err
     assert message in error
     assert error.count("\n") == 1
+
+
+def test_the_tours_rehearsal_is_a_plan_with_a_scorer(tmp_path):
+    summary = quick([FAST], tmp_path, seeds=3)
+    assert {row["policy"] for row in summary["comparisons"]} >= {"cold-store-fast"}
+    assert (tmp_path / "summary.json").exists()
+    assert summary["campaign"]["seeds"] == 3
 
 
 def test_plans_know_the_scorers_uses():

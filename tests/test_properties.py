@@ -3,137 +3,139 @@
 from __future__ import annotations
 
 import dataclasses
+import itertools
 import math
 
 import numpy as np
 import pytest
-from builders import bush, chance_record, flat_record, random_bush
+from builders import bush, random_bush
+from flat_trees import deep_tree, scaled, shifted
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 from ladder import CLOSED_FORM, QUADRATURE, RELATIVE_TAIL
 
 from distill import voc
-from distill.errors import InputError, ToleranceError
 from distill.query import Query, scale_of
-from distill.record import from_record
+from distill.record import from_record, to_record
 
-HORIZONS = st.sampled_from([0.0, 0.5, 8.0, math.inf])
+HORIZONS = st.sampled_from([0.0, 0.3, 8.0, 100.0, math.inf])
 BATCHES = st.sampled_from([1, 3, 40])
 property_test = settings(max_examples=60, deadline=None, derandomize=True)
 
 
 @st.composite
-def bushes(draw, least_actions=1):
+def bushes(draw):
     """Trees of unit size with ties, sure leaves, far gaps and 8 decades of variances among them."""
     mean = st.one_of(st.floats(-3, 3), st.sampled_from([0.0, 1.0, -50.0]))
     var = st.one_of(st.floats(1e-2, 4), st.sampled_from([0.0, 1e-8, 1.0]))
-    shape = draw(st.lists(st.integers(1, 4), min_size=least_actions, max_size=4))
+    shape = draw(st.lists(st.integers(1, 4), min_size=1, max_size=4))
     means = [[draw(mean) for _ in range(n)] for n in shape]
     variances = [[draw(var) for _ in range(n)] for n in shape]
     assume(any(v > 0 for row in variances for v in row))
-    return means, variances, draw(st.sampled_from([0.05, 1.0, 30.0]))
+    return bush(means, variances, draw(st.sampled_from([0.05, 1.0, 30.0])))
 
 
-def close(a, b, scale, rel=RELATIVE_TAIL):
-    """Equal to `rel`, or to the quadrature's rung of the scale."""
-    np.testing.assert_allclose(a, b, rtol=rel, atol=QUADRATURE * scale)
+# Beside them uneven trees with rewards, discounts and noise of their own.
+TREES = st.one_of(bushes(), st.integers(0, 2**32).map(lambda seed: deep_tree(np.random.default_rng(seed))))
+
+
+def close(a, b, scale):
+    """Equal to what the labels promise, or to the quadrature's rung of the scale."""
+    np.testing.assert_allclose(a, b, rtol=RELATIVE_TAIL, atol=QUADRATURE * scale)
 
 
 @property_test
-@given(bushes(), HORIZONS, BATCHES)
+@given(TREES, HORIZONS, BATCHES)
 def test_never_negative_and_bounded_by_its_own_error(tree, h, k):
-    t = bush(*tree)
-    priced = voc.price(t, Query(h, k))
+    priced = voc.price(tree, Query(h, k))
     assert np.all(np.isfinite(priced.voc))
     assert np.all(priced.voc >= 0)
     assert np.all(priced.error >= 0)
-    assert np.all(priced.error <= QUADRATURE * scale_of(t))
+    assert np.all(priced.error <= QUADRATURE * scale_of(tree))
 
 
 @property_test
-@given(bushes(), HORIZONS, BATCHES, st.floats(-1e3, 1e3))
+@given(TREES, HORIZONS, BATCHES, st.floats(-1e3, 1e3))
 def test_a_constant_on_every_path_changes_nothing(tree, h, k, constant):
-    t = bush(*tree)
-    reward = t.reward.copy()
-    reward[t.action_nodes] += constant
-    moved = dataclasses.replace(t, reward=reward)
-    close(voc.price(moved, Query(h, k)).voc, voc.price(t, Query(h, k)).voc, scale_of(t) * (1 + abs(constant)))
+    moved, still = (voc.price(t, Query(h, k)) for t in (shifted(tree, constant), tree))
+    close(moved.voc, still.voc, scale_of(tree) * (1 + abs(constant)))
+    size = abs(constant) + np.abs(still.value).max() + scale_of(tree)
+    assert np.max(np.abs(moved.value - constant - still.value)) <= 1e-13 * size
 
 
 @property_test
-@given(bushes(), HORIZONS, BATCHES, st.sampled_from([1e-12, 1e-3, 7.0, 1e12]))
+@given(TREES, HORIZONS, BATCHES, st.sampled_from([1e-12, 1e-3, 7.0, 1e12]))
 def test_scaling_utilities_scales_voc(tree, h, k, factor):
-    mean, var, noise = tree
-    scaled = bush(
-        [[factor * m for m in row] for row in mean],
-        [[factor**2 * v for v in row] for row in var],
-        factor**2 * noise,
-    )
-    t = bush(*tree)
-    close(voc.price(scaled, Query(h, k)).voc / factor, voc.price(t, Query(h, k)).voc, scale_of(t))
+    plain = voc.price(tree, Query(h, k)).voc
+    close(voc.price(scaled(tree, factor), Query(h, k)).voc / factor, plain, scale_of(tree))
+    assert np.array_equal(voc.price(scaled(tree, 1024.0), Query(h, k)).voc, 1024.0 * plain)
 
 
 @property_test
-@given(bushes(), HORIZONS, BATCHES, st.randoms(use_true_random=False))
-def test_relabelling_permutes(tree, h, k, random):
-    mean, var, noise = tree
-    order = [(a, i) for a in range(len(mean)) for i in range(len(mean[a]))]
-    actions = list(range(len(mean)))
-    random.shuffle(actions)
-    inner = [random.sample(range(len(mean[a])), len(mean[a])) for a in actions]
-    t = bush(mean, var, noise)
-    moved = bush(
-        [[mean[a][i] for i in idx] for a, idx in zip(actions, inner, strict=True)],
-        [[var[a][i] for i in idx] for a, idx in zip(actions, inner, strict=True)],
-        noise,
-    )
-    new_order = [(a, i) for a, idx in zip(actions, inner, strict=True) for i in idx]
-    back = [new_order.index(x) for x in order]
-    close(voc.price(moved, Query(h, k)).voc[back], voc.price(t, Query(h, k)).voc, scale_of(t))
+@given(TREES, HORIZONS, BATCHES, st.randoms(use_true_random=False))
+def test_relabelling_siblings_permutes(tree, h, k, random):
+    """Depth-first order with every node's children shuffled."""
+    record = to_record(tree)
+    children = [[c for c, p in enumerate(record["parent"]) if p == node] for node in range(tree.n_nodes)]
+    order, stack = [], [0]
+    while stack:
+        node = stack.pop()
+        order.append(node)
+        stack.extend(random.sample(children[node], len(children[node])))
+    place = {node: i for i, node in enumerate(order)}
+    columns = {
+        k: [v[node] for node in order] for k, v in record.items() if isinstance(v, list) and k != "parent"
+    }
+    parent = [-1] + [place[record["parent"][node]] for node in order[1:]]
+    turned = from_record({**record, **columns, "parent": parent})
+    leaf_of = {int(node): i for i, node in enumerate(tree.leaf_nodes)}
+    moved = [leaf_of[order[node]] for node in turned.leaf_nodes]
+    query = Query(h, k)
+    close(voc.price(turned, query).voc, voc.price(tree, query).voc[moved], scale_of(tree))
 
 
 @property_test
-@given(bushes(), HORIZONS, st.integers(1, 30), st.integers(1, 300))
+@given(TREES, HORIZONS, st.integers(1, 30), st.integers(1, 10**6))
 def test_non_decreasing_in_the_batch_and_below_an_endless_one(tree, h, k, more):
-    t = bush(*tree)
-    few, many, endless = (voc.price(t, Query(h, b)) for b in (k, k + more, 2**53))
-    slack = few.error + many.error + endless.error + few.voc * RELATIVE_TAIL
-    assert np.all(few.voc <= many.voc + slack)
-    assert np.all(many.voc <= endless.voc + slack)
+    priced = [voc.price(tree, Query(h, b)) for b in (k, k + 1, k + 1 + more, 2**53)]
+    for few, many in itertools.pairwise(priced):
+        assert np.all(few.voc <= many.voc + few.error + many.error + few.voc * RELATIVE_TAIL)
+    assert np.all(priced[-1].voc <= scale_of(tree))
 
 
 @property_test
-@given(bushes(), st.sampled_from([0.0, math.inf]))
+@given(TREES, st.sampled_from([0.0, math.inf]))
 def test_nothing_to_learn_is_worth_nothing_and_noise_drowns_the_rest(tree, h):
-    t = bush(*tree)
-    priced = voc.price(t, Query(h))
-    assert np.all(priced.voc[t.var == 0] == 0)
-    noisy = dataclasses.replace(t, noise_var=np.full(t.n_leaves, 1e20))
-    assert np.all(voc.price(noisy, Query(h)).voc <= 1e-9 * scale_of(t))
+    priced = voc.price(tree, Query(h))
+    assert np.all(priced.voc[tree.var == 0] == 0)
+    noisy = dataclasses.replace(tree, noise_var=np.full(tree.n_leaves, 1e20 * tree.var.max()))
+    assert np.all(voc.price(noisy, Query(h)).voc <= 1e-9 * scale_of(tree))
 
 
 @property_test
-@given(bushes(), BATCHES)
+@given(TREES, BATCHES)
 def test_horizons_meet_at_both_ends(tree, k):
-    t = bush(*tree)
-    # What h rollouts resolve has the standard deviation v sqrt(h / n), at most 2e-8 here.
-    close(voc.price(t, Query(1e-18, k)).voc, voc.price(t, Query(0.0, k)).voc, 100 * scale_of(t))
-    close(voc.price(t, Query(1e13, k)).voc, voc.price(t, Query(math.inf, k)).voc, 1e3 * scale_of(t), rel=1e-4)
+    static, dynamic = voc.price(tree, Query(0.0, k)), voc.price(tree, Query(math.inf, k))
+    # What h rollouts resolve has the standard deviation v sqrt(h / n): 1e-11 and less here.
+    close(voc.price(tree, Query(1e-26, k)).voc, static.voc, scale_of(tree))
+    endless = voc.price(tree, Query(1e20, k))
+    close(endless.voc, dynamic.voc, scale_of(tree))
+    assert np.max(np.abs(endless.value - dynamic.value)) <= QUADRATURE * scale_of(tree)
 
 
 @property_test
-@given(bushes(), HORIZONS, st.integers(0, 60))
+@given(TREES, HORIZONS, st.integers(0, 60))
 def test_rate_is_the_best_batch_of_all(tree, h, remaining):
-    t = bush(*tree)
-    priced = voc.price(t, Query(h, None, remaining))
+    priced = voc.price(tree, Query(h, None, remaining))
     if remaining == 0:
         assert not priced.voc.any()
         assert not priced.batch.any()
         return
-    every = np.array([voc.price(t, Query(h, k)).voc / k for k in range(1, remaining + 1)])
-    np.testing.assert_allclose(priced.voc, every.max(axis=0), rtol=RELATIVE_TAIL, atol=1e-15 * scale_of(t))
-    at = every[np.maximum(priced.batch, 1) - 1, np.arange(t.n_leaves)]
-    np.testing.assert_allclose(at, priced.voc, rtol=RELATIVE_TAIL, atol=1e-15 * scale_of(t))
+    every = np.array([voc.price(tree, Query(h, k)).voc / k for k in range(1, remaining + 1)])
+    slack = 1e-15 * scale_of(tree)
+    np.testing.assert_allclose(priced.voc, every.max(axis=0), rtol=RELATIVE_TAIL, atol=slack)
+    at = every[np.maximum(priced.batch, 1) - 1, np.arange(tree.n_leaves)]
+    np.testing.assert_allclose(at, priced.voc, rtol=RELATIVE_TAIL, atol=slack)
 
 
 def test_several_peaks_at_a_finite_horizon_are_told_apart():
@@ -188,25 +190,6 @@ def test_single_leaves_are_static_whatever_the_horizon():
     """One leaf an action leaves nothing to choose later: dynamic and static agree in closed form."""
     t = bush([[0.0], [0.2], [-0.4]], [[1.0], [0.3], [2.0]])
     np.testing.assert_allclose(voc.price(t, Query()).voc, voc.price(t, Query(0.0)).voc, rtol=CLOSED_FORM)
-
-
-def test_many_at_once_are_the_same_bits():
-    rng = np.random.default_rng(4)
-    trees = [random_bush(rng, 3, 4) for _ in range(5)] + [from_record(chance_record())]
-    for query in (Query(0.0, 2), Query(0.0, None, 30)):
-        for one, many in zip(trees, voc.price_many(trees, query), strict=True):
-            alone = voc.price(one, query)
-            np.testing.assert_array_equal(many.voc, alone.voc)
-            np.testing.assert_array_equal(many.batch, alone.batch)
-
-
-def test_tolerance_and_rate_rules():
-    t = from_record(flat_record())
-    assert voc.price(t, Query(tolerance=1e-9)).voc.max() > 0
-    with pytest.raises(ToleranceError, match="exceeds the tolerance 1e-300 of scale"):
-        voc.price(t, Query(tolerance=1e-300))
-    with pytest.raises(InputError, match="remaining: must be given for a rate"):
-        Query(batch=None)
 
 
 def test_equal_values_and_drowning_noise_end_soon():

@@ -59,7 +59,7 @@ def generate(
     asked : what value; default the rate.
     workers : processes. dask : address of a Dask scheduler, whose workers label instead. The bytes depend
         on neither.
-    shard_trees : trees a shard, the step in which work is saved; default a twentieth of all, 50 to 1,000.
+    shard_trees : trees a shard, the step in which work is saved; default a hundredth of all, 50 to 1,000.
     close_calls : trees looked at for each one labelled; above 1, those where more is at stake are labelled
         more often, and weights correct for it.
     progress : show a bar with rate and time left on standard error.
@@ -247,7 +247,7 @@ def _whole_numbers(**values: int | None) -> None:
 
 
 def _shard_trees(total: int) -> int:
-    return min(max(total // 20, _LEAST_SHARD_TREES), _MOST_SHARD_TREES)
+    return min(max(total // 100, _LEAST_SHARD_TREES), _MOST_SHARD_TREES)
 
 
 def _described(plan: Plan, asked: Asked, size: int) -> dict[str, Any]:

@@ -65,10 +65,11 @@ def test_labels_are_the_engine_s_answers_to_the_family_s_trees(tmp_path):
     assert np.any(found["label"] > 0)
 
 
-@pytest.mark.parametrize(("trees", "sizes"), [(30, [30]), (120, [50, 50, 20]), (1300, [65] * 20)])
-def test_shards_are_a_twentieth_within_limits(tmp_path, trees, sizes):
-    manifest = generate(COLD, tmp_path, trees=trees, asked=Asked(horizon=0, batch=1))
-    assert [entry["trees"] for entry in manifest["shards"]] == sizes
+def test_shards_are_a_hundredth_within_limits(tmp_path):
+    manifest = generate(COLD, tmp_path, trees=120, asked=Asked(horizon=0, batch=1))
+    assert [entry["trees"] for entry in manifest["shards"]] == [50, 50, 20]
+    sizes = {1: 50, 5000: 50, 5300: 53, 99_999: 999, 10**7: 1000}
+    assert {n: module._shard_trees(n) for n in sizes} == sizes
 
 
 @pytest.mark.parametrize("asked", [Asked(horizon=0, batch=3), Asked(horizon=0, remaining=5)])

@@ -45,7 +45,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     )  # fmt: skip
     parser.add_argument(
         "--shard-trees", type=flags.whole(1), metavar="N",
-        help="trees a shard, the step in which work is saved (default: a twentieth of all, 50 to 1,000)",
+        help="trees a shard, the step in which work is saved (default: a hundredth of all, 50 to 1,000)",
     )  # fmt: skip
     place = parser.add_mutually_exclusive_group()
     place.add_argument(

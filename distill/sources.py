@@ -9,6 +9,7 @@ from __future__ import annotations
 import hashlib
 import json
 import os
+from array import array
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -73,7 +74,7 @@ class Traces:
     ) -> None:
         self.name = name
         self._reopen = reopen
-        digest, keys = hashlib.sha256(), []
+        digest, keys = hashlib.sha256(), array("Q")
         for tree in reopen() if first is None else first:
             digest.update(json.dumps(to_record(tree), separators=(",", ":")).encode() + b"\n")
             keys.append(tree_key(tree))

@@ -13,12 +13,15 @@ from hypothesis import strategies as st
 from ladder import CLOSED_FORM, STANDARD_ERRORS
 
 from distill import close_calls, metrics, shards, voc
-from distill.candidates import Candidates
+from distill import train as training
+from distill.candidates import Candidates, split_by_tree
 from distill.close_calls import STRATA, at_stake, choose, stratum
 from distill.family import draw, load_family
 from distill.generate import Asked, generate
+from distill.learners import LinearLearner
 from distill.query import Query, scale_of
 from distill.record import from_record
+from distill.runtime import Scorer
 
 FAMILIES = Path(__file__).parents[1] / "datasets" / "families"
 COLD = load_family(FAMILIES / "cold-store.toml")
@@ -163,6 +166,42 @@ def test_weights_reach_candidates_and_their_parts(tmp_path):
     weights = np.array([weight_of[number] for number, _ in trees])
     low = stratum(at_stake([tree for _, tree in trees])) <= 1
     assert weights[low].min() > weights[~low].max()
+
+
+def test_training_and_its_figures_use_the_weights(tmp_path, monkeypatch):
+    seen = []
+
+    class Spy(LinearLearner):
+        def fit(self, x, y, sample_weight=None, **more):
+            seen.append(sample_weight)
+            return super().fit(x, y, sample_weight=sample_weight, **more)
+
+    spy = training.Recipe("linear", lambda seed: Spy(target="log_ratio", random_state=seed))
+    monkeypatch.setitem(training.RECIPES, "linear", spy)
+    generate(COLD, tmp_path / "d", trees=250, seed=1, close_calls=2)
+    front = training.train(tmp_path / "d", tmp_path / "out", recipes=["linear"], n_boot=20)
+    split = split_by_tree(Candidates.read(tmp_path / "d")[0], 0)
+    given = training.row_weights(split.fit.groups, split.fit.label) * split.fit.weight
+    used = seen[0] > 0
+    assert used.mean() > 0.9
+    assert np.array_equal(seen[0][used], given[used])
+
+    held_out = split.held_out
+    scorer = Scorer.load(tmp_path / "out" / "linear.onnx")
+    score = scorer.score(**held_out.columns, tree=held_out.tree).voc
+    shares = {}
+    for name, weight in (("with", held_out.tree_weights), ("without", None)):
+        found = metrics.measure(held_out.tree, held_out.label, score, weight=weight, n_boot=1)
+        by_chance = metrics.random_forgone(held_out.tree, held_out.label, weight=weight)[0]
+        shares[name] = (found.forgone.value, found.top1.value, by_chance)
+    kept = front["scorers"][0]["held_out"]
+    told = (
+        kept["forgone_percent"]["value"],
+        kept["top1_percent"]["value"],
+        front["beside"]["random pick"]["forgone_percent"]["value"],
+    )
+    assert np.allclose(told, shares["with"], rtol=CLOSED_FORM)
+    assert not np.any(np.isclose(told, shares["without"], rtol=1e-6))
 
 
 def test_counts_go_by_stratum():

@@ -30,7 +30,13 @@ _Z_LIMIT: Final = 40.0  # exp(-z^2 / 2) is 0 in double precision
 
 
 def static_rates(
-    mean: Floats, var: Floats, noise_var: Floats, gain: Floats, offset: Floats, remaining: float
+    mean: Floats,
+    var: Floats,
+    noise_var: Floats,
+    gain: Floats,
+    offset: Floats,
+    remaining: float,
+    batch: int | None = None,
 ) -> tuple[Floats, NDArray[np.int64]]:
     r"""The static rate of every leaf of a decision-only tree, u a rollout, and its batch; shape (n,).
 
@@ -39,15 +45,18 @@ def static_rates(
     with m = gain mean + offset, v = gain^2 var, n = gain^2 noise_var and c_i the largest m of the other
     leaves (Frazier and Powell 2010, section 4). VOC(k) / k has a single peak here. The batch is a
     neighbour of the fitted peak; the rate is within 0.5 % of the best batch's. No leaf alone, no leaf
-    without variance and nothing with remaining = 0 is worth anything.
+    without variance and nothing with remaining = 0 is worth anything. With `batch`, the value of that
+    many rollouts together instead, u, whatever remains.
 
     >>> rate, batch = static_rates(*np.array([[0, 0.1], [1, 1], [4, 4], [1, 1], [0, 0.0]]), 100)
     >>> rate.round(4).tolist(), batch.tolist()
     ([0.1329, 0.1329], [1, 1])
     """
     n = len(mean)
-    if n < 2 or remaining < 1:
+    if batch is None and remaining < 1:
         return np.zeros(n), np.zeros(n, dtype=np.int64)
+    if n < 2:
+        return np.zeros(n), np.full(n, batch or 0, dtype=np.int64)
     with np.errstate(all="ignore"):
         m = gain * mean + offset
         top = int(np.argmax(m))
@@ -56,6 +65,10 @@ def static_rates(
         gap = np.abs(m - rival)
         sd = np.abs(gain) * np.sqrt(var)
         noise = np.clip(noise_var / np.maximum(var, _TINY), 1 / 1e18, 1e18)
+        if batch is not None:
+            s = sd * np.sqrt(batch / (batch + noise))
+            value = s * _loss(np.minimum(gap / np.maximum(s, _TINY), _Z_LIMIT))
+            return value, np.full(n, batch, dtype=np.int64)
         u2 = np.square(gap / np.maximum(sd, _TINY))
         peak = np.clip(u2 * (PEAK[0] + PEAK[1] / (u2 + PEAK[2])) * noise, 1.0, np.floor(remaining))
         low = np.floor(peak)
@@ -69,7 +82,7 @@ def static_rates(
     return np.where(upper, options[1], options[0]), batch
 
 
-def highest_rates(var: Floats, noise_var: Floats, gain: Floats) -> Floats:
+def highest_rates(var: Floats, noise_var: Floats, gain: Floats, batch: int = 1) -> Floats:
     r"""A bound that no rate of a leaf exceeds, whatever the rest of the tree and the horizon; shape (n,).
 
     .. math:: 2 f(0) s_1 = \sqrt{2 / \pi} \, v / \sqrt{v + n}
@@ -77,15 +90,15 @@ def highest_rates(var: Floats, noise_var: Floats, gain: Floats) -> Floats:
     with v and n the leaf's variances at the root. Why: k rollouts move V_h of the leaf's action by a
     function of the posterior mean that rises by at most 1 per unit, so the gain over any rival is at most
     s_k f(0); where h is finite, the action's own V_h rises by at most the same again (it is 0 for h = 0
-    and infinity). And s_k / k = v / sqrt(k^2 v + k n) is largest at k = 1. The bound of a batch of k
-    rollouts is k times this.
+    and infinity). And s_k / k = v / sqrt(k^2 v + k n) is largest at k = 1. With `batch`, the bound of the
+    value of that many rollouts together, with s_k in place of s_1.
 
     >>> highest_rates(np.array([1.0, 0.0]), np.array([3.0, 3.0]), np.ones(2)).round(4).tolist()
     [0.3989, 0.0]
     """
     with np.errstate(all="ignore"):
         sd = np.abs(gain) * np.sqrt(var)
-        resolved = np.sqrt(1 / (1 + noise_var / np.maximum(var, _TINY)))
+        resolved = np.sqrt(batch / (batch + noise_var / np.maximum(var, _TINY)))
         return np.asarray(np.sqrt(2 / np.pi) * sd * resolved)
 
 

@@ -25,7 +25,7 @@ import numpy as np
 import onnxruntime as ort
 from numpy.typing import NDArray
 
-from distill import scorer_file
+from distill import schema, scorer_file
 from distill.closed_form import highest_rates, static_rates
 from distill.errors import DistillError, InputError, ScorerFileError
 from distill.leaf_buffers import BELIEFS, FLOATS, INPUTS, MAX_LEAVES, LeafBuffers, number_array
@@ -97,7 +97,15 @@ class Scorer:
     refused: str | None = None
     counters: Counters = field(default_factory=Counters)
     _session: Any = field(default=None, repr=False)
+    _batch: int | None = field(default=None, init=False, repr=False)
     _local: _Local = field(default_factory=_Local, repr=False)
+
+    def __post_init__(self) -> None:
+        about = self.facts.get("about")
+        value = about.get("value") if isinstance(about, dict) else None
+        batch = value.get("batch") if isinstance(value, dict) else None
+        if type(batch) is int and 1 <= batch <= schema.MAX_ROLLOUTS:
+            self._batch = batch
 
     @classmethod
     def load(
@@ -263,7 +271,9 @@ class Scorer:
         voc, high, batch = np.zeros(n), np.zeros(n), np.zeros(n, dtype=np.int64)
         if usable.any():
             rows = {name: buffers.columns[name][usable] for name in BELIEFS}
-            voc[usable], batch[usable] = static_rates(**rows, remaining=float(buffers.remaining))
+            voc[usable], batch[usable] = static_rates(
+                **rows, remaining=float(buffers.remaining), batch=self._batch
+            )
             high[usable] = self._bounds(buffers, usable)
         voc[in_range] = buffers.out["voc"][in_range]
         batch[in_range] = buffers.out["batch"][in_range]
@@ -273,11 +283,12 @@ class Scorer:
         pick = int(np.argmax(net))
         return Scores(voc, batch, high, in_range, pick, bool(net[pick] > 0))
 
-    @staticmethod
-    def _bounds(buffers: LeafBuffers, rows: Any) -> Floats:
-        """The bound that no rate exceeds; 0 where nothing is left to roll out."""
-        some = float(buffers.remaining >= 1)
-        return some * highest_rates(*(buffers.columns[name][rows] for name in ("var", "noise_var", "gain")))
+    def _bounds(self, buffers: LeafBuffers, rows: Any) -> Floats:
+        """The bound that no value exceeds; 0 for a rate where nothing is left to roll out."""
+        if self._batch is None and buffers.remaining < 1:
+            return np.zeros(len(buffers.action[rows]))
+        var, noise_var, gain = (buffers.columns[name][rows] for name in ("var", "noise_var", "gain"))
+        return highest_rates(var, noise_var, gain, self._batch or 1)
 
     def _score_many(
         self, columns: Sequence[Any], action: Any, remaining: Any, tree: Any, deadline: float | None

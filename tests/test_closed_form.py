@@ -76,3 +76,17 @@ def test_no_rate_of_any_horizon_exceeds_the_highest(seed, horizon):
         assert np.all(priced.voc - priced.error <= highest)
         shares.append(priced.voc[0] / highest[0])
     assert shares[-1] == pytest.approx(0.5, rel=RELATIVE_TAIL)
+
+
+@pytest.mark.parametrize("batch", [1, 7, 1000])
+def test_a_fixed_batch_has_the_exact_static_value_and_its_own_bound(batch):
+    t = table(np.random.default_rng(batch), 30, 4)
+    exact = voc.price(tree_of(t), Query(horizon=0, batch=batch))
+    value, batches = static_rates(**columns(t), remaining=0, batch=batch)
+    seen = exact.voc > 1e-30
+    np.testing.assert_allclose(value[seen], exact.voc[seen], rtol=LOSS_FIT)
+    assert np.all(batches == batch)
+    dynamic = voc.price(tree_of(t), Query(horizon=np.inf, batch=batch)).voc
+    assert np.all(dynamic <= highest_rates(t["var"], t["noise_var"], t["gain"], batch))
+    alone, batches = static_rates(**{k: x[:1] for k, x in columns(t).items()}, remaining=0, batch=batch)
+    assert (alone[0], batches[0]) == (0, batch)

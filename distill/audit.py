@@ -26,7 +26,7 @@ from distill.candidates import LEAF_COLUMNS, Candidates
 from distill.errors import DistillError, InputError, RefusedError
 from distill.estimates import two_sample
 from distill.family import Family, draw, load_family
-from distill.features import FeatureGraph
+from distill.feature_graph import FeatureGraph
 from distill.files import sha256_of, write_atomic
 from distill.labelling import Asked
 from distill.metrics import picks

@@ -30,6 +30,7 @@ __all__ = [
 LEVEL: Final = 0.95  # coverage that every interval states
 _MOST_CHOICES: Final = 64
 _DRAWS: Final = 1000
+_CHUNK: Final = 4_000_000  # numbers held at once
 _LEAST_SPREAD: Final = 0.02  # of a logarithm: less is not worth a distribution
 
 
@@ -70,7 +71,7 @@ def bootstrap(
     rng = np.random.default_rng(seed)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         whole = statistic(dict(zip(names, table.sum(axis=0), strict=True)))
-        sums = np.stack([_resampled(table, rng) for _ in range(draws)])
+        sums = _resampled(table, draws, rng)
         drawn = statistic({name: sums[:, j] for j, name in enumerate(names)})
     tail = float(stats.norm.cdf(math.sqrt(n / max(n - 1, 1)) * stats.t.ppf((1 - level) / 2, max(n - 1, 1))))
     out = {}
@@ -97,10 +98,16 @@ def proportion(share: float, groups: int, level: float = LEVEL) -> Estimated:
     return Estimated(share, float(low), float(high))
 
 
-def _resampled(table: Floats, rng: np.random.Generator) -> Floats:
-    counts = np.bincount(rng.integers(0, len(table), len(table)), minlength=len(table))
-    # Not BLAS: the same bits with any number of threads.
-    return np.asarray(np.einsum("n,nm->m", counts.astype(float), table))
+def _resampled(table: Floats, draws: int, rng: np.random.Generator) -> Floats:
+    """Column sums of `draws` samples of the rows with replacement, (draws, columns)."""
+    n = len(table)
+    out = np.empty((draws, table.shape[1]))
+    step = max(1, _CHUNK // n)
+    for start in range(0, draws, step):
+        counts = rng.multinomial(n, np.full(n, 1 / n), min(step, draws - start)).astype(float)
+        # Not BLAS: the same bits with any number of threads.
+        out[start : start + step] = np.einsum("bn,nm->bm", counts, table)
+    return out
 
 
 def by_group(rows: Sequence[Mapping[str, float]], group: Sequence[int]) -> dict[str, Floats]:

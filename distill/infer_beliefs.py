@@ -29,7 +29,7 @@ from distill.errors import InputError
 from distill.estimates import Estimated, bootstrap, by_group, field_text, number_text, same_or_spread
 from distill.tree import BeliefTree, Floats, Ints
 
-__all__ = ["NOTHING", "Beliefs", "Prior", "gaussian_beliefs", "normal_text", "prior_of"]
+__all__ = ["NOTHING", "Beliefs", "Prior", "gaussian_beliefs", "normal_text", "prior_of", "uniform_moment"]
 
 _LEAST_ROOM: Final = 1e-6  # 1 - v' count / n: below it, rounding in the record hides the prior variance
 NOTHING: Final = 1e-10  # variance of a logarithm that rounding in the records can make of none
@@ -234,7 +234,7 @@ def _spreads(s: Mapping[str, Any], follow: float, centre: float) -> dict[str, An
     leaf = logs["prior sd, spread of log between leaves"] ** 2
     level = logs["prior sd, spread of log between trees"] ** 2
     rest = unit * (1 - follow) ** 2 + follow**2 * (level + leaf * s["1/n"] / s["t"])
-    square, first = (_uniform_moment(k, np.sqrt(rest)) * unit_off**k for k in (2, 1))
+    square, first = (uniform_moment(k, np.sqrt(rest)) * unit_off**k for k in (2, 1))
     same, other = s["same"] / s["n same"], s["other"] / s["n other"]
     # With one leaf an action, or one action a tree, the two spreads cannot be told apart.
     lone, single = s["n same"] == 0, s["n other"] == 0
@@ -250,7 +250,7 @@ def _spreads(s: Mapping[str, Any], follow: float, centre: float) -> dict[str, An
     }
 
 
-def _uniform_moment(power: int, log_sd: Any) -> Any:
+def uniform_moment(power: int, log_sd: Any) -> Any:
     """E[exp(power x)] for x uniform around 0 with this standard deviation."""
     a = np.maximum(power * _SQRT3 * log_sd, 1e-9)
     return np.sinh(a) / a

@@ -15,70 +15,42 @@ from typing import Any
 import numpy as np
 
 from distill.errors import InputError
-from distill.estimates import bootstrap, by_group, field_text, number_text, same_or_spread
-from distill.infer_beliefs import NOTHING, Beliefs, normal_text
-from distill.tree import BeliefTree
+from distill.estimates import Estimated, bootstrap, by_group, field_text, number_text, same_or_spread
+from distill.infer_beliefs import NOTHING, Beliefs, normal_text, uniform_moment
+from distill.tree import BeliefTree, Floats
 
 __all__ = ["win_loss_beliefs"]
 
 _SQRT3 = math.sqrt(3.0)
+_UNIT = "unit, spread of log between trees"
 
 
 def win_loss_beliefs(trees: Sequence[BeliefTree], group: Sequence[int], seed: int = 0) -> Beliefs:
     """Unit, strength, win rate, low, span, rewards and costs; `group` numbers the decisions."""
-    rows = []
-    strengths, lows, spans = [], [], []
-    for tree in trees:
-        assert tree.alpha is not None
-        assert tree.beta is not None
-        assert tree.low is not None
-        assert tree.high is not None
-        total = tree.alpha + tree.beta
-        s = total - (0 if tree.count is None else tree.count)
-        good = s > 1e-9 * total
-        if not np.all(good):
-            raise InputError(
-                "traces",
-                "must not hold a win/loss leaf whose alpha + beta is at most its count of rollouts",
-                tree.id,
-            )
-        rate = tree.alpha / total
-        square = rate**2 + rate * (1 - rate) / (total + 1)
-        span = tree.high - tree.low
-        level = float(np.mean(np.log(span)))
-        strengths.append(s)
-        lows.append(tree.low / math.exp(level))
-        spans.append(np.log(span) - level)
-        assert tree.cost is not None
-        cost = math.log(float(np.mean(tree.cost))) if np.all(tree.cost > 0) else 0.0
-        reward = tree.reward[1:] / math.exp(level)
-        rows.append(
-            {
-                "t": 1.0, "n": float(tree.n_leaves), "L": level, "LL": level**2,
-                "free": tree.n_leaves - 1.0, "L within": float(np.sum(spans[-1] ** 2)),
-                "1/n": 1 / tree.n_leaves, "r1": float(rate.sum()),
-                "r2": float(np.sum((square * (s + 1) - rate) / s)),
-                "s": float(np.sum(np.log(s))), "ss": float(np.sum(np.log(s) ** 2)),
-                "low": float(lows[-1].sum()), "C": cost, "CC": cost**2, "LC": level * cost,
-                "r": float(reward.sum()), "rr": float(reward @ reward), "n r": float(len(reward)),
-            }
-        )  # fmt: skip
-    sums = by_group(rows, group)
-    found = bootstrap(sums, _win_loss_spreads, seed=seed)
+    rows = [_row(tree) for tree in trees]
+    spreads = _spreads(by_group(rows, [0] * len(rows)))
+    centre = math.log(float(spreads["span, typical"][0]))
+    unit, leaf = (float(spreads[key][0]) ** 2 for key in (_UNIT, "span, spread of log between leaves"))
+    strengths = []
+    for row, tree in zip(rows, trees, strict=True):
+        # The level of a tree is its unit's, and that of its few spans: as much of it as is likely the unit's.
+        noise = leaf * row["1/n"]
+        share = unit / (unit + noise) if unit + noise > 0 else 0.0
+        norm = math.exp(centre + share * (row["L"] - centre))
+        rest = math.sqrt(unit * (1 - share))  # sd of log of unit / norm
+        row |= _values(
+            tree, norm * uniform_moment(1, rest), uniform_moment(2, rest) / uniform_moment(1, rest) ** 2
+        )
+        strengths.append(_strength(tree))
+    found = bootstrap(by_group(rows, group), lambda s: {**_spreads(s), **_moments(s)}, seed=seed)
     if not any(np.any(t.cost) for t in trees):  # type: ignore[arg-type]
         for name in [name for name in found if name.startswith("cost")]:
             del found[name]
-    mean, sd = found["win rate"].value, found["win rate, sd"]
-    spread = _SQRT3 * sd.value
-    rate_text = number_text(mean)
-    if sd.low > 0:
-        ends = np.clip([mean - spread, mean + spread], 1e-6, 1 - 1e-6)
-        rate_text = f"[{number_text(ends[0])}, {number_text(ends[1])}]"
     prior = {
-        "scale": same_or_spread(found["span, typical"].value, found["unit, spread of log between trees"]),
+        "scale": same_or_spread(found["span, typical"].value, found[_UNIT]),
         "strength": field_text(np.concatenate(strengths).round(6)),
-        "win_rate": rate_text,
-        "low": field_text(np.concatenate(lows).round(9)),
+        "win_rate": _uniform_text(found["win rate"].value, found["win rate, sd"], (1e-6, 1 - 1e-6)),
+        "low": _uniform_text(found["value of a loss"].value, found["value of a loss, sd"]),
         "span": same_or_spread(1.0, found["span, spread of log between leaves"]),
     }
     toml = {"prior": prior, "edge": {"reward": normal_text(found["reward"], found["reward, sd"])}}
@@ -89,28 +61,86 @@ def win_loss_beliefs(trees: Sequence[BeliefTree], group: Sequence[int], seed: in
     return Beliefs(found, toml)
 
 
-def _win_loss_spreads(s: Mapping[str, Any]) -> dict[str, Any]:
+def _strength(tree: BeliefTree) -> Floats:
+    """alpha + beta before the first rollout."""
+    assert tree.alpha is not None
+    assert tree.beta is not None
+    total = tree.alpha + tree.beta
+    out: Floats = total - (0 if tree.count is None else tree.count)
+    if not np.all(out > 1e-9 * total):
+        rule = "must not hold a win/loss leaf whose alpha + beta is at most its count of rollouts"
+        raise InputError("traces", rule, tree.id)
+    return out
+
+
+def _row(tree: BeliefTree) -> dict[str, float]:
+    """What one tree adds to the sums: levels of logs, and win rates."""
+    s = _strength(tree)
+    assert tree.alpha is not None
+    assert tree.beta is not None
+    assert tree.low is not None
+    assert tree.high is not None
+    assert tree.cost is not None
+    total, logs = tree.alpha + tree.beta, np.log(tree.high - tree.low)
+    rate = tree.alpha / total
+    square = rate**2 + rate * (1 - rate) / (total + 1)
+    level = float(np.mean(logs))
+    cost = math.log(float(np.mean(tree.cost))) if np.all(tree.cost > 0) else 0.0
+    return {
+        "t": 1.0, "n": float(tree.n_leaves), "1/n": 1 / tree.n_leaves, "free": tree.n_leaves - 1.0,
+        "L": level, "LL": level**2, "L within": float(np.sum((logs - level) ** 2)),
+        "r1": float(rate.sum()), "r2": float(np.sum((square * (s + 1) - rate) / s)),
+        "s": float(np.sum(np.log(s))), "ss": float(np.sum(np.log(s) ** 2)),
+        "C": cost, "CC": cost**2,
+    }  # fmt: skip
+
+
+def _values(tree: BeliefTree, norm: float, square: float) -> dict[str, float]:
+    """Sums of rewards and of the values of a loss in units of `norm`; squares are too large by `square`."""
+    assert tree.low is not None
+    low, reward = tree.low / norm, tree.reward[1:] / norm
+    return {
+        "low": float(low.sum()), "low2": float(low @ low) / square,
+        "r": float(reward.sum()), "rr": float(reward @ reward) / square, "n r": float(len(reward)),
+    }  # fmt: skip
+
+
+def _spreads(s: Mapping[str, Any]) -> dict[str, Any]:
     t, n = s["t"], s["n"]
     within = np.where(s["free"] > 0, s["L within"] / np.maximum(s["free"], 1), 0.0)
     unit = np.maximum(s["LL"] / t - (s["L"] / t) ** 2 - within * s["1/n"] / t, 0)
     cost = s["CC"] / t - (s["C"] / t) ** 2
-    rate, reward = s["r1"] / n, s["r"] / s["n r"]
-    strength = s["s"] / n
-
-    def root(v: Any) -> Any:
-        return np.sqrt(np.where(v < NOTHING, 0.0, v))
-
+    rate, strength = s["r1"] / n, s["s"] / n
     return {
         "span, typical": np.exp(s["L"] / t),
-        "unit, spread of log between trees": root(unit),
-        "span, spread of log between leaves": root(within),
+        _UNIT: _root(unit),
+        "span, spread of log between leaves": _root(within),
         "strength, typical": np.exp(strength),
-        "strength, spread of log": root(s["ss"] / n - strength**2),
+        "strength, spread of log": _root(s["ss"] / n - strength**2),
         "win rate": rate,
-        "win rate, sd": root(s["r2"] / n - rate**2),
-        "value of a loss": s["low"] / n,
-        "reward": reward,
-        "reward, sd": root(s["rr"] / s["n r"] - reward**2),
+        "win rate, sd": _root(s["r2"] / n - rate**2),
         "cost, typical": np.exp((s["C"] - s["L"]) / t),
-        "cost, spread of log between trees": root(cost - unit),
+        "cost, spread of log between trees": _root(cost - unit),
     }
+
+
+def _moments(s: Mapping[str, Any]) -> dict[str, Any]:
+    low, reward = s["low"] / s["n"], s["r"] / s["n r"]
+    return {
+        "value of a loss": low,
+        "value of a loss, sd": _root(s["low2"] / s["n"] - low**2),
+        "reward": reward,
+        "reward, sd": _root(s["rr"] / s["n r"] - reward**2),
+    }
+
+
+def _root(v: Any) -> Any:
+    return np.sqrt(np.where(v < NOTHING, 0.0, v))
+
+
+def _uniform_text(mean: float, sd: Estimated, limits: tuple[float, float] = (-math.inf, math.inf)) -> str:
+    """A uniform field of this mean and spread, within limits; a number where nothing is spread."""
+    if not sd.low > 0:
+        return number_text(mean)
+    ends = np.clip([mean - _SQRT3 * sd.value, mean + _SQRT3 * sd.value], *limits)
+    return f"[{number_text(ends[0])}, {number_text(ends[1])}]"

@@ -142,6 +142,8 @@ def truth(family: Family, n: int = 400_000) -> dict[str, float]:
             "strength, spread of log": strength.std(),
             "win rate": rate.mean(),
             "win rate, sd": rate.std(),
+            "value of a loss": drawn("prior.low").mean() / unit,
+            "value of a loss, sd": drawn("prior.low").std() / unit,
         }
     else:
         level, leaf = np.log(drawn("prior.tree_sd")), np.log(drawn("prior.sd"))

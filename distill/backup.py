@@ -232,6 +232,9 @@ class Backup:
     def crossings(self) -> Crossings:
         """Where each leaf changes which action is best, by itself: one crossing a leaf."""
         move, slope, now, bend = (x[self.leaf_nodes] for x in self._down())
+        most = np.ones(len(self.mean))
+        for c in self._levels:
+            most[c] = most[self._above[c]] * self._gain[c]
         sd = self._own_sd
         if len(self._actions) == 1:
             slope = np.zeros(len(sd))
@@ -245,6 +248,7 @@ class Backup:
             now=np.where(reached, np.minimum(now / safe, _FAR_MOVE), 0.0),
             other_crossing=none,
             other_slope=none,
+            spread=most[self.leaf_nodes] * sd,
             noise_ratio=self._noise_ratio.copy(),
         )
 

@@ -197,7 +197,19 @@ class CorrelatedBackup:
             np.where(falls, a, b) for a, b in zip(sides[0][:2], sides[1][:2], strict=True)
         )
         other_move = np.where(other_slope > 0, other_move, 0.0)
-        return Crossings(move, slope, bend, now, other_move, other_slope, self._leaf.noise_ratio)
+        spread = _largest_change(self._actions, int(np.argmax(self.value)))
+        return Crossings(move, slope, bend, now, other_move, other_slope, spread, self._leaf.noise_ratio)
+
+
+def _largest_change(actions: list[_Value], top: int) -> Floats:
+    """The most that a move of 1 can change the difference of the best action and another; (n_leaves,)."""
+    best = actions[top]
+    others = [x for i, x in enumerate(actions) if i != top]
+    if not others:
+        return np.zeros_like(best.low)
+    rise = np.max([x.high for x in others], axis=0) - best.low
+    fall = best.high - np.min([x.low for x in others], axis=0)
+    return np.asarray(np.maximum(rise, 0.0) + np.maximum(fall, 0.0))
 
 
 @dataclass(frozen=True)

@@ -29,7 +29,7 @@ from distill import scorer_file
 from distill.calibration import UpperBound
 from distill.converters import convert, folded, single_tree
 from distill.errors import ExportError
-from distill.features import INPUTS, FeatureGraph, FeatureMatrix
+from distill.feature_graph import FeatureGraph, FeatureMatrix
 from distill.files import write_atomic
 from distill.onnx_nodes import IR_VERSION, ML_OPSET, OPSET, Nodes, typed
 from distill.tree import Floats
@@ -90,7 +90,7 @@ def export_scorer(
     model = _assemble(feature_graph.model, converted, transform, limits, upper)
     session = _session(model)
     matrix = feature_graph.matrix(self_test_columns)
-    answers, cases = _answers(session, self_test_columns)
+    answers, cases = _answers(session, feature_graph.table(self_test_columns))
     _check_file(estimator, transform, limits, upper, matrix, answers)
     _set_metadata(model, feature_graph, transform, limits, upper, metadata, cases)
     onnx.checker.check_model(model, full_check=True)
@@ -124,8 +124,7 @@ def _assemble(
     clipped = g("Max", g("Min", "features", g.single(limits[:, 1])), g.single(limits[:, 0]))
     outside = g("ReduceL1", g("Sub", "features", clipped), g.whole(1), keepdims=0)
     inside = g("LessOrEqual", outside, g.single(0.0))
-    valid = g("And", g("GreaterOrEqual", "action", g.whole(0)), g("Greater", "noise_ratio", g.double(0.0)))
-    g("And", inside, valid, out="in_range")
+    g("And", inside, "valid", out="in_range")
     x = g("Cast", clipped, to=TensorProto.DOUBLE)
 
     renamed, t = _renamed(converted, x if boosting else clipped)
@@ -252,10 +251,9 @@ def _check_file(
 
 
 def _answers(
-    session: Any, columns: Mapping[str, Any]
+    session: Any, table: list[dict[str, NDArray[Any]]]
 ) -> tuple[dict[str, NDArray[Any]], list[dict[str, Any]]]:
     """The file's own answers on the self-test rows, whole and tree by tree."""
-    table = FeatureGraph.table(columns)
     names = [o.name for o in session.get_outputs()]
     whole: dict[str, list[NDArray[Any]]] = {name: [] for name in names}
     cases = []
@@ -265,7 +263,7 @@ def _answers(
             whole[name].append(np.atleast_1d(out[name]))
         cases.append(
             {
-                "inputs": {name: feed[name].tolist() for name in INPUTS},
+                "inputs": {name: x.tolist() for name, x in feed.items()},
                 "outputs": {name: out[name].tolist() for name in names},
             }
         )

@@ -42,26 +42,18 @@ Differences are taken in double precision; only unit-free numbers are rounded to
 
 from __future__ import annotations
 
-import json
 import math
-from collections.abc import Mapping
-from itertools import pairwise
-from typing import Any, Final, NamedTuple
+from typing import Final
 
 import numpy as np
 import onnx
-import onnxruntime as ort
-from numpy.typing import NDArray
-from onnx import TensorProto, helper
+from onnx import TensorProto
 
-from distill.closed_form import PEAK
-from distill.errors import InputError
-from distill.onnx_nodes import IR_VERSION, OPSET, Nodes, typed
-from distill.tree import Floats
+from distill.feature_nodes import LARGE, TINY, Start, midpoints, moments, threshold_shift
+from distill.onnx_nodes import Nodes
+from distill.scorer_inputs import LEAF_TABLE
 
-__all__ = ["FEATURE_NAMES", "INPUTS", "FeatureGraph", "FeatureMatrix", "build_graph"]
-
-INPUTS: Final = ("mean", "var", "noise_var", "gain", "offset", "action", "cost", "remaining")
+__all__ = ["FEATURE_NAMES", "build_graph"]
 
 FEATURE_NAMES: Final = (
     "threshold",  # t0 / s_k, cut at +-40: how far the leaf must rise to change the choice, or fall
@@ -78,32 +70,6 @@ _FINITE_NAMES: Final = (
 _BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s
 _PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
 _FAR: Final = 1e9  # standard deviations; Phi is 1 there
-_LARGE: Final = 1e300
-_TINY: Final = 1e-300
-_THRESHOLD_LIMIT: Final = 40.0  # exp(-z^2 / 2) is 0 in double precision
-_PEAK_FLOOR: Final = 1e-30  # keeps 0 x infinity away where a leaf has no variance
-_SLOPE_FLOOR: Final = 1e-300  # where the siblings alone beat the rival: below the least value of any tree
-_SPREAD_FLOOR: Final = 1e-6  # of the table's width squared: above the rounding of float32 sums
-
-# q(y) = y - f^{-1}(y) as a v / sqrt(v + c), v = -log(1 - exp(-b y)); fitted by least squares to the exact
-# inverse, absolute error at most 0.006 for f^{-1}(y) from -8 up. (a, b, c).
-_Q_FIT: Final = (np.sqrt(1.94647), 1.96789, 4.0114)
-# f(-z) exp(z^2 / 2) as 1 / (a + z (b + c z)); within 5 % for every z from 0 to 30, exact at 0.
-_LOSS_FIT: Final = tuple(np.sqrt(2 * np.pi) * np.array([1.0, 0.93642524, 0.92409791]))
-
-
-class FeatureMatrix(NamedTuple):
-    """What the graph says of each row.
-
-    x : (n, d) float32, unit-free, columns as `FeatureGraph.names`. unit : (n,), u a rollout, the leaf's
-    own s_k / k at the start value's best batch k, a real number; s_k for a fixed batch. first_order :
-    (n,), same unit, the start value. batch : (n,), k rounded.
-    """
-
-    x: NDArray[np.float32]
-    unit: Floats
-    first_order: Floats
-    batch: NDArray[np.int64]
 
 
 def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | None = None) -> onnx.ModelProto:
@@ -117,38 +83,35 @@ def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | Non
     g = Nodes("f")
     # Leaves as the root sees them. From the table on, values are rows, shape (1, n).
     m = g("Add", g("Mul", "gain", "mean"), "offset")
-    v = g("Max", g("Mul", "var", g("Mul", "gain", "gain")), g.double(_TINY))
+    v = g("Max", g("Mul", "var", g("Mul", "gain", "gain")), g.double(TINY))
     s = g("Sqrt", v)
     noise = g("Div", "noise_var", "var", out="noise_ratio")
+    action = g("GreaterOrEqual", "action", g.whole(0))
+    g("And", action, g("Greater", "noise_ratio", g.double(0.0)), out="valid")
     if horizon == 0:
         return _static(g, m, s, noise, batch)
     known = v if math.isinf(horizon) else _learned(g, v, noise, horizon)
-    value, others, spread2 = _moments(g, *_table(g, m, s if known == v else g("Sqrt", known), points), points)
+    value, others, spread2 = moments(g, *_table(g, m, s if known == v else g("Sqrt", known), points), points)
 
     # The best other action.
     best = g("Equal", "action", g("Gather", "action", g("ArgMax", value, axis=1, keepdims=0)))
-    second = g("ReduceMax", g("Where", best, g.double(-_LARGE), value))
+    second = g("ReduceMax", g("Where", best, g.double(-LARGE), value))
     rival = g("Where", best, second, g("ReduceMax", value))
 
     # Threshold t0.
     theta = g("Sqrt", g("Add", spread2, known))
-    a, b, c = _Q_FIT
     y = g("Div", g("Sub", rival, others), theta)
-    slope = g("Sub", g.double(1.0), g("Exp", g("Mul", y, g.double(-b))))
-    slope = g("Max", slope, g.double(_SLOPE_FLOOR))
-    log_slope = g("Log", slope)
-    help_ = g("Div", log_slope, g("Sqrt", g("Sub", g.double(c), log_slope)))
-    t0 = g("Mul", g("Mul", help_, theta), g.double(a))
-    t0 = g("Add", g("Sub", rival, m), t0, out="t0")
+    shift, slope, help_ = threshold_shift(g, y, theta)
+    t0 = g("Add", g("Sub", rival, m), shift, out="t0")
 
     if math.isinf(horizon):
-        start = _Start(g, t0, s, noise, batch)
+        start = Start(g, t0, s, noise, batch)
         value = start.value(slope)
-        return start.model(value, (start.z, help_, g("Div", start.s_k, theta)), FEATURE_NAMES)
+        return start.model(value, (start.z, help_, g("Div", start.s_k, theta)), FEATURE_NAMES, LEAF_TABLE)
 
     alone = g("LessOrEqual", y, g.double(0.0))
     above = g("Sub", m, others)
-    start = _Start(g, g("Where", alone, g("Sub", g.double(0.0), above), t0), s, noise, batch)
+    start = Start(g, g("Where", alone, g("Sub", g.double(0.0), above), t0), s, noise, batch)
     later = _learned(g, v, noise, horizon, start.k)
     theta_k = g("Sqrt", g("Add", spread2, later))
     above = start.cut(g("Div", above, theta_k))
@@ -159,7 +122,9 @@ def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | Non
     if batch is None:
         own = g("Div", own, g("Max", start.k, g.double(1.0)))
     total = g("Add", start.value(slope), g("Max", own, g.double(0.0)))
-    return start.model(total, (start.z, help_, g("Div", start.s_k, theta), above, lead), _FINITE_NAMES)
+    return start.model(
+        total, (start.z, help_, g("Div", start.s_k, theta), above, lead), _FINITE_NAMES, LEAF_TABLE
+    )
 
 
 def _static(g: Nodes, m: str, s: str, noise: str, batch: int | None) -> onnx.ModelProto:
@@ -167,13 +132,13 @@ def _static(g: Nodes, m: str, s: str, noise: str, batch: int | None) -> onnx.Mod
     best = g("ReduceMax", m, keepdims=1)
     column = g("Unsqueeze", m, g.whole(1))
     first = g("Unsqueeze", g("ArgMax", m, axis=0, keepdims=1), g.whole(1))
-    masked = g("ScatterND", column, first, g.double([[-_LARGE]]), reduction="add")
+    masked = g("ScatterND", column, first, g.double([[-LARGE]]), reduction="add")
     second = g("ReduceMax", masked)
-    is_best = g("LessOrEqual", masked, g.double(-_LARGE / 2))
+    is_best = g("LessOrEqual", masked, g.double(-LARGE / 2))
     rival = g("Reshape", g("Where", is_best, second, best), g.whole(-1))
     row = g("Unsqueeze", g("Sub", rival, m), g.whole(0))
-    start = _Start(g, row, s, noise, batch)
-    return start.model(start.value(None), (start.z, g("Div", start.s_k, s)), _STATIC_NAMES)
+    start = Start(g, row, s, noise, batch)
+    return start.model(start.value(None), (start.z, g("Div", start.s_k, s)), _STATIC_NAMES, LEAF_TABLE)
 
 
 def _learned(g: Nodes, v: str, noise: str, horizon: float, k: str | None = None) -> str:
@@ -182,196 +147,19 @@ def _learned(g: Nodes, v: str, noise: str, horizon: float, k: str | None = None)
     return g("Mul", v, g("Div", h, g("Add", noise, h)))
 
 
-class _Start:
-    """The start value for a threshold t0, shape (1, n), at the best batch or a given one."""
-
-    def __init__(self, g: Nodes, t0: str, s: str, noise: str, batch: int | None) -> None:
-        self.g = g
-        self.rate = batch is None
-        if batch is None:
-            self.k, self.s_k = _best_batch(g, t0, s, noise)
-        else:
-            # "t0" gives the constant its shape.
-            self.k = g("Add", g("Mul", t0, g.double(0.0)), g.double(float(batch)))
-            self.s_k = g("Mul", s, g("Sqrt", g("Div", self.k, g("Add", self.k, noise))))
-        self.z = self.cut(g("Div", t0, g("Max", self.s_k, g.double(_TINY))))
-        self.unit = g("Div", self.s_k, g("Max", self.k, g.double(1.0))) if self.rate else self.s_k
-
-    def cut(self, z: str) -> str:
-        """z within +-40."""
-        return self.g("Clip", z, self.g.scalar(-_THRESHOLD_LIMIT), self.g.scalar(_THRESHOLD_LIMIT))
-
-    def value(self, slope: str | None) -> str:
-        """unit f(-|z|) slope."""
-        g = self.g
-        at_zero, linear, square = (g.double(x) for x in _LOSS_FIT)
-        size = g("Abs", self.z)
-        bottom = g("Add", g("Mul", g("Add", g("Mul", size, square), linear), size), at_zero)
-        tail = g("Div", g("Exp", g("Mul", g("Mul", self.z, self.z), g.double(-0.5))), bottom)
-        return g("Mul", self.unit if slope is None else g("Mul", self.unit, slope), tail)
-
-    def model(self, value: str, columns: tuple[str, ...], names: tuple[str, ...]) -> onnx.ModelProto:
-        """The graph with its outputs."""
-        g, flat = self.g, self.g.whole(-1)
-        g("Reshape", self.unit, flat, out="unit")
-        g("Reshape", value, flat, out="first_order")
-        whole = g("Cast", g("Add", self.k, g.double(0.5)), to=TensorProto.INT64)
-        g("Reshape", whole, flat, out="batch")
-        stacked = g("Cast", g("Concat", *columns, axis=0), to=TensorProto.FLOAT)
-        g("Transpose", stacked, perm=[1, 0], out="features")
-        return _model(g, names)
-
-
 def _table(g: Nodes, m: str, s: str, points: int) -> tuple[str, str, str, str]:
     """Ends of each leaf's action table, shape (1, n), and F and R at its points, shape (n, points)."""
     row = g("Unsqueeze", "action", g.whole(1))
     ends = g("Add", g("Mul", s, g.double([[-_BELOW], [_ABOVE]])), m)
     ends = g("Transpose", ends, perm=[1, 0])
-    ends = g("ScatterND", g("Min", ends, g.double(-_LARGE)), row, ends, reduction="max")
+    ends = g("ScatterND", g("Min", ends, g.double(-LARGE)), row, ends, reduction="max")
     ends = g("Transpose", g("Gather", ends, "action"), perm=[1, 0])
     low, high = g.split(ends, 2, axis=0)
     z = g("Min", g("Div", g("Sub", ends, m), s), g.double(_FAR))
     z = g("Cast", z, to=TensorProto.FLOAT)
-    t = _midpoints(points)
+    t = midpoints(points)
     z = g("Gemm", z, g.single(np.stack([1 - t, t]) / np.sqrt(2)), transA=1)
     phi = g("Add", g("Mul", g("Erf", z), g.single(_PHI_SLOPE)), g.single(0.5))
     joint = g("ScatterND", g("Max", phi, g.single(1.0)), row, phi, reduction="mul")
     joint = g("Gather", joint, "action")
     return low, high, joint, g("Div", joint, phi)
-
-
-def _moments(g: Nodes, low: str, high: str, joint: str, rest: str, points: int) -> tuple[str, str, str]:
-    """V, and mean and variance of the siblings' maximum; shape (1, n).
-
-    V = high - integral of F. The siblings' maximum X: E[X - low] = integral of 1 - R,
-    E[(X - low)^2] = integral of 2 (x - low) (1 - R).
-    """
-    t, w = _midpoints(points), np.full(points, 1 / points)
-    weights = np.zeros((3, 2 * points))
-    weights[0, :points] = w
-    weights[1, points:] = -w
-    weights[2, points:] = -2 * w * t
-    # Midpoints overstate the last integral by h^2 / 12, from its slope at the lower end.
-    constant = np.array([[0.0], [w.sum()], [2 * w @ t - 1 / (12 * points**2) + _SPREAD_FLOOR]])
-    both = g("Concat", joint, rest, axis=1)
-    sums = g("Gemm", g.single(weights), both, g.single(constant), transB=1)
-    width = g("Sub", high, low)
-    sums = g("Mul", g("Cast", sums, to=TensorProto.DOUBLE), width)
-    below, first, second = g.split(sums, 3, axis=0)
-    value = g("Sub", high, below, out="value")
-    others = g("Add", low, first, out="others")
-    spread2 = g("Sub", g("Mul", width, second), g("Mul", first, first), out="spread2")
-    return value, others, spread2
-
-
-def _best_batch(g: Nodes, t0: str, s: str, noise: str) -> tuple[str, str]:
-    """The best real batch k for a threshold t0, and s_k; shape (1, n).
-
-    s_k f(-|t0| / s_k) / k has a single peak, so the best k within 1 and the rollouts left is the peak cut
-    to them. A leaf without variance has noise ratio infinity, hence s_k = 0 exactly.
-    """
-    u = g("Div", t0, s)
-    u2 = g("Mul", u, u)
-    shape = g("Add", g("Div", g.double(PEAK[1]), g("Add", u2, g.double(PEAK[2]))), g.double(PEAK[0]))
-    peak = g("Max", g("Mul", u2, shape), g.double(_PEAK_FLOOR))
-    k = g("Clip", g("Mul", peak, noise), g.scalar(1.0), "remaining")
-    resolved = g("Div", k, g("Add", k, noise))
-    return k, g("Mul", s, g("Sqrt", resolved))
-
-
-def _midpoints(points: int) -> Floats:
-    """Midpoints of equal cells of [0, 1]."""
-    return (np.arange(points) + 0.5) / points
-
-
-def _model(g: Nodes, names: tuple[str, ...]) -> onnx.ModelProto:
-    inputs = [typed(name, TensorProto.DOUBLE, ["n"]) for name in INPUTS]
-    inputs[INPUTS.index("action")] = typed("action", TensorProto.INT64, ["n"])
-    inputs[INPUTS.index("remaining")] = typed("remaining", TensorProto.DOUBLE, [])
-    outputs = [
-        typed("features", TensorProto.FLOAT, ["n", len(names)]),
-        typed("unit", TensorProto.DOUBLE, ["n"]),
-        typed("first_order", TensorProto.DOUBLE, ["n"]),
-        typed("batch", TensorProto.INT64, ["n"]),
-    ]
-    graph = helper.make_graph(g.nodes, "features", inputs, outputs, g.initializers)
-    model = helper.make_model(graph, opset_imports=[helper.make_opsetid("", OPSET)], ir_version=IR_VERSION)
-    model.producer_name = "voc-distill"
-    helper.set_model_props(model, {"features": json.dumps(names)})
-    return model
-
-
-class FeatureGraph:
-    """The feature graph in a session with one thread.
-
-    model : a graph as `build_graph` makes it; None builds the default one.
-    """
-
-    def __init__(self, model: onnx.ModelProto | None = None) -> None:
-        self.model = build_graph() if model is None else model
-        options = ort.SessionOptions()
-        options.intra_op_num_threads = options.inter_op_num_threads = 1
-        options.enable_mem_reuse = False  # a tenth faster
-        self._session = ort.InferenceSession(
-            self.model.SerializeToString(deterministic=True), options, providers=["CPUExecutionProvider"]
-        )
-
-    @classmethod
-    def of_value(cls, value: Mapping[str, Any]) -> FeatureGraph:
-        """The graph for a dataset's `value`: its horizon, and its batch or None for the rate."""
-        return cls(build_graph(horizon=float(value["horizon"]), batch=value["batch"]))
-
-    @property
-    def names(self) -> tuple[str, ...]:
-        """Column names of `x`."""
-        return tuple(json.loads(self.model.metadata_props[0].value))
-
-    def matrix(self, columns: Mapping[str, Any]) -> FeatureMatrix:
-        """Features of every row, tree by tree, exactly as a scorer meets them.
-
-        columns : the names in INPUTS, each of length n; `remaining` may be a scalar. `tree` (whole
-        numbers, equal ones side by side) says which rows belong together; without it all do.
-        Raises InputError for a missing column, unequal lengths or a split tree.
-        """
-        names = ["features", "unit", "first_order", "batch"]
-        parts = [self._session.run(names, feed) for feed in self.table(columns)]
-        if not parts:
-            none = np.empty(0)
-            x = np.empty((0, len(self.names)), np.float32)
-            return FeatureMatrix(x, none, none, none.astype(np.int64))
-        return FeatureMatrix(*(np.concatenate(part) for part in zip(*parts, strict=True)))
-
-    @staticmethod
-    def table(columns: Mapping[str, Any]) -> list[dict[str, NDArray[Any]]]:
-        """The graph's inputs, one dictionary a tree; columns and errors as for `matrix`."""
-        table = {}
-        for name in INPUTS:
-            if name not in columns:
-                raise InputError(name, "is missing")
-            dtype = np.int64 if name == "action" else np.float64
-            table[name] = np.ascontiguousarray(columns[name], dtype=dtype)
-        n = table["mean"].size
-        if table["remaining"].size == 1:
-            table["remaining"] = np.full(n, table["remaining"].item())
-        for name, column in table.items():
-            if column.shape != (n,):
-                raise InputError(name, f"must have {n} rows, as 'mean'", column.shape)
-        feeds = []
-        for a, b in pairwise(_tree_starts(columns.get("tree"), n)):
-            feed = {name: column[a:b] for name, column in table.items()}
-            feed["remaining"] = feed["remaining"][:1].reshape(())
-            feeds.append(feed)
-        return feeds
-
-
-def _tree_starts(tree: Any, n: int) -> list[int]:
-    """First row of each tree, and n at the end."""
-    if tree is None:
-        return [0, n] if n else [0]
-    tree = np.asarray(tree)
-    if tree.shape != (n,):
-        raise InputError("tree", f"must have {n} rows, as 'mean'", tree.shape)
-    starts = [0, *(np.flatnonzero(tree[1:] != tree[:-1]) + 1).tolist()] if n else []
-    if len(np.unique(tree)) != len(starts):
-        raise InputError("tree", "rows of one tree must be side by side")
-    return [*starts, n]

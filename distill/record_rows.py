@@ -70,6 +70,7 @@ class Crossings:
     now: Floats
     other_crossing: Floats
     other_slope: Floats
+    spread: Floats
     noise_ratio: Floats
 
     def columns(self, cost: Any) -> dict[str, Floats]:

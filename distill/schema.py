@@ -62,6 +62,7 @@ RECORD_UNITS: Final = {
     "now": "1; the same slope at present, over `slope`",
     "other_crossing": "1; the crossing of lesser value, on the other side of 0; 0 where there is none",
     "other_slope": "u; slope there; 0 where there is none",
+    "spread": "u; the most that a move of 1 can change the difference of two actions, however far it goes",
     "noise_ratio": "1; noise variance of one rollout over the leaf's variance, alpha + beta for win/loss",
     "cost": "u a rollout",
 }

@@ -25,7 +25,7 @@ from distill.calibration import calibrated
 from distill.candidates import Candidates, Split, split_by_tree
 from distill.errors import InputError
 from distill.export import export_scorer, mapped_back
-from distill.features import FeatureGraph, FeatureMatrix
+from distill.feature_graph import FeatureGraph, FeatureMatrix
 from distill.files import sha256_of, write_atomic
 from distill.learners import BoostingLearner, DenseLearner, LinearLearner
 from distill.metrics import Groups

@@ -10,7 +10,7 @@ import numpy as np
 
 from distill.candidates import Candidates, split_by_tree
 from distill.errors import InputError
-from distill.features import FeatureGraph
+from distill.feature_graph import FeatureGraph
 from distill.metrics import measure, random_forgone
 from distill.query import Query
 from distill.runtime import Scorer

@@ -16,7 +16,7 @@ from sklearn.preprocessing import StandardScaler
 
 from distill.calibration import UpperBound
 from distill.export import export_scorer
-from distill.features import FeatureGraph, FeatureMatrix
+from distill.feature_graph import FeatureGraph, FeatureMatrix
 
 KINDS = ("boosting", "dense", "linear")
 

@@ -22,7 +22,8 @@ from sklearn.preprocessing import MinMaxScaler, StandardScaler
 from distill.converters import convert, folded
 from distill.errors import ExportError
 from distill.export import TRANSFORMS, export_scorer, mapped_back, with_facts
-from distill.features import FeatureGraph, build_graph
+from distill.feature_graph import FeatureGraph
+from distill.features import build_graph
 from distill.runtime import Scorer
 
 

@@ -14,7 +14,8 @@ from scipy import integrate, optimize, stats
 
 from distill.closed_form import static_rates
 from distill.errors import InputError
-from distill.features import FeatureGraph, build_graph
+from distill.feature_graph import FeatureGraph
+from distill.features import build_graph
 from distill.onnx_nodes import typed
 
 GRAPH = FeatureGraph()
@@ -53,7 +54,7 @@ def inner(t, *names):
     model = build_graph()
     model.graph.output.extend(typed(name, onnx.TensorProto.DOUBLE, [1, "n"]) for name in names)
     session = onnxruntime.InferenceSession(model.SerializeToString(), providers=["CPUExecutionProvider"])
-    return [x.ravel() for x in session.run(list(names), FeatureGraph.table(t)[0])]
+    return [x.ravel() for x in session.run(list(names), GRAPH.table(t)[0])]
 
 
 @pytest.mark.parametrize("seed", range(3))

@@ -14,7 +14,7 @@ from small_dataset import labelled
 
 from distill.candidates import Candidates, split_by_tree
 from distill.errors import InputError
-from distill.features import FeatureGraph
+from distill.feature_graph import FeatureGraph
 from distill.generate import Traces, generate
 from distill.metrics import measure
 from distill.query import Query

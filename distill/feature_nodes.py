@@ -1,0 +1,175 @@
+"""Nodes that the feature graphs of all inputs share, and what such a graph answers; floor 3."""
+
+from __future__ import annotations
+
+import json
+from typing import Final, NamedTuple
+
+import numpy as np
+import onnx
+from numpy.typing import NDArray
+from onnx import TensorProto, helper
+
+from distill.closed_form import PEAK
+from distill.onnx_nodes import IR_VERSION, OPSET, Nodes, typed
+from distill.scorer_inputs import InputKind
+from distill.tree import Floats
+
+__all__ = [
+    "LARGE", "TINY", "FeatureMatrix", "Start", "best_batch", "finished", "loss", "midpoints", "moments",
+    "threshold_shift",
+]  # fmt: skip
+
+LARGE: Final = 1e300
+TINY: Final = 1e-300
+_THRESHOLD_LIMIT: Final = 40.0  # exp(-z^2 / 2) is 0 in double precision
+_PEAK_FLOOR: Final = 1e-30  # keeps 0 x infinity away where a leaf has no variance
+_SLOPE_FLOOR: Final = 1e-300  # where the siblings alone beat the rival: below the least value of any tree
+_SPREAD_FLOOR: Final = 1e-6  # of the table's width squared: above the rounding of float32 sums
+
+# q(y) = y - f^{-1}(y) as a v / sqrt(v + c), v = -log(1 - exp(-b y)); fitted by least squares to the exact
+# inverse, absolute error at most 0.006 for f^{-1}(y) from -8 up. (a, b, c).
+_Q_FIT: Final = (np.sqrt(1.94647), 1.96789, 4.0114)
+# f(-z) exp(z^2 / 2) as 1 / (a + z (b + c z)); within 5 % for every z from 0 to 30, exact at 0.
+_LOSS_FIT: Final = tuple(np.sqrt(2 * np.pi) * np.array([1.0, 0.93642524, 0.92409791]))
+
+
+class FeatureMatrix(NamedTuple):
+    """What the graph says of each row.
+
+    x : (n, d) float32, unit-free, columns as `FeatureGraph.names`. unit : (n,), u a rollout, the leaf's
+    own s_k / k at the start value's best batch k, a real number; s_k for a fixed batch. first_order :
+    (n,), same unit, the start value. batch : (n,), k rounded.
+    """
+
+    x: NDArray[np.float32]
+    unit: Floats
+    first_order: Floats
+    batch: NDArray[np.int64]
+
+
+def threshold_shift(g: Nodes, y: str, theta: str) -> tuple[str, str, str]:
+    """-theta q(y), the slope at the threshold, and q(y) up to its constant factor, negative."""
+    a, b, c = _Q_FIT
+    slope = g("Sub", g.double(1.0), g("Exp", g("Mul", y, g.double(-b))))
+    slope = g("Max", slope, g.double(_SLOPE_FLOOR))
+    log_slope = g("Log", slope)
+    help_ = g("Div", log_slope, g("Sqrt", g("Sub", g.double(c), log_slope)))
+    return g("Mul", g("Mul", help_, theta), g.double(a)), slope, help_
+
+
+def loss(g: Nodes, z: str) -> str:
+    """f(-|z|), within 5 %, relative, however small."""
+    at_zero, linear, square = (g.double(x) for x in _LOSS_FIT)
+    size = g("Abs", z)
+    bottom = g("Add", g("Mul", g("Add", g("Mul", size, square), linear), size), at_zero)
+    return g("Div", g("Exp", g("Mul", g("Mul", z, z), g.double(-0.5))), bottom)
+
+
+class Start:
+    """The start value for a threshold t0, shape (1, n), at the best batch or a given one."""
+
+    def __init__(self, g: Nodes, t0: str, s: str, noise: str, batch: int | None) -> None:
+        self.g = g
+        self.rate = batch is None
+        if batch is None:
+            self.k, self.s_k = best_batch(g, t0, s, noise)
+        else:
+            # "t0" gives the constant its shape.
+            self.k = g("Add", g("Mul", t0, g.double(0.0)), g.double(float(batch)))
+            self.s_k = g("Mul", s, g("Sqrt", g("Div", self.k, g("Add", self.k, noise))))
+        self.z = self.cut(g("Div", t0, g("Max", self.s_k, g.double(TINY))))
+        self.unit = g("Div", self.s_k, g("Max", self.k, g.double(1.0))) if self.rate else self.s_k
+
+    def cut(self, z: str) -> str:
+        """z within +-40."""
+        return self.g("Clip", z, self.g.scalar(-_THRESHOLD_LIMIT), self.g.scalar(_THRESHOLD_LIMIT))
+
+    def value(self, slope: str | None) -> str:
+        """unit f(-|z|) slope."""
+        g = self.g
+        tail = loss(g, self.z)
+        return g("Mul", self.unit if slope is None else g("Mul", self.unit, slope), tail)
+
+    def model(
+        self, value: str, columns: tuple[str, ...], names: tuple[str, ...], kind: InputKind
+    ) -> onnx.ModelProto:
+        """The graph with its outputs; `columns` are rows, shape (1, n)."""
+        stacked = self.g("Transpose", self.g("Concat", *columns, axis=0), perm=[1, 0])
+        batch = self.g("Add", self.k, self.g.double(0.5))
+        return finished(self.g, kind, names, stacked, self.unit, value, batch)
+
+
+def moments(g: Nodes, low: str, high: str, joint: str, rest: str, points: int) -> tuple[str, str, str]:
+    """V, and mean and variance of the siblings' maximum; shape (1, n).
+
+    V = high - integral of F. The siblings' maximum X: E[X - low] = integral of 1 - R,
+    E[(X - low)^2] = integral of 2 (x - low) (1 - R).
+    """
+    t, w = midpoints(points), np.full(points, 1 / points)
+    weights = np.zeros((3, 2 * points))
+    weights[0, :points] = w
+    weights[1, points:] = -w
+    weights[2, points:] = -2 * w * t
+    # Midpoints overstate the last integral by h^2 / 12, from its slope at the lower end.
+    constant = np.array([[0.0], [w.sum()], [2 * w @ t - 1 / (12 * points**2) + _SPREAD_FLOOR]])
+    both = g("Concat", joint, rest, axis=1)
+    sums = g("Gemm", g.single(weights), both, g.single(constant), transB=1)
+    width = g("Sub", high, low)
+    sums = g("Mul", g("Cast", sums, to=TensorProto.DOUBLE), width)
+    below, first, second = g.split(sums, 3, axis=0)
+    value = g("Sub", high, below, out="value")
+    others = g("Add", low, first, out="others")
+    spread2 = g("Sub", g("Mul", width, second), g("Mul", first, first), out="spread2")
+    return value, others, spread2
+
+
+def best_batch(g: Nodes, t0: str, s: str, noise: str, *, least: float = 1.0) -> tuple[str, str]:
+    """The best real batch k for a threshold t0, and s_k; shape (1, n).
+
+    s_k f(-|t0| / s_k) / k has a single peak, so the best k from `least` to the rollouts left is the peak cut
+    to them. A leaf without variance has noise ratio infinity, hence s_k = 0 exactly.
+    """
+    u = g("Div", t0, s)
+    u2 = g("Mul", u, u)
+    shape = g("Add", g("Div", g.double(PEAK[1]), g("Add", u2, g.double(PEAK[2]))), g.double(PEAK[0]))
+    peak = g("Max", g("Mul", u2, shape), g.double(_PEAK_FLOOR))
+    k = g("Clip", g("Mul", peak, noise), g.scalar(least), "remaining")
+    resolved = g("Div", k, g("Add", k, noise))
+    return k, g("Mul", s, g("Sqrt", resolved))
+
+
+def midpoints(points: int) -> Floats:
+    """Midpoints of equal cells of [0, 1]."""
+    return (np.arange(points) + 0.5) / points
+
+
+def finished(
+    g: Nodes, kind: InputKind, names: tuple[str, ...], columns: str, unit: str, value: str, batch: str
+) -> onnx.ModelProto:
+    """The nodes as a model of one input kind.
+
+    names : of the feature columns. columns : double, shape (n, d). unit, value, batch : double, n numbers
+    in any shape; batch is cut to a whole number.
+    """
+    flat = g.whole(-1)
+    g("Reshape", unit, flat, out="unit")
+    g("Reshape", value, flat, out="first_order")
+    g("Reshape", g("Cast", batch, to=TensorProto.INT64), flat, out="batch")
+    g("Cast", columns, to=TensorProto.FLOAT, out="features")
+    inputs = [
+        typed(name, TensorProto.INT64 if name == "action" else TensorProto.DOUBLE, ["n"])
+        for name in kind.columns
+    ]
+    inputs.append(typed("remaining", TensorProto.DOUBLE, []))
+    outputs = [
+        typed("features", TensorProto.FLOAT, ["n", len(names)]),
+        typed("unit", TensorProto.DOUBLE, ["n"]),
+        typed("first_order", TensorProto.DOUBLE, ["n"]),
+        typed("batch", TensorProto.INT64, ["n"]),
+    ]
+    graph = helper.make_graph(g.nodes, "features", inputs, outputs, g.initializers)
+    model = helper.make_model(graph, opset_imports=[helper.make_opsetid("", OPSET)], ir_version=IR_VERSION)
+    model.producer_name = "voc-distill"
+    helper.set_model_props(model, {"features": json.dumps(names), "input": kind.name})
+    return model

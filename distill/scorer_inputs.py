@@ -1,0 +1,105 @@
+"""What a scorer reads: the input kinds, their columns and what these may hold; floor 1, light.
+
+    leaf table            independent Gaussian leaves under decision nodes
+    win/loss leaf table   win/loss leaves under decision nodes
+    record                any tree: chance nodes, correlation; one row a candidate, from `distill.backup`
+
+Each kind has its columns of n numbers, `action` where rows of one action belong together, and the number
+`remaining`. A file says by its inputs which kind it reads, `Scorer.score` takes them by name.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from distill import schema
+
+__all__ = ["KINDS", "LEAF_TABLE", "RECORD", "WIN_LOSS_TABLE", "InputKind", "kind_of"]
+
+Floats = NDArray[np.float64]
+_U, _U2 = schema.MAX_UTILITY, schema.MAX_VARIANCE
+
+
+@dataclass(frozen=True)
+class _Rule:
+    """What a number may be: from `low` to `high`, `low` itself only where `closed`."""
+
+    low: float
+    high: float
+    closed: bool = True
+
+    def holds(self, x: Floats) -> NDArray[np.bool_]:
+        return np.asarray(((x >= self.low) if self.closed else (x > self.low)) & (x <= self.high))
+
+    def __str__(self) -> str:
+        if -self.low == self.high:
+            return f"must be at most {self.high:g} in size"
+        return f"must be {'from' if self.closed else 'above'} {self.low:g} " + (
+            f"to {self.high:g}" if self.closed else f"and at most {self.high:g}"
+        )
+
+
+_VALUE, _SPREAD = _Rule(-_U, _U), _Rule(0.0, _U)
+_COUNT = _Rule(0.0, _U, closed=False)
+_RULES: Final[Mapping[str, _Rule]] = {
+    **dict.fromkeys(("mean", "offset", "cost", "low", "high", "crossing", "other_crossing"), _VALUE),
+    **dict.fromkeys(("bend", "now"), _VALUE),
+    **dict.fromkeys(("slope", "other_slope", "spread"), _SPREAD),
+    **dict.fromkeys(("alpha", "beta", "noise_ratio"), _COUNT),
+    "var": _Rule(0.0, _U2),
+    "noise_var": _Rule(0.0, _U2, closed=False),
+    "gain": _Rule(0.0, 1.0),
+}
+
+
+@dataclass(frozen=True)
+class InputKind:
+    """One kind of input.
+
+    name : as in a file's metadata and in messages. floats : columns of n numbers, the first gives n.
+    has_action : whether `action`, the 0-based root action of each row, is a column too.
+    """
+
+    name: str
+    floats: tuple[str, ...]
+    has_action: bool
+
+    @property
+    def columns(self) -> tuple[str, ...]:
+        """All columns, in the order of a call."""
+        return (*self.floats, "action") if self.has_action else self.floats
+
+    @property
+    def inputs(self) -> tuple[str, ...]:
+        """All inputs of a scorer: the columns, and `remaining`."""
+        return (*self.columns, "remaining")
+
+    def violations(self, columns: Mapping[str, Floats]) -> dict[str, tuple[NDArray[np.bool_], str]]:
+        """Column -> (rows that keep its rule, the rule)."""
+        found = {name: (_RULES[name].holds(columns[name]), str(_RULES[name])) for name in self.floats}
+        if "high" in columns:
+            found["high"] = (found["high"][0] & (columns["high"] > columns["low"]), "must be above low")
+        return found
+
+
+LEAF_TABLE: Final = InputKind("leaf table", ("mean", "var", "noise_var", "gain", "offset", "cost"), True)
+WIN_LOSS_TABLE: Final = InputKind(
+    "win/loss leaf table", ("alpha", "beta", "low", "high", "gain", "offset", "cost"), True
+)
+RECORD: Final = InputKind("record", tuple(schema.RECORD_UNITS), False)
+KINDS: Final[Mapping[str, InputKind]] = {k.name: k for k in (LEAF_TABLE, WIN_LOSS_TABLE, RECORD)}
+
+
+def kind_of(names: Iterable[Any]) -> InputKind | None:
+    """The kind whose columns all are among `names`; None where there is none.
+
+    >>> kind_of(["alpha", "beta", "low", "high", "gain", "offset", "cost", "action"]).name
+    'win/loss leaf table'
+    """
+    given = set(names)
+    return next((kind for kind in KINDS.values() if given.issuperset(kind.columns)), None)

@@ -5,7 +5,6 @@ from __future__ import annotations
 import os
 import xml.etree.ElementTree as ET
 from collections.abc import Iterable, Iterator, Mapping, Sequence
-from itertools import pairwise
 from typing import Any, Final
 
 from matplotlib.figure import Figure
@@ -29,6 +28,8 @@ _AGAINST: Final = {
     "exact": "exact dynamic rate",
 }
 _ROLES: Final = {"uct": "peer", "thompson": "peer", "top": "peer", "static": "ink", "exact": "exact"}
+_MARKS: Final = ("o", "s", "^", "D", "v")
+_DASHES: Final = ("-", (0, (5, 2)), (0, (2, 2)))
 _WORDS: Final = {
     "regret": "How much worse the chosen action is than the best one, in the problem's own unit.",
     "expected regret": (
@@ -148,26 +149,28 @@ def _break_even(summary: Figures) -> ET.Element:
 
 @styled
 def _lines(rows: Sequence[Mapping[str, Any]], rollouts: int) -> Figure:
-    figure = Figure(figsize=(640 / 72, 400 / 72))
+    names = list(dict.fromkeys(row["policy"] for row in rows))
+    figure = Figure(figsize=(390 / 72, (300 + 17 * len(names)) / 72))
     figure.patch.set_visible(False)
     ax = figure.subplots()
     ax.patch.set_visible(False)
     ax.set(xscale="log", yscale="log", xlabel=f"cost of a rollout, µs (time: {rollouts} rollouts)")
     ax.set_ylabel("regret, multiple of the best sampling")
     ax.grid(which="major")
-    ends = []
-    for name in dict.fromkeys(row["policy"] for row in rows):
+    drawn: dict[str, int] = {}
+    for name in names:
         points = sorted((1e6 * r["rollout_seconds"], r["ratio"]) for r in rows if r["policy"] == name)
-        colour = DRAWN[_role(name)]
-        ax.plot(*zip(*points, strict=True), "o-", color=colour, lw=1.4, ms=5, gid="policy")
-        ends.append([points[-1][1], name, colour, points[-1][0]])
+        role = _role(name)
+        nth = drawn[role] = drawn.get(role, -1) + 1  # policies of one colour differ by their marks
+        style: dict[str, Any] = {
+            "marker": _MARKS[nth % len(_MARKS)],
+            "ls": _DASHES[nth % len(_DASHES)],
+            "ms": 5,
+            "lw": 1.4,
+        }
+        label = one_line(name, 44)
+        ax.plot(*zip(*points, strict=True), color=DRAWN[role], label=label, gid="policy", **style)
     ax.axhline(1, color=DRAWN["quiet"], lw=1)
-    _apart(ends, ax.get_ylim())
-    for y, name, colour, x in ends:
-        ax.annotate(
-            one_line(name, 44), (x, y), xytext=(9, 0), textcoords="offset points", va="center",
-            fontsize=SMALL, color=colour, annotation_clip=False,
-        )  # fmt: skip
     ticks = sorted({1e6 * r["rollout_seconds"] for r in rows})
     ax.set_xticks(ticks, [f"{t:,.0f}" for t in ticks])
     low, high = ax.get_ylim()
@@ -175,15 +178,8 @@ def _lines(rows: Sequence[Mapping[str, Any]], rollouts: int) -> Figure:
     ax.set_yticks(levels, [f"{t:g}" for t in levels])
     for axis in (ax.xaxis, ax.yaxis):
         axis.set_minor_locator(NullLocator())
+    figure.legend(loc="outside lower left", frameon=False, fontsize=SMALL)
     return figure
-
-
-def _apart(ends: list[list[Any]], limits: tuple[float, float]) -> None:
-    """Move the labels at the ends of lines apart, in place, so that none hides another."""
-    step = (limits[1] / limits[0]) ** 0.05
-    ends.sort(key=lambda end: end[0])
-    for below, above in pairwise(ends):
-        above[0] = max(above[0], below[0] * step)
 
 
 @styled

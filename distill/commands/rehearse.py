@@ -58,9 +58,7 @@ def run(args: argparse.Namespace) -> None:
         tuning_seeds=args.tuning_seeds,
     )
     with bar("rehearsing", len(campaign.problems), "problems") as advance:
-        results = rehearse(
-            campaign, args.out, workers=args.workers, progress=lambda _done, _of: advance()
-        )
+        results = rehearse(campaign, args.out, workers=args.workers, progress=lambda _done, _of: advance())
     summary = write_results(results, args.out)
     write_rehearsal_page(summary, args.out / "rehearsal.html")
     print(f"{args.out}: {len(results.cells)} cells of {campaign.seeds} decisions\n")

@@ -23,6 +23,7 @@ from distill.tree import BeliefTree, Floats, Ints
 __all__ = ["Effects", "find_effects"]
 
 _SAME = 1e-9  # correlations closer than this are taken as equal
+_ROUNDED = 16 * 2.0**-52  # a share of a leaf's variance that rounding of `cov` may have left over
 
 
 @dataclass(frozen=True)
@@ -76,9 +77,17 @@ def find_effects(tree: BeliefTree, cov: Floats) -> Effects | None:
                 block = C[np.ix_(below[c], below[kids[v][j]])]
                 if np.max(np.abs(block - np.outer(parts[i], parts[j]))) > _SAME:
                     return None
+    for v in range(1, tree.n_nodes):
+        # A leaf alone below a node is not tied to the node's effect: only the product of both ties is given.
+        if tree.kind[v] != schema.LEAF and len(below[v]) == 1 < len(below[tree.parent[v]]):
+            tie = math.sqrt(min(abs(rho[v]), 1.0))
+            if abs(loading[below[v][0]]) > 1 - _SAME:
+                loading[below[v]] *= tie
+                rho[v] = math.copysign(tie, rho[v])
     rest = np.diag(C) - loading**2
     if np.min(rest) < -_SAME:
         return None
+    rest[rest <= _ROUNDED] = 0.0
     return Effects(np.clip(rho, -1, 1), loading * sd, np.sqrt(np.maximum(rest, 0)) * sd)
 
 

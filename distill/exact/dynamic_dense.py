@@ -257,6 +257,8 @@ def _factor(R: Floats, gain: Floats) -> Floats:
     """F with F F^T = R; the directions that matter most at the root first, none without variance."""
     weight = np.where(gain > 0, gain, 1.0)  # a leaf of no weight can still tell about others
     values, vectors = np.linalg.eigh(R * weight[:, None] * weight)
+    # An eigenvector's sign is rounding's choice; fixed, so that other units of value meet the same points.
+    vectors = vectors * np.sign(vectors[np.abs(vectors).argmax(axis=0), np.arange(len(values))])
     keep = np.flatnonzero(values > 1e-15 * max(float(values[-1]), 0.0))[::-1]
     return np.asarray(vectors[:, keep] * np.sqrt(values[keep]) / weight[:, None])
 

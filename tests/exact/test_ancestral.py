@@ -9,6 +9,8 @@ from pathlib import Path
 import numpy as np
 import pytest
 from dense_trees import effects_tree, flat, nested_effects, two_level
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from ladder import CLOSED_FORM, PUBLISHED, QUADRATURE
 
 from distill.errors import RefusedError
@@ -165,6 +167,42 @@ def test_one_action_and_all_sure():
     sure = price(two_level([[0.0, 0.1], [0.05, 0.0]], np.zeros((4, 4))), Query())
     assert sure.voc.tolist() == [0] * 4
     assert sure.value.tolist() == [0.1, 0.05]
+
+
+@settings(deadline=None, max_examples=12, derandomize=True)
+@given(
+    seed=st.integers(0, 2**32),
+    k=st.integers(1, 50),
+    up=st.floats(-1e3, 1e3),
+    times=st.sampled_from([1e-9, 1e-3, 7.0, 1e9]),
+)
+def test_properties(seed, k, up, times):
+    rng = np.random.default_rng(seed)
+    sizes = rng.integers(1, 4, size=rng.integers(2, 4))
+    n = int(sizes.sum())
+    same = np.equal.outer(np.repeat(np.arange(len(sizes)), sizes), np.repeat(np.arange(len(sizes)), sizes))
+    cov = same * rng.uniform(0, 0.5) + rng.uniform(0, 0.5) + np.diag(rng.uniform(0.2, 2, size=n))
+    mean, noise = rng.normal(size=n), 10 ** rng.uniform(-2, 2, size=n)
+
+    def tree(mean, cov, noise, sizes=sizes):
+        return two_level([row.tolist() for row in np.split(mean, np.cumsum(sizes)[:-1])], cov, noise)
+
+    plain, scale = price(tree(mean, cov, noise), Query(batch=k)), scale_of(tree(mean, cov, noise))
+    for column in (plain.voc, plain.error):
+        assert np.all(np.isfinite(column))
+        assert np.all(column >= 0)
+    for more in (k + 1, 2**53):
+        richer = price(tree(mean, cov, noise), Query(batch=more))
+        assert np.all(richer.voc >= plain.voc - plain.error - richer.error)
+    raised = price(tree(mean + up, cov, noise), Query(batch=k))
+    assert np.all(np.abs(raised.voc - plain.voc) <= QUADRATURE * scale)
+    larger = price(tree(mean * times, cov * times**2, noise * times**2), Query(batch=k))
+    assert np.all(np.abs(larger.voc / times - plain.voc) <= QUADRATURE * scale)
+    turn = np.arange(n)[::-1]
+    turned = price(tree(mean[turn], cov[turn][:, turn], noise[turn], sizes[::-1]), Query(batch=k))
+    assert np.all(np.abs(turned.voc[turn] - plain.voc) <= QUADRATURE * scale)
+    drowned = price(tree(mean, cov, np.full(n, 1e20)), Query(batch=k))
+    assert np.all(drowned.voc <= 1e-8 * scale)
 
 
 @pytest.mark.parametrize("rollouts", [0, 1, 30])

@@ -9,6 +9,8 @@ from pathlib import Path
 import numpy as np
 import pytest
 from dense_trees import flat, random_tree, two_level
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from ladder import CLOSED_FORM, QUADRATURE
 
 from distill.errors import RefusedError
@@ -234,6 +236,45 @@ def test_ancestral_effects_are_priced_exactly_and_all_else_is_sampled():
     assert price_best(tree, Query(horizon=3, batch=2)).method == METHOD
     wild = two_level([[0.0, 0.2, 0.4], [0.1, 0.3, 0.2]], random_covariance(np.random.default_rng(0), 6))
     assert price_best(wild, Query(batch=2)).method == METHOD
+
+
+@settings(deadline=None, max_examples=10, derandomize=True)
+@given(
+    seed=st.integers(0, 2**32),
+    h=st.sampled_from([0.5, 8.0, math.inf]),
+    k=st.integers(1, 50),
+    up=st.floats(-1e3, 1e3),
+    times=st.sampled_from([1e-6, 1e-3, 7.0, 1e6]),
+)
+def test_properties(seed, h, k, up, times):
+    rng = np.random.default_rng(seed)
+    groups = random_groups(rng)
+    n = sum(map(len, groups))
+    cov, noise = random_covariance(rng, n), 10 ** rng.uniform(-2, 2, size=n)
+    sure = int(rng.integers(n))
+    cov[sure] = cov[:, sure] = 0.0
+    tree, query = two_level(groups, cov, noise), Query(horizon=h, batch=k)
+    plain, scale = price(tree, query), scale_of(tree)
+    for column in (plain.voc, plain.error):
+        assert np.all(np.isfinite(column))
+        assert np.all(column >= 0)
+    assert plain.voc[sure] == 0
+    for more in (k + 1, 2**53):
+        richer = price(tree, Query(horizon=h, batch=more))
+        assert np.all(richer.voc >= plain.voc - plain.error - richer.error)
+    raised = price(two_level([[m + up for m in row] for row in groups], cov, noise), query)
+    assert np.all(np.abs(raised.voc - plain.voc) <= 1e-10 * scale)
+    larger = price(
+        two_level([[m * times for m in row] for row in groups], cov * times**2, noise * times**2), query
+    )
+    assert np.all(np.abs(larger.voc / times - plain.voc) <= 1e-9 * scale)
+    turn = np.arange(n)[::-1]  # other points meet other leaves: equal within both errors
+    turned = price(two_level([row[::-1] for row in groups[::-1]], cov[turn][:, turn], noise[turn]), query)
+    assert np.all(np.abs(turned.voc[turn] - plain.voc) <= turned.error[turn] + plain.error)
+    drowned = price(two_level(groups, cov, 1e20), Query(batch=k))
+    assert np.all(drowned.voc <= drowned.error + 1e-8 * scale)
+    alone = price(two_level([[m for row in groups for m in row]], cov, noise), Query(batch=k))
+    assert not alone.voc.any()
 
 
 @pytest.mark.slow

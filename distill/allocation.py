@@ -76,6 +76,11 @@ class Search:
         """Posterior mean and variance of each leaf value, shape (n_leaves,); not to be written to."""
         return self._belief.mean, self._belief.var
 
+    @property
+    def trials(self) -> tuple[Floats, Floats]:
+        """alpha and beta of each win/loss leaf, shape (n_leaves,), else empty; not to be written to."""
+        return self._belief.alpha, self._belief.beta
+
     def pick(
         self, rule: str, rng: np.random.Generator, *, remaining: int = 1, exploration: float = 1.0
     ) -> int:

@@ -1,12 +1,14 @@
-"""What a scorer file reads of a tree under search, kind by kind of its inputs."""
+"""What a scorer file reads of a tree under search, for each kind of inputs a file can have."""
 
 from __future__ import annotations
 
 from typing import Any
 
 from distill.allocation import Search as Posterior
+from distill.backup import Backup
 from distill.errors import RefusedError
 from distill.runtime import Scorer, Scores
+from distill.scorer_inputs import LEAF_TABLE, RECORD, WIN_LOSS_TABLE
 from distill.tree import BeliefTree, leaf_table
 
 __all__ = ["ScorerInputs"]
@@ -15,29 +17,51 @@ __all__ = ["ScorerInputs"]
 class ScorerInputs:
     """The arrays of one decision that a scorer's call takes; those that rollouts do not change are kept.
 
-    Raises RefusedError for trees that the file cannot score: `fit` says so beforehand.
+    A leaf table is the agent's own arrays; a record is kept up to date by a backup of the tree, a path to
+    the root after each rollout. Raises RefusedError for trees that the file cannot score: `fit` says so
+    beforehand.
     """
 
     def __init__(self, scorer: Scorer, tree: BeliefTree) -> None:
         if not self.fit(scorer, tree):
-            raise RefusedError("scorer: scores independent Gaussian leaves under decision nodes only")
-        table = leaf_table(tree)
+            raise RefusedError("scorer: the file does not read such trees")
         self._scorer = scorer
-        self._fixed: dict[str, Any] = {
-            "noise_var": table.noise_var,
-            "gain": table.gain,
-            "offset": table.offset,
-            "action": table.action,
-            "cost": table.cost,
-        }
+        self._win_loss = tree.mean is None
+        self._backup = Backup(tree) if scorer.kind is RECORD else None
+        self._fixed: dict[str, Any] = {}
+        if self._backup is None:
+            kept = ("low", "high") if self._win_loss else ("noise_var",)
+            table = leaf_table(tree)
+            self._fixed = {name: getattr(table, name) for name in ("gain", "offset", "action", "cost", *kept)}
 
     @staticmethod
     def fit(scorer: Scorer, tree: BeliefTree) -> bool:
-        """Whether the scorer's inputs can hold the tree."""
-        del scorer  # one kind of inputs so far
-        return tree.var is not None and not tree.has_chance
+        """Whether the scorer's inputs can hold the tree; without a file the closed form takes leaf tables."""
+        if scorer.kind is RECORD:
+            return tree.cov is None
+        own = WIN_LOSS_TABLE if tree.mean is None else LEAF_TABLE
+        return not tree.has_chance and tree.cov is None and scorer.kind in (None, own)
 
     def score(self, posterior: Posterior, remaining: int) -> Scores:
         """One call of the scorer on the beliefs as they are."""
-        mean, var = posterior.moments
-        return self._scorer.score(mean=mean, var=var, remaining=remaining, **self._fixed)
+        columns: dict[str, Any]
+        if self._backup is not None:
+            columns = self._backup.rows()
+        elif self._win_loss:
+            alpha, beta = posterior.trials
+            columns = {"alpha": alpha, "beta": beta, **self._fixed}
+        else:
+            mean, var = posterior.moments
+            columns = {"mean": mean, "var": var, **self._fixed}
+        return self._scorer.score(remaining=remaining, **columns)
+
+    def observe(self, posterior: Posterior, leaf: int) -> None:
+        """Take in that rollouts have changed the belief of one leaf."""
+        if self._backup is None:
+            return
+        if self._win_loss:
+            alpha, beta = posterior.trials
+            self._backup.update(leaf, alpha=float(alpha[leaf]), beta=float(beta[leaf]))
+        else:
+            mean, var = posterior.moments
+            self._backup.update(leaf, mean=float(mean[leaf]), var=float(var[leaf]))

@@ -150,13 +150,14 @@ class ByScorer(_Thrifty):
         self._scale = 0.0
         self._queue: list[int] = []
         self._resting = 0
+        self._posterior: Posterior | None = None
         self._rollout_seconds = 0.0
 
     def __getstate__(self) -> dict[str, Any]:
         """A loaded file stays in its process; another one loads it again."""
         if self._path is None:
             raise InputError("scorer", "must be given as a path to be used by several workers")
-        return {**self.__dict__, "_scorer": None, "_inputs": None}
+        return {**self.__dict__, "_scorer": None, "_inputs": None, "_posterior": None}
 
     @property
     def scorer(self) -> Scorer:
@@ -176,13 +177,14 @@ class ByScorer(_Thrifty):
 
     def begin(self, tree: BeliefTree) -> None:
         """The columns that rollouts do not change."""
-        self._queue, self._resting = [], 0
+        self._queue, self._resting, self._posterior = [], 0, None
         self._set_price(tree)
         self._scale = scale_of(tree)
         self._inputs = ScorerInputs(self.scorer, tree)
 
     def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice | None:
         """What an earlier scoring still has to give, else one call of the scorer."""
+        self._posterior = posterior
         if self._queue:
             return Choice(self._queue.pop())
         if self._resting:
@@ -207,3 +209,9 @@ class ByScorer(_Thrifty):
             due = math.ceil((time.perf_counter() - started) / paid)
             self._resting = max(due - 1 - len(self._queue), 0)
         return Choice(best, max(int(self.commit * scores.batch[best]), 1) if self.commit else 1)
+
+    def observe(self, leaf: int, observed: float, rollouts: int) -> None:
+        """Keep what the scorer reads up to date; the beliefs have taken the rollouts in already."""
+        del observed, rollouts
+        if self._inputs is not None and self._posterior is not None:
+            self._inputs.observe(self._posterior, leaf)

@@ -284,8 +284,8 @@ def threshold_voc(
         value, quad = _beyond(T, y0, mu, s[k], tau[k], not best, t, m)
         voc[k] += value
         # At an outcome y the value is known to T.error + slack, for e_tau(y) - e_now is off by T.error at
-        # most; that carries over with the odds of such an outcome. Twice it: T.error is partly estimated.
+        # most; that carries over with the odds of such an outcome.
         _e0, slope0 = _excess(T, y0, tau[k], t, m)
         z = (mu - y0) / s[k] if not best else (y0 - mu) / s[k]
         odds = norm_cdf(z + min(slack / (s[k] * max(slope0, 1e-300)), 1e6))
-        error[k] += quad + 2.0 * (slack + _EPS * (abs(y0) + abs(mu))) * odds
+        error[k] += quad + (slack + 2.0 * _EPS * (abs(y0) + abs(mu))) * odds

@@ -93,7 +93,7 @@ class _Prices:
         if len(actions) > 1:
             rivals = [(np.delete(self.value, a), np.delete(self.error, a)) for a in range(len(actions))]
             self.ahead = [
-                (float(v.max() - self.value[a]), float(e.max() + self.error[a]))
+                (float(v.max() - self.value[a]), _error_of_largest(v, e) + float(self.error[a]))
                 for a, (v, e) in enumerate(rivals)
             ]
 
@@ -157,3 +157,9 @@ class _Prices:
         tau = np.sqrt(to_come + threshold.rest_var)
         threshold_voc(threshold.T, threshold.mean, sd_now, s, tau, ahead, slack, voc, error)
         return voc, error
+
+
+def _error_of_largest(value: Floats, error: Floats) -> float:
+    """How far off the largest may be: values far below it do not count, however wide their bounds."""
+    top = value.max()
+    return float(max((value + error).max() - top, top - (value - error).max()))

@@ -75,7 +75,9 @@ class _Tables:
         self.value = float(mean[best]) + _expected_tail(
             a[best], b[best], low[best], width[best], h, best, *self.tables
         )
-        self.error = 8 * _EPS * float(group.size + np.max(width) + np.max(self.tables[2][:, 0], initial=0.0))
+        # Four roundings of a mean, and the sum of the tail; `price_groups` adds those of the columns.
+        sums = 2.0 * float(np.max(np.abs(mean))) + 4.0 * float(np.max(self.tables[2][:, 0], initial=0.0))
+        self.error = _EPS * sums
 
     def price(self, rival: float, slack: float, query: Query) -> tuple[Floats, Ints, Floats]:
         """VOC (or rate), batch and error of every leaf; see `win_loss_groups.Choice`."""
@@ -333,7 +335,7 @@ def _price_pairs(
         y = _means(ai, bi, lo, wi, k + h)
         t, _, _ = _read(y, atom, more[i], tail[i], lead[i])
         gain, in_doubt = 0.0, 0.0
-        sure = rounding + _EPS * wi * math.sqrt(k + h + 1.0)
+        sure = rounding + 0.5 * _EPS * wi * (1.0 + math.sqrt(k + h + 1.0))
         if rival > -math.inf:
             odds = beta_binomial_law(ai, bi, k)
             for m in range(k + 1):
@@ -362,5 +364,5 @@ def _price_pairs(
                 gain += rises[k]
                 error[c] += noise[k]
         voc[c] = gain
-        error[c] += gain * _EPS * (k + h + 16.0)
+        error[c] += gain * _EPS * (k + h + 6.0)
     return voc, error

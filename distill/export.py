@@ -297,6 +297,7 @@ def _set_metadata(
         "about": _json(dict(metadata)),
         "calibration": _json(upper.facts()),
         "features": _json(list(names)),
+        "input": feature_graph.kind.name,
         "ranges": _json({name: [float(a), float(b)] for name, (a, b) in zip(names, limits, strict=True)}),
         "self_test": _json(cases),
         "transform": transform,

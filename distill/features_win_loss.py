@@ -41,6 +41,7 @@ FEATURE_NAMES: Final = (
     "small_batch",  # the best batch of up to 8
     "large_batch",  # log of the best batch of the normal form
     "run",  # length of a run of wins, or of losses, that reaches the threshold, cut at 40
+    "to_whole",  # what is missing of that length to the next whole number
     "trials",  # alpha + beta, cut at 60
     "odds",  # of the result that leads to the threshold
     "left",  # log of the rollouts left over the best batch of the normal form, cut at 3
@@ -287,6 +288,9 @@ def _run(g: Nodes, t0: str, k: str, share: str, total: str, sign: str) -> tuple[
     far = g("Abs", t0)
     # w wins alone move the mean by (1 - p) w / (total + w), losses by p w / (total + w).
     run = g("Div", g("Mul", total, far), g("Max", g("Sub", reach, far), g.double(1e-12)))
+    run = g("Min", run, g.double(40.0))
+    next_ = g("Cast", g("Add", run, g.double(1 - 1e-9)), to=TensorProto.INT64)
+    to_whole = g("Sub", g("Cast", next_, to=TensorProto.DOUBLE), run)
     many = g("Max", k, one)
     left = g("Clip", g("Log", g("Div", g("Max", "remaining", one), many)), g.scalar(0.0), g.scalar(3.0))
-    return (g("Log", many), g("Min", run, g.double(40.0)), g("Min", total, g.double(60.0)), odds, left)
+    return (g("Log", many), run, to_whole, g("Min", total, g.double(60.0)), odds, left)

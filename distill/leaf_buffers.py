@@ -1,4 +1,4 @@
-"""A leaf table laid out for onnxruntime: arrays that it reads and writes in place; floor 3, light."""
+"""The arrays of one call laid out for onnxruntime, which reads and writes them in place; floor 3, light."""
 
 from __future__ import annotations
 
@@ -9,12 +9,10 @@ from numpy.typing import NDArray
 
 from distill import schema
 from distill.errors import InputError
+from distill.scorer_inputs import InputKind
 
-__all__ = ["BELIEFS", "FLOATS", "INPUTS", "MAX_LEAVES", "LeafBuffers", "number_array"]
+__all__ = ["MAX_LEAVES", "LeafBuffers", "number_array"]
 
-FLOATS: Final = ("mean", "var", "noise_var", "gain", "offset", "cost")
-BELIEFS: Final = FLOATS[:5]
-INPUTS: Final = (*FLOATS, "action", "remaining")
 MAX_LEAVES: Final = 2**20
 _OUTPUTS: Final = {
     "voc": np.float64,
@@ -30,25 +28,32 @@ _SCALARS: Final = ("pick", "worth_it")
 class LeafBuffers:
     """Inputs and outputs of a scorer for n leaves, bound to its session once; for one thread.
 
-    `columns` are views into `floats`, so that one copy and one check serve all six.
+    `columns` are views into `floats`, so that one copy and one check serve all of them. Kinds of input
+    without `action` keep theirs at 0.
     """
 
-    def __init__(self, n: int, session: Any) -> None:
+    def __init__(self, n: int, kind: InputKind, session: Any) -> None:
         self.shape = (n,)
-        self.floats = np.zeros(len(FLOATS) * n)
-        self._is_finite = np.zeros(len(FLOATS) * n, dtype=bool)
+        self.kind = kind
+        width = len(kind.floats)
+        self.floats = np.zeros(width * n)
+        self._is_finite = np.zeros(width * n, dtype=bool)
         self.action = np.zeros(n, dtype=np.int64)
         self.remaining = np.zeros(())
-        self.columns = dict(zip(FLOATS, self.floats.reshape(len(FLOATS), n), strict=True))
+        self.columns = dict(zip(kind.floats, self.floats.reshape(width, n), strict=True))
         self.out: dict[str, NDArray[Any]] = {
             name: np.zeros(() if name in _SCALARS else n, dtype=kind) for name, kind in _OUTPUTS.items()
         }
         self.pick, self.in_range = self.out["pick"], self.out["in_range"]
         self.binding: Any = None
         self.has_bound = False
+        self.answered = False
         if session is not None:
             self.binding = session.io_binding()
-            for name, x in {**self.columns, "action": self.action, "remaining": self.remaining}.items():
+            inputs: dict[str, NDArray[Any]] = {**self.columns, "remaining": self.remaining}
+            if kind.has_action:
+                inputs["action"] = self.action
+            for name, x in inputs.items():
                 self.binding.bind_input(name, "cpu", 0, x.dtype.type, list(x.shape), x.ctypes.data)
             there = {output.name for output in session.get_outputs()}
             self.has_bound = "voc_high" in there
@@ -63,18 +68,22 @@ class LeafBuffers:
         for column in columns:
             if column.shape != shape:
                 raise ValueError
-        if action.shape != shape or type(remaining) not in (int, float):
+        if type(remaining) not in (int, float):
             raise ValueError
+        if self.kind.has_action:
+            if action.shape != shape:
+                raise ValueError
+            np.copyto(self.action, action, casting="same_kind")
         np.concatenate(columns, out=self.floats, casting="same_kind")
-        np.copyto(self.action, action, casting="same_kind")
         self.remaining[()] = remaining
 
     def fill_with_care(self, arrays: dict[str, NDArray[Any]], remaining: float) -> None:
         """Copy arrays in that are known to be numbers of the right shapes."""
         with np.errstate(over="ignore"):
-            for name in FLOATS:
-                np.copyto(self.columns[name], arrays[name], casting="same_kind")
-        np.copyto(self.action, arrays["action"], casting="same_kind")
+            for name, column in self.columns.items():
+                np.copyto(column, arrays[name], casting="same_kind")
+        if self.kind.has_action:
+            np.copyto(self.action, arrays["action"], casting="same_kind")
         self.remaining[()] = remaining
 
     def finite(self) -> bool:
@@ -84,25 +93,17 @@ class LeafBuffers:
         return b"\0" not in self._is_finite.tobytes() and bool(0 <= self.remaining <= schema.MAX_ROLLOUTS)
 
     def usable(self, strict: bool) -> NDArray[np.bool_]:
-        """Rows whose values a leaf table may hold; with `strict` the first other one is an error."""
+        """Rows whose values the input may hold; with `strict` the first other one is an error."""
         n = len(self.action)
-        columns = self.columns
-        u, u2 = schema.MAX_UTILITY, schema.MAX_VARIANCE
-        rules = {
-            name: (np.abs(columns[name]) <= u, f"must be at most {u:g} in size")
-            for name in ("mean", "offset", "cost")
-        }
-        var, noise, gain = (columns[name] for name in ("var", "noise_var", "gain"))
-        rules["var"] = ((var >= 0) & (var <= u2), f"must be from 0 to {u2:g}")
-        rules["noise_var"] = ((noise > 0) & (noise <= u2), f"must be above 0 and at most {u2:g}")
-        rules["gain"] = ((gain >= 0) & (gain <= 1), "must be from 0 to 1")
-        rules["action"] = ((self.action >= 0) & (self.action < n), f"must be from 0 to {n - 1}")
+        rules = self.kind.rules(self.columns)
+        if self.kind.has_action:
+            rules["action"] = ((self.action >= 0) & (self.action < n), f"must be from 0 to {n - 1}")
         left = bool(0 <= self.remaining <= schema.MAX_ROLLOUTS)
         usable = np.full(n, left)
         for name, (ok, rule) in rules.items():
             if strict and not ok.all():
                 row = int(np.argmin(ok))
-                value = self.action[row] if name == "action" else columns[name][row]
+                value = self.action[row] if name == "action" else self.columns[name][row]
                 raise InputError(f"{name}[{row}]", rule, value.item())
             usable &= ok
         if strict and not left:

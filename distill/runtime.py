@@ -4,10 +4,11 @@
     leaf = scorer.pick(mean=..., var=..., noise_var=..., gain=..., offset=..., action=..., cost=...,
                        remaining=100)
 
-A call copies the arrays into buffers that onnxruntime reads in place, and runs on the calling thread;
-threads may share a scorer, each has buffers of its own. Where the file has no answer - a leaf unlike
-those of training, invalid values, a deadline that has passed, a file that was refused - the closed-form
-static rate answers instead, and is counted.
+These are the columns of a leaf table; files for win/loss leaves or for records take others, see
+`distill.scorer_inputs`. A call copies the arrays into buffers that onnxruntime reads in place, and runs on
+the calling thread; threads may share a scorer, each has buffers of its own. Where the file has no answer -
+a leaf unlike those of training, invalid values, a deadline that has passed, a file that was refused - the
+closed-form static rate answers instead (for records the first-order rate), and is counted.
 """
 
 from __future__ import annotations
@@ -16,7 +17,6 @@ import hashlib
 import os
 import threading
 import time
-from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Final, NamedTuple
@@ -26,9 +26,10 @@ import onnxruntime as ort
 from numpy.typing import NDArray
 
 from distill import schema, scorer_file
-from distill.closed_form import highest_rates, static_rates
 from distill.errors import DistillError, InputError, ScorerFileError
-from distill.leaf_buffers import BELIEFS, FLOATS, INPUTS, MAX_LEAVES, LeafBuffers, number_array
+from distill.fallback import closed_form_bounds, closed_form_values
+from distill.leaf_buffers import MAX_LEAVES, LeafBuffers, number_array
+from distill.scorer_inputs import KINDS, InputKind, kind_of
 
 __all__ = ["Counters", "Scorer", "Scores"]
 
@@ -46,10 +47,11 @@ class Scores(NamedTuple):
     voc : (n,), the value it was trained on, by default the rate, u a rollout; gross of cost.
     batch : (n,), the rollouts that value assumes. voc_high : (n,), calibrated upper bound, gross of cost:
     the exact value lies at or below it as often as `facts["calibration"]` states. in_range : (n,), False
-    where the leaf is unlike those of training, and `voc` is the closed-form static rate; `voc_high` is
-    then, and with files that have none, a bound that no rate of such a leaf exceeds. pick : position of
-    the largest voc - cost, the first on ties. worth_it : whether that is above 0. With `tree`, pick (a
-    position within its tree) and worth_it have one entry a tree.
+    where the leaf is unlike those of training or the file had no answer, and `voc` is the closed-form
+    static rate. There, and with files that have none, `voc_high` is a bound that no value of such a leaf
+    exceeds, or `voc` where that is larger. pick : position of the largest voc - cost, the first on ties.
+    worth_it : whether that is above 0. With `tree`, pick (a position within its tree) and worth_it have
+    one entry a tree.
     """
 
     voc: Floats
@@ -77,17 +79,18 @@ class Counters:
 
 
 class _Local(threading.local):
-    """Buffers of the calling thread, by number of leaves; the oldest is dropped first."""
+    """Buffers of the calling thread, by kind and number of leaves; the oldest is dropped first."""
 
     def __init__(self) -> None:
-        self.kept: dict[int, LeafBuffers] = {}
+        self.kept: dict[str, dict[int, LeafBuffers]] = {name: {} for name in KINDS}
 
 
 @dataclass(eq=False)
 class Scorer:
     """A scorer file, checked and ready. Make one with `Scorer.load`.
 
-    facts : the file's metadata (format, about, features, ranges, transform, measured ...).
+    facts : the file's metadata (format, about, features, input, ranges, transform, measured ...).
+    kind : the input that the file reads; None without a file, which takes any.
     strict : raise on invalid values and on a failing file instead of falling back.
     refused : why the file was refused, with `load(..., guard=True)`; else None.
     """
@@ -97,10 +100,12 @@ class Scorer:
     refused: str | None = None
     counters: Counters = field(default_factory=Counters)
     _session: Any = field(default=None, repr=False)
+    kind: InputKind | None = field(default=None, init=False)
     _batch: int | None = field(default=None, init=False, repr=False)
     _local: _Local = field(default_factory=_Local, repr=False)
 
     def __post_init__(self) -> None:
+        self.kind = KINDS.get(self.facts.get("input", ""))
         about = self.facts.get("about")
         value = about.get("value") if isinstance(about, dict) else None
         batch = value.get("batch") if isinstance(value, dict) else None
@@ -153,33 +158,29 @@ class Scorer:
         return cls({})
 
     def score(
-        self,
-        *,
-        mean: Any,
-        var: Any,
-        noise_var: Any,
-        gain: Any,
-        offset: Any,
-        action: Any,
-        cost: Any,
-        remaining: Any,
-        tree: Any = None,
-        deadline: float | None = None,
+        self, *, remaining: Any, tree: Any = None, deadline: float | None = None, **columns: Any
     ) -> Scores:
         """Score every leaf of one tree, or of many with `tree`.
 
-        Leaf i counts gain_i X_i + offset_i under root action action_i, X_i ~ N(mean_i, var_i); one
-        rollout adds noise of variance noise_var_i and costs cost_i. All arrays have length n; action
-        holds whole numbers from 0 to n - 1. remaining : rollouts left. tree : (n,), the rows of a tree
+        columns : those of the file's kind of input by name, each of length n.
+
+        Leaf table: mean, var, noise_var, gain, offset, action, cost. Leaf i counts gain_i X_i + offset_i
+        under root action action_i, X_i ~ N(mean_i, var_i); one rollout adds noise of variance noise_var_i
+        and costs cost_i. action holds whole numbers from 0 to n - 1.
+        Win/loss leaf table: alpha, beta, low, high in place of mean and variances, X_i = low_i +
+        (high_i - low_i) p_i, p_i ~ Beta(alpha_i, beta_i).
+        Record: what `distill.backup` gives of each leaf of any tree, `schema.RECORD_UNITS`.
+
+        remaining : rollouts left. tree : (n,), the rows of a tree
         side by side; remaining may then be an array of length n, and each tree is scored as if alone.
         deadline : a time of time.perf_counter(); once it has passed, the closed form answers.
         Raises InputError for arrays that form no leaf table (shapes, kinds of numbers); for invalid
         values only if `strict`, else they are flagged and the closed form scores the other rows.
         """
-        columns = (mean, var, noise_var, gain, offset, cost)
+        kind = self._kind_for(columns)
         if tree is not None:
-            return self._score_many(columns, action, remaining, tree, deadline)
-        buffers, clean = self._run(columns, action, remaining, deadline)
+            return self._score_many(kind, columns, remaining, tree, deadline)
+        buffers, clean = self._run(kind, columns, remaining, deadline)
         if not clean:
             return self._mend(buffers)
         out = buffers.out
@@ -192,40 +193,42 @@ class Scorer:
             bool(out["worth_it"]),
         )
 
-    def pick(
-        self,
-        *,
-        mean: Any,
-        var: Any,
-        noise_var: Any,
-        gain: Any,
-        offset: Any,
-        action: Any,
-        cost: Any,
-        remaining: Any,
-        deadline: float | None = None,
-    ) -> int:
+    def pick(self, *, remaining: Any, deadline: float | None = None, **columns: Any) -> int:
         """Position of the leaf with the largest voc - cost, the first on ties; arguments as for `score`."""
-        buffers, clean = self._run((mean, var, noise_var, gain, offset, cost), action, remaining, deadline)
+        buffers, clean = self._run(self._kind_for(columns), columns, remaining, deadline)
         return int(buffers.pick) if clean else int(self._mend(buffers).pick)
 
     # --- one call ---------------------------------------------------------------------------------
 
+    def _kind_for(self, columns: dict[str, Any]) -> InputKind:
+        """The file's kind, or without a file that of the columns; InputError where they are not its own."""
+        kind = self.kind or kind_of(columns)
+        if kind is None:
+            raise InputError("columns", f"must be those of a {' or a '.join(KINDS)}", ", ".join(columns))
+        if len(columns) != len(kind.columns):
+            for name in columns:
+                if name not in kind.columns:
+                    raise InputError(name, f"is no column of a {kind.name}")
+        return kind
+
     def _run(
-        self, columns: tuple[Any, ...], action: Any, remaining: Any, deadline: float | None
+        self, kind: InputKind, columns: dict[str, Any], remaining: Any, deadline: float | None
     ) -> tuple[LeafBuffers, bool]:
         """Fill the buffers and run; False where the answer needs mending."""
         try:
-            buffers = self._local.kept[len(columns[0])]
-            buffers.fill(columns, action, remaining)
+            floats = tuple([columns[name] for name in kind.floats])
+            buffers = self._local.kept[kind.name][len(floats[0])]
+            buffers.fill(floats, columns["action"] if kind.has_action else None, remaining)
         except (AttributeError, KeyError, OverflowError, TypeError, ValueError):
-            buffers = self._fill_with_care(columns, action, remaining)
+            buffers = self._fill_with_care(kind, columns, remaining)
         self.counters.decisions += 1
+        buffers.answered = False
         if deadline is not None and time.perf_counter() >= deadline:
             self.counters.late += 1
         elif self._session is not None and buffers.finite():
             try:
                 self._session.run_with_iobinding(buffers.binding)
+                buffers.answered = True
                 return buffers, b"\0" not in buffers.in_range.tobytes()
             except Exception as e:  # onnxruntime raises its own types, e.g. for an action out of bounds
                 buffers.usable(self.strict)
@@ -234,49 +237,51 @@ class Scorer:
         buffers.in_range[:] = False
         return buffers, False
 
-    def _fill_with_care(self, columns: tuple[Any, ...], action: Any, remaining: Any) -> LeafBuffers:
+    def _fill_with_care(self, kind: InputKind, columns: dict[str, Any], remaining: Any) -> LeafBuffers:
         """The way in for a first call and for anything but plain arrays; InputError names what is wrong."""
-        first = number_array(FLOATS[0], columns[0], "f")
+        arrays = _arrays(kind, columns)
+        first = arrays[kind.floats[0]]
         if first.ndim != 1 or not 1 <= len(first) <= MAX_LEAVES:
-            raise InputError("mean", f"must have shape (n,), n from 1 to {MAX_LEAVES}", first.shape)
+            raise InputError(kind.floats[0], f"must have shape (n,), n from 1 to {MAX_LEAVES}", first.shape)
         n = len(first)
-        arrays = {name: number_array(name, x, "f") for name, x in zip(FLOATS, columns, strict=True)}
-        arrays["action"] = number_array("action", action, "i")
         for name, x in arrays.items():
             if x.shape != (n,):
-                raise InputError(name, f"must have shape ({n},), as 'mean'", x.shape)
+                raise InputError(name, f"must have shape ({n},), as {kind.floats[0]!r}", x.shape)
         left = number_array("remaining", remaining, "f")
         if left.size != 1:
             raise InputError("remaining", "must be one number", left.shape)
-        kept = self._local.kept
+        kept = self._local.kept[kind.name]
         if n not in kept:
             if len(kept) >= _KEPT_SIZES:
                 del kept[next(iter(kept))]
-            kept[n] = LeafBuffers(n, self._session)
+            kept[n] = LeafBuffers(n, kind, self._session)
         kept[n].fill_with_care(arrays, left.item())
         return kept[n]
 
     def _mend(self, buffers: LeafBuffers) -> Scores:
-        """The closed form where the file has no answer; counted."""
+        """What is said where the file's answer is missing or deserves less trust; counted.
+
+        Leaves unlike those of training keep the file's answer: their features, cut to the ranges of
+        training, led it closer to the exact value than the static rate comes.
+        """
         usable = buffers.usable(self.strict)
-        in_range = buffers.in_range & usable
-        if not usable.all():
-            self.counters.invalid += 1
-            in_range[:] = False  # one bad leaf spoils the features of the others
-        elif in_range.any():
-            self.counters.out_of_range += 1
-        if not in_range.any():
-            self.counters.fallback += 1
+        # One bad leaf spoils the features of the others.
+        kept = np.full(len(usable), bool(buffers.answered and usable.all()))
+        kept &= np.isfinite(buffers.out["voc"])
+        in_range = buffers.in_range & kept
+        self.counters.invalid += not usable.all()
+        self.counters.out_of_range += bool(kept.any())
+        self.counters.fallback += not kept.any()
         n = len(usable)
         voc, high, batch = np.zeros(n), np.zeros(n), np.zeros(n, dtype=np.int64)
         if usable.any():
-            rows = {name: buffers.columns[name][usable] for name in BELIEFS}
-            voc[usable], batch[usable] = static_rates(
-                **rows, remaining=float(buffers.remaining), batch=self._batch
+            rows = {name: x[usable] for name, x in buffers.columns.items()}
+            voc[usable], batch[usable] = closed_form_values(
+                buffers.kind, rows, float(buffers.remaining), self._batch
             )
             high[usable] = self._bounds(buffers, usable)
-        voc[in_range] = buffers.out["voc"][in_range]
-        batch[in_range] = buffers.out["batch"][in_range]
+        voc[kept], batch[kept] = buffers.out["voc"][kept], buffers.out["batch"][kept]
+        high = np.maximum(high, voc)
         if buffers.has_bound:
             high[in_range] = buffers.out["voc_high"][in_range]
         net = np.where(usable, voc - buffers.columns["cost"], -np.inf)
@@ -287,29 +292,27 @@ class Scorer:
         """The bound that no value exceeds; 0 for a rate where nothing is left to roll out."""
         if self._batch is None and buffers.remaining < 1:
             return np.zeros(len(buffers.action[rows]))
-        var, noise_var, gain = (buffers.columns[name][rows] for name in ("var", "noise_var", "gain"))
-        return highest_rates(var, noise_var, gain, self._batch or 1)
+        columns = {name: x[rows] for name, x in buffers.columns.items()}
+        return closed_form_bounds(buffers.kind, columns, self._batch or 1)
 
     def _score_many(
-        self, columns: Sequence[Any], action: Any, remaining: Any, tree: Any, deadline: float | None
+        self, kind: InputKind, columns: dict[str, Any], remaining: Any, tree: Any, deadline: float | None
     ) -> Scores:
-        names = (*FLOATS, "action", "tree")
-        kinds = "ffffffii"
-        arrays = [number_array(*x) for x in zip(names, (*columns, action, tree), kinds, strict=True)]
-        n = arrays[0].size
+        arrays = _arrays(kind, columns)
+        labels = number_array("tree", tree, "i")
+        n = arrays[kind.floats[0]].size
         left = number_array("remaining", remaining, "f")
         left = np.full(n, left.item()) if left.size == 1 else left
-        for name, x in zip((*names, "remaining"), (*arrays, left), strict=True):
+        for name, x in {**arrays, "tree": labels, "remaining": left}.items():
             if x.shape != (n,) or n == 0:
                 raise InputError(name, f"must have shape ({n},), at least one leaf", x.shape)
-        labels = arrays[-1]
         starts = np.flatnonzero(np.r_[True, labels[1:] != labels[:-1]]).tolist()
         if len(np.unique(labels)) != len(starts):
             raise InputError("tree", "rows of one tree must be side by side")
         parts = []
         for a, b in zip(starts, [*starts[1:], n], strict=True):
-            part = {name: x[a:b] for name, x in zip(names[:-1], arrays, strict=False)}
-            parts.append(self.score(**part, remaining=float(left[a]), deadline=deadline))
+            part = {name: x[a:b] for name, x in arrays.items()}
+            parts.append(self.score(remaining=float(left[a]), deadline=deadline, **part))
         return Scores(
             np.concatenate([p.voc for p in parts]),
             np.concatenate([p.batch for p in parts]),
@@ -322,9 +325,10 @@ class Scorer:
     def _self_test(self) -> None:
         """Hold the file against the answers stored in it."""
         compared = 0
+        assert self.kind is not None
         for i, case in enumerate(self.facts["self_test"]):
             try:
-                inputs: dict[str, Any] = {name: np.asarray(case["inputs"][name]) for name in INPUTS}
+                inputs: dict[str, Any] = {name: np.asarray(case["inputs"][name]) for name in self.kind.inputs}
                 got = self.score(**inputs)
                 want = np.asarray(case["outputs"]["voc"], dtype=float)
                 inside = np.asarray(case["outputs"]["in_range"], dtype=bool) & got.in_range
@@ -338,6 +342,16 @@ class Scorer:
         if compared == 0:
             raise ScorerFileError("self-test: no stored leaf is in the file's own range")
         self.counters = Counters()
+
+
+def _arrays(kind: InputKind, columns: dict[str, Any]) -> dict[str, NDArray[Any]]:
+    """The columns as arrays of numbers; InputError for one that is missing or holds something else."""
+    out = {}
+    for name in kind.columns:
+        if name not in columns:
+            raise InputError(name, f"is missing: a {kind.name} has it")
+        out[name] = number_array(name, columns[name], "i" if name == "action" else "f")
+    return out
 
 
 def _session(data: bytes) -> Any:

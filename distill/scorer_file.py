@@ -20,6 +20,7 @@ from numpy.typing import NDArray
 from distill import schema
 from distill.errors import ScorerFileError
 from distill.onnx_reader import BOOL, DOUBLE, INT64, Model, Node, ValueInfo, read_model
+from distill.scorer_inputs import KINDS, LEAF_TABLE, InputKind
 from distill.scorer_shapes import OPERATORS, check_shapes
 
 __all__ = ["FORMAT", "MAX_BYTES", "check"]
@@ -34,12 +35,8 @@ _MAX_CASES: Final = 100
 _IR_VERSION: Final = 10
 _OPSETS: Final = ({"": 18}, {"": 18, "ai.onnx.ml": 5})
 _METADATA: Final = ("format", "about", "features", "ranges", "self_test", "transform")
-_OPTIONAL: Final = ("measured", "calibration")
-_COLUMNS: Final = ("mean", "var", "noise_var", "gain", "offset", "action", "cost")
-_INPUTS: Final[dict[str, tuple[int, tuple[str, ...]]]] = {
-    **{name: (INT64 if name == "action" else DOUBLE, ("n",)) for name in _COLUMNS},
-    "remaining": (DOUBLE, ()),
-}
+_OPTIONAL: Final = ("measured", "calibration", "input")
+_TEXTS: Final = ("format", "input", "transform")
 _OUTPUTS: Final[dict[str, tuple[int, tuple[str, ...]]]] = {
     "voc": (DOUBLE, ("n",)),
     "batch": (INT64, ("n",)),
@@ -51,6 +48,13 @@ _OUTPUTS: Final[dict[str, tuple[int, tuple[str, ...]]]] = {
 
 
 _Ends = Mapping[str, tuple[int, tuple[str, ...]]]
+
+
+def _inputs(kind: InputKind) -> _Ends:
+    ends: dict[str, tuple[int, tuple[str, ...]]] = dict.fromkeys(kind.floats, (DOUBLE, ("n",)))
+    if kind.has_action:
+        ends["action"] = (INT64, ("n",))
+    return {**ends, "remaining": (DOUBLE, ())}
 
 
 def check(data: bytes) -> dict[str, Any]:
@@ -66,10 +70,11 @@ def check(data: bytes) -> dict[str, Any]:
     if len(dict(model.opsets)) != len(model.opsets) or dict(model.opsets) not in _OPSETS:
         raise ScorerFileError(f"operator sets must be one of {_OPSETS}; got {model.opsets}")
     facts = _facts(model)
+    inputs = _inputs(KINDS[facts["input"]])
     outputs = {k: x for k, x in _OUTPUTS.items() if k != "voc_high" or facts["format"] == FORMAT}
-    _check_ends(model, outputs)
-    _check_constants(model)
-    _check_nodes(model, outputs, len(facts["features"]))
+    _check_ends(model, inputs, outputs)
+    _check_constants(model, inputs)
+    _check_nodes(model, inputs, outputs, len(facts["features"]))
     check_shapes(model)
     return facts
 
@@ -82,11 +87,11 @@ def _facts(model: Model) -> dict[str, Any]:
     size = sum(len(text) for text in model.metadata.values())
     if size > _MAX_METADATA:
         raise ScorerFileError(f"metadata must be at most {_MAX_METADATA} characters; got {size}")
-    facts: dict[str, Any] = {}
+    facts: dict[str, Any] = {"input": LEAF_TABLE.name}  # what files say nothing of it read
     for name, text in model.metadata.items():
         if name not in _METADATA + _OPTIONAL:
             raise ScorerFileError(f"metadata {name!r}: has no place in a scorer file")
-        if name in ("format", "transform"):
+        if name in _TEXTS:
             facts[name] = text
             continue
         try:
@@ -95,6 +100,8 @@ def _facts(model: Model) -> dict[str, Any]:
             raise ScorerFileError(f"metadata {name!r}: must be JSON of finite numbers") from None
     if facts["format"] not in (FORMAT, _WITHOUT_BOUND):
         raise ScorerFileError(f"format must be {FORMAT!r}; got {facts['format'][:40]!r}")
+    if facts["input"] not in KINDS:
+        raise ScorerFileError(f"metadata 'input': must be one of {', '.join(KINDS)}")
     names = facts["features"]
     if not isinstance(names, list) or not names or not all(isinstance(x, str) for x in names):
         raise ScorerFileError("metadata 'features': must be a list of names")
@@ -108,9 +115,9 @@ def _no_constant(name: str) -> float:
     raise ValueError(name)
 
 
-def _check_ends(model: Model, outputs: _Ends) -> None:
+def _check_ends(model: Model, inputs: _Ends, outputs: _Ends) -> None:
     """Inputs and outputs are exactly those of a scorer, in any order."""
-    for found, allowed, kind in ((model.inputs, _INPUTS, "input"), (model.outputs, outputs, "output")):
+    for found, allowed, kind in ((model.inputs, inputs, "input"), (model.outputs, outputs, "output")):
         seen: set[str] = set()
         for info in found:
             if info.name not in allowed or info.name in seen:
@@ -130,19 +137,19 @@ def _check_end(info: ValueInfo, allowed: tuple[int, tuple[str, ...]], kind: str)
         )
 
 
-def _check_constants(model: Model) -> None:
+def _check_constants(model: Model, inputs: _Ends) -> None:
     for name, array in model.constants.items():
-        if name in _INPUTS or name in _OUTPUTS:
+        if name in inputs or name in _OUTPUTS:
             raise ScorerFileError(f"initializer {name!r}: must not stand for an input or output")
         if array.dtype.kind == "f" and not np.all(np.isfinite(array)):
             raise ScorerFileError(f"initializer {name!r}: must be finite")
 
 
-def _check_nodes(model: Model, outputs: _Ends, n_features: int) -> None:
+def _check_nodes(model: Model, inputs: _Ends, outputs: _Ends, n_features: int) -> None:
     """Allowed operators, every input known before it is read, every output new."""
     if len(model.nodes) > _MAX_NODES:
         raise ScorerFileError(f"must have at most {_MAX_NODES} nodes; got {len(model.nodes)}")
-    known = {*_INPUTS, *model.constants}
+    known = {*inputs, *model.constants}
     for node in model.nodes:
         name = f"{node.domain}:{node.op}" if node.domain else node.op
         if name not in OPERATORS:

@@ -79,8 +79,8 @@ class InputKind:
         """All inputs of a scorer: the columns, and `remaining`."""
         return (*self.columns, "remaining")
 
-    def violations(self, columns: Mapping[str, Floats]) -> dict[str, tuple[NDArray[np.bool_], str]]:
-        """Column -> (rows that keep its rule, the rule)."""
+    def rules(self, columns: Mapping[str, Floats]) -> dict[str, tuple[NDArray[np.bool_], str]]:
+        """Column -> (which rows keep its rule, the rule)."""
         found = {name: (_RULES[name].holds(columns[name]), str(_RULES[name])) for name in self.floats}
         if "high" in columns:
             found["high"] = (found["high"][0] & (columns["high"] > columns["low"]), "must be above low")

@@ -259,7 +259,7 @@ def test_one_observation_can_raise_one_rival_and_lower_another():
 def test_scale_and_shift_change_units_only(seed, family, scale, shift):
     tree = drawn(family, seed)
     a, b = backup_of(tree).rows(), backup_of(shifted(tree, scale, shift)).rows()
-    units = {"slope": scale, "other_slope": scale, "cost": scale}
+    units = dict.fromkeys(("slope", "other_slope", "spread", "cost"), scale)
     for name, x in a.items():
         if name in ("bend", "now"):  # a ratio of two small numbers where the slope is next to nothing
             x, b[name] = x[a["slope"] > 1e-6], b[name][a["slope"] > 1e-6]

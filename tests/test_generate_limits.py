@@ -133,7 +133,7 @@ source = load_family(source) if source.endswith(".toml") else Traces.read([sourc
 generate(source, out, trees=trees, asked=Asked(horizon=0, batch=1), shard_trees=500)
 print(json.dumps(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024))
 """
-_CEILING = 600  # MB of one process that draws and labels, libraries and compiled methods included
+_CEILING = 400  # MB of one process that draws and labels, libraries and compiled methods included
 
 
 @pytest.mark.slow

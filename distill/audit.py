@@ -39,7 +39,7 @@ from distill.tree import BeliefTree, Floats, leaf_table
 from distill.tree_columns import COLUMNS, decision_key, tree_columns
 from distill.validate import examine, sample_pairs
 
-__all__ = ["AUDIT_FORMAT", "WORTH_ADDING", "Audit", "audit", "write_audit"]
+__all__ = ["AUDIT_FORMAT", "WORTH_ADDING", "Audit", "audit", "sample_trees", "write_audit"]
 
 AUDIT_FORMAT: Final = "voc-audit/1"
 WORTH_ADDING: Final = "worth-adding.jsonl.gz"
@@ -90,7 +90,7 @@ def audit(
     path = Path(scorer)
     sheet = _read_sheet(path)
     loaded = Scorer.load(path)
-    sample, total = _sample(read_many(traces, bad or BadLines(strict=True)), trees, seed)
+    sample, total = sample_trees(read_many(traces, bad or BadLines(strict=True)), trees, seed)
     asked = _asked(sheet["value"])
     candidates, kept, aside = _label(sample, asked)
     clusters = candidates.clusters
@@ -176,8 +176,13 @@ def _asked(value: Mapping[str, Any]) -> Asked:
     return Asked(horizon=float(value["horizon"]), batch=None if batch is None else int(batch))
 
 
-def _sample(found: Iterable[tuple[str, BeliefTree]], most: int, seed: int) -> tuple[list[BeliefTree], int]:
-    """At most `most` trees of a stream, each as likely as any other, in order (Vitter 1985, algorithm R)."""
+def sample_trees(
+    found: Iterable[tuple[str, BeliefTree]], most: int, seed: int
+) -> tuple[list[BeliefTree], int]:
+    """At most `most` trees of a stream, and how many it held.
+
+    Each is as likely to be kept as any other (Vitter 1985, algorithm R); they stay in order.
+    """
     rng = np.random.default_rng([seed, 0xA0D17])
     kept: list[tuple[int, BeliefTree]] = []
     total = 0

@@ -3,16 +3,18 @@ from __future__ import annotations
 import gzip
 import io
 import json
+import subprocess
 import sys
 from pathlib import Path
 
 import numpy as np
 import pytest
 
+from distill.cli import run
 from distill.errors import InputError
 from distill.family import draw, load_family
 from distill.record import to_record
-from distill.traces import read_trees, write_trees
+from distill.traces import BadLines, read_trees, write_trees
 
 FAMILIES = Path(__file__).parent.parent / "datasets" / "families"
 
@@ -177,6 +179,175 @@ def _mutants(trees, n):
             at = rng.integers(len(line))
             line[at:at] = b"[" * int(rng.integers(1, 3000))
         yield bytes(line).replace(b"\n", b" ") or b"{"
+
+
+# --- damaged lines through the command line --------------------------------------------------------
+
+# Peak memory of a whole process that reads hostile traces; imports alone take a good 200 MB.
+_MOST_MEMORY = 700 * 2**20
+_MEASURED = """
+import sys
+from distill.cli import run
+code = run(sys.argv[1:])
+# Not ru_maxrss, which a child takes over from the process that started it.
+peak = next(line for line in open("/proc/self/status") if line.startswith("VmHWM:"))
+print(int(peak.split()[1]) * 1024, file=sys.stderr)
+sys.exit(code)
+"""
+
+
+def _command(*argv, timeout=120):
+    """Exit code, standard output and error, and peak memory of a command in a process of its own."""
+    done = subprocess.run(
+        [sys.executable, "-c", _MEASURED, *map(str, argv)], capture_output=True, text=True, timeout=timeout
+    )
+    *said, peak = done.stderr.splitlines()
+    assert not any("Traceback" in line for line in said)
+    return done.returncode, done.stdout, "\n".join(said), int(peak)
+
+
+def _damage(how, line, record, rng):
+    """One line, damaged in one way."""
+    at = int(rng.integers(1, len(line)))
+    columns = [k for k, v in record.items() if isinstance(v, list) and k not in ("parent", "kind", "cov")]
+    key = columns[rng.integers(len(columns))]
+    leaf = record["kind"].index("leaf")
+    if how == "truncated":
+        return line[:at]
+    if how == "wrong types":
+        record[key] = ["x", 3, {}, [[]], True][rng.integers(5)]
+    elif how == "swapped columns":
+        record["parent"], record[key] = record[key], record["parent"]
+    elif how == "huge numbers":
+        huge = ["1e999", "-1e400", str(10**400), "9" * 5000, "NaN"][rng.integers(5)]
+        record[key][leaf] = "huge"
+        return json.dumps(record).replace('"huge"', huge).encode()
+    elif how == "invalid UTF-8":
+        return line[:at] + b"\xff\xfe" + line[at:]
+    elif how == "deep nesting":
+        record["extra"] = "deep"
+        deep = int(rng.integers(5_000, 60_000))
+        return json.dumps(record).replace('"deep"', '{"a":' * deep + "1" + "}" * deep).encode()
+    elif how == "unknown keys":
+        record["moon"] = 1
+    return json.dumps(record).encode()
+
+
+_DAMAGES = (
+    "truncated", "wrong types", "swapped columns", "huge numbers", "invalid UTF-8", "deep nesting",
+    "unknown keys",
+)  # fmt: skip
+
+
+def test_two_thousand_damaged_lines_are_counted_with_their_numbers(tmp_path, trees):
+    """Between them stand sound lines, which are all priced."""
+    rng = np.random.default_rng(4)
+    lines, sound = [], []
+    for i in range(2000):
+        record = to_record(trees[i % len(trees)])
+        line = json.dumps(record).encode()
+        lines.append(_damage(_DAMAGES[i % len(_DAMAGES)], line, record, rng).replace(b"\n", b" "))
+        if i % 100 == 0:
+            lines.append(line)
+            sound.append(len(lines))
+    path = tmp_path / "damaged.jsonl.gz"
+    # Stored, not packed: so deep a nesting packs better than any trace, and would be taken for a bomb.
+    path.write_bytes(gzip.compress(b"\n".join(lines), compresslevel=0))
+    code, out, err, peak = _command("price", path, "--value", "static", "--skip-bad")
+    assert code == 0
+    assert len(out.splitlines()) == len(sound)
+    assert err.startswith("voc-distill: 2,000 bad records passed over\n")
+    told = err.rpartition(f"{path} lines ")[2].split(", ")
+    numbers = {
+        n for part in told for a, _, b in [part.partition("-")] for n in range(int(a), int(b or a) + 1)
+    }
+    assert numbers == set(range(1, len(lines) + 1)) - set(sound)
+    assert peak < _MOST_MEMORY
+    code, out, err, _ = _command("price", path, "--value", "static")
+    assert (code, out) == (2, "")
+    assert "line 1:" in err
+    assert err.count("\n") == 0
+
+
+BOMBS = {
+    "blanks": (b" ", 100_000_000),
+    "line ends": (b"\n", 100_000_000),
+    "arrays": (b"[", 100_000_000),
+    "numbers": (b"1,", 50_000_000),
+    "nesting": (b'{"a":', 9_000_000),
+}
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("bomb", BOMBS)
+def test_bombs_cost_neither_time_nor_memory(tmp_path, trees, bomb):
+    good = json.dumps(to_record(trees[0])).encode() + b"\n"
+    path = tmp_path / "bomb.jsonl.gz"
+    path.write_bytes(gzip.compress(good + BOMBS[bomb][0] * BOMBS[bomb][1], compresslevel=1))
+    code, out, err, peak = _command("price", path, "--value", "static", "--skip-bad")
+    assert code == 0
+    assert len(out.splitlines()) == 1
+    assert err.startswith("voc-distill: 1 bad record passed over\n")
+    assert peak < _MOST_MEMORY
+
+
+LONG_LINES = {
+    "numbers": lambda: b"[" + b"1.5," * 16_000_000 + b"1]",
+    "objects": lambda: b"[" + b"{}," * 20_000_000 + b"1]",
+    "arrays": lambda: b"[" + b"[]," * 20_000_000 + b"1]",
+    "nesting": lambda: b'{"a":' * 12_000_000,
+    "keys": lambda: b"{" + b",".join(b'"%d":1' % i for i in range(4_500_000)) + b"}",
+}
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("line", LONG_LINES)
+def test_long_lines_are_not_parsed_beyond_what_records_need(tmp_path, trees, line):
+    """60 MB of marks would be gigabytes of objects."""
+    good = json.dumps(to_record(trees[0])).encode() + b"\n"
+    path = tmp_path / "long.jsonl"
+    path.write_bytes(good + LONG_LINES[line]())
+    code, out, err, peak = _command("price", path, "--value", "static", "--skip-bad")
+    assert (code, len(out.splitlines())) == (0, 1)
+    assert "must not hold" in err
+    assert peak < _MOST_MEMORY
+
+
+def test_strict_stops_where_traces_are_read(tmp_path, capsys):
+    """Each command that reads traces, at the first bad line; without the flag it goes on."""
+    path = tmp_path / "t.jsonl"
+    sound = [draw(load_family(FAMILIES / "cold-store.toml"), 0, i) for i in range(6)]
+    lines = [json.dumps(to_record(t)) for t in sound]
+    path.write_text("\n".join([lines[0], "{", *lines[1:], "]"]))
+    ways = {
+        "price": (["price", path, "--value", "static"], ["--skip-bad"]),
+        "infer": (["infer", path, "--out", tmp_path / "f.toml"], []),
+        "generate": (["generate", "--traces", path, "--out", tmp_path / "d", "--workers", 1], []),
+    }
+    for name, (argv, _) in ways.items():
+        assert run([*map(str, argv), "--strict"]) == 2, name
+        err = capsys.readouterr().err
+        assert "line 2:" in err
+        assert err.count("\n") == 1
+        assert not (tmp_path / "f.toml").exists()
+        assert not (tmp_path / "d").exists()
+    for name, (argv, lenient) in ways.items():
+        assert run([*map(str, argv), *lenient]) == 0, name
+        err = capsys.readouterr().err
+        assert "2 bad records passed over" in err
+        assert "line 2:" in err
+        assert "line 8:" in err
+
+
+def test_reports_of_bad_lines_stay_short():
+    bad = BadLines()
+    for n in range(1, 100_001):
+        bad(InputError(f"night.jsonl line {2 * n}: var[{n}]", "must be >= 0", -1.0))
+    report = bad.report()
+    assert report.startswith("100,000 bad records passed over\n")
+    assert "lines 2, 4, 6" in report
+    assert report.endswith("and 90,000 more")
+    assert len(report) < 80_000
 
 
 def _survive(tmp_path, trees, n):

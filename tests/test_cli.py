@@ -183,7 +183,6 @@ def test_tolerance_is_honoured_or_refused(trees, capsys):
         ["price", "x", "--batch", "2", "--rate"],
         ["price", "x", "--remaining", "1.5"],
         ["price", "x", "--tolerance", "0"],
-        ["generate", "--out", "d"],
         ["ship", "d", "--out", "s.onnx", "--latency", "fast"],
         [],
         ["haul"],

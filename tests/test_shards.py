@@ -2,6 +2,7 @@ from __future__ import annotations
 
 import json
 import tracemalloc
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -12,6 +13,7 @@ import pytest
 from distill import schema, shards
 from distill.errors import InputError
 from distill.family import draw, load_family
+from distill.files import sha256_of
 from distill.query import Priced, Query
 from distill.record import from_record, to_record
 from distill.shards import Labelled
@@ -147,6 +149,31 @@ def test_columns_can_be_chosen(tmp_path):
     assert np.all(np.isnan(shards.read_candidates(folder, columns=["alpha"])["alpha"]))
     with pytest.raises(InputError, match=r"columns: must be among tree, weight, leaf, .*; got 'labels'"):
         shards.read_candidates(folder, columns=["labels"])
+
+
+def test_datasets_of_before_a_column_s_time_are_read(tmp_path):
+    folder = _dataset(tmp_path / "d", _rows("cold-store", 3))
+    whole, trees = shards.read_candidates(folder), [to_record(t) for _, t in shards.read_trees(folder)]
+    manifest = shards.read_manifest(folder)
+    for name in manifest["shards"][0]["files"]:
+        table = pq.read_table(folder / name)
+        new = [c for c in ("weight", "source", "draw") if c in table.schema.names]
+        pq.write_table(table.drop_columns(new), folder / name)
+        manifest["shards"][0]["files"][name] = sha256_of(folder / name)
+    shards.write_manifest(folder, manifest)
+    found = shards.read_candidates(folder)
+    assert found.keys() == whole.keys() - {"weight"}
+    assert all(np.array_equal(found[name], whole[name]) for name in found)
+    assert [to_record(t) for _, t in shards.read_trees(folder)] == trees
+
+
+def test_weight_and_origin_of_each_tree_are_kept(tmp_path):
+    rows = [replace(r, weight=0.5 + i, source="a", draw=7 + i) for i, r in enumerate(_rows("cold-store", 3))]
+    folder = _dataset(tmp_path / "d", rows)
+    table = pq.read_table(folder / "trees-00000.parquet").to_pydict()
+    assert [table[name] for name in ("weight", "source", "draw")] == [[0.5, 1.5, 2.5], ["a"] * 3, [7, 8, 9]]
+    found = shards.read_candidates(folder)
+    assert np.array_equal(found["weight"], found["tree"] + 0.5)
 
 
 def test_trees_without_a_good_label_are_kept_aside(tmp_path):

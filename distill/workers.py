@@ -6,6 +6,7 @@ repeated later give the same results, so nothing is lost but time.
 
 from __future__ import annotations
 
+import asyncio
 import concurrent.futures
 import contextlib
 import logging
@@ -146,7 +147,10 @@ class _Watch:
             if self._client.status != "running":
                 self._end(_SCHEDULER)
                 return
-            workers = self._client.scheduler_info(n_workers=-1)["workers"]
+            try:
+                workers = self._client.scheduler_info()["workers"]
+            except (OSError, RuntimeError, asyncio.CancelledError, concurrent.futures.CancelledError):
+                continue  # lost in this moment; the status says so at the next look
             seen = time.monotonic() if workers else seen
             if time.monotonic() - seen > _NO_WORKER_SECONDS:
                 self._end(_WORKERS)

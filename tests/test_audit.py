@@ -51,7 +51,7 @@ def family() -> Family:
 def shipped(tmp_path_factory: pytest.TempPathFactory, family: Family) -> Path:
     """A real scorer of a narrow family, trained and shipped as users do, with its dataset beside it."""
     folder = tmp_path_factory.mktemp("shipped")
-    generate(family, folder / "data", trees=400, seed=1)
+    generate(family, folder / "data", trees=300, seed=1)
     train(folder / "data", folder / "trained", recipes=["boosting 25x8"], n_boot=100)
     ship(folder / "trained", folder / "scorer.onnx")
     return folder / "scorer.onnx"
@@ -115,6 +115,7 @@ def test_a_scorer_of_another_family_is_worse(shipped: Path, tmp_path: Path) -> N
     assert call(shipped, path) == 3
 
 
+@pytest.mark.slow
 def test_chance_alone_is_not_called_worse(shipped: Path, family: Family, tmp_path: Path) -> None:
     for seed in range(3):
         path = tmp_path / f"{seed}.jsonl.gz"

@@ -239,7 +239,7 @@ _DAMAGES = (
 )  # fmt: skip
 
 
-def test_two_thousand_damaged_lines_are_counted_with_their_numbers(tmp_path, trees):
+def test_two_thousand_damaged_lines_are_counted_with_their_numbers(tmp_path, trees, capsys):
     """Between them stand sound lines, which are all priced."""
     rng = np.random.default_rng(4)
     lines, sound = [], []
@@ -263,10 +263,11 @@ def test_two_thousand_damaged_lines_are_counted_with_their_numbers(tmp_path, tre
     }
     assert numbers == set(range(1, len(lines) + 1)) - set(sound)
     assert peak < _MOST_MEMORY
-    code, out, err, _ = _command("price", path, "--value", "static")
-    assert (code, out) == (2, "")
+    assert run(["price", str(path), "--value", "static"]) == 2
+    out, err = capsys.readouterr()
+    assert out == ""
     assert "line 1:" in err
-    assert err.count("\n") == 0
+    assert err.count("\n") == 1
 
 
 BOMBS = {

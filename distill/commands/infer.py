@@ -42,7 +42,7 @@ def run(args: argparse.Namespace) -> None:
     width = max(map(len, figures["parameters"]))
     for name, e in figures["parameters"].items():
         print(f"  {name:<{width}}  {_stated(e)}")
-    print("\nWhat fits, and what does not")
+    print("\nWhat fits, and what does not; brackets are 99 % intervals")
     for f in figures["findings"]:
         text = f"{f['verdict']}: {f['words']}"
         print(textwrap.fill(text, 100, initial_indent="  ", subsequent_indent="    "))

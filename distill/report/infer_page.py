@@ -98,6 +98,6 @@ def _note(figures: Figures) -> ET.Element:
     text = (
         "Standard deviations of noise, and means, rewards and costs, are in units of the typical prior sd. "
         "Spreads of logs are standard deviations. Posterior means are corrected for what rollouts moved, "
-        "by an identity that holds whatever rule chose the leaves."
+        "by an identity that holds whatever rule chose the leaves. Brackets in findings are 99 % intervals."
     )
     return element("p", text, class_="note")

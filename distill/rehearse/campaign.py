@@ -51,6 +51,7 @@ class Campaign:
         constants of UCT and of both Thompson samplings are chosen for each problem and number of
         rollouts where their policies are given by bare name; 0 leaves them as they are. A policy that
         ends in ":stop=auto" stops at the highest price that costs no regret on these decisions.
+    wide : those of the problems that are rehearsed under `wide_budgets` too.
     """
 
     problems: tuple[str, ...]
@@ -58,11 +59,13 @@ class Campaign:
     policies: tuple[str, ...]
     seeds: int = 400
     tuning_seeds: int = 100
+    wide: tuple[str, ...] = ()
+    wide_budgets: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         for name in self.problems:
             make_problem(name)
-        for name in self.budgets:
+        for name in (*self.budgets, *self.wide_budgets):
             Budget.parse(name)
         for name in self.policies:
             make_policy(name.removesuffix(_AUTO))
@@ -131,7 +134,7 @@ def _problem(campaign: Campaign, name: str, folder: Path) -> Results:
     problem = Remembered(make_problem(name))
     out = Results(campaign)
     tuned: dict[int, dict[str, str]] = {}
-    for text in campaign.budgets:
+    for text in (*campaign.budgets, *(campaign.wide_budgets if name in campaign.wide else ())):
         budget = Budget.parse(text)
         rollouts = budget.room(0, 0.0)
         if rollouts not in tuned:

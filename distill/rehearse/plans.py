@@ -14,20 +14,23 @@ from distill.rehearse.results import write_results
 __all__ = ["plan", "quick"]
 
 _TREES: Final = (
-    "tree-2x8^1-noise1", "tree-2x8^1-noise4", "tree-2x8^1-noise16", "tree-2x8^1-winloss",
-    "tree-4x4^1-noise1", "tree-4x4^1-noise4", "tree-4x4^1-noise16", "tree-4x4^1-winloss",
-    "tree-6x2^1-noise4", "tree-6x2^1-noise16", "tree-6x2^1-winloss",
-    "tree-3x3^2-noise4", "tree-3x3^2-noise4-prior4", "tree-3x3^2-winloss",
+    "tree-2x8^1-noise1", "tree-2x8^1-noise16", "tree-2x8^1-winloss",
+    "tree-4x4^1-noise4", "tree-4x4^1-noise16", "tree-4x4^1-winloss",
+    "tree-6x2^1-noise4", "tree-6x2^1-winloss",
+    "tree-3x3^2-noise4-prior4", "tree-3x3^2-winloss",
     "tree-4x3^2-noise4-chance", "tree-4x3^2-winloss-chance",
 )  # fmt: skip
 _SIMULATORS: Final = (
-    "taxi", "cliff_walking", "cliff_walking_slippery", "frozen_lake_4x4", "frozen_lake_8x8",
-    "frozen_lake_4x4_odds", "frozen_lake_8x8_odds", "cold_store_small",
+    "cold_store_small", "frozen_lake_8x8_odds", "frozen_lake_4x4_odds", "cliff_walking", "taxi",
+    "cliff_walking_slippery", "frozen_lake_8x8", "frozen_lake_4x4",
 )  # fmt: skip
 _BASELINES: Final = ("even", "uct", "thompson", "top-two", "static-voc", "static-rate")
-# 32 and 128 rollouts' worth of time at 100 us and at 1 ms; 128 at the ends of what simulators cost.
+# 32 and 128 rollouts' worth of time at 100 us and at 1 ms; for some, 128 at the ends of what they cost.
 _TIMED: Final = ("3.2ms@100us", "12.8ms@100us", "32ms@1ms", "128ms@1ms")
-_ENDS: Final = ("2.56ms@20us", "640ms@5ms")
+_WIDE: Final = (
+    "tree-2x8^1-noise1", "tree-4x4^1-noise4", "tree-4x4^1-winloss", "cliff_walking", "taxi",
+)  # fmt: skip
+_ENDS: Final = ("2.56ms@20us", "64ms@500us", "640ms@5ms")
 
 _PLANS: Final = {
     "quick": Campaign(
@@ -39,8 +42,10 @@ _PLANS: Final = {
     ),
     "full": Campaign(
         problems=(*_SIMULATORS, *_TREES),
-        budgets=("32", "128", *_TIMED, *_ENDS),
+        budgets=("32", "128", *_TIMED),
         policies=(*_BASELINES, "exact-dynamic-rate"),
+        wide=_WIDE,
+        wide_budgets=_ENDS,
     ),
 }
 # How a scorer file is used: at every rollout, and at most for a quarter of the time that rollouts take.
@@ -75,6 +80,8 @@ def plan(
         if name == "full":
             chosen += (f"scorer:{file}{_STOPPING}",)
     return Campaign(
+        wide=base.wide if base else (),
+        wide_budgets=base.wide_budgets if base and not budgets else (),
         problems=tuple(problems) or (base.problems if base else ()),
         budgets=tuple(budgets) or (base.budgets if base else ()),
         policies=chosen,

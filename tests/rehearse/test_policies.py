@@ -8,14 +8,14 @@ from types import SimpleNamespace
 
 import numpy as np
 import pytest
-from ladder import CLOSED_FORM, QUADRATURE, STANDARD_ERRORS
+from ladder import BACKUP_MOMENTS, CLOSED_FORM, QUADRATURE, STANDARD_ERRORS
 
 from distill import voc
 from distill.allocation import Search
 from distill.errors import InputError
-from distill.query import Query
+from distill.query import Query, scale_of
 from distill.rehearse.catalogue import environment_problems, make_problem, synthetic_problems
-from distill.rehearse.loop import Budget, decide, expected_loss, expected_maxima, sampled_maxima
+from distill.rehearse.loop import Budget, decide, expected_loss, expected_maxima
 from distill.rehearse.policies import ByRule, TopTwoThompson, WithPrior
 from distill.rehearse.policy_specs import POLICIES, make_policy
 from distill.rehearse.problems import TreeProblem
@@ -91,13 +91,24 @@ def test_expected_regret_has_the_mean_of_regret():
     assert np.std([d.expected_regret for d in done]) < np.std([d.regret for d in done]) / 2
 
 
-def test_sampled_maxima_agree_with_exact_ones():
-    tree = TreeProblem(3, 4, 2, noise_var=None).draw(0).tree
-    sampled = sampled_maxima(tree, 20_000)
-    assert np.max(np.abs(sampled - expected_maxima(tree))) < STANDARD_ERRORS * 0.5 / np.sqrt(20_000)
+@pytest.mark.parametrize("noise", [4.0, None])
+def test_values_through_chance_are_the_backups(noise):
+    """Within the backup's rung of the exact ones, where such are known, and of sampled ones elsewhere."""
+    draw = TreeProblem(3, 3, 3, noise_var=noise, chance=True).draw(0)
+    search = Search(draw.tree)
+    for leaf in range(0, 27, 2):
+        search.observe(leaf, draw.roll(leaf))
+    tree = search.tree()
+    found, n = expected_maxima(tree), 100_000
+    if noise is None:
+        odds = np.random.default_rng(1).beta(tree.alpha[:, None], tree.beta[:, None], size=(27, n))
+        wanted, slack = action_values(tree, odds).mean(axis=1), STANDARD_ERRORS * 0.5 / np.sqrt(n)
+    else:
+        wanted, slack = voc.price(tree, Query()).value, 0.0
+    assert np.max(np.abs(found - wanted)) < BACKUP_MOMENTS * scale_of(tree) + slack
 
 
-def test_win_loss_trees_with_chance_below_a_choice_are_acted_on_by_sampling():
+def test_win_loss_trees_with_chance_can_be_acted_on():
     done = run(ByRule("thompson"), problem=make_problem("tree-3x2^2-winloss-chance"))
     assert done.regret >= 0
     assert np.isnan(done.expected_regret)

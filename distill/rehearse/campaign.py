@@ -27,6 +27,7 @@ from distill.tree import BeliefTree
 
 __all__ = ["Campaign", "Results", "name_of", "run"]
 
+_FIRST_SEED: Final = 10_000  # those before were looked at while policies were made
 _TUNING_SEED: Final = 1_000_000  # tuning looks at decisions from here on, the rehearsal at those before
 _SLOWEST_CHOICE: Final = 0.02  # seconds; where only rollouts are limited, slower choosers are left out
 
@@ -69,8 +70,8 @@ class Campaign:
             Budget.parse(name)
         for name in self.policies:
             make_policy(name.removesuffix(_AUTO))
-        if not 2 <= self.seeds < _TUNING_SEED:
-            raise InputError("seeds", f"must be from 2 to {_TUNING_SEED - 1}", self.seeds)
+        if not 2 <= self.seeds <= _TUNING_SEED - _FIRST_SEED:
+            raise InputError("seeds", f"must be from 2 to {_TUNING_SEED - _FIRST_SEED}", self.seeds)
         if self.tuning_seeds == 1 or self.tuning_seeds < 0:
             raise InputError("tuning_seeds", "must be 0 or at least 2", self.tuning_seeds)
 
@@ -151,7 +152,8 @@ def _problem(campaign: Campaign, name: str, folder: Path) -> Results:
                 policies.append(policy)
             else:
                 out.left_out.append({"problem": name, "budget": text, "policy": policy.name, "why": reason})
-        out.cells.extend(rehearse([problem], policies, [budget], folder / "cells", seeds=campaign.seeds))
+        where, seeds = folder / "cells", campaign.seeds
+        out.cells.extend(rehearse([problem], policies, [budget], where, seeds=seeds, first_seed=_FIRST_SEED))
     return out
 
 

@@ -65,7 +65,8 @@ def plan(
 ) -> Campaign:
     """A campaign by name ("quick", "full"), or of one's own; what is given replaces what the plan says.
 
-    scorers : files, each used in every way that the plan knows, beside the policies. Without a plan,
+    scorers : files, each used in every way that the plan knows, beside the policies; in the full plan
+    the first one also stops early. Without a plan,
     problems and budgets must be given; policies are then the tuned baselines.
     """
     if name is not None and name not in _PLANS:
@@ -77,8 +78,8 @@ def plan(
     chosen = tuple(policies) or (base.policies if base else _BASELINES)
     for file in scorers:
         chosen += tuple(f"scorer:{file}{use}" for use in _USES)
-        if name == "full":
-            chosen += (f"scorer:{file}{_STOPPING}",)
+    if name == "full" and scorers:
+        chosen += (f"scorer:{scorers[0]}{_STOPPING}",)
     return Campaign(
         wide=base.wide if base else (),
         wide_budgets=base.wide_budgets if base and not budgets else (),

@@ -6,7 +6,7 @@ import hashlib
 import json
 import math
 import os
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Final
@@ -15,28 +15,30 @@ import numpy as np
 import pyarrow.parquet as pq
 from numpy.typing import NDArray
 
-from distill.errors import InputError, RefusedError
+from distill.backup import backup_of
+from distill.errors import InputError
 from distill.files import sha256_of
 from distill.metrics import Groups
-from distill.shards import MANIFEST, read_candidates, read_manifest
-from distill.tree import Floats
+from distill.scorer_inputs import LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
+from distill.shards import MANIFEST, read_candidates, read_manifest, read_trees
+from distill.tree import BeliefTree, Floats
 
 __all__ = ["LEAF_COLUMNS", "PARTS", "Candidates", "Split", "split_by_tree"]
 
 PARTS: Final = {"fit": 0.75, "choose": 0.10, "held_out": 0.15}
 LEAF_COLUMNS: Final = ("mean", "var", "noise_var", "gain", "offset", "action", "cost", "remaining")
-_BELIEF_COLUMNS: Final = ("mean", "var", "noise_var", "gain", "offset", "action")
 
 
 @dataclass(frozen=True, eq=False)
 class Candidates:
     """Labelled candidate rows, the rows of a tree together, leaves in node order.
 
-    columns : LEAF_COLUMNS, each of shape (n,). tree : the tree of each row. label : exact value, u a
-    rollout for a rate. batch : rollouts of the label. error : bound on the label's error, same unit.
-    is_rate : whether the label is a rate. decision : of recorded trees, a number of the decision that each
-    row's tree was met in; None where no record says. weight : of each row's tree, where trees were sampled
-    with unequal chances; None where they all count alike.
+    columns : the inputs of `kind`, each of shape (n,); for the Gaussian leaf table LEAF_COLUMNS. tree : the
+    tree of each row. label : exact value, u a rollout for a rate. batch : rollouts of the label. error :
+    bound on the label's error, same unit. is_rate : whether the label is a rate. decision : of recorded
+    trees, a number of the decision that each row's tree was met in; None where no record says. weight : of
+    each row's tree, where trees were sampled with unequal chances; None where they all count alike.
+    kind : the simplest input that holds every tree of the dataset. folder : where it was read from.
     """
 
     columns: Mapping[str, Any]
@@ -47,24 +49,22 @@ class Candidates:
     is_rate: bool = True
     decision: NDArray[np.uint64] | None = None
     weight: Floats | None = None
+    kind: InputKind = LEAF_TABLE
+    folder: Path | None = None
 
     @classmethod
     def read(cls, dataset: str | os.PathLike[str]) -> tuple[Candidates, dict[str, Any]]:
         """The candidates of a dataset folder, and what they are: `value` asked for, and `data` source.
 
-        Raises InputError where values of more than one kind are mixed or no `remaining` is given, and
-        RefusedError for trees that a Gaussian leaf table cannot hold.
+        Independent leaves of one belief under decision nodes make leaf tables, other trees records, which
+        a backup at the value's horizon fills. Raises InputError where values of more than one kind are mixed
+        or no `remaining` is given.
         """
         folder = Path(dataset)
         manifest = read_manifest(folder)
         rows = read_candidates(folder)
         if len(rows["tree"]) == 0:
             raise InputError(str(folder), "must hold at least one labelled tree")
-        if not set(_BELIEF_COLUMNS) <= rows.keys() or any(np.isnan(rows[n]).any() for n in _BELIEF_COLUMNS):
-            raise RefusedError(
-                f"{folder}: holds trees with chance nodes, covariance or win/loss leaves; "
-                "this scorer reads independent Gaussian leaves under decision nodes"
-            )
         if "remaining" not in rows or np.isnan(rows["remaining"]).any():
             raise InputError(f"{folder}: remaining", "must be given for every tree")
         batch = rows.get("batch", np.array([np.nan]))
@@ -73,7 +73,7 @@ class Candidates:
             if len(kinds) > 1:
                 raise InputError(f"{folder}: {name}", "must be one for the whole dataset", kinds[:3].tolist())
         h, is_rate = float(rows["horizon"][0]), bool(np.isnan(batch[0]))
-        about = {
+        about: dict[str, Any] = {
             "value": {
                 "horizon": "inf" if math.isinf(h) else h,
                 "batch": None if is_rate else int(batch[0]),
@@ -88,11 +88,17 @@ class Candidates:
                 "aside": manifest["totals"]["aside"],
             },
         }
-        columns = {name: rows[name] for name in LEAF_COLUMNS}
-        columns["action"] = columns["action"].astype(np.int64)
+        kind = _kind_of(rows)
+        if kind is RECORD:
+            columns = {**_records(folder, rows["tree"], h), "remaining": rows["remaining"]}
+        else:
+            columns = {name: rows[name] for name in kind.inputs}
+            columns["action"] = columns["action"].astype(np.int64)
         columns["remaining"] = columns["remaining"].astype(float)
+        about["input"] = kind.name
         batches = rows["label_batch"].astype(float)
         out = cls(columns, rows["tree"], rows["label"], batches, rows["error"], is_rate)
+        out = replace(out, kind=kind, folder=folder)
         if "weight" in rows and np.any(rows["weight"] != 1):
             out = replace(out, weight=rows["weight"])
         return replace(out, decision=_decisions(folder, manifest, out)), about
@@ -105,16 +111,23 @@ class Candidates:
     def of_trees(self, keep: NDArray[np.bool_]) -> Candidates:
         """The rows of the trees marked in `keep`, one mark a tree in order of appearance."""
         rows = self.groups.spread(keep)
-        return Candidates(
-            {name: x[rows] for name, x in self.columns.items()},
-            self.tree[rows],
-            self.label[rows],
-            self.batch[rows],
-            self.error[rows],
-            self.is_rate,
-            None if self.decision is None else self.decision[rows],
-            None if self.weight is None else self.weight[rows],
+        return replace(
+            self,
+            columns={name: x[rows] for name, x in self.columns.items()},
+            tree=self.tree[rows],
+            label=self.label[rows],
+            batch=self.batch[rows],
+            error=self.error[rows],
+            decision=None if self.decision is None else self.decision[rows],
+            weight=None if self.weight is None else self.weight[rows],
         )
+
+    def trees(self) -> Iterator[BeliefTree]:
+        """The trees of the rows, from the dataset that they were read from, in order."""
+        if self.folder is None:
+            raise InputError("candidates", "must come from a dataset, where their trees are")
+        wanted = set(self.tree[self.groups.starts].tolist())
+        return (tree for number, tree in read_trees(self.folder, check=False) if number in wanted)
 
     @property
     def clusters(self) -> NDArray[np.uint64] | None:
@@ -132,7 +145,8 @@ class Candidates:
 
     def fingerprints(self) -> NDArray[np.uint64]:
         """A number a tree from its beliefs alone; the same for trees that differ in name or budget only."""
-        table = np.stack([np.asarray(self.columns[name], dtype="<f8") for name in _BELIEF_COLUMNS], axis=1)
+        names = [name for name in self.kind.columns if name != "cost"]
+        table = np.stack([np.asarray(self.columns[name], dtype="<f8") for name in names], axis=1)
         table += 0.0  # -0.0 and 0.0 are one value
         return np.array(
             [
@@ -141,6 +155,24 @@ class Candidates:
             ],
             dtype=np.uint64,
         )
+
+
+def _kind_of(rows: Mapping[str, NDArray[Any]]) -> InputKind:
+    """The simplest input that holds every tree."""
+    for kind in (LEAF_TABLE, WIN_LOSS_TABLE):
+        needed = [name for name in kind.columns if name != "action"]
+        if rows.keys() >= set(needed) and not any(np.isnan(rows[name]).any() for name in needed):
+            return kind
+    return RECORD
+
+
+def _records(folder: Path, tree: NDArray[np.int64], horizon: float) -> dict[str, Floats]:
+    """The record columns of every row, each tree by its own backup."""
+    parts = [backup_of(t, horizon).rows() for _, t in read_trees(folder, check=False)]
+    columns = {name: np.concatenate([part[name] for part in parts]) for name in RECORD.columns}
+    if len(columns["cost"]) != len(tree):
+        raise InputError(str(folder), "must hold one candidate a leaf", len(tree))
+    return columns
 
 
 def _decisions(folder: Path, manifest: Mapping[str, Any], out: Candidates) -> NDArray[np.uint64] | None:

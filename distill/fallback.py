@@ -13,7 +13,7 @@ from distill.normal_fits import unit_gain
 from distill.record_rows import LeafMoments
 from distill.scorer_inputs import RECORD, WIN_LOSS_TABLE, InputKind
 
-__all__ = ["closed_form_bounds", "closed_form_values"]
+__all__ = ["closed_form_bounds", "closed_form_values", "spreads"]
 
 Floats = NDArray[np.float64]
 
@@ -43,6 +43,13 @@ def closed_form_bounds(kind: InputKind, columns: Mapping[str, Floats], batch: in
     moments = _gaussian(kind, columns)
     bound = highest_rates(moments["var"], moments["noise_var"], columns["gain"], batch)
     return bound * _ANY_OVER_NORMAL if kind is WIN_LOSS_TABLE else bound
+
+
+def spreads(kind: InputKind, columns: Mapping[str, Floats]) -> Floats:
+    """How much each row's leaf contributes to the root at most, one standard deviation, u; shape (n,)."""
+    if kind is RECORD:
+        return columns["spread"]
+    return np.asarray(columns["gain"] * np.sqrt(_gaussian(kind, columns)["var"]))
 
 
 def _gaussian(kind: InputKind, columns: Mapping[str, Floats]) -> dict[str, Floats]:

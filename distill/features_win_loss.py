@@ -51,7 +51,7 @@ _MOST: Final = 8  # rollouts whose every outcome is looked at
 _BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s, within supports
 _PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
 _EDGE: Final = 1e-9  # shares of the support that count as 0 and 1
-_LEAST_COUNT: Final = 0.05  # of alpha - 1/2 and beta - 1/2
+_LEAST_COUNT: Final = 0.05  # of alpha and beta, in the table
 _BLUNT: Final = 1e-6  # removes 0 / 0 where the deviance is 0
 _FURTHEST: Final = 30.0  # standard deviations; f is 0 there in float32
 
@@ -182,37 +182,75 @@ def _static(g: Nodes, leaves: _Leaves) -> tuple[str, str, tuple[str, str], str]:
 
 
 def _beta_cdf(g: Nodes, leaves: _Leaves, v: str, x: str) -> str:
-    """P(p <= x) of each leaf at its points, float32, shape (n, points): Peizer and Pratt (1968).
+    """P(p <= x) of each leaf at its points, float32, shape (n, points), within 5e-4.
 
-    v is the variance of p that counts; alpha and beta are those of a beta with that variance.
+    v is the variance of p that counts; a and b are those of a beta with that variance. Two steps of
+
+        I_x(a, b) = I_x(a + 1, b + 1) + x^a (1 - x)^b / B(a, b) (b - (a + b) x) / (a b)
+
+    (from Abramowitz and Stegun 1964, 26.5.15 and 26.5.16), then the normal approximation.
     """
-    half, one = g.double(0.5), g.double(1.0)
+    one = g.double(1.0)
     spread = g("Mul", leaves.share, g("Sub", one, leaves.share))
     total = g("Sub", g("Div", spread, g("Max", v, g.double(TINY))), one)
-    a = g("Unsqueeze", g("Mul", leaves.share, total), g.whole(1))
+    a = g("Max", g("Unsqueeze", g("Mul", leaves.share, total), g.whole(1)), g.double(_LEAST_COUNT))
     b = g("Unsqueeze", g("Mul", g("Sub", one, leaves.share), total), g.whole(1))
-    wins = g("Max", g("Sub", a, half), g.double(_LEAST_COUNT))
-    losses = g("Max", g("Sub", b, half), g.double(_LEAST_COUNT))
-    n = g("Add", wins, losses)
-    third, small = g.double(1 / 3), g.double(0.02)
-    over_a, over_b = (g("Div", small, g("Add", y, half)) for y in (wins, losses))
-    over_n = g("Div", small, g("Add", n, one))
-    start = g("Add", g("Add", g("Sub", wins, g.double(-1 / 6)), over_a), g("Mul", over_n, half))
-    slope = g("Add", g("Add", g("Add", n, third), g("Add", over_a, over_b)), over_n)
-    d = g("Sub", start, g("Mul", slope, x))
+    b = g("Max", b, g.double(_LEAST_COUNT))
+    t = g("Add", a, b)
     y = g("Sub", one, x)
+    log_x, log_y, xy = g("Log", x), g("Log", y), g("Mul", x, y)
+    ab = g("Mul", a, b)
+    power = g("Add", g("Mul", a, log_x), g("Mul", b, log_y))
+    first = g("Div", g("Sub", b, g("Mul", t, x)), ab)
+    second = g("Sub", g("Add", b, one), g("Mul", g("Add", t, g.double(2.0)), x))
+    ratio = g("Div", g("Mul", t, g("Add", t, one)), g("Mul", ab, g("Add", g("Add", ab, t), one)))
+    second = g("Mul", g("Mul", xy, ratio), second)
+    below = g("Mul", g("Exp", g("Sub", power, _log_beta(g, a, b, t))), g("Add", first, second))
+    whole = g("Add", _peizer_pratt(g, a, b, x, log_x, log_y, xy), g("Cast", below, to=TensorProto.FLOAT))
+    least = 0.5 - _PHI_SLOPE
+    return g("Min", g("Max", whole, g.single(least)), g.single(1 - least))
+
+
+def _log_beta(g: Nodes, a: str, b: str, t: str) -> str:
+    """log B(a, b), t = a + b: Stirling's series 8 further on, within 1e-8; columns."""
+    terms = 8
+    both = g("Concat", a, b, t, axis=1)
+    rising = g.double(np.arange(float(terms)))
+    logs = g("Log", g("Concat", *(g("Add", x, rising) for x in (a, b, t)), axis=1))
+    below = g("MatMul", logs, g.double(np.repeat(np.diag([1.0, 1.0, -1.0]), terms, axis=0)))
+    far = g("Add", both, g.double(float(terms)))
+    inverse = g("Div", g.double(1.0), far)
+    series = g(
+        "Mul", inverse, g("Sub", g.double(1 / 12), g("Mul", g("Mul", inverse, inverse), g.double(1 / 360)))
+    )
+    main = g("Sub", g("Mul", g("Sub", far, g.double(0.5)), g("Log", far)), far)
+    signed = g("Mul", g("Add", main, series), g.double([1.0, 1.0, -1.0]))
+    total = g("MatMul", g("Sub", signed, below), g.double(np.ones((3, 1))))
+    return g("Add", total, g.double(0.5 * math.log(2 * math.pi)))
+
+
+def _peizer_pratt(g: Nodes, a: str, b: str, x: str, log_x: str, log_y: str, xy: str) -> str:
+    """I_x(a + 2, b + 2), float32, by Peizer and Pratt (1968): Phi of a signed root of a deviance."""
+    one = g.double(1.0)
+    wins, losses = g("Add", a, g.double(1.5)), g("Add", b, g.double(1.5))
+    n = g("Add", wins, losses)
+    small = g.double(0.02)
+    over_a, over_b = (g("Div", small, g("Add", z, g.double(0.5))) for z in (wins, losses))
+    over_n = g("Div", small, g("Add", n, one))
+    start = g("Add", g("Add", g("Add", wins, g.double(1 / 6)), over_a), g("Mul", over_n, g.double(0.5)))
+    slope = g("Add", g("Add", g("Add", n, g.double(1 / 3)), g("Add", over_a, over_b)), over_n)
+    d = g("Sub", start, g("Mul", slope, x))
     apart = g("Sub", wins, g("Mul", n, x))
-    log_x = g("Sub", g("Log", g("Div", wins, n)), g("Log", x))
-    log_y = g("Sub", g("Log", g("Div", losses, n)), g("Log", y))
+    log_x = g("Sub", g("Log", g("Div", wins, n)), log_x)
+    log_y = g("Sub", g("Log", g("Div", losses, n)), log_y)
     deviance = g("Add", g("Mul", wins, log_x), g("Mul", losses, log_y))
     blunt = g.double(_BLUNT)
-    deviance = g(
-        "Add", g("Max", deviance, g.double(0.0)), g("Div", blunt, g("Mul", g("Add", n, n), g("Mul", x, y)))
-    )
+    near = g("Div", blunt, g("Mul", g("Add", n, n), xy))
+    deviance = g("Add", g("Max", deviance, g.double(0.0)), near)
     factor = g("Div", one, g("Add", one, g("Div", g.double(1 / 6), n)))  # 2 / (1 + 1 / 6 n), over 2 for Erf
     ratio = g("Div", g("Mul", deviance, factor), g("Add", g("Mul", apart, apart), blunt))
     z = g("Cast", g("Mul", d, g("Sqrt", ratio)), to=TensorProto.FLOAT)
-    return g("Sub", g.single(0.5), g("Mul", g("Erf", z), g.single(_PHI_SLOPE)))
+    return g("Sub", g.single(0.5), g("Mul", g("Erf", z), g.single(0.5)))
 
 
 def _steps(g: Nodes, t0: str, s: str, total: str, batch: int | None) -> tuple[str, str]:

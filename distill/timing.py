@@ -15,15 +15,21 @@ import numpy as np
 from numpy.typing import NDArray
 
 from distill import schema
+from distill.fallback import spreads
 from distill.metrics import Groups
 from distill.query import Query
 from distill.runtime import Scorer
+from distill.scorer_inputs import LEAF_TABLE, InputKind
 from distill.tree import BeliefTree
 from distill.voc import price
 
 __all__ = ["Decision", "Timing", "decisions", "time_exact", "time_scorer", "tree_of"]
 
-_COLUMNS = ("mean", "var", "noise_var", "gain", "offset", "action", "cost")
+# Powers of the unit of utility in which columns count; 0 for the others.
+_POWERS = {
+    **dict.fromkeys(("mean", "offset", "cost", "low", "high", "slope", "other_slope", "spread"), 1),
+    **dict.fromkeys(("var", "noise_var"), 2),
+}
 
 
 @dataclass(frozen=True)
@@ -41,23 +47,33 @@ class Timing:
 
 @dataclass(frozen=True, eq=False)
 class Decision:
-    """One decision to time: the leaf table's arrays and the rollouts left, and the same as a tree."""
+    """One decision to time: a scorer's columns and the rollouts left, and the same as a tree.
+
+    tree : None for record rows, which no tree is made of again.
+    """
 
     columns: Mapping[str, Any]
     remaining: int
-    tree: BeliefTree
+    tree: BeliefTree | None
 
 
-def decisions(columns: Mapping[str, NDArray[Any]], n_leaves: int, count: int, seed: int) -> list[Decision]:
+def decisions(
+    columns: Mapping[str, NDArray[Any]],
+    n_leaves: int,
+    count: int,
+    seed: int,
+    *,
+    kind: InputKind = LEAF_TABLE,
+) -> list[Decision]:
     """Decisions of exactly `n_leaves` leaves, pooled from candidate rows.
 
-    columns : candidate rows of many trees, with `tree` and `remaining`. Each decision pools trees drawn
-    at random, each in units of its own scale and joined action by action, until it has enough leaves, so
-    its leaves are such as the scorer meets; `remaining` comes from the first.
+    columns : candidate rows of many trees, of an input kind, with `tree` and `remaining`. Each decision
+    pools trees drawn at random, each in units of its own scale and joined action by action, until it has
+    enough leaves, so its leaves are such as the scorer meets; `remaining` comes from the first.
     """
     rng = np.random.default_rng(seed)
     groups = Groups.of(columns["tree"])
-    columns = _in_units_of_scale(columns, groups)
+    columns = _in_units_of_scale(columns, groups, kind)
     out = []
     for _ in range(count):
         rows: list[int] = []
@@ -65,25 +81,36 @@ def decisions(columns: Mapping[str, NDArray[Any]], n_leaves: int, count: int, se
             t = int(rng.integers(len(groups.starts)))
             rows.extend(range(groups.starts[t], groups.starts[t] + groups.sizes[t]))
         at = np.array(rows[:n_leaves])
-        at = at[np.argsort(columns["action"][at], kind="stable")]
-        arrays = {name: np.ascontiguousarray(columns[name][at]) for name in _COLUMNS}
-        arrays["action"] = np.unique(arrays["action"], return_inverse=True)[1].astype(np.int64)
+        if kind.has_action:
+            at = at[np.argsort(columns["action"][at], kind="stable")]
+        arrays = {name: np.ascontiguousarray(columns[name][at]) for name in kind.columns}
+        if kind.has_action:
+            arrays["action"] = np.unique(arrays["action"], return_inverse=True)[1].astype(np.int64)
         remaining = max(1, int(columns["remaining"][rows[0]]))
-        out.append(Decision(arrays, remaining, tree_of(arrays)))
+        out.append(Decision(arrays, remaining, tree_of(arrays) if kind.has_action else None))
     return out
 
 
-def _in_units_of_scale(columns: Mapping[str, NDArray[Any]], groups: Groups) -> dict[str, NDArray[Any]]:
+def _in_units_of_scale(
+    columns: Mapping[str, NDArray[Any]], groups: Groups, kind: InputKind
+) -> dict[str, NDArray[Any]]:
     """The same rows with each tree's scale as its unit of utility."""
-    scale = groups.highest(columns["gain"] * np.sqrt(columns["var"]))
+    scale = groups.highest(spreads(kind, columns))
     unit = groups.spread(np.where(scale > 0, scale, 1.0))
-    powers = {"mean": 1, "offset": 1, "cost": 1, "var": 2, "noise_var": 2}
-    return {name: x / unit ** powers[name] if name in powers else x for name, x in columns.items()}
+    return {name: x / unit ** _POWERS[name] if name in _POWERS else x for name, x in columns.items()}
 
 
 def tree_of(arrays: Mapping[str, NDArray[Any]]) -> BeliefTree:
-    """Root, one decision node an action, and the leaves with gain and offset on their edges."""
-    n, n_actions = len(arrays["mean"]), int(arrays["action"].max()) + 1
+    """Root, one decision node an action, and the leaves with gain and offset on their edges.
+
+    arrays : columns of a leaf table, Gaussian or win/loss.
+    """
+    beliefs: dict[str, Any] = {
+        name: np.array(arrays[name])
+        for name in (*schema.GAUSSIAN_COLUMNS, *schema.WIN_LOSS_COLUMNS)
+        if name in arrays
+    }
+    n, n_actions = len(arrays["action"]), int(arrays["action"].max()) + 1
     inner = 1 + n_actions
     return BeliefTree(
         parent=np.r_[-1, np.zeros(n_actions), arrays["action"] + 1].astype(np.int64),
@@ -91,10 +118,8 @@ def tree_of(arrays: Mapping[str, NDArray[Any]]) -> BeliefTree:
         reward=np.r_[np.zeros(inner), arrays["offset"]],
         discount=np.r_[np.ones(inner), arrays["gain"]],
         prob=np.ones(inner + n),
-        mean=np.array(arrays["mean"]),
-        var=np.array(arrays["var"]),
-        noise_var=np.array(arrays["noise_var"]),
         cost=np.array(arrays["cost"]),
+        **beliefs,
     )
 
 
@@ -112,6 +137,7 @@ def time_exact(cases: Sequence[Decision], *, rate: bool, calls: int = 20) -> Tim
 
     def act(case: Decision) -> None:
         query = Query(horizon=math.inf, batch=None if rate else 1, remaining=case.remaining)
+        assert case.tree is not None
         price(case.tree, query)
 
     return _timed(act, cases, calls, warm_up=1)

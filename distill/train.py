@@ -30,6 +30,7 @@ from distill.files import sha256_of, write_atomic
 from distill.learners import BoostingLearner, DenseLearner, LinearLearner
 from distill.metrics import Groups
 from distill.runtime import Scorer
+from distill.scorer_inputs import RECORD
 from distill.sheet import FRONT_FILE, FRONT_FORMAT
 from distill.terminal import bar
 from distill.timing import decisions, time_exact, time_scorer
@@ -113,9 +114,10 @@ def train(
     split = split_by_tree(data, seed)
     out.mkdir(parents=True, exist_ok=True)
     with bar("features", 2 + 2 * len(chosen), "steps", shown=progress) as advance:
-        graph = FeatureGraph.of_value(about["value"])
+        graph = FeatureGraph.of_value(about["value"], data.kind)
         fit, choose, held_out = (graph.matrix({**c.columns, "tree": c.tree}) for c in vars(split).values())
-        cases = decisions({**split.held_out.columns, "tree": split.held_out.tree}, _LEAVES, 50, seed)
+        pool = {**split.held_out.columns, "tree": split.held_out.tree}
+        cases = decisions(pool, _LEAVES, 50, seed, kind=data.kind)
         scorers: list[dict[str, Any]] = []
         for recipe in chosen:
             advance(1, f"train {recipe.name}")
@@ -125,7 +127,9 @@ def train(
             scorers.append(_examine(recipe, path, split, cases, fit_seconds, n_boot, seed))
         advance(1, "closed forms and exact methods")
         beside = baselines(split.held_out, held_out.first_order, n_boot=n_boot, seed=seed)
-        exact = {"dynamic VOC": time_exact(cases, rate=False), "dynamic rate": time_exact(cases, rate=True)}
+        exact = {}
+        if data.kind is not RECORD:
+            exact = {"dynamic VOC": time_exact(cases, rate=False), "dynamic rate": time_exact(cases, rate=True)}
         advance(1)
     _mark_front(scorers)
     front = {

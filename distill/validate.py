@@ -10,10 +10,12 @@ import numpy as np
 
 from distill.candidates import Candidates, split_by_tree
 from distill.errors import InputError
+from distill.fallback import spreads
 from distill.feature_graph import FeatureGraph
 from distill.metrics import measure, random_forgone
 from distill.query import Query
 from distill.runtime import Scorer
+from distill.scorer_inputs import RECORD
 from distill.timing import tree_of
 from distill.tree import Floats
 from distill.voc import price
@@ -51,7 +53,7 @@ def sample_pairs(
     keep[order[before < 8 * limit]] = True  # some to spare: many candidates are worth next to nothing
     drawn = candidates.of_trees(keep)
     groups, columns = drawn.groups, drawn.columns
-    scale = groups.spread(groups.highest(columns["gain"] * np.sqrt(columns["var"])))
+    scale = groups.spread(groups.highest(spreads(drawn.kind, columns)))
     uncertain = scale > 0
     unit = np.where(uncertain, scale, 1)
     exact = drawn.label / unit
@@ -71,12 +73,14 @@ def sample_pairs(
 def static_values(candidates: Candidates) -> Floats:
     """The static value of each row, a rate where the label is one: it costs almost nothing; shape (n,)."""
     groups = candidates.groups
+    trees = candidates.trees() if candidates.kind is RECORD else iter(())
     rates = []
     for a, n in zip(groups.starts, groups.sizes, strict=True):
         table = {name: x[a : a + n] for name, x in candidates.columns.items()}
         batch = None if candidates.is_rate else int(candidates.batch[a])
         query = Query(horizon=0.0, batch=batch, remaining=int(table["remaining"][0]))
-        rates.append(price(tree_of(table), query).voc)
+        tree = next(trees) if candidates.kind is RECORD else tree_of(table)
+        rates.append(price(tree, query).voc)
     return np.concatenate(rates)
 
 
@@ -142,12 +146,14 @@ def validate(
     trained = scorer.facts.get("about", {})
     if trained.get("value", about["value"]) != about["value"]:
         raise InputError(f"{dataset}: value", f"must be the scorer's, {trained['value']}", about["value"])
+    if scorer.kind is not None and scorer.kind is not candidates.kind:
+        raise InputError(f"{dataset}: input", f"must be the scorer's, {scorer.kind.name}", candidates.kind.name)
     same_trees = trained.get("data") and all(
         trained["data"][key] == about["data"][key] for key in ("source_sha256", "seed")
     )
     if same_trees:
         candidates = split_by_tree(candidates, trained["seed"]).held_out
-    graph = FeatureGraph.of_value(about["value"])
+    graph = FeatureGraph.of_value(about["value"], candidates.kind)
     first_order = graph.matrix({**candidates.columns, "tree": candidates.tree}).first_order
     return {
         **about,

@@ -12,12 +12,17 @@ from hypothesis import strategies as st
 from leaf_tables import rows
 from small_dataset import labelled
 
+from distill.backup import backup_of
 from distill.candidates import LEAF_COLUMNS, PARTS, Candidates, split_by_tree
-from distill.errors import InputError, RefusedError
-from distill.family import parse_family
+from distill.errors import InputError
+from distill.family import draw, load_family, parse_family
 from distill.generate import Asked, Traces, generate
+from distill.scorer_inputs import RECORD, WIN_LOSS_TABLE
 from distill.shards import read_trees
 from distill.tree import leaf_table
+
+
+FAMILIES = Path(__file__).parents[1] / "datasets" / "families"
 
 
 def candidates(seed: int, trees: int) -> Candidates:
@@ -151,10 +156,29 @@ search = { even = 1 }
 """
 
 
-def test_trees_that_a_leaf_table_cannot_hold_are_refused(tmp_path: Path) -> None:
-    generate(parse_family(CHANCE), tmp_path / "data", trees=10, asked=Asked(horizon=0.0))
-    with pytest.raises(RefusedError, match="chance nodes"):
-        Candidates.read(tmp_path / "data")
+def test_trees_that_a_leaf_table_cannot_hold_become_records(tmp_path: Path) -> None:
+    generate(parse_family(CHANCE), tmp_path / "data", trees=10, asked=Asked(horizon=3.0))
+    got, about = Candidates.read(tmp_path / "data")
+    assert got.kind is RECORD
+    assert about["input"] == "record"
+    trees = [tree for _, tree in read_trees(tmp_path / "data")]
+    for name in RECORD.columns:
+        rows = np.concatenate([backup_of(tree, 3.0).rows()[name] for tree in trees])
+        np.testing.assert_array_equal(got.columns[name], rows)
+    some = got.of_trees(np.arange(10) % 3 == 0)
+    assert [t.id for t in some.trees()] == [trees[i].id for i in (0, 3, 6, 9)]
+
+
+def test_win_loss_leaves_have_their_own_table_and_mixed_trees_are_records(tmp_path: Path) -> None:
+    flat = [draw(load_family(FAMILIES / "on-time.toml"), 2, i) for i in range(4)]
+    generate(Traces("wins", flat), tmp_path / "wins")
+    got, about = Candidates.read(tmp_path / "wins")
+    assert got.kind is WIN_LOSS_TABLE
+    assert about["input"] == "win/loss leaf table"
+    np.testing.assert_array_equal(got.columns["alpha"], np.concatenate([t.alpha for t in flat]))
+    chance = draw(parse_family(CHANCE), 0, 0)
+    generate(Traces("both", [*flat, chance]), tmp_path / "both")
+    assert Candidates.read(tmp_path / "both")[0].kind is RECORD
 
 
 def test_a_folder_without_dataset_is_named(tmp_path: Path) -> None:

@@ -1,0 +1,185 @@
+"""Each kind of input from labelled trees to decisions: train, ship, validate, guard and fallback."""
+
+from __future__ import annotations
+
+import math
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from distill.backup import backup_of
+from distill.candidates import Candidates
+from distill.errors import InputError, ScorerFileError
+from distill.fallback import closed_form_bounds, closed_form_values
+from distill.family import draw, load_family
+from distill.generate import generate
+from distill.query import Query
+from distill.runtime import Scorer
+from distill.scorer_inputs import KINDS, LEAF_TABLE, RECORD, WIN_LOSS_TABLE, kind_of
+from distill.ship import ship
+from distill.timing import decisions
+from distill.train import train
+from distill.tree import leaf_table
+from distill.validate import validate
+from distill.voc import price
+
+FAMILIES = Path(__file__).parents[1] / "datasets" / "families"
+CASES = {"on-time": WIN_LOSS_TABLE, "crossing-traffic": RECORD}
+
+
+@pytest.fixture(scope="module", params=CASES)
+def shipped(request, tmp_path_factory):
+    """A family's name, its small dataset, and a scorer file trained on it."""
+    folder = tmp_path_factory.mktemp("inputs")
+    generate(load_family(FAMILIES / f"{request.param}.toml"), folder / "data", trees=90, seed=2)
+    train(folder / "data", folder / "trained", recipes=["linear"], n_boot=20)
+    ship(folder / "trained", folder / "scorer.onnx")
+    return request.param, folder / "data", folder / "scorer.onnx"
+
+
+def columns_of(tree):
+    """The columns of a tree's kind."""
+    if tree.has_chance or tree.cov is not None:
+        return backup_of(tree).rows()
+    table = leaf_table(tree)
+    names = WIN_LOSS_TABLE.columns if tree.mean is None else LEAF_TABLE.columns
+    return {name: getattr(table, name) for name in names}
+
+
+def test_a_trained_file_beats_its_closed_form_and_says_what_it_reads(shipped):
+    name, data, path = shipped
+    scorer = Scorer.load(path, strict=True)
+    assert scorer.kind is CASES[name]
+    found = validate(scorer, data, n_boot=20)
+    assert found["part"] == "held_out"
+    own = found["accuracy"]["forgone_percent"]["value"]
+    assert own < found["beside"]["static closed form"]["forgone_percent"]["value"]
+    assert own < 0.3 * found["beside"]["random pick"]["forgone_percent"]["value"]
+
+
+def test_one_call_equals_the_file_on_many_trees(shipped):
+    _, data, path = shipped
+    scorer, rows = Scorer.load(path), Candidates.read(data)[0]
+    whole = scorer.score(**rows.columns, tree=rows.tree)
+    for a, n in list(zip(rows.groups.starts, rows.groups.sizes, strict=True))[:10]:
+        part = {k: x[a : a + n] for k, x in rows.columns.items()}
+        part["remaining"] = float(part["remaining"][0])
+        alone = scorer.score(**part)
+        np.testing.assert_array_equal(alone.voc, whole.voc[a : a + n])
+        assert scorer.pick(**part) == alone.pick
+        assert np.all(alone.voc_high >= alone.voc)
+
+
+def test_what_the_file_has_no_answer_for_goes_to_the_closed_form(shipped):
+    name, _, path = shipped
+    scorer = Scorer.load(path)
+    tree = draw(load_family(FAMILIES / f"{name}.toml"), 9, 1)
+    columns = columns_of(tree)
+    plain = scorer.score(**columns, remaining=40)
+    want, batch = closed_form_values(CASES[name], columns, 40.0)
+    late = scorer.score(**columns, remaining=40, deadline=0.0)
+    np.testing.assert_array_equal(late.voc, want)
+    np.testing.assert_array_equal(late.batch, batch)
+    assert scorer.counters.late == scorer.counters.fallback == 1
+    first = CASES[name].floats[0]
+    broken = {**columns, first: np.where(np.arange(len(want)) == 0, np.nan, columns[first])}
+    bad = scorer.score(**broken, remaining=40)
+    assert scorer.counters.invalid == 1
+    assert not bad.in_range.any()
+    assert bad.voc[0] == 0
+    with pytest.raises(InputError, match=rf"{first}\[0\]"):
+        Scorer.load(path, strict=True).score(**broken, remaining=40)
+    np.testing.assert_array_equal(scorer.score(**columns, remaining=40).voc, plain.voc)
+
+
+def test_columns_of_another_kind_are_refused_by_name(shipped):
+    name, _, path = shipped
+    scorer = Scorer.load(path)
+    tree = draw(load_family(FAMILIES / "cold-store.toml"), 0, 0)
+    with pytest.raises(InputError, match=f"is missing: a {CASES[name].name} has it|is no column of a"):
+        scorer.score(**columns_of(tree), remaining=10)
+    own = columns_of(draw(load_family(FAMILIES / f"{name}.toml"), 0, 0))
+    with pytest.raises(InputError, match="colour: is no column of a"):
+        scorer.pick(**own, colour=own["cost"], remaining=10)
+    with pytest.raises(InputError, match="cost: is missing"):
+        scorer.pick(**{k: x for k, x in own.items() if k != "cost"}, remaining=10)
+
+
+def test_a_file_with_another_kind_in_its_metadata_is_refused(shipped):
+    import onnx
+    from onnx import helper
+
+    _, _, path = shipped
+    model = onnx.load(path)
+    kept = {p.key: p.value for p in model.metadata_props}
+    for other, reason in (("leaf table", "input"), ("wish list", "'input': must be one of")):
+        helper.set_model_props(model, {**kept, "input": other})
+        with pytest.raises(ScorerFileError, match=reason):
+            Scorer.from_bytes(model.SerializeToString())
+
+
+def test_timed_decisions_have_the_columns_of_their_kind(shipped):
+    _, data, path = shipped
+    rows = Candidates.read(data)[0]
+    pool = {**rows.columns, "tree": rows.tree}
+    scorer = Scorer.load(path, strict=True)
+    for case in decisions(pool, 64, 3, 0, kind=rows.kind):
+        assert len(scorer.score(**case.columns, remaining=case.remaining).voc) == 64
+        assert (case.tree is None) == (rows.kind is RECORD)
+
+
+def test_another_kind_of_dataset_is_no_ground_for_validation(shipped, tmp_path):
+    name, _, path = shipped
+    other = "crossing-traffic" if name == "on-time" else "on-time"
+    generate(load_family(FAMILIES / f"{other}.toml"), tmp_path / "data", trees=5)
+    with pytest.raises(InputError, match=f"input: must be the scorer's, {CASES[name].name}"):
+        validate(path, tmp_path / "data")
+
+
+# --- closed forms ----------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("family", ["cold-store", "on-time", "crossing-traffic", "shared-aisles"])
+def test_no_exact_rate_exceeds_the_bound_of_the_closed_form(family):
+    for i in range(2 if family == "shared-aisles" else 15):
+        tree = draw(load_family(FAMILIES / f"{family}.toml"), 4, i)
+        columns = columns_of(tree)
+        kind = kind_of(columns)
+        for horizon in (0.0, math.inf):
+            exact = price(tree, Query(horizon, None, tree.remaining)).voc
+            assert np.all(exact <= closed_form_bounds(kind, columns) * (1 + 1e-9)), (i, horizon)
+
+
+def test_closed_form_records_equal_the_static_rate_of_lines():
+    """No rollout to come and every leaf an action: the crossing is all there is to a row."""
+    tree = draw(load_family(FAMILIES / "cold-store.toml"), 1, 3)
+    from distill.record import from_record
+
+    n = tree.n_leaves
+    flat = from_record(
+        {
+            "format": "belief-tree/1",
+            "parent": [-1] + [0] * n,
+            "kind": ["decision"] + ["leaf"] * n,
+            "mean": [None, *tree.mean.tolist()],
+            "var": [None, *tree.var.tolist()],
+            "noise_var": [None, *tree.noise_var.tolist()],
+        }
+    )
+    rows, table = backup_of(flat, 0.0).rows(), columns_of(flat)
+    for left, batch in ((50.0, None), (0.0, None), (3.0, 4)):
+        a, k = closed_form_values(RECORD, rows, left, batch)
+        b, m = closed_form_values(LEAF_TABLE, table, left, batch)
+        np.testing.assert_allclose(a, b, rtol=1e-5, atol=1e-12)
+        np.testing.assert_array_equal(k[b > 1e-9], m[b > 1e-9])
+
+
+def test_kinds_are_told_by_their_columns():
+    for kind in KINDS.values():
+        assert kind_of(kind.inputs) is kind
+    assert kind_of(["mean", "var"]) is None
+    with pytest.raises(InputError, match="columns: must be those of a leaf table or a"):
+        Scorer.closed_form().score(mean=[0.0], remaining=1)
+    got = Scorer.closed_form().score(**dict.fromkeys(RECORD.columns, np.array([0.5, 1.0])), remaining=5)
+    assert got.pick == int(np.argmax(got.voc - np.array([0.5, 1.0])))

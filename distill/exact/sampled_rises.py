@@ -71,7 +71,7 @@ def by_envelope(
 
 @compiled
 def _hull(y: Floats, slopes: Floats, low: int, high: int, hull: Ints, begin: Floats) -> int:
-    """Upper envelope within the reach of lines y + slope z at low ... high - 1, in order of slope; its size."""
+    """Upper envelope within the reach of lines y + slope z, low ... high - 1, by slope; returns its size."""
     best = low
     for w in range(low + 1, high):
         if y[w] > y[best]:

@@ -158,14 +158,17 @@ def _read_sheet(scorer: Path) -> dict[str, Any]:
         raise InputError(f"{path}: format", f"must be {SHEET_FORMAT!r}")
     try:
         promised = {key: sheet["accuracy"][key] for key in _JUDGED}
-        sound = all(e["value"] is None or e["high"] >= e["low"] for e in promised.values())
+        sound = all(
+            e["value"] is None or all(type(e[k]) in (int, float) for k in ("value", "low", "high"))
+            for e in promised.values()
+        )
         _asked(sheet["value"])
-        name, sha = sheet["recipe"], sheet["file"]["sha256"]
+        sha = sheet["file"]["sha256"]
+        sound = sound and isinstance(sheet["recipe"], str) and isinstance(sha, str)
     except (KeyError, TypeError, ValueError, AttributeError):
         sound = False
     if not sound:
         raise InputError(str(path), "must be a sheet as ship writes it, with value, accuracy and file")
-    del name
     if scorer.is_file() and sha256_of(scorer) != sha:
         raise InputError(str(path), f"must be the sheet of {scorer.name}: it states another SHA-256")
     return sheet

@@ -86,6 +86,11 @@ def infer(
     Trees whose `extra` names a decision are its stages and are drawn again together. Raises InputError
     where there are fewer than two decisions, beliefs of two kinds, or no tree states `remaining`.
     """
+    with np.errstate(all="ignore"):  # numbers out of bounds are refused where the family is parsed
+        return _infer(trees, name, source, seed)
+
+
+def _infer(trees: Sequence[BeliefTree], name: str, source: str, seed: int) -> Inferred:
     read = estimate(trees, seed=seed, source=source)
     toml, parameters, group = read.toml, read.parameters, read.group
     decisions, assumed = max(group) + 1, read.rules_assumed

@@ -16,7 +16,7 @@ from distill import voc
 from distill.audit import WORTH_ADDING, audit, sample_trees
 from distill.cli import run
 from distill.errors import InputError
-from distill.family import Family, draw, parse_family
+from distill.family import Family, draw, load_family, parse_family
 from distill.generate import generate
 from distill.metrics import Groups, picks
 from distill.query import Query
@@ -24,6 +24,7 @@ from distill.record import from_record, to_record
 from distill.report import audit_page as page_of
 from distill.report.audit_page import audit_page
 from distill.runtime import Scorer
+from distill.sample_data import FAMILIES
 from distill.shards import read_manifest
 from distill.ship import ship
 from distill.traces import read_trees, write_trees
@@ -107,12 +108,10 @@ def test_noise_beyond_training_is_worse(shipped: Path, noisy: Path, tmp_path: Pa
 
 @pytest.mark.slow
 def test_a_scorer_of_another_family_is_worse(shipped: Path, tmp_path: Path) -> None:
-    wide = NARROW.replace(b"rollouts = [8, 24]", b"rollouts = { log_uniform = [4, 4096] }").replace(
-        b"sd = 1 }\nbudget", b"sd = { log_uniform = [0.01, 90] } }\nbudget"
-    )
-    path = tmp_path / "wide.jsonl.gz"
-    write_trees(path, recorded(parse_family(wide), 400))
-    assert call(shipped, path) == 3
+    """Noise, spread and budgets over decades, met by a scorer that knows neither."""
+    wide = load_family(FAMILIES / "wide-gaussian.toml")
+    write_trees(tmp_path / "wide.jsonl.gz", recorded(wide, 600))
+    assert call(shipped, tmp_path / "wide.jsonl.gz", "--trees", 600) == 3
 
 
 @pytest.mark.slow

@@ -10,6 +10,7 @@ import asyncio
 import concurrent.futures
 import contextlib
 import logging
+import multiprocessing
 import threading
 import time
 import warnings
@@ -75,7 +76,7 @@ def _cluster(address: str) -> Iterator[_Watch]:
         from distributed import Client
     except ImportError:
         raise InputError("dask", "needs the cluster extra: pip install 'voc-distill[cluster]'") from None
-    with _quiet("distributed", "distributed.client"):
+    with _quiet("distributed", "distributed.client", "tornado.application"):
         try:
             client = Client(address, timeout=_CONNECT_SECONDS, set_as_default=False)
         except (OSError, ValueError, TypeError) as e:
@@ -130,7 +131,10 @@ class _Watch:
             yield from _closed_quietly(self._pool(calls))
         except concurrent.futures.CancelledError:
             raise WorkersError(f"{self._address}: {self._lost or _SCHEDULER}") from None
-        except TimeoutError:  # how joblib ends when `_end` lets it, or when no first worker comes
+        except (
+            TimeoutError,
+            multiprocessing.TimeoutError,
+        ):  # how joblib ends when `_end` lets it, or when no first worker comes
             raise WorkersError(f"{self._address}: {self._lost or _WORKERS}") from None
         finally:
             self._over.set()

@@ -17,7 +17,16 @@ from numpy.typing import NDArray
 from distill.errors import InputError
 from distill.tree import Floats, Ints
 
-__all__ = ["Estimate", "Groups", "Metrics", "measure", "picks", "random_forgone", "stop_loss"]
+__all__ = [
+    "Estimate",
+    "Groups",
+    "Metrics",
+    "measure",
+    "picks",
+    "random_forgone",
+    "ratio_over_trees",
+    "stop_loss",
+]
 
 _CHUNK = 4_000_000  # draws held in memory at once by the bootstrap
 
@@ -75,6 +84,10 @@ class Estimate:
     def __str__(self) -> str:
         return f"{self.value:.3g} [{self.low:.3g}, {self.high:.3g}]"
 
+    def to_json(self) -> dict[str, float | None]:
+        """Plain numbers; None for what no tree defines."""
+        return {key: None if np.isnan(x) else x for key, x in vars(self).items()}
+
 
 @dataclass(frozen=True)
 class Metrics:
@@ -105,17 +118,13 @@ class Metrics:
 
     def to_json(self) -> dict[str, object]:
         """Plain numbers for a sheet; None for a figure that no tree defines."""
-
-        def plain(e: Estimate) -> dict[str, float | None]:
-            return {k: None if np.isnan(x) else x for k, x in vars(e).items()}
-
         return {
-            "forgone_percent": plain(self.forgone),
-            "relative_forgone_percent": plain(self.relative_forgone),
-            "top1_percent": plain(self.top1),
-            "rank_correlation": plain(self.rank_correlation),
-            "stop_loss_percent": plain(self.stop_share),
-            "stop_loss": [{"price": p, **plain(e)} for p, e in self.stop_loss.items()],
+            "forgone_percent": self.forgone.to_json(),
+            "relative_forgone_percent": self.relative_forgone.to_json(),
+            "top1_percent": self.top1.to_json(),
+            "rank_correlation": self.rank_correlation.to_json(),
+            "stop_loss_percent": self.stop_share.to_json(),
+            "stop_loss": [{"price": p, **e.to_json()} for p, e in self.stop_loss.items()],
             "trees": self.n_trees,
             "candidates": self.n_candidates,
             "trees_with_best_zero": self.n_zero,
@@ -205,11 +214,7 @@ def measure(
     ]
     numerators = np.stack([w * a for a, _ in columns], axis=1)
     denominators = np.stack([w * b for _, b in columns], axis=1)
-    if cluster is not None:
-        member = np.unique(np.asarray(cluster), return_inverse=True)[1]
-        if member.shape != w.shape:
-            raise InputError("cluster", f"must have shape ({len(w)},)", member.shape)
-        numerators, denominators = _sums(numerators, member), _sums(denominators, member)
+    numerators, denominators = _clustered(numerators, denominators, cluster)
     forgone, relative, top1, rank, stop, *losses = _bootstrap(numerators, denominators, n_boot, level, seed)
     return Metrics(
         _percent(forgone),
@@ -223,6 +228,26 @@ def measure(
         int(np.count_nonzero(~positive)),
         level,
     )
+
+
+def ratio_over_trees(
+    part: Floats,
+    whole: Floats,
+    *,
+    weight: Floats | None = None,
+    cluster: Sequence[int] | NDArray[np.integer] | None = None,
+    n_boot: int = 1000,
+    level: float = 0.95,
+    seed: int = 0,
+) -> Estimate:
+    """Sum of `part` over sum of `whole`, a number a tree each; interval, weight and cluster as in `measure`.
+
+    >>> ratio_over_trees(np.array([1.0, 2.0]), np.array([2.0, 4.0]), n_boot=10)
+    Estimate(value=0.5, low=0.5, high=0.5)
+    """
+    w = np.ones(len(part)) if weight is None else _column("weight", weight, len(part))
+    pair = _clustered((w * part)[:, None], (w * whole)[:, None], cluster)
+    return _bootstrap(*pair, n_boot, level, seed)[0]
 
 
 def random_forgone(
@@ -271,6 +296,18 @@ def _ranks(groups: Groups, x: Floats) -> Floats:
     ranks = np.empty(len(x))
     ranks[order] = np.repeat(mean_position, run_length) - groups.spread(groups.starts) + 1
     return ranks
+
+
+def _clustered(
+    numerators: Floats, denominators: Floats, cluster: Sequence[int] | NDArray[np.integer] | None
+) -> tuple[Floats, Floats]:
+    """Rows of a cluster summed, so that they are drawn again together."""
+    if cluster is None:
+        return numerators, denominators
+    member = np.unique(np.asarray(cluster), return_inverse=True)[1]
+    if member.shape != (len(numerators),):
+        raise InputError("cluster", f"must have shape ({len(numerators)},)", member.shape)
+    return _sums(numerators, member), _sums(denominators, member)
 
 
 def _sums(columns: Floats, member: Ints) -> Floats:

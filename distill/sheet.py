@@ -16,6 +16,7 @@ __all__ = [
     "FRONT_FORMAT",
     "SHEET_FORMAT",
     "accuracy_table",
+    "bound_text",
     "front_table",
     "sheet_page",
     "write_sheet",
@@ -55,6 +56,7 @@ def sheet_page(sheet: Mapping[str, Any]) -> str:
         f"Trees whose best value is 0, left out of both shares: {accuracy['trees_with_best_zero']}.",
         "Stop loss: net value lost by stopping or going on wrongly at the leaves' own cost, of all that the",
         "best candidates net.",
+        *bound_text(accuracy.get("calibration")),
         "",
         f"## One decision over {decision['leaves']} leaves, one thread",
         "",
@@ -97,6 +99,24 @@ def front_table(scorers: Sequence[Mapping[str, Any]]) -> list[str]:
         "| --- | --- | --- | --- | --- | --- | --- | --- |",
         *(_front_row(e) for e in scorers),
     ]
+
+
+def bound_text(c: Mapping[str, Any] | None) -> list[str]:
+    """How often the upper bound held on the held-out trees."""
+    if c is None or c["stated"] is None:
+        return []
+    worst, every = c["worst_slice"], _estimate(c["covered_percent"])
+    text = [
+        f"Upper bound `voc_high`, stated {100 * c['stated']:g} %: held for {every} %",
+        f"of all candidates, and for {_estimate(c['covered_live_percent'])} % of those worth anything"
+        + (";" if worst else "."),
+    ]
+    if worst:
+        text.append(
+            f"worst slice of {worst['candidates']:,} candidates ({worst['by']} {worst['slice']}): "
+            f"{worst['covered_percent']:.3g} %."
+        )
+    return text
 
 
 def _value_text(value: Mapping[str, Any]) -> str:

@@ -13,7 +13,7 @@ from distill.files import sha256_of, write_atomic
 from distill.runtime import Scorer
 from distill.sheet import FRONT_FILE, FRONT_FORMAT, SHEET_FORMAT, write_sheet
 
-__all__ = ["ship"]
+__all__ = ["choose", "ship"]
 
 
 def ship(
@@ -34,7 +34,7 @@ def ship(
     if out.suffix != ".onnx":
         raise InputError("out", "must end in .onnx", str(out))
     front = _read_front(Path(trained))
-    entry, why = _choose(front["scorers"], latency_us, scorer)
+    entry, why = choose(front["scorers"], latency_us, scorer)
     source = Path(trained) / entry["file"]
     if sha256_of(source) != entry["sha256"]:
         raise InputError(str(source), f"must be the file that {FRONT_FILE} measured", "another SHA-256")
@@ -81,9 +81,14 @@ def _read_front(folder: Path) -> dict[str, Any]:
     return front
 
 
-def _choose(
-    scorers: list[dict[str, Any]], latency_us: float | None, name: str | None
+def choose(
+    scorers: list[dict[str, Any]], latency_us: float | None = None, name: str | None = None
 ) -> tuple[dict[str, Any], str]:
+    """One entry of a front's `scorers`, and why: by name, or the most accurate within a median time.
+
+    Accuracy is that on the part `choose`. Raises InputError where no entry has the name or fits.
+    """
+
     def cost_and_loss(e: Mapping[str, Any]) -> tuple[float, float]:
         return e["latency"]["p50_us"], e["choose"]["forgone_percent"]["value"]
 

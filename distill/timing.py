@@ -132,13 +132,14 @@ def time_scorer(scorer: Scorer, cases: Sequence[Decision], *, calls: int = 2000)
     return _timed(pick, cases, calls, warm_up=200)
 
 
-def time_exact(cases: Sequence[Decision], *, rate: bool, calls: int = 20) -> Timing:
-    """Time of the exact dynamic VOC of every candidate, one rollout or the rate, on the same cases."""
+def time_exact(
+    cases: Sequence[Decision], *, horizon: float = math.inf, batch: int | None = None, calls: int = 20
+) -> Timing:
+    """Time of the exact value of every candidate on the same cases; batch None is the rate."""
 
     def act(case: Decision) -> None:
-        query = Query(horizon=math.inf, batch=None if rate else 1, remaining=case.remaining)
         assert case.tree is not None
-        price(case.tree, query)
+        price(case.tree, Query(horizon=horizon, batch=batch, remaining=case.remaining))
 
     return _timed(act, cases, calls, warm_up=1)
 

@@ -7,6 +7,7 @@ learners -> each exported, validated from its file on held-out trees and timed -
 from __future__ import annotations
 
 import json
+import math
 import os
 import platform
 import time
@@ -32,8 +33,9 @@ from distill.metrics import Groups
 from distill.runtime import Scorer
 from distill.scorer_inputs import RECORD
 from distill.sheet import FRONT_FILE, FRONT_FORMAT
+from distill.slices import tree_facts
 from distill.terminal import bar
-from distill.timing import decisions, time_exact, time_scorer
+from distill.timing import Decision, Timing, decisions, time_exact, time_scorer
 from distill.tree import Floats
 from distill.validate import baselines, examine, sample_pairs
 
@@ -65,6 +67,13 @@ def _boosting(n_trees: int, n_leaves: int) -> Recipe:
     return Recipe(f"boosting {n_trees}x{n_leaves}", make)
 
 
+def _dense(*layers: int) -> Recipe:
+    def make(seed: int) -> DenseLearner:
+        return DenseLearner(target=_TARGET, layers=layers, random_state=seed)
+
+    return Recipe(f"dense {'-'.join(map(str, layers))}", make)
+
+
 # The ratio to the first-order value serves tiny values as well as large ones; sqrt serves large ones only.
 _TARGET = "log_ratio"
 RECIPES: Mapping[str, Recipe] = {
@@ -74,7 +83,9 @@ RECIPES: Mapping[str, Recipe] = {
         _boosting(25, 8),
         _boosting(100, 31),
         _boosting(300, 31),
-        Recipe("dense 32-32", lambda seed: DenseLearner(target=_TARGET, layers=(32, 32), random_state=seed)),
+        _dense(8, 8),
+        _dense(16, 16),
+        _dense(32, 32),
     )
 }
 
@@ -118,18 +129,17 @@ def train(
         fit, choose, held_out = (graph.matrix({**c.columns, "tree": c.tree}) for c in vars(split).values())
         pool = {**split.held_out.columns, "tree": split.held_out.tree}
         cases = decisions(pool, _LEAVES, 50, seed, kind=data.kind)
+        facts = tree_facts(split.held_out)
         scorers: list[dict[str, Any]] = []
         for recipe in chosen:
             advance(1, f"train {recipe.name}")
             path = out / recipe.file
             fit_seconds = _fit_and_export(recipe, split, fit, choose, graph, about, seed, path)
             advance(1, f"validate {recipe.name}")
-            scorers.append(_examine(recipe, path, split, cases, fit_seconds, n_boot, seed))
+            scorers.append(_examine(recipe, path, split, facts, cases, fit_seconds, n_boot, seed))
         advance(1, "closed forms and exact methods")
         beside = baselines(split.held_out, held_out.first_order, n_boot=n_boot, seed=seed)
-        exact = {}
-        if data.kind is not RECORD:
-            exact = {"dynamic VOC": time_exact(cases, rate=False), "dynamic rate": time_exact(cases, rate=True)}
+        exact = _exact_times(cases, about["value"]) if data.kind is not RECORD else {}
         advance(1)
     _mark_front(scorers)
     front = {
@@ -211,7 +221,14 @@ def _ranges(x: NDArray[np.float32]) -> NDArray[np.float32]:
 
 
 def _examine(
-    recipe: Recipe, path: Path, split: Split, cases: Sequence[Any], fit_seconds: float, n_boot: int, seed: int
+    recipe: Recipe,
+    path: Path,
+    split: Split,
+    facts: Mapping[str, Floats],
+    cases: Sequence[Any],
+    fit_seconds: float,
+    n_boot: int,
+    seed: int,
 ) -> dict[str, Any]:
     """What the scorer file is worth: accuracy on two parts, latency, size."""
     scorer = Scorer.load(path)
@@ -219,7 +236,7 @@ def _examine(
         "recipe": recipe.name,
         "file": path.name,
         "sha256": sha256_of(path),
-        "held_out": examine(scorer, split.held_out, n_boot=n_boot, seed=seed),
+        "held_out": examine(scorer, split.held_out, facts=facts, n_boot=n_boot, seed=seed),
         "choose": examine(scorer, split.choose, n_boot=n_boot, seed=seed),
         "pairs": sample_pairs(scorer, split.held_out, seed=seed),
         "latency": time_scorer(scorer, cases).to_json(),
@@ -251,6 +268,18 @@ def _mark_front(front: list[dict[str, Any]]) -> None:
     points = [_cost_and_loss(e) for e in front]
     for entry, (us, loss) in zip(front, points, strict=True):
         entry["on_front"] = not any(u <= us and x <= loss and (u, x) != (us, loss) for u, x in points)
+
+
+def _exact_times(cases: Sequence[Decision], value: Mapping[str, Any]) -> dict[str, Timing]:
+    """Time of the exact methods of the horizon learned: of the value learned, or one rollout and the rate."""
+    h, batch = float(value["horizon"]), value["batch"]
+    kind = {math.inf: "dynamic", 0.0: "static"}.get(h, f"horizon {h:g}")
+    one = batch or 1
+    of = "" if one == 1 else f" of {one} rollouts"
+    out = {f"{kind} VOC{of}": time_exact(cases, horizon=h, batch=one)}
+    if batch is None:
+        out[f"{kind} rate"] = time_exact(cases, horizon=h)
+    return out
 
 
 def _made_with() -> dict[str, str]:

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Sequence
-from typing import Any
+from collections.abc import Mapping, Sequence
+from typing import Any, Final
 
 import numpy as np
 
@@ -16,24 +16,46 @@ from distill.metrics import measure, random_forgone
 from distill.query import Query
 from distill.runtime import Scorer
 from distill.scorer_inputs import RECORD
+from distill.slices import Scored, calibration, forgone_by_slice, stop_curve, tree_facts
 from distill.timing import tree_of
 from distill.tree import Floats
 from distill.voc import price
 
-__all__ = ["baselines", "examine", "sample_pairs", "static_values", "validate"]
+__all__ = ["baselines", "examine", "sample_pairs", "static_values", "validate", "value_of_scorer"]
+
+_BOOT_OF_PARTS: Final = 200  # draws of the bootstrap for the many figures of slices, bins and prices
 
 
 def examine(
-    scorer: Scorer, candidates: Candidates, *, prices: Sequence[float] = (), n_boot: int = 1000, seed: int = 0
+    scorer: Scorer,
+    candidates: Candidates,
+    *,
+    facts: Mapping[str, Floats] | None = None,
+    prices: Sequence[float] = (),
+    n_boot: int = 1000,
+    seed: int = 0,
 ) -> dict[str, Any]:
     """What the picks of a scorer file lose on labelled candidates: figures with intervals, as JSON values.
 
     Candidates go through `Scorer.score` tree by tree, with guard and fallback, as in an agent. prices : u
-    a rollout, for the stop loss. n_boot, seed : of the bootstrap over trees.
+    a rollout, for the stop loss. n_boot, seed : of the bootstrap over trees. facts : what trees are sliced
+    by, from `tree_facts`; with them come `slices`, `calibration` and `stop_curve`, see `distill.slices`.
     """
     scores = scorer.score(**candidates.columns, tree=candidates.tree)
     found = _measured(candidates, scores.voc, prices, n_boot, seed)
-    return {**found, "in_range_percent": 100 * float(np.mean(scores.in_range))}
+    found["in_range_percent"] = 100 * float(np.mean(scores.in_range))
+    if facts is None:
+        return found
+    scored = Scored.of(candidates, scores.voc, scores.voc_high)
+    n_boot = min(n_boot, _BOOT_OF_PARTS)
+    slices = forgone_by_slice(scored, facts, n_boot=n_boot, seed=seed)
+    stated = scorer.facts.get("calibration", {}).get("coverage")
+    return {
+        **found,
+        "calibration": {"stated": stated, **calibration(scored, slices, n_boot=n_boot, seed=seed)},
+        "slices": slices,
+        "stop_curve": stop_curve(scored, n_boot=n_boot, seed=seed),
+    }
 
 
 def sample_pairs(
@@ -125,6 +147,12 @@ def _measured(
     ).to_json()
 
 
+def value_of_scorer(scorer: Scorer) -> dict[str, Any]:
+    """What a scorer scores: `horizon`, and `batch` or None for the rate; the dynamic rate without a file."""
+    value: dict[str, Any] = scorer.facts.get("about", {}).get("value", {"horizon": "inf", "batch": None})
+    return value
+
+
 def validate(
     scorer: str | os.PathLike[str] | Scorer,
     dataset: str | os.PathLike[str],
@@ -144,10 +172,12 @@ def validate(
         scorer = Scorer.load(scorer)
     candidates, about = Candidates.read(dataset)
     trained = scorer.facts.get("about", {})
-    if trained.get("value", about["value"]) != about["value"]:
+    if value_of_scorer(scorer) != about["value"]:
         raise InputError(f"{dataset}: value", f"must be the scorer's, {trained['value']}", about["value"])
     if scorer.kind is not None and scorer.kind is not candidates.kind:
-        raise InputError(f"{dataset}: input", f"must be the scorer's, {scorer.kind.name}", candidates.kind.name)
+        raise InputError(
+            f"{dataset}: input", f"must be the scorer's, {scorer.kind.name}", candidates.kind.name
+        )
     same_trees = trained.get("data") and all(
         trained["data"][key] == about["data"][key] for key in ("source_sha256", "seed")
     )
@@ -158,7 +188,9 @@ def validate(
     return {
         **about,
         "part": "held_out" if same_trees else "all",
-        "accuracy": examine(scorer, candidates, prices=prices, n_boot=n_boot, seed=seed),
+        "accuracy": examine(
+            scorer, candidates, facts=tree_facts(candidates), prices=prices, n_boot=n_boot, seed=seed
+        ),
         "beside": baselines(candidates, first_order, prices=prices, n_boot=n_boot, seed=seed),
         "pairs": sample_pairs(scorer, candidates, seed=seed),
     }

@@ -8,15 +8,18 @@ import onnxruntime
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import FEATURE_FIT, FEATURE_TABLE
+from ladder import CLOSED_FORM, FEATURE_FIT, FEATURE_TABLE
 from leaf_tables import rows, table
 from scipy import integrate, optimize, stats
 
+from distill import voc
 from distill.closed_form import static_rates
 from distill.errors import InputError
 from distill.feature_graph import FeatureGraph
 from distill.features import build_graph
 from distill.onnx_nodes import typed
+from distill.query import Query
+from distill.timing import tree_of
 
 GRAPH = FeatureGraph()
 seeds = st.integers(0, 2**32 - 1)
@@ -104,6 +107,68 @@ def test_single_leaf_actions_start_at_the_static_rate():
         near = rate > 1e-30
         np.testing.assert_allclose(got.first_order[near], rate[near], rtol=FEATURE_FIT)
         assert np.all(np.abs(got.batch - batch) <= 1 + 0.01 * batch)
+
+
+@pytest.mark.parametrize("batch", [None, 1, 6])
+def test_static_values_start_exact_but_for_the_fit(batch):
+    rng = np.random.default_rng(2)
+    graph = FeatureGraph(build_graph(horizon=0.0, batch=batch))
+    assert graph.names == ("threshold", "step")
+    for n, actions in ((1, 1), (2, 1), (9, 3), (40, 5)):
+        t = table(rng, n, actions)
+        t["noise_var"] *= 30
+        t["remaining"] = 10**6
+        t["mean"][-1] = t["mean"].max()  # near ties and, for n > 1, a leaf that equals the best
+        columns = {k: t[k] for k in ("mean", "var", "noise_var", "gain", "offset")}
+        exact, batches = static_rates(**columns, remaining=t["remaining"], batch=batch)
+        got = graph.matrix(t)
+        near = exact > 1e-30
+        assert np.any(near) or n == 1
+        np.testing.assert_allclose(got.first_order[near], exact[near], rtol=FEATURE_FIT)
+        assert np.all(got.first_order[exact == 0] < 1e-290)
+        if batch is None:
+            assert np.all(np.abs(got.batch - batches)[near] <= 1 + 0.01 * batches[near])
+        else:
+            assert np.all(got.batch == batch)
+
+
+def test_two_leaves_that_tie_for_the_best_are_each_others_static_rival():
+    t = table(np.random.default_rng(3), 3, 1)
+    t.update(mean=np.array([2.0, 2.0, 0.0]), gain=np.ones(3), offset=np.zeros(3))
+    x = FeatureGraph(build_graph(horizon=0.0)).matrix(t).x
+    assert x[0, 0] == x[1, 0] == 0 < x[2, 0]
+
+
+def test_a_fixed_batch_is_the_same_whatever_remains():
+    graph = FeatureGraph(build_graph(batch=5))
+    t = table(np.random.default_rng(4), 12, 3)
+    first, last = (graph.matrix({**t, "remaining": left}) for left in (1, 10**6))
+    for a, b in zip(first, last, strict=True):
+        np.testing.assert_array_equal(a, b)
+    assert np.all(first.batch == 5)
+    v, n = t["gain"] ** 2 * t["var"], t["gain"] ** 2 * t["noise_var"]
+    np.testing.assert_allclose(first.unit, v / np.sqrt(v + n / 5), rtol=CLOSED_FORM)
+
+
+@pytest.mark.parametrize("batch", [None, 4])
+def test_a_far_horizon_starts_like_the_infinite_one(batch):
+    t = table(np.random.default_rng(5), 20, 5)
+    starts = {
+        h: FeatureGraph(build_graph(horizon=h, batch=batch)).matrix(t).first_order for h in (1e9, np.inf)
+    }
+    near = starts[np.inf] > 1e-12
+    np.testing.assert_allclose(starts[1e9][near], starts[np.inf][near], rtol=FEATURE_TABLE)
+
+
+def test_a_single_action_of_finite_horizon_is_worth_something():
+    t = table(np.random.default_rng(6), 6, 1)
+    got = FeatureGraph(build_graph(horizon=3.0, batch=1)).matrix(t)
+    exact = voc.price(tree_of(t), Query(horizon=3.0, batch=1)).voc
+    # One action has no rival: all that is gained is that its leaves are known better.
+    large = exact > 1e-3 * exact.max()
+    assert large.sum() > 2
+    # The siblings' maximum is no normal one, so only the size is right.
+    assert np.all(np.abs(np.log(got.first_order[large] / exact[large])) < np.log(3))
 
 
 @settings(deadline=None, max_examples=30, derandomize=True)

@@ -11,11 +11,11 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from leaf_tables import NAMES, rows, table
-from scorers import KINDS, arguments, graph, scorer_bytes, training, without_upper_bound
+from scorers import KINDS, arguments, fitted, graph, scorer_bytes, training, without_upper_bound
 
 from distill.closed_form import highest_rates, static_rates
 from distill.errors import DistillError, InputError, ScorerFileError
-from distill.export import export_scorer
+from distill.export import export_scorer, mapped_back
 from distill.runtime import Scorer
 
 SCORER = Scorer.from_bytes(scorer_bytes("dense"))
@@ -167,7 +167,7 @@ def test_no_rollout_left_and_a_single_action_are_worth_nothing():
         assert not SCORER.score(**{**t, "remaining": 0}).worth_it
 
 
-def test_leaves_unlike_those_of_training_take_the_closed_form_one_by_one():
+def test_leaves_unlike_those_of_training_are_flagged_and_scored_at_the_edge_of_the_range():
     narrow = arguments("dense")
     narrow["ranges"] = narrow["ranges"].copy()
     narrow["ranges"][0, 1] = 2.0  # as if training had met thresholds up to 2 only
@@ -178,7 +178,13 @@ def test_leaves_unlike_those_of_training_take_the_closed_form_one_by_one():
     assert 0 < near.sum() < 20
     np.testing.assert_array_equal(got.in_range, near)
     np.testing.assert_array_equal(got.voc[near], wide.voc[near])
-    np.testing.assert_array_equal(got.voc[~near], closed_form(t)[0][~near])
+    limits = np.array([scorer.facts["ranges"][name] for name in graph().names], np.float32).T
+    edge = np.clip(graph().matrix(t).x, *limits)
+    learned = mapped_back(
+        np.asarray(fitted("dense").predict(edge), dtype=float), *graph().matrix(t)[1:3], "log_ratio"
+    )
+    np.testing.assert_allclose(got.voc[~near], learned[~near], rtol=1e-4)
+    assert np.any(got.voc[~near] != wide.voc[~near])
     assert got.pick == int(np.argmax(got.voc - t["cost"])) == scorer.pick(**t)
     assert (scorer.counters.out_of_range, scorer.counters.fallback) == (2, 0)
 
@@ -198,7 +204,7 @@ def test_the_upper_bound_is_the_files_where_it_answers_and_one_that_always_holds
     assert 0 < near.sum() < 20
     assert np.all(wide.voc_high >= wide.voc)
     np.testing.assert_array_equal(got.voc_high[near], wide.voc_high[near])
-    np.testing.assert_array_equal(got.voc_high[~near], bound_of_any_rate(t)[~near])
+    np.testing.assert_array_equal(got.voc_high[~near], np.maximum(bound_of_any_rate(t), got.voc)[~near])
     t["mean"][3] = np.nan
     bad = scorer.score(**t)
     assert bad.voc_high[3] == 0

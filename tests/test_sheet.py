@@ -8,7 +8,7 @@ from typing import Any
 
 import pytest
 
-from distill.sheet import SHEET_FORMAT, sheet_page, write_sheet
+from distill.sheet import SHEET_FORMAT, bound_text, sheet_page, write_sheet
 
 
 def estimate(value: float) -> dict[str, float]:
@@ -127,3 +127,14 @@ def test_both_files_stand_beside_the_scorer_and_replace_older_ones(tmp_path: Pat
     assert json.loads(data.read_text()) == sheet()
     assert page.read_text() == sheet_page(sheet())
     assert len(list(scorer.parent.iterdir())) == 2
+
+
+def test_the_bound_is_said_to_hold_as_often_as_it_did() -> None:
+    estimate = {"value": 95.4321, "low": 95.1, "high": 95.8}
+    worst = {"by": "noise", "slice": "1 to 2", "candidates": 8137, "covered_percent": 93.03}
+    found = {"stated": 0.95, "covered_percent": estimate, "covered_live_percent": {"value": 94.0}}
+    text = " ".join(bound_text({**found, "worst_slice": worst}))
+    assert "stated 95 %: held for 95.4 [95.1, 95.8] % of all candidates, and for 94 %" in text
+    assert "worst slice of 8,137 candidates (noise 1 to 2): 93 %" in text
+    assert "slice" not in " ".join(bound_text({**found, "worst_slice": None}))
+    assert bound_text(None) == bound_text({**found, "stated": None, "worst_slice": worst}) == []

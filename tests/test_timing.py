@@ -70,7 +70,7 @@ def test_percentiles_are_of_the_calls_and_in_microseconds(monkeypatch: pytest.Mo
 def test_scorer_and_exact_methods_are_timed_on_the_same_cases() -> None:
     cases = decisions(TABLE, 16, 2, seed=5)
     fast = time_scorer(Scorer.closed_form(), cases, calls=30)
-    one, rate = (time_exact(cases, rate=r, calls=4) for r in (False, True))
+    one, rate = (time_exact(cases, batch=k, calls=4) for k in (1, None))
     assert 0 < fast.p50 <= fast.p99
     assert 0 < one.p50 <= one.p99
     assert 0 < rate.p50 <= rate.p99

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import os
 import subprocess
 import sys
@@ -20,7 +21,9 @@ from distill.errors import InputError
 from distill.metrics import Groups
 from distill.runtime import Scorer
 from distill.sheet import FRONT_FILE
+from distill.ship import ship
 from distill.train import RECIPES, _mark_front, _ranges, row_weights, train
+from distill.validate import validate
 
 TREES = 250
 QUICK = ["linear", "boosting 25x8", "dense 32-32"]
@@ -125,6 +128,38 @@ def test_another_seed_splits_anew_and_gives_another_file(
     other = train(dataset, tmp_path / "front", seed=3, recipes=["linear"], n_boot=2)
     assert other["parts"] != front["parts"]
     assert (tmp_path / "front" / "linear.onnx").read_bytes() != (folder / "linear.onnx").read_bytes()
+
+
+@pytest.mark.parametrize(
+    ("horizon", "batch", "named"),
+    [
+        (0.0, 3, {"static VOC of 3 rollouts"}),
+        (math.inf, 1, {"dynamic VOC"}),
+        (8.0, None, {"horizon 8 VOC", "horizon 8 rate"}),
+    ],
+)
+def test_other_values_than_the_dynamic_rate_are_learned_and_ship(
+    tmp_path: Path, horizon: float, batch: int | None, named: set[str]
+) -> None:
+    dataset = labelled(tmp_path / "data", trees=150, horizon=horizon, batch=batch)
+    front = train(dataset, tmp_path / "front", recipes=["linear"], n_boot=2)
+    sheet = ship(tmp_path / "front", tmp_path / "scorer.onnx")
+    assert set(front["exact"]) == set(sheet["decision"]["exact"]) == named
+    shipped = Scorer.load(tmp_path / "scorer.onnx", strict=True)
+    found = validate(shipped, dataset, n_boot=2)
+    # About 20 trees, where a random pick forgoes 90 %; one tree of much worth can make up a forgone share.
+    assert found["accuracy"]["relative_forgone_percent"]["value"] < 8
+    assert found["beside"] == front["beside"]
+    held_out = split_by_tree(Candidates.read(dataset)[0], 0).held_out
+    got = shipped.score(**held_out.columns, tree=held_out.tree)
+    close = held_out.label > 0.1 * held_out.groups.spread(held_out.groups.highest(held_out.label))
+    assert np.median(np.abs(np.log(got.voc[close] / held_out.label[close]))) < 0.2
+    if batch is not None:
+        assert np.all(got.batch == batch)
+        # The closed form, where the file has no answer, values as many rollouts.
+        table = {name: x[:5] for name, x in held_out.columns.items()}
+        late = shipped.score(**{**table, "remaining": 1}, deadline=0.0)
+        assert np.all(late.batch == batch)
 
 
 def test_rows_weigh_by_their_worth_within_their_tree_whatever_its_unit() -> None:

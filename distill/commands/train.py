@@ -6,6 +6,7 @@ import argparse
 from pathlib import Path
 
 from distill.commands import flags
+from distill.files import write_atomic
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -19,11 +20,21 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--out", type=Path, required=True, metavar="FOLDER", help="scorer files and front.json"
     )
     parser.add_argument("--seed", type=flags.whole(0), default=0)
+    parser.add_argument(
+        "--latency",
+        type=flags.microseconds,
+        metavar="40us",
+        help="say which scorer is the most accurate within this median time a decision",
+    )
+    parser.add_argument("--show", action="store_true", help="draw the front here, and into FOLDER/front.svg")
 
 
 def run(args: argparse.Namespace) -> None:
     """Run the command."""
+    from distill.report import front_svg
     from distill.sheet import accuracy_table, front_table
+    from distill.ship import choose
+    from distill.terminal_chart import scatter
     from distill.train import train
 
     front = train(args.dataset, args.out, seed=args.seed, progress=True)
@@ -33,3 +44,15 @@ def run(args: argparse.Namespace) -> None:
         f"{parts['held_out']['trees']:,} held-out trees; time of one decision over {front['leaves']} leaves\n"
     )
     print("\n".join([*front_table(front["scorers"]), "", *accuracy_table(front["beside"])]))
+    if args.show:
+        points = [
+            (e["latency"]["p50_us"], e["held_out"]["forgone_percent"]["value"], e["recipe"], e["on_front"])
+            for e in front["scorers"]
+        ]
+        print()
+        scatter(points, "us a decision, median", "forgone share, %")
+        write_atomic(args.out / "front.svg", front_svg(front).encode())
+        print(f"\n{args.out / 'front.svg'} shows the same")
+    if args.latency is not None:
+        entry, why = choose(front["scorers"], args.latency)
+        print(f"\n{why}: {entry['recipe']}, {args.out / entry['file']}")

@@ -24,7 +24,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(args: argparse.Namespace) -> None:
     """Run the command."""
-    from distill.sheet import accuracy_table
+    from distill.sheet import accuracy_table, bound_text
     from distill.validate import validate
 
     figures = validate(args.scorer, args.dataset, seed=args.seed)
@@ -32,5 +32,7 @@ def run(args: argparse.Namespace) -> None:
     which = "held-out trees" if figures["part"] == "held_out" else "trees"
     print(f"{args.scorer} on {accuracy['trees']:,} {which} of {args.dataset}\n")
     print("\n".join(accuracy_table({"the scorer": accuracy, **figures["beside"]})))
+    print()
+    print("\n".join(bound_text(accuracy["calibration"])))
     if args.out:
         write_atomic(args.out, (json.dumps(figures, indent=1) + "\n").encode())

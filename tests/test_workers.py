@@ -84,17 +84,6 @@ def test_a_cluster_writes_the_same_bytes(tmp_path):
         assert _bytes(tmp_path / "there") == _bytes(tmp_path / "here")
 
 
-def test_workers_that_are_lost_on_the_way_are_one_clear_error(tmp_path, monkeypatch):
-    monkeypatch.setattr(workers, "_NO_WORKER_SECONDS", 6.0)
-    with dask_cluster(tmp_path) as cluster:
-        killer = _kill_when(tmp_path / "d", 1, cluster.workers)
-        with pytest.raises(
-            WorkersError, match=r"no worker is left, or has come in time; finished shards are"
-        ):
-            _labelled(tmp_path / "d", **_LONG, dask=cluster.address)
-        killer.join()
-
-
 def test_no_worker_is_one_clear_error(tmp_path, monkeypatch):
     monkeypatch.setattr(workers, "_NO_WORKER_SECONDS", 1.0)
     with (

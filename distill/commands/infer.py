@@ -36,7 +36,7 @@ def run(args: argparse.Namespace) -> None:
 
         write_infer_page(figures, args.page)
     print(
-        f"{args.out}: a {figures['belief'].replace('_', '/')} family from {figures['trees']:,} trees of "
+        f"{args.out}: a {'Gaussian' if figures['belief'] == 'gaussian' else 'win/loss'} family from {figures['trees']:,} trees of "
         f"{figures['decisions']:,} decisions; {100 * figures['level']:g} % intervals\n"
     )
     width = max(map(len, figures["parameters"]))

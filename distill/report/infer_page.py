@@ -8,13 +8,14 @@ from typing import Any, Final
 
 from distill.files import write_atomic
 from distill.report import spreads
-from distill.report.elements import element, estimate, number, section, table, text_of
+from distill.report.elements import element, estimate, number, section, table, text_of, word_list
 from distill.report.facts import Figures, gaps_refused
 from distill.report.frame import document, framed, opening, tile
 from distill.report.theme import svg
 
 __all__ = ["infer_page", "write_infer_page"]
 
+_BELIEFS: Final = {"gaussian": "Gaussian", "win_loss": "win/loss"}
 _VERDICTS: Final = {"contradicts": "does not fit", "untold": "cannot be told", "fits": "fits"}
 
 
@@ -46,19 +47,16 @@ def _opening(figures: Figures) -> ET.Element:
         tile("findings that do not fit", number(len(bad))),
         tile("largest distance of a column", number(columns[far]["distance"]), small=far),
     ]
-    said = f"A {figures['belief'].replace('_', '/')} family inferred from {figures['source']}."
+    said = f"A {_BELIEFS[figures['belief']]} family inferred from {figures['source']}."
     return opening(figures["name"], element("p", said), tiles=tiles)
 
 
 def _findings(figures: Figures) -> ET.Element:
     order = list(_VERDICTS)
-    rows, marks = {}, {}
-    for f in sorted(figures["findings"], key=lambda f: order.index(f["verdict"])):
-        name = f["about"]
-        while name in rows:
-            name += " "
-        rows[name], marks[name] = [f["words"]], _VERDICTS[f["verdict"]]
-    return table(("finding",), rows, marks)
+    found = sorted(figures["findings"], key=lambda f: order.index(f["verdict"]))
+    return word_list(
+        (f["about"], [element("span", _VERDICTS[f["verdict"]], class_="mark"), f["words"]]) for f in found
+    )
 
 
 def _pictures(figures: Figures) -> list[ET.Element]:

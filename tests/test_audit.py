@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import xml.etree.ElementTree as ET
+from collections.abc import Iterator
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -41,6 +42,14 @@ noise = { sd = 1 }
 budget = { rollouts = [8, 24], used = [0, 1] }
 search = { thompson = 1 }
 """
+
+
+@pytest.fixture(scope="module", autouse=True)
+def _few_trees_stand_for_training() -> Iterator[None]:
+    """Drawing them is most of an audit's time here."""
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr("distill.audit._REFERENCE", 300)
+        yield
 
 
 @pytest.fixture(scope="module")

@@ -35,8 +35,9 @@ def run(args: argparse.Namespace) -> None:
         from distill.report.infer_page import write_infer_page
 
         write_infer_page(figures, args.page)
+    belief = {"gaussian": "Gaussian", "win_loss": "win/loss"}[figures["belief"]]
     print(
-        f"{args.out}: a {'Gaussian' if figures['belief'] == 'gaussian' else 'win/loss'} family from {figures['trees']:,} trees of "
+        f"{args.out}: a {belief} family from {figures['trees']:,} trees of "
         f"{figures['decisions']:,} decisions; {100 * figures['level']:g} % intervals\n"
     )
     width = max(map(len, figures["parameters"]))

@@ -56,12 +56,12 @@ def test_weighted_sums_are_right_on_average():
     x = rng.choice([0.0, 1e-3, 0.05, 0.2], 40, p=[0.4, 0.3, 0.2, 0.1])
     y = rng.normal(size=40) + 5 * x
     sums = []
-    for seed in range(4000):
+    for seed in range(2000):
         rows, weight = choose(x, 11, np.random.default_rng(seed))
         sums.append(np.sum(weight * y[rows]) / 11)
     error = np.std(sums) / np.sqrt(len(sums))
     assert abs(np.mean(sums) - y.mean()) < STANDARD_ERRORS * error
-    unweighted = [np.mean(y[choose(x, 11, np.random.default_rng(s))[0]]) for s in range(4000)]
+    unweighted = [np.mean(y[choose(x, 11, np.random.default_rng(s))[0]]) for s in range(2000)]
     assert abs(np.mean(unweighted) - y.mean()) > STANDARD_ERRORS * error
 
 
@@ -112,14 +112,14 @@ def _distance(a, b):
 
 def test_weighted_figures_are_those_of_the_trees_as_they_came_and_intervals_cover_them(tmp_path):
     """One finite population, sampled again and again: no bias beyond a ratio's, and coverage as stated."""
-    generate(COLD, tmp_path, trees=1200, seed=4, asked=Asked(horizon=0))
+    generate(COLD, tmp_path, trees=800, seed=4, asked=Asked(horizon=0))
     everything, _ = Candidates.read(tmp_path)
     stakes = at_stake([tree for _, tree in shards.read_trees(tmp_path)])
     whole, names = _figures(everything, n_boot=1), ("forgone", "relative_forgone", "top1")
     values, covered, ignored = {n: [] for n in names}, dict.fromkeys(names, 0), []
-    for seed in range(150):
-        rows, weight = choose(stakes, 240, np.random.default_rng(seed))
-        keep = np.zeros(1200, dtype=bool)
+    for seed in range(100):
+        rows, weight = choose(stakes, 160, np.random.default_rng(seed))
+        keep = np.zeros(800, dtype=bool)
         keep[rows] = True
         part = everything.of_trees(keep)
         part = replace(part, weight=part.groups.spread(weight))
@@ -132,8 +132,8 @@ def test_weighted_figures_are_those_of_the_trees_as_they_came_and_intervals_cove
     for name in names:
         truth, spread = getattr(whole, name).value, np.std(values[name])
         # A ratio of two estimates is off by some 1/n of itself: less than a fifth of its spread here.
-        assert abs(np.mean(values[name]) - truth) < 0.2 * spread + STANDARD_ERRORS * spread / np.sqrt(150)
-        assert covered[name] >= 0.9 * 150, name
+        assert abs(np.mean(values[name]) - truth) < 0.2 * spread + STANDARD_ERRORS * spread / np.sqrt(100)
+        assert covered[name] >= 0.9 * 100, name
     assert abs(np.mean(ignored) - whole.relative_forgone.value) > np.std(ignored)
 
 

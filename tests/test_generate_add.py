@@ -108,7 +108,7 @@ def whole(tmp_path_factory):
     return _bytes(folder)
 
 
-@pytest.mark.parametrize("good", range(0, 9, 2))
+@pytest.mark.parametrize("good", [0, 1, 3, 6])
 def test_an_addition_that_was_stopped_goes_on_to_the_same_bytes(dataset, whole, monkeypatch, good):
     writes, real = iter(range(100)), module.write_atomic
 

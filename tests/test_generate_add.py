@@ -129,7 +129,7 @@ def test_an_addition_that_was_stopped_goes_on_to_the_same_bytes(dataset, whole, 
             generate(COLD, dataset, trees=30, seed=1, asked=STATIC, shard_trees=10)
         with pytest.raises(InputError, match=r"added: name: must be 'other' to go on; .*; got 'audit'"):
             add(Traces("other", NEW[:9]), dataset)
-    add(Traces("audit", NEW), dataset, workers=2)
+    add(Traces("audit", NEW), dataset)
     assert _bytes(dataset) == whole
 
 

@@ -5,6 +5,7 @@ children's. A decision node takes the maximum of its children, each taken as nor
 more by a table of the product of their distribution functions on the midpoints of equal cells (equal cells
 converge fastest for functions that level off on both sides: Goodwin 1949; Trefethen and Weideman 2014).
 Decision nodes right below decision nodes are merged into them, since a maximum of maxima is a maximum.
+The maximum of a node's children but one comes from the same table, and no variance is below 0.
 
 *Down.* If a child's mean moves by t, and its siblings' maximum is N(mu, r^2), its parent's is
 

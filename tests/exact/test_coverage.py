@@ -190,13 +190,13 @@ def _some_dense(rng: np.random.Generator) -> Any:
 ROWS = {
     "static independent": Row(_static(static_independent, _some_flat_or_chance), 200, 20_000),
     "static dense": Row(_static(static_dense, _some_dense), 200, 20_000),
-    "dynamic and horizon flat": Row(_flat, 40, 5_000),
-    "rate flat": Row(_flat_rates, 0, 1_000),
+    "dynamic and horizon flat": Row(_flat, 40, 3_000),
+    "rate flat": Row(_flat_rates, 0, 300),
     "dynamic and horizon chance": Row(_chance, 200, 20_000),
     "static win/loss": Row(_win_loss((0,)), 100, 20_000),
-    "horizon win/loss": Row(_win_loss((1, 2, 3, 4)), 100, 8_000),
-    "dynamic ancestral": Row(_ancestral, 0, 1_500),
-    "dynamic dense, sampled": Row(_sampled, 0, 1_500, wide=False),
+    "horizon win/loss": Row(_win_loss((1, 2, 3, 4)), 100, 4_000),
+    "dynamic ancestral": Row(_ancestral, 0, 600),
+    "dynamic dense, sampled": Row(_sampled, 0, 800, wide=False),
 }
 
 

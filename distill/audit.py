@@ -33,6 +33,7 @@ from distill.metrics import picks
 from distill.query import Priced, Query
 from distill.runtime import Scorer
 from distill.sample_data import family_path
+from distill.scorer_inputs import LEAF_TABLE
 from distill.sheet import SHEET_FORMAT
 from distill.traces import BadLines, read_many, write_trees
 from distill.tree import BeliefTree, Floats, leaf_table
@@ -90,6 +91,8 @@ def audit(
     path = Path(scorer)
     sheet = _read_sheet(path)
     loaded = Scorer.load(path)
+    if loaded.kind is not None and loaded.kind.name != LEAF_TABLE.name:
+        raise RefusedError(f"{path}: reads a {loaded.kind.name}; audit asks scorers of the {LEAF_TABLE.name}")
     sample, total = sample_trees(read_many(traces, bad or BadLines(strict=True)), trees, seed)
     asked = _asked(sheet["value"])
     candidates, kept, aside = _label(sample, asked)

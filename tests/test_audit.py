@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 import pytest
 from builders import chance_record, win_loss_record
+from ladder import QUADRATURE, STANDARD_ERRORS
 
 from distill import voc
 from distill.audit import WORTH_ADDING, audit, sample_trees
@@ -145,7 +146,9 @@ def test_losses_are_those_of_the_picks(shipped: Path, matching: Path) -> None:
             score = scorer.score(**row, remaining=tree.remaining).voc
             total += exact.max()
             lost += exact.max() - exact[picks(Groups.of([0] * len(exact)), score)[0]]
-    assert found.figures["now"]["forgone_percent"]["value"] == pytest.approx(100 * lost / total, abs=1e-9)
+    assert found.figures["now"]["forgone_percent"]["value"] == pytest.approx(
+        100 * lost / total, abs=QUADRATURE
+    )
 
 
 def _sampled(path: Path, n: int) -> list[BeliefTree]:
@@ -163,7 +166,7 @@ def test_the_sample_is_seeded_and_fair(family: Family) -> None:
         assert ids == sorted(ids)
         times[ids] += 1
     # Each of 30 is kept with probability 1/3: sd of a count 11.5.
-    assert np.all(np.abs(times - 200) < 4 * np.sqrt(600 * 2 / 9))
+    assert np.all(np.abs(times - 200) < STANDARD_ERRORS * np.sqrt(600 * 2 / 9))
 
 
 def test_the_same_files_and_seed_give_the_same_figures(shipped: Path, matching: Path) -> None:

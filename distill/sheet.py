@@ -18,6 +18,7 @@ __all__ = [
     "accuracy_table",
     "bound_text",
     "front_table",
+    "shift_table",
     "sheet_page",
     "write_sheet",
 ]
@@ -98,6 +99,26 @@ def front_table(scorers: Sequence[Mapping[str, Any]]) -> list[str]:
         "| | on the front | forgone share, % | relative forgone, % | p50, us | p99, us | KB | fit, s |",
         "| --- | --- | --- | --- | --- | --- | --- | --- |",
         *(_front_row(e) for e in scorers),
+    ]
+
+
+def shift_table(figures: Mapping[str, Mapping[str, Any]]) -> list[str]:
+    """Markdown lines: a row for each shift of `shift.measure_shifts`."""
+
+    def percent(x: float | None) -> str:
+        return "" if x is None else f"{x:.3g}"
+
+    head = "trees | forgone share, % | relative forgone, % | first-order start, % | bound holds, % "
+    return [
+        f"| shift | {head}| trees flagged, % | loss flagged, % |",
+        "| --- | --- | --- | --- | --- | --- | --- | --- |",
+        *(
+            f"| {name} | {m['trees']:,} | {_estimate(m['forgone_percent'])} "
+            f"| {_estimate(m['relative_forgone_percent'])} | {percent(m['first_order_forgone_percent'])} "
+            f"| {percent(m['covered_percent'])} | {percent(m['flagged_trees_percent'])} "
+            f"| {percent(m['loss_flagged_percent'])} |"
+            for name, m in figures.items()
+        ),
     ]
 
 

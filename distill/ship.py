@@ -50,6 +50,7 @@ def ship(
         "seed": front["seed"],
         "accuracy": entry["held_out"],
         "beside": front["beside"],
+        "peers": front.get("peers", {}),
         "pairs": entry.get("pairs"),
         "decision": {
             "leaves": front["leaves"],

@@ -23,7 +23,7 @@ from distill.scorer_inputs import LEAF_TABLE, InputKind
 from distill.tree import BeliefTree
 from distill.voc import price
 
-__all__ = ["Decision", "Timing", "decisions", "time_exact", "time_scorer", "tree_of"]
+__all__ = ["Decision", "Timing", "decisions", "time_calls", "time_exact", "time_scorer", "tree_of"]
 
 # Powers of the unit of utility in which columns count; 0 for the others.
 _POWERS = {
@@ -142,6 +142,13 @@ def time_exact(
         price(case.tree, Query(horizon=horizon, batch=batch, remaining=case.remaining))
 
     return _timed(act, cases, calls, warm_up=1)
+
+
+def time_calls(
+    act: Callable[[Decision], Any], cases: Sequence[Decision], *, calls: int = 2000, warm_up: int = 20
+) -> Timing:
+    """Time of anything that is done with a decision, on the cases in turn, after a warm-up."""
+    return _timed(act, cases, calls, warm_up)
 
 
 def _timed(act: Callable[[Decision], None], cases: Sequence[Decision], calls: int, warm_up: int) -> Timing:

@@ -30,6 +30,7 @@ from distill.feature_graph import FeatureGraph, FeatureMatrix
 from distill.files import sha256_of, write_atomic
 from distill.learners import BoostingLearner, DenseLearner, LinearLearner
 from distill.metrics import Groups
+from distill.peers import measure_peers
 from distill.runtime import Scorer
 from distill.scorer_inputs import RECORD
 from distill.sheet import FRONT_FILE, FRONT_FORMAT
@@ -139,6 +140,8 @@ def train(
             scorers.append(_examine(recipe, path, split, facts, cases, fit_seconds, n_boot, seed))
         advance(1, "closed forms and exact methods")
         beside = baselines(split.held_out, held_out.first_order, n_boot=n_boot, seed=seed)
+        equal = min(e["latency"]["p50_us"] for e in scorers)
+        rivals = measure_peers(split.held_out, cases, about["value"], equal, n_boot=n_boot, seed=seed)
         exact = _exact_times(cases, about["value"]) if data.kind is not RECORD else {}
         advance(1)
     _mark_front(scorers)
@@ -152,6 +155,7 @@ def train(
         "scorers": scorers,
         "beside": beside,
         "leaves": _LEAVES,
+        "peers": rivals,
         "exact": {name: t.to_json() for name, t in exact.items()},
         "features": list(graph.names),
         "made_with": _made_with(),

@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import json
 from pathlib import Path
+from typing import Any
 
 from distill.commands import flags
 from distill.files import write_atomic
@@ -17,13 +18,35 @@ HELP = "a scorer file against exact labels"
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
     parser.add_argument("scorer", metavar="FILE.onnx")
-    parser.add_argument("dataset", metavar="DATASET")
-    parser.add_argument("--seed", type=flags.whole(0), default=0, help="of the bootstrap")
+    parser.add_argument("dataset", metavar="DATASET", nargs="?", help="labelled trees")
+    parser.add_argument(
+        "--shift",
+        metavar="FAMILY",
+        help="a family file or name: fresh trees of it, and of families that differ in one thing each",
+    )
+    parser.add_argument(
+        "--trees", type=flags.whole(1), default=300, metavar="N", help="of each shift (default 300)"
+    )
+    parser.add_argument("--seed", type=flags.whole(0), default=0, help="of the bootstrap and of drawn trees")
     parser.add_argument("--out", type=Path, metavar="FILE.json", help="write the figures here too")
 
 
 def run(args: argparse.Namespace) -> None:
     """Run the command."""
+    from distill.errors import InputError
+
+    if args.dataset is None and args.shift is None:
+        raise InputError("validate", "must be given a dataset, --shift, or both")
+    figures: dict[str, Any] = {}
+    if args.dataset is not None:
+        figures = _on_dataset(args)
+    if args.shift is not None:
+        figures["shifts"] = _on_shifts(args)
+    if args.out:
+        write_atomic(args.out, (json.dumps(figures, indent=1) + "\n").encode())
+
+
+def _on_dataset(args: argparse.Namespace) -> dict[str, Any]:
     from distill.sheet import accuracy_table, bound_text
     from distill.validate import validate
 
@@ -32,7 +55,20 @@ def run(args: argparse.Namespace) -> None:
     which = "held-out trees" if figures["part"] == "held_out" else "trees"
     print(f"{args.scorer} on {accuracy['trees']:,} {which} of {args.dataset}\n")
     print("\n".join(accuracy_table({"the scorer": accuracy, **figures["beside"]})))
-    print()
-    print("\n".join(bound_text(accuracy["calibration"])))
-    if args.out:
-        write_atomic(args.out, (json.dumps(figures, indent=1) + "\n").encode())
+    print("\n" + "\n".join(bound_text(accuracy["calibration"])))
+    return figures
+
+
+def _on_shifts(args: argparse.Namespace) -> dict[str, Any]:
+    from distill.family import load_family
+    from distill.runtime import Scorer
+    from distill.sample_data import family_path
+    from distill.sheet import shift_table
+    from distill.shift import measure_shifts
+
+    family = load_family(family_path(args.shift))
+    figures = measure_shifts(
+        Scorer.load(args.scorer), family, trees=args.trees, seed=args.seed, progress=True
+    )
+    print("\n".join(["", *shift_table(figures)]))
+    return figures

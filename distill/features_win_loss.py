@@ -52,6 +52,9 @@ _BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest 
 _PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
 _EDGE: Final = 1e-9  # shares of the support that count as 0 and 1
 _LEAST_COUNT: Final = 0.05  # of alpha and beta, in the table
+_FAR: Final = 1e100  # spans; stands for no rival
+_LEAST_SPREAD: Final = 1e-12  # of the span squared
+_LARGEST_LOG: Final = 20.0  # of x (1 - x) times a density; larger ones are rounding at 1e8 trials and more
 _BLUNT: Final = 1e-6  # removes 0 / 0 where the deviance is 0
 _FURTHEST: Final = 30.0  # standard deviations; f is 0 there in float32
 
@@ -80,7 +83,9 @@ def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | Non
 
     # In units of the leaf's span, columns: rival, support's low end and mean, over the siblings' mean.
     c, low, mean = (g("Div", g("Reshape", x, column), span) for x in (over, reach[0], reach[1]))
+    c = g("Clip", c, g.scalar(-_FAR), g.scalar(_FAR))
     r2 = g("Div", g("Reshape", spread2, column), g("Mul", span, span))
+    r2 = g("Max", r2, g.double(_LEAST_SPREAD))  # a table of steps may fall below 0
     share, total = g("Reshape", leaves.share, column), g("Reshape", leaves.total, column)
     theta = g("Sqrt", g("Add", _variance(g, share, total, horizon), r2))
     t0 = g("Sub", c, mean)
@@ -152,7 +157,7 @@ def _tree(g: Nodes, leaves: _Leaves, horizon: float, points: int) -> tuple[str, 
     t = midpoints(points)
     x = g("MatMul", g("Div", g("Sub", ends, base), span), g.double(np.stack([1 - t, t])))
     x = g("Clip", x, g.scalar(_EDGE), g.scalar(1 - _EDGE))
-    phi = _beta_cdf(g, leaves, v, x)
+    phi = _beta_cdf(g, leaves.share, _trials(g, leaves.total, horizon), x)
     joint = g("ScatterND", g("Max", phi, g.single(1.0)), row, phi, reduction="mul")
     joint = g("Gather", joint, "action")
     bottom, top = g.split(g("Transpose", ends, perm=[1, 0]), 2, axis=0)
@@ -181,20 +186,27 @@ def _static(g: Nodes, leaves: _Leaves) -> tuple[str, str, tuple[str, str], str]:
     return g("Reshape", best, g.whole(-1)), nothing, reach, nothing
 
 
-def _beta_cdf(g: Nodes, leaves: _Leaves, v: str, x: str) -> str:
+def _trials(g: Nodes, total: str, horizon: float) -> str:
+    """alpha + beta of the beta with the mean and variance of the posterior mean h rollouts later."""
+    if math.isinf(horizon):
+        return total
+    h = g.double(horizon)
+    wider = g("Mul", g("Add", total, g.double(1.0)), g("Div", g("Add", total, h), h))
+    return g("Sub", wider, g.double(1.0))
+
+
+def _beta_cdf(g: Nodes, share: str, total: str, x: str) -> str:
     """P(p <= x) of each leaf at its points, float32, shape (n, points), within 5e-4.
 
-    v is the variance of p that counts; a and b are those of a beta with that variance. Two steps of
+    p ~ Beta(a, b), a = share total, b = (1 - share) total. Two steps of
 
         I_x(a, b) = I_x(a + 1, b + 1) + x^a (1 - x)^b / B(a, b) (b - (a + b) x) / (a b)
 
     (from Abramowitz and Stegun 1964, 26.5.15 and 26.5.16), then the normal approximation.
     """
     one = g.double(1.0)
-    spread = g("Mul", leaves.share, g("Sub", one, leaves.share))
-    total = g("Sub", g("Div", spread, g("Max", v, g.double(TINY))), one)
-    a = g("Max", g("Unsqueeze", g("Mul", leaves.share, total), g.whole(1)), g.double(_LEAST_COUNT))
-    b = g("Unsqueeze", g("Mul", g("Sub", one, leaves.share), total), g.whole(1))
+    a = g("Max", g("Unsqueeze", g("Mul", share, total), g.whole(1)), g.double(_LEAST_COUNT))
+    b = g("Unsqueeze", g("Mul", g("Sub", one, share), total), g.whole(1))
     b = g("Max", b, g.double(_LEAST_COUNT))
     t = g("Add", a, b)
     y = g("Sub", one, x)
@@ -205,7 +217,8 @@ def _beta_cdf(g: Nodes, leaves: _Leaves, v: str, x: str) -> str:
     second = g("Sub", g("Add", b, one), g("Mul", g("Add", t, g.double(2.0)), x))
     ratio = g("Div", g("Mul", t, g("Add", t, one)), g("Mul", ab, g("Add", g("Add", ab, t), one)))
     second = g("Mul", g("Mul", xy, ratio), second)
-    below = g("Mul", g("Exp", g("Sub", power, _log_beta(g, a, b, t))), g("Add", first, second))
+    density = g("Exp", g("Min", g("Sub", power, _log_beta(g, a, b, t)), g.double(_LARGEST_LOG)))
+    below = g("Mul", density, g("Add", first, second))
     whole = g("Add", _peizer_pratt(g, a, b, x, log_x, log_y, xy), g("Cast", below, to=TensorProto.FLOAT))
     least = 0.5 - _PHI_SLOPE
     return g("Min", g("Max", whole, g.single(least)), g.single(1 - least))

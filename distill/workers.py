@@ -26,6 +26,7 @@ __all__ = ["run_calls"]
 _CONNECT_SECONDS: Final = 10
 _NO_WORKER_SECONDS: Final = 60.0  # a cluster's own keeper may bring dead workers back
 _LOOK_SECONDS: Final = 0.5
+_LEAST_AHEAD: Final = 8
 _SCHEDULER: Final = "the scheduler was lost"
 _WORKERS: Final = "no worker is left, or has come in time"
 _HOW: Final[dict[str, Any]] = {
@@ -42,8 +43,8 @@ def run_calls(
 
     workers : processes of this machine; 1 stays in this one. dask : address of a running Dask scheduler,
     whose workers are used instead, through joblib's own Dask backend.
-    Arguments are taken as needed, at most two ahead for each worker. Errors of a call pass through.
-    Raises InputError where no scheduler answers, and WorkersError where workers are lost.
+    Arguments are taken as needed, two ahead for each worker, on a cluster sixteen at least. Errors of a call
+    pass through. Raises InputError where no scheduler answers, and WorkersError where workers are lost.
     """
     if dask is None:
         pool = Parallel(
@@ -122,6 +123,10 @@ class _Watch:
                 future = super().submit(func, callback)
                 future.add_done_callback(watch._failed)
                 return future
+
+            def effective_n_jobs(self, n_jobs: int) -> int:
+                # One would make joblib work here, and few starve workers that come later.
+                return max(int(super().effective_n_jobs(n_jobs)), _LEAST_AHEAD)
 
         backend = Backend(client=self._client, wait_for_workers_timeout=_NO_WORKER_SECONDS)
         self._pool = Parallel(n_jobs=-1, backend=backend, **_HOW)

@@ -84,6 +84,12 @@ def test_a_cluster_writes_the_same_bytes(tmp_path):
         assert _bytes(tmp_path / "there") == _bytes(tmp_path / "here")
 
 
+def test_the_work_is_done_on_the_cluster_from_its_first_worker_on(tmp_path):
+    with dask_cluster(tmp_path, workers=1) as cluster:
+        found = set(run_calls(((os.getpid, ()) for _ in range(30)), dask=cluster.address))
+        assert found == {cluster.workers[0].pid}
+
+
 def test_no_worker_is_one_clear_error(tmp_path, monkeypatch):
     monkeypatch.setattr(workers, "_NO_WORKER_SECONDS", 1.0)
     with (

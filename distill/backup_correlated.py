@@ -33,8 +33,8 @@ __all__ = ["CorrelatedBackup"]
 
 _LEAST: Final = 1e-300
 _FAR_MOVE: Final = 40.0  # standard deviations: no crossing beyond is worth anything
-_FIRST_STEP, _STEP_GROWTH = 0.02, 1.5  # of the search for the crossing
-_HALVINGS: Final = 40
+_FIRST_STEP, _STEP_GROWTH = 0.05, 1.6  # of the search for the crossing
+_REFINEMENTS: Final = 10  # Newton steps, halvings where one would leave the bracket
 _STRAIGHT: Final = 1e-9  # of the larger slope: slopes that differ by less make a straight line
 _WIDEST: Final = 1e6  # standard deviations: a bend wider than this is a straight line
 _LEAST_SHARE: Final = 1e-12
@@ -189,7 +189,7 @@ class CorrelatedBackup:
 
     def crossings(self) -> Crossings:
         """The crossing of larger first-order value on either side of 0, and the other one."""
-        sides = [_first_crossing(_Curves.of(self._actions), side) for side in (1, -1)]
+        sides = _first_crossings(_Curves.of(self._actions))
         worth = [slope * unit_gain(-np.abs(move)) for move, slope, _, _ in sides]
         falls = worth[1] > worth[0]
         move, slope, bend, now = (np.where(falls, b, a) for a, b in zip(*sides, strict=True))
@@ -223,6 +223,7 @@ class _Curves:
     rise: Floats
     theta: Floats
     at: Floats
+    gain_now: Floats
 
     @classmethod
     def of(cls, actions: list[_Value]) -> _Curves:
@@ -247,53 +248,69 @@ class _Curves:
             np.where(straight, 0.0, rise),
             np.where(straight, 1.0, np.maximum(theta, 1 / _WIDEST)),
             at,
+            unit_gain(at),
         )
+
+    def twice(self) -> _Curves:
+        """The same with every candidate twice, to look at both sides of 0 at once."""
+        pairs = (np.tile(x, 2) for x in (self.slope, self.low, self.rise, self.theta, self.at, self.gain_now))
+        return _Curves(self.top, self.value, *pairs)
 
     def lead(self, t: Floats) -> tuple[Floats, Ints]:
         """By how much the best of the other actions leads at moves t, and which one it is."""
-        lift = unit_gain(self.at + t / self.theta) - unit_gain(self.at)
+        lift = unit_gain(self.at + t / self.theta) - self.gain_now
         v = self.value[:, None] + self.low * t + self.rise * self.theta * lift
         best = v[self.top].copy()
         v[self.top] = -np.inf
         which = np.argmax(v, axis=0)
         return v[which, np.arange(len(t))] - best, which
 
-    def gains(self, t: Floats, which: Ints, side: int) -> tuple[Floats, Floats, Floats]:
-        """How fast action `which` gains on the best one at t, the rate of that, and how fast at present."""
-        z = self.at + t / self.theta
-        slope, bend = self.low + self.rise * norm_cdf(z), self.rise * norm_pdf(z) / self.theta
+    def gains(self, t: Floats, which: Ints) -> tuple[Floats, Floats, Floats]:
+        """d lead / dt at moves t where action `which` leads, the second derivative, and d lead / dt at 0."""
         i = np.arange(len(t))
-        return (
-            side * (slope[which, i] - slope[self.top]),
-            bend[which, i] - bend[self.top],
-            side * (self.slope[which, i] - self.slope[self.top]),
-        )
+
+        def ahead(x: Floats) -> Floats:
+            return np.asarray(x[which, i] - x[self.top])
+
+        z = self.at + t / self.theta
+        bend = self.rise * norm_pdf(z) / self.theta
+        return ahead(self.low + self.rise * norm_cdf(z)), ahead(bend), ahead(self.slope)
 
 
-def _first_crossing(curves: _Curves, side: int) -> tuple[Floats, Floats, Floats, Floats]:
-    """Move, slope, bend and present slope over slope where another action first overtakes, on one side."""
+def _first_crossings(curves: _Curves) -> list[tuple[Floats, Floats, Floats, Floats]]:
+    """Move, slope, bend, and present slope over slope where another action first overtakes, on both sides."""
     n = curves.slope.shape[1]
+    side = np.repeat([1.0, -1.0], n)
     if len(curves.value) == 1:
-        return side * np.full(n, _FAR_MOVE), np.zeros(n), np.zeros(n), np.zeros(n)
-    near, far = np.zeros(n), np.full(n, _FAR_MOVE)
-    found, step = np.zeros(n, dtype=bool), _FIRST_STEP
+        none = np.zeros(n)
+        return [(sign * np.full(n, _FAR_MOVE), none, none, none) for sign in (1, -1)]
+    curves = curves.twice()
+    near, far = np.zeros(2 * n), np.full(2 * n, _FAR_MOVE)
+    found, step = np.zeros(2 * n, dtype=bool), _FIRST_STEP
     while step < _FAR_MOVE and not found.all():
-        ahead = curves.lead(side * np.full(n, step))[0] > 0
+        ahead = curves.lead(side * step)[0] > 0
         far[ahead & ~found] = step
         found |= ahead
         near[~found] = step
         step *= _STEP_GROWTH
-    for _ in range(_HALVINGS):
-        middle = (near + far) / 2
-        ahead = curves.lead(side * middle)[0] > 0
-        near, far = np.where(ahead, near, middle), np.where(ahead, middle, far)
-    move = side * np.where(found, far, _FAR_MOVE)
-    slope, bend, now = curves.gains(move, curves.lead(move)[1], side)
+    at = far.copy()
+    for _ in range(_REFINEMENTS):
+        lead, which = curves.lead(side * at)
+        near, far = np.where(lead > 0, near, at), np.where(lead > 0, at, far)
+        slope = side * curves.gains(side * at, which)[0]
+        with np.errstate(over="ignore"):
+            newton = at - lead / np.where(slope > 0, slope, 1.0)
+        at = np.where((slope > 0) & (newton >= near) & (newton <= far), newton, (near + far) / 2)
+    move = side * np.where(found, at, _FAR_MOVE)
+    slope, bend, now = curves.gains(move, curves.lead(move)[1])
+    slope, now = side * slope, side * now
     found &= slope > 0
     safe = np.where(found, slope, 1.0)
-    return (
+    columns = (
         move,
         np.where(found, slope, 0.0),
         side * np.where(found, bend / safe, 0.0),
         np.where(found, now / safe, 0.0),
     )
+    a, b = zip(*(np.split(x, 2) for x in columns), strict=True)
+    return [a, b]

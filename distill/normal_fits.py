@@ -36,7 +36,7 @@ _GAIN_FIT: Final = np.array(
 )
 # Where f^{-1} starts: y - a v / sqrt(v + c), v = -log(1 - exp(-b y)); within 0.006. (a, b, c).
 _START: Final = (np.sqrt(1.94647), 1.96789, 4.0114)
-_NEWTON_STEPS: Final = 3
+_NEWTON_STEPS: Final = 2
 _LOG_ROOT_2PI: Final = 0.9189385332046727
 _LEAST: Final = 1e-300
 _FAR: Final = 1e6  # phi is 0 long before; the square stays in range

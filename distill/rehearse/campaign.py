@@ -34,13 +34,15 @@ _SLOWEST_CHOICE: Final = 0.02  # seconds, where only rollouts are limited; slowe
 # Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from.
 _STOPS: Final = (1e-2, 3e-3, 1e-3, 3e-4, 1e-4, 3e-5, 1e-5)
 _NO_LOSS: Final = 1.01  # regret that stopping may leave, as a multiple of that without it, when tuned
-_AUTO: Final = ":stop=auto"
+_WIDTHS: Final = (0.7, 1.4, 2.0)  # of the prior, that ":prior=auto" chooses from beside 1
+_STOP_AUTO, _PRIOR_AUTO = ":stop=auto", ":prior=auto"
 
 # Policy -> the texts that tuning chooses from. The first is taken untuned.
 TUNED: Final = {
     "uct": ["uct:c=1", "uct:c=0.25", "uct:c=0.5", "uct:c=2", "uct:c=4"],
-    "thompson": ["thompson", "thompson:prior=0.5", "thompson:prior=0.7", "thompson:prior=1.4"],
-    "top-two": ["top-two", "top-two:prior=0.7", "top-two:prior=1.4", "top-two:share=0.7"],
+    "thompson": ["thompson", *(f"thompson:prior={width}" for width in (0.5, *_WIDTHS))],
+    "top-two": ["top-two", *(f"top-two:prior={width}" for width in _WIDTHS), "top-two:share=0.7"],
+    "static-rate": ["static-rate", *(f"static-rate:prior={width}" for width in _WIDTHS)],
 }
 
 
@@ -49,9 +51,10 @@ class Campaign:
     """What is rehearsed, as text. problems : of `catalogue.make_problem`. policies : of `make_policy`.
 
     budgets : of `Budget.parse`. seeds : decisions a cell. tuning_seeds : other decisions, on which the
-        constants of UCT and of both Thompson samplings are chosen for each problem and number of
-        rollouts where their policies are given by bare name; 0 leaves them as they are. A policy that
-        ends in ":stop=auto" stops at the highest price that costs no regret on these decisions.
+        constant of UCT and the priors of both Thompson samplings and of the static rate are chosen for
+        each problem and number of rollouts where their policies are given by bare name; 0 leaves them as
+        they are. A policy that ends in ":prior=auto" has its prior tuned in the same way; one that ends in
+        ":stop=auto" stops at the highest price that costs no regret on these decisions.
     wide : those of the problems that are rehearsed under `wide_budgets` too.
     """
 
@@ -69,7 +72,9 @@ class Campaign:
         for name in (*self.budgets, *self.wide_budgets):
             Budget.parse(name)
         for name in self.policies:
-            make_policy(name.removesuffix(_AUTO))
+            make_policy(_untuned(name))
+            if name.count("=auto") > 1:
+                raise InputError(f"policy {name!r}", "must leave one option to tuning at most")
         if not 2 <= self.seeds <= _TUNING_SEED - _FIRST_SEED:
             raise InputError("seeds", f"must be from 2 to {_TUNING_SEED - _FIRST_SEED}", self.seeds)
         if self.tuning_seeds == 1 or self.tuning_seeds < 0:
@@ -145,7 +150,7 @@ def _problem(campaign: Campaign, name: str, folder: Path) -> Results:
                 tuned[rollouts][row["policy"]] = row["chosen"]
         policies = []
         for spec in campaign.policies:
-            text_of = tuned[rollouts].get(spec, spec.removesuffix(_AUTO))
+            text_of = tuned[rollouts].get(spec, _untuned(spec))
             policy = _named(make_policy(text_of), spec)
             reason = _why_not(policy, problem, budget)
             if reason is None:
@@ -157,26 +162,39 @@ def _problem(campaign: Campaign, name: str, folder: Path) -> Results:
     return out
 
 
+def _untuned(spec: str) -> str:
+    return spec.removesuffix(_STOP_AUTO).removesuffix(_PRIOR_AUTO)
+
+
 def _named(policy: Policy, spec: str) -> Policy:
     """Tuned policies bear one name wherever they stand, so that cells can be compared."""
-    if spec in TUNED or spec.endswith(_AUTO):
+    if spec in TUNED or spec != _untuned(spec):
         policy.name = name_of(spec)  # type: ignore[misc]
     return policy
 
 
 def name_of(spec: str) -> str:
     """The name under which a campaign's policy stands in its cells."""
-    if spec.endswith(_AUTO):
-        return f"{make_policy(spec.removesuffix(_AUTO)).name}-stops"
-    return spec.replace("-", "_") if spec in TUNED else make_policy(spec).name
+    if spec in TUNED:
+        return spec.replace("-", "_")
+    suffix = {_STOP_AUTO: "-stops", _PRIOR_AUTO: "-tuned"}.get(spec[len(_untuned(spec)) :], "")
+    return make_policy(_untuned(spec)).name + suffix
+
+
+def _tries(campaign: Campaign, problem: Problem) -> dict[str, list[str]]:
+    """What tuning chooses from, policy by policy; the first is the one without tuning."""
+    tries = {spec: TUNED[spec] for spec in campaign.policies if spec in TUNED}
+    for spec in campaign.policies:
+        base = _untuned(spec)
+        if base != spec and _why_not(make_policy(base), problem) is None:
+            key, values = ("stop", _STOPS) if spec.endswith(_STOP_AUTO) else ("prior", _WIDTHS)
+            tries[spec] = [base, *(f"{base}:{key}={value:g}" for value in values)]
+    return tries
 
 
 def _tune(campaign: Campaign, problem: Problem, rollouts: int, folder: Path) -> list[dict[str, Any]]:
     """The best constants of the policies at this number of rollouts, with what each gave."""
-    tries = {spec: TUNED[spec] for spec in campaign.policies if spec in TUNED}
-    for spec in campaign.policies:
-        if spec.endswith(_AUTO) and _why_not(make_policy(base := spec.removesuffix(_AUTO)), problem) is None:
-            tries[spec] = [base, *(f"{base}:stop={price:g}" for price in _STOPS)]
+    tries = _tries(campaign, problem)
     if not tries or not campaign.tuning_seeds or not rollouts:
         return [{"policy": spec, "chosen": texts[0]} for spec, texts in tries.items()]
     policies = {text: make_policy(text) for texts in tries.values() for text in texts}
@@ -193,7 +211,7 @@ def _tune(campaign: Campaign, problem: Problem, rollouts: int, folder: Path) -> 
     for spec, texts in tries.items():
         regret = {text: float(found[policies[text].name].measured.mean()) for text in texts}
         chosen = min(texts, key=lambda text: regret[text])
-        if spec.endswith(_AUTO):
+        if spec.endswith(_STOP_AUTO):
             kept = [text for text in texts[1:] if regret[text] <= _NO_LOSS * regret[texts[0]]]
             chosen = (kept or texts)[0]
         row = {"problem": problem.name, "rollouts": rollouts, "policy": spec, "chosen": chosen}

@@ -48,9 +48,9 @@ _PLANS: Final = {
         wide_budgets=_ENDS,
     ),
 }
-# How a scorer file is used: at every rollout, and at most for a quarter of the time that rollouts take.
-_USES: Final = ("", ":settled=0.001:share=0.25")
-_STOPPING: Final = ":settled=0.001:share=0.25:stop=auto"
+# How scorer files are used: with the closed form where little is at stake, and at most for a quarter of the
+# time that rollouts take; in the full plan with a tuned prior too, and the first file in plain use as well.
+_USE: Final = ":settled=0.001:share=0.25"
 
 
 def plan(
@@ -65,8 +65,8 @@ def plan(
 ) -> Campaign:
     """A campaign by name ("quick", "full"), or of one's own; what is given replaces what the plan says.
 
-    scorers : files, each used in every way that the plan knows, beside the policies; in the full plan
-    the first one also stops early. Without a plan,
+    scorers : files, each used in the ways that the plan knows, beside the policies; the first one in all
+    of them. Without a plan,
     problems and budgets must be given; policies are then the tuned baselines.
     """
     if name is not None and name not in _PLANS:
@@ -76,10 +76,12 @@ def plan(
         if base is None and not given:
             raise InputError(f"--{what}", "must be given without --quick or --full")
     chosen = tuple(policies) or (base.policies if base else _BASELINES)
-    for file in scorers:
-        chosen += tuple(f"scorer:{file}{use}" for use in _USES)
-    if name == "full" and scorers:
-        chosen += (f"scorer:{scorers[0]}{_STOPPING}",)
+    full = name == "full"
+    for i, file in enumerate(scorers):
+        plain = [] if full and i > 0 else [""]
+        more = [f"{_USE}:prior=auto"] if full else []
+        more += [f"{_USE}:stop=auto"] if full and i == 0 else []
+        chosen += tuple(f"scorer:{file}{use}" for use in (*plain, _USE, *more))
     return Campaign(
         wide=base.wide if base else (),
         wide_budgets=base.wide_budgets if base and not budgets else (),

@@ -139,6 +139,18 @@ class WithPrior:
         """Keep the own beliefs up to date."""
         assert self._own is not None
         self._own.observe(leaf, observed, rollouts)
+        if (observe := getattr(self._policy, "observe", None)) is not None:
+            observe(leaf, observed, rollouts)
+
+    def expect(self, rollout_seconds: float) -> None:
+        """Tell the policy."""
+        if (expect := getattr(self._policy, "expect", None)) is not None:
+            expect(rollout_seconds)
+
+    def suits(self, tree: BeliefTree) -> bool:
+        """Whether the policy can search such trees."""
+        suits = getattr(self._policy, "suits", None)
+        return suits is None or bool(suits(tree))
 
 
 def leaf_actions(tree: BeliefTree) -> Ints:

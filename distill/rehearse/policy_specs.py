@@ -40,8 +40,8 @@ def _static_voc() -> Policy:
     return ByRule("static_voc")
 
 
-def _static_rate() -> Policy:
-    return ByRule("static_rate")
+def _static_rate(prior: float = 1.0) -> Policy:
+    return _with_prior(ByRule("static_rate"), prior)
 
 
 def _exact(horizon: float, rate: bool) -> Callable[..., Policy]:
@@ -62,10 +62,11 @@ def _scorer(
     settled: float = 0.0,
     share: float = 0.0,
     stop: float = 0.0,
+    prior: float = 1.0,
     name: str = "",
 ) -> Policy:
     options = {"commit": commit, "settled": settled, "share": share, "stop": stop}
-    return ByScorer(file, spread=spread, name=name, **options)
+    return _with_prior(ByScorer(file, spread=spread, name=name, **options), prior)
 
 
 # name -> maker; its parameters are the options.

@@ -185,6 +185,7 @@ def test_the_command_leaves_a_page_and_says_where(tmp_path, capsys):
         (["--quick", "--policy", "luck"], "policy 'luck': must begin with one of even,"),
         (["--quick", "--policy", "uct:d=1"], "policy 'uct:d=1': options of uct are: c; got 'd'"),
         (["--quick", "--policy", "uct:c=x"], "policy 'uct:c=x': c: must be a number; got 'x'"),
+        (["--quick", "--policy", f"scorer:{FAST}:prior=auto:stop=auto"], "must leave one option to tuning"),
         (["--quick", "--policy", "scorer:none.onnx"], "must name a file that exists; got 'none.onnx'"),
     ],
 )

@@ -12,6 +12,7 @@ from ladder import BACKUP_MOMENTS, CLOSED_FORM, QUADRATURE, STANDARD_ERRORS
 
 from distill import voc
 from distill.allocation import Search
+from distill.backup import Backup
 from distill.errors import InputError
 from distill.query import Query, scale_of
 from distill.rehearse.catalogue import environment_problems, make_problem, synthetic_problems
@@ -157,6 +158,17 @@ def test_a_prior_of_ones_own_changes_the_choices_not_what_is_acted_on():
     win_loss = WithPrior(TopTwoThompson(), 2.0)
     win_loss.begin(TreeProblem(2, noise_var=None).draw(0).tree)
     assert win_loss._own.tree().alpha == pytest.approx([0.25, 0.25], rel=CLOSED_FORM)
+
+
+def test_what_a_policy_asks_for_passes_through_its_prior():
+    wide = WithPrior(ByScorer(Scorer({"input": "record"}), share=0.5), 2.0)
+    done = run(wide, Budget.parse("10ms@1ms"))
+    assert done.rollouts > 0
+    assert wide._policy._rollout_seconds == pytest.approx(1e-3, rel=CLOSED_FORM)
+    rows, own = wide._policy._inputs._backup.rows(), Backup(wide._own.tree()).rows()
+    assert all(np.allclose(rows[name], own[name], rtol=CLOSED_FORM, atol=0) for name in own)
+    assert not WithPrior(ByScorer(FAST), 2.0).suits(make_problem("tree-2x2^1-winloss").draw(0).tree)
+    assert WithPrior(ByRule("thompson"), 2.0).suits(PROBLEM.draw(0).tree)
 
 
 def fake(voc_values, batch=8):

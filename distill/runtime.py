@@ -216,7 +216,7 @@ class Scorer:
     ) -> tuple[LeafBuffers, bool]:
         """Fill the buffers and run; False where the answer needs mending."""
         try:
-            floats = tuple([columns[name] for name in kind.floats])
+            floats = kind.take(columns)
             buffers = self._local.kept[kind.name][len(floats[0])]
             buffers.fill(floats, columns["action"] if kind.has_action else None, remaining)
         except (AttributeError, KeyError, OverflowError, TypeError, ValueError):

@@ -10,8 +10,10 @@ Each kind has its columns of n numbers, `action` where rows of one action belong
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
+from functools import cached_property
+from operator import itemgetter
 from typing import Any, Final
 
 import numpy as np
@@ -69,12 +71,17 @@ class InputKind:
     floats: tuple[str, ...]
     has_action: bool
 
-    @property
+    @cached_property
     def columns(self) -> tuple[str, ...]:
         """All columns, in the order of a call."""
         return (*self.floats, "action") if self.has_action else self.floats
 
-    @property
+    @cached_property
+    def take(self) -> Callable[[Mapping[str, Any]], tuple[Any, ...]]:
+        """The columns of numbers of a call, in order; KeyError where one is missing."""
+        return itemgetter(*self.floats)
+
+    @cached_property
     def inputs(self) -> tuple[str, ...]:
         """All inputs of a scorer: the columns, and `remaining`."""
         return (*self.columns, "remaining")

@@ -237,6 +237,17 @@ def test_lines_cross_where_they_do_when_no_rollout_follows():
     np.testing.assert_array_equal(row.bend, 0.0)
 
 
+def test_sensitivity_is_what_the_weights_make_of_a_column_of_the_covariance():
+    tree = drawn("shared-aisles", 2)
+    b = CorrelatedBackup(tree)
+    along = tree.cov / np.sqrt(np.diag(tree.cov))
+    np.testing.assert_allclose(b.sensitivity(), b.influence() @ along, rtol=1e-9, atol=1e-12 * scale_of(tree))
+    i, d = 1, 1e-4
+    moved = CorrelatedBackup(tree)
+    moved.update(tree.mean + d * along[:, i], tree.cov)
+    np.testing.assert_allclose((moved.value - b.value) / d, b.sensitivity()[:, i], rtol=1e-2, atol=1e-4)
+
+
 def test_one_observation_can_raise_one_rival_and_lower_another():
     cov = np.array([[0.01, 0.0, 0.0], [0.0, 1.0, -0.9], [0.0, -0.9, 1.0]])
     tree = dataclasses.replace(build(leaf(0.5, 1), leaf(0.0, 1), leaf(-0.2, 1)), var=None, cov=cov)

@@ -7,6 +7,8 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from distill.backup import backup_of
 from distill.candidates import Candidates
@@ -25,6 +27,11 @@ from distill.validate import validate
 from distill.voc import price
 
 FAMILIES = Path(__file__).parents[1] / "datasets" / "families"
+CONFORMANCE = {
+    scorer.kind.name: scorer
+    for path in sorted((FAMILIES.parent / "conformance").glob("*.onnx"))
+    for scorer in [Scorer.load(path)]
+}
 CASES = {"on-time": WIN_LOSS_TABLE, "crossing-traffic": RECORD}
 
 
@@ -183,3 +190,39 @@ def test_kinds_are_told_by_their_columns():
         Scorer.closed_form().score(mean=[0.0], remaining=1)
     got = Scorer.closed_form().score(**dict.fromkeys(RECORD.columns, np.array([0.5, 1.0])), remaining=5)
     assert got.pick == int(np.argmax(got.voc - np.array([0.5, 1.0])))
+
+
+@settings(deadline=None, max_examples=60, derandomize=True)
+@given(st.integers(0, 2**32 - 1), st.sampled_from(sorted(KINDS)))
+def test_whatever_is_passed_is_answered_or_refused_by_name(seed, name):
+    """Shapes, types, NaN, infinities, huge and negative numbers, for files and without one."""
+    rng = np.random.default_rng(seed)
+    kind, n = KINDS[name], int(rng.integers(1, 9))
+
+    def column(which):
+        odd = [math.nan, math.inf, -math.inf, -1.0, 0.0, 1e300, -1e300, 1e-320, 2.0**60]
+        x = np.where(rng.random(n) < 0.3, rng.choice(odd, n), rng.gamma(1, 1, n))
+        if which == "action":
+            x = rng.integers(-1, n + 1, n)
+        forms = [
+            x,
+            x.tolist(),
+            x.astype(np.float32, copy=True) if which != "action" else x,
+            x[:-1],
+            x[None],
+            "x",
+            None,
+        ]
+        with np.errstate(over="ignore"):
+            return forms[int(rng.choice(7, p=[0.7, 0.1, 0.1, 0.03, 0.03, 0.02, 0.02]))]
+
+    with np.errstate(over="ignore"):
+        columns = {which: column(which) for which in kind.columns}
+    left = [5, 0, -1, math.nan, 1e300, 7.5, np.int64(3)][int(rng.integers(7))]
+    for scorer in (CONFORMANCE[kind.name], Scorer.closed_form()):
+        try:
+            got = scorer.score(**columns, remaining=left)
+        except InputError:
+            continue
+        assert np.all(np.isfinite(got.voc) & (got.voc >= 0) & np.isfinite(got.voc_high))
+        assert 0 <= got.pick < n

@@ -155,6 +155,7 @@ def decide(
     """
     posterior = Posterior(draw.tree)
     learn = getattr(policy, "observe", None)
+    own_beliefs = getattr(policy, "own_beliefs", False)
     rolling = 0.0
     if (expect := getattr(policy, "expect", None)) is not None:
         expect(budget.rollout_seconds)
@@ -185,6 +186,8 @@ def decide(
         observed = math.fsum(returns) if draw.tree.belief == "win_loss" else math.fsum(returns) / rollouts
         started = clock()
         posterior.observe(choice.leaf, observed, rollouts)
+        if own_beliefs:  # an agent would keep one set of beliefs, not two
+            started = clock()
         if learn is not None:
             learn(choice.leaf, observed, rollouts)
         elapsed += clock() - started + cost

@@ -31,7 +31,8 @@ class Policy(Protocol):
     A policy may offer more: `observe(leaf, observed, rollouts)`, called after every choice with what
     `distill.allocation.Search.observe` takes, on the policy's time, for beliefs of its own;
     `expect(rollout_seconds)`, called before `begin` with the cost of a rollout, 0 where that is not
-    known; `suits(tree)`, whether it can search such trees at all.
+    known; `suits(tree)`, whether it can search such trees at all; `own_beliefs` = True where `observe`
+    keeps beliefs that it chooses by in place of the tree's, whose upkeep is then not charged.
     """
 
     @property
@@ -107,6 +108,8 @@ class WithPrior:
     width : factor on the standard deviation of every leaf's prior (win/loss: its trials are divided by
         width^2, its mean kept). What is acted on in the end are the beliefs of the tree, as for everyone.
     """
+
+    own_beliefs = True
 
     def __init__(self, policy: Policy, width: float) -> None:
         if not 0 < width < np.inf:

@@ -112,6 +112,25 @@ def test_slow_choices_cost_rollouts():
     assert slow.seen == [20, *range(9, 0, -1)]  # the first choice has shown what choosing costs
 
 
+@pytest.mark.parametrize("own_beliefs", [False, True])
+def test_one_set_of_beliefs_is_charged(own_beliefs, monkeypatch):
+    """1 ms for the tree's beliefs, 2 ms for the policy's own: an agent pays for those that it keeps."""
+    clock = Clock()
+    slow = Slow(clock, 0.0)
+    slow.own_beliefs = own_beliefs
+
+    def takes(seconds):
+        def observe(*_):
+            clock.now += seconds
+
+        return observe
+
+    slow.observe = takes(0.002)
+    monkeypatch.setattr(Search, "observe", takes(0.001))
+    done = run(TreeProblem(3), slow, Budget(rollouts=10), clock=clock)
+    assert done.choosing == pytest.approx(0.02 if own_beliefs else 0.03, rel=CLOSED_FORM)
+
+
 def test_a_choice_longer_than_the_budget_buys_nothing():
     clock = Clock()
     budget = Budget(seconds=0.01, rollout_seconds=0.005)

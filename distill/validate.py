@@ -178,8 +178,9 @@ def validate(
         raise InputError(
             f"{dataset}: input", f"must be the scorer's, {scorer.kind.name}", candidates.kind.name
         )
-    same_trees = trained.get("data") and all(
-        trained["data"][key] == about["data"][key] for key in ("source_sha256", "seed")
+    # The split goes by what a tree holds, so it serves whatever else stands in either dataset.
+    same_trees = not set(trained.get("data", {}).get("drawn_from", ())).isdisjoint(
+        about["data"]["drawn_from"]
     )
     if same_trees:
         candidates = split_by_tree(candidates, trained["seed"]).held_out

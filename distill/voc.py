@@ -9,6 +9,7 @@ win/loss                             win_loss              win_loss
 
 from __future__ import annotations
 
+import dataclasses
 import importlib
 import importlib.util
 from collections.abc import Callable, Sequence
@@ -84,7 +85,8 @@ def _later(name: str) -> Callable[[BeliefTree, Query], Priced]:
 
 
 def _held(tree: BeliefTree, query: Query, priced: Priced) -> Priced:
-    """The answer, if its error bounds keep the tolerance."""
+    """The answer, if its error bounds keep the tolerance; no label is -0.0."""
+    priced = dataclasses.replace(priced, voc=priced.voc + 0.0)
     if query.tolerance is not None and len(priced.error):
         allowed = query.tolerance * scale_of(tree)
         worst = int(np.argmax(priced.error))

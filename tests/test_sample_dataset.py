@@ -47,6 +47,7 @@ def test_its_plan_gives_the_same_trees_and_labels(tmp_path):
     slack = ours["error"] + theirs["error"]
     assert np.all(np.abs(ours["label"] - theirs["label"]) <= slack)
     scale = np.sqrt(ours["var"].max())
+    assert not np.signbit(ours["label"]).any()
     assert np.all(slack <= np.maximum(RELATIVE_TAIL * ours["label"], 1e-30 * scale))
     # Where two batches are worth the same to the last digits, either is best.
     assert np.mean(ours["label_batch"] == theirs["label_batch"]) > 0.99

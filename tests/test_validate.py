@@ -10,12 +10,13 @@ from typing import Any
 import numpy as np
 import pytest
 from ladder import CLOSED_FORM, RELATIVE_TAIL
-from small_dataset import labelled
+from small_dataset import FAMILY, labelled
 
 from distill.candidates import Candidates, split_by_tree
 from distill.errors import InputError
+from distill.family import load_family
 from distill.feature_graph import FeatureGraph
-from distill.generate import Traces, generate
+from distill.generate import Mix, Traces, generate
 from distill.metrics import measure
 from distill.query import Query
 from distill.runtime import Scorer
@@ -54,6 +55,24 @@ def test_more_trees_of_the_same_draw_do_not_bring_training_trees_back(
     assert found["part"] == "held_out"
     assert found["accuracy"]["trees"] == len(kept)
     assert not fit & kept
+
+
+def test_a_mix_does_not_bring_training_trees_back(
+    shipped: tuple[Path, Path, dict[str, Any]], tmp_path: Path
+) -> None:
+    file, dataset, _ = shipped
+    fresh = Traces(
+        "others", [tree for _, tree in read_trees(labelled(tmp_path / "others", trees=60, seed=9))]
+    )
+    mixed = tmp_path / "mixed"
+    generate(Mix(load_family(FAMILY), fresh, 0.5), mixed, trees=100, seed=5)
+    found = validate(file, mixed, n_boot=2)
+    fit = set(split_by_tree(Candidates.read(dataset)[0], 4).fit.keys().tolist())
+    kept = split_by_tree(Candidates.read(mixed)[0], 4).held_out
+    assert fit & set(Candidates.read(mixed)[0].keys().tolist())
+    assert found["part"] == "held_out"
+    assert found["accuracy"]["trees"] == len(kept.groups.sizes)
+    assert not fit & set(kept.keys().tolist())
 
 
 def test_on_fresh_trees_all_count(shipped: tuple[Path, Path, dict[str, Any]], tmp_path: Path) -> None:

@@ -3,16 +3,20 @@
 from __future__ import annotations
 
 import math
+from pathlib import Path
 
 import numpy as np
 import pytest
 from builders import bush, chance_record, flat_record, win_loss_record
 from flat_trees import deep_tree, mixed_bush
 
-from distill import voc
+from distill import shards, voc
 from distill.errors import RefusedError, ToleranceError
+from distill.exact import dynamic_flat
 from distill.query import Query, scale_of
 from distill.record import from_record
+
+SAMPLE = Path(__file__).parents[1] / "datasets" / "sample"
 
 
 def price(tree, horizon=math.inf, batch=1, **more):
@@ -83,3 +87,10 @@ def test_many_trees_come_back_in_order():
     flat = [mixed_bush(rng) for _ in range(3)]
     for tree, priced in zip(flat, voc.price_many(flat, Query()), strict=True):
         assert np.array_equal(priced.voc, price(tree).voc)
+
+
+def test_no_label_is_minus_zero():
+    """One leaf of this tree is worth less than the least positive number, from below."""
+    tree = dict(shards.read_trees(SAMPLE))[9]
+    assert np.signbit(dynamic_flat.price(tree, Query(math.inf, None, tree.remaining)).voc).any()
+    assert not np.signbit(price(tree, math.inf, None, remaining=tree.remaining).voc).any()

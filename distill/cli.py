@@ -21,6 +21,7 @@ from distill.commands import (
     price,
     record,
     rehearse,
+    report,
     ship,
     tour,
     train,
@@ -30,7 +31,7 @@ from distill.errors import DistillError
 
 __all__ = ["run"]
 
-_COMMANDS = (price, infer, generate, look, train, ship, validate, audit, rehearse, record, tour)
+_COMMANDS = (price, infer, generate, look, train, ship, validate, audit, report, rehearse, record, tour)
 
 
 def run(argv: Sequence[str]) -> int:

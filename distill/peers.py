@@ -77,7 +77,7 @@ def peers(value: Mapping[str, Any], samples: int, seed: int = 0) -> dict[str, Pe
     return {
         "first-order closed form": first_order,
         "static VOC of one rollout": static(1),
-        "static rate": static(None),
+        "static closed form": static(batch),
         "moment matching with quadrature": matching,
         "Monte Carlo in equal time": sampled,
         "UCT": uct,

@@ -51,6 +51,7 @@ def ship(
         "accuracy": entry["held_out"],
         "beside": front["beside"],
         "peers": front.get("peers", {}),
+        "break_even": front.get("break_even", {}),
         "pairs": entry.get("pairs"),
         "decision": {
             "leaves": front["leaves"],
@@ -60,13 +61,21 @@ def ship(
                 name: t["p50_us"] / entry["latency"]["p50_us"] for name, t in front["exact"].items()
             },
         },
-        "front": [{key: x for key, x in e.items() if key != "pairs"} for e in front["scorers"]],
+        "front": [_in_short(e) for e in front["scorers"]],
         "features": front["features"],
         "made_with": front["made_with"],
     }
     write_atomic(out, data)
     write_sheet(sheet, out)
     return sheet
+
+
+def _in_short(entry: Mapping[str, Any]) -> dict[str, Any]:
+    """A scorer of the front without what only a page about it alone shows."""
+    out = {key: x for key, x in entry.items() if key != "pairs"}
+    parts = ("slices", "calibration", "stop_curve")
+    out["held_out"] = {key: x for key, x in entry["held_out"].items() if key not in parts}
+    return out
 
 
 def _read_front(folder: Path) -> dict[str, Any]:

@@ -22,6 +22,7 @@ import sklearn
 from numpy.typing import NDArray
 
 from distill import __version__
+from distill.break_even import break_even
 from distill.calibration import calibrated
 from distill.candidates import Candidates, Split, split_by_tree
 from distill.errors import InputError
@@ -40,7 +41,7 @@ from distill.timing import Decision, Timing, decisions, time_exact, time_scorer
 from distill.tree import Floats
 from distill.validate import baselines, examine, sample_pairs
 
-__all__ = ["RECIPES", "Recipe", "row_weights", "train"]
+__all__ = ["RECIPES", "Recipe", "row_weights", "train", "what_pays"]
 
 _LEAVES = 64  # of the decision whose latency the sheet states
 _SELF_TEST_TREES = 8
@@ -145,6 +146,8 @@ def train(
         exact = _exact_times(cases, about["value"]) if data.kind is not RECORD else {}
         advance(1)
     _mark_front(scorers)
+    exact_times = {name: t.to_json() for name, t in exact.items()}
+    on_front = {e["recipe"]: e for e in scorers if e["on_front"]}
     front = {
         "format": FRONT_FORMAT,
         **about,
@@ -156,7 +159,8 @@ def train(
         "beside": beside,
         "leaves": _LEAVES,
         "peers": rivals,
-        "exact": {name: t.to_json() for name, t in exact.items()},
+        "exact": exact_times,
+        "break_even": what_pays(on_front, rivals, exact_times),
         "features": list(graph.names),
         "made_with": _made_with(),
         "train_seconds": round(time.perf_counter() - started, 2),
@@ -272,6 +276,27 @@ def _mark_front(front: list[dict[str, Any]]) -> None:
     points = [_cost_and_loss(e) for e in front]
     for entry, (us, loss) in zip(front, points, strict=True):
         entry["on_front"] = not any(u <= us and x <= loss and (u, x) != (us, loss) for u, x in points)
+
+
+def what_pays(
+    scorers: Mapping[str, Mapping[str, Any]],
+    rivals: Mapping[str, Mapping[str, Any]],
+    exact: Mapping[str, Mapping[str, float]],
+) -> dict[str, Any]:
+    """At what cost of a rollout each scorer, peer and the exact value learned pays; see `break_even`.
+
+    Empty where no tree defines a forgone share.
+    """
+    measured = {
+        name: (e["held_out"]["forgone_percent"]["value"], e["latency"]) for name, e in scorers.items()
+    }
+    measured |= {name: (m["forgone_percent"]["value"], m["latency"]) for name, m in rivals.items()}
+    if exact:
+        learned = list(exact)[-1]
+        measured[f"exact {learned}"] = (0.0, exact[learned])
+    if not measured or any(forgone is None for forgone, _ in measured.values()):
+        return {}
+    return break_even({name: (forgone, t["p50_us"]) for name, (forgone, t) in measured.items()})
 
 
 def _exact_times(cases: Sequence[Decision], value: Mapping[str, Any]) -> dict[str, Timing]:

@@ -21,7 +21,7 @@ RATE = {"horizon": "inf", "batch": None}
 NAMES = {
     "first-order closed form",
     "static VOC of one rollout",
-    "static rate",
+    "static closed form",
     "moment matching with quadrature",
     "Monte Carlo in equal time",
     "UCT",
@@ -41,7 +41,7 @@ def one_leaf_each(seed: int = 0, n: int = 4):
 
 def test_static_peers_are_exact() -> None:
     t = table(np.random.default_rng(1), 20, 4)
-    for name, batch in (("static VOC of one rollout", 1), ("static rate", None)):
+    for name, batch in (("static VOC of one rollout", 1), ("static closed form", None)):
         exact = voc.price(tree_of(t), Query(horizon=0, batch=batch, remaining=t["remaining"])).voc
         got = peers(RATE, 4)[name](t, t["remaining"])
         large = exact > 1e-30
@@ -109,7 +109,7 @@ def test_all_are_judged_on_the_same_trees_with_their_own_time(tmp_path) -> None:
     json.dumps(found, allow_nan=False)
     assert set(found) == NAMES
     share = {name: m["forgone_percent"]["value"] for name, m in found.items()}
-    assert share["first-order closed form"] < share["static rate"] < share["Thompson sampling"]
+    assert share["first-order closed form"] < share["static closed form"] < share["Thompson sampling"]
     assert all(0 < m["latency"]["p50_us"] <= m["latency"]["p99_us"] for m in found.values())
     assert found["Monte Carlo in equal time"]["samples"] in (4, 6, 8, 12, 16, 24, 32, 48, 64)
     assert measure_peers(whole, cases, {"horizon": 0.0, "batch": None}, equal_us=50.0) == {}

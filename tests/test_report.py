@@ -5,6 +5,7 @@ from __future__ import annotations
 import copy
 import json
 import re
+import shutil
 import subprocess
 import sys
 import xml.etree.ElementTree as ET
@@ -15,13 +16,15 @@ from pathlib import Path
 from typing import Any
 
 import matplotlib
+import matplotlib.image
 import numpy as np
 import pytest
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from small_dataset import labelled
 
+from distill.break_even import break_even
 from distill.errors import InputError
-from distill.report import CAUTION, charts, front_svg, page, pictures, theme, write_page
+from distill.report import CAUTION, charts, front_svg, more_pictures, page, pictures, theme, write_page
 from distill.report.elements import text_of
 from distill.report.words import COLUMNS, WORDS
 from distill.ship import ship
@@ -53,12 +56,50 @@ def accuracy(forgone: float | None, relative: float | None) -> dict[str, Any]:
     }
 
 
+def parts() -> dict[str, Any]:
+    """What `validate.examine` adds for held-out trees."""
+    sizes = [1e-8, 1e-4, 0.02]
+    return {
+        "slices": [
+            {
+                "by": by,
+                "slice": name,
+                "trees": 577,
+                "candidates": 14902,
+                "forgone_percent": estimate(share),
+                "relative_forgone_percent": estimate(1.5),
+                "covered_percent": 94.4,
+            }
+            for by, name, share in (
+                ("leaves", "2 to 17", 0.0321),
+                ("leaves", "18 to 66", 0.0),
+                ("gap", "<b>", 2.5),
+            )
+        ],
+        "calibration": {
+            "stated": 0.95,
+            "covered_percent": estimate(95.31, 0.004),
+            "covered_live_percent": estimate(93.77, 0.004),
+            "bins": [
+                {"from": x / 2, "to": 2 * x, "candidates": 901, "mean_exact": 1.1 * x, "mean_score": x,
+                 "covered_percent": 93.0 + i}
+                for i, x in enumerate(sizes)
+            ],
+            "worst_slice": {"by": "gap", "slice": "<b>", "candidates": 8137, "covered_percent": 92.61},
+        },
+        "stop_curve": [
+            {"price": p, "value": v, "low": 0.0, "high": 2 * v, "stop_at_once": 0.0169, "go_on": 1.1 * p}
+            for p, v in ((1e-6, 0.0), (1e-3, 2.5e-8), (0.1, 1.9e-6))
+        ],
+    }  # fmt: skip
+
+
 def scorer(recipe: str, us: float, forgone: float | None, on_front: bool) -> dict[str, Any]:
     return {
         "recipe": recipe,
         "file": f"{recipe}.onnx",
         "sha256": "ab" * 32,
-        "held_out": accuracy(forgone, 9.1 + us / 7),
+        "held_out": accuracy(forgone, 9.1 + us / 7) | parts(),
         "choose": accuracy(forgone, 9.2),
         "pairs": {
             "exact": [0.0, 2e-6, 0.0123, 0.2],
@@ -98,6 +139,14 @@ def front_figures() -> dict[str, Any]:
             "first-order closed form": accuracy(9.843, 33.5),
             "random pick": random_pick,
         },
+        "peers": {
+            "first-order closed form": accuracy(9.843, 33.5)
+            | {"latency": {"p50_us": 26.1, "p99_us": 31.2, "calls": 400}},
+            "UCT": accuracy(42.99, 63.7) | {"latency": {"p50_us": 8.13, "p99_us": 15.5, "calls": 400}},
+        },
+        "break_even": break_even(
+            {"dense 32-32": (0.0212, 36.6), "UCT": (42.99, 8.13), "exact dynamic rate": (0.0, 10293.9)}
+        ),
         "leaves": 64,
         "exact": {
             "dynamic VOC": {"p50_us": 318.8, "p99_us": 419.4, "calls": 20},
@@ -122,6 +171,8 @@ def sheet_figures() -> dict[str, Any]:
         "accuracy": entry["held_out"],
         "pairs": entry["pairs"],
         "beside": front["beside"],
+        "peers": front["peers"],
+        "break_even": front["break_even"],
         "decision": {
             "leaves": 64,
             "scorer": entry["latency"],
@@ -148,6 +199,16 @@ ALL = {"front": front_figures, "sheet": sheet_figures, "summary": summary_figure
 every_kind = pytest.mark.parametrize("figures", [f() for f in ALL.values()], ids=list(ALL))
 
 
+_SHOWN: dict[int, str] = {}
+
+
+def shown(figures: dict[str, Any]) -> str:
+    """The page of one of the kinds, made once."""
+    if id(figures) not in _SHOWN:
+        _SHOWN[id(figures)] = page(figures)
+    return _SHOWN[id(figures)]
+
+
 def parsed(text: str) -> ET.Element:
     return ET.fromstring(text.removeprefix("<!DOCTYPE html>"))
 
@@ -172,7 +233,7 @@ def text_in(e: ET.Element | None) -> str:
 
 @every_kind
 def test_it_is_xml_and_html_with_links_that_hold(figures: dict[str, Any]) -> None:
-    text = page(figures)
+    text = shown(figures)
     root = parsed(text)
     ids = [e.get("id") for e in root.iter() if e.get("id")]
     assert len(ids) == len(set(ids)) > 0
@@ -200,7 +261,7 @@ def test_it_is_xml_and_html_with_links_that_hold(figures: dict[str, Any]) -> Non
 
 @every_kind
 def test_it_asks_for_nothing_and_runs_nothing(figures: dict[str, Any]) -> None:
-    text = page(figures)
+    text = shown(figures)
     assert "http" not in text.replace('http-equiv="Content-Security-Policy"', "")
     assert "@import" not in text
     assert all(target.startswith("#") for target in re.findall(r"url\(([^)]*)", text))
@@ -212,7 +273,7 @@ def test_it_asks_for_nothing_and_runs_nothing(figures: dict[str, Any]) -> None:
 
 @every_kind
 def test_the_caution_and_every_word_stand_on_it(figures: dict[str, Any]) -> None:
-    root = parsed(page(figures))
+    root = parsed(shown(figures))
     assert CAUTION in text_in(root)
     for name in [*figures.get("scorer", figures)["beside"], *COLUMNS.values()]:
         assert name.removesuffix(", %") in WORDS
@@ -248,9 +309,9 @@ def test_another_process_gives_the_same_bytes(tmp_path: Path) -> None:
 @every_kind
 def test_every_figure_is_one_of_the_json(figures: dict[str, Any]) -> None:
     known = set(numbers_in(figures)) | {4}  # 4 pairs are drawn
-    shown = list(parsed(page(figures)).iter("data"))
-    assert len(shown) > 60
-    for e in shown:
+    data = list(parsed(shown(figures)).iter("data"))
+    assert len(data) > 60
+    for e in data:
         value = json.loads(e.get("value", ""))
         assert value in known
         assert e.text == text_of(value)
@@ -272,7 +333,7 @@ def spread(e: dict[str, Any]) -> list[float]:
 
 @every_kind
 def test_tables_hold_the_right_figures_in_the_right_cells(figures: dict[str, Any]) -> None:
-    root = parsed(page(figures))
+    root = parsed(shown(figures))
     top = figures.get("scorer", figures)
     scorers = top.get("scorers") or top["front"]
     trained = rows_of(root, "The scorers that were trained")
@@ -283,10 +344,10 @@ def test_tables_hold_the_right_figures_in_the_right_cells(figures: dict[str, Any
         assert trained[e["recipe"]] == [*shares, *([x] for x in rest)]
 
     judged = rows_of(root, "Accuracy on held-out trees")
-    shown = {"this scorer": top["accuracy"]} if "accuracy" in top else {}
-    shown = shown or {e["recipe"]: e["held_out"] for e in scorers if e["on_front"]}
-    assert list(judged) == [*shown, *top["beside"]]
-    for name, m in {**shown, **top["beside"]}.items():
+    judging = {"this scorer": top["accuracy"]} if "accuracy" in top else {}
+    judging = judging or {e["recipe"]: e["held_out"] for e in scorers if e["on_front"]}
+    assert list(judged) == [*judging, *top["beside"]]
+    for name, m in {**judging, **top["beside"]}.items():
         cells = [m.get(k, {}) for k in COLUMNS]
         assert judged[name] == [spread(c) if isinstance(c, dict) else [c] for c in cells]
 
@@ -314,6 +375,7 @@ def drawn(monkeypatch: pytest.MonkeyPatch) -> dict[str, Any]:
         return theme.svg(figure, name, meaning)
 
     monkeypatch.setattr(pictures, "svg", svg)
+    monkeypatch.setattr(more_pictures, "svg", svg)
     return caught
 
 
@@ -342,7 +404,9 @@ def test_the_front_stands_where_the_figures_say(drawn: dict[str, Any]) -> None:
     ]
     peers = lines(drawn["front"], "peer")
     assert peers[0] == ([12.5], [23.76])
-    assert [y for _, y in peers[1:]] == [[9.843, 9.843], [88.82, 88.82]]
+    assert peers[1] == ([26.1], [9.843])
+    assert peers[2][1] == [88.82, 88.82]  # a line across: its time is not known
+    assert peers[3] == ([8.13], [42.99])
     assert drawn["front"].axes[0].get_xscale() == drawn["front"].axes[0].get_yscale() == "log"
 
 
@@ -363,6 +427,42 @@ def test_bars_and_pairs_stand_where_the_figures_say(drawn: dict[str, Any]) -> No
     least = sheet["pairs"]["least"]
     exact, predicted = ([max(x, least) for x in sheet["pairs"][k]] for k in ("exact", "predicted"))
     assert lines(drawn["pairs-0"], "pairs") == [(exact, predicted)]
+
+
+def test_slices_bounds_prices_and_gains_stand_where_the_figures_say(drawn: dict[str, Any]) -> None:
+    figures = sheet_figures()
+    text = page(figures)
+    accuracy = figures["accuracy"]
+    assert bar_widths(drawn["slices-0"], 0) == [0.0321]  # what lost nothing has no bar
+    assert bar_widths(drawn["slices-0"], 1) == [2.5]
+    bins = accuracy["calibration"]["bins"]
+    scores = [b["mean_score"] for b in bins]
+    assert lines(drawn["bound-0"], "curve") == [(scores, [b["covered_percent"] for b in bins])]
+    assert lines(drawn["bound-0"], "across")[0][1] == [95.0, 95.0]
+    assert lines(drawn["sizes-0"], "curve")[1] == (scores, [b["mean_exact"] for b in bins])
+    stop = {key: [p[key] for p in accuracy["stop_curve"]] for key in ("price", "value", "go_on")}
+    ours, _, never = lines(drawn["stop-0"], "curve")
+    floor = drawn["stop-0"].axes[0].get_ylim()[0]
+    assert ours == (stop["price"], [max(y, floor) for y in stop["value"]])
+    assert never == (stop["price"], stop["go_on"])
+    found = figures["break_even"]
+    curves_ = lines(drawn["break-even"], "curve")
+    assert [y for _, y in curves_] == list(found["gain_percent"].values())
+    assert curves_[0][0] == [c / 1000 for c in found["costs_us"]]
+    (last,) = (b for b in found["best"] if b["to_us"] is None)
+    assert last["name"] == "exact dynamic rate"
+    assert f'<data value="{last["from_us"]!r}">' in text
+    assert "&lt;b&gt;" in text
+    assert "<b>" not in text
+
+
+@pytest.mark.parametrize("lost", ["slices", "calibration", "stop_curve"])
+def test_older_figures_without_parts_serve(lost: str) -> None:
+    sheet = sheet_figures()
+    before = page(sheet).count("<figure")
+    del sheet["accuracy"][lost]
+    del sheet["break_even"], sheet["peers"]
+    assert page(sheet).count("<figure") == before - 1 - (2 if lost == "calibration" else 1)
 
 
 def test_a_loss_of_zero_stands_on_an_edge_marked_zero(drawn: dict[str, Any]) -> None:
@@ -399,7 +499,7 @@ def test_labels_do_not_hide_one_another(drawn: dict[str, Any]) -> None:
     ax = drawn["front"].axes[0]
     renderer = FigureCanvasAgg(drawn["front"]).get_renderer()
     boxes = [t.get_window_extent(renderer) for t in ax.texts]
-    assert len(boxes) == 7
+    assert len(boxes) == 8
     for a, b in combinations(boxes, 2):
         assert not a.overlaps(b)
     inside = ax.get_window_extent(renderer).padded(1)
@@ -538,6 +638,79 @@ def test_older_figures_without_pairs_serve() -> None:
     assert "exact and by" in page(sheet_figures())
 
 
+# --- in a browser ----------------------------------------------------------------------------------
+
+BROWSER = next(filter(None, map(shutil.which, ("chromium", "chromium-browser", "google-chrome"))), None)
+FLAGS = [
+    "--headless", "--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run", "--hide-scrollbars",
+    "--disable-background-networking", "--disable-component-update", "--disable-sync",
+    "--allow-file-access-from-files",
+]  # fmt: skip
+in_browser = pytest.mark.skipif(BROWSER is None, reason="no Chromium on this machine")
+
+
+def browse(tmp_path: Path, *options: str) -> str:
+    profile = tmp_path / "profile"
+    done = subprocess.run(
+        [str(BROWSER), *FLAGS, f"--user-data-dir={profile}", *options],
+        capture_output=True, check=True, timeout=120, text=True,
+    )  # fmt: skip
+    return done.stdout
+
+
+@in_browser
+@pytest.mark.parametrize("kind", ["front", "summary"])
+def test_nothing_reaches_beyond_a_phone_or_a_desk(kind: str, tmp_path: Path) -> None:
+    """Measured by a browser: the page is no wider than its window, and its pictures have a size."""
+    write_page(ALL[kind](), tmp_path / "page.html")
+    (tmp_path / "frames.html").write_text(
+        """<body><script>
+        const found = [];
+        for (const width of [320, 390, 768, 1280]) {
+            const frame = document.createElement("iframe");
+            frame.width = width; frame.height = 900; frame.src = "page.html";
+            frame.onload = () => {
+                const page = frame.contentDocument;
+                const narrow = [...page.querySelectorAll("svg")].map(s => s.getBoundingClientRect().width);
+                found.push([width, page.documentElement.scrollWidth, narrow.length, Math.min(...narrow),
+                    page.defaultView.performance.getEntriesByType("resource").length]);
+                if (found.length == 4) document.body.innerHTML = "<pre>" + JSON.stringify(found) + "</pre>";
+            };
+            document.body.append(frame);
+        }
+        </script>"""
+    )
+    dom = browse(tmp_path, "--virtual-time-budget=20000", "--dump-dom", (tmp_path / "frames.html").as_uri())
+    found = re.search(r"<pre>(.*?)</pre>", dom)
+    assert found is not None, dom[-2000:]
+    measured = json.loads(found[1])
+    assert sorted(row[0] for row in measured) == [320, 390, 768, 1280]
+    for width, reach, pictured, narrowest, requests in measured:
+        assert reach <= width
+        assert pictured >= 8
+        assert narrowest > 250
+        assert requests == 0
+
+
+@in_browser
+@pytest.mark.parametrize(("scheme", "paper"), [(1, (0xFF, 0xFF, 0xFF)), (0, (0x14, 0x18, 0x1D))])
+def test_it_is_light_or_dark_as_its_reader(scheme: int, paper: tuple[int, int, int], tmp_path: Path) -> None:
+    write_page(sheet_figures(), tmp_path / "page.html")
+    shot = tmp_path / "shot.png"
+    browse(
+        tmp_path,
+        f"--blink-settings=preferredColorScheme={scheme}",
+        "--window-size=390,1600",
+        f"--screenshot={shot}",
+        (tmp_path / "page.html").as_uri(),
+    )
+    pixels = (255 * matplotlib.image.imread(shot)[:, :, :3]).round().astype(int)
+    assert tuple(pixels[2, 2]) == paper
+    inked = np.any(np.abs(pixels - np.array(paper)) > 60, axis=2)
+    assert 0.01 < inked.mean() < 0.5  # words and lines, on paper
+    assert inked[800:].any()
+
+
 # --- on what the other commands leave --------------------------------------------------------------
 
 
@@ -551,7 +724,12 @@ def test_what_train_ship_and_validate_leave_makes_a_page(tmp_path: Path) -> None
         judged = rows_of(root, "Accuracy on held-out trees")
         name = "this scorer" if "recipe" in figures else "linear"
         assert judged[name][0] == spread(front["scorers"][0]["held_out"]["forgone_percent"])
-        assert len(root.findall(".//figure")) == 4  # with exact against predicted values
+        titles = [text_in(f.find("h3")) for f in root.findall(".//figure")]
+        assert len(titles) == 9
+        for word in ("Values, exact", "loses", "upper bound", "size of score", "Stopping", "What pays"):
+            assert any(word in title for title in titles)
+    assert "slices" in sheet["accuracy"]
+    assert all("slices" not in e["held_out"] for e in sheet["front"])
     again = validate(tmp_path / "scorer.onnx", dataset, n_boot=2)
     assert again["pairs"] == front["scorers"][0]["pairs"] == sheet["pairs"]
 

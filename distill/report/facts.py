@@ -55,6 +55,8 @@ class Facts:
     exact: Mapping[str, Figures]
     sheet: Figures | None
     summary: Figures
+    peers: Mapping[str, Figures]
+    break_even: Figures
 
     @classmethod
     def read(cls, figures: Figures) -> Facts:
@@ -75,7 +77,7 @@ class Facts:
         return cls(
             title, top["value"], data, parts, top["seed"], top["features"], top["made_with"], scorers,
             top["beside"], timed["leaves"], timed["exact"], top if kind == SHEET_FORMAT else None,
-            figures if top is not figures else {},
+            figures if top is not figures else {}, top.get("peers", {}), top.get("break_even", {}),
         )  # fmt: skip
 
     @property

@@ -9,6 +9,7 @@ from distill.report import charts
 from distill.report.charts import Bar, Peer, Point
 from distill.report.elements import Child, element, number, stated, text_of
 from distill.report.facts import SHARES, Facts, Figures, ends, known, plain, time_of
+from distill.report.more_pictures import break_even_picture, parts_pictures
 from distill.report.theme import svg
 from distill.report.words import CAPTIONS, SHARE_NAMES
 
@@ -25,6 +26,14 @@ def pictures(facts: Facts) -> Iterator[ET.Element]:
     for i, one in enumerate(facts.shown):
         if one.pairs is not None:
             yield _pairs_framed(one.name, one.pairs, f"pairs-{i}")
+        for title, picture, caption in parts_pictures(one.name, one.accuracy, str(i)):
+            yield _framed(title, picture, *caption)
+    if found := facts.break_even:
+        roles = dict.fromkeys(found["gain_percent"], "scorer")
+        roles |= dict.fromkeys(facts.peers, "peer")
+        roles |= {f"exact {name}": "exact" for name in facts.exact}
+        title, picture, caption = break_even_picture(found, roles)
+        yield _framed(title, picture, *caption)
     if traces := facts.summary.get("on traces"):
         scorers = [name for name in traces if name not in facts.beside]
         picture = _loss_picture(traces, scorers, "traces")
@@ -46,7 +55,7 @@ def front_picture(facts: Facts, *, width: float = charts.WIDTH, height: float = 
     ]
     peers = [
         Peer(name, loss, time_of(m["latency"]) if "latency" in m else None)
-        for name, m in facts.beside.items()
+        for name, m in {**facts.beside, **facts.peers}.items()
         if (loss := plain(m["forgone_percent"]["value"])) is not None
     ]
     figure = charts.front(

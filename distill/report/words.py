@@ -40,6 +40,27 @@ CAPTIONS: Final = {
         "Each dot is one candidate of a held-out tree; on the line, the scorer's value is the exact one. "
         "Values are shares of the tree's scale, so trees of any unit stand side by side."
     ),
+    "slices": (
+        "Held-out trees parted by what they are, each part about as large. Shorter is better; each step of "
+        "the scale is ten times the one before. A slice without a bar lost less than 0.0001 %."
+    ),
+    "bound": (
+        "A calibrated upper bound comes with each score. Each dot: of the candidates scored about so high, "
+        "the share whose exact value lies within the bound."
+    ),
+    "sizes": (
+        "Each dot: of the candidates scored about so high, the mean exact value. On the line, both agree."
+    ),
+    "stop": (
+        "An agent goes on while the best score is worth its price. What it loses a tree by stopping or going "
+        "on where exact values say the opposite; beside it, what is lost by never rolling out and by never "
+        "stopping. What is lost nowhere stands on the lower edge, marked 0."
+    ),
+    "break-even": (
+        "A way to pick that forgoes little but decides slowly pays where rollouts are dear. Worked out from "
+        "the measured forgone shares and times, for one decision a rollout: what each gains in a given time, "
+        "as a share of what exact picks would that took no time. Best:"
+    ),
     "traces": "On decisions of a real search, recorded and kept from the training of every scorer here.",
     "tree": "The best candidate is the one to spend the next rollouts on.",
 }

@@ -1,0 +1,39 @@
+"""`voc-distill report`: one page with pictures from figures that other commands left."""
+
+from __future__ import annotations
+
+import argparse
+import json
+from pathlib import Path
+
+__all__ = ["HELP", "add_arguments", "run"]
+
+HELP = "one page with pictures, from the figures of train, ship or a tour"
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """The command's flags."""
+    parser.add_argument(
+        "figures",
+        type=Path,
+        metavar="FILE.json",
+        help="front.json, a sheet, a tour's summary, or train's folder",
+    )
+    parser.add_argument("--out", type=Path, required=True, metavar="PAGE.html")
+
+
+def run(args: argparse.Namespace) -> None:
+    """Run the command."""
+    from distill.errors import InputError
+    from distill.report import write_page
+    from distill.sheet import FRONT_FILE
+
+    path = args.figures / FRONT_FILE if args.figures.is_dir() else args.figures
+    try:
+        figures = json.loads(path.read_text())
+    except ValueError as e:
+        raise InputError(str(path), f"must be valid JSON ({e})") from None
+    if not isinstance(figures, dict):
+        raise InputError(str(path), "must hold the figures of train, ship or a tour")
+    write_page(figures, args.out)
+    print(f"{args.out}: one page, no other files needed")

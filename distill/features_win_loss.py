@@ -38,22 +38,23 @@ FEATURE_NAMES: Final = (
     "step",  # s_k / theta
     "resolved",  # s_k / s
     "small_or_many",  # log of the best value of up to 8 rollouts over that of more, cut at +-15
-    "small_batch",  # the best batch of up to 8
     "large_batch",  # log of the best batch of the normal form
     "run",  # length of a run of wins, or of losses, that reaches the threshold, cut at 40
-    "to_whole",  # what is missing of that length to the next whole number
     "trials",  # alpha + beta, cut at 60
     "odds",  # of the result that leads to the threshold
     "left",  # log of the rollouts left over the best batch of the normal form, cut at 3
 )
 
 _MOST: Final = 8  # rollouts whose every outcome is looked at
+# With rates, log of the value a rollout of each batch up to 8 over the best of them, cut at -6.
+_RATE_NAMES: Final = (*FEATURE_NAMES, *(f"batch_of_{k}" for k in range(1, _MOST + 1)))
 _BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s, within supports
 _PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
 _EDGE: Final = 1e-9  # shares of the support that count as 0 and 1
 _LEAST_COUNT: Final = 0.05  # of alpha and beta, in the table
 _FAR: Final = 1e100  # spans; stands for no rival
 _LEAST_SPREAD: Final = 1e-12  # of the span squared
+_LEAST_LOG: Final = -6.0
 _LARGEST_LOG: Final = 20.0  # of x (1 - x) times a density; larger ones are rounding at 1e8 trials and more
 _BLUNT: Final = 1e-6  # removes 0 / 0 where the deviance is 0
 _FURTHEST: Final = 30.0  # standard deviations; f is 0 there in float32
@@ -101,12 +102,12 @@ def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | Non
     z = g("Clip", g("Div", t0, g("Max", s_k, g.double(TINY))), g.scalar(-40.0), g.scalar(40.0))
     unit = s_k if batch is not None else g("Div", s_k, g("Max", k, g.double(1.0)))
     value = g("Mul", g("Mul", unit, slope), loss(g, z))
-    few, small = _few(g, c, low, r2, sign, horizon, batch)
+    few, small, each = _few(g, c, low, r2, sign, horizon, batch)
     if batch is None:  # the normal form is for many small steps alone
         enough = g("GreaterOrEqual", "remaining", g.double(_MOST + 1.0))
         value = g("Where", enough, value, g.double(0.0))
-    ratio = g("Sub", g("Log", g("Max", few, g.double(TINY))), g("Log", g("Max", value, g.double(TINY))))
-    extra = (g("Clip", ratio, g.scalar(-15.0), g.scalar(15.0)), small)
+    log_few = _log(g, few)
+    ratio = g("Clip", g("Sub", log_few, _log(g, value)), g.scalar(-15.0), g.scalar(15.0))
     whole = k
     if batch is None:
         whole = g("Where", g("GreaterOrEqual", few, value), small, k)
@@ -114,15 +115,20 @@ def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | Non
     elif batch <= _MOST:
         value = few
 
-    columns = (z, help_, g("Div", s_k, theta), g("Div", s_k, s), *extra, *_run(g, t0, k, share, total, sign))
+    columns = [z, help_, g("Div", s_k, theta), g("Div", s_k, s), ratio, *_run(g, t0, k, share, total, sign)]
+    if batch is None:
+        columns.append(g("Clip", g("Sub", _log(g, each), log_few), g.scalar(_LEAST_LOG), g.scalar(0.0)))
     stacked = g("Concat", *columns, axis=1)
     valid = g("And", g("Greater", "alpha", g.double(0.0)), g("Greater", "beta", g.double(0.0)))
     valid = g("And", valid, g("Greater", "high", "low"))
     g("And", valid, g("GreaterOrEqual", "action", g.whole(0)), out="valid")
     whole = g("Add", whole, g.double(0.5))
-    return finished(
-        g, WIN_LOSS_TABLE, FEATURE_NAMES, stacked, g("Mul", unit, span), g("Mul", value, span), whole
-    )
+    names = FEATURE_NAMES if batch is not None else _RATE_NAMES
+    return finished(g, WIN_LOSS_TABLE, names, stacked, g("Mul", unit, span), g("Mul", value, span), whole)
+
+
+def _log(g: Nodes, x: str) -> str:
+    return g("Log", g("Max", x, g.double(TINY)))
 
 
 def _leaves(g: Nodes) -> _Leaves:
@@ -276,8 +282,8 @@ def _steps(g: Nodes, t0: str, s: str, total: str, batch: int | None) -> tuple[st
 
 def _few(
     g: Nodes, c: str, low: str, r2: str, sign: str, horizon: float, batch: int | None
-) -> tuple[str, str]:
-    """The best value a rollout of up to 8 rollouts, and its batch; of a given batch, its whole value."""
+) -> tuple[str, str, str]:
+    """The best value a rollout of up to 8 rollouts, its batch, and the value of each batch."""
     batches = range(1, _MOST + 1) if batch is None else [min(batch, _MOST)]
     outcomes = [(k, w) for k in batches for w in range(k + 1)]
     ks, ws = (np.array(x, dtype=float) for x in zip(*outcomes, strict=True))
@@ -313,7 +319,7 @@ def _few(
         allowed = g("LessOrEqual", g.double(np.array(batches, dtype=float)), "remaining")
         values = g("Where", allowed, values, g.double(0.0))
     at = g("Cast", g("ArgMax", values, axis=1, keepdims=1), to=TensorProto.DOUBLE)
-    return g("ReduceMax", values, g.whole(1), keepdims=1), g("Add", at, g.double(float(batches[0])))
+    return g("ReduceMax", values, g.whole(1), keepdims=1), g("Add", at, g.double(float(batches[0]))), values
 
 
 def _rising_terms(outcomes: list[tuple[int, int]]) -> Floats:
@@ -339,9 +345,6 @@ def _run(g: Nodes, t0: str, k: str, share: str, total: str, sign: str) -> tuple[
     far = g("Abs", t0)
     # w wins alone move the mean by (1 - p) w / (total + w), losses by p w / (total + w).
     run = g("Div", g("Mul", total, far), g("Max", g("Sub", reach, far), g.double(1e-12)))
-    run = g("Min", run, g.double(40.0))
-    next_ = g("Cast", g("Add", run, g.double(1 - 1e-9)), to=TensorProto.INT64)
-    to_whole = g("Sub", g("Cast", next_, to=TensorProto.DOUBLE), run)
     many = g("Max", k, one)
     left = g("Clip", g("Log", g("Div", g("Max", "remaining", one), many)), g.scalar(0.0), g.scalar(3.0))
-    return (g("Log", many), run, to_whole, g("Min", total, g.double(60.0)), odds, left)
+    return (g("Log", many), g("Min", run, g.double(40.0)), g("Min", total, g.double(60.0)), odds, left)

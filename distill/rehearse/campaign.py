@@ -29,7 +29,7 @@ __all__ = ["Campaign", "Results", "name_of", "run"]
 
 _FIRST_SEED: Final = 10_000  # those before were looked at while policies were made
 _TUNING_SEED: Final = 1_000_000  # tuning looks at decisions from here on, the rehearsal at those before
-_SLOWEST_CHOICE: Final = 0.02  # seconds, where only rollouts are limited; slower choosers are left out
+_SLOWEST: Final = 0.25  # seconds a decision, where only rollouts are limited; slower choosers are left out
 
 # Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from.
 _STOPS: Final = (1e-2, 3e-3, 1e-3, 3e-4, 1e-4, 3e-5, 1e-5)
@@ -229,8 +229,10 @@ def _why_not(policy: Policy, problem: Problem, budget: Budget | None = None) -> 
         seconds = min(_one_choice(policy, tree) for _ in range(2))
     except RefusedError as e:
         return str(e)
-    most = _SLOWEST_CHOICE if budget is None or budget.seconds is None else budget.seconds
-    return f"one choice takes {seconds * 1e3:.0f} ms" if seconds > most else None
+    if budget is None:
+        return None
+    most = _SLOWEST / max(budget.room(0, 0.0), 1) if budget.seconds is None else budget.seconds
+    return f"one choice takes {seconds * 1e3:.1f} ms" if seconds > most else None
 
 
 def _one_choice(policy: Policy, tree: BeliefTree) -> float:

@@ -13,11 +13,12 @@ from distill.rehearse.results import write_results
 
 __all__ = ["plan", "quick"]
 
+# Branching, depth, noise and prior: 12 to 81 leaves.
 _TREES: Final = (
-    "tree-2x8^1-noise1", "tree-2x8^1-noise16", "tree-2x8^1-winloss",
+    "tree-3x3^3-noise1", "tree-4x4^2-noise4", "tree-4x4^2-winloss",
+    "tree-3x3^2-noise4-prior4", "tree-2x8^1-noise1", "tree-2x8^1-noise16", "tree-2x8^1-winloss",
     "tree-4x4^1-noise4", "tree-4x4^1-noise16", "tree-4x4^1-winloss",
     "tree-6x2^1-noise4", "tree-6x2^1-winloss",
-    "tree-3x3^2-noise4-prior4", "tree-3x3^2-winloss",
     "tree-4x3^2-noise4-chance", "tree-4x3^2-winloss-chance",
 )  # fmt: skip
 _SIMULATORS: Final = (

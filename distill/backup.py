@@ -239,14 +239,15 @@ class Backup:
         sd = self._own_sd
         if len(self._actions) == 1:
             slope = np.zeros(len(sd))
-        reached = slope > 0
         safe = np.maximum(slope, _LEAST)
         none = np.zeros(len(sd))
+        with np.errstate(over="ignore"):  # what overflows is cut
+            at, bent, ratio = move / np.maximum(sd, _LEAST), bend / safe * sd, now / safe
         return Crossings(
-            crossing=np.clip(move / np.maximum(sd, _LEAST), -_FAR_MOVE, _FAR_MOVE),
+            crossing=np.clip(at, -_FAR_MOVE, _FAR_MOVE),
             slope=slope * sd,
-            bend=np.clip(bend / safe * sd, 0.0, _FAR_MOVE),
-            now=np.where(reached, np.minimum(now / safe, _FAR_MOVE), 0.0),
+            bend=np.clip(bent, 0.0, _FAR_MOVE),
+            now=np.where(slope > 0, np.minimum(ratio, _FAR_MOVE), 0.0),
             other_crossing=none,
             other_slope=none,
             spread=most[self.leaf_nodes] * sd,

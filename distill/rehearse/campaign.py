@@ -33,7 +33,7 @@ _SLOWEST: Final = 0.25  # seconds a decision, where only rollouts are limited; s
 
 # Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from.
 _STOPS: Final = (1e-2, 3e-3, 1e-3, 3e-4, 1e-4, 3e-5, 1e-5)
-_NO_LOSS: Final = 1.01  # regret that stopping may leave, as a multiple of that without it, when tuned
+_NO_LOSS: Final = 0.03  # share of regret that stopping may cost when tuned, a standard error allowed for
 _WIDTHS: Final = (0.7, 1.4, 2.0)  # of the prior, that ":prior=auto" chooses from beside 1
 _STOP_AUTO, _PRIOR_AUTO = ":stop=auto", ":prior=auto"
 
@@ -212,7 +212,13 @@ def _tune(campaign: Campaign, problem: Problem, rollouts: int, folder: Path) -> 
         regret = {text: float(found[policies[text].name].measured.mean()) for text in texts}
         chosen = min(texts, key=lambda text: regret[text])
         if spec.endswith(_STOP_AUTO):
-            kept = [text for text in texts[1:] if regret[text] <= _NO_LOSS * regret[texts[0]]]
+            on = found[policies[texts[0]].name].measured
+            lost = {text: found[policies[text].name].measured - on for text in texts[1:]}
+            kept = [
+                text
+                for text, more in lost.items()
+                if more.mean() + more.std() / np.sqrt(len(more)) <= _NO_LOSS * on.mean()
+            ]
             chosen = (kept or texts)[0]
         row = {"problem": problem.name, "rollouts": rollouts, "policy": spec, "chosen": chosen}
         rows.append({**row, "regret": regret})

@@ -25,7 +25,7 @@ class ScorerInputs:
     def __init__(self, scorer: Scorer, tree: BeliefTree) -> None:
         if not self.fit(scorer, tree):
             raise RefusedError("scorer: the file does not read such trees")
-        self._scorer = scorer
+        self._scorer, self._plain = scorer, Scorer.closed_form()
         self._win_loss = tree.mean is None
         self._backup = Backup(tree) if scorer.kind is RECORD else None
         self._fixed: dict[str, Any] = {}
@@ -44,16 +44,20 @@ class ScorerInputs:
 
     def score(self, posterior: Posterior, remaining: int) -> Scores:
         """One call of the scorer on the beliefs as they are."""
-        columns: dict[str, Any]
+        return self._scorer.score(remaining=remaining, **self._columns(posterior))
+
+    def closed_form(self, posterior: Posterior, remaining: int) -> Scores:
+        """What the closed form says of the same arrays."""
+        return self._plain.score(remaining=remaining, **self._columns(posterior))
+
+    def _columns(self, posterior: Posterior) -> dict[str, Any]:
         if self._backup is not None:
-            columns = self._backup.rows()
-        elif self._win_loss:
+            return dict(self._backup.rows())
+        if self._win_loss:
             alpha, beta = posterior.trials
-            columns = {"alpha": alpha, "beta": beta, **self._fixed}
-        else:
-            mean, var = posterior.moments
-            columns = {"mean": mean, "var": var, **self._fixed}
-        return self._scorer.score(remaining=remaining, **columns)
+            return {"alpha": alpha, "beta": beta, **self._fixed}
+        mean, var = posterior.moments
+        return {"mean": mean, "var": var, **self._fixed}
 
     def observe(self, posterior: Posterior, leaf: int) -> None:
         """Take in that rollouts have changed the belief of one leaf."""

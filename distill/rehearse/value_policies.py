@@ -107,7 +107,7 @@ class ByScorer(_Thrifty):
     share : scoring may take this share of the time that rollouts take, where their cost is known (see
         `expect`): after a scoring the static rate, which costs next to nothing, chooses as many rollouts
         as that asks for. 0 scores whenever nothing is queued.
-    rollout_price, stop : as for `ByValue`.
+    rollout_price, stop : as for `ByValue`; with `settled`, the static rate too must find rollouts too dear.
     Where the file says 0 of every leaf the static rate decides too. Its choices are marked.
     """
 
@@ -195,7 +195,7 @@ class ByScorer(_Thrifty):
         scores = self._inputs.score(posterior, remaining)
         best = int(scores.pick)
         top = float(scores.voc[best])
-        if self._too_dear(top):
+        if self._too_dear(top) and self._too_dear(self._second_opinion(posterior, remaining)):
             return None
         if not top > 0 or top * remaining < self.settled * self._scale:
             self._resting = max(self.spread, _REST) - 1
@@ -209,6 +209,11 @@ class ByScorer(_Thrifty):
             due = math.ceil((time.perf_counter() - started) / paid)
             self._resting = max(due - 1 - len(self._queue), 0)
         return Choice(best, max(int(self.commit * scores.batch[best]), 1) if self.commit else 1)
+
+    def _second_opinion(self, posterior: Posterior, remaining: int) -> float:
+        """The closed form's best value, which still tells leaves apart where a dynamic value says settled."""
+        assert self._inputs is not None
+        return float(self._inputs.closed_form(posterior, remaining).voc.max()) if self.settled else 0.0
 
     def observe(self, leaf: int, observed: float, rollouts: int) -> None:
         """Keep what the scorer reads up to date; the beliefs have taken the rollouts in already."""

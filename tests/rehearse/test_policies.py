@@ -235,6 +235,23 @@ def test_stops_are_in_units_of_the_scale():
     assert exact.name == "exact_static_rate-stop0.01"
 
 
+def test_a_settled_scorer_stops_when_the_closed_form_agrees():
+    fresh = fake([1e-6, 0, 0, 0])(Scorer.closed_form(), settled=1e-3, stop=1e-3)
+    fresh_inputs = SimpleNamespace(
+        score=fresh.answer,
+        closed_form=lambda *_: SimpleNamespace(voc=np.array([0.5])),
+        observe=lambda *_: None,
+    )
+    tree = FOUR_LEAVES.draw(0).tree
+    fresh.begin(tree)
+    fresh._inputs = fresh_inputs
+    assert fresh.choose(Search(tree), 50, np.random.default_rng(0)).fell_back
+    fresh.begin(tree)
+    fresh_inputs.closed_form = lambda *_: SimpleNamespace(voc=np.array([1e-4]))
+    fresh._inputs = fresh_inputs
+    assert fresh.choose(Search(tree), 50, np.random.default_rng(0)) is None
+
+
 def test_a_scorer_by_path_travels_between_processes():
     policy = make_policy(f"scorer:{FAST}:settled=0.01")
     first = run(policy)

@@ -7,6 +7,7 @@ import math
 import os
 import subprocess
 import sys
+import xml.etree.ElementTree as ET
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -17,11 +18,12 @@ from small_dataset import labelled
 
 from distill import candidates
 from distill.candidates import Candidates, split_by_tree
+from distill.cli import run
 from distill.errors import InputError
 from distill.metrics import Groups
 from distill.runtime import Scorer
 from distill.sheet import FRONT_FILE
-from distill.ship import ship
+from distill.ship import choose, ship
 from distill.train import RECIPES, _mark_front, _ranges, row_weights, train
 from distill.validate import validate
 
@@ -74,6 +76,13 @@ def test_front_json_is_what_train_returns(trained: tuple[Path, dict[str, Any]]) 
     assert sum(p["trees"] for p in parts.values()) == TREES
     assert sum(p["candidates"] for p in parts.values()) == front["data"]["candidates"]
     assert front["exact"]["dynamic rate"]["p50_us"] > 0
+    ways = (
+        {e["recipe"] for e in front["scorers"] if e["on_front"]}
+        | set(front["peers"])
+        | {"exact dynamic rate"}
+    )
+    assert set(front["break_even"]["gain_percent"]) == ways
+    assert "UCT" in ways
     assert front["data"]["source"] == "cold-store"
 
 
@@ -128,6 +137,26 @@ def test_another_seed_splits_anew_and_gives_another_file(
     other = train(dataset, tmp_path / "front", seed=3, recipes=["linear"], n_boot=2)
     assert other["parts"] != front["parts"]
     assert (tmp_path / "front" / "linear.onnx").read_bytes() != (folder / "linear.onnx").read_bytes()
+
+
+def test_the_command_names_the_scorer_for_a_time_and_draws_the_front(
+    dataset: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    few = {name: RECIPES[name] for name in ("linear", "boosting 25x8")}
+    monkeypatch.setattr("distill.train.RECIPES", few)
+    out = tmp_path / "front"
+    call = ["train", str(dataset), "--out", str(out), "--latency", "900us", "--show"]
+    assert run(call) == 0
+    printed = capsys.readouterr().out
+    front = json.loads((out / FRONT_FILE).read_text())
+    entry, why = choose(front["scorers"], 900.0)
+    assert why == "most accurate within 900 us"
+    assert f"{why}: {entry['recipe']}, {out / entry['file']}" in printed
+    assert "forgone share, %" in printed
+    assert " a  " in printed
+    assert ET.parse(out / "front.svg").getroot().tag.endswith("svg")
+    with pytest.raises(InputError, match="latency: must be at least"):
+        choose(front["scorers"], 0.01)
 
 
 @pytest.mark.parametrize(

@@ -279,7 +279,7 @@ def test_scale_and_shift_change_units_only(seed, family, scale, shift):
         )
 
 
-@settings(deadline=None, max_examples=25, derandomize=True)
+@settings(deadline=None, max_examples=15, derandomize=True)
 @given(seeds, st.floats(-12, 12), st.floats(-8, 8), st.sampled_from(HORIZONS), st.booleans())
 def test_decades_give_finite_rows(seed, scale, spread, horizon, correlated):
     rng = np.random.default_rng(seed)

@@ -21,7 +21,6 @@ from distill.scorer_inputs import RECORD, WIN_LOSS_TABLE
 from distill.shards import read_trees
 from distill.tree import leaf_table
 
-
 FAMILIES = Path(__file__).parents[1] / "datasets" / "families"
 
 

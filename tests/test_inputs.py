@@ -39,7 +39,7 @@ CASES = {"on-time": WIN_LOSS_TABLE, "crossing-traffic": RECORD}
 def shipped(request, tmp_path_factory):
     """A family's name, its small dataset, and a scorer file trained on it."""
     folder = tmp_path_factory.mktemp("inputs")
-    generate(load_family(FAMILIES / f"{request.param}.toml"), folder / "data", trees=90, seed=2)
+    generate(load_family(FAMILIES / f"{request.param}.toml"), folder / "data", trees=75, seed=2)
     train(folder / "data", folder / "trained", recipes=["linear"], n_boot=20)
     ship(folder / "trained", folder / "scorer.onnx")
     return request.param, folder / "data", folder / "scorer.onnx"

@@ -27,8 +27,8 @@ def drawn(rng: np.random.Generator, n: int) -> tuple[np.ndarray, np.ndarray, np.
 
 def test_every_bin_keeps_its_share_on_new_rows() -> None:
     rng = np.random.default_rng(1)
-    bound = calibrated(*drawn(rng, 6000), 6000, training=drawn(rng, 20_000))
-    x, exact, voc = drawn(rng, 50_000)
+    bound = calibrated(*drawn(rng, 6000), 6000, training=drawn(rng, 12_000))
+    x, exact, voc = drawn(rng, 30_000)
     inside = exact <= voc * bound.of(x)
     for rows in (x[:, 0] > 0, x[:, 0] <= 0, x[:, 1] > 0.5):
         share = inside[rows].mean()

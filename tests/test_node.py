@@ -106,7 +106,9 @@ def test_the_page_about_other_languages_shows_what_runs(runner: Path) -> None:
     assert done.stdout.split()[0] == str(want)
 
 
-@pytest.mark.parametrize("kind", KINDS)
+@pytest.mark.parametrize(
+    "kind", ["dense", *(pytest.param(k, marks=pytest.mark.slow) for k in KINDS if k != "dense")]
+)
 def test_every_kind_of_learner_picks_alike_on_random_trees(kind: str, runner: Path, tmp_path: Path) -> None:
     data = scorer_bytes(kind)
     (tmp_path / "scorer.onnx").write_bytes(data)

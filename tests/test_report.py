@@ -5,7 +5,6 @@ from __future__ import annotations
 import copy
 import json
 import re
-import shutil
 import subprocess
 import sys
 import xml.etree.ElementTree as ET
@@ -20,9 +19,17 @@ import matplotlib.image
 import numpy as np
 import pytest
 from matplotlib.backends.backend_agg import FigureCanvasAgg
+from report_figures import (
+    accuracy,
+    estimate,
+    every_kind,
+    front_figures,
+    scorer,
+    sheet_figures,
+    summary_figures,
+)
 from small_dataset import labelled
 
-from distill.break_even import break_even
 from distill.errors import InputError
 from distill.report import CAUTION, charts, front_svg, more_pictures, page, pictures, theme, write_page
 from distill.report.elements import text_of
@@ -32,171 +39,6 @@ from distill.train import train
 from distill.validate import validate
 
 VOID = {"meta", "br"}
-
-
-def estimate(value: float | None, spread: float = 0.3) -> dict[str, float | None]:
-    if value is None:
-        return {"value": None, "low": None, "high": None}
-    return {"value": value, "low": value * (1 - spread), "high": value * (1 + spread)}
-
-
-def accuracy(forgone: float | None, relative: float | None) -> dict[str, Any]:
-    return {
-        "forgone_percent": estimate(forgone),
-        "relative_forgone_percent": estimate(relative),
-        "top1_percent": estimate(71.23),
-        "rank_correlation": estimate(0.6543),
-        "stop_loss_percent": estimate(1.987),
-        "stop_loss": [],
-        "trees": 1754,
-        "candidates": 45485,
-        "trees_with_best_zero": 3,
-        "interval_level": 0.95,
-        "in_range_percent": 99.9934,
-    }
-
-
-def parts() -> dict[str, Any]:
-    """What `validate.examine` adds for held-out trees."""
-    sizes = [1e-8, 1e-4, 0.02]
-    return {
-        "slices": [
-            {
-                "by": by,
-                "slice": name,
-                "trees": 577,
-                "candidates": 14902,
-                "forgone_percent": estimate(share),
-                "relative_forgone_percent": estimate(1.5),
-                "covered_percent": 94.4,
-            }
-            for by, name, share in (
-                ("leaves", "2 to 17", 0.0321),
-                ("leaves", "18 to 66", 0.0),
-                ("gap", "<b>", 2.5),
-            )
-        ],
-        "calibration": {
-            "stated": 0.95,
-            "covered_percent": estimate(95.31, 0.004),
-            "covered_live_percent": estimate(93.77, 0.004),
-            "bins": [
-                {"from": x / 2, "to": 2 * x, "candidates": 901, "mean_exact": 1.1 * x, "mean_score": x,
-                 "covered_percent": 93.0 + i}
-                for i, x in enumerate(sizes)
-            ],
-            "worst_slice": {"by": "gap", "slice": "<b>", "candidates": 8137, "covered_percent": 92.61},
-        },
-        "stop_curve": [
-            {"price": p, "value": v, "low": 0.0, "high": 2 * v, "stop_at_once": 0.0169, "go_on": 1.1 * p}
-            for p, v in ((1e-6, 0.0), (1e-3, 2.5e-8), (0.1, 1.9e-6))
-        ],
-    }  # fmt: skip
-
-
-def scorer(recipe: str, us: float, forgone: float | None, on_front: bool) -> dict[str, Any]:
-    return {
-        "recipe": recipe,
-        "file": f"{recipe}.onnx",
-        "sha256": "ab" * 32,
-        "held_out": accuracy(forgone, 9.1 + us / 7) | parts(),
-        "choose": accuracy(forgone, 9.2),
-        "pairs": {
-            "exact": [0.0, 2e-6, 0.0123, 0.2],
-            "predicted": [3e-7, 0.0, 0.0125, 0.19],
-            "least": 1e-8,
-            "trees": 184,
-            "candidates": 2577,
-            "smaller": 2242,
-        },
-        "latency": {"p50_us": us, "p99_us": us * 1.7, "calls": 2000},
-        "bytes": 347397,
-        "fit_seconds": 34.51,
-        "on_front": on_front,
-    }
-
-
-def front_figures() -> dict[str, Any]:
-    random_pick = {"forgone_percent": {"value": 88.82}, "relative_forgone_percent": {"value": 90.1}}
-    return {
-        "format": "voc-front/1",
-        "value": {"horizon": "inf", "batch": None},
-        "data": {"source": "cold-store", "source_sha256": "cd" * 32, "seed": 7, "trees": 12000},
-        "parts": {
-            "fit": {"trees": 9055, "candidates": 235752},
-            "choose": {"trees": 1191, "candidates": 31006},
-            "held_out": {"trees": 1754, "candidates": 45485},
-        },
-        "seed": 11,
-        "scorers": [
-            scorer("linear", 24.1, 6.107, True),
-            scorer("boosting 25x8", 38.4, 0.5928, False),
-            scorer("boosting 100x31", 170.2, 0.0663, True),
-            scorer("dense 32-32", 36.6, 0.0212, True),
-        ],
-        "beside": {
-            "static closed form": accuracy(23.76, 43.5),
-            "first-order closed form": accuracy(9.843, 33.5),
-            "random pick": random_pick,
-        },
-        "peers": {
-            "first-order closed form": accuracy(9.843, 33.5)
-            | {"latency": {"p50_us": 26.1, "p99_us": 31.2, "calls": 400}},
-            "UCT": accuracy(42.99, 63.7) | {"latency": {"p50_us": 8.13, "p99_us": 15.5, "calls": 400}},
-        },
-        "break_even": break_even(
-            {"dense 32-32": (0.0212, 36.6), "UCT": (42.99, 8.13), "exact dynamic rate": (0.0, 10293.9)}
-        ),
-        "leaves": 64,
-        "exact": {
-            "dynamic VOC": {"p50_us": 318.8, "p99_us": 419.4, "calls": 20},
-            "dynamic rate": {"p50_us": 10293.9, "p99_us": 20005.6, "calls": 20},
-        },
-        "features": ["best", "influence"],
-        "made_with": {"python": "3.11.7", "machine": "x86_64, 2 cores"},
-    }
-
-
-def sheet_figures() -> dict[str, Any]:
-    front = front_figures()
-    entry = front["scorers"][3]
-    return {
-        "format": "voc-sheet/1",
-        "file": {"name": "shuttle.onnx", "sha256": entry["sha256"], "bytes": entry["bytes"]},
-        "recipe": entry["recipe"],
-        "chosen": "most accurate",
-        "value": front["value"],
-        "data": {**front["data"], "parts": front["parts"]},
-        "seed": front["seed"],
-        "accuracy": entry["held_out"],
-        "pairs": entry["pairs"],
-        "beside": front["beside"],
-        "peers": front["peers"],
-        "break_even": front["break_even"],
-        "decision": {
-            "leaves": 64,
-            "scorer": entry["latency"],
-            "exact": front["exact"],
-            "times_faster": {"dynamic VOC": 8.7104, "dynamic rate": 281.254},
-        },
-        "front": front["scorers"],
-        "features": front["features"],
-        "made_with": front["made_with"],
-    }
-
-
-def summary_figures() -> dict[str, Any]:
-    rows = {
-        "scorer trained on the family alone": accuracy(0.167, 1.77),
-        "scorer trained on traces": accuracy(0.58, 1.79),
-        **front_figures()["beside"],
-    }
-    one_tree = {"exact": [0.0001368, 0.0], "scorer": [0.00014, 2.2e-22], "exact_pick": 0, "scorer_pick": 0}
-    return {"scorer": sheet_figures(), "on traces": rows, "one tree": one_tree, "seconds": 626.2}
-
-
-ALL = {"front": front_figures, "sheet": sheet_figures, "summary": summary_figures}
-every_kind = pytest.mark.parametrize("figures", [f() for f in ALL.values()], ids=list(ALL))
 
 
 _SHOWN: dict[int, str] = {}
@@ -433,16 +275,16 @@ def test_slices_bounds_prices_and_gains_stand_where_the_figures_say(drawn: dict[
     figures = sheet_figures()
     text = page(figures)
     accuracy = figures["accuracy"]
-    assert bar_widths(drawn["slices-0"], 0) == [0.0321]  # what lost nothing has no bar
-    assert bar_widths(drawn["slices-0"], 1) == [2.5]
+    assert bar_widths(drawn["slices"], 0) == [0.0321]  # what lost nothing has no bar
+    assert bar_widths(drawn["slices"], 1) == [2.5]
     bins = accuracy["calibration"]["bins"]
     scores = [b["mean_score"] for b in bins]
-    assert lines(drawn["bound-0"], "curve") == [(scores, [b["covered_percent"] for b in bins])]
-    assert lines(drawn["bound-0"], "across")[0][1] == [95.0, 95.0]
-    assert lines(drawn["sizes-0"], "curve")[1] == (scores, [b["mean_exact"] for b in bins])
+    assert lines(drawn["bound"], "curve") == [(scores, [b["covered_percent"] for b in bins])]
+    assert lines(drawn["bound"], "across")[0][1] == [95.0, 95.0]
+    assert lines(drawn["sizes"], "curve")[1] == (scores, [b["mean_exact"] for b in bins])
     stop = {key: [p[key] for p in accuracy["stop_curve"]] for key in ("price", "value", "go_on")}
-    ours, _, never = lines(drawn["stop-0"], "curve")
-    floor = drawn["stop-0"].axes[0].get_ylim()[0]
+    ours, _, never = lines(drawn["stop"], "curve")
+    floor = drawn["stop"].axes[0].get_ylim()[0]
     assert ours == (stop["price"], [max(y, floor) for y in stop["value"]])
     assert never == (stop["price"], stop["go_on"])
     found = figures["break_even"]
@@ -636,79 +478,6 @@ def test_older_figures_without_pairs_serve() -> None:
         del e["pairs"]
     assert "exact and by" not in page(sheet) + page(figures)
     assert "exact and by" in page(sheet_figures())
-
-
-# --- in a browser ----------------------------------------------------------------------------------
-
-BROWSER = next(filter(None, map(shutil.which, ("chromium", "chromium-browser", "google-chrome"))), None)
-FLAGS = [
-    "--headless", "--no-sandbox", "--disable-gpu", "--disable-quic", "--no-first-run", "--hide-scrollbars",
-    "--disable-background-networking", "--disable-component-update", "--disable-sync",
-    "--allow-file-access-from-files",
-]  # fmt: skip
-in_browser = pytest.mark.skipif(BROWSER is None, reason="no Chromium on this machine")
-
-
-def browse(tmp_path: Path, *options: str) -> str:
-    profile = tmp_path / "profile"
-    done = subprocess.run(
-        [str(BROWSER), *FLAGS, f"--user-data-dir={profile}", *options],
-        capture_output=True, check=True, timeout=120, text=True,
-    )  # fmt: skip
-    return done.stdout
-
-
-@in_browser
-@pytest.mark.parametrize("kind", ["front", "summary"])
-def test_nothing_reaches_beyond_a_phone_or_a_desk(kind: str, tmp_path: Path) -> None:
-    """Measured by a browser: the page is no wider than its window, and its pictures have a size."""
-    write_page(ALL[kind](), tmp_path / "page.html")
-    (tmp_path / "frames.html").write_text(
-        """<body><script>
-        const found = [];
-        for (const width of [320, 390, 768, 1280]) {
-            const frame = document.createElement("iframe");
-            frame.width = width; frame.height = 900; frame.src = "page.html";
-            frame.onload = () => {
-                const page = frame.contentDocument;
-                const narrow = [...page.querySelectorAll("svg")].map(s => s.getBoundingClientRect().width);
-                found.push([width, page.documentElement.scrollWidth, narrow.length, Math.min(...narrow),
-                    page.defaultView.performance.getEntriesByType("resource").length]);
-                if (found.length == 4) document.body.innerHTML = "<pre>" + JSON.stringify(found) + "</pre>";
-            };
-            document.body.append(frame);
-        }
-        </script>"""
-    )
-    dom = browse(tmp_path, "--virtual-time-budget=20000", "--dump-dom", (tmp_path / "frames.html").as_uri())
-    found = re.search(r"<pre>(.*?)</pre>", dom)
-    assert found is not None, dom[-2000:]
-    measured = json.loads(found[1])
-    assert sorted(row[0] for row in measured) == [320, 390, 768, 1280]
-    for width, reach, pictured, narrowest, requests in measured:
-        assert reach <= width
-        assert pictured >= 8
-        assert narrowest > 250
-        assert requests == 0
-
-
-@in_browser
-@pytest.mark.parametrize(("scheme", "paper"), [(1, (0xFF, 0xFF, 0xFF)), (0, (0x14, 0x18, 0x1D))])
-def test_it_is_light_or_dark_as_its_reader(scheme: int, paper: tuple[int, int, int], tmp_path: Path) -> None:
-    write_page(sheet_figures(), tmp_path / "page.html")
-    shot = tmp_path / "shot.png"
-    browse(
-        tmp_path,
-        f"--blink-settings=preferredColorScheme={scheme}",
-        "--window-size=390,1600",
-        f"--screenshot={shot}",
-        (tmp_path / "page.html").as_uri(),
-    )
-    pixels = (255 * matplotlib.image.imread(shot)[:, :, :3]).round().astype(int)
-    assert tuple(pixels[2, 2]) == paper
-    inked = np.any(np.abs(pixels - np.array(paper)) > 60, axis=2)
-    assert 0.01 < inked.mean() < 0.5  # words and lines, on paper
-    assert inked[800:].any()
 
 
 # --- on what the other commands leave --------------------------------------------------------------

@@ -89,11 +89,11 @@ def test_correlated_leaves_are_seen_with_their_own_variances() -> None:
 
 def test_figures_say_what_is_lost_and_how_much_of_it_was_flagged() -> None:
     scorer = Scorer.from_bytes(scorer_bytes("dense"))
-    found = measure_shifts(scorer, BASE, names=QUICK, trees=40, seed=3, n_boot=20)
+    found = measure_shifts(scorer, BASE, names=QUICK, trees=25, seed=3, n_boot=20)
     json.dumps(found, allow_nan=False)
     assert list(found) == list(QUICK)
     for m in found.values():
-        assert m["trees"] == 40
+        assert m["trees"] == 25
         assert 0 <= m["flagged_trees_percent"] <= 100
         assert m["loss_flagged_percent"] is None or 0 <= m["loss_flagged_percent"] <= 100
     assert (

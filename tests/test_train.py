@@ -162,9 +162,9 @@ def test_the_command_names_the_scorer_for_a_time_and_draws_the_front(
 @pytest.mark.parametrize(
     ("horizon", "batch", "named"),
     [
-        (0.0, 3, {"static VOC of 3 rollouts"}),
+        pytest.param(0.0, 3, {"static VOC of 3 rollouts"}, marks=pytest.mark.slow),
         (math.inf, 1, {"dynamic VOC"}),
-        (8.0, None, {"horizon 8 VOC", "horizon 8 rate"}),
+        pytest.param(8.0, None, {"horizon 8 VOC", "horizon 8 rate"}, marks=pytest.mark.slow),
     ],
 )
 def test_other_values_than_the_dynamic_rate_are_learned_and_ship(

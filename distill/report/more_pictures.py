@@ -21,19 +21,19 @@ _SCALE = "units of the tree's scale"
 _LEAST_BAR = 1e-4  # percent: a bar for less would stretch the axis over nothing
 
 
-def parts_pictures(name: str, accuracy: Figures, id_: str) -> Iterator[tuple[str, ET.Element, list[Child]]]:
+def parts_pictures(name: str, accuracy: Figures) -> Iterator[tuple[str, ET.Element, list[Child]]]:
     """Title, picture and caption of each part that the figures hold."""
     if slices := accuracy.get("slices"):
-        picture = svg(_slices(slices), f"slices-{id_}", f"Forgone share of {name} by slice of trees")
+        picture = svg(_slices(slices), "slices", f"Forgone share of {name} by slice of trees")
         yield f"Where {name} loses", picture, [CAPTIONS["slices"]]
     calibration = accuracy.get("calibration")
     if calibration and calibration["bins"] and calibration["stated"] is not None:
-        picture = svg(_coverage(calibration), f"bound-{id_}", f"How often the upper bound of {name} holds")
+        picture = svg(_coverage(calibration), "bound", f"How often the upper bound of {name} holds")
         yield f"How often the upper bound of {name} holds", picture, _coverage_caption(calibration)
-        picture = svg(_sizes(calibration), f"sizes-{id_}", f"Mean exact value by size of {name}'s score")
+        picture = svg(_sizes(calibration), "sizes", f"Mean exact value by size of {name}'s score")
         yield f"Values by size of score, {name}", picture, [CAPTIONS["sizes"]]
     if curve := accuracy.get("stop_curve"):
-        picture = svg(_stop(name, curve), f"stop-{id_}", f"Value lost by stopping wrongly, by price, {name}")
+        picture = svg(_stop(name, curve), "stop", f"Value lost by stopping wrongly, by price, {name}")
         yield f"Stopping by {name}", picture, [CAPTIONS["stop"]]
 
 

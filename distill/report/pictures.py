@@ -26,7 +26,10 @@ def pictures(facts: Facts) -> Iterator[ET.Element]:
     for i, one in enumerate(facts.shown):
         if one.pairs is not None:
             yield _pairs_framed(one.name, one.pairs, f"pairs-{i}")
-        for title, picture, caption in parts_pictures(one.name, one.accuracy, str(i)):
+    if facts.shown:
+        # Of a front, only its slowest: the most accurate on the trees kept for choosing.
+        one = max(facts.shown, key=lambda one: time_of(one.latency))
+        for title, picture, caption in parts_pictures(one.name, one.accuracy):
             yield _framed(title, picture, *caption)
     if found := facts.break_even:
         roles = dict.fromkeys(found["gain_percent"], "scorer")

@@ -35,10 +35,10 @@ _ENDS: Final = ("2.56ms@20us", "64ms@500us", "640ms@5ms")
 
 _PLANS: Final = {
     "quick": Campaign(
-        problems=("tree-4x4^1-noise4", "cliff_walking"),
-        budgets=("12.8ms@100us",),
+        problems=("tree-4x4^1-noise4", "tree-3x3^3-noise1", "cliff_walking"),
+        budgets=("6.4ms@100us", "64ms@1ms"),
         policies=("uct:c=1", "thompson", "static-rate"),
-        seeds=100,
+        seeds=60,
         tuning_seeds=0,
     ),
     "full": Campaign(

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -57,7 +58,8 @@ def test_rounds_train_on_what_was_met(tmp_path):
     found = aggregate(
         base, [PROBLEM], tmp_path / "rounds", rounds=1, decisions=20, rollouts=32, tell=told.append
     )
-    assert found == told
+    assert [replace(r, pooled=0.0) for r in found] == [replace(r, pooled=0.0) for r in told]
+    assert all(0 <= r.pooled < 100 for r in found)
     assert [r.number for r in found] == [0, 1]
     assert found[0].added == 0
     assert 60 <= found[1].added <= 100

@@ -84,12 +84,14 @@ def calibrated(
     trees: int,
     *,
     training: tuple[NDArray[Any], Floats, Floats],
+    weight: Floats | None = None,
     coverage: float = COVERAGE,
 ) -> UpperBound:
     """The bound for a scorer, from candidates of `trees` trees that had no part in its training.
 
     x : (n, d) features as the scorer sees them. exact, voc : (n,), label and score, u a rollout.
-    training : the same three of rows of training, from which only the bins come. coverage : aimed at.
+    training : the same three of rows of training, from which only the bins come. weight : (n,), of each
+    row, where trees were sampled with unequal chances. coverage : aimed at.
     Raises InputError for lengths that differ, no rows, or a share outside (0, 1).
     """
     for name, (rows, a, b) in {"calibration": (x, exact, voc), "training": training}.items():
@@ -101,7 +103,9 @@ def calibrated(
     empty = UpperBound(feature, split, left, right, np.ones(len(left)), coverage, trees, len(x))
     ratio = _log_ratio(exact, voc)
     alive = live(exact, voc)
-    weight = 2 / len(x) + np.where(alive, 1 / np.maximum(1, np.count_nonzero(alive)), 0.0)
+    of_row = np.ones(len(x)) if weight is None else np.asarray(weight, dtype=float)
+    counted = float(of_row[alive].sum()) or 1.0
+    weight = of_row * (2 / of_row.sum() + alive / counted)
     pooled = _quantile(ratio, weight, coverage)
     bins = empty.bins(x)
     factor = np.ones(len(left))

@@ -131,6 +131,7 @@ def forgone_by_slice(
     scored: Scored, facts: Mapping[str, Floats], *, n_boot: int = 200, seed: int = 0
 ) -> list[dict[str, Any]]:
     """Both shares forgone and the coverage of the upper bound in each slice, as JSON values."""
+    inside = scored.exact <= scored.high
     out = []
     for name, x in facts.items():
         for label, trees in _parts(x):
@@ -153,7 +154,7 @@ def forgone_by_slice(
                     "candidates": int(rows.sum()),
                     "forgone_percent": found["forgone_percent"],
                     "relative_forgone_percent": found["relative_forgone_percent"],
-                    "covered_percent": 100 * float(np.mean(scored.exact[rows] <= scored.high[rows])),
+                    "covered_percent": 100 * float(np.average(inside[rows], weights=candidates.weight)),
                 }
             )
     return out

@@ -203,6 +203,7 @@ def _fit_and_export(
         *scored(choose, split.choose.label),
         len(split.choose.groups.sizes),
         training=scored(matrix, data.label),
+        weight=split.choose.weight,
     )
     test = split.choose.of_trees(np.arange(len(split.choose.groups.sizes)) < _SELF_TEST_TREES)
     export_scorer(

@@ -64,6 +64,20 @@ def test_the_quantile_is_the_least_that_covers_the_share_of_rows_plus_one() -> N
     assert lower.of(x) == pytest.approx(1.0, rel=CLOSED_FORM)  # the 10th of 20 is 1.0
 
 
+def test_weights_count_as_copies() -> None:
+    rng = np.random.default_rng(5)
+    x, exact, voc = drawn(rng, 900)
+    copies = rng.integers(1, 4, len(x))
+    training = drawn(rng, 3000)
+    by_copies = calibrated(*(np.repeat(a, copies, axis=0) for a in (x, exact, voc)), 9, training=training)
+    by_weight = calibrated(x, exact, voc, 9, training=training, weight=copies.astype(float))
+    plain = calibrated(x, exact, voc, 9, training=training)
+    # One row more is counted as missed: a lighter one among the copies.
+    share = [np.average(exact <= voc * b.of(x), weights=copies) for b in (by_copies, by_weight)]
+    assert share[0] == pytest.approx(share[1], abs=3 / 900)
+    assert np.any(plain.factor != by_weight.factor)
+
+
 def test_the_bound_is_never_below_the_score_nor_infinite() -> None:
     n = 400
     x = np.zeros((n, 1), dtype=np.float32)

@@ -21,6 +21,9 @@ from distill.family import draw, load_family
 from distill.files import write_atomic
 from distill.generate import Traces, generate
 from distill.query import Query
+from distill.rehearse import plans
+from distill.rehearse.results import cells_table
+from distill.report.rehearsal_page import write_rehearsal_page
 from distill.runtime import Scorer
 from distill.sample_data import FAMILIES, TRACES
 from distill.sheet import accuracy_table, front_table
@@ -33,6 +36,7 @@ __all__ = ["tour"]
 
 TREES = 12_000  # of the cold-store family: about 310,000 exact labels
 _TREES_A_DECISION = 5  # how often the recorder looks at one decision
+_FAST = "dense 32-32"  # the scorer that rehearses
 _TRACE_SHARE = 0.7  # of each environment's recorded decisions, for training
 
 
@@ -60,6 +64,7 @@ def tour(
         ("Train the front, judge it on held-out trees, ship one file", _train_and_ship),
         ("Recorded traces: the family's scorer, and one trained on traces", _on_traces),
         ("One tree, exactly and by scorer", _side_by_side),
+        ("A quick rehearsal: does the scorer decide better at equal time?", _rehearse),
     )
     for number, (title, step) in enumerate(steps, 1):
         report(f"## {number}. {title}", "")
@@ -69,8 +74,8 @@ def tour(
     summary["seconds"] = round(time.perf_counter() - started, 1)
     report(
         f"Done in {summary['seconds']:.0f} s. In {out}: scorer.onnx (load it with distill.runtime.Scorer), "
-        "its sheet scorer.md and .json, scorer-traces.onnx, the datasets, summary.md and .json, "
-        "and report.html with pictures."
+        "its sheet scorer.md and .json, scorer-fast.onnx, scorer-traces.onnx, the datasets, summary.md and "
+        ".json, and report.html and rehearsal/rehearsal.html with pictures."
     )
     write_atomic(out / "summary.json", (json.dumps(summary, indent=1) + "\n").encode())
     write_atomic(out / "summary.md", ("\n".join(lines) + "\n").encode())
@@ -102,6 +107,7 @@ def _train_and_ship(out: Path, trees: int, report: Callable[..., None]) -> dict[
     del trees
     front = train(out / "dataset", out / "trained", progress=True)
     sheet = ship(out / "trained", out / "scorer.onnx")
+    ship(out / "trained", out / "scorer-fast.onnx", scorer=_FAST)
     held_out, decision = front["parts"]["held_out"], sheet["decision"]
     report(
         f"On {held_out['trees']:,} held-out trees ({held_out['candidates']:,} candidates); "
@@ -184,3 +190,16 @@ def _side_by_side(out: Path, trees: int, report: Callable[..., None]) -> dict[st
             "scorer_pick": int(scores.pick),
         }
     }
+
+
+def _rehearse(out: Path, trees: int, report: Callable[..., None]) -> dict[str, Any]:
+    """Small cells, so wide intervals: the full grid is the rehearse command's."""
+    del trees
+    summary = plans.quick([out / "scorer-fast.onnx"], out / "rehearsal")
+    write_rehearsal_page(summary, out / "rehearsal" / "rehearsal.html")
+    report(
+        f"Ratios of regret at equal time, {_FAST} against the best of each group; below 1 it decides better.",
+        "",
+        *cells_table(summary),
+    )
+    return {"rehearsal": {key: summary[key] for key in ("comparisons", "aims")}}

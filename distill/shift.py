@@ -24,6 +24,7 @@ from distill.feature_graph import FeatureGraph
 from distill.metrics import picks
 from distill.query import Query
 from distill.runtime import Scorer
+from distill.scorer_inputs import LEAF_TABLE
 from distill.terminal import bar
 from distill.tree import BeliefTree, leaf_table
 from distill.validate import examine, value_of_scorer
@@ -186,6 +187,8 @@ def measure_shifts(
     `covered_percent` : candidates at or below their upper bound.
     Correlated leaves get a tenth of the trees: their exact values cost seconds each.
     """
+    if scorer.kind is not None and scorer.kind is not LEAF_TABLE:
+        raise InputError("scorer: input", f"must be the {LEAF_TABLE.name} for shifts", scorer.kind.name)
     value = value_of_scorer(scorer)
     return {
         name: _measured(scorer, shifted(family, name), value, _trees(name, trees), seed, n_boot, progress)

@@ -18,6 +18,7 @@ from distill.errors import InputError
 from distill.family import draw, load_family, parse_family
 from distill.query import Query
 from distill.runtime import Scorer
+from distill.scorer_inputs import WIN_LOSS_TABLE
 from distill.sheet import shift_table
 from distill.shift import SHIFTS, _toml, drawn_candidates, measure_shifts, seen, shifted
 from distill.tree import leaf_table
@@ -109,6 +110,10 @@ def test_figures_say_what_is_lost_and_how_much_of_it_was_flagged() -> None:
 def test_what_cannot_be_shifted_is_named() -> None:
     with pytest.raises(InputError, match=r"shift: must be one of as trained, .*; got 'colder'"):
         shifted(BASE, "colder")
+    other = Scorer.from_bytes(scorer_bytes("linear"))
+    other.kind = WIN_LOSS_TABLE
+    with pytest.raises(InputError, match="scorer: input: must be the leaf table for shifts"):
+        measure_shifts(other, BASE, names=QUICK, trees=2)
     with pytest.raises(InputError, match="belief: must be gaussian"):
         drawn_candidates(load_family(FAMILY.parent / "on-time.toml"), trees=2, seed=0, value=RATE)
 

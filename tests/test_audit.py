@@ -49,7 +49,7 @@ search = { thompson = 1 }
 def _few_trees_stand_for_training() -> Iterator[None]:
     """Drawing them is most of an audit's time here."""
     with pytest.MonkeyPatch.context() as patch:
-        patch.setattr("distill.audit._REFERENCE", 300)
+        patch.setattr("distill.drift._REFERENCE", 300)
         yield
 
 

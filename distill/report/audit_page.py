@@ -169,6 +169,7 @@ def _origin(figures: Figures) -> list[tuple[str, list[Any]]]:
     scorer, trees = figures["scorer"], figures["trees"]
     out: list[tuple[str, list[Any]]] = [
         ("scorer", [f"{scorer['name']}, {scorer['recipe']}, SHA-256 {scorer['sha256']}"]),
+        ("it reads", [scorer["input"]]),
         ("traces", [", ".join(figures["traces"])]),
         ("recorded trees", [number(trees["recorded"])]),
         ("sampled", [number(trees["sampled"]), f", seed {figures['seed']}"]),

@@ -1,0 +1,136 @@
+"""How recorded trees differ from those that a scorer was trained on, column by column; floor 6.
+
+Training is stood for by trees drawn from its family, from the seed of its dataset. Columns are what a tree
+looks like in a few numbers, and the scorer's own features.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from typing import Any, Final
+
+import numpy as np
+
+from distill.candidates import Candidates
+from distill.errors import DistillError
+from distill.estimates import two_sample
+from distill.family import Family, draw, load_family
+from distill.feature_graph import FeatureGraph
+from distill.recorded import refused, unlabelled
+from distill.sample_data import family_path
+from distill.scorer_inputs import RECORD, InputKind
+from distill.tree import BeliefTree, Floats
+from distill.tree_columns import COLUMNS, tree_columns
+
+__all__ = ["drift", "trained_family"]
+
+_REFERENCE: Final = 1000  # trees drawn to stand for training
+_ONE_PERCENT: Final = 1.628  # Kolmogorov's distribution: distances above it x sqrt(1/n + 1/m) are no chance
+_QUARTILES: Final = (0.05, 0.25, 0.5, 0.75, 0.95)
+# Of trees of win/loss leaves, whose means and spreads hide where the beliefs stand.
+_WIN_LOSS: Final = {
+    "win rate": "alpha / (alpha + beta), median leaf",
+    "belief strength": "log10 of alpha + beta, median leaf",
+    "span": "log10 of high - low, median leaf",
+}
+
+
+def trained_family(facts: Mapping[str, Any]) -> Family | None:
+    """The family that the scorer was trained on, where its metadata names one that comes with the tool."""
+    data = facts.get("about", {}).get("data", {})
+    try:
+        family = load_family(family_path(str(data.get("source"))))
+    except DistillError:
+        return None
+    return family if family.sha256 == data.get("source_sha256") else None
+
+
+def drift(
+    trees: Sequence[BeliefTree],
+    candidates: Candidates,
+    facts: Mapping[str, Any],
+    value: Mapping[str, Any],
+    family: Family | None,
+    decisions: int,
+) -> dict[str, Any]:
+    """Column -> quantiles now and in training, their distance, and what chance alone would give.
+
+    trees : those of the candidates, in order. facts : the scorer file's metadata. value : the
+    horizon and batch that it scores. family : what it was trained on; without, nothing is compared.
+    decisions : how many of the trees are independent.
+    Drawn trees that the scorer's input cannot hold are left out, as they were in training.
+    """
+    kind = candidates.kind
+    graph = FeatureGraph.of_value(value, kind)
+    seen = _columns(trees, candidates, graph)
+    trained: dict[str, Floats] = {}
+    drawn: list[BeliefTree] = []
+    if family is not None:
+        seed = int(facts.get("about", {}).get("data", {}).get("seed") or 0)
+        drawn = [draw(family, seed, i) for i in range(_REFERENCE)]
+        drawn = [t for t in drawn if refused(t, kind) is None]
+        if drawn:
+            rows = unlabelled(drawn, kind, float(value["horizon"]))
+            trained = _columns(drawn, rows, graph)
+    chance = _ONE_PERCENT * math.sqrt(1 / decisions + 1 / max(len(drawn), 1))
+    ranges = facts.get("ranges", {})
+    columns: dict[str, Any] = {}
+    for name, x in seen.items():
+        if not np.any(np.isfinite(x)):
+            continue
+        columns[name] = {"meaning": _meaning(name, kind), "now": _quantiles(x)}
+        if name in trained:
+            distance = two_sample(x, trained[name])
+            columns[name] |= {
+                "training": _quantiles(trained[name]),
+                "distance": distance,
+                "drifted": distance > chance,
+            }
+        if name in ranges:
+            columns[name]["range"] = list(ranges[name])
+    return {
+        "reference": None if family is None else family.name,
+        "at": list(_QUARTILES),
+        "chance": chance,
+        "columns": columns,
+    }
+
+
+def _meaning(name: str, kind: InputKind) -> str:
+    told = COLUMNS.get(name) or _WIN_LOSS.get(name)
+    return told or f"feature {name}, median {'candidate' if kind is RECORD else 'leaf'}"
+
+
+def _columns(trees: Sequence[BeliefTree], candidates: Candidates, graph: FeatureGraph) -> dict[str, Floats]:
+    return {**tree_columns(trees), **_win_loss(trees), **_features(candidates, graph)}
+
+
+def _win_loss(trees: Sequence[BeliefTree]) -> dict[str, Floats]:
+    """One number a tree; NaN of Gaussian trees."""
+    rows = [_win_loss_row(tree) for tree in trees]
+    return {name: np.array([float(f"{row[i]:.6g}") for row in rows]) for i, name in enumerate(_WIN_LOSS)}
+
+
+def _win_loss_row(tree: BeliefTree) -> tuple[float, ...]:
+    if tree.alpha is None or tree.beta is None or tree.low is None or tree.high is None:
+        return (math.nan,) * len(_WIN_LOSS)
+    total = tree.alpha + tree.beta
+    return (
+        float(np.median(tree.alpha / total)),
+        float(np.median(np.log10(total))),
+        float(np.median(np.log10(tree.high - tree.low))),
+    )
+
+
+def _features(candidates: Candidates, graph: FeatureGraph) -> dict[str, Floats]:
+    """Feature -> its median over the leaves of each tree."""
+    x = graph.matrix({**candidates.columns, "tree": candidates.tree}).x
+    parts = np.split(np.asarray(x, dtype=float), candidates.groups.starts[1:])
+    medians = np.array([np.median(p, axis=0) for p in parts])
+    return dict(zip(graph.names, medians.T, strict=True))
+
+
+def _quantiles(x: Floats) -> list[float]:
+    x = x[np.isfinite(x)]
+    return [float(f"{q:.6g}") for q in np.quantile(x, _QUARTILES)] if len(x) else []

@@ -135,7 +135,7 @@ def decision_numbers(trees: Sequence[BeliefTree]) -> NDArray[np.uint64] | None:
 def _price(trees: list[BeliefTree], query: Query) -> list[Priced | str]:
     try:
         return list(voc.price_many(trees, query))
-    except RefusedError as e:
+    except (InputError, RefusedError) as e:  # such as a horizon that win/loss leaves cannot have
         if len(trees) > 1:
             return [answer for tree in trees for answer in _price([tree], query)]
         return [str(e)]

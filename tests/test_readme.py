@@ -9,7 +9,9 @@ import numpy as np
 import pytest
 
 from distill.cli import run
+from distill.family import draw, load_family
 from distill.record import parse_record
+from distill.sample_data import FAMILIES
 
 ROOT = Path(__file__).parents[1]
 README = (ROOT / "README.md").read_text()
@@ -28,7 +30,7 @@ def test_the_record_is_valid():
 
 
 def test_the_embedding_runs(monkeypatch):
-    (code,) = (block for block in blocks("python") if "Scorer.load" in block)
+    (code,) = (block for block in blocks("python") if "scorer.score" in block)
     monkeypatch.chdir(ROOT)
     scope = {
         "mean": np.array([3.1, 2.4, 2.9]),
@@ -44,6 +46,15 @@ def test_the_embedding_runs(monkeypatch):
     exec(code.replace("scorer.score(...)", f"scorer.score({arguments[1]}\n)"), scope)
     assert scope["leaf"] == scope["scores"].pick
     assert scope["scores"].voc.shape == (3,)
+
+
+def test_the_backup_runs(monkeypatch):
+    (code,) = (block for block in blocks("python") if "Backup" in block)
+    monkeypatch.chdir(ROOT)
+    tree = draw(load_family(FAMILIES / "crossing-traffic.toml"), 0, 0)
+    scope = {"tree": tree, "leaf": 0, "new_mean": float(tree.mean[0]), "new_var": float(tree.var[0]) / 2}
+    exec(code, scope)
+    assert 0 <= scope["leaf"] < tree.n_leaves
 
 
 def test_the_recorder_runs(monkeypatch, tmp_path):

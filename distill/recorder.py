@@ -5,6 +5,9 @@
     recorder.see(mean=..., var=..., noise_var=..., gain=..., offset=..., action=..., cost=...,
                  remaining=100)
 
+Win/loss leaves have alpha, beta, low, high in place of mean and variances; trees with chance nodes or
+correlated leaves go to `see_record`.
+
 The agent's thread draws the sample and copies the arrays of what was drawn. One daemon thread does the
 rest: checks, packs and writes. Whatever goes wrong there or here is counted and never raised.
 """
@@ -25,7 +28,7 @@ from typing import Any, Final
 
 from distill.block_files import BlockFiles
 from distill.errors import InputError
-from distill.trace_line import MOST_LINE, Seen, copy_table, hold_tree, pack, trace_line
+from distill.trace_line import MOST_LINE, Seen, copy_record, copy_table, hold_tree, pack, trace_line
 from distill.tree import BeliefTree
 
 __all__ = ["Recorder", "RecorderCounters"]
@@ -139,6 +142,10 @@ class Recorder:
         mean: Any = None,
         var: Any = None,
         noise_var: Any = None,
+        alpha: Any = None,
+        beta: Any = None,
+        low: Any = None,
+        high: Any = None,
         gain: Any = None,
         offset: Any = None,
         action: Any = None,
@@ -151,6 +158,8 @@ class Recorder:
 
         Leaf i counts gain_i X_i + offset_i under root action action_i (0 to n - 1), X_i ~ N(mean_i,
         var_i); a rollout adds noise of variance noise_var_i and costs cost_i >= 0; 0 < gain_i <= 1.
+        Win/loss leaves: alpha, beta, low, high instead, X_i = low_i + (high_i - low_i) p_i, p_i ~
+        Beta(alpha_i, beta_i).
         Missing gain is 1, missing offset and cost are 0. remaining : whole rollouts left. extra : an
         object for JSON to keep beside the tree. The record has the root, a decision node an action in
         order of position, and the leaves in order, with gain as discount and offset as reward.
@@ -158,10 +167,33 @@ class Recorder:
         """
         if self._drawn():
             columns = {
-                "mean": mean, "var": var, "noise_var": noise_var, "gain": gain, "offset": offset,
-                "action": action, "cost": cost, "remaining": remaining,
+                "mean": mean, "var": var, "noise_var": noise_var,
+                "alpha": alpha, "beta": beta, "low": low, "high": high,
+                "gain": gain, "offset": offset, "action": action, "cost": cost, "remaining": remaining,
             }  # fmt: skip
             self._offer(copy_table, columns, extra, unnamed, unknown)
+
+    def see_record(self, record: dict[str, Any]) -> None:
+        """Perhaps record a tree of any kind, given as a `belief-tree/1` record: a dict of its columns.
+
+        Columns are over nodes, parents before children: parent (-1 at the root), kind ("decision",
+        "chance", "leaf"), reward, discount, prob, the leaf columns and the scalars; cov is leaves x leaves.
+        Lists or NumPy arrays; at inner nodes leaf columns hold None or NaN. `format` may be left out.
+        The lists are copied in the call, what they hold is checked later. Never raises (but `strict`):
+        what makes no record is counted as invalid.
+
+        >>> import tempfile; from distill.traces import read_trees
+        >>> with tempfile.TemporaryDirectory() as folder:
+        ...     with Recorder(folder) as recorder:
+        ...         recorder.see_record({"parent": [-1, 0, 1, 1, 0], "kind": ["decision", "chance", "leaf",
+        ...             "leaf", "leaf"], "prob": [None, None, 0.5, 0.5, None], "remaining": 40,
+        ...             "alpha": [None, None, 1, 2, 1], "beta": [None, None, 1, 1, 1],
+        ...             "low": [None, None, 0, 0, 0], "high": [None, None, 1, 1, 1]})
+        ...     [tree.has_chance for _, tree in read_trees(f"{folder}/trace-000001.jsonl.gz")]
+        [True]
+        """
+        if self._drawn():
+            self._offer(copy_record, record)
 
     def see_tree(self, tree: BeliefTree) -> None:
         """Perhaps record a tree of any kind; never raises (but `strict`). Its arrays must stay unchanged."""

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import zlib
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -17,7 +18,7 @@ from distill.leaf_buffers import MAX_LEAVES, number_array
 from distill.record import from_record, parse_json, to_record
 from distill.tree import BeliefTree
 
-__all__ = ["MOST_LINE", "Seen", "copy_table", "hold_tree", "pack", "trace_line"]
+__all__ = ["MOST_LINE", "Seen", "copy_record", "copy_table", "hold_tree", "pack", "trace_line"]
 
 MOST_LINE: Final = 64 * 2**20  # bytes; readers of traces refuse longer lines
 _MOST_RATIO: Final = 100  # unpacked bytes a packed byte; readers take more than 200 for an attack
@@ -26,19 +27,25 @@ _ITEM_BYTES: Final = 1024  # what a queued tree takes besides its arrays, roughl
 _PART: Final = 256  # numbers written at a time, about 0.1 ms
 # Columns of a leaf table under another name in the record, and what stands there at inner nodes.
 _KEYS: Final = {"offset": ("reward", "0"), "gain": ("discount", "1")}
+_BELIEF_KEYS: Final = (*schema.GAUSSIAN_COLUMNS, *schema.WIN_LOSS_COLUMNS)
+_LEAF_KEYS: Final = frozenset((*_BELIEF_KEYS, "count", "cost"))
+_SCALAR_KEYS: Final = frozenset(("format", "horizon", "batch", "remaining", "id"))
+_MOST_NUMBERS: Final = 4_000_000  # of a record; readers of traces refuse lines of more
+_NUMBER_BYTES: Final = 32  # a number in a list
 
 
 @dataclass(frozen=True, eq=False)
 class Seen:
-    """A tree, or copies of the columns of a leaf table with `extra` as JSON; still to be checked.
+    """A tree, copies of the columns of a leaf table, or a copied record; still to be checked.
 
-    size : bytes of memory, roughly.
+    extra : JSON text of a table's or a record's. size : bytes of memory, roughly.
     """
 
     tree: BeliefTree | None
     columns: dict[str, NDArray[Any]]
     extra: str | None
     size: int
+    record: dict[str, Any] | None = None
 
 
 def copy_table(
@@ -56,13 +63,46 @@ def copy_table(
             except Exception:  # whatever the agent's own array types raise
                 raise InputError(name, "must be an array of numbers") from None
             number_array(name, copies[name], "f")
-    text = None
-    if extra is not None:
-        try:
-            text = json.dumps(extra, allow_nan=False, separators=(",", ":"), default=lambda x: x.tolist())
-        except Exception as e:
-            raise InputError("extra", f"must be an object for JSON ({type(e).__name__})") from None
+    text = _extra_text(extra)
     return Seen(None, copies, text, sum(x.nbytes for x in copies.values()) + len(text or "") + _ITEM_BYTES)
+
+
+def copy_record(record: Any) -> Seen:
+    """A record's columns as they are now, lists or arrays. InputError for what is no record at sight.
+
+    The copy costs about what copying its lists does: what they hold is looked at later.
+    """
+    if not isinstance(record, dict):
+        raise InputError("record", "must be a dict", type(record).__name__)
+    columns = {}
+    numbers = 0
+    for key, value in record.items():
+        if key not in schema.RECORD_KEYS:
+            raise InputError(f"key {str(key)[:60]!r}", f"is not a key of {schema.TREE_FORMAT}")
+        if value is None or key == "extra":
+            continue
+        if key in _SCALAR_KEYS:
+            columns[key] = value
+            continue
+        rows = value if key == "cov" and isinstance(value, (list, tuple)) else (value,)
+        if not all(isinstance(row, (list, tuple, np.ndarray)) for row in rows):
+            raise InputError(key, "must be a list or an array")
+        numbers += sum(row.size if isinstance(row, np.ndarray) else len(row) for row in rows)
+        if numbers > _MOST_NUMBERS:
+            raise InputError("record", f"must not hold more than {_MOST_NUMBERS:,} numbers")
+        copies = [row.copy() if isinstance(row, np.ndarray) else list(row) for row in rows]
+        columns[key] = copies if rows is value else copies[0]
+    text = _extra_text(record.get("extra"))
+    return Seen(None, {}, text, _ITEM_BYTES + _NUMBER_BYTES * numbers + len(text or ""), columns)
+
+
+def _extra_text(extra: Any) -> str | None:
+    if extra is None:
+        return None
+    try:
+        return json.dumps(extra, allow_nan=False, separators=(",", ":"), default=lambda x: x.tolist())
+    except Exception as e:
+        raise InputError("extra", f"must be an object for JSON ({type(e).__name__})") from None
 
 
 def hold_tree(tree: BeliefTree) -> Seen:
@@ -78,12 +118,16 @@ def trace_line(seen: Seen, pause: Callable[[], None] = lambda: None) -> bytes:
 
     pause : called between parts of a large table, since no other thread runs while a part is made.
     """
-    if seen.tree is None:
+    if seen.record is not None:
+        record = to_record(from_record(_plain(seen.record, seen.extra, pause)))
+        pause()
+    elif seen.tree is None:
         return _table_line(seen, pause)
-    record = to_record(seen.tree)
-    pause()
-    from_record(record)
-    pause()
+    else:
+        record = to_record(seen.tree)
+        pause()
+        from_record(record)
+        pause()
     return json.dumps(record, separators=(",", ":"), allow_nan=False).encode() + b"\n"
 
 
@@ -121,6 +165,42 @@ def _table_line(seen: Seen, pause: Callable[[], None]) -> bytes:
     return ("{" + ",".join(f'"{key}":{text}' for key, text in record.items()) + "}\n").encode()
 
 
+def _plain(columns: dict[str, Any], extra: str | None, pause: Callable[[], None]) -> dict[str, Any]:
+    """The record as from JSON: NumPy's numbers as Python's, NaN of a leaf column as null."""
+    record: dict[str, Any] = {"format": schema.TREE_FORMAT}
+    for key, value in columns.items():
+        if key in _SCALAR_KEYS:
+            record[key] = _plain_value(key, value)
+            continue
+        plain = _listed(key, value)
+        if key == "cov":
+            record[key] = [[_plain_value(key, x) for x in _listed(key, row)] for row in plain]
+        else:
+            record[key] = [_plain_value(key, x) for x in plain]
+        if key in _LEAF_KEYS:
+            record[key] = [None if isinstance(x, float) and math.isnan(x) else x for x in record[key]]
+        pause()
+    if extra is not None:
+        record["extra"] = parse_json(extra)
+    return record
+
+
+def _listed(key: str, column: Any) -> list[Any]:
+    plain = column.tolist() if isinstance(column, np.ndarray) else column
+    if not isinstance(plain, list):
+        raise InputError(key, "must have as many dimensions as a record's")
+    return plain
+
+
+def _plain_value(key: str, x: Any) -> Any:
+    """A number, text or None; what an agent's own types say of themselves is not asked for."""
+    if isinstance(x, (np.generic, np.ndarray)) and x.size == 1:
+        x = x.item()
+    if x is None or type(x) in (int, float, str, bool):
+        return x
+    raise InputError(key, "must hold numbers", type(x).__name__)
+
+
 def _array(head: list[str], values: NDArray[Any], pause: Callable[[], None]) -> str:
     """A JSON array of `head` and the numbers, which come back bit for bit."""
     parts = list(head)
@@ -133,18 +213,25 @@ def _array(head: list[str], values: NDArray[Any], pause: Callable[[], None]) -> 
 
 def _checked(columns: dict[str, NDArray[Any]]) -> tuple[dict[str, NDArray[np.float64]], NDArray[np.int64]]:
     """The columns of numbers, and the actions; errors name the row as the agent does."""
-    for name in (*schema.GAUSSIAN_COLUMNS, "action"):
-        if name not in columns:
-            raise InputError(name, "is missing")
-    n = columns["mean"].size
-    if columns["mean"].ndim != 1 or not 1 <= n <= MAX_LEAVES:
-        raise InputError("mean", f"must have shape (n,), n from 1 to {MAX_LEAVES}", columns["mean"].shape)
+    given = [name for name in _BELIEF_KEYS if name in columns]
+    coins = bool(given) and given[0] in schema.WIN_LOSS_COLUMNS
+    belief: tuple[str, ...] = schema.WIN_LOSS_COLUMNS if coins else schema.GAUSSIAN_COLUMNS
+    for other in given:
+        if other not in belief:
+            raise InputError(other, f"must not be given beside {given[0]!r}: one belief kind a tree")
+    for needed in (*belief, "action"):
+        if needed not in columns:
+            raise InputError(needed, "is missing")
+    first = belief[0]
+    n = columns[first].size
+    if columns[first].ndim != 1 or not 1 <= n <= MAX_LEAVES:
+        raise InputError(first, f"must have shape (n,), n from 1 to {MAX_LEAVES}", columns[first].shape)
     out = {}
     for name, x in columns.items():
         if name == "remaining":
             continue
         if x.shape != (n,):
-            raise InputError(name, f"must have shape ({n},), as 'mean'", x.shape)
+            raise InputError(name, f"must have shape ({n},), as {first!r}", x.shape)
         if name == "action":
             action = number_array(name, x, "i")
             _demand(name, action, (action >= 0) & (action < n), f"must be from 0 to {n - 1}")
@@ -153,6 +240,8 @@ def _checked(columns: dict[str, NDArray[Any]]) -> tuple[dict[str, NDArray[np.flo
             out[name] = x.astype(np.float64)
         ok, rule = _rule(name, out[name])
         _demand(name, out[name], ok, rule)
+    if coins:
+        _demand("high", out["high"], out["high"] > out["low"], "must be above 'low'")
     return out, action.astype(np.int64)
 
 
@@ -162,6 +251,8 @@ def _rule(name: str, x: NDArray[np.float64]) -> tuple[NDArray[np.bool_], str]:
         return (x > 0) & (x <= 1), "must be above 0 and at most 1"
     if name == "cost":
         return (x >= 0) & np.isfinite(x), "must be finite and >= 0"
+    if name in ("alpha", "beta"):
+        return (x > 0) & (x <= schema.MAX_ROLLOUTS), "must be > 0 and at most 2^53"
     if name in ("var", "noise_var"):
         least = x >= 0 if name == "var" else x > 0
         sign = ">= 0" if name == "var" else "> 0"

@@ -19,7 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from distill.candidates import Candidates
-from distill.drift import drift, trained_family
+from distill.drift import drift, trained_family, training
 from distill.errors import InputError
 from distill.family import Family
 from distill.files import sha256_of, write_atomic
@@ -69,6 +69,7 @@ def audit(
     family: Family | None = None,
     n_boot: int = 1000,
     bad: BadLines | None = None,
+    progress: bool = False,
 ) -> Audit:
     """Hold a scorer file with its sheet against recorded trees.
 
@@ -83,8 +84,10 @@ def audit(
     sheet = _read_sheet(path)
     loaded = Scorer.load(path)
     kind = loaded.kind or LEAF_TABLE
+    family = family or trained_family(loaded.facts)
+    reference = None if family is None else training(family, loaded.facts, kind)
     sample, total = sample_trees(read_many(traces, bad or BadLines(strict=True)), trees, seed)
-    found = label(sample, kind, _asked(sheet["value"]))
+    found = label(sample, kind, _asked(sheet["value"]), progress=progress)
     candidates, kept, aside = found.candidates, found.kept, found.aside
     clusters = candidates.clusters
     decisions = len(kept) if clusters is None else len(np.unique(clusters))
@@ -101,7 +104,6 @@ def audit(
     worst = [name for key, name in _JUDGED.items() if judged[key]["worse"]]
     scores = loaded.score(**candidates.columns, tree=candidates.tree)
     chosen = _worth_adding(candidates, scores.voc, scores.in_range)
-    reference = family or trained_family(loaded.facts)
     figures = {
         "format": AUDIT_FORMAT,
         "scorer": {
@@ -126,6 +128,7 @@ def audit(
         "drift": drift(
             [sample[i] for i in kept], candidates, loaded.facts, sheet["value"], reference, decisions
         ),
+        "label_error_percent": _label_error(candidates),
         "pairs": sample_pairs(loaded, candidates, seed=seed),
     }  # fmt: skip
     return Audit(figures, [sample[kept[i]] for i in chosen])
@@ -238,6 +241,12 @@ def _bound(scorer: Scorer, candidates: Candidates, scores: Any) -> dict[str, Any
         else None
     )
     return {"held_percent": None if held is None else 100 * held, "stated": stated}
+
+
+def _label_error(candidates: Candidates) -> float | None:
+    """Error bound of the exact values, the largest of each tree, in percent of the trees' best values."""
+    best = float(candidates.groups.highest(candidates.label).sum())
+    return 100 * float(candidates.groups.highest(candidates.error).sum()) / best if best > 0 else None
 
 
 def _worth_adding(candidates: Candidates, score: Floats, in_range: NDArray[np.bool_]) -> list[int]:

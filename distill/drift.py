@@ -8,12 +8,13 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import Any, Final
 
 import numpy as np
 
 from distill.candidates import Candidates
-from distill.errors import DistillError
+from distill.errors import DistillError, InputError
 from distill.estimates import two_sample
 from distill.family import Family, draw, load_family
 from distill.feature_graph import FeatureGraph
@@ -23,7 +24,7 @@ from distill.scorer_inputs import RECORD, InputKind
 from distill.tree import BeliefTree, Floats
 from distill.tree_columns import COLUMNS, tree_columns
 
-__all__ = ["drift", "trained_family"]
+__all__ = ["Training", "drift", "trained_family", "training"]
 
 _REFERENCE: Final = 1000  # trees drawn to stand for training
 _ONE_PERCENT: Final = 1.628  # Kolmogorov's distribution: distances above it x sqrt(1/n + 1/m) are no chance
@@ -46,33 +47,51 @@ def trained_family(facts: Mapping[str, Any]) -> Family | None:
     return family if family.sha256 == data.get("source_sha256") else None
 
 
+@dataclass(frozen=True, eq=False)
+class Training:
+    """What stands for training: trees drawn from the family of that name."""
+
+    name: str
+    trees: list[BeliefTree]
+
+
+def training(family: Family, facts: Mapping[str, Any], kind: InputKind) -> Training:
+    """Trees of the family from the seed of the scorer's dataset; those that its input cannot hold are left out.
+
+    facts : the scorer file's metadata. Raises InputError where none is left.
+    """
+    seed = int(facts.get("about", {}).get("data", {}).get("seed") or 0)
+    drawn = [draw(family, seed, i) for i in range(_REFERENCE)]
+    held = [tree for tree in drawn if refused(tree, kind) is None]
+    if not held:
+        raise InputError(
+            "family", f"must be what the scorer was trained on: it reads a {kind.name}", family.name
+        )
+    return Training(family.name, held)
+
+
 def drift(
     trees: Sequence[BeliefTree],
     candidates: Candidates,
     facts: Mapping[str, Any],
     value: Mapping[str, Any],
-    family: Family | None,
+    reference: Training | None,
     decisions: int,
 ) -> dict[str, Any]:
     """Column -> quantiles now and in training, their distance, and what chance alone would give.
 
     trees : those of the candidates, in order. facts : the scorer file's metadata. value : the
-    horizon and batch that it scores. family : what it was trained on; without, nothing is compared.
+    horizon and batch that it scores. reference : what it was trained on; without, nothing is compared.
     decisions : how many of the trees are independent.
-    Drawn trees that the scorer's input cannot hold are left out, as they were in training.
     """
     kind = candidates.kind
     graph = FeatureGraph.of_value(value, kind)
     seen = _columns(trees, candidates, graph)
     trained: dict[str, Floats] = {}
-    drawn: list[BeliefTree] = []
-    if family is not None:
-        seed = int(facts.get("about", {}).get("data", {}).get("seed") or 0)
-        drawn = [draw(family, seed, i) for i in range(_REFERENCE)]
-        drawn = [t for t in drawn if refused(t, kind) is None]
-        if drawn:
-            rows = unlabelled(drawn, kind, float(value["horizon"]))
-            trained = _columns(drawn, rows, graph)
+    drawn = reference.trees if reference is not None else []
+    if drawn:
+        rows = unlabelled(drawn, kind, float(value["horizon"]))
+        trained = _columns(drawn, rows, graph)
     chance = _ONE_PERCENT * math.sqrt(1 / decisions + 1 / max(len(drawn), 1))
     ranges = facts.get("ranges", {})
     columns: dict[str, Any] = {}
@@ -90,7 +109,7 @@ def drift(
         if name in ranges:
             columns[name]["range"] = list(ranges[name])
     return {
-        "reference": None if family is None else family.name,
+        "reference": None if reference is None else reference.name,
         "at": list(_QUARTILES),
         "chance": chance,
         "columns": columns,

@@ -19,6 +19,7 @@ from distill.errors import DistillError, InputError, RefusedError
 from distill.labelling import Asked
 from distill.query import Priced, Query
 from distill.scorer_inputs import RECORD, WIN_LOSS_TABLE, InputKind
+from distill.terminal import bar
 from distill.tree import BeliefTree, leaf_table
 from distill.tree_columns import decision_key
 
@@ -78,7 +79,7 @@ def rows_of(tree: BeliefTree, kind: InputKind, horizon: float) -> Row:
     return {**columns, "remaining": np.full(tree.n_leaves, float(tree.remaining or 0))}
 
 
-def label(trees: Sequence[BeliefTree], kind: InputKind, asked: Asked) -> Labels:
+def label(trees: Sequence[BeliefTree], kind: InputKind, asked: Asked, *, progress: bool = False) -> Labels:
     """Exact labels of what a scorer of `kind` is asked, tree by tree.
 
     asked : with a horizon; every tree brings its own `remaining`. Raises InputError where no tree is left.
@@ -98,12 +99,14 @@ def label(trees: Sequence[BeliefTree], kind: InputKind, asked: Asked) -> Labels:
         except DistillError as e:
             aside[str(e)] += 1
     priced: dict[int, Priced] = {}
-    for query, group in queries.items():
-        for i, answer in zip(group, _price([trees[i] for i in group], query), strict=True):
-            if isinstance(answer, Priced):
-                priced[i] = answer
-            else:
-                aside[answer] += 1
+    with bar("exact labels", len(rows), "trees", shown=progress) as advance:
+        for query, group in queries.items():
+            for i, answer in zip(group, _price([trees[i] for i in group], query), strict=True):
+                if isinstance(answer, Priced):
+                    priced[i] = answer
+                else:
+                    aside[answer] += 1
+            advance(len(group))
     kept = sorted(priced)
     if not kept:
         why = "; ".join(f"{n} {reason}" for reason, n in aside.items())

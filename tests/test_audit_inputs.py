@@ -18,6 +18,7 @@ from distill import voc
 from distill.audit import WORTH_ADDING, Audit, audit, sample_trees, write_audit
 from distill.backup import Backup
 from distill.cli import run
+from distill.errors import InputError
 from distill.family import Family, draw, load_family, parse_family
 from distill.generate import generate
 from distill.metrics import Groups, picks
@@ -129,6 +130,7 @@ def test_a_matching_agent_is_as_promised(case: Case) -> None:
     assert figures["trees"]["aside"] == {}
     assert figures["out_of_range_percent"] < 2
     assert figures["now"]["top1_percent"]["value"] > 90
+    assert 0 <= figures["label_error_percent"] < 0.01
     held = figures["bound"]
     assert held["held_percent"] > 100 * held["stated"]["coverage"] - 5
 
@@ -223,6 +225,13 @@ def test_refusals_exit_with_2(case: Case, tmp_path: Path, capsys: pytest.Capture
     assert "at least 20 decisions" in err
     assert err.count("\n") == 1
     assert not (tmp_path / "out").exists()
+
+
+def test_a_family_that_the_input_cannot_hold_is_named(coins: Case, crossings: Case) -> None:
+    with pytest.raises(
+        InputError, match="family: must be what .* reads a win/loss leaf table; got 'crossings'"
+    ):
+        audit(coins.scorer, [coins.matching], family=crossings.family)
 
 
 @pytest.mark.slow

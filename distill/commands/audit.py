@@ -47,7 +47,14 @@ def run(args: argparse.Namespace) -> int:
     bad = BadLines(args.strict)
     family = load_family(family_path(args.family)) if args.family else None
     found = audit(
-        args.scorer, args.traces, trees=args.trees, margin=args.margin, seed=args.seed, family=family, bad=bad
+        args.scorer,
+        args.traces,
+        trees=args.trees,
+        margin=args.margin,
+        seed=args.seed,
+        family=family,
+        bad=bad,
+        progress=True,
     )
     flags.say_bad_lines(bad)
     figures = found.figures

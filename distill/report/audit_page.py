@@ -139,6 +139,12 @@ def _note(figures: Figures) -> ET.Element:
             number(bound["held_percent"]),
             " % of candidates in range.",
         ]
+    if figures["label_error_percent"] is not None:
+        more += [
+            " Exact values are known to ",
+            number(figures["label_error_percent"]),
+            " % of the best ones.",
+        ]
     return element("p", text, *more, class_="note")
 
 

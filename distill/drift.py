@@ -56,7 +56,7 @@ class Training:
 
 
 def training(family: Family, facts: Mapping[str, Any], kind: InputKind) -> Training:
-    """Trees of the family from the seed of the scorer's dataset; those that its input cannot hold are left out.
+    """Trees of the family, from the seed of the scorer's dataset, that its input can hold.
 
     facts : the scorer file's metadata. Raises InputError where none is left.
     """

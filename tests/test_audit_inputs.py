@@ -229,7 +229,7 @@ def test_refusals_exit_with_2(case: Case, tmp_path: Path, capsys: pytest.Capture
 
 def test_a_family_that_the_input_cannot_hold_is_named(coins: Case, crossings: Case) -> None:
     with pytest.raises(
-        InputError, match="family: must be what .* reads a win/loss leaf table; got 'crossings'"
+        InputError, match=r"family: must be what .* reads a win/loss leaf table; got 'crossings'"
     ):
         audit(coins.scorer, [coins.matching], family=crossings.family)
 

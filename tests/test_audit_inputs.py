@@ -56,9 +56,10 @@ search = { thompson = 1 }
 
 
 def mostly_lost(tree: BeliefTree) -> BeliefTree:
-    """The same leaves where wins are a twentieth as likely as training saw them."""
+    """The same leaves with next to no belief yet, and wins a fifth as likely as training saw them."""
     assert tree.alpha is not None
-    return replace(tree, alpha=0.05 * tree.alpha)
+    assert tree.beta is not None
+    return replace(tree, alpha=0.02 * tree.alpha, beta=0.1 * tree.beta)
 
 
 def all_or_nothing(tree: BeliefTree) -> BeliefTree:

@@ -95,8 +95,8 @@ def audit(
         why = "; ".join(f"{n} {reason}" for reason, n in aside.items())
         raise InputError(
             ", ".join(str(t) for t in traces),
-            f"must hold at least {_LEAST_DECISIONS} decisions that the scorer can be asked about"
-            + (f" (aside: {why})" if why else ""),
+            f"a sample of {len(sample)} trees must hold at least {_LEAST_DECISIONS} decisions that the "
+            "scorer can be asked about" + (f" (aside: {why})" if why else ""),
             decisions,
         )
     now = examine(loaded, candidates, n_boot=n_boot, seed=seed)

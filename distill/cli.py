@@ -11,6 +11,7 @@ import contextlib
 import os
 import sys
 from collections.abc import Sequence
+from typing import NoReturn
 
 from distill import __version__
 from distill.commands import (
@@ -59,8 +60,15 @@ def _fail(message: str, code: int = 2) -> int:
     return code
 
 
+class _Parser(argparse.ArgumentParser):
+    """Says a mistake in one line, as every other error is said."""
+
+    def error(self, message: str) -> NoReturn:
+        sys.exit(_fail(f"{message} ({self.prog} --help)"))
+
+
 def _parser() -> argparse.ArgumentParser:
-    parser = argparse.ArgumentParser(
+    parser = _Parser(
         prog="voc-distill",
         description="Exact value of computation for belief trees, and fast scorers distilled from it.",
         epilog="A scorer only spends search effort; it is no safety function.",

@@ -78,8 +78,8 @@ def static_rates(
             z = np.minimum(gap / np.maximum(s, _TINY), _Z_LIMIT)
             options.append(s * _loss(z) / k)
     upper = options[1] > options[0]
-    batch = np.where(upper, np.minimum(low + 1, np.floor(remaining)), low).astype(np.int64)
-    return np.where(upper, options[1], options[0]), batch
+    k = np.where(upper, np.minimum(low + 1, np.floor(remaining)), low)
+    return np.where(upper, options[1], options[0]), k.astype(np.int64)
 
 
 def highest_rates(var: Floats, noise_var: Floats, gain: Floats, batch: int = 1) -> Floats:

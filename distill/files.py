@@ -17,9 +17,10 @@ def write_atomic(path: str | os.PathLike[str], data: bytes) -> None:
     step. OSError passes through and names the path; the temporary file is removed.
     """
     path = Path(path)
-    path.parent.mkdir(parents=True, exist_ok=True)
-    fd, temporary = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.", suffix=".part")
+    temporary = None
     try:
+        path.parent.mkdir(parents=True, exist_ok=True)
+        fd, temporary = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.", suffix=".part")
         with os.fdopen(fd, "wb") as f:
             f.write(data)
             f.flush()
@@ -27,9 +28,10 @@ def write_atomic(path: str | os.PathLike[str], data: bytes) -> None:
         Path(temporary).chmod(0o644)
         Path(temporary).replace(path)
     except BaseException as e:
-        Path(temporary).unlink(missing_ok=True)
-        if isinstance(e, OSError) and e.filename is None:
-            e.filename = str(path)  # a full disk does not say which file
+        if temporary is not None:
+            Path(temporary).unlink(missing_ok=True)
+        if isinstance(e, OSError):
+            e.filename = str(path)  # not the temporary one; a full disk names none at all
         raise
 
 

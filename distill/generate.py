@@ -320,10 +320,11 @@ def _open(folder: Path, plan: dict[str, Any]) -> dict[str, Any]:
         _sweep(folder, manifest)
         shards.verify(folder, manifest["shards"])
         return manifest
-    if any(folder.glob("*.parquet")):
-        raise InputError(str(folder), "must be empty or hold a manifest.json beside its shards")
     for left in folder.glob(".*.part"):  # a writer's that was killed at its first file
         left.unlink(missing_ok=True)
+    foreign = min((x.name for x in folder.iterdir()), default=None)
+    if foreign is not None:
+        raise InputError(str(folder), "must be empty or hold a manifest.json beside its shards", foreign)
     manifest = {**plan, "complete": False, "totals": {}, "added": [], "shards": []}
     shards.write_manifest(folder, manifest)
     return manifest

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import re
 from pathlib import Path
 
@@ -10,7 +11,7 @@ import pytest
 
 from distill.cli import run
 from distill.family import draw, load_family
-from distill.record import parse_record
+from distill.record import parse_record, to_record
 from distill.sample_data import FAMILIES
 
 ROOT = Path(__file__).parents[1]
@@ -27,6 +28,17 @@ def test_the_record_is_valid():
     tree = parse_record(record)
     assert tree.n_leaves == 3
     assert tree.remaining == 60
+
+
+def test_the_records_of_the_data_page_are_valid():
+    page = (ROOT / "datasets" / "README.md").read_text()
+    lines = re.findall(r"```json\n(.*?)```", page, flags=re.S)[0].splitlines()
+    trees = [parse_record(line) for line in lines]
+    assert [(tree.has_chance, tree.mean is None, tree.cov is not None) for tree in trees] == [
+        (True, False, False),
+        (False, True, False),
+        (False, False, True),
+    ]
 
 
 def test_the_embedding_runs(monkeypatch):
@@ -52,7 +64,12 @@ def test_the_backup_runs(monkeypatch):
     (code,) = (block for block in blocks("python") if "Backup" in block)
     monkeypatch.chdir(ROOT)
     tree = draw(load_family(FAMILIES / "crossing-traffic.toml"), 0, 0)
-    scope = {"tree": tree, "leaf": 0, "new_mean": float(tree.mean[0]), "new_var": float(tree.var[0]) / 2}
+    scope = {
+        "line": json.dumps(to_record(tree)),
+        "leaf": 0,
+        "new_mean": float(tree.mean[0]),
+        "new_var": float(tree.var[0]) / 2,
+    }
     exec(code, scope)
     assert 0 <= scope["leaf"] < tree.n_leaves
 

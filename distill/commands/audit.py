@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-from pathlib import Path
 from typing import Any
 
 from distill.commands import flags
@@ -30,7 +29,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="what the scorer was trained on, to tell drift; by default as its metadata names it",
     )  # fmt: skip
     parser.add_argument(
-        "--out", type=Path, metavar="FOLDER",
+        "--out", type=flags.out_folder, metavar="FOLDER",
         help="audit.json, audit.html and worth-adding.jsonl.gz go here; generate --add takes the last",
     )  # fmt: skip
     parser.add_argument("--seed", type=flags.whole(0), default=0, help="of sample and intervals")

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import argparse
 import math
+import os
 import sys
 from collections.abc import Callable
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:  # --help must answer at once
@@ -82,6 +84,30 @@ def whole(least: int) -> Callable[[str], int]:
         return n
 
     return parse
+
+
+def out_file(text: str) -> Path:
+    """A file to write; refused before any work where it cannot be."""
+    path = Path(text)
+    if path.is_dir():
+        raise argparse.ArgumentTypeError(f"must be a file, not a folder; got {text!r}")
+    _open_to_writing(path.parent, text)
+    return path
+
+
+def out_folder(text: str) -> Path:
+    """A folder to write into; refused before any work where it cannot be."""
+    path = Path(text)
+    _open_to_writing(path, text)
+    return path
+
+
+def _open_to_writing(folder: Path, text: str) -> None:
+    there = next(p for p in (folder, *folder.absolute().parents) if p.exists())
+    if not there.is_dir():
+        raise argparse.ArgumentTypeError(f"must stand in a folder, and {there} is none; got {text!r}")
+    if not os.access(there, os.W_OK | os.X_OK):
+        raise argparse.ArgumentTypeError(f"must stand in a folder that can be written to; got {text!r}")
 
 
 def positive(text: str) -> float:

@@ -5,7 +5,6 @@ from __future__ import annotations
 import argparse
 import os
 import time
-from pathlib import Path
 from typing import TYPE_CHECKING
 
 from distill.commands import flags
@@ -36,7 +35,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     )  # fmt: skip
     parser.add_argument("--trees", type=flags.whole(1), metavar="N", help="how many (traces: default all)")
     parser.add_argument(
-        "--out", type=Path, required=True, metavar="FOLDER", help="the dataset; a started one goes on"
+        "--out",
+        type=flags.out_folder,
+        required=True,
+        metavar="FOLDER",
+        help="the dataset; a started one goes on",
     )
     parser.add_argument("--seed", type=flags.whole(0), metavar="S", help="of draws and samples (default 0)")
     parser.add_argument(
@@ -63,6 +66,7 @@ def run(args: argparse.Namespace) -> None:
     from distill.family import load_family
     from distill.generate import Asked, Mix, add, generate
     from distill.sample_data import family_path
+    from distill.shards import read_manifest
     from distill.sources import Source
     from distill.traces import BadLines
 
@@ -71,7 +75,12 @@ def run(args: argparse.Namespace) -> None:
     start = time.perf_counter()
     where = {"workers": args.workers, "dask": args.dask, "progress": True}
     if args.add:
-        manifest = add(_recorded(args.add, bad), args.out, **where)
+        given = _recorded(args.add, bad)
+        before = read_manifest(args.out, partial=True)["totals"].get("trees", 0)
+        manifest = add(given, args.out, **where)
+        print(
+            f"{len(given):,} trees given, {manifest['totals']['trees'] - before:,} of them new and labelled"
+        )
     else:
         source: Source
         if not args.family:

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import argparse
 import textwrap
-from pathlib import Path
 from typing import Any
 
 from distill.commands import flags
@@ -17,8 +16,10 @@ HELP = "from recorded trees to a family file, with intervals, and what does not 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
     parser.add_argument("traces", nargs="+", metavar="TRACES", help="recorded trees")
-    parser.add_argument("--out", type=Path, required=True, metavar="FILE.toml", help="the family file")
-    parser.add_argument("--page", type=Path, metavar="FILE.html", help="a page with pictures")
+    parser.add_argument(
+        "--out", type=flags.out_file, required=True, metavar="FILE.toml", help="the family file"
+    )
+    parser.add_argument("--page", type=flags.out_file, metavar="FILE.html", help="a page with pictures")
     parser.add_argument("--seed", type=flags.whole(0), default=0, help="of the intervals and drawn trees")
     flags.add_strict_flag(parser)
 

@@ -28,12 +28,15 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
     parser.add_argument(
         "trees",
+        nargs="+",
         metavar="TREES",
         help="belief-tree/1 records, .jsonl, .jsonl.gz or .json; - reads standard input",
     )
     flags.add_query_flags(parser)
     parser.add_argument("--table", action="store_true", help="a readable table instead of JSON Lines")
-    parser.add_argument("--out", type=Path, metavar="FILE", help="write here instead of standard output")
+    parser.add_argument(
+        "--out", type=flags.out_file, metavar="FILE", help="write here instead of standard output"
+    )
     bad = parser.add_mutually_exclusive_group()
     bad.add_argument(
         "--strict", action="store_true",
@@ -52,7 +55,7 @@ def run(args: argparse.Namespace) -> None:
 
     lines: list[str] = []
     bad = traces.BadLines(strict=not args.skip_bad)
-    for place, tree in traces.read_many([args.trees], bad):
+    for place, tree in traces.read_many(args.trees, bad):
         try:
             query = resolve(
                 tree,

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-from pathlib import Path
 
 from distill.commands import flags
 
@@ -26,7 +25,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--rollouts", type=flags.whole(1), default=128, metavar="R", help="budget of a decision (default 128)"
     )
     parser.add_argument("--seed", type=flags.whole(0), default=0)
-    parser.add_argument("--out", type=Path, required=True, metavar="FILE", help=".jsonl or .jsonl.gz")
+    parser.add_argument(
+        "--out", type=flags.out_file, required=True, metavar="FILE", help=".jsonl or .jsonl.gz"
+    )
 
 
 def run(args: argparse.Namespace) -> None:

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-from pathlib import Path
 
 from distill.commands import flags
 
@@ -25,7 +24,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
     parser.formatter_class = argparse.RawDescriptionHelpFormatter
     parser.epilog = _EPILOG
-    parser.add_argument("--out", type=Path, required=True, metavar="FOLDER", help="goes on where it was")
+    parser.add_argument(
+        "--out", type=flags.out_folder, required=True, metavar="FOLDER", help="goes on where it was"
+    )
     parser.add_argument("--quick", action="store_true", help="a small rehearsal of under a minute")
     parser.add_argument("--full", action="store_true", help="the whole grid; 40 minutes on two cores")
     parser.add_argument("--problem", action="append", default=[], metavar="NAME")

@@ -6,6 +6,8 @@ import argparse
 import json
 from pathlib import Path
 
+from distill.commands import flags
+
 __all__ = ["HELP", "add_arguments", "run"]
 
 HELP = "one page with pictures, from the figures of train, ship or a tour"
@@ -19,7 +21,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         metavar="FILE.json",
         help="front.json, a sheet, a tour's summary, or train's folder",
     )
-    parser.add_argument("--out", type=Path, required=True, metavar="PAGE.html")
+    parser.add_argument("--out", type=flags.out_file, required=True, metavar="PAGE.html")
 
 
 def run(args: argparse.Namespace) -> None:

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-from pathlib import Path
 
 from distill.commands import flags
 
@@ -15,7 +14,7 @@ HELP = "copy one scorer of a trained front, with its sheet, to where agents load
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
     parser.add_argument("trained", metavar="FOLDER", help="what train left")
-    parser.add_argument("--out", type=Path, required=True, metavar="FILE.onnx")
+    parser.add_argument("--out", type=flags.out_file, required=True, metavar="FILE.onnx")
     which = parser.add_mutually_exclusive_group()
     which.add_argument(
         "--latency",

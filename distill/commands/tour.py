@@ -5,6 +5,8 @@ from __future__ import annotations
 import argparse
 from pathlib import Path
 
+from distill.commands import flags
+
 __all__ = ["HELP", "add_arguments", "run"]
 
 HELP = "the whole job on the sample data, in a few minutes"
@@ -12,7 +14,7 @@ HELP = "the whole job on the sample data, in a few minutes"
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
-    parser.add_argument("out", type=Path, nargs="?", default=Path("tour-out"), metavar="FOLDER")
+    parser.add_argument("out", type=flags.out_folder, nargs="?", default=Path("tour-out"), metavar="FOLDER")
 
 
 def run(args: argparse.Namespace) -> None:

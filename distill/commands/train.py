@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-from pathlib import Path
 
 from distill.commands import flags
 from distill.files import write_atomic
@@ -17,7 +16,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
     parser.add_argument("dataset", metavar="DATASET")
     parser.add_argument(
-        "--out", type=Path, required=True, metavar="FOLDER", help="scorer files and front.json"
+        "--out", type=flags.out_folder, required=True, metavar="FOLDER", help="scorer files and front.json"
     )
     parser.add_argument("--seed", type=flags.whole(0), default=0)
     parser.add_argument(

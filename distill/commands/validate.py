@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import argparse
 import json
-from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from distill.commands import flags
 from distill.files import write_atomic
+
+if TYPE_CHECKING:
+    from distill.family import Family
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -28,20 +30,24 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--trees", type=flags.whole(1), default=300, metavar="N", help="of each shift (default 300)"
     )
     parser.add_argument("--seed", type=flags.whole(0), default=0, help="of the bootstrap and of drawn trees")
-    parser.add_argument("--out", type=Path, metavar="FILE.json", help="write the figures here too")
+    parser.add_argument("--out", type=flags.out_file, metavar="FILE.json", help="write the figures here too")
 
 
 def run(args: argparse.Namespace) -> None:
     """Run the command."""
     from distill.errors import InputError
+    from distill.family import load_family
+    from distill.sample_data import family_path
 
     if args.dataset is None and args.shift is None:
         raise InputError("validate", "must be given a dataset, --shift, or both")
+    # A wrong name is told before the work.
+    family = None if args.shift is None else load_family(family_path(args.shift))
     figures: dict[str, Any] = {}
     if args.dataset is not None:
         figures = _on_dataset(args)
-    if args.shift is not None:
-        figures["shifts"] = _on_shifts(args)
+    if family is not None:
+        figures["shifts"] = _on_shifts(args, family)
     if args.out:
         write_atomic(args.out, (json.dumps(figures, indent=1) + "\n").encode())
 
@@ -52,21 +58,20 @@ def _on_dataset(args: argparse.Namespace) -> dict[str, Any]:
 
     figures = validate(args.scorer, args.dataset, seed=args.seed)
     accuracy = figures["accuracy"]
-    which = "held-out trees" if figures["part"] == "held_out" else "trees"
-    print(f"{args.scorer} on {accuracy['trees']:,} {which} of {args.dataset}\n")
+    print(f"{args.scorer} on {accuracy['trees']:,} trees of {args.dataset}")
+    if figures["part"] == "held_out":
+        print("The dataset shares its source with the training data: only held-out trees count.")
+    print()
     print("\n".join(accuracy_table({"the scorer": accuracy, **figures["beside"]})))
     print("\n" + "\n".join(bound_text(accuracy["calibration"])))
     return figures
 
 
-def _on_shifts(args: argparse.Namespace) -> dict[str, Any]:
-    from distill.family import load_family
+def _on_shifts(args: argparse.Namespace, family: Family) -> dict[str, Any]:
     from distill.runtime import Scorer
-    from distill.sample_data import family_path
     from distill.sheet import shift_table
     from distill.shift import measure_shifts
 
-    family = load_family(family_path(args.shift))
     figures = measure_shifts(
         Scorer.load(args.scorer), family, trees=args.trees, seed=args.seed, progress=True
     )

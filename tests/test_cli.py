@@ -191,8 +191,10 @@ def test_tolerance_is_honoured_or_refused(trees, capsys):
 def test_bad_flags_exit_2(argv, capsys):
     with pytest.raises(SystemExit) as caught:
         run(argv)
+    err = capsys.readouterr().err
     assert caught.value.code == 2
-    assert "error:" in capsys.readouterr().err
+    assert err.startswith("voc-distill: error: ")
+    assert err.count("\n") == 1
 
 
 def test_module_runs_from_anywhere(tmp_path, trees):
@@ -204,3 +206,52 @@ def test_module_runs_from_anywhere(tmp_path, trees):
         check=True,
     )
     assert len(done.stdout.splitlines()) == 2
+
+
+@pytest.mark.parametrize(
+    "argv",
+    [
+        ["price", "{trees}", "--out", "{folder}"],
+        ["price", "{trees}", "--out", "{trees}/below"],
+        ["infer", "{trees}", "--out", "{new}", "--page", "{trees}/page.html"],
+        ["generate", "--traces", "{trees}", "--out", "{trees}"],
+        ["audit", "models/cold-store.onnx", "{trees}", "--out", "{trees}"],
+        ["validate", "models/cold-store.onnx", "--shift", "cold-store", "--out", "{trees}/figures.json"],
+        ["tour", "{trees}"],
+    ],
+)
+def test_places_that_cannot_be_written_are_told_before_any_work(trees, tmp_path, capsys, argv):
+    names = {"trees": trees, "folder": tmp_path, "new": tmp_path / "new.toml"}
+    with pytest.raises(SystemExit) as done:
+        run([word.format(**names) for word in argv])
+    out, err = capsys.readouterr()
+    assert done.value.code == 2
+    assert out == ""
+    assert err.startswith("voc-distill: error: argument ")
+    assert err.count("\n") == 1
+    assert "must" in err
+    assert [path.name for path in tmp_path.iterdir()] == ["trees.jsonl"]
+
+
+@pytest.mark.usefixtures("trees")
+def test_a_folder_of_something_else_is_not_filled(tmp_path, capsys):
+    err = refused(capsys, "generate", "--family", "cold-store", "--trees", "3", "--out", tmp_path)
+    assert "must be empty or hold a manifest.json" in err
+    assert "trees.jsonl" in err
+    assert [path.name for path in tmp_path.iterdir()] == ["trees.jsonl"]
+
+
+def test_several_files_are_priced_in_order(trees, capsys):
+    assert run(["price", str(trees), str(trees)]) == 0
+    assert [json.loads(line)["id"] for line in capsys.readouterr().out.splitlines()] == [0, 1, 0, 1]
+
+
+def test_additions_say_how_many_trees_were_new(trees, tmp_path, capsys):
+    data = str(tmp_path / "data")
+    assert run(["generate", "--traces", str(trees), "--out", data, "--workers", "1"]) == 0
+    capsys.readouterr()
+    more = tmp_path / "more.jsonl"
+    other = flat_record(remaining=20, mean=[None, None, 0.1, 0.4, 0.6])
+    more.write_text(trees.read_text() + json.dumps(other) + "\n")
+    assert run(["generate", "--add", str(more), "--out", data, "--workers", "1"]) == 0
+    assert capsys.readouterr().out.startswith("3 trees given, 1 of them new and labelled")

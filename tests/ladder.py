@@ -10,6 +10,7 @@ QUADRATURE = 1e-9  # of scale: fast quadrature against the oracle's adaptive one
 RELATIVE_TAIL = 1e-6  # relative, VOC down to 1e-30 of scale: what the labels promise
 CHANCE_LABEL = 1e-6  # of scale: what a label through chance nodes may be off by before it says so
 STANDARD_ERRORS = 4.0  # Monte Carlo at a fixed seed: a miss has odds of 6e-5 a check
+UNSEEN_DRAWS = 10.0  # over the draws, of scale: an outcome so rare is in none of them with odds of 5e-5
 PUBLISHED = 0.5  # units of the last place printed: what a rounded table can hold
 ONNX_DOUBLE = 0.0  # a double graph with one thread repeats the estimator bit for bit
 ONNX_FLOAT = 1e-5  # on a unit-scale target, where the graph computes in float32

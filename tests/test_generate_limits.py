@@ -23,8 +23,13 @@ def _bytes(folder):
 
 
 def _run(code, *arguments):
+    path = os.pathsep.join(filter(None, (str(Path(__file__).parent), os.environ.get("PYTHONPATH"))))
     done = subprocess.run(
-        [sys.executable, "-c", code, *map(str, arguments)], capture_output=True, text=True, check=False
+        [sys.executable, "-c", code, *map(str, arguments)],
+        capture_output=True,
+        text=True,
+        check=False,
+        env={**os.environ, "PYTHONPATH": path},
     )
     assert done.returncode == 0, done.stderr
     return json.loads(done.stdout.splitlines()[-1])
@@ -125,13 +130,14 @@ def test_disks_that_fill_at_any_place(tmp_path, whole, workers):
 # --- memory ----------------------------------------------------------------------------------------
 
 _GENERATE = """
-import json, resource, sys
+import json, sys
 from distill.family import load_family
 from distill.generate import Asked, Traces, generate
+from peak_memory import peak_mb
 trees, source, out = int(sys.argv[1]), sys.argv[2], sys.argv[3]
 source = load_family(source) if source.endswith(".toml") else Traces.read([source])
 generate(source, out, trees=trees, asked=Asked(horizon=0, batch=1), shard_trees=500)
-print(json.dumps(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024))
+print(json.dumps(peak_mb()))
 """
 _CEILING = 400  # MB of one process that draws and labels, libraries and compiled methods included
 
@@ -148,14 +154,13 @@ def test_memory_does_not_grow_with_the_number_of_trees(tmp_path):
 
 
 _LOAD = """
-import json, resource, sys, time
+import json, sys, time
 from distill.candidates import Candidates
-before = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
+from peak_memory import peak_mb
 start = time.perf_counter()
 c, _ = Candidates.read(sys.argv[1])
 seconds = time.perf_counter() - start
-peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
-print(json.dumps({"rows": len(c.label), "seconds": seconds, "before": before, "peak": peak}))
+print(json.dumps({"rows": len(c.label), "seconds": seconds, "peak": peak_mb()}))
 """
 
 

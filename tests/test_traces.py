@@ -189,7 +189,7 @@ _MEASURED = """
 import sys
 from distill.cli import run
 code = run(sys.argv[1:])
-# Not ru_maxrss, which a child takes over from the process that started it.
+# As peak_memory says it, whose folder is not on the path here.
 peak = next(line for line in open("/proc/self/status") if line.startswith("VmHWM:"))
 print(int(peak.split()[1]) * 1024, file=sys.stderr)
 sys.exit(code)

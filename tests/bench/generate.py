@@ -27,13 +27,13 @@ from distill.shards import Labelled
 
 FAMILIES = Path(__file__).parents[2] / "datasets" / "families"
 LOAD = """
-import json, resource, sys, time
+import json, sys, time
 from distill.candidates import Candidates
 start = time.perf_counter()
 c, _ = Candidates.read(sys.argv[1])
 seconds = time.perf_counter() - start
-peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
-print(json.dumps([len(c.label), seconds, peak]))
+peak = next(line for line in open("/proc/self/status") if line.startswith("VmHWM:"))
+print(json.dumps([len(c.label), seconds, int(peak.split()[1]) / 1024]))
 """
 
 

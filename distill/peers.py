@@ -145,6 +145,16 @@ def _flat(t: Mapping[str, Any]) -> tuple[Floats, Floats, Floats, Any]:
 
 
 @compiled
+def _best_other(value: Floats, own: int) -> float:
+    """The largest value of another action; -inf where there is none."""
+    rival = -np.inf
+    for a in range(len(value)):
+        if a != own:
+            rival = max(rival, value[a])
+    return rival
+
+
+@compiled
 def _larger(m1, v1, m2, v2):  # type: ignore[no-untyped-def]
     """Mean and variance of the larger of two independent normals (Clark 1961, eqs. 1-6)."""
     theta = math.sqrt(v1 + v2)
@@ -191,10 +201,7 @@ def _matched(m, v, noise, action, left, batch, nodes, shares):  # type: ignore[n
         value = so_far[:, 0]
     scores = np.zeros(n_leaves)
     for i in range(n_leaves):
-        rival = -np.inf
-        for a in range(n_actions):
-            if a != action[i]:
-                rival = max(rival, value[a])
+        rival = _best_other(value, action[i])
         if v[i] <= 0.0 or rival == -np.inf or (left < 1 and batch == 0):
             continue
         if before[i, 0] == -np.inf:
@@ -242,10 +249,7 @@ def _sampled(rng, m, v, noise, action, left, batch, samples):  # type: ignore[no
         outcomes[o + 1] = -outcomes[o]
     scores = np.zeros(n_leaves)
     for i in range(n_leaves):
-        rival = -np.inf
-        for a in range(n_actions):
-            if a != action[i]:
-                rival = max(rival, value[a])
+        rival = _best_other(value, action[i])
         if v[i] <= 0.0 or rival == -np.inf or (left < 1 and batch == 0):
             continue
         k = float(batch) if batch > 0 else _peak(rival - m[i], v[i], noise[i], left)

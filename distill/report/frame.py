@@ -9,7 +9,7 @@ from distill.report.elements import Child, element
 from distill.report.theme import THEME_CSS, one_line
 from distill.report.words import CAUTION, STYLE
 
-__all__ = ["document", "framed", "opening", "tile"]
+__all__ = ["document", "framed", "opening", "page_text", "tile"]
 
 _NO_REQUESTS: Final = "default-src 'none'; style-src 'unsafe-inline'"
 _MORE_STYLE: Final = """
@@ -19,16 +19,21 @@ pre{overflow-x:auto;font-size:.8125rem;border:1px solid var(--line);border-radiu
 
 
 def document(title: str, *parts: ET.Element) -> str:
-    """A page of these parts: asks the network for nothing, runs no script, and is XML as well."""
+    """A page of these parts, in the style of the pages that are read beside others."""
+    return page_text(one_line(title), element("main", *parts), style=f"{STYLE}\n{_MORE_STYLE}")
+
+
+def page_text(title: str, body: ET.Element, *, style: str = STYLE) -> str:
+    """A whole page: asks the network for nothing, runs no script, and is XML as well."""
     head = element(
         "head",
         element("meta", charset="utf-8"),
         element("meta", name="viewport", content="width=device-width, initial-scale=1"),
         element("meta", http_equiv="Content-Security-Policy", content=_NO_REQUESTS),
-        element("title", one_line(title)),
-        element("style", f"{THEME_CSS}\n{STYLE}\n{_MORE_STYLE}"),
+        element("title", title),
+        element("style", f"{THEME_CSS}\n{style}"),
     )
-    html = element("html", head, element("body", element("main", *parts)), lang="en")
+    html = element("html", head, element("body", body), lang="en")
     return f"<!DOCTYPE html>\n{ET.tostring(html, encoding='unicode')}\n"
 
 

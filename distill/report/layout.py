@@ -14,14 +14,13 @@ from typing import Any
 from distill.files import write_atomic
 from distill.report.elements import Child, between, element, number, section, word_list
 from distill.report.facts import SHARES, Facts, Figures, gaps_refused
+from distill.report.frame import page_text
 from distill.report.pictures import front_picture, pictures
 from distill.report.tables import origin, tables
-from distill.report.theme import THEME_CSS, one_line, standalone
-from distill.report.words import CAUTION, SHARE_NAMES, STYLE, WORDS
+from distill.report.theme import one_line, standalone
+from distill.report.words import CAUTION, SHARE_NAMES, WORDS
 
 __all__ = ["front_svg", "page", "write_page"]
-
-_NO_REQUESTS = "default-src 'none'; style-src 'unsafe-inline'"
 
 
 def page(figures: Figures) -> str:
@@ -39,16 +38,7 @@ def page(figures: Figures) -> str:
             section("What the words mean", word_list((term, [text]) for term, text in WORDS.items())),
             section("Where it comes from", word_list(origin(facts))),
         )
-        head = element(
-            "head",
-            element("meta", charset="utf-8"),
-            element("meta", name="viewport", content="width=device-width, initial-scale=1"),
-            element("meta", http_equiv="Content-Security-Policy", content=_NO_REQUESTS),
-            element("title", f"{one_line(facts.title)}: what its picks lose and what they cost"),
-            element("style", f"{THEME_CSS}\n{STYLE}"),
-        )
-    html = element("html", head, element("body", body), lang="en")
-    return f"<!DOCTYPE html>\n{ET.tostring(html, encoding='unicode')}\n"
+    return page_text(f"{one_line(facts.title)}: what its picks lose and what they cost", body)
 
 
 def write_page(figures: Figures, path: str | os.PathLike[str]) -> None:

@@ -14,14 +14,14 @@ from distill.errors import InputError
 from distill.files import write_atomic
 from distill.report.elements import Child, element, estimate, number, section, table, text_of, word_list
 from distill.report.facts import Figures, gaps_refused
-from distill.report.theme import DRAWN, SMALL, THEME_CSS, one_line, standalone, styled, svg
-from distill.report.words import CAUTION, STYLE
+from distill.report.frame import page_text
+from distill.report.theme import DRAWN, SMALL, one_line, standalone, styled, svg
+from distill.report.words import CAUTION
 
 __all__ = ["break_even_svg", "rehearsal_page", "write_rehearsal_page"]
 
 _FORMAT: Final = "voc-distill-rehearsal/1"
 _NONE: Final = "\u2013"  # stands for a figure that is not there
-_NO_REQUESTS: Final = "default-src 'none'; style-src 'unsafe-inline'"
 _AGAINST: Final = {
     "sampling": "better of UCT and Thompson sampling",
     "static": "static closed form",
@@ -69,16 +69,7 @@ def rehearsal_page(summary: Figures) -> str:
             *_tables(summary),
             section("What the words mean", word_list((term, [text]) for term, text in _WORDS.items())),
         )
-        head = element(
-            "head",
-            element("meta", charset="utf-8"),
-            element("meta", name="viewport", content="width=device-width, initial-scale=1"),
-            element("meta", http_equiv="Content-Security-Policy", content=_NO_REQUESTS),
-            element("title", "Rehearsal: who decides better, at which cost"),
-            element("style", f"{THEME_CSS}\n{STYLE}"),
-        )
-    html = element("html", head, element("body", body), lang="en")
-    return f"<!DOCTYPE html>\n{ET.tostring(html, encoding='unicode')}\n"
+    return page_text("Rehearsal: who decides better, at which cost", body)
 
 
 def write_rehearsal_page(summary: Figures, path: str | os.PathLike[str]) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -55,18 +56,12 @@ def estimate_prior(
     Raises RefusedError where rollouts do not vary.
     """
     noise, between, freedom, top = [], [], [], 0.0
-    for state in _wander(simulator, rng, trees):
-        tree = settings.tree(simulator, state, rng)
-        open_leaves = np.flatnonzero(~tree.sure)
-        if len(open_leaves) < 2:
-            continue
-        chosen = rng.permutation(open_leaves)[:leaves]
-        returns = returns_of(simulator, tree, chosen, rollouts, settings.length, rng)
+    for returns in _pilot(simulator, settings, rng, trees, leaves, rollouts):
         top = max(top, float(np.abs(returns).max()))
         within = float(returns.var(axis=1, ddof=1).mean())
         noise.append(within)
         between.append(float(returns.mean(axis=1).var(ddof=1)) - within / rollouts)
-        freedom.append(len(chosen) * (rollouts - 1))
+        freedom.append(len(returns) * (rollouts - 1))
     typical = float(np.average(noise, weights=freedom)) if noise else 0.0
     if not typical > (_SAME * top) ** 2:
         raise RefusedError(f"{simulator.name}: pilot rollouts do not vary; one at each leaf tells all")
@@ -116,15 +111,8 @@ def estimate_odds(
     Raises RefusedError where every rollout wins or every one loses.
     """
     within, between, means = [], [], []
-    for state in _wander(simulator, rng, trees):
-        tree = settings.tree(simulator, state, rng)
-        open_leaves = np.flatnonzero(~tree.sure)
-        if len(open_leaves) < 2:
-            continue
-        chosen = rng.permutation(open_leaves)[:leaves]
-        wins = wins_of(
-            simulator, settings, returns_of(simulator, tree, chosen, rollouts, settings.length, rng)
-        )
+    for returns in _pilot(simulator, settings, rng, trees, leaves, rollouts):
+        wins = wins_of(simulator, settings, returns)
         w = float(wins.var(axis=1, ddof=1).mean())
         within.append(w)
         between.append(float(wins.mean(axis=1).var(ddof=1)) - w / rollouts)
@@ -162,6 +150,18 @@ def returns_of(
     return np.array(
         [[tree.rollout(simulator, int(i), rng, length) for _ in range(rollouts)] for i in leaves]
     ).reshape(len(leaves), rollouts)
+
+
+def _pilot(
+    simulator: Simulator, settings: Settings, rng: np.random.Generator, trees: int, leaves: int, rollouts: int
+) -> Iterator[Floats]:
+    """Returns of pilot rollouts, (at most `leaves`, rollouts), tree by tree that has two open leaves."""
+    for state in _wander(simulator, rng, trees):
+        tree = settings.tree(simulator, state, rng)
+        open_leaves = np.flatnonzero(~tree.sure)
+        if len(open_leaves) >= 2:
+            chosen = rng.permutation(open_leaves)[:leaves]
+            yield returns_of(simulator, tree, chosen, rollouts, settings.length, rng)
 
 
 def _wander(simulator: Simulator, rng: np.random.Generator, n: int) -> list[State]:

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import math
 from typing import Any
 
 from distill.allocation import Search as Posterior
-from distill.backup import Backup
-from distill.errors import RefusedError
+from distill.backup import backup_of
+from distill.backup_correlated import CorrelatedBackup
+from distill.errors import InputError, RefusedError
 from distill.runtime import Scorer, Scores
 from distill.scorer_inputs import LEAF_TABLE, RECORD, WIN_LOSS_TABLE
 from distill.tree import BeliefTree, leaf_table
@@ -17,9 +19,10 @@ __all__ = ["ScorerInputs"]
 class ScorerInputs:
     """The arrays of one decision that a scorer's call takes; those that rollouts do not change are kept.
 
-    A leaf table is the agent's own arrays; a record is kept up to date by a backup of the tree, a path to
-    the root after each rollout. Raises RefusedError for trees that the file cannot score: `fit` says so
-    beforehand.
+    A leaf table is the agent's own arrays; a record is kept up to date by a backup of the tree at the
+    horizon that the file was trained for: a path to the root after each rollout, or, with `cov`, the whole
+    tree. Raises RefusedError for trees that the file cannot score: `fit` says so beforehand; InputError
+    where a file of records states no horizon that a backup could have.
     """
 
     def __init__(self, scorer: Scorer, tree: BeliefTree) -> None:
@@ -27,7 +30,7 @@ class ScorerInputs:
             raise RefusedError("scorer: the file does not read such trees")
         self._scorer, self._plain = scorer, Scorer.closed_form()
         self._win_loss = tree.mean is None
-        self._backup = Backup(tree) if scorer.kind is RECORD else None
+        self._backup = backup_of(tree, _horizon(scorer)) if scorer.kind is RECORD else None
         self._fixed: dict[str, Any] = {}
         if self._backup is None:
             kept = ("low", "high") if self._win_loss else ("noise_var",)
@@ -38,7 +41,7 @@ class ScorerInputs:
     def fit(scorer: Scorer, tree: BeliefTree) -> bool:
         """Whether the scorer's inputs can hold the tree; without a file the closed form takes leaf tables."""
         if scorer.kind is RECORD:
-            return tree.cov is None
+            return True
         own = WIN_LOSS_TABLE if tree.mean is None else LEAF_TABLE
         return not tree.has_chance and tree.cov is None and scorer.kind in (None, own)
 
@@ -63,9 +66,28 @@ class ScorerInputs:
         """Take in that rollouts have changed the belief of one leaf."""
         if self._backup is None:
             return
-        if self._win_loss:
+        if isinstance(self._backup, CorrelatedBackup):
+            now = posterior.tree()
+            assert now.mean is not None
+            assert now.cov is not None
+            self._backup.update(now.mean, now.cov)
+        elif self._win_loss:
             alpha, beta = posterior.trials
             self._backup.update(leaf, alpha=float(alpha[leaf]), beta=float(beta[leaf]))
         else:
             mean, var = posterior.moments
             self._backup.update(leaf, mean=float(mean[leaf]), var=float(var[leaf]))
+
+
+def _horizon(scorer: Scorer) -> float:
+    """The h of a file's value; infinite where it states none, as the value by default is the dynamic rate."""
+    about = scorer.facts.get("about")
+    value = about.get("value") if isinstance(about, dict) else None
+    stated = value.get("horizon", "inf") if isinstance(value, dict) else "inf"
+    try:
+        horizon = float(stated)
+    except (TypeError, ValueError):
+        horizon = math.nan
+    if not horizon >= 0:
+        raise InputError("scorer file: about: value: horizon", 'must be a number >= 0 or "inf"', stated)
+    return horizon

@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from dense_trees import two_level
 from ladder import CLOSED_FORM
 
 from distill.allocation import Search
-from distill.backup import Backup
-from distill.errors import RefusedError
+from distill.backup import Backup, backup_of
+from distill.errors import InputError, RefusedError
 from distill.rehearse.loop import Budget, decide
 from distill.rehearse.problems import TreeProblem
 from distill.rehearse.scorer_inputs import ScorerInputs
@@ -57,7 +58,7 @@ def test_columns_follow_the_beliefs(tree, kind, monkeypatch):
 def test_every_kind_takes_the_trees_that_it_can_hold():
     fits = {
         kind: [name for name, p in TREES.items() if ScorerInputs.fit(reads(kind), p.draw(0).tree)]
-        for kind in KINDS.values()
+        for kind in (LEAF_TABLE, WIN_LOSS_TABLE, RECORD)
     }
     assert fits == {LEAF_TABLE: ["gaussian"], WIN_LOSS_TABLE: ["win/loss"], RECORD: list(TREES)}
 
@@ -67,3 +68,40 @@ def test_a_record_scorer_searches_any_tree(tree):
     done = decide(TREES[tree].draw(1), ByScorer(reads(RECORD)), Budget(rollouts=20), np.random.default_rng(0))
     assert done.rollouts == 20
     assert done.regret >= 0
+
+
+def test_a_files_own_horizon_is_the_backups():
+    """Rows at h = 2 differ from those at infinity, and are those of a backup at h = 2, rollouts taken in."""
+    draw = TREES["chance"].draw(0)
+    search = Search(draw.tree)
+    about = {"value": {"horizon": 2.0, "batch": None}}
+    inputs = ScorerInputs(Scorer({"input": RECORD.name, "about": about}), draw.tree)
+    search.observe(1, draw.roll(1))
+    inputs.observe(search, 1)
+    found, wanted = inputs._columns(search), Backup(search.tree(), 2.0).rows()
+    for name, column in wanted.items():
+        assert np.allclose(found[name], column, rtol=CLOSED_FORM, atol=0), name
+    assert not np.allclose(found["crossing"], Backup(search.tree()).rows()["crossing"])
+
+
+@pytest.mark.parametrize("horizon", ["soon", -1, None])
+def test_a_horizon_that_is_none_is_one_clear_error(horizon):
+    scorer = Scorer({"input": RECORD.name, "about": {"value": {"horizon": horizon}}})
+    with pytest.raises(InputError, match="about: value: horizon: must be a number >= 0"):
+        ScorerInputs(scorer, TREES["chance"].draw(0).tree)
+
+
+def test_correlated_leaves_are_read_by_records_only():
+    """What one leaf shows moves all rows: they are those of the posterior made anew, to rounding."""
+    cov = 0.5 + 0.5 * np.eye(4)
+    tree = two_level([[0.0, 0.2], [0.1, 0.3]], cov)
+    assert [k.name for k in KINDS.values() if ScorerInputs.fit(reads(k), tree)] == ["record"]
+    search, inputs = Search(tree), ScorerInputs(reads(RECORD), tree)
+    first = inputs._columns(search)
+    for leaf, observed in [(0, 1.0), (3, -0.5), (0, 0.7)]:
+        search.observe(leaf, observed)
+        inputs.observe(search, leaf)
+    found, wanted = inputs._columns(search), backup_of(search.tree()).rows()
+    for name, column in wanted.items():
+        assert np.allclose(found[name], column, rtol=CLOSED_FORM, atol=0), name
+    assert (found["noise_ratio"] > first["noise_ratio"]).all()  # leaves without a rollout too

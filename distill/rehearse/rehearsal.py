@@ -6,8 +6,10 @@ import hashlib
 import io
 import json
 import os
+import time
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, field
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
@@ -25,11 +27,12 @@ from distill.rehearse.problems import Problem
 from distill.rehearse.remembered import Remembered
 from distill.tree import BeliefTree, Floats
 
-__all__ = ["Cell", "Compared", "compare", "rehearse"]
+__all__ = ["Cell", "Compared", "compare", "interval", "rehearse"]
 
 _COLUMNS = (
     "regret", "regret_by_mean", "expected_regret", "rollouts", "choosing", "stopped", "choices", "fallbacks",
 )  # fmt: skip
+_PROCESSOR = "processor"  # column of seconds, not of what was decided
 _RESAMPLES = 2000
 
 
@@ -39,7 +42,8 @@ class Cell:
 
     regret, regret_by_mean, expected_regret : value units, see `Decided`. rollouts : spent.
     choosing : seconds. stopped : early.
-    choices : made. fallbacks : of them, made by another rule.
+    choices : made. fallbacks : of them, made by another rule. processor : seconds of this process that
+    each decision took, judging it included; empty where not known.
     """
 
     problem: str
@@ -53,6 +57,7 @@ class Cell:
     stopped: Floats
     choices: Floats
     fallbacks: Floats
+    processor: Floats = field(default_factory=lambda: np.zeros(0))
 
     @property
     def measured(self) -> Floats:
@@ -140,8 +145,10 @@ def _of_problem(
         paths = {policy.name: folder / _file_name(problem.name, budget, policy.name) for policy in policies}
         missing = [policy for policy in policies if not paths[policy.name].exists()]
         made = {}
-        for policy, results in zip(missing, _run(remembered, missing, budget, seeds, values), strict=True):
+        found = _run(remembered, missing, budget, seeds, values)
+        for policy, (results, seconds) in zip(missing, found, strict=True):
             columns = {c: np.array([getattr(r, c) for r in results], dtype=np.float64) for c in _COLUMNS}
+            columns[_PROCESSOR] = np.array(seconds)
             made[policy.name] = Cell(problem.name, budget, policy.name, **columns)
             _write(paths[policy.name], made[policy.name], seeds.start)
         yield [
@@ -156,17 +163,19 @@ def _run(
     budget: Budget,
     seeds: range,
     values: Callable[[BeliefTree], Floats] | None,
-) -> list[list[Decided]]:
-    """What came of each policy's decisions."""
+) -> list[tuple[list[Decided], list[float]]]:
+    """What came of each policy's decisions, and the processor time of each."""
     for policy in policies:
         # Compiling and first use belong to no decision's clock. The seed is none of those compared.
         warm = problem.draw(seeds.stop)
         decide(warm, policy, Budget(rollouts=2), np.random.default_rng(0), values=values)
-    results: list[list[Decided]] = [[] for _ in policies]
+    results: list[tuple[list[Decided], list[float]]] = [([], []) for _ in policies]
     for seed in seeds:
-        for policy, decided in zip(policies, results, strict=True):
+        for policy, (decided, seconds) in zip(policies, results, strict=True):
             rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
+            started = time.process_time()
             decided.append(decide(problem.draw(seed), policy, budget, rng, values=values))
+            seconds.append(time.process_time() - started)
     return results
 
 
@@ -210,10 +219,9 @@ def compare(
         ours: Floats = getattr(group[policy], column)
         rival = min(rivals, key=lambda name: float(getattr(group[name], column).mean()))
         theirs: Floats = getattr(group[rival], column)
-        rng = np.random.default_rng(seed)
-        picked = rng.integers(len(ours), size=(_RESAMPLES, len(ours)))
+        times = _resampled(len(ours), seed)
         with np.errstate(divide="ignore", invalid="ignore"):
-            ratios = ours[picked].mean(axis=1) / theirs[picked].mean(axis=1)
+            ratios = (times @ ours) / (times @ theirs)
             ratio = float(ours.mean() / theirs.mean()) if theirs.mean() > 0 else float("nan")
         low, high = np.quantile(ratios, [0.025, 0.975]) if np.all(np.isfinite(ratios)) else (np.nan, np.nan)
         out.append(
@@ -223,6 +231,20 @@ def compare(
             )
         )  # fmt: skip
     return out
+
+
+def interval(x: Floats) -> tuple[float, float]:
+    """95 % percentile bootstrap interval of a mean."""
+    low, high = np.quantile(_resampled(len(x), 0) @ x / len(x), [0.025, 0.975])
+    return float(low), float(high)
+
+
+@lru_cache(maxsize=4)
+def _resampled(n: int, seed: int) -> Floats:
+    """How often each of n decisions is in each resample; shape (resamples, n)."""
+    picked = np.random.default_rng(seed).integers(n, size=(_RESAMPLES, n))
+    row = np.arange(_RESAMPLES)[:, None] * n
+    return np.bincount((picked + row).ravel(), minlength=_RESAMPLES * n).reshape(_RESAMPLES, n).astype(float)
 
 
 # --- files -----------------------------------------------------------------------------------------
@@ -258,7 +280,7 @@ def _file_name(problem: str, budget: Budget, policy: str) -> str:
 def _write(path: Path, cell: Cell, first_seed: int) -> None:
     about = {"problem": cell.problem, "policy": cell.policy, "budget": asdict(cell.budget)}
     columns = {"seed": np.arange(first_seed, first_seed + len(cell.regret))}
-    columns |= {c: getattr(cell, c) for c in _COLUMNS}
+    columns |= {c: getattr(cell, c) for c in (*_COLUMNS, _PROCESSOR)}
     table = pa.table(columns).replace_schema_metadata({"rehearsal": json.dumps(about)})
     buffer = io.BytesIO()
     pq.write_table(table, buffer)
@@ -272,4 +294,5 @@ def _read(path: Path, problem: str, budget: Budget, policy: str, seeds: int) -> 
         raise InputError(str(path), f"must be a readable Parquet file ({e})") from None
     if table.num_rows != seeds or not set(_COLUMNS) <= set(table.column_names):
         raise InputError(str(path), f"must hold {seeds} decisions", table.num_rows)
-    return Cell(problem, budget, policy, **{c: table[c].to_numpy() for c in _COLUMNS})
+    columns = [c for c in (*_COLUMNS, _PROCESSOR) if c in table.column_names]
+    return Cell(problem, budget, policy, **{c: table[c].to_numpy() for c in columns})

@@ -2,16 +2,19 @@
 
 from __future__ import annotations
 
+import contextlib
+import hashlib
 import json
 import os
+import threading
 import time
 from collections.abc import Callable, Iterator
 from dataclasses import asdict, dataclass, field
+from functools import lru_cache
 from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
-from joblib import Parallel, delayed
 
 from distill.allocation import Search as Posterior
 from distill.errors import InputError, RefusedError
@@ -20,30 +23,20 @@ from distill.rehearse.catalogue import make_problem
 from distill.rehearse.loop import Budget
 from distill.rehearse.policies import Policy
 from distill.rehearse.policy_specs import make_policy
-from distill.rehearse.problems import Problem
 from distill.rehearse.rehearsal import Cell, rehearse
 from distill.rehearse.remembered import Remembered
+from distill.rehearse.scorer_inputs import ScorerInputs
+from distill.rehearse.tuning import TUNING_SEED, name_of, named, tune, untuned
+from distill.runtime import Scorer
+from distill.scorer_inputs import RECORD
 from distill.tree import BeliefTree
+from distill.workers import run_calls
 
-__all__ = ["Campaign", "Results", "name_of", "run"]
+__all__ = ["Campaign", "Results", "run"]
 
 _FIRST_SEED: Final = 10_000  # those before were looked at while policies were made
-_TUNING_SEED: Final = 1_000_000  # tuning looks at decisions from here on, the rehearsal at those before
-_SLOWEST: Final = 0.25  # seconds a decision, where only rollouts are limited; slower choosers are left out
-
-# Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from.
-_STOPS: Final = (1e-2, 3e-3, 1e-3, 3e-4, 1e-4, 3e-5, 1e-5, 1e-6, 1e-7)
-_NO_LOSS: Final = 0.03  # share of regret that stopping may cost when tuned, a standard error allowed for
-_WIDTHS: Final = (0.7, 1.4, 2.0)  # of the prior, that ":prior=auto" chooses from beside 1
-_STOP_AUTO, _PRIOR_AUTO = ":stop=auto", ":prior=auto"
-
-# Policy -> the texts that tuning chooses from. The first is taken untuned.
-TUNED: Final = {
-    "uct": ["uct:c=1", "uct:c=0.25", "uct:c=0.5", "uct:c=2", "uct:c=4"],
-    "thompson": ["thompson", *(f"thompson:prior={width}" for width in (0.5, *_WIDTHS))],
-    "top-two": ["top-two", *(f"top-two:prior={width}" for width in _WIDTHS), "top-two:share=0.7"],
-    "static-rate": ["static-rate", *(f"static-rate:prior={width}" for width in _WIDTHS)],
-}
+_SCORER: Final = "scorer:"  # how the texts of policies that use a file begin
+_LOOK_SECONDS: Final = 1.0  # how often finished places are counted
 
 
 @dataclass(frozen=True)
@@ -56,6 +49,7 @@ class Campaign:
         they are. A policy that ends in ":prior=auto" has its prior tuned in the same way; one that ends in
         ":stop=auto" stops at the highest price that costs no regret on these decisions.
     wide : those of the problems that are rehearsed under `wide_budgets` too.
+    slowest : seconds of choosing a decision, where only rollouts are limited; slower choosers are left out.
     """
 
     problems: tuple[str, ...]
@@ -65,6 +59,7 @@ class Campaign:
     tuning_seeds: int = 100
     wide: tuple[str, ...] = ()
     wide_budgets: tuple[str, ...] = ()
+    slowest: float = 0.25
 
     def __post_init__(self) -> None:
         for name in self.problems:
@@ -72,23 +67,31 @@ class Campaign:
         for name in (*self.budgets, *self.wide_budgets):
             Budget.parse(name)
         for name in self.policies:
-            make_policy(_untuned(name))
+            make_policy(untuned(name))
             if name.count("=auto") > 1:
                 raise InputError(f"policy {name!r}", "must leave one option to tuning at most")
-        if not 2 <= self.seeds <= _TUNING_SEED - _FIRST_SEED:
-            raise InputError("seeds", f"must be from 2 to {_TUNING_SEED - _FIRST_SEED}", self.seeds)
+        if not 2 <= self.seeds <= TUNING_SEED - _FIRST_SEED:
+            raise InputError("seeds", f"must be from 2 to {TUNING_SEED - _FIRST_SEED}", self.seeds)
         if self.tuning_seeds == 1 or self.tuning_seeds < 0:
             raise InputError("tuning_seeds", "must be 0 or at least 2", self.tuning_seeds)
+
+    def budgets_of(self, problem: str) -> tuple[str, ...]:
+        """The budgets under which a problem is rehearsed."""
+        return (*self.budgets, *(self.wide_budgets if problem in self.wide else ()))
 
 
 @dataclass(frozen=True, eq=False)
 class Results:
-    """Cells of a campaign, the tuning of its baselines, and which policies were left out where and why."""
+    """Cells of a campaign, the tuning of its baselines, and which policies were left out where and why.
+
+    kinds : problem -> "Gaussian", "win/loss", with ", chance nodes" where its trees have them.
+    """
 
     campaign: Campaign
     cells: list[Cell] = field(default_factory=list)
     tuning: list[dict[str, Any]] = field(default_factory=list)
     left_out: list[dict[str, str]] = field(default_factory=list)
+    kinds: dict[str, str] = field(default_factory=dict)
 
 
 def run(
@@ -100,24 +103,23 @@ def run(
 ) -> Results:
     """Run what `folder` does not hold yet; a killed campaign goes on where it was.
 
-    workers : processes, each with a problem at a time. progress : called with problems done and in all.
+    workers : processes, each with a problem at a time. progress : called about once a second, with the
+    places (a problem under a budget) that are done, those of an earlier run too, and how many there are.
     Raises InputError where the folder holds a campaign with other seeds.
     """
     folder = Path(folder)
     _claim(folder, campaign)
+    parts: dict[str, Results] = {}
+    calls = [(_problem, (campaign, name, folder, os.getpid())) for name in campaign.problems]
+    with _counted(campaign, folder, progress):
+        for name, part in run_calls(calls, workers=workers):
+            parts[name] = part
     results = Results(campaign)
-    jobs = [delayed(_problem)(campaign, name, folder) for name in campaign.problems]
-    parts: Iterator[Results] = (
-        (function(*arguments) for function, arguments, _ in jobs)
-        if workers == 1
-        else Parallel(n_jobs=workers, return_as="generator", batch_size=1)(jobs)
-    )
-    for done, part in enumerate(parts, 1):
-        results.cells.extend(part.cells)
-        results.tuning.extend(row for row in part.tuning if "regret" in row)
-        results.left_out.extend(part.left_out)
-        if progress is not None:
-            progress(done, len(jobs))
+    for name in campaign.problems:
+        results.cells.extend(parts[name].cells)
+        results.tuning.extend(row for row in parts[name].tuning if "regret" in row)
+        results.left_out.extend(parts[name].left_out)
+        results.kinds.update(parts[name].kinds)
     return results
 
 
@@ -135,110 +137,110 @@ def _claim(folder: Path, campaign: Campaign) -> None:
     write_atomic(path, (json.dumps(asdict(campaign), indent=1) + "\n").encode())
 
 
-def _problem(campaign: Campaign, name: str, folder: Path) -> Results:
+def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple[str, Results]:
     """One problem under all budgets."""
     problem = Remembered(make_problem(name))
-    out = Results(campaign)
+    tree = problem.draw(TUNING_SEED).tree
+    out = Results(campaign, kinds={name: _kind(tree)})
     tuned: dict[int, dict[str, str]] = {}
-    for text in (*campaign.budgets, *(campaign.wide_budgets if name in campaign.wide else ())):
+
+    def plays(text: str) -> bool:
+        return _unreadable(campaign, text, tree) is None and _refused(make_policy(text), tree) is None
+
+    for text in campaign.budgets_of(name):
+        if os.getpid() != starter != os.getppid():
+            break  # whoever started this process is gone, and will resume or not
         budget = Budget.parse(text)
         rollouts = budget.room(0, 0.0)
         if rollouts not in tuned:
-            tuned[rollouts] = {}
-            for row in _tune(campaign, problem, rollouts, folder):
-                out.tuning.append(row)
-                tuned[rollouts][row["policy"]] = row["chosen"]
-        policies = []
-        for spec in campaign.policies:
-            text_of = tuned[rollouts].get(spec, _untuned(spec))
-            policy = _named(make_policy(text_of), spec)
-            reason = _why_not(policy, problem, budget)
-            if reason is None:
-                policies.append(policy)
-            else:
-                out.left_out.append({"problem": name, "budget": text, "policy": policy.name, "why": reason})
+            where, seeds = folder / "tuning", campaign.tuning_seeds
+            rows = tune(campaign.policies, problem, rollouts, where, seeds=seeds, plays=plays)
+            out.tuning.extend(rows)
+            tuned[rollouts] = {row["policy"]: row["chosen"] for row in rows}
+        texts = {spec: tuned[rollouts].get(spec, untuned(spec)) for spec in campaign.policies}
+        reasons = _reasons(campaign, texts, tree, budget, _place(folder, name, text))
+        out.left_out.extend(
+            {"problem": name, "budget": text, "policy": name_of(spec), "why": why}
+            for spec, why in reasons.items()
+            if why is not None
+        )
+        policies = [named(make_policy(texts[spec]), spec) for spec, why in reasons.items() if why is None]
         where, seeds = folder / "cells", campaign.seeds
         out.cells.extend(rehearse([problem], policies, [budget], where, seeds=seeds, first_seed=_FIRST_SEED))
-    return out
+        write_atomic(_place(folder, name, text).with_suffix(".done"), b"")
+    return name, out
 
 
-def _untuned(spec: str) -> str:
-    return spec.removesuffix(_STOP_AUTO).removesuffix(_PRIOR_AUTO)
+# --- who plays where -------------------------------------------------------------------------------
 
 
-def _named(policy: Policy, spec: str) -> Policy:
-    """Tuned policies bear one name wherever they stand, so that cells can be compared."""
-    if spec in TUNED or spec != _untuned(spec):
-        policy.name = name_of(spec)  # type: ignore[misc]
-    return policy
+def _reasons(
+    campaign: Campaign, texts: dict[str, str], tree: BeliefTree, budget: Budget, kept: Path
+) -> dict[str, str | None]:
+    """Policy -> why it cannot be rehearsed here, None where it can.
+
+    What was decided once is kept in a file: some reasons are times, which a resumed run measures anew.
+    """
+    decided: dict[str, str | None] = {}
+    if kept.exists():
+        try:
+            decided = json.loads(kept.read_text())
+        except ValueError:
+            raise InputError(str(kept), "must be valid JSON") from None
+    for spec, text in texts.items():
+        if spec not in decided:
+            decided[spec] = _why_not(campaign, text, tree, budget)
+    write_atomic(kept, (json.dumps(decided, indent=1) + "\n").encode())
+    return {spec: decided[spec] for spec in texts}
 
 
-def name_of(spec: str) -> str:
-    """The name under which a campaign's policy stands in its cells."""
-    if spec in TUNED:
-        return spec.replace("-", "_")
-    suffix = {_STOP_AUTO: "-stops", _PRIOR_AUTO: "-tuned"}.get(spec[len(_untuned(spec)) :], "")
-    return make_policy(_untuned(spec)).name + suffix
+def _why_not(campaign: Campaign, text: str, tree: BeliefTree, budget: Budget) -> str | None:
+    if (reason := _unreadable(campaign, text, tree)) is not None:
+        return reason
+    policy = make_policy(text)
+    if (reason := _refused(policy, tree)) is not None:
+        return reason
+    seconds = min(_one_choice(policy, tree) for _ in range(2))
+    most = campaign.slowest / max(budget.room(0, 0.0), 1) if budget.seconds is None else budget.seconds
+    return f"one choice takes {seconds * 1e3:.1f} ms" if seconds > most else None
 
 
-def _tries(campaign: Campaign, problem: Problem) -> dict[str, list[str]]:
-    """What tuning chooses from, policy by policy; the first is the one without tuning."""
-    tries = {spec: TUNED[spec] for spec in campaign.policies if spec in TUNED}
-    for spec in campaign.policies:
-        base = _untuned(spec)
-        if base != spec and _why_not(make_policy(base), problem) is None:
-            key, values = ("stop", _STOPS) if spec.endswith(_STOP_AUTO) else ("prior", _WIDTHS)
-            tries[spec] = [base, *(f"{base}:{key}={value:g}" for value in values)]
-    return tries
-
-
-def _tune(campaign: Campaign, problem: Problem, rollouts: int, folder: Path) -> list[dict[str, Any]]:
-    """The best constants of the policies at this number of rollouts, with what each gave."""
-    tries = _tries(campaign, problem)
-    if not tries or not campaign.tuning_seeds or not rollouts:
-        return [{"policy": spec, "chosen": texts[0]} for spec, texts in tries.items()]
-    policies = {text: make_policy(text) for texts in tries.values() for text in texts}
-    cells = rehearse(
-        [problem],
-        list(policies.values()),
-        [Budget(rollouts=rollouts)],
-        folder / "tuning",
-        seeds=campaign.tuning_seeds,
-        first_seed=_TUNING_SEED,
-    )
-    found = {cell.policy: cell for cell in cells}
-    rows = []
-    for spec, texts in tries.items():
-        regret = {text: float(found[policies[text].name].measured.mean()) for text in texts}
-        chosen = min(texts, key=lambda text: regret[text])
-        if spec.endswith(_STOP_AUTO):
-            on = found[policies[texts[0]].name].measured
-            lost = {text: found[policies[text].name].measured - on for text in texts[1:]}
-            kept = [
-                text
-                for text, more in lost.items()
-                if more.mean() + more.std() / np.sqrt(len(more)) <= _NO_LOSS * on.mean()
-            ]
-            chosen = (kept or texts)[0]
-        row = {"problem": problem.name, "rollouts": rollouts, "policy": spec, "chosen": chosen}
-        rows.append({**row, "regret": regret})
-    return rows
-
-
-def _why_not(policy: Policy, problem: Problem, budget: Budget | None = None) -> str | None:
-    """Why a policy cannot be rehearsed here; None where it can."""
-    tree = problem.draw(_TUNING_SEED).tree
-    suits = getattr(policy, "suits", None)
-    if suits is not None and not suits(tree):
+def _unreadable(campaign: Campaign, text: str, tree: BeliefTree) -> str | None:
+    """Why a scorer is not for these trees: it cannot read them, or others were made for them."""
+    if not text.startswith(_SCORER):
+        return None
+    scorer = _scorer_of(text)
+    if not ScorerInputs.fit(scorer, tree):
         return "the scorer does not take such trees"
+    files = [_scorer_of(untuned(spec)) for spec in campaign.policies if spec.startswith(_SCORER)]
+    if scorer.kind is RECORD and any(f.kind is not RECORD and ScorerInputs.fit(f, tree) for f in files):
+        return "reads records, and another scorer reads the plain leaf table of such trees"
+    return None
+
+
+def _options_apart(text: str) -> str:
+    """A scorer policy's text without its options."""
+    options = [part for part in text.split(":")[1:] if "=" in part]
+    return text.removesuffix("".join(f":{option}" for option in options))
+
+
+def _scorer_of(text: str) -> Scorer:
+    return _loaded(_options_apart(text))
+
+
+@lru_cache(maxsize=16)
+def _loaded(text: str) -> Scorer:
+    policy: Any = make_policy(text)
+    scorer: Scorer = policy.scorer
+    return scorer
+
+
+def _refused(policy: Policy, tree: BeliefTree) -> str | None:
     try:
-        seconds = min(_one_choice(policy, tree) for _ in range(2))
+        _one_choice(policy, tree)
     except RefusedError as e:
         return str(e)
-    if budget is None:
-        return None
-    most = _SLOWEST / max(budget.room(0, 0.0), 1) if budget.seconds is None else budget.seconds
-    return f"one choice takes {seconds * 1e3:.1f} ms" if seconds > most else None
+    return None
 
 
 def _one_choice(policy: Policy, tree: BeliefTree) -> float:
@@ -247,3 +249,49 @@ def _one_choice(policy: Policy, tree: BeliefTree) -> float:
     started = time.perf_counter()
     policy.choose(posterior, 64, rng)
     return time.perf_counter() - started
+
+
+def _kind(tree: BeliefTree) -> str:
+    kind = "win/loss" if tree.belief == "win_loss" else "Gaussian"
+    return f"{kind}, chance nodes" if tree.has_chance else kind
+
+
+# --- places ----------------------------------------------------------------------------------------
+
+
+def _place(folder: Path, problem: str, budget: str) -> Path:
+    """The file of a problem under a budget: who plays there. Beside it, `.done` once all have."""
+    key = hashlib.sha256(json.dumps([problem, budget]).encode()).hexdigest()[:12]
+    readable = "".join(c if c.isalnum() else "-" for c in f"{problem}--{budget}")
+    return folder / "places" / f"{readable[:80]}--{key}.json"
+
+
+@contextlib.contextmanager
+def _counted(campaign: Campaign, folder: Path, progress: Callable[[int, int], None] | None) -> Iterator[None]:
+    """Tells `progress` how many places are done, while others work on them."""
+    if progress is None:
+        yield
+        return
+    places = [
+        _place(folder, problem, budget).with_suffix(".done")
+        for problem in campaign.problems
+        for budget in campaign.budgets_of(problem)
+    ]
+    over = threading.Event()
+
+    def tell() -> None:
+        progress(sum(path.exists() for path in places), len(places))
+
+    def look() -> None:
+        while not over.wait(_LOOK_SECONDS):
+            tell()
+
+    tell()
+    looker = threading.Thread(target=look, daemon=True)
+    looker.start()
+    try:
+        yield
+    finally:
+        over.set()
+        looker.join()
+        tell()

@@ -16,9 +16,10 @@ import pyarrow.parquet as pq
 
 from distill import __version__
 from distill.files import write_atomic
-from distill.rehearse.campaign import Campaign, Results, name_of
+from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.loop import Budget
 from distill.rehearse.rehearsal import Cell, Compared, compare
+from distill.rehearse.tuning import name_of
 from distill.tree import Floats
 
 __all__ = ["FORMAT", "GROUPS", "aims_table", "cells_table", "summarise", "write_results"]

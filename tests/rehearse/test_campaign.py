@@ -15,11 +15,12 @@ from ladder import CLOSED_FORM
 
 from distill.cli import run as command_line
 from distill.errors import InputError
-from distill.rehearse.campaign import TUNED, Campaign, Results, name_of, run
+from distill.rehearse.campaign import Campaign, Results, run
 from distill.rehearse.loop import Budget
 from distill.rehearse.plans import plan, quick
 from distill.rehearse.rehearsal import Cell
 from distill.rehearse.results import aims_table, cells_table, summarise, write_results
+from distill.rehearse.tuning import TUNED, name_of
 from distill.report.rehearsal_page import break_even_svg, rehearsal_page
 
 FAST = str(Path(__file__).parents[2] / "models" / "cold-store-fast.onnx")

@@ -30,8 +30,10 @@ from distill.calibration import UpperBound
 from distill.converters import convert, folded, single_tree
 from distill.errors import ExportError
 from distill.feature_graph import FeatureGraph, FeatureMatrix
+from distill.feature_nodes import FEATURE_ROWS
 from distill.files import write_atomic
 from distill.onnx_nodes import IR_VERSION, ML_OPSET, OPSET, Nodes, typed
+from distill.scorer_inputs import InputKind
 from distill.tree import Floats
 
 __all__ = ["TRANSFORMS", "export_scorer", "mapped_back", "with_facts"]
@@ -90,7 +92,7 @@ def export_scorer(
     model = _assemble(feature_graph.model, converted, transform, limits, upper)
     session = _session(model)
     matrix = feature_graph.matrix(self_test_columns)
-    answers, cases = _answers(session, feature_graph.table(self_test_columns))
+    answers, cases = _answers(session, feature_graph.kind, feature_graph.table(self_test_columns))
     _check_file(estimator, transform, limits, upper, matrix, answers)
     _set_metadata(model, feature_graph, transform, limits, upper, metadata, cases)
     onnx.checker.check_model(model, full_check=True)
@@ -121,10 +123,12 @@ def _assemble(
     """Feature nodes as they are, the estimator's nodes, and the decision, as one model."""
     boosting = converted.graph.node[0].op_type == "TreeEnsemble"
     g = Nodes("s")
-    clipped = g("Max", g("Min", "features", g.single(limits[:, 1])), g.single(limits[:, 0]))
-    outside = g("ReduceL1", g("Sub", "features", clipped), g.whole(1), keepdims=0)
+    low, high = (g.single(limits[:, i : i + 1]) for i in (0, 1))
+    rows = g("Max", g("Min", FEATURE_ROWS, high), low)
+    outside = g("ReduceL1", g("Sub", FEATURE_ROWS, rows), g.whole(0), keepdims=0)
     inside = g("LessOrEqual", outside, g.single(0.0))
     g("And", inside, "valid", out="in_range")
+    clipped = g("Transpose", rows, perm=[1, 0])
     x = g("Cast", clipped, to=TensorProto.DOUBLE)
 
     renamed, t = _renamed(converted, x if boosting else clipped)
@@ -156,11 +160,24 @@ def _assemble(
         typed("pick", TensorProto.INT64, []),
         typed("worth_it", TensorProto.BOOL, []),
     ]
+    nodes = _needed(nodes, {output.name for output in outputs})
+    read = {name for node in nodes for name in node.input}
+    initializers = [tensor for tensor in initializers if tensor.name in read]
     graph = helper.make_graph(nodes, "scorer", list(features.graph.input), outputs, initializers)
     opsets = [helper.make_opsetid("", OPSET), helper.make_opsetid("ai.onnx.ml", ML_OPSET)]
     model = helper.make_model(graph, opset_imports=opsets, ir_version=IR_VERSION)
     model.producer_name = "voc-distill"
     return model
+
+
+def _needed(nodes: list[onnx.NodeProto], wanted: set[str]) -> list[onnx.NodeProto]:
+    """The nodes that some of the wanted values come from, in order."""
+    wanted, kept = set(wanted), []
+    for node in reversed(nodes):
+        if wanted.intersection(node.output):
+            wanted.update(node.input)
+            kept.append(node)
+    return kept[::-1]
 
 
 def _renamed(converted: onnx.ModelProto, x: str) -> tuple[onnx.GraphProto, str]:
@@ -251,7 +268,7 @@ def _check_file(
 
 
 def _answers(
-    session: Any, table: list[dict[str, NDArray[Any]]]
+    session: Any, kind: InputKind, table: list[dict[str, NDArray[Any]]]
 ) -> tuple[dict[str, NDArray[Any]], list[dict[str, Any]]]:
     """The file's own answers on the self-test rows, whole and tree by tree."""
     names = [o.name for o in session.get_outputs()]
@@ -263,7 +280,7 @@ def _answers(
             whole[name].append(np.atleast_1d(out[name]))
         cases.append(
             {
-                "inputs": {name: x.tolist() for name, x in feed.items()},
+                "inputs": kind.to_json(feed),
                 "outputs": {name: out[name].tolist() for name in names},
             }
         )

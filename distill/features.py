@@ -83,7 +83,7 @@ def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | Non
     g = Nodes("f")
     # Leaves as the root sees them. From the table on, values are rows, shape (1, n).
     m = g("Add", g("Mul", "gain", "mean"), "offset")
-    v = g("Max", g("Mul", "var", g("Mul", "gain", "gain")), g.double(TINY))
+    v = g("Max", g("Mul", "var", g("Mul", "gain", "gain")), g.double(TINY))  # keeps infinity, which Clip cuts
     s = g("Sqrt", v)
     noise = g("Div", "noise_var", "var", out="noise_ratio")
     action = g("GreaterOrEqual", "action", g.whole(0))
@@ -149,17 +149,17 @@ def _learned(g: Nodes, v: str, noise: str, horizon: float, k: str | None = None)
 
 def _table(g: Nodes, m: str, s: str, points: int) -> tuple[str, str, str, str]:
     """Ends of each leaf's action table, shape (1, n), and F and R at its points, shape (n, points)."""
-    row = g("Unsqueeze", "action", g.whole(1))
+    both = g("Add", "action", g.constant(np.zeros((2, 1), dtype=np.int64)))
     ends = g("Add", g("Mul", s, g.double([[-_BELOW], [_ABOVE]])), m)
-    ends = g("Transpose", ends, perm=[1, 0])
-    ends = g("ScatterND", g("Min", ends, g.double(-LARGE)), row, ends, reduction="max")
-    ends = g("Transpose", g("Gather", ends, "action"), perm=[1, 0])
+    ends = g("ScatterElements", g.at_most(ends, -LARGE), both, ends, axis=1, reduction="max")
+    ends = g("Gather", ends, "action", axis=1)
     low, high = g.split(ends, 2, axis=0)
-    z = g("Min", g("Div", g("Sub", ends, m), s), g.double(_FAR))
+    z = g.at_most(g("Div", g("Sub", ends, m), s), _FAR)
     z = g("Cast", z, to=TensorProto.FLOAT)
     t = midpoints(points)
     z = g("Gemm", z, g.single(np.stack([1 - t, t]) / np.sqrt(2)), transA=1)
-    phi = g("Add", g("Mul", g("Erf", z), g.single(_PHI_SLOPE)), g.single(0.5))
-    joint = g("ScatterND", g("Max", phi, g.single(1.0)), row, phi, reduction="mul")
+    phi = g("HardSigmoid", g("Erf", z), alpha=_PHI_SLOPE, beta=0.5)
+    row = g("Unsqueeze", "action", g.whole(1))
+    joint = g("ScatterND", g("HardSigmoid", phi, alpha=0.0, beta=1.0), row, phi, reduction="mul")
     joint = g("Gather", joint, "action")
     return low, high, joint, g("Div", joint, phi)

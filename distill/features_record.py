@@ -66,8 +66,8 @@ def build_graph(*, batch: int | None = None) -> onnx.ModelProto:
     )
     valid = g("And", g("Greater", "noise_ratio", g.double(0.0)), g("GreaterOrEqual", "slope", g.double(0.0)))
     g("And", valid, g("GreaterOrEqual", "spread", g.double(0.0)), out="valid")
-    stacked = g("Transpose", g("Concat", *columns, axis=0), perm=[1, 0])
-    return finished(g, RECORD, FEATURE_NAMES, stacked, unit, start, g("Add", k, g.double(0.5)))
+    rows = g("Concat", *columns, axis=0)
+    return finished(g, RECORD, FEATURE_NAMES, rows, unit, start, g("Add", k, g.double(0.5)))
 
 
 def _cut(g: Nodes, x: str, limit: float) -> str:

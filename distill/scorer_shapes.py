@@ -100,8 +100,7 @@ def _where(node: Node, shapes: Shapes, _: Consts) -> Shape:
 
 
 def _clip(node: Node, shapes: Shapes, _: Consts) -> Shape:
-    _arity(node, shapes, 3)
-    if shapes[1] != () or shapes[2] != ():
+    if len(shapes) not in (2, 3) or len(node.outputs) != 1 or any(s != () for s in shapes[1:]):
         raise ValueError
     return shapes[0]
 
@@ -160,9 +159,10 @@ def _split(node: Node, shapes: Shapes, _: Consts) -> Shape:
 
 def _gather(node: Node, shapes: Shapes, _: Consts) -> Shape:
     _arity(node, shapes, 2)
-    if len(shapes[1]) != 1:
+    axis = node.attributes.get("axis", 0)
+    if len(shapes[1]) != 1 or axis not in range(len(shapes[0])):
         raise ValueError
-    return (*shapes[1], *shapes[0][1:])
+    return (*shapes[0][:axis], *shapes[1], *shapes[0][axis + 1 :])
 
 
 def _scatter(node: Node, shapes: Shapes, _: Consts) -> Shape:
@@ -171,6 +171,17 @@ def _scatter(node: Node, shapes: Shapes, _: Consts) -> Shape:
     if index != (updates[0], 1) or data[1:] != updates[1:] or len(data) != 2:
         raise ValueError
     if node.attributes["reduction"] not in ("max", "mul", "add"):
+        raise ValueError
+    return data
+
+
+def _scatter_elements(node: Node, shapes: Shapes, _: Consts) -> Shape:
+    """Every number of `updates` to a place of its own row."""
+    _arity(node, shapes, 3)
+    data, index, updates = shapes
+    if not data == index == updates or len(data) != 2 or data[1] != _N or node.attributes["axis"] != 1:
+        raise ValueError
+    if node.attributes["reduction"] != "max":
         raise ValueError
     return data
 
@@ -246,12 +257,14 @@ OPERATORS: Final[dict[str, tuple[tuple[str, ...], Rule]]] = {
     "Cast": (("to",), _same),
     "Clip": ((), _clip),
     "Concat": (("axis",), _concat),
-    "Gather": ((), _gather),
+    "Gather": (("axis",), _gather),
     "Gemm": (("transA", "transB", "alpha", "beta"), _gemm),
+    "HardSigmoid": (("alpha", "beta"), _same),
     "MatMul": ((), _matmul),
     "ReduceL1": (("keepdims",), _reduce),
     "ReduceMax": (("keepdims",), _reduce),
     "Reshape": ((), _reshape),
+    "ScatterElements": (("axis", "reduction"), _scatter_elements),
     "ScatterND": (("reduction",), _scatter),
     "Split": (("axis", "num_outputs"), _split),
     "Transpose": (("perm",), _transpose),

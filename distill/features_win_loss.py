@@ -118,7 +118,7 @@ def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | Non
     columns = [z, help_, g("Div", s_k, theta), g("Div", s_k, s), ratio, *_run(g, t0, k, share, total, sign)]
     if batch is None:
         columns.append(g("Clip", g("Sub", _log(g, each), log_few), g.scalar(_LEAST_LOG), g.scalar(0.0)))
-    stacked = g("Concat", *columns, axis=1)
+    stacked = g("Transpose", g("Concat", *columns, axis=1), perm=[1, 0])
     valid = g("And", g("Greater", "alpha", g.double(0.0)), g("Greater", "beta", g.double(0.0)))
     valid = g("And", valid, g("Greater", "high", "low"))
     g("And", valid, g("GreaterOrEqual", "action", g.whole(0)), out="valid")

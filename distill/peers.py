@@ -20,11 +20,11 @@ from distill.feature_graph import FeatureGraph
 from distill.kernels import compiled
 from distill.metrics import measure
 from distill.numerics import gain, norm_cdf, norm_pdf
-from distill.scorer_inputs import LEAF_TABLE
-from distill.timing import Decision, Timing, time_calls
+from distill.scorer_inputs import LEAF_TABLE, RECORD
+from distill.timing import Decision, Timing, decisions, time_calls, tree_decisions
 from distill.tree import Floats
 
-__all__ = ["Peer", "measure_peers", "peers"]
+__all__ = ["Peer", "measure_peers", "peers", "timed_cases"]
 
 # Leaf table of one tree and the rollouts left -> a score a leaf; the largest is the pick.
 Peer = Callable[[Mapping[str, Any], float], Floats]
@@ -34,6 +34,8 @@ _SHARES: Final = _WEIGHTS / _WEIGHTS.sum()
 _SAMPLES: Final = (4, 6, 8, 12, 16, 24, 32, 48, 64)
 _TIMED: Final = 400
 _MOST_TREES: Final = 1000
+_CASES: Final = 50
+_POOLED: Final = 400
 
 
 def peers(value: Mapping[str, Any], samples: int, seed: int = 0) -> dict[str, Peer]:
@@ -128,6 +130,18 @@ def measure_peers(
         out[name] = {key: found[key] for key in kept} | {"latency": _time(peer, cases).to_json()}
     out["Monte Carlo in equal time"]["samples"] = samples
     return out
+
+
+def timed_cases(candidates: Candidates, value: Mapping[str, Any], n_leaves: int, seed: int) -> list[Decision]:
+    """Fifty decisions of `n_leaves` leaves to time a scorer of the candidates' kind and its peers on.
+
+    Leaf tables are pooled from the rows; records from the trees themselves, of which the first 400 serve.
+    """
+    if candidates.kind is not RECORD:
+        pool = {**candidates.columns, "tree": candidates.tree}
+        return decisions(pool, n_leaves, _CASES, seed, kind=candidates.kind)
+    few = candidates.of_trees(np.arange(len(candidates.groups.sizes)) < _POOLED)
+    return tree_decisions(list(few.trees()), n_leaves, _CASES, seed, horizon=float(value["horizon"]))
 
 
 def _time(peer: Peer, cases: list[Decision]) -> Timing:

@@ -16,6 +16,7 @@ __all__ = [
     "FRONT_FORMAT",
     "SHEET_FORMAT",
     "accuracy_table",
+    "backup_text",
     "bound_text",
     "front_table",
     "shift_table",
@@ -68,6 +69,7 @@ def sheet_page(sheet: Mapping[str, Any]) -> str:
             f"| exact {name} | {_us(t)} | {decision['times_faster'][name]:,.0f} |"
             for name, t in decision["exact"].items()
         ),
+        *backup_text(decision),
         "",
         "## The scorers that were trained",
         "",
@@ -82,6 +84,23 @@ def sheet_page(sheet: Mapping[str, Any]) -> str:
         f"- features: {', '.join(sheet['features'])}",
     ]
     return "\n".join(lines) + "\n"
+
+
+def backup_text(decision: Mapping[str, Any]) -> list[str]:
+    """What the backup of a scorer of records costs beside it; empty for leaf tables."""
+    if not decision.get("backup"):
+        return []
+    faster = decision["times_faster_with_backup"]
+    together = ", ".join(f"exact {name} {times:,.1f} times" for name, times in faster.items())
+    return [
+        "",
+        "| backup, which fills the scorer's rows | p50, us | p99, us |",
+        "| --- | --- | --- |",
+        *(f"| {name} | {_us(t)} |" for name, t in decision["backup"].items()),
+        "",
+        "Median times over those of the scorer and, after one rollout, the backup together:",
+        f"{together or 'not measured'}.",
+    ]
 
 
 def accuracy_table(rows: Mapping[str, Mapping[str, Any]]) -> list[str]:

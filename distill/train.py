@@ -31,19 +31,20 @@ from distill.feature_graph import FeatureGraph, FeatureMatrix
 from distill.files import sha256_of, write_atomic
 from distill.learners import BoostingLearner, DenseLearner, LinearLearner
 from distill.metrics import Groups
-from distill.peers import measure_peers
+from distill.peers import measure_peers, timed_cases
 from distill.runtime import Scorer
 from distill.scorer_inputs import RECORD
 from distill.sheet import FRONT_FILE, FRONT_FORMAT
 from distill.slices import tree_facts
 from distill.terminal import bar
-from distill.timing import Decision, Timing, decisions, time_exact, time_scorer
+from distill.timing import Decision, Timing, time_backup, time_exact, time_scorer
 from distill.tree import Floats
 from distill.validate import baselines, examine, sample_pairs
 
 __all__ = ["RECIPES", "Recipe", "row_weights", "train", "what_pays"]
 
 _LEAVES = 64  # of the decision whose latency the sheet states
+_EXACT_SECONDS = 30.0  # for the time of one exact method: those of correlated leaves take seconds a call
 _SELF_TEST_TREES = 8
 _LEAST_WEIGHT = 1e-3
 _RANGE_MARGIN = 0.05
@@ -129,8 +130,7 @@ def train(
     with bar("features", 2 + 2 * len(chosen), "steps", shown=progress) as advance:
         graph = FeatureGraph.of_value(about["value"], data.kind)
         fit, choose, held_out = (graph.matrix({**c.columns, "tree": c.tree}) for c in vars(split).values())
-        pool = {**split.held_out.columns, "tree": split.held_out.tree}
-        cases = decisions(pool, _LEAVES, 50, seed, kind=data.kind)
+        cases = timed_cases(split.held_out, about["value"], _LEAVES, seed)
         facts = tree_facts(split.held_out)
         scorers: list[dict[str, Any]] = []
         for recipe in chosen:
@@ -143,7 +143,8 @@ def train(
         beside = baselines(split.held_out, held_out.first_order, n_boot=n_boot, seed=seed)
         equal = min(e["latency"]["p50_us"] for e in scorers)
         rivals = measure_peers(split.held_out, cases, about["value"], equal, n_boot=n_boot, seed=seed)
-        exact = _exact_times(cases, about["value"]) if data.kind is not RECORD else {}
+        exact = _exact_times(cases, about["value"])
+        backup = time_backup(cases, horizon=float(about["value"]["horizon"])) if data.kind is RECORD else {}
         advance(1)
     _mark_front(scorers)
     exact_times = {name: t.to_json() for name, t in exact.items()}
@@ -160,6 +161,7 @@ def train(
         "leaves": _LEAVES,
         "peers": rivals,
         "exact": exact_times,
+        "backup": {name: t.to_json() for name, t in backup.items()},
         "break_even": what_pays(on_front, rivals, exact_times),
         "features": list(graph.names),
         "made_with": _made_with(),
@@ -306,9 +308,9 @@ def _exact_times(cases: Sequence[Decision], value: Mapping[str, Any]) -> dict[st
     kind = {math.inf: "dynamic", 0.0: "static"}.get(h, f"horizon {h:g}")
     one = batch or 1
     of = "" if one == 1 else f" of {one} rollouts"
-    out = {f"{kind} VOC{of}": time_exact(cases, horizon=h, batch=one)}
+    out = {f"{kind} VOC{of}": time_exact(cases, horizon=h, batch=one, seconds=_EXACT_SECONDS)}
     if batch is None:
-        out[f"{kind} rate"] = time_exact(cases, horizon=h)
+        out[f"{kind} rate"] = time_exact(cases, horizon=h, seconds=_EXACT_SECONDS)
     return out
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import math
 from pathlib import Path
 
@@ -16,11 +17,11 @@ from distill.errors import InputError, ScorerFileError
 from distill.fallback import closed_form_bounds, closed_form_values
 from distill.family import draw, load_family
 from distill.generate import generate
+from distill.peers import timed_cases
 from distill.query import Query
 from distill.runtime import Scorer
 from distill.scorer_inputs import KINDS, LEAF_TABLE, RECORD, WIN_LOSS_TABLE, kind_of
 from distill.ship import ship
-from distill.timing import decisions
 from distill.train import train
 from distill.tree import leaf_table
 from distill.validate import validate
@@ -128,12 +129,31 @@ def test_a_file_with_another_kind_in_its_metadata_is_refused(shipped):
 
 def test_timed_decisions_have_the_columns_of_their_kind(shipped):
     _, data, path = shipped
-    rows = Candidates.read(data)[0]
-    pool = {**rows.columns, "tree": rows.tree}
+    rows, about = Candidates.read(data)
     scorer = Scorer.load(path, strict=True)
-    for case in decisions(pool, 64, 3, 0, kind=rows.kind):
+    for case in timed_cases(rows, about["value"], 64, 0)[:3]:
         assert len(scorer.score(**case.columns, remaining=case.remaining).voc) == 64
-        assert (case.tree is None) == (rows.kind is RECORD)
+        assert case.tree.n_leaves == 64
+
+
+def test_the_sheet_states_scorer_backup_and_exact_side_by_side(shipped):
+    name, _, path = shipped
+    decision = json.loads(path.with_suffix(".json").read_text())["decision"]
+    assert set(decision["exact"]) == {"dynamic VOC", "dynamic rate"}
+    for key, times in decision["times_faster"].items():
+        assert times == decision["exact"][key]["p50_us"] / decision["scorer"]["p50_us"] > 1
+    page = path.with_suffix(".md").read_text()
+    if name == "on-time":
+        assert "backup" not in decision
+        assert "backup" not in page
+        return
+    assert set(decision["backup"]) == {"one path", "after one rollout", "whole tree"}
+    after = decision["backup"]["after one rollout"]["p50_us"]
+    for key, times in decision["times_faster_with_backup"].items():
+        both = decision["scorer"]["p50_us"] + after
+        assert times == decision["exact"][key]["p50_us"] / both < decision["times_faster"][key]
+    assert "| one path |" in page
+    assert "| exact dynamic rate |" in page
 
 
 def test_another_kind_of_dataset_is_no_ground_for_validation(shipped, tmp_path):

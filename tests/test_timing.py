@@ -2,17 +2,25 @@
 
 from __future__ import annotations
 
+from pathlib import Path
+
 import numpy as np
 import pytest
+from ladder import CLOSED_FORM
 from leaf_tables import rows
 
 from distill import timing
+from distill.allocation import Search
+from distill.backup import backup_of
 from distill.errors import InputError
+from distill.family import draw, load_family
 from distill.record import from_record, to_record
 from distill.runtime import Scorer
-from distill.timing import decisions, time_exact, time_scorer
+from distill.scorer_inputs import RECORD
+from distill.timing import decisions, time_backup, time_exact, time_scorer, tree_decisions
 from distill.tree import leaf_table
 
+FAMILIES = Path(__file__).parents[1] / "datasets" / "families"
 TABLE = rows(np.random.default_rng(0), 30)
 
 
@@ -79,3 +87,51 @@ def test_scorer_and_exact_methods_are_timed_on_the_same_cases() -> None:
 def test_no_rows_make_no_decision() -> None:
     with pytest.raises(InputError, match="tree"):
         decisions({name: x[:0] for name, x in TABLE.items()}, 4, 1, seed=0)
+
+
+def test_rows_of_leaf_tables_are_pooled_as_rows_and_records_as_trees() -> None:
+    with pytest.raises(InputError, match="kind: must be a leaf table"):
+        decisions(TABLE, 4, 1, seed=0, kind=RECORD)
+
+
+@pytest.mark.parametrize("name", ["crossing-traffic", "on-time", "shared-aisles"])
+def test_records_are_timed_on_the_trees_that_their_rows_come_from(name: str) -> None:
+    family = load_family(FAMILIES / f"{name}.toml")
+    cases = tree_decisions([draw(family, 1, i) for i in range(8)], 12, 3, 0, horizon=0.0)
+    assert len({id(case) for case in cases}) == 3
+    for case in cases:
+        assert case.tree.n_leaves == 12
+        expected = backup_of(case.tree, 0.0).rows()
+        assert all(np.array_equal(expected[key], x) for key, x in case.columns.items())
+    found = time_backup(cases, horizon=0.0, calls=12)
+    path = "all beliefs" if name == "shared-aisles" else "one path"
+    assert list(found) == [path, "after one rollout", "whole tree"]
+    assert found[path].p50 < found["after one rollout"].p50 < 2 * found["whole tree"].p50
+    exact = time_exact(cases, horizon=0.0, calls=4)
+    assert exact.calls == 4
+    assert 0 < exact.p50 <= exact.p99
+
+
+def test_a_belief_after_one_rollout_is_that_of_the_recorder() -> None:
+    family = load_family(FAMILIES / "on-time.toml")
+    coins = draw(family, 1, 0)
+    assert timing._after_one(coins, 1) == {"alpha": coins.alpha[1] + 1, "beta": coins.beta[1]}
+    normal = draw(load_family(FAMILIES / "crossing-traffic.toml"), 1, 0)
+    search = Search(normal)
+    search.observe(2, float(normal.mean[2]))
+    after = search.tree()
+    got = timing._after_one(normal, 2)
+    assert got["var"] == pytest.approx(after.var[2], rel=CLOSED_FORM)
+    assert got["mean"] == pytest.approx(after.mean[2], rel=CLOSED_FORM)
+
+
+def test_a_slow_method_is_called_three_times_at_least_and_no_longer_than_allowed(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    second = 10**9
+    ticks = iter(range(0, 10**13, second))
+    monkeypatch.setattr(timing.time, "perf_counter_ns", lambda: next(ticks))
+    cases = decisions(TABLE, 4, 3, seed=0)
+    assert timing._timed(lambda _: None, cases, 20, warm_up=1, seconds=0.5).calls == 3
+    assert timing._timed(lambda _: None, cases, 20, warm_up=1, seconds=6.5).calls == 7
+    assert timing._timed(lambda _: None, cases, 5, warm_up=1).calls == 5

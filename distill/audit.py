@@ -27,7 +27,7 @@ from distill.labelling import Asked
 from distill.metrics import picks
 from distill.recorded import label
 from distill.runtime import Scorer
-from distill.scorer_inputs import LEAF_TABLE
+from distill.scorer_inputs import LEAF_TABLE, VARIES
 from distill.sheet import SHEET_FORMAT
 from distill.traces import BadLines, read_many, write_trees
 from distill.tree import BeliefTree, Floats
@@ -177,7 +177,8 @@ def _read_sheet(scorer: Path) -> dict[str, Any]:
 
 def _asked(value: Mapping[str, Any]) -> Asked:
     batch = value["batch"]
-    return Asked(horizon=float(value["horizon"]), batch=None if batch is None else int(batch))
+    horizon = None if value["horizon"] == VARIES else float(value["horizon"])
+    return Asked(horizon=horizon, batch=None if batch is None else int(batch))
 
 
 def sample_trees(

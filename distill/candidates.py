@@ -19,7 +19,7 @@ from distill.backup import backup_of
 from distill.errors import InputError
 from distill.files import sha256_of
 from distill.metrics import Groups
-from distill.scorer_inputs import LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
+from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE, RECORD, VARIES, WIN_LOSS_TABLE, InputKind
 from distill.shards import MANIFEST, read_candidates, read_manifest, read_trees
 from distill.tree import BeliefTree, Floats
 
@@ -53,12 +53,15 @@ class Candidates:
     folder: Path | None = None
 
     @classmethod
-    def read(cls, dataset: str | os.PathLike[str]) -> tuple[Candidates, dict[str, Any]]:
+    def read(
+        cls, dataset: str | os.PathLike[str], *, any_horizon: bool = False
+    ) -> tuple[Candidates, dict[str, Any]]:
         """The candidates of a dataset folder, and what they are: `value` asked for, and `data` source.
 
         Independent leaves of one belief under decision nodes make leaf tables, other trees records, which
-        a backup at the value's horizon fills. Raises InputError where values of more than one kind are mixed
-        or no `remaining` is given.
+        a backup at the value's horizon fills. Gaussian leaf tables may have a horizon each: then it is a
+        column, and in the value it "varies"; with any_horizon even where it is one for all. Raises InputError
+        where other values of more than one kind are mixed or no `remaining` is given.
         """
         folder = Path(dataset)
         manifest = read_manifest(folder)
@@ -67,15 +70,20 @@ class Candidates:
             raise InputError(str(folder), "must hold at least one labelled tree")
         if "remaining" not in rows or np.isnan(rows["remaining"]).any():
             raise InputError(f"{folder}: remaining", "must be given for every tree")
+        kind, h = _kind_of(rows), rows["horizon"]
+        if kind is LEAF_TABLE and (any_horizon or np.any(h != h[0])):
+            kind = ANY_HORIZON
         batch = rows.get("batch", np.array([np.nan]))
-        for name, column in (("horizon", rows["horizon"]), ("batch", batch)):
-            kinds = np.unique(column)
-            if len(kinds) > 1:
-                raise InputError(f"{folder}: {name}", "must be one for the whole dataset", kinds[:3].tolist())
-        h, is_rate = float(rows["horizon"][0]), bool(np.isnan(batch[0]))
+        for name, column in (("horizon", h), ("batch", batch)):
+            different = np.unique(column)
+            if len(different) > 1 and not (name == "horizon" and kind.has_horizon):
+                raise InputError(
+                    f"{folder}: {name}", "must be one for the whole dataset", different[:3].tolist()
+                )
+        is_rate = bool(np.isnan(batch[0]))
         about: dict[str, Any] = {
             "value": {
-                "horizon": "inf" if math.isinf(h) else h,
+                "horizon": VARIES if kind.has_horizon else "inf" if math.isinf(h[0]) else float(h[0]),
                 "batch": None if is_rate else int(batch[0]),
             },
             "data": {
@@ -89,9 +97,8 @@ class Candidates:
                 "aside": manifest["totals"]["aside"],
             },
         }
-        kind = _kind_of(rows)
         if kind is RECORD:
-            columns = {**_records(folder, rows["tree"], h), "remaining": rows["remaining"]}
+            columns = {**_records(folder, rows["tree"], float(h[0])), "remaining": rows["remaining"]}
         else:
             columns = {name: rows[name] for name in kind.inputs}
             columns["action"] = columns["action"].astype(np.int64)

@@ -10,8 +10,8 @@ The vectors are one JSON object, made by `distill.conformance_vectors`:
              first, then a leaf's new belief (`leaf`, and `mean` and `var` or `alpha` and `beta`) or for
              correlated trees `mean` and `cov` of all; and `answer`: value and value_var (per root action),
              mean and var (per node, null where none is kept), rows (record column -> per leaf)
-    scorers  file, beside the vectors, and its sha256; calls, each with `inputs` and `answer`: voc, voc_high,
-             batch, in_range, pick, worth_it
+    scorers  file, beside the vectors, and its sha256; calls, each with `inputs`, an infinite horizon as the
+             text "inf", and `answer`: voc, voc_high, batch, in_range, pick, worth_it
 
 A port answers with the same object, its own numbers in place of each `answer`. They agree where values are
 within 1e-6 of the tree's scale and variances within 1e-6 of its square; unit-free columns within 1e-4 of
@@ -87,7 +87,8 @@ def answered(vectors: Mapping[str, Any], folder: str | os.PathLike[str]) -> dict
     for entry in out["scorers"]:
         scorer = Scorer.load(Path(folder) / entry["file"], strict=True, sha256=entry["sha256"])
         for call in entry["calls"]:
-            inputs: dict[str, Any] = {name: np.array(x) for name, x in call["inputs"].items()}
+            assert scorer.kind is not None
+            inputs: dict[str, Any] = scorer.kind.from_json(call["inputs"])
             got = scorer.score(**inputs)
             call["answer"] = {
                 name: x.tolist() if isinstance(x, np.ndarray) else x for name, x in got._asdict().items()

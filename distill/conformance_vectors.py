@@ -22,7 +22,7 @@ from distill import schema
 from distill.beliefs import dense_gaussian_update
 from distill.candidates import Candidates
 from distill.conformance import FORMAT, answered
-from distill.family import draw, load_family
+from distill.family import draw, load_family, parse_family
 from distill.files import write_atomic
 from distill.generate import generate
 from distill.record import to_record
@@ -37,9 +37,11 @@ NAME: Final = "vectors.json"
 _SEED: Final = 40  # any; fixed
 _SCORERS: Final = {
     "leaf-table.onnx": "cold-store",
+    "any-horizon.onnx": "cold-store",
     "win-loss.onnx": "on-time",
     "record.onnx": "crossing-traffic",
 }
+_HORIZONS: Final = "horizon = { choice = [0, 4, inf] }"  # budget of the family of any-horizon.onnx
 _TREES: Final = 100
 _CALLS: Final = 3
 
@@ -145,18 +147,26 @@ def _family_cases() -> Iterator[dict[str, Any]]:
                 yield _case(f"{name} {index - 1}", tree, math.inf if found != 2 else 5.0)
 
 
-def _scorer(path: Path, family: str) -> dict[str, Any]:
+def _scorer(path: Path, name: str) -> dict[str, Any]:
+    family = load_family(family_path(name))
+    if path.name == "any-horizon.onnx":
+        family = parse_family(family.text.replace("[budget]", f"[budget]\n{_HORIZONS}").encode())
     with tempfile.TemporaryDirectory() as work:
         data, trained = Path(work) / "data", Path(work) / "trained"
-        generate(load_family(family_path(family)), data, trees=_TREES, seed=_SEED)
+        generate(family, data, trees=_TREES, seed=_SEED)
         train(data, trained, seed=_SEED, recipes=["linear"], n_boot=10)
         ship(trained, Path(work) / path.name)
         write_atomic(path, (Path(work) / path.name).read_bytes())
         rows = Candidates.read(data)[0]
+    trees = list(zip(rows.groups.starts, rows.groups.sizes, strict=True))
+    if rows.kind.has_horizon:  # one of each
+        first = np.unique(rows.columns["horizon"][rows.groups.starts], return_index=True)[1]
+        trees = [trees[i] for i in first]
     calls = []
-    for a, n in list(zip(rows.groups.starts, rows.groups.sizes, strict=True))[:_CALLS]:
-        part = {name: x[a : a + n].tolist() for name, x in rows.columns.items() if name != "remaining"}
-        calls.append({"inputs": {**part, "remaining": float(rows.columns["remaining"][a])}})
+    for a, n in trees[:_CALLS]:
+        call = {name: x[a : a + n] for name, x in rows.columns.items()}
+        call |= {name: call[name][0] for name in rows.kind.scalars}
+        calls.append({"inputs": rows.kind.to_json(call)})
     return {"file": path.name, "sha256": hashlib.sha256(path.read_bytes()).hexdigest(), "calls": calls}
 
 

@@ -20,7 +20,7 @@ from distill.family import Family, draw, load_family
 from distill.feature_graph import FeatureGraph
 from distill.recorded import refused, unlabelled
 from distill.sample_data import family_path
-from distill.scorer_inputs import RECORD, InputKind
+from distill.scorer_inputs import RECORD, VARIES, InputKind
 from distill.tree import BeliefTree, Floats
 from distill.tree_columns import COLUMNS, tree_columns
 
@@ -90,7 +90,8 @@ def drift(
     trained: dict[str, Floats] = {}
     drawn = reference.trees if reference is not None else []
     if drawn:
-        rows = unlabelled(drawn, kind, float(value["horizon"]))
+        h = value["horizon"]
+        rows = unlabelled(drawn, kind, None if h == VARIES else float(h))
         trained = _columns(drawn, rows, graph)
     chance = _ONE_PERCENT * math.sqrt(1 / decisions + 1 / max(len(drawn), 1))
     ranges = facts.get("ranges", {})

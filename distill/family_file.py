@@ -6,6 +6,7 @@ fields), or a table with one of
     log_uniform = [a, b]         0 < a <= b
     normal = [mean, sd]          for rewards and means only
     choice = [x, y, ...]         optionally with weights = [..]
+Infinity, in TOML inf, stands for the dynamic value: budget.horizon may be inf, or have it among its choices.
 `FIELDS` lists all of them with bounds and defaults; datasets/README.md explains them by example.
 """
 
@@ -89,6 +90,7 @@ class _Field:
     whole: bool = False
     normal: bool = False  # a normal distribution is allowed: the bounds hold for its mean and sd
     scalar: bool = False  # a plain number, not a distribution
+    infinite: bool = False  # infinity may stand alone or among choices, above the bounds
 
 
 # The bounds keep every product and square of fields far inside double precision's range.
@@ -127,7 +129,7 @@ _COMMON: Final = {
         "rollouts": _Field(None, 1, 1e6, whole=True),
         "used": _Field(None, 0, 1),
         "fresh": _Field(0, 0, 1, scalar=True),
-        "horizon": _Field(None, 0, 1e9),
+        "horizon": _Field(None, 0, 1e9, infinite=True),
     },
     "search": _SEARCH,
 }
@@ -283,7 +285,8 @@ def _across(fields: dict[str, Distribution]) -> None:
 
 def _distribution(value: object, place: str, rule: _Field) -> Distribution:
     if rule.scalar or not isinstance(value, list | dict):
-        out = Distribution("choice", (_number(value, place, rule.whole),), rule.whole, (1.0,))
+        one = _number(value, place, rule.whole, rule.infinite)
+        out = Distribution("choice", (one,), rule.whole, (1.0,))
     elif isinstance(value, list):
         out = _pair("uniform", value, place, rule)
     else:
@@ -300,8 +303,10 @@ def _distribution(value: object, place: str, rule: _Field) -> Distribution:
     bounds = f"at least {rule.low:g} and at most {rule.high:g}"
     if out.kind == "normal" and not rule.normal:
         raise InputError(place, f"must not be normal: it must be {bounds}", list(out.args))
+    if rule.infinite:
+        bounds += ", or infinite"
     for x in out.args:
-        if not rule.low <= x <= rule.high:
+        if not rule.low <= x <= rule.high and not (rule.infinite and x == math.inf):
             raise InputError(place, f"must be {bounds}", x)
     return out
 
@@ -324,7 +329,9 @@ def _choice(value: dict[str, Any], place: str, rule: _Field) -> Distribution:
     items = value["choice"]
     if not isinstance(items, list) or not items:
         raise InputError(f"{place}.choice", "must be a list of numbers", items)
-    numbers = tuple(_number(x, f"{place}.choice[{i}]", rule.whole) for i, x in enumerate(items))
+    numbers = tuple(
+        _number(x, f"{place}.choice[{i}]", rule.whole, rule.infinite) for i, x in enumerate(items)
+    )
     weights = value.get("weights", [1] * len(items))
     if not isinstance(weights, list) or len(weights) != len(items):
         raise InputError(f"{place}.weights", f"must be {len(items)} numbers, one a choice", weights)
@@ -337,14 +344,14 @@ def _choice(value: dict[str, Any], place: str, rule: _Field) -> Distribution:
     return Distribution("choice", numbers, rule.whole, tuple(np.cumsum(share).tolist()))
 
 
-def _number(x: object, place: str, whole: bool) -> float:
+def _number(x: object, place: str, whole: bool, infinite: bool = False) -> float:
     if type(x) not in (int, float):
         raise InputError(place, "must be a number", x)
     try:
         f = float(x)  # type: ignore[arg-type]
     except OverflowError:
         f = math.inf
-    if not math.isfinite(f):
+    if not math.isfinite(f) and not (infinite and x == math.inf):
         raise InputError(place, "must be finite", x)
     if whole and f != int(f):
         raise InputError(place, "must be a whole number", x)

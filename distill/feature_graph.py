@@ -12,10 +12,10 @@ import onnx
 import onnxruntime as ort
 from numpy.typing import NDArray
 
-from distill import features, features_record, features_win_loss
+from distill import features, features_any_horizon, features_record, features_win_loss
 from distill.errors import InputError
 from distill.feature_nodes import FeatureMatrix
-from distill.scorer_inputs import KINDS, LEAF_TABLE, RECORD, InputKind
+from distill.scorer_inputs import ANY_HORIZON, KINDS, LEAF_TABLE, RECORD, InputKind
 
 __all__ = ["FeatureGraph", "FeatureMatrix"]
 
@@ -42,17 +42,20 @@ class FeatureGraph:
     @classmethod
     def of_value(cls, value: Mapping[str, Any], kind: InputKind = LEAF_TABLE) -> FeatureGraph:
         """The graph for a dataset's `value`: its horizon, and its batch or None for the rate."""
-        horizon, batch = float(value["horizon"]), value["batch"]
+        batch = value["batch"]
+        if kind is ANY_HORIZON:
+            return cls(features_any_horizon.build_graph(batch=batch))
         if kind is RECORD:
             return cls(features_record.build_graph(batch=batch))
+        horizon = float(value["horizon"])
         build = features.build_graph if kind is LEAF_TABLE else features_win_loss.build_graph
         return cls(build(horizon=horizon, batch=batch))
 
     def matrix(self, columns: Mapping[str, Any]) -> FeatureMatrix:
         """Features of every row, tree by tree, exactly as a scorer meets them.
 
-        columns : the inputs of its kind, each of length n; `remaining` may be a scalar. `tree` (whole
-        numbers, equal ones side by side) says which rows belong together; without it all do.
+        columns : the inputs of its kind, each of length n; those of `kind.scalars` may be scalars. `tree`
+        (whole numbers, equal ones side by side) says which rows belong together; without it all do.
         Raises InputError for a missing column, unequal lengths or a split tree.
         """
         names = ["features", "unit", "first_order", "batch"]
@@ -72,15 +75,16 @@ class FeatureGraph:
             dtype = np.int64 if name == "action" else np.float64
             table[name] = np.ascontiguousarray(columns[name], dtype=dtype)
         n = table[self.kind.floats[0]].size
-        if table["remaining"].size == 1:
-            table["remaining"] = np.full(n, table["remaining"].item())
+        for name in self.kind.scalars:
+            if table[name].size == 1:
+                table[name] = np.full(n, table[name].item())
         for name, column in table.items():
             if column.shape != (n,):
                 raise InputError(name, f"must have {n} rows, as {self.kind.floats[0]!r}", column.shape)
         feeds = []
         for a, b in pairwise(_tree_starts(columns.get("tree"), n)):
             feed = {name: column[a:b] for name, column in table.items()}
-            feed["remaining"] = feed["remaining"][:1].reshape(())
+            feed |= {name: feed[name][:1].reshape(()) for name in self.kind.scalars}
             feeds.append(feed)
         return feeds
 

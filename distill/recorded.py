@@ -5,6 +5,7 @@ Trees that its input cannot hold, and those that no exact method prices, go asid
 
 from __future__ import annotations
 
+import math
 from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
@@ -62,29 +63,33 @@ def refused(tree: BeliefTree, kind: InputKind) -> str | None:
     return None
 
 
-def rows_of(tree: BeliefTree, kind: InputKind, horizon: float) -> Row:
-    """The columns of one tree as a scorer of `kind` takes them, each of shape (n_leaves,).
+def rows_of(tree: BeliefTree, kind: InputKind, horizon: float | None) -> Row:
+    """The inputs of one tree as a scorer of `kind` takes them, each of shape (n_leaves,).
 
-    horizon : of the scorer's value, at which a backup fills records. A tree without `remaining` has 0 left.
+    horizon : of the scorer's value, at which a backup fills records; None takes the tree's own, infinite
+    where it states none. A tree without `remaining` has 0 left.
     Raises RefusedError where the input cannot hold the tree.
     """
+    h = horizon if horizon is not None else math.inf if tree.horizon is None else tree.horizon
     why = refused(tree, kind)
     if why is not None:
         raise RefusedError(why)
     if kind is RECORD:
-        columns = backup_of(tree, horizon).rows()
+        columns = backup_of(tree, h).rows()
     else:
         table = leaf_table(tree)
         columns = {name: getattr(table, name) for name in kind.columns}
-    return {**columns, "remaining": np.full(tree.n_leaves, float(tree.remaining or 0))}
+    scalars = {"remaining": float(tree.remaining or 0), "horizon": h}
+    return {**columns, **{name: np.full(tree.n_leaves, scalars[name]) for name in kind.scalars}}
 
 
 def label(trees: Sequence[BeliefTree], kind: InputKind, asked: Asked, *, progress: bool = False) -> Labels:
     """Exact labels of what a scorer of `kind` is asked, tree by tree.
 
-    asked : with a horizon; every tree brings its own `remaining`. Raises InputError where no tree is left.
+    asked : with a horizon, or for scorers of any horizon without; every tree brings its own `remaining`.
+    Raises InputError where no tree is left.
     """
-    if asked.horizon is None:
+    if asked.horizon is None and not kind.has_horizon:
         raise InputError("horizon", "must be given: it is one for a scorer")
     aside: Counter[str] = Counter()
     queries: dict[Query, list[int]] = {}
@@ -118,7 +123,7 @@ def label(trees: Sequence[BeliefTree], kind: InputKind, asked: Asked, *, progres
     return Labels(joined, kept, aside)
 
 
-def unlabelled(trees: Sequence[BeliefTree], kind: InputKind, horizon: float) -> Candidates:
+def unlabelled(trees: Sequence[BeliefTree], kind: InputKind, horizon: float | None) -> Candidates:
     """Rows of trees that the input holds, with labels of 0: for what depends on the trees alone."""
     none = [np.zeros(t.n_leaves) for t in trees]
     blank = [Priced(x, x.astype(np.int64), x, x, "") for x in none]

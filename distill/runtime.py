@@ -4,11 +4,12 @@
     leaf = scorer.pick(mean=..., var=..., noise_var=..., gain=..., offset=..., action=..., cost=...,
                        remaining=100)
 
-These are the columns of a leaf table; files for win/loss leaves or for records take others, see
-`distill.scorer_inputs`. A call copies the arrays into buffers that onnxruntime reads in place, and runs on
-the calling thread; threads may share a scorer, each has buffers of its own. Where the file has no answer -
-a leaf unlike those of training, invalid values, a deadline that has passed, a file that was refused - the
-closed-form static rate answers instead (for records the first-order rate), and is counted.
+These are the columns of a leaf table; files for win/loss leaves or for records take others, and files for
+any horizon also `horizon`, see `distill.scorer_inputs`. A call copies the arrays into buffers that
+onnxruntime reads in place, and runs on the calling thread; threads may share a scorer, each has buffers of
+its own. Where the file has no answer - a leaf unlike those of training, invalid values, a deadline that has
+passed, a file that was refused - the closed-form static rate answers instead (for records the first-order
+rate), and is counted.
 """
 
 from __future__ import annotations
@@ -169,10 +170,12 @@ class Scorer:
         and costs cost_i. action holds whole numbers from 0 to n - 1.
         Win/loss leaf table: alpha, beta, low, high in place of mean and variances, X_i = low_i +
         (high_i - low_i) p_i, p_i ~ Beta(alpha_i, beta_i).
+        Leaf table, any horizon: a leaf table's, and horizon, the rollouts that each leaf still receives after
+        the root action is fixed, from 0 (static value) to infinity (dynamic value); the closed form takes 0.
         Record: what `distill.backup` gives of each leaf of any tree, `schema.RECORD_UNITS`.
 
-        remaining : rollouts left. tree : (n,), the rows of a tree
-        side by side; remaining may then be an array of length n, and each tree is scored as if alone.
+        remaining : rollouts left. tree : (n,), the rows of a tree side by side; remaining and horizon may
+        then be arrays of length n, and each tree is scored as if alone.
         deadline : a time of time.perf_counter(); once it has passed, the closed form answers.
         Raises InputError for arrays that form no leaf table (shapes, kinds of numbers); for invalid
         values only if `strict`, else they are flagged and the closed form scores the other rows.
@@ -205,9 +208,9 @@ class Scorer:
         kind = self.kind or kind_of(columns)
         if kind is None:
             raise InputError("columns", f"must be those of a {' or a '.join(KINDS)}", ", ".join(columns))
-        if len(columns) != len(kind.columns):
+        if len(columns) != len(kind.keywords):
             for name in columns:
-                if name not in kind.columns:
+                if name not in kind.keywords:
                     raise InputError(name, f"is no column of a {kind.name}")
         return kind
 
@@ -218,7 +221,7 @@ class Scorer:
         try:
             floats = kind.take(columns)
             buffers = self._local.kept[kind.name][len(floats[0])]
-            buffers.fill(floats, columns["action"] if kind.has_action else None, remaining)
+            buffers.fill(floats, columns, remaining)
         except (AttributeError, KeyError, OverflowError, TypeError, ValueError):
             buffers = self._fill_with_care(kind, columns, remaining)
         self.counters.decisions += 1
@@ -247,15 +250,17 @@ class Scorer:
         for name, x in arrays.items():
             if x.shape != (n,):
                 raise InputError(name, f"must have shape ({n},), as {kind.floats[0]!r}", x.shape)
-        left = number_array("remaining", remaining, "f")
-        if left.size != 1:
-            raise InputError("remaining", "must be one number", left.shape)
+        scalars = {}
+        for name, x in _scalars(kind, columns, remaining).items():
+            if x.size != 1:
+                raise InputError(name, "must be one number", x.shape)
+            scalars[name] = float(x.item())
         kept = self._local.kept[kind.name]
         if n not in kept:
             if len(kept) >= _KEPT_SIZES:
                 del kept[next(iter(kept))]
             kept[n] = LeafBuffers(n, kind, self._session)
-        kept[n].fill_with_care(arrays, left.item())
+        kept[n].fill_with_care(arrays, scalars)
         return kept[n]
 
     def _mend(self, buffers: LeafBuffers) -> Scores:
@@ -301,9 +306,11 @@ class Scorer:
         arrays = _arrays(kind, columns)
         labels = number_array("tree", tree, "i")
         n = arrays[kind.floats[0]].size
-        left = number_array("remaining", remaining, "f")
-        left = np.full(n, left.item()) if left.size == 1 else left
-        for name, x in {**arrays, "tree": labels, "remaining": left}.items():
+        scalars = {
+            name: np.full(n, x.item()) if x.size == 1 else x
+            for name, x in _scalars(kind, columns, remaining).items()
+        }
+        for name, x in {**arrays, "tree": labels, **scalars}.items():
             if x.shape != (n,) or n == 0:
                 raise InputError(name, f"must have shape ({n},), at least one leaf", x.shape)
         starts = np.flatnonzero(np.r_[True, labels[1:] != labels[:-1]]).tolist()
@@ -311,8 +318,9 @@ class Scorer:
             raise InputError("tree", "rows of one tree must be side by side")
         parts = []
         for a, b in zip(starts, [*starts[1:], n], strict=True):
-            part = {name: x[a:b] for name, x in arrays.items()}
-            parts.append(self.score(remaining=float(left[a]), deadline=deadline, **part))
+            part: dict[str, Any] = {name: x[a:b] for name, x in arrays.items()}
+            part |= {name: float(x[a]) for name, x in scalars.items()}
+            parts.append(self.score(deadline=deadline, **part))
         return Scores(
             np.concatenate([p.voc for p in parts]),
             np.concatenate([p.batch for p in parts]),
@@ -328,7 +336,7 @@ class Scorer:
         assert self.kind is not None
         for i, case in enumerate(self.facts["self_test"]):
             try:
-                inputs: dict[str, Any] = {name: np.asarray(case["inputs"][name]) for name in self.kind.inputs}
+                inputs: dict[str, Any] = self.kind.from_json(case["inputs"])
                 got = self.score(**inputs)
                 want = np.asarray(case["outputs"]["voc"], dtype=float)
                 inside = np.asarray(case["outputs"]["in_range"], dtype=bool) & got.in_range
@@ -351,6 +359,16 @@ def _arrays(kind: InputKind, columns: dict[str, Any]) -> dict[str, NDArray[Any]]
         if name not in columns:
             raise InputError(name, f"is missing: a {kind.name} has it")
         out[name] = number_array(name, columns[name], "i" if name == "action" else "f")
+    return out
+
+
+def _scalars(kind: InputKind, columns: dict[str, Any], remaining: Any) -> dict[str, NDArray[Any]]:
+    """The scalars of a call as arrays of numbers; InputError as for `_arrays`."""
+    out = {"remaining": number_array("remaining", remaining, "f")}
+    for name in kind.scalars[1:]:
+        if name not in columns:
+            raise InputError(name, f"is missing: a {kind.name} has it")
+        out[name] = number_array(name, columns[name], "f")
     return out
 
 

@@ -54,7 +54,7 @@ def _inputs(kind: InputKind) -> _Ends:
     ends: dict[str, tuple[int, tuple[str, ...]]] = dict.fromkeys(kind.floats, (DOUBLE, ("n",)))
     if kind.has_action:
         ends["action"] = (INT64, ("n",))
-    return {**ends, "remaining": (DOUBLE, ())}
+    return {**ends, **dict.fromkeys(kind.scalars, (DOUBLE, ()))}
 
 
 def check(data: bytes) -> dict[str, Any]:

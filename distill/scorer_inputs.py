@@ -1,8 +1,9 @@
 """What a scorer reads: the input kinds, their columns and what these may hold; floor 1, light.
 
-    leaf table            independent Gaussian leaves under decision nodes
-    win/loss leaf table   win/loss leaves under decision nodes
-    record                any tree: chance nodes, correlation; one row a candidate, from `distill.backup`
+    leaf table                independent Gaussian leaves under decision nodes
+    leaf table, any horizon   the same, and the number `horizon`, of files that serve every horizon
+    win/loss leaf table       win/loss leaves under decision nodes
+    record                    any tree: chance nodes, correlation; one row a candidate, from `distill.backup`
 
 Each kind has its columns of n numbers, `action` where rows of one action belong together, and the number
 `remaining`. A file says by its inputs which kind it reads, `Scorer.score` takes them by name.
@@ -10,6 +11,7 @@ Each kind has its columns of n numbers, `action` where rows of one action belong
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from functools import cached_property
@@ -21,9 +23,13 @@ from numpy.typing import NDArray
 
 from distill import schema
 
-__all__ = ["KINDS", "LEAF_TABLE", "RECORD", "WIN_LOSS_TABLE", "InputKind", "kind_of"]
+__all__ = [
+    "ANY_HORIZON", "KINDS", "LEAF_TABLE", "RECORD", "VARIES", "WIN_LOSS_TABLE", "InputKind", "kind_of",
+    "worded",
+]  # fmt: skip
 
 Floats = NDArray[np.float64]
+VARIES: Final = "varies"  # stands for the horizon of a value where each tree, or call, brings its own
 _U, _U2 = schema.MAX_UTILITY, schema.MAX_VARIANCE
 
 
@@ -64,12 +70,14 @@ class InputKind:
     """One kind of input.
 
     name : as in a file's metadata and in messages. floats : columns of n numbers, the first gives n.
-    has_action : whether `action`, the 0-based root action of each row, is a column too.
+    has_action : whether `action`, the 0-based root action of each row, is a column too. has_horizon : whether
+    `horizon`, the rollouts that each leaf still receives (inf allowed), is a number of each call.
     """
 
     name: str
     floats: tuple[str, ...]
     has_action: bool
+    has_horizon: bool = False
 
     @cached_property
     def columns(self) -> tuple[str, ...]:
@@ -82,9 +90,28 @@ class InputKind:
         return itemgetter(*self.floats)
 
     @cached_property
+    def scalars(self) -> tuple[str, ...]:
+        """The numbers of a call, one for all rows."""
+        return ("remaining", "horizon") if self.has_horizon else ("remaining",)
+
+    @cached_property
+    def keywords(self) -> tuple[str, ...]:
+        """What a call brings beside `remaining`: the columns, and `horizon` where there is one."""
+        return (*self.columns, *self.scalars[1:])
+
+    @cached_property
     def inputs(self) -> tuple[str, ...]:
-        """All inputs of a scorer: the columns, and `remaining`."""
-        return (*self.columns, "remaining")
+        """All inputs of a scorer: the columns and the scalars."""
+        return (*self.columns, *self.scalars)
+
+    def to_json(self, inputs: Mapping[str, NDArray[Any]]) -> dict[str, Any]:
+        """The inputs of a call as JSON values; an infinite horizon is the text "inf", as in records."""
+        told = {name: inputs[name].tolist() for name in self.inputs}
+        return {name: "inf" if x == math.inf else x for name, x in told.items()}
+
+    def from_json(self, told: Mapping[str, Any]) -> dict[str, NDArray[Any]]:
+        """The inputs that `to_json` told; KeyError where one is missing."""
+        return {name: np.asarray(math.inf if told[name] == "inf" else told[name]) for name in self.inputs}
 
     def rules(self, columns: Mapping[str, Floats]) -> dict[str, tuple[NDArray[np.bool_], str]]:
         """Column -> (which rows keep its rule, the rule)."""
@@ -95,18 +122,34 @@ class InputKind:
 
 
 LEAF_TABLE: Final = InputKind("leaf table", ("mean", "var", "noise_var", "gain", "offset", "cost"), True)
+ANY_HORIZON: Final = InputKind("leaf table, any horizon", LEAF_TABLE.floats, True, has_horizon=True)
 WIN_LOSS_TABLE: Final = InputKind(
     "win/loss leaf table", ("alpha", "beta", "low", "high", "gain", "offset", "cost"), True
 )
 RECORD: Final = InputKind("record", tuple(schema.RECORD_UNITS), False)
-KINDS: Final[Mapping[str, InputKind]] = {k.name: k for k in (LEAF_TABLE, WIN_LOSS_TABLE, RECORD)}
+KINDS: Final[Mapping[str, InputKind]] = {k.name: k for k in (LEAF_TABLE, ANY_HORIZON, WIN_LOSS_TABLE, RECORD)}
 
 
 def kind_of(names: Iterable[Any]) -> InputKind | None:
-    """The kind whose columns all are among `names`; None where there is none.
+    """The kind whose columns all are among `names`, with `horizon` that of any horizon; None for no kind.
 
     >>> kind_of(["alpha", "beta", "low", "high", "gain", "offset", "cost", "action"]).name
     'win/loss leaf table'
     """
     given = set(names)
-    return next((kind for kind in KINDS.values() if given.issuperset(kind.columns)), None)
+    fitting = [kind for kind in KINDS.values() if given.issuperset(kind.keywords)]
+    return max(fitting, key=lambda kind: len(kind.keywords), default=None)
+
+
+def worded(horizon: Any) -> str:
+    """The horizon of a scorer's value in words, with {} for what is valued.
+
+    horizon : a number, "inf" or VARIES.
+
+    >>> worded("inf").format("rate"), worded(4).format("rate")
+    ('dynamic rate', 'rate at horizon 4')
+    """
+    if horizon == VARIES:
+        return "{} at the horizon that each call gives"
+    h = float(horizon)
+    return {math.inf: "dynamic {}", 0.0: "static {}"}.get(h, f"{{}} at horizon {h:g}")

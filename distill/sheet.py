@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import json
-import math
 import os
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any, Final
 
 from distill.files import write_atomic
+from distill.scorer_inputs import worded
 
 __all__ = [
     "FRONT_FILE",
@@ -160,8 +160,7 @@ def bound_text(c: Mapping[str, Any] | None) -> list[str]:
 
 
 def _value_text(value: Mapping[str, Any]) -> str:
-    h = float(value["horizon"])
-    kind = {math.inf: "dynamic {}", 0.0: "static {}"}.get(h, f"{{}} at horizon {h:g}")
+    kind = worded(value["horizon"])
     if value["batch"] is None:
         what = kind.format("rate")
         return f"Scores the {what}: the best VOC a rollout over batches within the rollouts left"

@@ -72,8 +72,8 @@ class Scored:
 
 def tree_facts(candidates: Candidates) -> dict[str, Floats]:
     """What trees are sliced by, a number a tree: leaves, rollouts left, noise of a rollout over the leaf's
-    variance (median), the gap between the best two actions over the scale, and, where the dataset's folder
-    is known, depth (edges to the deepest leaf) and visits (rollouts so far)."""
+    variance (median), the gap between the best two actions over the scale, where it varies the horizon, and,
+    where the dataset's folder is known, depth (edges to the deepest leaf) and visits (rollouts so far)."""
     groups, columns = candidates.groups, candidates.columns
     facts = {
         "leaves": groups.sizes.astype(float),
@@ -89,6 +89,8 @@ def tree_facts(candidates: Candidates) -> dict[str, Floats]:
             noise[t] = np.median(ratio[rows])
             gap[t] = _gap(mean[rows], columns["action"][rows]) / max(sd[rows].max(), 1e-300)
         facts |= {"noise": noise, "gap": gap}
+    if candidates.kind.has_horizon:
+        facts["horizon"] = np.asarray(columns["horizon"], dtype=float)[groups.starts]
     if candidates.folder is not None:
         wanted = {int(i): t for t, i in enumerate(groups.ids)}
         depth, visits = np.zeros(len(wanted)), np.zeros(len(wanted))
@@ -119,7 +121,11 @@ def _depth(tree: BeliefTree) -> int:
 
 def _parts(x: Floats) -> Iterator[tuple[str, NDArray[np.bool_]]]:
     """Up to four parts of about as many trees each, with the ends of their values."""
-    edges = np.unique(np.quantile(x, np.arange(1, _PARTS) / _PARTS))
+    shares = np.arange(1, _PARTS) / _PARTS
+    if np.isinf(x).any():  # there is no middle between a finite number and infinity
+        edges = np.unique(np.quantile(x, shares, method="lower"))
+    else:
+        edges = np.unique(np.quantile(x, shares))
     part = np.searchsorted(edges, x, side="left")
     for one in np.unique(part):
         rows = part == one

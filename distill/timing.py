@@ -10,7 +10,7 @@ import math
 import time
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -32,6 +32,7 @@ from distill.voc import price
 __all__ = [
     "Decision",
     "Timing",
+    "correlated",
     "decisions",
     "time_backup",
     "time_calls",
@@ -40,6 +41,8 @@ __all__ = [
     "tree_decisions",
     "tree_of",
 ]
+
+T = TypeVar("T")
 
 # Powers of the unit of utility in which columns count; 0 for the others.
 _POWERS = {
@@ -100,6 +103,8 @@ def decisions(
         at = at[np.argsort(columns["action"][at], kind="stable")]
         arrays: dict[str, Any] = {name: np.ascontiguousarray(columns[name][at]) for name in kind.columns}
         arrays["action"] = np.unique(arrays["action"], return_inverse=True)[1].astype(np.int64)
+        if kind.has_horizon:
+            arrays["horizon"] = float(columns["horizon"][rows[0]])
         remaining = max(1, int(columns["remaining"][rows[0]]))
         out.append(Decision(arrays, remaining, tree_of(arrays)))
     return out
@@ -176,7 +181,8 @@ def time_exact(
     """
 
     def act(case: Decision) -> None:
-        price(case.tree, Query(horizon=horizon, batch=batch, remaining=case.remaining))
+        h = float(case.columns.get("horizon", horizon))
+        price(case.tree, Query(horizon=h, batch=batch, remaining=case.remaining))
 
     return _timed(act, cases, calls, warm_up=1, seconds=seconds)
 
@@ -231,15 +237,20 @@ def _after_one(tree: BeliefTree, leaf: int) -> dict[str, float]:
 
 
 def time_calls(
-    act: Callable[[Decision], Any], cases: Sequence[Decision], *, calls: int = 2000, warm_up: int = 20
+    act: Callable[[T], Any],
+    cases: Sequence[T],
+    *,
+    calls: int = 2000,
+    warm_up: int = 20,
+    seconds: float = math.inf,
 ) -> Timing:
     """Time of anything that is done with a decision, on the cases in turn, after a warm-up."""
-    return _timed(act, cases, calls, warm_up)
+    return _timed(act, cases, calls, warm_up, seconds)
 
 
 def _timed(
-    act: Callable[[Decision], Any],
-    cases: Sequence[Decision],
+    act: Callable[[T], Any],
+    cases: Sequence[T],
     calls: int,
     warm_up: int,
     seconds: float = math.inf,

@@ -33,7 +33,7 @@ from distill.learners import BoostingLearner, DenseLearner, LinearLearner
 from distill.metrics import Groups
 from distill.peers import measure_peers, timed_cases
 from distill.runtime import Scorer
-from distill.scorer_inputs import RECORD
+from distill.scorer_inputs import RECORD, VARIES
 from distill.sheet import FRONT_FILE, FRONT_FORMAT
 from distill.slices import tree_facts
 from distill.terminal import bar
@@ -142,7 +142,9 @@ def train(
         advance(1, "closed forms and exact methods")
         beside = baselines(split.held_out, held_out.first_order, n_boot=n_boot, seed=seed)
         equal = min(e["latency"]["p50_us"] for e in scorers)
-        rivals = measure_peers(split.held_out, cases, about["value"], equal, n_boot=n_boot, seed=seed)
+        rivals, no_rivals = measure_peers(
+            split.held_out, cases, about["value"], equal, n_boot=n_boot, seed=seed
+        )
         exact = _exact_times(cases, about["value"])
         backup = time_backup(cases, horizon=float(about["value"]["horizon"])) if data.kind is RECORD else {}
         advance(1)
@@ -160,6 +162,7 @@ def train(
         "beside": beside,
         "leaves": _LEAVES,
         "peers": rivals,
+        "peers_left_out": no_rivals,
         "exact": exact_times,
         "backup": {name: t.to_json() for name, t in backup.items()},
         "break_even": what_pays(on_front, rivals, exact_times),
@@ -304,8 +307,12 @@ def what_pays(
 
 def _exact_times(cases: Sequence[Decision], value: Mapping[str, Any]) -> dict[str, Timing]:
     """Time of the exact methods of the horizon learned: of the value learned, or one rollout and the rate."""
-    h, batch = float(value["horizon"]), value["batch"]
-    kind = {math.inf: "dynamic", 0.0: "static"}.get(h, f"horizon {h:g}")
+    batch = value["batch"]
+    if value["horizon"] == VARIES:  # each case has its own
+        h, kind = math.inf, "any-horizon"
+    else:
+        h = float(value["horizon"])
+        kind = {math.inf: "dynamic", 0.0: "static"}.get(h, f"horizon {h:g}")
     one = batch or 1
     of = "" if one == 1 else f" of {one} rollouts"
     out = {f"{kind} VOC{of}": time_exact(cases, horizon=h, batch=one, seconds=_EXACT_SECONDS)}

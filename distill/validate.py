@@ -15,7 +15,7 @@ from distill.feature_graph import FeatureGraph
 from distill.metrics import measure, random_forgone
 from distill.query import Query
 from distill.runtime import Scorer
-from distill.scorer_inputs import RECORD
+from distill.scorer_inputs import ANY_HORIZON, RECORD
 from distill.slices import Scored, calibration, forgone_by_slice, stop_curve, tree_facts
 from distill.timing import tree_of
 from distill.tree import Floats
@@ -170,7 +170,7 @@ def validate(
     """
     if not isinstance(scorer, Scorer):
         scorer = Scorer.load(scorer)
-    candidates, about = Candidates.read(dataset)
+    candidates, about = Candidates.read(dataset, any_horizon=scorer.kind is ANY_HORIZON)
     trained = scorer.facts.get("about", {})
     if value_of_scorer(scorer) != about["value"]:
         raise InputError(f"{dataset}: value", f"must be the scorer's, {trained['value']}", about["value"])

@@ -6,7 +6,6 @@ is built as a tree of elements, so every text from a file is escaped by construc
 
 from __future__ import annotations
 
-import math
 import os
 import xml.etree.ElementTree as ET
 from typing import Any
@@ -19,6 +18,7 @@ from distill.report.pictures import front_picture, pictures
 from distill.report.tables import origin, tables
 from distill.report.theme import one_line, standalone
 from distill.report.words import CAUTION, SHARE_NAMES, WORDS
+from distill.scorer_inputs import worded
 
 __all__ = ["front_svg", "page", "write_page"]
 
@@ -71,8 +71,7 @@ def _opening(facts: Facts) -> ET.Element:
 
 def _scored(value: Figures) -> str:
     """What the scorers score, in plain words."""
-    h = float(value["horizon"])
-    kind = {math.inf: "dynamic {}", 0.0: "static {}"}.get(h, f"{{}} at horizon {h:g}")
+    kind = worded(value["horizon"])
     if value["batch"] is None:
         what = kind.format("rate")
         return f"What is scored is the {what}: the best value a rollout, within the rollouts left."

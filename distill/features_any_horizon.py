@@ -1,0 +1,131 @@
+"""The features of the Gaussian leaf table where each call brings its own horizon; floor 4.
+
+As `features` says it, with the horizon h a number of the call: 0, finite and infinite in one graph.
+
+*Shares.* After h rollouts the mean M_h of a leaf has variance v / (1 + r / h), r = n / v: 0 at h = 0 and v at
+infinity, and never 0 / 0, as r is above 0 and no longer infinite here. The table holds M_h.
+
+*Siblings below the table.* For small h the table is narrow, and the siblings of an action's best leaf may
+all lie below it. Their maximum is then the largest of their means.
+
+*Knowing better.* The action that is best also gains by being known better, by
+
+    theta_k f(-d / theta_k) - theta_0 f(-d / theta_0) = integral of phi(d / theta) from theta_0 to theta_k
+
+with d = m - mu, theta_0 and theta_k before and after k more rollouts; f(-x) = phi(x) / b(x) for x >= 0. The
+smaller of its two bounds phi(d / theta_k) theta_k / b and phi(d / theta_k) (theta_k - theta_0) stands for it:
+each is exact at one end, h = 0 and h to infinity. The larger of this and the value of a change of choice is
+the start. At h = 0 it is the static start, exact but for the fit of f; at infinity the dynamic one.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Final
+
+import numpy as np
+import onnx
+from onnx import TensorProto
+
+from distill.feature_nodes import LARGE, TINY, Start, midpoints, moments, threshold_shift
+from distill.onnx_nodes import Nodes
+from distill.scorer_inputs import ANY_HORIZON
+
+__all__ = ["FEATURE_NAMES", "build_graph"]
+
+FEATURE_NAMES: Final = (
+    "threshold",  # t0 / s_k, cut at +-40: how far the leaf must rise to change the choice, or fall
+    "sibling_help",  # -q(y) up to a constant factor: what the siblings take off the threshold, in theta_0
+    "step",  # s_k / theta_k
+    "above_siblings",  # d / theta_k, cut at +-40
+    "lead",  # of the action over its best rival, in theta_k, cut at +-40
+    "known",  # theta_0 / theta_k: 0 at h = 0, 1 where h is infinite
+)
+
+_BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s of M_h
+_PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
+_FAR: Final = 1e9  # standard deviations; Phi is 1 there
+_SURE: Final = 0.999  # mean of R over the table, from which the siblings lie below it
+_BOTTOM: Final = tuple(np.sqrt(2 * np.pi) * np.array([1.0, 0.93642524, 0.92409791]))  # b, see `loss`
+
+
+def build_graph(*, points: int = 16, batch: int | None = None) -> onnx.ModelProto:
+    """The feature graph of the Gaussian leaf table and a horizon, one tree a call.
+
+    Inputs and outputs as for `features.build_graph`, and the input horizon (double, scalar, from 0 to
+    infinity). points : cells of the table. batch : of the value that is learned; None is the rate.
+    """
+    g = Nodes("f")
+    h = g("Clip", "horizon", g.scalar(TINY), g.scalar(LARGE))
+    m = g("Add", g("Mul", "gain", "mean"), "offset")
+    v = g("Max", g("Mul", "var", g("Mul", "gain", "gain")), g.double(TINY))
+    noise = g("Div", "noise_var", "var", out="noise_ratio")
+    action = g("GreaterOrEqual", "action", g.whole(0))
+    g("And", action, g("Greater", "noise_ratio", g.double(0.0)), out="valid")
+    known = g("Max", _learned(g, v, noise, h), g.double(TINY))
+    low, high, top, joint, rest = _table(g, m, g("Sqrt", known), points)
+    value, others, spread2 = moments(g, low, high, joint, rest, points)
+
+    # The best other action; of the best action, the siblings that lie below the table.
+    best = g("Equal", "action", g("Gather", "action", g("ArgMax", value, axis=1, keepdims=0)))
+    second = g("ReduceMax", g("Where", best, g.double(-LARGE), value))
+    rival = g("Where", best, second, g("ReduceMax", value))
+    below = g("GreaterOrEqual", g("ReduceL1", rest, g.whole(1), keepdims=0), g.single(_SURE * points))
+    sibling = g("Where", g("And", best, g("Greater", top, m)), m, g.double(-LARGE))
+    others = g("Where", g("And", best, below), g("ReduceMax", sibling), others)
+
+    theta2 = g("Add", spread2, known)
+    theta = g("Sqrt", theta2)
+    y = g("Div", g("Sub", rival, others), theta)
+    shift, slope, help_ = threshold_shift(g, y, theta)
+    above = g("Sub", m, others)
+    alone = g("LessOrEqual", y, g.double(0.0))
+    t0 = g("Where", alone, g("Sub", others, m), g("Add", g("Sub", rival, m), shift))
+    start = Start(g, t0, g("Sqrt", v), noise, batch)
+
+    later = g("Max", _learned(g, v, noise, g("Add", start.k, h)), known)
+    theta_k = g("Sqrt", g("Add", spread2, later))
+    above = start.cut(g("Div", above, theta_k))
+    lead = start.cut(g("Div", g("Sub", value, rival), theta_k))
+    own = _known_better(g, above, theta, theta_k)
+    if batch is None:
+        own = g("Div", own, g("Max", start.k, g.double(1.0)))
+    own = g("Where", g("GreaterOrEqual", lead, g.double(0.0)), own, g.double(0.0))
+    columns = (
+        start.z, help_, g("Div", start.s_k, theta_k), above, lead, g("Div", theta, theta_k),
+    )  # fmt: skip
+    return start.model(g("Max", start.value(slope), own), columns, FEATURE_NAMES, ANY_HORIZON)
+
+
+def _learned(g: Nodes, v: str, noise: str, h: str) -> str:
+    """Variance of M_h: v h / (r + h); shape of v, or of h."""
+    return g("Mul", v, g("Div", h, g("Add", noise, h)))
+
+
+def _known_better(g: Nodes, above: str, theta: str, theta_k: str) -> str:
+    """What the best action gains by being known better; shape (1, n)."""
+    at_zero, linear, square = (g.double(x) for x in _BOTTOM)
+    size = g("Abs", above)
+    bottom = g("Add", g("Mul", g("Add", g("Mul", size, square), linear), size), at_zero)
+    rise = g("Mul", g("Sub", theta_k, theta), g.double(1 / math.sqrt(2 * math.pi)))
+    density = g("Exp", g("Mul", g("Mul", above, above), g.double(-0.5)))
+    return g("Mul", density, g("Min", g("Div", theta_k, bottom), rise))
+
+
+def _table(g: Nodes, m: str, s: str, points: int) -> tuple[str, str, str, str, str]:
+    """Ends of each leaf's action table and the action's largest m, shape (1, n), and F and R at its points,
+    shape (n, points)."""
+    row = g("Unsqueeze", "action", g.whole(1))
+    ends = g("Add", g("Mul", s, g.double([[-_BELOW], [_ABOVE], [0.0]])), m)
+    ends = g("Transpose", ends, perm=[1, 0])
+    ends = g("ScatterND", g("Min", ends, g.double(-LARGE)), row, ends, reduction="max")
+    ends = g("Transpose", g("Gather", ends, "action"), perm=[1, 0])
+    low, high, top = g.split(ends, 3, axis=0)
+    z = g("Min", g("Div", g("Sub", ends, m), s), g.double(_FAR))
+    z = g("Cast", z, to=TensorProto.FLOAT)
+    t = midpoints(points)
+    z = g("Gemm", z, g.single(np.stack([1 - t, t, np.zeros(points)]) / np.sqrt(2)), transA=1)
+    phi = g("Add", g("Mul", g("Erf", z), g.single(_PHI_SLOPE)), g.single(0.5))
+    joint = g("ScatterND", g("Max", phi, g.single(1.0)), row, phi, reduction="mul")
+    joint = g("Gather", joint, "action")
+    return low, high, top, joint, g("Div", joint, phi)

@@ -22,7 +22,7 @@ from distill.files import write_atomic
 from distill.generate import Traces, generate
 from distill.query import Query
 from distill.rehearse import plans
-from distill.rehearse.results import cells_table
+from distill.rehearse.results_tables import cells_table
 from distill.report.rehearsal_page import write_rehearsal_page
 from distill.runtime import Scorer
 from distill.sample_data import FAMILIES, TRACES

@@ -43,7 +43,8 @@ def run(args: argparse.Namespace) -> None:
     from distill.errors import InputError
     from distill.rehearse.campaign import run as rehearse
     from distill.rehearse.plans import plan
-    from distill.rehearse.results import aims_table, cells_table, write_results
+    from distill.rehearse.results import write_results
+    from distill.rehearse.results_tables import aims_table, cells_table
     from distill.report.rehearsal_page import write_rehearsal_page
     from distill.terminal import bar
 

@@ -10,6 +10,7 @@ from typing import Any, Final
 from distill.errors import InputError
 from distill.rehearse.campaign import Campaign, run
 from distill.rehearse.results import write_results
+from distill.runtime import Scorer
 
 __all__ = ["plan", "quick"]
 
@@ -33,6 +34,8 @@ _WIDE: Final = (
 )  # fmt: skip
 _ENDS: Final = ("2.56ms@20us", "64ms@500us", "640ms@5ms")
 
+_SLOWEST: Final = 0.25
+
 _PLANS: Final = {
     "quick": Campaign(
         problems=("tree-4x4^1-noise4", "tree-3x3^3-noise1", "cliff_walking"),
@@ -47,6 +50,7 @@ _PLANS: Final = {
         policies=(*_BASELINES, "exact-dynamic-rate"),
         wide=_WIDE,
         wide_budgets=_ENDS,
+        slowest=0.05,
     ),
 }
 # How scorer files are used: with the closed form where little is at stake, and at most for a quarter of the
@@ -66,9 +70,9 @@ def plan(
 ) -> Campaign:
     """A campaign by name ("quick", "full"), or of one's own; what is given replaces what the plan says.
 
-    scorers : files, each used in the ways that the plan knows, beside the policies; the first one in all
-    of them. Without a plan,
-    problems and budgets must be given; policies are then the tuned baselines.
+    scorers : files, each used in the ways that the plan knows, beside the policies; the first one of each
+    kind of inputs in all of them. Without a plan, problems and budgets must be given; policies are then
+    the tuned baselines.
     """
     if name is not None and name not in _PLANS:
         raise InputError("plan", f"must be one of {', '.join(_PLANS)}", name)
@@ -78,16 +82,20 @@ def plan(
             raise InputError(f"--{what}", "must be given without --quick or --full")
     chosen = tuple(policies) or (base.policies if base else _BASELINES)
     full = name == "full"
-    for i, file in enumerate(scorers):
-        plain = [] if full and i > 0 else [""]
+    inputs = set()
+    for file in scorers:
+        first = not full or (kind := Scorer.load(file).kind) not in inputs
+        inputs |= {kind} if full else set()
+        plain = [""] if first else []
         more = [f"{_USE}:prior=auto"] if full else []
-        more += [f"{_USE}:stop=auto"] if full and i == 0 else []
+        more += [f"{_USE}:stop=auto"] if full and first else []
         chosen += tuple(f"scorer:{file}{use}" for use in (*plain, _USE, *more))
     return Campaign(
         wide=base.wide if base else (),
         wide_budgets=base.wide_budgets if base and not budgets else (),
         problems=tuple(problems) or (base.problems if base else ()),
         budgets=tuple(budgets) or (base.budgets if base else ()),
+        slowest=base.slowest if base else _SLOWEST,
         policies=chosen,
         seeds=seeds if seeds is not None else base.seeds if base else 400,
         tuning_seeds=tuning_seeds if tuning_seeds is not None else base.tuning_seeds if base else 100,

@@ -27,7 +27,7 @@ from distill.rehearse.problems import Problem
 from distill.rehearse.remembered import Remembered
 from distill.tree import BeliefTree, Floats
 
-__all__ = ["Cell", "Compared", "compare", "interval", "rehearse"]
+__all__ = ["Cell", "Compared", "compare", "interval", "rehearse", "resampled"]
 
 _COLUMNS = (
     "regret", "regret_by_mean", "expected_regret", "rollouts", "choosing", "stopped", "choices", "fallbacks",
@@ -219,7 +219,7 @@ def compare(
         ours: Floats = getattr(group[policy], column)
         rival = min(rivals, key=lambda name: float(getattr(group[name], column).mean()))
         theirs: Floats = getattr(group[rival], column)
-        times = _resampled(len(ours), seed)
+        times = resampled(len(ours), seed)
         with np.errstate(divide="ignore", invalid="ignore"):
             ratios = (times @ ours) / (times @ theirs)
             ratio = float(ours.mean() / theirs.mean()) if theirs.mean() > 0 else float("nan")
@@ -235,12 +235,12 @@ def compare(
 
 def interval(x: Floats) -> tuple[float, float]:
     """95 % percentile bootstrap interval of a mean."""
-    low, high = np.quantile(_resampled(len(x), 0) @ x / len(x), [0.025, 0.975])
+    low, high = np.quantile(resampled(len(x), 0) @ x / len(x), [0.025, 0.975])
     return float(low), float(high)
 
 
 @lru_cache(maxsize=4)
-def _resampled(n: int, seed: int) -> Floats:
+def resampled(n: int, seed: int) -> Floats:
     """How often each of n decisions is in each resample; shape (resamples, n)."""
     picked = np.random.default_rng(seed).integers(n, size=(_RESAMPLES, n))
     row = np.arange(_RESAMPLES)[:, None] * n

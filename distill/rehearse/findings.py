@@ -1,0 +1,297 @@
+"""What follows from a rehearsal's cells: aims reached, what to use where, break-even, what stopping saves."""
+
+from __future__ import annotations
+
+import math
+import zlib
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import fields
+from typing import Any, Final
+
+import numpy as np
+
+from distill.rehearse.campaign import Campaign, Results
+from distill.rehearse.loop import Budget
+from distill.rehearse.rehearsal import Cell, Compared, compare, resampled
+from distill.rehearse.tuning import name_of
+from distill.tree import Floats
+
+__all__ = [
+    "BEST",
+    "GROUPS",
+    "Place",
+    "advice",
+    "aims",
+    "break_even",
+    "by_kind",
+    "compared",
+    "comparisons",
+    "members",
+    "places_of",
+    "plain",
+    "stopping",
+]
+
+# Groups of policies by the first word of their text; scorers are compared with the best of each other one.
+GROUPS: Final = {
+    "sampling": ("uct", "thompson", "top-two"),
+    "static": ("static-voc", "static-rate"),
+    "exact": ("exact-dynamic-rate",),
+}
+BEST: Final = "best scorer"  # its decisions of either half are those of the scorer that did best on the other
+_EXACT: Final = "exact_dynamic_rate"
+_AIM_SECONDS: Final = 100e-6  # cost of a rollout from which the aims are judged
+_LIMITS: Final = {"sampling": (0.85, 1.1), "static": (0.95, 1.05), "exact": (1.0, 1.0)}
+_SLOW: Final = 0.2  # share of time from which exact choosing counts as dear
+
+Place = dict[str, Cell]  # the cells of one problem and budget, by policy
+
+
+def plain(x: Any) -> float | None:
+    """A number for JSON; None where there is none."""
+    return float(x) if math.isfinite(x) else None
+
+
+def members(campaign: Campaign, group: str) -> list[str]:
+    """Names of a group's policies, without those that stop early."""
+    specs = [s for s in campaign.policies if _group_of(s) == group and "stop=" not in s]
+    return [name_of(spec) for spec in specs]
+
+
+def _group_of(spec: str) -> str:
+    word = spec.split(":")[0]
+    if word == "scorer":
+        return "scorer"
+    return next((group for group, words in GROUPS.items() if word in words), "other")
+
+
+def places_of(results: Results) -> dict[tuple[str, Budget], Place]:
+    """Cells by problem and budget; where scorers played, `BEST` stands among them."""
+    places: dict[tuple[str, Budget], Place] = {}
+    for cell in results.cells:
+        places.setdefault((cell.problem, cell.budget), {})[cell.policy] = cell
+    scorers = members(results.campaign, "scorer")
+    for here in places.values():
+        if ours := [here[name] for name in scorers if name in here]:
+            here[BEST] = _best(ours)
+    return places
+
+
+def _best(cells: Sequence[Cell]) -> Cell:
+    """Each half of the decisions by the policy that does best on the other half.
+
+    So the choice among several ways to use a scorer is made on decisions that it is not judged by.
+    """
+    even = np.arange(len(cells[0].regret)) % 2 == 0
+    on_odd = min(cells, key=lambda cell: float(cell.measured[~even].mean()))
+    on_even = min(cells, key=lambda cell: float(cell.measured[even].mean()))
+    columns = {
+        f.name: np.where(even, getattr(on_odd, f.name), getattr(on_even, f.name))
+        for f in fields(Cell)
+        if f.name not in ("problem", "budget", "policy", "processor")
+    }
+    return Cell(cells[0].problem, cells[0].budget, BEST, **columns)
+
+
+def comparisons(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list[dict[str, Any]]:
+    """Every policy against the best of each group in the same problem and budget."""
+    rows = []
+    for here in places.values():
+        for policy in here:
+            for group in GROUPS:
+                rivals = [name for name in members(results.campaign, group) if name in here]
+                if rivals and rivals != [policy]:
+                    (found,) = compare(list(here.values()), policy, rivals)
+                    rows.append({**compared(found), "group": group})
+    return rows
+
+
+def compared(found: Compared) -> dict[str, Any]:
+    """One comparison, ready for JSON."""
+    return {
+        "problem": found.problem,
+        "budget": str(found.budget),
+        "rollout_seconds": found.budget.rollout_seconds,
+        "timed": found.budget.seconds is not None,
+        "policy": found.policy,
+        "rival": found.rival,
+        "ratio": plain(found.ratio),
+        "low": plain(found.low),
+        "high": plain(found.high),
+    }
+
+
+def _aimed(budget: Budget) -> bool:
+    return budget.seconds is not None and budget.rollout_seconds >= _AIM_SECONDS * (1 - 1e-9)
+
+
+def aims(results: Results, rows: Iterable[Mapping[str, Any]]) -> dict[str, Any]:
+    """How often each scorer reaches what it is meant to, of the timed cells where that can be judged.
+
+    rows : of `comparisons`. cells : with a wall-clock budget, rollouts of 100 us or more, and, against the
+    exact rate, exact choosing that takes over a fifth of the time. better, worse : of them, those whose
+    interval lies below or above 1. no_choice : cells beside them where one exact choice alone takes longer
+    than the budget.
+    """
+    slow = {
+        (cell.problem, str(cell.budget)) for cell in results.cells
+        if cell.policy == _EXACT and cell.choosing_share > _SLOW
+    }  # fmt: skip
+    late = {
+        (x["problem"], str(Budget.parse(x["budget"]))) for x in results.left_out
+        if x["policy"] == _EXACT and x["why"].startswith("one choice takes")
+    }  # fmt: skip
+    scorers = {BEST, *members(results.campaign, "scorer")}
+    found: dict[str, Any] = {}
+    for row in rows:
+        ratio, group = row["ratio"], row["group"]
+        if row["policy"] not in scorers or not row["timed"] or ratio is None:
+            continue
+        place = row["problem"], row["budget"]
+        if row["rollout_seconds"] < _AIM_SECONDS * (1 - 1e-9) or (group == "exact" and place not in slow):
+            continue
+        at_most, never_above = _LIMITS[group]
+        none = {"cells": 0, "reached": 0, "beyond": 0, "better": 0, "worse": 0}
+        limits = {"at_most": at_most, "never_above": never_above}
+        counts = found.setdefault(row["policy"], {}).setdefault(group, {**none, **limits})
+        counts["cells"] += 1
+        counts["reached"] += ratio <= at_most
+        counts["beyond"] += ratio > never_above
+        counts["better"] += row["high"] is not None and row["high"] < 1
+        counts["worse"] += row["low"] is not None and row["low"] > 1
+    for policy, groups in found.items():
+        if "exact" in groups:
+            played = {
+                (c.problem, str(c.budget)) for c in results.cells
+                if policy in (BEST, c.policy) and _aimed(c.budget) and c.policy in scorers
+            }  # fmt: skip
+            groups["exact"]["no_choice"] = len(late & played)
+    return dict(sorted(found.items(), key=lambda item: item[0] != BEST))
+
+
+def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list[dict[str, Any]]:
+    """The policy to use for each problem and budget: the cheapest that no other measurably beats.
+
+    The closed form is advised wherever the best other policy's 95 % interval of the ratio to it reaches 1.
+    """
+    campaign = results.campaign
+    static = members(campaign, "static")
+    others = [n for group in ("scorer", "sampling", "exact") for n in members(campaign, group)]
+    rows = []
+    for (problem, budget), here in places.items():
+        rivals = [name for name in static if name in here]
+        rest = [name for name in others if name in here]
+        if not rivals or not rest:
+            continue
+        best = min(rest, key=lambda name: float(here[name].measured.mean()))
+        (found,) = compare(list(here.values()), best, rivals)
+        better = math.isfinite(found.high) and found.high < 1
+        rows.append(
+            {
+                "problem": problem,
+                "budget": str(budget),
+                "use": best if better else found.rival,
+                "why": "measurably better than the closed form" if better else "nothing measurably better",
+                "best_other": best,
+                "ratio": plain(found.ratio),
+                "low": plain(found.low),
+                "high": plain(found.high),
+            }
+        )
+    return rows
+
+
+def by_kind(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list[dict[str, Any]]:
+    """Scorer or closed form, by kind of problem and cost of a rollout.
+
+    ratio : geometric mean of `BEST` over the better closed form, over the cells of that kind and cost,
+    decisions resampled problem by problem. sampling : the same over the better sampling. use : the scorer
+    only where the interval lies below 1.
+    """
+    grouped: dict[tuple[str, float], list[tuple[str, Place]]] = {}
+    for (problem, budget), here in places.items():
+        if budget.seconds is not None and BEST in here:
+            key = results.kinds.get(problem, "any"), budget.rollout_seconds
+            grouped.setdefault(key, []).append((problem, here))
+    rows = []
+    for (kind, cost), cells in sorted(grouped.items()):
+        found = {group: _together(results, cells, group) for group in ("static", "sampling")}
+        low, high = found["static"]["low"], found["static"]["high"]
+        if high is not None and high < 1:
+            use, why = "scorer", "measurably better than the closed form"
+        elif low is not None and low > 1:
+            use, why = "closed form", "the scorer is measurably worse"
+        else:
+            use, why = "closed form", "as good as the scorer"
+        rows.append({"kind": kind, "rollout_seconds": cost, **found, "use": use, "why": why})
+    return rows
+
+
+def _together(results: Results, cells: Sequence[tuple[str, Place]], group: str) -> dict[str, Any]:
+    """Geometric mean of the ratios of `BEST` to the best of a group over several cells, with interval."""
+    names = members(results.campaign, group)
+    at, resamples = [], []
+    for problem, here in cells:
+        rivals = [here[name].measured for name in names if name in here]
+        ours = here[BEST].measured
+        theirs = min(rivals, key=lambda x: float(x.mean()), default=np.zeros(0))
+        if theirs.size == 0 or not ours.mean() > 0 or not theirs.mean() > 0:
+            continue
+        at.append(math.log(ours.mean() / theirs.mean()))
+        times = resampled(len(ours), zlib.crc32(problem.encode()))
+        with np.errstate(divide="ignore", invalid="ignore"):
+            resamples.append(np.log(times @ ours) - np.log(times @ theirs))
+    out: dict[str, Any] = {"cells": len(at), "ratio": None, "low": None, "high": None}
+    if at:
+        out["ratio"] = math.exp(math.fsum(at) / len(at))
+        mean: Floats = np.mean(resamples, axis=0)
+        if np.isfinite(mean).all():
+            out["low"], out["high"] = (float(x) for x in np.exp(np.quantile(mean, [0.025, 0.975])))
+    return out
+
+
+def break_even(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list[dict[str, Any]]:
+    """Regret against the cost of a rollout: every policy as a multiple of the best sampling one.
+
+    A row for each policy, cost and time in rollouts; `ratio` is the geometric mean over the problems that
+    have the policy at each of these costs, and a regret above 0 everywhere.
+    """
+    campaign = results.campaign
+    sampling = members(campaign, "sampling")
+    names = [*(n for group in (*GROUPS, "scorer") for n in members(campaign, group)), BEST]
+    ratios: dict[tuple[int, str], dict[float, dict[str, float]]] = {}
+    for (problem, budget), here in places.items():
+        rivals = [float(here[name].measured.mean()) for name in sampling if name in here]
+        if budget.seconds is None or not rivals or min(rivals) <= 0:
+            continue
+        for name in names:
+            if name in here and (regret := float(here[name].measured.mean())) > 0:
+                by_cost = ratios.setdefault((budget.room(0, 0.0), name), {})
+                by_cost.setdefault(budget.rollout_seconds, {})[problem] = math.log(regret / min(rivals))
+    rows = []
+    for (rollouts, name), by_cost in ratios.items():
+        shared = set.intersection(*(set(found) for found in by_cost.values()))
+        for cost, found in sorted(by_cost.items()):
+            logs = [found[problem] for problem in shared]
+            if logs:
+                row = {"rollouts": rollouts, "rollout_seconds": cost, "policy": name}
+                ratio = math.exp(math.fsum(logs) / len(logs))
+                rows.append({**row, "ratio": ratio, "problems": len(shared)})
+    return rows
+
+
+def stopping(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list[dict[str, Any]]:
+    """Policies that stop early against the same without: rollouts saved, and the ratio of regrets."""
+    pairs = {
+        name_of(spec): name_of(spec[: spec.index(":stop=")])
+        for spec in results.campaign.policies
+        if ":stop=" in spec
+    }
+    rows = []
+    for here in places.values():
+        for stops, goes_on in pairs.items():
+            if stops in here and goes_on in here:
+                (found,) = compare(list(here.values()), stops, [goes_on])
+                saved = 1 - here[stops].rollouts.sum() / max(here[goes_on].rollouts.sum(), 1)
+                rows.append({**compared(found), "saved": plain(saved)})
+    return rows

@@ -1,0 +1,166 @@
+"""A rehearsal's figures as Markdown lines; everything comes from the summary, nothing is computed."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from typing import Any, Final
+
+from distill.rehearse.findings import BEST, GROUPS
+
+__all__ = ["aims_table", "cells_table", "every_cell", "short_table", "time_table"]
+
+Figures = Mapping[str, Any]
+
+_AGAINST: Final = {
+    "sampling": "better of UCT and both Thompson samplings",
+    "static": "static closed form",
+    "exact": "exact rate, where choosing by it takes over a fifth of the time",
+}
+_NONE: Final = "-"
+
+
+def aims_table(summary: Figures) -> list[str]:
+    """How often each scorer reached its aims, as Markdown lines."""
+    lines = [
+        "| scorer | against | cells | at most | reached | never above | above | below 1 for sure | above |"
+    ]
+    lines.append("| --- | --- | --- | --- | --- | --- | --- | --- | --- |")
+    for policy, groups in summary["aims"].items():
+        for group, c in groups.items():
+            share = f"{c['reached']} ({c['reached'] / c['cells']:.0%})"
+            lines.append(
+                f"| {policy} | {group} | {c['cells']} | {c['at_most']} | {share} | {c['never_above']} "
+                f"| {c['beyond']} | {c['better']} | {c['worse']} |"
+            )
+    return lines
+
+
+def short_table(summary: Figures) -> list[str]:
+    """What the whole rehearsal says: counts of the aims, and scorer or closed form by kind and cost."""
+    campaign = summary["campaign"]
+    head = "regret of the best scorer over that of the | cells | aim | reached | to be avoided | met"
+    lines = [
+        f"{len(campaign['problems'])} problems, {campaign['seeds']} paired decisions a cell.",
+        "Cells at equal wall-clock time, rollouts of 100 us or more. *Best scorer*: for either half of the",
+        "decisions, the scorer (file and use) that did best on the other half.",
+        "",
+        f"| {head} | surely < 1 | surely > 1 |",
+        "| --- | --- | --- | --- | --- | --- | --- | --- |",
+    ]
+    for group, c in summary["aims"].get(BEST, {}).items():
+        more = f", and {c['no_choice']} where one choice is over the budget" if c.get("no_choice") else ""
+        lines.append(
+            f"| {_AGAINST[group]} | {c['cells']}{more} | <= {c['at_most']:g} "
+            f"| {c['reached']} ({c['reached'] / c['cells']:.0%}) | > {c['never_above']:g} | {c['beyond']} "
+            f"| {c['better']} | {c['worse']} |"
+        )
+    lines += [
+        "",
+        "| leaves | a rollout | cells | to the closed form | to the better sampling | use | why |",
+        "| --- | --- | --- | --- | --- | --- | --- |",
+    ]
+    for row in summary["by_kind"]:
+        lines.append(
+            f"| {row['kind']} | {_cost(row['rollout_seconds'])} | {row['static']['cells']} "
+            f"| {_ratio(row['static'])} | {_ratio(row['sampling'])} | {row['use']} | {row['why']} |"
+        )
+    lines += ["", "Ratios here are geometric means over the cells, 95 % intervals in square brackets."]
+    return [*lines, "", *_stopping_lines(summary["stopping"])] if summary["stopping"] else lines
+
+
+def _stopping_lines(rows: Sequence[Figures]) -> list[str]:
+    """Stopping early, over all cells: where it saves much and costs nothing that could be measured."""
+    free = [r for r in rows if r["ratio"] is None or r["low"] is None or r["low"] <= 1]
+    saves = [r for r in free if r["saved"] is not None and r["saved"] >= 0.3]
+    problems = {r["problem"] for r in rows}
+    some = len({r["problem"] for r in saves})
+    return [
+        "Stopping early saves at least 30 % of the rollouts, with no measurable loss of regret,",
+        f"in {len(saves)} of {len(rows)} cells, and in some cell of {some} of {len(problems)} problems.",
+    ]
+
+
+def every_cell(summary: Figures) -> list[str]:
+    """Every problem and budget: the best scorer against all others, and what the page would use."""
+    ratios_to = "to the better sampling | to the closed form | to the exact rate"
+    lines = [
+        f"| problem | leaves | budget | best scorer: regret | {ratios_to} | choosing, % (exact) | use |",
+        "| --- | --- | --- | --- | --- | --- | --- | --- | --- |",
+    ]
+    use = {(a["problem"], a["budget"]): a["use"] for a in summary["advice"]}
+    exact = {
+        (row["problem"], row["budget"]): row
+        for row in summary["rows"]
+        if row["policy"] == "exact_dynamic_rate"
+    }
+    for row in summary["rows"]:
+        if row["policy"] != BEST:
+            continue
+        place = row["problem"], row["budget"]
+        ratios = [
+            f"{_ratio(found)} {found['rival']}" if (found := row["ratios"].get(group)) else _NONE
+            for group in GROUPS
+        ]
+        shares = f"{_percent(row)} ({_percent(exact.get(place))})"
+        regret = _estimate(row["measured"], row["interval"])
+        lines.append(
+            f"| {row['problem']} | {row['kind']} | {row['budget']} | {regret} | {' | '.join(ratios)} "
+            f"| {shares} | {use.get(place, _NONE)} |"
+        )
+    return lines
+
+
+def cells_table(summary: Figures) -> list[str]:
+    """Every cell of each scorer as Markdown lines: ratios to the best of each group, with intervals."""
+    scorers = {name for file in summary["scorers"] for name in file["policies"]}
+    lines = ["| problem | budget | scorer | to sampling | to the closed form | to the exact rate |"]
+    lines.append("| --- | --- | --- | --- | --- | --- |")
+    for row in summary["rows"]:
+        if row["policy"] in scorers:
+            found = row["ratios"]
+            columns = " | ".join(
+                f"{_ratio(found[g])} ({found[g]['rival']})" if g in found else _NONE for g in GROUPS
+            )
+            lines.append(f"| {row['problem']} | {row['budget']} | {row['policy']} | {columns} |")
+    return lines
+
+
+def time_table(summary: Figures, seeds: int, tuning_seeds: int, workers: int = 2) -> list[str]:
+    """What the same campaign takes with other numbers of decisions, by problem, from this one's own times.
+
+    Processor seconds of decisions grow with their number; those of a first use, and of exact optima, are
+    in them too, so from few decisions the estimate is rather too long.
+    """
+    campaign = summary["campaign"]
+    lines = ["| problem | cells, s | tuning, s |", "| --- | --- | --- |"]
+    total = 0.0
+    for problem, took in summary["processor_seconds"].items():
+        cells = took["cells"] * seeds / campaign["seeds"]
+        tuning = took["tuning"] * tuning_seeds / max(campaign["tuning_seeds"], 1)
+        total += cells + tuning
+        lines.append(f"| {problem} | {cells:,.0f} | {tuning:,.0f} |")
+    minutes = total / 60 / workers
+    return [*lines, f"| all: {minutes:.0f} minutes on {workers} cores | {total:,.0f} | |"]
+
+
+# --- figures as text -------------------------------------------------------------------------------
+
+
+def _ratio(row: Figures) -> str:
+    return _estimate(row["ratio"], row, ".2f") if row["ratio"] is not None else "none"
+
+
+def _estimate(value: float | None, ends: Figures, form: str = ".3g") -> str:
+    if value is None:
+        return _NONE
+    low, high = ends["low"], ends["high"]
+    return f"{value:{form}}" + ("" if low is None or high is None else f" [{low:{form}}, {high:{form}}]")
+
+
+def _percent(row: Figures | None) -> str:
+    share = None if row is None else row["choosing_share"]
+    return _NONE if share is None else f"{100 * share:.0f}"
+
+
+def _cost(seconds: float) -> str:
+    return f"{1e6 * seconds:.0f} us" if seconds < 1e-3 * (1 - 1e-9) else f"{1e3 * seconds:.0f} ms"

@@ -69,6 +69,26 @@ def parts() -> dict[str, Any]:
     }  # fmt: skip
 
 
+def shifts() -> dict[str, Any]:
+    """What `shift.measure_shifts` leaves."""
+    return {
+        name: accuracy(share, 2.1)
+        | {
+            "first_order_forgone_percent": start,
+            "covered_percent": 95.2,
+            "flagged_trees_percent": flagged,
+            "loss_flagged_percent": flagged,
+            "aside": 0,
+            "changed": f"what {name} changes",
+        }
+        for name, share, start, flagged in (
+            ("as trained", 0.0213, 0.77, 0.5),
+            ("one level deeper", 0.35, 1.23, None),
+            ("correlation", 12.5, 14.2, 61.3),
+        )
+    }
+
+
 def scorer(recipe: str, us: float, forgone: float | None, on_front: bool) -> dict[str, Any]:
     return {
         "recipe": recipe,
@@ -120,7 +140,7 @@ def front_figures() -> dict[str, Any]:
             "UCT": accuracy(42.99, 63.7) | {"latency": {"p50_us": 8.13, "p99_us": 15.5, "calls": 400}},
         },
         "break_even": break_even(
-            {"dense 32-32": (0.0212, 36.6), "UCT": (42.99, 8.13), "exact dynamic rate": (0.0, 10293.9)}
+            {"dense 32-32": (0.0212, 36.6), "UCT": (42.99, 8.13), "exact dynamic rate": (0.0, 10293.9)},
         ),
         "leaves": 64,
         "exact": {
@@ -148,6 +168,7 @@ def sheet_figures() -> dict[str, Any]:
         "beside": front["beside"],
         "peers": front["peers"],
         "break_even": front["break_even"],
+        "shifts": shifts(),
         "decision": {
             "leaves": 64,
             "scorer": entry["latency"],
@@ -168,6 +189,45 @@ def summary_figures() -> dict[str, Any]:
     }
     one_tree = {"exact": [0.0001368, 0.0], "scorer": [0.00014, 2.2e-22], "exact_pick": 0, "scorer_pick": 0}
     return {"scorer": sheet_figures(), "on traces": rows, "one tree": one_tree, "seconds": 626.2}
+
+
+def audit_figures() -> dict[str, Any]:
+    """What `audit.audit` finds, with values that are 0, tiny, and columns that never vary."""
+    now, promised = accuracy(0.00962, 0.0139), accuracy(0.0172, 0.0578)
+    now["stop_loss_percent"], promised["stop_loss_percent"] = estimate(0.0), estimate(2.96e-5)
+    keys = ("forgone_percent", "relative_forgone_percent", "stop_loss_percent")
+    columns = {
+        "actions": ([6.0] * 5, [2.0, 3.0, 4.0, 5.0, 6.0], 0.8),
+        "chance share": ([0.0] * 5, [0.0] * 5, 0.0),
+        "discount": ([0.98] * 5, [0.91, 0.93, 0.95, 0.98, 1.0], 0.79),
+        "a feature with a name that is far too long to stand": ([-31.0, -2.0, 0.0, 1e3, 2e5], [], 0.27),
+    }
+    return {
+        "scorer": {"name": "s.onnx", "sha256": "ab" * 32, "recipe": "dense 32-32", "input": "leaf table"},
+        "traces": ["taxi.jsonl.gz"],
+        "seed": 0,
+        "trees": {"recorded": 250, "sampled": 200, "judged": 199, "decisions": 50, "aside": {"no price": 1},
+                  "worth adding": 1},
+        "margin": 0.5,
+        "judged": {key: {"now": now[key], "promised": promised[key], "worse": False} for key in keys},
+        "worse": False,
+        "verdict": "as promised: forgone share 0.00962 %, promised 0.0172 %",
+        "now": now,
+        "promised": promised,
+        "out_of_range_percent": 0.0,
+        "bound": {"held_percent": 98.5},
+        "drift": {
+            "reference": "cold-store",
+            "at": [0.05, 0.25, 0.5, 0.75, 0.95],
+            "chance": 0.236,
+            "columns": {
+                name: {"meaning": name, "now": a, "training": b, "distance": d, "drifted": d > 0.3}
+                for name, (a, b, d) in columns.items()
+            },
+        },
+        "label_error_percent": 9e-10,
+        "pairs": scorer("linear", 1.0, 1.0, True)["pairs"],
+    }  # fmt: skip
 
 
 ALL = {"front": front_figures, "sheet": sheet_figures, "summary": summary_figures}

@@ -26,13 +26,15 @@ from report_figures import (
     front_figures,
     scorer,
     sheet_figures,
+    shifts,
     summary_figures,
 )
 from small_dataset import labelled
 
+from distill.cli import run
 from distill.errors import InputError
-from distill.report import CAUTION, charts, front_svg, more_pictures, page, pictures, theme, write_page
-from distill.report.elements import text_of
+from distill.report import CAUTION, axes, charts, front_svg, more_pictures, page, pictures, theme, write_page
+from distill.report.elements import duration, text_of
 from distill.report.words import COLUMNS, WORDS
 from distill.ship import ship
 from distill.train import train
@@ -156,7 +158,7 @@ def test_every_figure_is_one_of_the_json(figures: dict[str, Any]) -> None:
     for e in data:
         value = json.loads(e.get("value", ""))
         assert value in known
-        assert e.text == text_of(value)
+        assert e.text == (duration(value).text if e.get("class") == "duration" else text_of(value))
 
 
 def rows_of(root: ET.Element, title: str) -> dict[str, list[list[float]]]:
@@ -188,8 +190,9 @@ def test_tables_hold_the_right_figures_in_the_right_cells(figures: dict[str, Any
     judged = rows_of(root, "Accuracy on held-out trees")
     judging = {"this scorer": top["accuracy"]} if "accuracy" in top else {}
     judging = judging or {e["recipe"]: e["held_out"] for e in scorers if e["on_front"]}
-    assert list(judged) == [*judging, *top["beside"]]
-    for name, m in {**judging, **top["beside"]}.items():
+    peers = {name: m for name, m in top["peers"].items() if name not in top["beside"]}
+    assert list(judged) == [*judging, *top["beside"], *peers]
+    for name, m in {**judging, **top["beside"], **peers}.items():
         cells = [m.get(k, {}) for k in COLUMNS]
         assert judged[name] == [spread(c) if isinstance(c, dict) else [c] for c in cells]
 
@@ -197,6 +200,23 @@ def test_tables_hold_the_right_figures_in_the_right_cells(figures: dict[str, Any
     exact = top["exact"] if "exact" in top else top["decision"]["exact"]
     for name, t in exact.items():
         assert times[f"exact {name}"][:3] == [[t["p50_us"]], [t["p99_us"]], [t["calls"]]]
+    assert times["UCT"][:3] == [[8.13], [15.5], [400]]
+    shown_slices = rows_of(root, "By slice of trees")
+    assert shown_slices["leaves: 2 to 17"] == [
+        [577],
+        [14902],
+        spread(estimate(0.0321)),
+        spread(estimate(1.5)),
+        [94.4],
+    ]
+    if "shifts" in top:
+        changed = rows_of(root, "Trees unlike those of training")
+        assert list(changed) == ["as trained", "one level deeper", "correlation"]
+        assert changed["correlation"] == [
+            [1754], spread(estimate(12.5)), spread(estimate(2.1)), [14.2], [95.2], [61.3], [61.3]
+        ]  # fmt: skip
+        assert changed["one level deeper"][-1] == []
+        assert "what correlation changes" in text_in(root)
     if "decision" in top:
         assert times["exact dynamic rate"][3] == [281.254]
         assert times["this scorer"][0] == [36.6]
@@ -226,8 +246,8 @@ def lines(figure: Any, gid: str, panel: int = 0) -> list[tuple[list[float], list
     return [(list(map(float, line.get_xdata())), list(map(float, line.get_ydata()))) for line in found]
 
 
-def bar_widths(figure: Any, panel: int) -> list[float]:
-    return [p.get_x() + p.get_width() for p in figure.axes[panel].patches if p.get_gid() == "bar"]
+def dots(figure: Any, panel: int, gid: str = "value") -> list[float]:
+    return [x for (x,), _ in lines(figure, gid, panel)]
 
 
 def test_the_front_stands_where_the_figures_say(drawn: dict[str, Any]) -> None:
@@ -256,15 +276,15 @@ def test_bars_and_pairs_stand_where_the_figures_say(drawn: dict[str, Any]) -> No
     figures = summary_figures()
     page(figures)
     sheet = figures["scorer"]
-    rows = [sheet["accuracy"], *sheet["beside"].values()]
+    rows = [sheet["accuracy"], *sheet["beside"].values(), sheet["peers"]["UCT"]]
     for panel, key in enumerate(("forgone_percent", "relative_forgone_percent")):
-        assert bar_widths(drawn["loss"], panel) == [m[key]["value"] for m in rows]
+        assert dots(drawn["loss"], panel) == [m[key]["value"] for m in rows]
         assert [x for x, _ in lines(drawn["loss"], "interval", panel)] == [
-            spread(m[key])[1:] for m in rows[:3]
+            spread(m[key])[1:] for m in (*rows[:3], rows[4])
         ]
         on_traces = [m[key]["value"] for m in figures["on traces"].values()]
-        assert bar_widths(drawn["traces"], panel) == on_traces
-    assert bar_widths(drawn["time"], 0) == [36.6, 318.8, 10293.9]
+        assert dots(drawn["traces"], panel) == on_traces
+    assert dots(drawn["time"], 0) == [36.6, 26.1, 8.13, 318.8, 10293.9]
     assert drawn["time"].axes[0].get_xscale() == "log"
     least = sheet["pairs"]["least"]
     exact, predicted = ([max(x, least) for x in sheet["pairs"][k]] for k in ("exact", "predicted"))
@@ -275,13 +295,19 @@ def test_slices_bounds_prices_and_gains_stand_where_the_figures_say(drawn: dict[
     figures = sheet_figures()
     text = page(figures)
     accuracy = figures["accuracy"]
-    assert bar_widths(drawn["slices"], 0) == [0.0321]  # what lost nothing has no bar
-    assert bar_widths(drawn["slices"], 1) == [2.5]
+    floor = drawn["slices"].axes[0].get_xlim()[0]
+    assert dots(drawn["slices"], 0) == [0.0321, floor]  # what lost nothing stands on the edge
+    assert drawn["slices"].axes[0].get_xticklabels()[0].get_text() == "0"
+    assert len(drawn["slices"].axes) == 1  # the gap has one slice only
+    assert "all trees are in one slice: gap" in text
+    assert dots(drawn["shifts"], 0) == [0.0213, 0.35, 12.5]
+    assert dots(drawn["shifts"], 0, "rival") == [0.77, 1.23, 14.2]
     bins = accuracy["calibration"]["bins"]
     scores = [b["mean_score"] for b in bins]
     assert lines(drawn["bound"], "curve") == [(scores, [b["covered_percent"] for b in bins])]
     assert lines(drawn["bound"], "across")[0][1] == [95.0, 95.0]
-    assert lines(drawn["sizes"], "curve")[1] == (scores, [b["mean_exact"] for b in bins])
+    ratios = [b["mean_exact"] / b["mean_score"] for b in bins]
+    assert lines(drawn["sizes"], "curve") == [(scores, ratios)]
     stop = {key: [p[key] for p in accuracy["stop_curve"]] for key in ("price", "value", "go_on")}
     ours, _, never = lines(drawn["stop"], "curve")
     floor = drawn["stop"].axes[0].get_ylim()[0]
@@ -293,7 +319,9 @@ def test_slices_bounds_prices_and_gains_stand_where_the_figures_say(drawn: dict[
     assert curves_[0][0] == [c / 1000 for c in found["costs_us"]]
     (last,) = (b for b in found["best"] if b["to_us"] is None)
     assert last["name"] == "exact dynamic rate"
-    assert f'<data value="{last["from_us"]!r}">' in text
+    assert f'<data value="{last["from_us"]!r}" class="duration">' in text
+    assert "one scoring for each rollout" in drawn["break-even"].axes[0].get_xlabel()
+    assert "every rollout costs one scoring" in text
     assert "&lt;b&gt;" in text
     assert "<b>" not in text
 
@@ -303,8 +331,8 @@ def test_older_figures_without_parts_serve(lost: str) -> None:
     sheet = sheet_figures()
     before = page(sheet).count("<figure")
     del sheet["accuracy"][lost]
-    del sheet["break_even"], sheet["peers"]
-    assert page(sheet).count("<figure") == before - 1 - (2 if lost == "calibration" else 1)
+    del sheet["break_even"], sheet["peers"], sheet["shifts"]
+    assert page(sheet).count("<figure") == before - 2 - (2 if lost == "calibration" else 1)
 
 
 def test_a_loss_of_zero_stands_on_an_edge_marked_zero(drawn: dict[str, Any]) -> None:
@@ -341,11 +369,48 @@ def test_labels_do_not_hide_one_another(drawn: dict[str, Any]) -> None:
     ax = drawn["front"].axes[0]
     renderer = FigureCanvasAgg(drawn["front"]).get_renderer()
     boxes = [t.get_window_extent(renderer) for t in ax.texts]
-    assert len(boxes) == 8
+    assert len(boxes) == 8  # four scorers, three picks beside, one more peer
     for a, b in combinations(boxes, 2):
         assert not a.overlaps(b)
     inside = ax.get_window_extent(renderer).padded(1)
     assert all(inside.contains(*corner) for b in boxes for corner in (b.min, b.max))
+
+
+def test_names_of_crowded_points_find_room() -> None:
+    """Ten scorers that lose and take the same, with peers around them: every name stands, none on another."""
+    points = [
+        charts.Point(f"boosting {i}x{31 + i}", 50 + i / 9, 0.1, 0.05, 0.2, joined=True) for i in range(10)
+    ]
+    peers = [charts.Peer("moment matching with quadrature", 0.11, 51.0), charts.Peer("random pick", 80.0)]
+    figure = charts.front(points, peers, x_label="x", y_label="y")
+    ax, renderer = figure.axes[0], FigureCanvasAgg(figure).get_renderer()
+    boxes = [t.get_window_extent(renderer) for t in ax.texts]
+    assert len(boxes) == 12
+    assert not any(a.overlaps(b) for a, b in combinations(boxes, 2))
+    assert figure.findobj(
+        lambda x: x.get_gid() == "leader"
+    )  # names that stand further off are joined to their points
+
+
+@pytest.mark.parametrize(
+    ("limits", "zero", "texts"),
+    [
+        ((250, 950), None, ["300", "500", "700"]),
+        ((4, 400), None, ["10", "30", "100", "300"]),
+        ((1e-3, 1e3), None, ["0.001", "0.01", "0.1", "1", "10", "100", "1,000"]),
+        ((1e-12, 10), None, ["10⁻¹¹", "10⁻⁹", "10⁻⁷", "10⁻⁵", "10⁻³", "10⁻¹", "10"]),
+        ((1e-4, 1), 1e-4, ["0", "0.001", "0.01", "0.1", "1"]),
+        ((1.1, 1.9), None, ["1.2", "1.4", "1.6", "1.8"]),
+    ],
+)
+def test_log_axes_have_ticks_to_read(
+    limits: tuple[float, float], zero: float | None, texts: list[str]
+) -> None:
+    _, (ax,) = axes.canvas(100)
+    ax.set_xscale("log")
+    ax.set_xlim(limits)
+    axes.log_ticks(ax.xaxis, limits, zero_at=zero)
+    assert [t.get_text() for t in ax.get_xticklabels()] == texts
 
 
 def contrast(a: str, b: str) -> float:
@@ -483,6 +548,14 @@ def test_older_figures_without_pairs_serve() -> None:
 # --- on what the other commands leave --------------------------------------------------------------
 
 
+def any_slice_lost(front: dict[str, Any]) -> bool:
+    """Whether the picture of slices has something to show."""
+    by: dict[str, list[float]] = {}
+    for one in front["scorers"][0]["held_out"]["slices"]:
+        by.setdefault(one["by"], []).append(one["forgone_percent"]["value"] or 0.0)
+    return any(len(lost) > 1 and max(lost) >= 1e-4 for lost in by.values())
+
+
 def test_what_train_ship_and_validate_leave_makes_a_page(tmp_path: Path) -> None:
     dataset = labelled(tmp_path / "data", trees=150)
     front = train(dataset, tmp_path / "trained", recipes=["linear"], n_boot=50)
@@ -494,8 +567,8 @@ def test_what_train_ship_and_validate_leave_makes_a_page(tmp_path: Path) -> None
         name = "this scorer" if "recipe" in figures else "linear"
         assert judged[name][0] == spread(front["scorers"][0]["held_out"]["forgone_percent"])
         titles = [text_in(f.find("h3")) for f in root.findall(".//figure")]
-        assert len(titles) == 9
-        for word in ("Values, exact", "loses", "upper bound", "size of score", "Stopping", "What pays"):
+        assert len(titles) == (9 if any_slice_lost(front) else 8)
+        for word in ("Values, exact", "upper bound", "size of score", "Stopping", "What pays"):
             assert any(word in title for title in titles)
     assert "slices" in sheet["accuracy"]
     assert all("slices" not in e["held_out"] for e in sheet["front"])
@@ -508,3 +581,16 @@ def test_the_charts_take_nothing_at_all() -> None:
     assert theme.svg(figure, "empty", "nothing").tag == "svg"
     figure = charts.pairs([], [], 1e-8)
     assert theme.svg(figure, "empty", "nothing").tag == "svg"
+
+
+def test_the_command_adds_the_shifts_that_validate_left(tmp_path: Path) -> None:
+    """`report FRONT --shifts FILE` shows them; a file without any is refused by name."""
+    front, left, out = tmp_path / "front.json", tmp_path / "shifts.json", tmp_path / "page.html"
+    front.write_text(json.dumps(front_figures()))
+    left.write_text(json.dumps({"shifts": shifts()}))
+    assert run(["report", str(front), "--out", str(out)]) == 0
+    assert "Trees unlike" not in out.read_text()
+    assert run(["report", str(front), "--shifts", str(left), "--out", str(out)]) == 0
+    assert "dense" in out.read_text()
+    assert list(rows_of(parsed(out.read_text()), "Trees unlike those of training")) == list(shifts())
+    assert run(["report", str(front), "--shifts", str(front), "--out", str(out)]) == 2

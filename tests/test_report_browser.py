@@ -1,7 +1,9 @@
-"""The report page in headless Chromium: it fits phone and desk, asks for nothing, and is light or dark."""
+"""The pages in headless Chromium: they fit phone and desk, ask for nothing, are light or dark, and no text of
+a picture lies on another or beyond its edge."""
 
 from __future__ import annotations
 
+import html
 import json
 import re
 import shutil
@@ -11,9 +13,14 @@ from pathlib import Path
 import matplotlib.image
 import numpy as np
 import pytest
-from report_figures import ALL, sheet_figures
+from report_figures import ALL, audit_figures, sheet_figures, shifts, summary_figures
 
+from distill.infer import infer_files
+from distill.look import look
 from distill.report import write_page
+from distill.report.audit_page import write_audit_page
+from distill.report.infer_page import write_infer_page
+from distill.report.look_page import write_look_page
 
 BROWSER = next(filter(None, map(shutil.which, ("chromium", "chromium-browser", "google-chrome"))), None)
 FLAGS = [
@@ -21,6 +28,8 @@ FLAGS = [
     "--disable-background-networking", "--disable-component-update", "--disable-sync",
     "--allow-file-access-from-files",
 ]  # fmt: skip
+SAMPLE = Path(__file__).parents[1] / "datasets" / "sample"
+MODELS = Path(__file__).parents[1] / "models"
 in_browser = pytest.mark.skipif(BROWSER is None, reason="no Chromium on this machine")
 
 
@@ -65,6 +74,83 @@ def test_nothing_reaches_beyond_a_phone_or_a_desk(kind: str, tmp_path: Path) -> 
         assert pictured >= 8
         assert narrowest > 250
         assert requests == 0
+
+
+_TEXTS = """<body><script>
+    // Pictures whose texts touch each other or leave the picture, as the browser lays them out.
+    const found = {}, widths = WIDTHS, pages = PAGES;
+    const jobs = pages.flatMap(name => widths.map(width => [name, width]));
+    for (const [name, width] of jobs) {
+        const frame = document.createElement("iframe");
+        frame.width = width; frame.height = 900; frame.src = name;
+        frame.onload = () => {
+            const page = frame.contentDocument, faults = [];
+            let texts = 0;
+            for (const svg of page.querySelectorAll("svg")) {
+                const edge = svg.getBoundingClientRect(), label = svg.getAttribute("aria-label");
+                const all = [...svg.querySelectorAll("text")].map(
+                    t => [t.textContent, t.getBoundingClientRect()]);
+                texts += all.length;
+                all.forEach(([text, a], i) => {
+                    if (a.left < edge.left - 1 || a.right > edge.right + 1 || a.top < edge.top - 1
+                        || a.bottom > edge.bottom + 1) faults.push([label, "outside", text]);
+                    for (const [other, b] of all.slice(i + 1)) {
+                        const across = Math.min(a.right, b.right) - Math.max(a.left, b.left);
+                        const up = Math.min(a.bottom, b.bottom) - Math.max(a.top, b.top);
+                        if (across > 0.5 && up > 0.5) faults.push([label, text, other]);
+                    }
+                });
+            }
+            found[name + " " + width] = [texts, faults];
+            if (Object.keys(found).length == jobs.length) {
+                const out = document.createElement("pre");
+                out.textContent = JSON.stringify(found);
+                document.body.replaceChildren(out);
+            }
+        };
+        document.body.append(frame);
+    }
+    </script>"""
+
+
+def laid_out(folder: Path, pages: list[str]) -> dict[str, tuple[int, list[list[str]]]]:
+    """Page and width -> how many texts its pictures have, and which of them are at fault."""
+    script = _TEXTS.replace("WIDTHS", "[390, 1280]").replace("PAGES", json.dumps(pages))
+    (folder / "texts.html").write_text(script)
+    dom = browse(folder, "--virtual-time-budget=20000", "--dump-dom", (folder / "texts.html").as_uri())
+    told = re.search(r"<pre>(.*?)</pre>", dom, re.S)
+    assert told is not None, dom[-2000:]
+    found: dict[str, tuple[int, list[list[str]]]] = json.loads(html.unescape(told[1]))
+    assert len(found) == 2 * len(pages)
+    return found
+
+
+@in_browser
+def test_no_text_of_a_picture_lies_on_another_or_beyond_its_edge(tmp_path: Path) -> None:
+    """Every kind of page, from shipped sheets and from figures with values of 0 and long names."""
+    sheets = [json.loads((MODELS / f"{name}.json").read_text()) for name in ("cold-store", "on-time")]
+    write_page(sheets[0] | {"shifts": shifts()}, tmp_path / "cold-store.html")
+    write_page(sheets[1], tmp_path / "on-time.html")
+    write_page(summary_figures(), tmp_path / "summary.html")
+    write_look_page(look(SAMPLE), tmp_path / "look.html")
+    traces = [str(SAMPLE.parent / "traces" / "cliff_walking.jsonl.gz")]
+    write_infer_page(infer_files(traces, tmp_path / "family.toml").figures, tmp_path / "infer.html")
+    write_audit_page(audit_figures(), tmp_path / "audit.html")
+    pages = ["cold-store.html", "on-time.html", "summary.html", "look.html", "infer.html", "audit.html"]
+    found = laid_out(tmp_path, pages)
+    assert {place: faults for place, (_, faults) in found.items() if faults} == {}
+    assert min(texts for texts, _ in found.values()) > 15
+
+
+@in_browser
+def test_texts_that_touch_or_leave_are_found(tmp_path: Path) -> None:
+    """The check itself: what overlaps and what is cut off fails it."""
+    (tmp_path / "bad.html").write_text(
+        '<svg aria-label="bad" viewBox="0 0 100 50" width="100" height="50">'
+        '<text x="5" y="20">one</text><text x="12" y="22">two</text><text x="80" y="45">far out</text></svg>'
+    )
+    for _, faults in laid_out(tmp_path, ["bad.html"]).values():
+        assert sorted(f[1:] for f in faults) == [["one", "two"], ["outside", "far out"]]
 
 
 @in_browser

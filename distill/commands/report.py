@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import json
 from pathlib import Path
+from typing import Any
 
 from distill.commands import flags
 
@@ -21,6 +22,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         metavar="FILE.json",
         help="front.json, a sheet, a tour's summary, or train's folder",
     )
+    parser.add_argument(
+        "--shifts",
+        type=Path,
+        metavar="FILE.json",
+        help="what validate --shift --out left: how the scorer does on trees unlike those of training",
+    )
     parser.add_argument("--out", type=flags.out_file, required=True, metavar="PAGE.html")
 
 
@@ -30,12 +37,23 @@ def run(args: argparse.Namespace) -> None:
     from distill.report import write_page
     from distill.sheet import FRONT_FILE
 
-    path = args.figures / FRONT_FILE if args.figures.is_dir() else args.figures
+    figures = _read(args.figures / FRONT_FILE if args.figures.is_dir() else args.figures)
+    if args.shifts is not None:
+        shifts = _read(args.shifts).get("shifts")
+        if not shifts:
+            raise InputError(str(args.shifts), "must hold shifts, as validate --shift --out leaves them")
+        figures["shifts"] = shifts
+    write_page(figures, args.out)
+    print(f"{args.out}: one page, no other files needed")
+
+
+def _read(path: Path) -> dict[str, Any]:
+    from distill.errors import InputError
+
     try:
         figures = json.loads(path.read_text())
     except ValueError as e:
         raise InputError(str(path), f"must be valid JSON ({e})") from None
     if not isinstance(figures, dict):
         raise InputError(str(path), "must hold the figures of train, ship or a tour")
-    write_page(figures, args.out)
-    print(f"{args.out}: one page, no other files needed")
+    return figures

@@ -6,9 +6,11 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Final
 
+import numpy as np
 from matplotlib.figure import Figure
 
-from distill.report.charts import WIDTH, _figure, _floor, _Label, _log_ticks, _place
+from distill.report.axes import above, canvas, floor_of, log_ticks
+from distill.report.labels import Label, place
 from distill.report.theme import DRAWN, styled
 
 __all__ = ["Curve", "curves"]
@@ -20,7 +22,8 @@ _DASHES: Final = ((0, ()), (0, (5, 3)), (0, (1.5, 2)), (0, (6, 2, 1.5, 2)), (0, 
 class Curve:
     """A curve: name, x, y, and the ends of intervals where it has them; `dash` tells curves of a role apart.
 
-    `label_at` : the position of the point that its name stands beside.
+    `few` : for each point, whether too few cases stand behind it to weigh it like the others.
+    A curve without a name has no label.
     """
 
     name: str
@@ -31,7 +34,10 @@ class Curve:
     high: Sequence[float] | None = None
     dash: int = 0
     dots: bool = False
-    label_at: int = -1
+    few: Sequence[bool] | None = None
+
+
+_PLACES = 13  # points of a curve that its name may stand beside
 
 
 @styled
@@ -49,33 +55,42 @@ def curves(
 
     A log y axis has no 0: what is 0 stands on the lower edge, which is labelled 0.
     """
-    figure, (ax,) = _figure(WIDTH, height)
-    seen = [y for c in shown for y in (*c.ys, *(c.low or ()), *(c.high or ()))]
-    floor = _floor(seen)
+    figure, (ax,) = canvas(height)
+    values = [y for c in shown for y in c.ys]
+    lows = [y for c in shown for y in c.low or ()]
+    floor = floor_of(values, lows)
     ax.set(xscale="log", xlabel=x_label, ylabel=y_label, yscale="log" if log_y else "linear")
     ax.grid(which="major")
     labels = []
     for c in shown:
-        ys = [max(y, floor) for y in c.ys] if log_y else list(c.ys)
-        dash = _DASHES[c.dash % len(_DASHES)]
-        ax.plot(
-            c.xs, ys, color=DRAWN[c.role], lw=1.6, ls=dash, marker="o" if c.dots else None, ms=4, gid="curve"
-        )
+        ys = [above(y, floor) for y in c.ys] if log_y else list(c.ys)
+        colour, dash = DRAWN[c.role], _DASHES[c.dash % len(_DASHES)]
+        ax.plot(c.xs, ys, color=colour, lw=1.6, ls=dash, gid="curve")
+        if c.dots:
+            for hollow in (False, True):
+                at = [i for i in range(len(ys)) if bool(c.few is not None and c.few[i]) == hollow]
+                fill = DRAWN["paper"] if hollow else colour
+                ax.plot(
+                    [c.xs[i] for i in at], [ys[i] for i in at], "o", ms=4.5, mfc=fill, mec=colour, gid="dots"
+                )
         if c.low is not None and c.high is not None:
             for x, low, high in zip(c.xs, c.low, c.high, strict=True):
-                ends = [max(v, floor) for v in (low, high)] if log_y else [low, high]
-                ax.plot([x, x], ends, color=DRAWN[c.role], lw=1.2, alpha=0.6, gid="interval")
-        labels.append(_Label(c.name, c.xs[c.label_at], ys[c.label_at], c.role))
+                ends = [above(v, floor) for v in (low, high)] if log_y else [low, high]
+                ax.plot([x, x], ends, color=colour, lw=1.2, alpha=0.6, gid="interval")
+        if c.name:
+            near = sorted({round(i) for i in np.linspace(0, len(ys) - 1, min(_PLACES, len(ys)))})
+            labels.append(Label(c.name, [(c.xs[i], ys[i]) for i in near], c.role))
     if across is not None:
         ax.axhline(across[1], color=DRAWN["quiet"], lw=1, ls=(0, (4, 3)), gid="across")
-        labels.append(_Label(across[0], None, across[1], "quiet"))
+        labels.append(Label(across[0], [], "quiet", across=across[1]))
     xs = [x for c in shown for x in c.xs]
     ax.set_xlim(min(xs) / 1.3, max(xs) * 1.3)
-    _log_ticks(ax.xaxis, ax.get_xlim())
+    log_ticks(ax.xaxis, ax.get_xlim())
     if log_y:
-        ax.set_ylim(floor, max(2 * max(seen), 10 * floor))
-        _log_ticks(ax.yaxis, ax.get_ylim(), zero_at=floor if any(y == 0 for y in seen) else None)
+        highest = max([*values, *(y for c in shown for y in c.high or ()), floor])
+        ax.set_ylim(floor, max(2 * highest, 10 * floor))
+        log_ticks(ax.yaxis, ax.get_ylim(), zero_at=floor if any(y == 0 for y in values) else None)
     elif y_limits is not None:
         ax.set_ylim(*y_limits)
-    _place(ax, labels)
+    place(ax, labels)
     return figure

@@ -15,6 +15,7 @@ from distill.report.theme import one_line, printable, raised
 __all__ = [
     "Child",
     "between",
+    "duration",
     "element",
     "estimate",
     "number",
@@ -95,16 +96,16 @@ def word_list(items: Iterable[tuple[str, Sequence[Child]]]) -> ET.Element:
 
 
 def text_of(x: float | None) -> str:
-    """A figure to three significant digits; whole numbers, and what is 100 or more, to the last unit.
+    """A figure to three significant digits; whole numbers, and what is 100 to a million, to the last unit.
 
-    >>> [text_of(x) for x in (12345, 1234.5, 12.345, 99.98, 0.00012345, None)]
-    ['12,345', '1,234', '12.3', '99.98', '1.23 × 10⁻⁴', '–']
+    >>> [text_of(x) for x in (12345, 1234.5, 12.345, 99.98, 0.00012345, 5.4316e9, None)]
+    ['12,345', '1,234', '12.3', '99.98', '1.23 × 10⁻⁴', '5.43 × 10⁹', '–']
     """
     if x is None:
         return _NONE
-    if isinstance(x, int) or abs(x) >= 100:
+    if isinstance(x, int) or 100 <= abs(x) < 999999.5:
         return f"{x:,.0f}"
-    if x == 0 or abs(x) >= 1e-3:
+    if x == 0 or 1e-3 <= abs(x) < 100:
         # Nearly 100 % is not 100 %.
         return next(t for digits in range(3, 18) if abs(float(t := f"{x:.{digits}g}")) < 100)
     mantissa, _, power = f"{x:.2e}".partition("e")
@@ -114,6 +115,16 @@ def text_of(x: float | None) -> str:
 def number(x: Any) -> ET.Element:
     """A figure as text, with all its digits for machines."""
     return element("span", _NONE) if plain(x) is None else element("data", text_of(x), value=repr(x))
+
+
+def duration(us: float) -> ET.Element:
+    """A time in the unit that suits it, with all its digits in microseconds for machines.
+
+    >>> [duration(us).text for us in (53.47, 6856.8, 14185893.0)]
+    ['53.5 µs', '6.86 ms', '14.2 s']
+    """
+    unit, size = next((u, s) for u, s in (("s", 1e6), ("ms", 1e3), ("µs", 0.0)) if us >= s)
+    return element("data", f"{text_of(us / (size or 1))} {unit}", value=repr(us), class_="duration")
 
 
 def between(e: Mapping[str, Any]) -> str:

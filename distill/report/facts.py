@@ -57,6 +57,8 @@ class Facts:
     summary: Figures
     peers: Mapping[str, Figures]
     break_even: Figures
+    shifts: Mapping[str, Figures]
+    backup: Mapping[str, Figures]
 
     @classmethod
     def read(cls, figures: Figures) -> Facts:
@@ -78,6 +80,7 @@ class Facts:
             title, top["value"], data, parts, top["seed"], top["features"], top["made_with"], scorers,
             top["beside"], timed["leaves"], timed["exact"], top if kind == SHEET_FORMAT else None,
             figures if top is not figures else {}, top.get("peers", {}), top.get("break_even", {}),
+            figures.get("shifts") or top.get("shifts") or {}, timed.get("backup") or {},
         )  # fmt: skip
 
     @property
@@ -91,8 +94,23 @@ class Facts:
 
     @property
     def judged(self) -> dict[str, Figures]:
-        """Name and accuracy of what is shown, then of its peers."""
-        return {**{one.name: one.accuracy for one in self.shown}, **self.beside}
+        """Name and accuracy of what is shown, then of its peers, on all held-out trees where known."""
+        return {**{one.name: one.accuracy for one in self.shown}, **self.without_scorer}
+
+    @property
+    def without_scorer(self) -> dict[str, Figures]:
+        """Name and accuracy of picks without a trained scorer."""
+        return {**self.beside, **{name: m for name, m in self.peers.items() if name not in self.beside}}
+
+    @property
+    def partly_judged(self) -> list[str]:
+        """Peers that were judged on a part of the held-out trees only."""
+        return [name for name in self.peers if name not in self.beside]
+
+    @property
+    def most_accurate(self) -> Shown | None:
+        """The shipped scorer; of a front its slowest, the most accurate on the trees kept for choosing."""
+        return max(self.shown, key=lambda one: time_of(one.latency), default=None)
 
 
 # --- one figure ------------------------------------------------------------------------------------

@@ -1,4 +1,4 @@
-"""Pictures of where a scorer is good: slices, calibration, price of a rollout, break-even; floor 7."""
+"""Pictures of where a scorer is good: slices, calibration, price, shifts, break-even; floor 7."""
 
 from __future__ import annotations
 
@@ -8,24 +8,28 @@ from collections.abc import Iterator, Mapping, Sequence
 from matplotlib.figure import Figure
 
 from distill.report import charts
-from distill.report.charts import Bar
+from distill.report.charts import Row
 from distill.report.curves import Curve, curves
-from distill.report.elements import Child, element, number, text_of
+from distill.report.elements import Child, duration, element, number, stated, text_of
 from distill.report.facts import Figures, ends, known, plain
 from distill.report.theme import svg
 from distill.report.words import CAPTIONS
 
-__all__ = ["break_even_picture", "parts_pictures"]
+__all__ = ["break_even_picture", "parts_pictures", "shifts_picture"]
 
 _SCALE = "units of the tree's scale"
-_LEAST_BAR = 1e-4  # percent: a bar for less would stretch the axis over nothing
+_LEAST = 1e-4  # percent: a dot for less would stretch the axis over nothing
+_FEW = 200  # candidates: of fewer, a share of those within their bound is chance
 
 
 def parts_pictures(name: str, accuracy: Figures) -> Iterator[tuple[str, ET.Element, list[Child]]]:
     """Title, picture and caption of each part that the figures hold."""
     if slices := accuracy.get("slices"):
-        picture = svg(_slices(slices), "slices", f"Forgone share of {name} by slice of trees")
-        yield f"Where {name} loses", picture, [CAPTIONS["slices"]]
+        panels, left_out = _slices(slices)
+        if panels:
+            figure = charts.rows(panels, beside=True, least=_LEAST, x_label="forgone share, %")
+            picture = svg(figure, "slices", f"Forgone share of {name} by slice of trees")
+            yield f"Where {name} loses", picture, [CAPTIONS["slices"], *left_out]
     calibration = accuracy.get("calibration")
     if calibration and calibration["bins"] and calibration["stated"] is not None:
         picture = svg(_coverage(calibration), "bound", f"How often the upper bound of {name} holds")
@@ -37,38 +41,46 @@ def parts_pictures(name: str, accuracy: Figures) -> Iterator[tuple[str, ET.Eleme
         yield f"Stopping by {name}", picture, [CAPTIONS["stop"]]
 
 
-def _slices(slices: Sequence[Figures]) -> Figure:
-    panels: dict[str, list[Bar]] = {}
+def _slices(slices: Sequence[Figures]) -> tuple[dict[str, list[Row]], list[Child]]:
+    """Panels that tell something, and words on those that do not."""
+    panels: dict[str, list[Row]] = {}
     for s in slices:
         value, low, high = ends(s["forgone_percent"])
-        shown = value if value is not None and value >= _LEAST_BAR else None
-        if shown is None or low is None or high is None:
-            low = high = None
-        else:
-            low = max(low, _LEAST_BAR)
-        text = f"{text_of(value)} ({text_of(s['trees'])} trees)"
-        bar = Bar(s["slice"], shown, low, high, text=text, role="scorer")
-        panels.setdefault(f"forgone share, %, by {s['by']}", []).append(bar)
-    return charts.bars(panels, log=True)
+        row = Row(s["slice"], value, low, high, text=text_of(value), role="scorer")
+        panels.setdefault(s["by"], []).append(row)
+    alone = [by for by, rows in panels.items() if len(rows) == 1]
+    lossless = [
+        by
+        for by, rows in panels.items()
+        if by not in alone and not any((r.value or 0) >= _LEAST for r in rows)
+    ]
+    words: list[Child] = []
+    if alone:
+        words.append(f" Not drawn, because all trees are in one slice: {', '.join(alone)}.")
+    if lossless:
+        words.append(f" Not drawn, because no slice lost {_LEAST:.4f} %: {', '.join(lossless)}.")
+    shown = {f"by {by}": rows for by, rows in panels.items() if by not in alone + lossless}
+    return shown, words
 
 
 def _coverage(calibration: Figures) -> Figure:
     bins = calibration["bins"]
     curve = Curve(
-        "held",
+        "",
         [known(b["mean_score"]) for b in bins],
         [known(b["covered_percent"]) for b in bins],
         "scorer",
         dots=True,
+        few=[known(b["candidates"]) < _FEW for b in bins],
     )
-    stated = 100 * known(calibration["stated"])
-    lowest = min([stated, *curve.ys])
+    share = 100 * known(calibration["stated"])
+    lowest = min([share, *curve.ys])
     return curves(
         [curve],
         x_label=f"score, {_SCALE}",
         y_label="candidates within their bound, %",
         y_limits=(min(85.0, lowest - 2), 101),
-        across=(f"stated: {stated:g} %", stated),
+        across=(f"stated: {share:g} %", share),
         height=270,
     )
 
@@ -95,14 +107,17 @@ def _percent(e: Figures) -> list[Child]:
 def _sizes(calibration: Figures) -> Figure:
     bins = [b for b in calibration["bins"] if known(b["mean_score"]) > 0]
     xs = [known(b["mean_score"]) for b in bins]
+    ratios = [known(b["mean_exact"]) / x for b, x in zip(bins, xs, strict=True)]
+    low, high = min([0.95, *ratios]), max([1.05, *ratios])
+    few = [known(b["candidates"]) < _FEW for b in bins]
     return curves(
-        [
-            Curve("equal", xs, xs, "quiet", dash=1, label_at=0),
-            Curve("mean exact value", xs, [known(b["mean_exact"]) for b in bins], "scorer", dots=True),
-        ],
+        [Curve("", xs, ratios, "scorer", dots=True, few=few)],
         x_label=f"mean score, {_SCALE}",
-        y_label="mean exact value, same unit",
-        log_y=True,
+        y_label="mean exact value over mean score",
+        log_y=high > 4 or low < 0.25,
+        y_limits=(0.97 * low, 1.03 * high),
+        across=("equal", 1.0),
+        height=270,
     )
 
 
@@ -115,8 +130,8 @@ def _stop(name: str, curve: Sequence[Figures]) -> Figure:
     low, high = ([plain(p[key]) or 0.0 for p in curve] for key in ("low", "high"))
     return curves(
         [
-            Curve(name, prices, column("value"), "scorer", low, high, dots=True, label_at=len(prices) // 2),
-            Curve("never roll out", prices, column("stop_at_once"), "peer", label_at=0),
+            Curve(name, prices, column("value"), "scorer", low, high, dots=True),
+            Curve("never roll out", prices, column("stop_at_once"), "peer"),
             Curve("never stop", prices, column("go_on"), "peer", dash=1),
         ],
         x_label=f"price of a rollout, {_SCALE}",
@@ -125,40 +140,57 @@ def _stop(name: str, curve: Sequence[Figures]) -> Figure:
     )
 
 
-# Peers that are drawn even where they are nowhere best, and where on the axis names stand, by role.
+def shifts_picture(shifts: Mapping[str, Figures]) -> tuple[str, ET.Element, list[Child]]:
+    """Title, picture and caption of what trees unlike those of training cost."""
+    rows = [
+        Row(
+            name, *ends(m["forgone_percent"]), text=stated(m["forgone_percent"]).partition(" (")[0],
+            role="scorer", rival=plain(m["first_order_forgone_percent"]),
+        )
+        for name, m in shifts.items()
+    ]  # fmt: skip
+    figure = charts.rows({"forgone share, %": rows}, beside=True, least=_LEAST)
+    picture = svg(figure, "shifts", f"Forgone share where trees are unlike training: {', '.join(shifts)}")
+    return "Trees unlike those of training", picture, [CAPTIONS["shifts"]]
+
+
+# Peers that are drawn even where they are nowhere best.
 _DRAWN_PEERS = ("first-order closed form", "static closed form", "UCT")
-_LABELS = {"scorer": (0.5, 0.4), "exact": (0.62,), "peer": (0.2, 0.92, 0.36, 0.92, 0.1)}
 
 
 def break_even_picture(found: Figures, roles: Mapping[str, str]) -> tuple[str, ET.Element, list[Child]]:
-    """Title, picture and caption of what each way to pick gains, by cost of a rollout."""
+    """Title, picture and caption of what each way to pick gains, by cost of a rollout.
+
+    Drawn are the ways that are best somewhere, the scorer that gains most where rollouts are dear, exact
+    values and the commonest peers: the curves of a front's scorers lie upon one another.
+    """
     costs = [known(c) / 1000 for c in found["costs_us"]]
-    taken = {one["name"] for one in found["best"]}
+    gains = {name: [known(g) for g in curve] for name, curve in found["gain_percent"].items()}
+    drawn = {*(one["name"] for one in found["best"]), *_DRAWN_PEERS}
+    drawn |= {name for name in gains if roles.get(name) == "exact"}
+    scorers = [name for name in gains if roles.get(name) == "scorer"]
+    drawn |= {max(scorers, key=lambda name: gains[name][-1])} if scorers else set()
     used: dict[str, int] = {}
     shown = []
-    for name, gains in found["gain_percent"].items():
+    for name in (name for name in gains if name in drawn):
         role = roles.get(name, "peer")
-        if role == "peer" and name not in taken and name not in _DRAWN_PEERS:
-            continue
         used[role] = used.get(role, -1) + 1
-        at = int(len(costs) * _LABELS[role][used[role] % len(_LABELS[role])])
-        shown.append(Curve(name, costs, [known(g) for g in gains], role, dash=used[role], label_at=at))
+        shown.append(Curve(name, costs, gains[name], role, dash=used[role]))
     picture = svg(
         curves(
             shown,
-            x_label="cost of one rollout, ms",
+            x_label="cost of one rollout, ms; one scoring for each rollout",
             y_label="gain per time, % of free exact picks",
             y_limits=(0, 102),
             height=400,
         ),
         "break-even",
-        f"Gain per time of {', '.join(found['gain_percent'])}, by cost of a rollout",
+        f"Gain per time of {', '.join(c.name for c in shown)}, by cost of a rollout",
     )
-    caption: list[Child] = [CAPTIONS["break-even"]]
+    best = []
     for one in found["best"]:
         low, high = plain(one["from_us"]), plain(one["to_us"])
-        caption += [element("span", f" {one['name']}: ", class_="way")]
-        start: list[Child] = [] if low is None else ["from ", number(low), " µs "]
-        end: list[Child] = [] if high is None else ["up to ", number(high), " µs "]
-        caption += [*(start + end or ["at every cost"]), ";" if one is not found["best"][-1] else "."]
-    return "What pays at what cost of a rollout", picture, caption
+        start: list[Child] = [] if low is None else [" from ", duration(low)]
+        end: list[Child] = [] if high is None else [" up to ", duration(high)]
+        best.append(element("li", one["name"], ":", *(start + end or [" at every cost"])))
+    return "What pays at what cost of a rollout", picture, [CAPTIONS["break-even"], element("ul", *best)]

@@ -6,10 +6,10 @@ import xml.etree.ElementTree as ET
 from collections.abc import Iterable, Iterator, Mapping
 
 from distill.report import charts
-from distill.report.charts import Bar, Peer, Point
+from distill.report.charts import Peer, Point, Row
 from distill.report.elements import Child, element, number, stated, text_of
 from distill.report.facts import SHARES, Facts, Figures, ends, known, plain, time_of
-from distill.report.more_pictures import break_even_picture, parts_pictures
+from distill.report.more_pictures import break_even_picture, parts_pictures, shifts_picture
 from distill.report.theme import svg
 from distill.report.words import CAPTIONS, SHARE_NAMES
 
@@ -21,16 +21,20 @@ def pictures(facts: Facts) -> Iterator[ET.Element]:
     ring = f" {CAPTIONS['ring']}" if facts.sheet is not None else ""
     yield _framed("Loss against decision time", front_picture(facts), CAPTIONS["front"] + ring)
     loss = _loss_picture(facts.judged, [one.name for one in facts.shown], "loss")
-    yield _framed("What picks lose", loss, CAPTIONS["loss"])
+    part = f" {CAPTIONS['part']}" if facts.partly_judged else ""
+    yield _framed("What picks lose", loss, CAPTIONS["loss"] + part)
     yield _framed(f"One decision over {facts.leaves} leaves", _time_picture(facts), CAPTIONS["time"])
-    for i, one in enumerate(facts.shown):
+    # Of a front, the ends: its fastest and its most accurate.
+    by_time = sorted(facts.shown, key=lambda one: time_of(one.latency))
+    for i, one in enumerate(by_time[:1] + by_time[1:][-1:]):
         if one.pairs is not None:
             yield _pairs_framed(one.name, one.pairs, f"pairs-{i}")
-    if facts.shown:
-        # Of a front, only its slowest: the most accurate on the trees kept for choosing.
-        one = max(facts.shown, key=lambda one: time_of(one.latency))
-        for title, picture, caption in parts_pictures(one.name, one.accuracy):
+    if (best := facts.most_accurate) is not None:
+        for title, picture, caption in parts_pictures(best.name, best.accuracy):
             yield _framed(title, picture, *caption)
+    if facts.shifts:
+        title, picture, caption = shifts_picture(facts.shifts)
+        yield _framed(title, picture, *caption)
     if found := facts.break_even:
         roles = dict.fromkeys(found["gain_percent"], "scorer")
         roles |= dict.fromkeys(facts.peers, "peer")
@@ -43,7 +47,7 @@ def pictures(facts: Facts) -> Iterator[ET.Element]:
         yield _framed("What picks lose on recorded trees", picture, CAPTIONS["traces"])
 
 
-def front_picture(facts: Facts, *, width: float = charts.WIDTH, height: float = 340) -> ET.Element:
+def front_picture(facts: Facts, *, width: float = charts.WIDTH, height: float = 380) -> ET.Element:
     """The front: forgone share against median decision time, log-log."""
     chosen = facts.sheet["recipe"] if facts.sheet is not None else None
     points = [
@@ -57,9 +61,10 @@ def front_picture(facts: Facts, *, width: float = charts.WIDTH, height: float = 
         for e in facts.scorers
     ]
     peers = [
-        Peer(name, loss, time_of(m["latency"]) if "latency" in m else None)
-        for name, m in {**facts.beside, **facts.peers}.items()
+        Peer(name, loss, time_of(timed["latency"]) if "latency" in timed else None)
+        for name, m in facts.without_scorer.items()
         if (loss := plain(m["forgone_percent"]["value"])) is not None
+        for timed in (facts.peers.get(name, m),)
     ]
     figure = charts.front(
         points,
@@ -78,22 +83,26 @@ def _loss_picture(rows: Mapping[str, Figures], scorers: Iterable[str], name: str
     chosen = set(scorers)
     panels = {
         f"{SHARE_NAMES[key]}, %": [
-            Bar(row, *ends(m[key]), text=stated(m[key]), role="scorer" if row in chosen else "peer")
+            Row(row, *ends(m[key]), text=stated(m[key]), role="scorer" if row in chosen else "peer")
             for row, m in rows.items()
         ]
         for key in SHARES
     }
-    return svg(charts.bars(panels), name, f"Both shares forgone by {', '.join(rows)}, as in the tables")
+    return svg(
+        charts.rows(panels, most=100.0), name, f"Both shares forgone by {', '.join(rows)}, as in the tables"
+    )
 
 
 def _time_picture(facts: Facts) -> ET.Element:
     timed = {one.name: (one.latency, "scorer") for one in facts.shown}
+    timed |= {f"backup {name}": (t, "scorer") for name, t in facts.backup.items()}
+    timed |= {name: (m["latency"], "peer") for name, m in facts.peers.items() if "latency" in m}
     timed |= {f"exact {name}": (t, "exact") for name, t in facts.exact.items()}
     rows = []
     for name, (t, role) in timed.items():
         p50, p99 = time_of(t), time_of(t, "p99_us")
-        rows.append(Bar(name, p50, p50, p99, text=f"{text_of(p50)} ({text_of(p99)})", role=role))
-    figure = charts.bars({"median time, µs (99 of 100)": rows}, log=True)
+        rows.append(Row(name, p50, p50, p99, text=f"{text_of(p50)} ({text_of(p99)})", role=role))
+    figure = charts.rows({"median time, µs (99 of 100)": rows})
     return svg(figure, "time", f"Median decision time of {', '.join(timed)}, as in the table")
 
 

@@ -16,7 +16,7 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator, NullLocator
 from scipy.special import ndtri
 
-from distill.report.charts import WIDTH
+from distill.report.axes import canvas
 from distill.report.theme import DRAWN, SMALL, one_line, raised, styled
 
 __all__ = ["Span", "histogram", "normal_plot", "quantile_bars", "spans"]
@@ -42,7 +42,7 @@ def quantile_bars(panels: Mapping[str, tuple[Sequence[float], Sequence[float], s
 
     The upper row of a panel has the scorer's colour, the lower the peer's; an empty row stays empty.
     """
-    figure, axes = _figure(62.0 * len(panels) + 10, len(panels))
+    figure, axes = canvas(62.0 * len(panels) + 10, [1] * len(panels))
     for ax, (name, (first, second, text)) in zip(axes, panels.items(), strict=True):
         ax.text(0, 1.04, one_line(name, _LONGEST), transform=ax.transAxes, fontsize=SMALL, va="bottom")
         ax.text(
@@ -64,13 +64,16 @@ def quantile_bars(panels: Mapping[str, tuple[Sequence[float], Sequence[float], s
             ax.plot([middle], [y], "o", ms=5, color=DRAWN[role], gid="median")
         ax.set(ylim=(1.7, -0.7))
         _plain_axis(ax)
+        only = {*first, *second}
+        if len(only) == 1:
+            ax.set_xticks(list(only))
     return figure
 
 
 @styled
 def histogram(edges: Sequence[float], counts: Sequence[float], *, x_label: str, role: str) -> Figure:
     """Counts between edges that are decades; the axis names powers of ten."""
-    figure, (ax,) = _figure(240, 1)
+    figure, (ax,) = canvas(240)
     if counts:
         ax.bar(
             edges[:-1], counts, np.diff(edges), align="edge", color=DRAWN[role], alpha=0.8, lw=0, gid="bar"
@@ -89,7 +92,7 @@ def histogram(edges: Sequence[float], counts: Sequence[float], *, x_label: str, 
 @styled
 def normal_plot(sample: Sequence[float]) -> Figure:
     """Sorted values against the quantiles of a standard normal; on the line they would be one."""
-    figure, (ax,) = _figure(340, 1)
+    figure, (ax,) = canvas(340)
     n = len(sample)
     expected = ndtri((np.arange(n) + 0.5) / n) if n else np.zeros(0)
     ends = [min([-3.0, *sample]), max([3.0, *sample])]
@@ -104,7 +107,7 @@ def normal_plot(sample: Sequence[float]) -> Figure:
 @styled
 def spans(panels: Mapping[str, Sequence[Span]], limits: Mapping[str, float]) -> Figure:
     """Values with intervals, a panel for each title; a dashed line where `limits` has one for the panel."""
-    figure, axes = _figure(
+    figure, axes = canvas(
         sum(34.0 * len(rows) + 64 for rows in panels.values()), [len(rows) + 1 for rows in panels.values()]
     )
     for ax, (title, rows) in zip(axes, panels.items(), strict=True):
@@ -128,16 +131,6 @@ def spans(panels: Mapping[str, Sequence[Span]], limits: Mapping[str, float]) -> 
         ax.set(xlim=(0, top), ylim=(len(rows) - 0.4, -0.7))
         _plain_axis(ax)
     return figure
-
-
-def _figure(height: float, rows: int | Sequence[int]) -> tuple[Figure, list[Axes]]:
-    figure = Figure(figsize=(WIDTH / 72, height / 72))
-    figure.patch.set_visible(False)
-    ratios = [1] * rows if isinstance(rows, int) else list(rows)
-    axes = figure.subplots(len(ratios), 1, squeeze=False, gridspec_kw={"height_ratios": ratios})[:, 0]
-    for ax in axes:
-        ax.patch.set_visible(False)
-    return figure, list(axes)
 
 
 def _plain_axis(ax: Axes) -> None:

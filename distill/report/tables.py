@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import xml.etree.ElementTree as ET
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
+from typing import Final
 
-from distill.report.elements import Child, element, estimate, number, section, table
+from distill.report.elements import Child, element, estimate, number, section, table, word_list
 from distill.report.facts import SHARES, Facts, Figures
 from distill.report.words import CAPTIONS, COLUMNS
 
@@ -14,19 +15,25 @@ __all__ = ["origin", "tables"]
 
 def tables(facts: Facts) -> Iterator[ET.Element]:
     """A section for each table, in reading order."""
-    yield section("Accuracy on held-out trees", *_accuracy(facts.judged))
-    yield section(f"Time of one decision over {facts.leaves} leaves", _times(facts))
+    yield section("Accuracy on held-out trees", *_accuracy(facts.judged, facts.partly_judged))
+    backup = [element("p", CAPTIONS["backup"], class_="note")] if facts.backup else []
+    yield section(f"Time of one decision over {facts.leaves} leaves", _times(facts), *backup)
     yield section("The scorers that were trained", _scorers(facts))
+    if (best := facts.most_accurate) is not None and (slices := best.accuracy.get("slices")):
+        yield section(f"By slice of trees, {best.name}", _slices(slices))
+    if facts.shifts:
+        yield section("Trees unlike those of training", _shifts(facts.shifts), _shift_words(facts.shifts))
     if traces := facts.summary.get("on traces"):
         yield section("Accuracy on recorded trees", *_accuracy(traces))
     if tree := facts.summary.get("one tree"):
         yield section("One tree, exactly and by scorer", element("p", CAPTIONS["tree"]), _one_tree(tree))
 
 
-def _accuracy(rows: Mapping[str, Figures]) -> list[ET.Element]:
+def _accuracy(rows: Mapping[str, Figures], part: Sequence[str] = ()) -> list[ET.Element]:
+    """part : rows that were measured on a part of the trees."""
     columns = [key for key in COLUMNS if any(key in m for m in rows.values())]
     body = {name: [estimate(m.get(key)) for key in columns] for name, m in rows.items()}
-    out = [table([COLUMNS[key] for key in columns], body)]
+    out = [table([COLUMNS[key] for key in columns], body, dict.fromkeys(part, "on a part of the trees"))]
     measured = next((m for m in rows.values() if "interval_level" in m), None)
     if measured is None:
         return out
@@ -41,6 +48,8 @@ def _accuracy(rows: Mapping[str, Figures]) -> list[ET.Element]:
 def _times(facts: Facts) -> ET.Element:
     faster = facts.sheet["decision"]["times_faster"] if facts.sheet is not None else {}
     timed = [(one.name, one.latency, None) for one in facts.shown]
+    timed += [(f"backup {name}", t, None) for name, t in facts.backup.items()]
+    timed += [(name, m["latency"], None) for name, m in facts.peers.items() if "latency" in m]
     timed += [(f"exact {name}", t, faster.get(name)) for name, t in facts.exact.items()]
     header = [
         "median, µs",
@@ -71,6 +80,39 @@ def _scorers(facts: Facts) -> ET.Element:
         ]
     header = (*(COLUMNS[key] for key in SHARES), "median, µs", "99 of 100, µs", "file, bytes", "training, s")
     return table(header, rows, marks)
+
+
+def _slices(slices: Sequence[Figures]) -> ET.Element:
+    rows = {
+        f"{s['by']}: {s['slice']}": [
+            number(s["trees"]),
+            number(s["candidates"]),
+            *(estimate(s[key]) for key in SHARES),
+            number(s["covered_percent"]),
+        ]
+        for s in slices
+    }
+    return table(("trees", "candidates", *(COLUMNS[key] for key in SHARES), "bound holds, %"), rows)
+
+
+_SHIFT_COLUMNS: Final = {
+    "trees": "trees",
+    **{key: COLUMNS[key] for key in SHARES},
+    "first_order_forgone_percent": "first-order form's forgone share, %",
+    "covered_percent": "bound holds, %",
+    "flagged_trees_percent": "trees flagged, %",
+    "loss_flagged_percent": "loss flagged, %",
+}
+
+
+def _shifts(shifts: Mapping[str, Figures]) -> ET.Element:
+    rows = {name: [estimate(m.get(key)) for key in _SHIFT_COLUMNS] for name, m in shifts.items()}
+    return table(list(_SHIFT_COLUMNS.values()), rows)
+
+
+def _shift_words(shifts: Mapping[str, Figures]) -> ET.Element:
+    told: list[tuple[str, list[Child]]] = [(name, [m["changed"]]) for name, m in shifts.items()]
+    return element("div", element("p", CAPTIONS["flagged"], class_="note"), word_list(told))
 
 
 def _one_tree(tree: Figures) -> ET.Element:

@@ -51,6 +51,7 @@ _STYLE: Final[dict[str, Any]] = {
     "xtick.color": DRAWN["line"],
     "xtick.labelcolor": DRAWN["quiet"],
     "xtick.labelsize": SMALL,
+    "xtick.major.pad": 6.0,  # clear of the lowest text beside the other axis
     "ytick.color": DRAWN["line"],
     "ytick.labelcolor": DRAWN["quiet"],
     "ytick.labelsize": SMALL,

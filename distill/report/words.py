@@ -25,31 +25,35 @@ CAPTIONS: Final = {
         "Each dot is a trained scorer: to the left it decides faster, further down it loses less. Upright "
         "lines are intervals. Filled dots, joined, are on the front: on trees kept for choosing, no other "
         "scorer beat them in both time and loss. The other colour: picks without a trained scorer, a dashed "
-        "line where their time was not measured. What has no loss at all stands on the lower edge, marked 0."
+        "line where their time was not measured. What has no loss at all stands on the lower edge, marked 0; "
+        "an interval that reaches the edge goes on below it."
     ),
     "ring": "The ringed dot is the scorer this page is about.",
     "loss": (
-        "Shorter is better. Thin lines at the ends of bars are intervals, in brackets above. A random pick's "
-        "loss is an expectation and has none."
+        "Further left is better; each step of the scale is ten times the one before. Broad lines are "
+        "intervals, in brackets above. A random pick's loss is an expectation and has none."
     ),
+    "part": "Peers that the table of accuracy marks were judged on a part of the held-out trees.",
     "time": (
-        "Shorter is better; each step of the scale is ten times the one before. A bar ends at the median; "
-        "a thin line runs on to the time that 99 of 100 decisions keep, in brackets above."
+        "Further left is better; each step of the scale is ten times the one before. A dot is the median; "
+        "the broad line runs on to the time that 99 of 100 decisions keep, in brackets above."
     ),
     "pairs": (
         "Each dot is one candidate of a held-out tree; on the line, the scorer's value is the exact one. "
         "Values are shares of the tree's scale, so trees of any unit stand side by side."
     ),
     "slices": (
-        "Held-out trees parted by what they are, each part about as large. Shorter is better; each step of "
-        "the scale is ten times the one before. A slice without a bar lost less than 0.0001 %."
+        "Forgone share of held-out trees parted by what they are, each part about as large. Further left "
+        "is better; broad lines are intervals. What lost less than the lower edge stands on it. The table by "
+        "slice has every figure."
     ),
     "bound": (
         "A calibrated upper bound comes with each score. Each dot: of the candidates scored about so high, "
-        "the share whose exact value lies within the bound."
+        "the share whose exact value lies within the bound; hollow, where they are fewer than 200."
     ),
     "sizes": (
-        "Each dot: of the candidates scored about so high, the mean exact value. On the line, both agree."
+        "Each dot: of the candidates scored about so high, the mean exact value as a multiple of the mean "
+        "score; hollow, where they are fewer than 200. Above the line scores are too low, below it too high."
     ),
     "stop": (
         "An agent goes on while the best score is worth its price. What it loses a tree by stopping or going "
@@ -58,8 +62,23 @@ CAPTIONS: Final = {
     ),
     "break-even": (
         "A way to pick that forgoes little but decides slowly pays where rollouts are dear. Worked out from "
-        "the measured forgone shares and times, for one decision a rollout: what each gains in a given time, "
-        "as a share of what exact picks would that took no time. Best:"
+        "the measured forgone shares and times on the assumption that every rollout costs one scoring: what "
+        "each way gains in a given time, as a share of what exact picks would that took no time. An agent "
+        "that spends several rollouts on one scoring reads its chart at the cost of them all. Best:"
+    ),
+    "shifts": (
+        "Fresh trees of the scorer's family, and of families that differ from it in one thing each. Round: "
+        "the scorer, broad lines its intervals; the other colour: the first-order closed form on the same "
+        "trees. Further left is better."
+    ),
+    "backup": (
+        "A scorer of records reads rows that the backup fills: its time comes on top of the scorer's, in "
+        "full at a new tree and after one rollout from then on."
+    ),
+    "flagged": (
+        "Flagged: some leaf of the tree lies outside what training saw, and the scorer says so. Loss "
+        "flagged: of all that its picks forgo, the part in flagged trees. Bound holds: candidates at or "
+        "below their upper bound."
     ),
     "traces": "On decisions of a real search, recorded and kept from the training of every scorer here.",
     "tree": "The best candidate is the one to spend the next rollouts on.",
@@ -118,6 +137,13 @@ WORDS: Final = {
     "first-order closed form": (
         "A formula that sets one leaf against the best rival; the value from which the scorer starts."
     ),
+    "static VOC of one rollout": "The static closed form for a single rollout instead of the best batch.",
+    "moment matching with quadrature": (
+        "The other leaves' best outcome taken as one Gaussian of matching moments, then a numerical integral."
+    ),
+    "Monte Carlo in equal time": "The value by simulation, with as many samples as take the scorer's time.",
+    "UCT": "Picks by an upper confidence bound from means and counts; it works out no value.",
+    "Thompson sampling": "Picks the leaf that is best in one draw of all beliefs; it works out no value.",
     "random pick": "Any candidate with equal chance: what is lost without any judgement.",
     "scale of a tree": "The largest standard deviation that any of its leaves brings to the root.",
 }
@@ -147,6 +173,7 @@ p{margin:.5rem 0;max-width:46rem}
 figure{margin:0 0 2rem;break-inside:avoid}
 figure svg{display:block;width:100%;max-width:33rem;height:auto;margin:.25rem 0 .5rem}
 figcaption{max-width:33rem}
+figcaption ul{margin:.25rem 0 0;padding-left:1.25rem}
 table{border-collapse:collapse;width:100%;font-variant-numeric:tabular-nums}
 th,td{padding:.4rem .75rem .4rem 0;text-align:left;vertical-align:top;border-bottom:1px solid var(--line)}
 thead th{color:var(--quiet);font-size:.875rem;font-weight:600;vertical-align:bottom}
@@ -167,7 +194,7 @@ td{overflow-wrap:anywhere}
  tr{padding:.6rem 0;border-bottom:1px solid var(--line)}
  tbody th,td{border:0;padding:.1rem 0}
  td{display:flex;justify-content:space-between;gap:1rem;text-align:right}
- td::before{content:attr(data-label);color:var(--quiet);text-align:left}
+ td::before{content:attr(data-label);color:var(--quiet);text-align:left;flex:0 1 auto;min-width:35%}
  .words{grid-template-columns:1fr;gap:0}
  .words dd{margin-bottom:.75rem}
 }

@@ -6,7 +6,7 @@ As `features` says it, with the horizon h a number of the call: 0, finite and in
 infinity, and never 0 / 0, as r is above 0 and no longer infinite here. The table holds M_h.
 
 *Siblings below the table.* For small h the table is narrow, and the siblings of an action's best leaf may
-all lie below it. Their maximum is then the largest of their means.
+all lie below it. Their maximum is then that of the largest mean, and varies as it.
 
 *Knowing better.* The action that is best also gains by being known better, by
 
@@ -62,7 +62,7 @@ def build_graph(*, points: int = 16, batch: int | None = None) -> onnx.ModelProt
     noise = g("Div", "noise_var", "var", out="noise_ratio")
     action = g("GreaterOrEqual", "action", g.whole(0))
     g("And", action, g("Greater", "noise_ratio", g.double(0.0)), out="valid")
-    known = g("Max", _learned(g, v, noise, h), g.double(TINY))
+    known = g.at_least(_learned(g, v, noise, h), TINY)
     low, high, top, joint, rest = _table(g, m, g("Sqrt", known), points)
     value, others, spread2 = moments(g, low, high, joint, rest, points)
 
@@ -72,7 +72,11 @@ def build_graph(*, points: int = 16, batch: int | None = None) -> onnx.ModelProt
     rival = g("Where", best, second, g("ReduceMax", value))
     below = g("GreaterOrEqual", g("ReduceL1", rest, g.whole(1), keepdims=0), g.single(_SURE * points))
     sibling = g("Where", g("And", best, g("Greater", top, m)), m, g.double(-LARGE))
-    others = g("Where", g("And", best, below), g("ReduceMax", sibling), others)
+    below = g("And", best, below)
+    largest = g("ReduceMax", sibling)
+    own_spread = g("ReduceMax", g("Where", g("Equal", sibling, largest), known, g.double(0.0)))
+    others = g("Where", below, largest, others)
+    spread2 = g("Where", below, own_spread, spread2)
 
     theta2 = g("Add", spread2, known)
     theta = g("Sqrt", theta2)
@@ -89,7 +93,7 @@ def build_graph(*, points: int = 16, batch: int | None = None) -> onnx.ModelProt
     lead = start.cut(g("Div", g("Sub", value, rival), theta_k))
     own = _known_better(g, above, theta, theta_k)
     if batch is None:
-        own = g("Div", own, g("Max", start.k, g.double(1.0)))
+        own = g("Div", own, g.at_least(start.k, 1.0))
     own = g("Where", g("GreaterOrEqual", lead, g.double(0.0)), own, g.double(0.0))
     columns = (
         start.z, help_, g("Div", start.s_k, theta_k), above, lead, g("Div", theta, theta_k),
@@ -115,17 +119,17 @@ def _known_better(g: Nodes, above: str, theta: str, theta_k: str) -> str:
 def _table(g: Nodes, m: str, s: str, points: int) -> tuple[str, str, str, str, str]:
     """Ends of each leaf's action table and the action's largest m, shape (1, n), and F and R at its points,
     shape (n, points)."""
-    row = g("Unsqueeze", "action", g.whole(1))
+    rows = g("Add", "action", g.constant(np.zeros((3, 1), dtype=np.int64)))
     ends = g("Add", g("Mul", s, g.double([[-_BELOW], [_ABOVE], [0.0]])), m)
-    ends = g("Transpose", ends, perm=[1, 0])
-    ends = g("ScatterND", g("Min", ends, g.double(-LARGE)), row, ends, reduction="max")
-    ends = g("Transpose", g("Gather", ends, "action"), perm=[1, 0])
+    ends = g("ScatterElements", g.at_most(ends, -LARGE), rows, ends, axis=1, reduction="max")
+    ends = g("Gather", ends, "action", axis=1)
     low, high, top = g.split(ends, 3, axis=0)
-    z = g("Min", g("Div", g("Sub", ends, m), s), g.double(_FAR))
+    z = g.at_most(g("Div", g("Sub", ends, m), s), _FAR)
     z = g("Cast", z, to=TensorProto.FLOAT)
     t = midpoints(points)
     z = g("Gemm", z, g.single(np.stack([1 - t, t, np.zeros(points)]) / np.sqrt(2)), transA=1)
-    phi = g("Add", g("Mul", g("Erf", z), g.single(_PHI_SLOPE)), g.single(0.5))
-    joint = g("ScatterND", g("Max", phi, g.single(1.0)), row, phi, reduction="mul")
+    phi = g("HardSigmoid", g("Erf", z), alpha=_PHI_SLOPE, beta=0.5)
+    row = g("Unsqueeze", "action", g.whole(1))
+    joint = g("ScatterND", g("HardSigmoid", phi, alpha=0.0, beta=1.0), row, phi, reduction="mul")
     joint = g("Gather", joint, "action")
     return low, high, top, joint, g("Div", joint, phi)

@@ -151,6 +151,7 @@ class Recorder:
         action: Any = None,
         cost: Any = None,
         remaining: Any = None,
+        horizon: Any = None,
         extra: Any = None,
         **unknown: object,
     ) -> None:
@@ -160,9 +161,10 @@ class Recorder:
         var_i); a rollout adds noise of variance noise_var_i and costs cost_i >= 0; 0 < gain_i <= 1.
         Win/loss leaves: alpha, beta, low, high instead, X_i = low_i + (high_i - low_i) p_i, p_i ~
         Beta(alpha_i, beta_i).
-        Missing gain is 1, missing offset and cost are 0. remaining : whole rollouts left. extra : an
-        object for JSON to keep beside the tree. The record has the root, a decision node an action in
-        order of position, and the leaves in order, with gain as discount and offset as reward.
+        Missing gain is 1, missing offset and cost are 0. remaining : whole rollouts left. horizon : that of
+        the scorer's call, inf allowed. extra : an object for JSON to keep beside the tree. The record has the
+        root, a decision node an action in order of position, and the leaves in order, with gain as discount
+        and offset as reward.
         Never raises (but `strict`): arguments that make no such record are counted as invalid.
         """
         if self._drawn():
@@ -170,6 +172,7 @@ class Recorder:
                 "mean": mean, "var": var, "noise_var": noise_var,
                 "alpha": alpha, "beta": beta, "low": low, "high": high,
                 "gain": gain, "offset": offset, "action": action, "cost": cost, "remaining": remaining,
+                "horizon": horizon,
             }  # fmt: skip
             self._offer(copy_table, columns, extra, unnamed, unknown)
 

@@ -158,6 +158,8 @@ def _table_line(seen: Seen, pause: Callable[[], None]) -> bytes:
         record[key] = _array([at_inner] * inner, x, pause)
     if "remaining" in seen.columns:
         record["remaining"] = str(_whole(seen.columns["remaining"]))
+    if "horizon" in seen.columns:
+        record["horizon"] = _horizon(seen.columns["horizon"], "alpha" in seen.columns)
     if seen.extra is not None:
         if not isinstance(parse_json(seen.extra), dict):
             raise InputError("extra", "must be an object", seen.extra)
@@ -228,7 +230,7 @@ def _checked(columns: dict[str, NDArray[Any]]) -> tuple[dict[str, NDArray[np.flo
         raise InputError(first, f"must have shape (n,), n from 1 to {MAX_LEAVES}", columns[first].shape)
     out = {}
     for name, x in columns.items():
-        if name == "remaining":
+        if name in _SCALAR_KEYS:
             continue
         if x.shape != (n,):
             raise InputError(name, f"must have shape ({n},), as {first!r}", x.shape)
@@ -267,6 +269,19 @@ def _whole(remaining: NDArray[Any]) -> int:
     if not 0 <= value <= schema.MAX_ROLLOUTS or value != int(value):
         raise InputError("remaining", "must be a whole number from 0 to 2^53", value)
     return int(value)
+
+
+def _horizon(horizon: NDArray[Any], whole: bool) -> str:
+    if horizon.size != 1:
+        raise InputError("horizon", "must be one number", horizon.shape)
+    value = float(horizon.item())
+    if not value >= 0:
+        raise InputError("horizon", "must be >= 0", value)
+    if value == math.inf:
+        return '"inf"'
+    if whole and value != int(value):
+        raise InputError("horizon", "must be a whole number or infinite for win/loss leaves", value)
+    return json.dumps(value)
 
 
 def _demand(name: str, values: NDArray[Any], ok: NDArray[np.bool_], rule: str) -> None:

@@ -23,11 +23,12 @@ from distill.errors import InputError, ScorerFileError
 from distill.family import draw, load_family, parse_family
 from distill.generate import generate
 from distill.query import Query
+from distill.recorder import Recorder
 from distill.runtime import Scorer
 from distill.scorer_inputs import ANY_HORIZON, VARIES
 from distill.ship import ship
 from distill.sources import Traces
-from distill.traces import write_trees
+from distill.traces import read_trees, write_trees
 from distill.train import train
 from distill.validate import validate
 from distill.voc import price
@@ -226,6 +227,22 @@ def test_the_self_test_holds_every_horizon_as_json(scorer):
     told = {case["inputs"]["horizon"] for case in scorer.facts["self_test"]}
     assert told <= {0.0, 4.0, "inf"}
     assert "inf" in told
+
+
+def test_a_recorder_keeps_the_horizon_of_each_call(tmp_path):
+    with Recorder(tmp_path, strict=True) as recorder:
+        for h in (0, 4.5, np.float64(7), math.inf):
+            recorder.see(**one(horizon=h))
+        for wrong in (-1.0, math.nan, [1.0, 2.0]):
+            recorder.strict = False
+            recorder.see(**{**one(), "horizon": wrong})
+        recorder.see(
+            **{name: np.ones(2) for name in ("alpha", "beta", "high")}, low=np.zeros(2),
+            action=np.arange(2), horizon=1.5,
+        )  # fmt: skip
+    assert recorder.counters.invalid == 4
+    trees = [tree for _, tree in read_trees(tmp_path / "trace-000001.jsonl.gz")]
+    assert [tree.horizon for tree in trees] == [0.0, 4.5, 7.0, math.inf]
 
 
 # --- measured --------------------------------------------------------------------------------------

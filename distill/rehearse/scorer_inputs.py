@@ -10,7 +10,7 @@ from distill.backup import backup_of
 from distill.backup_correlated import CorrelatedBackup
 from distill.errors import InputError, RefusedError
 from distill.runtime import Scorer, Scores
-from distill.scorer_inputs import LEAF_TABLE, RECORD, WIN_LOSS_TABLE
+from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE, RECORD, WIN_LOSS_TABLE
 from distill.tree import BeliefTree, leaf_table
 
 __all__ = ["ScorerInputs"]
@@ -21,8 +21,9 @@ class ScorerInputs:
 
     A leaf table is the agent's own arrays; a record is kept up to date by a backup of the tree at the
     horizon that the file was trained for: a path to the root after each rollout, or, with `cov`, the whole
-    tree. Raises RefusedError for trees that the file cannot score: `fit` says so beforehand; InputError
-    where a file of records states no horizon that a backup could have.
+    tree. A file for any horizon is asked for the dynamic value. Raises RefusedError for trees that the file
+    cannot score: `fit` says so beforehand; InputError where a file of records states no horizon that a
+    backup could have.
     """
 
     def __init__(self, scorer: Scorer, tree: BeliefTree) -> None:
@@ -36,14 +37,16 @@ class ScorerInputs:
             kept = ("low", "high") if self._win_loss else ("noise_var",)
             table = leaf_table(tree)
             self._fixed = {name: getattr(table, name) for name in ("gain", "offset", "action", "cost", *kept)}
+        if scorer.kind is ANY_HORIZON:
+            self._fixed["horizon"] = math.inf
 
     @staticmethod
     def fit(scorer: Scorer, tree: BeliefTree) -> bool:
         """Whether the scorer's inputs can hold the tree; without a file the closed form takes leaf tables."""
         if scorer.kind is RECORD:
             return True
-        own = WIN_LOSS_TABLE if tree.mean is None else LEAF_TABLE
-        return not tree.has_chance and tree.cov is None and scorer.kind in (None, own)
+        own = (WIN_LOSS_TABLE,) if tree.mean is None else (LEAF_TABLE, ANY_HORIZON)
+        return not tree.has_chance and tree.cov is None and scorer.kind in (None, *own)
 
     def score(self, posterior: Posterior, remaining: int) -> Scores:
         """One call of the scorer on the beliefs as they are."""

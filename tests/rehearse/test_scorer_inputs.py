@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import pytest
 from dense_trees import two_level
@@ -15,7 +17,7 @@ from distill.rehearse.problems import TreeProblem
 from distill.rehearse.scorer_inputs import ScorerInputs
 from distill.rehearse.value_policies import ByScorer
 from distill.runtime import Scorer
-from distill.scorer_inputs import KINDS, LEAF_TABLE, RECORD, WIN_LOSS_TABLE
+from distill.scorer_inputs import ANY_HORIZON, KINDS, LEAF_TABLE, RECORD, WIN_LOSS_TABLE
 from distill.tree import leaf_table
 
 TREES = {
@@ -47,6 +49,8 @@ def test_columns_follow_the_beliefs(tree, kind, monkeypatch):
     monkeypatch.setattr(scorer, "score", lambda **columns: seen.update(columns))
     inputs.score(search, 7)
     assert seen.pop("remaining") == 7
+    if kind is ANY_HORIZON:
+        assert seen.pop("horizon") == math.inf
     now = search.tree()
     table = None if kind is RECORD else leaf_table(now)
     wanted = Backup(now).rows() if table is None else {name: getattr(table, name) for name in kind.columns}
@@ -58,9 +62,14 @@ def test_columns_follow_the_beliefs(tree, kind, monkeypatch):
 def test_every_kind_takes_the_trees_that_it_can_hold():
     fits = {
         kind: [name for name, p in TREES.items() if ScorerInputs.fit(reads(kind), p.draw(0).tree)]
-        for kind in (LEAF_TABLE, WIN_LOSS_TABLE, RECORD)
+        for kind in KINDS.values()
     }
-    assert fits == {LEAF_TABLE: ["gaussian"], WIN_LOSS_TABLE: ["win/loss"], RECORD: list(TREES)}
+    assert fits == {
+        LEAF_TABLE: ["gaussian"],
+        ANY_HORIZON: ["gaussian"],
+        WIN_LOSS_TABLE: ["win/loss"],
+        RECORD: list(TREES),
+    }
 
 
 @pytest.mark.parametrize("tree", TREES)

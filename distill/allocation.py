@@ -77,6 +77,11 @@ class Search:
         return self._belief.mean, self._belief.var
 
     @property
+    def compiled(self) -> tuple[Topology, Belief, float]:
+        """Tree, posterior and scale as the compiled rules take them; not to be written to."""
+        return self._topology, self._belief, self._scale
+
+    @property
     def trials(self) -> tuple[Floats, Floats]:
         """alpha and beta of each win/loss leaf, shape (n_leaves,), else empty; not to be written to."""
         return self._belief.alpha, self._belief.beta

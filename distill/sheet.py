@@ -19,6 +19,7 @@ __all__ = [
     "backup_text",
     "bound_text",
     "front_table",
+    "peer_table",
     "shift_table",
     "sheet_page",
     "write_sheet",
@@ -118,6 +119,22 @@ def front_table(scorers: Sequence[Mapping[str, Any]]) -> list[str]:
         "| | on the front | forgone share, % | relative forgone, % | p50, us | p99, us | KB | fit, s |",
         "| --- | --- | --- | --- | --- | --- | --- | --- |",
         *(_front_row(e) for e in scorers),
+    ]
+
+
+def peer_table(figures: Mapping[str, Any]) -> list[str]:
+    """Markdown lines: the scorer and each peer of `validate` with peers, and why others are left out."""
+    rows = {"the scorer": figures["accuracy"] | {"latency": figures["latency"]}, **figures["peers"]}
+    return [
+        "| | forgone share, % | relative forgone, % | best picks, % | p50, us | p99, us |",
+        "| --- | --- | --- | --- | --- | --- |",
+        *(
+            f"| {name} | {_estimate(m['forgone_percent'])} | {_estimate(m['relative_forgone_percent'])} "
+            f"| {_estimate(m['top1_percent'])} | {_us(m['latency'])} |"
+            for name, m in rows.items()
+        ),
+        *(["", "Left out:"] if figures["peers_left_out"] else []),
+        *(f"- {name}: {why}" for name, why in figures["peers_left_out"].items()),
     ]
 
 

@@ -51,6 +51,7 @@ def ship(
         "accuracy": entry["held_out"],
         "beside": front["beside"],
         "peers": front.get("peers", {}),
+        "peers_left_out": front.get("peers_left_out", {}),
         "break_even": front.get("break_even", {}),
         "pairs": entry.get("pairs"),
         "decision": {

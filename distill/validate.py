@@ -13,16 +13,18 @@ from distill.errors import InputError
 from distill.fallback import spreads
 from distill.feature_graph import FeatureGraph
 from distill.metrics import measure, random_forgone
+from distill.peers import measure_peers, timed_cases
 from distill.query import Query
 from distill.runtime import Scorer
 from distill.scorer_inputs import ANY_HORIZON, RECORD
 from distill.slices import Scored, calibration, forgone_by_slice, stop_curve, tree_facts
-from distill.timing import tree_of
+from distill.timing import time_scorer, tree_of
 from distill.tree import Floats
 from distill.voc import price
 
 __all__ = ["baselines", "examine", "sample_pairs", "static_values", "validate", "value_of_scorer"]
 
+TIMED_LEAVES: Final = 64  # of the decision whose latency is stated
 _BOOT_OF_PARTS: Final = 200  # draws of the bootstrap for the many figures of slices, bins and prices
 
 
@@ -160,12 +162,15 @@ def validate(
     prices: Sequence[float] = (),
     n_boot: int = 1000,
     seed: int = 0,
+    with_peers: bool = False,
 ) -> dict[str, Any]:
     """A scorer file against the exact labels of a dataset, as JSON values.
 
     `part` says which trees: "held_out" where the dataset draws on the trees that the scorer was trained
     on, else "all". `accuracy` is as from `examine`; `beside` has the closed forms on the same trees; `pairs`
-    is as from `sample_pairs`.
+    is as from `sample_pairs`. with_peers : also time the scorer on decisions of 64 leaves (`latency`) and
+    measure what else could pick on the same trees, within the scorer's time where that can be chosen
+    (`peers`, and `peers_left_out` with reasons).
     Raises InputError where the dataset's value is another than the scorer was trained on.
     """
     if not isinstance(scorer, Scorer):
@@ -186,8 +191,15 @@ def validate(
         candidates = split_by_tree(candidates, trained["seed"]).held_out
     graph = FeatureGraph.of_value(about["value"], candidates.kind)
     first_order = graph.matrix({**candidates.columns, "tree": candidates.tree}).first_order
+    beside: dict[str, Any] = {}
+    if with_peers:
+        cases = timed_cases(candidates, about["value"], TIMED_LEAVES, seed)
+        latency = time_scorer(scorer, cases)
+        rivals, gone = measure_peers(candidates, cases, about["value"], latency.p50, n_boot=n_boot, seed=seed)
+        beside = {"latency": latency.to_json(), "peers": rivals, "peers_left_out": gone}
     return {
         **about,
+        **beside,
         "part": "held_out" if same_trees else "all",
         "accuracy": examine(
             scorer, candidates, facts=tree_facts(candidates), prices=prices, n_boot=n_boot, seed=seed

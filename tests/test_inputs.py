@@ -13,6 +13,7 @@ from hypothesis import strategies as st
 
 from distill.backup import backup_of
 from distill.candidates import Candidates
+from distill.cli import run
 from distill.errors import InputError, ScorerFileError
 from distill.fallback import closed_form_bounds, closed_form_values
 from distill.family import draw, load_family
@@ -154,6 +155,25 @@ def test_the_sheet_states_scorer_backup_and_exact_side_by_side(shipped):
         assert times == decision["exact"][key]["p50_us"] / both < decision["times_faster"][key]
     assert "| one path |" in page
     assert "| exact dynamic rate |" in page
+
+
+def test_peers_of_every_input_are_validated_at_their_own_cost(shipped, capsys, tmp_path):
+    _, data, path = shipped
+    sheet = json.loads(path.with_suffix(".json").read_text())
+    out = tmp_path / "figures.json"
+    assert run(["validate", str(path), str(data), "--peers", "--out", str(out)]) == 0
+    figures = json.loads(out.read_text())
+    assert figures["peers_left_out"] == sheet["peers_left_out"] == {}
+    assert set(figures["peers"]) == set(sheet["peers"])
+    assert len(figures["peers"]) == 7
+    printed = capsys.readouterr().out
+    for name, m in figures["peers"].items():
+        assert f"| {name} | " in printed
+        # The same trees and seeds: the same picks, where no sample depends on the time that it may take.
+        if name != "Monte Carlo in equal time":
+            assert m["top1_percent"]["value"] == sheet["peers"][name]["top1_percent"]["value"]
+    assert run(["validate", str(path), "--peers", "--shift", "on-time"]) == 2
+    assert "peers: must have a dataset" in capsys.readouterr().err
 
 
 def test_another_kind_of_dataset_is_no_ground_for_validation(shipped, tmp_path):

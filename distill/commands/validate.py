@@ -29,6 +29,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--trees", type=flags.whole(1), default=300, metavar="N", help="of each shift (default 300)"
     )
+    parser.add_argument(
+        "--peers",
+        action="store_true",
+        help="measure what else could pick on the dataset's trees, and its time",
+    )
     parser.add_argument("--seed", type=flags.whole(0), default=0, help="of the bootstrap and of drawn trees")
     parser.add_argument("--out", type=flags.out_file, metavar="FILE.json", help="write the figures here too")
 
@@ -39,6 +44,8 @@ def run(args: argparse.Namespace) -> None:
     from distill.family import load_family
     from distill.sample_data import family_path
 
+    if args.dataset is None and args.peers:
+        raise InputError("peers", "must have a dataset, whose trees they are measured on")
     if args.dataset is None and args.shift is None:
         raise InputError("validate", "must be given a dataset, --shift, or both")
     # A wrong name is told before the work.
@@ -53,10 +60,10 @@ def run(args: argparse.Namespace) -> None:
 
 
 def _on_dataset(args: argparse.Namespace) -> dict[str, Any]:
-    from distill.sheet import accuracy_table, bound_text
+    from distill.sheet import accuracy_table, bound_text, peer_table
     from distill.validate import validate
 
-    figures = validate(args.scorer, args.dataset, seed=args.seed)
+    figures = validate(args.scorer, args.dataset, seed=args.seed, with_peers=args.peers)
     accuracy = figures["accuracy"]
     print(f"{args.scorer} on {accuracy['trees']:,} trees of {args.dataset}")
     if figures["part"] == "held_out":
@@ -64,6 +71,8 @@ def _on_dataset(args: argparse.Namespace) -> dict[str, Any]:
     print()
     print("\n".join(accuracy_table({"the scorer": accuracy, **figures["beside"]})))
     print("\n" + "\n".join(bound_text(accuracy["calibration"])))
+    if args.peers:
+        print("\n" + "\n".join(peer_table(figures)))
     return figures
 
 

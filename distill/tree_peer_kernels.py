@@ -1,0 +1,308 @@
+"""Compiled values of rollouts on any tree by moments and by samples, as one would first try; floor 2.
+
+They read a `Topology` and a `Belief` as the allocation rules do, and give one score a leaf: the dynamic value
+of a batch over its rollouts, or with `batch` > 0 of that many. The batch of a rate is that of the static
+threshold: where the leaf's own mean, all others fixed, would change the choice at the root.
+"""
+
+# mypy: allow-untyped-calls
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from distill.closed_form import PEAK
+from distill.kernels import compiled
+from distill.numerics import gain, norm_cdf, norm_pdf
+
+__all__ = ["best_other", "larger", "matched_on_tree", "peak", "sampled_on_tree", "sampled_together"]
+
+
+@compiled
+def best_other(value, own):  # type: ignore[no-untyped-def]
+    """The largest value of another action; -inf where there is none."""
+    rival = -np.inf
+    for a in range(len(value)):
+        if a != own:
+            rival = max(rival, value[a])
+    return rival
+
+
+@compiled
+def larger(m1, v1, m2, v2):  # type: ignore[no-untyped-def]
+    """Mean and variance of the larger of two independent normals (Clark 1961, eqs. 2 and 3)."""
+    theta = math.sqrt(v1 + v2)
+    if theta <= 0.0:
+        return max(m1, m2), 0.0
+    p = (m1 - m2) / theta
+    mean = m2 + theta * gain(p)
+    upper, density = norm_cdf(p), norm_pdf(p)
+    square = (m1 * m1 + v1) * upper + (m2 * m2 + v2) * (1.0 - upper) + (m1 + m2) * theta * density
+    return mean, max(square - mean * mean, 0.0)
+
+
+@compiled
+def peak(gap, v, n, left):  # type: ignore[no-untyped-def]
+    """The best whole batch for a static gap, by the fit of the closed form."""
+    if v <= 0.0:
+        return 1.0
+    u2 = gap * gap / v
+    k = u2 * (PEAK[0] + PEAK[1] / (u2 + PEAK[2])) * n / v
+    return max(1.0, min(float(left), math.floor(k + 0.5)))
+
+
+@compiled
+def _values(t, leaf_value, value):  # type: ignore[no-untyped-def]
+    """Value of every node when leaf values are as given, into `value`; children come after parents."""
+    for v in range(len(t.parent)):
+        value[v] = -np.inf if t.is_decision[v] else 0.0
+    for i in range(len(t.leaf)):
+        value[t.leaf[i]] = leaf_value[i]
+    for v in range(len(t.parent) - 1, 0, -1):
+        p = t.parent[v]
+        q = t.reward[v] + t.discount[v] * value[v]
+        if t.is_decision[p]:
+            value[p] = max(value[p], q)
+        else:
+            value[p] += t.prob[v] * q
+
+
+@compiled
+def _curves(t, value, A, B, C):  # type: ignore[no-untyped-def]
+    """The value of a node's root action as max(C, A x + B) of the node's own value x, all others fixed."""
+    for j in range(t.first[0], t.first[1]):
+        w = t.child[j]
+        A[w], B[w], C[w] = t.discount[w], t.reward[w], -np.inf
+    for v in range(1, len(t.parent)):
+        if t.first[v] == t.first[v + 1]:
+            continue
+        first, second = -np.inf, -np.inf
+        for j in range(t.first[v], t.first[v + 1]):
+            q = t.reward[t.child[j]] + t.discount[t.child[j]] * value[t.child[j]]
+            if q > first:
+                first, second = q, first
+            elif q > second:
+                second = q
+        for j in range(t.first[v], t.first[v + 1]):
+            w = t.child[j]
+            q = t.reward[w] + t.discount[w] * value[w]
+            if t.is_decision[v]:
+                other = second if q == first else first
+                C[w] = C[v]
+                if A[v] > 0.0 and other > -np.inf:
+                    C[w] = max(C[v], A[v] * other + B[v])
+                A[w] = A[v] * t.discount[w]
+                B[w] = A[v] * t.reward[w] + B[v]
+            else:
+                C[w] = C[v]
+                A[w] = A[v] * t.prob[w] * t.discount[w]
+                B[w] = A[v] * (value[v] - t.prob[w] * t.discount[w] * value[w]) + B[v]
+
+
+@compiled
+def _actions(t):  # type: ignore[no-untyped-def]
+    """Root action of every leaf, 0-based child order."""
+    of = np.zeros(len(t.parent), dtype=np.int64)
+    for j in range(t.first[0], t.first[1]):
+        of[t.child[j]] = j - t.first[0]
+    for v in range(1, len(t.parent)):
+        if t.parent[v] != 0:
+            of[v] = of[t.parent[v]]
+    return of[t.leaf]
+
+
+@compiled
+def _batches(t, b, action, left, batch):  # type: ignore[no-untyped-def]
+    """Rollouts of each leaf's batch; 0 where no batch is worth anything."""
+    n = len(t.parent)
+    value, A, B, C = np.empty(n), np.ones(n), np.zeros(n), np.empty(n)
+    _values(t, b.mean, value)
+    _curves(t, value, A, B, C)
+    n_actions = t.first[1] - t.first[0]
+    own = np.empty(n_actions)
+    for a in range(n_actions):
+        w = t.child[t.first[0] + a]
+        own[a] = t.reward[w] + t.discount[w] * value[w]
+    out = np.zeros(len(t.leaf))
+    for i in range(len(t.leaf)):
+        w = t.leaf[i]
+        rival = best_other(own, action[i])
+        if rival == -np.inf or b.var[i] <= 0.0 or A[w] <= 0.0 or (left < 1 and batch == 0):
+            continue
+        gap = max(rival, C[w]) - A[w] * b.mean[i] - B[w]
+        out[i] = float(batch) if batch > 0 else peak(gap, A[w] ** 2 * b.var[i], A[w] ** 2 * b.noise[i], left)
+    return out
+
+
+@compiled
+def _moments_of(t, v, mean, var):  # type: ignore[no-untyped-def]
+    """Mean and variance of an inner node's value from its children's; maxima are taken for normals."""
+    m, s2 = 0.0, 0.0
+    for j in range(t.first[v], t.first[v + 1]):
+        w = t.child[j]
+        q, r2 = t.reward[w] + t.discount[w] * mean[w], t.discount[w] ** 2 * var[w]
+        if not t.is_decision[v]:
+            m, s2 = m + t.prob[w] * q, s2 + t.prob[w] ** 2 * r2
+        elif j == t.first[v]:
+            m, s2 = q, r2
+        else:
+            m, s2 = larger(m, s2, q, r2)
+    return m, s2
+
+
+@compiled
+def matched_on_tree(t, b, left, batch, nodes, shares):  # type: ignore[no-untyped-def]
+    """Independent leaves: every value is taken for a normal, the outcome of a batch by quadrature.
+
+    For every outcome the moments on the leaf's path to the root are made anew. nodes, shares : of a
+    quadrature for the standard normal.
+    """
+    n = len(t.parent)
+    mean, var = np.zeros(n), np.zeros(n)
+    for i in range(len(t.leaf)):
+        mean[t.leaf[i]], var[t.leaf[i]] = b.mean[i], b.var[i]
+    for v in range(n - 1, 0, -1):
+        if t.first[v] < t.first[v + 1]:
+            mean[v], var[v] = _moments_of(t, v, mean, var)
+    n_actions = t.first[1] - t.first[0]
+    own = np.empty(n_actions)
+    for a in range(n_actions):
+        w = t.child[t.first[0] + a]
+        own[a] = t.reward[w] + t.discount[w] * mean[w]
+    action = _actions(t)
+    batches = _batches(t, b, action, left, batch)
+    scores = np.zeros(len(t.leaf))
+    for i in range(len(t.leaf)):
+        k = batches[i]
+        if k == 0.0:
+            continue
+        rival = best_other(own, action[i])
+        s2 = b.var[i] * b.var[i] / (b.var[i] + b.noise[i] / k)
+        total, before = 0.0, 0.0
+        for j in range(len(nodes) + 1):
+            if j < len(nodes):
+                mean[t.leaf[i]] = b.mean[i] + math.sqrt(s2) * nodes[j]
+                var[t.leaf[i]] = max(b.var[i] - s2, 0.0)
+            else:  # back to the present
+                mean[t.leaf[i]], var[t.leaf[i]] = b.mean[i], b.var[i]
+            w = t.leaf[i]
+            while t.parent[w] != 0:
+                w = t.parent[w]
+                mean[w], var[w] = _moments_of(t, w, mean, var)
+            if j < len(nodes):
+                g = t.reward[w] + t.discount[w] * mean[w]
+                total += shares[j] * max(g, rival)
+                before += shares[j] * g
+        scores[i] = max(total - max(before, rival), 0.0) / (1.0 if batch > 0 else k)
+    return scores
+
+
+@compiled
+def _drawn(rng, b, i, wins, losses):  # type: ignore[no-untyped-def]
+    """A draw of a win/loss leaf's value after so many more wins and losses."""
+    return b.low[i] + (b.high[i] - b.low[i]) * rng.beta(b.alpha[i] + wins, b.beta[i] + losses)
+
+
+@compiled
+def sampled_on_tree(rng, t, b, left, batch, samples):  # type: ignore[no-untyped-def]
+    """Independent leaves: leaf values drawn once for all candidates, `samples` outcomes of each batch.
+
+    Given a draw of the other leaves, an action's value is max(C, A x + B) of the leaf's own x. Normal leaves
+    take opposite pairs of outcomes, and keep their draw's remainder; win/loss leaves draw wins, then values.
+    """
+    n, n_leaves, coins = len(t.parent), len(t.leaf), len(b.alpha) > 0
+    n_actions = t.first[1] - t.first[0]
+    x = np.empty((samples, n_leaves))
+    z = np.empty((samples, n_leaves))
+    A = np.ones(n)
+    B, C = np.zeros((samples, n)), np.empty((samples, n))
+    value, own = np.empty(n), np.zeros(n_actions)
+    for s in range(samples):
+        for i in range(n_leaves):
+            if coins:
+                x[s, i] = _drawn(rng, b, i, 0.0, 0.0)
+            else:
+                z[s, i] = rng.standard_normal()
+                x[s, i] = b.mean[i] + math.sqrt(b.var[i]) * z[s, i]
+        _values(t, x[s], value)
+        _curves(t, value, A, B[s], C[s])
+        for a in range(n_actions):
+            w = t.child[t.first[0] + a]
+            own[a] += (t.reward[w] + t.discount[w] * value[w]) / samples
+    outcomes = np.empty(samples)
+    for o in range(0, samples - 1, 2):
+        outcomes[o] = rng.standard_normal()
+        outcomes[o + 1] = -outcomes[o]
+    action = _actions(t)
+    batches = _batches(t, b, action, left, batch)
+    scores = np.zeros(n_leaves)
+    for i in range(n_leaves):
+        k, w = batches[i], t.leaf[i]
+        if k == 0.0:
+            continue
+        rival = best_other(own, action[i])
+        s2 = b.var[i] * b.var[i] / (b.var[i] + b.noise[i] / k)
+        moved, rest = math.sqrt(s2), math.sqrt(max(b.var[i] - s2, 0.0))
+        total, before = 0.0, 0.0
+        for o in range(samples):
+            wins = 0.0
+            if coins:
+                wins = float(rng.binomial(int(k), rng.beta(b.alpha[i], b.beta[i])))
+            g = 0.0
+            for s in range(samples):
+                if coins:
+                    y = _drawn(rng, b, i, wins, k - wins)
+                else:
+                    y = b.mean[i] + moved * outcomes[o] + rest * z[s, i]
+                g += max(C[s, w], A[w] * y + B[s, w]) / samples
+            total += max(g, rival) / samples
+            before += g / samples
+        scores[i] = max(total - max(before, rival), 0.0) / (1.0 if batch > 0 else k)
+        scores[i] += 1e-12 * A[w] * moved  # where all come to 0, the most uncertain leads
+    return scores
+
+
+@compiled
+def sampled_together(rng, t, b, root, left, batch, samples):  # type: ignore[no-untyped-def]
+    """Correlated normal leaves: every outcome moves all leaves, so each takes whole backups.
+
+    root : a triangular root of the covariance. A draw x becomes one of the posterior by
+    x + S e_i (y - x_i - e) / (S_ii + n_i / k), y the batch's average, e a draw of its noise.
+    """
+    n, n_leaves = len(t.parent), len(t.leaf)
+    n_actions = t.first[1] - t.first[0]
+    x = np.empty((samples, n_leaves))
+    for s in range(samples):
+        z = np.array([rng.standard_normal() for _ in range(n_leaves)])
+        x[s] = b.mean + root @ z
+    outcomes, noise = np.empty(samples), np.empty(samples)
+    for o in range(0, samples - 1, 2):
+        outcomes[o], noise[o] = rng.standard_normal(), rng.standard_normal()
+        outcomes[o + 1], noise[o + 1] = -outcomes[o], -noise[o]
+    action = _actions(t)
+    batches = _batches(t, b, action, left, batch)
+    scores = np.zeros(n_leaves)
+    value, moved_to = np.empty(n), np.empty(n_leaves)
+    for i in range(n_leaves):
+        k = batches[i]
+        if k == 0.0:
+            continue
+        seen = b.cov[i, i] + b.noise[i] / k
+        total, before = 0.0, np.zeros(n_actions)
+        for o in range(samples):
+            own = np.zeros(n_actions)
+            y = b.mean[i] + math.sqrt(seen) * outcomes[o]
+            for s in range(samples):
+                step = (y - x[s, i] - math.sqrt(b.noise[i] / k) * noise[s]) / seen
+                for j in range(n_leaves):
+                    moved_to[j] = x[s, j] + b.cov[j, i] * step
+                _values(t, moved_to, value)
+                for a in range(n_actions):
+                    w = t.child[t.first[0] + a]
+                    own[a] += (t.reward[w] + t.discount[w] * value[w]) / samples
+            total += own.max() / samples
+            before += own / samples
+        scores[i] = max(total - before.max(), 0.0) / (1.0 if batch > 0 else k)
+        scores[i] += 1e-12 * b.cov[i, i] / math.sqrt(seen)
+    return scores

@@ -1,0 +1,124 @@
+"""Peers of a record scorer: they read the tree that the agent searches; floor 5."""
+
+# mypy: allow-untyped-calls
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, replace
+from typing import Any, Final
+
+import numpy as np
+
+from distill import voc
+from distill.allocation import Search
+from distill.allocation_rules import RULES, Belief, Topology, pick
+from distill.feature_graph import FeatureGraph
+from distill.query import Query
+from distill.scorer_inputs import RECORD
+from distill.tree import BeliefTree, Floats
+from distill.tree_peer_kernels import matched_on_tree, sampled_on_tree, sampled_together
+
+__all__ = ["CORRELATED_MOMENTS", "Held", "tree_peers"]
+
+CORRELATED_MOMENTS: Final = (
+    "correlated leaves: an outcome moves every leaf, and matching their joint moments is what the backup does"
+)
+_NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(9)
+_SHARES: Final = _WEIGHTS / _WEIGHTS.sum()
+
+
+@dataclass(frozen=True, eq=False)
+class Held:
+    """What an agent has at hand when it decides: rows, rollouts left, and its tree for compiled rules.
+
+    topology, belief, scale, root : None, None, 0 and None where no tree is given; root is a triangular root
+    of the covariance, None for independent leaves.
+    """
+
+    columns: Mapping[str, Any]
+    remaining: int
+    tree: BeliefTree | None
+    topology: Topology | None
+    belief: Belief | None
+    scale: float
+    root: Floats | None
+
+    @classmethod
+    def of(cls, columns: Mapping[str, Any], remaining: int, tree: BeliefTree | None) -> Held:
+        """A tree without counts gets those that its beliefs are worth: noise variance over variance."""
+        if tree is None:
+            return cls(columns, remaining, None, None, None, 0.0, None)
+        root = None if tree.cov is None else _root(tree.cov)
+        search = Search(tree)
+        topology, belief, scale = search.compiled
+        if tree.count is None:
+            worth = belief.noise / np.maximum(belief.var, 1e-300)
+            counts = np.rint(np.clip(worth, 1, 1e9))
+            topology, belief, scale = Search(replace(tree, count=counts)).compiled
+        return cls(columns, remaining, tree, topology, belief, scale, root)
+
+
+def _root(cov: Floats) -> Floats:
+    """Triangular root of a covariance, with the least jitter of the diagonal that it needs."""
+    size = float(np.max(np.diag(cov)))
+    jitter = 0.0
+    while True:
+        try:
+            return np.asarray(np.linalg.cholesky(cov + jitter * np.eye(len(cov))))
+        except np.linalg.LinAlgError:
+            jitter = max(10 * jitter, 1e-14 * size, 1e-300)
+
+
+def tree_peers(value: Mapping[str, Any], samples: int, seed: int = 0) -> dict[str, Callable[[Held], Floats]]:
+    """Name -> peer, a score a leaf from what the agent holds. Arguments as for `distill.peers.peers`.
+
+    The static values are those of the exact engine at horizon 0. UCT goes down from the root (Kocsis and
+    Szepesvari 2006) with the tree's scale as its unit; it and Thompson sampling pass chance nodes by drawing
+    a child. Thompson sampling draws correlated leaves one by one. The first-order closed form reads the
+    record rows, so its time leaves out the backup, as the scorer's does.
+    """
+    graph = FeatureGraph.of_value(value, RECORD)
+    batch: int | None = value["batch"]
+    rng = np.random.default_rng(seed)
+
+    def first_order(held: Held) -> Floats:
+        return graph.matrix({**held.columns, "remaining": float(held.remaining)}).first_order
+
+    def static(one: int | None) -> Callable[[Held], Floats]:
+        def scored(held: Held) -> Floats:
+            assert held.tree is not None
+            return voc.price(held.tree, Query(0.0, one, held.remaining)).voc
+
+        return scored
+
+    def matching(held: Held) -> Floats:
+        place = (held.topology, held.belief, held.remaining, batch or 0)
+        return np.asarray(matched_on_tree(*place, _NODES, _SHARES))
+
+    def sampled(held: Held) -> Floats:
+        asked = (held.remaining, batch or 0, samples)
+        if held.root is None:
+            return np.asarray(sampled_on_tree(rng, held.topology, held.belief, *asked))
+        return np.asarray(sampled_together(rng, held.topology, held.belief, held.root, *asked))
+
+    def chosen(rule: str) -> Callable[[Held], Floats]:
+        number = RULES.index(rule)
+
+        def scored(held: Held) -> Floats:
+            assert held.belief is not None
+            out = np.zeros(len(held.belief.mean))
+            place = (held.topology, held.belief, held.remaining, held.scale)
+            out[pick(number, rng, *place)] = 1.0
+            return out
+
+        return scored
+
+    return {
+        "first-order closed form": first_order,
+        "static VOC of one rollout": static(1),
+        "static closed form": static(batch),
+        "moment matching with quadrature": matching,
+        "Monte Carlo in equal time": sampled,
+        "UCT": chosen("uct"),
+        "Thompson sampling": chosen("thompson"),
+    }

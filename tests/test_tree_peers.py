@@ -1,0 +1,167 @@
+"""Peers that read a tree: exact where they must be, unbiased where they sample, picks as the rules do."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import replace
+from pathlib import Path
+
+import numpy as np
+import pytest
+from chance_trees import build, leaf
+from ladder import CLOSED_FORM, CLOSED_FORM_RATE
+from leaf_tables import table
+
+from distill.allocation import Search
+from distill.backup import backup_of
+from distill.family import draw, load_family
+from distill.query import Query
+from distill.table_peer_kernels import matched_on_table
+from distill.timing import tree_of
+from distill.tree_peers import Held, tree_peers
+from distill.voc import price
+
+FAMILIES = Path(__file__).parents[1] / "datasets" / "families"
+RATE = {"horizon": "inf", "batch": None}
+TWO = {"horizon": "inf", "batch": 2}
+MOMENTS, SAMPLES = "moment matching with quadrature", "Monte Carlo in equal time"
+
+
+def held(tree, remaining: int = 50) -> Held:
+    return Held.of(backup_of(tree).rows(), remaining, tree)
+
+
+def sums():
+    """Two lotteries over normals and a sure thing: all values are normal, so moments are all there is."""
+    return build(
+        ("mean", [(0.5, leaf(0.0, 2.0)), (0.5, leaf(0.4, 1.0))]),
+        ("mean", [(0.25, leaf(0.1, 1.0, 0.5)), (0.75, ("edge", 0.1, 0.9, leaf(0.2, 0.5)))]),
+        leaf(0.2, 0.0),
+    )
+
+
+def assert_samples_come_close(tree, exact, samples: int = 600, draws: int = 30) -> None:
+    """The largest of estimates is biased by about one over the root of the samples; many show the rest."""
+    peer, case = tree_peers(TWO, samples)[SAMPLES], held(tree)
+    found = np.array([peer(case) for _ in range(draws)])
+    spread = found.std(axis=0) / math.sqrt(draws)
+    assert exact.max() > 1e-3
+    assert np.all(np.abs(found.mean(axis=0) - exact) < 5 * spread + 0.05 * exact + 1e-10)
+
+
+def test_the_static_peers_are_the_exact_engine_and_the_first_order_reads_rows() -> None:
+    for name in ("crossing-traffic", "shared-aisles", "on-time"):
+        tree = draw(load_family(FAMILIES / f"{name}.toml"), 3, 2)
+        ours = tree_peers(RATE, 4)
+        one = ours["static VOC of one rollout"](held(tree))
+        assert np.array_equal(one, price(tree, Query(0.0, 1, 50)).voc)
+        rate = ours["static closed form"](held(tree))
+        assert np.array_equal(rate, price(tree, Query(0.0, None, 50)).voc)
+        first = ours["first-order closed form"](held(tree))
+        assert first.shape == (tree.n_leaves,)
+        assert np.all(first >= 0)
+
+
+@pytest.mark.parametrize("name", [MOMENTS, SAMPLES])
+def test_lotteries_of_normals_are_valued_as_they_are(name: str) -> None:
+    tree = sums()
+    exact = price(tree, Query(math.inf, 2)).voc
+    large = exact > 0.05 * exact.max()
+    assert large.sum() >= 3
+    if name == MOMENTS:
+        got = tree_peers(TWO, 4)[name](held(tree))
+        np.testing.assert_allclose(got[large], exact[large], rtol=0.1)  # nine points beside one kink
+        assert got[list(tree.var).index(0)] == 0
+        return
+    assert_samples_come_close(tree, exact)
+
+
+def test_moments_on_a_tree_of_leaf_tables_are_those_on_the_table() -> None:
+    t = table(np.random.default_rng(4), 12, 6)
+    t["action"] = np.repeat(np.arange(6), 2)
+    nodes, weights = np.polynomial.hermite_e.hermegauss(9)
+    flat = (
+        t["gain"] * t["mean"] + t["offset"],
+        t["gain"] ** 2 * t["var"],
+        t["gain"] ** 2 * t["noise_var"],
+        t["action"],
+    )
+    expected = matched_on_table(*flat, 50, 2, nodes, weights / weights.sum())
+    got = tree_peers(TWO, 4)[MOMENTS](held(tree_of(t)))
+    large = expected > 1e-6 * expected.max()
+    assert large.sum() > 3
+    np.testing.assert_allclose(got[large], expected[large], rtol=CLOSED_FORM_RATE)
+
+
+def test_moments_follow_a_maximum_below_a_lottery() -> None:
+    tree = build(
+        ("mean", [(0.6, ("max", [leaf(0.0, 1.0), leaf(0.1, 2.0)])), (0.4, leaf(0.5, 1.0))]),
+        ("max", [leaf(0.4, 0.5), leaf(0.3, 0.7)]),
+    )
+    exact = price(tree, Query(math.inf, 2)).voc
+    got = tree_peers(TWO, 4)[MOMENTS](held(tree))
+    assert int(np.argmax(got)) == int(np.argmax(exact))
+    np.testing.assert_allclose(got, exact, rtol=0.25)
+    assert_samples_come_close(tree, exact)
+
+
+def test_correlated_leaves_are_sampled_together() -> None:
+    """One leaf an action: no later choice is left, so the dynamic value is the static one, exact."""
+    tree = replace(
+        build(leaf(0.0, 1.0), leaf(0.2, 1.0), leaf(0.1, 1.0)),
+        var=None,
+        cov=np.array([[1.0, 0.8, 0.0], [0.8, 1.5, 0.0], [0.0, 0.0, 0.5]]),
+    )
+    exact = price(tree, Query(0.0, 2)).voc
+    assert_samples_come_close(tree, exact, 300)
+    singular = replace(tree, cov=np.ones((3, 3)))  # all move as one: no rollout changes the choice
+    assert np.all(tree_peers(TWO, 16)[SAMPLES](held(singular)) < 1e-6)
+
+
+def test_wins_are_sampled_as_wins() -> None:
+    columns = {
+        "alpha": [1.0, 1.0, 3.0],
+        "beta": [1.0, 1.0, 2.0],
+        "low": [0.0, -0.1, 0.1],
+        "high": [1.0, 1.2, 0.9],
+    }
+    place = {"gain": [1.0, 1.0, 1.0], "offset": [0.0, 0.0, 0.0], "cost": [0.0, 0.0, 0.0]}
+    t = {name: np.array(x) for name, x in {**columns, **place}.items()} | {"action": np.arange(3)}
+    tree = tree_of(t)
+    assert_samples_come_close(tree, price(tree, Query(math.inf, 2)).voc, 300)
+
+
+def test_uct_and_thompson_pick_as_the_allocation_rules_do() -> None:
+    for name in ("crossing-traffic", "on-time", "shared-aisles"):
+        tree = draw(load_family(FAMILIES / f"{name}.toml"), 3, 4)
+        for peer, rule in (("UCT", "uct"), ("Thompson sampling", "thompson")):
+            ours = tree_peers(RATE, 4, seed=6)[peer]
+            rng, search = np.random.default_rng(6), Search(tree)
+            for _ in range(20):
+                assert int(np.argmax(ours(held(tree)))) == search.pick(rule, rng, remaining=50)
+
+
+def test_a_tree_without_counts_counts_what_its_beliefs_are_worth() -> None:
+    tree = build(leaf(0.0, 1.0, 9.0), leaf(0.0, 1.0, 2.0), leaf(0.0, 1.0, 5.0))
+    assert tree.count is None
+    case = held(tree)
+    assert case.belief.visits.tolist() == [9, 2, 5]
+    assert int(np.argmax(tree_peers(RATE, 4)["UCT"](case))) == 1
+
+
+def test_one_action_and_nothing_left_are_worth_nothing() -> None:
+    alone = build(("max", [leaf(0.0, 1.0), leaf(0.1, 1.0)]))
+    for name in (MOMENTS, SAMPLES):
+        assert not np.any(tree_peers(RATE, 8)[name](held(alone)))
+        assert not np.any(tree_peers(RATE, 8)[name](held(sums(), remaining=0)))
+
+
+def test_a_rate_is_that_of_the_best_batch_by_the_static_threshold() -> None:
+    tree = sums()
+    got = tree_peers(RATE, 4)[MOMENTS](held(tree))
+    exact = price(tree, Query(math.inf, None, 50))
+    assert int(np.argmax(got)) == int(np.argmax(exact.voc))
+    one = tree_peers({"horizon": "inf", "batch": 1}, 4)[MOMENTS](held(tree))
+    first = exact.batch == 1
+    assert first.any()
+    np.testing.assert_allclose(got[first], one[first], rtol=CLOSED_FORM)

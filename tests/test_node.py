@@ -18,6 +18,7 @@ from leaf_tables import table
 from scorers import KINDS, scorer_bytes
 
 from distill.runtime import Scorer
+from distill.scorer_inputs import ANY_HORIZON
 
 HERE = Path(__file__).parent / "node"
 MODELS = sorted((Path(__file__).parents[1] / "models").glob("*.onnx"))
@@ -104,6 +105,19 @@ def test_the_page_about_other_languages_shows_what_runs(runner: Path) -> None:
         offset=0 * ones, cost=0 * ones, action=np.array([1, 0, 0]), remaining=60,
     )  # fmt: skip
     assert done.stdout.split()[0] == str(want)
+
+
+def test_a_file_for_any_horizon_picks_alike_from_static_to_dynamic(runner: Path, tmp_path: Path) -> None:
+    copy = Path(
+        shutil.copy(Path(__file__).parents[1] / "datasets" / "conformance" / "any-horizon.onnx", tmp_path)
+    )
+    cases = [
+        {**table(np.random.default_rng(i), 3 + i, 1 + i % 5, 5 + 9 * i), "horizon": np.array(h)}
+        for i in range(12)
+        for h in (0.0, 4.0, np.inf)
+    ]
+    told = [ANY_HORIZON.to_json({name: np.asarray(x) for name, x in case.items()}) for case in cases]
+    assert_same_answers(Scorer.load(copy), cases, from_node(runner, copy, told))
 
 
 @pytest.mark.parametrize(

@@ -18,11 +18,12 @@ import numpy as np
 
 from distill.allocation import Search as Posterior
 from distill.errors import InputError, RefusedError
-from distill.files import write_atomic
+from distill.files import sha256_of, write_atomic
 from distill.rehearse.catalogue import make_problem
+from distill.rehearse.claim import claim
 from distill.rehearse.loop import Budget
 from distill.rehearse.policies import Policy
-from distill.rehearse.policy_specs import make_policy
+from distill.rehearse.policy_specs import make_policy, scorer_file
 from distill.rehearse.rehearsal import Cell, rehearse
 from distill.rehearse.remembered import Remembered
 from distill.rehearse.scorer_inputs import ScorerInputs
@@ -105,10 +106,11 @@ def run(
 
     workers : processes, each with a problem at a time. progress : called about once a second, with the
     places (a problem under a budget) that are done, those of an earlier run too, and how many there are.
-    Raises InputError where the folder holds a campaign with other seeds.
+    Raises InputError, before anything is written, where a policy or a scorer file is no good, or the folder
+    holds a campaign that this one does not continue.
     """
     folder = Path(folder)
-    _claim(folder, campaign)
+    claim(folder, asdict(campaign), _checked(campaign))
     parts: dict[str, Results] = {}
     calls = [(_problem, (campaign, name, folder, os.getpid())) for name in campaign.problems]
     with _counted(campaign, folder, progress):
@@ -123,18 +125,22 @@ def run(
     return results
 
 
-def _claim(folder: Path, campaign: Campaign) -> None:
-    """The campaign, written the first time; later ones may name other problems, budgets and policies."""
-    path = folder / "campaign.json"
-    fixed = {name: getattr(campaign, name) for name in ("seeds", "tuning_seeds")}
-    if path.exists():
-        try:
-            found = json.loads(path.read_text())
-        except ValueError:
-            found = {}
-        if {name: found.get(name) for name in fixed} != fixed:
-            raise InputError(str(path), f"must hold {json.dumps(fixed)} to be continued")
-    write_atomic(path, (json.dumps(asdict(campaign), indent=1) + "\n").encode())
+def _checked(campaign: Campaign) -> dict[str, str]:
+    """SHA-256 of each scorer file, after every policy has chosen once: faults are told before the work."""
+    names: dict[str, str] = {}
+    files: dict[str, str] = {}
+    tree = make_problem(campaign.problems[0]).draw(TUNING_SEED).tree if campaign.problems else None
+    for spec in campaign.policies:
+        if names.setdefault(name_of(spec), spec) != spec:
+            rule = f"must not have the name of {names[name_of(spec)]!r}; scorers take the option name=..."
+            raise InputError(f"policy {spec!r}", rule, name_of(spec))
+        if spec.startswith(_SCORER):
+            _scorer_of(untuned(spec))
+            file = scorer_file(untuned(spec))[0]
+            files[file] = sha256_of(file)
+        elif tree is not None:
+            _refused(make_policy(untuned(spec)), tree)
+    return files
 
 
 def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple[str, Results]:
@@ -218,14 +224,8 @@ def _unreadable(campaign: Campaign, text: str, tree: BeliefTree) -> str | None:
     return None
 
 
-def _options_apart(text: str) -> str:
-    """A scorer policy's text without its options."""
-    options = [part for part in text.split(":")[1:] if "=" in part]
-    return text.removesuffix("".join(f":{option}" for option in options))
-
-
 def _scorer_of(text: str) -> Scorer:
-    return _loaded(_options_apart(text))
+    return _loaded(_SCORER + scorer_file(text)[0])
 
 
 @lru_cache(maxsize=16)

@@ -13,7 +13,7 @@ from distill.errors import InputError
 from distill.rehearse.policies import ByRule, Policy, TopTwoThompson, WithPrior
 from distill.rehearse.value_policies import ByScorer, ByValue
 
-__all__ = ["POLICIES", "make_policy"]
+__all__ = ["POLICIES", "make_policy", "scorer_file"]
 
 
 def _even() -> Policy:
@@ -100,9 +100,9 @@ def make_policy(text: str) -> Policy:
     kinds = {key: type(p.default) for key, p in inspect.signature(maker).parameters.items()}
     given: dict[str, Any] = {}
     if name == "scorer":
-        if not options or "=" in options[0]:
+        given["file"], options = scorer_file(text)
+        if not given["file"]:
             raise InputError(f"policy {text!r}", "must name a file: scorer:FILE.onnx")
-        given["file"] = options.pop(0)
         if not Path(given["file"]).is_file():
             raise InputError(f"policy {text!r}", "must name a file that exists", given["file"])
     for option in options:
@@ -112,6 +112,19 @@ def make_policy(text: str) -> Policy:
             raise InputError(f"policy {text!r}", f"options of {name} are: {known}", key)
         given[key] = _read(kinds[key], value, f"policy {text!r}: {key}")
     return maker(**given)
+
+
+def scorer_file(text: str) -> tuple[str, list[str]]:
+    """File and options of a scorer policy's text. The path may hold colons, and even "=" where it exists.
+
+    >>> scorer_file("scorer:C:/models/a.onnx:spread=4:stop=auto")
+    ('C:/models/a.onnx', ['spread=4', 'stop=auto'])
+    """
+    file, options = text.partition(":")[2], list[str]()
+    while ":" in file and "=" in file.rpartition(":")[2] and not Path(file).is_file():
+        file, _, option = file.rpartition(":")
+        options.insert(0, option)
+    return ("", [file]) if "=" in file and not options and not Path(file).is_file() else (file, options)
 
 
 def _read(kind: type, value: str, place: str) -> Any:

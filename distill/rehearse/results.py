@@ -17,6 +17,7 @@ from distill.files import sha256_of, write_atomic
 from distill.rehearse import findings
 from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.findings import plain
+from distill.rehearse.policy_specs import scorer_file
 from distill.rehearse.rehearsal import Cell, interval
 from distill.rehearse.results_tables import every_cell, short_table
 from distill.rehearse.tuning import name_of, untuned
@@ -115,9 +116,7 @@ def _files(campaign: Campaign) -> list[dict[str, Any]]:
     uses: dict[str, list[str]] = {}
     for spec in campaign.policies:
         if spec.startswith("scorer:"):
-            path = untuned(spec).removeprefix("scorer:")
-            while "=" in path.rpartition(":")[2]:
-                path = path.rpartition(":")[0]
+            path = scorer_file(untuned(spec))[0]
             uses.setdefault(path, []).append(name_of(spec))
     return [
         {"file": Path(path).name, "sha256": sha256_of(Path(path)), "policies": names}

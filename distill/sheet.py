@@ -76,6 +76,7 @@ def sheet_page(sheet: Mapping[str, Any]) -> str:
         "",
         *front_table(sheet["front"]),
         "",
+        *_rehearsal_lines(sheet.get("rehearsal")),
         "## Where it comes from",
         "",
         *(f"- {name}: {value}" for name, value in data.items() if name != "parts"),
@@ -102,6 +103,53 @@ def backup_text(decision: Mapping[str, Any]) -> list[str]:
         "Median times over those of the scorer and, after one rollout, the backup together:",
         f"{together or 'not measured'}.",
     ]
+
+
+def _rehearsal_lines(r: Mapping[str, Any] | None) -> list[str]:
+    """How the scorer did in closed-loop search, where it was rehearsed."""
+    if r is None:
+        return []
+    groups = {
+        "sampling": "better of UCT and both Thompson samplings",
+        "static": "static closed form",
+        "exact": "exact rate, where choosing by it takes over a fifth of the time",
+    }
+    lines = [
+        "## In rehearsal",
+        "",
+        f"{r['seeds']} paired decisions in closed-loop search for each problem and budget. Counted: those of",
+        "wall-clock time with rollouts of 100 us or more. Ratios are of simple regret: below 1 the scorer",
+        "decides better. The `.json` sheet has every problem and budget, with intervals.",
+        "",
+        "| use | over the | cells | aim | reached | to be avoided | met |",
+        "| --- | --- | --- | --- | --- | --- | --- |",
+    ]
+    for use, aims in r["uses"].items():
+        for group, c in aims.items():
+            lines.append(
+                f"| {use} | {groups[group]} | {c['cells']} | <= {c['at_most']:g} | {c['reached']} "
+                f"| > {c['never_above']:g} | {c['beyond']} |"
+            )
+    lines += [
+        "",
+        "Scorer or closed form (all scorers that read such trees, geometric means of the ratios):",
+        "",
+        "| leaves | a rollout, us | cells | to the closed form | to the better sampling | use |",
+        "| --- | --- | --- | --- | --- | --- |",
+        *(
+            f"| {k['kind']} | {1e6 * k['rollout_seconds']:,.0f} | {k['static']['cells']} "
+            f"| {_whole_estimate(k['static'])} | {_whole_estimate(k['sampling'])} | {k['use']} |"
+            for k in r["by_kind"]
+        ),
+        "",
+    ]
+    return lines
+
+
+def _whole_estimate(k: Mapping[str, Any]) -> str:
+    """A ratio with its interval, where it has one."""
+    figures = {"value": k["ratio"]} | ({} if k["low"] is None else {"low": k["low"], "high": k["high"]})
+    return _estimate(figures)
 
 
 def accuracy_table(rows: Mapping[str, Mapping[str, Any]]) -> list[str]:

@@ -3,12 +3,19 @@
 from __future__ import annotations
 
 import argparse
+import sys
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
 
 from distill.commands import flags
 
 __all__ = ["HELP", "add_arguments", "run"]
 
 HELP = "policies compared in closed-loop search, at equal rollouts and at equal time"
+_FEW = 6  # decisions a cell, to see how long one takes
+_SAY_SECONDS = 60.0
 _EPILOG = """\
 problems: taxi, cliff_walking, frozen_lake_8x8, cold_store_small ..., or trees: tree-4x4^1-noise4,
 tree-6x2^1-winloss, tree-4x3^2-noise4-chance. budgets: 128 rollouts; 20ms@100us, time at this cost of a
@@ -36,17 +43,36 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--seeds", type=flags.whole(2), metavar="N", help="decisions a cell")
     parser.add_argument("--tuning-seeds", type=flags.whole(0), metavar="N", help="0 tunes nothing")
     parser.add_argument("--workers", type=flags.whole(1), default=1, metavar="N", help="processes")
+    other = parser.add_mutually_exclusive_group()
+    other.add_argument(
+        "--estimate", action="store_true", help="rehearse 6 decisions a cell and say how long all of it takes"
+    )
+    other.add_argument(
+        "--sheets", type=Path, nargs="+", metavar="FILE.onnx",
+        help="rehearse nothing: write what stands in --out into the sheets beside these scorer files",
+    )  # fmt: skip
 
 
 def run(args: argparse.Namespace) -> None:
     """Run the command."""
+    if args.sheets:
+        from distill.rehearse.sheets import add_to_sheets
+
+        for file in add_to_sheets(args.out, args.sheets):
+            print(f"{file.with_suffix('.json')}, {file.with_suffix('.md')}: with the rehearsal's figures")
+        return
+    _rehearse(args)
+
+
+def _rehearse(args: argparse.Namespace) -> None:
+    from dataclasses import replace
+
     from distill.errors import InputError
     from distill.rehearse.campaign import run as rehearse
     from distill.rehearse.plans import plan
-    from distill.rehearse.results import write_results
-    from distill.rehearse.results_tables import aims_table, cells_table
-    from distill.report.rehearsal_page import write_rehearsal_page
-    from distill.terminal import bar
+    from distill.rehearse.results import summarise, write_results
+    from distill.rehearse.results_tables import aims_table, cells_table, short_table, time_table
+    from distill.report.rehearsal_page import write_pictures, write_rehearsal_page
 
     if args.quick and args.full:
         raise InputError("--quick", "cannot go with --full")
@@ -59,10 +85,64 @@ def run(args: argparse.Namespace) -> None:
         seeds=args.seeds,
         tuning_seeds=args.tuning_seeds,
     )
-    with bar("rehearsing", len(campaign.problems), "problems") as advance:
-        results = rehearse(campaign, args.out, workers=args.workers, progress=lambda _done, _of: advance())
+    places = sum(len(campaign.budgets_of(problem)) for problem in campaign.problems)
+    if args.estimate:
+        few = replace(campaign, seeds=_FEW, tuning_seeds=min(_FEW, campaign.tuning_seeds))
+        with _told("estimating", places) as progress:
+            results = rehearse(few, args.out / "estimate", workers=args.workers, progress=progress)
+        seeds = campaign.seeds, campaign.tuning_seeds
+        print("\n".join(time_table(summarise(results), *seeds, workers=args.workers)))
+        return
+    with _told("rehearsing", places) as progress:
+        results = rehearse(campaign, args.out, workers=args.workers, progress=progress)
     summary = write_results(results, args.out)
     write_rehearsal_page(summary, args.out / "rehearsal.html")
+    drawn = ", ".join(path.name for path in write_pictures(summary, args.out))
     print(f"{args.out}: {len(results.cells)} cells of {campaign.seeds} decisions\n")
-    print("\n".join([*cells_table(summary), "", *aims_table(summary)]))
-    print(f"\nSee {args.out / 'rehearsal.html'}; figures in summary.json and cells.parquet.")
+    tables = [*short_table(summary), "", *aims_table(summary)]
+    print("\n".join(tables if args.full else [*cells_table(summary), "", *tables]))
+    print(f"\nSee {args.out / 'rehearsal.html'}; figures in summary.json and cells.parquet, for other pages")
+    print(f"table.md, cells.md, {drawn}.")
+
+
+@contextmanager
+def _told(doing: str, places: int) -> Iterator[Callable[[int, int], None]]:
+    """A bar with the time left; where standard error is a file, a line now and then."""
+    from distill.terminal import bar
+
+    if not sys.stderr.isatty():
+        yield _Lines(doing)
+        return
+    with bar(doing, places, "problems x budgets") as advance:
+        before = 0
+
+        def progress(done: int, _of: int) -> None:
+            nonlocal before
+            advance(done - before)
+            before = done
+
+        yield progress
+
+
+class _Lines:
+    """Says how far a run has come, and how long it will take, a line every few minutes at most."""
+
+    def __init__(self, doing: str) -> None:
+        self._doing = doing
+        self._started = self._said = time.monotonic()
+        self._first = -1
+
+    def __call__(self, done: int, of: int) -> None:
+        """`done` places of `of`."""
+        now = time.monotonic()
+        if self._first < 0:
+            self._first = done  # an earlier run's
+        if now - self._said < _SAY_SECONDS:
+            return
+        self._said = now
+        made, minutes = done - self._first, (now - self._started) / 60
+        left = f", about {minutes * (of - done) / made:.0f} left" if made else ""
+        print(
+            f"voc-distill: {self._doing}: {done} of {of} problems x budgets after {minutes:.0f} min{left}",
+            file=sys.stderr, flush=True,
+        )  # fmt: skip

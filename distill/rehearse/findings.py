@@ -222,7 +222,7 @@ def by_kind(results: Results, places: Mapping[tuple[str, Budget], Place]) -> lis
         elif low is not None and low > 1:
             use, why = "closed form", "the scorer is measurably worse"
         else:
-            use, why = "closed form", "as good as the scorer"
+            use, why = "closed form", "no measurable difference"
         rows.append({"kind": kind, "rollout_seconds": cost, **found, "use": use, "why": why})
     return rows
 
@@ -244,7 +244,8 @@ def _together(results: Results, cells: Sequence[tuple[str, Place]], group: str) 
     out: dict[str, Any] = {"cells": len(at), "ratio": None, "low": None, "high": None}
     if at:
         out["ratio"] = math.exp(math.fsum(at) / len(at))
-        mean: Floats = np.mean(resamples, axis=0)
+        with np.errstate(invalid="ignore"):
+            mean: Floats = np.mean(resamples, axis=0)
         if np.isfinite(mean).all():
             out["low"], out["high"] = (float(x) for x in np.exp(np.quantile(mean, [0.025, 0.975])))
     return out

@@ -140,7 +140,8 @@ def time_table(summary: Figures, seeds: int, tuning_seeds: int, workers: int = 2
         total += cells + tuning
         lines.append(f"| {problem} | {cells:,.0f} | {tuning:,.0f} |")
     minutes = total / 60 / workers
-    return [*lines, f"| all: {minutes:.0f} minutes on {workers} cores | {total:,.0f} | |"]
+    cores = "one core" if workers == 1 else f"{workers} cores"
+    return [*lines, f"| all: {minutes:.0f} minutes on {cores} | {total:,.0f} | |"]
 
 
 # --- figures as text -------------------------------------------------------------------------------

@@ -4,21 +4,20 @@ from __future__ import annotations
 
 import os
 import xml.etree.ElementTree as ET
-from collections.abc import Iterable, Iterator, Mapping, Sequence
-from typing import Any, Final
-
-from matplotlib.figure import Figure
-from matplotlib.ticker import NullLocator
+from collections.abc import Iterator, Mapping, Sequence
+from pathlib import Path
+from typing import Final
 
 from distill.errors import InputError
 from distill.files import write_atomic
+from distill.report import rehearsal_pictures as pictures
 from distill.report.elements import Child, element, estimate, number, section, table, text_of, word_list
 from distill.report.facts import Figures, gaps_refused
 from distill.report.frame import page_text
-from distill.report.theme import DRAWN, SMALL, one_line, standalone, styled, svg
+from distill.report.theme import standalone
 from distill.report.words import CAUTION
 
-__all__ = ["break_even_svg", "rehearsal_page", "write_rehearsal_page"]
+__all__ = ["rehearsal_page", "rehearsal_pictures", "write_pictures", "write_rehearsal_page"]
 
 _FORMAT: Final = "voc-distill-rehearsal/1"
 _NONE: Final = "\u2013"  # stands for a figure that is not there
@@ -27,9 +26,7 @@ _AGAINST: Final = {
     "static": "static closed form",
     "exact": "exact dynamic rate",
 }
-_ROLES: Final = {"uct": "peer", "thompson": "peer", "top": "peer", "static": "ink", "exact": "exact"}
-_MARKS: Final = ("o", "s", "^", "D", "v")
-_DASHES: Final = ("-", (0, (5, 2)), (0, (2, 2)))
+_TO: Final = ("to the better sampling", "to the closed form", "to the exact rate")
 _WORDS: Final = {
     "regret": "How much worse the chosen action is than the best one, in the problem's own unit.",
     "expected regret": (
@@ -41,9 +38,13 @@ _WORDS: Final = {
         "rollout to the time that choosing really took, belief updates included."
     ),
     "ratio": (
-        "The scorer's mean regret over that of the best policy of the group, on the same decisions; the best "
-        "one is picked on these very decisions, which favours it. Below 1 the scorer decides better. "
+        "A policy's mean regret over that of the best policy of the group, on the same decisions; the best "
+        "one is picked on these very decisions, which favours it. Below 1 the policy decides better. "
         "Intervals: 95 %, decisions resampled in pairs."
+    ),
+    "best scorer": (
+        "For either half of the decisions the scorer, file and use, that did best on the other half: the "
+        "choice is not made on the decisions that it is judged by."
     ),
     "settled, share, spread, commit": (
         "How a scorer is used: below a share of the tree's scale the closed form chooses; scoring takes at "
@@ -61,11 +62,12 @@ def rehearsal_page(summary: Figures) -> str:
     """
     if summary.get("format") != _FORMAT:
         raise InputError("report: format", f"must be {_FORMAT!r}", summary.get("format"))
+    shown = [_framed(name, picture) for name, picture in rehearsal_pictures(summary).items()]
     with gaps_refused():
         body = element(
             "main",
             _opening(summary),
-            section("In pictures", element("div", *_pictures(summary), class_="pictures")),
+            section("In pictures", element("div", *shown, class_="pictures")),
             *_tables(summary),
             section("What the words mean", word_list((term, [text]) for term, text in _WORDS.items())),
         )
@@ -75,12 +77,6 @@ def rehearsal_page(summary: Figures) -> str:
 def write_rehearsal_page(summary: Figures, path: str | os.PathLike[str]) -> None:
     """Write `rehearsal_page(summary)` to a file."""
     write_atomic(path, rehearsal_page(summary).encode())
-
-
-def break_even_svg(summary: Figures) -> str:
-    """The break-even chart as a picture of its own, light or dark as its reader."""
-    with gaps_refused():
-        return standalone(_break_even(summary))
 
 
 def _opening(summary: Figures) -> ET.Element:
@@ -100,113 +96,54 @@ def _opening(summary: Figures) -> ET.Element:
 
 # --- pictures --------------------------------------------------------------------------------------
 
-
-def _pictures(summary: Figures) -> Iterator[ET.Element]:
-    if _costs(summary["break_even"]):
-        yield _framed(
-            "Break-even: what a rollout costs, and who decides best",
-            _break_even(summary),
-            "Regret as a multiple of the better of UCT and both Thompson samplings in the same time; lower "
-            "is better. Geometric mean over the problems that have all of a line's points.",
-        )
-    for i, policy in enumerate(dict.fromkeys(row["policy"] for row in summary["comparisons"])):
-        rows = [r for r in summary["comparisons"] if r["policy"] == policy and r["timed"]]
-        if any(r["ratio"] is not None for r in rows):
-            yield _framed(
-                one_line(policy),
-                svg(_ratios(rows), f"ratios-{i}", f"Ratios of {policy} in every timed cell, as in the table"),
-                "Each dot is a problem and a budget, sorted; left of 1 the scorer decides better. The dashed "
-                "line is 0.85.",
-            )
-
-
-def _costs(rows: Iterable[Mapping[str, Any]]) -> dict[int, set[float]]:
-    """Numbers of rollouts that were rehearsed at several costs."""
-    costs: dict[int, set[float]] = {}
-    for row in rows:
-        costs.setdefault(row["rollouts"], set()).add(row["rollout_seconds"])
-    return {rollouts: found for rollouts, found in costs.items() if len(found) > 1}
+_CAPTIONS: Final = {
+    "ratios": (
+        "The best scorer over the better of UCT and both Thompson samplings",
+        "Cells at equal time, with 95 % intervals; left of 1 the scorer decides better. Dashed: 0.85.",
+    ),
+    "ratios-closed-form": (
+        "The best scorer over the static closed form",
+        "The same against the cheapest serious rival.",
+    ),
+    "costs": (
+        "Regret against the cost of a rollout",
+        "The more a rollout costs, the less it matters how long a policy thinks about it.",
+    ),
+    "choosing": (
+        "How much of the time goes into choosing",
+        "Median of all cells with that cost of a rollout; lines from the least to the most. Dashed: a fifth.",
+    ),
+    "break-even": (
+        "Break-even: what a rollout costs, and who decides best",
+        "Regret over that of the best sampling in the same time; problems that have all of a line's points.",
+    ),
+}  # fmt: skip
 
 
-def _break_even(summary: Figures) -> ET.Element:
-    costs = _costs(summary["break_even"])
-    if not costs:
-        raise InputError("report: break_even", "must hold some policies at several costs of a rollout")
-    most = max(costs, key=lambda rollouts: (len(costs[rollouts]), rollouts))
-    rows = [row for row in summary["break_even"] if row["rollouts"] == most]
-    name = f"Regret in the time of {most} rollouts against their cost, as a multiple of the best sampling"
-    return svg(_lines(rows, most), "break-even", name)
-
-
-@styled
-def _lines(rows: Sequence[Mapping[str, Any]], rollouts: int) -> Figure:
-    names = list(dict.fromkeys(row["policy"] for row in rows))
-    figure = Figure(figsize=(390 / 72, (300 + 17 * len(names)) / 72))
-    figure.patch.set_visible(False)
-    ax = figure.subplots()
-    ax.patch.set_visible(False)
-    ax.set(xscale="log", yscale="log", xlabel=f"cost of a rollout, µs (time: {rollouts} rollouts)")
-    ax.set_ylabel("regret, multiple of the best sampling")
-    ax.grid(which="major")
-    drawn: dict[str, int] = {}
-    for name in names:
-        points = sorted((1e6 * r["rollout_seconds"], r["ratio"]) for r in rows if r["policy"] == name)
-        role = _role(name)
-        nth = drawn[role] = drawn.get(role, -1) + 1  # policies of one colour differ by their marks
-        style: dict[str, Any] = {
-            "marker": _MARKS[nth % len(_MARKS)],
-            "ls": _DASHES[nth % len(_DASHES)],
-            "ms": 5,
-            "lw": 1.4,
+def rehearsal_pictures(summary: Figures) -> dict[str, ET.Element]:
+    """The pictures that the figures allow, by name; as `svg` returns them."""
+    with gaps_refused():
+        drawn = {
+            "ratios": pictures.ratios(summary),
+            "ratios-closed-form": pictures.ratios(summary, "static"),
+            "costs": pictures.costs(summary),
+            "choosing": pictures.choosing(summary),
+            "break-even": pictures.break_even(summary),
         }
-        label = one_line(name, 44)
-        ax.plot(*zip(*points, strict=True), color=DRAWN[role], label=label, gid="policy", **style)
-    ax.axhline(1, color=DRAWN["quiet"], lw=1)
-    ticks = sorted({1e6 * r["rollout_seconds"] for r in rows})
-    ax.set_xticks(ticks, [f"{t:,.0f}" for t in ticks])
-    low, high = ax.get_ylim()
-    levels = [t for t in (0.25, 0.5, 0.7, 0.85, 1, 1.2, 1.5, 2, 3, 5, 10) if low <= t <= high]
-    ax.set_yticks(levels, [f"{t:g}" for t in levels])
-    for axis in (ax.xaxis, ax.yaxis):
-        axis.set_minor_locator(NullLocator())
-    figure.legend(loc="outside lower left", frameon=False, fontsize=SMALL)
-    return figure
+    return {name: picture for name, picture in drawn.items() if picture is not None}
 
 
-@styled
-def _ratios(rows: Sequence[Mapping[str, Any]]) -> Figure:
-    groups = {g: sorted(_of_group(rows, g), key=lambda r: float(r["ratio"])) for g in ("sampling", "static")}
-    shown = {g: found for g, found in groups.items() if found}
-    figure = Figure(figsize=(390 / 72, (60 + 80 * len(shown) + 5 * sum(map(len, shown.values()))) / 72))
-    figure.patch.set_visible(False)
-    axes = figure.subplots(len(shown), 1, squeeze=False, sharex=True)[:, 0]
-    for ax, (group, found) in zip(axes, shown.items(), strict=True):
-        ax.patch.set_visible(False)
-        ax.set_title(f"over the {_AGAINST[group]}")
-        for i, row in enumerate(found):
-            if row["low"] is not None:
-                ax.plot([row["low"], row["high"]], [i, i], color=DRAWN["scorer"], lw=1, alpha=0.5)
-            ax.plot([row["ratio"]], [i], "o", ms=4, color=DRAWN["scorer"], gid="ratio")
-        ax.axvline(1, color=DRAWN["quiet"], lw=1)
-        ax.axvline(0.85, color=DRAWN["quiet"], lw=1, ls=(0, (4, 3)))
-        ax.set(xscale="log", xlim=(0.3, 3))
-        ax.set_xticks([0.3, 0.5, 0.7, 1, 1.5, 2, 3], ["0.3", "0.5", "0.7", "1", "1.5", "2", "3"])
-        ax.xaxis.set_minor_locator(NullLocator())
-        ax.yaxis.set_major_locator(NullLocator())
-        ax.spines["left"].set_visible(False)
-        ax.grid(axis="x")
-    return figure
+def write_pictures(summary: Figures, folder: str | os.PathLike[str]) -> list[Path]:
+    """Each picture as an SVG file of its own, light or dark as its reader; returns the files."""
+    written = []
+    for name, picture in rehearsal_pictures(summary).items():
+        written.append(Path(folder) / f"{name}.svg")
+        write_atomic(written[-1], standalone(picture).encode())
+    return written
 
 
-def _of_group(rows: Iterable[Mapping[str, Any]], group: str) -> list[Mapping[str, Any]]:
-    return [row for row in rows if row["group"] == group and row["ratio"] is not None]
-
-
-def _role(policy: str) -> str:
-    return next((role for word, role in _ROLES.items() if policy.startswith(word)), "scorer")
-
-
-def _framed(title: str, picture: ET.Element, caption: str) -> ET.Element:
+def _framed(name: str, picture: ET.Element) -> ET.Element:
+    title, caption = _CAPTIONS[name]
     return element("figure", element("h3", title), picture, element("figcaption", caption))
 
 
@@ -214,14 +151,27 @@ def _framed(title: str, picture: ET.Element, caption: str) -> ET.Element:
 
 
 def _tables(summary: Figures) -> Iterator[ET.Element]:
+    if summary["by_kind"]:
+        yield section("Scorer or closed form", _by_kind(summary["by_kind"]))
     yield section("What was aimed at, and reached", _aims(summary["aims"]))
-    yield section("What to use", _advice(summary["advice"]))
-    yield section("Every cell: ratios", _comparisons(summary["comparisons"]))
+    best = [row for row in summary["rows"] if row["policy"] == pictures.BEST]
+    if best:
+        yield section("Every problem and budget: the best scorer", _best(best, summary))
     if summary["stopping"]:
         yield section("Stopping early", _stopping(summary["stopping"]))
-    yield section("Every cell: figures", *_figures(summary["rows"]))
+    yield section("Every cell", *_figures(summary["rows"]))
     if summary["left_out"]:
         yield section("Left out", _left_out(summary["left_out"]))
+
+
+def _by_kind(kinds: Sequence[Figures]) -> ET.Element:
+    rows: dict[str, Sequence[Child]] = {
+        f"{k['kind']}, {1e6 * k['rollout_seconds']:,.0f} µs a rollout": [
+            number(k["static"]["cells"]), _ratio(k["static"]), _ratio(k["sampling"]), k["use"], k["why"],
+        ]
+        for k in kinds
+    }  # fmt: skip
+    return table(["cells", "best scorer to the closed form", "to the better sampling", "use", "why"], rows)
 
 
 def _aims(aims: Mapping[str, Mapping[str, Figures]]) -> ET.Element:
@@ -230,26 +180,22 @@ def _aims(aims: Mapping[str, Mapping[str, Figures]]) -> ET.Element:
             number(c["cells"]),
             f"{c['reached']} at or below {c['at_most']:g}",
             f"{c['beyond']} above {c['never_above']:g}",
+            f"{c['better']} below 1, {c['worse']} above",
         ]
         for policy, groups in aims.items()
         for group, c in groups.items()
     }
-    return table(["timed cells, rollouts of 100 µs or more", "reached", "missed by much"], rows)
+    head = ["timed cells, rollouts of 100 µs or more", "reached", "missed by much", "whole interval"]
+    return table(head, rows)
 
 
-def _advice(advice: Sequence[Figures]) -> ET.Element:
+def _best(best: Sequence[Figures], summary: Figures) -> ET.Element:
+    advice = {(a["problem"], a["budget"]): a["use"] for a in summary["advice"]}
     rows: dict[str, Sequence[Child]] = {
-        f"{a['problem']} {a['budget']}": [a["use"], a["best_other"], _ratio(a)] for a in advice
+        f"{r['problem']} {r['budget']}": [*_ratios(r), advice.get((r["problem"], r["budget"]), _NONE)]
+        for r in best
     }
-    return table(["use", "best of the others", "its regret over the closed form's"], rows)
-
-
-def _comparisons(comparisons: Sequence[Figures]) -> ET.Element:
-    rows: dict[str, list[Child]] = {}
-    for row in comparisons:
-        cells = rows.setdefault(f"{row['problem']} {row['budget']} {row['policy']}", [_NONE] * len(_AGAINST))
-        cells[list(_AGAINST).index(row["group"])] = element("span", _ratio(row), f" {row['rival']}")
-    return table([f"to the {name}" for name in _AGAINST.values()], rows)
+    return table([*_TO, "use here"], rows)
 
 
 def _stopping(stopping: Sequence[Figures]) -> ET.Element:
@@ -268,21 +214,30 @@ def _figures(cells: Sequence[Figures]) -> Iterator[ET.Element]:
         rest = [c["regret"], c["regret_by_mean"], c["rollouts"], c["choosing_us"]]
         shares = [_percent(c[key]) for key in ("choosing_share", "fallback_share")]
         place = places.setdefault(f"{c['problem']}, {c['budget']}", {})
-        place[c["policy"]] = [estimate(regret), *map(number, rest), *shares]
+        place[c["policy"]] = [estimate(regret), *_ratios(c), *map(number, rest), *shares]
+    head = ["regret", "by the action", "by mean", "rollouts", "choosing, µs a rollout", "time choosing"]
     for title, rows in places.items():
         yield element("h3", title)
-        yield table(
-            ["regret compared", "regret", "by mean", "rollouts", "choosing, µs a rollout",
-             "time spent choosing", "fell back"],
-            rows,
-        )  # fmt: skip
+        yield table([head[0], *_TO, *head[1:], "fell back"], rows)
 
 
 def _left_out(left_out: Sequence[Figures]) -> ET.Element:
+    """A row a policy and reason; times, which differ from budget to budget, are told as one reason."""
+    found: dict[str, dict[str, list[str]]] = {}
+    for x in left_out:
+        why = "one choice takes too long" if x["why"].startswith("one choice takes") else x["why"]
+        found.setdefault(f"{x['policy']}: {why}", {}).setdefault(x["problem"], []).append(x["budget"])
     rows: dict[str, Sequence[Child]] = {
-        f"{x['policy']}: {x['problem']} {x['budget']}": [x["why"]] for x in left_out
+        name: ["; ".join(f"{problem} ({', '.join(budgets)})" for problem, budgets in problems.items())]
+        for name, problems in found.items()
     }
-    return table(["why"], rows)
+    return table(["where"], rows)
+
+
+def _ratios(row: Figures) -> list[Child]:
+    """A cell's ratio to the best of each group, with its name."""
+    found = [row["ratios"].get(group) for group in _AGAINST]
+    return [_NONE if x is None else element("span", _ratio(x), f" {x['rival']}") for x in found]
 
 
 def _ratio(row: Figures) -> ET.Element:

@@ -23,7 +23,7 @@ from distill.rehearse.rehearsal import Cell
 from distill.rehearse.results import summarise, write_results
 from distill.rehearse.results_tables import aims_table, cells_table
 from distill.rehearse.tuning import TUNED, name_of
-from distill.report.rehearsal_page import break_even_svg, rehearsal_page
+from distill.report.rehearsal_page import rehearsal_page, rehearsal_pictures
 
 FAST = str(Path(__file__).parents[2] / "models" / "cold-store-fast.onnx")
 SMALL = Campaign(
@@ -155,8 +155,8 @@ def test_break_even_rows_are_ratios_to_the_best_sampling():
     rows = [r for r in known([5.0, 0.8, 1.15])["break_even"] if r["policy"] == "s"]
     assert [r["rollout_seconds"] for r in rows] == [20e-6, 100e-6, 1e-3]
     assert [r["ratio"] for r in rows] == pytest.approx([5.0, 0.8, 1.15], rel=CLOSED_FORM)
-    picture = break_even_svg(known([5.0, 0.8, 1.15]))
-    assert "cost of a rollout, µs (time: 100 rollouts)" in picture
+    picture = rehearsal_pictures(known([5.0, 0.8, 1.15]))["break-even"]
+    assert "cost of a rollout, µs (time: 100 rollouts)" in "".join(picture.itertext())
 
 
 def test_stopping_is_held_against_going_on():
@@ -184,6 +184,10 @@ def test_the_command_leaves_a_page_and_says_where(tmp_path, capsys):
     assert command_line(["rehearse", "--out", str(tmp_path), *flags, "--scorer", FAST]) == 0
     assert "| tree-2x2^1-noise1 | 6 | cold-store-fast |" in capsys.readouterr().out
     assert (tmp_path / "rehearsal.html").read_text().startswith("<!DOCTYPE html>")
+    assert (tmp_path / "table.md").exists()
+    assert "| tree-2x2^1-noise1 | Gaussian | 6 |" in (tmp_path / "cells.md").read_text()
+    assert command_line(["rehearse", "--out", str(tmp_path), *flags, "--scorer", FAST, "--estimate"]) == 0
+    assert "minutes on one core" in capsys.readouterr().out
 
 
 @pytest.mark.parametrize(

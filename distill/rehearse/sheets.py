@@ -1,0 +1,99 @@
+"""A rehearsal's figures into the sheets of the scorers that it played."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterable, Mapping
+from pathlib import Path
+from typing import Any
+
+from distill.errors import InputError
+from distill.files import sha256_of
+from distill.sheet import SHEET_FORMAT, write_sheet
+
+__all__ = ["add_to_sheet", "add_to_sheets", "figures_of", "read_summary"]
+
+_FORMAT = "voc-distill-rehearsal/1"
+
+
+def read_summary(folder: Path) -> dict[str, Any]:
+    """The summary that a rehearsal left in a folder; InputError where there is none."""
+    path = folder / "summary.json"
+    try:
+        summary = json.loads(path.read_text())
+    except FileNotFoundError:
+        raise InputError(str(folder), "must be a folder that rehearse left, with summary.json") from None
+    except (OSError, ValueError) as e:
+        raise InputError(str(path), f"must be valid JSON ({e})") from None
+    if not isinstance(summary, dict) or summary.get("format") != _FORMAT:
+        raise InputError(f"{path}: format", f"must be {_FORMAT!r}")
+    return summary
+
+
+def figures_of(summary: Mapping[str, Any], sha256: str) -> dict[str, Any]:
+    """What a rehearsal says of one scorer file, by its SHA-256: the sheet's part `rehearsal`.
+
+    uses : how the file was used, each with its aims. cells : a row each use, problem and budget, with
+    regret, its ratios to the best of each group and the share of time spent choosing. by_kind : scorer
+    or closed form, for the kinds of problems that the file played.
+    """
+    names = next((f["policies"] for f in summary["scorers"] if f["sha256"] == sha256), None)
+    if names is None:
+        raise InputError("rehearsal: scorers", "must hold the scorer of the sheet, by its SHA-256", sha256)
+    rows = [row for row in summary["rows"] if row["policy"] in names]
+    if not rows:
+        raise InputError("rehearsal: rows", "must hold cells of the scorer", ", ".join(names))
+    kept = (
+        "problem", "kind", "budget", "policy", "decisions", "measured", "interval", "rollouts",
+        "choosing_share", "ratios",
+    )  # fmt: skip
+    kinds = {row["kind"] for row in rows}
+    return {
+        "seeds": summary["campaign"]["seeds"],
+        "made_with": summary["made_with"],
+        "uses": {name: summary["aims"].get(name, {}) for name in dict.fromkeys(r["policy"] for r in rows)},
+        "by_kind": [row for row in summary["by_kind"] if row["kind"] in kinds],
+        "stopping": [row for row in summary["stopping"] if row["policy"] in names],
+        "cells": [{key: row[key] for key in kept} for row in rows],
+    }
+
+
+def add_to_sheet(summary: Mapping[str, Any], scorer_file: Path) -> dict[str, Any]:
+    """Write a rehearsal's figures into the sheet beside a scorer file, JSON and page; returns the sheet.
+
+    The rest of the sheet stays as it is. Raises InputError where there is no sheet, the sheet is not that
+    of the file, or the file was not rehearsed.
+    """
+    path = scorer_file.with_suffix(".json")
+    if not scorer_file.is_file():
+        raise InputError(str(scorer_file), "must be a scorer file")
+    try:
+        sheet = json.loads(path.read_text())
+    except FileNotFoundError:
+        raise InputError(str(path), "must be the sheet beside the scorer file, as ship writes it") from None
+    except (OSError, ValueError) as e:
+        raise InputError(str(path), f"must be valid JSON ({e})") from None
+    if not isinstance(sheet, dict) or sheet.get("format") != SHEET_FORMAT:
+        raise InputError(f"{path}: format", f"must be {SHEET_FORMAT!r}")
+    sha256 = sha256_of(scorer_file)
+    if sheet["file"]["sha256"] != sha256:
+        raise InputError(
+            f"{path}: file: sha256", "must be that of the file beside it", sheet["file"]["sha256"]
+        )
+    sheet["rehearsal"] = figures_of(summary, sha256)
+    write_sheet(sheet, scorer_file)
+    return sheet  # type: ignore[no-any-return]
+
+
+def add_to_sheets(folder: Path, scorer_files: Iterable[Path]) -> list[Path]:
+    """`add_to_sheet` for several files, from what a rehearsal left in a folder; nothing is written before
+    all of them are known to be in it. Returns the files.
+    """
+    summary, files = read_summary(folder), list(scorer_files)
+    for file in files:
+        if not file.is_file():
+            raise InputError(str(file), "must be a scorer file")
+        figures_of(summary, sha256_of(file))
+    for file in files:
+        add_to_sheet(summary, file)
+    return files

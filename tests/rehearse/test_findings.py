@@ -1,0 +1,154 @@
+"""What follows from known cells: the best scorer, scorer or closed form, sheets, pictures."""
+
+from __future__ import annotations
+
+import json
+import shutil
+import xml.etree.ElementTree as ET
+from pathlib import Path
+
+import numpy as np
+import pytest
+from ladder import CLOSED_FORM
+
+from distill.errors import InputError
+from distill.rehearse.campaign import Campaign, Results
+from distill.rehearse.findings import BEST, places_of
+from distill.rehearse.loop import Budget
+from distill.rehearse.rehearsal import Cell
+from distill.rehearse.results import summarise
+from distill.rehearse.results_tables import every_cell, short_table, time_table
+from distill.rehearse.sheets import add_to_sheet, add_to_sheets, figures_of
+from distill.report.rehearsal_page import rehearsal_page, rehearsal_pictures, write_pictures
+
+MODELS = Path(__file__).parents[2] / "models"
+FAST = str(MODELS / "cold-store-fast.onnx")
+TIMED = [Budget(seconds=100 * cost, rollout_seconds=cost) for cost in (20e-6, 100e-6, 1e-3)]
+N = 40
+EVEN = np.arange(N) % 2 == 0
+CAMPAIGN = Campaign(
+    problems=("tree-3x2^1-noise1", "taxi"),
+    budgets=tuple(str(budget) for budget in TIMED),
+    policies=(
+        "uct", "thompson", "static-rate", "exact-dynamic-rate",
+        f"scorer:{FAST}:name=a", f"scorer:{FAST}:name=b", f"scorer:{FAST}:name=a-stops:stop=0.01",
+    ),
+    seeds=N,
+    tuning_seeds=10,
+)  # fmt: skip
+
+
+def cell(problem, budget, policy, regret, choosing=0.0, processor=0.01):
+    x, zeros = np.zeros(N) + regret, np.zeros(N)
+    columns = {"rollouts": zeros + 100, "choosing": zeros + choosing, "choices": zeros + 100}
+    columns |= {"processor": zeros + processor, "stopped": zeros, "fallbacks": zeros}
+    return Cell(problem, budget, policy, x, regret_by_mean=x, expected_regret=x, **columns)
+
+
+def results(ours, left_out=()):
+    """UCT 2, Thompson 1, closed form 1.1, exact rate 3; scorers a as given at each cost, b always 9."""
+    cells = []
+    for problem in CAMPAIGN.problems:
+        for budget, regret in zip(TIMED, ours, strict=True):
+            cells += [
+                cell(problem, budget, name, x)
+                for name, x in [("uct", 2), ("thompson", 1), ("static_rate", 1.1), ("a", regret), ("b", 9)]
+            ]
+            cells.append(cell(problem, budget, "exact_dynamic_rate", 3, choosing=1.0))
+    tuning = [{"problem": "taxi", "rollouts": 9, "policy": "uct", "chosen": "uct", "processor_seconds": 5.0}]
+    kinds = {"tree-3x2^1-noise1": "Gaussian", "taxi": "win/loss"}
+    return Results(CAMPAIGN, cells, tuning, list(left_out), kinds)
+
+
+def test_the_best_scorer_is_chosen_on_the_other_half():
+    """a is perfect on even decisions, b on odd ones: whoever chooses by one half loses on the other."""
+    a, b = np.where(EVEN, 0.0, 1.0), np.where(EVEN, 1.0, 0.0)
+    cells = [cell("taxi", TIMED[0], "a", a), cell("taxi", TIMED[0], "b", b)]
+    (here,) = places_of(Results(CAMPAIGN, cells)).values()
+    assert here[BEST].measured.tolist() == [1.0] * N
+    same = [cell("taxi", TIMED[0], "a", 1), cell("taxi", TIMED[0], "b", 2)]
+    (here,) = places_of(Results(CAMPAIGN, same)).values()
+    assert here[BEST].measured.tolist() == [1.0] * N
+
+
+def test_a_cell_has_its_ratio_to_each_group():
+    rows = {
+        (r["problem"], r["rollout_seconds"], r["policy"]): r for r in summarise(results([4, 0.5, 2]))["rows"]
+    }
+    found = rows["taxi", TIMED[1].rollout_seconds, BEST]["ratios"]
+    assert {g: x["rival"] for g, x in found.items()} == {
+        "sampling": "thompson", "static": "static_rate", "exact": "exact_dynamic_rate",
+    }  # fmt: skip
+    ratios = [found[g][key] for g in ("sampling", "static", "exact") for key in ("low", "ratio", "high")]
+    assert ratios == pytest.approx([*[0.5] * 3, *[0.5 / 1.1] * 3, *[0.5 / 3] * 3], rel=CLOSED_FORM)
+    assert rows["taxi", TIMED[1].rollout_seconds, "uct"]["ratios"]["sampling"]["ratio"] == 2
+
+
+def test_scorer_or_closed_form_by_kind_and_cost():
+    table = {(r["kind"], r["rollout_seconds"]): r for r in summarise(results([4, 0.5, 1.1]))["by_kind"]}
+    assert len(table) == 6
+    for kind in ("Gaussian", "win/loss"):
+        dear, cheap, same = (table[kind, b.rollout_seconds] for b in (TIMED[1], TIMED[0], TIMED[2]))
+        assert (dear["use"], dear["why"]) == ("scorer", "measurably better than the closed form")
+        assert (cheap["use"], cheap["why"]) == ("closed form", "the scorer is measurably worse")
+        assert (same["use"], same["why"]) == ("closed form", "no measurable difference")
+        assert dear["static"]["ratio"] == pytest.approx(0.5 / 1.1, rel=CLOSED_FORM)
+
+
+def test_where_exact_choosing_is_over_the_budget_it_is_counted_apart():
+    late = {"problem": "taxi", "policy": "exact_dynamic_rate", "why": "one choice takes 99.0 ms"}
+    left_out = [{**late, "budget": "10ms@100us"}, {**late, "budget": "32"}]
+    aims = summarise(results([4, 0.5, 2], left_out))["aims"][BEST]["exact"]
+    assert (aims["cells"], aims["reached"], aims["no_choice"]) == (4, 4, 1)
+
+
+def test_tables_say_what_the_summary_does():
+    summary = summarise(results([4, 0.5, 1.1]))
+    short = "\n".join(short_table(summary))
+    assert "| static closed form | 4 | <= 0.95 | 2 (50%) | > 1.05 | 0 | 2 | 0 |" in short
+    assert "| Gaussian | 20 us | 1 | 3.64 [3.64, 3.64] | 4.00 [4.00, 4.00] | closed form |" in short
+    assert len(every_cell(summary)) == 2 + 6
+    taxi = next(line for line in time_table(summary, 400, 100) if "taxi" in line)
+    # 18 cells of 40 decisions at 0.01 s, ten times as many decisions; tuning 5 s, ten times
+    assert taxi == f"| taxi | {18 * 400 * 0.01:.0f} | 50 |"
+
+
+def test_figures_go_into_the_sheets_of_the_files_that_were_rehearsed(tmp_path):
+    for name in ("cold-store-fast", "on-time"):
+        for end in ("onnx", "json", "md"):
+            shutil.copy(MODELS / f"{name}.{end}", tmp_path)
+    summary = summarise(results([4, 0.5, 1.1]))
+    file = tmp_path / "cold-store-fast.onnx"
+    before = json.loads(file.with_suffix(".json").read_text())
+    add_to_sheet(summary, file)
+    sheet = json.loads(file.with_suffix(".json").read_text())
+    found = sheet.pop("rehearsal")
+    assert sheet == {k: v for k, v in before.items() if k != "rehearsal"}
+    assert found == figures_of(summary, sheet["file"]["sha256"])
+    assert {row["policy"] for row in found["cells"]} == {"a", "b"}
+    assert found["uses"]["a"]["static"]["reached"] == 2
+    page = file.with_suffix(".md").read_text()
+    assert "## In rehearsal" in page
+    assert "| a | static closed form | 4 | <= 0.95 | 2 | > 1.05 | 0 |" in page
+    (tmp_path / "summary.json").write_text(json.dumps(summary))
+    other = tmp_path / "on-time.json"
+    kept = other.read_bytes(), file.with_suffix(".json").read_bytes()
+    with pytest.raises(InputError, match="must hold the scorer of the sheet, by its SHA-256"):
+        add_to_sheets(tmp_path, [file, other.with_suffix(".onnx")])
+    assert (other.read_bytes(), file.with_suffix(".json").read_bytes()) == kept
+    with pytest.raises(InputError, match="must be a folder that rehearse left"):
+        add_to_sheets(tmp_path / "none", [file])
+
+
+def test_pictures_stand_alone_and_show_every_cell(tmp_path):
+    summary = summarise(results([4, 0.5, 1.1]))
+    names = {path.name for path in write_pictures(summary, tmp_path)}
+    assert names == {"ratios.svg", "ratios-closed-form.svg", "costs.svg", "choosing.svg", "break-even.svg"}
+    text = (tmp_path / "ratios.svg").read_text()
+    assert "prefers-color-scheme:dark" in text
+    fewer = {**summary, "rows": [r for r in summary["rows"] if (r["problem"], r["policy"]) != ("taxi", BEST)]}
+    less = ET.tostring(rehearsal_pictures(fewer)["ratios"], encoding="unicode")
+    assert text.count("<use") > less.count("<use")
+    assert ">taxi<" in text
+    assert ">taxi<" not in less
+    assert "How much of the time goes into choosing" in rehearsal_page(summary)

@@ -28,9 +28,19 @@ def parse_json(text: str | bytes) -> object:
     """JSON text as Python objects; InputError names place and rule.
 
     Stricter than plain JSON readers: NaN and infinities, repeated keys and invalid UTF-8 are errors.
+
+    >>> parse_json('{"mean": [null, 1.5, NaN]}')
+    Traceback (most recent call last):
+    distill.errors.InputError: mean[2]: must be finite; got nan
     """
+    constants: list[str] = []
+
+    def constant(name: str) -> float:
+        constants.append(name)
+        return float(name)
+
     try:
-        obj: object = json.loads(text, parse_constant=_no_constant, object_pairs_hook=_no_repeats)
+        obj: object = json.loads(text, parse_constant=constant, object_pairs_hook=_no_repeats)
     except json.JSONDecodeError as e:
         raise InputError(f"column {e.colno}", f"must be valid JSON ({e.msg})") from None
     except UnicodeDecodeError as e:
@@ -39,6 +49,8 @@ def parse_json(text: str | bytes) -> object:
         raise InputError("record", "must not be nested so deeply") from None
     except ValueError as e:  # whole numbers of more digits than Python converts
         raise InputError("record", f"must be valid JSON ({e})") from None
+    if constants:
+        _finite(obj)
     return obj
 
 
@@ -84,8 +96,18 @@ def from_record(obj: object) -> BeliefTree:
     return BeliefTree(parent, kind, reward, discount, prob, **fields)
 
 
-def _no_constant(name: str) -> float:
-    raise InputError("record", "numbers must be finite", name)
+def _finite(obj: object, place: str = "") -> None:
+    """InputError that names the place of the first number, in the order of the text, that is not finite."""
+    ahead = [(place, obj)]
+    while ahead:
+        at, x = ahead.pop()
+        if isinstance(x, float) and not math.isfinite(x):
+            raise InputError(at or "record", "must be finite", x)
+        if isinstance(x, dict):
+            names = ((key if key.isidentifier() else repr(key), y) for key, y in reversed(x.items()))
+            ahead += [(f"{at}.{name}" if at else name, y) for name, y in names]
+        elif isinstance(x, list):
+            ahead += [(f"{at}[{i}]", y) for i, y in reversed(list(enumerate(x)))]
 
 
 def _no_repeats(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
@@ -238,6 +260,7 @@ def _scalars(obj: dict[str, Any], gaussian: bool) -> dict[str, Any]:
     if obj.get("extra") is not None:
         if not isinstance(obj["extra"], dict):
             raise InputError("extra", "must be an object", obj["extra"])
+        _finite(obj["extra"], "extra")
         out["extra"] = obj["extra"]
     return out
 

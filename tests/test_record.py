@@ -140,7 +140,23 @@ BAD_TEXT = {
     "truncated": (json.dumps(flat_record())[:-20], "must be valid JSON"),
     "nan": (
         json.dumps(flat_record(mean=[None, None, math.nan, 0, 0])),
-        "record: numbers must be finite; got 'NaN'",
+        r"^mean\[2\]: must be finite; got nan$",
+    ),
+    "infinity under a chance node": (
+        json.dumps(chance_record()).replace("0.25", "-Infinity", 1),
+        r"^prob\[\d\]: must be finite; got -inf$",
+    ),
+    "nan in a matrix": (
+        json.dumps(flat_record(var=None, cov=[[1, 0, 0], [0, 1, math.nan], [0, math.nan, 1]])),
+        r"^cov\[1\]\[2\]: must be finite; got nan$",
+    ),
+    "infinity in extra": (
+        json.dumps(flat_record(extra={"a b": [0, {"c": math.inf}]})),
+        r"^extra\.'a b'\[1\]\.c: must be finite; got inf$",
+    ),
+    "huge exponent in extra": (
+        json.dumps(flat_record(extra={"a": 0.75})).replace("0.75", "1e999"),
+        r"^extra\.a: must be finite; got inf$",
     ),
     "repeated key": (
         '{"format": "belief-tree/1", "format": "belief-tree/1"}',

@@ -27,7 +27,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="a family file or name: fresh trees of it, and of families that differ in one thing each",
     )
     parser.add_argument(
-        "--trees", type=flags.whole(1), default=300, metavar="N", help="of each shift (default 300)"
+        "--trees",
+        type=flags.whole(1),
+        default=300,
+        metavar="N",
+        help="of each shift (default 300; a tenth where leaves are correlated)",
     )
     parser.add_argument(
         "--peers",
@@ -54,7 +58,7 @@ def run(args: argparse.Namespace) -> None:
     if args.dataset is not None:
         figures = _on_dataset(args)
     if family is not None:
-        figures["shifts"] = _on_shifts(args, family)
+        figures |= _on_shifts(args, family)
     if args.out:
         write_atomic(args.out, (json.dumps(figures, indent=1) + "\n").encode())
 
@@ -79,10 +83,13 @@ def _on_dataset(args: argparse.Namespace) -> dict[str, Any]:
 def _on_shifts(args: argparse.Namespace, family: Family) -> dict[str, Any]:
     from distill.runtime import Scorer
     from distill.sheet import shift_table
-    from distill.shift import measure_shifts
+    from distill.shift import input_of, measure_shifts
+    from distill.shifted_families import out_of_reach
 
-    figures = measure_shifts(
-        Scorer.load(args.scorer), family, trees=args.trees, seed=args.seed, progress=True
-    )
+    scorer = Scorer.load(args.scorer)
+    gone = out_of_reach(family, input_of(scorer, family))
+    figures = measure_shifts(scorer, family, trees=args.trees, seed=args.seed, progress=True)
     print("\n".join(["", *shift_table(figures)]))
-    return figures
+    if gone:
+        print("\n".join(["", "Left out:", *(f"- {name}: {why}" for name, why in gone.items())]))
+    return {"shifts": figures, "shifts_left_out": gone}

@@ -37,7 +37,7 @@ from distill.traces import BadLines, read_many
 from distill.tree import BeliefTree, Floats
 from distill.tree_columns import COLUMNS, decision_key, tree_columns
 
-__all__ = ["INFER_FORMAT", "Estimates", "Inferred", "estimate", "infer", "infer_files"]
+__all__ = ["INFER_FORMAT", "Estimates", "Inferred", "estimate", "infer", "infer_files", "unit_of"]
 
 INFER_FORMAT: Final = "voc-infer/1"
 _COMPARED: Final = 400  # trees drawn from the family for the comparison
@@ -109,12 +109,41 @@ def _infer(trees: Sequence[BeliefTree], name: str, source: str, seed: int) -> In
         "decisions": decisions,
         "level": LEVEL,
         "seed": seed,
-        "parameters": {key: e.to_json() for key, e in parameters.items()},
+        "parameters": {
+            key: {**e.to_json(), "unit": unit_of(key, trees[0].belief)} for key, e in parameters.items()
+        },
         "findings": [f.to_json() for f in found],
         "compared": _compare(trees, family, seed),
         "family": text,
     }
     return Inferred(family, parameters, found, figures)
+
+
+# How a parameter's name begins -> its unit; the first that fits. Spreads of logs have none of these.
+_UNITS: Final = {
+    "root actions": "actions a tree",
+    "leaves an action": "leaves",
+    "depth": "edges",
+    "budget": "rollouts",
+    "strength": "rollouts' worth of prior",
+    "prior sd, typical": "records' unit of value",
+    "span, typical": "records' unit of value",
+    **dict.fromkeys(("noise sd", "prior mean", "reward", "cost", "value of a loss"), "typical prior sds"),
+}
+
+
+def unit_of(parameter: str, belief: str = "gaussian") -> str:
+    """The unit of a parameter that `infer` finds: two of them are values, and most are multiples of these.
+
+    >>> unit_of("prior sd, typical"), unit_of("noise sd, typical"), unit_of("discount")
+    ("records' unit of value", 'typical prior sds', '1')
+    >>> unit_of("reward", "win_loss"), unit_of("cost, spread of log between trees")
+    ('typical spans', 'sd of ln')
+    """
+    if "spread of log" in parameter:
+        return "sd of ln"
+    unit = next((unit for start, unit in _UNITS.items() if parameter.startswith(start)), "1")
+    return "typical spans" if unit == "typical prior sds" and belief == "win_loss" else unit
 
 
 @dataclass(frozen=True)
@@ -253,7 +282,10 @@ def _text(
     lines = [
         f"# Inferred from {len(trees)} recorded trees of {decisions} decisions.",
         f"# Estimates with {100 * LEVEL:g} % intervals (decisions drawn again):",
-        *(f"#   {key}: {_interval_text(e)}" for key, e in parameters.items()),
+        *(
+            f"#   {key} ({unit_of(key, trees[0].belief)}): {_interval_text(e)}"
+            for key, e in parameters.items()
+        ),
         "",
         f'format = "{schema.FAMILY_FORMAT}"',
         f'name = "{plain}"',

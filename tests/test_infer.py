@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+import re
 import tomllib
 import xml.etree.ElementTree as ET
 from dataclasses import replace
@@ -315,6 +316,15 @@ def test_the_command_writes_a_family_that_generate_takes(tmp_path: Path, capsys)
     said = capsys.readouterr().out
     assert "prior sd, typical" in said
     assert "What fits, and what does not" in said
+    assert re.search(r"prior sd, typical +records' unit of value +\d", said)
+    assert re.search(r"noise sd, typical +typical prior sds +\d", said)
+    assert re.search(r"scale .* log10 of the tree's scale", said)
+    assert "#   noise sd, typical (typical prior sds): " in out.read_text()
+    page = ET.fromstring((tmp_path / "p.html").read_text().partition("\n")[2])
+    units = {
+        tr.findtext("th"): tr.findall("td")[-1].text for tr in page.iter("tr") if len(tr.findall("td")) == 2
+    }
+    assert units["noise sd, typical"] == "typical prior sds"
     assert load_family(out).name == "found"
     ET.fromstring((tmp_path / "p.html").read_text().partition("\n")[2])
     argv = ["generate", "--family", str(out), "--trees", "20", "--out", str(tmp_path / "d"), "--workers", "1"]

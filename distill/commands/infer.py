@@ -28,6 +28,7 @@ def run(args: argparse.Namespace) -> None:
     """Run the command."""
     from distill.infer import infer_files
     from distill.traces import BadLines
+    from distill.tree_columns import COLUMNS
 
     bad = BadLines(args.strict)
     figures = infer_files(args.traces, args.out, seed=args.seed, bad=bad).figures
@@ -42,18 +43,19 @@ def run(args: argparse.Namespace) -> None:
         f"{figures['decisions']:,} decisions; {100 * figures['level']:g} % intervals\n"
     )
     width = max(map(len, figures["parameters"]))
+    unit = max(len(e["unit"]) for e in figures["parameters"].values())
     for name, e in figures["parameters"].items():
-        print(f"  {name:<{width}}  {_stated(e)}")
+        print(f"  {name:<{width}}  {e['unit']:<{unit}}  {_stated(e)}")
     print("\nWhat fits, and what does not; brackets are 99 % intervals")
     for f in figures["findings"]:
         text = f"{f['verdict']}: {f['words']}"
         print(textwrap.fill(text, 100, initial_indent="  ", subsequent_indent="    "))
-    print("\nMedians in the traces and in trees drawn from the family; distance 0 (alike) to 1")
+    print("\nMedians in the traces and in trees drawn from the family; distance 0 (alike) to 1; what it is")
     compared = figures["compared"]
     middle = compared["at"].index(0.5)
     for name, row in compared["columns"].items():
         seen, drawn = (f"{row[k][middle]:.4g}" if row[k] else "-" for k in ("traces", "drawn"))
-        print(f"  {name:<{width}}  {seen:>10}  {drawn:>10}  {row['distance']:.2f}")
+        print(f"  {name:<{width}}  {seen:>10}  {drawn:>10}  {row['distance']:.2f}  {COLUMNS[name]}")
 
 
 def _stated(e: dict[str, Any]) -> str:

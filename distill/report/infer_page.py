@@ -12,6 +12,7 @@ from distill.report.elements import element, estimate, number, section, table, t
 from distill.report.facts import Figures, gaps_refused
 from distill.report.frame import document, framed, opening, tile
 from distill.report.theme import svg
+from distill.tree_columns import COLUMNS
 
 __all__ = ["infer_page", "write_infer_page"]
 
@@ -27,6 +28,7 @@ def infer_page(figures: Figures) -> str:
             _opening(figures),
             section("What fits, and what does not", _findings(figures)),
             section("In pictures", element("div", *_pictures(figures), class_="pictures")),
+            section("What the columns are", _columns(figures)),
             section("What the traces say", _parameters(figures), _note(figures)),
             section("The family file", element("pre", figures["family"])),
         )
@@ -86,16 +88,21 @@ def _pictures(figures: Figures) -> list[ET.Element]:
     return out
 
 
+def _columns(figures: Figures) -> ET.Element:
+    return word_list((name, [COLUMNS.get(name, "")]) for name in figures["compared"]["columns"])
+
+
 def _parameters(figures: Figures) -> ET.Element:
-    rows: dict[str, list[Any]] = {name: [estimate(e)] for name, e in figures["parameters"].items()}
-    return table((f"estimate, {100 * figures['level']:g} % interval",), rows)
+    rows: dict[str, list[Any]] = {name: [estimate(e), e["unit"]] for name, e in figures["parameters"].items()}
+    return table((f"estimate, {100 * figures['level']:g} % interval", "unit"), rows)
 
 
 def _note(figures: Figures) -> ET.Element:
-    del figures
+    base = "span" if figures["belief"] == "win_loss" else "prior sd"
     text = (
-        "Standard deviations of noise, and means, rewards and costs, are in units of the typical prior sd. "
-        "Spreads of logs are standard deviations. Posterior means are corrected for what rollouts moved, "
-        "by an identity that holds whatever rule chose the leaves. Brackets in findings are 99 % intervals."
+        f"The typical {base} is in the unit of value that the records use; what is stated in typical {base}s "
+        "is a multiple of it, as in the family file. Sd of ln: standard deviation of the logarithm. "
+        "Posterior means are corrected for what rollouts moved, by an identity that holds whatever rule "
+        "chose the leaves. Brackets in findings are 99 % intervals."
     )
     return element("p", text, class_="note")

@@ -274,7 +274,12 @@ def test_audit_asks_each_recorded_tree_at_its_own_horizon(shipped, tmp_path):
 
 @pytest.mark.slow
 def test_one_file_is_nearly_as_good_at_each_horizon_as_one_trained_for_it(tmp_path):
-    """3,000 trees of three horizons against 1,000 of each: what another horizon's trees cost and teach."""
+    """3,000 trees of three horizons against 1,000 of each, on the same 1,000 others.
+
+    A twentieth of a percentage point is half of what a good scorer may forgo. Other horizons' trees teach as
+    well: with 1,500 others, the one file lost 0.007, 0.039 and 0.028 % at h = 0, 4 and infinity, those trained
+    for one horizon 0.001, 0.132 and 0.042 %.
+    """
     recipe = "boosting 100x31"
     generate(family(), tmp_path / "mixed", trees=3000, seed=1)
     train(tmp_path / "mixed", tmp_path / "of-mixed", recipes=[recipe], n_boot=20)
@@ -283,10 +288,9 @@ def test_one_file_is_nearly_as_good_at_each_horizon_as_one_trained_for_it(tmp_pa
         labelled(tmp_path / f"fit{h}", trees=1000, seed=2, horizon=h)
         train(tmp_path / f"fit{h}", tmp_path / f"of{h}", recipes=[recipe], n_boot=20)
         ship(tmp_path / f"of{h}", tmp_path / f"own{h}.onnx")
-        test = labelled(tmp_path / f"test{h}", trees=1500, seed=3, horizon=h)
+        test = labelled(tmp_path / f"test{h}", trees=1000, seed=3, horizon=h)
         both = (
             validate(tmp_path / name, test, n_boot=20)["accuracy"] for name in ("mixed.onnx", f"own{h}.onnx")
         )
         ours, own = (x["forgone_percent"]["value"] for x in both)
-        print(h, ours, own)
-        assert ours < own + 0.1, h
+        assert ours < own + 0.05, h

@@ -277,8 +277,8 @@ def test_one_file_is_nearly_as_good_at_each_horizon_as_one_trained_for_it(tmp_pa
     """3,000 trees of three horizons against 1,000 of each, on the same 1,000 others.
 
     A twentieth of a percentage point is half of what a good scorer may forgo. Other horizons' trees teach as
-    well: with 1,500 others, the one file lost 0.007, 0.039 and 0.028 % at h = 0, 4 and infinity, those trained
-    for one horizon 0.001, 0.132 and 0.042 %.
+    well: with 1,500 others, the one file lost 0.007, 0.039 and 0.028 % at h = 0, 4 and infinity, those
+    trained for one horizon 0.001, 0.132 and 0.042 %.
     """
     recipe = "boosting 100x31"
     generate(family(), tmp_path / "mixed", trees=3000, seed=1)

@@ -88,7 +88,7 @@ def test_infinity_starts_as_the_dynamic_graph_of_as_many_cells():
 
 
 def test_horizons_above_0_start_near_the_exact_rate():
-    """Where a learner starts: the typical start of a candidate worth picking is within a fifth."""
+    """The start of the best candidate: typically within 5 %, nine in ten within a quarter."""
     for h in (0.5, 4.0, 50.0, math.inf):
         logs = []
         for seed in range(40):
@@ -98,9 +98,9 @@ def test_horizons_above_0_start_near_the_exact_rate():
             at = int(np.argmax(exact))
             if exact[at] > 1e-9:
                 logs.append(math.log(start[at] / exact[at]))
-        assert len(logs) > 30
-        assert abs(np.median(logs)) < math.log(1.2)
-        assert np.quantile(np.abs(logs), 0.9) < math.log(2)
+        assert len(logs) >= 30
+        assert abs(np.median(logs)) < math.log(1.05)
+        assert np.quantile(np.abs(logs), 0.9) < math.log(1.25)
 
 
 @settings(deadline=None, max_examples=30, derandomize=True)

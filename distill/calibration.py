@@ -10,11 +10,18 @@ show on average, not a proof for each; `validate` measures it on trees that had 
 
 A candidate whose score and exact value are both 0 lies within any bound. Counted, such candidates let the
 others miss more; left out, all would miss less than stated. Rows are weighed in between: the share of all
-candidates comes to lie half as far above the stated one as the share of the others lies below it.
+candidates comes to lie half as far above the stated one as the share of the others lies below it, but no
+further above than a tenth of the misses that are stated: of 5 % misses, at least 4.5 % are made.
+
+The bound is never below the score. Where scores lie so high that the score itself holds more often than
+stated, a bin cannot be brought down to its share, and all bins together would hold more often than stated.
+So the other bins aim at a common share a little lower, just as much as brings all together to the stated
+share, and by at most half of the misses that are stated.
 """
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any, Final
 
@@ -33,6 +40,9 @@ _ROWS_A_BIN: Final = 300  # of calibration: a share of 5 % is then known to abou
 _FEW_ROWS: Final = 100
 _FLOOR: Final = 0.01  # of a log ratio: scores closer than 1 % are alike
 _LOG_LIMIT: Final = 20.0
+_FEWEST_MISSES: Final = 0.9  # of those stated, over all candidates, however many are 0 in both
+_MOST_GIVEN_BACK: Final = 0.5  # of the stated misses, that a bin makes beyond them for others' sake
+_HALVINGS: Final = 30
 
 
 @dataclass(frozen=True, eq=False)
@@ -102,21 +112,83 @@ def calibrated(
     feature, split, left, right = _grown(*training, len(x))
     empty = UpperBound(feature, split, left, right, np.ones(len(left)), coverage, trees, len(x))
     ratio = _log_ratio(exact, voc)
-    alive = live(exact, voc)
     of_row = np.ones(len(x)) if weight is None else np.asarray(weight, dtype=float)
-    counted = float(of_row[alive].sum()) or 1.0
-    weight = of_row * (2 / of_row.sum() + alive / counted)
-    pooled = _quantile(ratio, weight, coverage)
+    counted = _counted(of_row, live(exact, voc))
     bins = empty.bins(x)
+    leaves = [leaf for leaf in np.flatnonzero(left < 0).tolist() if np.any(bins == leaf)]
+    sorted_bins = [_Sorted.of(ratio[bins == leaf], counted[bins == leaf]) for leaf in leaves]
+    pooled = _Sorted.of(ratio, counted).quantile(coverage)
+
+    def logs(level: float) -> list[float]:
+        """The log of each bin's factor."""
+        out = []
+        for one in sorted_bins:
+            own = one.quantile(level)
+            if len(one.ratio) < _FEW_ROWS:
+                own = max(own, pooled)
+            # Never below the score itself: a bound that lies under what it bounds would be misread.
+            out.append(float(np.clip(own, 0.0, _LOG_LIMIT)))
+        return out
+
+    def held(level: float) -> float:
+        return sum(one.below(log) for one, log in zip(sorted_bins, logs(level), strict=True))
+
+    level = _common_level(held, sum(one.wanted(coverage) for one in sorted_bins), coverage)
     factor = np.ones(len(left))
-    for leaf in np.flatnonzero(left < 0):
-        rows = bins == leaf
-        own = _quantile(ratio[rows], weight[rows], coverage) if np.any(rows) else -np.inf
-        if np.count_nonzero(rows) < _FEW_ROWS:
-            own = max(own, pooled)
-        # Never below the score itself: a bound that lies under what it bounds would be misread.
-        factor[leaf] = np.exp(np.clip(own, 0.0, _LOG_LIMIT))
+    factor[leaves] = np.exp(logs(level))
     return UpperBound(feature, split, left, right, factor, coverage, trees, len(x))
+
+
+def _counted(of_row: Floats, alive: NDArray[np.bool_]) -> Floats:
+    """Weight of each row for the quantiles: the share p of all rows and that of live ones, p to 1.
+
+    With a share `a` of rows 0 in both, misses of all are 1 - a times those of the live. p = 2 makes all lie
+    half as far above the stated share as the live below it; p = 10 (0.9 / (1 - a) - 1) makes all miss 0.9
+    of what is stated. The larger one serves.
+    """
+    total, some = float(of_row.sum()), float(of_row[alive].sum())
+    if some <= 0:
+        return of_row / total
+    p = max(2.0, (_FEWEST_MISSES * total / some - 1) / (1 - _FEWEST_MISSES))
+    return np.asarray(of_row * (p / total + alive / some))
+
+
+def _common_level(held: Callable[[float], float], wanted: float, coverage: float) -> float:
+    """The least level from the lowest allowed up to `coverage` at which the bins together hold `wanted`."""
+    high, low = coverage, coverage - _MOST_GIVEN_BACK * (1 - coverage)
+    if held(low) >= wanted:
+        return low
+    for _ in range(_HALVINGS):
+        middle = (low + high) / 2
+        low, high = (low, middle) if held(middle) >= wanted else (middle, high)
+    return high
+
+
+@dataclass(frozen=True, eq=False)
+class _Sorted:
+    """Log ratios of a bin in order, with the sums of their weights up to each."""
+
+    ratio: Floats
+    sums: Floats
+
+    @classmethod
+    def of(cls, ratio: Floats, weight: Floats) -> _Sorted:
+        order = np.argsort(ratio, kind="stable")
+        return cls(ratio[order], np.cumsum(weight[order]))
+
+    def wanted(self, level: float) -> float:
+        """Weight that the bound has to hold for, one more row taken as a miss; at most all."""
+        return float(min(level * (self.sums[-1] + self.sums[-1] / len(self.ratio)), self.sums[-1]))
+
+    def quantile(self, level: float) -> float:
+        """The least ratio up to which the weight is as wanted."""
+        at = int(np.searchsorted(self.sums, self.wanted(level) * (1 - 1e-12)))
+        return float(self.ratio[min(at, len(self.ratio) - 1)])
+
+    def below(self, log: float) -> float:
+        """Weight of the ratios at or below a bound."""
+        at = int(np.searchsorted(self.ratio, log, side="right"))
+        return float(self.sums[at - 1]) if at else 0.0
 
 
 def _log_ratio(exact: Floats, voc: Floats) -> Floats:
@@ -124,15 +196,6 @@ def _log_ratio(exact: Floats, voc: Floats) -> Floats:
     both = (exact > 0) & (voc > 0)
     logs = np.log(np.where(both, exact, 1)) - np.log(np.where(both, voc, 1))
     return np.where(both, logs, np.where(exact > 0, np.inf, -np.inf))
-
-
-def _quantile(ratio: Floats, weight: Floats, coverage: float) -> float:
-    """The least ratio that a share `coverage` of the weight does not exceed, one more row taken as a miss."""
-    order = np.argsort(ratio, kind="stable")
-    below = np.cumsum(weight[order])
-    wanted = coverage * (below[-1] + below[-1] / len(ratio))
-    at = int(np.searchsorted(below, wanted * (1 - 1e-12)))
-    return float(ratio[order[min(at, len(order) - 1)]])
 
 
 def _grown(

@@ -60,12 +60,13 @@ def _scorer(
     commit: float = 0.0,
     spread: int = 1,
     settled: float = 0.0,
+    late: float = 0.0,
     share: float = 0.0,
     stop: float = 0.0,
     prior: float = 1.0,
     name: str = "",
 ) -> Policy:
-    options = {"commit": commit, "settled": settled, "share": share, "stop": stop}
+    options = {"commit": commit, "settled": settled, "late": late, "share": share, "stop": stop}
     return _with_prior(ByScorer(file, spread=spread, name=name, **options), prior)
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import pickle
+from dataclasses import replace
 from pathlib import Path
 from types import SimpleNamespace
 
@@ -161,11 +162,13 @@ def test_a_prior_of_ones_own_changes_the_choices_not_what_is_acted_on():
 
 
 def test_what_a_policy_asks_for_passes_through_its_prior():
-    wide = WithPrior(ByScorer(Scorer({"input": "record"}), share=0.5), 2.0)
+    wide = WithPrior(ByScorer(Scorer({"input": "record"}), share=5.0), 2.0)
     done = run(wide, Budget.parse("10ms@1ms"))
     assert done.rollouts > 0
     assert wide._policy._rollout_seconds == pytest.approx(1e-3, rel=CLOSED_FORM)
-    rows, own = wide._policy._inputs._backup.rows(), Backup(wide._own.tree()).rows()
+    assert wide._policy._changed  # the last rollout waits for the next scoring
+    inputs = wide._policy._up_to_date(wide._own)
+    rows, own = inputs._backup.rows(), Backup(wide._own.tree()).rows()
     assert all(np.allclose(rows[name], own[name], rtol=CLOSED_FORM, atol=0) for name in own)
     assert not WithPrior(ByScorer(FAST), 2.0).suits(make_problem("tree-2x2^1-winloss").draw(0).tree)
     assert WithPrior(ByRule("thompson"), 2.0).suits(PROBLEM.draw(0).tree)
@@ -215,12 +218,45 @@ def test_settled_choices_go_to_the_static_rate():
     assert all(c.fell_back for c in choices(fake([0.0] * 4)(Scorer.closed_form()), 8))
 
 
-def test_scoring_keeps_to_its_share_of_the_time():
+def test_scorings_that_are_dear_beside_a_rollout_are_left_out():
+    """The first one tells what a scoring takes; only the fastest of as many leaves counts."""
     policy = fake([0.1, 0.4])(Scorer.closed_form(), share=0.5)
-    policy.expect(1e-7)  # a scoring of some microseconds must serve many rollouts of 0.1
-    assert [c.fell_back for c in choices(policy, 10)] == [False] + 9 * [True]
+    policy.expect(1e-9)
+    assert [c.fell_back for c in choices(policy, 5)] == [False, *4 * [True]]
     policy.expect(10.0)
-    assert not any(c.fell_back for c in choices(policy, 10))
+    assert not any(c.fell_back for c in choices(policy, 5))
+    assert policy.calls == 6
+    policy._fastest[4] = 1.0  # a busy spell of the machine
+    policy.expect(1e-3)
+    assert all(c.fell_back for c in choices(policy, 5))
+    assert not any(c.fell_back for c in choices(policy, 5, problem=TreeProblem(3))[:1])  # not yet known
+
+
+def test_the_scorer_chooses_the_last_rollouts():
+    """Two rollouts a leaf of four, of which one is known: six."""
+    tree = FOUR_LEAVES.draw(0).tree
+    for policy, of, last in [
+        (fake([0.1] * 4)(Scorer.closed_form(), late=2), tree, 8),
+        (fake([0.1] * 4)(Scorer.closed_form(), late=2), replace(tree, var=np.array([1.0, 0, 4, 1])), 6),
+        (fake([0.1] * 4)(Scorer.closed_form(), late=0.5), TreeProblem(4, noise_var=None).draw(0).tree, 2),
+    ]:
+        policy.begin(of)
+        posterior, rng = Search(of), np.random.default_rng(0)
+        by_scorer = [not policy.choose(posterior, left, rng).fell_back for left in range(12, 0, -1)]
+        assert by_scorer == [left <= last for left in range(12, 0, -1)]
+        assert policy.calls == last
+
+
+def test_late_scorers_look_whether_to_stop_every_eighth_rollout():
+    policy = fake([0.005, 0, 0, 0])(Scorer.closed_form(), late=1, stop=0.01)
+    policy.begin(FOUR_LEAVES.draw(0).tree)
+    worth = SimpleNamespace(voc=np.array([0.5]))
+    policy._inputs.closed_form = lambda *_: worth
+    posterior, rng = Search(FOUR_LEAVES.draw(0).tree), np.random.default_rng(0)
+    assert all(policy.choose(posterior, 50, rng).fell_back for _ in range(16))
+    assert policy.calls == 2
+    worth.voc = np.array([0.001])
+    assert policy.choose(posterior, 50, rng) is None
 
 
 def test_stops_are_in_units_of_the_scale():
@@ -290,6 +326,7 @@ def test_static_voc_is_the_knowledge_gradient():
         (lambda: ByScorer(FAST, commit=2.0), "commit: must be from 0 to 1"),
         (lambda: ByScorer(FAST, spread=0), "spread: must be at least 1"),
         (lambda: ByScorer(FAST, settled=-1.0), "settled: must be >= 0"),
+        (lambda: ByScorer(FAST, late=-1.0), "late: must be >= 0 and finite"),
         (lambda: ByScorer(FAST, share=float("inf")), "share: must be >= 0 and finite"),
         (lambda: ByScorer(FAST, stop=-0.1), "stop: must be >= 0"),
     ],

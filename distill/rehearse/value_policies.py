@@ -215,8 +215,11 @@ class ByScorer(_Thrifty):
                 self._until_look -= 1
                 return self._static(posterior, remaining, rng)
             self._until_look = _LOOK - 1
+        if self._inputs is None:  # once a decision: no part of what each scoring takes
+            self._inputs = ScorerInputs(self.scorer, posterior.tree())
+            self._changed.clear()
         started = time.perf_counter()
-        scores = self._up_to_date(posterior).score(posterior, remaining)
+        scores = self._up_to_date(self._inputs, posterior).score(posterior, remaining)
         took = time.perf_counter() - started
         self._fastest[self._leaves] = min(took, self._fastest.get(self._leaves, math.inf))
         best = int(scores.pick)
@@ -243,15 +246,12 @@ class ByScorer(_Thrifty):
         most = self.share * self._rollout_seconds
         return most > 0 and self._fastest.get(self._leaves, 0.0) > most
 
-    def _up_to_date(self, posterior: Posterior) -> ScorerInputs:
+    def _up_to_date(self, inputs: ScorerInputs, posterior: Posterior) -> ScorerInputs:
         """What the scorer reads, with all rollouts taken in."""
-        if self._inputs is None:
-            self._inputs = ScorerInputs(self.scorer, posterior.tree())
-        else:
-            for leaf in self._changed:
-                self._inputs.observe(posterior, leaf)
+        for leaf in self._changed:
+            inputs.observe(posterior, leaf)
         self._changed.clear()
-        return self._inputs
+        return inputs
 
     def _second_opinion(self, posterior: Posterior, remaining: int) -> float:
         """The closed form's best value, which still tells leaves apart where a dynamic value says settled."""

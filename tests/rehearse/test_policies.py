@@ -162,12 +162,12 @@ def test_a_prior_of_ones_own_changes_the_choices_not_what_is_acted_on():
 
 
 def test_what_a_policy_asks_for_passes_through_its_prior():
-    wide = WithPrior(ByScorer(Scorer({"input": "record"}), share=5.0), 2.0)
-    done = run(wide, Budget.parse("10ms@1ms"))
+    wide = WithPrior(ByScorer(Scorer({"input": "record"}), share=1e9), 2.0)
+    done = run(wide, Budget.parse("10ms@1ms"), clock=lambda: 0.0)
     assert done.rollouts > 0
     assert wide._policy._rollout_seconds == pytest.approx(1e-3, rel=CLOSED_FORM)
     assert wide._policy._changed  # the last rollout waits for the next scoring
-    inputs = wide._policy._up_to_date(wide._own)
+    inputs = wide._policy._up_to_date(wide._policy._inputs, wide._own)
     rows, own = inputs._backup.rows(), Backup(wide._own.tree()).rows()
     assert all(np.allclose(rows[name], own[name], rtol=CLOSED_FORM, atol=0) for name in own)
     assert not WithPrior(ByScorer(FAST), 2.0).suits(make_problem("tree-2x2^1-winloss").draw(0).tree)

@@ -22,7 +22,7 @@ from distill.fallback import closed_form_values
 from distill.feature_graph import FeatureGraph
 from distill.metrics import measure
 from distill.record_rows import LeafMoments
-from distill.scorer_inputs import LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
+from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
 from distill.table_peer_kernels import matched_on_table, sampled_on_table, sampled_wins
 from distill.timing import Decision, Timing, correlated, decisions, time_calls, tree_decisions
 from distill.tree import Floats
@@ -68,7 +68,8 @@ def peers(
     graph = FeatureGraph.of_value(value, kind)
     batch: int | None = value["batch"]
     rng = np.random.default_rng(seed)
-    flat = _flat if kind is LEAF_TABLE else _flat_wins
+    wins = kind is WIN_LOSS_TABLE
+    flat = _flat_wins if wins else _flat
 
     def first_order(t: Mapping[str, Any], left: float) -> Floats:
         return graph.matrix({**t, "remaining": left}).first_order
@@ -87,7 +88,7 @@ def peers(
         return np.asarray(matched_on_table(*flat(t), int(left), batch or 0, _NODES, _SHARES))
 
     def sampled(t: Mapping[str, Any], left: float) -> Floats:
-        if kind is LEAF_TABLE:
+        if not wins:
             return np.asarray(sampled_on_table(rng, *flat(t), int(left), batch or 0, samples))
         low, span = t["offset"] + t["gain"] * t["low"], t["gain"] * (t["high"] - t["low"])
         place = (t["alpha"], t["beta"], low, span, t["action"])
@@ -101,7 +102,7 @@ def peers(
 
     def thompson(t: Mapping[str, Any], left: float) -> Floats:
         del left
-        if kind is LEAF_TABLE:
+        if not wins:
             m, v, _, _ = flat(t)
             return m + np.sqrt(v) * rng.standard_normal(len(m))
         drawn = t["low"] + (t["high"] - t["low"]) * rng.beta(t["alpha"], t["beta"])
@@ -109,8 +110,8 @@ def peers(
 
     return {
         FIRST_ORDER: first_order,
-        ONE: static(1) if kind is LEAF_TABLE else _one_trial,
-        STATIC: static(batch) if kind is LEAF_TABLE else static_wins,
+        ONE: _one_trial if wins else static(1),
+        STATIC: static_wins if wins else static(batch),
         MOMENTS: matching,
         SAMPLES: sampled,
         UCT: uct,
@@ -160,8 +161,10 @@ def left_out(kind: InputKind, value: Mapping[str, Any], *, with_cov: bool = Fals
     >>> left_out(LEAF_TABLE, {"horizon": "inf", "batch": None})
     {}
     """
-    if kind not in (LEAF_TABLE, WIN_LOSS_TABLE, RECORD):
+    if kind not in (LEAF_TABLE, ANY_HORIZON, WIN_LOSS_TABLE, RECORD):
         return dict.fromkeys(_NAMES, f"no peer reads a {kind.name}")
+    if kind is ANY_HORIZON:
+        return dict.fromkeys((MOMENTS, SAMPLES), "values the dynamic case only")
     h = float(value["horizon"])
     out = {}
     if h == 0 and kind is not WIN_LOSS_TABLE:

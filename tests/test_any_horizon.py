@@ -22,10 +22,12 @@ from distill.closed_form import static_rates
 from distill.errors import InputError, ScorerFileError
 from distill.family import draw, load_family, parse_family
 from distill.generate import generate
+from distill.peers import FIRST_ORDER, MOMENTS, ONE, SAMPLES, STATIC, THOMPSON, UCT
 from distill.query import Query
 from distill.recorder import Recorder
 from distill.runtime import Scorer
 from distill.scorer_inputs import ANY_HORIZON, VARIES
+from distill.shift import measure_shifts
 from distill.ship import ship
 from distill.sources import Traces
 from distill.traces import read_trees, write_trees
@@ -51,6 +53,8 @@ def shipped(tmp_path_factory) -> tuple[Path, Path]:
     front = train(folder / "data", folder / "trained", recipes=["linear"], n_boot=20)
     assert front["value"] == {"horizon": VARIES, "batch": None}
     assert set(front["exact"]) == {"any-horizon VOC", "any-horizon rate"}
+    assert set(front["peers"]) == {FIRST_ORDER, ONE, STATIC, UCT, THOMPSON}
+    assert set(front["peers_left_out"]) == {MOMENTS, SAMPLES}
     ship(folder / "trained", folder / "scorer.onnx")
     return folder / "data", folder / "scorer.onnx"
 
@@ -270,6 +274,12 @@ def test_audit_asks_each_recorded_tree_at_its_own_horizon(shipped, tmp_path):
     assert found["trees"]["judged"] == 60
     assert found["now"]["forgone_percent"]["value"] < 2
     assert "feature known, median leaf" in {x["meaning"] for x in found["drift"]["columns"].values()}
+
+
+def test_shifts_keep_each_trees_horizon(scorer):
+    found = measure_shifts(scorer, family(), names=["as trained", "noise x4"], trees=20, n_boot=10)
+    assert set(found) == {"as trained", "noise x4"}
+    assert all(m["forgone_percent"]["value"] < 10 and m["aside"] == 0 for m in found.values())
 
 
 @pytest.mark.slow

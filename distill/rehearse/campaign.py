@@ -155,7 +155,9 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
 
     for text in campaign.budgets_of(name):
         if os.getpid() != starter != os.getppid():
-            break  # whoever started this process is gone, and will resume or not
+            os._exit(
+                1
+            )  # whoever started this process is gone: nobody waits, and a resumed run wants the core
         budget = Budget.parse(text)
         rollouts = budget.room(0, 0.0)
         if rollouts not in tuned:

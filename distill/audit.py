@@ -23,12 +23,14 @@ from distill.drift import drift, trained_family, training
 from distill.errors import InputError
 from distill.family import Family
 from distill.files import sha256_of, write_atomic
+from distill.generate import held
 from distill.labelling import Asked
 from distill.metrics import picks
 from distill.recorded import label
 from distill.runtime import Scorer
 from distill.scorer_inputs import LEAF_TABLE, VARIES
 from distill.sheet import SHEET_FORMAT
+from distill.sources import tree_key
 from distill.traces import BadLines, read_many, write_trees
 from distill.tree import BeliefTree, Floats
 from distill.validate import examine, sample_pairs
@@ -67,6 +69,7 @@ def audit(
     margin: float = 0.5,
     seed: int = 0,
     family: Family | None = None,
+    dataset: str | os.PathLike[str] | None = None,
     n_boot: int = 1000,
     bad: BadLines | None = None,
     progress: bool = False,
@@ -76,6 +79,8 @@ def audit(
     trees : how many are labelled, a seeded sample. margin : percentage points above the promise that are
     let pass. family : what the scorer was trained on, for drift; by default the one of its metadata, where
     it comes with the tool. bad : takes in bad records; None raises the first.
+    dataset : what the scorer was trained on; trees that it holds already are not worth adding. The scorer
+    file does not hold its training trees, so without it they cannot be told.
     Trees that the scorer's input cannot hold go aside, counted by reason.
     The same files and seed give the same figures. Raises InputError where sheet and file do not belong
     together, or the sample holds fewer than 20 decisions that the scorer can be asked about.
@@ -83,6 +88,7 @@ def audit(
     path = Path(scorer)
     sheet = _read_sheet(path)
     loaded = Scorer.load(path)
+    known = None if dataset is None else held(dataset)
     kind = loaded.kind or LEAF_TABLE
     family = family or trained_family(loaded.facts)
     reference = None if family is None else training(family, loaded.facts, kind)
@@ -104,6 +110,7 @@ def audit(
     worst = [name for key, name in _JUDGED.items() if judged[key]["worse"]]
     scores = loaded.score(**candidates.columns, tree=candidates.tree)
     chosen = _worth_adding(candidates, scores.voc, scores.in_range)
+    new = [i for i in chosen if known is None or tree_key(sample[kept[i]]) not in known]
     figures = {
         "format": AUDIT_FORMAT,
         "scorer": {
@@ -115,7 +122,8 @@ def audit(
         "seed": seed,
         "trees": {
             "recorded": total, "sampled": len(sample), "judged": len(kept), "decisions": decisions,
-            "aside": dict(aside), "worth adding": len(chosen),
+            "aside": dict(aside), "worth adding": len(new),
+            "in the dataset already": None if known is None else len(chosen) - len(new),
         },
         "margin": margin,
         "judged": judged,
@@ -131,7 +139,7 @@ def audit(
         "label_error_percent": _label_error(candidates),
         "pairs": sample_pairs(loaded, candidates, seed=seed),
     }  # fmt: skip
-    return Audit(figures, [sample[kept[i]] for i in chosen])
+    return Audit(figures, [sample[kept[i]] for i in new])
 
 
 def write_audit(found: Audit, out: str | os.PathLike[str]) -> None:

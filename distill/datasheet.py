@@ -7,7 +7,7 @@ from typing import Any
 
 from distill import schema
 
-__all__ = ["datasheet"]
+__all__ = ["datasheet", "recorded_trees"]
 
 
 def datasheet(manifest: dict[str, Any], columns: dict[str, dict[str, str]]) -> str:
@@ -36,13 +36,35 @@ computation and an error bound.
 - **Same again**: the source, the seed, the question and the versions above give the same bytes on the same
   kind of machine, with any number of workers, on one machine or on a cluster.
 
-Synthetic trees say nothing about an agent whose trees look different: compare before use.
+{_shares(manifest)}
 """
     lines = []
     for kind, described in columns.items():
         lines += ["", f"## {kind}-*.parquet", "", "| column | meaning and unit |", "| --- | --- |"]
         lines += [f"| `{name}` | {text} |" for name, text in described.items()]
     return page + "\n".join(lines) + "\n"
+
+
+def recorded_trees(manifest: dict[str, Any]) -> tuple[int, int]:
+    """How many of the trees that a dataset was asked for are recorded, and how many there are in all."""
+    source, added = manifest["source"], sum(a["trees"] for a in manifest.get("added", ()))
+    recorded = {"family": 0, "traces": manifest["trees"]}.get(source["kind"], source.get("recorded", 0))
+    return recorded + added, manifest["trees"] + added
+
+
+def _shares(manifest: dict[str, Any]) -> str:
+    """What the trees can speak for, by how many are recorded."""
+    recorded, every = recorded_trees(manifest)
+    if recorded == 0:
+        return "Synthetic trees say nothing about an agent whose trees look different: compare before use."
+    warning = "They speak for an agent whose trees look like them: compare before use."
+    if recorded == every:
+        return f"All {every:,} trees are recorded, none is synthetic. {warning}"
+    share = 100 * recorded / every
+    return (
+        f"Of the {every:,} trees, {recorded:,} ({share:.3g} %) are recorded and {every - recorded:,} "
+        f"({100 - share:.3g} %) are synthetic. {warning}"
+    )
 
 
 def _origin(manifest: dict[str, Any]) -> str:

@@ -34,7 +34,7 @@ from distill.terminal import bar
 from distill.tree import Ints
 from distill.workers import run_calls
 
-__all__ = ["Asked", "Mix", "Traces", "add", "generate"]
+__all__ = ["Asked", "Mix", "Traces", "add", "generate", "held"]
 
 _LEAST_SHARD_TREES: Final = 50
 _MOST_SHARD_TREES: Final = 1000
@@ -271,13 +271,19 @@ def _of_addition(traces: Traces) -> dict[str, Any]:
     return {"name": traces.name, "sha256": traces.sha256, "code": code_versions()}
 
 
+def held(folder: str | os.PathLike[str], below: float = math.inf) -> set[int]:
+    """`sources.tree_key` of each tree of a dataset numbered below `below`, labelled or aside."""
+    return {
+        tree_key(tree)
+        for aside in (False, True)
+        for number, tree in shards.read_trees(Path(folder), aside=aside, check=False, partial=True)
+        if number < below
+    }
+
+
 def _new_trees(traces: Traces, folder: Path, first: int) -> Ints:
     """Which recorded trees are not among the dataset's trees numbered below `first`, nor earlier here."""
-    known: set[int] = set()
-    for aside in (False, True):
-        for number, tree in shards.read_trees(folder, aside=aside, check=False, partial=True):
-            if number < first:
-                known.add(tree_key(tree))
+    known = held(folder, first)
     rows = []
     for i, key in enumerate(traces.keys.tolist()):
         if key not in known:

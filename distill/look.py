@@ -71,12 +71,22 @@ def look(dataset: str | os.PathLike[str], *, check: bool = True) -> dict[str, An
         "aside_reasons": dict(Counter(_short(r) for r in aside["reason"]).most_common(10)),
         "methods": dict(Counter(trees["method"]).most_common()),
         "sources": dict(Counter(trees["source"]).most_common()),
+        "recorded": sum(name in _recorded_names(manifest) for name in trees["source"]),
         "duplicate_trees": n - len(duplicates),
         "most_alike": max(duplicates.values(), default=0),
         "weights": _weights(trees["weight"]),
         **_labels(rows),
         "slices": _slices(rows),
     }
+
+
+def _recorded_names(manifest: dict[str, Any]) -> set[str]:
+    """What the recorded trees among a dataset's are called in its column `source`."""
+    source = manifest.get("source", {})
+    names = {a["name"] for a in manifest.get("added", ())}
+    if source.get("kind") in ("traces", "mix"):
+        names.add(source.get("traces", source).get("name"))
+    return names
 
 
 def _candidates(folder: Path, manifest: dict[str, Any]) -> dict[str, Floats]:

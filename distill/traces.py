@@ -22,7 +22,7 @@ from distill.files import write_atomic
 from distill.record import from_record, parse_json, to_record
 from distill.tree import BeliefTree
 
-__all__ = ["BadLines", "read_many", "read_trees", "write_trees"]
+__all__ = ["BadLines", "none_valid", "read_many", "read_trees", "write_trees"]
 
 _SUFFIXES: Final = (".jsonl", ".jsonl.gz", ".json")
 _MOST_LINE: Final = 64 * 2**20  # bytes; 1,024 leaves with all their covariance take about 20 MB
@@ -136,8 +136,13 @@ def read_many(sources: Sequence[str | os.PathLike[str]], bad: BadLines) -> Itera
             found = True
             yield place, tree
     if not found:
-        names = ", ".join(str(s) for s in sources)
-        raise InputError(names, f"must hold at least one valid record; all {bad.count:,} are bad", *bad.first)
+        raise none_valid(sources, bad)
+
+
+def none_valid(sources: Sequence[str | os.PathLike[str]], bad: BadLines) -> InputError:
+    """The error of sources in which every record is bad."""
+    names = ", ".join(str(s) for s in sources)
+    return InputError(names, f"must hold at least one valid record; all {bad.count:,} are bad", *bad.first)
 
 
 def write_trees(path: str | os.PathLike[str], trees: Iterable[BeliefTree]) -> int:

@@ -215,6 +215,17 @@ def test_generate_adds_what_is_worth_adding(shipped: Path, noisy: Path, tmp_path
     assert run(["generate", "--add", str(out / WORTH_ADDING), "--out", str(data), "--workers", "1"]) == 0
     assert read_manifest(data)["totals"]["trees"] == 60 + len(worth)
     capsys.readouterr()
+    # Of the trees worth adding, those that the dataset holds by now are not offered again.
+    code = call(shipped, noisy, "--out", tmp_path / "again", "--dataset", data)
+    told = capsys.readouterr().out
+    assert f"worth adding 0, beside {len(worth)} that the dataset holds already" in told
+    assert not (tmp_path / "again" / WORTH_ADDING).exists()
+    again = json.loads((tmp_path / "again" / "audit.json").read_text())
+    assert again["trees"] | {"worth adding": len(worth), "in the dataset already": None} == figures["trees"]
+    assert code == call(shipped, noisy)  # the verdict is the same
+    assert "training's own among them if there are any" in capsys.readouterr().out
+    assert "the dataset of training holds already" in audit_page(again)
+    assert "its dataset was not given" in audit_page(figures)
 
 
 # --- refusals ---------------------------------------------------------------------------------------

@@ -188,3 +188,16 @@ def test_the_command_mixes(tmp_path, capsys):
     assert "--share: must come with --family and --traces" in capsys.readouterr().err
     assert run(["generate", "--out", str(tmp_path / "n")]) == 2
     assert "needs --family, --traces, both, or --add" in capsys.readouterr().err
+
+
+def test_files_without_a_good_record_are_told_alike(tmp_path, capsys):
+    path = tmp_path / "bad.jsonl"
+    path.write_text('{"format": "belief-tree/1"}\n{"format": "belief-tree/2"}\n')
+    told = []
+    for command in (["generate", "--traces", str(path), "--out", str(tmp_path / "d"), "--workers", "1"],
+                    ["infer", str(path), "--out", str(tmp_path / "f.toml")]):  # fmt: skip
+        assert run(command) == 2
+        told.append(capsys.readouterr().err)
+    assert told[0] == told[1]
+    assert f"{path}: must hold at least one valid record; all 2 are bad; got" in told[0]
+    assert not (tmp_path / "d").exists()

@@ -14,7 +14,7 @@ from builders import chance_record, flat_record, win_loss_record
 from distill.cli import run
 from distill.errors import InputError
 from distill.family import draw, load_family
-from distill.generate import Asked, Traces, generate
+from distill.generate import Asked, Mix, Traces, add, generate
 from distill.look import look
 from distill.query import scale_of
 from distill.record import from_record
@@ -52,6 +52,31 @@ def test_counts_are_those_of_the_dataset(mixed: Path) -> None:
     for rows_of in found["slices"].values():
         assert sum(r["trees"] for r in rows_of) == 26
         assert sum(r["candidates"] for r in rows_of) == found["candidates"]
+
+
+def test_shares_of_recorded_trees_are_told(tmp_path: Path, capsys) -> None:
+    """In `look`, on its page and in the datasheet, of a family, of a mix, and of trees added later."""
+    family = load_family(COLD_STORE)
+    trees = [draw(family, 3, i) for i in range(12)]
+    generate(family, tmp_path / "drawn", trees=8)
+    assert "Synthetic trees say nothing" in (tmp_path / "drawn" / "README.md").read_text()
+    assert look(tmp_path / "drawn")["recorded"] == 0
+    folder = tmp_path / "mix"
+    generate(Mix(family, Traces("shift.jsonl", trees[:6])), folder, trees=8)
+    assert (
+        "Of the 8 trees, 6 (75 %) are recorded and 2 (25 %) are synthetic."
+        in (folder / "README.md").read_text()
+    )
+    assert look(folder)["recorded"] == 6
+    add(Traces("more.jsonl", trees[6:]), folder)
+    page = (folder / "README.md").read_text()
+    assert "Of the 14 trees, 12 (85.7 %) are recorded and 2 (14.3 %) are synthetic." in page
+    assert "Synthetic trees say nothing" not in page
+    assert run(["look", str(folder)]) == 0
+    assert "of the trees, 12 (85.7 %) recorded, 2 (14.3 %) drawn from a family" in capsys.readouterr().out
+    assert "of them recorded</dt>" in look_page(look(folder))
+    generate(Traces("shift.jsonl", trees), tmp_path / "all")
+    assert "All 12 trees are recorded, none is synthetic." in (tmp_path / "all" / "README.md").read_text()
 
 
 def test_labels_stand_in_their_half_decade(mixed: Path) -> None:
@@ -105,6 +130,7 @@ def test_the_command_prints_and_draws(mixed: Path, tmp_path: Path, capsys) -> No
     assert "26 trees, " in out
     assert "2 trees repeat another's beliefs and budget" in out
     assert "rollouts left" in out
+    assert "of the trees, 26 (100 %) recorded, 0 (0 %) drawn from a family" in out
     root = ET.fromstring(page.read_text().partition("\n")[2])
     assert len(root.findall(".//figure")) == 2
     assert len(root.findall(".//svg")) == 2

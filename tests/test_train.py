@@ -153,6 +153,14 @@ def test_the_command_names_the_scorer_for_a_time_and_draws_the_front(
     assert why == "most accurate within 900 us"
     assert f"{why}: {entry['recipe']}, {out / entry['file']}" in printed
     assert "forgone share, %" in printed
+    assert f"scorers that read the {front['input']}\n" in printed
+    parts = {name: part["trees"] for name, part in front["parts"].items()}
+    share = round(100 * parts["choose"] / sum(parts.values()))
+    assert (
+        f"upper bounds calibrated and the front chosen on other {parts['choose']} trees ({share} %)"
+        in printed
+    )
+    assert f"judged on {parts['held_out']} trees" in printed
     assert " a  " in printed
     assert ET.parse(out / "front.svg").getroot().tag.endswith("svg")
     with pytest.raises(InputError, match="latency: must be at least"):

@@ -29,6 +29,10 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="what the scorer was trained on, to tell drift; by default as its metadata names it",
     )  # fmt: skip
     parser.add_argument(
+        "--dataset", metavar="DATASET",
+        help="what the scorer was trained on: trees that it holds already are not offered for adding",
+    )  # fmt: skip
+    parser.add_argument(
         "--out", type=flags.out_folder, metavar="FOLDER",
         help="audit.json, audit.html and worth-adding.jsonl.gz go here; generate --add takes the last",
     )  # fmt: skip
@@ -52,6 +56,7 @@ def run(args: argparse.Namespace) -> int:
         margin=args.margin,
         seed=args.seed,
         family=family,
+        dataset=args.dataset,
         bad=bad,
         progress=True,
     )
@@ -69,12 +74,22 @@ def run(args: argparse.Namespace) -> int:
     return _WORSE if found.worse else 0
 
 
+def _known(trees: dict[str, Any]) -> str:
+    known = trees["in the dataset already"]
+    if known is not None:
+        return f", beside {known:,} that the dataset holds already"
+    return ", training's own among them if there are any (--dataset leaves them out)" * bool(
+        trees["worth adding"]
+    )
+
+
 def _say(figures: dict[str, Any]) -> None:
     trees, drift = figures["trees"], figures["drift"]
     print(
         f"  {trees['judged']:,} of {trees['recorded']:,} recorded trees judged, {trees['decisions']:,} "
         f"decisions; {sum(trees['aside'].values()):,} aside; out of range "
         f"{figures['out_of_range_percent']:.3g} % of candidates; worth adding {trees['worth adding']:,}"
+        + _known(trees)
     )
     for reason, n in trees["aside"].items():
         print(f"  aside, {n:,}: {' '.join(reason.split())[:160]}")

@@ -110,12 +110,11 @@ def run(args: argparse.Namespace) -> None:
 def _recorded(paths: list[str], bad: BadLines) -> Traces:
     """Traces without their bad records, which `bad` takes in."""
     from distill.generate import Traces
+    from distill.traces import none_valid
 
     found = Traces.read(paths, on_error=bad)
     if len(found) == 0:
-        raise InputError(
-            ", ".join(paths), f"must hold at least one valid record; all {bad.count:,} are bad", *bad.first
-        )
+        raise none_valid(paths, bad)
     return found
 
 

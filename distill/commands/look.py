@@ -43,6 +43,7 @@ def _lines(dataset: str, f: dict[str, Any]) -> list[str]:
     lines = [
         f"{dataset}: {counts}{state}",
         f"  source: {f['source'].get('kind')} {f['source'].get('name')}, seed {f['seed']}",
+        f"  of the trees, {_shares(f)}",
         *_counted("method", f["methods"]),
         *(_counted("from", f["sources"]) if len(f["sources"]) > 1 else []),
         f"  duplicates: {f['duplicate_trees']:,} trees repeat another's beliefs and budget",
@@ -67,6 +68,11 @@ def _lines(dataset: str, f: dict[str, Any]) -> list[str]:
             for r in rows
         ]
     return lines
+
+
+def _shares(f: dict[str, Any]) -> str:
+    told = {"recorded": f["recorded"], "drawn from a family": f["trees"] - f["recorded"]}
+    return ", ".join(f"{n:,} ({100 * n / max(f['trees'], 1):.3g} %) {name}" for name, n in told.items())
 
 
 def _counted(name: str, counts: dict[str, int]) -> list[str]:

@@ -38,9 +38,13 @@ def run(args: argparse.Namespace) -> None:
 
     front = train(args.dataset, args.out, seed=args.seed, progress=True)
     parts = front["parts"]
+    whole = sum(part["trees"] for part in parts.values())
+    trees = {name: f"{p['trees']:,} trees ({100 * p['trees'] / whole:.0f} %)" for name, p in parts.items()}
     print(
-        f"{args.out}: {len(front['scorers'])} scorers from {parts['fit']['trees']:,} trees, judged on "
-        f"{parts['held_out']['trees']:,} held-out trees; time of one decision over {front['leaves']} leaves\n"
+        f"{args.out}: {len(front['scorers'])} scorers that read the {front['input']}\n"
+        f"  fitted on {trees['fit']}; upper bounds calibrated and the front chosen on other "
+        f"{trees['choose']};\n  judged on {trees['held_out']} that had no part in either; "
+        f"time of one decision over {front['leaves']} leaves\n"
     )
     print("\n".join([*front_table(front["scorers"]), "", *accuracy_table(front["beside"])]))
     if args.show:

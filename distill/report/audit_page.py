@@ -171,6 +171,13 @@ def _drift_note(drift: Figures) -> ET.Element:
     )
 
 
+def _known(trees: Figures) -> list[Any]:
+    known = trees.get("in the dataset already")
+    if known is not None:
+        return [" trees, beside ", number(known), " that the dataset of training holds already"]
+    return [" trees; whether training had some of them is not told, as its dataset was not given"]
+
+
 def _origin(figures: Figures) -> list[tuple[str, list[Any]]]:
     scorer, trees = figures["scorer"], figures["trees"]
     out: list[tuple[str, list[Any]]] = [
@@ -179,6 +186,7 @@ def _origin(figures: Figures) -> list[tuple[str, list[Any]]]:
         ("traces", [", ".join(figures["traces"])]),
         ("recorded trees", [number(trees["recorded"])]),
         ("sampled", [number(trees["sampled"]), f", seed {figures['seed']}"]),
+        ("worth adding", [number(trees["worth adding"]), *_known(trees)]),
         ("judged", [number(trees["judged"]), " trees of ", number(trees["decisions"]), " decisions"]),
     ]
     return out + [(f"aside: {reason}", [number(n), " trees"]) for reason, n in trees["aside"].items()]

@@ -41,6 +41,7 @@ def _opening(figures: Figures) -> ET.Element:
     said = f"A labelled dataset from {figures['source'].get('name')}.{state}"
     tiles = [
         tile("trees", number(figures["trees"])),
+        tile("of them recorded", number(figures["recorded"]), small="the others are drawn from a family"),
         tile("candidates", number(figures["candidates"])),
         tile("trees aside", number(figures["aside"])),
         tile("labels that are 0", number(figures["labels_zero"])),

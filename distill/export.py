@@ -131,7 +131,9 @@ def _assemble(
     clipped = g("Transpose", rows, perm=[1, 0])
     x = g("Cast", clipped, to=TensorProto.DOUBLE)
 
-    renamed, t = _renamed(converted, x if boosting else clipped)
+    renamed, t = _renamed(converted, x if boosting else rows)
+    if not boosting:  # the first layer reads rows as they are
+        renamed.node[0].attribute.append(helper.make_attribute("transA", 1))
     tail = Nodes("d")
     t = tail("Reshape", t, tail.whole(-1))
     if not boosting:

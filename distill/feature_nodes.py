@@ -16,8 +16,8 @@ from distill.scorer_inputs import InputKind
 from distill.tree import Floats
 
 __all__ = [
-    "FEATURE_ROWS", "LARGE", "TINY", "FeatureMatrix", "Start", "best_batch", "finished", "loss", "midpoints",
-    "moments", "threshold_shift",
+    "FEATURE_ROWS", "LARGE", "TINY", "FeatureMatrix", "Start", "best_batch", "best_other", "finished", "loss",
+    "midpoints", "moments", "threshold_shift",
 ]  # fmt: skip
 
 FEATURE_ROWS: Final = "feature_rows"  # the features transposed, shape (d, n)
@@ -68,17 +68,31 @@ def loss(g: Nodes, z: str) -> str:
 
 
 class Start:
-    """The start value for a threshold t0, shape (1, n), at the best batch or a given one."""
+    """The start value for a threshold t0, shape (1, n), at the best batch or a given one.
 
-    def __init__(self, g: Nodes, t0: str, s: str, noise: str, batch: int | None) -> None:
+    rough : take k = u^2 n / v, u = t0 / s, in place of the fitted peak; only the batch that is told comes
+        from the peak then. What that costs is smooth in the features, and learned; a pick takes four nodes
+        less.
+    """
+
+    def __init__(
+        self, g: Nodes, t0: str, s: str, noise: str, batch: int | None, *, rough: bool = False
+    ) -> None:
         self.g = g
         self.rate = batch is None
-        if batch is None:
-            self.k, self.s_k = best_batch(g, t0, s, noise)
-        else:
+        if batch is not None:
             # "t0" gives the constant its shape.
             self.k = g("Add", g("Mul", t0, g.double(0.0)), g.double(float(batch)))
-            self.s_k = g("Mul", s, g("Sqrt", g("Div", self.k, g("Add", self.k, noise))))
+            self.s_k = _moved(g, s, self.k, noise)
+            self.told = self.k
+        elif rough:
+            u2 = _squared(g, t0, s)
+            self.k = _cut_batch(g, u2, noise, 1.0)
+            self.s_k = _moved(g, s, self.k, noise)
+            self.told = _cut_batch(g, _peak(g, u2), noise, 1.0)
+        else:
+            self.k, self.s_k = best_batch(g, t0, s, noise)
+            self.told = self.k
         self.z = self.cut(g("Div", t0, g.at_least(self.s_k, TINY)))
         self.unit = g("Div", self.s_k, g.at_least(self.k, 1.0)) if self.rate else self.s_k
 
@@ -97,7 +111,7 @@ class Start:
     ) -> onnx.ModelProto:
         """The graph with its outputs; `columns` are rows, shape (1, n)."""
         rows = self.g("Concat", *columns, axis=0)
-        batch = self.g("Add", self.k, self.g.double(0.5))
+        batch = self.g("Add", self.told, self.g.double(0.5))
         return finished(self.g, kind, names, rows, self.unit, value, batch)
 
 
@@ -131,13 +145,42 @@ def best_batch(g: Nodes, t0: str, s: str, noise: str, *, least: float = 1.0) -> 
     s_k f(-|t0| / s_k) / k has a single peak, so the best k from `least` to the rollouts left is the peak cut
     to them. A leaf without variance has noise ratio infinity, hence s_k = 0 exactly.
     """
+    k = _cut_batch(g, _peak(g, _squared(g, t0, s)), noise, least)
+    return k, _moved(g, s, k, noise)
+
+
+def _squared(g: Nodes, t0: str, s: str) -> str:
+    """u^2, u = t0 / s."""
     u = g("Div", t0, s)
-    u2 = g("Mul", u, u)
+    return g("Mul", u, u)
+
+
+def _peak(g: Nodes, u2: str) -> str:
+    """k v / n where s_k f(-|t0| / s_k) / k peaks."""
     shape = g("Add", g("Div", g.double(PEAK[1]), g("Add", u2, g.double(PEAK[2]))), g.double(PEAK[0]))
-    peak = g.at_least(g("Mul", u2, shape), _PEAK_FLOOR)
-    k = g("Clip", g("Mul", peak, noise), g.scalar(least), "remaining")
-    resolved = g("Div", k, g("Add", k, noise))
-    return k, g("Mul", s, g("Sqrt", resolved))
+    return g("Mul", u2, shape)
+
+
+def _cut_batch(g: Nodes, ratio: str, noise: str, least: float) -> str:
+    """k of k v / n, cut to `least` and the rollouts left."""
+    return g("Clip", g("Mul", g.at_least(ratio, _PEAK_FLOOR), noise), g.scalar(least), "remaining")
+
+
+def _moved(g: Nodes, s: str, k: str, noise: str) -> str:
+    """s_k."""
+    return g("Mul", s, g("Sqrt", g("Div", k, g("Add", k, noise))))
+
+
+def best_other(g: Nodes, value: str) -> str:
+    """V of the best action other than the leaf's own; shape (1, n), as `value`; -1e300 where there is none.
+
+    By sums and products with the mask of the best action: Where takes three times as long.
+    """
+    own = g("Equal", "action", g("Gather", "action", g("ArgMax", value, axis=1, keepdims=0)))
+    own = g("Cast", own, to=TensorProto.DOUBLE)
+    first = g("ReduceMax", value)
+    second = g("ReduceMax", g("Sub", value, g("Mul", own, g.double(LARGE))))
+    return g("Sub", first, g("Mul", own, g("Sub", first, second)))
 
 
 def midpoints(points: int) -> Floats:

@@ -49,7 +49,7 @@ import numpy as np
 import onnx
 from onnx import TensorProto
 
-from distill.feature_nodes import LARGE, TINY, Start, midpoints, moments, threshold_shift
+from distill.feature_nodes import LARGE, TINY, Start, best_other, midpoints, moments, threshold_shift
 from distill.onnx_nodes import Nodes
 from distill.scorer_inputs import LEAF_TABLE
 
@@ -72,7 +72,7 @@ _PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite 
 _FAR: Final = 1e9  # standard deviations; Phi is 1 there
 
 
-def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | None = None) -> onnx.ModelProto:
+def build_graph(*, points: int = 12, horizon: float = math.inf, batch: int | None = None) -> onnx.ModelProto:
     """The feature graph of the Gaussian leaf table, one tree a call.
 
     Inputs, shape (n,) unless said: mean, var, noise_var, gain, offset, cost (double), action (int64,
@@ -93,25 +93,21 @@ def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | Non
     known = v if math.isinf(horizon) else _learned(g, v, noise, horizon)
     value, others, spread2 = moments(g, *_table(g, m, s if known == v else g("Sqrt", known), points), points)
 
-    # The best other action.
-    best = g("Equal", "action", g("Gather", "action", g("ArgMax", value, axis=1, keepdims=0)))
-    second = g("ReduceMax", g("Where", best, g.double(-LARGE), value))
-    rival = g("Where", best, second, g("ReduceMax", value))
-
     # Threshold t0.
+    rival = best_other(g, value)
     theta = g("Sqrt", g("Add", spread2, known))
     y = g("Div", g("Sub", rival, others), theta)
     shift, slope, help_ = threshold_shift(g, y, theta)
     t0 = g("Add", g("Sub", rival, m), shift, out="t0")
 
     if math.isinf(horizon):
-        start = Start(g, t0, s, noise, batch)
+        start = Start(g, t0, s, noise, batch, rough=True)
         value = start.value(slope)
         return start.model(value, (start.z, help_, g("Div", start.s_k, theta)), FEATURE_NAMES, LEAF_TABLE)
 
     alone = g("LessOrEqual", y, g.double(0.0))
     above = g("Sub", m, others)
-    start = Start(g, g("Where", alone, g("Sub", g.double(0.0), above), t0), s, noise, batch)
+    start = Start(g, g("Where", alone, g("Sub", g.double(0.0), above), t0), s, noise, batch, rough=True)
     later = _learned(g, v, noise, horizon, start.k)
     theta_k = g("Sqrt", g("Add", spread2, later))
     above = start.cut(g("Div", above, theta_k))

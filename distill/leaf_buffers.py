@@ -12,7 +12,7 @@ from distill import schema
 from distill.errors import InputError
 from distill.scorer_inputs import InputKind
 
-__all__ = ["MAX_LEAVES", "LeafBuffers", "number_array"]
+__all__ = ["MAX_LEAVES", "LeafBuffers", "number_array", "number_arrays", "number_scalars"]
 
 MAX_LEAVES: Final = 2**20
 _OUTPUTS: Final = {
@@ -27,13 +27,14 @@ _SCALARS: Final = ("pick", "worth_it")
 
 
 class LeafBuffers:
-    """Inputs and outputs of a scorer for n leaves, bound to its session once; for one thread.
+    """Inputs and outputs of a scorer for n leaves, bound to its sessions once; for one thread.
 
-    `columns` are views into `floats`, so that one copy and one check serve all of them. Kinds of input
-    without `action` or `horizon` keep theirs at 0.
+    session, picker : of the whole file and of its pick alone; None where there is no file. They read and
+    write the same arrays. `columns` are views into `floats`, so that one copy and one check serve all of
+    them. Kinds of input without `action` or `horizon` keep theirs at 0.
     """
 
-    def __init__(self, n: int, kind: InputKind, session: Any) -> None:
+    def __init__(self, n: int, kind: InputKind, session: Any, picker: Any) -> None:
         self.shape = (n,)
         self.kind = kind
         width = len(kind.floats)
@@ -46,24 +47,27 @@ class LeafBuffers:
             name: np.zeros(() if name in _SCALARS else n, dtype=kind) for name, kind in _OUTPUTS.items()
         }
         self.pick, self.in_range = self.out["pick"], self.out["in_range"]
-        self.binding: Any = None
-        self.has_bound = False
+        self.scalars_hold = True
         self.answered = False
-        if session is not None:
-            self.binding = session.io_binding()
-            inputs: dict[str, NDArray[Any]] = {**self.columns, "remaining": self.remaining}
-            if kind.has_action:
-                inputs["action"] = self.action
-            if kind.has_horizon:
-                inputs["horizon"] = self.horizon
-            for name, x in inputs.items():
-                self.binding.bind_input(name, "cpu", 0, x.dtype.type, list(x.shape), x.ctypes.data)
-            there = {output.name for output in session.get_outputs()}
-            self.has_bound = "voc_high" in there
-            for name, x in self.out.items():
-                if name not in there:
-                    continue
-                self.binding.bind_output(name, "cpu", 0, x.dtype.type, list(x.shape), x.ctypes.data)
+        self.has_bound = session is not None and "voc_high" in {o.name for o in session.get_outputs()}
+        self.binding, self.pick_binding = self._bound(session), self._bound(picker)
+
+    def _bound(self, session: Any) -> Any:
+        """The arrays bound to the inputs and outputs of a session."""
+        if session is None:
+            return None
+        binding = session.io_binding()
+        inputs: dict[str, NDArray[Any]] = {**self.columns, "remaining": self.remaining}
+        if self.kind.has_action:
+            inputs["action"] = self.action
+        if self.kind.has_horizon:
+            inputs["horizon"] = self.horizon
+        for name, x in inputs.items():
+            binding.bind_input(name, "cpu", 0, x.dtype.type, list(x.shape), x.ctypes.data)
+        for output in session.get_outputs():
+            x = self.out[output.name]
+            binding.bind_output(output.name, "cpu", 0, x.dtype.type, list(x.shape), x.ctypes.data)
+        return binding
 
     def fill(self, floats: tuple[Any, ...], columns: Mapping[str, Any], remaining: Any) -> None:
         """Copy plain arrays in; an error that is no InputError where something else came, KeyError included.
@@ -74,7 +78,7 @@ class LeafBuffers:
         for column in floats:
             if column.shape != shape:
                 raise ValueError
-        if type(remaining) not in (int, float):
+        if type(remaining) not in (int, float) or not 0 <= remaining <= schema.MAX_ROLLOUTS:
             raise ValueError
         kind = self.kind
         if kind.has_action:
@@ -84,11 +88,12 @@ class LeafBuffers:
             np.copyto(self.action, action, casting="same_kind")
             if kind.has_horizon:
                 horizon = columns["horizon"]
-                if type(horizon) not in (int, float):
+                if type(horizon) not in (int, float) or not horizon >= 0:
                     raise ValueError
                 self.horizon[()] = horizon
         np.concatenate(floats, out=self.floats, casting="same_kind")
         self.remaining[()] = remaining
+        self.scalars_hold = True
 
     def fill_with_care(self, arrays: dict[str, NDArray[Any]], scalars: dict[str, float]) -> None:
         """Copy arrays and scalars in that are known to be numbers of the right shapes."""
@@ -99,16 +104,14 @@ class LeafBuffers:
             np.copyto(self.action, arrays["action"], casting="same_kind")
         self.remaining[()] = scalars["remaining"]
         self.horizon[()] = scalars.get("horizon", 0.0)
+        # NaN is never at least 0. Kinds without a horizon keep 0 there.
+        self.scalars_hold = bool(0 <= self.remaining <= schema.MAX_ROLLOUTS and self.horizon >= 0)
 
     def finite(self) -> bool:
         """Whether every number of the columns is finite, and the scalars are what they may be."""
         np.isfinite(self.floats, out=self._is_finite)
         # Searching the bytes takes a quarter of the time of `all`.
-        return b"\0" not in self._is_finite.tobytes() and self._scalars_hold()
-
-    def _scalars_hold(self) -> bool:
-        # NaN is never at least 0. Kinds without a horizon keep 0 there.
-        return 0 <= self.remaining.item() <= schema.MAX_ROLLOUTS and self.horizon.item() >= 0
+        return b"\0" not in self._is_finite.tobytes() and self.scalars_hold
 
     def usable(self, strict: bool) -> NDArray[np.bool_]:
         """Rows whose values the input may hold; with `strict` the first other one is an error."""
@@ -116,14 +119,14 @@ class LeafBuffers:
         rules = self.kind.rules(self.columns)
         if self.kind.has_action:
             rules["action"] = ((self.action >= 0) & (self.action < n), f"must be from 0 to {n - 1}")
-        usable = np.full(n, self._scalars_hold())
+        usable = np.full(n, self.scalars_hold)
         for name, (ok, rule) in rules.items():
             if strict and not ok.all():
                 row = int(np.argmin(ok))
                 value = self.action[row] if name == "action" else self.columns[name][row]
                 raise InputError(f"{name}[{row}]", rule, value.item())
             usable &= ok
-        if strict and not self._scalars_hold():
+        if strict and not self.scalars_hold:
             if not self.horizon.item() >= 0:
                 raise InputError("horizon", "must be at least 0, or infinite", self.horizon.item())
             raise InputError("remaining", "must be from 0 to 2^53", self.remaining.item())
@@ -140,3 +143,23 @@ def number_array(name: str, value: Any, kind: str) -> NDArray[Any]:
         what = "whole numbers" if kind == "i" else "numbers"
         raise InputError(name, f"must hold {what}", str(array.dtype))
     return array
+
+
+def number_arrays(kind: InputKind, columns: dict[str, Any]) -> dict[str, NDArray[Any]]:
+    """The columns as arrays of numbers; InputError for one that is missing or holds something else."""
+    out = {}
+    for name in kind.columns:
+        if name not in columns:
+            raise InputError(name, f"is missing: a {kind.name} has it")
+        out[name] = number_array(name, columns[name], "i" if name == "action" else "f")
+    return out
+
+
+def number_scalars(kind: InputKind, columns: dict[str, Any], remaining: Any) -> dict[str, NDArray[Any]]:
+    """The scalars of a call as arrays of numbers; InputError as for `number_arrays`."""
+    out = {"remaining": number_array("remaining", remaining, "f")}
+    for name in kind.scalars[1:]:
+        if name not in columns:
+            raise InputError(name, f"is missing: a {kind.name} has it")
+        out[name] = number_array(name, columns[name], "f")
+    return out

@@ -29,7 +29,8 @@ from numpy.typing import NDArray
 from distill import schema, scorer_file
 from distill.errors import DistillError, InputError, ScorerFileError
 from distill.fallback import closed_form_bounds, closed_form_values
-from distill.leaf_buffers import MAX_LEAVES, LeafBuffers, number_array
+from distill.leaf_buffers import MAX_LEAVES, LeafBuffers, number_array, number_arrays, number_scalars
+from distill.onnx_pruned import pruned
 from distill.scorer_inputs import KINDS, InputKind, kind_of
 
 __all__ = ["Counters", "Scorer", "Scores"]
@@ -101,6 +102,7 @@ class Scorer:
     refused: str | None = None
     counters: Counters = field(default_factory=Counters)
     _session: Any = field(default=None, repr=False)
+    _picker: Any = field(default=None, repr=False)  # the nodes of the pick alone
     kind: InputKind | None = field(default=None, init=False)
     _batch: int | None = field(default=None, init=False, repr=False)
     _local: _Local = field(default_factory=_Local, repr=False)
@@ -147,7 +149,8 @@ class Scorer:
         """As `load`, from bytes; `name` stands in messages."""
         try:
             facts = scorer_file.check(data)
-            scorer = cls(facts, strict, _session=_session(data))
+            picker = _session(pruned(data, ("pick", "in_range")))
+            scorer = cls(facts, strict, _session=_session(data), _picker=picker)
             scorer._self_test()
         except ScorerFileError as e:
             raise ScorerFileError(f"{name}: {e}") from None
@@ -198,8 +201,13 @@ class Scorer:
 
     def pick(self, *, remaining: Any, deadline: float | None = None, **columns: Any) -> int:
         """Position of the leaf with the largest voc - cost, the first on ties; arguments as for `score`."""
-        buffers, clean = self._run(self._kind_for(columns), columns, remaining, deadline)
-        return int(buffers.pick) if clean else int(self._mend(buffers).pick)
+        kind = self._kind_for(columns)
+        buffers, clean = self._run(kind, columns, remaining, deadline, picking=True)
+        if clean:
+            return int(buffers.pick)
+        if buffers.answered:  # mending needs the values too
+            buffers.answered = self._answers(buffers, buffers.binding)
+        return int(self._mend(buffers).pick)
 
     # --- one call ---------------------------------------------------------------------------------
 
@@ -215,9 +223,15 @@ class Scorer:
         return kind
 
     def _run(
-        self, kind: InputKind, columns: dict[str, Any], remaining: Any, deadline: float | None
+        self,
+        kind: InputKind,
+        columns: dict[str, Any],
+        remaining: Any,
+        deadline: float | None,
+        *,
+        picking: bool = False,
     ) -> tuple[LeafBuffers, bool]:
-        """Fill the buffers and run; False where the answer needs mending."""
+        """Fill the buffers and run the file, or its pick alone; False where the answer needs mending."""
         try:
             floats = kind.take(columns)
             buffers = self._local.kept[kind.name][len(floats[0])]
@@ -229,20 +243,26 @@ class Scorer:
         if deadline is not None and time.perf_counter() >= deadline:
             self.counters.late += 1
         elif self._session is not None and buffers.finite():
-            try:
-                self._session.run_with_iobinding(buffers.binding)
-                buffers.answered = True
+            buffers.answered = self._answers(buffers, buffers.pick_binding if picking else buffers.binding)
+            if buffers.answered:
                 return buffers, b"\0" not in buffers.in_range.tobytes()
-            except Exception as e:  # onnxruntime raises its own types, e.g. for an action out of bounds
-                buffers.usable(self.strict)
-                if self.strict:
-                    raise ScorerFileError(f"the file failed: {_first_line(e)}") from None
         buffers.in_range[:] = False
         return buffers, False
 
+    def _answers(self, buffers: LeafBuffers, binding: Any) -> bool:
+        """Run the file on the buffers; False where it fails."""
+        try:
+            (self._picker if binding is buffers.pick_binding else self._session).run_with_iobinding(binding)
+        except Exception as e:  # onnxruntime raises its own types, e.g. for an action out of bounds
+            buffers.usable(self.strict)
+            if self.strict:
+                raise ScorerFileError(f"the file failed: {_first_line(e)}") from None
+            return False
+        return True
+
     def _fill_with_care(self, kind: InputKind, columns: dict[str, Any], remaining: Any) -> LeafBuffers:
         """The way in for a first call and for anything but plain arrays; InputError names what is wrong."""
-        arrays = _arrays(kind, columns)
+        arrays = number_arrays(kind, columns)
         first = arrays[kind.floats[0]]
         if first.ndim != 1 or not 1 <= len(first) <= MAX_LEAVES:
             raise InputError(kind.floats[0], f"must have shape (n,), n from 1 to {MAX_LEAVES}", first.shape)
@@ -251,7 +271,7 @@ class Scorer:
             if x.shape != (n,):
                 raise InputError(name, f"must have shape ({n},), as {kind.floats[0]!r}", x.shape)
         scalars = {}
-        for name, x in _scalars(kind, columns, remaining).items():
+        for name, x in number_scalars(kind, columns, remaining).items():
             if x.size != 1:
                 raise InputError(name, "must be one number", x.shape)
             scalars[name] = float(x.item())
@@ -259,7 +279,7 @@ class Scorer:
         if n not in kept:
             if len(kept) >= _KEPT_SIZES:
                 del kept[next(iter(kept))]
-            kept[n] = LeafBuffers(n, kind, self._session)
+            kept[n] = LeafBuffers(n, kind, self._session, self._picker)
         kept[n].fill_with_care(arrays, scalars)
         return kept[n]
 
@@ -303,12 +323,12 @@ class Scorer:
     def _score_many(
         self, kind: InputKind, columns: dict[str, Any], remaining: Any, tree: Any, deadline: float | None
     ) -> Scores:
-        arrays = _arrays(kind, columns)
+        arrays = number_arrays(kind, columns)
         labels = number_array("tree", tree, "i")
         n = arrays[kind.floats[0]].size
         scalars = {
             name: np.full(n, x.item()) if x.size == 1 else x
-            for name, x in _scalars(kind, columns, remaining).items()
+            for name, x in number_scalars(kind, columns, remaining).items()
         }
         for name, x in {**arrays, "tree": labels, **scalars}.items():
             if x.shape != (n,) or n == 0:
@@ -350,26 +370,6 @@ class Scorer:
         if compared == 0:
             raise ScorerFileError("self-test: no stored leaf is in the file's own range")
         self.counters = Counters()
-
-
-def _arrays(kind: InputKind, columns: dict[str, Any]) -> dict[str, NDArray[Any]]:
-    """The columns as arrays of numbers; InputError for one that is missing or holds something else."""
-    out = {}
-    for name in kind.columns:
-        if name not in columns:
-            raise InputError(name, f"is missing: a {kind.name} has it")
-        out[name] = number_array(name, columns[name], "i" if name == "action" else "f")
-    return out
-
-
-def _scalars(kind: InputKind, columns: dict[str, Any], remaining: Any) -> dict[str, NDArray[Any]]:
-    """The scalars of a call as arrays of numbers; InputError as for `_arrays`."""
-    out = {"remaining": number_array("remaining", remaining, "f")}
-    for name in kind.scalars[1:]:
-        if name not in columns:
-            raise InputError(name, f"is missing: a {kind.name} has it")
-        out[name] = number_array(name, columns[name], "f")
-    return out
 
 
 def _session(data: bytes) -> Any:

@@ -51,6 +51,7 @@ class Campaign:
         ":stop=auto" stops at the highest price that costs no regret on these decisions.
     wide : those of the problems that are rehearsed under `wide_budgets` too.
     slowest : seconds of choosing a decision, where only rollouts are limited; slower choosers are left out.
+    dearest : the same for exact policies where time is limited, outside the `wide` problems; None: no limit.
     """
 
     problems: tuple[str, ...]
@@ -61,6 +62,7 @@ class Campaign:
     wide: tuple[str, ...] = ()
     wide_budgets: tuple[str, ...] = ()
     slowest: float = 0.25
+    dearest: float | None = None
 
     def __post_init__(self) -> None:
         for name in self.problems:
@@ -166,7 +168,7 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
             out.tuning.extend(rows)
             tuned[rollouts] = {row["policy"]: row["chosen"] for row in rows}
         texts = {spec: tuned[rollouts].get(spec, untuned(spec)) for spec in campaign.policies}
-        reasons = _reasons(campaign, texts, tree, budget, _place(folder, name, text))
+        reasons = _reasons(campaign, name, texts, tree, budget, _place(folder, name, text))
         out.left_out.extend(
             {"problem": name, "budget": text, "policy": name_of(spec), "why": why}
             for spec, why in reasons.items()
@@ -183,7 +185,7 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
 
 
 def _reasons(
-    campaign: Campaign, texts: dict[str, str], tree: BeliefTree, budget: Budget, kept: Path
+    campaign: Campaign, problem: str, texts: dict[str, str], tree: BeliefTree, budget: Budget, kept: Path
 ) -> dict[str, str | None]:
     """Policy -> why it cannot be rehearsed here, None where it can.
 
@@ -197,20 +199,29 @@ def _reasons(
             raise InputError(str(kept), "must be valid JSON") from None
     for spec, text in texts.items():
         if spec not in decided:
-            decided[spec] = _why_not(campaign, text, tree, budget)
+            decided[spec] = _why_not(campaign, problem, text, tree, budget)
     write_atomic(kept, (json.dumps(decided, indent=1) + "\n").encode())
     return {spec: decided[spec] for spec in texts}
 
 
-def _why_not(campaign: Campaign, text: str, tree: BeliefTree, budget: Budget) -> str | None:
+def _why_not(campaign: Campaign, problem: str, text: str, tree: BeliefTree, budget: Budget) -> str | None:
     if (reason := _unreadable(campaign, text, tree)) is not None:
         return reason
     policy = make_policy(text)
-    if (reason := _refused(policy, tree)) is not None:
-        return reason
-    seconds = min(_one_choice(policy, tree) for _ in range(2))
+    try:
+        _one_choice(policy, tree)  # what is used for the first time takes longer
+        seconds = _one_choice(policy, tree)
+    except RefusedError as e:
+        return str(e)
     most = campaign.slowest / max(budget.room(0, 0.0), 1) if budget.seconds is None else budget.seconds
-    return f"one choice takes {seconds * 1e3:.1f} ms" if seconds > most else None
+    if seconds > most:
+        return f"one choice takes {seconds * 1e3:.1f} ms"
+    if budget.seconds is None or campaign.dearest is None or not text.startswith("exact-"):
+        return None
+    choosing = budget.seconds * seconds / (seconds + budget.rollout_seconds)
+    if problem in campaign.wide or choosing <= campaign.dearest:
+        return None
+    return f"choosing takes {choosing * 1e3:.0f} ms a decision"
 
 
 def _unreadable(campaign: Campaign, text: str, tree: BeliefTree) -> str | None:

@@ -22,8 +22,8 @@ _TREES: Final = (
     "tree-6x2^1-noise4",
 )  # fmt: skip
 _SIMULATORS: Final = (
-    "frozen_lake_8x8", "cold_store_small", "frozen_lake_4x4_odds", "frozen_lake_8x8_odds", "cliff_walking",
-    "cliff_walking_slippery", "frozen_lake_4x4",
+    "frozen_lake_8x8", "cold_store_small", "frozen_lake_8x8_odds", "cliff_walking", "cliff_walking_slippery",
+    "frozen_lake_4x4",
 )  # fmt: skip
 _BASELINES: Final = ("even", "uct", "thompson", "top-two", "static-voc", "static-rate")
 # 32 and 128 rollouts' worth of time at 100 us and at 1 ms.
@@ -50,11 +50,12 @@ _PLANS: Final = {
         wide=_WIDE,
         wide_budgets=_ENDS,
         slowest=0.03,
+        dearest=0.045,
     ),
 }
 # How scorer files are used: with the closed form where little is at stake, and at most for a quarter of the
-# time that rollouts take. In the full plan the first file of each kind of inputs is played in plain use and
-# so, with a tuned prior, and stopping early; others with a tuned prior alone.
+# time that rollouts take. In the full plan the first file of each kind of inputs is played so, with a
+# tuned prior, and stopping early; others with a tuned prior alone.
 _USE: Final = ":settled=0.001:share=0.25"
 _TUNED_USES: Final = (":prior=auto", ":stop=auto")
 
@@ -88,7 +89,7 @@ def plan(
         uses = ["", _USE]
         if full:
             kind = Scorer.load(file).kind
-            uses = [f"{_USE}:prior=auto"] if kind in inputs else [*uses, *(_USE + x for x in _TUNED_USES)]
+            uses = [f"{_USE}:prior=auto"] if kind in inputs else [_USE, *(_USE + x for x in _TUNED_USES)]
             inputs.add(kind)
         chosen += tuple(f"scorer:{file}{use}" for use in uses)
     return Campaign(
@@ -97,6 +98,7 @@ def plan(
         problems=tuple(problems) or (base.problems if base else ()),
         budgets=tuple(budgets) or (base.budgets if base else ()),
         slowest=base.slowest if base else _SLOWEST,
+        dearest=base.dearest if base else None,
         policies=chosen,
         seeds=seeds if seeds is not None else base.seeds if base else 400,
         tuning_seeds=tuning_seeds if tuning_seeds is not None else base.tuning_seeds if base else 100,

@@ -24,9 +24,9 @@ from distill.metrics import measure
 from distill.record_rows import LeafMoments
 from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
 from distill.table_peer_kernels import matched_on_table, sampled_on_table, sampled_wins
-from distill.timing import Decision, Timing, correlated, decisions, time_calls, tree_decisions
+from distill.timing import Decision, Timing, correlated, decisions, time_calls, tree_decisions, tree_of
 from distill.tree import Floats
-from distill.tree_peers import CORRELATED_MOMENTS, Held, tree_peers
+from distill.tree_peers import CORRELATED_MOMENTS, Held, static_of_tree, tree_peers
 
 __all__ = ["Peer", "left_out", "measure_peers", "peers", "timed_cases"]
 
@@ -36,11 +36,12 @@ Peer = Callable[[Mapping[str, Any], float], Floats]
 FIRST_ORDER: Final = "first-order closed form"
 ONE: Final = "static VOC of one rollout"
 STATIC: Final = "static closed form"
+AS_NORMALS: Final = "static closed form, leaves as normals"  # of win/loss leaves
 MOMENTS: Final = "moment matching with quadrature"
 SAMPLES: Final = "Monte Carlo in equal time"
 UCT: Final = "UCT"
 THOMPSON: Final = "Thompson sampling"
-_NAMES: Final = (FIRST_ORDER, ONE, STATIC, MOMENTS, SAMPLES, UCT, THOMPSON)
+_NAMES: Final = (FIRST_ORDER, ONE, STATIC, AS_NORMALS, MOMENTS, SAMPLES, UCT, THOMPSON)
 
 _NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(9)
 _SHARES: Final = _WEIGHTS / _WEIGHTS.sum()
@@ -63,7 +64,7 @@ def peers(
     UCT is UCB1 over leaves (Auer et al. 2002) with the tree's scale as its unit, a leaf's count being its
     noise variance over its variance, what its prior is worth included. Thompson sampling (1933) draws each
     leaf's value once and takes the best. Win/loss leaves count as normals of the same moments for moment
-    matching and the static rate; one rollout's static value is exact for them, and samples are of wins.
+    matching and one static rate; one rollout's static value is exact for them, and samples are of wins.
     """
     graph = FeatureGraph.of_value(value, kind)
     batch: int | None = value["batch"]
@@ -81,7 +82,7 @@ def peers(
 
         return scored
 
-    def static_wins(t: Mapping[str, Any], left: float) -> Floats:
+    def as_normals(t: Mapping[str, Any], left: float) -> Floats:
         return closed_form_values(WIN_LOSS_TABLE, t, left, batch)[0]
 
     def matching(t: Mapping[str, Any], left: float) -> Floats:
@@ -111,7 +112,7 @@ def peers(
     return {
         FIRST_ORDER: first_order,
         ONE: _one_trial if wins else static(1),
-        STATIC: static_wins if wins else static(batch),
+        **({AS_NORMALS: as_normals} if wins else {STATIC: static(batch)}),
         MOMENTS: matching,
         SAMPLES: sampled,
         UCT: uct,
@@ -167,7 +168,7 @@ def left_out(kind: InputKind, value: Mapping[str, Any], *, with_cov: bool = Fals
         return dict.fromkeys((MOMENTS, SAMPLES), "values the dynamic case only")
     h = float(value["horizon"])
     out = {}
-    if h == 0 and kind is not WIN_LOSS_TABLE:
+    if h == 0:
         out[STATIC] = "at horizon 0 it is the exact value itself"
         if value["batch"] == 1:
             out[ONE] = out[STATIC]
@@ -202,9 +203,9 @@ def measure_peers(
     if set(missing) == set(_NAMES):
         return {}, missing
     on_tree = candidates.kind is RECORD
-    timed = [Held.of(case.columns, case.remaining, case.tree if on_tree else None) for case in cases]
+    timed = [Held.of(case.columns, case.remaining, case.tree) for case in cases]
     judged = [
-        Held.of(table, left, trees[i] if on_tree else None)
+        Held.of(table, left, trees[i] if on_tree else tree_of(table))
         for i, (table, left) in enumerate(_tables(candidates))
     ]
 
@@ -212,7 +213,10 @@ def measure_peers(
         if on_tree:
             return tree_peers(value, count, seed)
         ours = peers(value, count, seed, kind=candidates.kind)
-        return {name: _on_table(peer) for name, peer in ours.items()}
+        found = {name: _on_table(peer) for name, peer in ours.items()}
+        if AS_NORMALS in found:  # the exact static value, which win/loss leaves have no closed form of
+            found[STATIC] = static_of_tree(value["batch"])
+        return found
 
     samples = _COUNTS[0]
     for more in _COUNTS if SAMPLES not in missing else ():
@@ -232,7 +236,7 @@ def measure_peers(
             n_boot=n_boot,
             seed=seed,
         ).to_json()
-        kept = ("forgone_percent", "relative_forgone_percent", "top1_percent")
+        kept = ("trees", "forgone_percent", "relative_forgone_percent", "top1_percent")
         out[name] = {key: found[key] for key in kept} | {"latency": _time(peer, timed).to_json()}
     if SAMPLES in out:
         out[SAMPLES]["samples"] = samples

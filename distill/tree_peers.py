@@ -18,7 +18,7 @@ from distill.scorer_inputs import RECORD
 from distill.tree import BeliefTree, Floats
 from distill.tree_peer_kernels import matched_on_tree, sampled_on_tree, sampled_together
 
-__all__ = ["CORRELATED_MOMENTS", "Held", "tree_peers"]
+__all__ = ["CORRELATED_MOMENTS", "Held", "static_of_tree", "tree_peers"]
 
 CORRELATED_MOMENTS: Final = (
     "correlated leaves: an outcome moves every leaf, and matching their joint moments is what the backup does"
@@ -31,26 +31,22 @@ _SHARES: Final = _WEIGHTS / _WEIGHTS.sum()
 class Held:
     """What an agent has at hand when it decides: rows, rollouts left, and its tree for compiled rules.
 
-    topology, belief, scale, root : None, None, 0 and None where no tree is given; root is a triangular root
-    of the covariance, None for independent leaves.
+    root : a triangular root of the covariance; None for independent leaves.
     """
 
     columns: Mapping[str, Any]
     remaining: int
-    tree: BeliefTree | None
-    topology: Topology | None
-    belief: Belief | None
+    tree: BeliefTree
+    topology: Topology
+    belief: Belief
     scale: float
     root: Floats | None
 
     @classmethod
-    def of(cls, columns: Mapping[str, Any], remaining: int, tree: BeliefTree | None) -> Held:
+    def of(cls, columns: Mapping[str, Any], remaining: int, tree: BeliefTree) -> Held:
         """A tree without counts gets those that its beliefs are worth: noise variance over variance."""
-        if tree is None:
-            return cls(columns, remaining, None, None, None, 0.0, None)
         root = None if tree.cov is None else _root(tree.cov)
-        search = Search(tree)
-        topology, belief, scale = search.compiled
+        topology, belief, scale = Search(tree).compiled
         if tree.count is None:
             worth = belief.noise / np.maximum(belief.var, 1e-300)
             counts = np.rint(np.clip(worth, 1, 1e9))
@@ -69,6 +65,15 @@ def _root(cov: Floats) -> Floats:
             jitter = max(10 * jitter, 1e-14 * size, 1e-300)
 
 
+def static_of_tree(batch: int | None) -> Callable[[Held], Floats]:
+    """The peer that picks by the exact static value of the tree; batch None is the rate."""
+
+    def scored(held: Held) -> Floats:
+        return voc.price(held.tree, Query(0.0, batch, held.remaining)).voc
+
+    return scored
+
+
 def tree_peers(value: Mapping[str, Any], samples: int, seed: int = 0) -> dict[str, Callable[[Held], Floats]]:
     """Name -> peer, a score a leaf from what the agent holds. Arguments as for `distill.peers.peers`.
 
@@ -84,13 +89,6 @@ def tree_peers(value: Mapping[str, Any], samples: int, seed: int = 0) -> dict[st
     def first_order(held: Held) -> Floats:
         return graph.matrix({**held.columns, "remaining": float(held.remaining)}).first_order
 
-    def static(one: int | None) -> Callable[[Held], Floats]:
-        def scored(held: Held) -> Floats:
-            assert held.tree is not None
-            return voc.price(held.tree, Query(0.0, one, held.remaining)).voc
-
-        return scored
-
     def matching(held: Held) -> Floats:
         place = (held.topology, held.belief, held.remaining, batch or 0)
         return np.asarray(matched_on_tree(*place, _NODES, _SHARES))
@@ -105,7 +103,6 @@ def tree_peers(value: Mapping[str, Any], samples: int, seed: int = 0) -> dict[st
         number = RULES.index(rule)
 
         def scored(held: Held) -> Floats:
-            assert held.belief is not None
             out = np.zeros(len(held.belief.mean))
             place = (held.topology, held.belief, held.remaining, held.scale)
             out[pick(number, rng, *place)] = 1.0
@@ -115,8 +112,8 @@ def tree_peers(value: Mapping[str, Any], samples: int, seed: int = 0) -> dict[st
 
     return {
         "first-order closed form": first_order,
-        "static VOC of one rollout": static(1),
-        "static closed form": static(batch),
+        "static VOC of one rollout": static_of_tree(1),
+        "static closed form": static_of_tree(batch),
         "moment matching with quadrature": matching,
         "Monte Carlo in equal time": sampled,
         "UCT": chosen("uct"),

@@ -15,10 +15,12 @@ from distill import voc
 from distill.candidates import Candidates
 from distill.family import load_family
 from distill.generate import Asked, generate
+from distill.metrics import measure
 from distill.peers import left_out, measure_peers, peers, timed_cases
 from distill.query import Query
 from distill.scorer_inputs import LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
 from distill.timing import decisions, tree_of
+from distill.validate import static_values
 
 RATE = {"horizon": "inf", "batch": None}
 NAMES = {
@@ -40,6 +42,9 @@ def one_leaf_each(seed: int = 0, n: int = 4):
     t["offset"] *= 0.2
     t["noise_var"] = 0.05 * t["var"]
     return t
+
+
+AS_NORMALS = "static closed form, leaves as normals"
 
 
 def coins(rng: np.random.Generator, n: int, n_actions: int):
@@ -146,8 +151,9 @@ def test_win_loss_leaves_go_as_normals_of_their_moments_where_it_is_said() -> No
     same = {name: t[name] for name in ("gain", "offset", "cost", "action")}
     normal = {**same, "mean": t["low"] + span * share, "var": var, "noise_var": var * total}
     wins, normals = peers(RATE, 4, kind=WIN_LOSS_TABLE), peers(RATE, 4)
-    for name in ("static closed form", "moment matching with quadrature", "UCT"):
-        np.testing.assert_allclose(wins[name](t, 40), normals[name](normal, 40), rtol=CLOSED_FORM_RATE)
+    same_names = {name: name for name in ("moment matching with quadrature", "UCT")}
+    for name, other in {**same_names, AS_NORMALS: "static closed form"}.items():
+        np.testing.assert_allclose(wins[name](t, 40), normals[other](normal, 40), rtol=CLOSED_FORM_RATE)
 
 
 def test_thompson_draws_win_rates() -> None:
@@ -167,10 +173,11 @@ def test_what_is_not_defined_is_left_out_with_its_reason() -> None:
     gone = left_out(RECORD, static, with_cov=True)
     assert set(gone) == {"moment matching with quadrature", "Monte Carlo in equal time", "static closed form"}
     assert all(len(reason) > 10 for reason in gone.values())
-    assert "static closed form" not in left_out(WIN_LOSS_TABLE, static)  # normals there, not exact
+    assert "static closed form" in left_out(WIN_LOSS_TABLE, static)
+    assert AS_NORMALS not in left_out(WIN_LOSS_TABLE, static)
     assert "static VOC of one rollout" in left_out(LEAF_TABLE, {"horizon": 0.0, "batch": 1})
     other = InputKind("wish list", ("mean",), True)
-    assert set(left_out(other, {"horizon": "varies", "batch": None})) == NAMES
+    assert set(left_out(other, {"horizon": "varies", "batch": None})) == NAMES | {AS_NORMALS}
 
 
 def test_all_are_judged_on_the_same_trees_with_their_own_time(tmp_path) -> None:
@@ -195,10 +202,13 @@ def test_every_input_has_its_peers_on_its_own_trees(tmp_path, family: str) -> No
     cases = timed_cases(whole, about["value"], 10, 0)[:4]
     found, gone = measure_peers(whole, cases, about["value"], equal_us=50.0, n_boot=20)
     json.dumps([found, gone], allow_nan=False)
-    assert set(found) | set(gone) == NAMES
+    assert set(found) | set(gone) == (NAMES | {AS_NORMALS} if family == "on-time" else NAMES)
     assert not set(found) & set(gone)
     assert bool(gone) == (family == "shared-aisles")
     share = {name: m["forgone_percent"]["value"] for name, m in found.items()}
+    if "static closed form" in found:  # the very values that stand beside every scorer
+        static = measure(whole.tree, whole.label, static_values(whole), n_boot=2)
+        assert share["static closed form"] == static.to_json()["forgone_percent"]["value"]
     assert share["first-order closed form"] < share["UCT"]
     assert share["first-order closed form"] < share["Thompson sampling"]
     assert all(0 < m["latency"]["p50_us"] <= m["latency"]["p99_us"] for m in found.values())

@@ -53,10 +53,11 @@ _PLANS: Final = {
         dearest=0.045,
     ),
 }
-# How scorer files are used: with the closed form where little is at stake, and at most for a quarter of the
-# time that rollouts take. In the full plan the first file of each kind of inputs is played so, with a
-# tuned prior, and stopping early; others with a tuned prior alone.
+# How scorer files are used: the closed form chooses where little is at stake, or until few rollouts are left;
+# scoring takes at most a quarter of a rollout's time. In the full plan the first file of each kind of inputs
+# is played in both ways, and in the second with a tuned prior, and stopping early; others with a tuned prior.
 _USE: Final = ":settled=0.001:share=0.25"
+_LATE: Final = ":late=1:share=0.25"
 _TUNED_USES: Final = (":prior=auto", ":stop=auto")
 
 
@@ -89,7 +90,8 @@ def plan(
         uses = ["", _USE]
         if full:
             kind = Scorer.load(file).kind
-            uses = [f"{_USE}:prior=auto"] if kind in inputs else [_USE, *(_USE + x for x in _TUNED_USES)]
+            first = [_USE, _LATE, *(_LATE + x for x in _TUNED_USES)]
+            uses = [f"{_LATE}:prior=auto"] if kind in inputs else first
             inputs.add(kind)
         chosen += tuple(f"scorer:{file}{use}" for use in uses)
     return Campaign(

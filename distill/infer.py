@@ -30,7 +30,7 @@ from distill.estimates import (
 from distill.family import Family, draw, parse_family
 from distill.files import write_atomic
 from distill.infer_beliefs import Prior, gaussian_beliefs, prior_of
-from distill.infer_checks import Finding, findings
+from distill.infer_checks import MOST_HORIZONS, Finding, findings
 from distill.infer_shape import shape_of
 from distill.infer_win_loss import win_loss_beliefs
 from distill.traces import BadLines, read_many
@@ -213,10 +213,9 @@ def _budget(
     toml = {"rollouts": field_text(whole, whole=True), "used": share}
     if fresh > 0:
         toml["fresh"] = number_text(fresh)
-    horizons = [t.horizon for t in trees]
-    finite = [h for h in horizons if h is not None and math.isfinite(h)]
-    if len(finite) == len(horizons):
-        toml["horizon"] = field_text(finite, whole=trees[0].belief == "win_loss")
+    horizons = np.array([math.inf if t.horizon is None else t.horizon for t in trees])
+    if np.all(np.isfinite(horizons)) or 1 < len(np.unique(horizons)) <= MOST_HORIZONS:
+        toml["horizon"] = field_text(horizons, whole=trees[0].belief == "win_loss")
     logs, shares = np.log(whole), spent / whole
     sums = by_group([{"n": 1.0, "log": a, "share": b} for a, b in zip(logs, shares, strict=True)], member)
     found = bootstrap(

@@ -19,8 +19,9 @@ from distill.estimates import Estimated, bootstrap, by_group
 from distill.infer_beliefs import Prior
 from distill.tree import BeliefTree, Floats
 
-__all__ = ["Finding", "findings"]
+__all__ = ["MOST_HORIZONS", "Finding", "findings"]
 
+MOST_HORIZONS: Final = 8  # that a family lists where some are infinite
 _ENOUGH: Final = 200  # moves of a leaf's mean, below which nothing is said of their distribution
 _FEW_ROLLOUTS: Final = 4  # between two records: more would average a rollout's own shape away
 _TAIL: Final = 0.5  # excess kurtosis that counts as far from Gaussian
@@ -363,10 +364,12 @@ def _structure(trees: Sequence[BeliefTree], priors: Sequence[Prior] | None) -> I
             "parts, would give; the family keeps the best fit.",
             {"largest difference": misfit},
         )  # fmt: skip
-    if len({t.horizon is None or math.isinf(t.horizon) for t in trees}) > 1:
+    horizons = {math.inf if t.horizon is None else t.horizon for t in trees}
+    if math.inf in horizons and len(horizons) > MOST_HORIZONS:
         yield Finding(
-            "one kind of horizon", "contradicts",
-            "Some records state a finite horizon and others none; the family leaves it out.",
+            "a range of horizons", "contradicts",
+            "Some records state a finite horizon and others none or an infinite one, in more than "
+            f"{MOST_HORIZONS} values, which no range holds; the family leaves it out.",
         )  # fmt: skip
 
 

@@ -22,6 +22,7 @@ from distill.closed_form import static_rates
 from distill.errors import InputError, ScorerFileError
 from distill.family import draw, load_family, parse_family
 from distill.generate import generate
+from distill.infer import infer
 from distill.peers import FIRST_ORDER, MOMENTS, ONE, SAMPLES, STATIC, THOMPSON, UCT
 from distill.query import Query
 from distill.recorder import Recorder
@@ -118,6 +119,20 @@ def test_recorded_trees_bring_their_own_horizon(tmp_path):
     rows, about = Candidates.read(tmp_path / "d")
     assert about["value"]["horizon"] == VARIES
     assert np.all(rows.columns["horizon"][rows.tree == 0] == math.inf)
+
+
+def test_infer_lists_few_horizons_and_says_where_it_cannot():
+    trees = [draw(family(), 3, i) for i in range(40)]
+    seen = [h if h is not None else math.inf for h in (tree.horizon for tree in trees)]
+    found = infer(trees).family["budget.horizon"]
+    assert found.args == (0.0, 4.0, math.inf)
+    np.testing.assert_allclose(
+        np.diff((0, *found.shares)), [seen.count(h) / 40 for h in found.args], atol=1e-5
+    )
+    many = [replace(tree, horizon=0.5 * i if i else math.inf) for i, tree in enumerate(trees)]
+    found = infer(many)
+    assert "budget.horizon" not in found.family.fields
+    assert "a range of horizons" in {finding.about for finding in found.findings}
 
 
 def test_one_horizon_is_no_input_unless_asked_for(tmp_path):

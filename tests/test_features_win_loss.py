@@ -17,7 +17,7 @@ from scipy import special, stats
 
 from distill.family import draw, load_family
 from distill.feature_graph import FeatureGraph
-from distill.features_win_loss import FEATURE_NAMES, build_graph
+from distill.features_win_loss import FEATURE_NAMES, FEW, build_graph
 from distill.onnx_nodes import typed
 from distill.query import Query
 from distill.scorer_inputs import WIN_LOSS_TABLE
@@ -153,7 +153,8 @@ def test_relabelling_leaves_and_actions_permutes_the_rows(seed):
 def test_extremes_give_finite_numbers(horizon, batch):
     graph = FeatureGraph(build_graph(horizon=horizon, batch=batch))
     assert graph.names[: len(FEATURE_NAMES)] == FEATURE_NAMES
-    assert len(graph.names) == len(FEATURE_NAMES) + (8 if batch is None else 0)
+    looked_at = 0 if batch is not None else 8 if horizon == 0 else len(FEW)
+    assert len(graph.names) == len(FEATURE_NAMES) + looked_at
     rng = np.random.default_rng(1)
     for n, actions in ((1, 1), (7, 1), (9, 9), (4096, 64)):
         t = table(rng, n, actions, int(10 ** rng.uniform(0, 9)))
@@ -167,6 +168,27 @@ def test_extremes_give_finite_numbers(horizon, batch):
         assert np.all(got.batch >= 1)
         if actions == 1 and horizon == math.inf:
             assert np.all(got.first_order < 1e-200)
+
+
+def test_values_far_from_zero_change_no_feature():
+    t = table(np.random.default_rng(3), 30, 5)
+    moved = {**t, "offset": t["offset"] + 1e8}
+    a, b = GRAPH.matrix(t), GRAPH.matrix(moved)
+    live = a.first_order > 1e-6
+    assert np.count_nonzero(live) >= 5
+    np.testing.assert_allclose(b.first_order[live], a.first_order[live], rtol=1e-3)
+
+
+@pytest.mark.parametrize("trials", [1e6, 1e9])
+def test_leaves_known_almost_surely_give_finite_numbers(trials):
+    """Means an even step apart, and one leaf of an unknown value among them."""
+    t = table(np.random.default_rng(4), 20, 4, 10**6)
+    share = np.linspace(0.2, 0.8, 20)
+    t["alpha"], t["beta"] = share * trials, (1 - share) * trials
+    t["alpha"][3], t["beta"][3] = 1.0, 1.0
+    got = GRAPH.matrix(t)
+    assert all(np.all(np.isfinite(part)) for part in got)
+    assert int(np.argmax(got.first_order)) == 3
 
 
 def test_nothing_left_is_worth_nothing():

@@ -31,6 +31,7 @@ from report_figures import (
 )
 from small_dataset import labelled
 
+from distill.break_even import break_even
 from distill.cli import run
 from distill.errors import InputError
 from distill.report import CAUTION, axes, charts, front_svg, more_pictures, page, pictures, theme, write_page
@@ -324,6 +325,37 @@ def test_slices_bounds_prices_and_gains_stand_where_the_figures_say(drawn: dict[
     assert "every rollout costs one scoring" in text
     assert "&lt;b&gt;" in text
     assert "<b>" not in text
+
+
+def test_peers_say_on_how_many_trees_and_why_some_are_missing() -> None:
+    figures = front_figures()
+    del figures["peers"]["UCT"]["trees"]  # as older versions left them
+    assert "on a part of the trees" in page(figures)
+    figures["peers"]["UCT"]["trees"] = 1000
+    figures["peers_left_out"] = dict.fromkeys(("Monte Carlo", "Thompson"), "they need <tables>")
+    text = page(figures)
+    assert "on 1,000 of the trees" in text
+    assert "Not measured: Monte Carlo, Thompson (they need &lt;tables&gt;)." in text
+    figures["peers"]["UCT"]["trees"] = figures["parts"]["held_out"]["trees"]
+    assert "of the trees</span>" not in page(figures)
+
+
+def test_what_the_backup_takes_stands_beside_the_scorer(drawn: dict[str, Any]) -> None:
+    figures = front_figures()
+    figures["backup"] = {"after one rollout": {"p50_us": 21.5, "p99_us": 30.0, "calls": 50}}
+    assert rows_of(parsed(page(figures)), "Time of one decision")["backup after one rollout"][0] == [21.5]
+    assert 21.5 in dots(drawn["time"], 0)
+
+
+def test_the_shipped_scorer_is_among_the_curves_wherever_it_stands(drawn: dict[str, Any]) -> None:
+    """It is best nowhere here, and another scorer gains more where rollouts are dear."""
+    figures = sheet_figures()
+    ways = {"dense 32-32": (0.5, 36.6), "linear": (0.4, 20.0), "exact dynamic rate": (0.0, 10293.9)}
+    figures["break_even"] = break_even(ways)
+    page(figures)
+    gains = figures["break_even"]["gain_percent"]
+    ours, exact = gains["dense 32-32"], gains["exact dynamic rate"]
+    assert [y for _, y in lines(drawn["break-even"], "curve")] == [ours, gains["linear"], exact]
 
 
 @pytest.mark.parametrize("lost", ["slices", "calibration", "stop_curve"])

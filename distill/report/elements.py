@@ -76,11 +76,15 @@ def table(
         more = [element("span", mark, class_="mark")] if mark else []
         return element("th", one_line(name) or _NONE, *more, scope="row")
 
+    def cell(name: str, x: Child) -> ET.Element:
+        td = element("td", x, data_label=name)
+        if "".join(td.itertext()) == _NONE:
+            td.set("class", "none")
+        return td
+
     head = element("tr", element("td", "\u00a0"), *(element("th", h, scope="col") for h in header))
     body = (
-        element(
-            "tr", named(name), *(element("td", x, data_label=h) for h, x in zip(header, cells, strict=True))
-        )
+        element("tr", named(name), *(cell(h, x) for h, x in zip(header, cells, strict=True)))
         for name, cells in rows.items()
     )
     return element("table", element("thead", head), element("tbody", *body))

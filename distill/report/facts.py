@@ -59,6 +59,7 @@ class Facts:
     break_even: Figures
     shifts: Mapping[str, Figures]
     backup: Mapping[str, Figures]
+    peers_left_out: Mapping[str, str]
 
     @classmethod
     def read(cls, figures: Figures) -> Facts:
@@ -81,6 +82,7 @@ class Facts:
             top["beside"], timed["leaves"], timed["exact"], top if kind == SHEET_FORMAT else None,
             figures if top is not figures else {}, top.get("peers", {}), top.get("break_even", {}),
             figures.get("shifts") or top.get("shifts") or {}, timed.get("backup") or {},
+            top.get("peers_left_out", {}),
         )  # fmt: skip
 
     @property
@@ -103,9 +105,15 @@ class Facts:
         return {**self.beside, **{name: m for name, m in self.peers.items() if name not in self.beside}}
 
     @property
-    def partly_judged(self) -> list[str]:
-        """Peers that were judged on a part of the held-out trees only."""
-        return [name for name in self.peers if name not in self.beside]
+    def partly_judged(self) -> dict[str, str]:
+        """Peers that were judged on a part of the held-out trees only -> on how many of them, in words."""
+        every = self.parts["held_out"]["trees"]
+        counts = {name: m.get("trees") for name, m in self.peers.items() if name not in self.beside}
+        return {
+            name: "on a part of the trees" if n is None else f"on {n:,} of the trees"
+            for name, n in counts.items()
+            if n is None or n < every
+        }
 
     @property
     def most_accurate(self) -> Shown | None:

@@ -158,18 +158,23 @@ def shifts_picture(shifts: Mapping[str, Figures]) -> tuple[str, ET.Element, list
 _DRAWN_PEERS = ("first-order closed form", "static closed form", "UCT")
 
 
-def break_even_picture(found: Figures, roles: Mapping[str, str]) -> tuple[str, ET.Element, list[Child]]:
+def break_even_picture(
+    found: Figures, roles: Mapping[str, str], chosen: str | None = None
+) -> tuple[str, ET.Element, list[Child]]:
     """Title, picture and caption of what each way to pick gains, by cost of a rollout.
 
-    Drawn are the ways that are best somewhere, the scorer that gains most where rollouts are dear, exact
-    values and the commonest peers: the curves of a front's scorers lie upon one another.
+    Drawn are the ways that are best somewhere, the chosen scorer or the one that gains most where rollouts
+    are dear, exact values and the commonest peers: the curves of a front's scorers lie upon one another.
     """
     costs = [known(c) / 1000 for c in found["costs_us"]]
     gains = {name: [known(g) for g in curve] for name, curve in found["gain_percent"].items()}
     drawn = {*(one["name"] for one in found["best"]), *_DRAWN_PEERS}
     drawn |= {name for name in gains if roles.get(name) == "exact"}
     scorers = [name for name in gains if roles.get(name) == "scorer"]
-    drawn |= {max(scorers, key=lambda name: gains[name][-1])} if scorers else set()
+    if chosen in gains:
+        drawn.add(chosen)
+    elif scorers:
+        drawn.add(max(scorers, key=lambda name: gains[name][-1]))
     used: dict[str, int] = {}
     shown = []
     for name in (name for name in gains if name in drawn):

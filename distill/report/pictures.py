@@ -39,7 +39,9 @@ def pictures(facts: Facts) -> Iterator[ET.Element]:
         roles = dict.fromkeys(found["gain_percent"], "scorer")
         roles |= dict.fromkeys(facts.peers, "peer")
         roles |= {f"exact {name}": "exact" for name in facts.exact}
-        title, picture, caption = break_even_picture(found, roles)
+        title, picture, caption = break_even_picture(
+            found, roles, None if facts.sheet is None else facts.sheet["recipe"]
+        )
         yield _framed(title, picture, *caption)
     if traces := facts.summary.get("on traces"):
         scorers = [name for name in traces if name not in facts.beside]

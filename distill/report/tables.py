@@ -15,7 +15,9 @@ __all__ = ["origin", "tables"]
 
 def tables(facts: Facts) -> Iterator[ET.Element]:
     """A section for each table, in reading order."""
-    yield section("Accuracy on held-out trees", *_accuracy(facts.judged, facts.partly_judged))
+    yield section(
+        "Accuracy on held-out trees", *_accuracy(facts.judged, facts.partly_judged), *_left_out(facts)
+    )
     backup = [element("p", CAPTIONS["backup"], class_="note")] if facts.backup else []
     yield section(f"Time of one decision over {facts.leaves} leaves", _times(facts), *backup)
     yield section("The scorers that were trained", _scorers(facts))
@@ -29,11 +31,11 @@ def tables(facts: Facts) -> Iterator[ET.Element]:
         yield section("One tree, exactly and by scorer", element("p", CAPTIONS["tree"]), _one_tree(tree))
 
 
-def _accuracy(rows: Mapping[str, Figures], part: Sequence[str] = ()) -> list[ET.Element]:
-    """part : rows that were measured on a part of the trees."""
+def _accuracy(rows: Mapping[str, Figures], part: Mapping[str, str] | None = None) -> list[ET.Element]:
+    """part : rows that were measured on a part of the trees, and on which."""
     columns = [key for key in COLUMNS if any(key in m for m in rows.values())]
     body = {name: [estimate(m.get(key)) for key in columns] for name, m in rows.items()}
-    out = [table([COLUMNS[key] for key in columns], body, dict.fromkeys(part, "on a part of the trees"))]
+    out = [table([COLUMNS[key] for key in columns], body, part)]
     measured = next((m for m in rows.values() if "interval_level" in m), None)
     if measured is None:
         return out
@@ -43,6 +45,15 @@ def _accuracy(rows: Mapping[str, Figures], part: Sequence[str] = ()) -> list[ET.
         number(measured["trees_with_best_zero"]), ".",
     ]  # fmt: skip
     return [*out, element("p", *note, class_="note")]
+
+
+def _left_out(facts: Facts) -> list[ET.Element]:
+    """Which peers are not defined for these trees, and why."""
+    why: dict[str, list[str]] = {}
+    for name, reason in facts.peers_left_out.items():
+        why.setdefault(reason, []).append(name)
+    texts = (f"Not measured: {', '.join(names)} ({reason})." for reason, names in why.items())
+    return [element("p", text, class_="note") for text in texts]
 
 
 def _times(facts: Facts) -> ET.Element:

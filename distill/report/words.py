@@ -194,6 +194,7 @@ td{overflow-wrap:anywhere}
  tr{padding:.6rem 0;border-bottom:1px solid var(--line)}
  tbody th,td{border:0;padding:.1rem 0}
  td{display:flex;justify-content:space-between;gap:1rem;text-align:right}
+ td.none{display:none}
  td::before{content:attr(data-label);color:var(--quiet);text-align:left;flex:0 1 auto;min-width:35%}
  .words{grid-template-columns:1fr;gap:0}
  .words dd{margin-bottom:.75rem}

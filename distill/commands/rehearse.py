@@ -35,7 +35,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--out", type=flags.out_folder, required=True, metavar="FOLDER", help="goes on where it was"
     )
     parser.add_argument("--quick", action="store_true", help="a small rehearsal of under a minute")
-    parser.add_argument("--full", action="store_true", help="the whole grid; 40 minutes on two cores")
+    parser.add_argument("--full", action="store_true", help="the whole grid; half an hour on two cores")
     parser.add_argument("--problem", action="append", default=[], metavar="NAME")
     parser.add_argument("--budget", action="append", default=[], metavar="BUDGET")
     parser.add_argument("--policy", action="append", default=[], metavar="POLICY")

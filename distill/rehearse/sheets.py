@@ -43,10 +43,6 @@ def figures_of(summary: Mapping[str, Any], sha256: str) -> dict[str, Any]:
     rows = [row for row in summary["rows"] if row["policy"] in names]
     if not rows:
         raise InputError("rehearsal: rows", "must hold cells of the scorer", ", ".join(names))
-    kept = (
-        "problem", "kind", "budget", "policy", "decisions", "measured", "interval", "rollouts",
-        "choosing_share", "ratios",
-    )  # fmt: skip
     kinds = {row["kind"] for row in rows}
     return {
         "seeds": summary["campaign"]["seeds"],
@@ -54,8 +50,30 @@ def figures_of(summary: Mapping[str, Any], sha256: str) -> dict[str, Any]:
         "uses": {name: summary["aims"].get(name, {}) for name in dict.fromkeys(r["policy"] for r in rows)},
         "by_kind": [row for row in summary["by_kind"] if row["kind"] in kinds],
         "stopping": [row for row in summary["stopping"] if row["policy"] in names],
-        "cells": [{key: row[key] for key in kept} for row in rows],
+        "cells": [_in_short(row) for row in rows],
     }
+
+
+def _in_short(row: Mapping[str, Any]) -> dict[str, Any]:
+    """A cell with what a sheet says of it, to four digits."""
+    ratios = {
+        group: {key: x if isinstance(x, str) else _rounded(x) for key, x in found.items()}
+        for group, found in row["ratios"].items()
+    }
+    return {
+        **{key: row[key] for key in ("problem", "kind", "budget", "policy")},
+        "regret": {
+            "value": _rounded(row["measured"]),
+            **{k: _rounded(x) for k, x in row["interval"].items()},
+        },
+        "rollouts": _rounded(row["rollouts"]),
+        "choosing_share": _rounded(row["choosing_share"]),
+        "ratios": ratios,
+    }
+
+
+def _rounded(x: float | None) -> float | None:
+    return None if x is None else float(f"{x:.4g}")
 
 
 def add_to_sheet(summary: Mapping[str, Any], scorer_file: Path) -> dict[str, Any]:

@@ -97,7 +97,7 @@ def _ratios(rows: Rows, group: str) -> Figure:
     ticks = (0.3, 0.5, 0.7, 1, 1.5, 2, 3)
     ax.set_xticks(ticks, [f"{t:g}" for t in ticks])
     ax.xaxis.set_minor_locator(NullLocator())
-    ax.set_xlabel(f"regret of the best scorer over that of the {_RIVALS[group]}", x=0, ha="left")
+    ax.set_xlabel(f"regret: best scorer / {_RIVALS[group]}")
     ax.tick_params(axis="y", length=0)
     ax.grid(axis="x")
     figure.legend(loc="outside lower left", frameon=False, fontsize=SMALL, ncols=2, handletextpad=0.2)
@@ -149,13 +149,13 @@ def _rollouts(row: Figures) -> int:
 @styled
 def _costs(panels: Sequence[Rows]) -> Figure:
     down = (len(panels) + 1) // 2
-    figure = Figure(figsize=(1.6 * _WIDTH, (90 + 190 * down) / 72))
+    figure = Figure(figsize=(_WIDTH, (110 + 160 * down) / 72))
     figure.patch.set_visible(False)
     axes = figure.subplots(down, 2, squeeze=False)
     lines: dict[str, Any] = {}
     for ax, rows in zip(axes.flat, panels, strict=False):
         ax.patch.set_visible(False)
-        ax.set_title(one_line(rows[0]["problem"], 30))
+        ax.set_title(one_line(rows[0]["problem"], 22), fontsize=SMALL)
         ax.set(xscale="log", yscale="log")
         for words, label, role in _SORTS:
             mine = [r for r in rows if r["policy"].startswith(words)]
@@ -166,7 +166,7 @@ def _costs(panels: Sequence[Rows]) -> Figure:
             style: dict[str, Any] = {"color": DRAWN[role], "marker": _MARKS[nth], "ms": 4, "lw": 1.4}
             (lines[label],) = ax.plot(*zip(*points, strict=True), gid="policy", **style)
         ticks = sorted({1e6 * r["rollout_seconds"] for r in rows})
-        ax.set_xticks(ticks, [f"{t:,.0f}" for t in ticks])
+        ax.set_xticks(ticks, [f"{t:.0f}" if t < 1000 else f"{t / 1000:g}k" for t in ticks])
         ax.grid(which="major")
         for axis in (ax.xaxis, ax.yaxis):
             axis.set_minor_locator(NullLocator())
@@ -176,7 +176,7 @@ def _costs(panels: Sequence[Rows]) -> Figure:
     figure.supxlabel(f"cost of a rollout, µs (time: {_rollouts(panels[0][0])} rollouts)", fontsize=SMALL)
     figure.supylabel("regret", fontsize=SMALL)
     figure.legend(
-        lines.values(), lines.keys(), loc="outside upper left", frameon=False, fontsize=SMALL, ncols=3
+        lines.values(), lines.keys(), loc="outside upper left", frameon=False, fontsize=SMALL, ncols=2
     )
     return figure
 

@@ -102,6 +102,41 @@ def test_the_page_holds_every_cell_and_asks_for_nothing(small):
         rehearsal_page({})
 
 
+def test_records_are_left_to_trees_that_no_leaf_table_holds(tmp_path):
+    records = FAST.replace("cold-store-fast", "crossing-traffic")
+    campaign = Campaign(
+        problems=("tree-2x2^1-noise1", "tree-2x2^2-noise1-chance"),
+        budgets=("3",),
+        policies=("thompson", f"scorer:{FAST}", f"scorer:{records}"),
+        seeds=2,
+        tuning_seeds=0,
+    )
+    results = run(campaign, tmp_path)
+    played = {(c.problem, c.policy) for c in results.cells} - {(p, "thompson") for p in campaign.problems}
+    assert played == {
+        ("tree-2x2^1-noise1", "cold-store-fast"),
+        ("tree-2x2^2-noise1-chance", "crossing-traffic"),
+    }
+    assert [x["why"].split(",")[0] for x in results.left_out] == [
+        "reads records",
+        "the scorer does not take such trees",
+    ]
+    assert results.kinds["tree-2x2^2-noise1-chance"] == "Gaussian, chance nodes"
+
+
+def test_dear_exact_choosing_is_left_to_wide_problems_and_that_is_kept(tmp_path):
+    names = "tree-2x2^1-noise1", "tree-3x2^1-noise1"
+    campaign = Campaign(
+        problems=names, budgets=("1ms@100us",), policies=("thompson", "exact-dynamic-rate"),
+        seeds=2, tuning_seeds=0, wide=names[:1], dearest=1e-9,
+    )  # fmt: skip
+    results = run(campaign, tmp_path)
+    assert {c.problem for c in results.cells if c.policy == "exact_dynamic_rate"} == {names[0]}
+    (found,) = results.left_out
+    assert found["why"].startswith("choosing takes")
+    assert run(replace(campaign, dearest=9.0), tmp_path).left_out == [found]  # decided once
+
+
 # --- what follows from the cells: from figures that are known ---------------------------------------
 
 TIMED = [Budget(seconds=100 * cost, rollout_seconds=cost) for cost in (20e-6, 100e-6, 1e-3)]
@@ -228,4 +263,11 @@ def test_plans_know_the_scorers_uses():
     assert full.seeds >= 400
     assert [p.endswith(":stop=auto") for p in full.policies].count(True) == 1
     assert set(full.wide) <= set(full.problems)
+    records = FAST.replace("cold-store-fast", "crossing-traffic")
+    uses = [
+        p.partition(".onnx")[2]
+        for p in plan("full", scorers=[FAST, records]).policies
+        if p.startswith("scorer:")
+    ]
+    assert len(uses) == 2 * len(set(uses))  # each the first of its kind of inputs: the same uses
     assert plan("full", budgets=["8"]).wide_budgets == ()

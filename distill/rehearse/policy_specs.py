@@ -61,13 +61,14 @@ def _scorer(
     spread: int = 1,
     settled: float = 0.0,
     late: float = 0.0,
+    every: int = 0,
     share: float = 0.0,
     stop: float = 0.0,
     prior: float = 1.0,
     name: str = "",
 ) -> Policy:
     options = {"commit": commit, "settled": settled, "late": late, "share": share, "stop": stop}
-    return _with_prior(ByScorer(file, spread=spread, name=name, **options), prior)
+    return _with_prior(ByScorer(file, spread=spread, every=every, name=name, **options), prior)
 
 
 # name -> maker; its parameters are the options.

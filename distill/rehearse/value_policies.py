@@ -108,7 +108,8 @@ class ByScorer(_Thrifty):
         static rate goes on telling leaves apart.
     late : the static rate chooses until this many rollouts an uncertain leaf are left. A value of one leaf
         takes the rest of the tree as it is, which is nearly true of the last rollouts and wrong of the
-        first of many: those give most of the gain, at a fraction of the scorings. 0 scores from the start.
+        first of many. 0 scores from the start. every : before those, every so-manyeth rollout is the
+        scorer's too, so that neither value's blind spots go unseen; 0 none.
     share : where a rollout's cost is known (see `expect`) and a scoring takes more than this share of it,
         the static rate, which costs next to nothing, chooses: what a scoring gains and what its time would
         have bought both grow with the number of scorings, so that fewer of them do not pay either. The
@@ -127,6 +128,7 @@ class ByScorer(_Thrifty):
         spread: int = 1,
         settled: float = 0.0,
         late: float = 0.0,
+        every: int = 0,
         share: float = 0.0,
         rollout_price: float = 0.0,
         stop: float = 0.0,
@@ -138,7 +140,7 @@ class ByScorer(_Thrifty):
             raise InputError("spread", "must be at least 1", spread)
         if not 0 <= settled < math.inf:
             raise InputError("settled", "must be >= 0 and finite", settled)
-        for what, value in (("late", late), ("share", share)):
+        for what, value in (("late", late), ("every", every), ("share", share)):
             if not 0 <= value < math.inf:
                 raise InputError(what, "must be >= 0 and finite", value)
         self._path = None if isinstance(scorer, Scorer) else Path(scorer)
@@ -147,6 +149,7 @@ class ByScorer(_Thrifty):
         self.spread = spread
         self.settled = settled
         self.late = late
+        self.every = every
         self.share = share
         words = [name or (self._path.stem if self._path else "scorer")]
         if not name:
@@ -154,6 +157,7 @@ class ByScorer(_Thrifty):
             words += [f"spread{spread}"] if spread > 1 else []
             words += [f"settled{settled:g}"] if settled else []
             words += [f"late{late:g}"] if late else []
+            words += [f"every{every}"] if every else []
             words += [f"share{share:g}"] if share else []
             words += [f"stop{stop:g}"] if stop else []
         self.name = "-".join(words)
@@ -164,6 +168,7 @@ class ByScorer(_Thrifty):
         self._queue: list[int] = []
         self._resting = 0
         self._until_look = 0
+        self._early = 0  # rollouts before the last ones
         self._rollout_seconds = 0.0
         self._leaves = 0
         self._fastest: dict[int, float] = {}  # seconds of a scoring, by number of leaves
@@ -192,7 +197,7 @@ class ByScorer(_Thrifty):
 
     def begin(self, tree: BeliefTree) -> None:
         """A new decision; what the scorer reads is laid out when it is first asked."""
-        self._queue, self._resting, self._until_look = [], 0, 0
+        self._queue, self._resting, self._until_look, self._early = [], 0, 0, 0
         self._inputs, self._changed = None, set()
         self._set_price(tree)
         self._scale = scale_of(tree)
@@ -207,7 +212,7 @@ class ByScorer(_Thrifty):
         if self._resting:
             self._resting -= 1
             return self._static(posterior, remaining, rng)
-        scores_now = remaining <= self._last and not self._takes_too_long()
+        scores_now = self._is_due(remaining) and not self._takes_too_long()
         if not scores_now:
             if not self._price:
                 return self._static(posterior, remaining, rng)
@@ -240,6 +245,13 @@ class ByScorer(_Thrifty):
     def _static(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice:
         """The static rate's choice."""
         return Choice(posterior.pick("static_rate", rng, remaining=remaining), fell_back=True)
+
+    def _is_due(self, remaining: int) -> bool:
+        """Whether the rollout is one of those that are the scorer's."""
+        if remaining <= self._last:
+            return True
+        self._early += 1
+        return self.every > 0 and self._early % self.every == 0
 
     def _takes_too_long(self) -> bool:
         """Whether a scoring would take more than its share of a rollout's time."""

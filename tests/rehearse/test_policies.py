@@ -247,6 +247,16 @@ def test_the_scorer_chooses_the_last_rollouts():
         assert policy.calls == last
 
 
+def test_every_second_early_rollout_is_the_scorers_too():
+    tree = FOUR_LEAVES.draw(0).tree
+    policy = fake([0.1] * 4)(Scorer.closed_form(), late=0.5, every=2)
+    policy.begin(tree)
+    posterior, rng = Search(tree), np.random.default_rng(0)
+    by_scorer = [not policy.choose(posterior, left, rng).fell_back for left in range(7, 0, -1)]
+    assert by_scorer == [False, True, False, True, False, True, True]
+    assert make_policy(f"scorer:{FAST}:late=0.5:every=2").name == "cold-store-fast-late0.5-every2"
+
+
 def test_late_scorers_look_whether_to_stop_every_eighth_rollout():
     policy = fake([0.005, 0, 0, 0])(Scorer.closed_form(), late=1, stop=0.01)
     policy.begin(FOUR_LEAVES.draw(0).tree)
@@ -326,6 +336,7 @@ def test_static_voc_is_the_knowledge_gradient():
         (lambda: ByScorer(FAST, commit=2.0), "commit: must be from 0 to 1"),
         (lambda: ByScorer(FAST, spread=0), "spread: must be at least 1"),
         (lambda: ByScorer(FAST, settled=-1.0), "settled: must be >= 0"),
+        (lambda: ByScorer(FAST, every=-1), "every: must be >= 0"),
         (lambda: ByScorer(FAST, late=-1.0), "late: must be >= 0 and finite"),
         (lambda: ByScorer(FAST, share=float("inf")), "share: must be >= 0 and finite"),
         (lambda: ByScorer(FAST, stop=-0.1), "stop: must be >= 0"),

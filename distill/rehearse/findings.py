@@ -172,7 +172,8 @@ def aims(results: Results, rows: Iterable[Mapping[str, Any]]) -> dict[str, Any]:
 def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list[dict[str, Any]]:
     """The policy to use for each problem and budget: the cheapest that no other measurably beats.
 
-    The closed form is advised wherever the best other policy's 95 % interval of the ratio to it reaches 1.
+    The closed form is advised wherever the best other policy's 95 % interval of the ratio to it reaches 1;
+    which one is the best is decided for each half of the decisions by the other half.
     """
     campaign = results.campaign
     static = members(campaign, "static")
@@ -184,7 +185,7 @@ def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list
         if not rivals or not rest:
             continue
         best = min(rest, key=lambda name: float(here[name].measured.mean()))
-        (found,) = compare(list(here.values()), best, rivals)
+        (found,) = compare([_best([here[n] for n in rest]), *(here[n] for n in rivals)], BEST, rivals)
         better = math.isfinite(found.high) and found.high < 1
         rows.append(
             {

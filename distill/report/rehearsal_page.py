@@ -225,7 +225,8 @@ def _left_out(left_out: Sequence[Figures]) -> ET.Element:
     """A row a policy and reason; times, which differ from budget to budget, are told as one reason."""
     found: dict[str, dict[str, list[str]]] = {}
     for x in left_out:
-        why = "one choice takes too long" if x["why"].startswith("one choice takes") else x["why"]
+        slow = x["why"].startswith(("one choice takes", "choosing takes"))
+        why = "choosing takes too long" if slow else x["why"]
         found.setdefault(f"{x['policy']}: {why}", {}).setdefault(x["problem"], []).append(x["budget"])
     rows: dict[str, Sequence[Child]] = {
         name: ["; ".join(f"{problem} ({', '.join(budgets)})" for problem, budgets in problems.items())]

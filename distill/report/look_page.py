@@ -41,7 +41,7 @@ def _opening(figures: Figures) -> ET.Element:
     said = f"A labelled dataset from {figures['source'].get('name')}.{state}"
     tiles = [
         tile("trees", number(figures["trees"])),
-        tile("of them recorded", number(figures["recorded"]), small="the others are drawn from a family"),
+        tile("of them recorded", number(figures["recorded"]), small="the rest drawn from a family"),
         tile("candidates", number(figures["candidates"])),
         tile("trees aside", number(figures["aside"])),
         tile("labels that are 0", number(figures["labels_zero"])),
@@ -68,10 +68,13 @@ def _quantiles(figures: Figures) -> ET.Element:
         "error bound, share of scale": figures["error_of_scale"],
         "error bound, share of label": figures["error_of_label"],
     }
-    at = next((list(q) for q in shown.values() if q), [])
+    known = {name: q for name, q in shown.items() if q}
+    at = next((list(q) for q in known.values()), [])
     names = {"0": "least", "0.5": "median", "1": "largest"}
-    header = [names.get(q, f"below it {100 * float(q):g} %") for q in at]
-    return table(header, {name: [number(x) for x in q.values()] for name, q in shown.items() if q})
+    rows = {
+        names.get(p, f"{100 * float(p):g} % lie below"): [number(q[p]) for q in known.values()] for p in at
+    }
+    return table(list(known), rows)
 
 
 def _slices(rows: Any) -> ET.Element:

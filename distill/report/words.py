@@ -169,6 +169,7 @@ p{margin:.5rem 0;max-width:46rem}
 .tiles dd{margin:0}
 .tiles strong{font-size:1.5rem;font-weight:600}
 .interval{display:block;font-size:.8125rem;white-space:nowrap}
+.tiles .interval{white-space:normal}
 .pictures{columns:26rem 2;column-gap:2rem}
 figure{margin:0 0 2rem;break-inside:avoid}
 figure svg{display:block;width:100%;max-width:33rem;height:auto;margin:.25rem 0 .5rem}
@@ -183,10 +184,13 @@ td{overflow-wrap:anywhere}
 .words{display:grid;grid-template-columns:minmax(8rem,14rem) 1fr;gap:.5rem 1.5rem;margin:0}
 .words dt{font-weight:600;overflow-wrap:anywhere}
 .words dd{margin:0;max-width:46rem;overflow-wrap:anywhere;min-width:0}
+@media (min-width:64rem){
+ data{white-space:nowrap}
+ tbody th{min-width:8rem}
+}
 @media (max-width:42rem){
  h1{font-size:1.4rem}
  .tiles{grid-template-columns:repeat(2,minmax(0,1fr))}
- .tiles .interval{white-space:normal}
  .tiles div{padding:.6rem .75rem}
  .tiles strong{font-size:1.25rem}
  thead{position:absolute;width:1px;height:1px;overflow:hidden;clip-path:inset(50%)}

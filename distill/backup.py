@@ -22,6 +22,7 @@ the nodes on it have children. `rows` is O(1) a leaf on top.
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from typing import Final, NamedTuple
 
 import numpy as np
@@ -33,13 +34,24 @@ from distill.normal_fits import inverse_gain, norm_cdf, norm_pdf, unit_gain
 from distill.record_rows import Crossings, LeafMoments
 from distill.tree import BeliefTree, Floats
 
-__all__ = ["Backup", "Moments", "backup_of", "max_moments"]
+__all__ = [
+    "ABOVE",
+    "BELOW",
+    "CELLS",
+    "FAR",
+    "FAR_MOVE",
+    "LEAST",
+    "Backup",
+    "Moments",
+    "backup_of",
+    "max_moments",
+]
 
-_CELLS: Final = 24
-_BELOW, _ABOVE = 7.0, 4.5  # the table spans the largest m - 7 s to the largest m + 4.5 s
-_LEAST: Final = 1e-300
-_FAR_MOVE: Final = 1e9  # standard deviations
-_FAR: Final = 1e150  # mean of the siblings of an only child, below every utility that a tree may hold
+CELLS: Final = 24
+BELOW, ABOVE = 7.0, 4.5  # the table spans the largest m - 7 s to the largest m + 4.5 s
+LEAST: Final = 1e-300
+FAR_MOVE: Final = 1e9  # standard deviations
+FAR: Final = 1e150  # mean of the siblings of an only child, below every utility that a tree may hold
 
 
 class Moments(NamedTuple):
@@ -66,7 +78,7 @@ def max_moments(m: Floats, v: Floats) -> Moments:
     """
     n = len(m)
     if n == 1:
-        return Moments(float(m[0]), float(v[0]), np.array([-_FAR]), np.zeros(1))
+        return Moments(float(m[0]), float(v[0]), np.array([-FAR]), np.zeros(1))
     if n == 2:
         mean, var = _of_two(m, v)
         return Moments(mean, var, m[::-1].copy(), v[::-1].copy())
@@ -75,19 +87,19 @@ def max_moments(m: Floats, v: Floats) -> Moments:
         others = np.full(n, m[top])
         others[top] = np.max(np.delete(m, top))
         return Moments(float(m[top]), 0.0, others, np.zeros(n))
-    s = np.sqrt(np.maximum(v, _LEAST))
-    low, high = np.max(m - _BELOW * s), np.max(m + _ABOVE * s)
+    s = np.sqrt(np.maximum(v, LEAST))
+    low, high = np.max(m - BELOW * s), np.max(m + ABOVE * s)
     width = high - low
-    t = (np.arange(_CELLS) + 0.5) / _CELLS
+    t = (np.arange(CELLS) + 0.5) / CELLS
     z = ((low - m)[:, None] + width * t) / s[:, None]
     phi = norm_cdf(z)
-    np.maximum(phi, _LEAST, out=phi)
+    np.maximum(phi, LEAST, out=phi)
     joint = np.exp(np.sum(np.log(phi), axis=0))
     upper = np.vstack([1 - joint, 1 - joint / phi])
     first = width * upper.mean(axis=1)
-    second = 2 * width * width * ((upper @ t) / _CELLS)
+    second = 2 * width * width * ((upper @ t) / CELLS)
     # Midpoints overstate the second integral by 2 width^2 / (24 cells^2), from its slope at the lower end.
-    second -= width * width / (12 * _CELLS**2)
+    second -= width * width / (12 * CELLS**2)
     var = np.maximum(second - first * first, 0.0)
     return Moments(float(low + first[0]), float(var[0]), low + first[1:], var[1:])
 
@@ -145,13 +157,11 @@ class Backup:
         }
         self._lay_out(tree)
         self.mean, self.var = np.full(n, np.nan), np.full(n, np.nan)
-        self._others, self._others_var = np.full(n, -_FAR), np.zeros(n)
+        self._others, self._others_var = np.full(n, -FAR), np.zeros(n)
         leaf = LeafMoments.of(self._belief, horizon)
         self.mean[self.leaf_nodes], self.var[self.leaf_nodes] = leaf.mean, leaf.var
         self._own_sd, self._noise_ratio = leaf.sd, leaf.noise_ratio
-        for c in reversed(range(1, n)):
-            if self._kids[c] is not None:
-                self._refresh(c)
+        self._refresh_all()
 
     def _lay_out(self, tree: BeliefTree) -> None:
         """Per node the one it hands its moments to, with gain and reward on the way there."""
@@ -197,14 +207,7 @@ class Backup:
 
         Raises InputError for a leaf or a column that the tree has not.
         """
-        if not 0 <= leaf < len(self.leaf_nodes):
-            raise InputError("leaf", f"must be from 0 to {len(self.leaf_nodes) - 1}", leaf)
-        for name, x in belief.items():
-            if name not in self._belief:
-                raise InputError(name, f"must be among {', '.join(self._belief)}")
-            if not (math.isfinite(x) and (x >= 0 or name in ("mean", "low", "high"))):
-                raise InputError(name, "must be finite, and >= 0 unless it is a value", x)
-            self._belief[name][leaf] = x
+        self._keep(leaf, belief)
         found = LeafMoments.of({name: x[leaf : leaf + 1] for name, x in self._belief.items()}, self.horizon)
         node = self.leaf_nodes[leaf]
         self.mean[node], self.var[node] = found.mean[0], found.var[0]
@@ -213,6 +216,23 @@ class Backup:
         while c != 0:
             self._refresh(c)
             c = self._above[c]
+
+    def _keep(self, leaf: int, belief: Mapping[str, float]) -> None:
+        """Check a leaf's new belief and write it down."""
+        if not 0 <= leaf < len(self.leaf_nodes):
+            raise InputError("leaf", f"must be from 0 to {len(self.leaf_nodes) - 1}", leaf)
+        for name, x in belief.items():
+            if name not in self._belief:
+                raise InputError(name, f"must be among {', '.join(self._belief)}")
+            if not (math.isfinite(x) and (x >= 0 or name in ("mean", "low", "high"))):
+                raise InputError(name, "must be finite, and >= 0 unless it is a value", x)
+            self._belief[name][leaf] = x
+
+    def _refresh_all(self) -> None:
+        """Moments of every node from the leaves'."""
+        for c in reversed(range(1, len(self.mean))):
+            if self._kids[c] is not None:
+                self._refresh(c)
 
     def _refresh(self, c: int) -> None:
         """Moments of one node from its children's."""
@@ -239,15 +259,15 @@ class Backup:
         sd = self._own_sd
         if len(self._actions) == 1:
             slope = np.zeros(len(sd))
-        safe = np.maximum(slope, _LEAST)
+        safe = np.maximum(slope, LEAST)
         none = np.zeros(len(sd))
         with np.errstate(over="ignore"):  # what overflows is cut
-            at, bent, ratio = move / np.maximum(sd, _LEAST), bend / safe * sd, now / safe
+            at, bent, ratio = move / np.maximum(sd, LEAST), bend / safe * sd, now / safe
         return Crossings(
-            crossing=np.clip(at, -_FAR_MOVE, _FAR_MOVE),
+            crossing=np.clip(at, -FAR_MOVE, FAR_MOVE),
             slope=slope * sd,
-            bend=np.clip(bent, 0.0, _FAR_MOVE),
-            now=np.where(slope > 0, np.minimum(ratio, _FAR_MOVE), 0.0),
+            bend=np.clip(bent, 0.0, FAR_MOVE),
+            now=np.where(slope > 0, np.minimum(ratio, FAR_MOVE), 0.0),
             other_crossing=none,
             other_slope=none,
             spread=most[self.leaf_nodes] * sd,
@@ -265,7 +285,7 @@ class Backup:
         value, a = self.value, self._actions
         best = int(np.argmax(value))
         rival = np.full(len(a), value[best])
-        rival[best] = np.max(np.delete(value, best), initial=-_FAR)
+        rival[best] = np.max(np.delete(value, best), initial=-FAR)
         for level, c in enumerate(self._levels):
             gain, p = self._gain[c], self._above[c]
             if level == 0:
@@ -273,12 +293,12 @@ class Backup:
                 move[c], slope[c], now[c] = (rival - value) / gain, gain, gain
                 continue
             m, up_slope, up_now, up_bend = move[p], slope[p], now[p], bend[p]
-            chosen = self._is_max[p] & (self._others[c] > -_FAR)
+            chosen = self._is_max[p] & (self._others[c] > -FAR)
             if chosen.any():
                 k = c[chosen]
                 mean = self._reward[k] + gain[chosen] * self.mean[k]
                 theta = np.sqrt(np.square(gain[chosen]) * self.var[k] + self._others_var[k])
-                theta = np.maximum(theta, 1e-14 * np.abs(mean) + _LEAST)
+                theta = np.maximum(theta, 1e-14 * np.abs(mean) + LEAST)
                 target = self.mean[p[chosen]] + m[chosen]
                 x = inverse_gain((target - self._others[k]) / theta)
                 at = (mean - self._others[k]) / theta

@@ -12,13 +12,16 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["inverse_cdf", "inverse_gain", "norm_cdf", "norm_pdf", "unit_gain"]
+__all__ = [
+    "CDF_FIT", "FAR", "GAIN_FIT", "LEAST", "LOG_ROOT_2PI", "NEWTON_STEPS", "START", "inverse_cdf",
+    "inverse_gain", "norm_cdf", "norm_pdf", "unit_gain",
+]  # fmt: skip
 
 Floats = NDArray[np.float64]
 
 # Phi(-t) / phi(t) and f(-t) / phi(t) for t >= 0, each as a sum of (a + b t) / (t^2 + p t + q): rational
 # functions fitted to 50-digit values; relative error at most 3e-8 and 1.2e-7 on [0, 45]. Rows p, q, a, b.
-_CDF_FIT: Final = np.array(
+CDF_FIT: Final = np.array(
     [
         [4.32931076, 3.8613176, 4.83214538],
         [6.47221697, 10.40171138, 5.957323],
@@ -26,7 +29,7 @@ _CDF_FIT: Final = np.array(
         [-3.84948566, 0.1169343, 4.73255135],
     ]
 )
-_GAIN_FIT: Final = np.array(
+GAIN_FIT: Final = np.array(
     [
         [4.00784443, 3.79671751, 3.43685931],
         [4.24084249, 5.83015642, 10.41195629],
@@ -35,16 +38,16 @@ _GAIN_FIT: Final = np.array(
     ]
 )
 # Where f^{-1} starts: y - a v / sqrt(v + c), v = -log(1 - exp(-b y)); within 0.006. (a, b, c).
-_START: Final = (np.sqrt(1.94647), 1.96789, 4.0114)
-_NEWTON_STEPS: Final = 2
-_LOG_ROOT_2PI: Final = 0.9189385332046727
-_LEAST: Final = 1e-300
-_FAR: Final = 1e6  # phi is 0 long before; the square stays in range
+START: Final = (np.sqrt(1.94647), 1.96789, 4.0114)
+NEWTON_STEPS: Final = 2
+LOG_ROOT_2PI: Final = 0.9189385332046727
+LEAST: Final = 1e-300
+FAR: Final = 1e6  # phi is 0 long before; the square stays in range
 
 
 def norm_pdf(x: Floats) -> Floats:
     """Density of the standard normal."""
-    return np.asarray(np.exp(-0.5 * np.square(np.minimum(np.abs(x), _FAR)) - _LOG_ROOT_2PI))
+    return np.asarray(np.exp(-0.5 * np.square(np.minimum(np.abs(x), FAR)) - LOG_ROOT_2PI))
 
 
 def norm_cdf(x: Floats) -> Floats:
@@ -53,7 +56,7 @@ def norm_cdf(x: Floats) -> Floats:
     >>> norm_cdf(np.array([-10.0, 0.0, 2.0])).round(6)
     array([0.     , 0.5    , 0.97725])
     """
-    tail = norm_pdf(x) * _ratio(_CDF_FIT, x)
+    tail = norm_pdf(x) * _ratio(CDF_FIT, x)
     return np.asarray(np.where(x > 0, 1.0 - tail, tail))
 
 
@@ -63,7 +66,7 @@ def unit_gain(x: Floats) -> Floats:
     >>> unit_gain(np.array([-1.0, 0.0, 1.0])).round(6)
     array([0.083315, 0.398942, 1.083315])
     """
-    return np.asarray(np.maximum(x, 0.0) + norm_pdf(x) * _ratio(_GAIN_FIT, x))
+    return np.asarray(np.maximum(x, 0.0) + norm_pdf(x) * _ratio(GAIN_FIT, x))
 
 
 def inverse_gain(y: Floats) -> Floats:
@@ -72,16 +75,16 @@ def inverse_gain(y: Floats) -> Floats:
     >>> unit_gain(inverse_gain(np.array([1e-12, 0.4, 7.0]))).round(13)
     array([1.e-12, 4.e-01, 7.e+00])
     """
-    y = np.maximum(y, _LEAST)
-    a, b, c = _START
+    y = np.maximum(y, LEAST)
+    a, b, c = START
     v = -np.log(-np.expm1(-b * y))
     x = np.asarray(y - a * v / np.sqrt(v + c))
     log_y = np.log(y)
-    for _ in range(_NEWTON_STEPS):  # on log f, which is concave and nearly a parabola in the tail
-        t = np.minimum(np.abs(x), _FAR)
-        g, m, p = np.maximum(_ratio(_GAIN_FIT, t), _LEAST), _ratio(_CDF_FIT, t), norm_pdf(x)
+    for _ in range(NEWTON_STEPS):  # on log f, which is concave and nearly a parabola in the tail
+        t = np.minimum(np.abs(x), FAR)
+        g, m, p = np.maximum(_ratio(GAIN_FIT, t), LEAST), _ratio(CDF_FIT, t), norm_pdf(x)
         below = x < 0
-        log_f = np.where(below, np.log(g) - 0.5 * t * t - _LOG_ROOT_2PI, np.log(np.maximum(x, 0) + p * g))
+        log_f = np.where(below, np.log(g) - 0.5 * t * t - LOG_ROOT_2PI, np.log(np.maximum(x, 0) + p * g))
         slope = np.where(below, g / m, (np.maximum(x, 0) + p * g) / (1 - p * m))
         x = x - (log_f - log_y) * slope
     return np.asarray(x)
@@ -95,19 +98,19 @@ def inverse_cdf(p: Floats) -> Floats:
     >>> norm_cdf(inverse_cdf(np.array([1e-12, 0.4]))).round(13)
     array([1.e-12, 4.e-01])
     """
-    log_p = np.log(np.clip(p, _LEAST, 0.5))
+    log_p = np.log(np.clip(p, LEAST, 0.5))
     t = np.sqrt(-2 * log_p)
     x = -(
         t - (2.515517 + t * (0.802853 + t * 0.010328)) / (1 + t * (1.432788 + t * (0.189269 + t * 0.001308)))
     )
-    for _ in range(_NEWTON_STEPS):
-        m = _ratio(_CDF_FIT, x)
-        x = x - (np.log(m) - 0.5 * x * x - _LOG_ROOT_2PI - log_p) * m
+    for _ in range(NEWTON_STEPS):
+        m = _ratio(CDF_FIT, x)
+        x = x - (np.log(m) - 0.5 * x * x - LOG_ROOT_2PI - log_p) * m
     return np.asarray(np.minimum(x, 0.0))
 
 
 def _ratio(fit: Floats, x: Floats) -> Floats:
-    t = np.minimum(np.abs(x), _FAR)
+    t = np.minimum(np.abs(x), FAR)
     p, q, a, b = fit.tolist()
     total = (a[0] + b[0] * t) / ((t + p[0]) * t + q[0])
     total += (a[1] + b[1] * t) / ((t + p[1]) * t + q[1])

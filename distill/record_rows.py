@@ -10,11 +10,11 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["Crossings", "LeafMoments"]
+__all__ = ["NO_VARIANCE", "Crossings", "LeafMoments"]
 
 Floats = NDArray[np.float64]
 
-_NO_VARIANCE: Final = 1e18  # noise ratio of a leaf whose value is sure
+NO_VARIANCE: Final = 1e18  # noise ratio of a leaf whose value is sure
 
 
 @dataclass(frozen=True)
@@ -43,8 +43,8 @@ class LeafMoments:
         if "mean" in belief:
             mean, var = np.array(belief["mean"]), np.asarray(belief["var"])
             noise = np.asarray(belief["noise_var"])
-            sure = var <= noise / _NO_VARIANCE
-            ratio = np.where(sure, _NO_VARIANCE, noise / np.where(sure, 1.0, var))
+            sure = var <= noise / NO_VARIANCE
+            ratio = np.where(sure, NO_VARIANCE, noise / np.where(sure, 1.0, var))
         else:
             ratio = belief["alpha"] + belief["beta"]
             span, share = belief["high"] - belief["low"], belief["alpha"] / ratio

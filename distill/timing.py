@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from distill import schema
 from distill.backup import Backup, backup_of
+from distill.backup_compiled import CompiledBackup
 from distill.backup_correlated import CorrelatedBackup
 from distill.beliefs import gaussian_var_update
 from distill.errors import InputError
@@ -193,16 +194,20 @@ def time_backup(
     """Time of what an agent spends to have record rows, on the same cases, as parts of a decision.
 
     "after one rollout" : the leaf's new belief taken in and the rows of all candidates read. "one path" :
-    the first half of that. "whole tree" : a backup made anew, with its rows. Correlated leaves have no
-    path: every leaf moves, so there all beliefs are taken in.
+    the first half of that. "whole tree" : a backup made anew, with its rows. "after one rollout, compiled" :
+    the same by `distill.backup_compiled`. Correlated leaves have no path: every leaf moves, so there all
+    beliefs are taken in; and nothing of it is compiled.
     """
-    kept = {id(case): backup_of(case.tree, horizon) for case in cases}
+    kept: dict[int, Backup | CorrelatedBackup] = {id(case): backup_of(case.tree, horizon) for case in cases}
+    fast = {} if correlated(cases) else {id(case): CompiledBackup(case.tree, horizon) for case in cases}
     turn = 0
 
-    def take_in(case: Decision) -> Backup | CorrelatedBackup:
+    def take_in(
+        case: Decision, backups: Mapping[int, Backup | CorrelatedBackup] = kept
+    ) -> Backup | CorrelatedBackup:
         nonlocal turn
         turn += 1
-        backup, tree = kept[id(case)], case.tree
+        backup, tree = backups[id(case)], case.tree
         if isinstance(backup, CorrelatedBackup):
             backup.update(np.asarray(tree.mean), np.asarray(tree.cov))
         else:
@@ -212,11 +217,15 @@ def time_backup(
         return backup
 
     path = "all beliefs" if correlated(cases) else "one path"
-    return {
+    found = {
         path: _timed(take_in, cases, calls, warm_up=5),
         "after one rollout": _timed(lambda case: take_in(case).rows(), cases, calls, warm_up=5),
         "whole tree": _timed(lambda case: backup_of(case.tree, horizon).rows(), cases, calls, warm_up=5),
     }
+    if fast:
+        name = "after one rollout, compiled"
+        found[name] = _timed(lambda case: take_in(case, fast).rows(), cases, calls, warm_up=5)
+    return found
 
 
 def correlated(cases: Sequence[Decision]) -> bool:

@@ -6,7 +6,7 @@ import math
 from typing import Any
 
 from distill.allocation import Search as Posterior
-from distill.backup import backup_of
+from distill.backup_compiled import fast_backup_of
 from distill.backup_correlated import CorrelatedBackup
 from distill.errors import InputError, RefusedError
 from distill.runtime import Scorer, Scores
@@ -31,7 +31,7 @@ class ScorerInputs:
             raise RefusedError("scorer: the file does not read such trees")
         self._scorer, self._plain = scorer, Scorer.closed_form()
         self._win_loss = tree.mean is None
-        self._backup = backup_of(tree, _horizon(scorer)) if scorer.kind is RECORD else None
+        self._backup = fast_backup_of(tree, _horizon(scorer)) if scorer.kind is RECORD else None
         self._fixed: dict[str, Any] = {}
         if self._backup is None:
             kept = ("low", "high") if self._win_loss else ("noise_var",)

@@ -55,15 +55,19 @@ def test_nothing_reaches_beyond_a_phone_or_a_desk(kind: str, tmp_path: Path) -> 
     (tmp_path / "frames.html").write_text(
         """<body><script>
         const found = [];
-        for (const width of [320, 390, 768, 1280]) {
+        for (const width of [320, 390, 768, 1024, 1280]) {
             const frame = document.createElement("iframe");
             frame.width = width; frame.height = 900; frame.src = "page.html";
             frame.onload = () => {
                 const page = frame.contentDocument;
                 const narrow = [...page.querySelectorAll("svg")].map(s => s.getBoundingClientRect().width);
-                found.push([width, page.documentElement.scrollWidth, narrow.length, Math.min(...narrow),
+                const edge = page.querySelector("main").getBoundingClientRect().right + 1;
+                const wide = [...page.querySelectorAll("table, .tiles div")].filter(
+                    e => e.scrollWidth > e.clientWidth + 1 || e.getBoundingClientRect().right > edge);
+                found.push([width, page.documentElement.scrollWidth, wide.map(e => e.textContent),
+                    narrow.length, Math.min(...narrow),
                     page.defaultView.performance.getEntriesByType("resource").length]);
-                if (found.length == 4) document.body.innerHTML = "<pre>" + JSON.stringify(found) + "</pre>";
+                if (found.length == 5) document.body.innerHTML = "<pre>" + JSON.stringify(found) + "</pre>";
             };
             document.body.append(frame);
         }
@@ -73,9 +77,10 @@ def test_nothing_reaches_beyond_a_phone_or_a_desk(kind: str, tmp_path: Path) -> 
     found = re.search(r"<pre>(.*?)</pre>", dom)
     assert found is not None, dom[-2000:]
     measured = json.loads(found[1])
-    assert sorted(row[0] for row in measured) == [320, 390, 768, 1280]
-    for width, reach, pictured, narrowest, requests in measured:
+    assert sorted(row[0] for row in measured) == [320, 390, 768, 1024, 1280]
+    for width, reach, wide, pictured, narrowest, requests in measured:
         assert reach <= width
+        assert wide == [], width
         assert pictured >= {"look": 2, "audit": 3}.get(kind, 8)
         assert narrowest > 250
         assert requests == 0

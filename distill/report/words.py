@@ -191,6 +191,7 @@ td{overflow-wrap:anywhere}
 @media (max-width:42rem){
  h1{font-size:1.4rem}
  .tiles{grid-template-columns:repeat(2,minmax(0,1fr))}
+ .interval{white-space:normal}
  .tiles div{padding:.6rem .75rem}
  .tiles strong{font-size:1.25rem}
  thead{position:absolute;width:1px;height:1px;overflow:hidden;clip-path:inset(50%)}

@@ -207,6 +207,9 @@ def test_many_trees_in_one_call_each_at_its_own_horizon(scorer):
         alone = scorer.score(**part)
         np.testing.assert_array_equal(got.voc[12 * i : 12 * (i + 1)], alone.voc)
         assert got.pick[i] == alone.pick
+    number = np.repeat(np.arange(4), 12)
+    one_for_all = scorer.score(**{**whole, "horizon": 4.0}, tree=number)
+    np.testing.assert_array_equal(one_for_all.voc[:12], scorer.score(**{**parts[0], "horizon": 4}).voc)
     with pytest.raises(InputError, match=r"horizon: must have shape \(48,\)"):
         scorer.score(**{**whole, "horizon": np.zeros(3)}, tree=np.repeat(np.arange(4), 12))
 

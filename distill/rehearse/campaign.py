@@ -147,6 +147,8 @@ def _checked(campaign: Campaign) -> dict[str, str]:
 
 def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple[str, Results]:
     """One problem under all budgets."""
+    if os.getpid() != starter:
+        _end_with(starter)
     problem = Remembered(make_problem(name))
     tree = problem.draw(TUNING_SEED).tree
     out = Results(campaign, kinds={name: _kind(tree)})
@@ -156,10 +158,6 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
         return _unreadable(campaign, text, tree) is None and _refused(make_policy(text), tree) is None
 
     for text in campaign.budgets_of(name):
-        if os.getpid() != starter != os.getppid():
-            os._exit(
-                1
-            )  # whoever started this process is gone: nobody waits, and a resumed run wants the core
         budget = Budget.parse(text)
         rollouts = budget.room(0, 0.0)
         if rollouts not in tuned:
@@ -179,6 +177,18 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
         out.cells.extend(rehearse([problem], policies, [budget], where, seeds=seeds, first_seed=_FIRST_SEED))
         write_atomic(_place(folder, name, text).with_suffix(".done"), b"")
     return name, out
+
+
+@lru_cache(maxsize=1)
+def _end_with(starter: int) -> None:
+    """End this worker as soon as whoever started it is gone: a resumed run wants the core for itself."""
+
+    def watch() -> None:
+        while os.getppid() == starter:
+            time.sleep(_LOOK_SECONDS)
+        os._exit(1)
+
+    threading.Thread(target=watch, daemon=True).start()
 
 
 # --- who plays where -------------------------------------------------------------------------------

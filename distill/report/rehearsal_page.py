@@ -211,14 +211,20 @@ def _figures(cells: Sequence[Figures]) -> Iterator[ET.Element]:
     places: dict[str, dict[str, Sequence[Child]]] = {}
     for c in cells:
         regret = {"value": c["measured"], **c["interval"]}
-        rest = [c["regret"], c["regret_by_mean"], c["rollouts"], c["choosing_us"]]
-        shares = [_percent(c[key]) for key in ("choosing_share", "fallback_share")]
+        acted = _two(number(c["regret"]), number(c["regret_by_mean"]), " by mean")
+        choosing = _two(_percent(c["choosing_share"]), number(c["choosing_us"]), " µs a rollout")
+        rest: list[Child] = [acted, number(c["rollouts"]), choosing, _percent(c["fallback_share"])]
         place = places.setdefault(f"{c['problem']}, {c['budget']}", {})
-        place[c["policy"]] = [estimate(regret), *_ratios(c), *map(number, rest), *shares]
-    head = ["regret", "by the action", "by mean", "rollouts", "choosing, µs a rollout", "time choosing"]
+        place[c["policy"]] = [estimate(regret), *_ratios(c), *rest]
+    head = ["regret, expected where known", *_TO, "regret", "rollouts", "time choosing", "fell back"]
     for title, rows in places.items():
         yield element("h3", title)
-        yield table([head[0], *_TO, *head[1:], "fell back"], rows)
+        yield element("div", table(head, rows), style="overflow-x:auto")
+
+
+def _two(first: Child, second: Child, unit: str) -> ET.Element:
+    """A figure, and below it another that says the same in its own way."""
+    return element("span", first, element("span", second, unit, class_="interval"))
 
 
 def _left_out(left_out: Sequence[Figures]) -> ET.Element:

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import json
 import os
+import shutil
 import time
 from collections.abc import Callable, Mapping
 from pathlib import Path
@@ -195,6 +196,8 @@ def _side_by_side(out: Path, trees: int, report: Callable[..., None]) -> dict[st
 def _rehearse(out: Path, trees: int, report: Callable[..., None]) -> dict[str, Any]:
     """Small cells, so wide intervals: the full grid is the rehearse command's."""
     del trees
+    if (out / "rehearsal" / "campaign.json").is_file():
+        shutil.rmtree(out / "rehearsal")  # an earlier tour's, played with another scorer
     summary = plans.quick([out / "scorer-fast.onnx"], out / "rehearsal")
     write_rehearsal_page(summary, out / "rehearsal" / "rehearsal.html")
     report(

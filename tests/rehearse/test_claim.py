@@ -9,8 +9,10 @@ from pathlib import Path
 
 import pytest
 
+from distill import tour
 from distill.cli import run as command_line
 from distill.errors import DistillError, InputError
+from distill.rehearse import plans
 from distill.rehearse.campaign import Campaign, run
 from distill.rehearse.policy_specs import make_policy, scorer_file
 from distill.rehearse.results import write_results
@@ -87,3 +89,19 @@ def test_a_path_may_hold_colons_and_equal_signs(tmp_path: Path) -> None:
     for text in ("scorer", "scorer:", "scorer:spread=4"):
         with pytest.raises(InputError, match="must name a file"):
             make_policy(text)
+
+
+def test_a_tour_again_rehearses_its_new_scorer(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """The fast scorer of a tour is chosen by measured time, so the next tour's may be another file."""
+    tiny = replace(plans.plan("quick"), problems=TINY.problems, budgets=("0.4ms@100us",), seeds=2)
+
+    def quick_plan(*_: object, scorers: list[str], **__: object) -> Campaign:
+        return replace(tiny, policies=(*TINY.policies, *(f"scorer:{file}" for file in scorers)))
+
+    monkeypatch.setattr(plans, "plan", quick_plan)
+    shas = []
+    for model in ("cold-store-fast.onnx", "cold-store.onnx"):
+        shutil.copy(MODELS / model, tmp_path / "scorer-fast.onnx")
+        tour._rehearse(tmp_path, 0, lambda *_: None)
+        shas.append(json.loads((tmp_path / "rehearsal" / "summary.json").read_text())["scorers"][0]["sha256"])
+    assert len(set(shas)) == 2

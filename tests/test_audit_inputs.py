@@ -92,7 +92,9 @@ class Case:
 def made(folder: Path, text: bytes, name: str, move: Callable[[BeliefTree], BeliefTree]) -> Case:
     family = parse_family(text)
     generate(family, folder / "data", trees=120, seed=1)
-    train(folder / "data", folder / "trained", recipes=["boosting 25x8"], n_boot=100)
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr("distill.train._EXACT_SECONDS", 0.5)  # three calls of dear methods are enough here
+        train(folder / "data", folder / "trained", recipes=["boosting 25x8"], n_boot=100)
     ship(folder / "trained", folder / "scorer.onnx")
     trees = [draw(family, 77, i) for i in range(100)]
     write_trees(folder / "matching.jsonl.gz", trees)

@@ -53,11 +53,12 @@ _PLANS: Final = {
         dearest=0.045,
     ),
 }
-# How scorer files are used: the closed form chooses where little is at stake, or until few rollouts are left;
-# scoring takes at most a quarter of a rollout's time. In the full plan the first file of each kind of inputs
-# is played in both ways, and in the second with a tuned prior, and stopping early; others with a tuned prior.
-_USE: Final = ":settled=0.001:share=0.25"
-_LATE: Final = ":late=1:share=0.25"
+# How scorer files are used: in turns with the closed form, then alone for the last half rollout a leaf; or
+# after the closed form, alone for the last two rollouts a leaf; never where a scoring takes over a fifth of
+# a rollout's time. In the full plan the first file of each kind of inputs is played in both ways, and in the
+# first with a tuned prior, and stopping early; others with a tuned prior.
+_USE: Final = ":late=0.5:every=2:share=0.2"
+_LATE: Final = ":late=2:share=0.2"
 _TUNED_USES: Final = (":prior=auto", ":stop=auto")
 
 
@@ -90,8 +91,8 @@ def plan(
         uses = ["", _USE]
         if full:
             kind = Scorer.load(file).kind
-            first = [_USE, _LATE, *(_LATE + x for x in _TUNED_USES)]
-            uses = [f"{_LATE}:prior=auto"] if kind in inputs else first
+            first = [_USE, _LATE, *(_USE + x for x in _TUNED_USES)]
+            uses = [f"{_USE}:prior=auto"] if kind in inputs else first
             inputs.add(kind)
         chosen += tuple(f"scorer:{file}{use}" for use in uses)
     return Campaign(

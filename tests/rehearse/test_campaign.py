@@ -257,7 +257,7 @@ def test_plans_know_the_scorers_uses():
     campaign = plan("quick", scorers=[FAST])
     assert [p for p in campaign.policies if p.startswith("scorer:")] == [
         f"scorer:{FAST}",
-        f"scorer:{FAST}:settled=0.001:share=0.25",
+        f"scorer:{FAST}:late=0.5:every=2:share=0.2",
     ]
     full = plan("full", scorers=[FAST, FAST.replace("-fast", "")])
     assert full.seeds >= 400

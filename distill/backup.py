@@ -41,6 +41,7 @@ __all__ = [
     "FAR",
     "FAR_MOVE",
     "LEAST",
+    "LEAST_THETA",
     "Backup",
     "Moments",
     "backup_of",
@@ -51,6 +52,7 @@ CELLS: Final = 24
 BELOW, ABOVE = 7.0, 4.5  # the table spans the largest m - 7 s to the largest m + 4.5 s
 LEAST: Final = 1e-300
 FAR_MOVE: Final = 1e9  # standard deviations
+LEAST_THETA: Final = 1e-150  # sds are taken as no less, so that moves over them stay in range
 FAR: Final = 1e150  # mean of the siblings of an only child, below every utility that a tree may hold
 
 
@@ -298,7 +300,7 @@ class Backup:
                 k = c[chosen]
                 mean = self._reward[k] + gain[chosen] * self.mean[k]
                 theta = np.sqrt(np.square(gain[chosen]) * self.var[k] + self._others_var[k])
-                theta = np.maximum(theta, 1e-14 * np.abs(mean) + LEAST)
+                theta = np.maximum(theta, 1e-14 * np.abs(mean) + LEAST_THETA)
                 target = self.mean[p[chosen]] + m[chosen]
                 x = inverse_gain((target - self._others[k]) / theta)
                 at = (mean - self._others[k]) / theta

@@ -21,13 +21,12 @@ The formulas are those of `distill.backup.Backup`, in the same order, so that re
 from __future__ import annotations
 
 import math
-from typing import Final
 
 import numpy as np
 
 from distill.backup import ABOVE as SDS_ABOVE
 from distill.backup import BELOW as SDS_BELOW
-from distill.backup import CELLS, FAR, FAR_MOVE, LEAST
+from distill.backup import CELLS, FAR, FAR_MOVE, LEAST, LEAST_THETA
 from distill.kernels import compiled
 from distill.normal_fits_compiled import inverse_gain, norm_cdf, norm_cdf_pdf, norm_pdf, unit_gain
 from distill.record_rows import NO_VARIANCE
@@ -40,7 +39,6 @@ __all__ = [
 MEAN, VAR, OTHERS, OTHERS_VAR, GAIN, REWARD, MOVE, SLOPE, NOW, BEND = range(10)
 ABOVE, FIRST, LAST, IS_MAX, LEAF_NODE = range(5)
 SD, RATIO, MOST = range(3)
-_THETA: Final = 1e-14  # of the mean: theta below that is rounding
 
 
 @compiled
@@ -199,7 +197,7 @@ def pass_down(actions, order, node, link):  # type: ignore[no-untyped-def]
         others = node[OTHERS, c]
         if link[IS_MAX, p] and others > -FAR:
             theta = math.sqrt(gain * gain * node[VAR, c] + node[OTHERS_VAR, c])
-            theta = max(theta, _THETA * abs(mean) + LEAST)
+            theta = max(theta, 1e-14 * abs(mean) + LEAST_THETA)
             target = node[MEAN, p] + move
             x = inverse_gain((target - others) / theta)
             at = (mean - others) / theta

@@ -26,6 +26,7 @@ CLOSED_FORM_RATE = 5e-3  # the runtime's fallback: best batch by a fit that cost
 LOSS_FIT = 2e-7  # f(-z) of that fallback: a rational fit within 1.2e-7
 BACKUP_MOMENTS = 0.03  # of scale: an agent's backup takes every node as normal, also a maximum under another
 BACKUP_FIT = 5e-3  # of a share from 0 to 1: siblings' maximum taken as normal, 24 cells
+BACKUP_COMPILED = 1e-9  # two libraries' exp and log: tails to x = -37 magnify roundings by x^2, levels add up
 BETA_CDF = 5e-3  # of a beta distribution in the features: a normal form in float32, counts from 1/2 up
 BETA_TABLE = 0.02  # of a support of size 1: 16 cells for narrow beliefs beside wide ones; a start, no result
 ONNX_ELSEWHERE = 1e-4  # relative: another processor or WebAssembly rounds sums of float32 otherwise

@@ -37,6 +37,8 @@ __all__ = ["Campaign", "Results", "run"]
 
 _FIRST_SEED: Final = 10_000  # those before were looked at while policies were made
 _SCORER: Final = "scorer:"  # how the texts of policies that use a file begin
+_TRIES: Final = 8  # choices that are timed before a policy is left out as too slow,
+_TRIED_SECONDS: Final = 0.5  # unless they take so long
 _LOOK_SECONDS: Final = 1.0  # how often finished places are counted
 
 
@@ -218,12 +220,14 @@ def _why_not(campaign: Campaign, problem: str, text: str, tree: BeliefTree, budg
     if (reason := _unreadable(campaign, text, tree)) is not None:
         return reason
     policy = make_policy(text)
+    most = campaign.slowest / max(budget.room(0, 0.0), 1) if budget.seconds is None else budget.seconds
     try:
-        _one_choice(policy, tree)  # what is used for the first time takes longer
-        seconds = _one_choice(policy, tree)
+        tried = [_one_choice(policy, tree)]  # what is used for the first time takes longer
+        while len(tried) < 2 or (min(tried) > most and len(tried) < _TRIES and sum(tried) < _TRIED_SECONDS):
+            tried.append(_one_choice(policy, tree))  # again, lest a busy moment of the machine decides
     except RefusedError as e:
         return str(e)
-    most = campaign.slowest / max(budget.room(0, 0.0), 1) if budget.seconds is None else budget.seconds
+    seconds = min(tried)
     if seconds > most:
         return f"one choice takes {seconds * 1e3:.1f} ms"
     if budget.seconds is None or campaign.dearest is None or not text.startswith("exact-"):

@@ -22,7 +22,7 @@ _NONE: Final = "-"
 def aims_table(summary: Figures) -> list[str]:
     """How often each scorer reached its aims, as Markdown lines."""
     lines = [
-        "| scorer | against | cells | at most | reached | never above | above | below 1 for sure | above |"
+        "| scorer | against | cells | at most | reached | never above | above | surely < 1 | surely > 1 |"
     ]
     lines.append("| --- | --- | --- | --- | --- | --- | --- | --- | --- |")
     for policy, groups in summary["aims"].items():

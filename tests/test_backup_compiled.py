@@ -99,7 +99,7 @@ def assert_same_passes(found: Backup, expected: Backup) -> None:
     """Each pass by itself, from the same numbers.
 
     Move, slope and bend follow (target - others) / theta. Where sds are far below the means beside them, or a
-    crossing is far out in the tail of the siblings' maximum, a rounding of a mean is a large part of that, and
+    crossing is far in the tail of the siblings' maximum, a rounding of a mean is a large part of that, and
     whole rows may differ. The moments still agree within roundings of what goes into them, and from the same
     moments the pass down gives the same rows.
     """

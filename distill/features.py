@@ -28,13 +28,8 @@ Nothing changes the choice where y <= 0: the siblings alone beat the rival.
 which is right in its exponent however small it is; the learner sees what is left, a factor near 1.
 Where a fixed batch is asked for, it stands for k, and its whole value is meant.
 
-*Other horizons.* For h = 0, means are what they will be: the rival of a leaf is the best other leaf, and
-the start is exact but for the fit of f. For finite h the table holds M_h, of variance v^2 / (v + n / h).
-An action that is best also gains by being known better after k + h rollouts than after h,
-
-    theta_k f(p) - theta_0 f(p) ~ phi((m - mu) / theta_k) (theta_k - theta_0) / k
-
-which is added to the start; where siblings alone beat the rival, the threshold is theirs, mu - m.
+*Static values.* For h = 0, means are what they will be: the rival of a leaf is the best other leaf, and the
+start is exact but for the fit of f. Finite horizons have a module of their own.
 
 onnxruntime takes about 0.3 microseconds a node whatever 64 leaves hold, so every node was weighed.
 Differences are taken in double precision; only unit-free numbers are rounded to float32.
@@ -49,6 +44,7 @@ import numpy as np
 import onnx
 from onnx import TensorProto
 
+from distill import features_any_horizon
 from distill.feature_nodes import LARGE, TINY, Start, best_other, midpoints, moments, threshold_shift
 from distill.onnx_nodes import Nodes
 from distill.scorer_inputs import LEAF_TABLE
@@ -61,11 +57,6 @@ FEATURE_NAMES: Final = (
     "step",  # s_k / theta
 )
 _STATIC_NAMES: Final = ("threshold", "step")
-_FINITE_NAMES: Final = (
-    *FEATURE_NAMES,
-    "above_siblings",  # (m - mu) / theta_k, cut at +-40
-    "lead",  # of the action over its best rival, in theta, cut at +-40
-)
 
 _BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s
 _PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
@@ -78,8 +69,11 @@ def build_graph(*, points: int = 12, horizon: float = math.inf, batch: int | Non
     Inputs, shape (n,) unless said: mean, var, noise_var, gain, offset, cost (double), action (int64,
     0 to n - 1), remaining (double, scalar). Outputs as in FeatureMatrix, named features, unit,
     first_order, batch. points : cells of the table. horizon, batch : of the value that is learned; None
-    is the rate. `static` features have no table: see `_static`.
+    is the rate. Static features have no table: see `_static`; those of finite horizons are made by
+    `features_any_horizon`.
     """
+    if 0 < horizon < math.inf:
+        return features_any_horizon.build_graph(points=points, batch=batch, horizon=horizon)
     g = Nodes("f")
     # Leaves as the root sees them. From the table on, values are rows, shape (1, n).
     m = g("Add", g("Mul", "gain", "mean"), "offset")
@@ -90,37 +84,17 @@ def build_graph(*, points: int = 12, horizon: float = math.inf, batch: int | Non
     g("And", action, g("Greater", "noise_ratio", g.double(0.0)), out="valid")
     if horizon == 0:
         return _static(g, m, s, noise, batch)
-    known = v if math.isinf(horizon) else _learned(g, v, noise, horizon)
-    value, others, spread2 = moments(g, *_table(g, m, s if known == v else g("Sqrt", known), points), points)
+    value, others, spread2 = moments(g, *_table(g, m, s, points), points)
 
     # Threshold t0.
     rival = best_other(g, value)
-    theta = g("Sqrt", g("Add", spread2, known))
+    theta = g("Sqrt", g("Add", spread2, v))
     y = g("Div", g("Sub", rival, others), theta)
     shift, slope, help_ = threshold_shift(g, y, theta)
     t0 = g("Add", g("Sub", rival, m), shift, out="t0")
-
-    if math.isinf(horizon):
-        start = Start(g, t0, s, noise, batch, rough=True)
-        value = start.value(slope)
-        return start.model(value, (start.z, help_, g("Div", start.s_k, theta)), FEATURE_NAMES, LEAF_TABLE)
-
-    alone = g("LessOrEqual", y, g.double(0.0))
-    above = g("Sub", m, others)
-    start = Start(g, g("Where", alone, g("Sub", g.double(0.0), above), t0), s, noise, batch, rough=True)
-    later = _learned(g, v, noise, horizon, start.k)
-    theta_k = g("Sqrt", g("Add", spread2, later))
-    above = start.cut(g("Div", above, theta_k))
-    own = g("Exp", g("Mul", g("Mul", above, above), g.double(-0.5)))
-    own = g("Mul", g("Mul", own, g("Sub", theta_k, theta)), g.double(1 / math.sqrt(2 * math.pi)))
-    lead = start.cut(g("Div", g("Sub", value, rival), theta))
-    own = g("Where", g("GreaterOrEqual", lead, g.double(0.0)), own, g.double(0.0))
-    if batch is None:
-        own = g("Div", own, g("Max", start.k, g.double(1.0)))
-    total = g("Add", start.value(slope), g("Max", own, g.double(0.0)))
-    return start.model(
-        total, (start.z, help_, g("Div", start.s_k, theta), above, lead), _FINITE_NAMES, LEAF_TABLE
-    )
+    start = Start(g, t0, s, noise, batch, rough=True)
+    columns = (start.z, help_, g("Div", start.s_k, theta))
+    return start.model(start.value(slope), columns, FEATURE_NAMES, LEAF_TABLE)
 
 
 def _static(g: Nodes, m: str, s: str, noise: str, batch: int | None) -> onnx.ModelProto:
@@ -135,12 +109,6 @@ def _static(g: Nodes, m: str, s: str, noise: str, batch: int | None) -> onnx.Mod
     row = g("Unsqueeze", g("Sub", rival, m), g.whole(0))
     start = Start(g, row, s, noise, batch)
     return start.model(start.value(None), (start.z, g("Div", start.s_k, s)), _STATIC_NAMES, LEAF_TABLE)
-
-
-def _learned(g: Nodes, v: str, noise: str, horizon: float, k: str | None = None) -> str:
-    """Variance of M_h, or of M_(k + h): v^2 / (v + n / h); shape of v, or of k."""
-    h = g.double(horizon) if k is None else g("Add", k, g.double(horizon))
-    return g("Mul", v, g("Div", h, g("Add", noise, h)))
 
 
 def _table(g: Nodes, m: str, s: str, points: int) -> tuple[str, str, str, str]:

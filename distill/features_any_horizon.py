@@ -1,4 +1,4 @@
-"""The features of the Gaussian leaf table where each call brings its own horizon; floor 4.
+"""The features of the Gaussian leaf table at any horizon, one for all calls or each call's own; floor 4.
 
 As `features` says it, with the horizon h a number of the call: 0, finite and infinite in one graph.
 
@@ -29,7 +29,7 @@ from onnx import TensorProto
 
 from distill.feature_nodes import LARGE, TINY, Start, midpoints, moments, threshold_shift
 from distill.onnx_nodes import Nodes
-from distill.scorer_inputs import ANY_HORIZON
+from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE
 
 __all__ = ["FEATURE_NAMES", "build_graph"]
 
@@ -49,14 +49,21 @@ _SURE: Final = 0.999  # mean of R over the table, from which the siblings lie be
 _BOTTOM: Final = tuple(np.sqrt(2 * np.pi) * np.array([1.0, 0.93642524, 0.92409791]))  # b, see `loss`
 
 
-def build_graph(*, points: int = 16, batch: int | None = None) -> onnx.ModelProto:
+def build_graph(
+    *, points: int = 16, batch: int | None = None, horizon: float | None = None
+) -> onnx.ModelProto:
     """The feature graph of the Gaussian leaf table and a horizon, one tree a call.
 
-    Inputs and outputs as for `features.build_graph`, and the input horizon (double, scalar, from 0 to
-    infinity). points : cells of the table. batch : of the value that is learned; None is the rate.
+    Inputs and outputs as for `features.build_graph`; with horizon None an input of its own brings it (double,
+    scalar, from 0 to infinity). points : cells of the table. batch : of the value that is learned; None is
+    the rate.
     """
     g = Nodes("f")
-    h = g("Clip", "horizon", g.scalar(TINY), g.scalar(LARGE))
+    if horizon is None:
+        h = g("Clip", "horizon", g.scalar(TINY), g.scalar(LARGE))
+    else:
+        h = g.double(min(max(horizon, TINY), LARGE))
+    kind = ANY_HORIZON if horizon is None else LEAF_TABLE
     m = g("Add", g("Mul", "gain", "mean"), "offset")
     v = g("Max", g("Mul", "var", g("Mul", "gain", "gain")), g.double(TINY))
     noise = g("Div", "noise_var", "var", out="noise_ratio")
@@ -98,7 +105,7 @@ def build_graph(*, points: int = 16, batch: int | None = None) -> onnx.ModelProt
     columns = (
         start.z, help_, g("Div", start.s_k, theta_k), above, lead, g("Div", theta, theta_k),
     )  # fmt: skip
-    return start.model(g("Max", start.value(slope), own), columns, FEATURE_NAMES, ANY_HORIZON)
+    return start.model(g("Max", start.value(slope), own), columns, FEATURE_NAMES, kind)
 
 
 def _learned(g: Nodes, v: str, noise: str, h: str) -> str:

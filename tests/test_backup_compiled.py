@@ -11,6 +11,7 @@ import math
 import subprocess
 import sys
 import time
+import tomllib
 from pathlib import Path
 from typing import Any
 
@@ -29,7 +30,8 @@ from distill.errors import InputError, RefusedError
 from distill.family import draw, load_family
 from distill.tree import BeliefTree
 
-FAMILIES = Path(__file__).parents[1] / "datasets" / "families"
+ROOT = Path(__file__).parents[1]
+FAMILIES = ROOT / "datasets" / "families"
 HORIZONS = (math.inf, 0.0, 7.0)
 INDEPENDENT = {
     name: load_family(FAMILIES / f"{name}.toml") for name in ("cold-store", "crossing-traffic", "on-time")
@@ -281,6 +283,11 @@ def test_the_definition_needs_no_compiler():
     code = "import sys; sys.modules['numba'] = None; import distill.backup, distill.record_rows"
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=False)
     assert done.returncode == 0, done.stderr
+
+
+def test_the_extra_for_it_asks_for_the_numba_of_the_heavy_side():
+    extras = tomllib.loads((ROOT / "pyproject.toml").read_text())["project"]["optional-dependencies"]
+    assert [x for x in extras["train"] if x.startswith("numba")] == extras["fast"]
 
 
 def test_it_takes_a_small_part_of_the_time():

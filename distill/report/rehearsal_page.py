@@ -172,7 +172,7 @@ def _by_kind(kinds: Sequence[Figures]) -> ET.Element:
         ]
         for k in kinds
     }  # fmt: skip
-    return table(["cells", "best scorer to the closed form", "to the better sampling", "use", "why"], rows)
+    return _table(["cells", "best scorer to the closed form", "to the better sampling", "use", "why"], rows)
 
 
 def _aims(aims: Mapping[str, Mapping[str, Figures]]) -> ET.Element:
@@ -187,7 +187,7 @@ def _aims(aims: Mapping[str, Mapping[str, Figures]]) -> ET.Element:
         for group, c in groups.items()
     }
     head = ["timed cells, rollouts of 100 µs or more", "reached", "missed by much", "whole interval"]
-    return table(head, rows)
+    return _table(head, rows)
 
 
 def _best(best: Sequence[Figures], summary: Figures) -> ET.Element:
@@ -196,7 +196,7 @@ def _best(best: Sequence[Figures], summary: Figures) -> ET.Element:
         f"{r['problem']} {r['budget']}": [*_ratios(r), advice.get((r["problem"], r["budget"]), _NONE)]
         for r in best
     }
-    return table([*_TO, "use here"], rows)
+    return _table([*_TO, "use here"], rows)
 
 
 def _stopping(stopping: Sequence[Figures]) -> ET.Element:
@@ -204,7 +204,7 @@ def _stopping(stopping: Sequence[Figures]) -> ET.Element:
         f"{s['problem']} {s['budget']} {s['policy']}": [f"{text_of(100 * s['saved'])} %", _ratio(s)]
         for s in stopping
     }
-    return table(["rollouts saved", "regret over that without stopping"], rows)
+    return _table(["rollouts saved", "regret over that without stopping"], rows)
 
 
 def _figures(cells: Sequence[Figures]) -> Iterator[ET.Element]:
@@ -220,7 +220,12 @@ def _figures(cells: Sequence[Figures]) -> Iterator[ET.Element]:
     head = ["regret, expected where known", *_TO, "regret", "rollouts", "time choosing", "fell back"]
     for title, rows in places.items():
         yield element("h3", title)
-        yield element("div", table(head, rows), style="overflow-x:auto")
+        yield _table(head, rows)
+
+
+def _table(head: Sequence[str], rows: Mapping[str, Sequence[Child]]) -> ET.Element:
+    """A table that scrolls by itself where names and columns are wider than the screen."""
+    return element("div", table(head, rows), style="overflow-x:auto")
 
 
 def _two(first: Child, second: Child, unit: str) -> ET.Element:
@@ -239,7 +244,7 @@ def _left_out(left_out: Sequence[Figures]) -> ET.Element:
         name: ["; ".join(f"{problem} ({', '.join(budgets)})" for problem, budgets in problems.items())]
         for name, problems in found.items()
     }
-    return table(["where"], rows)
+    return _table(["where"], rows)
 
 
 def _ratios(row: Figures) -> list[Child]:

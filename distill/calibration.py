@@ -2,8 +2,9 @@
 
     voc_high = factor(x) voc,    factor(x) = exp of a high quantile of log(exact / voc) in the bin of x
 
-The bins are the leaves of one small regression tree over the features, grown on the rows of training
-(Breiman et al. 1984) to tell apart where scores are close from where they are not; the quantile of each
+The bins are the leaves of one small regression tree over the features and the leaf's standard deviation as a
+share of the largest of its belief tree, grown on the rows of training (Breiman et al. 1984) to tell apart
+where scores are close from where they are not: least so at leaves of little spread. The quantile of each
 is taken on trees that had no part in training (Mondrian conformal prediction: Vovk, Gammerman and Shafer
 2005, section 4.5). Candidates of one tree depend on each other, so the stated share is what new trees
 show on average, not a proof for each; `validate` measures it on trees that had no part in calibration.
@@ -30,11 +31,13 @@ from numpy.typing import NDArray
 from sklearn.tree import DecisionTreeRegressor
 
 from distill.errors import InputError
+from distill.metrics import Groups
 from distill.tree import Floats, Ints
 
-__all__ = ["COVERAGE", "UpperBound", "calibrated", "live"]
+__all__ = ["COVERAGE", "LEAST_SD", "UpperBound", "bin_columns", "calibrated", "live"]
 
 COVERAGE: Final = 0.95
+LEAST_SD: Final = 1e-300  # the largest spread of a tree counts as at least that
 _MOST_BINS: Final = 32
 _ROWS_A_BIN: Final = 300  # of calibration: a share of 5 % is then known to about 1 %
 _FEW_ROWS: Final = 100
@@ -82,6 +85,18 @@ class UpperBound:
         return {"coverage": self.coverage, "trees": self.trees, "candidates": self.candidates, "bins": bins}
 
 
+def bin_columns(x: NDArray[Any], leaf_sd: Floats, groups: Groups) -> Floats:
+    """What the bins are told by: the features of each row, and its spread as a share of its tree's largest.
+
+    x : (n, d). leaf_sd : (n,), >= 0, as in FeatureMatrix. Shape (n, d + 1).
+
+    >>> bin_columns(np.zeros((3, 1)), np.array([2.0, 1.0, 0.0]), Groups.of([0, 0, 1]))[:, 1].tolist()
+    [1.0, 0.5, 0.0]
+    """
+    largest = groups.spread(groups.highest(leaf_sd))
+    return np.column_stack([np.asarray(x, dtype=float), leaf_sd / np.maximum(largest, LEAST_SD)])
+
+
 def live(exact: Floats, voc: Floats) -> NDArray[np.bool_]:
     """Candidates that some bound could miss or that are scored above 0: not 0 in both."""
     return np.asarray((exact > 0) | (voc > 0))
@@ -99,9 +114,9 @@ def calibrated(
 ) -> UpperBound:
     """The bound for a scorer, from candidates of `trees` trees that had no part in its training.
 
-    x : (n, d) features as the scorer sees them. exact, voc : (n,), label and score, u a rollout.
-    training : the same three of rows of training, from which only the bins come. weight : (n,), of each
-    row, where trees were sampled with unequal chances. coverage : aimed at.
+    x : (n, d), by which the bins are told, see `bin_columns`. exact, voc : (n,), label and score, u a
+    rollout. training : the same three of rows of training, from which only the bins come. weight : (n,),
+    of each row, where trees were sampled with unequal chances. coverage : aimed at.
     Raises InputError for lengths that differ, no rows, or a share outside (0, 1).
     """
     for name, (rows, a, b) in {"calibration": (x, exact, voc), "training": training}.items():

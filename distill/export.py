@@ -26,12 +26,13 @@ from onnx import TensorProto, helper
 from sklearn.ensemble import HistGradientBoostingRegressor
 
 from distill import scorer_file
-from distill.calibration import UpperBound
+from distill.calibration import LEAST_SD, UpperBound, bin_columns
 from distill.converters import convert, folded, single_tree
 from distill.errors import ExportError
 from distill.feature_graph import FeatureGraph, FeatureMatrix
 from distill.feature_nodes import FEATURE_ROWS
 from distill.files import write_atomic
+from distill.metrics import Groups
 from distill.onnx_nodes import IR_VERSION, ML_OPSET, OPSET, Nodes, typed
 from distill.scorer_inputs import InputKind
 from distill.tree import Floats
@@ -92,8 +93,11 @@ def export_scorer(
     model = _assemble(feature_graph.model, converted, transform, limits, upper)
     session = _session(model)
     matrix = feature_graph.matrix(self_test_columns)
-    answers, cases = _answers(session, feature_graph.kind, feature_graph.table(self_test_columns))
-    _check_file(estimator, transform, limits, upper, matrix, answers)
+    table = feature_graph.table(self_test_columns)
+    answers, cases = _answers(session, feature_graph.kind, table)
+    sizes = [len(feed[feature_graph.kind.floats[0]]) for feed in table]
+    groups = Groups.of(np.repeat(np.arange(len(table)), sizes))
+    _check_file(estimator, transform, limits, upper, matrix, answers, groups)
     _set_metadata(model, feature_graph, transform, limits, upper, metadata, cases)
     onnx.checker.check_model(model, full_check=True)
     data: bytes = model.SerializeToString(deterministic=True)
@@ -145,8 +149,10 @@ def _assemble(
     else:
         t = tail("Clip", t, tail.scalar(-_LOG_RATIO_LIMIT), tail.scalar(_LOG_RATIO_LIMIT))
         tail("Mul", "first_order", tail("Exp", t), out="voc")
+    largest = tail("Max", tail("ReduceMax", "leaf_sd"), tail.double(LEAST_SD))
+    share = tail("Reshape", tail("Div", "leaf_sd", largest), tail.whole(-1, 1))
     tree = single_tree(upper.feature, upper.split, upper.left, upper.right, upper.factor)
-    factor = tail("TreeEnsemble", x, domain="ai.onnx.ml", **tree)
+    factor = tail("TreeEnsemble", tail("Concat", x, share, axis=1), domain="ai.onnx.ml", **tree)
     tail("Mul", "voc", tail("Reshape", factor, tail.whole(-1)), out="voc_high")
     net = tail("Sub", "voc", "cost")
     tail("ArgMax", net, axis=0, keepdims=0, out="pick")
@@ -246,6 +252,7 @@ def _check_file(
     upper: UpperBound,
     matrix: FeatureMatrix,
     answers: Mapping[str, NDArray[Any]],
+    groups: Groups,
 ) -> None:
     """The assembled file's `voc` against the estimator's through the transform, and `voc_high` above it."""
     x = np.clip(matrix.x, limits[:, 0], limits[:, 1])
@@ -263,7 +270,8 @@ def _check_file(
             f"the file gives {answers['voc'][row]!r} where the estimator gives {expected[row]!r} "
             f"on self-test row {row}"
         )
-    if np.any(answers["voc_high"] != answers["voc"] * upper.of(x)):
+    told_by = bin_columns(x, matrix.leaf_sd, groups)
+    if np.any(answers["voc_high"] != answers["voc"] * upper.of(told_by)):
         raise ExportError("the file's upper bounds differ from the calibrated ones on the self-test rows")
     if np.any(answers["batch"] != matrix.batch):
         raise ExportError("the file's batches differ from the feature graph's on the self-test rows")

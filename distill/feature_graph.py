@@ -58,12 +58,12 @@ class FeatureGraph:
         (whole numbers, equal ones side by side) says which rows belong together; without it all do.
         Raises InputError for a missing column, unequal lengths or a split tree.
         """
-        names = ["features", "unit", "first_order", "batch"]
+        names = ["features", "unit", "first_order", "batch", "leaf_sd"]
         parts = [self._session.run(names, feed) for feed in self.table(columns)]
         if not parts:
             none = np.empty(0)
             x = np.empty((0, len(self.names)), np.float32)
-            return FeatureMatrix(x, none, none, none.astype(np.int64))
+            return FeatureMatrix(x, none, none, none.astype(np.int64), none)
         return FeatureMatrix(*(np.concatenate(part) for part in zip(*parts, strict=True)))
 
     def table(self, columns: Mapping[str, Any]) -> list[dict[str, NDArray[Any]]]:

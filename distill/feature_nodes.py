@@ -40,13 +40,15 @@ class FeatureMatrix(NamedTuple):
 
     x : (n, d) float32, unit-free, columns as `FeatureGraph.names`. unit : (n,), u a rollout, the leaf's
     own s_k / k at the start value's best batch k, a real number; s_k for a fixed batch. first_order :
-    (n,), same unit, the start value. batch : (n,), k rounded.
+    (n,), same unit, the start value. batch : (n,), k rounded. leaf_sd : (n,), u, standard deviation that the
+    leaf contributes to the root; bounds are told by it, estimates are not.
     """
 
     x: NDArray[np.float32]
     unit: Floats
     first_order: Floats
     batch: NDArray[np.int64]
+    leaf_sd: Floats
 
 
 def threshold_shift(g: Nodes, y: str, theta: str) -> tuple[str, str, str]:
@@ -79,6 +81,7 @@ class Start:
         self, g: Nodes, t0: str, s: str, noise: str, batch: int | None, *, rough: bool = False
     ) -> None:
         self.g = g
+        self.s = s
         self.rate = batch is None
         if batch is not None:
             # "t0" gives the constant its shape.
@@ -112,7 +115,7 @@ class Start:
         """The graph with its outputs; `columns` are rows, shape (1, n)."""
         rows = self.g("Concat", *columns, axis=0)
         batch = self.g("Add", self.told, self.g.double(0.5))
-        return finished(self.g, kind, names, rows, self.unit, value, batch)
+        return finished(self.g, kind, names, rows, self.unit, value, batch, self.s)
 
 
 def moments(g: Nodes, low: str, high: str, joint: str, rest: str, points: int) -> tuple[str, str, str]:
@@ -189,17 +192,25 @@ def midpoints(points: int) -> Floats:
 
 
 def finished(
-    g: Nodes, kind: InputKind, names: tuple[str, ...], rows: str, unit: str, value: str, batch: str
+    g: Nodes,
+    kind: InputKind,
+    names: tuple[str, ...],
+    rows: str,
+    unit: str,
+    value: str,
+    batch: str,
+    leaf_sd: str,
 ) -> onnx.ModelProto:
     """The nodes as a model of one input kind.
 
     names : of the features. rows : double, shape (d, n), one row a feature: what is done to each feature
-    alone takes a third of the time on rows. unit, value, batch : double, n numbers in any shape; batch is
-    cut to a whole number.
+    alone takes a third of the time on rows. unit, value, batch, leaf_sd : double, n numbers in any shape;
+    batch is cut to a whole number.
     """
     flat = g.whole(-1)
     g("Reshape", unit, flat, out="unit")
     g("Reshape", value, flat, out="first_order")
+    g("Reshape", leaf_sd, flat, out="leaf_sd")
     g("Reshape", g("Cast", batch, to=TensorProto.INT64), flat, out="batch")
     g("Transpose", g("Cast", rows, to=TensorProto.FLOAT, out=FEATURE_ROWS), perm=[1, 0], out="features")
     inputs = [
@@ -212,6 +223,7 @@ def finished(
         typed("unit", TensorProto.DOUBLE, ["n"]),
         typed("first_order", TensorProto.DOUBLE, ["n"]),
         typed("batch", TensorProto.INT64, ["n"]),
+        typed("leaf_sd", TensorProto.DOUBLE, ["n"]),
     ]
     graph = helper.make_graph(g.nodes, "features", inputs, outputs, g.initializers)
     model = helper.make_model(graph, opset_imports=[helper.make_opsetid("", OPSET)], ir_version=IR_VERSION)

@@ -67,7 +67,7 @@ def build_graph(*, batch: int | None = None) -> onnx.ModelProto:
     valid = g("And", g("Greater", "noise_ratio", g.double(0.0)), g("GreaterOrEqual", "slope", g.double(0.0)))
     g("And", valid, g("GreaterOrEqual", "spread", g.double(0.0)), out="valid")
     rows = g("Concat", *columns, axis=0)
-    return finished(g, RECORD, FEATURE_NAMES, rows, unit, start, g("Add", k, g.double(0.5)))
+    return finished(g, RECORD, FEATURE_NAMES, rows, unit, start, g("Add", k, g.double(0.5)), "spread")
 
 
 def _cut(g: Nodes, x: str, limit: float) -> str:

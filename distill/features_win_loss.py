@@ -133,7 +133,8 @@ def build_graph(*, points: int = 16, horizon: float = math.inf, batch: int | Non
     least = g("Min", g("Min", "alpha", "beta"), g("Sub", "high", "low"))
     g("And", g("Greater", least, g.double(0.0)), g("GreaterOrEqual", "action", g.whole(0)), out="valid")
     whole = g("Add", whole, g.double(0.5))
-    return finished(g, WIN_LOSS_TABLE, names, features, g("Mul", unit, span), g("Mul", value, span), whole)
+    unit, value, leaf_sd = (g("Mul", x, span) for x in (unit, value, s))
+    return finished(g, WIN_LOSS_TABLE, names, features, unit, value, whole, leaf_sd)
 
 
 def _leaves(g: Nodes) -> _Leaves:

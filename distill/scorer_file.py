@@ -174,7 +174,8 @@ def _check_ensemble(node: Node, n_features: int) -> None:
     for name, value in (("aggregate_function", 1), ("post_transform", 0), ("n_targets", 1)):
         if a.get(name) != value:
             raise ScorerFileError(f"TreeEnsemble {name}: must be {value}")
-    inner = _column(a, "nodes_featureids", None, 0, n_features)
+    # Bounds are told by one more than the features; `scorer_shapes` knows the width that is there.
+    inner = _column(a, "nodes_featureids", None, 0, n_features + 1)
     n = len(inner)
     leaves = len(_column(a, "leaf_targetids", None, 0, 1))
     _column(a, "tree_roots", None, 0, n)

@@ -231,8 +231,12 @@ def _arg(node: Node, shapes: Shapes, _: Consts) -> Shape:
 
 
 def _ensemble(node: Node, shapes: Shapes, _: Consts) -> Shape:
+    """Every feature that a tree looks at must be a column of its input."""
     _arity(node, shapes, 1)
     if len(shapes[0]) != 2 or shapes[0][0] != _N:
+        raise ValueError
+    width = shapes[0][1]
+    if not isinstance(width, int) or np.max(node.attributes["nodes_featureids"]) >= width:
         raise ValueError
     return _N, 1
 

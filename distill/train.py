@@ -23,7 +23,7 @@ from numpy.typing import NDArray
 
 from distill import __version__
 from distill.break_even import break_even
-from distill.calibration import calibrated
+from distill.calibration import bin_columns, calibrated
 from distill.candidates import Candidates, Split, split_by_tree
 from distill.errors import InputError
 from distill.export import export_scorer, mapped_back
@@ -199,15 +199,16 @@ def _fit_and_export(
     seconds = time.perf_counter() - start
     ranges = _ranges(matrix.x)
 
-    def scored(m: FeatureMatrix, label: Floats) -> tuple[NDArray[np.float32], Floats, Floats]:
+    def scored(m: FeatureMatrix, rows: Candidates) -> tuple[Floats, Floats, Floats]:
         x = np.clip(m.x, ranges[:, 0], ranges[:, 1])
         t = np.asarray(learner.model_.predict(x), dtype=float)
-        return x, label, mapped_back(t, m.unit, m.first_order, learner.target)
+        voc = mapped_back(t, m.unit, m.first_order, learner.target)
+        return bin_columns(x, m.leaf_sd, rows.groups), rows.label, voc
 
     upper = calibrated(
-        *scored(choose, split.choose.label),
+        *scored(choose, split.choose),
         len(split.choose.groups.sizes),
-        training=scored(matrix, data.label),
+        training=scored(matrix, data),
         weight=split.choose.weight,
     )
     test = split.choose.of_trees(np.arange(len(split.choose.groups.sizes)) < _SELF_TEST_TREES)

@@ -300,9 +300,15 @@ def tree_cycle(m):
     ids[list(leafs).index(0)] = 0
 
 
-@hostile("must be from 0 to 2", "boosting")
+@hostile("must be from 0 to 3", "boosting")
 def feature_out_of_range(m):
     attribute(node_of(m, "TreeEnsemble"), "nodes_featureids").ints[0] = 10**9
+
+
+@hostile("inputs or attributes do not fit", "boosting")
+def feature_just_beyond_the_columns_there_are(m):
+    """The learner's ensemble has three columns; that of the bounds has a fourth."""
+    attribute(node_of(m, "TreeEnsemble"), "nodes_featureids").ints[0] = 3
 
 
 @hostile("must point to a node or leaf|must be from", "boosting")

@@ -52,8 +52,10 @@ def fitted(kind: str, transform: str = "log_ratio") -> Any:
 
 
 def upper_bound() -> UpperBound:
-    """Two bins, split at a threshold of 1."""
-    nodes = (np.array(x) for x in ([0, 0, 0], [1.0, 0, 0], [1, -1, -1], [2, -1, -1], [1.0, 1.25, 1.75]))
+    """Three bins, split at a threshold of 1, and below it at half the largest spread of the tree."""
+    children = [1, 3, -1, -1, -1], [2, 4, -1, -1, -1]
+    lists = [0, 3, 0, 0, 0], [1.0, 0.5, 0, 0, 0], *children, [1.0, 1.0, 1.75, 1.5, 1.25]
+    nodes = (np.array(x) for x in lists)
     return UpperBound(*nodes, coverage=0.95, trees=40, candidates=800)
 
 

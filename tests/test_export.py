@@ -19,11 +19,13 @@ from sklearn.neural_network import MLPRegressor
 from sklearn.pipeline import make_pipeline
 from sklearn.preprocessing import MinMaxScaler, StandardScaler
 
+from distill.calibration import bin_columns
 from distill.converters import convert, folded
 from distill.errors import ExportError
 from distill.export import TRANSFORMS, export_scorer, mapped_back, with_facts
 from distill.feature_graph import FeatureGraph
 from distill.features import build_graph
+from distill.metrics import Groups
 from distill.runtime import Scorer
 
 
@@ -163,8 +165,9 @@ def test_the_file_repeats_estimator_transform_and_decision(kind, transform):
         expected = mapped_back(learned, matrix.unit, matrix.first_order, transform)
         np.testing.assert_allclose(got.voc[inside], expected[inside], rtol=1e-4, atol=1e-30)
         np.testing.assert_array_equal(got.batch[inside], matrix.batch[inside])
-        clipped = np.clip(matrix.x, low, high)
-        np.testing.assert_array_equal(got.voc_high[inside], (got.voc * upper_bound().of(clipped))[inside])
+        one_tree = Groups.of(np.zeros(24, dtype=int))
+        told_by = bin_columns(np.clip(matrix.x, low, high), matrix.leaf_sd, one_tree)
+        np.testing.assert_array_equal(got.voc_high[inside], (got.voc * upper_bound().of(told_by))[inside])
         assert got.pick == int(np.argmax(got.voc - t["cost"]))
         assert got.worth_it == bool(np.max(got.voc - t["cost"]) > 0)
         assert scorer.pick(**t) == got.pick
@@ -205,7 +208,7 @@ def test_metadata_say_what_the_file_is():
     assert facts["format"] == "voc-scorer/2"
     assert facts["transform"] == "log_ratio"
     assert facts["features"] == list(graph().names)
-    assert facts["calibration"] == {"coverage": 0.95, "trees": 40, "candidates": 800, "bins": 2}
+    assert facts["calibration"] == {"coverage": 0.95, "trees": 40, "candidates": 800, "bins": 3}
     assert facts["about"] == {"recipe": "dense", "family": "rule"}
     assert facts["measured"] == {"p50_us": 41.5}
     ranges = np.array([facts["ranges"][name] for name in facts["features"]])

@@ -57,9 +57,6 @@ def _exact_horizon(h: float = 4.0, rate: bool = True, stop: float = 0.0) -> Poli
 
 def _scorer(
     file: str,
-    commit: float = 0.0,
-    spread: int = 1,
-    settled: float = 0.0,
     late: float = 0.0,
     every: int = 0,
     share: float = 0.0,
@@ -67,8 +64,8 @@ def _scorer(
     prior: float = 1.0,
     name: str = "",
 ) -> Policy:
-    options = {"commit": commit, "settled": settled, "late": late, "share": share, "stop": stop}
-    return _with_prior(ByScorer(file, spread=spread, every=every, name=name, **options), prior)
+    policy = ByScorer(file, late=late, every=every, share=share, stop=stop, name=name)
+    return _with_prior(policy, prior)
 
 
 # name -> maker; its parameters are the options.
@@ -92,8 +89,8 @@ def make_policy(text: str) -> Policy:
 
     >>> make_policy("uct:c=2").name, make_policy("thompson:prior=0.5").name
     ('uct-2', 'thompson-prior0.5')
-    >>> make_policy("scorer:models/cold-store-fast.onnx:spread=4").name
-    'cold-store-fast-spread4'
+    >>> make_policy("scorer:models/cold-store-fast.onnx:every=4").name
+    'cold-store-fast-every4'
     """
     name, *options = text.split(":")
     if name not in POLICIES:
@@ -119,8 +116,8 @@ def make_policy(text: str) -> Policy:
 def scorer_file(text: str) -> tuple[str, list[str]]:
     """File and options of a scorer policy's text. The path may hold colons, and even "=" where it exists.
 
-    >>> scorer_file("scorer:C:/models/a.onnx:spread=4:stop=auto")
-    ('C:/models/a.onnx', ['spread=4', 'stop=auto'])
+    >>> scorer_file("scorer:C:/models/a.onnx:every=4:stop=auto")
+    ('C:/models/a.onnx', ['every=4', 'stop=auto'])
     """
     file, options = text.partition(":")[2], list[str]()
     while ":" in file and "=" in file.rpartition(":")[2] and not Path(file).is_file():

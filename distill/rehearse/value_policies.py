@@ -20,7 +20,7 @@ from distill.tree import BeliefTree
 
 __all__ = ["ByScorer", "ByValue"]
 
-_REST: Final = 4  # rollouts by the static rate before a settled choice is looked at again
+_REST: Final = 4  # rollouts by the static rate before a choice worth nothing is looked at again
 _SURE: Final = 1e-20  # variance of a leaf that is known, as a share of the largest
 _LOOK: Final = 8  # rollouts by the static rate between looks at whether to stop
 
@@ -99,13 +99,6 @@ class ByScorer(_Thrifty):
     """Rollouts by a shipped scorer, from the arrays that an agent keeps anyway.
 
     scorer : a `distill.runtime.Scorer`, or the path of its file, which is then loaded at first use.
-    commit : share of the batch that the rate assumes which is spent before scoring again; 0 is one
-        rollout at a time.
-    spread : how many leaves, best first, get a rollout each from one scoring, so that it is paid once.
-    settled : where all rollouts left would, at the best rate, add less than this share of the tree's
-        scale, the static rate chooses the next rollouts, 4 or `spread`. A value that looks at one leaf
-        at a time underrates what many leaves together can still change, the dynamic one most; the
-        static rate goes on telling leaves apart.
     late : the static rate chooses until this many rollouts an uncertain leaf are left. A value of one leaf
         takes the rest of the tree as it is, which is nearly true of the last rollouts and wrong of the
         first of many. 0 scores from the start. every : before those, every so-manyeth rollout is the
@@ -114,9 +107,9 @@ class ByScorer(_Thrifty):
         the static rate, which costs next to nothing, chooses: what a scoring gains and what its time would
         have bought both grow with the number of scorings, so that fewer of them do not pay either. The
         fastest scoring so far of as many leaves counts. 0 scores at any cost.
-    rollout_price, stop : as for `ByValue`; with `settled` or `late`, the static rate too must find rollouts
-        too dear. While the static rate chooses, every eighth rollout is preceded by a look.
-    Where the file says 0 of every leaf the static rate decides too. Its choices are marked.
+    rollout_price, stop : as for `ByValue`; with `late`, the static rate too must find rollouts too dear.
+        While the static rate chooses, every eighth rollout is preceded by a look.
+    Where the file says 0 of every leaf the static rate chooses the next 4 rollouts. Its choices are marked.
     """
 
     def __init__(
@@ -124,9 +117,6 @@ class ByScorer(_Thrifty):
         scorer: Scorer | str | Path,
         *,
         name: str = "",
-        commit: float = 0.0,
-        spread: int = 1,
-        settled: float = 0.0,
         late: float = 0.0,
         every: int = 0,
         share: float = 0.0,
@@ -134,28 +124,16 @@ class ByScorer(_Thrifty):
         stop: float = 0.0,
     ) -> None:
         super().__init__(rollout_price, stop)
-        if not 0 <= commit <= 1:
-            raise InputError("commit", "must be from 0 to 1", commit)
-        if spread < 1:
-            raise InputError("spread", "must be at least 1", spread)
-        if not 0 <= settled < math.inf:
-            raise InputError("settled", "must be >= 0 and finite", settled)
         for what, value in (("late", late), ("every", every), ("share", share)):
             if not 0 <= value < math.inf:
                 raise InputError(what, "must be >= 0 and finite", value)
         self._path = None if isinstance(scorer, Scorer) else Path(scorer)
         self._scorer = scorer if isinstance(scorer, Scorer) else None
-        self.commit = commit
-        self.spread = spread
-        self.settled = settled
         self.late = late
         self.every = every
         self.share = share
         words = [name or (self._path.stem if self._path else "scorer")]
         if not name:
-            words += [f"commit{commit:g}"] if commit else []
-            words += [f"spread{spread}"] if spread > 1 else []
-            words += [f"settled{settled:g}"] if settled else []
             words += [f"late{late:g}"] if late else []
             words += [f"every{every}"] if every else []
             words += [f"share{share:g}"] if share else []
@@ -163,9 +141,7 @@ class ByScorer(_Thrifty):
         self.name = "-".join(words)
         self._inputs: ScorerInputs | None = None
         self._changed: set[int] = set()  # leaves whose rollouts the inputs have not taken in
-        self._scale = 0.0
         self._last = math.inf  # rollouts left from which on the scorer chooses
-        self._queue: list[int] = []
         self._resting = 0
         self._until_look = 0
         self._early = 0  # rollouts before the last ones
@@ -197,18 +173,15 @@ class ByScorer(_Thrifty):
 
     def begin(self, tree: BeliefTree) -> None:
         """A new decision; what the scorer reads is laid out when it is first asked."""
-        self._queue, self._resting, self._until_look, self._early = [], 0, 0, 0
+        self._resting = self._until_look = self._early = 0
         self._inputs, self._changed = None, set()
         self._set_price(tree)
-        self._scale = scale_of(tree)
         self._leaves = tree.n_leaves
         if self.late:
             self._last = self.late * _uncertain(tree)
 
     def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice | None:
-        """What an earlier scoring still has to give, else one call of the scorer."""
-        if self._queue:
-            return Choice(self._queue.pop())
+        """The scorer's choice where its turn is, else the static rate's."""
         if self._resting:
             self._resting -= 1
             return self._static(posterior, remaining, rng)
@@ -233,14 +206,10 @@ class ByScorer(_Thrifty):
             return None
         if not scores_now:
             return self._static(posterior, remaining, rng)
-        if not top > 0 or top * remaining < self.settled * self._scale:
-            self._resting = max(self.spread, _REST) - 1
+        if not top > 0:
+            self._resting = _REST - 1
             return self._static(posterior, remaining, rng)
-        if self.spread > 1:
-            few = np.argsort(scores.voc)[-self.spread :]
-            self._queue = few[scores.voc[few] > 0].tolist()
-            best = self._queue.pop()
-        return Choice(best, max(int(self.commit * scores.batch[best]), 1) if self.commit else 1)
+        return Choice(best)
 
     def _static(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice:
         """The static rate's choice."""
@@ -266,13 +235,9 @@ class ByScorer(_Thrifty):
         return inputs
 
     def _second_opinion(self, posterior: Posterior, remaining: int) -> float:
-        """The closed form's best value, which still tells leaves apart where a dynamic value says settled."""
+        """The closed form's best value, which still tells leaves apart where a dynamic one says nothing."""
         assert self._inputs is not None
-        return (
-            float(self._inputs.closed_form(posterior, remaining).voc.max())
-            if self.settled or self.late
-            else 0.0
-        )
+        return float(self._inputs.closed_form(posterior, remaining).voc.max()) if self.late else 0.0
 
     def observe(self, leaf: int, observed: float, rollouts: int) -> None:
         """The beliefs have taken the rollouts in already; what the scorer reads will when it is asked."""

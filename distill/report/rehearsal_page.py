@@ -46,11 +46,10 @@ _WORDS: Final = {
         "For either half of the decisions the scorer, file and use, that did best on the other half: the "
         "choice is not made on the decisions that it is judged by."
     ),
-    "late, every, share, settled, spread, commit": (
+    "late, every, share": (
         "How a scorer is used: the closed form chooses until so many rollouts a leaf are left; before that "
         "every so-manyeth rollout is the scorer's too; no scoring where one takes more than a share of a "
-        "rollout's time; below a share of the tree's scale the closed form chooses; the best few leaves get "
-        "a rollout each from one scoring; a share of the best batch is spent before scoring again."
+        "rollout's time."
     ),
     "fell back": "Share of a policy's choices that the closed form made in its place.",
 }  # fmt: skip

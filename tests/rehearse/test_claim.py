@@ -77,16 +77,16 @@ def test_a_path_may_hold_colons_and_equal_signs(tmp_path: Path) -> None:
     folder.mkdir()
     file = folder / "a:b=c.onnx"
     shutil.copy(FAST, file)
-    assert scorer_file(f"scorer:{file}:spread=4") == (str(file), ["spread=4"])
+    assert scorer_file(f"scorer:{file}:every=4") == (str(file), ["every=4"])
     assert scorer_file(f"scorer:{file}") == (str(file), [])
-    assert make_policy(f"scorer:{file}:spread=4").name == "a:b=c-spread4"
+    assert make_policy(f"scorer:{file}:every=4").name == "a:b=c-every4"
     summary = write_results(
         run(replace(TINY, policies=(f"scorer:{file}",)), tmp_path / "out"), tmp_path / "out"
     )
     assert [x["file"] for x in summary["scorers"]] == ["a:b=c.onnx"]
     with pytest.raises(DistillError, match="options of scorer are"):
         make_policy(f"scorer:{file}:bogus=1")
-    for text in ("scorer", "scorer:", "scorer:spread=4"):
+    for text in ("scorer", "scorer:", "scorer:every=4"):
         with pytest.raises(InputError, match="must name a file"):
             make_policy(text)
 

@@ -1,4 +1,4 @@
-"""Policies and luck: priors of their own, scorings that are shared, choices that are settled, early stops."""
+"""Policies and luck: priors of their own, scorings that are left out, late choices, early stops."""
 
 from __future__ import annotations
 
@@ -199,23 +199,11 @@ def choices(policy, n, remaining=50, problem=FOUR_LEAVES):
     return [policy.choose(posterior, remaining, rng) for _ in range(n)]
 
 
-def test_one_scoring_serves_the_best_leaves():
-    policy = fake([0.1, 0.4, 0.3, 0.2])(Scorer.closed_form(), spread=3)
-    assert [c.leaf for c in choices(policy, 6)] == [1, 2, 3, 1, 2, 3]
+def test_where_nothing_is_worth_a_rollout_the_static_rate_chooses_the_next_four():
+    policy = fake([0.0] * 4)(Scorer.closed_form())
+    assert all(c.fell_back for c in choices(policy, 8))
     assert policy.calls == 2
-
-
-def test_a_share_of_the_batch_is_committed():
-    assert choices(fake([0.1, 0.4])(Scorer.closed_form(), commit=0.5), 1)[0].rollouts == 4
-    assert choices(fake([0.1, 0.4])(Scorer.closed_form(), commit=0.01), 1)[0].rollouts == 1
-
-
-def test_settled_choices_go_to_the_static_rate():
-    """50 rollouts at 1e-6 each add 5e-5 of a scale of 1."""
-    settled = choices(fake([1e-6, 0.0, 0.0, 0.0])(Scorer.closed_form(), settled=1e-3), 8)
-    assert all(c.fell_back for c in settled)
-    assert not any(c.fell_back for c in choices(fake([1e-3, 0, 0, 0])(Scorer.closed_form(), settled=1e-3), 8))
-    assert all(c.fell_back for c in choices(fake([0.0] * 4)(Scorer.closed_form()), 8))
+    assert not any(c.fell_back for c in choices(fake([1e-9, 0, 0, 0])(Scorer.closed_form()), 8))
 
 
 def test_scorings_that_are_dear_beside_a_rollout_are_left_out():
@@ -281,8 +269,8 @@ def test_stops_are_in_units_of_the_scale():
     assert exact.name == "exact_static_rate-stop0.01"
 
 
-def test_a_settled_scorer_stops_when_the_closed_form_agrees():
-    fresh = fake([1e-6, 0, 0, 0])(Scorer.closed_form(), settled=1e-3, stop=1e-3)
+def test_a_scorer_beside_the_closed_form_stops_when_that_agrees():
+    fresh = fake([1e-6, 0, 0, 0])(Scorer.closed_form(), late=100.0, stop=1e-3)
     fresh_inputs = SimpleNamespace(
         score=fresh.answer,
         closed_form=lambda *_: SimpleNamespace(voc=np.array([0.5])),
@@ -291,7 +279,7 @@ def test_a_settled_scorer_stops_when_the_closed_form_agrees():
     tree = FOUR_LEAVES.draw(0).tree
     fresh.begin(tree)
     fresh._inputs = fresh_inputs
-    assert fresh.choose(Search(tree), 50, np.random.default_rng(0)).fell_back
+    assert fresh.choose(Search(tree), 50, np.random.default_rng(0)).leaf == 0
     fresh.begin(tree)
     fresh_inputs.closed_form = lambda *_: SimpleNamespace(voc=np.array([1e-4]))
     fresh._inputs = fresh_inputs
@@ -299,10 +287,10 @@ def test_a_settled_scorer_stops_when_the_closed_form_agrees():
 
 
 def test_a_scorer_by_path_travels_between_processes():
-    policy = make_policy(f"scorer:{FAST}:settled=0.01")
+    policy = make_policy(f"scorer:{FAST}:every=2")
     first = run(policy)
     again = pickle.loads(pickle.dumps(policy))  # what worker processes do
-    assert again.name == policy.name == "cold-store-fast-settled0.01"
+    assert again.name == policy.name == "cold-store-fast-every2"
     assert run(again).regret == first.regret
     with pytest.raises(InputError, match="scorer: must be given as a path"):
         pickle.dumps(ByScorer(Scorer.closed_form()))
@@ -333,9 +321,6 @@ def test_static_voc_is_the_knowledge_gradient():
     ("make", "message"),
     [
         (lambda: WithPrior(ByRule("thompson"), 0.0), "width: must be above 0 and finite"),
-        (lambda: ByScorer(FAST, commit=2.0), "commit: must be from 0 to 1"),
-        (lambda: ByScorer(FAST, spread=0), "spread: must be at least 1"),
-        (lambda: ByScorer(FAST, settled=-1.0), "settled: must be >= 0"),
         (lambda: ByScorer(FAST, every=-1), "every: must be >= 0"),
         (lambda: ByScorer(FAST, late=-1.0), "late: must be >= 0 and finite"),
         (lambda: ByScorer(FAST, share=float("inf")), "share: must be >= 0 and finite"),

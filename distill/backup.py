@@ -221,7 +221,7 @@ class Backup:
             c = self._above[c]
 
     def _keep(self, leaf: int, belief: Mapping[str, float]) -> None:
-        """Check a leaf's new belief and write it down."""
+        """Check a leaf's new belief, all of it before any of it is written down."""
         if not 0 <= leaf < len(self.leaf_nodes):
             raise InputError("leaf", f"must be from 0 to {len(self.leaf_nodes) - 1}", leaf)
         for name, x in belief.items():
@@ -229,6 +229,7 @@ class Backup:
                 raise InputError(name, f"must be among {', '.join(self._belief)}")
             if not (math.isfinite(x) and (x >= 0 or name in ("mean", "low", "high"))):
                 raise InputError(name, "must be finite, and >= 0 unless it is a value", x)
+        for name, x in belief.items():
             self._belief[name][leaf] = x
 
     def _refresh_all(self) -> None:

@@ -30,7 +30,7 @@ class CompiledBackup(Backup):
     """Moments, and what a record row is made of, of a tree with independent leaves; compiled.
 
     Arguments, methods, errors and results as of `distill.backup.Backup`, the results within rounding. Every
-    call of `rows` gives new columns. Not for use by several threads at once.
+    call of `rows` gives new columns, but for `cost`, which never changes. Not for several threads at once.
 
     >>> from distill.record import from_record
     >>> t = from_record({"format": "belief-tree/1", "parent": [-1, 0, 1, 1, 0],

@@ -315,6 +315,10 @@ def test_bad_updates_are_named():
         b.update(0, alpha=1.0)
     with pytest.raises(InputError, match="var: must be finite"):
         b.update(0, var=-1.0)
+    with pytest.raises(InputError, match="var: must be finite"):
+        b.update(0, mean=9.0, var=-1.0)
+    b.update(0, var=1.0)  # nothing of a refused belief stays
+    assert b.value.tolist() == [0.0, 1.0]
     with pytest.raises(RefusedError, match="independent leaves"):
         Backup(drawn("shared-aisles", 0))
     with pytest.raises(RefusedError, match="'cov'"):

@@ -271,6 +271,10 @@ def test_bad_updates_are_named_and_correlated_trees_get_their_own():
         b.update(0, alpha=1.0)
     with pytest.raises(InputError, match="var: must be finite"):
         b.update(0, var=-1.0)
+    with pytest.raises(InputError, match="var: must be finite"):
+        b.update(0, mean=9.0, var=-1.0)
+    b.update(0, var=0.5)  # nothing of a refused belief stays
+    assert_same(b, Backup(build(leaf(0, 0.5), leaf(1, 1))))
     dense = draw(load_family(FAMILIES / "shared-aisles.toml"), 0, 0)
     with pytest.raises(RefusedError, match="independent leaves"):
         CompiledBackup(dense)

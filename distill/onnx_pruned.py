@@ -73,7 +73,7 @@ def _read_varint(data: bytes, at: int) -> tuple[int, int]:
     while data[at] & 0x80:
         value |= (data[at] & 0x7F) << shift
         at, shift = at + 1, shift + 7
-    return value | data[at] << shift, at + 1
+    return (value | data[at] << shift) & 0xFFFFFFFFFFFFFFFF, at + 1  # as the reader that checked it
 
 
 def _varint(value: int) -> bytes:

@@ -10,6 +10,7 @@ from leaf_tables import rows
 from scorers import KINDS, scorer_bytes
 
 from distill.onnx_pruned import pruned
+from distill.onnx_reader import read_model
 from distill.runtime import Scorer
 
 
@@ -37,6 +38,18 @@ def test_all_outputs_give_the_whole_file_byte_for_byte(kind):
     data = scorer_bytes(kind)
     names = [o.name for o in onnx.load_model_from_string(data).graph.output]
     assert pruned(data, names) == data
+
+
+def test_a_length_of_more_than_64_bits_is_what_the_check_took_it_for():
+    """In ten bytes a whole number has room for 70 bits; what lies beyond the 64th falls away."""
+    data = scorer_bytes("linear")
+    graph = len(onnx.load_model_from_string(data).graph.SerializeToString(deterministic=True))
+    length = bytes([graph & 0x7F | 0x80, graph >> 7])
+    assert data.count(b"\x3a" + length) == 1  # field 7 of the model, in bytes
+    longer = bytes([length[0], length[1] | 0x80, *[0x80] * 7, 0x7E])
+    odd = data.replace(b"\x3a" + length, b"\x3a" + longer)
+    assert len(read_model(odd).nodes) == len(read_model(data).nodes)
+    assert pruned(odd, ("pick", "in_range")) == pruned(data, ("pick", "in_range"))
 
 
 @pytest.mark.parametrize("kind", KINDS)

@@ -176,9 +176,9 @@ def validate(
     if not isinstance(scorer, Scorer):
         scorer = Scorer.load(scorer)
     candidates, about = Candidates.read(dataset, any_horizon=scorer.kind is ANY_HORIZON)
-    trained = scorer.facts.get("about", {})
-    if value_of_scorer(scorer) != about["value"]:
-        raise InputError(f"{dataset}: value", f"must be the scorer's, {trained['value']}", about["value"])
+    trained, asked = scorer.facts.get("about", {}), value_of_scorer(scorer)
+    if asked != about["value"]:
+        raise InputError(f"{dataset}: value", f"must be the scorer's, {asked}", about["value"])
     if scorer.kind is not None and scorer.kind is not candidates.kind:
         raise InputError(
             f"{dataset}: input", f"must be the scorer's, {scorer.kind.name}", candidates.kind.name

@@ -199,3 +199,5 @@ def test_a_dataset_of_another_value_is_refused(
     static = labelled(tmp_path / "data", trees=30, horizon=0.0)
     with pytest.raises(InputError, match="value: must be the scorer's"):
         validate(file, static)
+    with pytest.raises(InputError, match=r"value: must be the scorer's, .*inf"):
+        validate(Scorer.closed_form(), static)

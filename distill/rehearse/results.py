@@ -127,9 +127,12 @@ def _files(campaign: Campaign) -> list[dict[str, Any]]:
 def _processor_seconds(results: Results) -> dict[str, dict[str, float]]:
     """By problem: of the decisions of all cells, and of the tuning."""
     out: dict[str, dict[str, float]] = {}
+
+    def spent(problem: str, on: str, seconds: float) -> None:
+        out.setdefault(problem, {"cells": 0.0, "tuning": 0.0})[on] += seconds
+
     for cell in results.cells:
-        took = out.setdefault(cell.problem, {"cells": 0.0, "tuning": 0.0})
-        took["cells"] += float(cell.processor.sum())
-    for row in results.tuning:
-        out[row["problem"]]["tuning"] += row["processor_seconds"]
+        spent(cell.problem, "cells", float(cell.processor.sum()))
+    for row in results.tuning:  # of problems too where all that was tuned was then left out
+        spent(row["problem"], "tuning", row["processor_seconds"])
     return out

@@ -14,6 +14,7 @@ from distill.sheet import SHEET_FORMAT, write_sheet
 __all__ = ["add_to_sheet", "add_to_sheets", "figures_of", "read_summary"]
 
 _FORMAT = "voc-distill-rehearsal/1"
+_READ = ("aims", "by_kind", "campaign", "made_with", "rows", "scorers", "stopping")  # parts of a summary
 
 
 def read_summary(folder: Path) -> dict[str, Any]:
@@ -27,6 +28,8 @@ def read_summary(folder: Path) -> dict[str, Any]:
         raise InputError(str(path), f"must be valid JSON ({e})") from None
     if not isinstance(summary, dict) or summary.get("format") != _FORMAT:
         raise InputError(f"{path}: format", f"must be {_FORMAT!r}")
+    if lost := [name for name in _READ if name not in summary]:
+        raise InputError(f"{path}: {lost[0]}", "is missing; rehearse the same again with this version")
     return summary
 
 

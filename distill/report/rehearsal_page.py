@@ -81,8 +81,9 @@ def write_rehearsal_page(summary: Figures, path: str | os.PathLike[str]) -> None
 
 def _opening(summary: Figures) -> ET.Element:
     campaign = summary["campaign"]
+    budgets = {row["budget"] for row in summary["rows"]}  # those of the wide problems too
     told: list[Child] = [
-        number(len(campaign["problems"])), " problems, ", number(len(campaign["budgets"])), " budgets, ",
+        number(len(campaign["problems"])), " problems, ", number(len(budgets)), " budgets, ",
         number(campaign["seeds"]), " decisions a cell, the same for every policy. Baselines tuned on ",
         number(campaign["tuning_seeds"]), " other decisions for each problem and number of rollouts.",
     ]  # fmt: skip

@@ -124,6 +124,17 @@ def test_records_are_left_to_trees_that_no_leaf_table_holds(tmp_path):
     assert results.kinds["tree-2x2^2-noise1-chance"] == "Gaussian, chance nodes"
 
 
+def test_where_every_policy_is_left_out_all_is_told_nevertheless(tmp_path, capsys):
+    """A microsecond is no time to choose in, for a policy that was tuned before."""
+    flags = ["--problem", "tree-2x2^1-noise1", "--budget", "0.001ms@1us", "--policy", "uct", "--seeds", "2"]
+    assert command_line(["rehearse", *flags, "--tuning-seeds", "2", "--out", str(tmp_path)]) == 0
+    summary = json.loads((tmp_path / "summary.json").read_text())
+    assert (summary["rows"], len(summary["left_out"])) == ([], 1)
+    assert summary["processor_seconds"]["tree-2x2^1-noise1"]["cells"] == 0
+    assert "0 cells of 2 decisions" in capsys.readouterr().out
+    assert "one choice takes" in json.dumps(summary["left_out"])
+
+
 def test_dear_exact_choosing_is_left_to_wide_problems_and_that_is_kept(tmp_path):
     names = "tree-2x2^1-noise1", "tree-3x2^1-noise1"
     campaign = Campaign(

@@ -136,6 +136,9 @@ def test_figures_go_into_the_sheets_of_the_files_that_were_rehearsed(tmp_path):
     with pytest.raises(InputError, match="must hold the scorer of the sheet, by its SHA-256"):
         add_to_sheets(tmp_path, [file, other.with_suffix(".onnx")])
     assert (other.read_bytes(), file.with_suffix(".json").read_bytes()) == kept
+    (tmp_path / "summary.json").write_text(json.dumps({k: x for k, x in summary.items() if k != "by_kind"}))
+    with pytest.raises(InputError, match="by_kind: is missing"):  # as older versions left it
+        add_to_sheets(tmp_path, [file])
     with pytest.raises(InputError, match="must be a folder that rehearse left"):
         add_to_sheets(tmp_path / "none", [file])
 

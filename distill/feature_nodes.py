@@ -39,9 +39,9 @@ class FeatureMatrix(NamedTuple):
     """What the graph says of each row.
 
     x : (n, d) float32, unit-free, columns as `FeatureGraph.names`. unit : (n,), u a rollout, the leaf's
-    own s_k / k at the start value's best batch k, a real number; s_k for a fixed batch. first_order :
-    (n,), same unit, the start value. batch : (n,), k rounded. leaf_sd : (n,), u, standard deviation that the
-    leaf contributes to the root; bounds are told by it, estimates are not.
+    own s_k / k at the start value's batch k, a real number; s_k for a fixed batch. first_order : (n,), same
+    unit, the start value. batch : (n,), rounded, the k where the start value is largest. leaf_sd : (n,), u,
+    standard deviation that the leaf contributes to the root; bounds are told by it, estimates are not.
     """
 
     x: NDArray[np.float32]

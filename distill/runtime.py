@@ -7,9 +7,9 @@
 These are the columns of a leaf table; files for win/loss leaves or for records take others, and files for
 any horizon also `horizon`, see `distill.scorer_inputs`. A call copies the arrays into buffers that
 onnxruntime reads in place, and runs on the calling thread; threads may share a scorer, each has buffers of
-its own. Where the file has no answer - a leaf unlike those of training, invalid values, a deadline that has
-passed, a file that was refused - the closed-form static rate answers instead (for records the first-order
-rate), and is counted.
+its own. Where the file has no answer - invalid values, a deadline that has passed, a file that was refused -
+the closed-form static rate answers instead (for records the first-order rate), and is counted. Leaves unlike
+those of training keep the file's answer, at the edge of what it knows, and are flagged.
 """
 
 from __future__ import annotations
@@ -49,7 +49,7 @@ class Scores(NamedTuple):
     voc : (n,), the value it was trained on, by default the rate, u a rollout; gross of cost.
     batch : (n,), the rollouts that value assumes. voc_high : (n,), calibrated upper bound, gross of cost:
     the exact value lies at or below it as often as `facts["calibration"]` states. in_range : (n,), False
-    where the leaf is unlike those of training or the file had no answer, and `voc` is the closed-form
+    where the leaf is unlike those of training, or where the file had no answer and `voc` is the closed-form
     static rate. There, and with files that have none, `voc_high` is a bound that no value of such a leaf
     exceeds, or `voc` where that is larger. pick : position of the largest voc - cost, the first on ties.
     worth_it : whether that is above 0. With `tree`, pick (a position within its tree) and worth_it have
@@ -193,7 +193,9 @@ class Scorer:
         return Scores(
             out["voc"].copy(),
             out["batch"].copy(),
-            out["voc_high"].copy() if buffers.has_bound else self._bounds(buffers, slice(None)),
+            out["voc_high"].copy()
+            if buffers.has_bound
+            else np.maximum(self._bounds(buffers, slice(None)), out["voc"]),
             out["in_range"].copy(),
             int(out["pick"]),
             bool(out["worth_it"]),

@@ -56,6 +56,7 @@ def look(dataset: str | os.PathLike[str], *, check: bool = True) -> dict[str, An
     aside = _trees(folder, manifest, "aside")
     duplicates = Counter(trees["hash"])
     n = len(trees["hash"])
+    recorded = _recorded_names(manifest)
     return {
         "format": LOOK_FORMAT,
         "name": folder.name,
@@ -71,7 +72,7 @@ def look(dataset: str | os.PathLike[str], *, check: bool = True) -> dict[str, An
         "aside_reasons": dict(Counter(_short(r) for r in aside["reason"]).most_common(10)),
         "methods": dict(Counter(trees["method"]).most_common()),
         "sources": dict(Counter(trees["source"]).most_common()),
-        "recorded": sum(name in _recorded_names(manifest) for name in trees["source"]),
+        "recorded": sum(name in recorded for name in trees["source"]),
         "duplicate_trees": n - len(duplicates),
         "most_alike": max(duplicates.values(), default=0),
         "weights": _weights(trees["weight"]),

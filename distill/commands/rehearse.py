@@ -21,10 +21,10 @@ problems: taxi, cliff_walking, frozen_lake_8x8, cold_store_small ..., or trees: 
 tree-6x2^1-winloss, tree-4x3^2-noise4-chance. budgets: 128 rollouts; 20ms@100us, time at this cost of a
 rollout (charged by a virtual clock, choosing as really measured); 20ms@100us!busy keeps the processor
 busy instead. policies: even, uct[:c=2], thompson[:prior=0.7], top-two[:share=0.5:prior=1], static-voc,
-static-rate, exact-dynamic, exact-dynamic-rate, exact-horizon[:h=4], exact-static-rate,
-scorer:FILE.onnx[:late=0.5:every=2:share=0.2]; exact ones and scorers take stop=0.001
-(price of a rollout, in units of the tree's scale) or stop=auto. uct, thompson and top-two by bare name are
-tuned on decisions of their own."""
+static-rate[:prior=1.4], exact-dynamic, exact-dynamic-rate, exact-horizon[:h=4], exact-static-rate,
+scorer:FILE.onnx[:late=0.5:every=2:share=0.2:prior=1.4:name=TEXT]; exact ones and scorers take stop=0.001
+(price of a rollout, in units of the tree's scale). uct, thompson, top-two and static-rate by bare name are
+tuned on decisions of their own, and so is what ends in prior=auto or stop=auto."""
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:

@@ -19,8 +19,8 @@ __all__ = ["TUNED", "TUNING_SEED", "name_of", "named", "tune", "untuned"]
 TUNING_SEED: Final = 1_000_000  # tuning looks at decisions from here on, the rehearsal at those before
 
 # Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from.
-_STOPS: Final = (1e-2, 3e-3, 1e-3, 3e-4, 1e-4, 1e-5, 1e-6, 1e-7)
-_NO_LOSS: Final = 0.03  # share of regret that stopping may cost when tuned, a standard error allowed for
+_STOPS: Final = (1e-2, 1e-3, 3e-4, 1e-4, 3e-5, 1e-5, 1e-6, 1e-7, 1e-8, 1e-9, 1e-10, 1e-12, 1e-14)
+_NO_LOSS: Final = 0.01  # share of regret that stopping may cost when tuned, a standard error allowed for
 _WIDTHS: Final = (0.7, 1.4, 2.0)  # of the prior, that ":prior=auto" chooses from beside 1
 _STOP_AUTO, _PRIOR_AUTO = ":stop=auto", ":prior=auto"
 

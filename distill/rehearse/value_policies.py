@@ -20,6 +20,7 @@ from distill.tree import BeliefTree
 
 __all__ = ["ByScorer", "ByValue"]
 
+_TELLING: Final = 4  # scorings of as many leaves, of which the fastest tells what one takes
 _REST: Final = 4  # rollouts by the static rate before a choice worth nothing is looked at again
 _SURE: Final = 1e-20  # variance of a leaf that is known, as a share of the largest
 _LOOK: Final = 8  # rollouts by the static rate between looks at whether to stop
@@ -147,13 +148,15 @@ class ByScorer(_Thrifty):
         self._early = 0  # rollouts before the last ones
         self._rollout_seconds = 0.0
         self._leaves = 0
-        self._fastest: dict[int, float] = {}  # seconds of a scoring, by number of leaves
+        # By number of leaves: scorings so far, and seconds of the fastest of them.
+        self._scorings: dict[int, int] = {}
+        self._fastest: dict[int, float] = {}
 
     def __getstate__(self) -> dict[str, Any]:
         """A loaded file stays in its process; another one loads it again."""
         if self._path is None:
             raise InputError("scorer", "must be given as a path to be used by several workers")
-        return {**self.__dict__, "_scorer": None, "_inputs": None, "_fastest": {}}
+        return {**self.__dict__, "_scorer": None, "_inputs": None, "_scorings": {}, "_fastest": {}}
 
     @property
     def scorer(self) -> Scorer:
@@ -199,7 +202,9 @@ class ByScorer(_Thrifty):
         started = time.perf_counter()
         scores = self._up_to_date(self._inputs, posterior).score(posterior, remaining)
         took = time.perf_counter() - started
-        self._fastest[self._leaves] = min(took, self._fastest.get(self._leaves, math.inf))
+        nth = self._scorings[self._leaves] = self._scorings.get(self._leaves, 0) + 1
+        if nth > 1:  # the first of as many leaves makes its buffers
+            self._fastest[self._leaves] = min(took, self._fastest.get(self._leaves, math.inf))
         best = int(scores.pick)
         top = float(scores.voc[best])
         if self._too_dear(top) and self._too_dear(self._second_opinion(posterior, remaining)):
@@ -225,7 +230,9 @@ class ByScorer(_Thrifty):
     def _takes_too_long(self) -> bool:
         """Whether a scoring would take more than its share of a rollout's time."""
         most = self.share * self._rollout_seconds
-        return most > 0 and self._fastest.get(self._leaves, 0.0) > most
+        if most <= 0 or self._scorings.get(self._leaves, 0) < _TELLING:
+            return False
+        return self._fastest[self._leaves] > most
 
     def _up_to_date(self, inputs: ScorerInputs, posterior: Posterior) -> ScorerInputs:
         """What the scorer reads, with all rollouts taken in."""

@@ -207,13 +207,18 @@ def test_where_nothing_is_worth_a_rollout_the_static_rate_chooses_the_next_four(
 
 
 def test_scorings_that_are_dear_beside_a_rollout_are_left_out():
-    """The first one tells what a scoring takes; only the fastest of as many leaves counts."""
+    """Four tell what a scoring takes, by the fastest but the first, which makes the buffers."""
     policy = fake([0.1, 0.4])(Scorer.closed_form(), share=0.5)
     policy.expect(1e-9)
-    assert [c.fell_back for c in choices(policy, 5)] == [False, *4 * [True]]
+    assert [c.fell_back for c in choices(policy, 7)] == [*4 * [False], *3 * [True]]
     policy.expect(10.0)
     assert not any(c.fell_back for c in choices(policy, 5))
-    assert policy.calls == 6
+    assert policy.calls == 9
+    slow_first = fake([0.1, 0.4])(Scorer.closed_form(), share=0.5)
+    slow_first._scorings[4] = 3
+    slow_first._fastest[4] = 1e-9  # what came after a slow first one
+    slow_first.expect(1e-3)
+    assert not any(c.fell_back for c in choices(slow_first, 3))
     policy._fastest[4] = 1.0  # a busy spell of the machine
     policy.expect(1e-3)
     assert all(c.fell_back for c in choices(policy, 5))

@@ -229,6 +229,11 @@ class Backup:
                 raise InputError(name, f"must be among {', '.join(self._belief)}")
             if not (math.isfinite(x) and (x >= 0 or name in ("mean", "low", "high"))):
                 raise InputError(name, "must be finite, and >= 0 unless it is a value", x)
+            if name in ("alpha", "beta", "noise_var") and x == 0:
+                raise InputError(name, "must be above 0", x)
+        new = {name: belief.get(name, x[leaf]) for name, x in self._belief.items() if name in ("low", "high")}
+        if new and not new["high"] > new["low"]:
+            raise InputError("high", "must be above low", new["high"])
         for name, x in belief.items():
             self._belief[name][leaf] = x
 

@@ -44,14 +44,6 @@ LEAF_TABLE_UNITS: Final = {
     "action": "0-based position of the root action",
     "cost": "u a rollout",
 }
-# Win/loss leaf table: the belief columns in place of mean and variances.
-WIN_LOSS_TABLE_UNITS: Final = {
-    "alpha": "1; Beta belief over the win probability",
-    "beta": "1; Beta belief over the win probability",
-    "low": "u; value of a loss (before gain)",
-    "high": "u; value of a win (before gain)",
-    **{name: LEAF_TABLE_UNITS[name] for name in ("gain", "offset", "action", "cost")},
-}
 # Record: one row a candidate, filled by `distill.backup`; chance nodes and correlation. A move of 1 is one
 # standard deviation of the leaf, with all that it moves beside the leaf.
 RECORD_VERSION: Final = 1
@@ -66,4 +58,3 @@ RECORD_UNITS: Final = {
     "noise_ratio": "1; noise variance of one rollout over the leaf's variance, alpha + beta for win/loss",
     "cost": "u a rollout",
 }
-SCORER_OUTPUTS: Final = ("voc", "batch", "voc_high", "in_range", "pick", "worth_it")

@@ -18,6 +18,7 @@ import numpy as np
 
 from distill import report as pages
 from distill import voc
+from distill.errors import InputError
 from distill.family import draw, load_family
 from distill.files import write_atomic
 from distill.generate import Traces, generate
@@ -196,8 +197,11 @@ def _side_by_side(out: Path, trees: int, report: Callable[..., None]) -> dict[st
 def _rehearse(out: Path, trees: int, report: Callable[..., None]) -> dict[str, Any]:
     """Small cells, so wide intervals: the full grid is the rehearse command's."""
     del trees
-    if (out / "rehearsal" / "campaign.json").is_file():
-        shutil.rmtree(out / "rehearsal")  # an earlier tour's, played with another scorer
+    earlier = out / "rehearsal" / "campaign.json"
+    if earlier.is_file():
+        if json.loads(earlier.read_bytes()).get("problems") != list(plans.plan("quick").problems):
+            raise InputError(str(earlier.parent), "must not hold a rehearsal of other problems")
+        shutil.rmtree(earlier.parent)  # an earlier tour's, played with another scorer
     summary = plans.quick([out / "scorer-fast.onnx"], out / "rehearsal")
     write_rehearsal_page(summary, out / "rehearsal" / "rehearsal.html")
     report(

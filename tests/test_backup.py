@@ -20,6 +20,7 @@ from distill.backup_correlated import CorrelatedBackup
 from distill.errors import InputError, RefusedError
 from distill.family import draw, load_family
 from distill.query import Query, scale_of
+from distill.record import from_record
 from distill.tree import BeliefTree
 from distill.voc import price
 
@@ -323,3 +324,27 @@ def test_bad_updates_are_named():
         Backup(drawn("shared-aisles", 0))
     with pytest.raises(RefusedError, match="'cov'"):
         CorrelatedBackup(build(leaf(0, 1)))
+
+
+@pytest.mark.parametrize(
+    ("belief", "message"),
+    [
+        ({"alpha": 0.0, "beta": 1.0}, "alpha: must be above 0; got 0"),
+        ({"beta": 0.0}, "beta: must be above 0"),
+        ({"low": 2.0}, "high: must be above low"),
+        ({"high": -1.0, "low": -1.0}, "high: must be above low"),
+    ],
+)
+def test_beliefs_that_no_tree_may_hold_are_refused_and_nothing_is_kept(belief, message):
+    tree = from_record(
+        {
+            "format": "belief-tree/1", "parent": [-1, 0, 0], "kind": ["decision", "leaf", "leaf"],
+            "alpha": [None, 1, 2], "beta": [None, 1, 1], "low": [None, 0, 0], "high": [None, 1, 1],
+        }
+    )  # fmt: skip
+    backup = Backup(tree)
+    before = backup.rows()
+    with pytest.raises(InputError, match=message):
+        backup.update(0, **belief)
+    for name, column in backup.rows().items():
+        np.testing.assert_array_equal(column, before[name])

@@ -107,6 +107,16 @@ class LeafBuffers:
         # NaN is never at least 0. Kinds without a horizon keep 0 there.
         self.scalars_hold = bool(0 <= self.remaining <= schema.MAX_ROLLOUTS and self.horizon >= 0)
 
+    def leave(self, remaining: Any) -> None:
+        """Other rollouts left for the same leaves; InputError for what is no number."""
+        if type(remaining) not in (int, float):
+            found = number_array("remaining", remaining, "f")
+            if found.size != 1:
+                raise InputError("remaining", "must be one number", found.shape)
+            remaining = found.item()
+        self.scalars_hold = bool(0 <= remaining <= schema.MAX_ROLLOUTS and self.horizon >= 0)
+        self.remaining[()] = min(remaining, 2.0**1000)  # a whole number may be too large for a float
+
     def finite(self) -> bool:
         """Whether every number of the columns is finite, and the scalars are what they may be."""
         np.isfinite(self.floats, out=self._is_finite)

@@ -29,6 +29,7 @@ from numpy.typing import NDArray
 from distill import schema, scorer_file
 from distill.errors import DistillError, InputError, ScorerFileError
 from distill.fallback import closed_form_bounds, closed_form_values
+from distill.held_leaves import HeldLeaves
 from distill.leaf_buffers import MAX_LEAVES, LeafBuffers, number_array, number_arrays, number_scalars
 from distill.onnx_pruned import pruned
 from distill.scorer_inputs import KINDS, InputKind, kind_of
@@ -186,8 +187,24 @@ class Scorer:
         kind = self._kind_for(columns)
         if tree is not None:
             return self._score_many(kind, columns, remaining, tree, deadline)
-        buffers, clean = self._run(kind, columns, remaining, deadline)
-        if not clean:
+        return self._scored(self._filled(kind, columns, remaining), deadline)
+
+    def pick(self, *, remaining: Any, deadline: float | None = None, **columns: Any) -> int:
+        """Position of the leaf with the largest voc - cost, the first on ties; arguments as for `score`."""
+        return self._picked(self._filled(self._kind_for(columns), columns, remaining), deadline)
+
+    def hold(self, *, remaining: Any, **columns: Any) -> HeldLeaves:
+        """The leaves of one tree kept ready: `update` what a rollout changed, then `pick` or `score` again.
+
+        Arguments as for `score`. Saves the copying and checking of all arrays, a few microseconds a call.
+        """
+        buffers = self._fill_with_care(self._kind_for(columns), columns, remaining, {})
+        return HeldLeaves(buffers, self._scored, self._picked)
+
+    # --- one call ---------------------------------------------------------------------------------
+
+    def _scored(self, buffers: LeafBuffers, deadline: float | None) -> Scores:
+        if not self._run(buffers, deadline, buffers.binding):
             return self._mend(buffers)
         out = buffers.out
         return Scores(
@@ -201,17 +218,12 @@ class Scorer:
             bool(out["worth_it"]),
         )
 
-    def pick(self, *, remaining: Any, deadline: float | None = None, **columns: Any) -> int:
-        """Position of the leaf with the largest voc - cost, the first on ties; arguments as for `score`."""
-        kind = self._kind_for(columns)
-        buffers, clean = self._run(kind, columns, remaining, deadline, picking=True)
-        if clean:
+    def _picked(self, buffers: LeafBuffers, deadline: float | None) -> int:
+        if self._run(buffers, deadline, buffers.pick_binding):
             return int(buffers.pick)
         if buffers.answered:  # mending needs the values too
             buffers.answered = self._answers(buffers, buffers.binding)
         return int(self._mend(buffers).pick)
-
-    # --- one call ---------------------------------------------------------------------------------
 
     def _kind_for(self, columns: dict[str, Any]) -> InputKind:
         """The file's kind, or without a file that of the columns; InputError where they are not its own."""
@@ -224,32 +236,28 @@ class Scorer:
                     raise InputError(name, f"is no column of a {kind.name}")
         return kind
 
-    def _run(
-        self,
-        kind: InputKind,
-        columns: dict[str, Any],
-        remaining: Any,
-        deadline: float | None,
-        *,
-        picking: bool = False,
-    ) -> tuple[LeafBuffers, bool]:
-        """Fill the buffers and run the file, or its pick alone; False where the answer needs mending."""
+    def _filled(self, kind: InputKind, columns: dict[str, Any], remaining: Any) -> LeafBuffers:
+        """The calling thread's buffers for so many leaves, filled."""
         try:
             floats = kind.take(columns)
             buffers = self._local.kept[kind.name][len(floats[0])]
             buffers.fill(floats, columns, remaining)
         except (AttributeError, KeyError, OverflowError, TypeError, ValueError):
-            buffers = self._fill_with_care(kind, columns, remaining)
+            return self._fill_with_care(kind, columns, remaining, self._local.kept[kind.name])
+        return buffers
+
+    def _run(self, buffers: LeafBuffers, deadline: float | None, binding: Any) -> bool:
+        """Run the whole file, or its pick alone; False where the answer needs mending."""
         self.counters.decisions += 1
         buffers.answered = False
         if deadline is not None and time.perf_counter() >= deadline:
             self.counters.late += 1
         elif self._session is not None and buffers.finite():
-            buffers.answered = self._answers(buffers, buffers.pick_binding if picking else buffers.binding)
+            buffers.answered = self._answers(buffers, binding)
             if buffers.answered:
-                return buffers, b"\0" not in buffers.in_range.tobytes()
+                return b"\0" not in buffers.in_range.tobytes()
         buffers.in_range[:] = False
-        return buffers, False
+        return False
 
     def _answers(self, buffers: LeafBuffers, binding: Any) -> bool:
         """Run the file on the buffers; False where it fails."""
@@ -262,8 +270,10 @@ class Scorer:
             return False
         return True
 
-    def _fill_with_care(self, kind: InputKind, columns: dict[str, Any], remaining: Any) -> LeafBuffers:
-        """The way in for a first call and for anything but plain arrays; InputError names what is wrong."""
+    def _fill_with_care(
+        self, kind: InputKind, columns: dict[str, Any], remaining: Any, kept: dict[int, LeafBuffers]
+    ) -> LeafBuffers:
+        """The way in for a first call and for anything but plain arrays, into buffers of `kept` or new."""
         arrays = number_arrays(kind, columns)
         first = arrays[kind.floats[0]]
         if first.ndim != 1 or not 1 <= len(first) <= MAX_LEAVES:
@@ -277,7 +287,6 @@ class Scorer:
             if x.size != 1:
                 raise InputError(name, "must be one number", x.shape)
             scalars[name] = float(x.item())
-        kept = self._local.kept[kind.name]
         if n not in kept:
             if len(kept) >= _KEPT_SIZES:
                 del kept[next(iter(kept))]

@@ -55,8 +55,12 @@ def test_the_embedding_runs(monkeypatch):
     }
     arguments = re.search(r"scorer\.pick\((.*?)\n\)", code, flags=re.S)
     assert arguments is not None
-    exec(code.replace("scorer.score(...)", f"scorer.score({arguments[1]}\n)"), scope)
-    assert scope["leaf"] == scope["scores"].pick
+    for call in ("score", "hold"):
+        code = code.replace(f"scorer.{call}(...)", f"scorer.{call}({arguments[1]}\n)")
+    code = code.replace("held.update(", "first = leaf\nheld.update(")
+    exec(code, scope)
+    assert scope["first"] == scope["scores"].pick
+    assert 0 <= scope["leaf"] < 3
     assert scope["scores"].voc.shape == (3,)
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import shutil
+from collections.abc import Sequence
 from dataclasses import replace
 from pathlib import Path
 
@@ -95,7 +96,7 @@ def test_a_tour_again_rehearses_its_new_scorer(tmp_path: Path, monkeypatch: pyte
     """The fast scorer of a tour is chosen by measured time, so the next tour's may be another file."""
     tiny = replace(plans.plan("quick"), problems=TINY.problems, budgets=("0.4ms@100us",), seeds=2)
 
-    def quick_plan(*_: object, scorers: list[str], **__: object) -> Campaign:
+    def quick_plan(*_: object, scorers: Sequence[str] = (), **__: object) -> Campaign:
         return replace(tiny, policies=(*TINY.policies, *(f"scorer:{file}" for file in scorers)))
 
     monkeypatch.setattr(plans, "plan", quick_plan)
@@ -105,3 +106,9 @@ def test_a_tour_again_rehearses_its_new_scorer(tmp_path: Path, monkeypatch: pyte
         tour._rehearse(tmp_path, 0, lambda *_: None)
         shas.append(json.loads((tmp_path / "rehearsal" / "summary.json").read_text())["scorers"][0]["sha256"])
     assert len(set(shas)) == 2
+    campaign = tmp_path / "rehearsal" / "campaign.json"
+    own = campaign.read_text().replace(TINY.problems[0], "taxi")
+    campaign.write_text(own)
+    with pytest.raises(InputError, match="must not hold a rehearsal of other problems"):
+        tour._rehearse(tmp_path, 0, lambda *_: None)
+    assert campaign.read_text() == own

@@ -138,7 +138,9 @@ def moments(g: Nodes, low: str, high: str, joint: str, rest: str, points: int) -
     below, first, second = g.split(sums, 3, axis=0)
     value = g("Sub", high, below, out="value")
     others = g("Add", low, first, out="others")
-    spread2 = g("Sub", g("Mul", width, second), g("Mul", first, first), out="spread2")
+    # Where the siblings are next to sure, cells may leave it a hair below 0.
+    spread2 = g("Sub", g("Mul", width, second), g("Mul", first, first))
+    spread2 = g("Clip", spread2, g.scalar(0.0), out="spread2")
     return value, others, spread2
 
 

@@ -19,7 +19,10 @@ from distill.feature_graph import FeatureGraph
 from distill.features import build_graph
 from distill.onnx_nodes import typed
 from distill.query import Query
+from distill.sample_data import TRACES
 from distill.timing import tree_of
+from distill.traces import read_trees
+from distill.tree import leaf_table
 
 GRAPH = FeatureGraph()
 seeds = st.integers(0, 2**32 - 1)
@@ -290,3 +293,22 @@ def test_a_leaf_whose_siblings_beat_the_rival_for_sure_starts_below_any_value():
     start = GRAPH.matrix(t).first_order
     assert np.all(start[:2] < 1e-290)
     assert np.all(start[2:] > 1e-200)
+
+
+def test_no_recorded_tree_is_too_sure_for_the_table():
+    """Siblings that are next to sure once left a variance below 0."""
+    seen = 0
+    for path in sorted(TRACES.glob("*.jsonl.gz")):
+        for _, tree in read_trees(path):
+            if tree.belief != "gaussian" or tree.has_chance or tree.cov is not None:
+                continue
+            leaves = leaf_table(tree)
+            columns = {
+                k: getattr(leaves, k) for k in ("mean", "var", "noise_var", "gain", "offset", "action")
+            }
+            n = len(columns["mean"])
+            got = GRAPH.matrix({**columns, "cost": np.zeros(n), "remaining": tree.remaining or 1})
+            assert np.all(got.first_order >= 0)
+            assert np.all(np.isfinite(got.x))
+            seen += 1
+    assert seen >= 500

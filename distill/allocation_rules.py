@@ -22,7 +22,7 @@ from distill.beliefs import (
 from distill.kernels import compiled
 from distill.tree import Floats, Ints
 
-__all__ = ["RULES", "Belief", "Topology", "observe", "pick", "run", "scale"]
+__all__ = ["RULES", "Belief", "Topology", "observe", "pass_curves", "pick", "run", "scale"]
 
 RULES: Final = ("even", "uct", "thompson", "static_rate")
 _EVEN, _UCT, _THOMPSON = 0, 1, 2
@@ -255,16 +255,12 @@ def _thompson(rng, t, b):  # type: ignore[no-untyped-def]
 
 
 @compiled
-def _static_rate(rng, t, b, remaining):  # type: ignore[no-untyped-def]
-    """Best leaf by max over k in 1, 2, 4, ... of VOC_0(k) / k; `even` where every value underflows.
+def pass_curves(t, value, first_node, A, B, C):  # type: ignore[no-untyped-def]
+    """Each node's max(C, A x + B), its value x alone free, from its parent's; parents from `first_node` on.
 
-    The root's value as a function of one node's value x is max(C, A x + B): passed down from the root,
-    a decision node folds its best other child into C, a chance node its other children into B.
+    A decision node folds its best other child into C, a chance node its other children into B.
     """
-    n = len(t.parent)
-    value = _backup(t, b.mean)
-    A, B, C = np.ones(n), np.zeros(n), np.full(n, -np.inf)
-    for v in range(n):
+    for v in range(first_node, len(t.parent)):
         if t.first[v] == t.first[v + 1]:
             continue
         first, second = -np.inf, -np.inf
@@ -286,6 +282,18 @@ def _static_rate(rng, t, b, remaining):  # type: ignore[no-untyped-def]
                 C[w] = C[v]
                 A[w] = A[v] * t.prob[w] * t.discount[w]
                 B[w] = A[v] * (value[v] - t.prob[w] * t.discount[w] * value[w]) + B[v]
+
+
+@compiled
+def _static_rate(rng, t, b, remaining):  # type: ignore[no-untyped-def]
+    """Best leaf by max over k in 1, 2, 4, ... of VOC_0(k) / k; `even` where every value underflows.
+
+    The root's value as a function of one node's value x is max(C, A x + B), passed down from the root.
+    """
+    n = len(t.parent)
+    value = _backup(t, b.mean)
+    A, B, C = np.ones(n), np.zeros(n), np.full(n, -np.inf)
+    pass_curves(t, value, 0, A, B, C)
     best, best_rate = -1, 0.0
     for i in range(len(t.leaf)):
         w = t.leaf[i]

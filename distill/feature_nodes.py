@@ -17,12 +17,15 @@ from distill.tree import Floats
 
 __all__ = [
     "FEATURE_ROWS", "LARGE", "TINY", "FeatureMatrix", "Start", "best_batch", "best_other", "finished", "loss",
-    "midpoints", "moments", "threshold_shift",
+    "PHI_SLOPE", "loss_bottom", "midpoints", "moments", "normal_table", "threshold_shift",
 ]  # fmt: skip
 
 FEATURE_ROWS: Final = "feature_rows"  # the features transposed, shape (d, n)
 LARGE: Final = 1e300
 TINY: Final = 1e-300
+PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
+_BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s
+_FAR: Final = 1e9  # standard deviations; Phi is 1 there
 _THRESHOLD_LIMIT: Final = 40.0  # exp(-z^2 / 2) is 0 in double precision
 _PEAK_FLOOR: Final = 1e-30  # keeps 0 x infinity away where a leaf has no variance
 _SLOPE_FLOOR: Final = 1e-300  # where the siblings alone beat the rival: below the least value of any tree
@@ -63,10 +66,40 @@ def threshold_shift(g: Nodes, y: str, theta: str) -> tuple[str, str, str]:
 
 def loss(g: Nodes, z: str) -> str:
     """f(-|z|), within 5 %, relative, however small."""
+    bottom = loss_bottom(g, z)
+    return g("Div", g("Exp", g("Mul", g("Mul", z, z), g.double(-0.5))), bottom)
+
+
+def loss_bottom(g: Nodes, z: str) -> str:
+    """exp(-z^2 / 2) / f(-|z|), within 5 %."""
     at_zero, linear, square = (g.double(x) for x in _LOSS_FIT)
     size = g("Abs", z)
-    bottom = g("Add", g("Mul", g("Add", g("Mul", size, square), linear), size), at_zero)
-    return g("Div", g("Exp", g("Mul", g("Mul", z, z), g.double(-0.5))), bottom)
+    return g("Add", g("Mul", g("Add", g("Mul", size, square), linear), size), at_zero)
+
+
+def normal_table(g: Nodes, m: str, s: str, points: int, *, tops: bool = False) -> tuple[list[str], str, str]:
+    """Ends of each leaf's action table, shape (1, n), and F and R at its points, shape (n, points).
+
+    The table spans the action's largest m - 7 s to its largest m + 3.5 s. tops : with the largest m of
+    the action as a third of the ends.
+    """
+    spans, t = [[-_BELOW], [_ABOVE]], midpoints(points)
+    ends_of = [1 - t, t]
+    if tops:
+        spans, ends_of = [*spans, [0.0]], [*ends_of, np.zeros(points)]
+    rows = g("Add", "action", g.constant(np.zeros((len(spans), 1), dtype=np.int64)))
+    ends = g("Add", g("Mul", s, g.double(spans)), m)
+    ends = g("ScatterElements", g.at_most(ends, -LARGE), rows, ends, axis=1, reduction="max")
+    ends = g("Gather", ends, "action", axis=1)
+    parts = g.split(ends, len(spans), axis=0)
+    z = g.at_most(g("Div", g("Sub", ends, m), s), _FAR)
+    z = g("Cast", z, to=TensorProto.FLOAT)
+    z = g("Gemm", z, g.single(np.stack(ends_of) / np.sqrt(2)), transA=1)
+    phi = g("HardSigmoid", g("Erf", z), alpha=PHI_SLOPE, beta=0.5)
+    row = g("Unsqueeze", "action", g.whole(1))
+    joint = g("ScatterND", g("HardSigmoid", phi, alpha=0.0, beta=1.0), row, phi, reduction="mul")
+    joint = g("Gather", joint, "action")
+    return parts, joint, g("Div", joint, phi)
 
 
 class Start:

@@ -41,12 +41,10 @@ from __future__ import annotations
 import math
 from typing import Final
 
-import numpy as np
 import onnx
-from onnx import TensorProto
 
 from distill import features_any_horizon
-from distill.feature_nodes import LARGE, TINY, Start, best_other, midpoints, moments, threshold_shift
+from distill.feature_nodes import LARGE, TINY, Start, best_other, moments, normal_table, threshold_shift
 from distill.onnx_nodes import Nodes
 from distill.scorer_inputs import LEAF_TABLE
 
@@ -58,10 +56,6 @@ FEATURE_NAMES: Final = (
     "step",  # s_k / theta
 )
 _STATIC_NAMES: Final = ("threshold", "step")
-
-_BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s
-_PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
-_FAR: Final = 1e9  # standard deviations; Phi is 1 there
 
 
 def build_graph(*, points: int = 12, horizon: float = math.inf, batch: int | None = None) -> onnx.ModelProto:
@@ -85,7 +79,8 @@ def build_graph(*, points: int = 12, horizon: float = math.inf, batch: int | Non
     g("And", action, g("Greater", "noise_ratio", g.double(0.0)), out="valid")
     if horizon == 0:
         return _static(g, m, s, noise, batch)
-    value, others, spread2 = moments(g, *_table(g, m, s, points), points)
+    (low, high), joint, rest = normal_table(g, m, s, points)
+    value, others, spread2 = moments(g, low, high, joint, rest, points)
 
     # Threshold t0.
     rival = best_other(g, value)
@@ -110,21 +105,3 @@ def _static(g: Nodes, m: str, s: str, noise: str, batch: int | None) -> onnx.Mod
     row = g("Unsqueeze", g("Sub", rival, m), g.whole(0))
     start = Start(g, row, s, noise, batch)
     return start.model(start.value(None), (start.z, g("Div", start.s_k, s)), _STATIC_NAMES, LEAF_TABLE)
-
-
-def _table(g: Nodes, m: str, s: str, points: int) -> tuple[str, str, str, str]:
-    """Ends of each leaf's action table, shape (1, n), and F and R at its points, shape (n, points)."""
-    both = g("Add", "action", g.constant(np.zeros((2, 1), dtype=np.int64)))
-    ends = g("Add", g("Mul", s, g.double([[-_BELOW], [_ABOVE]])), m)
-    ends = g("ScatterElements", g.at_most(ends, -LARGE), both, ends, axis=1, reduction="max")
-    ends = g("Gather", ends, "action", axis=1)
-    low, high = g.split(ends, 2, axis=0)
-    z = g.at_most(g("Div", g("Sub", ends, m), s), _FAR)
-    z = g("Cast", z, to=TensorProto.FLOAT)
-    t = midpoints(points)
-    z = g("Gemm", z, g.single(np.stack([1 - t, t]) / np.sqrt(2)), transA=1)
-    phi = g("HardSigmoid", g("Erf", z), alpha=_PHI_SLOPE, beta=0.5)
-    row = g("Unsqueeze", "action", g.whole(1))
-    joint = g("ScatterND", g("HardSigmoid", phi, alpha=0.0, beta=1.0), row, phi, reduction="mul")
-    joint = g("Gather", joint, "action")
-    return low, high, joint, g("Div", joint, phi)

@@ -23,11 +23,9 @@ from __future__ import annotations
 import math
 from typing import Final
 
-import numpy as np
 import onnx
-from onnx import TensorProto
 
-from distill.feature_nodes import LARGE, TINY, Start, midpoints, moments, threshold_shift
+from distill.feature_nodes import LARGE, TINY, Start, loss_bottom, moments, normal_table, threshold_shift
 from distill.onnx_nodes import Nodes
 from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE
 
@@ -42,11 +40,7 @@ FEATURE_NAMES: Final = (
     "known",  # theta_0 / theta_k: 0 at h = 0, 1 where h is infinite
 )
 
-_BELOW, _ABOVE = 7.0, 3.5  # the table spans the largest m - 7 s to the largest m + 3.5 s of M_h
-_PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
-_FAR: Final = 1e9  # standard deviations; Phi is 1 there
 _SURE: Final = 0.999  # mean of R over the table, from which the siblings lie below it
-_BOTTOM: Final = tuple(np.sqrt(2 * np.pi) * np.array([1.0, 0.93642524, 0.92409791]))  # b, see `loss`
 
 
 def build_graph(
@@ -70,7 +64,7 @@ def build_graph(
     action = g("GreaterOrEqual", "action", g.whole(0))
     g("And", action, g("Greater", "noise_ratio", g.double(0.0)), out="valid")
     known = g.at_least(_learned(g, v, noise, h), TINY)
-    low, high, top, joint, rest = _table(g, m, g("Sqrt", known), points)
+    (low, high, top), joint, rest = normal_table(g, m, g("Sqrt", known), points, tops=True)
     value, others, spread2 = moments(g, low, high, joint, rest, points)
 
     # The best other action; of the best action, the siblings that lie below the table.
@@ -115,28 +109,7 @@ def _learned(g: Nodes, v: str, noise: str, h: str) -> str:
 
 def _known_better(g: Nodes, above: str, theta: str, theta_k: str) -> str:
     """What the best action gains by being known better; shape (1, n)."""
-    at_zero, linear, square = (g.double(x) for x in _BOTTOM)
-    size = g("Abs", above)
-    bottom = g("Add", g("Mul", g("Add", g("Mul", size, square), linear), size), at_zero)
+    bottom = loss_bottom(g, above)
     rise = g("Mul", g("Sub", theta_k, theta), g.double(1 / math.sqrt(2 * math.pi)))
     density = g("Exp", g("Mul", g("Mul", above, above), g.double(-0.5)))
     return g("Mul", density, g("Min", g("Div", theta_k, bottom), rise))
-
-
-def _table(g: Nodes, m: str, s: str, points: int) -> tuple[str, str, str, str, str]:
-    """Ends of each leaf's action table and the action's largest m, shape (1, n), and F and R at its points,
-    shape (n, points)."""
-    rows = g("Add", "action", g.constant(np.zeros((3, 1), dtype=np.int64)))
-    ends = g("Add", g("Mul", s, g.double([[-_BELOW], [_ABOVE], [0.0]])), m)
-    ends = g("ScatterElements", g.at_most(ends, -LARGE), rows, ends, axis=1, reduction="max")
-    ends = g("Gather", ends, "action", axis=1)
-    low, high, top = g.split(ends, 3, axis=0)
-    z = g.at_most(g("Div", g("Sub", ends, m), s), _FAR)
-    z = g("Cast", z, to=TensorProto.FLOAT)
-    t = midpoints(points)
-    z = g("Gemm", z, g.single(np.stack([1 - t, t, np.zeros(points)]) / np.sqrt(2)), transA=1)
-    phi = g("HardSigmoid", g("Erf", z), alpha=_PHI_SLOPE, beta=0.5)
-    row = g("Unsqueeze", "action", g.whole(1))
-    joint = g("ScatterND", g("HardSigmoid", phi, alpha=0.0, beta=1.0), row, phi, reduction="mul")
-    joint = g("Gather", joint, "action")
-    return low, high, top, joint, g("Div", joint, phi)

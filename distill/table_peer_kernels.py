@@ -63,6 +63,15 @@ def matched_on_table(m, v, noise, action, left, batch, nodes, shares):  # type: 
 
 
 @compiled
+def _keep_two(top, y):  # type: ignore[no-untyped-def]
+    """The two largest so far, `top`, with y taken in."""
+    if y > top[0]:
+        top[1], top[0] = top[0], y
+    elif y > top[1]:
+        top[1] = y
+
+
+@compiled
 def sampled_on_table(rng, m, v, noise, action, left, batch, samples):  # type: ignore[no-untyped-def]
     """Dynamic value by samples: leaf values drawn once, shared by all candidates and outcomes.
 
@@ -76,11 +85,7 @@ def sampled_on_table(rng, m, v, noise, action, left, batch, samples):  # type: i
         for i in range(n_leaves):
             x[s, i] = rng.standard_normal()
             y = m[i] + math.sqrt(v[i]) * x[s, i]
-            a = action[i]
-            if y > top[s, a, 0]:
-                top[s, a, 1], top[s, a, 0] = top[s, a, 0], y
-            elif y > top[s, a, 1]:
-                top[s, a, 1] = y
+            _keep_two(top[s, action[i]], y)
         for a in range(n_actions):
             value[a] += top[s, a, 0] / samples
     outcomes = np.empty(samples)
@@ -123,11 +128,7 @@ def sampled_wins(rng, alpha, beta, low, span, action, left, batch, samples):  # 
         for i in range(n_leaves):
             y = low[i] + span[i] * rng.beta(alpha[i], beta[i])
             x[s, i] = y
-            a = action[i]
-            if y > top[s, a, 0]:
-                top[s, a, 1], top[s, a, 0] = top[s, a, 0], y
-            elif y > top[s, a, 1]:
-                top[s, a, 1] = y
+            _keep_two(top[s, action[i]], y)
         for a in range(n_actions):
             value[a] += top[s, a, 0] / samples
     scores = np.zeros(n_leaves)

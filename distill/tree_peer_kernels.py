@@ -12,6 +12,7 @@ import math
 
 import numpy as np
 
+from distill.allocation_rules import pass_curves
 from distill.closed_form import PEAK
 from distill.kernels import compiled
 from distill.numerics import gain, norm_cdf, norm_pdf
@@ -74,30 +75,7 @@ def _curves(t, value, A, B, C):  # type: ignore[no-untyped-def]
     for j in range(t.first[0], t.first[1]):
         w = t.child[j]
         A[w], B[w], C[w] = t.discount[w], t.reward[w], -np.inf
-    for v in range(1, len(t.parent)):
-        if t.first[v] == t.first[v + 1]:
-            continue
-        first, second = -np.inf, -np.inf
-        for j in range(t.first[v], t.first[v + 1]):
-            q = t.reward[t.child[j]] + t.discount[t.child[j]] * value[t.child[j]]
-            if q > first:
-                first, second = q, first
-            elif q > second:
-                second = q
-        for j in range(t.first[v], t.first[v + 1]):
-            w = t.child[j]
-            q = t.reward[w] + t.discount[w] * value[w]
-            if t.is_decision[v]:
-                other = second if q == first else first
-                C[w] = C[v]
-                if A[v] > 0.0 and other > -np.inf:
-                    C[w] = max(C[v], A[v] * other + B[v])
-                A[w] = A[v] * t.discount[w]
-                B[w] = A[v] * t.reward[w] + B[v]
-            else:
-                C[w] = C[v]
-                A[w] = A[v] * t.prob[w] * t.discount[w]
-                B[w] = A[v] * (value[v] - t.prob[w] * t.discount[w] * value[w]) + B[v]
+    pass_curves(t, value, 1, A, B, C)
 
 
 @compiled

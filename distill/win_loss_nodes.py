@@ -12,7 +12,7 @@ from typing import Final
 import numpy as np
 from onnx import TensorProto
 
-from distill.feature_nodes import TINY, midpoints
+from distill.feature_nodes import PHI_SLOPE, TINY, midpoints
 from distill.onnx_nodes import Nodes
 from distill.tree import Floats
 
@@ -24,7 +24,6 @@ _LARGEST_COUNT: Final = 2000.0
 _FURTHEST: Final = 1e6  # standard deviations, far outside every support
 _EDGES: Final = (1e-30, 1 - 6e-8)  # shares of the support that count as 0 and 1
 _BLUNT: Final = 2e-3  # of the deviance: above its rounding, below what moves Phi
-_PHI_SLOPE: Final = 0.49999994  # Phi in [6e-8, 1 - 6e-8]: F / Phi stays finite in float32
 _FAR: Final = 1e30  # spans; stands for no rival
 _LEAST_SHARE: Final = 1e-30
 _LEAST_TRIALS: Final = 1e-6
@@ -85,7 +84,7 @@ def beta_cdf(g: Nodes, counts: tuple[str, str], z: str, points: int) -> str:
     step = g("Mul", g("Exp", log_density), g("Mul", g("Sub", rest, x), size))
     step = g("Div", step, g("Sqrt", g("Mul", x, y)))
     twice = g("Clip", g("Sub", step, normal), *(g.constant(np.array(v, dtype=np.float32)) for v in (-1, 1)))
-    phi = g("HardSigmoid", twice, alpha=_PHI_SLOPE, beta=0.5)
+    phi = g("HardSigmoid", twice, alpha=PHI_SLOPE, beta=0.5)
     return g("Transpose", phi, perm=[1, 0])
 
 

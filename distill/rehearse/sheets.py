@@ -20,17 +20,24 @@ _READ = ("aims", "by_kind", "campaign", "made_with", "rows", "scorers", "stoppin
 def read_summary(folder: Path) -> dict[str, Any]:
     """The summary that a rehearsal left in a folder; InputError where there is none."""
     path = folder / "summary.json"
-    try:
-        summary = json.loads(path.read_text())
-    except FileNotFoundError:
-        raise InputError(str(folder), "must be a folder that rehearse left, with summary.json") from None
-    except (OSError, ValueError) as e:
-        raise InputError(str(path), f"must be valid JSON ({e})") from None
-    if not isinstance(summary, dict) or summary.get("format") != _FORMAT:
-        raise InputError(f"{path}: format", f"must be {_FORMAT!r}")
+    missing = str(folder), "must be a folder that rehearse left, with summary.json"
+    summary = _read(path, _FORMAT, missing)
     if lost := [name for name in _READ if name not in summary]:
         raise InputError(f"{path}: {lost[0]}", "is missing; rehearse the same again with this version")
     return summary
+
+
+def _read(path: Path, form: str, missing: tuple[str, str]) -> dict[str, Any]:
+    """A JSON object of a format; InputError where there is none, with the place and rule of `missing`."""
+    try:
+        found = json.loads(path.read_text())
+    except FileNotFoundError:
+        raise InputError(*missing) from None
+    except (OSError, ValueError) as e:
+        raise InputError(str(path), f"must be valid JSON ({e})") from None
+    if not isinstance(found, dict) or found.get("format") != form:
+        raise InputError(f"{path}: format", f"must be {form!r}")
+    return found
 
 
 def figures_of(summary: Mapping[str, Any], sha256: str) -> dict[str, Any]:
@@ -88,14 +95,9 @@ def add_to_sheet(summary: Mapping[str, Any], scorer_file: Path) -> dict[str, Any
     path = scorer_file.with_suffix(".json")
     if not scorer_file.is_file():
         raise InputError(str(scorer_file), "must be a scorer file")
-    try:
-        sheet = json.loads(path.read_text())
-    except FileNotFoundError:
-        raise InputError(str(path), "must be the sheet beside the scorer file, as ship writes it") from None
-    except (OSError, ValueError) as e:
-        raise InputError(str(path), f"must be valid JSON ({e})") from None
-    if not isinstance(sheet, dict) or sheet.get("format") != SHEET_FORMAT:
-        raise InputError(f"{path}: format", f"must be {SHEET_FORMAT!r}")
+    sheet = _read(
+        path, SHEET_FORMAT, (str(path), "must be the sheet beside the scorer file, as ship writes it")
+    )
     sha256 = sha256_of(scorer_file)
     if sheet["file"]["sha256"] != sha256:
         raise InputError(
@@ -103,7 +105,7 @@ def add_to_sheet(summary: Mapping[str, Any], scorer_file: Path) -> dict[str, Any
         )
     sheet["rehearsal"] = figures_of(summary, sha256)
     write_sheet(sheet, scorer_file)
-    return sheet  # type: ignore[no-any-return]
+    return sheet
 
 
 def add_to_sheets(folder: Path, scorer_files: Iterable[Path]) -> list[Path]:

@@ -81,9 +81,9 @@ def matching(tmp_path_factory: pytest.TempPathFactory, family: Family) -> Path:
 
 @pytest.fixture(scope="module")
 def noisy(tmp_path_factory: pytest.TempPathFactory, family: Family) -> Path:
-    """The same trees when a rollout's sd is sixteen times what training saw."""
+    """Trees of the family when a rollout's sd is sixteen times what training saw; 120 leave the verdict to chance."""
     path = tmp_path_factory.mktemp("traces") / "noisy.jsonl.gz"
-    trees = recorded(family, 120)
+    trees = recorded(family, 400)
     write_trees(path, [replace(t, noise_var=256 * t.noise_var) for t in trees if t.noise_var is not None])
     return path
 
@@ -207,7 +207,7 @@ def test_generate_adds_what_is_worth_adding(shipped: Path, noisy: Path, tmp_path
     call(shipped, noisy, "--out", out)
     worth = [t for _, t in read_trees(out / WORTH_ADDING)]
     figures = json.loads((out / "audit.json").read_text())
-    assert 0 < len(worth) == figures["trees"]["worth adding"] < 120
+    assert 0 < len(worth) == figures["trees"]["worth adding"] < 400
     known = {json.dumps(to_record(t)) for _, t in read_trees(noisy)}
     assert all(json.dumps(to_record(t)) in known for t in worth)
     data = tmp_path / "data"

@@ -15,9 +15,11 @@ import numpy as np
 from distill.allocation_rules import pass_curves
 from distill.closed_form import PEAK
 from distill.kernels import compiled
-from distill.numerics import gain, norm_cdf, norm_pdf
+from distill.numerics import gain, norm_cdf
 
 __all__ = ["best_other", "larger", "matched_on_tree", "peak", "sampled_on_tree", "sampled_together"]
+
+_FAR = 40.0  # standard deviations: the normal density there is 0 in double precision
 
 
 @compiled
@@ -32,15 +34,22 @@ def best_other(value, own):  # type: ignore[no-untyped-def]
 
 @compiled
 def larger(m1, v1, m2, v2):  # type: ignore[no-untyped-def]
-    """Mean and variance of the larger of two independent normals (Clark 1961, eqs. 2 and 3)."""
-    theta = math.sqrt(v1 + v2)
-    if theta <= 0.0:
-        return max(m1, m2), 0.0
-    p = (m1 - m2) / theta
-    mean = m2 + theta * gain(p)
-    upper, density = norm_cdf(p), norm_pdf(p)
-    square = (m1 * m1 + v1) * upper + (m2 * m2 + v2) * (1.0 - upper) + (m1 + m2) * theta * density
-    return mean, max(square - mean * mean, 0.0)
+    """Mean and variance of the larger of two independent normals (Clark 1961, eqs. 2 and 3).
+
+    With p the gap of the means over theta, theta^2 = v1 + v2, and g = E max(Z - p, 0) of a standard normal Z,
+    its variance is v_upper (1 - Phi(-p) - g (p + g)) + v_lower (Phi(-p) - g (p + g)).
+    """
+    if m1 < m2:
+        m1, v1, m2, v2 = m2, v2, m1, v1
+    theta, gap = math.sqrt(v1 + v2), m1 - m2
+    if gap >= _FAR * theta:
+        return m1, v1
+    p = gap / theta
+    lift = gain(-p)
+    lower = norm_cdf(-p)
+    # From the upper mean on: moments about 0 would lose their digits where the means are far from it.
+    both = lift * (p + lift)
+    return m1 + theta * lift, max(v1 * (1.0 - lower - both) + v2 * (lower - both), 0.0)
 
 
 @compiled

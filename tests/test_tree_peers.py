@@ -6,10 +6,11 @@ import math
 from dataclasses import replace
 from pathlib import Path
 
+import mpmath as mp
 import numpy as np
 import pytest
 from chance_trees import build, leaf
-from ladder import CLOSED_FORM, CLOSED_FORM_RATE
+from ladder import CLOSED_FORM, CLOSED_FORM_RATE, EXACT
 from leaf_tables import table
 
 from distill.allocation import Search
@@ -18,6 +19,7 @@ from distill.family import draw, load_family
 from distill.query import Query
 from distill.table_peer_kernels import matched_on_table
 from distill.timing import tree_of
+from distill.tree_peer_kernels import larger
 from distill.tree_peers import Held, tree_peers
 from distill.voc import price
 
@@ -165,3 +167,38 @@ def test_a_rate_is_that_of_the_best_batch_by_the_static_threshold() -> None:
     first = exact.batch == 1
     assert first.any()
     np.testing.assert_allclose(got[first], one[first], rtol=CLOSED_FORM)
+
+
+def moments_by_integration(gap: float, upper: float, lower: float) -> tuple[mp.mpf, mp.mpf]:
+    """Mean and variance of the larger of N(0, upper) and N(-gap, lower), integrated over its density."""
+    with mp.workdps(30):
+        s, r = mp.sqrt(upper), mp.sqrt(lower)
+
+        def density(x: mp.mpf) -> mp.mpf:
+            own = mp.npdf(x, 0, s) * mp.ncdf((x + gap) / r)
+            return own + mp.npdf(x, -gap, r) * mp.ncdf(x / s)
+
+        cuts = sorted({c + k * w for c, w in ((mp.mpf(0), s), (-mp.mpf(gap), r)) for k in range(-12, 13, 3)})
+        first = mp.quad(lambda x: x * density(x), cuts)
+        return first, mp.quad(lambda x: (x - first) ** 2 * density(x), cuts)
+
+
+@pytest.mark.parametrize("variances", [(1.0, 1.0), (1.0, 0.01), (0.01, 1.0)])
+@pytest.mark.parametrize("gap", [0.0, 0.5, 3.0, 6.0])
+def test_the_larger_of_two_keeps_its_digits_far_from_0(gap: float, variances: tuple[float, float]) -> None:
+    upper, lower = variances
+    lift, var = moments_by_integration(gap, upper, lower)
+    for offset in (0.0, 1e3, -1e3, 1e6, -1e6, 1e9):
+        with mp.workdps(30):
+            mean = float(mp.mpf(offset + gap) + lift)
+        pair = ((offset + gap, upper), (offset, lower))
+        for (m1, v1), (m2, v2) in (pair, pair[::-1]):
+            got = larger(m1, v1, m2, v2)
+            assert got[0] == pytest.approx(mean, rel=CLOSED_FORM, abs=CLOSED_FORM)
+            assert got[1] == pytest.approx(float(var), rel=CLOSED_FORM, abs=EXACT)
+
+
+def test_the_larger_of_two_far_apart_is_the_larger_alone() -> None:
+    assert larger(1e150, 0.0, -1e150, 1e-323) == (1e150, 0.0)  # sds apart beyond the range of doubles
+    assert larger(2.0, 0.0, 2.0, 0.0) == (2.0, 0.0)
+    assert larger(0.0, 4.0, 100.0, 1.0) == (100.0, 1.0)

@@ -282,3 +282,17 @@ def test_the_command_prints_a_row_a_shift(
     assert set(json.loads(out.read_text())["shifts"]) == set(QUICK)
     assert run(call[:2]) == 2
     assert "--shift" in capsys.readouterr().err
+
+
+def test_a_family_of_the_wrong_belief_is_told_before_the_dataset_is_touched(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    (tmp_path / "scorer.onnx").write_bytes(scorer_bytes("linear"))
+    begun: list[object] = []
+    monkeypatch.setattr("distill.validate.validate", lambda *args, **_: begun.append(args) or {})
+    call = ["validate", str(tmp_path / "scorer.onnx"), str(tmp_path / "data"), "--shift", "on-time"]
+    assert run(call) == 2
+    assert not begun
+    said = capsys.readouterr()
+    assert "on-time: belief: must be gaussian for this scorer; got 'win_loss'" in said.err
+    assert not said.out

@@ -11,6 +11,8 @@ from distill.files import write_atomic
 
 if TYPE_CHECKING:
     from distill.family import Family
+    from distill.runtime import Scorer
+    from distill.scorer_inputs import InputKind
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -46,28 +48,32 @@ def run(args: argparse.Namespace) -> None:
     """Run the command."""
     from distill.errors import InputError
     from distill.family import load_family
+    from distill.runtime import Scorer
     from distill.sample_data import family_path
+    from distill.shift import input_of
 
     if args.dataset is None and args.peers:
         raise InputError("peers", "must have a dataset, whose trees they are measured on")
     if args.dataset is None and args.shift is None:
         raise InputError("validate", "must be given a dataset, --shift, or both")
-    # A wrong name is told before the work.
+    # A wrong name, and a family that the scorer cannot read, are told before the work.
     family = None if args.shift is None else load_family(family_path(args.shift))
+    scorer = Scorer.load(args.scorer)
+    kind = None if family is None else input_of(scorer, family)
     figures: dict[str, Any] = {}
     if args.dataset is not None:
-        figures = _on_dataset(args)
-    if family is not None:
-        figures |= _on_shifts(args, family)
+        figures = _on_dataset(args, scorer)
+    if family is not None and kind is not None:
+        figures |= _on_shifts(args, scorer, family, kind)
     if args.out:
         write_atomic(args.out, (json.dumps(figures, indent=1) + "\n").encode())
 
 
-def _on_dataset(args: argparse.Namespace) -> dict[str, Any]:
+def _on_dataset(args: argparse.Namespace, scorer: Scorer) -> dict[str, Any]:
     from distill.sheet import accuracy_table, bound_text, peer_table
     from distill.validate import validate
 
-    figures = validate(args.scorer, args.dataset, seed=args.seed, with_peers=args.peers)
+    figures = validate(scorer, args.dataset, seed=args.seed, with_peers=args.peers)
     accuracy = figures["accuracy"]
     print(f"{args.scorer} on {accuracy['trees']:,} trees of {args.dataset}")
     if figures["part"] == "held_out":
@@ -80,14 +86,12 @@ def _on_dataset(args: argparse.Namespace) -> dict[str, Any]:
     return figures
 
 
-def _on_shifts(args: argparse.Namespace, family: Family) -> dict[str, Any]:
-    from distill.runtime import Scorer
+def _on_shifts(args: argparse.Namespace, scorer: Scorer, family: Family, kind: InputKind) -> dict[str, Any]:
     from distill.sheet import shift_table
-    from distill.shift import input_of, measure_shifts
+    from distill.shift import measure_shifts
     from distill.shifted_families import out_of_reach
 
-    scorer = Scorer.load(args.scorer)
-    gone = out_of_reach(family, input_of(scorer, family))
+    gone = out_of_reach(family, kind)
     figures = measure_shifts(scorer, family, trees=args.trees, seed=args.seed, progress=True)
     print("\n".join(["", *shift_table(figures)]))
     if gone:

@@ -24,6 +24,7 @@ _OUTPUTS: Final = {
     "worth_it": np.bool_,
 }
 _SCALARS: Final = ("pick", "worth_it")
+_TRUTH: Final = np.bool_  # the one type that NumPy casts to numbers and `number_array` refuses
 
 
 class LeafBuffers:
@@ -76,14 +77,14 @@ class LeafBuffers:
         """
         shape = self.shape
         for column in floats:
-            if column.shape != shape:
+            if column.shape != shape or column.dtype.type is _TRUTH:
                 raise ValueError
         if type(remaining) not in (int, float) or not 0 <= remaining <= schema.MAX_ROLLOUTS:
             raise ValueError
         kind = self.kind
         if kind.has_action:
             action = columns["action"]
-            if action.shape != shape:
+            if action.shape != shape or action.dtype.type is _TRUTH:
                 raise ValueError
             np.copyto(self.action, action, casting="same_kind")
             if kind.has_horizon:

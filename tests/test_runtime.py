@@ -403,6 +403,21 @@ def test_hostile_tables_are_scored_flagged_or_refused(start):
         check_fuzzed(start + seed)
 
 
+@pytest.mark.parametrize("name", [*NAMES, "remaining"])
+@pytest.mark.parametrize("kind", [np.bool_, np.complex128, object, np.str_, "m8[s]"])
+def test_a_second_call_refuses_what_the_first_call_does(name: str, kind: type | str) -> None:
+    t = inside_table()
+    wrong = {**t, name: np.asarray(t[name]).astype(kind)}
+    scorer, told = Scorer.from_bytes(scorer_bytes()), []
+    for _ in range(2):
+        for call in (scorer.pick, scorer.score):
+            with pytest.raises(InputError, match=f"^{name}: must hold (whole )?numbers; got ") as e:
+                call(**wrong)
+            told.append(str(e.value))
+        scorer.pick(**t)  # the next call of as many leaves finds its arrays laid out
+    assert len(set(told)) == 1
+
+
 @pytest.mark.slow
 def test_twenty_thousand_hostile_tables():
     for seed in range(20_000):

@@ -26,25 +26,29 @@ from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE, RECORD, WIN_LOSS_TABL
 from distill.table_peer_kernels import matched_on_table, sampled_on_table, sampled_wins
 from distill.timing import Decision, Timing, correlated, decisions, time_calls, tree_decisions, tree_of
 from distill.tree import Floats
-from distill.tree_peers import CORRELATED_MOMENTS, Held, static_of_tree, tree_peers
+from distill.tree_peer_kernels import NODES, SHARES
+from distill.tree_peers import (
+    CORRELATED_MOMENTS,
+    FIRST_ORDER,
+    MOMENTS,
+    ONE,
+    SAMPLES,
+    STATIC,
+    THOMPSON,
+    UCT,
+    Held,
+    static_of_tree,
+    tree_peers,
+)
 
 __all__ = ["Peer", "left_out", "measure_peers", "peers", "timed_cases"]
 
 # Leaf table of one tree and the rollouts left -> a score a leaf; the largest is the pick.
 Peer = Callable[[Mapping[str, Any], float], Floats]
 
-FIRST_ORDER: Final = "first-order closed form"
-ONE: Final = "static VOC of one rollout"
-STATIC: Final = "static closed form"
 AS_NORMALS: Final = "static closed form, leaves as normals"  # of win/loss leaves
-MOMENTS: Final = "moment matching with quadrature"
-SAMPLES: Final = "Monte Carlo in equal time"
-UCT: Final = "UCT"
-THOMPSON: Final = "Thompson sampling"
 _NAMES: Final = (FIRST_ORDER, ONE, STATIC, AS_NORMALS, MOMENTS, SAMPLES, UCT, THOMPSON)
 
-_NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(9)
-_SHARES: Final = _WEIGHTS / _WEIGHTS.sum()
 _COUNTS: Final = (4, 6, 8, 12, 16, 24, 32, 48, 64)  # samples that Monte Carlo may use
 _TIMED: Final = 400
 _MOST_TREES: Final = 1000
@@ -86,7 +90,7 @@ def peers(
         return closed_form_values(WIN_LOSS_TABLE, t, left, batch)[0]
 
     def matching(t: Mapping[str, Any], left: float) -> Floats:
-        return np.asarray(matched_on_table(*flat(t), int(left), batch or 0, _NODES, _SHARES))
+        return np.asarray(matched_on_table(*flat(t), int(left), batch or 0, NODES, SHARES))
 
     def sampled(t: Mapping[str, Any], left: float) -> Floats:
         if not wins:

@@ -9,6 +9,7 @@ threshold: where the leaf's own mean, all others fixed, would change the choice 
 from __future__ import annotations
 
 import math
+from typing import Final
 
 import numpy as np
 
@@ -17,7 +18,14 @@ from distill.closed_form import PEAK
 from distill.kernels import compiled
 from distill.numerics import gain, norm_cdf
 
-__all__ = ["best_other", "larger", "matched_on_tree", "peak", "sampled_on_tree", "sampled_together"]
+__all__ = [
+    "NODES", "SHARES", "best_other", "larger", "matched_on_tree", "peak", "sampled_on_tree",
+    "sampled_together",
+]  # fmt: skip
+
+# Gauss-Hermite rule of nine points for the outcome of a batch, as the expectation of a standard normal.
+NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(9)
+SHARES: Final = _WEIGHTS / _WEIGHTS.sum()
 
 _FAR = 40.0  # standard deviations: the normal density there is 0 in double precision
 

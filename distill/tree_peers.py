@@ -16,15 +16,24 @@ from distill.feature_graph import FeatureGraph
 from distill.query import Query
 from distill.scorer_inputs import RECORD
 from distill.tree import BeliefTree, Floats
-from distill.tree_peer_kernels import matched_on_tree, sampled_on_tree, sampled_together
+from distill.tree_peer_kernels import NODES, SHARES, matched_on_tree, sampled_on_tree, sampled_together
 
-__all__ = ["CORRELATED_MOMENTS", "Held", "static_of_tree", "tree_peers"]
+__all__ = [
+    "CORRELATED_MOMENTS", "FIRST_ORDER", "MOMENTS", "ONE", "SAMPLES", "STATIC", "THOMPSON", "UCT", "Held",
+    "static_of_tree", "tree_peers",
+]  # fmt: skip
 
+# Names of peers, in figures too.
+FIRST_ORDER: Final = "first-order closed form"
+ONE: Final = "static VOC of one rollout"
+STATIC: Final = "static closed form"
+MOMENTS: Final = "moment matching with quadrature"
+SAMPLES: Final = "Monte Carlo in equal time"
+UCT: Final = "UCT"
+THOMPSON: Final = "Thompson sampling"
 CORRELATED_MOMENTS: Final = (
     "correlated leaves: an outcome moves every leaf, and matching their joint moments is what the backup does"
 )
-_NODES, _WEIGHTS = np.polynomial.hermite_e.hermegauss(9)
-_SHARES: Final = _WEIGHTS / _WEIGHTS.sum()
 
 
 @dataclass(frozen=True, eq=False)
@@ -91,7 +100,7 @@ def tree_peers(value: Mapping[str, Any], samples: int, seed: int = 0) -> dict[st
 
     def matching(held: Held) -> Floats:
         place = (held.topology, held.belief, held.remaining, batch or 0)
-        return np.asarray(matched_on_tree(*place, _NODES, _SHARES))
+        return np.asarray(matched_on_tree(*place, NODES, SHARES))
 
     def sampled(held: Held) -> Floats:
         asked = (held.remaining, batch or 0, samples)
@@ -111,11 +120,11 @@ def tree_peers(value: Mapping[str, Any], samples: int, seed: int = 0) -> dict[st
         return scored
 
     return {
-        "first-order closed form": first_order,
-        "static VOC of one rollout": static_of_tree(1),
-        "static closed form": static_of_tree(batch),
-        "moment matching with quadrature": matching,
-        "Monte Carlo in equal time": sampled,
-        "UCT": chosen("uct"),
-        "Thompson sampling": chosen("thompson"),
+        FIRST_ORDER: first_order,
+        ONE: static_of_tree(1),
+        STATIC: static_of_tree(batch),
+        MOMENTS: matching,
+        SAMPLES: sampled,
+        UCT: chosen("uct"),
+        THOMPSON: chosen("thompson"),
     }

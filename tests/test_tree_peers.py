@@ -19,14 +19,13 @@ from distill.family import draw, load_family
 from distill.query import Query
 from distill.table_peer_kernels import matched_on_table
 from distill.timing import tree_of
-from distill.tree_peer_kernels import larger
-from distill.tree_peers import Held, tree_peers
+from distill.tree_peer_kernels import NODES, SHARES, larger
+from distill.tree_peers import MOMENTS, SAMPLES, Held, tree_peers
 from distill.voc import price
 
 FAMILIES = Path(__file__).parents[1] / "datasets" / "families"
 RATE = {"horizon": "inf", "batch": None}
 TWO = {"horizon": "inf", "batch": 2}
-MOMENTS, SAMPLES = "moment matching with quadrature", "Monte Carlo in equal time"
 
 
 def held(tree, remaining: int = 50) -> Held:
@@ -81,14 +80,13 @@ def test_lotteries_of_normals_are_valued_as_they_are(name: str) -> None:
 def test_moments_on_a_tree_of_leaf_tables_are_those_on_the_table() -> None:
     t = table(np.random.default_rng(4), 12, 6)
     t["action"] = np.repeat(np.arange(6), 2)
-    nodes, weights = np.polynomial.hermite_e.hermegauss(9)
     flat = (
         t["gain"] * t["mean"] + t["offset"],
         t["gain"] ** 2 * t["var"],
         t["gain"] ** 2 * t["noise_var"],
         t["action"],
     )
-    expected = matched_on_table(*flat, 50, 2, nodes, weights / weights.sum())
+    expected = matched_on_table(*flat, 50, 2, NODES, SHARES)
     got = tree_peers(TWO, 4)[MOMENTS](held(tree_of(t)))
     large = expected > 1e-6 * expected.max()
     assert large.sum() > 3

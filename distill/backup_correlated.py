@@ -183,10 +183,6 @@ class CorrelatedBackup:
         """d E[Q_a] / d m_i of every root action and leaf; shape (n_actions, n_leaves)."""
         return np.array([x.weight for x in self._actions])
 
-    def sensitivity(self) -> Floats:
-        """d E[Q_a] along every candidate's b, u a move of 1; shape (n_actions, n_leaves)."""
-        return np.array([x.slope for x in self._actions])
-
     def rows(self) -> dict[str, Floats]:
         """The record table at present, name -> column of shape (n_leaves,); see `schema.RECORD_UNITS`."""
         return self.crossings().columns(self._tree.cost)

@@ -37,7 +37,7 @@ from distill.onnx_nodes import IR_VERSION, ML_OPSET, OPSET, Nodes, typed
 from distill.scorer_inputs import InputKind
 from distill.tree import Floats
 
-__all__ = ["TRANSFORMS", "export_scorer", "mapped_back", "with_facts"]
+__all__ = ["TRANSFORMS", "export_scorer", "mapped_back"]
 
 TRANSFORMS: Final = ("sqrt", "log_ratio")
 _LOG_RATIO_LIMIT: Final = 20.0
@@ -105,16 +105,6 @@ def export_scorer(
     if path is not None:
         write_atomic(path, data)
     return data
-
-
-def with_facts(data: bytes, facts: Mapping[str, Any]) -> bytes:
-    """The same file with measured facts (JSON values) under the metadata key `measured`."""
-    model = onnx.load_model_from_string(data)
-    kept = {p.key: p.value for p in model.metadata_props}
-    helper.set_model_props(model, dict(sorted({**kept, "measured": _json(facts)}.items())))
-    out: bytes = model.SerializeToString(deterministic=True)
-    scorer_file.check(out)
-    return out
 
 
 def _assemble(

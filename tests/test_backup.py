@@ -238,15 +238,20 @@ def test_lines_cross_where_they_do_when_no_rollout_follows():
     np.testing.assert_array_equal(row.bend, 0.0)
 
 
-def test_sensitivity_is_what_the_weights_make_of_a_column_of_the_covariance():
+def slopes(b: CorrelatedBackup) -> np.ndarray:
+    """d E[Q_a] along every candidate's column of the covariance, (n_actions, n_leaves), as rows use it."""
+    return np.array([x.slope for x in b._actions])
+
+
+def test_the_slope_of_a_candidate_is_what_the_weights_make_of_a_column_of_the_covariance():
     tree = drawn("shared-aisles", 2)
     b = CorrelatedBackup(tree)
     along = tree.cov / np.sqrt(np.diag(tree.cov))
-    np.testing.assert_allclose(b.sensitivity(), b.influence() @ along, rtol=1e-9, atol=1e-12 * scale_of(tree))
+    np.testing.assert_allclose(slopes(b), b.influence() @ along, rtol=1e-9, atol=1e-12 * scale_of(tree))
     i, d = 1, 1e-4
     moved = CorrelatedBackup(tree)
     moved.update(tree.mean + d * along[:, i], tree.cov)
-    np.testing.assert_allclose((moved.value - b.value) / d, b.sensitivity()[:, i], rtol=1e-2, atol=1e-4)
+    np.testing.assert_allclose((moved.value - b.value) / d, slopes(b)[:, i], rtol=1e-2, atol=1e-4)
 
 
 def test_one_observation_can_raise_one_rival_and_lower_another():

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import subprocess
 import sys
 from pathlib import Path
@@ -22,7 +23,7 @@ from sklearn.preprocessing import MinMaxScaler, StandardScaler
 from distill.calibration import bin_columns
 from distill.converters import convert, folded
 from distill.errors import ExportError
-from distill.export import TRANSFORMS, export_scorer, mapped_back, with_facts
+from distill.export import TRANSFORMS, export_scorer, mapped_back
 from distill.feature_graph import FeatureGraph
 from distill.features import build_graph
 from distill.metrics import Groups
@@ -202,8 +203,15 @@ def test_files_are_clean_and_the_same_in_every_process(tmp_path):
     assert export_scorer(**arguments("boosting"), path=path) == path.read_bytes() == data
 
 
+def with_measured(data: bytes, facts: dict[str, float]) -> bytes:
+    """The same file with the metadata key `measured`, which a file may have."""
+    model = onnx.load_model_from_string(data)
+    model.metadata_props.add(key="measured", value=json.dumps(facts))
+    return model.SerializeToString(deterministic=True)
+
+
 def test_metadata_say_what_the_file_is():
-    scorer = Scorer.from_bytes(with_facts(scorer_bytes(), {"p50_us": 41.5}))
+    scorer = Scorer.from_bytes(with_measured(scorer_bytes(), {"p50_us": 41.5}))
     facts = scorer.facts
     assert facts["format"] == "voc-scorer/2"
     assert facts["transform"] == "log_ratio"

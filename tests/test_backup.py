@@ -11,11 +11,12 @@ import pytest
 from chance_trees import build, leaf
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import BACKUP_FIT, BACKUP_MOMENTS, CLOSED_FORM, FEATURE_TABLE
+from ladder import BACKUP_FIT, BACKUP_MOMENTS, CLOSED_FORM, EXACT, FEATURE_TABLE
 from scipy import stats
 
 from distill import schema
 from distill.backup import Backup, backup_of, max_moments
+from distill.backup_compiled import CompiledBackup
 from distill.backup_correlated import CorrelatedBackup
 from distill.errors import InputError, RefusedError
 from distill.family import draw, load_family
@@ -283,6 +284,19 @@ def test_scale_and_shift_change_units_only(seed, family, scale, shift):
         np.testing.assert_allclose(
             b[name], x * units.get(name, 1.0), rtol=1e-5, atol=1e-5 * units.get(name, 1.0)
         )
+
+
+@pytest.mark.parametrize("offset", [1e3, -1e6, 1e9])
+def test_a_maximum_of_two_keeps_its_variance_far_from_0(offset):
+    """The moments are taken from the larger mean on: means that a double holds exactly change no bit."""
+    for gap in (0.0, 0.5, 3.0):
+        near, far = (build(("max", [leaf(at + gap, 1), leaf(at, 2)]), leaf(at, 1)) for at in (0.0, offset))
+        pairs = [(Backup(near), Backup(far)), (CompiledBackup(near), CompiledBackup(far))]
+        dense = [dataclasses.replace(t, var=None, cov=np.diag(t.var)) for t in (near, far)]
+        pairs.append((CorrelatedBackup(dense[0]), CorrelatedBackup(dense[1])))
+        for a, b in pairs:
+            assert a.value_var[0] > 0.5
+            np.testing.assert_allclose(b.value_var, a.value_var, rtol=EXACT, atol=EXACT)
 
 
 @settings(deadline=None, max_examples=15, derandomize=True)

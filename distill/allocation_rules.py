@@ -22,7 +22,7 @@ from distill.beliefs import (
 from distill.kernels import compiled
 from distill.tree import Floats, Ints
 
-__all__ = ["RULES", "Belief", "Topology", "observe", "pass_curves", "pick", "run", "scale"]
+__all__ = ["RULES", "Belief", "Topology", "observe", "pass_curves", "pass_values", "pick", "run", "scale"]
 
 RULES: Final = ("even", "uct", "thompson", "static_rate")
 _EVEN, _UCT, _THOMPSON = 0, 1, 2
@@ -171,9 +171,10 @@ def _even(rng, visits):  # type: ignore[no-untyped-def]
 
 
 @compiled
-def _backup(t, leaf_value):  # type: ignore[no-untyped-def]
-    """Value of every node when leaf values are as given; children come after parents."""
-    value = np.where(t.is_decision, -np.inf, 0.0)
+def pass_values(t, leaf_value, value):  # type: ignore[no-untyped-def]
+    """Value of every node when leaf values are as given, into `value`; children come after parents."""
+    for v in range(len(t.parent)):
+        value[v] = -np.inf if t.is_decision[v] else 0.0
     for i in range(len(t.leaf)):
         value[t.leaf[i]] = leaf_value[i]
     for v in range(len(t.parent) - 1, 0, -1):
@@ -183,6 +184,13 @@ def _backup(t, leaf_value):  # type: ignore[no-untyped-def]
             value[p] = max(value[p], q)
         else:
             value[p] += t.prob[v] * q
+
+
+@compiled
+def _values(t, leaf_value):  # type: ignore[no-untyped-def]
+    """The same as an array of its own."""
+    value = np.empty(len(t.parent))
+    pass_values(t, leaf_value, value)
     return value
 
 
@@ -202,7 +210,7 @@ def _by_chance(rng, t, v):  # type: ignore[no-untyped-def]
 
 @compiled
 def _uct(rng, t, b, c):  # type: ignore[no-untyped-def]
-    value = _backup(t, b.mean)
+    value = _values(t, b.mean)
     visits = np.zeros(len(t.parent))
     for i in range(len(t.leaf)):
         visits[t.leaf[i]] = b.visits[i]
@@ -238,7 +246,7 @@ def _thompson(rng, t, b):  # type: ignore[no-untyped-def]
             draw[i] = b.low[i] + (b.high[i] - b.low[i]) * rng.beta(b.alpha[i], b.beta[i])
         else:
             draw[i] = b.mean[i] + math.sqrt(b.var[i]) * rng.standard_normal()
-    value = _backup(t, draw)
+    value = _values(t, draw)
     v = 0
     while t.first[v] < t.first[v + 1]:
         if not t.is_decision[v]:
@@ -291,7 +299,7 @@ def _static_rate(rng, t, b, remaining):  # type: ignore[no-untyped-def]
     The root's value as a function of one node's value x is max(C, A x + B), passed down from the root.
     """
     n = len(t.parent)
-    value = _backup(t, b.mean)
+    value = _values(t, b.mean)
     A, B, C = np.ones(n), np.zeros(n), np.full(n, -np.inf)
     pass_curves(t, value, 0, A, B, C)
     best, best_rate = -1, 0.0

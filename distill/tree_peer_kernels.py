@@ -13,7 +13,7 @@ from typing import Final
 
 import numpy as np
 
-from distill.allocation_rules import pass_curves
+from distill.allocation_rules import pass_curves, pass_values
 from distill.closed_form import PEAK
 from distill.kernels import compiled
 from distill.numerics import gain, norm_cdf
@@ -71,22 +71,6 @@ def peak(gap, v, n, left):  # type: ignore[no-untyped-def]
 
 
 @compiled
-def _values(t, leaf_value, value):  # type: ignore[no-untyped-def]
-    """Value of every node when leaf values are as given, into `value`; children come after parents."""
-    for v in range(len(t.parent)):
-        value[v] = -np.inf if t.is_decision[v] else 0.0
-    for i in range(len(t.leaf)):
-        value[t.leaf[i]] = leaf_value[i]
-    for v in range(len(t.parent) - 1, 0, -1):
-        p = t.parent[v]
-        q = t.reward[v] + t.discount[v] * value[v]
-        if t.is_decision[p]:
-            value[p] = max(value[p], q)
-        else:
-            value[p] += t.prob[v] * q
-
-
-@compiled
 def _curves(t, value, A, B, C):  # type: ignore[no-untyped-def]
     """The value of a node's root action as max(C, A x + B) of the node's own value x, all others fixed."""
     for j in range(t.first[0], t.first[1]):
@@ -112,7 +96,7 @@ def _batches(t, b, action, left, batch):  # type: ignore[no-untyped-def]
     """Rollouts of each leaf's batch; 0 where no batch is worth anything."""
     n = len(t.parent)
     value, A, B, C = np.empty(n), np.ones(n), np.zeros(n), np.empty(n)
-    _values(t, b.mean, value)
+    pass_values(t, b.mean, value)
     _curves(t, value, A, B, C)
     n_actions = t.first[1] - t.first[0]
     own = np.empty(n_actions)
@@ -220,7 +204,7 @@ def sampled_on_tree(rng, t, b, left, batch, samples):  # type: ignore[no-untyped
             else:
                 z[s, i] = rng.standard_normal()
                 x[s, i] = b.mean[i] + math.sqrt(b.var[i]) * z[s, i]
-        _values(t, x[s], value)
+        pass_values(t, x[s], value)
         _curves(t, value, A, B[s], C[s])
         for a in range(n_actions):
             w = t.child[t.first[0] + a]
@@ -292,7 +276,7 @@ def sampled_together(rng, t, b, root, left, batch, samples):  # type: ignore[no-
                 step = (y - x[s, i] - math.sqrt(b.noise[i] / k) * noise[s]) / seen
                 for j in range(n_leaves):
                     moved_to[j] = x[s, j] + b.cov[j, i] * step
-                _values(t, moved_to, value)
+                pass_values(t, moved_to, value)
                 for a in range(n_actions):
                     w = t.child[t.first[0] + a]
                     own[a] += (t.reward[w] + t.discount[w] * value[w]) / samples

@@ -30,3 +30,11 @@ BACKUP_COMPILED = 1e-9  # two libraries' exp and log: tails to x = -37 magnify r
 BETA_CDF = 5e-3  # of a beta distribution in the features: a normal form in float32, counts from 1/2 up
 BETA_TABLE = 0.02  # of a support of size 1: 16 cells for narrow beliefs beside wide ones; a start, no result
 ONNX_ELSEWHERE = 1e-4  # relative: another processor or WebAssembly rounds sums of float32 otherwise
+FEATURE_ORDER = 1e-4  # of float32 features, relative and absolute: sums over leaves taken in another order
+BETA_ORDER = 1e-3  # relative, of win/loss starts down to 1e-9: the same, behind products of float32 betas
+START_TYPICAL = 0.05  # of a value: half of the starts of best candidates; a start, no result
+START_MOST = 0.25  # of a value: nine in ten of them
+START_FORGONE = 0.4  # share forgone by picks of the win/loss start; a random pick leaves 0.7
+KINK_OF_NINE = 0.1  # of a value: nine Gauss-Hermite points miss a kink within half an sd by 9 % at most
+KINK_OF_SIBLINGS = 0.25  # the same where the maximum of siblings, a kink by itself, is taken for a normal
+SAMPLED_BEST = 0.05  # of a value: the largest of means over 300 samples is too high by one over their root

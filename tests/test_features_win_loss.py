@@ -12,7 +12,7 @@ import onnxruntime
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import BETA_TABLE, FEATURE_TABLE, RELATIVE_TAIL
+from ladder import BETA_ORDER, BETA_TABLE, CLOSED_FORM, FEATURE_TABLE, RELATIVE_TAIL, START_FORGONE
 from scipy import special, stats
 
 from distill.family import draw, load_family
@@ -87,7 +87,7 @@ def test_single_leaf_actions_start_at_the_exact_static_rate():
         t = table(np.random.default_rng(seed), 6, 6, remaining=8)
         exact = price(tree_of({k: t[k] for k in WIN_LOSS_TABLE.columns}), Query(0.0, None, 8))
         got = graph.matrix(t)
-        np.testing.assert_allclose(got.first_order, exact.voc, rtol=1e-7, atol=1e-12)
+        np.testing.assert_allclose(got.first_order, exact.voc, rtol=CLOSED_FORM, atol=CLOSED_FORM)
         np.testing.assert_array_equal(got.batch[exact.voc > 1e-9], exact.batch[exact.voc > 1e-9])
 
 
@@ -97,7 +97,7 @@ def test_a_fixed_batch_starts_at_its_own_static_value(batch):
     t = table(np.random.default_rng(9), 12, 4, remaining=100)
     exact = price(tree_of({k: t[k] for k in WIN_LOSS_TABLE.columns}), Query(0.0, batch, 100)).voc
     got = graph.matrix(t)
-    np.testing.assert_allclose(got.first_order, exact, rtol=1e-7, atol=1e-12)
+    np.testing.assert_allclose(got.first_order, exact, rtol=CLOSED_FORM, atol=CLOSED_FORM)
     assert np.all(got.batch == batch)
 
 
@@ -117,7 +117,7 @@ def test_two_leaf_actions_start_near_the_dynamic_rate():
             total += 1
             worst += 1 - exact[int(np.argmax(start))] / best
     assert total >= 10
-    assert worst / total < 0.4  # a start, no answer: a random pick leaves 0.7
+    assert worst / total < START_FORGONE
 
 
 @settings(deadline=None, max_examples=25, derandomize=True)
@@ -129,8 +129,8 @@ def test_scale_and_shift_of_utilities_change_no_feature(seed, scale, shift):
     moved = {**t, "low": t["low"] * scale, "high": t["high"] * scale, "offset": (t["offset"] + shift) * scale}
     a, b = GRAPH.matrix(t), GRAPH.matrix(moved)
     live = a.first_order > 1e-9
-    np.testing.assert_allclose(b.unit, a.unit * scale, rtol=1e-3)
-    np.testing.assert_allclose(b.first_order[live], a.first_order[live] * scale, rtol=1e-2)
+    np.testing.assert_allclose(b.unit, a.unit * scale, rtol=RELATIVE_TAIL)
+    np.testing.assert_allclose(b.first_order[live], a.first_order[live] * scale, rtol=RELATIVE_TAIL)
 
 
 @settings(deadline=None, max_examples=20, derandomize=True)
@@ -145,7 +145,7 @@ def test_relabelling_leaves_and_actions_permutes_the_rows(seed):
     moved["action"] = name[moved["action"]]
     a, b = GRAPH.matrix(t), GRAPH.matrix(moved)
     live = a.first_order[order] > 1e-9
-    np.testing.assert_allclose(b.first_order[live], a.first_order[order][live], rtol=1e-3)
+    np.testing.assert_allclose(b.first_order[live], a.first_order[order][live], rtol=BETA_ORDER)
 
 
 @pytest.mark.parametrize("horizon", [math.inf, 0.0, 4.0])
@@ -176,7 +176,7 @@ def test_values_far_from_zero_change_no_feature():
     a, b = GRAPH.matrix(t), GRAPH.matrix(moved)
     live = a.first_order > 1e-6
     assert np.count_nonzero(live) >= 5
-    np.testing.assert_allclose(b.first_order[live], a.first_order[live], rtol=1e-3)
+    np.testing.assert_allclose(b.first_order[live], a.first_order[live], rtol=BETA_ORDER)
 
 
 @pytest.mark.parametrize("trials", [1e6, 1e9])

@@ -3,11 +3,15 @@
 from __future__ import annotations
 
 import hashlib
+import json
 import os
 import tempfile
 from pathlib import Path
+from typing import Any
 
-__all__ = ["sha256_of", "write_atomic"]
+from distill.errors import InputError
+
+__all__ = ["read_json", "sha256_of", "write_atomic"]
 
 
 def write_atomic(path: str | os.PathLike[str], data: bytes) -> None:
@@ -39,3 +43,11 @@ def sha256_of(path: str | os.PathLike[str]) -> str:
     """SHA-256 of a file's bytes, as hexadecimal text."""
     with Path(path).open("rb") as f:
         return hashlib.file_digest(f, "sha256").hexdigest()
+
+
+def read_json(path: str | os.PathLike[str]) -> Any:
+    """What a JSON file of our own holds; InputError where it is no valid JSON. OSError passes through."""
+    try:
+        return json.loads(Path(path).read_bytes())
+    except ValueError:
+        raise InputError(str(path), "must be valid JSON") from None

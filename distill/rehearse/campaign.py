@@ -5,6 +5,7 @@ from __future__ import annotations
 import contextlib
 import hashlib
 import json
+import math
 import os
 import threading
 import time
@@ -18,7 +19,7 @@ import numpy as np
 
 from distill.allocation import Search as Posterior
 from distill.errors import InputError, RefusedError
-from distill.files import sha256_of, write_atomic
+from distill.files import read_json, sha256_of, write_atomic
 from distill.rehearse.catalogue import make_problem
 from distill.rehearse.claim import claim
 from distill.rehearse.loop import Budget
@@ -52,7 +53,10 @@ class Campaign:
         they are. A policy that ends in ":prior=auto" has its prior tuned in the same way; one that ends in
         ":stop=auto" stops at the highest price that costs no regret on these decisions.
     wide : those of the problems that are rehearsed under `wide_budgets` too.
-    slowest : seconds of choosing a decision, where only rollouts are limited; slower choosers are left out.
+    stops, plenty : policies, with and without ":stop=auto", that play under budgets of their own, alone:
+        what stopping saves shows where rollouts are many.
+    slowest : seconds of choosing a decision, where only rollouts are limited; slower choosers are left out,
+        `stops` apart.
     dearest : the same for exact policies where time is limited, outside the `wide` problems; None: no limit.
     """
 
@@ -63,15 +67,19 @@ class Campaign:
     tuning_seeds: int = 100
     wide: tuple[str, ...] = ()
     wide_budgets: tuple[str, ...] = ()
+    stops: tuple[str, ...] = ()
+    plenty: tuple[str, ...] = ()
     slowest: float = 0.25
     dearest: float | None = None
 
     def __post_init__(self) -> None:
         for name in self.problems:
             make_problem(name)
-        for name in (*self.budgets, *self.wide_budgets):
+        for name in (*self.budgets, *self.wide_budgets, *self.plenty):
             Budget.parse(name)
-        for name in self.policies:
+        if twice := {*self.budgets, *self.wide_budgets} & {*self.plenty}:
+            raise InputError("plenty", "must be other budgets than the policies'", min(twice))
+        for name in self.all_policies:
             make_policy(untuned(name))
             if name.count("=auto") > 1:
                 raise InputError(f"policy {name!r}", "must leave one option to tuning at most")
@@ -82,7 +90,16 @@ class Campaign:
 
     def budgets_of(self, problem: str) -> tuple[str, ...]:
         """The budgets under which a problem is rehearsed."""
-        return (*self.budgets, *(self.wide_budgets if problem in self.wide else ()))
+        return (*self.budgets, *(self.wide_budgets if problem in self.wide else ()), *self.plenty)
+
+    def policies_under(self, budget: str) -> tuple[str, ...]:
+        """The policies that play under a budget."""
+        return self.stops if budget in self.plenty else self.policies
+
+    @property
+    def all_policies(self) -> tuple[str, ...]:
+        """All that play under some budget."""
+        return (*self.policies, *self.stops)
 
 
 @dataclass(frozen=True, eq=False)
@@ -134,7 +151,7 @@ def _checked(campaign: Campaign) -> dict[str, str]:
     names: dict[str, str] = {}
     files: dict[str, str] = {}
     tree = make_problem(campaign.problems[0]).draw(TUNING_SEED).tree if campaign.problems else None
-    for spec in campaign.policies:
+    for spec in campaign.all_policies:
         if names.setdefault(name_of(spec), spec) != spec:
             rule = f"must not have the name of {names[name_of(spec)]!r}; scorers take the option name=..."
             raise InputError(f"policy {spec!r}", rule, name_of(spec))
@@ -154,27 +171,27 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
     problem = Remembered(make_problem(name))
     tree = problem.draw(TUNING_SEED).tree
     out = Results(campaign, kinds={name: _kind(tree)})
-    tuned: dict[int, dict[str, str]] = {}
+    tuned: dict[tuple[int, tuple[str, ...]], dict[str, str]] = {}
 
     def plays(text: str) -> bool:
         return _unreadable(campaign, text, tree) is None and _refused(make_policy(text), tree) is None
 
     for text in campaign.budgets_of(name):
         budget = Budget.parse(text)
-        rollouts = budget.room(0, 0.0)
-        if rollouts not in tuned:
+        rollouts, specs = budget.room(0, 0.0), campaign.policies_under(text)
+        if (rollouts, specs) not in tuned:
             where, seeds = folder / "tuning", campaign.tuning_seeds
-            rows = tune(campaign.policies, problem, rollouts, where, seeds=seeds, plays=plays)
+            rows = tune(specs, problem, rollouts, where, seeds=seeds, plays=plays)
             out.tuning.extend(rows)
-            tuned[rollouts] = {row["policy"]: row["chosen"] for row in rows}
-        texts = {spec: tuned[rollouts].get(spec, untuned(spec)) for spec in campaign.policies}
+            tuned[rollouts, specs] = {row["policy"]: row["chosen"] for row in rows}
+        texts = {spec: tuned[rollouts, specs].get(spec, untuned(spec)) for spec in specs}
         reasons = _reasons(campaign, name, texts, tree, budget, _place(folder, name, text))
         out.left_out.extend(
             {"problem": name, "budget": text, "policy": name_of(spec), "why": why}
             for spec, why in reasons.items()
             if why is not None
         )
-        policies = [named(make_policy(texts[spec]), spec) for spec, why in reasons.items() if why is None]
+        policies = [named(make_policy(texts[spec]), spec) for spec in specs if reasons[spec] is None]
         where, seeds = folder / "cells", campaign.seeds
         out.cells.extend(rehearse([problem], policies, [budget], where, seeds=seeds, first_seed=_FIRST_SEED))
         write_atomic(_place(folder, name, text).with_suffix(".done"), b"")
@@ -203,24 +220,22 @@ def _reasons(
 
     What was decided once is kept in a file: some reasons are times, which a resumed run measures anew.
     """
-    decided: dict[str, str | None] = {}
-    if kept.exists():
-        try:
-            decided = json.loads(kept.read_text())
-        except ValueError:
-            raise InputError(str(kept), "must be valid JSON") from None
+    decided: dict[str, str | None] = read_json(kept) if kept.exists() else {}
     for spec, text in texts.items():
         if spec not in decided:
-            decided[spec] = _why_not(campaign, problem, text, tree, budget)
+            slowest = math.inf if spec in campaign.stops else campaign.slowest
+            decided[spec] = _why_not(campaign, problem, text, tree, budget, slowest)
     write_atomic(kept, (json.dumps(decided, indent=1) + "\n").encode())
     return {spec: decided[spec] for spec in texts}
 
 
-def _why_not(campaign: Campaign, problem: str, text: str, tree: BeliefTree, budget: Budget) -> str | None:
+def _why_not(
+    campaign: Campaign, problem: str, text: str, tree: BeliefTree, budget: Budget, slowest: float
+) -> str | None:
     if (reason := _unreadable(campaign, text, tree)) is not None:
         return reason
     policy = make_policy(text)
-    most = campaign.slowest / max(budget.room(0, 0.0), 1) if budget.seconds is None else budget.seconds
+    most = slowest / max(budget.room(0, 0.0), 1) if budget.seconds is None else budget.seconds
     try:
         tried = [_one_choice(policy, tree)]  # what is used for the first time takes longer
         while len(tried) < 2 or (min(tried) > most and len(tried) < _TRIES and sum(tried) < _TRIED_SECONDS):
@@ -245,7 +260,7 @@ def _unreadable(campaign: Campaign, text: str, tree: BeliefTree) -> str | None:
     scorer = _scorer_of(text)
     if not ScorerInputs.fit(scorer, tree):
         return "the scorer does not take such trees"
-    files = [_scorer_of(untuned(spec)) for spec in campaign.policies if spec.startswith(_SCORER)]
+    files = [_scorer_of(untuned(spec)) for spec in campaign.all_policies if spec.startswith(_SCORER)]
     if scorer.kind is RECORD and any(f.kind is not RECORD and ScorerInputs.fit(f, tree) for f in files):
         return "reads records, and another scorer reads the plain leaf table of such trees"
     return None

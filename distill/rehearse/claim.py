@@ -13,7 +13,7 @@ from distill.files import write_atomic
 __all__ = ["claim"]
 
 _FIXED: Final = ("seeds", "tuning_seeds")
-_KEPT: Final = ("problems", "budgets", "policies", "wide", "wide_budgets")
+_KEPT: Final = ("problems", "budgets", "policies", "wide", "wide_budgets", "stops", "plenty")
 
 
 def claim(folder: Path, asked: Mapping[str, Any], scorers: Mapping[str, str]) -> None:

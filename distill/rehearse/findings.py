@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 import zlib
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import fields
@@ -12,7 +13,7 @@ import numpy as np
 
 from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.loop import Budget
-from distill.rehearse.rehearsal import Cell, Compared, compare, resampled
+from distill.rehearse.rehearsal import Cell, Compared, compare, interval, resampled
 from distill.rehearse.tuning import name_of
 from distill.tree import Floats
 
@@ -283,17 +284,35 @@ def break_even(results: Results, places: Mapping[tuple[str, Budget], Place]) -> 
 
 
 def stopping(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list[dict[str, Any]]:
-    """Policies that stop early against the same without: rollouts saved, and the ratio of regrets."""
-    pairs = {
-        name_of(spec): name_of(spec[: spec.index(":stop=")])
-        for spec in results.campaign.policies
-        if ":stop=" in spec
-    }
+    """Policies that stop early against the same without: rollouts saved, and the ratio of regrets.
+
+    saved : share of the rollouts. price : of a rollout, in units of the tree's scale, None where no price
+    was free of loss in tuning. lost : regret more than that of going on, with `lost_low` and `lost_high`, a
+    95 % paired interval; value units. free : whether that interval reaches down to 0.
+    """
+    specs = [spec for spec in results.campaign.all_policies if ":stop=" in spec]
+    tuned = {(row["problem"], row["rollouts"], row["policy"]): row["chosen"] for row in results.tuning}
     rows = []
-    for here in places.values():
-        for stops, goes_on in pairs.items():
+    for (problem, budget), here in places.items():
+        for spec in specs:
+            stops, goes_on = name_of(spec), name_of(spec[: spec.index(":stop=")])
             if stops in here and goes_on in here:
+                text = tuned.get((problem, budget.room(0, 0.0), spec), spec)
+                price = re.search(r":stop=([\d.e+-]+)", text)
                 (found,) = compare(list(here.values()), stops, [goes_on])
-                saved = 1 - here[stops].rollouts.sum() / max(here[goes_on].rollouts.sum(), 1)
-                rows.append({**compared(found), "saved": plain(saved)})
+                ours, theirs = here[stops], here[goes_on]
+                saved = 1 - ours.rollouts.sum() / max(theirs.rollouts.sum(), 1)
+                lost = ours.measured - theirs.measured
+                low, high = interval(lost)
+                rows.append(
+                    {
+                        **compared(found),
+                        "saved": plain(saved),
+                        "price": float(price[1]) if price else None,
+                        "lost": plain(lost.mean()),
+                        "lost_low": plain(low),
+                        "lost_high": plain(high),
+                        "free": low <= 0,
+                    }
+                )
     return rows

@@ -5,8 +5,10 @@ from __future__ import annotations
 import math
 import re
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from itertools import pairwise
+from typing import Any
 
 import numpy as np
 
@@ -21,7 +23,7 @@ from distill.rehearse.search import posterior_means
 from distill.tree import BeliefTree, Floats
 
 __all__ = [
-    "Budget", "Decided", "decide", "expected_loss", "expected_maxima", "posterior_means",
+    "Budget", "Decided", "decide", "decide_at_prices", "expected_loss", "expected_maxima", "posterior_means",
 ]  # fmt: skip
 
 _NO_ROLLOUTS = Query(batch=None, remaining=0)  # values alone: nothing is left to price
@@ -117,6 +119,7 @@ class Decided:
     rollouts : spent. choosing : time of the policy and of belief updates.
     stopped : whether the policy stopped before the budget was used.
     choices : made; fallbacks : those of them that the policy's own values did not make.
+    action : the root action acted on.
     """
 
     regret: float
@@ -127,6 +130,12 @@ class Decided:
     stopped: bool
     choices: int
     fallbacks: int
+    action: int
+
+    @property
+    def measured(self) -> float:
+        """The regret to compare by: `expected_regret` where that is known, else `regret`."""
+        return self.regret if math.isnan(self.expected_regret) else self.expected_regret
 
 
 def _whole(rollouts: float) -> int:
@@ -153,6 +162,45 @@ def decide(
     rehearsed, and policies differ by nothing but their choices and the time those take. With
     `budget.busy` rollouts really take at least their stated cost, and the clock counts what they took.
     """
+    return _searched(draw, policy, budget, rng, values or expected_maxima, clock)[0][-1]
+
+
+def decide_at_prices(
+    draw: Draw,
+    policy: Policy,
+    budget: Budget,
+    rng: np.random.Generator,
+    prices: Sequence[float],
+    *,
+    values: Callable[[BeliefTree], Floats] | None = None,
+    clock: Callable[[], float] = time.perf_counter,
+) -> tuple[list[Decided], Floats]:
+    """What `decide` gives at each price of a rollout, from one search; last, what it gives at none.
+
+    policy : one that can `watch`, made without a price. prices : falling, in units of the tree's scale.
+    A search with a price makes the choices of one without, until it stops: so the latter passes every
+    place where the former end.
+
+    Returns the decisions, and what each price lost, shape (n_prices,), value units: the regret more than
+    without a price, on average over what the whole search leaves open where `Decided.expected_regret` is
+    known. That is 0 unless another action is taken, so it has far less noise than a difference of regrets.
+    """
+    if any(not high > low for high, low in pairwise(prices)):
+        raise InputError("prices", "must fall from one to the next", list(prices))
+    if prices and getattr(policy, "watch", None) is None:
+        raise InputError(f"policy {policy.name}", "has no price to stop at")
+    return _searched(draw, policy, budget, rng, values or expected_maxima, clock, prices)
+
+
+def _searched(
+    draw: Draw,
+    policy: Policy,
+    budget: Budget,
+    rng: np.random.Generator,
+    values: Callable[[BeliefTree], Floats],
+    clock: Callable[[], float],
+    prices: Sequence[float] = (),
+) -> tuple[list[Decided], Floats]:
     posterior = Posterior(draw.tree)
     learn = getattr(policy, "observe", None)
     own_beliefs = getattr(policy, "own_beliefs", False)
@@ -160,6 +208,19 @@ def decide(
     if (expect := getattr(policy, "expect", None)) is not None:
         expect(budget.rollout_seconds)
     spent, elapsed, stopped, choices, fallbacks = 0, 0.0, False, 0, 0
+
+    def ended() -> Decided:
+        tree = posterior.tree()
+        action = int(np.argmax(values(tree)))
+        expected = expected_loss(tree, action) if _is_known(draw) else math.nan
+        by_mean = draw.regret(int(np.argmax(posterior_means(tree))))
+        counts = spent, elapsed - rolling, stopped, choices, fallbacks
+        return Decided(draw.regret(action), by_mean, expected, *counts, action)
+
+    at_prices: list[Decided] = []
+    watched: Any = policy  # it has `watch` and `worth` where there are prices
+    if prices:
+        watched.watch(prices[0])
     started = clock()
     policy.begin(draw.tree)
     elapsed += clock() - started
@@ -170,6 +231,9 @@ def decide(
         if choice is None:
             stopped = True
             break
+        over = len(prices) and sum(watched.worth <= price for price in prices[len(at_prices) :])
+        if over:
+            at_prices += [replace(ended(), stopped=True)] * over
         rollouts = min(choice.rollouts, budget.room(spent, elapsed))
         if rollouts == 0:  # the policy thought the last rollout away
             break
@@ -192,20 +256,18 @@ def decide(
             learn(choice.leaf, observed, rollouts)
         elapsed += clock() - started + cost
         spent += rollouts
-    tree = posterior.tree()
-    worth = (values or expected_maxima)(tree)
-    action = int(np.argmax(worth))
-    known = draw.believed and not tree.has_chance
-    return Decided(
-        regret=draw.regret(action),
-        expected_regret=expected_loss(tree, action) if known else math.nan,
-        regret_by_mean=draw.regret(int(np.argmax(posterior_means(tree)))),
-        rollouts=spent,
-        choosing=elapsed - rolling,
-        stopped=stopped,
-        choices=choices,
-        fallbacks=fallbacks,
-    )
+    end = ended()
+    at_prices += [end] * (len(prices) - len(at_prices))
+    lost = np.zeros(0)
+    if prices:
+        worth = expected_maxima(posterior.tree()) if _is_known(draw) else draw.worth
+        lost = worth[end.action] - worth[[at.action for at in at_prices]]
+    return [*at_prices, end], lost
+
+
+def _is_known(draw: Draw) -> bool:
+    """Whether the tree's beliefs tell in closed form what is lost on average over all they leave open."""
+    return draw.believed and not draw.tree.has_chance
 
 
 def expected_maxima(tree: BeliefTree) -> Floats:

@@ -33,6 +33,7 @@ _WIDE: Final = (
     "tree-4x4^1-winloss", "taxi", "tree-2x8^1-noise1", "tree-4x4^1-noise4", "tree-3x2^2-noise4-chance",
 )  # fmt: skip
 _ENDS: Final = ("128", "2.56ms@20us", "640ms@5ms")
+_PLENTY: Final = ("512", "2048")  # rollouts enough for many decisions to be clear before the last one
 _SLOWEST: Final = 2.0
 
 _PLANS: Final = {
@@ -49,6 +50,7 @@ _PLANS: Final = {
         policies=(*_BASELINES[1:], "exact-dynamic-rate"),  # an even search is nobody's rival
         wide=_WIDE,
         wide_budgets=_ENDS,
+        plenty=_PLENTY,
         slowest=0.03,
         dearest=0.045,
     ),
@@ -56,10 +58,10 @@ _PLANS: Final = {
 # How scorer files are used: in turns with the closed form, then alone for the last half rollout a leaf; or
 # after the closed form, alone for the last two rollouts a leaf; never where a scoring takes over a fifth of
 # a rollout's time. In the full plan the first file of each kind of inputs is played in both ways, and in the
-# first with a tuned prior, and stopping early; others with a tuned prior.
+# first with a tuned prior, where rollouts are plenty with and without stopping; others with a tuned prior.
 _USE: Final = ":late=0.5:every=2:share=0.2"
 _LATE: Final = ":late=2:share=0.2"
-_TUNED_USES: Final = (":prior=auto", ":stop=auto")
+_STOPS: Final = (":late=0.5", ":late=0.5:stop=auto")  # where rollouts are plenty, the closed form is fast
 
 
 def plan(
@@ -86,18 +88,23 @@ def plan(
             raise InputError(f"--{what}", "must be given without --quick or --full")
     chosen = tuple(policies) or (base.policies if base else _BASELINES)
     full = name == "full"
+    stops: list[str] = []
     inputs: set[InputKind | None] = set()
     for file in scorers:
         uses = ["", _USE]
         if full:
             kind = Scorer.load(file).kind
-            first = [_USE, _LATE, *(_USE + x for x in _TUNED_USES)]
-            uses = [f"{_USE}:prior=auto"] if kind in inputs else first
+            uses = [f"{_USE}:prior=auto"]
+            if kind not in inputs:
+                uses = [_USE, _LATE, *uses]
+                stops += [f"scorer:{file}{use}" for use in _STOPS]
             inputs.add(kind)
         chosen += tuple(f"scorer:{file}{use}" for use in uses)
     return Campaign(
         wide=base.wide if base else (),
         wide_budgets=base.wide_budgets if base and not budgets else (),
+        stops=tuple(stops),
+        plenty=base.plenty if base and stops and not budgets else (),
         problems=tuple(problems) or (base.problems if base else ()),
         budgets=tuple(budgets) or (base.budgets if base else ()),
         slowest=base.slowest if base else _SLOWEST,

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import NamedTuple, Protocol
 
@@ -32,7 +33,9 @@ class Policy(Protocol):
     `distill.allocation.Search.observe` takes, on the policy's time, for beliefs of its own;
     `expect(rollout_seconds)`, called before `begin` with the cost of a rollout, 0 where that is not
     known; `suits(tree)`, whether it can search such trees at all; `own_beliefs` = True where `observe`
-    keeps beliefs that it chooses by in place of the tree's, whose upkeep is then not charged.
+    keeps beliefs that it chooses by in place of the tree's, whose upkeep is then not charged;
+    `watch(most)`, after which it never stops early but has in `worth`, after each choice, what the best
+    rollout is worth in units of the tree's scale, where that is at most `most`, else infinity.
     """
 
     @property
@@ -154,6 +157,16 @@ class WithPrior:
         """Whether the policy can search such trees."""
         suits = getattr(self._policy, "suits", None)
         return suits is None or bool(suits(tree))
+
+    @property
+    def watch(self) -> Callable[[float], None] | None:
+        """The policy's, where it has a price to stop at."""
+        return getattr(self._policy, "watch", None)
+
+    @property
+    def worth(self) -> float:
+        """What the best rollout is worth under the own beliefs, to a policy that watches."""
+        return float(getattr(self._policy, "worth", np.inf))
 
 
 def leaf_actions(tree: BeliefTree) -> Ints:

@@ -19,7 +19,7 @@ from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.findings import plain
 from distill.rehearse.policy_specs import scorer_file
 from distill.rehearse.rehearsal import Cell, interval
-from distill.rehearse.results_tables import every_cell, short_table
+from distill.rehearse.results_tables import every_cell, short_table, stopping_table
 from distill.rehearse.tuning import name_of, untuned
 
 __all__ = ["FORMAT", "summarise", "write_results"]
@@ -67,7 +67,7 @@ def summarise(results: Results) -> dict[str, Any]:
 
 
 def write_results(results: Results, folder: Path) -> dict[str, Any]:
-    """Leave summary.json, cells.parquet and two Markdown tables beside the decisions; returns the summary."""
+    """Leave summary.json, cells.parquet and Markdown tables beside the decisions; returns the summary."""
     summary = summarise(results)
     write_atomic(folder / "summary.json", (json.dumps(summary, indent=1, allow_nan=False) + "\n").encode())
     buffer = io.BytesIO()
@@ -75,6 +75,8 @@ def write_results(results: Results, folder: Path) -> dict[str, Any]:
     write_atomic(folder / "cells.parquet", buffer.getvalue())
     write_atomic(folder / "table.md", ("\n".join(short_table(summary)) + "\n").encode())
     write_atomic(folder / "cells.md", ("\n".join(every_cell(summary)) + "\n").encode())
+    if summary["stopping"]:
+        write_atomic(folder / "stopping.md", ("\n".join(stopping_table(summary)) + "\n").encode())
     return summary
 
 
@@ -114,7 +116,7 @@ def _flat(row: Mapping[str, Any]) -> dict[str, Any]:
 def _files(campaign: Campaign) -> list[dict[str, Any]]:
     """The scorer files that were rehearsed, each with the policies that used it."""
     uses: dict[str, list[str]] = {}
-    for spec in campaign.policies:
+    for spec in campaign.all_policies:
         if spec.startswith("scorer:"):
             path = scorer_file(untuned(spec))[0]
             uses.setdefault(path, []).append(name_of(spec))

@@ -7,7 +7,7 @@ from typing import Any, Final
 
 from distill.rehearse.findings import BEST, GROUPS
 
-__all__ = ["aims_table", "cells_table", "every_cell", "short_table", "time_table"]
+__all__ = ["aims_table", "cells_table", "every_cell", "short_table", "stopping_table", "time_table"]
 
 Figures = Mapping[str, Any]
 
@@ -17,6 +17,7 @@ _AGAINST: Final = {
     "exact": "exact rate, where choosing by it takes over a fifth of the time",
 }
 _NONE: Final = "-"
+_MUCH: Final = 0.3  # share of the rollouts that stopping early is meant to save
 
 
 def aims_table(summary: Figures) -> list[str]:
@@ -69,15 +70,35 @@ def short_table(summary: Figures) -> list[str]:
 
 
 def _stopping_lines(rows: Sequence[Figures]) -> list[str]:
-    """Stopping early, over all cells: where it saves much and costs nothing that could be measured."""
-    free = [r for r in rows if r["ratio"] is None or r["low"] is None or r["low"] <= 1]
-    saves = [r for r in free if r["saved"] is not None and r["saved"] >= 0.3]
-    problems = {r["problem"] for r in rows}
-    some = len({r["problem"] for r in saves})
-    return [
-        "Stopping early saves at least 30 % of the rollouts, with no measurable loss of regret,",
-        f"in {len(saves)} of {len(rows)} cells, and in some cell of {some} of {len(problems)} problems.",
+    """Stopping early: where it saves much and costs nothing that could be measured, by budget."""
+    lines = []
+    for budget in dict.fromkeys(row["budget"] for row in rows):
+        here = [row for row in rows if row["budget"] == budget]
+        saves = [row for row in here if row["free"] and row["saved"] is not None and row["saved"] >= _MUCH]
+        problems, some = {row["problem"] for row in here}, {row["problem"] for row in saves}
+        better = {row["problem"] for row in saves if row["high"] is not None and row["high"] < 1}
+        also = f", on {len(better)} of them with surely less" if better else ""
+        lines.append(
+            f"Stopping early at a budget of {budget} saves at least {100 * _MUCH:.0f} % of the rollouts, "
+            f"with no measurable loss of regret, on {len(some)} of {len(problems)} problems{also}."
+        )
+    return lines
+
+
+def stopping_table(summary: Figures) -> list[str]:
+    """Every policy that may stop early, by problem and budget: rollouts saved, regret to that of going on."""
+    lines = [
+        "| problem | leaves | budget | policy | rollouts saved, % | regret to that of going on | price |",
+        "| --- | --- | --- | --- | --- | --- | --- |",
     ]
+    for row in summary["stopping"]:
+        price = _NONE if row["price"] is None else f"{row['price']:g}"
+        regret = _ratio(row) if row["ratio"] is not None else "both 0" if row["lost"] == 0 else "from 0"
+        lines.append(
+            f"| {row['problem']} | {summary['kinds'].get(row['problem'], _NONE)} | {row['budget']} "
+            f"| {row['policy']} | {100 * row['saved']:.0f} | {regret} | {price} |"
+        )
+    return lines
 
 
 def every_cell(summary: Figures) -> list[str]:

@@ -2,25 +2,35 @@
 
 from __future__ import annotations
 
+import hashlib
+import json
+import math
+import time
 from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
 
-from distill.rehearse.loop import Budget
+from distill.files import read_json, write_atomic
+from distill.rehearse.loop import Budget, decide_at_prices
 from distill.rehearse.policies import Policy
 from distill.rehearse.policy_specs import make_policy
 from distill.rehearse.problems import Problem
 from distill.rehearse.rehearsal import rehearse
+from distill.tree import Floats
 
 __all__ = ["TUNED", "TUNING_SEED", "name_of", "named", "tune", "untuned"]
 
 TUNING_SEED: Final = 1_000_000  # tuning looks at decisions from here on, the rehearsal at those before
 
-# Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from.
-_STOPS: Final = (1e-2, 1e-3, 3e-4, 1e-4, 3e-5, 1e-5, 1e-6, 1e-7, 1e-8, 1e-9, 1e-10, 1e-12, 1e-14)
-_NO_LOSS: Final = 0.01  # share of regret that stopping may cost when tuned, a standard error allowed for
+# Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from: five a decade, then one.
+# No single leaf's rollouts may be worth much any more where those of all leaves together are.
+_PRICES: Final = (
+    *(float(f"{10 ** (-n / 5):.2g}") for n in range(5, 51)),
+    *(float(f"1e-{n}") for n in range(11, 31)),
+)
+_NO_LOSS: Final = 0.01  # of the regret: what stopping may cost when tuned, a standard error allowed for
 _WIDTHS: Final = (0.7, 1.4, 2.0)  # of the prior, that ":prior=auto" chooses from beside 1
 _STOP_AUTO, _PRIOR_AUTO = ":stop=auto", ":prior=auto"
 
@@ -68,39 +78,70 @@ def tune(
     an untuned text plays on this problem at all. seeds : decisions, 0 takes what is untuned.
     """
     tries = _tries(specs, plays)
-    if not tries or not seeds or not rollouts:
-        return [{"policy": spec, "chosen": texts[0]} for spec, texts in tries.items()]
-    policies = {text: make_policy(text) for texts in tries.values() for text in texts}
-    budget = Budget(rollouts=rollouts)
-    cells = rehearse(
-        [problem], list(policies.values()), [budget], folder, seeds=seeds, first_seed=TUNING_SEED
-    )
-    found = {cell.policy: cell for cell in cells}
-    rows = []
-    for spec, texts in tries.items():
-        regret = {text: float(found[policies[text].name].measured.mean()) for text in texts}
-        chosen = min(texts, key=lambda text: regret[text])
-        if spec.endswith(_STOP_AUTO):
-            on = found[policies[texts[0]].name].measured
-            lost = {text: found[policies[text].name].measured - on for text in texts[1:]}
-            kept = [
-                text
-                for text, more in lost.items()
-                if more.mean() + more.std() / np.sqrt(len(more)) <= _NO_LOSS * on.mean()
-            ]
-            chosen = (kept or texts)[0]
-        row = {"problem": problem.name, "rollouts": rollouts, "policy": spec, "chosen": chosen}
-        rows.append({**row, "regret": regret})
-    seconds = float(sum(cell.processor.sum() for cell in cells))
-    return [{**row, "processor_seconds": seconds if i == 0 else 0.0} for i, row in enumerate(rows)]
+    stops = [spec for spec in specs if spec.endswith(_STOP_AUTO) and plays(untuned(spec))]
+    if not seeds or not rollouts:
+        untouched = {**{spec: texts[0] for spec, texts in tries.items()}, **{s: untuned(s) for s in stops}}
+        return [{"policy": spec, "chosen": text} for spec, text in untouched.items()]
+    about = {"problem": problem.name, "rollouts": rollouts}
+    rows: list[dict[str, Any]] = []
+    if tries:
+        policies = {text: make_policy(text) for texts in tries.values() for text in texts}
+        budget = Budget(rollouts=rollouts)
+        cells = rehearse(
+            [problem], list(policies.values()), [budget], folder, seeds=seeds, first_seed=TUNING_SEED
+        )
+        found = {cell.policy: float(cell.measured.mean()) for cell in cells}
+        for spec, texts in tries.items():
+            regret = {text: found[policies[text].name] for text in texts}
+            chosen = min(texts, key=lambda text: regret[text])
+            rows.append({**about, "policy": spec, "chosen": chosen, "regret": regret})
+        seconds = float(sum(cell.processor.sum() for cell in cells))
+        rows = [{**row, "processor_seconds": seconds if i == 0 else 0.0} for i, row in enumerate(rows)]
+    return [*rows, *(_stop(spec, problem, rollouts, folder, seeds) for spec in stops)]
+
+
+def _stop(spec: str, problem: Problem, rollouts: int, folder: Path, seeds: int) -> dict[str, Any]:
+    """The highest price that costs next to no regret, and what each price would cost and save.
+
+    One search a decision passes all prices. What is found is kept in a file: a resumed run reads it.
+    """
+    base = untuned(spec)
+    about = {"problem": problem.name, "rollouts": rollouts, "policy": spec}
+    key = hashlib.sha256(json.dumps([about, seeds, _PRICES, _NO_LOSS]).encode()).hexdigest()[:12]
+    kept = folder / f"stops--{problem.name}-{rollouts}-{key}.json"
+    if kept.exists():
+        found: dict[str, Any] = read_json(kept)
+        return found
+    policy, budget = make_policy(base), Budget(rollouts=rollouts)
+    ends: list[list[tuple[float, int]]] = []
+    lost: list[Floats] = []
+    started = time.process_time()
+    for seed in range(TUNING_SEED, TUNING_SEED + seeds):
+        rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
+        decision, more = decide_at_prices(problem.draw(seed), policy, budget, rng, _PRICES)
+        ends.append([(end.measured, end.rollouts) for end in decision])
+        lost.append(more)
+    regret, spent = np.mean(ends, axis=0).T
+    surely = np.mean(lost, axis=0) + np.std(lost, axis=0) / math.sqrt(seeds)
+    free = np.flatnonzero(surely <= _NO_LOSS * regret[-1])
+    texts = [f"{base}:stop={price:g}" for price in _PRICES]
+    row = {
+        **about,
+        "chosen": texts[free[0]] if free.size else base,
+        "regret": dict(zip([*texts, base], regret.tolist(), strict=True)),
+        "spent": dict(zip([*texts, base], spent.tolist(), strict=True)),
+        "lost": dict(zip(texts, np.mean(lost, axis=0).tolist(), strict=True)),
+        "processor_seconds": time.process_time() - started,
+    }
+    write_atomic(kept, (json.dumps(row, indent=1) + "\n").encode())
+    return row
 
 
 def _tries(specs: Sequence[str], plays: Callable[[str], bool]) -> dict[str, list[str]]:
-    """What tuning chooses from, policy by policy; the first is the one without tuning."""
+    """What tuning chooses from by regret alone, policy by policy; the first is the one without tuning."""
     tries = {spec: TUNED[spec] for spec in specs if spec in TUNED}
     for spec in specs:
         base = untuned(spec)
-        if base != spec and plays(base):
-            key, values = ("stop", _STOPS) if spec.endswith(_STOP_AUTO) else ("prior", _WIDTHS)
-            tries[spec] = [base, *(f"{base}:{key}={value:g}" for value in values)]
+        if spec.endswith(_PRIOR_AUTO) and plays(base):
+            tries[spec] = [base, *(f"{base}:prior={width:g}" for width in _WIDTHS)]
     return tries

@@ -30,7 +30,8 @@ class _Thrifty:
     """Stops where no candidate is worth its price: `rollout_price` value units, or `stop` x the tree's scale.
 
     The scale is that of the beliefs before the first rollout, so that one `stop` suits problems whose
-    values differ by orders of magnitude.
+    values differ by orders of magnitude. After `watch` it never stops but tells, after each choice, what
+    the best rollout is `worth` in units of that scale: infinite where it was not looked at.
     """
 
     def __init__(self, rollout_price: float, stop: float) -> None:
@@ -39,14 +40,32 @@ class _Thrifty:
                 raise InputError(name, "must be >= 0 and finite", value)
         self.rollout_price = rollout_price
         self.stop = stop
-        self._price = rollout_price
+        self.worth = math.inf
+        self._price = rollout_price  # from which down rollouts are looked at
+        self._watched = 0.0
+        self._scale = 1.0
+
+    def watch(self, most: float) -> None:
+        """Go on at any price, from the next decision on; `worth` is told where it is at most `most`."""
+        self._watched = most
 
     def _set_price(self, tree: BeliefTree) -> None:
-        if self.stop > 0:
-            self._price = self.rollout_price + self.stop * scale_of(tree)
+        self.worth = math.inf
+        stop = self._watched or self.stop
+        if stop > 0:
+            self._scale = scale_of(tree)
+            self._price = self.rollout_price + stop * self._scale
 
     def _too_dear(self, value: float) -> bool:
         return self._price > 0 and value <= self._price
+
+    def _is_over(self, value: float) -> bool:
+        """Whether to stop, where the best rollout is worth `value`."""
+        if not self._too_dear(value):
+            return False
+        if self._watched:
+            self.worth = value / self._scale
+        return not self._watched
 
 
 class ByValue(_Thrifty):
@@ -86,10 +105,11 @@ class ByValue(_Thrifty):
 
     def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice | None:
         """The best candidate, or None where none is worth its price."""
+        self.worth = math.inf
         query = Query(horizon=self.horizon, batch=None if self.rate else 1, remaining=remaining)
         priced = self._pricing(posterior.tree(), query)
         best = int(np.argmax(priced.voc))
-        if self._too_dear(float(priced.voc[best])):
+        if self._is_over(float(priced.voc[best])):
             return None
         if not priced.voc[best] > priced.error[best]:
             return Choice(posterior.pick("static_rate", rng, remaining=remaining), fell_back=True)
@@ -185,6 +205,7 @@ class ByScorer(_Thrifty):
 
     def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice | None:
         """The scorer's choice where its turn is, else the static rate's."""
+        self.worth = math.inf
         if self._resting:
             self._resting -= 1
             return self._static(posterior, remaining, rng)
@@ -207,7 +228,7 @@ class ByScorer(_Thrifty):
             self._fastest[self._leaves] = min(took, self._fastest.get(self._leaves, math.inf))
         best = int(scores.pick)
         top = float(scores.voc[best])
-        if self._too_dear(top) and self._too_dear(self._second_opinion(posterior, remaining)):
+        if self._too_dear(top) and self._is_over(max(top, self._second_opinion(posterior, remaining))):
             return None
         if not scores_now:
             return self._static(posterior, remaining, rng)

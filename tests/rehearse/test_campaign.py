@@ -222,6 +222,72 @@ def test_tables_show_every_cell():
     assert any("| s | sampling | 2 | 0.85 | 1 (50%) | 1.1 | 1 |" in line for line in aims_table(summary))
 
 
+# --- where rollouts are plenty ---------------------------------------------------------------------
+
+USE = f"scorer:{FAST}:late=0.5"
+PLENTY = replace(
+    SMALL,
+    problems=SMALL.problems[:1],
+    policies=("thompson",),
+    stops=(USE, f"{USE}:stop=auto"),
+    plenty=("150", "400"),
+    slowest=1e-9,
+    tuning_seeds=20,
+)
+
+
+@pytest.fixture(scope="module")
+def plenty(tmp_path_factory):
+    folder = tmp_path_factory.mktemp("plenty")
+    return folder, write_results(run(PLENTY, folder), folder)
+
+
+def test_stops_play_where_rollouts_are_plenty_and_nothing_else_does(plenty):
+    folder, summary = plenty
+    played = {
+        budget: {r["policy"] for r in summary["rows"] if r["budget"] == budget} for budget in ("12", "400")
+    }
+    assert played["400"] == {name_of(spec) for spec in PLENTY.stops}  # whatever `slowest` says
+    assert played["12"] <= {"thompson"}
+    assert [row["budget"] for row in summary["stopping"]] == ["150", "400"]
+    table = (folder / "stopping.md").read_text().splitlines()
+    assert len(table) == 4
+    assert table[-1].startswith("| tree-3x2^1-noise1 | Gaussian | 400 | cold-store-fast-late0.5-stops |")
+    assert (
+        sum("Stopping early at a budget of" in x for x in (folder / "table.md").read_text().splitlines()) == 2
+    )
+
+
+def test_the_price_is_the_highest_that_cost_nothing_in_tuning(plenty):
+    _, summary = plenty
+    rows = [row for row in summary["tuning"] if row["policy"].endswith(":stop=auto")]
+    assert [row["rollouts"] for row in rows] == [150, 400]
+    for row, found in zip(rows, summary["stopping"], strict=True):
+        regret, spent = row["regret"], row["spent"]
+        assert list(regret)[-1] == USE
+        assert spent[USE] == row["rollouts"]
+        assert list(spent.values()) == sorted(spent.values())  # a lower price never stops earlier
+        assert row["lost"][row["chosen"]] <= 0.01 * regret[USE]
+        assert float(row["chosen"].partition(":stop=")[2]) == found["price"]
+        assert found["saved"] > 0
+
+
+def test_tuned_prices_are_read_when_a_run_goes_on(plenty, monkeypatch):
+    folder, before = plenty
+    monkeypatch.setattr("distill.rehearse.tuning.decide_at_prices", None)
+    again = run(PLENTY, folder)
+    assert json.loads(json.dumps(again.tuning)) == before["tuning"]
+    (kept,) = folder.glob("tuning/stops--*-400-*.json")
+    kept.write_text("{")
+    with pytest.raises(InputError, match="must be valid JSON"):
+        run(PLENTY, folder)
+
+
+def test_a_budget_is_plenty_or_not():
+    with pytest.raises(InputError, match="plenty: must be other budgets than the policies'; got '12'"):
+        replace(PLENTY, plenty=("12",))
+
+
 # --- the command -----------------------------------------------------------------------------------
 
 
@@ -272,7 +338,10 @@ def test_plans_know_the_scorers_uses():
     ]
     full = plan("full", scorers=[FAST, FAST.replace("-fast", "")])
     assert full.seeds >= 400
-    assert [p.endswith(":stop=auto") for p in full.policies].count(True) == 1
+    assert full.stops == (f"scorer:{FAST}:late=0.5", f"scorer:{FAST}:late=0.5:stop=auto")
+    assert not any("stop" in p for p in full.policies)
+    assert full.plenty
+    assert plan("full", budgets=["8"], scorers=[FAST]).plenty == plan("full").plenty == ()
     assert set(full.wide) <= set(full.problems)
     records = FAST.replace("cold-store-fast", "crossing-traffic")
     uses = [

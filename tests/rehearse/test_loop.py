@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import re
 import time
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -14,16 +16,18 @@ from ladder import CLOSED_FORM, STANDARD_ERRORS
 from distill import voc
 from distill.allocation import Search
 from distill.errors import InputError
-from distill.rehearse.catalogue import environment_problems, synthetic_problems
+from distill.rehearse.catalogue import environment_problems, make_problem, synthetic_problems
 from distill.rehearse.gym_tables import GymTable
-from distill.rehearse.loop import Budget, decide, posterior_means
+from distill.rehearse.loop import Budget, decide, decide_at_prices, posterior_means
 from distill.rehearse.policies import ByRule, Choice, TopTwoThompson, leaf_actions
+from distill.rehearse.policy_specs import make_policy
 from distill.rehearse.problems import SimulatorProblem, TreeProblem
 from distill.rehearse.search import Settings, action_values
 from distill.rehearse.value_policies import ByScorer, ByValue
 from distill.runtime import Scorer
 
 STATIC = {"horizon": 0.0}
+MODELS = Path(__file__).parents[2] / "models"
 
 
 class Clock:
@@ -269,3 +273,94 @@ def test_every_environment_can_be_rehearsed(problem):
 def test_bad_arguments_name_the_rule(make, message):
     with pytest.raises(InputError, match=message):
         make()
+
+
+# --- stopping at many prices -----------------------------------------------------------------------
+
+PRICES = (0.1, 0.01, 1e-3, 1e-4, 1e-6, 1e-9)
+
+
+@pytest.mark.parametrize("problem", ["tree-3x2^1-noise1", "tree-3x2^1-winloss", "tree-2x2^2-noise1-chance"])
+@pytest.mark.parametrize("use", ["", ":late=0.5", ":late=0.5:every=2", ":late=1:prior=1.4"])
+def test_one_search_passes_the_ends_at_all_prices(problem, use):
+    """The search without a price, looked at on its way, against as many searches that really stop."""
+    file = {"noise1": "cold-store-fast", "winloss": "on-time", "chance": "crossing-traffic"}
+    text = f"scorer:{MODELS}/{file[problem.rpartition('-')[2]]}.onnx{use}"
+    stopped = set()
+    for seed in range(3):
+        draw = make_problem(problem).draw
+        rng = np.random.default_rng(seed)
+        (*ends, last), lost = decide_at_prices(
+            draw(seed), make_policy(text), Budget(rollouts=120), rng, PRICES
+        )
+        assert lost.shape == (len(PRICES),)
+        for end, more in zip(ends, lost, strict=True):
+            assert end.action != last.action or more == 0
+        for price, end in zip((*PRICES, 0.0), (*ends, last), strict=True):
+            policy = make_policy(f"{text}:stop={price}")
+            played = decide(draw(seed), policy, Budget(rollouts=120), np.random.default_rng(seed))
+            assert replace(end, choosing=0.0, expected_regret=0.0) == replace(
+                played, choosing=0.0, expected_regret=0.0
+            )
+            assert np.array_equal(end.expected_regret, played.expected_regret, equal_nan=True)
+            stopped.add(played.rollouts)
+    assert len(stopped) > 3
+
+
+def test_exact_values_pass_their_prices_too():
+    problem = make_problem("tree-2x2^1-noise1")
+    rng = np.random.default_rng(0)
+    exact = make_policy("exact-dynamic-rate")
+    (*ends, last), _ = decide_at_prices(problem.draw(0), exact, Budget(rollouts=60), rng, PRICES)
+    for price, end in zip(PRICES, ends, strict=True):
+        policy = make_policy(f"exact-dynamic-rate:stop={price}")
+        played = decide(problem.draw(0), policy, Budget(rollouts=60), np.random.default_rng(0))
+        assert (end.rollouts, end.stopped, end.regret) == (played.rollouts, played.stopped, played.regret)
+    assert not last.stopped
+    assert ends[0].rollouts < last.rollouts == 60
+
+
+def test_what_a_price_lost_is_the_difference_of_regrets_on_average():
+    """Martingales (Doob 1953, chapter VII): what more is seen does not move what is expected.
+
+    Both are estimates of one mean; that given all that was seen has far less noise. Without beliefs to
+    average over, and below chance nodes, it is the difference of regrets itself.
+    """
+    problem, policy = make_problem("tree-3x2^1-noise4"), make_policy("exact-dynamic-rate")
+    direct, given_all = [], []
+    for seed in range(150):
+        rng = np.random.default_rng(seed)
+        (end, last), (more,) = decide_at_prices(problem.draw(seed), policy, Budget(rollouts=30), rng, [3e-3])
+        direct.append(end.regret - last.regret)
+        given_all.append(more)
+    assert min(given_all) >= 0
+    assert np.mean(given_all) > 0
+    assert np.std(given_all) < 0.7 * np.std(direct)
+    error = np.std(np.subtract(direct, given_all)) / np.sqrt(len(direct))
+    assert abs(np.mean(direct) - np.mean(given_all)) < STANDARD_ERRORS * error
+
+
+def test_below_chance_nodes_what_a_price_lost_is_the_difference_of_regrets():
+    problem = make_problem("tree-3x2^2-noise4-chance")
+    policy = make_policy(f"scorer:{MODELS}/crossing-traffic.onnx:late=0.5")
+    more_than_none = 0
+    for seed in range(12):
+        rng = np.random.default_rng(seed)
+        (*ends, last), lost = decide_at_prices(problem.draw(seed), policy, Budget(rollouts=60), rng, PRICES)
+        assert lost == pytest.approx([end.regret - last.regret for end in ends], abs=CLOSED_FORM)
+        more_than_none += np.count_nonzero(lost)
+    assert more_than_none
+
+
+@pytest.mark.parametrize(
+    ("policy", "prices", "message"),
+    [
+        (f"scorer:{MODELS}/on-time.onnx", (0.1, 0.1), "prices: must fall from one to the next"),
+        ("uct", (0.1,), "policy uct-1: has no price to stop at"),
+        ("thompson:prior=2", (0.1,), "policy thompson-prior2: has no price to stop at"),
+    ],
+)
+def test_prices_that_cannot_be_passed_are_refused(policy, prices, message):
+    draw = make_problem("tree-2x2^1-winloss").draw(0)
+    with pytest.raises(InputError, match=re.escape(message)):
+        decide_at_prices(draw, make_policy(policy), Budget(rollouts=4), np.random.default_rng(0), prices)

@@ -296,7 +296,7 @@ def stopping(results: Results, places: Mapping[tuple[str, Budget], Place]) -> li
     for (problem, budget), here in places.items():
         for spec in specs:
             stops, goes_on = name_of(spec), name_of(spec[: spec.index(":stop=")])
-            if stops in here and goes_on in here:
+            if stops != goes_on and stops in here and goes_on in here:
                 text = tuned.get((problem, budget.room(0, 0.0), spec), spec)
                 price = re.search(r":stop=([\d.e+-]+)", text)
                 (found,) = compare(list(here.values()), stops, [goes_on])

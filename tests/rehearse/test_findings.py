@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import shutil
 import xml.etree.ElementTree as ET
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -17,7 +18,7 @@ from distill.rehearse.findings import BEST, places_of
 from distill.rehearse.loop import Budget
 from distill.rehearse.rehearsal import Cell
 from distill.rehearse.results import summarise
-from distill.rehearse.results_tables import every_cell, short_table, time_table
+from distill.rehearse.results_tables import every_cell, short_table, stopping_table, time_table
 from distill.rehearse.sheets import add_to_sheet, add_to_sheets, figures_of
 from distill.report.rehearsal_page import rehearsal_page, rehearsal_pictures, write_pictures
 
@@ -31,7 +32,7 @@ CAMPAIGN = Campaign(
     budgets=tuple(str(budget) for budget in TIMED),
     policies=(
         "uct", "thompson", "static-rate", "exact-dynamic-rate",
-        f"scorer:{FAST}:name=a", f"scorer:{FAST}:name=b", f"scorer:{FAST}:name=a-stops:stop=0.01",
+        f"scorer:{FAST}:name=a", f"scorer:{FAST}:name=b", f"scorer:{FAST}:name=a:stop=auto",
     ),
     seeds=N,
     tuning_seeds=10,
@@ -141,6 +142,38 @@ def test_figures_go_into_the_sheets_of_the_files_that_were_rehearsed(tmp_path):
         add_to_sheets(tmp_path, [file])
     with pytest.raises(InputError, match="must be a folder that rehearse left"):
         add_to_sheets(tmp_path / "none", [file])
+
+
+def test_what_stopping_saves_is_told_and_drawn():
+    """Taxi saves 60 % and loses nothing; the tree 20 %, and more regret in every decision."""
+    found = results([1, 1, 1])
+    budget = TIMED[1]
+    for problem, regret, rollouts in (("taxi", 1.0, 40), ("tree-3x2^1-noise1", 1.5, 80)):
+        stops = cell(problem, budget, "a-stops", regret)
+        found.cells.append(replace(stops, rollouts=np.zeros(N) + rollouts))
+    auto = CAMPAIGN.policies[-1]
+    tuned = {
+        "rollouts": 100,
+        "policy": auto,
+        "chosen": auto.replace("auto", "0.01"),
+        "processor_seconds": 0.0,
+    }
+    found.tuning.append({"problem": "taxi", **tuned})
+    summary = summarise(found)
+    rows = {row["problem"]: row for row in summary["stopping"]}
+    assert rows["taxi"]["free"]
+    assert rows["taxi"]["saved"] == pytest.approx(0.6, rel=CLOSED_FORM)
+    assert rows["taxi"]["price"] == 0.01
+    assert (rows["taxi"]["lost"], rows["taxi"]["lost_low"]) == (0, 0)
+    assert not rows["tree-3x2^1-noise1"]["free"]
+    assert rows["tree-3x2^1-noise1"]["lost_low"] == pytest.approx(0.5, rel=CLOSED_FORM)
+    told = "saves at least 30 % of the rollouts, with no measurable loss of regret, on 1 of 2 problems."
+    assert short_table(summary)[-1] == f"Stopping early at a budget of {budget} {told}"
+    assert "| 60 | 1.00 [1.00, 1.00] | 0.01 |" in "".join(stopping_table(summary))
+    assert "What stopping early saves" in rehearsal_page(summary)
+    drawn = ET.tostring(rehearsal_pictures(summary)["stopping"], encoding="unicode")
+    assert drawn.count("fill-opacity: 0") == 1  # hollow
+    assert "stopping" not in rehearsal_pictures({**summary, "stopping": []})
 
 
 def test_pictures_stand_alone_and_show_every_cell(tmp_path):

@@ -56,7 +56,14 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> None:
     """Run the command."""
     if args.sheets:
+        from distill.errors import InputError
         from distill.rehearse.sheets import add_to_sheets
+
+        for flag in ("quick", "full", "problem", "budget", "policy", "scorer", "seeds", "tuning_seeds"):
+            if getattr(args, flag) not in (None, False, []):
+                raise InputError(
+                    "--sheets", f"rehearses nothing, so it cannot go with --{flag.replace('_', '-')}"
+                )
 
         for file in add_to_sheets(args.out, args.sheets):
             print(f"{file.with_suffix('.json')}, {file.with_suffix('.md')}: with the rehearsal's figures")

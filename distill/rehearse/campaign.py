@@ -194,7 +194,7 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
         policies = [named(make_policy(texts[spec]), spec) for spec in specs if reasons[spec] is None]
         where, seeds = folder / "cells", campaign.seeds
         out.cells.extend(rehearse([problem], policies, [budget], where, seeds=seeds, first_seed=_FIRST_SEED))
-        write_atomic(_place(folder, name, text).with_suffix(".done"), b"")
+        write_atomic(_place(folder, name, text).with_suffix(".done"), _played(specs))
     return name, out
 
 
@@ -308,21 +308,26 @@ def _place(folder: Path, problem: str, budget: str) -> Path:
     return folder / "places" / f"{readable[:80]}--{key}.json"
 
 
+def _played(specs: tuple[str, ...]) -> bytes:
+    """What `.done` holds: an earlier run may have been asked for fewer policies."""
+    return (json.dumps(sorted(specs)) + "\n").encode()
+
+
 @contextlib.contextmanager
 def _counted(campaign: Campaign, folder: Path, progress: Callable[[int, int], None] | None) -> Iterator[None]:
     """Tells `progress` how many places are done, while others work on them."""
     if progress is None:
         yield
         return
-    places = [
-        _place(folder, problem, budget).with_suffix(".done")
+    places = {
+        _place(folder, problem, budget).with_suffix(".done"): _played(campaign.policies_under(budget))
         for problem in campaign.problems
         for budget in campaign.budgets_of(problem)
-    ]
+    }
     over = threading.Event()
 
     def tell() -> None:
-        progress(sum(path.exists() for path in places), len(places))
+        progress(sum(p.exists() and p.read_bytes() == played for p, played in places.items()), len(places))
 
     def look() -> None:
         while not over.wait(_LOOK_SECONDS):

@@ -307,6 +307,7 @@ def test_the_command_leaves_a_page_and_says_where(tmp_path, capsys):
     [
         (["--budget", "6"], "--problem: must be given without --quick or --full"),
         (["--quick", "--full"], "--quick: cannot go with --full"),
+        (["--sheets", FAST, "--seeds", "9"], "--sheets: rehearses nothing, so it cannot go with --seeds"),
         (["--quick", "--problem", "chess"], "problem: must be one of taxi,"),
         (["--quick", "--budget", "fast"], "budget: must be rollouts (128), or time and cost (20ms@100us)"),
         (["--quick", "--policy", "luck"], "policy 'luck': must begin with one of even,"),

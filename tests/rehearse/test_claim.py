@@ -39,7 +39,9 @@ def test_a_folder_takes_more_and_never_loses_what_it_shows(tmp_path: Path) -> No
     """Policies may be added, and all stay in the summary; a campaign without the earlier ones is refused."""
     run(TINY, tmp_path)
     more = replace(TINY, policies=(*TINY.policies, f"scorer:{FAST}"))
-    summary = write_results(run(more, tmp_path), tmp_path)
+    told: list[tuple[int, int]] = []
+    summary = write_results(run(more, tmp_path, progress=lambda done, of: told.append((done, of))), tmp_path)
+    assert (told[0], told[-1]) == ((0, 1), (1, 1))  # what was done for fewer policies is not done for more
     assert {"even", "static_rate", "cold-store-fast"} <= {row["policy"] for row in summary["rows"]}
     before = (tmp_path / "campaign.json").read_bytes()
     for other in (TINY, replace(more, problems=("tree-2x2^1-winloss",)), replace(more, budgets=("8",))):

@@ -107,6 +107,7 @@ class Results:
     """Cells of a campaign, the tuning of its baselines, and which policies were left out where and why.
 
     kinds : problem -> "Gaussian", "win/loss", with ", chance nodes" where its trees have them.
+    unsearched : a cell a problem, of the same decisions taken before the first rollout.
     """
 
     campaign: Campaign
@@ -114,6 +115,7 @@ class Results:
     tuning: list[dict[str, Any]] = field(default_factory=list)
     left_out: list[dict[str, str]] = field(default_factory=list)
     kinds: dict[str, str] = field(default_factory=dict)
+    unsearched: list[Cell] = field(default_factory=list)
 
 
 def run(
@@ -143,6 +145,7 @@ def run(
         results.tuning.extend(row for row in parts[name].tuning if "regret" in row)
         results.left_out.extend(parts[name].left_out)
         results.kinds.update(parts[name].kinds)
+        results.unsearched.extend(parts[name].unsearched)
     return results
 
 
@@ -176,6 +179,8 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
     def plays(text: str) -> bool:
         return _unreadable(campaign, text, tree) is None and _refused(make_policy(text), tree) is None
 
+    none = [make_policy("even")], [Budget(rollouts=0)], folder / "unsearched"
+    out.unsearched.extend(rehearse([problem], *none, seeds=campaign.seeds, first_seed=_FIRST_SEED))
     for text in campaign.budgets_of(name):
         budget = Budget.parse(text)
         rollouts, specs = budget.room(0, 0.0), campaign.policies_under(text)

@@ -20,6 +20,7 @@ from distill.tree import Floats
 __all__ = [
     "BEST",
     "GROUPS",
+    "NO_SEARCH",
     "Place",
     "advice",
     "aims",
@@ -39,6 +40,7 @@ GROUPS: Final = {
     "static": ("static-voc", "static-rate"),
     "exact": ("exact-dynamic-rate",),
 }
+NO_SEARCH: Final = "no search"  # advice: act before the first rollout
 BEST: Final = "best scorer"  # its decisions of either half are those of the scorer that did best on the other
 _EXACT: Final = "exact_dynamic_rate"
 _AIM_SECONDS: Final = 100e-6  # cost of a rollout from which the aims are judged
@@ -174,11 +176,13 @@ def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list
     """The policy to use for each problem and budget: the cheapest that no other measurably beats.
 
     The closed form is advised wherever the best other policy's 95 % interval of the ratio to it reaches 1;
-    which one is the best is decided for each half of the decisions by the other half.
+    which one is the best is decided for each half of the decisions by the other half. Where no policy is
+    so much better than acting before the first rollout, that is advised.
     """
     campaign = results.campaign
     static = members(campaign, "static")
     others = [n for group in ("scorer", "sampling", "exact") for n in members(campaign, group)]
+    unsearched = {cell.problem: cell for cell in results.unsearched}
     rows = []
     for (problem, budget), here in places.items():
         rivals = [name for name in static if name in here]
@@ -188,12 +192,16 @@ def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list
         best = min(rest, key=lambda name: float(here[name].measured.mean()))
         (found,) = compare([_best([here[n] for n in rest]), *(here[n] for n in rivals)], BEST, rivals)
         better = math.isfinite(found.high) and found.high < 1
+        use = best if better else found.rival
+        why = "measurably better than the closed form" if better else "nothing measurably better"
+        if problem in unsearched and not _pays([here[n] for n in (*rest, *rivals)], unsearched[problem]):
+            use, why = NO_SEARCH, "nothing measurably better than to act before the first rollout"
         rows.append(
             {
                 "problem": problem,
                 "budget": str(budget),
-                "use": best if better else found.rival,
-                "why": "measurably better than the closed form" if better else "nothing measurably better",
+                "use": use,
+                "why": why,
                 "best_other": best,
                 "ratio": plain(found.ratio),
                 "low": plain(found.low),
@@ -201,6 +209,12 @@ def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list
             }
         )
     return rows
+
+
+def _pays(cells: Sequence[Cell], unsearched: Cell) -> bool:
+    """Whether the best of some policies is measurably better than no search at all."""
+    low, _ = interval(unsearched.measured - _best(cells).measured)
+    return low > 0
 
 
 def by_kind(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list[dict[str, Any]]:

@@ -32,6 +32,7 @@ def summarise(results: Results) -> dict[str, Any]:
 
     rows : a cell each, with its ratios to the best policy of each group, and "best scorer": of either half
     of the decisions the scorer that did best on the other half. comparisons : the same ratios, one a row.
+    unsearched : the regret of each problem's decisions taken before the first rollout.
     aims : a scorer each, counted over cells with a wall-clock budget and rollouts of 100 us or more.
     by_kind : scorer or closed form for each kind of problem and cost of a rollout.
     stopping : policies that stop early against themselves without. scorers : the files, and their names.
@@ -54,6 +55,7 @@ def summarise(results: Results) -> dict[str, Any]:
         "scorers": _files(campaign),
         "measure": "expected regret given all that was seen where known, else regret; value units",
         "rows": rows,
+        "unsearched": [_unsearched(cell) for cell in results.unsearched],
         "comparisons": comparisons,
         "aims": findings.aims(results, comparisons),
         "advice": findings.advice(results, places),
@@ -101,6 +103,12 @@ def _row(cell: Cell, kinds: Mapping[str, str]) -> dict[str, Any]:
         "fallback_share": plain(cell.fallback_share),
         "stopped_share": plain(cell.stopped.mean()),
     }
+
+
+def _unsearched(cell: Cell) -> dict[str, Any]:
+    low, high = interval(cell.measured)
+    ends = {"low": plain(low), "high": plain(high)}
+    return {"problem": cell.problem, "measured": plain(cell.measured.mean()), "interval": ends}
 
 
 def _flat(row: Mapping[str, Any]) -> dict[str, Any]:

@@ -104,10 +104,12 @@ def stopping_table(summary: Figures) -> list[str]:
 def every_cell(summary: Figures) -> list[str]:
     """Every problem and budget: the best scorer against all others, and what the page would use."""
     ratios_to = "to the better sampling | to the closed form | to the exact rate"
+    regrets = "regret without a search | of the best scorer"
     lines = [
-        f"| problem | leaves | budget | best scorer: regret | {ratios_to} | choosing, % (exact) | use |",
-        "| --- | --- | --- | --- | --- | --- | --- | --- | --- |",
+        f"| problem | leaves | budget | {regrets} | {ratios_to} | choosing, % (exact) | use |",
+        "| --- | --- | --- | --- | --- | --- | --- | --- | --- | --- |",
     ]
+    without = {row["problem"]: f"{row['measured']:.3g}" for row in summary["unsearched"]}
     use = {(a["problem"], a["budget"]): a["use"] for a in summary["advice"]}
     exact = {
         (row["problem"], row["budget"]): row
@@ -125,8 +127,8 @@ def every_cell(summary: Figures) -> list[str]:
         shares = f"{_percent(row)} ({_percent(exact.get(place))})"
         regret = _estimate(row["measured"], row["interval"])
         lines.append(
-            f"| {row['problem']} | {row['kind']} | {row['budget']} | {regret} | {' | '.join(ratios)} "
-            f"| {shares} | {use.get(place, _NONE)} |"
+            f"| {row['problem']} | {row['kind']} | {row['budget']} | {without.get(row['problem'], _NONE)} "
+            f"| {regret} | {' | '.join(ratios)} | {shares} | {use.get(place, _NONE)} |"
         )
     return lines
 

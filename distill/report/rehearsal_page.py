@@ -52,6 +52,10 @@ _WORDS: Final = {
         "every so-manyeth rollout is the scorer's too; no scoring where one takes more than a share of a "
         "rollout's time."
     ),
+    "no search": (
+        "Acting before the first rollout, on the look-ahead and its prior alone; advised where no policy is "
+        "measurably better."
+    ),
     "fell back": "Share of a policy's choices that the closed form made in its place.",
 }  # fmt: skip
 
@@ -198,11 +202,15 @@ def _aims(aims: Mapping[str, Mapping[str, Figures]]) -> ET.Element:
 
 def _best(best: Sequence[Figures], summary: Figures) -> ET.Element:
     advice = {(a["problem"], a["budget"]): a["use"] for a in summary["advice"]}
+    without = {row["problem"]: row["measured"] for row in summary["unsearched"]}
     rows: dict[str, Sequence[Child]] = {
-        f"{r['problem']} {r['budget']}": [*_ratios(r), advice.get((r["problem"], r["budget"]), _NONE)]
+        f"{r['problem']} {r['budget']}": [
+            number(without.get(r["problem"])), number(r["measured"]), *_ratios(r),
+            advice.get((r["problem"], r["budget"]), _NONE),
+        ]
         for r in best
-    }
-    return _table([*_TO, "use here"], rows)
+    }  # fmt: skip
+    return _table(["regret without a search", "regret", *_TO, "use here"], rows)
 
 
 def _stopping(rows: Sequence[Figures]) -> ET.Element:

@@ -55,6 +55,15 @@ def test_every_policy_is_there_or_its_absence_has_a_reason(small):
     assert {x["problem"] for x in results.left_out} == {"tree-2x2^1-winloss"}
 
 
+def test_what_the_look_ahead_alone_decides_is_told(small):
+    folder, _, summary = small
+    assert [row["problem"] for row in summary["unsearched"]] == list(SMALL.problems)
+    for row in summary["unsearched"]:
+        searched = min(r["measured"] for r in summary["rows"] if r["problem"] == row["problem"])
+        assert row["measured"] > searched > 0
+    assert len(list(folder.glob("unsearched/*.parquet"))) == len(SMALL.problems)
+
+
 def test_baselines_are_tuned_on_decisions_of_their_own(small):
     folder, results, _ = small
     for row in results.tuning:

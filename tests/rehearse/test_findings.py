@@ -14,7 +14,7 @@ from ladder import CLOSED_FORM
 
 from distill.errors import InputError
 from distill.rehearse.campaign import Campaign, Results
-from distill.rehearse.findings import BEST, places_of
+from distill.rehearse.findings import BEST, NO_SEARCH, places_of
 from distill.rehearse.loop import Budget
 from distill.rehearse.rehearsal import Cell
 from distill.rehearse.results import summarise
@@ -26,6 +26,7 @@ MODELS = Path(__file__).parents[2] / "models"
 FAST = str(MODELS / "cold-store-fast.onnx")
 TIMED = [Budget(seconds=100 * cost, rollout_seconds=cost) for cost in (20e-6, 100e-6, 1e-3)]
 N = 40
+NINE = pytest.approx(0.9, rel=CLOSED_FORM)
 EVEN = np.arange(N) % 2 == 0
 CAMPAIGN = Campaign(
     problems=("tree-3x2^1-noise1", "taxi"),
@@ -94,6 +95,23 @@ def test_scorer_or_closed_form_by_kind_and_cost():
         assert (cheap["use"], cheap["why"]) == ("closed form", "the scorer is measurably worse")
         assert (same["use"], same["why"]) == ("closed form", "no measurable difference")
         assert dear["static"]["ratio"] == pytest.approx(0.5 / 1.1, rel=CLOSED_FORM)
+
+
+def test_where_no_search_pays_none_is_advised():
+    """To act at once costs 0.9: less than anyone's regret at one cost, more than the scorer's at another."""
+    found = results([4, 0.5, 1.1])
+    found.unsearched.append(cell("taxi", Budget(rollouts=0), "even", 0.9))
+    summary = summarise(found)
+    use = {(a["problem"], a["budget"]): a["use"] for a in summary["advice"]}
+    dear, cheap, same = (str(b) for b in (TIMED[1], TIMED[0], TIMED[2]))
+    assert use["taxi", dear] == "a"
+    assert use["taxi", cheap] == use["taxi", same] == NO_SEARCH
+    assert use["tree-3x2^1-noise1", cheap] == "thompson"
+    assert summary["unsearched"] == [
+        {"problem": "taxi", "measured": NINE, "interval": {"low": NINE, "high": NINE}}
+    ]
+    assert any("| 0.9 | " in line and f"| {NO_SEARCH} |" in line for line in every_cell(summary))
+    assert NO_SEARCH in rehearsal_page(summary)
 
 
 def test_where_exact_choosing_is_over_the_budget_it_is_counted_apart():

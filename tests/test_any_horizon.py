@@ -127,7 +127,7 @@ def test_infer_lists_few_horizons_and_says_where_it_cannot():
     found = infer(trees).family["budget.horizon"]
     assert found.args == (0.0, 4.0, math.inf)
     np.testing.assert_allclose(
-        np.diff((0, *found.shares)), [seen.count(h) / 40 for h in found.args], atol=1e-5
+        np.diff((0, *found.shares)), [seen.count(h) / 40 for h in found.args], rtol=0, atol=CLOSED_FORM
     )
     many = [replace(tree, horizon=0.5 * i if i else math.inf) for i, tree in enumerate(trees)]
     found = infer(many)

@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 import pytest
 from builders import chance_record, win_loss_record
-from ladder import QUADRATURE, STANDARD_ERRORS
+from ladder import DRIFTED_MEDIAN, QUADRATURE, STANDARD_ERRORS
 
 from distill import voc
 from distill.audit import WORTH_ADDING, audit, sample_trees
@@ -81,7 +81,7 @@ def matching(tmp_path_factory: pytest.TempPathFactory, family: Family) -> Path:
 
 @pytest.fixture(scope="module")
 def noisy(tmp_path_factory: pytest.TempPathFactory, family: Family) -> Path:
-    """Trees of the family when a rollout's sd is sixteen times what training saw; 120 leave the verdict to chance."""
+    """Trees whose rollouts have sixteen times the sd that training saw; 120 leave the verdict to chance."""
     path = tmp_path_factory.mktemp("traces") / "noisy.jsonl.gz"
     trees = recorded(family, 400)
     write_trees(path, [replace(t, noise_var=256 * t.noise_var) for t in trees if t.noise_var is not None])
@@ -190,7 +190,9 @@ def test_drift_names_the_columns_that_moved(
     assert [k for k, c in same["columns"].items() if c["drifted"]] == []
     moved = drifted["drift"]["columns"]
     assert moved["noise"]["drifted"]
-    assert moved["noise"]["now"][2] - moved["noise"]["training"][2] == pytest.approx(np.log10(16), abs=0.1)
+    assert moved["noise"]["now"][2] - moved["noise"]["training"][2] == pytest.approx(
+        np.log10(16), abs=DRIFTED_MEDIAN
+    )
     assert not moved["actions"]["drifted"]
     assert not moved["mean spread"]["drifted"]
 

@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 import pytest
 from builders import chance_record, flat_record
-from ladder import QUADRATURE
+from ladder import DRIFTED_MEDIAN, QUADRATURE
 
 from distill import voc
 from distill.audit import WORTH_ADDING, Audit, audit, sample_trees, write_audit
@@ -177,7 +177,7 @@ def test_trees_of_the_family_have_not_drifted(case: Case) -> None:
     if case.input == "record":
         assert beliefs.isdisjoint(drift["columns"])  # its family has Gaussian leaves
     else:
-        assert drift["columns"]["win rate"]["now"][2] == pytest.approx(0.5, abs=0.1)
+        assert drift["columns"]["win rate"]["now"][2] == pytest.approx(0.5, abs=DRIFTED_MEDIAN)
 
 
 def test_losses_are_those_of_the_picks(case: Case) -> None:

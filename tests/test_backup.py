@@ -11,7 +11,15 @@ import pytest
 from chance_trees import build, leaf
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import BACKUP_FIT, BACKUP_MOMENTS, CLOSED_FORM, EXACT, FEATURE_TABLE
+from ladder import (
+    BACKUP_FIT,
+    BACKUP_MOMENTS,
+    CLOSED_FORM,
+    EXACT,
+    FEATURE_TABLE,
+    FINITE_DIFFERENCE,
+    RELATIVE_TAIL,
+)
 from scipy import stats
 
 from distill import schema
@@ -104,7 +112,9 @@ def test_values_agree_with_the_exact_engine(family):
 def test_without_rollouts_to_come_a_maximum_is_one_of_means(seed, family):
     tree = drawn(family, seed)
     exact = price(tree, Query(horizon=0)).value
-    np.testing.assert_allclose(backup_of(tree, 0).value, exact, rtol=1e-12, atol=1e-12 * scale_of(tree))
+    np.testing.assert_allclose(
+        backup_of(tree, 0).value, exact, rtol=CLOSED_FORM, atol=CLOSED_FORM * scale_of(tree)
+    )
 
 
 # --- one path --------------------------------------------------------------------------------------
@@ -182,12 +192,12 @@ def test_a_leaf_moved_to_its_crossing_makes_its_action_level(seed):
         moved = Backup(tree)
         moved.update(i, mean=float(tree.mean[i] + row.crossing[i] * sd[i]))
         rival = second if action[i] == best else b.value[best]
-        assert abs(moved.value[action[i]] - rival) <= 1e-6 * scale_of(tree)
+        assert abs(moved.value[action[i]] - rival) <= RELATIVE_TAIL * scale_of(tree)
         assert (row.crossing[i] <= 0) == (action[i] == best)
         near = Backup(tree)
         near.update(i, mean=float(tree.mean[i] + (row.crossing[i] + 1e-3) * sd[i]))
         rise = (near.value[action[i]] - moved.value[action[i]]) / 1e-3
-        np.testing.assert_allclose(rise, row.slope[i] * (1 + 0.5e-3 * row.bend[i]), rtol=1e-3)
+        np.testing.assert_allclose(rise, row.slope[i] * (1 + 0.5e-3 * row.bend[i]), rtol=FINITE_DIFFERENCE)
 
 
 def test_influence_is_the_slope_of_the_value():
@@ -217,14 +227,14 @@ def test_correlated_and_independent_backups_meet_on_pairs():
     dense = dataclasses.replace(tree, var=None, cov=np.diag(tree.var))
     for horizon in HORIZONS:
         a, b = Backup(tree, horizon), CorrelatedBackup(dense, horizon)
-        np.testing.assert_allclose(b.value, a.value, rtol=1e-9)
-        np.testing.assert_allclose(b.value_var, a.value_var, rtol=1e-9, atol=1e-12)
+        np.testing.assert_allclose(b.value, a.value, rtol=CLOSED_FORM)
+        np.testing.assert_allclose(b.value_var, a.value_var, rtol=CLOSED_FORM, atol=CLOSED_FORM)
         there = a.crossings().slope > 1e-9
         if horizon > 0:
             for name in ("crossing", "slope", "bend", "now"):
                 x, y = getattr(a.crossings(), name), getattr(b.crossings(), name)
                 np.testing.assert_allclose(
-                    y[there], x[there], rtol=1e-4, atol=1e-6, err_msg=f"{name} {horizon}"
+                    y[there], x[there], rtol=RELATIVE_TAIL, atol=RELATIVE_TAIL, err_msg=f"{name} {horizon}"
                 )
 
 
@@ -234,8 +244,8 @@ def test_lines_cross_where_they_do_when_no_rollout_follows():
         build(leaf(0, 1), leaf(-0.5, 1)), var=None, cov=np.array([[1.0, -0.4], [-0.4, 2.0]])
     )
     row = CorrelatedBackup(tree, 0.0).crossings()
-    np.testing.assert_allclose(row.crossing, [-0.5 / 1.4, 0.5 / (2.4 / math.sqrt(2))], rtol=1e-9)
-    np.testing.assert_allclose(row.slope, [1.4, 2.4 / math.sqrt(2)], rtol=1e-9)
+    np.testing.assert_allclose(row.crossing, [-0.5 / 1.4, 0.5 / (2.4 / math.sqrt(2))], rtol=CLOSED_FORM)
+    np.testing.assert_allclose(row.slope, [1.4, 2.4 / math.sqrt(2)], rtol=CLOSED_FORM)
     np.testing.assert_array_equal(row.bend, 0.0)
 
 
@@ -248,11 +258,15 @@ def test_the_slope_of_a_candidate_is_what_the_weights_make_of_a_column_of_the_co
     tree = drawn("shared-aisles", 2)
     b = CorrelatedBackup(tree)
     along = tree.cov / np.sqrt(np.diag(tree.cov))
-    np.testing.assert_allclose(slopes(b), b.influence() @ along, rtol=1e-9, atol=1e-12 * scale_of(tree))
+    np.testing.assert_allclose(
+        slopes(b), b.influence() @ along, rtol=CLOSED_FORM, atol=CLOSED_FORM * scale_of(tree)
+    )
     i, d = 1, 1e-4
     moved = CorrelatedBackup(tree)
     moved.update(tree.mean + d * along[:, i], tree.cov)
-    np.testing.assert_allclose((moved.value - b.value) / d, slopes(b)[:, i], rtol=1e-2, atol=1e-4)
+    np.testing.assert_allclose(
+        (moved.value - b.value) / d, slopes(b)[:, i], rtol=FINITE_DIFFERENCE, atol=FINITE_DIFFERENCE
+    )
 
 
 def test_one_observation_can_raise_one_rival_and_lower_another():
@@ -282,7 +296,7 @@ def test_scale_and_shift_change_units_only(seed, family, scale, shift):
         if name in ("bend", "now"):  # a ratio of two small numbers where the slope is next to nothing
             x, b[name] = x[a["slope"] > 1e-6], b[name][a["slope"] > 1e-6]
         np.testing.assert_allclose(
-            b[name], x * units.get(name, 1.0), rtol=1e-5, atol=1e-5 * units.get(name, 1.0)
+            b[name], x * units.get(name, 1.0), rtol=RELATIVE_TAIL, atol=RELATIVE_TAIL * units.get(name, 1.0)
         )
 
 

@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import CLOSED_FORM
+from ladder import CLOSED_FORM, EXACT, QUADRATURE
 from scipy import stats
 from scipy.special import betaln
 
@@ -99,8 +99,10 @@ shape = st.floats(1e-2, 1e4)
 def test_win_loss_moments_are_those_of_the_beta_law(a, b, low, span):
     law = stats.beta(a, b, loc=low, scale=span)
     high = low + span
-    assert beliefs.win_loss_mean(a, b, low, high) == pytest.approx(law.mean(), rel=1e-9, abs=1e-9 * span)
-    assert beliefs.win_loss_var(a, b, low, high) == pytest.approx(law.var(), rel=1e-9)
+    assert beliefs.win_loss_mean(a, b, low, high) == pytest.approx(
+        law.mean(), rel=CLOSED_FORM, abs=CLOSED_FORM * span
+    )
+    assert beliefs.win_loss_var(a, b, low, high) == pytest.approx(law.var(), rel=QUADRATURE, abs=EXACT)
 
 
 @pytest.mark.parametrize(("a", "b", "k"), [(1, 1, 3), (2, 5, 4), (7, 1, 10)])

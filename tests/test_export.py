@@ -11,7 +11,7 @@ import numpy as np
 import onnx
 import onnxruntime
 import pytest
-from ladder import ONNX_DOUBLE, ONNX_FLOAT
+from ladder import EXACT, ONNX_DOUBLE, ONNX_ELSEWHERE, ONNX_FLOAT
 from leaf_tables import rows, table
 from scorers import KINDS, arguments, fitted, graph, scorer_bytes, training, upper_bound
 from sklearn.ensemble import GradientBoostingRegressor, HistGradientBoostingRegressor
@@ -164,7 +164,7 @@ def test_the_file_repeats_estimator_transform_and_decision(kind, transform):
         np.testing.assert_array_equal(got.in_range, inside)
         learned = np.asarray(model.predict(np.clip(matrix.x, low, high)), dtype=float)
         expected = mapped_back(learned, matrix.unit, matrix.first_order, transform)
-        np.testing.assert_allclose(got.voc[inside], expected[inside], rtol=1e-4, atol=1e-30)
+        np.testing.assert_allclose(got.voc[inside], expected[inside], rtol=ONNX_ELSEWHERE, atol=EXACT)
         np.testing.assert_array_equal(got.batch[inside], matrix.batch[inside])
         one_tree = Groups.of(np.zeros(24, dtype=int))
         told_by = bin_columns(np.clip(matrix.x, low, high), matrix.leaf_sd, one_tree)

@@ -8,7 +8,15 @@ import onnxruntime
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import CLOSED_FORM, FEATURE_FIT, FEATURE_TABLE, ROUGH_BATCH
+from ladder import (
+    CLOSED_FORM,
+    FEATURE_FIT,
+    FEATURE_ORDER,
+    FEATURE_TABLE,
+    ONNX_FLOAT,
+    RELATIVE_TAIL,
+    ROUGH_BATCH,
+)
 from leaf_tables import rows, table
 from scipy import integrate, optimize, stats
 
@@ -195,8 +203,8 @@ def test_scale_and_shift_of_utilities_change_no_feature(seed, scale, shift):
         "offset": (t["offset"] + shift) * scale,
     }
     a, b = GRAPH.matrix(t), GRAPH.matrix(moved)
-    np.testing.assert_allclose(b.x, a.x, rtol=1e-4, atol=1e-4)
-    np.testing.assert_allclose(b.unit, a.unit * scale, rtol=1e-6)
+    np.testing.assert_allclose(b.x, a.x, rtol=ONNX_FLOAT, atol=ONNX_FLOAT)
+    np.testing.assert_allclose(b.unit, a.unit * scale, rtol=RELATIVE_TAIL)
     assert np.all(np.abs(a.batch - b.batch) <= 1)
 
 
@@ -212,7 +220,7 @@ def test_relabelling_leaves_and_actions_permutes_the_rows(seed):
     moved = {k: v[order] if isinstance(v, np.ndarray) else v for k, v in t.items()}
     moved["action"] = name[moved["action"]]
     a, b = GRAPH.matrix(t), GRAPH.matrix(moved)
-    np.testing.assert_allclose(b.x, a.x[order], rtol=1e-4, atol=1e-4)
+    np.testing.assert_allclose(b.x, a.x[order], rtol=FEATURE_ORDER, atol=FEATURE_ORDER)
 
 
 @settings(deadline=None, max_examples=60, derandomize=True)

@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from ladder import CLOSED_FORM
 
 from distill.backup import backup_of
 from distill.candidates import Candidates
@@ -221,7 +222,7 @@ def test_closed_form_records_equal_the_static_rate_of_lines():
     for left, batch in ((50.0, None), (0.0, None), (3.0, 4)):
         a, k = closed_form_values(RECORD, rows, left, batch)
         b, m = closed_form_values(LEAF_TABLE, table, left, batch)
-        np.testing.assert_allclose(a, b, rtol=1e-5, atol=1e-12)
+        np.testing.assert_allclose(a, b, rtol=CLOSED_FORM, atol=CLOSED_FORM)
         np.testing.assert_array_equal(k[b > 1e-9], m[b > 1e-9])
 
 

@@ -9,7 +9,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 from chance_trees import build, leaf
-from ladder import CLOSED_FORM, RELATIVE_TAIL
+from ladder import CLOSED_FORM, EXACT, RELATIVE_TAIL
 
 from distill import schema
 from distill.errors import InputError
@@ -68,7 +68,7 @@ def test_a_tree_alone_keeps_its_values_and_its_unit_becomes_its_scale() -> None:
         query = Query(0.0, 3)
         own, scaled = price(tree, query), price(joined([in_units_of_scale(tree)]), query)
         scale = scale_of(tree)
-        np.testing.assert_allclose(scaled.voc * scale, own.voc, rtol=RELATIVE_TAIL, atol=1e-13 * scale)
+        np.testing.assert_allclose(scaled.voc * scale, own.voc, rtol=RELATIVE_TAIL, atol=EXACT)
         assert scale_of(in_units_of_scale(tree)) == pytest.approx(1.0, rel=CLOSED_FORM)
 
 

@@ -18,6 +18,7 @@ import matplotlib
 import matplotlib.image
 import numpy as np
 import pytest
+from ladder import EXACT, PUBLISHED
 from matplotlib.backends.backend_agg import FigureCanvasAgg
 from report_figures import (
     accuracy,
@@ -387,7 +388,7 @@ def test_figures_keep_three_digits_and_nearly_all_is_not_all() -> None:
     rng = np.random.default_rng(0)
     for x in 10 ** rng.uniform(-30, 7, 300):
         plain = re.sub(r" × 10(\S+)", lambda m: "e" + m[1].translate(_LOWERED), text_of(x))  # noqa: RUF001
-        assert float(plain.replace(",", "")) == pytest.approx(x, rel=0.005)
+        assert float(plain.replace(",", "")) == pytest.approx(x, rel=PUBLISHED * 1e-2, abs=EXACT)
 
 
 _LOWERED = str.maketrans("⁻⁰¹²³⁴⁵⁶⁷⁸⁹", "-0123456789")

@@ -11,6 +11,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from ladder import CLOSED_FORM, EXACT, FLOAT_COLUMNS, ONNX_ELSEWHERE
 from leaf_tables import NAMES, rows, table
 from scorers import KINDS, arguments, fitted, graph, scorer_bytes, training, without_upper_bound
 
@@ -72,7 +73,7 @@ def test_lists_integers_and_float32_are_taken():
     as_lists = {k: v.tolist() if isinstance(v, np.ndarray) else v for k, v in t.items()}
     np.testing.assert_array_equal(SCORER.score(**as_lists).voc, got.voc)
     small = {k: v.astype(np.float32) if k in NAMES and k != "action" else v for k, v in t.items()}
-    np.testing.assert_allclose(SCORER.score(**small).voc, got.voc, rtol=1e-2, atol=1e-9)
+    np.testing.assert_allclose(SCORER.score(**small).voc, got.voc, rtol=FLOAT_COLUMNS, atol=EXACT)
     small["action"] = t["action"].astype(np.uint8)
     small["mean"] = np.arange(20)
     SCORER.score(**small)
@@ -184,7 +185,7 @@ def test_leaves_unlike_those_of_training_are_flagged_and_scored_at_the_edge_of_t
     learned = mapped_back(
         np.asarray(fitted("dense").predict(edge), dtype=float), *graph().matrix(t)[1:3], "log_ratio"
     )
-    np.testing.assert_allclose(got.voc[~near], learned[~near], rtol=1e-4)
+    np.testing.assert_allclose(got.voc[~near], learned[~near], rtol=ONNX_ELSEWHERE)
     assert np.any(got.voc[~near] != wide.voc[~near])
     assert got.pick == int(np.argmax(got.voc - t["cost"])) == scorer.pick(**t)
     assert (scorer.counters.out_of_range, scorer.counters.fallback) == (2, 0)
@@ -346,7 +347,7 @@ def test_values_at_a_hundred_million_score_like_at_zero():
     t = inside_table()
     far = {**t, "offset": t["offset"] + 2.0**27}
     near = SCORER.score(**{**t, "offset": far["offset"] - 2.0**27})
-    np.testing.assert_allclose(SCORER.score(**far).voc, near.voc, rtol=1e-4, atol=1e-12)
+    np.testing.assert_allclose(SCORER.score(**far).voc, near.voc, rtol=ONNX_ELSEWHERE, atol=CLOSED_FORM)
 
 
 @np.errstate(all="ignore")

@@ -8,7 +8,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from ladder import RELATIVE_TAIL
+from ladder import CLOSED_FORM, DRAWN_SHARE, EXACT, RELATIVE_TAIL
 from scorers import scorer_bytes
 from small_dataset import FAMILY
 
@@ -96,12 +96,12 @@ def test_what_a_family_cannot_take_is_left_out_with_its_reason() -> None:
 
 def test_what_is_changed_is_changed_by_as_much_as_said() -> None:
     plain, noisy = (draw(shifted(BASE, name, LEAF_TABLE), 3, 5) for name in ("as trained", "noise x4"))
-    np.testing.assert_allclose(noisy.noise_var, 16 * plain.noise_var, rtol=1e-12)
+    np.testing.assert_allclose(noisy.noise_var, 16 * plain.noise_var, rtol=CLOSED_FORM)
     many = [draw(shifted(BASE, "leaves x4", LEAF_TABLE), 3, i).n_leaves for i in range(30)]
     few = [draw(BASE, 3, i).n_leaves for i in range(30)]
     assert 3 < np.sum(many) / np.sum(few) < 5
     large = draw(shifted(BASE, "unit x1000", LEAF_TABLE), 3, 5)
-    np.testing.assert_allclose(large.mean, 1000 * plain.mean, rtol=1e-9)
+    np.testing.assert_allclose(large.mean, 1000 * plain.mean, rtol=CLOSED_FORM)
 
 
 def test_coins_are_better_known_searched_longer_and_pay_otherwise() -> None:
@@ -110,7 +110,7 @@ def test_coins_are_better_known_searched_longer_and_pay_otherwise() -> None:
 
     for name, strength in (("as trained", 2), ("prior counts x4", 8), ("prior counts /4", 0.5)):
         for tree in drawn(name, 5):
-            np.testing.assert_allclose(tree.alpha + tree.beta - tree.count, strength, rtol=1e-12)
+            np.testing.assert_allclose(tree.alpha + tree.beta - tree.count, strength, rtol=CLOSED_FORM)
     spent = {name: np.mean([t.count.sum() + t.remaining for t in drawn(name)]) for name in COUNTS}
     assert 3 < spent["rollouts x4"] / spent["prior counts x4"] < 5
     assert 3 < spent["prior counts x4"] / spent["rollouts /4"] < 5
@@ -124,7 +124,7 @@ def test_coins_are_better_known_searched_longer_and_pay_otherwise() -> None:
         inner = np.concatenate([t.kind[1:][t.kind[1:] != schema.LEAF] for t in trees])
         share[name] = np.mean(inner == schema.CHANCE)
     # From a half: a quarter as many decision nodes, a quarter as many chance nodes.
-    assert share == pytest.approx({"more chance nodes": 0.875, "fewer chance nodes": 0.125}, abs=0.06)
+    assert share == pytest.approx({"more chance nodes": 0.875, "fewer chance nodes": 0.125}, abs=DRAWN_SHARE)
 
 
 def test_texts_survive_the_way_through_toml() -> None:
@@ -221,7 +221,7 @@ def test_a_unit_changes_no_pick() -> None:
         found = measure_shifts(scorer, base, names=("as trained", "unit x1000"), trees=15, seed=3, n_boot=2)
         a, b = found.values()
         assert a["forgone_percent"]["value"] == pytest.approx(
-            b["forgone_percent"]["value"], rel=RELATIVE_TAIL, abs=1e-9
+            b["forgone_percent"]["value"], rel=RELATIVE_TAIL, abs=EXACT
         )
 
 

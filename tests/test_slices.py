@@ -7,7 +7,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from ladder import CLOSED_FORM
+from ladder import CLOSED_FORM, EXACT
 from small_dataset import labelled
 
 from distill.candidates import Candidates
@@ -96,7 +96,7 @@ def test_stop_curves_are_sums_over_trees_in_units_of_their_scale(whole: Candidat
             sums[2] += -got if best <= 0 else 0
     for found in stop_curve(scored, prices=prices, n_boot=5):
         ours = (found["value"], found["stop_at_once"], found["go_on"])
-        assert ours == pytest.approx(np.array(lost[found["price"]]) / 80, rel=1e-9)
+        assert ours == pytest.approx(np.array(lost[found["price"]]) / 80, rel=CLOSED_FORM, abs=EXACT)
         assert found["value"] <= min(found["stop_at_once"], found["go_on"])
 
 

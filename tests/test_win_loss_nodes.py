@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 import onnxruntime
 import pytest
-from ladder import BETA_CDF, BETA_TABLE, ONNX_FLOAT, RELATIVE_TAIL
+from ladder import BETA_CDF, BETA_TABLE, EXACT, ONNX_FLOAT, RELATIVE_TAIL
 from onnx import TensorProto, helper
 from scipy import special, stats
 
@@ -119,7 +119,7 @@ def test_values_of_few_rollouts_agree_with_scipy(horizon):
     slow = slow_values(t, best, horizon)
     value, batch, log_best, each = graph_values(t, best, horizon, 100.0)
     np.testing.assert_allclose(value[0], slow.max(axis=0), rtol=RELATIVE_TAIL if horizon == 0 else 0,
-                               atol=1e-15 if horizon == 0 else ONNX_FLOAT)  # fmt: skip
+                               atol=EXACT if horizon == 0 else ONNX_FLOAT)  # fmt: skip
     clear = np.sort(slow, axis=0)
     clear = (clear[-1] > 1e-3) & (clear[-1] > 1.01 * clear[-2])
     assert np.count_nonzero(clear) >= 10

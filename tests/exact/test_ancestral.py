@@ -11,7 +11,7 @@ import pytest
 from dense_trees import effects_tree, flat, nested_effects, two_level
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import CLOSED_FORM, PUBLISHED, QUADRATURE
+from ladder import CLOSED_FORM, PUBLISHED, QUADRATURE, RELATIVE_TAIL
 
 from distill.errors import RefusedError
 from distill.exact import dynamic_dense
@@ -135,9 +135,9 @@ def test_rate_against_every_batch():
     tree = two_level([[0.0, 0.2], [0.1, 0.7]], cov, [1.0, 20.0, 5.0, 2.0])
     got = price(tree, Query(batch=None, remaining=20))
     rates = np.array([price(tree, Query(batch=k)).voc / k for k in range(1, 21)])
-    assert np.allclose(got.voc, rates.max(axis=0), rtol=2e-6, atol=0)
+    assert np.allclose(got.voc, rates.max(axis=0), rtol=RELATIVE_TAIL, atol=0)
     assert np.all(np.abs(got.voc - rates.max(axis=0)) <= got.error)
-    assert np.all(rates[got.batch - 1, np.arange(4)] >= rates.max(axis=0) * (1 - 2e-6))
+    assert np.all(rates[got.batch - 1, np.arange(4)] >= rates.max(axis=0) * (1 - RELATIVE_TAIL))
 
 
 def test_shift_scale_and_rewards():
@@ -214,7 +214,7 @@ def test_effects_are_found_after_any_rollouts(rollouts):
         assert effects is not None
         assert np.all(np.abs(effects.rho) <= 1)
         variance = effects.loading**2 + effects.rest**2
-        assert np.allclose(variance, np.diag(tree.cov), rtol=1e-7, atol=0)
+        assert np.allclose(variance, np.diag(tree.cov), rtol=CLOSED_FORM, atol=0)
 
 
 def test_other_covariances_are_refused():

@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import CLOSED_FORM
+from ladder import CLOSED_FORM, QUADRATURE
 
 from distill.backup import backup_of
 from distill.candidates import Candidates
@@ -199,7 +199,7 @@ def test_no_exact_rate_exceeds_the_bound_of_the_closed_form(family):
         kind = kind_of(columns)
         for horizon in (0.0, math.inf):
             exact = price(tree, Query(horizon, None, tree.remaining)).voc
-            assert np.all(exact <= closed_form_bounds(kind, columns) * (1 + 1e-9)), (i, horizon)
+            assert np.all(exact <= closed_form_bounds(kind, columns) * (1 + QUADRATURE)), (i, horizon)
 
 
 def test_closed_form_records_equal_the_static_rate_of_lines():

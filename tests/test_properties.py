@@ -12,7 +12,7 @@ from builders import bush, random_bush
 from flat_trees import deep_tree, scaled, shifted
 from hypothesis import assume, given, settings
 from hypothesis import strategies as st
-from ladder import CLOSED_FORM, LOG_TAIL, PUBLISHED, QUADRATURE, RELATIVE_TAIL
+from ladder import CLOSED_FORM, PUBLISHED, QUADRATURE, RELATIVE_TAIL, ROUNDINGS
 
 from distill import voc
 from distill.query import Query, scale_of
@@ -60,7 +60,7 @@ def test_a_constant_on_every_path_changes_nothing(tree, h, k, constant):
     moved, still = (voc.price(t, Query(h, k)) for t in (shifted(tree, constant), tree))
     close(moved.voc, still.voc, scale_of(tree) * (1 + abs(constant)))
     size = abs(constant) + np.abs(still.value).max() + scale_of(tree)
-    assert np.max(np.abs(moved.value - constant - still.value)) <= 10 * LOG_TAIL * size
+    assert np.max(np.abs(moved.value - constant - still.value)) <= 10 * ROUNDINGS * size
 
 
 @property_test

@@ -11,7 +11,7 @@ import pytest
 from dense_trees import effects_tree, flat, nested_effects, two_level
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import CLOSED_FORM, PUBLISHED, QUADRATURE, RELATIVE_TAIL
+from ladder import CLOSED_FORM, PUBLISHED, QUADRATURE, RELATIVE_TAIL, SAMPLED_LABEL
 
 from distill.errors import RefusedError
 from distill.exact import dynamic_dense
@@ -109,7 +109,7 @@ def test_deeper_trees_against_sampling(seed):
     got, rough = price(tree, Query(batch=4)), dynamic_dense.sampled(tree, Query(batch=4))
     assert np.all(np.abs(got.voc - rough.voc) <= rough.error)
     assert np.all(got.error <= QUADRATURE * 10 * scale_of(tree))
-    assert np.all(np.abs(got.value - rough.value) <= 4e-3 * scale_of(tree))
+    assert np.all(np.abs(got.value - rough.value) <= SAMPLED_LABEL * scale_of(tree))
 
 
 def test_independent_leaves_are_effects_too():
@@ -202,7 +202,7 @@ def test_properties(seed, k, up, times):
     turned = price(tree(mean[turn], cov[turn][:, turn], noise[turn], sizes[::-1]), Query(batch=k))
     assert np.all(np.abs(turned.voc[turn] - plain.voc) <= QUADRATURE * scale)
     drowned = price(tree(mean, cov, np.full(n, 1e20)), Query(batch=k))
-    assert np.all(drowned.voc <= 1e-8 * scale)
+    assert np.all(drowned.voc <= 10 * QUADRATURE * scale)
 
 
 @pytest.mark.parametrize("rollouts", [0, 1, 30])

@@ -202,7 +202,7 @@ def test_the_rate_is_the_best_of_every_batch(horizon: float) -> None:
     assert rate.voc == pytest.approx(each.max(axis=0), rel=RELATIVE_TAIL)
     picked = each[rate.batch - 1, np.arange(tree.n_leaves)]
     assert picked == pytest.approx(each.max(axis=0), rel=RELATIVE_TAIL)
-    assert np.all(np.abs(rate.voc - each.max(axis=0)) <= rate.error + 1e-12 * rate.voc)
+    assert np.all(np.abs(rate.voc - each.max(axis=0)) <= rate.error + CLOSED_FORM * rate.voc)
 
 
 # ---------------------------------------------------------------- bounds, extremes, refusals
@@ -313,7 +313,7 @@ def test_wild_trees_are_right_to_their_bound(seed: int) -> None:
         assert np.all(priced.voc[tree.var == 0] == 0)
         assert np.all(priced.error <= CHANCE_LABEL * scale)
         if before is not None:
-            slack = before.error + priced.error + 1e-12 * priced.voc
+            slack = before.error + priced.error + CLOSED_FORM * priced.voc
             assert np.all(priced.voc >= before.voc - slack)
         before = priced
 

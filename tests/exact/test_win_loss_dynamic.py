@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ladder import CLOSED_FORM, QUADRATURE, RELATIVE_TAIL
+from ladder import CLOSED_FORM, QUADRATURE, RELATIVE_TAIL, ROUNDINGS
 from win_loss_builders import arms, change, random_tree
 
 from distill.exact.win_loss import price
@@ -45,7 +45,7 @@ def test_published_expected_maximum(entry):
 def test_published_perfect_information(entry):
     priced = price(arms([(1, 1)], [(1, 1, 0.25, 0.75)]), Query(batch=2**53))
     truth = float(Fraction(entry["exact"]))
-    assert abs(priced.voc[0] - truth) <= priced.error[0] < 1e-6
+    assert abs(priced.voc[0] - truth) <= priced.error[0] < RELATIVE_TAIL
 
 
 def exact_voc(actions: list[list[tuple[int, int]]], action: int, leaf: int, k: int) -> Fraction:
@@ -112,7 +112,7 @@ def test_agrees_with_the_oracle(seed, kind):
     for i in range(tree.n_leaves):
         miss = abs(priced.voc[i] - oracle.voc(tree, math.inf, i, k))
         assert miss <= QUADRATURE * scale
-        assert miss <= priced.error[i] + 1e-11  # what the oracle itself is good to
+        assert miss <= priced.error[i] + 10 * CLOSED_FORM  # what the oracle itself is good to
 
 
 def test_agrees_with_the_oracle_below_rewards_and_discounts():
@@ -281,7 +281,7 @@ def test_leaves_too_narrow_to_tell_from_sure_are_sure():
         tree = arms([(1.0, 1.0), narrow, (2.0, 1.0)], [(4, 1.5)])
         for query in (Query(batch=4), Query(horizon=3, batch=4)):
             priced = price(tree, query)
-            assert priced.voc[1] <= priced.error[1] <= 1e-14
+            assert priced.voc[1] <= priced.error[1] <= ROUNDINGS
             value = float(oracle.value_now(tree, query.horizon)[0])
             assert priced.value[0] == pytest.approx(value, rel=QUADRATURE)
             if sure == 3.0:

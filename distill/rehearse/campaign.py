@@ -51,7 +51,7 @@ class Campaign:
         constant of UCT and the priors of both Thompson samplings and of the static rate are chosen for
         each problem and number of rollouts where their policies are given by bare name; 0 leaves them as
         they are. A policy that ends in ":prior=auto" has its prior tuned in the same way; one that ends in
-        ":stop=auto" stops at the highest price that costs no regret on these decisions.
+        ":stop=auto" stops at the highest price that costs next to no regret, on `seeds` other decisions.
     wide : those of the problems that are rehearsed under `wide_budgets` too.
     stops, plenty : policies, with and without ":stop=auto", that play under budgets of their own, alone:
         what stopping saves shows where rollouts are many.
@@ -185,8 +185,8 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
         budget = Budget.parse(text)
         rollouts, specs = budget.room(0, 0.0), campaign.policies_under(text)
         if (rollouts, specs) not in tuned:
-            where, seeds = folder / "tuning", campaign.tuning_seeds
-            rows = tune(specs, problem, rollouts, where, seeds=seeds, plays=plays)
+            seeds = {"seeds": campaign.tuning_seeds, "stop_seeds": campaign.seeds}
+            rows = tune(specs, problem, rollouts, folder / "tuning", **seeds, plays=plays)
             out.tuning.extend(rows)
             tuned[rollouts, specs] = {row["policy"]: row["chosen"] for row in rows}
         texts = {spec: tuned[rollouts, specs].get(spec, untuned(spec)) for spec in specs}
@@ -197,8 +197,10 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
             if why is not None
         )
         policies = [named(make_policy(texts[spec]), spec) for spec in specs if reasons[spec] is None]
-        where, seeds = folder / "cells", campaign.seeds
-        out.cells.extend(rehearse([problem], policies, [budget], where, seeds=seeds, first_seed=_FIRST_SEED))
+        where, first = folder / "cells", _FIRST_SEED
+        out.cells.extend(
+            rehearse([problem], policies, [budget], where, seeds=campaign.seeds, first_seed=first)
+        )
         write_atomic(_place(folder, name, text).with_suffix(".done"), _played(specs))
     return name, out
 

@@ -25,6 +25,10 @@ def _table(name: str, discount: float, skill: float, depth: int, length: int) ->
     return GymTable(name, discount=discount, skill=skill), Settings(depth=depth, length=length)
 
 
+def _plans(name: str, discount: float, length: int) -> tuple[Modelled, Settings]:
+    return GymTable(name, discount=discount, skill=0.9), Settings(depth=2, length=length, plans=True)
+
+
 def _odds(name: str, skill: float, depth: int, length: int) -> tuple[Modelled, Settings]:
     settings = Settings(depth=depth, length=length, plans=True, win_loss=(0.0, 1.0))
     return GymTable(name, discount=1.0, skill=skill), settings
@@ -40,6 +44,11 @@ SIMULATORS: Final[dict[str, Callable[[], tuple[Modelled, Settings]]]] = {
     "cliff_walking_slippery": lambda: _table("cliff_walking_slippery", 0.98, 0.9, 2, 60),
     "frozen_lake_4x4": lambda: _table("frozen_lake_4x4", 0.99, 0.5, 2, 100),
     "frozen_lake_8x8": lambda: _table("frozen_lake_8x8", 0.99, 0.5, 2, 200),
+    # Plans of two moves, whatever chance does: two steps of the model above show the holes and the cliff by
+    # themselves, and leave little to a search.
+    "frozen_lake_4x4_plans": lambda: _plans("frozen_lake_4x4", 0.99, 100),
+    "frozen_lake_8x8_plans": lambda: _plans("frozen_lake_8x8", 0.99, 200),
+    "cliff_walking_slippery_plans": lambda: _plans("cliff_walking_slippery", 0.98, 60),
     # Reach the gift or not, undiscounted: every rollout wins or loses. Plans of three moves.
     "frozen_lake_4x4_odds": lambda: _odds("frozen_lake_4x4", 0.9, 3, 200),
     "frozen_lake_8x8_odds": lambda: _odds("frozen_lake_8x8", 0.9, 3, 400),
@@ -50,6 +59,9 @@ _SOLVABLE: Final = (
     "cliff_walking_slippery",
     "frozen_lake_4x4",
     "frozen_lake_8x8",
+    "frozen_lake_4x4_plans",
+    "frozen_lake_8x8_plans",
+    "cliff_walking_slippery_plans",
     "frozen_lake_4x4_odds",
     "frozen_lake_8x8_odds",
     "cold_store_small",

@@ -119,7 +119,6 @@ class Decided:
     rollouts : spent. choosing : time of the policy and of belief updates.
     stopped : whether the policy stopped before the budget was used.
     choices : made; fallbacks : those of them that the policy's own values did not make.
-    action : the root action acted on.
     """
 
     regret: float
@@ -130,7 +129,6 @@ class Decided:
     stopped: bool
     choices: int
     fallbacks: int
-    action: int
 
     @property
     def measured(self) -> float:
@@ -162,7 +160,7 @@ def decide(
     rehearsed, and policies differ by nothing but their choices and the time those take. With
     `budget.busy` rollouts really take at least their stated cost, and the clock counts what they took.
     """
-    return _searched(draw, policy, budget, rng, values or expected_maxima, clock)[0][-1]
+    return _searched(draw, policy, budget, rng, values or expected_maxima, clock)[-1]
 
 
 def decide_at_prices(
@@ -174,16 +172,12 @@ def decide_at_prices(
     *,
     values: Callable[[BeliefTree], Floats] | None = None,
     clock: Callable[[], float] = time.perf_counter,
-) -> tuple[list[Decided], Floats]:
+) -> list[Decided]:
     """What `decide` gives at each price of a rollout, from one search; last, what it gives at none.
 
     policy : one that can `watch`, made without a price. prices : falling, in units of the tree's scale.
     A search with a price makes the choices of one without, until it stops: so the latter passes every
     place where the former end.
-
-    Returns the decisions, and what each price lost, shape (n_prices,), value units: the regret more than
-    without a price, on average over what the whole search leaves open where `Decided.expected_regret` is
-    known. That is 0 unless another action is taken, so it has far less noise than a difference of regrets.
     """
     if any(not high > low for high, low in pairwise(prices)):
         raise InputError("prices", "must fall from one to the next", list(prices))
@@ -200,7 +194,7 @@ def _searched(
     values: Callable[[BeliefTree], Floats],
     clock: Callable[[], float],
     prices: Sequence[float] = (),
-) -> tuple[list[Decided], Floats]:
+) -> list[Decided]:
     posterior = Posterior(draw.tree)
     learn = getattr(policy, "observe", None)
     own_beliefs = getattr(policy, "own_beliefs", False)
@@ -212,10 +206,11 @@ def _searched(
     def ended() -> Decided:
         tree = posterior.tree()
         action = int(np.argmax(values(tree)))
-        expected = expected_loss(tree, action) if _is_known(draw) else math.nan
+        known = draw.believed and not tree.has_chance
+        expected = expected_loss(tree, action) if known else math.nan
         by_mean = draw.regret(int(np.argmax(posterior_means(tree))))
         counts = spent, elapsed - rolling, stopped, choices, fallbacks
-        return Decided(draw.regret(action), by_mean, expected, *counts, action)
+        return Decided(draw.regret(action), by_mean, expected, *counts)
 
     at_prices: list[Decided] = []
     watched: Any = policy  # it has `watch` and `worth` where there are prices
@@ -257,17 +252,7 @@ def _searched(
         elapsed += clock() - started + cost
         spent += rollouts
     end = ended()
-    at_prices += [end] * (len(prices) - len(at_prices))
-    lost = np.zeros(0)
-    if prices:
-        worth = expected_maxima(posterior.tree()) if _is_known(draw) else draw.worth
-        lost = worth[end.action] - worth[[at.action for at in at_prices]]
-    return [*at_prices, end], lost
-
-
-def _is_known(draw: Draw) -> bool:
-    """Whether the tree's beliefs tell in closed form what is lost on average over all they leave open."""
-    return draw.believed and not draw.tree.has_chance
+    return [*at_prices, *[end] * (len(prices) - len(at_prices)), end]
 
 
 def expected_maxima(tree: BeliefTree) -> Floats:

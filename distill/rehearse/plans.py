@@ -21,9 +21,11 @@ _TREES: Final = (
     "tree-4x4^2-noise4", "tree-3x3^2-noise4-prior4", "tree-2x8^1-winloss", "tree-2x8^1-noise16",
     "tree-6x2^1-noise4",
 )  # fmt: skip
+# Of those that come along, the ones that leave a search something to find: with 2,048 rollouts shared out
+# evenly the regret is less than half of that of acting before the first one.
 _SIMULATORS: Final = (
-    "frozen_lake_8x8", "cold_store_small", "frozen_lake_8x8_odds", "cliff_walking", "cliff_walking_slippery",
-    "frozen_lake_4x4",
+    "cold_store_small", "frozen_lake_4x4_odds", "frozen_lake_8x8_plans", "cliff_walking_slippery_plans",
+    "frozen_lake_4x4_plans",
 )  # fmt: skip
 _BASELINES: Final = ("even", "uct", "thompson", "top-two", "static-voc", "static-rate")
 # 32 and 128 rollouts' worth of time at 100 us and at 1 ms.
@@ -38,7 +40,7 @@ _SLOWEST: Final = 2.0
 
 _PLANS: Final = {
     "quick": Campaign(
-        problems=("tree-4x4^1-noise4", "tree-3x3^3-noise1", "cliff_walking"),
+        problems=("tree-4x4^1-noise4", "tree-3x3^3-noise1", "cliff_walking_slippery_plans"),
         budgets=("6.4ms@100us", "64ms@1ms"),
         policies=("uct:c=1", "thompson", "static-rate"),
         seeds=60,

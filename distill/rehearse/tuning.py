@@ -18,7 +18,6 @@ from distill.rehearse.policies import Policy
 from distill.rehearse.policy_specs import make_policy
 from distill.rehearse.problems import Problem
 from distill.rehearse.rehearsal import rehearse
-from distill.tree import Floats
 
 __all__ = ["TUNED", "TUNING_SEED", "name_of", "named", "tune", "untuned"]
 
@@ -70,12 +69,14 @@ def tune(
     folder: Path,
     *,
     seeds: int,
+    stop_seeds: int,
     plays: Callable[[str], bool],
 ) -> list[dict[str, Any]]:
     """The best constants of the policies at this number of rollouts, with what each gave.
 
     specs : the campaign's policies; those that leave nothing to tuning are passed over. plays : whether
-    an untuned text plays on this problem at all. seeds : decisions, 0 takes what is untuned.
+    an untuned text plays on this problem at all. seeds : decisions, 0 takes what is untuned. stop_seeds :
+    those for prices to stop at: a loss of a hundredth shows on no fewer decisions than it is judged by.
     """
     tries = _tries(specs, plays)
     stops = [spec for spec in specs if spec.endswith(_STOP_AUTO) and plays(untuned(spec))]
@@ -97,7 +98,7 @@ def tune(
             rows.append({**about, "policy": spec, "chosen": chosen, "regret": regret})
         seconds = float(sum(cell.processor.sum() for cell in cells))
         rows = [{**row, "processor_seconds": seconds if i == 0 else 0.0} for i, row in enumerate(rows)]
-    return [*rows, *(_stop(spec, problem, rollouts, folder, seeds) for spec in stops)]
+    return [*rows, *(_stop(spec, problem, rollouts, folder, stop_seeds) for spec in stops)]
 
 
 def _stop(spec: str, problem: Problem, rollouts: int, folder: Path, seeds: int) -> dict[str, Any]:
@@ -114,15 +115,15 @@ def _stop(spec: str, problem: Problem, rollouts: int, folder: Path, seeds: int) 
         return found
     policy, budget = make_policy(base), Budget(rollouts=rollouts)
     ends: list[list[tuple[float, int]]] = []
-    lost: list[Floats] = []
     started = time.process_time()
     for seed in range(TUNING_SEED, TUNING_SEED + seeds):
         rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
-        decision, more = decide_at_prices(problem.draw(seed), policy, budget, rng, _PRICES)
+        decision = decide_at_prices(problem.draw(seed), policy, budget, rng, _PRICES)
         ends.append([(end.measured, end.rollouts) for end in decision])
-        lost.append(more)
+    measured = np.array(ends)[:, :, 0]
     regret, spent = np.mean(ends, axis=0).T
-    surely = np.mean(lost, axis=0) + np.std(lost, axis=0) / math.sqrt(seeds)
+    lost = measured[:, :-1] - measured[:, -1:]
+    surely = lost.mean(axis=0) + lost.std(axis=0) / math.sqrt(seeds)
     free = np.flatnonzero(surely <= _NO_LOSS * regret[-1])
     texts = [f"{base}:stop={price:g}" for price in _PRICES]
     row = {
@@ -130,7 +131,6 @@ def _stop(spec: str, problem: Problem, rollouts: int, folder: Path, seeds: int) 
         "chosen": texts[free[0]] if free.size else base,
         "regret": dict(zip([*texts, base], regret.tolist(), strict=True)),
         "spent": dict(zip([*texts, base], spent.tolist(), strict=True)),
-        "lost": dict(zip(texts, np.mean(lost, axis=0).tolist(), strict=True)),
         "processor_seconds": time.process_time() - started,
     }
     write_atomic(kept, (json.dumps(row, indent=1) + "\n").encode())

@@ -233,15 +233,17 @@ def test_tables_show_every_cell():
 
 # --- where rollouts are plenty ---------------------------------------------------------------------
 
-USE = f"scorer:{FAST}:late=0.5"
+USE = f"scorer:{FAST.replace('cold-store-fast', 'crossing-traffic')}:late=0.5"
 PLENTY = replace(
     SMALL,
-    problems=SMALL.problems[:1],
+    problems=(
+        "tree-2x2^2-noise1-chance",
+    ),  # regret itself counts there, 0 in most decisions of so many rollouts
     policies=("thompson",),
     stops=(USE, f"{USE}:stop=auto"),
     plenty=("150", "400"),
     slowest=1e-9,
-    tuning_seeds=20,
+    seeds=20,
 )
 
 
@@ -261,7 +263,9 @@ def test_stops_play_where_rollouts_are_plenty_and_nothing_else_does(plenty):
     assert [row["budget"] for row in summary["stopping"]] == ["150", "400"]
     table = (folder / "stopping.md").read_text().splitlines()
     assert len(table) == 4
-    assert table[-1].startswith("| tree-3x2^1-noise1 | Gaussian | 400 | cold-store-fast-late0.5-stops |")
+    assert table[-1].startswith(
+        "| tree-2x2^2-noise1-chance | Gaussian, chance nodes | 400 | crossing-traffic-late0.5-stops |"
+    )
     assert (
         sum("Stopping early at a budget of" in x for x in (folder / "table.md").read_text().splitlines()) == 2
     )
@@ -276,9 +280,9 @@ def test_the_price_is_the_highest_that_cost_nothing_in_tuning(plenty):
         assert list(regret)[-1] == USE
         assert spent[USE] == row["rollouts"]
         assert list(spent.values()) == sorted(spent.values())  # a lower price never stops earlier
-        assert row["lost"][row["chosen"]] <= 0.01 * regret[USE]
+        assert regret[row["chosen"]] <= 1.01 * regret[USE]
         assert float(row["chosen"].partition(":stop=")[2]) == found["price"]
-        assert found["saved"] > 0
+        assert found["saved"] > 0.1
 
 
 def test_tuned_prices_are_read_when_a_run_goes_on(plenty, monkeypatch):

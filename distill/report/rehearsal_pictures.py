@@ -40,9 +40,11 @@ _SORTS: Final = (
 )
 
 
-def _sort(policy: str) -> tuple[str, str] | None:
-    """Label and colour of a policy that pictures show."""
-    return next(((label, role) for words, label, role in _SORTS if policy.startswith(words)), None)
+def _shown(summary: Figures, part: str) -> list[Figures]:
+    """Rows of policies that pictures show. Single scorers are not, whatever their names begin with."""
+    scorers = {name for file in summary["scorers"] for name in file["policies"]}
+    words = tuple(word for group, _, _ in _SORTS for word in group)
+    return [r for r in summary[part] if r["policy"].startswith(words) and r["policy"] not in scorers]
 
 
 # --- ratios ----------------------------------------------------------------------------------------
@@ -125,7 +127,7 @@ def _cut(x: float) -> float:
 def costs(summary: Figures, most: int = 4) -> ET.Element | None:
     """Regret against the cost of a rollout, a panel a problem, for problems that have three costs or more."""
     by_problem: dict[str, dict[int, set[float]]] = {}
-    rows = [row for row in summary["rows"] if row["timed"] and _sort(row["policy"]) and row["measured"]]
+    rows = [row for row in _shown(summary, "rows") if row["timed"] and row["measured"]]
     for row in rows:
         lengths = by_problem.setdefault(row["problem"], {})
         lengths.setdefault(_rollouts(row), set()).add(row["rollout_seconds"])
@@ -196,10 +198,7 @@ def _value_ticks(ax: Axes) -> None:
 
 def choosing(summary: Figures) -> ET.Element | None:
     """Share of the time that choosing takes, by policy and cost of a rollout: median and range of cells."""
-    rows = [
-        r for r in summary["rows"]
-        if r["timed"] and r["choosing_share"] is not None and _sort(r["policy"]) is not None
-    ]  # fmt: skip
+    rows = [r for r in _shown(summary, "rows") if r["timed"] and r["choosing_share"] is not None]
     if not rows:
         return None
     return svg(_choosing(rows), "choosing", "Share of time spent choosing, by policy and cost of a rollout")
@@ -254,7 +253,7 @@ def break_even(summary: Figures) -> ET.Element | None:
     if not lengths:
         return None
     most = max(lengths, key=lambda rollouts: (len(lengths[rollouts]), rollouts))
-    shown = [r for r in summary["break_even"] if r["rollouts"] == most and _sort(r["policy"])]
+    shown = [r for r in _shown(summary, "break_even") if r["rollouts"] == most]
     name = f"Regret in the time of {most} rollouts against their cost, as a multiple of the best sampling"
     return svg(_break_even(shown, most), "break-even", name) if shown else None
 

@@ -206,3 +206,11 @@ def test_pictures_stand_alone_and_show_every_cell(tmp_path):
     assert ">taxi<" in text
     assert ">taxi<" not in less
     assert "How much of the time goes into choosing" in rehearsal_page(summary)
+
+
+def test_a_scorer_called_like_a_rule_is_not_drawn_as_one():
+    summary = summarise(results([4, 0.5, 1.1]))
+    renamed = json.loads(json.dumps(summary).replace('"b"', '"uct-like"'))
+    for name in ("costs", "choosing", "break-even"):
+        drawn, again = (ET.tostring(rehearsal_pictures(s)[name]) for s in (summary, renamed))
+        assert drawn == again

@@ -23,11 +23,11 @@ __all__ = ["TUNED", "TUNING_SEED", "name_of", "named", "tune", "untuned"]
 
 TUNING_SEED: Final = 1_000_000  # tuning looks at decisions from here on, the rehearsal at those before
 
-# Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from: five a decade, then one.
-# No single leaf's rollouts may be worth much any more where those of all leaves together are.
+# Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from. The lowest ones matter: no
+# single leaf's rollouts may be worth much any more where those of all leaves together are.
 _PRICES: Final = (
-    *(float(f"{10 ** (-n / 5):.2g}") for n in range(5, 51)),
-    *(float(f"1e-{n}") for n in range(11, 31)),
+    *(float(f"{digit}e-{n}") for n in range(2, 11) for digit in (3, 1)),
+    *(float(f"1e-{n}") for n in (12, 15, 20, 25, 30)),
 )
 _NO_LOSS: Final = 0.01  # of the regret: what stopping may cost when tuned, a standard error allowed for
 _WIDTHS: Final = (0.7, 1.4, 2.0)  # of the prior, that ":prior=auto" chooses from beside 1

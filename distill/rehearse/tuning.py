@@ -23,8 +23,8 @@ __all__ = ["TUNED", "TUNING_SEED", "name_of", "named", "tune", "untuned"]
 
 TUNING_SEED: Final = 1_000_000  # tuning looks at decisions from here on, the rehearsal at those before
 
-# Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from. The lowest ones matter: no
-# single leaf's rollouts may be worth much any more where those of all leaves together are.
+# Prices of a rollout, in units of the tree's scale, that ":stop=auto" chooses from. The lowest ones matter:
+# no single leaf's rollouts may be worth much any more where those of all leaves together are.
 _PRICES: Final = (
     *(float(f"{digit}e-{n}") for n in range(2, 11) for digit in (3, 1)),
     *(float(f"1e-{n}") for n in (12, 15, 20, 25, 30)),

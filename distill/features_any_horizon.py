@@ -14,8 +14,16 @@ all lie below it. Their maximum is then that of the largest mean, and varies as 
 
 with d = m - mu, theta_0 and theta_k before and after k more rollouts; f(-x) = phi(x) / b(x) for x >= 0. The
 smaller of its two bounds phi(d / theta_k) theta_k / b and phi(d / theta_k) (theta_k - theta_0) stands for it:
-each is exact at one end, h = 0 and h to infinity. The larger of this and the value of a change of choice is
-the start. At h = 0 it is the static start, exact but for the fit of f; at infinity the dynamic one.
+each is exact at one end, h = 0 and h to infinity. The siblings' maximum has a heavier right tail than a
+normal of its moments: the leaf that leads its action gains at least what it gains beside any one sibling,
+with theta^2 of these two alone. The larger of all this and the value of a change of choice is the start. At
+h = 0 it is the static start, exact but for the fit of f; at infinity the dynamic one.
+
+*No leaf is taken for one of another horizon.* Where knowing better decides, the value of a change of choice
+may be too small by any factor; at infinity leaves that look the same have that value only, and a learner
+would lend their ratios to the former. So the threshold is then the one that the start stands for, the z <= 0
+of phi(z) = start / unit. A leaf whose siblings alone beat the rival changes no choice; its start is 0, and no
+learner spends itself on its ratio.
 """
 
 from __future__ import annotations
@@ -32,7 +40,7 @@ from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE
 __all__ = ["FEATURE_NAMES", "build_graph"]
 
 FEATURE_NAMES: Final = (
-    "threshold",  # t0 / s_k, cut at +-40: how far the leaf must rise to change the choice, or fall
+    "threshold",  # t0 / s_k, cut at +-40: how far the leaf must rise to change the choice, or fall; see above
     "sibling_help",  # -q(y) up to a constant factor: what the siblings take off the threshold, in theta_0
     "step",  # s_k / theta_k
     "above_siblings",  # d / theta_k, cut at +-40
@@ -92,14 +100,17 @@ def build_graph(
     theta_k = g("Sqrt", g("Add", spread2, later))
     above = start.cut(g("Div", above, theta_k))
     lead = start.cut(g("Div", g("Sub", value, rival), theta_k))
-    own = _known_better(g, above, theta, theta_k)
+    beside = _leader_known_better(g, start, best, top, m, sibling, known, later)
+    own = g("Max", _known_better(g, above, theta, theta_k), beside)
     if batch is None:
         own = g("Div", own, g.at_least(start.k, 1.0))
     own = g("Where", g("GreaterOrEqual", lead, g.double(0.0)), own, g.double(0.0))
+    change = start.value(g("Where", alone, g.double(0.0), slope))
+    z = g("Where", g("Greater", own, change), _stands_for(g, own, start.unit), start.z)
     columns = (
-        start.z, help_, g("Div", start.s_k, theta_k), above, lead, g("Div", theta, theta_k),
+        z, help_, g("Div", start.s_k, theta_k), above, lead, g("Div", theta, theta_k),
     )  # fmt: skip
-    return start.model(g("Max", start.value(slope), own), columns, FEATURE_NAMES, kind)
+    return start.model(g("Max", change, own), columns, FEATURE_NAMES, kind)
 
 
 def _learned(g: Nodes, v: str, noise: str, h: str) -> str:
@@ -113,3 +124,23 @@ def _known_better(g: Nodes, above: str, theta: str, theta_k: str) -> str:
     rise = g("Mul", g("Sub", theta_k, theta), g.double(1 / math.sqrt(2 * math.pi)))
     density = g("Exp", g("Mul", g("Mul", above, above), g.double(-0.5)))
     return g("Mul", density, g("Min", g("Div", theta_k, bottom), rise))
+
+
+def _leader_known_better(
+    g: Nodes, start: Start, best: str, top: str, m: str, sibling: str, known: str, later: str
+) -> str:
+    """The most that the leaf leading the best action gains beside one sibling; 0 for others; shape (1, n)."""
+    leads, zero = g("And", best, g("Equal", m, top)), g.double(0.0)
+    theta, theta_k = (
+        g("Sqrt", g("Add", known, g("ReduceMax", g("Where", leads, x, zero)))) for x in (known, later)
+    )
+    highest = g("ReduceMax", g("Where", leads, m, g.double(-LARGE)))
+    apart = start.cut(g("Div", g("Sub", highest, sibling), theta_k))
+    return g("Where", leads, g("ReduceMax", _known_better(g, apart, theta, theta_k)), zero)
+
+
+def _stands_for(g: Nodes, own: str, unit: str) -> str:
+    """The z <= 0 with phi(z) = own / unit, 0 where that is beyond phi(0); shape (1, n)."""
+    share = g("Mul", g("Div", own, g.at_least(unit, TINY)), g.double(math.sqrt(2 * math.pi)))
+    log_share = g("Log", g("Clip", share, g.scalar(TINY), g.scalar(1.0)))
+    return g("Sub", g.double(0.0), g("Sqrt", g("Mul", log_share, g.double(-2.0))))

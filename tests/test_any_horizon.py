@@ -23,6 +23,7 @@ from distill.errors import InputError, ScorerFileError
 from distill.family import draw, load_family, parse_family
 from distill.generate import generate
 from distill.infer import infer
+from distill.metrics import picks, ratio_over_trees
 from distill.peers import FIRST_ORDER, MOMENTS, ONE, SAMPLES, STATIC, THOMPSON, UCT
 from distill.query import Query
 from distill.recorder import Recorder
@@ -300,25 +301,40 @@ def test_shifts_keep_each_trees_horizon(scorer):
     assert all(m["forgone_percent"]["value"] < 10 and m["aside"] == 0 for m in found.values())
 
 
+def forgone(path: Path, dataset: Path) -> tuple[np.ndarray, np.ndarray]:
+    """What the picks of a scorer file lose at each tree, and the best there is, u a rollout."""
+    scorer = Scorer.load(path)
+    rows, _ = Candidates.read(dataset, any_horizon=scorer.facts["input"] == ANY_HORIZON.name)
+    best = rows.groups.highest(rows.label)
+    score = scorer.score(**rows.columns, tree=rows.tree).voc
+    return best - rows.label[picks(rows.groups, score)], best
+
+
 @pytest.mark.slow
 def test_one_file_is_nearly_as_good_at_each_horizon_as_one_trained_for_it(tmp_path):
-    """3,000 trees of three horizons against 1,000 of each, on the same 1,000 others.
+    """3,000 trees of three horizons against 1,000 of each, twice, on the same 3,000 others of each.
 
-    A twentieth of a percentage point is half of what a good scorer may forgo. Other horizons' trees teach as
-    well: with 1,500 others, the one file lost 0.007, 0.039 and 0.028 % at h = 0, 4 and infinity, those
-    trained for one horizon 0.001, 0.132 and 0.042 %.
+    A twentieth of a percentage point is half of what a good scorer may forgo. One tree in a thousand can
+    cost that alone, so files are compared tree by tree, and the interval's upper end must keep the margin.
+    MEASURED
     """
-    recipe = "boosting 100x31"
-    generate(family(), tmp_path / "mixed", trees=3000, seed=1)
-    train(tmp_path / "mixed", tmp_path / "of-mixed", recipes=[recipe], n_boot=20)
-    ship(tmp_path / "of-mixed", tmp_path / "mixed.onnx")
+
+    def trained(data: Path) -> Path:
+        train(data, data / "trained", recipes=["boosting 100x31"], n_boot=20)
+        return data / "trained" / "boosting-100x31.onnx"
+
+    mixed = []
+    for seed in (1, 11):
+        generate(family(), tmp_path / f"mixed-{seed}", trees=3000, seed=seed)
+        mixed.append(trained(tmp_path / f"mixed-{seed}"))
     for h in (0.0, 4.0, math.inf):
-        labelled(tmp_path / f"fit{h}", trees=1000, seed=2, horizon=h)
-        train(tmp_path / f"fit{h}", tmp_path / f"of{h}", recipes=[recipe], n_boot=20)
-        ship(tmp_path / f"of{h}", tmp_path / f"own{h}.onnx")
-        test = labelled(tmp_path / f"test{h}", trees=1000, seed=3, horizon=h)
-        both = (
-            validate(tmp_path / name, test, n_boot=20)["accuracy"] for name in ("mixed.onnx", f"own{h}.onnx")
+        own = [
+            trained(labelled(tmp_path / f"{h}-{seed}", trees=1000, seed=seed, horizon=h)) for seed in (2, 12)
+        ]
+        test = labelled(tmp_path / f"test-{h}", trees=3000, seed=3, horizon=h)
+        (ours, best), (theirs, _) = (
+            np.mean([forgone(path, test) for path in paths], axis=0) for paths in (mixed, own)
         )
-        ours, own = (x["forgone_percent"]["value"] for x in both)
-        assert ours < own + 0.05, h
+        more = ratio_over_trees(100 * (ours - theirs), best)
+        print(h, 100 * ours.sum() / best.sum(), 100 * theirs.sum() / best.sum(), more)
+        assert more.high < 0.05, (h, more)

@@ -135,7 +135,10 @@ def _files(campaign: Campaign) -> list[dict[str, Any]]:
 
 
 def _processor_seconds(results: Results) -> dict[str, dict[str, float]]:
-    """By problem: of the decisions of all cells, and of the tuning."""
+    """By problem: of the decisions of all cells, and of the tuning.
+
+    Prices to stop at are tuned on as many decisions as a cell has, so they count with the cells.
+    """
     out: dict[str, dict[str, float]] = {}
 
     def spent(problem: str, on: str, seconds: float) -> None:
@@ -144,5 +147,5 @@ def _processor_seconds(results: Results) -> dict[str, dict[str, float]]:
     for cell in results.cells:
         spent(cell.problem, "cells", float(cell.processor.sum()))
     for row in results.tuning:  # of problems too where all that was tuned was then left out
-        spent(row["problem"], "tuning", row["processor_seconds"])
+        spent(row["problem"], "cells" if "spent" in row else "tuning", row["processor_seconds"])
     return out

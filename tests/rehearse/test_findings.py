@@ -130,6 +130,10 @@ def test_tables_say_what_the_summary_does():
     taxi = next(line for line in time_table(summary, 400, 100) if "taxi" in line)
     # 18 cells of 40 decisions at 0.01 s, ten times as many decisions; tuning 5 s, ten times
     assert taxi == f"| taxi | {18 * 400 * 0.01:.0f} | 50 |"
+    found = results([4, 0.5, 1.1])  # prices to stop at, tuned in 3 s on as many decisions as a cell has
+    found.tuning.append({**found.tuning[0], "spent": {}, "processor_seconds": 3.0})
+    taxi = next(line for line in time_table(summarise(found), 400, 100) if "taxi" in line)
+    assert taxi == f"| taxi | {18 * 400 * 0.01 + 30:.0f} | 50 |"
 
 
 def test_figures_go_into_the_sheets_of_the_files_that_were_rehearsed(tmp_path):

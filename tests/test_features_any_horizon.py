@@ -113,6 +113,46 @@ def test_horizons_above_0_start_near_the_exact_rate():
         assert np.quantile(np.abs(logs), 0.9) < math.log1p(START_MOST)
 
 
+@pytest.mark.parametrize("horizon", [1.0, 4.0, 20.0])
+@pytest.mark.parametrize("sd", [3.0, 4.0])
+def test_a_leader_beside_an_uncertain_sibling_starts_near_the_exact_value(sd, horizon):
+    """A normal of the siblings' moments has no tail at the leader: it gave from a 12th to a 20,000th."""
+    t = {
+        "mean": np.array([10.0, 1.0, 0.0, -3.0]),
+        "var": np.array([1.0, sd * sd, 1.0, 1.0]),
+        "noise_var": np.full(4, 4.0),
+        "gain": np.ones(4),
+        "cost": np.zeros(4),
+        "offset": np.zeros(4),
+        "action": np.array([0, 0, 0, 1]),
+        "remaining": 1,
+    }
+    exact = price(tree_of(t), Query(horizon, None, 1)).voc[0]
+    got = GRAPH.matrix({**t, "horizon": horizon})
+    assert abs(math.log(got.first_order[0] / exact)) < math.log1p(START_MOST)
+    # The column tells what the start stands for: phi(z) = start / unit.
+    z = got.x[0, FEATURE_NAMES.index("threshold")]
+    density = math.exp(-z * z / 2) / math.sqrt(2 * math.pi)
+    np.testing.assert_allclose(density, got.first_order[0] / got.unit[0], rtol=ONNX_FLOAT)
+
+
+def test_a_leaf_whose_siblings_alone_beat_the_rival_starts_at_0_where_all_will_be_known():
+    t = {
+        "mean": np.array([2.0, 1.9, -3.0]),
+        "var": np.array([1.0, 1.0, 1.0]),
+        "noise_var": np.full(3, 4.0),
+        "gain": np.ones(3),
+        "cost": np.zeros(3),
+        "offset": np.zeros(3),
+        "action": np.array([0, 0, 1]),
+        "remaining": 1,
+    }
+    got = GRAPH.matrix({**t, "horizon": math.inf})
+    assert np.all(got.first_order[:2] == 0)
+    assert got.first_order[2] > 0
+    assert np.all(GRAPH.matrix({**t, "horizon": 4.0}).first_order > 0)
+
+
 @settings(deadline=None, max_examples=30, derandomize=True)
 @given(seeds, horizons, st.sampled_from([1e-8, 7.0, 1e6, 1e100]), st.sampled_from([0.0, 5.0, -1e4]))
 def test_scale_and_shift_of_utilities_change_no_feature(seed, h, scale, shift):

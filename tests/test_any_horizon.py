@@ -312,11 +312,12 @@ def forgone(path: Path, dataset: Path) -> tuple[np.ndarray, np.ndarray]:
 
 @pytest.mark.slow
 def test_one_file_is_nearly_as_good_at_each_horizon_as_one_trained_for_it(tmp_path):
-    """3,000 trees of three horizons against 1,000 of each, twice, on the same 3,000 others of each.
+    """3,000 trees of three horizons against 1,000 of each, three times, on the same 4,000 others of each.
 
-    A twentieth of a percentage point is half of what a good scorer may forgo. One tree in a thousand can
-    cost that alone, so files are compared tree by tree, and the interval's upper end must keep the margin.
-    MEASURED
+    A twentieth of a percentage point is half of what a good scorer may forgo. A single tree can cost that
+    much, so losses are compared tree by tree, as means over three files each, and the upper end of the
+    interval must keep the margin. Measured at h = 0, 4 and infinity: files of mixed horizons forgo 0.009,
+    0.079 and 0.044 %, those of one 0.001, 0.078 and 0.041 %; the difference ends at 0.017, 0.042 and 0.030.
     """
 
     def trained(data: Path) -> Path:
@@ -324,17 +325,17 @@ def test_one_file_is_nearly_as_good_at_each_horizon_as_one_trained_for_it(tmp_pa
         return data / "trained" / "boosting-100x31.onnx"
 
     mixed = []
-    for seed in (1, 11):
+    for seed in (1, 11, 21):
         generate(family(), tmp_path / f"mixed-{seed}", trees=3000, seed=seed)
         mixed.append(trained(tmp_path / f"mixed-{seed}"))
     for h in (0.0, 4.0, math.inf):
         own = [
-            trained(labelled(tmp_path / f"{h}-{seed}", trees=1000, seed=seed, horizon=h)) for seed in (2, 12)
+            trained(labelled(tmp_path / f"{h}-{seed}", trees=1000, seed=seed, horizon=h))
+            for seed in (2, 12, 22)
         ]
-        test = labelled(tmp_path / f"test-{h}", trees=3000, seed=3, horizon=h)
+        test = labelled(tmp_path / f"test-{h}", trees=4000, seed=3, horizon=h)
         (ours, best), (theirs, _) = (
             np.mean([forgone(path, test) for path in paths], axis=0) for paths in (mixed, own)
         )
         more = ratio_over_trees(100 * (ours - theirs), best)
-        print(h, 100 * ours.sum() / best.sum(), 100 * theirs.sum() / best.sum(), more)
         assert more.high < 0.05, (h, more)

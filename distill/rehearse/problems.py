@@ -15,7 +15,7 @@ from distill.errors import InputError, RefusedError
 from distill.rehearse.optimum import solve
 from distill.rehearse.priors import OddsPrior, Prior
 from distill.rehearse.search import Search, Settings, action_values, prior_of
-from distill.rehearse.simulator import Modelled, State
+from distill.rehearse.simulator import Modelled, State, check_simulator
 from distill.tree import BeliefTree, Floats
 
 __all__ = ["Draw", "Problem", "SimulatorProblem", "TreeProblem"]
@@ -166,6 +166,10 @@ class SimulatorProblem:
     _decisions: dict[int, tuple[State, Floats]] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
+        check_simulator(self.simulator)
+        if not callable(getattr(self.simulator, "outcomes", None)):
+            rule = "must have outcomes, its exact model: regret is against the optimum that this gives"
+            raise InputError(f"simulator {self.simulator.name}", rule)
         self.name = self.name or self.simulator.name
 
     @property

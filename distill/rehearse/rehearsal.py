@@ -21,6 +21,7 @@ from joblib import Parallel, delayed
 from distill import __version__
 from distill.errors import InputError
 from distill.files import write_atomic
+from distill.record import to_record
 from distill.rehearse.loop import Budget, Decided, decide
 from distill.rehearse.policies import Policy
 from distill.rehearse.problems import Problem
@@ -34,6 +35,7 @@ _COLUMNS = (
 )  # fmt: skip
 _PROCESSOR = "processor"  # column of seconds, not of what was decided
 _RESAMPLES = 2000
+_DIGESTED = 8  # leaves whose first return counts in telling problems apart
 
 
 @dataclass(frozen=True, eq=False)
@@ -146,13 +148,14 @@ def _of_problem(
         missing = [policy for policy in policies if not paths[policy.name].exists()]
         made = {}
         found = _run(remembered, missing, budget, seeds, values)
+        drawn = _digest(remembered, seeds.start)
         for policy, (results, seconds) in zip(missing, found, strict=True):
             columns = {c: np.array([getattr(r, c) for r in results], dtype=np.float64) for c in _COLUMNS}
             columns[_PROCESSOR] = np.array(seconds)
             made[policy.name] = Cell(problem.name, budget, policy.name, **columns)
-            _write(paths[policy.name], made[policy.name], seeds.start)
+            _write(paths[policy.name], made[policy.name], seeds.start, drawn)
         yield [
-            made[name] if name in made else _read(path, problem.name, budget, name, len(seeds))
+            made[name] if name in made else _read(path, problem.name, budget, name, len(seeds), drawn)
             for name, path in paths.items()
         ]
 
@@ -277,8 +280,18 @@ def _file_name(problem: str, budget: Budget, policy: str) -> str:
     return f"{readable[:80]}--{hashlib.sha256(key.encode()).hexdigest()[:12]}.parquet"
 
 
-def _write(path: Path, cell: Cell, first_seed: int) -> None:
-    about = {"problem": cell.problem, "policy": cell.policy, "budget": asdict(cell.budget)}
+def _digest(problem: Problem, seed: int) -> str:
+    """SHA-256 of what a problem deals at one seed: two that share a name are told apart by it."""
+    draw = problem.draw(seed)
+    found = hashlib.sha256(json.dumps(to_record(draw.tree), sort_keys=True).encode())
+    found.update(draw.worth.tobytes())
+    for leaf in range(min(draw.tree.n_leaves, _DIGESTED)):
+        found.update(np.float64(draw.roll(leaf)).tobytes())
+    return found.hexdigest()
+
+
+def _write(path: Path, cell: Cell, first_seed: int, drawn: str) -> None:
+    about = {"problem": cell.problem, "policy": cell.policy, "budget": asdict(cell.budget), "drawn": drawn}
     columns = {"seed": np.arange(first_seed, first_seed + len(cell.regret))}
     columns |= {c: getattr(cell, c) for c in (*_COLUMNS, _PROCESSOR)}
     table = pa.table(columns).replace_schema_metadata({"rehearsal": json.dumps(about)})
@@ -287,11 +300,17 @@ def _write(path: Path, cell: Cell, first_seed: int) -> None:
     write_atomic(path, buffer.getvalue())
 
 
-def _read(path: Path, problem: str, budget: Budget, policy: str, seeds: int) -> Cell:
+def _read(path: Path, problem: str, budget: Budget, policy: str, seeds: int, drawn: str) -> Cell:
     try:
         table = pq.read_table(path)
-    except (OSError, pa.ArrowException) as e:
-        raise InputError(str(path), f"must be a readable Parquet file ({e})") from None
+        about = json.loads((table.schema.metadata or {}).get(b"rehearsal", b"{}"))
+    except (OSError, ValueError, pa.ArrowException) as e:
+        raise InputError(
+            str(path), f"must be a readable Parquet file; delete it to play it again ({e})"
+        ) from None
+    if not isinstance(about, dict) or about.get("drawn") != drawn:
+        rule = f"holds decisions of another problem named {problem}: its simulator or settings have changed"
+        raise InputError(str(path), f"{rule}; give another folder")
     if table.num_rows != seeds or not set(_COLUMNS) <= set(table.column_names):
         raise InputError(str(path), f"must hold {seeds} decisions", table.num_rows)
     columns = [c for c in (*_COLUMNS, _PROCESSOR) if c in table.column_names]

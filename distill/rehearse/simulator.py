@@ -10,7 +10,10 @@ import numpy as np
 
 from distill.errors import InputError
 
-__all__ = ["Action", "Advised", "Modelled", "Outcome", "Simulator", "State", "outcomes_of", "rollout"]
+__all__ = [
+    "Action", "Advised", "Modelled", "Outcome", "Simulator", "State", "check_simulator", "outcomes_of",
+    "rollout",
+]  # fmt: skip
 
 State = Hashable
 Action = int
@@ -66,6 +69,31 @@ class Advised(Protocol):
 
     def advise(self, state: State, rng: np.random.Generator) -> Action:
         """The action a rollout takes here; may be random."""
+
+
+def check_simulator(simulator: Simulator) -> None:
+    """InputError where an object lacks what a simulator must have, with its name and the rule."""
+    kind = type(simulator).__name__
+    for what in ("name", "discount", "start", "actions", "step", "is_terminal"):
+        if not hasattr(simulator, what):
+            raise InputError(
+                f"simulator {kind}", "must have name, discount, start, actions, step and is_terminal", what
+            )
+    if not 0 < simulator.discount <= 1:
+        raise InputError(f"simulator {kind}: discount", "must be above 0 and at most 1", simulator.discount)
+    state = simulator.start(np.random.default_rng(0))
+    try:
+        hash(state)
+    except TypeError:
+        raise InputError(
+            f"simulator {kind}: start", "must return a hashable state, such as a tuple", state
+        ) from None
+    if simulator.is_terminal(state):
+        raise InputError(f"simulator {kind}: start", "must return a state that is not terminal", state)
+    if not len(simulator.actions(state)):
+        raise InputError(
+            f"simulator {kind}: actions", "must give at least one in a state that is not terminal", state
+        )
 
 
 def outcomes_of(

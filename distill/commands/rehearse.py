@@ -17,14 +17,23 @@ HELP = "policies compared in closed-loop search, at equal rollouts and at equal 
 _FEW = 6  # decisions a cell, to see how long one takes
 _SAY_SECONDS = 60.0
 _EPILOG = """\
-problems: taxi, cliff_walking, frozen_lake_8x8, cold_store_small ..., or trees: tree-4x4^1-noise4,
-tree-6x2^1-winloss, tree-4x3^2-noise4-chance. budgets: 128 rollouts; 20ms@100us, time at this cost of a
-rollout (charged by a virtual clock, choosing as really measured); 20ms@100us!busy keeps the processor
-busy instead. policies: even, uct[:c=2], thompson[:prior=0.7], top-two[:share=0.5:prior=1], static-voc,
+problems: taxi, cold_store_small, frozen_lake_4x4_plans, frozen_lake_8x8_plans, frozen_lake_4x4_odds,
+cliff_walking_slippery_plans, frozen_lake_8x8_odds; those that look ahead with the exact model: cliff_walking,
+cliff_walking_slippery, frozen_lake_4x4, frozen_lake_8x8; trees, ACTIONSxBRANCHING^LEVELS with the variance of
+rollouts, or win/loss leaves, and on demand the prior's variance and chance nodes: tree-4x4^1-noise4,
+tree-6x2^1-winloss, tree-4x3^2-noise4-prior2-chance; your own: MODULE:NAME, a function in a Python module (the
+present folder is looked in) that returns (simulator, settings) or a problem.
+
+budgets: 128 rollouts; 20ms@100us, time (ms, s) at this cost of a rollout (us, ms), charged by a virtual
+clock, choosing as really measured; 20ms@100us!busy keeps the processor busy instead.
+
+policies: even, uct[:c=2], thompson[:prior=0.7], top-two[:share=0.5:prior=1], static-voc,
 static-rate[:prior=1.4], exact-dynamic, exact-dynamic-rate, exact-horizon[:h=4], exact-static-rate,
-scorer:FILE.onnx[:late=0.5:every=2:share=0.2:prior=1.4:name=TEXT]; exact ones and scorers take stop=0.001
-(price of a rollout, in units of the tree's scale). uct, thompson, top-two and static-rate by bare name are
-tuned on decisions of their own, and so is what ends in prior=auto or stop=auto."""
+scorer:FILE.onnx[:late=0.5:every=2:share=0.2:prior=1.4:name=TEXT]. Exact ones and scorers take stop=0.001, the
+price of a rollout in units of the tree's scale: the search stops where none is worth that. uct, thompson,
+top-two and static-rate by bare name are tuned on decisions of their own; so is what ends in prior=auto, or in
+stop=auto, which finds the highest price that costs next to no regret (one of the two). To see what stopping
+saves, play the same policy without stop=auto beside it."""
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -36,10 +45,21 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     )
     parser.add_argument("--quick", action="store_true", help="a small rehearsal of under a minute")
     parser.add_argument("--full", action="store_true", help="the whole grid; half an hour on two cores")
-    parser.add_argument("--problem", action="append", default=[], metavar="NAME")
-    parser.add_argument("--budget", action="append", default=[], metavar="BUDGET")
-    parser.add_argument("--policy", action="append", default=[], metavar="POLICY")
-    parser.add_argument("--scorer", action="append", default=[], metavar="FILE.onnx")
+    again = "again for more; with --quick or --full in place of theirs"
+    parser.add_argument(
+        "--problem", action="append", default=[], metavar="NAME", help=f"what is searched; {again}"
+    )
+    parser.add_argument(
+        "--budget", action="append", default=[], metavar="BUDGET", help=f"what a decision may cost; {again}"
+    )
+    parser.add_argument(
+        "--policy", action="append", default=[], metavar="POLICY",
+        help=f"who chooses rollouts; {again}; by default even and the tuned rivals",
+    )  # fmt: skip
+    parser.add_argument(
+        "--scorer", action="append", default=[], metavar="FILE.onnx",
+        help="a shipped scorer, beside the policies in the ways that pay; again for more",
+    )  # fmt: skip
     parser.add_argument("--seeds", type=flags.whole(2), metavar="N", help="decisions a cell")
     parser.add_argument("--tuning-seeds", type=flags.whole(0), metavar="N", help="0 tunes nothing")
     parser.add_argument("--workers", type=flags.whole(1), default=1, metavar="N", help="processes")
@@ -78,7 +98,13 @@ def _rehearse(args: argparse.Namespace) -> None:
     from distill.rehearse.campaign import run as rehearse
     from distill.rehearse.plans import plan
     from distill.rehearse.results import summarise, write_results
-    from distill.rehearse.results_tables import aims_table, cells_table, short_table, time_table
+    from distill.rehearse.results_tables import (
+        aims_table,
+        cells_table,
+        left_out_lines,
+        short_table,
+        time_table,
+    )
     from distill.report.rehearsal_page import write_pictures, write_rehearsal_page
 
     if args.quick and args.full:
@@ -104,12 +130,13 @@ def _rehearse(args: argparse.Namespace) -> None:
         results = rehearse(campaign, args.out, workers=args.workers, progress=progress)
     summary = write_results(results, args.out)
     write_rehearsal_page(summary, args.out / "rehearsal.html")
-    drawn = ", ".join(path.name for path in write_pictures(summary, args.out))
+    drawn = [path.name for path in write_pictures(summary, args.out)]
     print(f"{args.out}: {len(results.cells)} cells of {campaign.seeds} decisions\n")
-    tables = [*short_table(summary), "", *aims_table(summary)]
-    print("\n".join(tables if args.full else [*cells_table(summary), "", *tables]))
+    tables = [] if args.full else [cells_table(summary)]
+    tables += [short_table(summary), aims_table(summary), left_out_lines(summary)]
+    print("\n\n".join("\n".join(lines) for lines in tables if lines))
     print(f"\nSee {args.out / 'rehearsal.html'}; figures in summary.json and cells.parquet, for other pages")
-    print(f"table.md, cells.md, {drawn}.")
+    print(f"{', '.join(['table.md', 'cells.md', *drawn])}.")
 
 
 @contextmanager

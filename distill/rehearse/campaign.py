@@ -11,7 +11,7 @@ import threading
 import time
 from collections.abc import Callable, Iterator
 from dataclasses import asdict, dataclass, field
-from functools import lru_cache
+from functools import cache, lru_cache
 from pathlib import Path
 from typing import Any, Final
 
@@ -25,10 +25,10 @@ from distill.rehearse.claim import claim
 from distill.rehearse.loop import Budget
 from distill.rehearse.policies import Policy
 from distill.rehearse.policy_specs import make_policy, scorer_file
-from distill.rehearse.rehearsal import Cell, rehearse
+from distill.rehearse.rehearsal import Cell, play_stops, rehearse
 from distill.rehearse.remembered import Remembered
 from distill.rehearse.scorer_inputs import ScorerInputs
-from distill.rehearse.tuning import TUNING_SEED, name_of, named, tune, untuned
+from distill.rehearse.tuning import TUNING_SEED, name_of, named, price_of, tune, untuned
 from distill.runtime import Scorer
 from distill.scorer_inputs import RECORD
 from distill.tree import BeliefTree
@@ -51,7 +51,7 @@ class Campaign:
         constant of UCT and the priors of both Thompson samplings and of the static rate are chosen for
         each problem and number of rollouts where their policies are given by bare name; 0 leaves them as
         they are. A policy that ends in ":prior=auto" has its prior tuned in the same way; one that ends in
-        ":stop=auto" stops at the highest price that costs next to no regret, on `seeds` other decisions.
+        ":stop=auto" stops at the highest price that costs next to no regret, on half of `seeds` others.
     wide : those of the problems that are rehearsed under `wide_budgets` too.
     stops, plenty : policies, with and without ":stop=auto", that play under budgets of their own, alone:
         what stopping saves shows where rollouts are many.
@@ -76,13 +76,22 @@ class Campaign:
         for name in self.problems:
             make_problem(name)
         for name in (*self.budgets, *self.wide_budgets, *self.plenty):
-            Budget.parse(name)
-        if twice := {*self.budgets, *self.wide_budgets} & {*self.plenty}:
-            raise InputError("plenty", "must be other budgets than the policies'", min(twice))
+            if not Budget.parse(name).room(0, 0.0):
+                raise InputError("budget", "must have room for a rollout", name)
+        for what in ("problems", "budgets", "wide_budgets", "plenty"):
+            given = [str(Budget.parse(x)) if what != "problems" else x for x in getattr(self, what)]
+            if twice := [x for x in given if given.count(x) > 1]:
+                raise InputError(what, "must each be given once", twice[0])
+        if both := {*self.budgets, *self.wide_budgets} & {*self.plenty}:
+            raise InputError("plenty", "must be other budgets than the policies'", min(both))
         for name in self.all_policies:
-            make_policy(untuned(name))
+            policy = make_policy(untuned(name))
             if name.count("=auto") > 1:
                 raise InputError(f"policy {name!r}", "must leave one option to tuning at most")
+            if name.endswith(":stop=auto") and getattr(policy, "watch", None) is None:
+                raise InputError(f"policy {name!r}", "has no price to stop at")
+            if name != untuned(name) and not self.tuning_seeds:
+                raise InputError("tuning_seeds", f"must be above 0 to tune {name!r}", 0)
         if not 2 <= self.seeds <= TUNING_SEED - _FIRST_SEED:
             raise InputError("seeds", f"must be from 2 to {TUNING_SEED - _FIRST_SEED}", self.seeds)
         if self.tuning_seeds == 1 or self.tuning_seeds < 0:
@@ -153,7 +162,11 @@ def _checked(campaign: Campaign) -> dict[str, str]:
     """SHA-256 of each scorer file, after every policy has chosen once: faults are told before the work."""
     names: dict[str, str] = {}
     files: dict[str, str] = {}
-    tree = make_problem(campaign.problems[0]).draw(TUNING_SEED).tree if campaign.problems else None
+
+    @cache
+    def tree_of(name: str) -> BeliefTree:
+        return make_problem(name).draw(TUNING_SEED).tree
+
     for spec in campaign.all_policies:
         if names.setdefault(name_of(spec), spec) != spec:
             rule = f"must not have the name of {names[name_of(spec)]!r}; scorers take the option name=..."
@@ -162,8 +175,11 @@ def _checked(campaign: Campaign) -> dict[str, str]:
             _scorer_of(untuned(spec))
             file = scorer_file(untuned(spec))[0]
             files[file] = sha256_of(file)
-        elif tree is not None:
-            _refused(make_policy(untuned(spec)), tree)
+            reasons = [_unreadable(campaign, untuned(spec), tree_of(name)) for name in campaign.problems]
+            if reasons and all(reasons):
+                raise InputError(f"policy {spec!r}", "must be able to score the trees of some problem")
+        elif campaign.problems:
+            _refused(make_policy(untuned(spec)), tree_of(campaign.problems[0]))
     return files
 
 
@@ -185,7 +201,7 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
         budget = Budget.parse(text)
         rollouts, specs = budget.room(0, 0.0), campaign.policies_under(text)
         if (rollouts, specs) not in tuned:
-            seeds = {"seeds": campaign.tuning_seeds, "stop_seeds": campaign.seeds}
+            seeds = {"seeds": campaign.tuning_seeds, "stop_seeds": max(campaign.seeds // 2, 2)}
             rows = tune(specs, problem, rollouts, folder / "tuning", **seeds, plays=plays)
             out.tuning.extend(rows)
             tuned[rollouts, specs] = {row["policy"]: row["chosen"] for row in rows}
@@ -198,6 +214,13 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
         )
         policies = [named(make_policy(texts[spec]), spec) for spec in specs if reasons[spec] is None]
         where, first = folder / "cells", _FIRST_SEED
+        if text in campaign.plenty:
+            for spec in (s for s in specs if s.endswith(":stop=auto") and reasons[s] is None):
+                price = price_of(texts[spec])
+                settings = {"seeds": campaign.seeds, "first_seed": first}
+                play_stops(
+                    problem, make_policy(untuned(spec)), name_of(spec), price, budget, where, **settings
+                )
         out.cells.extend(
             rehearse([problem], policies, [budget], where, seeds=campaign.seeds, first_seed=first)
         )

@@ -10,6 +10,7 @@ from typing import Final
 from distill.errors import InputError
 from distill.rehearse.cold_store import ColdStore
 from distill.rehearse.gym_tables import GymTable
+from distill.rehearse.own_problems import own_problem
 from distill.rehearse.problems import Problem, SimulatorProblem, TreeProblem
 from distill.rehearse.search import Settings
 from distill.rehearse.simulator import Modelled
@@ -66,6 +67,7 @@ _SOLVABLE: Final = (
     "frozen_lake_8x8_odds",
     "cold_store_small",
 )
+_MOST_LEAVES: Final = 4096
 # Most random steps before the decision, where the usual 20 would leave little to decide.
 _STEPS: Final = {"cold_store_small": 2}
 
@@ -89,21 +91,28 @@ def make_problem(name: str) -> Problem:
     """A problem by name: a simulator's, or a synthetic tree's such as tree-4x4^1-noise4.
 
     tree-ACTIONSxBRANCHING^LEVELS-noiseVARIANCE or -winloss, then -priorVARIANCE and -chance where wanted.
+    MODULE:NAME is one's own, from a module that can be imported or lies in the present folder: a `Problem`,
+    or what is called for one; also (simulator, settings), the arguments of `SimulatorProblem`. Its name is
+    then that text.
 
     >>> make_problem("tree-4x3^2-noise4-prior2-chance").name
     'tree-4x3^2-noise4-prior2-chance'
     """
+    if ":" in name:
+        return own_problem(name)
     if name in _SOLVABLE:
         return SimulatorProblem(*make_simulator(name), name=name, most_steps=_STEPS.get(name, 20))
     found = _TREE.fullmatch(name)
     if found is None:
-        rule = f"must be one of {', '.join(_SOLVABLE)}, or a tree such as tree-4x4^1-noise4"
+        rule = f"must be one of {', '.join(_SOLVABLE)}, a tree such as tree-4x4^1-noise4, or MODULE:NAME"
         raise InputError("problem", rule, name)
     actions, branching, levels, kind, noise, prior, chance = found.groups()
     try:
         variances = None if kind == "winloss" else float(noise), float(prior or 1)
     except ValueError:
         raise InputError("problem", "variances must be numbers", name) from None
+    if int(actions) * int(branching) ** min(int(levels), 64) > _MOST_LEAVES:
+        raise InputError("problem", f"must have at most {_MOST_LEAVES:,} leaves", name)
     return TreeProblem(int(actions), int(branching), int(levels) + 1, *variances, chance=bool(chance))
 
 

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-import re
 import zlib
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import fields
@@ -14,7 +13,7 @@ import numpy as np
 from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.loop import Budget
 from distill.rehearse.rehearsal import Cell, Compared, compare, interval, resampled
-from distill.rehearse.tuning import name_of
+from distill.rehearse.tuning import name_of, price_of
 from distill.tree import Floats
 
 __all__ = [
@@ -45,6 +44,7 @@ BEST: Final = "best scorer"  # its decisions of either half are those of the sco
 _EXACT: Final = "exact_dynamic_rate"
 _AIM_SECONDS: Final = 100e-6  # cost of a rollout from which the aims are judged
 _LIMITS: Final = {"sampling": (0.85, 1.1), "static": (0.95, 1.05), "exact": (1.0, 1.0)}
+_FELL_BACK: Final = 0.98  # share of choices by another rule from which a cell says nothing of its policy
 _SLOW: Final = 0.2  # share of time from which exact choosing counts as dear
 
 Place = dict[str, Cell]  # the cells of one problem and budget, by policy
@@ -175,18 +175,18 @@ def aims(results: Results, rows: Iterable[Mapping[str, Any]]) -> dict[str, Any]:
 def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list[dict[str, Any]]:
     """The policy to use for each problem and budget: the cheapest that no other measurably beats.
 
+    All that played are looked at, apart from those that left nearly every choice to the closed form.
+
     The closed form is advised wherever the best other policy's 95 % interval of the ratio to it reaches 1;
     which one is the best is decided for each half of the decisions by the other half. Where no policy is
     so much better than acting before the first rollout, that is advised.
     """
-    campaign = results.campaign
-    static = members(campaign, "static")
-    others = [n for group in ("scorer", "sampling", "exact") for n in members(campaign, group)]
+    static = members(results.campaign, "static")
     unsearched = {cell.problem: cell for cell in results.unsearched}
     rows = []
     for (problem, budget), here in places.items():
         rivals = [name for name in static if name in here]
-        rest = [name for name in others if name in here]
+        rest = [n for n, cell in here.items() if n not in (BEST, *static) and not _is_other(cell)]
         if not rivals or not rest:
             continue
         best = min(rest, key=lambda name: float(here[name].measured.mean()))
@@ -211,6 +211,11 @@ def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list
     return rows
 
 
+def _is_other(cell: Cell) -> bool:
+    """Whether another rule made nearly all choices: what such a cell shows is that rule."""
+    return cell.fallback_share > _FELL_BACK
+
+
 def _pays(cells: Sequence[Cell], unsearched: Cell) -> bool:
     """Whether the best of some policies is measurably better than no search at all."""
     low, _ = interval(unsearched.measured - _best(cells).measured)
@@ -222,7 +227,8 @@ def by_kind(results: Results, places: Mapping[tuple[str, Budget], Place]) -> lis
 
     ratio : geometric mean of `BEST` over the better closed form, over the cells of that kind and cost,
     decisions resampled problem by problem. sampling : the same over the better sampling. use : the scorer
-    only where the interval lies below 1.
+    only where the interval lies below 1. fell_back : share of choices that scorers left to the closed form;
+    where that is nearly all, what differs is luck with the clock.
     """
     grouped: dict[tuple[str, float], list[tuple[str, Place]]] = {}
     for (problem, budget), here in places.items():
@@ -233,13 +239,18 @@ def by_kind(results: Results, places: Mapping[tuple[str, Budget], Place]) -> lis
     for (kind, cost), cells in sorted(grouped.items()):
         found = {group: _together(results, cells, group) for group in ("static", "sampling")}
         low, high = found["static"]["low"], found["static"]["high"]
-        if high is not None and high < 1:
+        shares = [here[BEST].fallback_share for _, here in cells]
+        fell_back = math.fsum(shares) / len(shares)
+        if fell_back > _FELL_BACK:
+            use, why = "closed form", "scorers leave nearly every choice to it"
+        elif high is not None and high < 1:
             use, why = "scorer", "measurably better than the closed form"
         elif low is not None and low > 1:
             use, why = "closed form", "the scorer is measurably worse"
         else:
             use, why = "closed form", "no measurable difference"
-        rows.append({"kind": kind, "rollout_seconds": cost, **found, "use": use, "why": why})
+        more = {"fell_back": plain(fell_back), "use": use, "why": why}
+        rows.append({"kind": kind, "rollout_seconds": cost, **found, **more})
     return rows
 
 
@@ -312,7 +323,6 @@ def stopping(results: Results, places: Mapping[tuple[str, Budget], Place]) -> li
             stops, goes_on = name_of(spec), name_of(spec[: spec.index(":stop=")])
             if stops != goes_on and stops in here and goes_on in here:
                 text = tuned.get((problem, budget.room(0, 0.0), spec), spec)
-                price = re.search(r":stop=([\d.e+-]+)", text)
                 (found,) = compare(list(here.values()), stops, [goes_on])
                 ours, theirs = here[stops], here[goes_on]
                 saved = 1 - ours.rollouts.sum() / max(theirs.rollouts.sum(), 1)
@@ -322,7 +332,7 @@ def stopping(results: Results, places: Mapping[tuple[str, Budget], Place]) -> li
                     {
                         **compared(found),
                         "saved": plain(saved),
-                        "price": float(price[1]) if price else None,
+                        "price": price_of(text),
                         "lost": plain(lost.mean()),
                         "lost_low": plain(low),
                         "lost_high": plain(high),

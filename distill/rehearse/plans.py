@@ -35,7 +35,7 @@ _WIDE: Final = (
     "tree-4x4^1-winloss", "taxi", "tree-2x8^1-noise1", "tree-4x4^1-noise4", "tree-3x2^2-noise4-chance",
 )  # fmt: skip
 _ENDS: Final = ("128", "2.56ms@20us", "640ms@5ms")
-_PLENTY: Final = ("2048",)  # rollouts enough for many decisions to be clear before the last one
+_PLENTY: Final = ("4096",)  # rollouts enough for many decisions to be clear before the last one
 _SLOWEST: Final = 2.0
 
 _PLANS: Final = {

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from typing import NamedTuple, Protocol
+from typing import Final, NamedTuple, Protocol
 
 import numpy as np
 
@@ -13,6 +13,9 @@ from distill.errors import InputError
 from distill.tree import BeliefTree, Ints
 
 __all__ = ["ByRule", "Choice", "Policy", "TopTwoThompson", "WithPrior", "leaf_actions"]
+
+
+_NARROWEST: Final = 1e-6  # of a prior, as a factor on its own sd
 
 
 class Choice(NamedTuple):
@@ -62,6 +65,8 @@ class ByRule:
     name: str = ""
 
     def __post_init__(self) -> None:
+        if not 0 <= self.exploration < np.inf:
+            raise InputError("c", "must be >= 0 and finite", self.exploration)
         self.name = self.name or (f"uct-{self.exploration:g}" if self.rule == "uct" else self.rule)
 
     def begin(self, tree: BeliefTree) -> None:
@@ -108,15 +113,16 @@ class TopTwoThompson:
 class WithPrior:
     """A policy that chooses by a prior of its own: tuned Thompson sampling is Thompson sampling so.
 
-    width : factor on the standard deviation of every leaf's prior (win/loss: its trials are divided by
-        width^2, its mean kept). What is acted on in the end are the beliefs of the tree, as for everyone.
+    width : factor on the standard deviation of every leaf's prior, 1e-6 to 1e6 (win/loss: its trials are
+        divided by width^2, its mean kept). What is acted on in the end are the beliefs of the tree, as for
+        everyone.
     """
 
     own_beliefs = True
 
     def __init__(self, policy: Policy, width: float) -> None:
-        if not 0 < width < np.inf:
-            raise InputError("width", "must be above 0 and finite", width)
+        if not _NARROWEST <= width <= 1 / _NARROWEST:
+            raise InputError("prior", f"must be from {_NARROWEST:g} to {1 / _NARROWEST:g}", width)
         self._policy = policy
         self.width = width
         self.name = policy.name if width == 1 else f"{policy.name}-prior{width:g}"

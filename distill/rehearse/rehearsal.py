@@ -22,13 +22,13 @@ from distill import __version__
 from distill.errors import InputError
 from distill.files import write_atomic
 from distill.record import to_record
-from distill.rehearse.loop import Budget, Decided, decide
+from distill.rehearse.loop import Budget, Decided, decide, decide_at_prices
 from distill.rehearse.policies import Policy
 from distill.rehearse.problems import Problem
 from distill.rehearse.remembered import Remembered
 from distill.tree import BeliefTree, Floats
 
-__all__ = ["Cell", "Compared", "compare", "interval", "rehearse", "resampled"]
+__all__ = ["Cell", "Compared", "compare", "interval", "play_stops", "rehearse", "resampled"]
 
 _COLUMNS = (
     "regret", "regret_by_mean", "expected_regret", "rollouts", "choosing", "stopped", "choices", "fallbacks",
@@ -129,6 +129,49 @@ def rehearse(
     return cells
 
 
+def play_stops(
+    problem: Problem,
+    policy: Policy,
+    name: str,
+    price: float | None,
+    budget: Budget,
+    folder: str | os.PathLike[str],
+    *,
+    seeds: int,
+    first_seed: int,
+) -> None:
+    """Two cells from one search a decision: `policy`, and `name`, the same stopping at a price.
+
+    The search without a price passes where the other one ends (`loop.decide_at_prices`), so `rehearse` would
+    find the same and reads these files in its place; only its time of choosing has looks in it. price : in
+    units of the tree's scale; None never stops. The processor's time counts for the one that goes on.
+    """
+    folder = Path(folder)
+    _claim(folder, {"seeds": seeds, "first_seed": first_seed, "version": __version__})
+    paths = {n: folder / _file_name(problem.name, budget, n) for n in (policy.name, name)}
+    if all(path.exists() for path in paths.values()):
+        return
+    ends: dict[str, list[Decided]] = {n: [] for n in paths}
+    took = []
+    for seed in range(first_seed, first_seed + seeds):
+        rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
+        started = time.process_time()
+        prices = () if price is None else (price,)
+        found = decide_at_prices(problem.draw(seed), policy, budget, rng, prices)
+        took.append(time.process_time() - started)
+        ends[policy.name].append(found[-1])
+        ends[name].append(found[0])
+    drawn = _digest(problem, first_seed)
+    for n, path in paths.items():
+        columns = _columns(ends[n])
+        columns[_PROCESSOR] = np.array(took) if n == policy.name else np.zeros(seeds)
+        _write(path, Cell(problem.name, budget, n, **columns), first_seed, drawn)
+
+
+def _columns(results: Sequence[Decided]) -> dict[str, Floats]:
+    return {c: np.array([getattr(r, c) for r in results], dtype=np.float64) for c in _COLUMNS}
+
+
 def _all_of_problem(*arguments: Any) -> list[Cell]:
     return [cell for part in _of_problem(*arguments) for cell in part]
 
@@ -150,7 +193,7 @@ def _of_problem(
         found = _run(remembered, missing, budget, seeds, values)
         drawn = _digest(remembered, seeds.start)
         for policy, (results, seconds) in zip(missing, found, strict=True):
-            columns = {c: np.array([getattr(r, c) for r in results], dtype=np.float64) for c in _COLUMNS}
+            columns = _columns(results)
             columns[_PROCESSOR] = np.array(seconds)
             made[policy.name] = Cell(problem.name, budget, policy.name, **columns)
             _write(paths[policy.name], made[policy.name], seeds.start, drawn)

@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping, Sequence
 from typing import Any, Final
 
 from distill.rehearse.findings import BEST, GROUPS
 
-__all__ = ["aims_table", "cells_table", "every_cell", "short_table", "stopping_table", "time_table"]
+__all__ = [
+    "aims_table", "cells_table", "every_cell", "left_out_lines", "short_table", "stopping_table",
+    "time_table",
+]  # fmt: skip
 
 Figures = Mapping[str, Any]
 
@@ -21,7 +25,9 @@ _MUCH: Final = 0.3  # share of the rollouts that stopping early is meant to save
 
 
 def aims_table(summary: Figures) -> list[str]:
-    """How often each scorer reached its aims, as Markdown lines."""
+    """How often each scorer reached its aims, as Markdown lines; none where that cannot be judged."""
+    if not summary["aims"]:
+        return []
     lines = [
         "| scorer | against | cells | at most | reached | never above | above | surely < 1 | surely > 1 |"
     ]
@@ -36,36 +42,47 @@ def aims_table(summary: Figures) -> list[str]:
     return lines
 
 
+def left_out_lines(summary: Figures) -> list[str]:
+    """Who did not play, by reason: policies, and in how many places."""
+    reasons: dict[tuple[str, str], int] = {}
+    for row in summary["left_out"]:
+        key = row["policy"], re.sub(r" takes [\d.]+ ms.*", " takes too long", row["why"])
+        reasons[key] = reasons.get(key, 0) + 1
+    return [f"Left out: {policy}, in {n} of the places: {why}." for (policy, why), n in reasons.items()]
+
+
 def short_table(summary: Figures) -> list[str]:
     """What the whole rehearsal says: counts of the aims, and scorer or closed form by kind and cost."""
-    campaign = summary["campaign"]
-    head = "regret of the best scorer over that of the | cells | aim | reached | to be avoided | met"
-    lines = [
-        f"{len(campaign['problems'])} problems, {campaign['seeds']} paired decisions a cell.",
-        "Cells at equal wall-clock time, rollouts of 100 us or more. *Best scorer*: for either half of the",
-        "decisions, the scorer (file and use) that did best on the other half.",
-        "",
-        f"| {head} | surely < 1 | surely > 1 |",
-        "| --- | --- | --- | --- | --- | --- | --- | --- |",
-    ]
-    for group, c in summary["aims"].get(BEST, {}).items():
+    campaign, best = summary["campaign"], summary["aims"].get(BEST, {})
+    lines = [f"{len(campaign['problems'])} problems, {campaign['seeds']} paired decisions a cell."]
+    if best:
+        head = "regret of the best scorer over that of the | cells | aim | reached | to be avoided | met"
+        lines += [
+            "Cells at equal wall-clock time, rollouts of 100 us or more. *Best scorer*: for either half of",
+            "the decisions, the scorer (file and use) that did best on the other half.",
+            "",
+            f"| {head} | surely < 1 | surely > 1 |",
+            "| --- | --- | --- | --- | --- | --- | --- | --- |",
+        ]
+    for group, c in best.items():
         more = f", and {c['no_choice']} where one choice is over the budget" if c.get("no_choice") else ""
         lines.append(
             f"| {_AGAINST[group]} | {c['cells']}{more} | <= {c['at_most']:g} "
             f"| {c['reached']} ({c['reached'] / c['cells']:.0%}) | > {c['never_above']:g} | {c['beyond']} "
             f"| {c['better']} | {c['worse']} |"
         )
-    lines += [
-        "",
-        "| leaves | a rollout | cells | to the closed form | to the better sampling | use | why |",
-        "| --- | --- | --- | --- | --- | --- | --- |",
-    ]
-    for row in summary["by_kind"]:
-        lines.append(
+    if summary["by_kind"]:
+        lines += [
+            "",
+            "| leaves | a rollout | cells | to the closed form | to the better sampling | use | why |",
+            "| --- | --- | --- | --- | --- | --- | --- |",
+        ]
+        lines += [
             f"| {row['kind']} | {_cost(row['rollout_seconds'])} | {row['static']['cells']} "
             f"| {_ratio(row['static'])} | {_ratio(row['sampling'])} | {row['use']} | {row['why']} |"
-        )
-    lines += ["", "Ratios here are geometric means over the cells, 95 % intervals in square brackets."]
+            for row in summary["by_kind"]
+        ]
+        lines += ["", "Ratios here are geometric means over the cells, 95 % intervals in square brackets."]
     return [*lines, "", *_stopping_lines(summary["stopping"])] if summary["stopping"] else lines
 
 
@@ -136,6 +153,8 @@ def every_cell(summary: Figures) -> list[str]:
 def cells_table(summary: Figures) -> list[str]:
     """Every cell of each scorer as Markdown lines: ratios to the best of each group, with intervals."""
     scorers = {name for file in summary["scorers"] for name in file["policies"]}
+    if not any(row["policy"] in scorers for row in summary["rows"]):
+        return []
     lines = ["| problem | budget | scorer | to sampling | to the closed form | to the exact rate |"]
     lines.append("| --- | --- | --- | --- | --- | --- |")
     for row in summary["rows"]:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 import json
 import math
+import re
 import time
 from collections.abc import Callable, Sequence
 from pathlib import Path
@@ -19,7 +20,7 @@ from distill.rehearse.policy_specs import make_policy
 from distill.rehearse.problems import Problem
 from distill.rehearse.rehearsal import rehearse
 
-__all__ = ["TUNED", "TUNING_SEED", "name_of", "named", "tune", "untuned"]
+__all__ = ["TUNED", "TUNING_SEED", "name_of", "named", "price_of", "tune", "untuned"]
 
 TUNING_SEED: Final = 1_000_000  # tuning looks at decisions from here on, the rehearsal at those before
 
@@ -62,6 +63,16 @@ def name_of(spec: str) -> str:
     return make_policy(untuned(spec)).name + suffix
 
 
+def price_of(text: str) -> float | None:
+    """The price at which a policy's text stops; None where it does not, or leaves that to tuning.
+
+    >>> price_of("scorer:a.onnx:late=0.5:stop=3e-08"), price_of("uct:c=2")
+    (3e-08, None)
+    """
+    found = re.search(r":stop=([\d.e+-]+)$", text)
+    return float(found[1]) if found else None
+
+
 def tune(
     specs: Sequence[str],
     problem: Problem,
@@ -76,7 +87,7 @@ def tune(
 
     specs : the campaign's policies; those that leave nothing to tuning are passed over. plays : whether
     an untuned text plays on this problem at all. seeds : decisions, 0 takes what is untuned. stop_seeds :
-    those for prices to stop at: a loss of a hundredth shows on no fewer decisions than it is judged by.
+    those for prices to stop at: a loss of a hundredth shows on many decisions only.
     """
     tries = _tries(specs, plays)
     stops = [spec for spec in specs if spec.endswith(_STOP_AUTO) and plays(untuned(spec))]

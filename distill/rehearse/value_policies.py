@@ -23,7 +23,9 @@ __all__ = ["ByScorer", "ByValue"]
 _TELLING: Final = 4  # scorings of as many leaves, of which the fastest tells what one takes
 _REST: Final = 4  # rollouts by the static rate before a choice worth nothing is looked at again
 _SURE: Final = 1e-20  # variance of a leaf that is known, as a share of the largest
-_LOOK: Final = 8  # rollouts by the static rate between looks at whether to stop
+# Rollouts by the static rate between looks at whether to stop: at least, and looks a decision at most.
+_LOOK: Final = 8
+_LOOKS: Final = 128
 
 
 class _Thrifty:
@@ -129,7 +131,7 @@ class ByScorer(_Thrifty):
         have bought both grow with the number of scorings, so that fewer of them do not pay either. The
         fastest scoring so far of as many leaves counts. 0 scores at any cost.
     rollout_price, stop : as for `ByValue`; with `late`, the static rate too must find rollouts too dear.
-        While the static rate chooses, every eighth rollout is preceded by a look.
+        While the static rate chooses, there are looks before every eighth rollout, or 128 a decision.
     Where the file says 0 of every leaf the static rate chooses the next 4 rollouts. Its choices are marked.
     """
 
@@ -165,6 +167,7 @@ class ByScorer(_Thrifty):
         self._last = math.inf  # rollouts left from which on the scorer chooses
         self._resting = 0
         self._until_look = 0
+        self._look = 0
         self._early = 0  # rollouts before the last ones
         self._rollout_seconds = 0.0
         self._leaves = 0
@@ -196,7 +199,7 @@ class ByScorer(_Thrifty):
 
     def begin(self, tree: BeliefTree) -> None:
         """A new decision; what the scorer reads is laid out when it is first asked."""
-        self._resting = self._until_look = self._early = 0
+        self._resting = self._until_look = self._look = self._early = 0
         self._inputs, self._changed = None, set()
         self._set_price(tree)
         self._leaves = tree.n_leaves
@@ -206,6 +209,8 @@ class ByScorer(_Thrifty):
     def choose(self, posterior: Posterior, remaining: int, rng: np.random.Generator) -> Choice | None:
         """The scorer's choice where its turn is, else the static rate's."""
         self.worth = math.inf
+        if not self._look:
+            self._look = max(_LOOK, remaining // _LOOKS)
         if self._resting:
             self._resting -= 1
             return self._static(posterior, remaining, rng)
@@ -216,7 +221,7 @@ class ByScorer(_Thrifty):
             if self._until_look:
                 self._until_look -= 1
                 return self._static(posterior, remaining, rng)
-            self._until_look = _LOOK - 1
+            self._until_look = self._look - 1
         if self._inputs is None:  # once a decision: no part of what each scoring takes
             self._inputs = ScorerInputs(self.scorer, posterior.tree())
             self._changed.clear()

@@ -16,10 +16,12 @@ from ladder import CLOSED_FORM
 from distill.cli import run as command_line
 from distill.errors import InputError
 from distill.rehearse.campaign import Campaign, Results, run
+from distill.rehearse.catalogue import make_problem
 from distill.rehearse.findings import BEST
 from distill.rehearse.loop import Budget
 from distill.rehearse.plans import plan, quick
-from distill.rehearse.rehearsal import Cell
+from distill.rehearse.policy_specs import make_policy
+from distill.rehearse.rehearsal import Cell, rehearse
 from distill.rehearse.results import summarise, write_results
 from distill.rehearse.results_tables import aims_table, cells_table
 from distill.rehearse.tuning import TUNED, name_of
@@ -285,6 +287,21 @@ def test_the_price_is_the_highest_that_cost_nothing_in_tuning(plenty):
         assert found["saved"] > 0.1
 
 
+def test_cells_with_and_without_stopping_are_those_of_searches_of_their_own(plenty, tmp_path):
+    """Both come from one search; played apart, decision by decision, they are the same."""
+    folder, summary = plenty
+    price = summary["stopping"][-1]["price"]
+    policies = [make_policy(USE), make_policy(f"{USE}:stop={price}")]
+    problem, budget = make_problem(PLENTY.problems[0]), Budget(rollouts=400)
+    apart = rehearse([problem], policies, [budget], tmp_path, seeds=PLENTY.seeds, first_seed=10_000)
+    together = [c for c in run(PLENTY, folder).cells if c.budget == budget]
+    assert [c.policy for c in together] == [name_of(spec) for spec in PLENTY.stops]
+    assert together[1].rollouts.sum() < together[0].rollouts.sum()
+    for a, b in zip(apart, together, strict=True):
+        for column in ("regret", "regret_by_mean", "expected_regret", "rollouts", "stopped", "fallbacks"):
+            assert np.array_equal(getattr(a, column), getattr(b, column), equal_nan=True)
+
+
 def test_tuned_prices_are_read_when_a_run_goes_on(plenty, monkeypatch):
     folder, before = plenty
     monkeypatch.setattr("distill.rehearse.tuning.decide_at_prices", None)
@@ -320,13 +337,39 @@ def test_the_command_leaves_a_page_and_says_where(tmp_path, capsys):
     [
         (["--budget", "6"], "--problem: must be given without --quick or --full"),
         (["--quick", "--full"], "--quick: cannot go with --full"),
+        (["--quick", "--policy", "uct:c=-1"], "c: must be >= 0 and finite; got -1.0"),
+        (["--quick", "--policy", "uct:c=nan"], "c: must be >= 0 and finite; got nan"),
+        (
+            ["--quick", "--policy", f"scorer:{FAST}:prior=1e300"],
+            "prior: must be from 1e-06 to 1e+06; got 1e+300",
+        ),
+        (["--quick", "--budget", "0"], "budget: must have room for a rollout; got '0'"),
+        (["--quick", "--budget", "1ms@5ms"], "budget: must have room for a rollout; got '1ms@5ms'"),
+        (["--quick", "--budget", "8", "--budget", "8"], "budgets: must each be given once; got '8'"),
+        (
+            ["--quick", "--problem", "taxi", "--problem", "taxi"],
+            "problems: must each be given once; got 'taxi'",
+        ),
+        (["--quick", "--problem", "tree-4x4^9-noise4"], "problem: must have at most 4,096 leaves; got"),
+        (["--quick", "--policy", "uct:stop=auto"], "policy 'uct:stop=auto': has no price to stop at"),
+        (
+            ["--quick", "--policy", f"scorer:{FAST}:stop=auto"],
+            f"tuning_seeds: must be above 0 to tune 'scorer:{FAST}:stop=auto'; got 0",
+        ),
+        (
+            ["--quick", "--policy", f"scorer:{FAST.replace('cold-store-fast', 'on-time')}"],
+            "must be able to score the trees of some problem",
+        ),
         (["--sheets", FAST, "--seeds", "9"], "--sheets: rehearses nothing, so it cannot go with --seeds"),
         (["--quick", "--problem", "chess"], "problem: must be one of taxi,"),
         (["--quick", "--budget", "fast"], "budget: must be rollouts (128), or time and cost (20ms@100us)"),
         (["--quick", "--policy", "luck"], "policy 'luck': must begin with one of even,"),
         (["--quick", "--policy", "uct:d=1"], "policy 'uct:d=1': options of uct are: c; got 'd'"),
         (["--quick", "--policy", "uct:c=x"], "policy 'uct:c=x': c: must be a number; got 'x'"),
-        (["--quick", "--policy", f"scorer:{FAST}:prior=auto:stop=auto"], "must leave one option to tuning"),
+        (
+            ["--quick", "--policy", f"scorer:{FAST}:prior=auto:stop=auto", "--tuning-seeds", "9"],
+            "must leave one option to tuning",
+        ),
         (["--quick", "--policy", "scorer:none.onnx"], "must name a file that exists; got 'none.onnx'"),
     ],
 )

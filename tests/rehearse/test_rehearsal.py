@@ -11,10 +11,13 @@ from ladder import CLOSED_FORM
 
 from distill import voc
 from distill.errors import InputError
+from distill.rehearse.gym_tables import GymTable
+from distill.rehearse.lookahead import Settings
 from distill.rehearse.loop import Budget, posterior_means
 from distill.rehearse.policies import ByRule
-from distill.rehearse.problems import TreeProblem
+from distill.rehearse.problems import SimulatorProblem, TreeProblem
 from distill.rehearse.rehearsal import Cell, compare, rehearse
+from distill.rehearse.simulator import Outcome
 from distill.rehearse.value_policies import ByValue
 
 PROBLEMS = [TreeProblem(3), TreeProblem(2, 2, 2, noise_var=None)]
@@ -67,6 +70,34 @@ def test_another_rehearsals_folder_is_refused(tmp_path):
     cell.write_bytes(cell.read_bytes()[:100])
     with pytest.raises(InputError, match="must be a readable Parquet file"):
         run(tmp_path)
+
+
+def test_decisions_of_a_changed_problem_are_not_taken_for_those_of_the_one_before(tmp_path):
+    """A simulator is edited and rehearsed again under its name: its rewards, or how far the search looks."""
+
+    def rehearsed(factor, settings):
+        kind = GymTable("taxi", discount=0.98)
+        step, outcomes = kind.step, kind.outcomes
+
+        def dearer(state, action, rng):
+            after, reward = step(state, action, rng)
+            return after, factor * reward
+
+        kind.step = dearer
+        kind.outcomes = lambda s, a: [Outcome(p, t, factor * r) for p, t, r in outcomes(s, a)]
+        problem = SimulatorProblem(kind, settings)
+        return rehearse([problem], [POLICIES[0]], BUDGETS[:1], tmp_path, seeds=3)[0].regret
+
+    near = Settings(depth=1, length=10)
+    first = rehearsed(1.0, near)
+    assert np.array_equal(rehearsed(1.0, near), first)
+    for factor, settings in (
+        (10.0, near),
+        (1.0, Settings(depth=2, length=10)),
+        (1.0, Settings(depth=1, length=9)),
+    ):
+        with pytest.raises(InputError, match="holds decisions of another problem named taxi"):
+            rehearsed(factor, settings)
 
 
 def test_repeated_names_and_single_seeds_are_refused(tmp_path):

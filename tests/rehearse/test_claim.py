@@ -44,7 +44,7 @@ def test_a_folder_takes_more_and_never_loses_what_it_shows(tmp_path: Path) -> No
     assert (told[0], told[-1]) == ((0, 1), (1, 1))  # what was done for fewer policies is not done for more
     assert {"even", "static_rate", "cold-store-fast"} <= {row["policy"] for row in summary["rows"]}
     before = (tmp_path / "campaign.json").read_bytes()
-    for other in (TINY, replace(more, problems=("tree-2x2^1-winloss",)), replace(more, budgets=("8",))):
+    for other in (TINY, replace(more, problems=("tree-2x2^1-noise4",)), replace(more, budgets=("8",))):
         with pytest.raises(InputError) as refused:
             run(other, tmp_path)
         assert str(tmp_path) in str(refused.value)

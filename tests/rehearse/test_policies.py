@@ -325,7 +325,7 @@ def test_static_voc_is_the_knowledge_gradient():
 @pytest.mark.parametrize(
     ("make", "message"),
     [
-        (lambda: WithPrior(ByRule("thompson"), 0.0), "width: must be above 0 and finite"),
+        (lambda: WithPrior(ByRule("thompson"), 0.0), "prior: must be from 1e-06 to"),
         (lambda: ByScorer(FAST, every=-1), "every: must be >= 0"),
         (lambda: ByScorer(FAST, late=-1.0), "late: must be >= 0 and finite"),
         (lambda: ByScorer(FAST, share=float("inf")), "share: must be >= 0 and finite"),

@@ -18,7 +18,7 @@ from distill.rehearse.catalogue import make_problem
 from distill.rehearse.loop import Budget, decide
 from distill.rehearse.policy_specs import make_policy
 
-SHAPES = ((2, 2, 12), (2, 3, 10), (3, 2, 9), (2, 4, 8), (4, 2, 8))
+SHAPES = ((2, 2, 9), (2, 3, 7), (3, 2, 7), (2, 4, 6), (4, 2, 6))
 SCORER = Path(__file__).parents[2] / "models" / "on-time.onnx"
 RULES = ("even", "uct", "static-voc", "static-rate", "exact-dynamic-rate", f"scorer:{SCORER}")
 SEEDS = 4000  # of Thompson sampling, whose luck is not enumerated

@@ -33,7 +33,7 @@ scorer:FILE.onnx[:late=0.5:every=2:share=0.2:prior=1.4:name=TEXT]. Exact ones an
 price of a rollout in units of the tree's scale: the search stops where none is worth that. uct, thompson,
 top-two and static-rate by bare name are tuned on decisions of their own; so is what ends in prior=auto, or in
 stop=auto, which finds the highest price that costs next to no regret (one of the two). To see what stopping
-saves, play the same policy without stop=auto beside it."""
+saves, play the same policy without stop=auto beside it, or give --stops."""
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -45,6 +45,10 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     )
     parser.add_argument("--quick", action="store_true", help="a small rehearsal of under a minute")
     parser.add_argument("--full", action="store_true", help="the whole grid; half an hour on two cores")
+    parser.add_argument(
+        "--stops", action="store_true",
+        help="play 4,096 rollouts with and without stopping early too; beside --full 25 minutes more",
+    )  # fmt: skip
     again = "again for more; with --quick or --full in place of theirs"
     parser.add_argument(
         "--problem", action="append", default=[], metavar="NAME", help=f"what is searched; {again}"
@@ -79,7 +83,17 @@ def run(args: argparse.Namespace) -> None:
         from distill.errors import InputError
         from distill.rehearse.sheets import add_to_sheets
 
-        for flag in ("quick", "full", "problem", "budget", "policy", "scorer", "seeds", "tuning_seeds"):
+        for flag in (
+            "quick",
+            "full",
+            "stops",
+            "problem",
+            "budget",
+            "policy",
+            "scorer",
+            "seeds",
+            "tuning_seeds",
+        ):
             if getattr(args, flag) not in (None, False, []):
                 raise InputError(
                     "--sheets", f"rehearses nothing, so it cannot go with --{flag.replace('_', '-')}"
@@ -115,6 +129,7 @@ def _rehearse(args: argparse.Namespace) -> None:
         budgets=args.budget,
         policies=args.policy,
         scorers=args.scorer,
+        stopping=args.stops,
         seeds=args.seeds,
         tuning_seeds=args.tuning_seeds,
     )

@@ -52,7 +52,6 @@ _PLANS: Final = {
         policies=(*_BASELINES[1:], "exact-dynamic-rate"),  # an even search is nobody's rival
         wide=_WIDE,
         wide_budgets=_ENDS,
-        plenty=_PLENTY,
         slowest=0.03,
         dearest=0.045,
     ),
@@ -60,7 +59,7 @@ _PLANS: Final = {
 # How scorer files are used: in turns with the closed form, then alone for the last half rollout a leaf; or
 # after the closed form, alone for the last two rollouts a leaf; never where a scoring takes over a fifth of
 # a rollout's time. In the full plan the first file of each kind of inputs is played in both ways, and in the
-# first with a tuned prior, where rollouts are plenty with and without stopping; others with a tuned prior.
+# first with a tuned prior; others with a tuned prior.
 _USE: Final = ":late=0.5:every=2:share=0.2"
 _LATE: Final = ":late=2:share=0.2"
 _STOPS: Final = (":late=0.5", ":late=0.5:stop=auto")  # where rollouts are plenty, the closed form is fast
@@ -73,6 +72,7 @@ def plan(
     budgets: Sequence[str] = (),
     policies: Sequence[str] = (),
     scorers: Sequence[str] = (),
+    stopping: bool = False,
     seeds: int | None = None,
     tuning_seeds: int | None = None,
 ) -> Campaign:
@@ -94,19 +94,20 @@ def plan(
     inputs: set[InputKind | None] = set()
     for file in scorers:
         uses = ["", _USE]
+        kind = Scorer.load(file).kind if full or stopping else None
+        if stopping and kind not in inputs:
+            stops += [f"scorer:{file}{use}" for use in _STOPS]
         if full:
-            kind = Scorer.load(file).kind
-            uses = [f"{_USE}:prior=auto"]
-            if kind not in inputs:
-                uses = [_USE, _LATE, *uses]
-                stops += [f"scorer:{file}{use}" for use in _STOPS]
-            inputs.add(kind)
+            uses = [f"{_USE}:prior=auto"] if kind in inputs else [_USE, _LATE, f"{_USE}:prior=auto"]
+        inputs.add(kind)
         chosen += tuple(f"scorer:{file}{use}" for use in uses)
+    if stopping and not stops:
+        raise InputError("--stops", "needs a scorer file: --scorer FILE.onnx")
     return Campaign(
         wide=base.wide if base else (),
         wide_budgets=base.wide_budgets if base and not budgets else (),
         stops=tuple(stops),
-        plenty=base.plenty if base and stops and not budgets else (),
+        plenty=_PLENTY if stopping else (),
         problems=tuple(problems) or (base.problems if base else ()),
         budgets=tuple(budgets) or (base.budgets if base else ()),
         slowest=base.slowest if base else _SLOWEST,

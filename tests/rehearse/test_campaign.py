@@ -360,6 +360,10 @@ def test_the_command_leaves_a_page_and_says_where(tmp_path, capsys):
             ["--quick", "--policy", f"scorer:{FAST.replace('cold-store-fast', 'on-time')}"],
             "must be able to score the trees of some problem",
         ),
+        (
+            ["--problem", "taxi", "--budget", "8", "--stops"],
+            "--stops: needs a scorer file: --scorer FILE.onnx",
+        ),
         (["--sheets", FAST, "--seeds", "9"], "--sheets: rehearses nothing, so it cannot go with --seeds"),
         (["--quick", "--problem", "chess"], "problem: must be one of taxi,"),
         (["--quick", "--budget", "fast"], "budget: must be rollouts (128), or time and cost (20ms@100us)"),
@@ -395,10 +399,15 @@ def test_plans_know_the_scorers_uses():
     ]
     full = plan("full", scorers=[FAST, FAST.replace("-fast", "")])
     assert full.seeds >= 400
-    assert full.stops == (f"scorer:{FAST}:late=0.5", f"scorer:{FAST}:late=0.5:stop=auto")
+    assert full.stops == full.plenty == ()
     assert not any("stop" in p for p in full.policies)
-    assert full.plenty
-    assert plan("full", budgets=["8"], scorers=[FAST]).plenty == plan("full").plenty == ()
+    stops = plan("full", scorers=[FAST, FAST.replace("-fast", "")], stopping=True, tuning_seeds=9)
+    assert stops.stops == (
+        f"scorer:{FAST}:late=0.5",
+        f"scorer:{FAST}:late=0.5:stop=auto",
+    )  # one a kind of inputs
+    assert stops.plenty == ("4096",)
+    assert (stops.policies, stops.budgets) == (full.policies, full.budgets)
     assert set(full.wide) <= set(full.problems)
     records = FAST.replace("cold-store-fast", "crossing-traffic")
     uses = [

@@ -104,7 +104,7 @@ def test_networks_and_linear_models_are_repeated_to_float32(activation):
     X = (rng.normal(size=(400, 5)) * [1, 10, 0.1, 3, 1] + [0, 50, 3, 0, 0]).astype(np.float32)
     y = np.tanh(X[:, 0]) + 0.1 * X[:, 3]
     net = MLPRegressor(hidden_layer_sizes=(8, 4), activation=activation, solver="lbfgs", tol=0.1)
-    net.set_params(max_iter=500, max_fun=10**6)
+    net.set_params(max_iter=500, max_fun=10**6, random_state=0)
     for model in (
         make_pipeline(StandardScaler(), net),
         net,

@@ -16,6 +16,7 @@ __all__ = ["HELP", "add_arguments", "run"]
 HELP = "policies compared in closed-loop search, at equal rollouts and at equal time"
 _FEW = 6  # decisions a cell, to see how long one takes
 _SAY_SECONDS = 60.0
+_PLAYING = ("quick", "full", "stops", "problem", "budget", "policy", "scorer", "seeds", "tuning_seeds")
 _EPILOG = """\
 problems: taxi, cold_store_small, frozen_lake_4x4_plans, frozen_lake_8x8_plans, frozen_lake_4x4_odds,
 cliff_walking_slippery_plans, frozen_lake_8x8_odds; those that look ahead with the exact model: cliff_walking,
@@ -83,22 +84,9 @@ def run(args: argparse.Namespace) -> None:
         from distill.errors import InputError
         from distill.rehearse.sheets import add_to_sheets
 
-        for flag in (
-            "quick",
-            "full",
-            "stops",
-            "problem",
-            "budget",
-            "policy",
-            "scorer",
-            "seeds",
-            "tuning_seeds",
-        ):
-            if getattr(args, flag) not in (None, False, []):
-                raise InputError(
-                    "--sheets", f"rehearses nothing, so it cannot go with --{flag.replace('_', '-')}"
-                )
-
+        if given := [flag for flag in _PLAYING if getattr(args, flag) not in (None, False, [])]:
+            rule = f"rehearses nothing, so it cannot go with --{given[0].replace('_', '-')}"
+            raise InputError("--sheets", rule)
         for file in add_to_sheets(args.out, args.sheets):
             print(f"{file.with_suffix('.json')}, {file.with_suffix('.md')}: with the rehearsal's figures")
         return

@@ -195,8 +195,9 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
     def plays(text: str) -> bool:
         return _unreadable(campaign, text, tree) is None and _refused(make_policy(text), tree) is None
 
+    judged: dict[str, Any] = {"seeds": campaign.seeds, "first_seed": _FIRST_SEED}
     none = [make_policy("even")], [Budget(rollouts=0)], folder / "unsearched"
-    out.unsearched.extend(rehearse([problem], *none, seeds=campaign.seeds, first_seed=_FIRST_SEED))
+    out.unsearched.extend(rehearse([problem], *none, **judged))
     for text in campaign.budgets_of(name):
         budget = Budget.parse(text)
         rollouts, specs = budget.room(0, 0.0), campaign.policies_under(text)
@@ -213,17 +214,12 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
             if why is not None
         )
         policies = [named(make_policy(texts[spec]), spec) for spec in specs if reasons[spec] is None]
-        where, first = folder / "cells", _FIRST_SEED
+        where = folder / "cells"
         if text in campaign.plenty:
             for spec in (s for s in specs if s.endswith(":stop=auto") and reasons[s] is None):
-                price = price_of(texts[spec])
-                settings = {"seeds": campaign.seeds, "first_seed": first}
-                play_stops(
-                    problem, make_policy(untuned(spec)), name_of(spec), price, budget, where, **settings
-                )
-        out.cells.extend(
-            rehearse([problem], policies, [budget], where, seeds=campaign.seeds, first_seed=first)
-        )
+                goes_on, price = make_policy(untuned(spec)), price_of(texts[spec])
+                play_stops(problem, goes_on, name_of(spec), price, budget, where, **judged)
+        out.cells.extend(rehearse([problem], policies, [budget], where, **judged))
         write_atomic(_place(folder, name, text).with_suffix(".done"), _played(specs))
     return name, out
 

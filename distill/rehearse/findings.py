@@ -10,6 +10,7 @@ from typing import Any, Final
 
 import numpy as np
 
+from distill.rehearse.aimed import BEST, LIMITS
 from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.loop import Budget
 from distill.rehearse.rehearsal import Cell, Compared, compare, interval, resampled
@@ -40,10 +41,8 @@ GROUPS: Final = {
     "exact": ("exact-dynamic-rate",),
 }
 NO_SEARCH: Final = "no search"  # advice: act before the first rollout
-BEST: Final = "best scorer"  # its decisions of either half are those of the scorer that did best on the other
 _EXACT: Final = "exact_dynamic_rate"
 _AIM_SECONDS: Final = 100e-6  # cost of a rollout from which the aims are judged
-_LIMITS: Final = {"sampling": (0.85, 1.1), "static": (0.95, 1.05), "exact": (1.0, 1.0)}
 _FELL_BACK: Final = 0.98  # share of choices by another rule from which a cell says nothing of its policy
 _SLOW: Final = 0.2  # share of time from which exact choosing counts as dear
 
@@ -153,7 +152,7 @@ def aims(results: Results, rows: Iterable[Mapping[str, Any]]) -> dict[str, Any]:
         place = row["problem"], row["budget"]
         if row["rollout_seconds"] < _AIM_SECONDS * (1 - 1e-9) or (group == "exact" and place not in slow):
             continue
-        at_most, never_above = _LIMITS[group]
+        at_most, never_above = LIMITS[group]
         none = {"cells": 0, "reached": 0, "beyond": 0, "better": 0, "worse": 0}
         limits = {"at_most": at_most, "never_above": never_above}
         counts = found.setdefault(row["policy"], {}).setdefault(group, {**none, **limits})

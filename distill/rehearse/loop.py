@@ -23,7 +23,8 @@ from distill.rehearse.search import posterior_means
 from distill.tree import BeliefTree, Floats
 
 __all__ = [
-    "Budget", "Decided", "decide", "decide_at_prices", "expected_loss", "expected_maxima", "posterior_means",
+    "Budget", "Decided", "decide", "decide_at_prices", "expected_loss", "expected_maxima", "luck_of",
+    "posterior_means",
 ]  # fmt: skip
 
 _NO_ROLLOUTS = Query(batch=None, remaining=0)  # values alone: nothing is left to price
@@ -139,6 +140,11 @@ class Decided:
 def _whole(rollouts: float) -> int:
     """Rounded down, but the rounding of a sum of rollouts must not lose the last one."""
     return math.floor(rollouts * (1 + 1e-12))
+
+
+def luck_of(seed: int) -> np.random.Generator:
+    """A policy's own luck in the decision of a seed, apart from that of the problem."""
+    return np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
 
 
 def decide(

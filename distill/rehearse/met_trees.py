@@ -10,7 +10,7 @@ import numpy as np
 
 from distill.allocation import Search as Posterior
 from distill.errors import InputError
-from distill.rehearse.loop import Budget, decide, posterior_means
+from distill.rehearse.loop import Budget, decide, luck_of, posterior_means
 from distill.rehearse.policies import Choice, Policy
 from distill.rehearse.problems import Problem
 from distill.rehearse.record import POINTS
@@ -61,7 +61,7 @@ def met_trees(
     for problem in problems:
         recording = _Recording(policy, rollouts)
         for seed in range(first_seed, first_seed + decisions):
-            rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
+            rng = luck_of(seed)
             decide(problem.draw(seed), recording, Budget(rollouts=rollouts), rng, values=posterior_means)
             about = {"problem": problem.name, "seed": seed, "policy": policy.name}
             for tree in recording.trees:

@@ -167,7 +167,7 @@ class SimulatorProblem:
 
     def __post_init__(self) -> None:
         check_simulator(self.simulator)
-        if not callable(getattr(self.simulator, "outcomes", None)):
+        if not isinstance(self.simulator, Modelled):
             rule = "must have outcomes, its exact model: regret is against the optimum that this gives"
             raise InputError(f"simulator {self.simulator.name}", rule)
         self.name = self.name or self.simulator.name

@@ -22,7 +22,7 @@ from distill import __version__
 from distill.errors import InputError
 from distill.files import write_atomic
 from distill.record import to_record
-from distill.rehearse.loop import Budget, Decided, decide, decide_at_prices
+from distill.rehearse.loop import Budget, Decided, decide, decide_at_prices, luck_of
 from distill.rehearse.policies import Policy
 from distill.rehearse.problems import Problem
 from distill.rehearse.remembered import Remembered
@@ -154,7 +154,7 @@ def play_stops(
     ends: dict[str, list[Decided]] = {n: [] for n in paths}
     took = []
     for seed in range(first_seed, first_seed + seeds):
-        rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
+        rng = luck_of(seed)
         started = time.process_time()
         prices = () if price is None else (price,)
         found = decide_at_prices(problem.draw(seed), policy, budget, rng, prices)
@@ -218,7 +218,7 @@ def _run(
     results: list[tuple[list[Decided], list[float]]] = [([], []) for _ in policies]
     for seed in seeds:
         for policy, (decided, seconds) in zip(policies, results, strict=True):
-            rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
+            rng = luck_of(seed)
             started = time.process_time()
             decided.append(decide(problem.draw(seed), policy, budget, rng, values=values))
             seconds.append(time.process_time() - started)

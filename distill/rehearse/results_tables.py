@@ -6,7 +6,8 @@ import re
 from collections.abc import Mapping, Sequence
 from typing import Any, Final
 
-from distill.rehearse.findings import BEST, GROUPS
+from distill.rehearse.aimed import BEST, SAVED
+from distill.rehearse.findings import GROUPS
 
 __all__ = [
     "aims_table", "cells_table", "every_cell", "left_out_lines", "short_table", "stopping_table",
@@ -21,7 +22,6 @@ _AGAINST: Final = {
     "exact": "exact rate, where choosing by it takes over a fifth of the time",
 }
 _NONE: Final = "-"
-_MUCH: Final = 0.3  # share of the rollouts that stopping early is meant to save
 
 
 def aims_table(summary: Figures) -> list[str]:
@@ -91,12 +91,12 @@ def _stopping_lines(rows: Sequence[Figures]) -> list[str]:
     lines = []
     for budget in dict.fromkeys(row["budget"] for row in rows):
         here = [row for row in rows if row["budget"] == budget]
-        saves = [row for row in here if row["free"] and row["saved"] is not None and row["saved"] >= _MUCH]
+        saves = [row for row in here if row["free"] and row["saved"] is not None and row["saved"] >= SAVED]
         problems, some = {row["problem"] for row in here}, {row["problem"] for row in saves}
         better = {row["problem"] for row in saves if row["high"] is not None and row["high"] < 1}
         also = f", on {len(better)} of them with surely less" if better else ""
         lines.append(
-            f"Stopping early at a budget of {budget} saves at least {100 * _MUCH:.0f} % of the rollouts, "
+            f"Stopping early at a budget of {budget} saves at least {100 * SAVED:.0f} % of the rollouts, "
             f"with no measurable loss of regret, on {len(some)} of {len(problems)} problems{also}."
         )
     return lines

@@ -14,7 +14,7 @@ from typing import Any, Final
 import numpy as np
 
 from distill.files import read_json, write_atomic
-from distill.rehearse.loop import Budget, decide_at_prices
+from distill.rehearse.loop import Budget, decide_at_prices, luck_of
 from distill.rehearse.policies import Policy
 from distill.rehearse.policy_specs import make_policy
 from distill.rehearse.problems import Problem
@@ -128,7 +128,7 @@ def _stop(spec: str, problem: Problem, rollouts: int, folder: Path, seeds: int) 
     ends: list[list[tuple[float, int]]] = []
     started = time.process_time()
     for seed in range(TUNING_SEED, TUNING_SEED + seeds):
-        rng = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(3,)))
+        rng = luck_of(seed)
         decision = decide_at_prices(problem.draw(seed), policy, budget, rng, _PRICES)
         ends.append([(end.measured, end.rollouts) for end in decision])
     measured = np.array(ends)[:, :, 0]

@@ -10,6 +10,7 @@ from typing import Final
 
 from distill.errors import InputError
 from distill.files import write_atomic
+from distill.rehearse.aimed import BEST
 from distill.report import rehearsal_pictures as pictures
 from distill.report.elements import Child, element, estimate, number, section, table, text_of, word_list
 from distill.report.facts import Figures, gaps_refused
@@ -165,7 +166,7 @@ def _tables(summary: Figures) -> Iterator[ET.Element]:
     if summary["by_kind"]:
         yield section("Scorer or closed form", _by_kind(summary["by_kind"]))
     yield section("What was aimed at, and reached", _aims(summary["aims"]))
-    best = [row for row in summary["rows"] if row["policy"] == pictures.BEST]
+    best = [row for row in summary["rows"] if row["policy"] == BEST]
     if best:
         yield section("Every problem and budget: the best scorer", _best(best, summary))
     if summary["stopping"]:

@@ -15,18 +15,17 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import NullLocator
 
+from distill.rehearse.aimed import BEST, LIMITS
 from distill.report.theme import DRAWN, SMALL, one_line, styled, svg
 
-__all__ = ["BEST", "break_even", "choosing", "costs", "ratios"]
+__all__ = ["MARKS", "WIDTH", "break_even", "choosing", "costs", "ratios"]
 
 Figures = Mapping[str, Any]
 Rows = Sequence[Figures]
 
-BEST: Final = "best scorer"
-_WIDTH: Final = 390 / 72
-_MARKS: Final = ("o", "s", "^", "D", "v")
+WIDTH: Final = 390 / 72
+MARKS: Final = ("o", "s", "^", "D", "v")
 _RIVALS: Final = {"sampling": "better sampling", "static": "closed form", "exact": "exact rate"}
-_AIMS: Final = {"sampling": 0.85, "static": 0.95, "exact": 1.0}  # ratios that a scorer is meant to reach
 _FAR: Final = (0.3, 3.0)  # ratios beyond stand at the edge
 _LEVELS: Final = (0.25, 0.5, 0.7, 0.85, 1, 1.2, 1.5, 2, 3, 5, 10)
 # What lines and rows stand for: (words of a policy's name, label, colour), the last one for what is left.
@@ -73,12 +72,12 @@ def _ratios(rows: Rows, group: str) -> Figure:
     problems = list(dict.fromkeys(row["problem"] for row in rows))
     problems.sort(key=lambda p: -median(r["ratios"][group]["ratio"] for r in rows if r["problem"] == p))
     costs_ = sorted({row["rollout_seconds"] for row in rows})
-    figure = Figure(figsize=(_WIDTH, (80 + 17 * len(problems) + 8 * len(costs_)) / 72))
+    figure = Figure(figsize=(WIDTH, (80 + 17 * len(problems) + 8 * len(costs_)) / 72))
     figure.patch.set_visible(False)
     ax = figure.subplots()
     ax.patch.set_visible(False)
     shades = _shades(len(costs_))
-    for cost, (role, alpha), mark in zip(costs_, shades, _MARKS * len(costs_), strict=False):
+    for cost, (role, alpha), mark in zip(costs_, shades, MARKS * len(costs_), strict=False):
         here = [row for row in rows if row["rollout_seconds"] == cost]
         nth: dict[str, int] = {}
         label = f"{_cost(cost)} a rollout"
@@ -94,7 +93,7 @@ def _ratios(rows: Rows, group: str) -> Figure:
             )  # fmt: skip
             label = "_"
     ax.axvline(1, color=DRAWN["quiet"], lw=1)
-    ax.axvline(_AIMS[group], color=DRAWN["quiet"], lw=1, ls=(0, (4, 3)))
+    ax.axvline(LIMITS[group][0], color=DRAWN["quiet"], lw=1, ls=(0, (4, 3)))
     ax.set_yticks(range(len(problems)), [one_line(p, 28) for p in problems])
     ax.set(xscale="log", xlim=_FAR, ylim=(-0.7, len(problems) - 0.3))
     ticks = (0.3, 0.5, 0.7, 1, 1.5, 2, 3)
@@ -152,7 +151,7 @@ def _rollouts(row: Figures) -> int:
 @styled
 def _costs(panels: Sequence[Rows]) -> Figure:
     down = (len(panels) + 1) // 2
-    figure = Figure(figsize=(_WIDTH, (110 + 160 * down) / 72))
+    figure = Figure(figsize=(WIDTH, (110 + 160 * down) / 72))
     figure.patch.set_visible(False)
     axes = figure.subplots(down, 2, squeeze=False)
     lines: dict[str, Any] = {}
@@ -166,7 +165,7 @@ def _costs(panels: Sequence[Rows]) -> Figure:
                 continue
             points = sorted((1e6 * r["rollout_seconds"], r["measured"]) for r in mine)
             nth = [s[1] for s in _SORTS if s[2] == role].index(label)
-            style: dict[str, Any] = {"color": DRAWN[role], "marker": _MARKS[nth], "ms": 4, "lw": 1.4}
+            style: dict[str, Any] = {"color": DRAWN[role], "marker": MARKS[nth], "ms": 4, "lw": 1.4}
             (lines[label],) = ax.plot(*zip(*points, strict=True), gid="policy", **style)
         ticks = sorted({1e6 * r["rollout_seconds"] for r in rows})
         ax.set_xticks(ticks, [f"{t:.0f}" if t < 1000 else f"{t / 1000:g}k" for t in ticks])
@@ -209,7 +208,7 @@ def choosing(summary: Figures) -> ET.Element | None:
 def _choosing(rows: Rows) -> Figure:
     labels = [label for words, label, _ in _SORTS if any(r["policy"].startswith(words) for r in rows)]
     costs_ = sorted({r["rollout_seconds"] for r in rows})
-    figure = Figure(figsize=(_WIDTH, (74 + 13 * (len(costs_) + 0.6) * len(labels)) / 72))
+    figure = Figure(figsize=(WIDTH, (74 + 13 * (len(costs_) + 0.6) * len(labels)) / 72))
     figure.patch.set_visible(False)
     ax = figure.subplots()
     ax.patch.set_visible(False)
@@ -223,7 +222,7 @@ def _choosing(rows: Rows) -> Figure:
             ]  # fmt: skip
             if here:
                 ax.plot([min(here), max(here)], [y, y], color=DRAWN[role], lw=1, alpha=0.5)
-                ax.plot([median(here)], [y], _MARKS[j % len(_MARKS)], ms=4, color=DRAWN[role], gid="share")
+                ax.plot([median(here)], [y], MARKS[j % len(MARKS)], ms=4, color=DRAWN[role], gid="share")
                 ax.annotate(
                     _cost(cost), (max(here), y), xytext=(4, 0), textcoords="offset points",
                     va="center", fontsize=8, color=DRAWN["quiet"],
@@ -261,7 +260,7 @@ def break_even(summary: Figures) -> ET.Element | None:
 
 @styled
 def _break_even(rows: Rows, rollouts: int) -> Figure:
-    figure = Figure(figsize=(_WIDTH, 400 / 72))
+    figure = Figure(figsize=(WIDTH, 400 / 72))
     figure.patch.set_visible(False)
     ax = figure.subplots()
     ax.patch.set_visible(False)
@@ -273,7 +272,7 @@ def _break_even(rows: Rows, rollouts: int) -> Figure:
         if mine:
             points = sorted((1e6 * r["rollout_seconds"], r["ratio"]) for r in mine)
             nth = [s[1] for s in _SORTS if s[2] == role].index(label)
-            style: dict[str, Any] = {"marker": _MARKS[nth], "ms": 5, "lw": 1.4, "color": DRAWN[role]}
+            style: dict[str, Any] = {"marker": MARKS[nth], "ms": 5, "lw": 1.4, "color": DRAWN[role]}
             ax.plot(*zip(*points, strict=True), label=label, gid="policy", **style)
     ax.axhline(1, color=DRAWN["quiet"], lw=1)
     ticks = sorted({1e6 * r["rollout_seconds"] for r in rows})

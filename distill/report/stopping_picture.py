@@ -4,19 +4,17 @@ from __future__ import annotations
 
 import xml.etree.ElementTree as ET
 from collections.abc import Mapping, Sequence
-from typing import Any, Final
+from typing import Any
 
 from matplotlib.figure import Figure
 
+from distill.rehearse.aimed import SAVED
+from distill.report.rehearsal_pictures import MARKS, WIDTH
 from distill.report.theme import DRAWN, SMALL, one_line, styled, svg
 
 __all__ = ["stopping"]
 
 Rows = Sequence[Mapping[str, Any]]
-
-_WIDTH: Final = 390 / 72
-_MARKS: Final = ("o", "s", "^", "D", "v")
-_MEANT: Final = 30  # percent that stopping is meant to save
 
 
 def stopping(summary: Mapping[str, Any]) -> ET.Element | None:
@@ -41,19 +39,19 @@ def _stopping(rows: Rows) -> Figure:
     most = {p: max(r["saved"] for r in rows if r["problem"] == p) for p in (r["problem"] for r in rows)}
     problems = sorted(most, key=lambda problem: most[problem])
     budgets = list(dict.fromkeys(row["budget"] for row in rows))
-    figure = Figure(figsize=(_WIDTH, (80 + 17 * len(problems)) / 72))
+    figure = Figure(figsize=(WIDTH, (80 + 17 * len(problems)) / 72))
     figure.patch.set_visible(False)
     ax = figure.subplots()
     ax.patch.set_visible(False)
     roles = ["peer", "scorer", "exact", "quiet", "ink"]
     for nth, budget in enumerate(budgets):
-        colour, mark = DRAWN[roles[nth % len(roles)]], _MARKS[nth % len(_MARKS)]
+        colour, mark = DRAWN[roles[nth % len(roles)]], MARKS[nth % len(MARKS)]
         label = f"{budget} rollouts" if budget.isdigit() else budget
         ax.plot([], [], mark, ms=5, color=colour, label=label)
         for row in (r for r in rows if r["budget"] == budget):
             at = 100 * row["saved"], problems.index(row["problem"])
             ax.plot(*([x] for x in at), mark, ms=5, mec=colour, mfc=colour if row["free"] else "none")
-    ax.axvline(_MEANT, color=DRAWN["quiet"], lw=1, ls=(0, (4, 3)))
+    ax.axvline(100 * SAVED, color=DRAWN["quiet"], lw=1, ls=(0, (4, 3)))
     ax.set_yticks(range(len(problems)), [one_line(p, 28) for p in problems])
     ax.set(xlim=(-3, 103), ylim=(-0.7, len(problems) - 0.3), xlabel="rollouts saved, %")
     ax.set_xticks([0, 20, 40, 60, 80, 100])

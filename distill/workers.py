@@ -11,17 +11,20 @@ import concurrent.futures
 import contextlib
 import logging
 import multiprocessing
+import os
+import sys
 import threading
 import time
 import warnings
 from collections.abc import Callable, Generator, Iterable, Iterator
+from pathlib import Path
 from typing import Any, Final
 
 from joblib import Parallel, delayed
 
 from distill.errors import InputError, WorkersError
 
-__all__ = ["run_calls"]
+__all__ = ["local_pool", "run_calls"]
 
 _CONNECT_SECONDS: Final = 10
 _NO_WORKER_SECONDS: Final = 60.0  # a cluster's own keeper may bring dead workers back
@@ -47,9 +50,7 @@ def run_calls(
     pass through. Raises InputError where no scheduler answers, and WorkersError where workers are lost.
     """
     if dask is None:
-        pool = Parallel(
-            n_jobs=workers, return_as="generator_unordered", pre_dispatch="2*n_jobs", batch_size=1
-        )
+        pool = local_pool(workers, **_HOW)
         try:
             yield from _closed_quietly(pool(delayed(function)(*args) for function, args in calls))
         except concurrent.futures.BrokenExecutor:
@@ -57,6 +58,20 @@ def run_calls(
     else:
         with _cluster(dask) as watch:
             yield from watch.results(delayed(function)(*args) for function, args in calls)
+
+
+def local_pool(workers: int, **how: Any) -> Parallel:
+    """Processes of this machine that stand where this one stands. how : for joblib's `Parallel`.
+
+    joblib keeps its workers for later calls, and those would go on in the folder, and find the modules, of
+    the call that they were started for: another folder or search path has new ones.
+    """
+    return Parallel(n_jobs=workers, initializer=_stand, initargs=(str(Path.cwd()), tuple(sys.path)), **how)
+
+
+def _stand(folder: str, path: tuple[str, ...]) -> None:
+    os.chdir(folder)
+    sys.path[:] = path
 
 
 def _closed_quietly(results: Any) -> Iterator[Any]:

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import importlib
 import math
 import os
+import sys
 import threading
 import time
 from pathlib import Path
@@ -41,6 +43,20 @@ def test_results_come_from_this_process_and_from_others():
         assert sorted(run_calls(((divmod, (i, 7)) for i in range(20)), workers=n)) == [
             divmod(i, 7) for i in range(20)
         ]
+
+
+def test_workers_stand_where_their_caller_stands_now(tmp_path, monkeypatch):
+    """joblib keeps them from call to call, and those of the first call know neither folder nor module."""
+    for name in ("first", "second"):
+        folder = tmp_path / name
+        folder.mkdir()
+        (folder / f"{name}_module.py").write_text("")
+        monkeypatch.chdir(folder)
+        monkeypatch.setattr(sys, "path", [*sys.path, str(folder)])
+        calls = [(os.getcwd, ()), (importlib.import_module, (f"{name}_module",))]
+        found = [str(result) for call in calls for result in run_calls([call] * 3, workers=2)]
+        assert found[:3] == [str(folder)] * 3
+        assert all(str(folder) in text for text in found[3:])
 
 
 def test_a_process_that_dies_is_one_clear_error():

@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
-from joblib import Parallel, delayed
+from joblib import delayed
 
 from distill import __version__
 from distill.errors import InputError
@@ -27,6 +27,7 @@ from distill.rehearse.policies import Policy
 from distill.rehearse.problems import Problem
 from distill.rehearse.remembered import Remembered
 from distill.tree import BeliefTree, Floats
+from distill.workers import local_pool
 
 __all__ = ["Cell", "Compared", "compare", "interval", "play_stops", "rehearse", "resampled"]
 
@@ -121,7 +122,7 @@ def rehearse(
         jobs = (
             delayed(_all_of_problem)(problem, policies, budgets, folder, span, values) for problem in problems
         )
-        parts = Parallel(n_jobs=workers, return_as="generator", batch_size=1)(jobs)
+        parts = local_pool(workers, return_as="generator", batch_size=1)(jobs)
     for part in parts:
         cells += part
         if progress is not None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import re
+import shutil
 import xml.etree.ElementTree as ET
 from dataclasses import replace
 from pathlib import Path
@@ -302,8 +303,9 @@ def test_cells_with_and_without_stopping_are_those_of_searches_of_their_own(plen
             assert np.array_equal(getattr(a, column), getattr(b, column), equal_nan=True)
 
 
-def test_tuned_prices_are_read_when_a_run_goes_on(plenty, monkeypatch):
-    folder, before = plenty
+def test_tuned_prices_are_read_when_a_run_goes_on(plenty, tmp_path, monkeypatch):
+    folder, before = tmp_path / "copy", plenty[1]
+    shutil.copytree(plenty[0], folder)
     monkeypatch.setattr("distill.rehearse.tuning.decide_at_prices", None)
     again = run(PLENTY, folder)
     assert json.loads(json.dumps(again.tuning)) == before["tuning"]

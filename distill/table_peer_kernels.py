@@ -24,6 +24,7 @@ def matched_on_table(m, v, noise, action, left, batch, nodes, shares):  # type: 
     Siblings' maxima come from running maxima from both ends. The batch is that of the threshold to the
     rival, unless one is given.
     """
+    m = m - m.max()  # a shift of all means changes nothing, and far from 0 the gains would lose their digits
     n_leaves = len(m)
     n_actions = action.max() + 1
     before = np.full((n_leaves, 2), -np.inf)

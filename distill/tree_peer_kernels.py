@@ -115,12 +115,30 @@ def _batches(t, b, action, left, batch):  # type: ignore[no-untyped-def]
 
 
 @compiled
-def _moments_of(t, v, mean, var):  # type: ignore[no-untyped-def]
-    """Mean and variance of an inner node's value from its children's; maxima are taken for normals."""
+def _below(t, value):  # type: ignore[no-untyped-def]
+    """How far the value of each edge is below that of its decision node, all leaves at their means.
+
+    Means of nodes are counted from these values: far from 0, their differences would lose their digits. A
+    chance node's value is the average of its edges' by definition, so below it there is nothing to count.
+    """
+    below = np.zeros(len(value))
+    for w in range(1, len(value)):
+        p = t.parent[w]
+        if t.is_decision[p]:
+            below[w] = t.reward[w] + t.discount[w] * value[w] - value[p]
+    return below
+
+
+@compiled
+def _moments_of(t, v, below, mean, var):  # type: ignore[no-untyped-def]
+    """Mean and variance of an inner node's value from its children's; maxima are taken for normals.
+
+    mean : from the node's value with all leaves at their means on. below : see `_below`.
+    """
     m, s2 = 0.0, 0.0
     for j in range(t.first[v], t.first[v + 1]):
         w = t.child[j]
-        q, r2 = t.reward[w] + t.discount[w] * mean[w], t.discount[w] ** 2 * var[w]
+        q, r2 = below[w] + t.discount[w] * mean[w], t.discount[w] ** 2 * var[w]
         if not t.is_decision[v]:
             m, s2 = m + t.prob[w] * q, s2 + t.prob[w] ** 2 * r2
         elif j == t.first[v]:
@@ -138,17 +156,20 @@ def matched_on_tree(t, b, left, batch, nodes, shares):  # type: ignore[no-untype
     quadrature for the standard normal.
     """
     n = len(t.parent)
+    value = np.empty(n)
+    pass_values(t, b.mean, value)
+    below = _below(t, value)
     mean, var = np.zeros(n), np.zeros(n)
     for i in range(len(t.leaf)):
-        mean[t.leaf[i]], var[t.leaf[i]] = b.mean[i], b.var[i]
+        var[t.leaf[i]] = b.var[i]
     for v in range(n - 1, 0, -1):
         if t.first[v] < t.first[v + 1]:
-            mean[v], var[v] = _moments_of(t, v, mean, var)
+            mean[v], var[v] = _moments_of(t, v, below, mean, var)
     n_actions = t.first[1] - t.first[0]
     own = np.empty(n_actions)
     for a in range(n_actions):
         w = t.child[t.first[0] + a]
-        own[a] = t.reward[w] + t.discount[w] * mean[w]
+        own[a] = below[w] + t.discount[w] * mean[w]
     action = _actions(t)
     batches = _batches(t, b, action, left, batch)
     scores = np.zeros(len(t.leaf))
@@ -161,16 +182,16 @@ def matched_on_tree(t, b, left, batch, nodes, shares):  # type: ignore[no-untype
         total, before = 0.0, 0.0
         for j in range(len(nodes) + 1):
             if j < len(nodes):
-                mean[t.leaf[i]] = b.mean[i] + math.sqrt(s2) * nodes[j]
+                mean[t.leaf[i]] = math.sqrt(s2) * nodes[j]
                 var[t.leaf[i]] = max(b.var[i] - s2, 0.0)
             else:  # back to the present
-                mean[t.leaf[i]], var[t.leaf[i]] = b.mean[i], b.var[i]
+                mean[t.leaf[i]], var[t.leaf[i]] = 0.0, b.var[i]
             w = t.leaf[i]
             while t.parent[w] != 0:
                 w = t.parent[w]
-                mean[w], var[w] = _moments_of(t, w, mean, var)
+                mean[w], var[w] = _moments_of(t, w, below, mean, var)
             if j < len(nodes):
-                g = t.reward[w] + t.discount[w] * mean[w]
+                g = below[w] + t.discount[w] * mean[w]
                 total += shares[j] * max(g, rival)
                 before += shares[j] * g
         scores[i] = max(total - max(before, rival), 0.0) / (1.0 if batch > 0 else k)

@@ -94,6 +94,30 @@ def test_moments_on_a_tree_of_leaf_tables_are_those_on_the_table() -> None:
     np.testing.assert_allclose(got[large], expected[large], rtol=CLOSED_FORM_RATE)
 
 
+def test_moments_do_not_depend_on_where_zero_is() -> None:
+    """Means that a double holds to 2^-20 beside 2^30, and halves and quarters: no input is rounded."""
+
+    def means(offset: float, on_table: bool):
+        if on_table:
+            m = offset + np.array([0.0, 0.25, 0.125, -1.5, 2.0**-20, 0.5])
+            v, noise = np.array([1.0, 2.0, 0.5, 1.0, 1.0, 0.0]), np.ones(6)
+            action = np.array([0, 0, 1, 1, 2, 2])
+            return matched_on_table(m, v, noise, action, 50, 0, NODES, SHARES)
+        some = ("max", [leaf(offset, 1.0), leaf(offset + 0.25, 2.0)])
+        tree = build(
+            ("mean", [(0.5, some), (0.5, leaf(offset + 0.5, 1.0))]),
+            ("max", [("mean", [(0.75, leaf(offset + 0.5, 1.0)), (0.25, some)]), leaf(offset - 1.5, 0.5)]),
+            leaf(offset + 0.375, 0.0),
+        )
+        return tree_peers(RATE, 4)[MOMENTS](held(tree))
+
+    for on_table in (True, False):
+        near = means(0.0, on_table)
+        assert np.count_nonzero(near > 0.05) >= 3
+        for offset in (2.0**30, -(2.0**30)):  # a billion standard deviations from 0
+            np.testing.assert_allclose(means(offset, on_table), near, rtol=CLOSED_FORM)
+
+
 def test_moments_follow_a_maximum_below_a_lottery() -> None:
     tree = build(
         ("mean", [(0.6, ("max", [leaf(0.0, 1.0), leaf(0.1, 2.0)])), (0.4, leaf(0.5, 1.0))]),

@@ -24,7 +24,6 @@ from __future__ import annotations
 
 import argparse
 import copy
-import json
 import math
 import os
 import sys
@@ -37,6 +36,7 @@ import numpy as np
 from distill import schema
 from distill.backup import Backup, backup_of
 from distill.errors import DistillError, InputError
+from distill.files import read_json
 from distill.record import from_record
 from distill.runtime import Scorer
 
@@ -52,11 +52,9 @@ _IN_UTILITY: Final = ("slope", "other_slope", "spread", "cost")
 def read_vectors(path: str | os.PathLike[str]) -> dict[str, Any]:
     """The vectors, or a port's answers, of a file; InputError where it holds neither."""
     try:
-        found = json.loads(Path(path).read_bytes())
+        found = read_json(path)
     except OSError as e:
         raise InputError(str(path), f"must be a readable file ({e.strerror})") from None
-    except (ValueError, RecursionError) as e:
-        raise InputError(str(path), f"must be valid JSON ({e})") from None
     if not isinstance(found, dict) or found.get("format") != FORMAT:
         raise InputError(f"{path}: format", f"must be {FORMAT!r}")
     if found.get("record_version") != schema.RECORD_VERSION:

@@ -49,5 +49,5 @@ def read_json(path: str | os.PathLike[str]) -> Any:
     """What a JSON file of our own holds; InputError where it is no valid JSON. OSError passes through."""
     try:
         return json.loads(Path(path).read_bytes())
-    except ValueError:
-        raise InputError(str(path), "must be valid JSON") from None
+    except (ValueError, RecursionError) as e:  # the latter where brackets nest without end
+        raise InputError(str(path), f"must be valid JSON ({e})") from None

@@ -37,7 +37,7 @@ from distill.dataset_columns import (
     described_columns,
 )
 from distill.errors import InputError, RefusedError
-from distill.files import sha256_of, write_atomic
+from distill.files import read_json, sha256_of, write_atomic
 from distill.query import Priced, Query
 from distill.tree import BeliefTree, LeafTable, leaf_table
 
@@ -235,11 +235,9 @@ def read_manifest(folder: str | Path, *, partial: bool = False) -> dict[str, Any
     """
     path = Path(folder) / MANIFEST
     try:
-        manifest = json.loads(path.read_bytes())
+        manifest = read_json(path)
     except OSError as e:
         raise InputError(str(path), f"must be a readable file ({e.strerror})") from None
-    except (ValueError, RecursionError) as e:
-        raise InputError(str(path), f"must be valid JSON ({e})") from None
     if not isinstance(manifest, dict) or manifest.get("format") != schema.DATASET_FORMAT:
         found = manifest.get("format") if isinstance(manifest, dict) else manifest
         raise InputError(f"{path}: format", f"must be {schema.DATASET_FORMAT!r}", found)

@@ -2,14 +2,13 @@
 
 from __future__ import annotations
 
-import json
 import os
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
 from distill.errors import InputError
-from distill.files import sha256_of, write_atomic
+from distill.files import read_json, sha256_of, write_atomic
 from distill.runtime import Scorer
 from distill.sheet import FRONT_FILE, FRONT_FORMAT, SHEET_FORMAT, write_sheet
 
@@ -95,10 +94,7 @@ def _read_front(folder: Path) -> dict[str, Any]:
     path = folder / FRONT_FILE
     if not path.is_file():
         raise InputError(str(folder), f"must be a folder that train left, with {FRONT_FILE}")
-    try:
-        front = json.loads(path.read_text())
-    except ValueError as e:
-        raise InputError(str(path), f"must be valid JSON ({e})") from None
+    front = read_json(path)
     if not isinstance(front, dict) or front.get("format") != FRONT_FORMAT:
         raise InputError(f"{path}: format", f"must be {FRONT_FORMAT!r}")
     return front

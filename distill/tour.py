@@ -20,7 +20,7 @@ from distill import report as pages
 from distill import voc
 from distill.errors import InputError
 from distill.family import draw, load_family
-from distill.files import write_atomic
+from distill.files import read_json, write_atomic
 from distill.generate import Traces, generate
 from distill.query import Query
 from distill.rehearse import plans
@@ -199,7 +199,8 @@ def _rehearse(out: Path, trees: int, report: Callable[..., None]) -> dict[str, A
     del trees
     earlier = out / "rehearsal" / "campaign.json"
     if earlier.is_file():
-        if json.loads(earlier.read_bytes()).get("problems") != list(plans.plan("quick").problems):
+        found = read_json(earlier)
+        if not isinstance(found, dict) or found.get("problems") != list(plans.plan("quick").problems):
             raise InputError(str(earlier.parent), "must not hold a rehearsal of other problems")
         shutil.rmtree(earlier.parent)  # an earlier tour's, played with another scorer
     summary = plans.quick([out / "scorer-fast.onnx"], out / "rehearsal")

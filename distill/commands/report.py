@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-import json
 from pathlib import Path
 from typing import Any
 
@@ -49,11 +48,9 @@ def run(args: argparse.Namespace) -> None:
 
 def _read(path: Path) -> dict[str, Any]:
     from distill.errors import InputError
+    from distill.files import read_json
 
-    try:
-        figures = json.loads(path.read_text())
-    except ValueError as e:
-        raise InputError(str(path), f"must be valid JSON ({e})") from None
+    figures = read_json(path)
     if not isinstance(figures, dict):
         raise InputError(str(path), "must hold the figures of train, ship or a tour")
     return figures

@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import Any, Final
 
 from distill.errors import InputError
-from distill.files import write_atomic
+from distill.files import read_json, write_atomic
 
 __all__ = ["claim"]
 
@@ -42,10 +42,7 @@ def claim(folder: Path, asked: Mapping[str, Any], scorers: Mapping[str, str]) ->
 
 
 def _read(path: Path) -> Mapping[str, Any]:
-    try:
-        found = json.loads(path.read_text())
-    except ValueError:
-        found = None
+    found = read_json(path)
     return found if isinstance(found, dict) else {}
 
 

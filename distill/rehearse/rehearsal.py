@@ -20,7 +20,7 @@ from joblib import delayed
 
 from distill import __version__
 from distill.errors import InputError
-from distill.files import write_atomic
+from distill.files import read_json, write_atomic
 from distill.record import to_record
 from distill.rehearse.loop import Budget, Decided, decide, decide_at_prices, luck_of
 from distill.rehearse.policies import Policy
@@ -309,10 +309,7 @@ def _claim(folder: Path, settings: Mapping[str, Any]) -> None:
     if not path.exists():
         write_atomic(path, (json.dumps(settings, indent=1) + "\n").encode())
         return
-    try:
-        found = json.loads(path.read_text())
-    except ValueError:
-        found = None
+    found = read_json(path)
     if found != dict(settings):
         raise InputError(str(path), f"must hold {json.dumps(settings)} to be continued", found)
 

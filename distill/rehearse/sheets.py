@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import Any
 
 from distill.errors import InputError
-from distill.files import sha256_of
+from distill.files import read_json, sha256_of
 from distill.sheet import SHEET_FORMAT, write_sheet
 
 __all__ = ["add_to_sheet", "add_to_sheets", "figures_of", "read_summary"]
@@ -30,11 +29,9 @@ def read_summary(folder: Path) -> dict[str, Any]:
 def _read(path: Path, form: str, missing: tuple[str, str]) -> dict[str, Any]:
     """A JSON object of a format; InputError where there is none, with the place and rule of `missing`."""
     try:
-        found = json.loads(path.read_text())
+        found = read_json(path)
     except FileNotFoundError:
         raise InputError(*missing) from None
-    except (OSError, ValueError) as e:
-        raise InputError(str(path), f"must be valid JSON ({e})") from None
     if not isinstance(found, dict) or found.get("format") != form:
         raise InputError(f"{path}: format", f"must be {form!r}")
     return found

@@ -22,6 +22,7 @@ from distill.errors import InputError, RefusedError
 from distill.files import read_json, sha256_of, write_atomic
 from distill.rehearse.catalogue import make_problem
 from distill.rehearse.claim import claim
+from distill.rehearse.left_out import CHOICE, DECISION, Reason
 from distill.rehearse.loop import Budget
 from distill.rehearse.policies import Policy
 from distill.rehearse.policy_specs import make_policy, scorer_file
@@ -122,7 +123,7 @@ class Results:
     campaign: Campaign
     cells: list[Cell] = field(default_factory=list)
     tuning: list[dict[str, Any]] = field(default_factory=list)
-    left_out: list[dict[str, str]] = field(default_factory=list)
+    left_out: list[dict[str, Any]] = field(default_factory=list)
     kinds: dict[str, str] = field(default_factory=dict)
     unsearched: list[Cell] = field(default_factory=list)
 
@@ -209,7 +210,7 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
         texts = {spec: tuned[rollouts, specs].get(spec, untuned(spec)) for spec in specs}
         reasons = _reasons(campaign, name, texts, tree, budget, _place(folder, name, text))
         out.left_out.extend(
-            {"problem": name, "budget": text, "policy": name_of(spec), "why": why}
+            {"problem": name, "budget": text, "policy": name_of(spec), **why.as_json()}
             for spec, why in reasons.items()
             if why is not None
         )
@@ -241,25 +242,27 @@ def _end_with(starter: int) -> None:
 
 def _reasons(
     campaign: Campaign, problem: str, texts: dict[str, str], tree: BeliefTree, budget: Budget, kept: Path
-) -> dict[str, str | None]:
+) -> dict[str, Reason | None]:
     """Policy -> why it cannot be rehearsed here, None where it can.
 
     What was decided once is kept in a file: some reasons are times, which a resumed run measures anew.
     """
-    decided: dict[str, str | None] = read_json(kept) if kept.exists() else {}
+    found = read_json(kept) if kept.exists() else {}
+    decided = {spec: None if why is None else Reason.of(why) for spec, why in found.items()}
     for spec, text in texts.items():
         if spec not in decided:
             slowest = math.inf if spec in campaign.stops else campaign.slowest
             decided[spec] = _why_not(campaign, problem, text, tree, budget, slowest)
-    write_atomic(kept, (json.dumps(decided, indent=1) + "\n").encode())
+    told = {spec: None if why is None else why.as_json() for spec, why in decided.items()}
+    write_atomic(kept, (json.dumps(told, indent=1) + "\n").encode())
     return {spec: decided[spec] for spec in texts}
 
 
 def _why_not(
     campaign: Campaign, problem: str, text: str, tree: BeliefTree, budget: Budget, slowest: float
-) -> str | None:
-    if (reason := _unreadable(campaign, text, tree)) is not None:
-        return reason
+) -> Reason | None:
+    if (unreadable := _unreadable(campaign, text, tree)) is not None:
+        return Reason(unreadable)
     policy = make_policy(text)
     most = slowest / max(budget.room(0, 0.0), 1) if budget.seconds is None else budget.seconds
     try:
@@ -267,16 +270,16 @@ def _why_not(
         while len(tried) < 2 or (min(tried) > most and len(tried) < _TRIES and sum(tried) < _TRIED_SECONDS):
             tried.append(_one_choice(policy, tree))  # again, lest a busy moment of the machine decides
     except RefusedError as e:
-        return str(e)
+        return Reason(str(e))
     seconds = min(tried)
     if seconds > most:
-        return f"one choice takes {seconds * 1e3:.1f} ms"
+        return Reason.slow(CHOICE, seconds)
     if budget.seconds is None or campaign.dearest is None or not text.startswith("exact-"):
         return None
     choosing = budget.seconds * seconds / (seconds + budget.rollout_seconds)
     if problem in campaign.wide or choosing <= campaign.dearest:
         return None
-    return f"choosing takes {choosing * 1e3:.0f} ms a decision"
+    return Reason.slow(DECISION, choosing)
 
 
 def _unreadable(campaign: Campaign, text: str, tree: BeliefTree) -> str | None:

@@ -12,6 +12,7 @@ import numpy as np
 
 from distill.rehearse.aimed import BEST, LIMITS
 from distill.rehearse.campaign import Campaign, Results
+from distill.rehearse.left_out import CHOICE, Reason
 from distill.rehearse.loop import Budget
 from distill.rehearse.rehearsal import Cell, Compared, compare, interval, resampled
 from distill.rehearse.tuning import name_of, price_of
@@ -141,7 +142,7 @@ def aims(results: Results, rows: Iterable[Mapping[str, Any]]) -> dict[str, Any]:
     }  # fmt: skip
     late = {
         (x["problem"], str(Budget.parse(x["budget"]))) for x in results.left_out
-        if x["policy"] == _EXACT and x["why"].startswith("one choice takes")
+        if x["policy"] == _EXACT and Reason.of(x).too_slow == CHOICE
     }  # fmt: skip
     scorers = {BEST, *members(results.campaign, "scorer")}
     found: dict[str, Any] = {}

@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-import re
 from collections.abc import Mapping, Sequence
 from typing import Any, Final
 
 from distill.rehearse.aimed import BEST, SAVED
 from distill.rehearse.findings import GROUPS
+from distill.rehearse.left_out import Reason
 
 __all__ = [
     "aims_table", "cells_table", "every_cell", "left_out_lines", "short_table", "stopping_table",
@@ -46,7 +46,7 @@ def left_out_lines(summary: Figures) -> list[str]:
     """Who did not play, by reason: policies, and in how many places."""
     reasons: dict[tuple[str, str], int] = {}
     for row in summary["left_out"]:
-        key = row["policy"], re.sub(r" takes [\d.]+ ms.*", " takes too long", row["why"])
+        key = row["policy"], Reason.of(row).kind
         reasons[key] = reasons.get(key, 0) + 1
     return [f"Left out: {policy}, in {n} of the places: {why}." for (policy, why), n in reasons.items()]
 

@@ -11,6 +11,7 @@ from typing import Final
 from distill.errors import InputError
 from distill.files import write_atomic
 from distill.rehearse.aimed import BEST
+from distill.rehearse.left_out import Reason
 from distill.report import rehearsal_pictures as pictures
 from distill.report.elements import Child, element, estimate, number, section, table, text_of, word_list
 from distill.report.facts import Figures, gaps_refused
@@ -256,8 +257,8 @@ def _left_out(left_out: Sequence[Figures]) -> ET.Element:
     """A row a policy and reason; times, which differ from budget to budget, are told as one reason."""
     found: dict[str, dict[str, list[str]]] = {}
     for x in left_out:
-        slow = x["why"].startswith(("one choice takes", "choosing takes"))
-        why = "choosing takes too long" if slow else x["why"]
+        reason = Reason.of(x)
+        why = reason.why if reason.too_slow is None else "choosing takes too long"
         found.setdefault(f"{x['policy']}: {why}", {}).setdefault(x["problem"], []).append(x["budget"])
     rows: dict[str, Sequence[Child]] = {
         name: ["; ".join(f"{problem} ({', '.join(budgets)})" for problem, budgets in problems.items())]

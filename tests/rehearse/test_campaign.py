@@ -157,7 +157,17 @@ def test_dear_exact_choosing_is_left_to_wide_problems_and_that_is_kept(tmp_path)
     assert {c.problem for c in results.cells if c.policy == "exact_dynamic_rate"} == {names[0]}
     (found,) = results.left_out
     assert found["why"].startswith("choosing takes")
+    assert found["seconds"] > 0
     assert run(replace(campaign, dearest=9.0), tmp_path).left_out == [found]  # decided once
+    (place,) = tmp_path.glob("places/tree-3x2*.json")
+    before = {"thompson": None, "exact-dynamic-rate": "choosing takes 7 ms a decision"}
+    place.write_text(json.dumps(before))  # as earlier versions left it: words alone
+    (read,) = run(replace(campaign, dearest=9.0), tmp_path).left_out
+    assert (read["why"], read["too_slow"], read["seconds"]) == (
+        before["exact-dynamic-rate"],
+        "decision",
+        None,
+    )
 
 
 # --- what follows from the cells: from figures that are known ---------------------------------------

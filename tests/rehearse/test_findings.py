@@ -15,10 +15,17 @@ from ladder import CLOSED_FORM
 from distill.errors import InputError
 from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.findings import BEST, NO_SEARCH, places_of
+from distill.rehearse.left_out import CHOICE, DECISION, Reason
 from distill.rehearse.loop import Budget
 from distill.rehearse.rehearsal import Cell
 from distill.rehearse.results import summarise
-from distill.rehearse.results_tables import every_cell, short_table, stopping_table, time_table
+from distill.rehearse.results_tables import (
+    every_cell,
+    left_out_lines,
+    short_table,
+    stopping_table,
+    time_table,
+)
 from distill.rehearse.sheets import add_to_sheet, add_to_sheets, figures_of
 from distill.report.rehearsal_page import rehearsal_page, rehearsal_pictures, write_pictures
 
@@ -115,10 +122,34 @@ def test_where_no_search_pays_none_is_advised():
 
 
 def test_where_exact_choosing_is_over_the_budget_it_is_counted_apart():
-    late = {"problem": "taxi", "policy": "exact_dynamic_rate", "why": "one choice takes 99.0 ms"}
-    left_out = [{**late, "budget": "10ms@100us"}, {**late, "budget": "32"}]
-    aims = summarise(results([4, 0.5, 2], left_out))["aims"][BEST]["exact"]
-    assert (aims["cells"], aims["reached"], aims["no_choice"]) == (4, 4, 1)
+    slow = Reason.slow(CHOICE, 0.099)
+    reasons = {"data": slow.as_json(), "words, as before": {"why": slow.why}}
+    for told in [*reasons.values(), {**slow.as_json(), "why": "in other words"}]:
+        late = {"problem": "taxi", "policy": "exact_dynamic_rate", **told}
+        left_out = [{**late, "budget": "10ms@100us"}, {**late, "budget": "32"}]
+        aims = summarise(results([4, 0.5, 2], left_out))["aims"][BEST]["exact"]
+        assert (aims["cells"], aims["reached"], aims["no_choice"]) == (4, 4, 1)
+
+
+def test_reasons_of_time_are_told_once_whatever_the_time():
+    """Times are data, so words that have one of their own, or a file's name with one, stay as they are."""
+    place = {"problem": "taxi", "budget": "32", "policy": "p"}
+    other = "a simulator that takes 7 ms a step"
+    rows = [
+        {**place, **Reason.slow(CHOICE, 0.099).as_json()},
+        {**place, "why": "one choice takes 98.1 ms"},  # a folder of before
+        {**place, **Reason.slow(DECISION, 0.045).as_json()},
+        {**place, **Reason(other).as_json()},
+    ]
+    summary = summarise(results([4, 0.5, 2], rows))
+    assert left_out_lines(summary) == [
+        "Left out: p, in 2 of the places: one choice takes too long.",
+        "Left out: p, in 1 of the places: choosing takes too long.",
+        f"Left out: p, in 1 of the places: {other}.",
+    ]
+    page = rehearsal_page(summary)
+    assert page.count("p: choosing takes too long") == page.count(f"p: {other}") == 1
+    assert json.loads(json.dumps(summary))["left_out"][0]["seconds"] == 0.099
 
 
 def test_tables_say_what_the_summary_does():

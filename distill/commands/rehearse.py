@@ -101,7 +101,6 @@ def _rehearse(args: argparse.Namespace) -> None:
     from distill.rehearse.plans import plan
     from distill.rehearse.results import summarise, write_results
     from distill.rehearse.results_tables import (
-        aims_table,
         cells_table,
         left_out_lines,
         short_table,
@@ -136,7 +135,7 @@ def _rehearse(args: argparse.Namespace) -> None:
     drawn = [path.name for path in write_pictures(summary, args.out)]
     print(f"{args.out}: {len(results.cells)} cells of {campaign.seeds} decisions\n")
     tables = [] if args.full else [cells_table(summary)]
-    tables += [short_table(summary), aims_table(summary), left_out_lines(summary)]
+    tables += [short_table(summary), left_out_lines(summary)]
     print("\n\n".join("\n".join(lines) for lines in tables if lines))
     print(f"\nSee {args.out / 'rehearsal.html'}; figures in summary.json and cells.parquet, for other pages")
     print(f"{', '.join(['table.md', 'cells.md', *drawn])}.")

@@ -9,10 +9,7 @@ from distill.rehearse.aimed import BEST, SAVED
 from distill.rehearse.findings import GROUPS
 from distill.rehearse.left_out import Reason
 
-__all__ = [
-    "aims_table", "cells_table", "every_cell", "left_out_lines", "short_table", "stopping_table",
-    "time_table",
-]  # fmt: skip
+__all__ = ["cells_table", "every_cell", "left_out_lines", "short_table", "stopping_table", "time_table"]
 
 Figures = Mapping[str, Any]
 
@@ -22,24 +19,6 @@ _AGAINST: Final = {
     "exact": "exact rate, where choosing by it takes over a fifth of the time",
 }
 _NONE: Final = "-"
-
-
-def aims_table(summary: Figures) -> list[str]:
-    """How often each scorer reached its aims, as Markdown lines; none where that cannot be judged."""
-    if not summary["aims"]:
-        return []
-    lines = [
-        "| scorer | against | cells | at most | reached | never above | above | surely < 1 | surely > 1 |"
-    ]
-    lines.append("| --- | --- | --- | --- | --- | --- | --- | --- | --- |")
-    for policy, groups in summary["aims"].items():
-        for group, c in groups.items():
-            share = f"{c['reached']} ({c['reached'] / c['cells']:.0%})"
-            lines.append(
-                f"| {policy} | {group} | {c['cells']} | {c['at_most']} | {share} | {c['never_above']} "
-                f"| {c['beyond']} | {c['better']} | {c['worse']} |"
-            )
-    return lines
 
 
 def left_out_lines(summary: Figures) -> list[str]:

@@ -24,7 +24,7 @@ from distill.rehearse.plans import plan, quick
 from distill.rehearse.policy_specs import make_policy
 from distill.rehearse.rehearsal import Cell, rehearse
 from distill.rehearse.results import summarise, write_results
-from distill.rehearse.results_tables import aims_table, cells_table
+from distill.rehearse.results_tables import cells_table, short_table
 from distill.rehearse.tuning import TUNED, name_of
 from distill.report.rehearsal_page import rehearsal_page, rehearsal_pictures
 
@@ -241,7 +241,7 @@ def test_tables_show_every_cell():
     lines = cells_table(summary)
     assert len(lines) == 2 + len(TIMED)
     assert "0.80 [0.80, 0.80] (thompson)" in lines[3]
-    assert any("| s | sampling | 2 | 0.85 | 1 (50%) | 1.1 | 1 |" in line for line in aims_table(summary))
+    assert any("| 2 | <= 0.85 | 1 (50%) | > 1.1 | 1 |" in line for line in short_table(summary))
 
 
 # --- where rollouts are plenty ---------------------------------------------------------------------
@@ -342,6 +342,14 @@ def test_the_command_leaves_a_page_and_says_where(tmp_path, capsys):
     assert "| tree-2x2^1-noise1 | Gaussian | 6 |" in (tmp_path / "cells.md").read_text()
     assert command_line(["rehearse", "--out", str(tmp_path), *flags, "--scorer", FAST, "--estimate"]) == 0
     assert "minutes on one core" in capsys.readouterr().out
+
+
+def test_the_command_tells_the_aims_once(tmp_path, capsys):
+    """One form for all: with a single scorer its counts are those of the best one, and stood there twice."""
+    flags = ["--problem", "tree-2x2^1-noise1", "--budget", "2ms@1ms", "--policy", "thompson", "--seeds", "4"]
+    assert command_line(["rehearse", "--out", str(tmp_path), *flags, "--scorer", FAST]) == 0
+    told = [line for line in capsys.readouterr().out.splitlines() if re.search(r"\| (<= )?0\.85 \|", line)]
+    assert [line.split("|")[1] for line in told] == [" better of UCT and both Thompson samplings "]
 
 
 @pytest.mark.parametrize(

@@ -1,7 +1,9 @@
-"""Columns of a dataset's files: type, meaning and unit; floor 0."""
+"""Columns of a dataset's files: type, meaning and unit, and how a Parquet file tells them; floor 0."""
 
 from __future__ import annotations
 
+import json
+from collections.abc import Mapping
 from typing import Final
 
 import pyarrow as pa
@@ -15,6 +17,7 @@ __all__ = [
     "TREE_LABELS",
     "Described",
     "described_columns",
+    "described_schema",
 ]
 
 Described = dict[str, tuple[pa.DataType, str]]
@@ -90,3 +93,15 @@ def described_columns() -> dict[str, dict[str, str]]:
         "aside": TREE_COLUMNS | ASIDE_LABELS,
     }
     return {kind: {name: what for name, (_, what) in columns.items()} for kind, columns in kinds.items()}
+
+
+def described_schema(columns: Described, about: Mapping[str, str]) -> pa.Schema:
+    """A Parquet schema that tells each column's meaning and unit, in its field and all together.
+
+    about : what else stands in the file's metadata.
+    """
+    told = {name: what for name, (_, what) in columns.items()}
+    fields = [
+        pa.field(name, kind, metadata={"description": told[name]}) for name, (kind, _) in columns.items()
+    ]
+    return pa.schema(fields, metadata={**about, "columns": json.dumps(told)})

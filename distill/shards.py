@@ -35,6 +35,7 @@ from distill.dataset_columns import (
     TREE_LABELS,
     Described,
     described_columns,
+    described_schema,
 )
 from distill.errors import InputError, RefusedError
 from distill.files import read_json, sha256_of, write_atomic
@@ -210,14 +211,8 @@ def _list_column(arrays: Sequence[Any], kind: pa.DataType) -> pa.Array:
 
 
 def _table(columns: dict[str, Any], described: Described) -> pa.Table:
-    fields = [
-        pa.field(name, kind, metadata={"description": what}) for name, (kind, what) in described.items()
-    ]
-    about = {
-        "format": schema.DATASET_FORMAT,
-        "columns": json.dumps({n: w for n, (_, w) in described.items()}),
-    }
-    return pa.table({f.name: columns[f.name] for f in fields}, pa.schema(fields, metadata=about))
+    told = described_schema(described, {"format": schema.DATASET_FORMAT})
+    return pa.table({name: columns[name] for name in described}, told)
 
 
 # --- the manifest ----------------------------------------------------------------------------------

@@ -13,9 +13,11 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from distill import __version__
+from distill.dataset_columns import described_schema
 from distill.files import sha256_of, write_atomic
 from distill.rehearse import findings
 from distill.rehearse.campaign import Campaign, Results
+from distill.rehearse.cell_columns import CELL_COLUMNS
 from distill.rehearse.findings import plain
 from distill.rehearse.policy_specs import scorer_file
 from distill.rehearse.rehearsal import Cell, interval
@@ -69,11 +71,15 @@ def summarise(results: Results) -> dict[str, Any]:
 
 
 def write_results(results: Results, folder: Path) -> dict[str, Any]:
-    """Leave summary.json, cells.parquet and Markdown tables beside the decisions; returns the summary."""
+    """Leave summary.json, cells.parquet and Markdown tables beside the decisions; returns the summary.
+
+    The metadata of cells.parquet tell what each column means, and its unit.
+    """
     summary = summarise(results)
     write_atomic(folder / "summary.json", (json.dumps(summary, indent=1, allow_nan=False) + "\n").encode())
     buffer = io.BytesIO()
-    pq.write_table(pa.Table.from_pylist([_flat(row) for row in summary["rows"]]), buffer)
+    told = described_schema(CELL_COLUMNS, {"format": FORMAT})
+    pq.write_table(pa.Table.from_pylist([_flat(row) for row in summary["rows"]], told), buffer)
     write_atomic(folder / "cells.parquet", buffer.getvalue())
     write_atomic(folder / "table.md", ("\n".join(short_table(summary)) + "\n").encode())
     write_atomic(folder / "cells.md", ("\n".join(every_cell(summary)) + "\n").encode())

@@ -11,6 +11,7 @@ from pathlib import Path
 
 import duckdb
 import numpy as np
+import pyarrow.parquet as pq
 import pytest
 from ladder import CLOSED_FORM
 
@@ -18,7 +19,7 @@ from distill.cli import run as command_line
 from distill.errors import InputError
 from distill.rehearse.campaign import Campaign, Results, run
 from distill.rehearse.catalogue import make_problem
-from distill.rehearse.findings import BEST
+from distill.rehearse.findings import BEST, GROUPS
 from distill.rehearse.loop import Budget
 from distill.rehearse.plans import plan, quick
 from distill.rehearse.policy_specs import make_policy
@@ -98,6 +99,23 @@ def test_figures_are_readable_by_others(small):
     rows = duckdb.sql(f"select policy, measured from '{folder}/cells.parquet' order by all").fetchall()
     assert rows == sorted((row["policy"], row["measured"]) for row in summary["rows"])
     assert json.loads((folder / "summary.json").read_text()) == summary
+
+
+def test_columns_of_the_cells_tell_their_units(small):
+    """Every column that is written is described, and every description is of one that is written."""
+    folder, _, summary = small
+    found = pq.read_schema(folder / "cells.parquet")
+    told = {name: found.field(name).metadata[b"description"].decode() for name in found.names}
+    assert json.loads(found.metadata[b"columns"]) == told
+    units = {"regret": "u;", "choosing_us": "us;", "rollout_seconds": "s;", "static_ratio": "1;"}
+    assert all(told[name].startswith(unit) for name, unit in units.items())
+    flat = {name for row in summary["rows"] for name in row} - {"interval", "ratios"}
+    groups = {f"{group}_{key}" for row in summary["rows"] for group, x in row["ratios"].items() for key in x}
+    assert flat | groups | {"low", "high"} <= set(found.names)
+    assert flat | {"low", "high"} == {name for name in found.names if not name.startswith(tuple(GROUPS))}
+    empty = write_results(Results(SMALL), folder / "none")  # types are known where there are no rows
+    assert empty["rows"] == []
+    assert pq.read_schema(folder / "none" / "cells.parquet").equals(found, check_metadata=True)
 
 
 def test_the_page_holds_every_cell_and_asks_for_nothing(small):

@@ -39,7 +39,7 @@ class Reason:
         >>> Reason.of("choosing takes 45 ms a decision")
         Reason(why='choosing takes 45 ms a decision', too_slow='decision', seconds=None)
         """
-        about = {"why": found} if isinstance(found, str) else found
+        about: Mapping[str, Any] = {"why": found} if isinstance(found, str) else found
         why = about["why"]
         begun = next((what for what, words in _BEGINS.items() if why.startswith(words)), None)
         return cls(why, about.get("too_slow", begun), about.get("seconds"))

@@ -24,7 +24,7 @@ from distill.errors import InputError
 from distill.family import Family
 from distill.files import sha256_of, write_atomic
 from distill.generate import held
-from distill.labelling import Asked
+from distill.labelling import OWN_BATCH, Asked
 from distill.metrics import picks
 from distill.recorded import label
 from distill.runtime import Scorer
@@ -186,7 +186,7 @@ def _read_sheet(scorer: Path) -> dict[str, Any]:
 def _asked(value: Mapping[str, Any]) -> Asked:
     batch = value["batch"]
     horizon = None if value["horizon"] == VARIES else float(value["horizon"])
-    return Asked(horizon=horizon, batch=None if batch is None else int(batch))
+    return Asked(horizon, None if batch is None else OWN_BATCH if batch == VARIES else int(batch))
 
 
 def sample_trees(

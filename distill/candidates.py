@@ -19,7 +19,17 @@ from distill.backup import backup_of
 from distill.errors import InputError
 from distill.files import sha256_of
 from distill.metrics import Groups
-from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE, RECORD, VARIES, WIN_LOSS_TABLE, InputKind
+from distill.scorer_inputs import (
+    ANY_BATCH,
+    ANY_HORIZON,
+    BOTH_VARY,
+    LEAF_TABLE,
+    RECORD,
+    SCALAR_OF,
+    VARIES,
+    WIN_LOSS_TABLE,
+    InputKind,
+)
 from distill.shards import MANIFEST, read_candidates, read_manifest, read_trees
 from distill.tree import BeliefTree, Floats
 
@@ -54,14 +64,15 @@ class Candidates:
 
     @classmethod
     def read(
-        cls, dataset: str | os.PathLike[str], *, any_horizon: bool = False
+        cls, dataset: str | os.PathLike[str], *, like: InputKind | None = None
     ) -> tuple[Candidates, dict[str, Any]]:
         """The candidates of a dataset folder, and what they are: `value` asked for, and `data` source.
 
         Independent leaves of one belief under decision nodes make leaf tables, other trees records, which
-        a backup at the value's horizon fills. Gaussian leaf tables may have a horizon each: then it is a
-        column, and in the value it "varies"; with any_horizon even where it is one for all. Raises InputError
-        where other values of more than one kind are mixed or no `remaining` is given.
+        a backup at the value's horizon fills. Gaussian leaf tables may have a horizon each, or a batch: then
+        it is a column, and in the value it "varies"; where `like`, the input of a scorer, has it, even where
+        it is one for all. Raises InputError where other values of more than one kind are mixed or no
+        `remaining` is given.
         """
         folder = Path(dataset)
         manifest = read_manifest(folder)
@@ -70,21 +81,13 @@ class Candidates:
             raise InputError(str(folder), "must hold at least one labelled tree")
         if "remaining" not in rows or np.isnan(rows["remaining"]).any():
             raise InputError(f"{folder}: remaining", "must be given for every tree")
-        kind, h = _kind_of(rows), rows["horizon"]
-        if kind is LEAF_TABLE and (any_horizon or np.any(h != h[0])):
-            kind = ANY_HORIZON
-        batch = rows.get("batch", np.array([np.nan]))
-        for name, column in (("horizon", h), ("batch", batch)):
-            different = np.unique(column)
-            if len(different) > 1 and not (name == "horizon" and kind.has_horizon):
-                raise InputError(
-                    f"{folder}: {name}", "must be one for the whole dataset", different[:3].tolist()
-                )
+        h, batch = rows["horizon"], rows.get("batch", np.array([np.nan]))
         is_rate = bool(np.isnan(batch[0]))
+        kind = _with_varying(folder, _kind_of(rows), {"horizon": h, "batch": batch}, like)
         about: dict[str, Any] = {
             "value": {
-                "horizon": VARIES if kind.has_horizon else "inf" if math.isinf(h[0]) else float(h[0]),
-                "batch": None if is_rate else int(batch[0]),
+                "horizon": VARIES if kind is ANY_HORIZON else "inf" if math.isinf(h[0]) else float(h[0]),
+                "batch": VARIES if kind is ANY_BATCH else None if is_rate else int(batch[0]),
             },
             "data": {
                 "source": manifest["source"]["name"],
@@ -100,7 +103,10 @@ class Candidates:
         if kind is RECORD:
             columns = {**_records(folder, rows["tree"], float(h[0])), "remaining": rows["remaining"]}
         else:
-            columns = {name: rows[name] for name in kind.inputs}
+            columns = {name: rows[name] for name in (*kind.columns, "remaining")}
+            columns |= {
+                name: rows[key].astype(float) for key, name in SCALAR_OF.items() if name in kind.varies
+            }
             columns["action"] = columns["action"].astype(np.int64)
         columns["remaining"] = columns["remaining"].astype(float)
         about["input"] = kind.name
@@ -181,6 +187,28 @@ def _kind_of(rows: Mapping[str, NDArray[Any]]) -> InputKind:
         if rows.keys() >= set(needed) and not any(np.isnan(rows[name]).any() for name in needed):
             return kind
     return RECORD
+
+
+def _with_varying(
+    folder: Path, kind: InputKind, value: Mapping[str, Floats], like: InputKind | None
+) -> InputKind:
+    """The kind with the part of the value that differs from tree to tree; InputError where it has no place.
+
+    value : horizon and batch of each row, NaN for a rate.
+    """
+    differs = {key: len(np.unique(x)) > 1 for key, x in value.items()}
+    if kind is LEAF_TABLE:
+        if all(differs.values()):
+            raise InputError(f"{folder}: horizon and batch", BOTH_VARY)
+        if differs["horizon"] or (like is ANY_HORIZON and not differs["batch"]):
+            return ANY_HORIZON
+        if differs["batch"] or (like is ANY_BATCH and not np.isnan(value["batch"][0])):
+            return ANY_BATCH
+    for key, x in value.items():
+        if differs[key]:
+            found = np.unique(x)[:3].tolist()
+            raise InputError(f"{folder}: {key}", "must be one for the whole dataset", found)
+    return kind
 
 
 def _records(folder: Path, tree: NDArray[np.int64], horizon: float) -> dict[str, Floats]:

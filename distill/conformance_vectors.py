@@ -25,6 +25,7 @@ from distill.conformance import FORMAT, answered
 from distill.family import draw, load_family, parse_family
 from distill.files import write_atomic
 from distill.generate import generate
+from distill.labelling import OWN_BATCH, Asked
 from distill.record import to_record
 from distill.sample_data import family_path
 from distill.ship import ship
@@ -38,10 +39,14 @@ _SEED: Final = 40  # any; fixed
 _SCORERS: Final = {
     "leaf-table.onnx": "cold-store",
     "any-horizon.onnx": "cold-store",
+    "any-batch.onnx": "cold-store",
     "win-loss.onnx": "on-time",
     "record.onnx": "crossing-traffic",
 }
-_HORIZONS: Final = "horizon = { choice = [0, 4, inf] }"  # budget of the family of any-horizon.onnx
+_VARYING: Final = {  # what the family's budget says more, and the batch that is asked for
+    "any-horizon.onnx": ("horizon = { choice = [0, 4, inf] }", None),
+    "any-batch.onnx": ("batch = { choice = [1, 4, 32] }", OWN_BATCH),
+}
 _TREES: Final = 100
 _CALLS: Final = 3
 
@@ -148,19 +153,20 @@ def _family_cases() -> Iterator[dict[str, Any]]:
 
 
 def _scorer(path: Path, name: str) -> dict[str, Any]:
-    family = load_family(family_path(name))
-    if path.name == "any-horizon.onnx":
-        family = parse_family(family.text.replace("[budget]", f"[budget]\n{_HORIZONS}").encode())
+    family, batch = load_family(family_path(name)), None
+    if path.name in _VARYING:
+        more, batch = _VARYING[path.name]
+        family = parse_family(family.text.replace("[budget]", f"[budget]\n{more}").encode())
     with tempfile.TemporaryDirectory() as work:
         data, trained = Path(work) / "data", Path(work) / "trained"
-        generate(family, data, trees=_TREES, seed=_SEED)
+        generate(family, data, trees=_TREES, seed=_SEED, asked=Asked(batch=batch))
         train(data, trained, seed=_SEED, recipes=["linear"], n_boot=10)
         ship(trained, Path(work) / path.name)
         write_atomic(path, (Path(work) / path.name).read_bytes())
         rows = Candidates.read(data)[0]
     trees = list(zip(rows.groups.starts, rows.groups.sizes, strict=True))
-    if rows.kind.has_horizon:  # one of each
-        first = np.unique(rows.columns["horizon"][rows.groups.starts], return_index=True)[1]
+    for varying in rows.kind.varies:  # one of each
+        first = np.unique(rows.columns[varying][rows.groups.starts], return_index=True)[1]
         trees = [trees[i] for i in first]
     calls = []
     for a, n in trees[:_CALLS]:

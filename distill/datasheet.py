@@ -16,8 +16,6 @@ def datasheet(manifest: dict[str, Any], columns: dict[str, dict[str, str]]) -> s
     columns : file kind -> column -> meaning and unit.
     """
     source, asked, totals = manifest["source"], manifest["asked"], manifest["totals"]
-    rate = asked["batch"] == "rate"
-    what = "rate (best VOC a rollout over all batches)" if rate else f"VOC of {asked['batch']} rollouts"
     page = f"""\
 # Labelled belief trees: {source["name"]}
 
@@ -26,7 +24,7 @@ computation and an error bound.
 
 - **Trees**: {_origin(manifest)}. SHA-256 of the source: `{source["sha256"]}`.
 - **Sampling**: {_sampling(manifest["sampling"])}
-- **Label**: {what}; horizon: {_horizon(asked["value"])}; rollouts left: {asked["remaining"]}.
+- **Label**: {_label(asked)}; horizon: {_horizon(asked["value"])}; rollouts left: {asked["remaining"]}.
 - **Tolerance**: {_tolerance(asked["tolerance"])}.
 - **Kept aside**: {totals["aside"]:,} trees without a label good enough, with the reason, in
   `aside-*.parquet`.
@@ -43,6 +41,15 @@ computation and an error bound.
         lines += ["", f"## {kind}-*.parquet", "", "| column | meaning and unit |", "| --- | --- |"]
         lines += [f"| `{name}` | {text} |" for name, text in described.items()]
     return page + "\n".join(lines) + "\n"
+
+
+def _label(asked: dict[str, Any]) -> str:
+    batch = asked["batch"]
+    if batch == "rate":
+        return "rate (best VOC a rollout over all batches)"
+    if isinstance(batch, str):
+        return "VOC of the tree's own batch, 1 where it states none"
+    return f"VOC of {batch} rollouts"
 
 
 def recorded_trees(manifest: dict[str, Any]) -> tuple[int, int]:

@@ -28,7 +28,8 @@ def draw(family: Family, seed: int, index: int) -> BeliefTree:
     """Tree number `index` of the family under `seed`: the same bits whoever draws it, in any order.
 
     seed, index : whole numbers >= 0. The tree's `id` is the index; `remaining` is what is left of the
-    drawn budget, at least 1; `count` is rollouts so far.
+    drawn budget, at least 1; `count` is rollouts so far; `horizon` and `batch` are drawn
+    where the family has them.
 
     >>> family = parse_family(b'''
     ... format = "tree-family/1"
@@ -60,6 +61,7 @@ def draw(family: Family, seed: int, index: int) -> BeliefTree:
     if rng.random() < family.number("budget.fresh"):
         used = 0
     horizon = family["budget.horizon"].one(rng) if "budget.horizon" in family.fields else None
+    batch = int(family["budget.batch"].one(rng)) if "budget.batch" in family.fields else None
     search = Search(BeliefTree(parent, kind, reward, discount, prob, cost=cost, **columns))
     search.run(
         truth,
@@ -71,7 +73,7 @@ def draw(family: Family, seed: int, index: int) -> BeliefTree:
         switch=family.number("search.switch"),
         exploration=family["search.exploration"].one(rng),
     )
-    return search.tree(remaining=budget - used, horizon=horizon, id=index)
+    return search.tree(remaining=budget - used, horizon=horizon, batch=batch, id=index)
 
 
 def _shape(family: Family, rng: np.random.Generator) -> tuple[Ints, NDArray[np.int8], Floats]:

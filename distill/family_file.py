@@ -130,6 +130,7 @@ _COMMON: Final = {
         "used": _Field(None, 0, 1),
         "fresh": _Field(0, 0, 1, scalar=True),
         "horizon": _Field(None, 0, 1e9, infinite=True),
+        "batch": _Field(None, 1, 1e6, whole=True),
     },
     "search": _SEARCH,
 }
@@ -159,7 +160,7 @@ FIELDS: Final[dict[str, dict[str, dict[str, _Field]]]] = {
     },
 }
 _OPTIONAL_SECTIONS: Final = ("edge", "chance", "cost", "correlation")
-_OPTIONAL_FIELDS: Final = ("budget.horizon",)
+_OPTIONAL_FIELDS: Final = ("budget.horizon", "budget.batch")
 
 
 @dataclass(frozen=True)

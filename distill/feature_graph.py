@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from distill import features, features_any_horizon, features_record, features_win_loss
 from distill.errors import InputError
 from distill.feature_nodes import FeatureMatrix
-from distill.scorer_inputs import ANY_HORIZON, KINDS, LEAF_TABLE, RECORD, InputKind
+from distill.scorer_inputs import ANY_HORIZON, KINDS, LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
 
 __all__ = ["FeatureGraph", "FeatureMatrix"]
 
@@ -41,14 +41,14 @@ class FeatureGraph:
 
     @classmethod
     def of_value(cls, value: Mapping[str, Any], kind: InputKind = LEAF_TABLE) -> FeatureGraph:
-        """The graph for a dataset's `value`: its horizon, and its batch or None for the rate."""
+        """The graph for a dataset's `value`: its horizon, and its batch or None for the rate; or VARIES."""
         batch = value["batch"]
         if kind is ANY_HORIZON:
             return cls(features_any_horizon.build_graph(batch=batch))
         if kind is RECORD:
             return cls(features_record.build_graph(batch=batch))
         horizon = float(value["horizon"])
-        build = features.build_graph if kind is LEAF_TABLE else features_win_loss.build_graph
+        build = features_win_loss.build_graph if kind is WIN_LOSS_TABLE else features.build_graph
         return cls(build(horizon=horizon, batch=batch))
 
     def matrix(self, columns: Mapping[str, Any]) -> FeatureMatrix:

@@ -12,7 +12,7 @@ from onnx import TensorProto, helper
 
 from distill.closed_form import PEAK
 from distill.onnx_nodes import IR_VERSION, OPSET, Nodes, typed
-from distill.scorer_inputs import InputKind
+from distill.scorer_inputs import VARIES, InputKind
 from distill.tree import Floats
 
 __all__ = [
@@ -103,7 +103,7 @@ def normal_table(g: Nodes, m: str, s: str, points: int, *, tops: bool = False) -
 
 
 class Start:
-    """The start value for a threshold t0, shape (1, n), at the best batch or a given one.
+    """The start value for a threshold t0, shape (1, n), at the best batch, a given one, or (VARIES) a call's.
 
     rough : take k = u^2 n / v, u = t0 / s, in place of the fitted peak; only the batch that is told comes
         from the peak then. What that costs is smooth in the features, and learned; a pick takes four nodes
@@ -111,12 +111,17 @@ class Start:
     """
 
     def __init__(
-        self, g: Nodes, t0: str, s: str, noise: str, batch: int | None, *, rough: bool = False
+        self, g: Nodes, t0: str, s: str, noise: str, batch: int | str | None, *, rough: bool = False
     ) -> None:
         self.g = g
         self.s = s
         self.rate = batch is None
-        if batch is not None:
+        self.whole = batch == VARIES
+        if batch == VARIES:
+            self.k = g("Add", g("Mul", t0, g.double(0.0)), "batch_size")
+            self.s_k = _moved(g, s, self.k, noise)
+            self.told = self.k
+        elif batch is not None:
             # "t0" gives the constant its shape.
             self.k = g("Add", g("Mul", t0, g.double(0.0)), g.double(float(batch)))
             self.s_k = _moved(g, s, self.k, noise)
@@ -147,7 +152,8 @@ class Start:
     ) -> onnx.ModelProto:
         """The graph with its outputs; `columns` are rows, shape (1, n)."""
         rows = self.g("Concat", *columns, axis=0)
-        batch = self.g("Add", self.told, self.g.double(0.5))
+        # Half of one rounds the others; beyond 2^52 it would make a whole number another.
+        batch = self.told if self.whole else self.g("Add", self.told, self.g.double(0.5))
         return finished(self.g, kind, names, rows, self.unit, value, batch, self.s)
 
 

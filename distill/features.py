@@ -27,7 +27,8 @@ Nothing changes the choice where y <= 0: the siblings alone beat the rival.
 
 at k = t0^2 n / v^2, from 1 to the rollouts left: short of the largest over k by 18 % at most, so right in its
 exponent however small it is; the learner sees what is left, a factor near 1.
-Where a fixed batch is asked for, it stands for k, and its whole value is meant.
+Where a batch is asked for, one for all calls or each call's own, it stands for k, and its whole value is
+meant. Both see the same columns: a batch decides nothing but s_k.
 
 *Static values.* For h = 0, means are what they will be: the rival of a leaf is the best other leaf, and the
 start is exact but for the fit of f. Finite horizons have a module of their own.
@@ -46,7 +47,7 @@ import onnx
 from distill import features_any_horizon
 from distill.feature_nodes import LARGE, TINY, Start, best_other, moments, normal_table, threshold_shift
 from distill.onnx_nodes import Nodes
-from distill.scorer_inputs import LEAF_TABLE
+from distill.scorer_inputs import ANY_BATCH, LEAF_TABLE, VARIES, InputKind
 
 __all__ = ["FEATURE_NAMES", "build_graph"]
 
@@ -58,14 +59,16 @@ FEATURE_NAMES: Final = (
 _STATIC_NAMES: Final = ("threshold", "step")
 
 
-def build_graph(*, points: int = 12, horizon: float = math.inf, batch: int | None = None) -> onnx.ModelProto:
+def build_graph(
+    *, points: int = 12, horizon: float = math.inf, batch: int | str | None = None
+) -> onnx.ModelProto:
     """The feature graph of the Gaussian leaf table, one tree a call.
 
     Inputs, shape (n,) unless said: mean, var, noise_var, gain, offset, cost (double), action (int64,
     0 to n - 1), remaining (double, scalar). Outputs as in FeatureMatrix, named features, unit,
     first_order, batch. points : cells of the table. horizon, batch : of the value that is learned; None
-    is the rate. Static features have no table: see `_static`; those of finite horizons are made by
-    `features_any_horizon`.
+    is the rate, VARIES the batch that the input `batch_size` (double, scalar) brings with each call. Static
+    features have no table: see `_static`; those of finite horizons are made by `features_any_horizon`.
     """
     if 0 < horizon < math.inf:
         return features_any_horizon.build_graph(points=points, batch=batch, horizon=horizon)
@@ -90,10 +93,14 @@ def build_graph(*, points: int = 12, horizon: float = math.inf, batch: int | Non
     t0 = g("Add", g("Sub", rival, m), shift, out="t0")
     start = Start(g, t0, s, noise, batch, rough=True)
     columns = (start.z, help_, g("Div", start.s_k, theta))
-    return start.model(start.value(slope), columns, FEATURE_NAMES, LEAF_TABLE)
+    return start.model(start.value(slope), columns, FEATURE_NAMES, _kind(batch))
 
 
-def _static(g: Nodes, m: str, s: str, noise: str, batch: int | None) -> onnx.ModelProto:
+def _kind(batch: int | str | None) -> InputKind:
+    return ANY_BATCH if batch == VARIES else LEAF_TABLE
+
+
+def _static(g: Nodes, m: str, s: str, noise: str, batch: int | str | None) -> onnx.ModelProto:
     """For h = 0: the rival of a leaf is the best other leaf, and theta is s."""
     best = g("ReduceMax", m, keepdims=1)
     column = g("Unsqueeze", m, g.whole(1))
@@ -104,4 +111,4 @@ def _static(g: Nodes, m: str, s: str, noise: str, batch: int | None) -> onnx.Mod
     rival = g("Reshape", g("Where", is_best, second, best), g.whole(-1))
     row = g("Unsqueeze", g("Sub", rival, m), g.whole(0))
     start = Start(g, row, s, noise, batch)
-    return start.model(start.value(None), (start.z, g("Div", start.s_k, s)), _STATIC_NAMES, LEAF_TABLE)
+    return start.model(start.value(None), (start.z, g("Div", start.s_k, s)), _STATIC_NAMES, _kind(batch))

@@ -33,9 +33,10 @@ from typing import Final
 
 import onnx
 
+from distill.errors import InputError
 from distill.feature_nodes import LARGE, TINY, Start, loss_bottom, moments, normal_table, threshold_shift
 from distill.onnx_nodes import Nodes
-from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE
+from distill.scorer_inputs import ANY_BATCH, ANY_HORIZON, BOTH_VARY, LEAF_TABLE, VARIES
 
 __all__ = ["FEATURE_NAMES", "build_graph"]
 
@@ -52,20 +53,23 @@ _SURE: Final = 0.999  # mean of R over the table, from which the siblings lie be
 
 
 def build_graph(
-    *, points: int = 16, batch: int | None = None, horizon: float | None = None
+    *, points: int = 16, batch: int | str | None = None, horizon: float | None = None
 ) -> onnx.ModelProto:
     """The feature graph of the Gaussian leaf table and a horizon, one tree a call.
 
     Inputs and outputs as for `features.build_graph`; with horizon None an input of its own brings it (double,
     scalar, from 0 to infinity). points : cells of the table. batch : of the value that is learned; None is
-    the rate.
+    the rate, VARIES that of each call, see `features.build_graph`. Raises InputError where both come with the
+    call.
     """
+    if horizon is None and batch == VARIES:
+        raise InputError("horizon and batch", BOTH_VARY)
     g = Nodes("f")
     if horizon is None:
         h = g("Clip", "horizon", g.scalar(TINY), g.scalar(LARGE))
     else:
         h = g.double(min(max(horizon, TINY), LARGE))
-    kind = ANY_HORIZON if horizon is None else LEAF_TABLE
+    kind = ANY_HORIZON if horizon is None else ANY_BATCH if batch == VARIES else LEAF_TABLE
     m = g("Add", g("Mul", "gain", "mean"), "offset")
     v = g("Max", g("Mul", "var", g("Mul", "gain", "gain")), g.double(TINY))
     noise = g("Div", "noise_var", "var", out="noise_ratio")

@@ -45,6 +45,18 @@ class HeldLeaves:
         for name, x in values.items():
             columns[name][leaf] = x
 
+    def change(self, **numbers: float) -> None:
+        """For calls to come, other numbers that a call gives beside `remaining`: horizon or batch_size.
+
+        InputError, and nothing is written, for a name that this input has not or no number.
+        """
+        for name, x in numbers.items():
+            if name not in self._buffers.varying:
+                raise InputError(name, f"is no number of a call of a {self._buffers.kind.name}")
+            if type(x) not in (int, float) and number_array(name, x, "f").size != 1:
+                raise InputError(name, "must be one number", x)
+        self._buffers.vary({name: float(number_array(name, x, "f").item()) for name, x in numbers.items()})
+
     def pick(self, *, remaining: float, deadline: float | None = None) -> int:
         """As `Scorer.pick`, with `remaining` rollouts left."""
         self._buffers.leave(remaining)

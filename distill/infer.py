@@ -203,7 +203,7 @@ def _discount(discounts: Floats, group: Sequence[int], seed: int) -> dict[str, E
 def _budget(
     trees: Sequence[BeliefTree], group: Sequence[int], seed: int
 ) -> tuple[dict[str, str], dict[str, Estimated]]:
-    """Budget of the whole search, share of it spent, probability of a fresh tree, and horizon."""
+    """Budget of the whole search, share of it spent, probability of a fresh tree, horizon and batch."""
     rows = [(g, t) for g, t in zip(group, trees, strict=True) if t.remaining is not None]
     member = np.unique([g for g, _ in rows], return_inverse=True)[1].tolist()
     spent = np.array([0.0 if t.count is None else float(t.count.sum()) for _, t in rows])
@@ -216,6 +216,8 @@ def _budget(
     horizons = np.array([math.inf if t.horizon is None else t.horizon for t in trees])
     if np.all(np.isfinite(horizons)) or 1 < len(np.unique(horizons)) <= MOST_HORIZONS:
         toml["horizon"] = field_text(horizons, whole=trees[0].belief == "win_loss")
+    if any(t.batch is not None for t in trees):
+        toml["batch"] = field_text([1 if t.batch is None else t.batch for t in trees], whole=True)
     logs, shares = np.log(whole), spent / whole
     sums = by_group([{"n": 1.0, "log": a, "share": b} for a, b in zip(logs, shares, strict=True)], member)
     found = bootstrap(

@@ -14,7 +14,7 @@ import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 from distill import shards, voc
 from distill.errors import InputError, RefusedError, ToleranceError
@@ -24,7 +24,11 @@ from distill.shards import Labelled
 from distill.sources import Batch
 from distill.tree import BeliefTree
 
-__all__ = ["Asked", "Shard", "code_versions", "label_shard"]
+__all__ = ["OWN_BATCH", "Asked", "Shard", "code_versions", "label_shard"]
+
+
+OWN_BATCH: Final = "tree"  # asks for the value of each tree's own batch
+_OF_TREE: Final = "the tree's"  # in manifests
 
 
 @dataclass(frozen=True)
@@ -32,21 +36,26 @@ class Asked:
     """What is asked of every tree; None takes the tree's own scalar.
 
     By default the rate, at the tree's own horizon (dynamic where it has none) and `remaining`.
-    horizon : h; 0 static, inf dynamic. batch : rollouts a candidate, instead of the rate.
+    horizon : h; 0 static, inf dynamic. batch : rollouts a candidate, instead of the rate; OWN_BATCH for each
+    tree's own, 1 where it has none.
     remaining : rollouts left. tolerance : largest error, as a share of the tree's scale.
     """
 
     horizon: float | None = None
-    batch: int | None = None
+    batch: int | str | None = None
     remaining: int | None = None
     tolerance: float | None = None
+
+    def __post_init__(self) -> None:
+        if isinstance(self.batch, str) and self.batch != OWN_BATCH:
+            raise InputError("batch", f"must be a whole number from 1 to 2^53 or {OWN_BATCH!r}", self.batch)
 
     def query(self, tree: BeliefTree) -> Query:
         """The query for one tree."""
         return resolve(
             tree,
             horizon=self.horizon,
-            batch=self.batch,
+            batch=None if isinstance(self.batch, str) else self.batch,
             rate=self.batch is None,
             remaining=self.remaining,
             tolerance=self.tolerance,
@@ -56,9 +65,9 @@ class Asked:
         """As the manifest keeps it."""
         h = self.horizon
         return {
-            "value": "the tree's" if h is None else "inf" if math.isinf(h) else float(h),
-            "batch": "rate" if self.batch is None else self.batch,
-            "remaining": "the tree's" if self.remaining is None else self.remaining,
+            "value": _OF_TREE if h is None else "inf" if math.isinf(h) else float(h),
+            "batch": "rate" if self.batch is None else _OF_TREE if self.batch == OWN_BATCH else self.batch,
+            "remaining": _OF_TREE if self.remaining is None else self.remaining,
             "tolerance": self.tolerance,
         }
 
@@ -68,12 +77,14 @@ class Asked:
 
         >>> Asked.described(Asked(horizon=math.inf, batch=2).describe())
         Asked(horizon=inf, batch=2, remaining=None, tolerance=None)
+        >>> Asked.described(Asked(batch=OWN_BATCH).describe()).batch
+        'tree'
         """
         h, batch, remaining = kept["value"], kept["batch"], kept["remaining"]
         return cls(
-            None if h == "the tree's" else float(h),
-            None if batch == "rate" else batch,
-            None if remaining == "the tree's" else remaining,
+            None if h == _OF_TREE else float(h),
+            None if batch == "rate" else OWN_BATCH if batch == _OF_TREE else batch,
+            None if remaining == _OF_TREE else remaining,
             kept["tolerance"],
         )
 

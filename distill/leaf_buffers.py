@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from distill import schema
 from distill.errors import InputError
-from distill.scorer_inputs import InputKind
+from distill.scorer_inputs import SCALAR_RULES, InputKind
 
 __all__ = ["MAX_LEAVES", "LeafBuffers", "number_array", "number_arrays", "number_scalars"]
 
@@ -32,7 +32,8 @@ class LeafBuffers:
 
     session, picker : of the whole file and of its pick alone; None where there is no file. They read and
     write the same arrays. `columns` are views into `floats`, so that one copy and one check serve all of
-    them. Kinds of input without `action` or `horizon` keep theirs at 0.
+    them. `varying` are the numbers of a call beside `remaining`. Kinds of input without `action` keep theirs
+    at 0.
     """
 
     def __init__(self, n: int, kind: InputKind, session: Any, picker: Any) -> None:
@@ -42,13 +43,14 @@ class LeafBuffers:
         self.floats = np.zeros(width * n)
         self._is_finite = np.zeros(width * n, dtype=bool)
         self.action = np.zeros(n, dtype=np.int64)
-        self.remaining, self.horizon = np.zeros(()), np.zeros(())
+        self.remaining = np.zeros(())
+        self.varying = {name: np.zeros(()) for name in kind.varies}
         self.columns = dict(zip(kind.floats, self.floats.reshape(width, n), strict=True))
         self.out: dict[str, NDArray[Any]] = {
             name: np.zeros(() if name in _SCALARS else n, dtype=kind) for name, kind in _OUTPUTS.items()
         }
         self.pick, self.in_range = self.out["pick"], self.out["in_range"]
-        self.scalars_hold = True
+        self.scalars_hold = self._varying_hold = True
         self.answered = False
         self.has_bound = session is not None and "voc_high" in {o.name for o in session.get_outputs()}
         self.binding, self.pick_binding = self._bound(session), self._bound(picker)
@@ -58,11 +60,9 @@ class LeafBuffers:
         if session is None:
             return None
         binding = session.io_binding()
-        inputs: dict[str, NDArray[Any]] = {**self.columns, "remaining": self.remaining}
+        inputs: dict[str, NDArray[Any]] = {**self.columns, "remaining": self.remaining, **self.varying}
         if self.kind.has_action:
             inputs["action"] = self.action
-        if self.kind.has_horizon:
-            inputs["horizon"] = self.horizon
         for name, x in inputs.items():
             binding.bind_input(name, "cpu", 0, x.dtype.type, list(x.shape), x.ctypes.data)
         for output in session.get_outputs():
@@ -87,14 +87,19 @@ class LeafBuffers:
             if action.shape != shape or action.dtype.type is _TRUTH:
                 raise ValueError
             np.copyto(self.action, action, casting="same_kind")
-            if kind.has_horizon:
-                horizon = columns["horizon"]
-                if type(horizon) not in (int, float) or not horizon >= 0:
-                    raise ValueError
-                self.horizon[()] = horizon
+            if kind.varies:
+                self._fill_varying(columns)
         np.concatenate(floats, out=self.floats, casting="same_kind")
         self.remaining[()] = remaining
         self.scalars_hold = True
+
+    def _fill_varying(self, columns: Mapping[str, Any]) -> None:
+        for name, number in self.varying.items():
+            x = columns[name]
+            if type(x) not in (int, float) or not SCALAR_RULES[name].holds(x):
+                raise ValueError
+            number[()] = x
+        self._varying_hold = True
 
     def fill_with_care(self, arrays: dict[str, NDArray[Any]], scalars: dict[str, float]) -> None:
         """Copy arrays and scalars in that are known to be numbers of the right shapes."""
@@ -104,9 +109,14 @@ class LeafBuffers:
         if self.kind.has_action:
             np.copyto(self.action, arrays["action"], casting="same_kind")
         self.remaining[()] = scalars["remaining"]
-        self.horizon[()] = scalars.get("horizon", 0.0)
-        # NaN is never at least 0. Kinds without a horizon keep 0 there.
-        self.scalars_hold = bool(0 <= self.remaining <= schema.MAX_ROLLOUTS and self.horizon >= 0)
+        self.vary({name: scalars[name] for name in self.varying})
+
+    def vary(self, scalars: Mapping[str, float]) -> None:
+        """Other numbers of a call beside `remaining` for the same leaves, by name."""
+        for name, x in scalars.items():
+            self.varying[name][()] = x
+        self._varying_hold = all(SCALAR_RULES[name].holds(x.item()) for name, x in self.varying.items())
+        self.scalars_hold = self._varying_hold and SCALAR_RULES["remaining"].holds(self.remaining.item())
 
     def leave(self, remaining: Any) -> None:
         """Other rollouts left for the same leaves; InputError for what is no number."""
@@ -115,8 +125,13 @@ class LeafBuffers:
             if found.size != 1:
                 raise InputError("remaining", "must be one number", found.shape)
             remaining = found.item()
-        self.scalars_hold = bool(0 <= remaining <= schema.MAX_ROLLOUTS and self.horizon >= 0)
+        self.scalars_hold = bool(0 <= remaining <= schema.MAX_ROLLOUTS and self._varying_hold)
         self.remaining[()] = min(remaining, 2.0**1000)  # a whole number may be too large for a float
+
+    @property
+    def batch_size(self) -> int:
+        """The batch that the call gives, where its kind has one and it may be so; else 0."""
+        return int(self.varying["batch_size"]) if "batch_size" in self.varying and self._varying_hold else 0
 
     def finite(self) -> bool:
         """Whether every number of the columns is finite, and the scalars are what they may be."""
@@ -138,9 +153,9 @@ class LeafBuffers:
                 raise InputError(f"{name}[{row}]", rule, value.item())
             usable &= ok
         if strict and not self.scalars_hold:
-            if not self.horizon.item() >= 0:
-                raise InputError("horizon", "must be at least 0, or infinite", self.horizon.item())
-            raise InputError("remaining", "must be from 0 to 2^53", self.remaining.item())
+            for name, number in (*self.varying.items(), ("remaining", self.remaining)):
+                if not SCALAR_RULES[name].holds(number.item()):
+                    raise InputError(name, SCALAR_RULES[name].text, number.item())
         return usable
 
 
@@ -169,7 +184,7 @@ def number_arrays(kind: InputKind, columns: dict[str, Any]) -> dict[str, NDArray
 def number_scalars(kind: InputKind, columns: dict[str, Any], remaining: Any) -> dict[str, NDArray[Any]]:
     """The scalars of a call as arrays of numbers; InputError as for `number_arrays`."""
     out = {"remaining": number_array("remaining", remaining, "f")}
-    for name in kind.scalars[1:]:
+    for name in kind.varies:
         if name not in columns:
             raise InputError(name, f"is missing: a {kind.name} has it")
         out[name] = number_array(name, columns[name], "f")

@@ -22,7 +22,7 @@ from distill.fallback import closed_form_values
 from distill.feature_graph import FeatureGraph
 from distill.metrics import measure
 from distill.record_rows import LeafMoments
-from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
+from distill.scorer_inputs import ANY_BATCH, ANY_HORIZON, LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
 from distill.table_peer_kernels import matched_on_table, sampled_on_table, sampled_wins
 from distill.timing import Decision, Timing, correlated, decisions, time_calls, tree_decisions, tree_of
 from distill.tree import Floats
@@ -64,6 +64,7 @@ def peers(
     value: Mapping[str, Any], samples: int, seed: int = 0, *, kind: InputKind = LEAF_TABLE
 ) -> dict[str, Peer]:
     """Name -> peer for a kind of leaf table. value : horizon and batch asked; samples : of Monte Carlo.
+    Where the batch varies, each table brings its own.
 
     UCT is UCB1 over leaves (Auer et al. 2002) with the tree's scale as its unit, a leaf's count being its
     noise variance over its variance, what its prior is worth included. Thompson sampling (1933) draws each
@@ -71,33 +72,39 @@ def peers(
     matching and one static rate; one rollout's static value is exact for them, and samples are of wins.
     """
     graph = FeatureGraph.of_value(value, kind)
-    batch: int | None = value["batch"]
     rng = np.random.default_rng(seed)
     wins = kind is WIN_LOSS_TABLE
     flat = _flat_wins if wins else _flat
 
+    def asked(t: Mapping[str, Any]) -> int | None:
+        batch: int | None = value["batch"] if kind is not ANY_BATCH else int(np.ravel(t["batch_size"])[0])
+        return batch
+
     def first_order(t: Mapping[str, Any], left: float) -> Floats:
         return graph.matrix({**t, "remaining": left}).first_order
 
-    def static(one: int | None) -> Peer:
-        def scored(t: Mapping[str, Any], left: float) -> Floats:
-            place = {name: t[name] for name in ("mean", "var", "noise_var", "gain", "offset")}
-            return static_rates(**place, remaining=left, batch=one)[0]
+    def static(t: Mapping[str, Any], left: float, batch: int | None) -> Floats:
+        place = {name: t[name] for name in ("mean", "var", "noise_var", "gain", "offset")}
+        return static_rates(**place, remaining=left, batch=batch)[0]
 
-        return scored
+    def static_of_one(t: Mapping[str, Any], left: float) -> Floats:
+        return static(t, left, 1)
+
+    def static_of_asked(t: Mapping[str, Any], left: float) -> Floats:
+        return static(t, left, asked(t))
 
     def as_normals(t: Mapping[str, Any], left: float) -> Floats:
-        return closed_form_values(WIN_LOSS_TABLE, t, left, batch)[0]
+        return closed_form_values(WIN_LOSS_TABLE, t, left, asked(t))[0]
 
     def matching(t: Mapping[str, Any], left: float) -> Floats:
-        return np.asarray(matched_on_table(*flat(t), int(left), batch or 0, NODES, SHARES))
+        return np.asarray(matched_on_table(*flat(t), int(left), asked(t) or 0, NODES, SHARES))
 
     def sampled(t: Mapping[str, Any], left: float) -> Floats:
         if not wins:
-            return np.asarray(sampled_on_table(rng, *flat(t), int(left), batch or 0, samples))
+            return np.asarray(sampled_on_table(rng, *flat(t), int(left), asked(t) or 0, samples))
         low, span = t["offset"] + t["gain"] * t["low"], t["gain"] * (t["high"] - t["low"])
         place = (t["alpha"], t["beta"], low, span, t["action"])
-        return np.asarray(sampled_wins(rng, *place, int(left), batch or 0, samples))
+        return np.asarray(sampled_wins(rng, *place, int(left), asked(t) or 0, samples))
 
     def uct(t: Mapping[str, Any], left: float) -> Floats:
         del left
@@ -115,8 +122,8 @@ def peers(
 
     return {
         FIRST_ORDER: first_order,
-        ONE: _one_trial if wins else static(1),
-        **({AS_NORMALS: as_normals} if wins else {STATIC: static(batch)}),
+        ONE: _one_trial if wins else static_of_one,
+        **({AS_NORMALS: as_normals} if wins else {STATIC: static_of_asked}),
         MOMENTS: matching,
         SAMPLES: sampled,
         UCT: uct,
@@ -166,7 +173,7 @@ def left_out(kind: InputKind, value: Mapping[str, Any], *, with_cov: bool = Fals
     >>> left_out(LEAF_TABLE, {"horizon": "inf", "batch": None})
     {}
     """
-    if kind not in (LEAF_TABLE, ANY_HORIZON, WIN_LOSS_TABLE, RECORD):
+    if kind not in (LEAF_TABLE, ANY_HORIZON, ANY_BATCH, WIN_LOSS_TABLE, RECORD):
         return dict.fromkeys(_NAMES, f"no peer reads a {kind.name}")
     if kind is ANY_HORIZON:
         return dict.fromkeys((MOMENTS, SAMPLES), "values the dynamic case only")

@@ -17,9 +17,9 @@ from distill import voc
 from distill.backup import backup_of
 from distill.candidates import Candidates
 from distill.errors import DistillError, InputError, RefusedError
-from distill.labelling import Asked
+from distill.labelling import OWN_BATCH, Asked
 from distill.query import Priced, Query
-from distill.scorer_inputs import RECORD, WIN_LOSS_TABLE, InputKind
+from distill.scorer_inputs import ANY_BATCH, RECORD, WIN_LOSS_TABLE, InputKind
 from distill.terminal import bar
 from distill.tree import BeliefTree, leaf_table
 from distill.tree_columns import decision_key
@@ -67,7 +67,7 @@ def rows_of(tree: BeliefTree, kind: InputKind, horizon: float | None) -> Row:
     """The inputs of one tree as a scorer of `kind` takes them, each of shape (n_leaves,).
 
     horizon : of the scorer's value, at which a backup fills records; None takes the tree's own, infinite
-    where it states none. A tree without `remaining` has 0 left.
+    where it states none. A tree without `remaining` has 0 left, one without `batch` rolls out one by one.
     Raises RefusedError where the input cannot hold the tree.
     """
     h = horizon if horizon is not None else math.inf if tree.horizon is None else tree.horizon
@@ -79,18 +79,23 @@ def rows_of(tree: BeliefTree, kind: InputKind, horizon: float | None) -> Row:
     else:
         table = leaf_table(tree)
         columns = {name: getattr(table, name) for name in kind.columns}
-    scalars = {"remaining": float(tree.remaining or 0), "horizon": h}
+    scalars = {"remaining": float(tree.remaining or 0), "horizon": h, "batch_size": float(tree.batch or 1)}
     return {**columns, **{name: np.full(tree.n_leaves, scalars[name]) for name in kind.scalars}}
 
 
 def label(trees: Sequence[BeliefTree], kind: InputKind, asked: Asked, *, progress: bool = False) -> Labels:
     """Exact labels of what a scorer of `kind` is asked, tree by tree.
 
-    asked : with a horizon, or for scorers of any horizon without; every tree brings its own `remaining`.
+    asked : with a horizon, or for scorers of any horizon without, and for those of any batch with the tree's
+    own; every tree brings its own `remaining`.
     Raises InputError where no tree is left.
     """
-    if asked.horizon is None and not kind.has_horizon:
+    if asked.horizon is None and "horizon" not in kind.varies:
         raise InputError("horizon", "must be given: it is one for a scorer")
+    if (asked.batch == OWN_BATCH) != ("batch_size" in kind.varies):
+        raise InputError(
+            "batch", f"must be the tree's own for a {ANY_BATCH.name} and for no other input", asked.batch
+        )
     aside: Counter[str] = Counter()
     queries: dict[Query, list[int]] = {}
     rows: dict[int, Row] = {}

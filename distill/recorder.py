@@ -152,6 +152,7 @@ class Recorder:
         cost: Any = None,
         remaining: Any = None,
         horizon: Any = None,
+        batch_size: Any = None,
         extra: Any = None,
         **unknown: object,
     ) -> None:
@@ -161,10 +162,10 @@ class Recorder:
         var_i); a rollout adds noise of variance noise_var_i and costs cost_i >= 0; 0 < gain_i <= 1.
         Win/loss leaves: alpha, beta, low, high instead, X_i = low_i + (high_i - low_i) p_i, p_i ~
         Beta(alpha_i, beta_i).
-        Missing gain is 1, missing offset and cost are 0. remaining : whole rollouts left. horizon : that of
-        the scorer's call, inf allowed. extra : an object for JSON to keep beside the tree. The record has the
-        root, a decision node an action in order of position, and the leaves in order, with gain as discount
-        and offset as reward.
+        Missing gain is 1, missing offset and cost are 0. remaining : whole rollouts left.
+        horizon (inf allowed), batch_size : those of a scorer's call that has them. extra : an object for JSON
+        to keep beside the tree. The record has the root, a decision node an action in order of position, and
+        the leaves in order, with gain as discount and offset as reward.
         Never raises (but `strict`): arguments that make no such record are counted as invalid.
         """
         if self._drawn():
@@ -172,7 +173,7 @@ class Recorder:
                 "mean": mean, "var": var, "noise_var": noise_var,
                 "alpha": alpha, "beta": beta, "low": low, "high": high,
                 "gain": gain, "offset": offset, "action": action, "cost": cost, "remaining": remaining,
-                "horizon": horizon,
+                "horizon": horizon, "batch_size": batch_size,
             }  # fmt: skip
             self._offer(copy_table, columns, extra, unnamed, unknown)
 

@@ -4,8 +4,8 @@
     leaf = scorer.pick(mean=..., var=..., noise_var=..., gain=..., offset=..., action=..., cost=...,
                        remaining=100)
 
-These are the columns of a leaf table; files for win/loss leaves or for records take others, and files for
-any horizon also `horizon`, see `distill.scorer_inputs`. A call copies the arrays into buffers that
+These are the columns of a leaf table; files of other kinds take others, files for any horizon also `horizon`
+and files for any batch `batch_size`, see `distill.scorer_inputs`. A call copies the arrays into buffers that
 onnxruntime reads in place, and runs on the calling thread; threads may share a scorer, each has buffers of
 its own. Where the file has no answer - invalid values, a deadline that has passed, a file that was refused -
 the closed-form static rate answers instead (for records the first-order rate), and is counted. Leaves unlike
@@ -176,10 +176,11 @@ class Scorer:
         (high_i - low_i) p_i, p_i ~ Beta(alpha_i, beta_i).
         Leaf table, any horizon: a leaf table's, and horizon, the rollouts that each leaf still receives after
         the root action is fixed, from 0 (static value) to infinity (dynamic value); the closed form takes 0.
+        Leaf table, any batch: and batch_size, how many rollouts a leaf gets together; voc is for all of them.
         Record: what `distill.backup` gives of each leaf of any tree, `schema.RECORD_UNITS`.
 
-        remaining : rollouts left. tree : (n,), the rows of a tree side by side; remaining and horizon may
-        then be arrays of length n, and each tree is scored as if alone.
+        remaining : rollouts left. tree : (n,), the rows of a tree side by side; remaining, horizon and
+        batch_size may then be arrays of length n, and each tree is scored as if alone.
         deadline : a time of time.perf_counter(); once it has passed, the closed form answers.
         Raises InputError for arrays that form no leaf table (shapes, kinds of numbers); for invalid
         values only if `strict`, else they are flagged and the closed form scores the other rows.
@@ -313,7 +314,7 @@ class Scorer:
         if usable.any():
             rows = {name: x[usable] for name, x in buffers.columns.items()}
             voc[usable], batch[usable] = closed_form_values(
-                buffers.kind, rows, float(buffers.remaining), self._batch
+                buffers.kind, rows, float(buffers.remaining), buffers.batch_size or self._batch
             )
             high[usable] = self._bounds(buffers, usable)
         voc[kept], batch[kept] = buffers.out["voc"][kept], buffers.out["batch"][kept]
@@ -326,10 +327,10 @@ class Scorer:
 
     def _bounds(self, buffers: LeafBuffers, rows: Any) -> Floats:
         """The bound that no value exceeds; 0 for a rate where nothing is left to roll out."""
-        if self._batch is None and buffers.remaining < 1:
+        batch = buffers.batch_size or self._batch
+        if batch is None and buffers.remaining < 1:
             return np.zeros(len(buffers.action[rows]))
-        columns = {name: x[rows] for name, x in buffers.columns.items()}
-        return closed_form_bounds(buffers.kind, columns, self._batch or 1)
+        return closed_form_bounds(buffers.kind, {k: x[rows] for k, x in buffers.columns.items()}, batch or 1)
 
     def _score_many(
         self, kind: InputKind, columns: dict[str, Any], remaining: Any, tree: Any, deadline: float | None

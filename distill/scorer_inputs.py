@@ -2,6 +2,7 @@
 
     leaf table                independent Gaussian leaves under decision nodes
     leaf table, any horizon   the same, and the number `horizon`, of files that serve every horizon
+    leaf table, any batch     the same, and the number `batch_size`, of files that serve every batch
     win/loss leaf table       win/loss leaves under decision nodes
     record                    any tree: chance nodes, correlation; one row a candidate, from `distill.backup`
 
@@ -24,12 +25,14 @@ from numpy.typing import NDArray
 from distill import schema
 
 __all__ = [
-    "ANY_HORIZON", "KINDS", "LEAF_TABLE", "RECORD", "VARIES", "WIN_LOSS_TABLE", "InputKind", "kind_of",
-    "worded",
+    "ANY_BATCH", "ANY_HORIZON", "BOTH_VARY", "KINDS", "LEAF_TABLE", "RECORD", "SCALAR_OF", "SCALAR_RULES",
+    "VARIES", "WIN_LOSS_TABLE", "InputKind", "ScalarRule", "kind_of", "worded", "worded_batch",
 ]  # fmt: skip
 
 Floats = NDArray[np.float64]
-VARIES: Final = "varies"  # stands for the horizon of a value where each tree, or call, brings its own
+# Stands for the horizon, or the batch, of a value where each tree, or call, brings its own.
+VARIES: Final = "varies"
+BOTH_VARY: Final = "must not both differ from call to call: a scorer takes one of them with each call"
 _U, _U2 = schema.MAX_UTILITY, schema.MAX_VARIANCE
 
 
@@ -66,18 +69,42 @@ _RULES: Final[Mapping[str, _Rule]] = {
 
 
 @dataclass(frozen=True)
+class ScalarRule:
+    """What a number of a call may be: from `low` to `high`, and perhaps whole; `text` says so."""
+
+    low: float
+    high: float
+    text: str
+    whole: bool = False
+
+    def holds(self, x: float) -> bool:
+        """Whether a number may be so; NaN never."""
+        return bool(self.low <= x <= self.high and not (self.whole and x != int(x)))
+
+
+SCALAR_RULES: Final[Mapping[str, ScalarRule]] = {
+    "remaining": ScalarRule(0, schema.MAX_ROLLOUTS, "must be from 0 to 2^53"),
+    "horizon": ScalarRule(0, math.inf, "must be at least 0, or infinite"),
+    "batch_size": ScalarRule(1, schema.MAX_ROLLOUTS, "must be a whole number from 1 to 2^53", whole=True),
+}
+# What of a value each such number is.
+SCALAR_OF: Final[Mapping[str, str]] = {"horizon": "horizon", "batch": "batch_size"}
+
+
+@dataclass(frozen=True)
 class InputKind:
     """One kind of input.
 
     name : as in a file's metadata and in messages. floats : columns of n numbers, the first gives n.
-    has_action : whether `action`, the 0-based root action of each row, is a column too. has_horizon : whether
-    `horizon`, the rollouts that each leaf still receives (inf allowed), is a number of each call.
+    has_action : whether `action`, the 0-based root action of each row, is a column too. varies : the numbers
+    of each call beside `remaining`: `horizon`, the rollouts that each leaf still receives (inf allowed), or
+    `batch_size`, the rollouts that are spent together.
     """
 
     name: str
     floats: tuple[str, ...]
     has_action: bool
-    has_horizon: bool = False
+    varies: tuple[str, ...] = ()
 
     @cached_property
     def columns(self) -> tuple[str, ...]:
@@ -92,12 +119,12 @@ class InputKind:
     @cached_property
     def scalars(self) -> tuple[str, ...]:
         """The numbers of a call, one for all rows."""
-        return ("remaining", "horizon") if self.has_horizon else ("remaining",)
+        return ("remaining", *self.varies)
 
     @cached_property
     def keywords(self) -> tuple[str, ...]:
-        """What a call brings beside `remaining`: the columns, and `horizon` where there is one."""
-        return (*self.columns, *self.scalars[1:])
+        """What a call brings beside `remaining`: the columns, and the numbers that vary."""
+        return (*self.columns, *self.varies)
 
     @cached_property
     def inputs(self) -> tuple[str, ...]:
@@ -122,16 +149,20 @@ class InputKind:
 
 
 LEAF_TABLE: Final = InputKind("leaf table", ("mean", "var", "noise_var", "gain", "offset", "cost"), True)
-ANY_HORIZON: Final = InputKind("leaf table, any horizon", LEAF_TABLE.floats, True, has_horizon=True)
+ANY_HORIZON: Final = InputKind("leaf table, any horizon", LEAF_TABLE.floats, True, ("horizon",))
+ANY_BATCH: Final = InputKind("leaf table, any batch", LEAF_TABLE.floats, True, ("batch_size",))
 WIN_LOSS_TABLE: Final = InputKind(
     "win/loss leaf table", ("alpha", "beta", "low", "high", "gain", "offset", "cost"), True
 )
 RECORD: Final = InputKind("record", tuple(schema.RECORD_UNITS), False)
-KINDS: Final[Mapping[str, InputKind]] = {k.name: k for k in (LEAF_TABLE, ANY_HORIZON, WIN_LOSS_TABLE, RECORD)}
+KINDS: Final[Mapping[str, InputKind]] = {
+    k.name: k for k in (LEAF_TABLE, ANY_HORIZON, ANY_BATCH, WIN_LOSS_TABLE, RECORD)
+}
 
 
 def kind_of(names: Iterable[Any]) -> InputKind | None:
-    """The kind whose columns all are among `names`, with `horizon` that of any horizon; None for no kind.
+    """The kind whose columns all are among `names`, with `horizon` or `batch_size` the one of any of them; or
+    None.
 
     >>> kind_of(["alpha", "beta", "low", "high", "gain", "offset", "cost", "action"]).name
     'win/loss leaf table'
@@ -153,3 +184,12 @@ def worded(horizon: Any) -> str:
         return "{} at the horizon that each call gives"
     h = float(horizon)
     return {math.inf: "dynamic {}", 0.0: "static {}"}.get(h, f"{{}} at horizon {h:g}")
+
+
+def worded_batch(batch: Any) -> str:
+    """The batch of a scorer's value in words; batch : a whole number or VARIES.
+
+    >>> worded_batch(1), worded_batch(8), worded_batch("varies")
+    ('1 rollout', '8 rollouts', 'the batch that each call gives')
+    """
+    return "the batch that each call gives" if batch == VARIES else f"{batch} rollout{'s' * (batch != 1)}"

@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Any, Final
 
 from distill.files import write_atomic
-from distill.scorer_inputs import worded
+from distill.scorer_inputs import worded, worded_batch
 
 __all__ = [
     "FRONT_FILE",
@@ -229,7 +229,7 @@ def _value_text(value: Mapping[str, Any]) -> str:
     if value["batch"] is None:
         what = kind.format("rate")
         return f"Scores the {what}: the best VOC a rollout over batches within the rollouts left"
-    return f"Scores the {kind.format('VOC')} of {value['batch']} rollout{'s' * (value['batch'] != 1)}"
+    return f"Scores the {kind.format('VOC')} of {worded_batch(value['batch'])}"
 
 
 def _accuracy_row(name: str, m: Mapping[str, Any]) -> str:

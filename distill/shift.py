@@ -75,7 +75,7 @@ def drawn_candidates(
 ) -> tuple[Candidates, int]:
     """Trees of a family with exact labels of `value`, as an input sees them; and how many no exact method
     prices. RefusedError where that is all of them."""
-    batch = value["batch"]
+    given_batch = value["batch"]
     given = None if value["horizon"] == VARIES else float(value["horizon"])
     rows, number, label, batches, error = [], [], [], [], []
     aside = 0
@@ -85,6 +85,7 @@ def drawn_candidates(
             advance(1)
             own = math.inf if tree.horizon is None else tree.horizon
             horizon = own if given is None else given
+            batch = (tree.batch or 1) if given_batch == VARIES else given_batch
             try:
                 priced = voc.price(tree, Query(horizon=horizon, batch=batch, remaining=tree.remaining))
             except RefusedError:
@@ -99,7 +100,7 @@ def drawn_candidates(
         raise RefusedError(f"{family.name}: no exact method prices any of its trees")
     joined = {name: np.concatenate([row[name] for row in rows]) for name in kind.inputs}
     at, exact, of, off = (np.concatenate(x) for x in (number, label, batches, error))
-    return Candidates(joined, at, exact, of, off, is_rate=batch is None, kind=kind), aside
+    return Candidates(joined, at, exact, of, off, is_rate=given_batch is None, kind=kind), aside
 
 
 def trees_of(family: Family, name: str, kind: InputKind, value: Mapping[str, Any], trees: int) -> int:

@@ -17,6 +17,7 @@ from distill.calibration import live
 from distill.candidates import Candidates
 from distill.fallback import spreads
 from distill.metrics import Groups, measure, picks, ratio_over_trees, stop_loss
+from distill.scorer_inputs import SCALAR_OF
 from distill.shards import read_trees
 from distill.tree import BeliefTree, Floats, Ints
 
@@ -72,8 +73,9 @@ class Scored:
 
 def tree_facts(candidates: Candidates) -> dict[str, Floats]:
     """What trees are sliced by, a number a tree: leaves, rollouts left, noise of a rollout over the leaf's
-    variance (median), the gap between the best two actions over the scale, where it varies the horizon, and,
-    where the dataset's folder is known, depth (edges to the deepest leaf) and visits (rollouts so far)."""
+    variance (median), the gap between the best two actions over the scale, the horizon or batch where it
+    varies, and, where the dataset's folder is known, depth (edges to the deepest leaf) and visits (rollouts
+    so far)."""
     groups, columns = candidates.groups, candidates.columns
     facts = {
         "leaves": groups.sizes.astype(float),
@@ -89,8 +91,9 @@ def tree_facts(candidates: Candidates) -> dict[str, Floats]:
             noise[t] = np.median(ratio[rows])
             gap[t] = _gap(mean[rows], columns["action"][rows]) / max(sd[rows].max(), 1e-300)
         facts |= {"noise": noise, "gap": gap}
-    if candidates.kind.has_horizon:
-        facts["horizon"] = np.asarray(columns["horizon"], dtype=float)[groups.starts]
+    for key, name in SCALAR_OF.items():
+        if name in candidates.kind.varies:
+            facts[key] = np.asarray(columns[name], dtype=float)[groups.starts]
     if candidates.folder is not None:
         wanted = {int(i): t for t, i in enumerate(groups.ids)}
         depth, visits = np.zeros(len(wanted)), np.zeros(len(wanted))

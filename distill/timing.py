@@ -104,8 +104,7 @@ def decisions(
         at = at[np.argsort(columns["action"][at], kind="stable")]
         arrays: dict[str, Any] = {name: np.ascontiguousarray(columns[name][at]) for name in kind.columns}
         arrays["action"] = np.unique(arrays["action"], return_inverse=True)[1].astype(np.int64)
-        if kind.has_horizon:
-            arrays["horizon"] = float(columns["horizon"][rows[0]])
+        arrays |= {name: float(columns[name][rows[0]]) for name in kind.varies}
         remaining = max(1, int(columns["remaining"][rows[0]]))
         out.append(Decision(arrays, remaining, tree_of(arrays)))
     return out
@@ -178,12 +177,15 @@ def time_exact(
 ) -> Timing:
     """Time of the exact value of every candidate on the same cases; batch None is the rate.
 
+    A case that has a horizon or a batch of its own is asked for that one.
+
     seconds : after which no further call begins, beyond the first three.
     """
 
     def act(case: Decision) -> None:
-        h = float(case.columns.get("horizon", horizon))
-        price(case.tree, Query(horizon=h, batch=batch, remaining=case.remaining))
+        h, k = float(case.columns.get("horizon", horizon)), case.columns.get("batch_size", batch)
+        query = Query(horizon=h, batch=None if k is None else int(k), remaining=case.remaining)
+        price(case.tree, query)
 
     return _timed(act, cases, calls, warm_up=1, seconds=seconds)
 

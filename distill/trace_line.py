@@ -156,8 +156,9 @@ def _table_line(seen: Seen, pause: Callable[[], None]) -> bytes:
     for name, x in columns.items():
         key, at_inner = _KEYS.get(name, (name, "null"))
         record[key] = _array([at_inner] * inner, x, pause)
-    if "remaining" in seen.columns:
-        record["remaining"] = str(_whole(seen.columns["remaining"]))
+    for name, key, least in (("remaining", "remaining", 0), ("batch_size", "batch", 1)):
+        if name in seen.columns:
+            record[key] = str(_whole(name, seen.columns[name], least))
     if "horizon" in seen.columns:
         record["horizon"] = _horizon(seen.columns["horizon"], "alpha" in seen.columns)
     if seen.extra is not None:
@@ -262,12 +263,12 @@ def _rule(name: str, x: NDArray[np.float64]) -> tuple[NDArray[np.bool_], str]:
     return np.abs(x) <= schema.MAX_UTILITY, f"must be finite and at most {schema.MAX_UTILITY:g} in size"
 
 
-def _whole(remaining: NDArray[Any]) -> int:
-    if remaining.size != 1:
-        raise InputError("remaining", "must be one number", remaining.shape)
-    value = remaining.item()
-    if not 0 <= value <= schema.MAX_ROLLOUTS or value != int(value):
-        raise InputError("remaining", "must be a whole number from 0 to 2^53", value)
+def _whole(name: str, number: NDArray[Any], least: int) -> int:
+    if number.size != 1:
+        raise InputError(name, "must be one number", number.shape)
+    value = number.item()
+    if not least <= value <= schema.MAX_ROLLOUTS or value != int(value):
+        raise InputError(name, f"must be a whole number from {least} to 2^53", value)
     return int(value)
 
 

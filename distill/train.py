@@ -314,6 +314,8 @@ def _exact_times(cases: Sequence[Decision], value: Mapping[str, Any]) -> dict[st
     else:
         h = float(value["horizon"])
         kind = {math.inf: "dynamic", 0.0: "static"}.get(h, f"horizon {h:g}")
+    if batch == VARIES:
+        return {f"{kind} VOC of each call's batch": time_exact(cases, horizon=h, seconds=_EXACT_SECONDS)}
     one = batch or 1
     of = "" if one == 1 else f" of {one} rollouts"
     out = {f"{kind} VOC{of}": time_exact(cases, horizon=h, batch=one, seconds=_EXACT_SECONDS)}

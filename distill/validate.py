@@ -16,7 +16,7 @@ from distill.metrics import measure, random_forgone
 from distill.peers import measure_peers, timed_cases
 from distill.query import Query
 from distill.runtime import Scorer
-from distill.scorer_inputs import ANY_HORIZON, RECORD
+from distill.scorer_inputs import RECORD
 from distill.slices import Scored, calibration, forgone_by_slice, stop_curve, tree_facts
 from distill.timing import time_scorer, tree_of
 from distill.tree import Floats
@@ -175,7 +175,7 @@ def validate(
     """
     if not isinstance(scorer, Scorer):
         scorer = Scorer.load(scorer)
-    candidates, about = Candidates.read(dataset, any_horizon=scorer.kind is ANY_HORIZON)
+    candidates, about = Candidates.read(dataset, like=scorer.kind)
     trained, asked = scorer.facts.get("about", {}), value_of_scorer(scorer)
     if asked != about["value"]:
         raise InputError(f"{dataset}: value", f"must be the scorer's, {asked}", about["value"])

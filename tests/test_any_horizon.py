@@ -139,7 +139,7 @@ def test_infer_lists_few_horizons_and_says_where_it_cannot():
 def test_one_horizon_is_no_input_unless_asked_for(tmp_path):
     folder = labelled(tmp_path / "d", trees=10, horizon=4.0)
     assert "horizon" not in Candidates.read(folder)[0].columns
-    rows, about = Candidates.read(folder, any_horizon=True)
+    rows, about = Candidates.read(folder, like=ANY_HORIZON)
     assert np.all(rows.columns["horizon"] == 4)
     assert about["value"]["horizon"] == VARIES
 
@@ -304,7 +304,7 @@ def test_shifts_keep_each_trees_horizon(scorer):
 def forgone(path: Path, dataset: Path) -> tuple[np.ndarray, np.ndarray]:
     """What the picks of a scorer file lose at each tree, and the best there is, u a rollout."""
     scorer = Scorer.load(path)
-    rows, _ = Candidates.read(dataset, any_horizon=scorer.facts["input"] == ANY_HORIZON.name)
+    rows, _ = Candidates.read(dataset, like=scorer.kind)
     best = rows.groups.highest(rows.label)
     score = scorer.score(**rows.columns, tree=rows.tree).voc
     return best - rows.label[picks(rows.groups, score)], best

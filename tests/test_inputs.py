@@ -262,8 +262,8 @@ def test_whatever_is_passed_is_answered_or_refused_by_name(seed, name):
 
     with np.errstate(over="ignore"):
         columns = {which: column(which) for which in kind.columns}
-        odd_horizons = [0, 4.0, math.inf, math.nan, -1, -math.inf, [1.0], np.float64(2), None, "x"]
-        columns |= {which: odd_horizons[int(rng.integers(10))] for which in kind.scalars[1:]}
+        odd = [0, 4.0, math.inf, math.nan, -1, -math.inf, [1.0], np.float64(2), None, "x", 2**60, 2.5, [1, 2]]
+        columns |= {which: odd[int(rng.integers(len(odd)))] for which in kind.varies}
     left = [5, 0, -1, math.nan, 1e300, 7.5, np.int64(3)][int(rng.integers(7))]
     for scorer in (CONFORMANCE[kind.name], Scorer.closed_form()):
         try:

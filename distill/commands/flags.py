@@ -32,7 +32,13 @@ def add_query_flags(parser: argparse.ArgumentParser, rate_is_default: bool = Fal
     )  # fmt: skip
     size = parser.add_mutually_exclusive_group()
     one, rate = ("", " (default)") if rate_is_default else (" (default 1)", "")
-    size.add_argument("--batch", type=whole(1), metavar="K", help=f"rollouts a candidate{one}")
+    if rate_is_default:
+        size.add_argument(
+            "--batch", type=_batch, metavar="K|tree",
+            help="rollouts a candidate, or tree: each tree's own, for a scorer that takes it with each call",
+        )  # fmt: skip
+    else:
+        size.add_argument("--batch", type=whole(1), metavar="K", help=f"rollouts a candidate{one}")
     size.add_argument(
         "--rate", action="store_true", help=f"best VOC a rollout over batches within the rollouts left{rate}"
     )
@@ -84,6 +90,11 @@ def whole(least: int) -> Callable[[str], int]:
         return n
 
     return parse
+
+
+def _batch(text: str) -> int | str:
+    """Rollouts a candidate, or `tree`."""
+    return text if text == "tree" else whole(1)(text)
 
 
 def out_file(text: str) -> Path:

@@ -10,7 +10,7 @@ from distill.backup_compiled import fast_backup_of
 from distill.backup_correlated import CorrelatedBackup
 from distill.errors import InputError, RefusedError
 from distill.runtime import Scorer, Scores
-from distill.scorer_inputs import ANY_HORIZON, LEAF_TABLE, RECORD, WIN_LOSS_TABLE
+from distill.scorer_inputs import ANY_BATCH, ANY_HORIZON, LEAF_TABLE, RECORD, WIN_LOSS_TABLE
 from distill.tree import BeliefTree, leaf_table
 
 __all__ = ["ScorerInputs"]
@@ -21,7 +21,8 @@ class ScorerInputs:
 
     A leaf table is the agent's own arrays; a record is kept up to date by a backup of the tree at the
     horizon that the file was trained for: a path to the root after each rollout, or, with `cov`, the whole
-    tree. A file for any horizon is asked for the dynamic value. Raises RefusedError for trees that the file
+    tree. A file for any horizon is asked for the dynamic value, one for any batch for that of one
+    rollout: a rehearsed search chooses anew after each. Raises RefusedError for trees that the file
     cannot score: `fit` says so beforehand; InputError where a file of records states no horizon that a
     backup could have.
     """
@@ -39,13 +40,15 @@ class ScorerInputs:
             self._fixed = {name: getattr(table, name) for name in ("gain", "offset", "action", "cost", *kept)}
         if scorer.kind is ANY_HORIZON:
             self._fixed["horizon"] = math.inf
+        if scorer.kind is ANY_BATCH:
+            self._fixed["batch_size"] = 1
 
     @staticmethod
     def fit(scorer: Scorer, tree: BeliefTree) -> bool:
         """Whether the scorer's inputs can hold the tree; without a file the closed form takes leaf tables."""
         if scorer.kind is RECORD:
             return True
-        own = (WIN_LOSS_TABLE,) if tree.mean is None else (LEAF_TABLE, ANY_HORIZON)
+        own = (WIN_LOSS_TABLE,) if tree.mean is None else (LEAF_TABLE, ANY_HORIZON, ANY_BATCH)
         return not tree.has_chance and tree.cov is None and scorer.kind in (None, *own)
 
     def score(self, posterior: Posterior, remaining: int) -> Scores:

@@ -17,7 +17,7 @@ from distill.rehearse.problems import TreeProblem
 from distill.rehearse.scorer_inputs import ScorerInputs
 from distill.rehearse.value_policies import ByScorer
 from distill.runtime import Scorer
-from distill.scorer_inputs import ANY_HORIZON, KINDS, LEAF_TABLE, RECORD, WIN_LOSS_TABLE
+from distill.scorer_inputs import ANY_BATCH, ANY_HORIZON, KINDS, LEAF_TABLE, RECORD, WIN_LOSS_TABLE
 from distill.tree import leaf_table
 
 TREES = {
@@ -51,6 +51,8 @@ def test_columns_follow_the_beliefs(tree, kind, monkeypatch):
     assert seen.pop("remaining") == 7
     if kind is ANY_HORIZON:
         assert seen.pop("horizon") == math.inf
+    if kind is ANY_BATCH:
+        assert seen.pop("batch_size") == 1
     now = search.tree()
     table = None if kind is RECORD else leaf_table(now)
     wanted = Backup(now).rows() if table is None else {name: getattr(table, name) for name in kind.columns}
@@ -67,6 +69,7 @@ def test_every_kind_takes_the_trees_that_it_can_hold():
     assert fits == {
         LEAF_TABLE: ["gaussian"],
         ANY_HORIZON: ["gaussian"],
+        ANY_BATCH: ["gaussian"],
         WIN_LOSS_TABLE: ["win/loss"],
         RECORD: list(TREES),
     }

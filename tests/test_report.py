@@ -463,8 +463,44 @@ def test_both_themes_can_be_read() -> None:
     assert light.keys() == dark.keys()
     assert contrast(light["paper"], "#000000") == 21
     for colours in (light, dark):
-        for role in ("ink", "quiet", "scorer", "peer", "exact"):
+        for role in ("ink", "quiet", "scorer", "peer", "exact", "uct"):
             assert contrast(colours[role], colours["paper"]) >= 4.5
+
+
+# Linear RGB as those see it who lack one kind of cone: Machado, Oliveira and Fernandes (2009), "A
+# physiologically-based model for simulation of color vision deficiency", severity 1; quoted from memory.
+SIGHTS = {
+    "three cones": [[1, 0, 0], [0, 1, 0], [0, 0, 1]],
+    "no L cones": [
+        [0.152286, 1.052583, -0.204868], [0.114503, 0.786281, 0.099216], [-0.003882, -0.048116, 1.051998],
+    ],
+    "no M cones": [
+        [0.367322, 0.860646, -0.227968], [0.280085, 0.672501, 0.047413], [-0.011820, 0.042940, 0.968881],
+    ],
+    "no S cones": [
+        [1.255528, -0.076749, -0.178779], [-0.078411, 0.930809, 0.147602], [0.004733, 0.691367, 0.303900],
+    ],
+}  # fmt: skip
+
+
+def lab(colour: str, sight: str) -> np.ndarray:
+    """CIE 1976 L*a*b* under D65 (IEC 61966-2-1 for sRGB) of a colour as it is seen."""
+    c = np.array([int(colour[i : i + 2], 16) for i in (1, 3, 5)]) / 255
+    linear = np.where(c <= 0.04045, c / 12.92, ((c + 0.055) / 1.055) ** 2.4)
+    seen = np.clip(SIGHTS[sight] @ linear, 0, 1)
+    to_xyz = [[0.4124, 0.3576, 0.1805], [0.2126, 0.7152, 0.0722], [0.0193, 0.1192, 0.9505]]
+    t = to_xyz @ seen / [0.9505, 1, 1.089]
+    x, y, z = np.where(t > (6 / 29) ** 3, np.cbrt(t), t * (29 / 6) ** 2 / 3 + 4 / 29)
+    return np.array([116 * y - 16, 500 * (x - y), 200 * (y - z)])
+
+
+def test_policies_are_told_apart_by_colour_whatever_cones_one_has() -> None:
+    """Differences of 10 and more are plain at a glance; marks and dashes differ besides."""
+    light, dark = (dict(re.findall(r"--(\w+):(#\w+)", part)) for part in theme.THEME_CSS.split("@media"))
+    for colours in (light, dark):
+        for a, b in combinations(("ink", "scorer", "peer", "exact", "uct"), 2):
+            for sight in SIGHTS:
+                assert np.linalg.norm(lab(colours[a], sight) - lab(colours[b], sight)) >= 10, (a, b, sight)
 
 
 @every_kind

@@ -8,6 +8,7 @@ from __future__ import annotations
 import xml.etree.ElementTree as ET
 from collections import Counter
 from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
 from statistics import median
 from typing import Any, Final
 
@@ -28,22 +29,47 @@ MARKS: Final = ("o", "s", "^", "D", "v")
 _RIVALS: Final = {"sampling": "better sampling", "static": "closed form", "exact": "exact rate"}
 _FAR: Final = (0.3, 3.0)  # ratios beyond stand at the edge
 _LEVELS: Final = (0.25, 0.5, 0.7, 0.85, 1, 1.2, 1.5, 2, 3, 5, 10)
-# What lines and rows stand for: (words of a policy's name, label, colour), the last one for what is left.
+
+
+@dataclass(frozen=True)
+class _Sort:
+    """What a line or row stands for: how its policies' names begin, and how they are drawn.
+
+    A family has a colour of its own, its second member dashes, and each a mark that no other has.
+    """
+
+    word: str
+    label: str
+    role: str
+    mark: str
+    dashed: bool = False
+
+    def of(self, rows: Iterable[Figures]) -> list[Figures]:
+        """The rows of its policies."""
+        return [row for row in rows if row["policy"].startswith(self.word)]
+
+    def line(self, size: float) -> dict[str, Any]:
+        """How its line is drawn, with marks of a size."""
+        colour = DRAWN[self.role]
+        dash = (0, (4, 2)) if self.dashed else "-"
+        return {"color": colour, "marker": self.mark, "ms": size, "mew": 0, "ls": dash, "lw": 1.4}
+
+
 _SORTS: Final = (
-    (("uct",), "UCT", "peer"),
-    (("thompson",), "Thompson", "peer"),
-    (("top",), "top-two Thompson", "peer"),
-    (("static_rate",), "closed form (static rate)", "ink"),
-    (("static_voc",), "closed form (static VOC)", "ink"),
-    (("exact",), "exact rate", "exact"),
-    ((BEST,), "best scorer", "scorer"),
+    _Sort("uct", "UCT", "uct", "^"),
+    _Sort("thompson", "Thompson", "peer", "s"),
+    _Sort("top", "top-two Thompson", "peer", "P", dashed=True),
+    _Sort("static_rate", "closed form (static rate)", "ink", "D"),
+    _Sort("static_voc", "closed form (static VOC)", "ink", "X", dashed=True),
+    _Sort("exact", "exact rate", "exact", "v"),
+    _Sort(BEST, "best scorer", "scorer", "o"),
 )
 
 
 def _shown(summary: Figures, part: str) -> list[Figures]:
     """Rows of policies that pictures show. Single scorers are not, whatever their names begin with."""
     scorers = {name for file in summary["scorers"] for name in file["policies"]}
-    words = tuple(word for group, _, _ in _SORTS for word in group)
+    words = tuple(sort.word for sort in _SORTS)
     return [r for r in summary[part] if r["policy"].startswith(words) and r["policy"] not in scorers]
 
 
@@ -159,14 +185,12 @@ def _costs(panels: Sequence[Rows]) -> Figure:
         ax.patch.set_visible(False)
         ax.set_title(one_line(rows[0]["problem"], 22), fontsize=SMALL)
         ax.set(xscale="log", yscale="log")
-        for words, label, role in _SORTS:
-            mine = [r for r in rows if r["policy"].startswith(words)]
-            if not mine or label == "closed form (static VOC)":
+        for sort in _SORTS:
+            mine = sort.of(rows)
+            if not mine or sort.word == "static_voc":
                 continue
             points = sorted((1e6 * r["rollout_seconds"], r["measured"]) for r in mine)
-            nth = [s[1] for s in _SORTS if s[2] == role].index(label)
-            style: dict[str, Any] = {"color": DRAWN[role], "marker": MARKS[nth], "ms": 4, "lw": 1.4}
-            (lines[label],) = ax.plot(*zip(*points, strict=True), gid="policy", **style)
+            (lines[sort.label],) = ax.plot(*zip(*points, strict=True), gid="policy", **sort.line(4.5))
         ticks = sorted({1e6 * r["rollout_seconds"] for r in rows})
         ax.set_xticks(ticks, [f"{t:.0f}" if t < 1000 else f"{t / 1000:g}k" for t in ticks])
         ax.grid(which="major")
@@ -206,30 +230,27 @@ def choosing(summary: Figures) -> ET.Element | None:
 
 @styled
 def _choosing(rows: Rows) -> Figure:
-    labels = [label for words, label, _ in _SORTS if any(r["policy"].startswith(words) for r in rows)]
+    sorts = [sort for sort in _SORTS if sort.of(rows)]
     costs_ = sorted({r["rollout_seconds"] for r in rows})
-    figure = Figure(figsize=(WIDTH, (74 + 13 * (len(costs_) + 0.6) * len(labels)) / 72))
+    figure = Figure(figsize=(WIDTH, (74 + 13 * (len(costs_) + 0.6) * len(sorts)) / 72))
     figure.patch.set_visible(False)
     ax = figure.subplots()
     ax.patch.set_visible(False)
-    for i, label in enumerate(reversed(labels)):
-        words, _, role = next(s for s in _SORTS if s[1] == label)
+    for i, sort in enumerate(reversed(sorts)):
+        colour = DRAWN[sort.role]
         for j, cost in enumerate(costs_):
             y = i + 0.36 - 0.72 * j / max(len(costs_) - 1, 1)
-            here = [
-                100 * r["choosing_share"] for r in rows
-                if r["policy"].startswith(words) and r["rollout_seconds"] == cost
-            ]  # fmt: skip
+            here = [100 * r["choosing_share"] for r in sort.of(rows) if r["rollout_seconds"] == cost]
             if here:
-                ax.plot([min(here), max(here)], [y, y], color=DRAWN[role], lw=1, alpha=0.5)
-                ax.plot([median(here)], [y], MARKS[j % len(MARKS)], ms=4, color=DRAWN[role], gid="share")
+                ax.plot([min(here), max(here)], [y, y], color=colour, lw=1, alpha=0.5)
+                ax.plot([median(here)], [y], MARKS[j % len(MARKS)], ms=4, color=colour, gid="share")
                 ax.annotate(
                     _cost(cost), (max(here), y), xytext=(4, 0), textcoords="offset points",
                     va="center", fontsize=8, color=DRAWN["quiet"],
                 )  # fmt: skip
     ax.axvline(20, color=DRAWN["quiet"], lw=1, ls=(0, (4, 3)))
-    ax.set_yticks(range(len(labels)), list(reversed(labels)))
-    ax.set(xlim=(-2, 112), ylim=(-0.7, len(labels) - 0.3), xlabel="time spent choosing, %")
+    ax.set_yticks(range(len(sorts)), [sort.label for sort in reversed(sorts)])
+    ax.set(xlim=(-2, 112), ylim=(-0.7, len(sorts) - 0.3), xlabel="time spent choosing, %")
     ax.set_xticks([0, 20, 40, 60, 80, 100])
     ax.tick_params(axis="y", length=0)
     ax.grid(axis="x")
@@ -267,13 +288,10 @@ def _break_even(rows: Rows, rollouts: int) -> Figure:
     ax.set(xscale="log", yscale="log", xlabel=f"cost of a rollout, µs (time: {rollouts} rollouts)")
     ax.set_ylabel("regret, multiple of the best sampling")
     ax.grid(which="major")
-    for words, label, role in _SORTS:
-        mine = [r for r in rows if r["policy"].startswith(words)]
-        if mine:
+    for sort in _SORTS:
+        if mine := sort.of(rows):
             points = sorted((1e6 * r["rollout_seconds"], r["ratio"]) for r in mine)
-            nth = [s[1] for s in _SORTS if s[2] == role].index(label)
-            style: dict[str, Any] = {"marker": MARKS[nth], "ms": 5, "lw": 1.4, "color": DRAWN[role]}
-            ax.plot(*zip(*points, strict=True), label=label, gid="policy", **style)
+            ax.plot(*zip(*points, strict=True), label=sort.label, gid="policy", **sort.line(5.5))
     ax.axhline(1, color=DRAWN["quiet"], lw=1)
     ticks = sorted({1e6 * r["rollout_seconds"] for r in rows})
     ax.set_xticks(ticks, [f"{t:,.0f}" for t in ticks])

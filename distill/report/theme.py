@@ -18,7 +18,8 @@ from matplotlib.figure import Figure
 
 __all__ = ["DRAWN", "SMALL", "THEME_CSS", "one_line", "printable", "raised", "standalone", "styled", "svg"]
 
-# Role -> colour while drawing, on light paper, on dark paper. All but the lines have contrast above 4.5.
+# Role -> colour while drawing, on light paper, on dark paper. All but the lines have contrast above 4.5, and
+# those of policies are apart for the colour-blind too. What meets in one picture differs in its mark besides.
 _THEME: Final = {
     "paper": ("#010101", "#ffffff", "#14181d"),
     "ink": ("#020202", "#1c2126", "#e4e8ec"),
@@ -27,6 +28,7 @@ _THEME: Final = {
     "scorer": ("#050505", "#0b63a5", "#62b2f5"),
     "peer": ("#060606", "#a4510c", "#ee9f55"),
     "exact": ("#070707", "#2c7a43", "#6cc788"),
+    "uct": ("#080808", "#880ce9", "#9d6bff"),
 }
 DRAWN: Final = {role: colours[0] for role, colours in _THEME.items()}
 _FONT: Final = "system-ui, -apple-system, 'Segoe UI', Roboto, 'Helvetica Neue', Arial, sans-serif"

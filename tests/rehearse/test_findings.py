@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 import shutil
 import xml.etree.ElementTree as ET
 from dataclasses import replace
@@ -241,6 +242,27 @@ def test_pictures_stand_alone_and_show_every_cell(tmp_path):
     assert ">taxi<" in text
     assert ">taxi<" not in less
     assert "How much of the time goes into choosing" in rehearsal_page(summary)
+
+
+def test_every_policy_of_a_picture_is_drawn_in_a_way_of_its_own():
+    """UCT and Thompson sampling have colours of their own; dashes tell apart who shares one."""
+    found = results([4, 0.5, 1.1])
+    for budget in TIMED:
+        for problem in CAMPAIGN.problems:
+            found.cells.extend(
+                cell(problem, budget, name, x) for name, x in (("top_two", 5), ("static_voc", 6))
+            )
+    names = ("uct", "thompson", "top-two", "static-voc", *CAMPAIGN.policies[2:])
+    found = replace(found, campaign=replace(CAMPAIGN, policies=names))
+    summary = summarise(found)
+    for name, n in (("costs", 6), ("break-even", 7)):
+        drawn = ET.tostring(rehearsal_pictures(summary)[name], encoding="unicode")
+        policies = re.findall(r'<path [^>]*style="([^"]*stroke-width: 1.4[^"]*)"', drawn)
+        lines = {(re.findall(r"var\(--(\w+)\)", style)[0], "dasharray" in style) for style in policies}
+        assert len(lines) == n
+        assert {colour for colour, _ in lines} == {"uct", "peer", "ink", "exact", "scorer"}
+        marks = re.findall(r'<use [^>]*style="fill: var\(--(\w+)\)[^>]*href="([^"]*)"', drawn)
+        assert len({mark for colour, mark in marks if colour != "line"}) == n
 
 
 def test_a_scorer_called_like_a_rule_is_not_drawn_as_one():

@@ -45,12 +45,14 @@ class LeafBuffers:
         self.action = np.zeros(n, dtype=np.int64)
         self.remaining = np.zeros(())
         self.varying = {name: np.zeros(()) for name in kind.varies}
+        rules = ((name, SCALAR_RULES[name]) for name in kind.varies)
+        self._ruled = tuple((name, self.varying[name], r.low, r.high, r.whole) for name, r in rules)
         self.columns = dict(zip(kind.floats, self.floats.reshape(width, n), strict=True))
         self.out: dict[str, NDArray[Any]] = {
             name: np.zeros(() if name in _SCALARS else n, dtype=kind) for name, kind in _OUTPUTS.items()
         }
         self.pick, self.in_range = self.out["pick"], self.out["in_range"]
-        self.scalars_hold = self._varying_hold = True
+        self.scalars_hold = True
         self.answered = False
         self.has_bound = session is not None and "voc_high" in {o.name for o in session.get_outputs()}
         self.binding, self.pick_binding = self._bound(session), self._bound(picker)
@@ -87,19 +89,15 @@ class LeafBuffers:
             if action.shape != shape or action.dtype.type is _TRUTH:
                 raise ValueError
             np.copyto(self.action, action, casting="same_kind")
-            if kind.varies:
-                self._fill_varying(columns)
+            # As `ScalarRule.holds`, without a call; kinds without actions have no such number.
+            for name, number, low, high, whole in self._ruled:
+                x = columns[name]
+                if type(x) not in (int, float) or not low <= x <= high or (whole and x != int(x)):
+                    raise ValueError
+                number[()] = x
         np.concatenate(floats, out=self.floats, casting="same_kind")
         self.remaining[()] = remaining
         self.scalars_hold = True
-
-    def _fill_varying(self, columns: Mapping[str, Any]) -> None:
-        for name, number in self.varying.items():
-            x = columns[name]
-            if type(x) not in (int, float) or not SCALAR_RULES[name].holds(x):
-                raise ValueError
-            number[()] = x
-        self._varying_hold = True
 
     def fill_with_care(self, arrays: dict[str, NDArray[Any]], scalars: dict[str, float]) -> None:
         """Copy arrays and scalars in that are known to be numbers of the right shapes."""
@@ -115,8 +113,7 @@ class LeafBuffers:
         """Other numbers of a call beside `remaining` for the same leaves, by name."""
         for name, x in scalars.items():
             self.varying[name][()] = x
-        self._varying_hold = all(SCALAR_RULES[name].holds(x.item()) for name, x in self.varying.items())
-        self.scalars_hold = self._varying_hold and SCALAR_RULES["remaining"].holds(self.remaining.item())
+        self.scalars_hold = SCALAR_RULES["remaining"].holds(self.remaining.item()) and self._varying_hold()
 
     def leave(self, remaining: Any) -> None:
         """Other rollouts left for the same leaves; InputError for what is no number."""
@@ -125,13 +122,17 @@ class LeafBuffers:
             if found.size != 1:
                 raise InputError("remaining", "must be one number", found.shape)
             remaining = found.item()
-        self.scalars_hold = bool(0 <= remaining <= schema.MAX_ROLLOUTS and self._varying_hold)
+        others_hold = not self.varying or self._varying_hold()
+        self.scalars_hold = bool(0 <= remaining <= schema.MAX_ROLLOUTS and others_hold)
         self.remaining[()] = min(remaining, 2.0**1000)  # a whole number may be too large for a float
+
+    def _varying_hold(self) -> bool:
+        return all(SCALAR_RULES[name].holds(number.item()) for name, number in self.varying.items())
 
     @property
     def batch_size(self) -> int:
         """The batch that the call gives, where its kind has one and it may be so; else 0."""
-        return int(self.varying["batch_size"]) if "batch_size" in self.varying and self._varying_hold else 0
+        return int(self.varying["batch_size"]) if "batch_size" in self.varying and self._varying_hold() else 0
 
     def finite(self) -> bool:
         """Whether every number of the columns is finite, and the scalars are what they may be."""

@@ -30,6 +30,7 @@ _KEYS: Final = {"offset": ("reward", "0"), "gain": ("discount", "1")}
 _BELIEF_KEYS: Final = (*schema.GAUSSIAN_COLUMNS, *schema.WIN_LOSS_COLUMNS)
 _LEAF_KEYS: Final = frozenset((*_BELIEF_KEYS, "count", "cost"))
 _SCALAR_KEYS: Final = frozenset(("format", "horizon", "batch", "remaining", "id"))
+_CALL_SCALARS: Final = ("remaining", "horizon", "batch_size")  # of a leaf table
 _MOST_NUMBERS: Final = 4_000_000  # of a record; readers of traces refuse lines of more
 _NUMBER_BYTES: Final = 32  # a number in a list
 
@@ -231,7 +232,7 @@ def _checked(columns: dict[str, NDArray[Any]]) -> tuple[dict[str, NDArray[np.flo
         raise InputError(first, f"must have shape (n,), n from 1 to {MAX_LEAVES}", columns[first].shape)
     out = {}
     for name, x in columns.items():
-        if name in _SCALAR_KEYS:
+        if name in _CALL_SCALARS:
             continue
         if x.shape != (n,):
             raise InputError(name, f"must have shape ({n},), as {first!r}", x.shape)

@@ -22,7 +22,7 @@ from distill.ship import ship
 # File name -> who reads it, given its path.
 READERS: dict[str, Callable[[Path], Any]] = {
     "any.json": read_json,
-    "campaign.json": lambda path: claim(path.parent, {"seeds": 2, "tuning_seeds": 0}, {}),
+    "campaign.json": lambda path: claim(path.parent, {"seeds": 2, "tuning_seeds": 0, "stop_seeds": None}, {}),
     "rehearsal.json": lambda path: rehearse([], [], [], path.parent),
     "summary.json": lambda path: read_summary(path.parent),
     "front.json": lambda path: ship(path.parent, path.with_suffix(".onnx")),

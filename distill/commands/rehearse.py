@@ -65,7 +65,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--scorer", action="append", default=[], metavar="FILE.onnx",
         help="a shipped scorer, beside the policies in the ways that pay; again for more",
     )  # fmt: skip
-    parser.add_argument("--seeds", type=flags.whole(2), metavar="N", help="decisions a cell")
+    parser.add_argument(
+        "--seeds",
+        type=flags.whole(2),
+        metavar="N",
+        help="decisions a cell; more than --out holds plays the further ones, by constants tuned before",
+    )
     parser.add_argument("--tuning-seeds", type=flags.whole(0), metavar="N", help="0 tunes nothing")
     parser.add_argument("--workers", type=flags.whole(1), default=1, metavar="N", help="processes")
     other = parser.add_mutually_exclusive_group()

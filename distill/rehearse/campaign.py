@@ -10,7 +10,7 @@ import os
 import threading
 import time
 from collections.abc import Callable, Iterator
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, dataclass, field, replace
 from functools import cache, lru_cache
 from pathlib import Path
 from typing import Any, Final
@@ -52,13 +52,14 @@ class Campaign:
         constant of UCT and the priors of both Thompson samplings and of the static rate are chosen for
         each problem and number of rollouts where their policies are given by bare name; 0 leaves them as
         they are. A policy that ends in ":prior=auto" has its prior tuned in the same way; one that ends in
-        ":stop=auto" stops at the highest price that costs next to no regret, on half of `seeds` others.
+        ":stop=auto" stops at the highest price that costs next to no regret, on `stop_seeds` others.
     wide : those of the problems that are rehearsed under `wide_budgets` too.
     stops, plenty : policies, with and without ":stop=auto", that play under budgets of their own, alone:
         what stopping saves shows where rollouts are many.
     slowest : seconds of choosing a decision, where only rollouts are limited; slower choosers are left out,
         `stops` apart.
     dearest : the same for exact policies where time is limited, outside the `wide` problems; None: no limit.
+    stop_seeds : None takes half of `seeds`, or where the folder's prices have been tuned, as many as then.
     """
 
     problems: tuple[str, ...]
@@ -72,6 +73,7 @@ class Campaign:
     plenty: tuple[str, ...] = ()
     slowest: float = 0.25
     dearest: float | None = None
+    stop_seeds: int | None = None
 
     def __post_init__(self) -> None:
         for name in self.problems:
@@ -95,6 +97,8 @@ class Campaign:
                 raise InputError("tuning_seeds", f"must be above 0 to tune {name!r}", 0)
         if not 2 <= self.seeds <= TUNING_SEED - _FIRST_SEED:
             raise InputError("seeds", f"must be from 2 to {TUNING_SEED - _FIRST_SEED}", self.seeds)
+        if self.stop_seeds is not None and self.stop_seeds < 2:
+            raise InputError("stop_seeds", "must be at least 2", self.stop_seeds)
         if self.tuning_seeds == 1 or self.tuning_seeds < 0:
             raise InputError("tuning_seeds", "must be 0 or at least 2", self.tuning_seeds)
 
@@ -137,13 +141,15 @@ def run(
 ) -> Results:
     """Run what `folder` does not hold yet; a killed campaign goes on where it was.
 
+    With more `seeds` than before, the further decisions are played, by constants that were tuned before.
+
     workers : processes, each with a problem at a time. progress : called about once a second, with the
     places (a problem under a budget) that are done, those of an earlier run too, and how many there are.
     Raises InputError, before anything is written, where a policy or a scorer file is no good, or the folder
     holds a campaign that this one does not continue.
     """
     folder = Path(folder)
-    claim(folder, asdict(campaign), _checked(campaign))
+    campaign = replace(campaign, stop_seeds=claim(folder, asdict(campaign), _checked(campaign)))
     parts: dict[str, Results] = {}
     calls = [(_problem, (campaign, name, folder, os.getpid())) for name in campaign.problems]
     with _counted(campaign, folder, progress):
@@ -203,7 +209,8 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
         budget = Budget.parse(text)
         rollouts, specs = budget.room(0, 0.0), campaign.policies_under(text)
         if (rollouts, specs) not in tuned:
-            seeds = {"seeds": campaign.tuning_seeds, "stop_seeds": max(campaign.seeds // 2, 2)}
+            assert campaign.stop_seeds is not None  # `run` has settled it
+            seeds = {"seeds": campaign.tuning_seeds, "stop_seeds": campaign.stop_seeds}
             rows = tune(specs, problem, rollouts, folder / "tuning", **seeds, plays=plays)
             out.tuning.extend(rows)
             tuned[rollouts, specs] = {row["policy"]: row["chosen"] for row in rows}
@@ -221,7 +228,7 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
                 goes_on, price = make_policy(untuned(spec)), price_of(texts[spec])
                 play_stops(problem, goes_on, name_of(spec), price, budget, where, **judged)
         out.cells.extend(rehearse([problem], policies, [budget], where, **judged))
-        write_atomic(_place(folder, name, text).with_suffix(".done"), _played(specs))
+        write_atomic(_place(folder, name, text).with_suffix(".done"), _played(specs, campaign.seeds))
     return name, out
 
 
@@ -337,9 +344,9 @@ def _place(folder: Path, problem: str, budget: str) -> Path:
     return folder / "places" / f"{readable[:80]}--{key}.json"
 
 
-def _played(specs: tuple[str, ...]) -> bytes:
-    """What `.done` holds: an earlier run may have been asked for fewer policies."""
-    return (json.dumps(sorted(specs)) + "\n").encode()
+def _played(specs: tuple[str, ...], seeds: int) -> bytes:
+    """What `.done` holds: an earlier run may have been asked for fewer policies, or decisions."""
+    return (json.dumps({"policies": sorted(specs), "seeds": seeds}) + "\n").encode()
 
 
 @contextlib.contextmanager
@@ -349,7 +356,9 @@ def _counted(campaign: Campaign, folder: Path, progress: Callable[[int, int], No
         yield
         return
     places = {
-        _place(folder, problem, budget).with_suffix(".done"): _played(campaign.policies_under(budget))
+        _place(folder, problem, budget).with_suffix(".done"): _played(
+            campaign.policies_under(budget), campaign.seeds
+        )
         for problem in campaign.problems
         for budget in campaign.budgets_of(problem)
     }

@@ -12,24 +12,31 @@ from distill.files import read_json, write_atomic
 
 __all__ = ["claim"]
 
-_FIXED: Final = ("seeds", "tuning_seeds")
 _KEPT: Final = ("problems", "budgets", "policies", "wide", "wide_budgets", "stops", "plenty")
 
 
-def claim(folder: Path, asked: Mapping[str, Any], scorers: Mapping[str, str]) -> None:
+def claim(folder: Path, asked: Mapping[str, Any], scorers: Mapping[str, str]) -> int:
     """Write the campaign into its folder; one that is there already may be added to, never replaced.
 
     asked : the campaign as plain values. scorers : file as the policies name it -> its SHA-256.
-    Raises InputError, and writes nothing, where the folder holds a campaign with other seeds, one with
-    problems, budgets or policies that are not asked for now (the page would lose them), or results of
-    other scorer files of the same path.
+    Returns the decisions on which prices to stop at are tuned, of which more decisions of the cells must make
+    no others: a price, once tuned, stays.
+
+    Raises InputError, and writes nothing, where the folder holds a campaign with more decisions or with other
+    ones for tuning, one with problems, budgets or policies that are not asked for now (the page would lose
+    them), or results of other scorer files of the same path.
     """
     path = folder / "campaign.json"
+    stop_seeds: int | None = asked["stop_seeds"]
     if path.exists():
         found = _read(path)
-        fixed = {name: asked[name] for name in _FIXED}
-        if {name: found.get(name) for name in _FIXED} != fixed:
+        fixed = {"tuning_seeds": asked["tuning_seeds"]}
+        seeds = found.get("seeds")
+        if not isinstance(seeds, int) or {name: found.get(name) for name in fixed} != fixed:
             raise InputError(str(path), f"must hold {json.dumps(fixed)} to be continued")
+        if seeds > asked["seeds"]:
+            rule = f"holds {seeds} decisions a cell; ask for as many or more, or give another --out"
+            raise InputError(str(path), rule, asked["seeds"])
         lost = [x for name in _KEPT for x in _texts(found.get(name)) if x not in asked[name]]
         if lost:
             rule = "holds another campaign; ask for all of it and more, or give another --out. Not asked for"
@@ -38,7 +45,22 @@ def claim(folder: Path, asked: Mapping[str, Any], scorers: Mapping[str, str]) ->
         for file, sha in before.items() if isinstance(before, dict) else ():
             if scorers.get(file, sha) != sha:
                 raise InputError(str(folder), "holds results of another scorer file of this path", file)
-    write_atomic(path, (json.dumps({**asked, "scorers": dict(scorers)}, indent=1) + "\n").encode())
+        if any(x.endswith(":stop=auto") for name in ("policies", "stops") for x in _texts(found.get(name))):
+            tuned = found.get("stop_seeds") or _half(seeds)  # older folders do not say
+            if stop_seeds not in (None, tuned):
+                rule = (
+                    f"holds prices to stop at that were tuned on {tuned} decisions; stop_seeds must be that"
+                )
+                raise InputError(str(path), rule, stop_seeds)
+            stop_seeds = tuned
+    settled = stop_seeds or _half(asked["seeds"])
+    told = {**asked, "stop_seeds": settled, "scorers": dict(scorers)}
+    write_atomic(path, (json.dumps(told, indent=1) + "\n").encode())
+    return settled
+
+
+def _half(seeds: int) -> int:
+    return max(seeds // 2, 2)
 
 
 def _read(path: Path) -> Mapping[str, Any]:

@@ -2,26 +2,22 @@
 
 from __future__ import annotations
 
-import hashlib
-import io
 import json
 import os
 import time
-from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
-from dataclasses import asdict, dataclass, field
+from collections.abc import Callable, Iterable, Iterator, Sequence
+from dataclasses import dataclass
 from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
 import numpy as np
-import pyarrow as pa
-import pyarrow.parquet as pq
 from joblib import delayed
 
 from distill import __version__
 from distill.errors import InputError
 from distill.files import read_json, write_atomic
-from distill.record import to_record
+from distill.rehearse.cells import Cell, digest, file_of, read_cell, write_cell
 from distill.rehearse.loop import Budget, Decided, decide, decide_at_prices, luck_of
 from distill.rehearse.policies import Policy
 from distill.rehearse.problems import Problem
@@ -31,54 +27,7 @@ from distill.workers import local_pool
 
 __all__ = ["Cell", "Compared", "compare", "interval", "play_stops", "rehearse", "resampled"]
 
-_COLUMNS = (
-    "regret", "regret_by_mean", "expected_regret", "rollouts", "choosing", "stopped", "choices", "fallbacks",
-)  # fmt: skip
-_PROCESSOR = "processor"  # column of seconds, not of what was decided
 _RESAMPLES = 2000
-_DIGESTED = 8  # leaves whose first return counts in telling problems apart
-
-
-@dataclass(frozen=True, eq=False)
-class Cell:
-    """All decisions of one policy on one problem under one budget; arrays over seeds, in seed order.
-
-    regret, regret_by_mean, expected_regret : value units, see `Decided`. rollouts : spent.
-    choosing : seconds. stopped : early.
-    choices : made. fallbacks : of them, made by another rule. processor : seconds of this process that
-    each decision took, judging it included; empty where not known.
-    """
-
-    problem: str
-    budget: Budget
-    policy: str
-    regret: Floats
-    regret_by_mean: Floats
-    expected_regret: Floats
-    rollouts: Floats
-    choosing: Floats
-    stopped: Floats
-    choices: Floats
-    fallbacks: Floats
-    processor: Floats = field(default_factory=lambda: np.zeros(0))
-
-    @property
-    def measured(self) -> Floats:
-        """The regret to compare by: `expected_regret` where that is known, else `regret`."""
-        return self.regret if np.any(np.isnan(self.expected_regret)) else self.expected_regret
-
-    @property
-    def fallback_share(self) -> float:
-        """Share of choices that another rule made: near 1, the cell does not show its policy at all."""
-        choices = float(self.choices.sum())
-        return float(self.fallbacks.sum()) / choices if choices > 0 else float("nan")
-
-    @property
-    def choosing_share(self) -> float:
-        """Share of all time that went into choosing, given the budget's cost of a rollout; else nan."""
-        rolling = float(self.rollouts.sum()) * self.budget.rollout_seconds
-        choosing = float(self.choosing.sum())
-        return choosing / (choosing + rolling) if rolling > 0 else float("nan")
 
 
 def rehearse(
@@ -97,18 +46,19 @@ def rehearse(
 
     folder : takes one Parquet file a cell, written when all policies of its problem and budget are done:
         they take turns, decision by decision, so that a busy spell of the machine falls on all alike. Run
-        again with the same arguments, cells that are there are read: a killed rehearsal resumes.
+        again with the same arguments, cells that are there are read: a killed rehearsal resumes. Run again
+        with more seeds, only the further decisions are played.
     values : what the agent acts on, as for `decide`. workers : processes, each with a problem at a time.
     progress : called with cells done and in all, in this process.
 
-    Raises InputError for repeated names, fewer than 2 seeds, or a folder of another rehearsal.
+    Raises InputError for repeated names, fewer than 2 seeds, or a folder of another rehearsal or more seeds.
     """
     _check_names("problem", [p.name for p in problems])
     _check_names("policy", [p.name for p in policies])
     if seeds < 2:
         raise InputError("seeds", "must be at least 2", seeds)
     folder = Path(folder)
-    _claim(folder, {"seeds": seeds, "first_seed": first_seed, "version": __version__})
+    _claim(folder, seeds, first_seed)
     span = range(first_seed, first_seed + seeds)
     total = len(problems) * len(budgets) * len(policies)
     cells: list[Cell] = []
@@ -148,13 +98,16 @@ def play_stops(
     units of the tree's scale; None never stops. The processor's time counts for the one that goes on.
     """
     folder = Path(folder)
-    _claim(folder, {"seeds": seeds, "first_seed": first_seed, "version": __version__})
-    paths = {n: folder / _file_name(problem.name, budget, n) for n in (policy.name, name)}
-    if all(path.exists() for path in paths.values()):
+    _claim(folder, seeds, first_seed)
+    span, drawn = range(first_seed, first_seed + seeds), digest(problem, first_seed)
+    paths = {n: file_of(folder, problem.name, budget, n) for n in (policy.name, name)}
+    found_there = {n: read_cell(path, problem.name, budget, n, span, drawn) for n, path in paths.items()}
+    done = min(0 if cell is None else len(cell) for cell in found_there.values())
+    if done == seeds:
         return
     ends: dict[str, list[Decided]] = {n: [] for n in paths}
     took = []
-    for seed in range(first_seed, first_seed + seeds):
+    for seed in span[done:]:
         rng = luck_of(seed)
         started = time.process_time()
         prices = () if price is None else (price,)
@@ -162,15 +115,10 @@ def play_stops(
         took.append(time.process_time() - started)
         ends[policy.name].append(found[-1])
         ends[name].append(found[0])
-    drawn = _digest(problem, first_seed)
     for n, path in paths.items():
-        columns = _columns(ends[n])
-        columns[_PROCESSOR] = np.array(took) if n == policy.name else np.zeros(seeds)
-        _write(path, Cell(problem.name, budget, n, **columns), first_seed, drawn)
-
-
-def _columns(results: Sequence[Decided]) -> dict[str, Floats]:
-    return {c: np.array([getattr(r, c) for r in results], dtype=np.float64) for c in _COLUMNS}
+        played = Cell.of(problem.name, budget, n, ends[n], took if n == policy.name else [0.0] * len(took))
+        before = found_there[n]
+        write_cell(path, played if before is None else before.followed_by(played, done), first_seed, drawn)
 
 
 def _all_of_problem(*arguments: Any) -> list[Cell]:
@@ -188,42 +136,44 @@ def _of_problem(
     """The cells of one problem, a budget at a time, in the order of `policies`."""
     remembered = Remembered(problem)
     for budget in budgets:
-        paths = {policy.name: folder / _file_name(problem.name, budget, policy.name) for policy in policies}
-        missing = [policy for policy in policies if not paths[policy.name].exists()]
-        made = {}
-        found = _run(remembered, missing, budget, seeds, values)
-        drawn = _digest(remembered, seeds.start)
-        for policy, (results, seconds) in zip(missing, found, strict=True):
-            columns = _columns(results)
-            columns[_PROCESSOR] = np.array(seconds)
-            made[policy.name] = Cell(problem.name, budget, policy.name, **columns)
-            _write(paths[policy.name], made[policy.name], seeds.start, drawn)
-        yield [
-            made[name] if name in made else _read(path, problem.name, budget, name, len(seeds), drawn)
-            for name, path in paths.items()
-        ]
+        drawn = digest(remembered, seeds.start)
+        paths = {policy.name: file_of(folder, problem.name, budget, policy.name) for policy in policies}
+        cells: dict[str, Cell] = {}
+        for name, path in paths.items():
+            if (there := read_cell(path, problem.name, budget, name, seeds, drawn)) is not None:
+                cells[name] = there
+        rest = [(p, seeds[len(cells[p.name]) if p.name in cells else 0 :]) for p in policies]
+        for played in _run(remembered, [(p, further) for p, further in rest if further], budget, values):
+            name = played.policy
+            cells[name] = cells[name].followed_by(played) if name in cells else played
+            write_cell(paths[name], cells[name], seeds.start, drawn)
+        yield [cells[name] for name in paths]
 
 
 def _run(
     problem: Problem,
-    policies: Sequence[Policy],
+    rest: Sequence[tuple[Policy, range]],
     budget: Budget,
-    seeds: range,
     values: Callable[[BeliefTree], Floats] | None,
-) -> list[tuple[list[Decided], list[float]]]:
-    """What came of each policy's decisions, and the processor time of each."""
-    for policy in policies:
+) -> list[Cell]:
+    """The decisions that each policy has not made yet, on seeds of which all end with the same one."""
+    for policy, seeds in rest:
         # Compiling and first use belong to no decision's clock. The seed is none of those compared.
         warm = problem.draw(seeds.stop)
         decide(warm, policy, Budget(rollouts=2), np.random.default_rng(0), values=values)
-    results: list[tuple[list[Decided], list[float]]] = [([], []) for _ in policies]
-    for seed in seeds:
-        for policy, (decided, seconds) in zip(policies, results, strict=True):
+    results: list[tuple[list[Decided], list[float]]] = [([], []) for _ in rest]
+    for seed in sorted({seed for _, seeds in rest for seed in seeds}):
+        for (policy, seeds), (decided, seconds) in zip(rest, results, strict=True):
+            if seed not in seeds:
+                continue
             rng = luck_of(seed)
             started = time.process_time()
             decided.append(decide(problem.draw(seed), policy, budget, rng, values=values))
             seconds.append(time.process_time() - started)
-    return results
+    return [
+        Cell.of(problem.name, budget, policy.name, *found)
+        for (policy, _), found in zip(rest, results, strict=True)
+    ]
 
 
 @dataclass(frozen=True)
@@ -303,56 +253,16 @@ def _check_names(what: str, names: Sequence[str]) -> None:
             raise InputError(what, "must have a name of its own", name)
 
 
-def _claim(folder: Path, settings: Mapping[str, Any]) -> None:
-    """The folder's settings, written the first time and compared ever after."""
+def _claim(folder: Path, seeds: int, first_seed: int) -> None:
+    """The folder's settings, written the first time and compared ever after; seeds may become more."""
     path = folder / "rehearsal.json"
-    if not path.exists():
-        write_atomic(path, (json.dumps(settings, indent=1) + "\n").encode())
+    settings = {"seeds": seeds, "first_seed": first_seed, "version": __version__}
+    found = read_json(path) if path.exists() else None
+    if found == settings:
         return
-    found = read_json(path)
-    if found != dict(settings):
-        raise InputError(str(path), f"must hold {json.dumps(settings)} to be continued", found)
-
-
-def _file_name(problem: str, budget: Budget, policy: str) -> str:
-    """Unique for a cell: what is readable of it, and a hash of all of it."""
-    key = json.dumps([problem, asdict(budget), policy])
-    readable = "".join(c if c.isalnum() else "-" for c in f"{problem}--{policy}")
-    return f"{readable[:80]}--{hashlib.sha256(key.encode()).hexdigest()[:12]}.parquet"
-
-
-def _digest(problem: Problem, seed: int) -> str:
-    """SHA-256 of what a problem deals at one seed: two that share a name are told apart by it."""
-    draw = problem.draw(seed)
-    found = hashlib.sha256(json.dumps(to_record(draw.tree), sort_keys=True).encode())
-    found.update(draw.worth.tobytes())
-    for leaf in range(min(draw.tree.n_leaves, _DIGESTED)):
-        found.update(np.float64(draw.roll(leaf)).tobytes())
-    return found.hexdigest()
-
-
-def _write(path: Path, cell: Cell, first_seed: int, drawn: str) -> None:
-    about = {"problem": cell.problem, "policy": cell.policy, "budget": asdict(cell.budget), "drawn": drawn}
-    columns = {"seed": np.arange(first_seed, first_seed + len(cell.regret))}
-    columns |= {c: getattr(cell, c) for c in (*_COLUMNS, _PROCESSOR)}
-    table = pa.table(columns).replace_schema_metadata({"rehearsal": json.dumps(about)})
-    buffer = io.BytesIO()
-    pq.write_table(table, buffer)
-    write_atomic(path, buffer.getvalue())
-
-
-def _read(path: Path, problem: str, budget: Budget, policy: str, seeds: int, drawn: str) -> Cell:
-    try:
-        table = pq.read_table(path)
-        about = json.loads((table.schema.metadata or {}).get(b"rehearsal", b"{}"))
-    except (OSError, ValueError, pa.ArrowException) as e:
-        raise InputError(
-            str(path), f"must be a readable Parquet file; delete it to play it again ({e})"
-        ) from None
-    if not isinstance(about, dict) or about.get("drawn") != drawn:
-        rule = f"holds decisions of another problem named {problem}: its simulator or settings have changed"
-        raise InputError(str(path), f"{rule}; give another folder")
-    if table.num_rows != seeds or not set(_COLUMNS) <= set(table.column_names):
-        raise InputError(str(path), f"must hold {seeds} decisions", table.num_rows)
-    columns = [c for c in (*_COLUMNS, _PROCESSOR) if c in table.column_names]
-    return Cell(problem, budget, policy, **{c: table[c].to_numpy() for c in columns})
+    if found is not None:
+        before = found.get("seeds") if isinstance(found, dict) else None
+        if not isinstance(before, int) or before > seeds or found != {**settings, "seeds": before}:
+            rule = f"must hold {json.dumps(settings)}, or fewer seeds, to be continued"
+            raise InputError(str(path), rule, found)
+    write_atomic(path, (json.dumps(settings, indent=1) + "\n").encode())

@@ -143,7 +143,7 @@ def _files(campaign: Campaign) -> list[dict[str, Any]]:
 def _processor_seconds(results: Results) -> dict[str, dict[str, float]]:
     """By problem: of the decisions of all cells, and of the tuning.
 
-    Prices to stop at are tuned on half as many decisions as a cell has, so they count with the cells.
+    Prices to stop at are tuned on decisions whose number grows with a cell's, so they count with the cells.
     """
     out: dict[str, dict[str, float]] = {}
 

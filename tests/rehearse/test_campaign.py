@@ -91,7 +91,11 @@ def test_a_killed_campaign_goes_on_to_the_same_regrets(small):
         if a.budget.seconds is None:  # regret at equal time depends on the time that choosing took
             assert np.array_equal(a.regret, b.regret)
     with pytest.raises(InputError, match=r"campaign\.json: must hold .*to be continued"):
-        run(replace(SMALL, seeds=13), folder)
+        run(replace(SMALL, tuning_seeds=7), folder)
+    with pytest.raises(
+        InputError, match=r"campaign\.json: holds 12 decisions a cell; ask for as many or more"
+    ):
+        run(replace(SMALL, seeds=11), folder)
 
 
 def test_figures_are_readable_by_others(small):
@@ -341,6 +345,47 @@ def test_tuned_prices_are_read_when_a_run_goes_on(plenty, tmp_path, monkeypatch)
     kept.write_text("{")
     with pytest.raises(InputError, match="must be valid JSON"):
         run(PLENTY, folder)
+
+
+def test_more_seeds_leave_tuned_constants_as_they_were(plenty, tmp_path, monkeypatch):
+    """As in one run with all the seeds whose prices were tuned on as many decisions as here; older folders
+    do not say on how many, and it was half of their seeds.
+    """
+    folder, before = tmp_path / "raised", plenty[1]
+    shutil.copytree(plenty[0], folder)
+    about = json.loads((folder / "campaign.json").read_text())
+    assert about.pop("stop_seeds") == PLENTY.seeds // 2
+    (folder / "campaign.json").write_text(json.dumps(about))
+    next(
+        folder.glob("cells/*-stops--*.parquet")
+    ).unlink()  # one of two cells that one search gives: both anew
+    more = replace(PLENTY, seeds=26)
+    told = []
+    with monkeypatch.context() as patched:
+        patched.setattr("distill.rehearse.tuning.decide_at_prices", None)  # nothing is tuned anew
+        raised = run(more, folder, progress=lambda done, of: told.append((done, of)))
+    assert (told[0], told[-1]) == ((0, told[0][1]), (told[0][1], told[0][1]))
+    assert json.loads(json.dumps(raised.tuning)) == before["tuning"]
+    assert json.loads((folder / "campaign.json").read_text())["stop_seeds"] == PLENTY.seeds // 2
+    whole = run(replace(more, stop_seeds=PLENTY.seeds // 2), tmp_path / "whole")
+    names = [cell.policy for cell in whole.cells]
+    assert any(name.endswith("-stops") for name in names)
+    assert names == [cell.policy for cell in raised.cells]
+    for a, b in zip([*raised.cells, *raised.unsearched], [*whole.cells, *whole.unsearched], strict=True):
+        assert len(a) == 26
+        if a.budget.seconds is None:
+            for column in ("regret", "expected_regret", "rollouts", "stopped", "choices", "fallbacks"):
+                assert np.array_equal(getattr(a, column), getattr(b, column), equal_nan=True)
+    with pytest.raises(InputError, match="prices to stop at that were tuned on 10 decisions"):
+        run(replace(more, stop_seeds=13), folder)
+
+
+def test_prices_are_tuned_on_half_of_the_seeds_of_whoever_asks_first(tmp_path):
+    """Nothing was tuned on few decisions, so the many that come with the first price count."""
+    small = {"problems": PLENTY.problems, "budgets": ("6",), "plenty": (), "stops": ()}
+    run(replace(PLENTY, **small, seeds=4), tmp_path)
+    more = replace(PLENTY, **small, seeds=12, policies=(*PLENTY.policies, f"{USE}:stop=auto"))
+    assert run(more, tmp_path).campaign.stop_seeds == 6
 
 
 def test_a_budget_is_plenty_or_not():

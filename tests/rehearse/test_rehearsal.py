@@ -6,6 +6,7 @@ import json
 from dataclasses import replace
 
 import numpy as np
+import pyarrow.parquet as pq
 import pytest
 from ladder import CLOSED_FORM
 
@@ -65,11 +66,86 @@ def test_a_killed_rehearsal_resumes_to_the_same_regrets(tmp_path):
 def test_another_rehearsals_folder_is_refused(tmp_path):
     run(tmp_path)
     with pytest.raises(InputError, match=r"rehearsal\.json: must hold .*to be continued"):
-        run(tmp_path, seeds=13)
+        run(tmp_path, seeds=11)
+    with pytest.raises(InputError, match=r"rehearsal\.json: must hold .*to be continued"):
+        run(tmp_path, seeds=14, first_seed=1)
     cell = next(tmp_path.glob("*.parquet"))
     cell.write_bytes(cell.read_bytes()[:100])
     with pytest.raises(InputError, match="must be a readable Parquet file"):
         run(tmp_path)
+
+
+def test_more_seeds_play_only_the_further_decisions(tmp_path):
+    """What is left is what one run with all the seeds leaves, files included, measured times apart."""
+    asked = []
+
+    class Told:
+        name = "even"
+
+        def __init__(self):
+            self.rule = ByRule("even")
+
+        def begin(self, tree):
+            asked.append(tree)
+            self.rule.begin(tree)
+
+        def choose(self, *args):
+            return self.rule.choose(*args)
+
+    first = run(tmp_path / "raised", policies=[Told(), POLICIES[1]], seeds=5)
+    lost = sorted((tmp_path / "raised").glob("*thompson*.parquet"))[0]
+    lost.unlink()  # one policy plays from the start, the others go on
+    asked.clear()
+    raised = run(tmp_path / "raised", policies=[Told(), POLICIES[1]])
+    assert len(asked) == len(PROBLEMS) * len(BUDGETS) * (1 + 12 - 5)  # the first one is for warming up
+    whole = run(tmp_path / "whole")
+    for few, a, b in zip(first, raised, whole, strict=True):
+        for column in (
+            "regret",
+            "regret_by_mean",
+            "expected_regret",
+            "rollouts",
+            "stopped",
+            "choices",
+            "fallbacks",
+        ):
+            assert np.array_equal(getattr(a, column), getattr(b, column), equal_nan=True)
+            assert np.array_equal(getattr(few, column), getattr(a, column)[:5], equal_nan=True)
+        assert len(a.choosing) == len(a.processor) == 12
+    names = sorted(path.name for path in (tmp_path / "whole").iterdir())
+    assert names == sorted(path.name for path in (tmp_path / "raised").iterdir())
+    for name in names:
+        if name.endswith(".parquet"):
+            tables = [pq.read_table(tmp_path / where / name) for where in ("raised", "whole")]
+            told = [table.drop_columns(["choosing", "processor"]) for table in tables]
+            assert told[0].equals(told[1], check_metadata=True)
+            assert tables[0]["seed"].to_pylist() == list(range(12))
+            assert tables[0].schema.field("choosing").metadata[b"description"].startswith(b"s; ")
+    assert (tmp_path / "raised/rehearsal.json").read_bytes() == (
+        tmp_path / "whole/rehearsal.json"
+    ).read_bytes()
+
+
+def test_a_raise_that_was_killed_goes_on_and_files_of_before_are_taken(tmp_path):
+    """Some cells have all decisions, others have not; older files have no processor's time."""
+    whole = run(tmp_path / "whole")
+    run(tmp_path / "few", seeds=5)
+    for number, path in enumerate(sorted((tmp_path / "few").glob("*.parquet"))):
+        if number % 2:
+            path.write_bytes((tmp_path / "whole" / path.name).read_bytes())
+        else:
+            table = pq.read_table(path)
+            pq.write_table(table.drop_columns(["processor"]), path)
+    settings = (tmp_path / "whole/rehearsal.json").read_bytes()
+    (tmp_path / "few/rehearsal.json").write_bytes(settings)
+    for a, b in zip(whole, run(tmp_path / "few"), strict=True):
+        assert np.array_equal(a.regret, b.regret)
+        assert len(b.processor) == 12
+    path = next((tmp_path / "few").glob("*.parquet"))
+    table = pq.read_table(path)
+    pq.write_table(table.slice(1), path)
+    with pytest.raises(InputError, match="must hold the decisions of seeds 0 and on"):
+        run(tmp_path / "few")
 
 
 def test_decisions_of_a_changed_problem_are_not_taken_for_those_of_the_one_before(tmp_path):

@@ -6,6 +6,7 @@
                                    which the learner sees as worthless keep an order
     voc_high = factor voc                  one factor a bin of the features, see `calibration`
     pick = first argmax of voc - cost,  worth_it = max of voc - cost > 0
+    with a batch of each call's own: batch_size cost in place of cost, as for the exact net value
 
 What the estimator sees is cut to the ranges of its training rows; `in_range` says where nothing was cut.
 Before anything is written, the file's own answers are held against the estimator's.
@@ -144,7 +145,8 @@ def _assemble(
     tree = single_tree(upper.feature, upper.split, upper.left, upper.right, upper.factor)
     factor = tail("TreeEnsemble", tail("Concat", x, share, axis=1), domain="ai.onnx.ml", **tree)
     tail("Mul", "voc", tail("Reshape", factor, tail.whole(-1)), out="voc_high")
-    net = tail("Sub", "voc", "cost")
+    given = {x.name for x in features.graph.input}
+    net = tail("Sub", "voc", tail("Mul", "cost", "batch_size") if "batch_size" in given else "cost")
     tail("ArgMax", net, axis=0, keepdims=0, out="pick")
     tail("Greater", tail("ReduceMax", net, keepdims=0), tail.scalar(0.0), out="worth_it")
 

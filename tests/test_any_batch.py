@@ -233,7 +233,9 @@ def forgone(path: Path, dataset: Path) -> tuple[np.ndarray, np.ndarray]:
 def test_one_file_is_nearly_as_good_at_each_batch_as_one_trained_for_it(tmp_path):
     """3,000 trees of three batches against 1,000 of each, three times, on the same 4,000 others of each.
 
-    Judged as files of any horizon are, see there.
+    Judged as files of any horizon are, see there. Measured at k = 1, 4 and 32: files of mixed batches forgo
+    0.042, 0.034 and 0.024 %, those of one 0.088, 0.069 and 0.049 %; the difference ends below 0: what trees
+    of other batches teach serves all.
     """
 
     def trained(data: Path) -> Path:
@@ -254,5 +256,4 @@ def test_one_file_is_nearly_as_good_at_each_batch_as_one_trained_for_it(tmp_path
             np.mean([forgone(path, test) for path in paths], axis=0) for paths in (mixed, own)
         )
         more = ratio_over_trees(100 * (ours - theirs), best)
-        print(k, 100 * ours.sum() / best.sum(), 100 * theirs.sum() / best.sum(), more)
         assert more.high < 0.05, (k, more)

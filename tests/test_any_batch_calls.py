@@ -47,11 +47,30 @@ def test_the_batch_decides_what_is_scored(scorer):
     assert values[1].voc.max() < values[4].voc.max() < values[32].voc.max()
     for k, got in values.items():
         assert np.all(got.batch == k)
-        assert got.pick == int(np.argmax(got.voc - t["cost"]))
+        assert got.pick == int(np.argmax(got.voc - k * t["cost"]))
         assert scorer.pick(**{**t, "batch_size": k}) == got.pick
         for form in (float(k), np.float64(k), np.int32(k), np.array([k]), np.array(k)):
             np.testing.assert_array_equal(scorer.score(**{**t, "batch_size": form}).voc, got.voc)
             assert scorer.pick(**{**t, "batch_size": form}) == got.pick
+
+
+def test_each_rollout_of_a_batch_has_its_cost(scorer):
+    """As in the exact net value: a leaf that is dear a rollout loses to a cheap one as the batch grows."""
+    t = one(batch_size=32)
+    for answers in (scorer, Scorer.closed_form()):
+        free = answers.score(**{**t, "cost": np.zeros(12)})
+        order = np.argsort(free.voc)
+        first, second = order[-1], order[-2]
+        apart = (free.voc[first] - free.voc[second]) / 32
+        for times, pick in ((0.9, first), (1.1, second)):
+            cost = np.zeros(12)
+            cost[first] = times * apart
+            got = answers.score(**{**t, "cost": cost})
+            assert got.pick == answers.pick(**{**t, "cost": cost}) == pick
+            assert got.worth_it
+        for times, worth_it in ((0.9, True), (1.1, False)):
+            got = answers.score(**{**t, "cost": np.full(12, times * free.voc[first] / 32)})
+            assert got.worth_it is worth_it
 
 
 def test_the_batch_is_required_here_and_refused_elsewhere(scorer):

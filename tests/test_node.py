@@ -18,7 +18,7 @@ from leaf_tables import table
 from scorers import KINDS, scorer_bytes
 
 from distill.runtime import Scorer
-from distill.scorer_inputs import ANY_HORIZON
+from distill.scorer_inputs import ANY_BATCH, ANY_HORIZON, InputKind
 
 HERE = Path(__file__).parent / "node"
 MODELS = sorted((Path(__file__).parents[1] / "models").glob("*.onnx"))
@@ -107,16 +107,21 @@ def test_the_page_about_other_languages_shows_what_runs(runner: Path) -> None:
     assert done.stdout.split()[0] == str(want)
 
 
-def test_a_file_for_any_horizon_picks_alike_from_static_to_dynamic(runner: Path, tmp_path: Path) -> None:
-    copy = Path(
-        shutil.copy(Path(__file__).parents[1] / "datasets" / "conformance" / "any-horizon.onnx", tmp_path)
-    )
+@pytest.mark.parametrize(
+    ("kind", "file", "numbers"),
+    [(ANY_HORIZON, "any-horizon.onnx", (0.0, 4.0, np.inf)), (ANY_BATCH, "any-batch.onnx", (1.0, 4.0, 32.0))],
+    ids=["horizon", "batch"],
+)
+def test_a_file_for_any_number_picks_alike_at_each(
+    kind: InputKind, file: str, numbers: tuple[float, ...], runner: Path, tmp_path: Path
+) -> None:
+    copy = Path(shutil.copy(Path(__file__).parents[1] / "datasets" / "conformance" / file, tmp_path))
     cases = [
-        {**table(np.random.default_rng(i), 3 + i, 1 + i % 5, 5 + 9 * i), "horizon": np.array(h)}
+        {**table(np.random.default_rng(i), 3 + i, 1 + i % 5, 5 + 9 * i), kind.varies[0]: np.array(x)}
         for i in range(12)
-        for h in (0.0, 4.0, np.inf)
+        for x in numbers
     ]
-    told = [ANY_HORIZON.to_json({name: np.asarray(x) for name, x in case.items()}) for case in cases]
+    told = [kind.to_json({name: np.asarray(x) for name, x in case.items()}) for case in cases]
     assert_same_answers(Scorer.load(copy), cases, from_node(runner, copy, told))
 
 

@@ -1,5 +1,5 @@
 // Scores the cases of a JSON file by a scorer file: node score.mjs scorer.onnx cases.json
-// A case: the leaf table's arrays by name, `remaining`, and where the file asks for it `horizon`. Prints one JSON line of outputs a case.
+// A case: the leaf table's arrays by name, `remaining`, and where the file asks for it `horizon` or `batch_size`. Prints one JSON line of outputs a case.
 import { readFile } from "node:fs/promises";
 import * as ort from "onnxruntime-web";
 
@@ -11,8 +11,7 @@ const cases = JSON.parse(await readFile(casesFile, "utf8"));
 
 function tensor(name, value) {
     if (name === "action") return new ort.Tensor("int64", BigInt64Array.from(value, BigInt), [value.length]);
-    if (name === "remaining") return new ort.Tensor("float64", Float64Array.of(value), []);
-    if (name === "horizon") {
+    if (["remaining", "horizon", "batch_size"].includes(name)) {
         return new ort.Tensor("float64", Float64Array.of(value === "inf" ? Infinity : value), []);
     }
     return new ort.Tensor("float64", Float64Array.from(value), [value.length]);

@@ -197,7 +197,7 @@ class Scorer:
     def hold(self, *, remaining: Any, **columns: Any) -> HeldLeaves:
         """The leaves of one tree kept ready: `update` what a rollout changed, then `pick` or `score` again.
 
-        Arguments as for `score`; `change` gives another horizon or batch_size. Saves some microseconds a call.
+        Arguments as for `score`; `change` gives another horizon or batch_size. Saves microseconds a call.
         """
         buffers = self._fill_with_care(self._kind_for(columns), columns, remaining, {})
         return HeldLeaves(buffers, self._scored, self._picked)

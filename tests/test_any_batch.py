@@ -22,13 +22,25 @@ from distill.generate import add, generate
 from distill.infer import infer
 from distill.labelling import OWN_BATCH, Asked
 from distill.metrics import picks, ratio_over_trees
-from distill.peers import FIRST_ORDER, MOMENTS, ONE, SAMPLES, STATIC, THOMPSON, UCT
+from distill.peers import (
+    FIRST_ORDER,
+    MOMENTS,
+    ONE,
+    SAMPLES,
+    STATIC,
+    THOMPSON,
+    UCT,
+    left_out,
+    peers,
+    timed_cases,
+)
 from distill.query import Query
 from distill.runtime import Scorer
-from distill.scorer_inputs import ANY_BATCH, VARIES
+from distill.scorer_inputs import ANY_BATCH, LEAF_TABLE, VARIES
 from distill.shift import measure_shifts
 from distill.ship import ship
 from distill.sources import Traces
+from distill.timing import time_exact
 from distill.traces import write_trees
 from distill.train import train
 from distill.tree import leaf_table
@@ -175,6 +187,29 @@ def test_no_exact_value_exceeds_the_bound():
 
 
 # --- measured --------------------------------------------------------------------------------------
+
+
+def test_timed_decisions_and_peers_take_each_ones_own_batch(shipped, monkeypatch):
+    rows, _ = Candidates.read(shipped[0])
+    cases = timed_cases(rows, VALUE, 64, 0)
+    assert {case.columns["batch_size"] for case in cases} == {1.0, 4.0, 32.0}
+    asked = []
+    monkeypatch.setattr("distill.timing.price", lambda _tree, query: asked.append(query))
+    time_exact(cases, calls=len(cases))
+    assert asked[1:] == [Query(math.inf, int(c.columns["batch_size"]), c.remaining) for c in cases]
+    for case in cases[:5]:
+        k = int(case.columns["batch_size"])
+        fixed = {name: x for name, x in case.columns.items() if name != "batch_size"}
+        ours, theirs = (
+            peers(value, 4, 0, kind=kind)
+            for value, kind in ((VALUE, ANY_BATCH), ({**VALUE, "batch": k}, LEAF_TABLE))
+        )
+        assert set(ours) == set(theirs)
+        for name in (FIRST_ORDER, ONE, STATIC, MOMENTS, SAMPLES, UCT, THOMPSON):
+            got, want = ours[name](case.columns, 9.0), theirs[name](fixed, 9.0)
+            np.testing.assert_array_equal(got, want, err_msg=name)
+    assert left_out(ANY_BATCH, VALUE) == {}
+    assert set(left_out(ANY_BATCH, {"horizon": 0.0, "batch": VARIES})) == {STATIC, MOMENTS, SAMPLES}
 
 
 def test_validation_on_mixed_and_on_single_batches(shipped, tmp_path):

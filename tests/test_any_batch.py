@@ -169,10 +169,9 @@ def test_what_a_scorer_cannot_take_is_refused_by_name(tmp_path):
 
 
 def test_infer_writes_the_batches_that_records_state():
-    trees = [draw(family(), 3, i) for i in range(25)]
+    trees = [draw(family(), 3, i) for i in range(15)]
+    trees[0] = replace(trees[0], batch=None)
     assert infer(trees).family["budget.batch"].args == (1, 4, 32)
-    none = [replace(tree, batch=None) for tree in trees]
-    assert "budget.batch" not in infer(none).family.fields
 
 
 def test_no_exact_value_exceeds_the_bound():
@@ -243,10 +242,6 @@ def test_audit_asks_each_recorded_tree_at_its_own_batch(shipped, tmp_path):
     step = found["drift"]["columns"]["step"]
     assert step["meaning"] == "feature step, median leaf"
     assert not step["drifted"]
-    # The same trees rolled out one by one are unlike those of training, and the features say so.
-    write_trees(tmp_path / "one.jsonl", [replace(tree, batch=None) for tree in trees])
-    single = audit(shipped[1], [tmp_path / "one.jsonl"], trees=60, n_boot=20, family=family()).figures
-    assert single["drift"]["columns"]["step"]["now"][2] < step["now"][2]
 
 
 def test_shifts_keep_each_trees_batch(scorer):

@@ -6,7 +6,7 @@
                                    which the learner sees as worthless keep an order
     voc_high = factor voc                  one factor a bin of the features, see `calibration`
     pick = first argmax of voc - cost,  worth_it = max of voc - cost > 0
-    with a batch of each call's own: batch_size cost in place of cost, as for the exact net value
+    of the value of a batch: so many times the cost in place of cost, as for the exact net value
 
 What the estimator sees is cut to the ranges of its training rows; `in_range` says where nothing was cut.
 Before anything is written, the file's own answers are held against the estimator's.
@@ -91,7 +91,7 @@ def export_scorer(
         raise ExportError("ranges must be finite, least before largest")
     converted = convert(estimator, len(feature_graph.names))
     _check_estimator(estimator, converted, limits)
-    model = _assemble(feature_graph.model, converted, transform, limits, upper)
+    model = _assemble(feature_graph.model, converted, transform, limits, upper, _batch_of(metadata))
     session = _session(model)
     matrix = feature_graph.matrix(self_test_columns)
     table = feature_graph.table(self_test_columns)
@@ -114,6 +114,7 @@ def _assemble(
     transform: str,
     limits: NDArray[np.float32],
     upper: UpperBound,
+    batch: int,
 ) -> onnx.ModelProto:
     """Feature nodes as they are, the estimator's nodes, and the decision, as one model."""
     boosting = converted.graph.node[0].op_type == "TreeEnsemble"
@@ -145,8 +146,12 @@ def _assemble(
     tree = single_tree(upper.feature, upper.split, upper.left, upper.right, upper.factor)
     factor = tail("TreeEnsemble", tail("Concat", x, share, axis=1), domain="ai.onnx.ml", **tree)
     tail("Mul", "voc", tail("Reshape", factor, tail.whole(-1)), out="voc_high")
-    given = {x.name for x in features.graph.input}
-    net = tail("Sub", "voc", tail("Mul", "cost", "batch_size") if "batch_size" in given else "cost")
+    cost = "cost"
+    if "batch_size" in {x.name for x in features.graph.input}:
+        cost = tail("Mul", cost, "batch_size")
+    elif batch > 1:
+        cost = tail("Mul", cost, tail.double(float(batch)))
+    net = tail("Sub", "voc", cost)
     tail("ArgMax", net, axis=0, keepdims=0, out="pick")
     tail("Greater", tail("ReduceMax", net, keepdims=0), tail.scalar(0.0), out="worth_it")
 
@@ -168,6 +173,13 @@ def _assemble(
     model = helper.make_model(graph, opset_imports=opsets, ir_version=IR_VERSION)
     model.producer_name = "voc-distill"
     return model
+
+
+def _batch_of(metadata: Mapping[str, Any]) -> int:
+    """Rollouts that a scored value is of: those of a batch that all calls share, else 1."""
+    value = metadata.get("value")
+    batch = value.get("batch") if isinstance(value, dict) else None
+    return batch if isinstance(batch, int) else 1
 
 
 def _needed(nodes: list[onnx.NodeProto], wanted: set[str]) -> list[onnx.NodeProto]:

@@ -52,9 +52,9 @@ class Scores(NamedTuple):
     the exact value lies at or below it as often as `facts["calibration"]` states. in_range : (n,), False
     where the leaf is unlike those of training, or where the file had no answer and `voc` is the closed-form
     static rate. There, and with files that have none, `voc_high` is a bound that no value of such a leaf
-    exceeds, or `voc` where that is larger. pick : position of the largest voc - cost, with a batch_size of
-    voc - batch_size cost, the first on ties. worth_it : whether that is above 0. With `tree`, pick (a
-    position within its tree) and worth_it have one entry a tree.
+    exceeds, or `voc` where that is larger. pick : position of the largest voc - cost, the first on ties;
+    where the value is of k rollouts together, of voc - k cost. worth_it : whether that is above 0. With
+    `tree`, pick (a position within its tree) and worth_it have one entry a tree.
     """
 
     voc: Floats
@@ -321,7 +321,8 @@ class Scorer:
         high = np.maximum(high, voc)
         if buffers.has_bound:
             high[in_range] = buffers.out["voc_high"][in_range]
-        net = np.where(usable, voc - buffers.columns["cost"] * (buffers.batch_size or 1), -np.inf)
+        rollouts = buffers.batch_size or self._batch or 1
+        net = np.where(usable, voc - buffers.columns["cost"] * rollouts, -np.inf)
         pick = int(np.argmax(net))
         return Scores(voc, batch, high, in_range, pick, bool(net[pick] > 0))
 

@@ -10,6 +10,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 from ladder import CLOSED_FORM, QUADRATURE
+from leaf_tables import table
 from small_dataset import FAMILY, labelled
 
 from distill.audit import audit
@@ -287,3 +288,21 @@ def test_one_file_is_nearly_as_good_at_each_batch_as_one_trained_for_it(tmp_path
         )
         more = ratio_over_trees(100 * (ours - theirs), best)
         assert more.high < 0.05, (k, more)
+
+
+def test_each_rollout_of_a_fixed_batch_has_its_cost_too(tmp_path):
+    """The file and the closed form that answers for it, as the exact net value: voc - 8 cost."""
+    train(labelled(tmp_path / "d", trees=60, batch=8), tmp_path / "t", recipes=["linear"], n_boot=20)
+    scorer = Scorer.load(tmp_path / "t" / "linear.onnx", strict=True)
+    t = table(np.random.default_rng(3), 12, 3)
+    for late in (None, 0.0):  # a deadline that has passed: the closed form answers
+        free = scorer.score(**{**t, "cost": np.zeros(12)}, deadline=late)
+        second, first = np.argsort(free.voc)[-2:]
+        apart = (free.voc[first] - free.voc[second]) / 8
+        for times, pick in ((0.9, first), (1.1, second)):
+            cost = np.where(np.arange(12) == first, times * apart, 0.0)
+            assert scorer.score(**{**t, "cost": cost}, deadline=late).pick == pick
+            assert scorer.pick(**{**t, "cost": cost}, deadline=late) == pick
+        for times, worth_it in ((0.9, True), (1.1, False)):
+            dear = {**t, "cost": np.full(12, times * free.voc[first] / 8)}
+            assert scorer.score(**dear, deadline=late).worth_it is worth_it

@@ -18,7 +18,7 @@ from distill.report.pictures import front_picture, pictures
 from distill.report.tables import origin, tables
 from distill.report.theme import one_line, standalone
 from distill.report.words import CAUTION, SHARE_NAMES, WORDS
-from distill.scorer_inputs import worded
+from distill.scorer_inputs import worded, worded_batch
 
 __all__ = ["front_svg", "page", "write_page"]
 
@@ -76,7 +76,7 @@ def _scored(value: Figures) -> str:
         what = kind.format("rate")
         return f"What is scored is the {what}: the best value a rollout, within the rollouts left."
     what = kind.format("value")
-    return f"What is scored is the {what} of {value['batch']} rollout{'s' * (value['batch'] != 1)} at a leaf."
+    return f"What is scored is the {what} of {worded_batch(value['batch'])} at a leaf."
 
 
 def _tiles(sheet: Figures) -> list[ET.Element]:

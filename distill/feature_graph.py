@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from distill import features, features_any_horizon, features_record, features_win_loss
 from distill.errors import InputError
 from distill.feature_nodes import FeatureMatrix
-from distill.scorer_inputs import ANY_HORIZON, KINDS, LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
+from distill.scorer_inputs import ANY_BATCH, ANY_HORIZON, KINDS, LEAF_TABLE, RECORD, WIN_LOSS_TABLE, InputKind
 
 __all__ = ["FeatureGraph", "FeatureMatrix"]
 
@@ -40,9 +40,20 @@ class FeatureGraph:
         )
 
     @classmethod
-    def of_value(cls, value: Mapping[str, Any], kind: InputKind = LEAF_TABLE) -> FeatureGraph:
-        """The graph for a dataset's `value`: its horizon, and its batch or None for the rate; or VARIES."""
+    def of_value(
+        cls, value: Mapping[str, Any], kind: InputKind = LEAF_TABLE, *, lean: bool = False
+    ) -> FeatureGraph:
+        """The graph for a dataset's `value`: its horizon, and its batch or None for the rate; or VARIES.
+
+        lean : the one with fewer nodes; InputError where there is none, see `has_lean`.
+        """
         batch = value["batch"]
+        if lean:
+            if not cls.has_lean(value, kind):
+                raise InputError(
+                    "lean features", "are those of dynamic values of a Gaussian leaf table", kind.name
+                )
+            return cls(features.build_graph(batch=batch, lean=True))
         if kind is ANY_HORIZON:
             return cls(features_any_horizon.build_graph(batch=batch))
         if kind is RECORD:
@@ -50,6 +61,11 @@ class FeatureGraph:
         horizon = float(value["horizon"])
         build = features_win_loss.build_graph if kind is WIN_LOSS_TABLE else features.build_graph
         return cls(build(horizon=horizon, batch=batch))
+
+    @staticmethod
+    def has_lean(value: Mapping[str, Any], kind: InputKind) -> bool:
+        """Whether there are lean features too."""
+        return kind in (LEAF_TABLE, ANY_BATCH) and value["horizon"] == "inf"
 
     def matrix(self, columns: Mapping[str, Any]) -> FeatureMatrix:
         """Features of every row, tree by tree, exactly as a scorer meets them.

@@ -67,7 +67,12 @@ def threshold_shift(g: Nodes, y: str, theta: str) -> tuple[str, str, str]:
 def loss(g: Nodes, z: str) -> str:
     """f(-|z|), within 5 %, relative, however small."""
     bottom = loss_bottom(g, z)
-    return g("Div", g("Exp", g("Mul", g("Mul", z, z), g.double(-0.5))), bottom)
+    return g("Div", _bell(g, z), bottom)
+
+
+def _bell(g: Nodes, z: str) -> str:
+    """exp(-z^2 / 2)."""
+    return g("Exp", g("Mul", g("Mul", z, z), g.double(-0.5)))
 
 
 def loss_bottom(g: Nodes, z: str) -> str:
@@ -146,6 +151,10 @@ class Start:
         g = self.g
         tail = loss(g, self.z)
         return g("Mul", self.unit if slope is None else g("Mul", self.unit, slope), tail)
+
+    def fall(self) -> str:
+        """unit exp(-z^2 / 2), the exponent of `value` alone: what it leaves out is smooth in the features."""
+        return self.g("Mul", self.unit, _bell(self.g, self.z))
 
     def model(
         self, value: str, columns: tuple[str, ...], names: tuple[str, ...], kind: InputKind

@@ -52,10 +52,11 @@ _RANGE_MARGIN = 0.05
 
 @dataclass(frozen=True)
 class Recipe:
-    """One scorer of the front: its name, and how to make its learner from a seed."""
+    """One scorer of the front: its name, how to make its learner from a seed, and if on lean features."""
 
     name: str
     make: Callable[[int], Any]
+    lean: bool = False
 
     @property
     def file(self) -> str:
@@ -70,11 +71,11 @@ def _boosting(n_trees: int, n_leaves: int) -> Recipe:
     return Recipe(f"boosting {n_trees}x{n_leaves}", make)
 
 
-def _dense(*layers: int) -> Recipe:
+def _dense(*layers: int, lean: bool = False) -> Recipe:
     def make(seed: int) -> DenseLearner:
         return DenseLearner(target=_TARGET, layers=layers, random_state=seed)
 
-    return Recipe(f"dense {'-'.join(map(str, layers))}", make)
+    return Recipe(f"{'lean ' * lean}dense {'-'.join(map(str, layers))}", make, lean)
 
 
 # The ratio to the first-order value serves tiny values as well as large ones; sqrt serves large ones only.
@@ -86,6 +87,7 @@ RECIPES: Mapping[str, Recipe] = {
         _boosting(25, 8),
         _boosting(100, 31),
         _boosting(300, 31),
+        _dense(16, 16, lean=True),
         _dense(8, 8),
         _dense(16, 16),
         _dense(32, 32),
@@ -116,31 +118,38 @@ def train(
 ) -> dict[str, Any]:
     """Train every recipe on a labelled dataset; leave one scorer file each, and `front.json`, in `out`.
 
-    recipes : names in RECIPES, None for all. Returns what `front.json` holds: accuracy of each file on
-    held-out trees, its decision latency, the closed forms on the same trees, and the exact methods' time
-    in the same run. The same dataset, seed and versions give the same .onnx bytes with any number of
-    threads. Raises InputError on a dataset too small to split.
+    recipes : names in RECIPES, None for all that there are for the dataset's value. Returns what `front.json`
+    holds: accuracy of each file on held-out trees, its decision latency, the closed forms on the same trees,
+    and the exact methods' time in the same run. The same dataset, seed and versions give the same .onnx
+    bytes with any number of threads. Raises InputError on a dataset too small to split, or a lean recipe for
+    a value that has none.
     """
     started = time.perf_counter()
     out = Path(out)
     chosen = _recipes(recipes)
     data, about = Candidates.read(dataset)
+    if recipes is None and not FeatureGraph.has_lean(about["value"], data.kind):
+        chosen = [recipe for recipe in chosen if not recipe.lean]
     split = split_by_tree(data, seed)
     out.mkdir(parents=True, exist_ok=True)
     with bar("features", 2 + 2 * len(chosen), "steps", shown=progress) as advance:
         graph = FeatureGraph.of_value(about["value"], data.kind)
-        fit, choose, held_out = (graph.matrix({**c.columns, "tree": c.tree}) for c in vars(split).values())
+        first_order = graph.matrix({**split.held_out.columns, "tree": split.held_out.tree}).first_order
+        given = {
+            lean: _Given.of(FeatureGraph.of_value(about["value"], data.kind, lean=lean), split)
+            for lean in {recipe.lean for recipe in chosen}
+        }
         cases = timed_cases(split.held_out, about["value"], _LEAVES, seed)
         facts = tree_facts(split.held_out)
         scorers: list[dict[str, Any]] = []
         for recipe in chosen:
             advance(1, f"train {recipe.name}")
             path = out / recipe.file
-            fit_seconds = _fit_and_export(recipe, split, fit, choose, graph, about, seed, path)
+            fit_seconds = _fit_and_export(recipe, split, given[recipe.lean], about, seed, path)
             advance(1, f"validate {recipe.name}")
             scorers.append(_examine(recipe, path, split, facts, cases, fit_seconds, n_boot, seed))
         advance(1, "closed forms and exact methods")
-        beside = baselines(split.held_out, held_out.first_order, n_boot=n_boot, seed=seed)
+        beside = baselines(split.held_out, first_order, n_boot=n_boot, seed=seed)
         equal = min(e["latency"]["p50_us"] for e in scorers)
         rivals, no_rivals = measure_peers(
             split.held_out, cases, about["value"], equal, n_boot=n_boot, seed=seed
@@ -177,18 +186,30 @@ def train(
 # --- one recipe ------------------------------------------------------------------------------------
 
 
+@dataclass(frozen=True, eq=False)
+class _Given:
+    """What a learner is given: a feature graph, and its matrix of the parts `fit` and `choose`."""
+
+    graph: FeatureGraph
+    fit: FeatureMatrix
+    choose: FeatureMatrix
+
+    @classmethod
+    def of(cls, graph: FeatureGraph, split: Split) -> _Given:
+        parts = (graph.matrix({**c.columns, "tree": c.tree}) for c in (split.fit, split.choose))
+        return cls(graph, *parts)
+
+
 def _fit_and_export(
     recipe: Recipe,
     split: Split,
-    matrix: FeatureMatrix,
-    choose: FeatureMatrix,
-    graph: FeatureGraph,
+    given: _Given,
     about: Mapping[str, Any],
     seed: int,
     path: Path,
 ) -> float:
     """Fit on the part `fit`, calibrate on `choose`, write the scorer file; seconds that the fit took."""
-    data = split.fit
+    data, matrix = split.fit, given.fit
     learner = recipe.make(seed)
     start = time.perf_counter()
     usable = matrix.unit > 0
@@ -206,7 +227,7 @@ def _fit_and_export(
         return bin_columns(x, m.leaf_sd, rows.groups), rows.label, voc
 
     upper = calibrated(
-        *scored(choose, split.choose),
+        *scored(given.choose, split.choose),
         len(split.choose.groups.sizes),
         training=scored(matrix, data),
         weight=split.choose.weight,
@@ -214,7 +235,7 @@ def _fit_and_export(
     test = split.choose.of_trees(np.arange(len(split.choose.groups.sizes)) < _SELF_TEST_TREES)
     export_scorer(
         learner.model_,
-        graph,
+        given.graph,
         transform=learner.target,
         ranges=ranges,
         upper=upper,

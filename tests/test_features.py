@@ -32,7 +32,8 @@ from distill.timing import tree_of
 from distill.traces import read_trees
 from distill.tree import leaf_table
 
-GRAPH = FeatureGraph()
+GRAPH, LEAN = FeatureGraph(), FeatureGraph(build_graph(lean=True))
+both = pytest.mark.parametrize("graph", [GRAPH, LEAN], ids=["rich", "lean"])
 seeds = st.integers(0, 2**32 - 1)
 
 
@@ -189,9 +190,10 @@ def test_a_single_action_of_finite_horizon_is_worth_something():
     assert np.all(np.abs(np.log(got.first_order[large] / exact[large])) < np.log(3))
 
 
+@both
 @settings(deadline=None, max_examples=30, derandomize=True)
 @given(seeds, st.sampled_from([1e-8, 1e-3, 7.0, 1e6, 1e100]), st.sampled_from([0.0, 1e-3, 5.0, -1e4]))
-def test_scale_and_shift_of_utilities_change_no_feature(seed, scale, shift):
+def test_scale_and_shift_of_utilities_change_no_feature(graph, seed, scale, shift):
     rng = np.random.default_rng(seed)
     n = int(rng.integers(1, 50))
     t = table(rng, n, int(rng.integers(1, n + 1)))
@@ -202,15 +204,16 @@ def test_scale_and_shift_of_utilities_change_no_feature(seed, scale, shift):
         "noise_var": t["noise_var"] * scale**2,
         "offset": (t["offset"] + shift) * scale,
     }
-    a, b = GRAPH.matrix(t), GRAPH.matrix(moved)
+    a, b = graph.matrix(t), graph.matrix(moved)
     np.testing.assert_allclose(b.x, a.x, rtol=ONNX_FLOAT, atol=ONNX_FLOAT)
     np.testing.assert_allclose(b.unit, a.unit * scale, rtol=RELATIVE_TAIL)
     assert np.all(np.abs(a.batch - b.batch) <= 1)
 
 
+@both
 @settings(deadline=None, max_examples=30, derandomize=True)
 @given(seeds)
-def test_relabelling_leaves_and_actions_permutes_the_rows(seed):
+def test_relabelling_leaves_and_actions_permutes_the_rows(graph, seed):
     rng = np.random.default_rng(seed)
     n = int(rng.integers(2, 50))
     n_actions = int(rng.integers(1, min(n, 8) + 1))
@@ -219,20 +222,21 @@ def test_relabelling_leaves_and_actions_permutes_the_rows(seed):
     name = rng.permutation(n_actions)
     moved = {k: v[order] if isinstance(v, np.ndarray) else v for k, v in t.items()}
     moved["action"] = name[moved["action"]]
-    a, b = GRAPH.matrix(t), GRAPH.matrix(moved)
+    a, b = graph.matrix(t), graph.matrix(moved)
     np.testing.assert_allclose(b.x, a.x[order], rtol=FEATURE_ORDER, atol=FEATURE_ORDER)
 
 
+@both
 @settings(deadline=None, max_examples=60, derandomize=True)
 @given(seeds, st.floats(-12, 12), st.floats(-8, 8), st.floats(-8, 8))
-def test_decades_of_scale_and_variance_give_finite_numbers(seed, scale, spread, noise):
+def test_decades_of_scale_and_variance_give_finite_numbers(graph, seed, scale, spread, noise):
     rng = np.random.default_rng(seed)
     n = int(rng.integers(1, 60))
     t = table(rng, n, int(rng.integers(1, n + 1)), int(10 ** rng.uniform(0, 15)))
     t["var"] = t["var"] * 10.0 ** (scale + spread * rng.random(n)) * (rng.random(n) < 0.8)
     t["noise_var"] = t["noise_var"] * 10.0 ** (scale + noise * rng.random(n))
     t["mean"] = t["mean"] * 10.0 ** (scale / 2 + rng.uniform(-3, 3))
-    got = GRAPH.matrix(t)
+    got = graph.matrix(t)
     assert all(np.all(np.isfinite(part)) for part in got)
     assert np.all(got.first_order >= 0)
     assert np.all(got.unit >= 0)
@@ -240,39 +244,43 @@ def test_decades_of_scale_and_variance_give_finite_numbers(seed, scale, spread, 
     assert np.all((got.batch >= 1) & (got.batch <= t["remaining"]))
 
 
-def test_extreme_finite_inputs_give_finite_numbers():
+@both
+def test_extreme_finite_inputs_give_finite_numbers(graph):
     for mean in (-1e100, 0.0, 1e100):
         for var in (0.0, 1e-300, 1e200):
             for noise in (1e-300, 1.0, 1e200):
                 t = table(np.random.default_rng(2), 6, 3)
                 t["mean"][2], t["var"][2], t["noise_var"][2] = mean, var, noise
-                got = GRAPH.matrix(t)
+                got = graph.matrix(t)
                 assert all(np.all(np.isfinite(part)) for part in got), (mean, var, noise)
 
 
-def test_one_action_and_no_rollout_left_are_worth_nothing():
+@both
+def test_one_action_and_no_rollout_left_are_worth_nothing(graph):
     rng = np.random.default_rng(3)
     for n in (1, 7, 300):
-        assert np.all(GRAPH.matrix(table(rng, n, 1)).first_order == 0)
-    got = GRAPH.matrix(table(rng, 9, 4, remaining=0))
+        assert np.all(graph.matrix(table(rng, n, 1)).first_order == 0)
+    got = graph.matrix(table(rng, 9, 4, remaining=0))
     assert np.all(got.first_order == 0)
     assert np.all(got.unit == 0)
     assert np.all(got.batch == 0)
 
 
-def test_thousands_of_leaves():
+@both
+def test_thousands_of_leaves(graph):
     rng = np.random.default_rng(4)
     for n_actions in (1, 2, 64, 4096):
-        got = GRAPH.matrix(table(rng, 4096, n_actions))
+        got = graph.matrix(table(rng, 4096, n_actions))
         assert all(np.all(np.isfinite(part)) for part in got)
 
 
-def test_rows_of_many_trees_equal_each_tree_alone():
+@both
+def test_rows_of_many_trees_equal_each_tree_alone(graph):
     columns = rows(np.random.default_rng(5), 12)
-    whole = GRAPH.matrix(columns)
+    whole = graph.matrix(columns)
     for i in range(12):
         at = columns["tree"] == i
-        alone = GRAPH.matrix({k: v[at] for k, v in columns.items() if k != "tree"})
+        alone = graph.matrix({k: v[at] for k, v in columns.items() if k != "tree"})
         for a, b in zip(whole, alone, strict=True):
             np.testing.assert_array_equal(a[at], b)
 
@@ -287,10 +295,11 @@ def test_bad_columns_are_named():
         GRAPH.matrix({**t, "tree": np.array([0, 1, 0, 1, 0, 1])})
 
 
-def test_the_graph_is_clean_and_the_same_every_time():
-    model = build_graph()
+@pytest.mark.parametrize("lean", [False, True])
+def test_the_graph_is_clean_and_the_same_every_time(lean):
+    model = build_graph(lean=lean)
     onnx.checker.check_model(model, full_check=True)
-    again = build_graph()
+    again = build_graph(lean=lean)
     assert model.SerializeToString(deterministic=True) == again.SerializeToString(deterministic=True)
 
 
@@ -320,3 +329,22 @@ def test_no_recorded_tree_is_too_sure_for_the_table():
             assert np.all(np.isfinite(got.x))
             seen += 1
     assert seen >= 500
+
+
+def test_lean_features_are_the_same_columns_from_fewer_nodes():
+    columns = rows(np.random.default_rng(12), 30)
+    rich, lean = GRAPH.matrix(columns), LEAN.matrix(columns)
+    assert LEAN.names == GRAPH.names
+    assert len(LEAN.model.graph.node) == len(GRAPH.model.graph.node) - 7
+    assert np.all(np.median(np.abs(lean.x - rich.x), axis=0) < FEATURE_TABLE)  # tables of other cells
+    z = lean.x[:, 0].astype(float)
+    near = np.abs(z) < 5  # farther out, float32 of z shows
+    assert near.sum() > 300
+    start = lean.unit * np.exp(-(z**2) / 2)
+    np.testing.assert_allclose(lean.first_order[near], start[near], rtol=ONNX_FLOAT)
+
+
+@pytest.mark.parametrize("horizon", [0.0, 4.0])
+def test_lean_features_are_of_dynamic_values(horizon):
+    with pytest.raises(InputError, match="lean: must be of an infinite horizon; got"):
+        build_graph(horizon=horizon, lean=True)

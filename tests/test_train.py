@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+import onnx
 import pytest
 from small_dataset import labelled
 
@@ -223,6 +224,27 @@ def test_recipes_cover_the_three_learners() -> None:
     kinds = {type(r.make(0)).__name__ for r in RECIPES.values()}
     assert kinds == {"LinearLearner", "BoostingLearner", "DenseLearner"}
     assert len({r.file for r in RECIPES.values()}) == len(RECIPES)
+
+
+def test_a_lean_recipe_is_trained_on_features_of_fewer_nodes(dataset: Path, tmp_path: Path) -> None:
+    front = train(dataset, tmp_path / "front", seed=2, recipes=["lean dense 16-16", "dense 16-16"], n_boot=20)
+    nodes = [len(onnx.load(tmp_path / "front" / e["file"]).graph.node) for e in front["scorers"]]
+    assert nodes[0] == nodes[1] - 7
+    for entry in front["scorers"]:
+        assert entry["held_out"]["forgone_percent"]["value"] < 1
+
+
+def test_values_without_lean_features_are_trained_without_them(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    folder = labelled(tmp_path / "data", trees=60, horizon=0.0)
+    few = {name: RECIPES[name] for name in ("lean dense 16-16", "linear")}
+    monkeypatch.setattr("distill.train.RECIPES", few)
+    assert [e["recipe"] for e in train(folder, tmp_path / "front", n_boot=2)["scorers"]] == ["linear"]
+    with pytest.raises(
+        InputError, match="lean features: are those of dynamic values of a Gaussian leaf table"
+    ):
+        train(folder, tmp_path / "front", recipes=["lean dense 16-16"])
 
 
 @pytest.mark.parametrize(

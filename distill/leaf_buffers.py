@@ -140,9 +140,21 @@ class LeafBuffers:
         # Searching the bytes takes a quarter of the time of `all`.
         return b"\0" not in self._is_finite.tobytes() and self.scalars_hold
 
+    def _all_usable(self) -> bool:
+        """Whether every row keeps its rules, in a quarter of the time that telling them apart takes."""
+        n, low, high = len(self.action), *self.kind.limits
+        rows = self.floats.reshape(len(low), n)
+        held = (rows >= low) & (rows <= high)
+        # A negative action is a huge one as an unsigned number.
+        placed = not self.kind.has_action or int(self.action.view(np.uint64).max()) < n
+        ordered = "high" not in self.columns or bool(np.all(self.columns["high"] > self.columns["low"]))
+        return placed and ordered and self.scalars_hold and b"\0" not in held.tobytes()
+
     def usable(self, strict: bool) -> NDArray[np.bool_]:
         """Rows whose values the input may hold; with `strict` the first other one is an error."""
         n = len(self.action)
+        if self._all_usable():
+            return np.ones(n, dtype=bool)
         rules = self.kind.rules(self.columns)
         if self.kind.has_action:
             rules["action"] = ((self.action >= 0) & (self.action < n), f"must be from 0 to {n - 1}")
@@ -166,6 +178,8 @@ def number_array(name: str, value: Any, kind: str) -> NDArray[Any]:
         array = np.asarray(value)
     except (ValueError, TypeError, OverflowError):
         raise InputError(name, "must be an array of numbers") from None
+    if array.size == 0 and array.dtype.kind == "f":
+        return array  # of no numbers, as NumPy makes of []: what is wrong is the shape
     if array.dtype.kind not in ("iu" if kind == "i" else "iuf"):
         what = "whole numbers" if kind == "i" else "numbers"
         raise InputError(name, f"must hold {what}", str(array.dtype))

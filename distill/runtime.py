@@ -81,6 +81,16 @@ class Counters:
     fallback: int = 0
 
 
+class _Mended(NamedTuple):
+    """Of each leaf: if its values may be so, if the file's answer stands, value, batch, value less cost."""
+
+    usable: NDArray[np.bool_]
+    kept: NDArray[np.bool_]
+    voc: Floats
+    batch: NDArray[np.int64]
+    net: Floats
+
+
 class _Local(threading.local):
     """Buffers of the calling thread, by kind and number of leaves; the oldest is dropped first."""
 
@@ -224,7 +234,7 @@ class Scorer:
             return int(buffers.pick)
         if buffers.answered:  # mending needs the values too
             buffers.answered = self._answers(buffers, buffers.binding)
-        return int(self._mend(buffers).pick)
+        return int(self._mended(buffers).net.argmax())
 
     def _kind_for(self, columns: dict[str, Any]) -> InputKind:
         """The file's kind, or without a file that of the columns; InputError where they are not its own."""
@@ -296,35 +306,50 @@ class Scorer:
         return kept[n]
 
     def _mend(self, buffers: LeafBuffers) -> Scores:
-        """What is said where the file's answer is missing or deserves less trust; counted.
+        """What is said where the file's answer is missing or deserves less trust."""
+        usable, kept, voc, batch, net = self._mended(buffers)
+        in_range = buffers.in_range & kept
+        high = np.zeros(len(voc))
+        if usable.any():
+            high[usable] = self._bounds(buffers, usable)
+        high = np.maximum(high, voc)
+        if buffers.has_bound:
+            high[in_range] = buffers.out["voc_high"][in_range]
+        pick = int(net.argmax())
+        return Scores(voc, batch, high, in_range, pick, bool(net[pick] > 0))
+
+    def _mended(self, buffers: LeafBuffers) -> _Mended:
+        """The values, from the closed form where the file's answer is missing; counted.
 
         Leaves unlike those of training keep the file's answer: their features, cut to the ranges of
         training, led it closer to the exact value than the static rate comes.
         """
         usable = buffers.usable(self.strict)
+        sound = bool(usable.all())
+        out, n = buffers.out, len(usable)
         # One bad leaf spoils the features of the others.
-        kept = np.full(len(usable), bool(buffers.answered and usable.all()))
-        kept &= np.isfinite(buffers.out["voc"])
-        in_range = buffers.in_range & kept
-        self.counters.invalid += not usable.all()
-        self.counters.out_of_range += bool(kept.any())
-        self.counters.fallback += not kept.any()
-        n = len(usable)
-        voc, high, batch = np.zeros(n), np.zeros(n), np.zeros(n, dtype=np.int64)
-        if usable.any():
-            rows = {name: x[usable] for name, x in buffers.columns.items()}
-            voc[usable], batch[usable] = closed_form_values(
-                buffers.kind, rows, float(buffers.remaining), buffers.batch_size or self._batch
-            )
-            high[usable] = self._bounds(buffers, usable)
-        voc[kept], batch[kept] = buffers.out["voc"][kept], buffers.out["batch"][kept]
-        high = np.maximum(high, voc)
-        if buffers.has_bound:
-            high[in_range] = buffers.out["voc_high"][in_range]
-        rollouts = buffers.batch_size or self._batch or 1
-        net = np.where(usable, voc - buffers.columns["cost"] * rollouts, -np.inf)
-        pick = int(np.argmax(net))
-        return Scores(voc, batch, high, in_range, pick, bool(net[pick] > 0))
+        kept = np.isfinite(out["voc"]) if buffers.answered and sound else np.zeros(n, dtype=bool)
+        some = bool(kept.any())
+        self.counters.invalid += not sound
+        self.counters.out_of_range += some
+        self.counters.fallback += not some
+        together = buffers.batch_size or self._batch
+        given = buffers.kind, buffers.columns, float(buffers.remaining), together
+        if some and kept.all():
+            voc, batch = out["voc"].copy(), out["batch"].copy()
+        elif sound:
+            voc, batch = closed_form_values(*given)
+        else:
+            voc, batch = np.zeros(n), np.zeros(n, dtype=np.int64)
+            if usable.any():
+                rows = {name: x[usable] for name, x in buffers.columns.items()}
+                voc[usable], batch[usable] = closed_form_values(given[0], rows, *given[2:])
+        if some:
+            voc[kept], batch[kept] = out["voc"][kept], out["batch"][kept]
+        net = voc - buffers.columns["cost"] * (together or 1)
+        if not sound:
+            net[~usable] = -np.inf
+        return _Mended(usable, kept, voc, batch, net)
 
     def _bounds(self, buffers: LeafBuffers, rows: Any) -> Floats:
         """The bound that no value exceeds; 0 for a rate where nothing is left to roll out."""

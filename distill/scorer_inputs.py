@@ -15,7 +15,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
-from functools import cached_property
+from functools import cached_property, lru_cache
 from operator import itemgetter
 from typing import Any, Final
 
@@ -131,6 +131,13 @@ class InputKind:
         """All inputs of a scorer: the columns and the scalars."""
         return (*self.columns, *self.scalars)
 
+    @cached_property
+    def limits(self) -> tuple[Floats, Floats]:
+        """Least and largest value of each column of numbers; shape (columns, 1)."""
+        rules = [_RULES[name] for name in self.floats]
+        low = [r.low if r.closed else math.nextafter(r.low, math.inf) for r in rules]
+        return np.array(low)[:, None], np.array([r.high for r in rules])[:, None]
+
     def to_json(self, inputs: Mapping[str, NDArray[Any]]) -> dict[str, Any]:
         """The inputs of a call as JSON values; an infinite horizon is the text "inf", as in records."""
         told = {name: inputs[name].tolist() for name in self.inputs}
@@ -167,7 +174,11 @@ def kind_of(names: Iterable[Any]) -> InputKind | None:
     >>> kind_of(["alpha", "beta", "low", "high", "gain", "offset", "cost", "action"]).name
     'win/loss leaf table'
     """
-    given = set(names)
+    return _kind_of(frozenset(names))
+
+
+@lru_cache(maxsize=64)
+def _kind_of(given: frozenset[Any]) -> InputKind | None:
     fitting = [kind for kind in KINDS.values() if given.issuperset(kind.keywords)]
     return max(fitting, key=lambda kind: len(kind.keywords), default=None)
 

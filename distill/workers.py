@@ -12,6 +12,7 @@ import contextlib
 import logging
 import multiprocessing
 import os
+import signal
 import sys
 import threading
 import time
@@ -64,7 +65,8 @@ def local_pool(workers: int, **how: Any) -> Parallel:
     """Processes of this machine that stand where this one stands. how : for joblib's `Parallel`.
 
     joblib keeps its workers for later calls, and those would go on in the folder, and find the modules, of
-    the call that they were started for: another folder or search path has new ones.
+    the call that they were started for: another folder or search path has new ones. Ctrl-C in a terminal
+    goes to all processes; what it means is for this one to say.
     """
     return Parallel(n_jobs=workers, initializer=_stand, initargs=(str(Path.cwd()), tuple(sys.path)), **how)
 
@@ -72,6 +74,7 @@ def local_pool(workers: int, **how: Any) -> Parallel:
 def _stand(folder: str, path: tuple[str, ...]) -> None:
     os.chdir(folder)
     sys.path[:] = path
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
 
 
 def _closed_quietly(results: Any) -> Iterator[Any]:

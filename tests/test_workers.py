@@ -5,6 +5,7 @@ from __future__ import annotations
 import importlib
 import math
 import os
+import signal
 import sys
 import threading
 import time
@@ -57,6 +58,12 @@ def test_workers_stand_where_their_caller_stands_now(tmp_path, monkeypatch):
         found = [str(result) for call in calls for result in run_calls([call] * 3, workers=2)]
         assert found[:3] == [str(folder)] * 3
         assert all(str(folder) in text for text in found[3:])
+
+
+def test_an_interrupt_is_for_the_caller_to_take():
+    """Ctrl-C in a terminal goes to all processes; workers that took it died with a crash dump now and then."""
+    assert set(run_calls([(signal.getsignal, (signal.SIGINT,))] * 3, workers=2)) == {signal.SIG_IGN}
+    assert signal.getsignal(signal.SIGINT) is signal.default_int_handler
 
 
 def test_a_process_that_dies_is_one_clear_error():

@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import argparse
+from pathlib import Path
 from typing import Any
 
-from distill.commands import flags
+from distill.commands import flags, outputs
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -47,8 +48,19 @@ def run(args: argparse.Namespace) -> int:
     from distill.sample_data import family_path
     from distill.traces import BadLines
 
+    known = family_path(args.family) if args.family else None
+    if args.out:
+        sheet = Path(args.scorer).with_suffix(".json")
+        outputs.check_outputs(
+            [
+                (args.out / "audit.json", outputs.AUDIT),
+                (args.out / "audit.html", outputs.PAGE),
+                (args.out / WORTH_ADDING, outputs.WORTH_ADDING),
+            ],
+            [args.scorer, sheet, *args.traces, known, args.dataset],
+        )
     bad = BadLines(args.strict)
-    family = load_family(family_path(args.family)) if args.family else None
+    family = load_family(known) if known else None
     found = audit(
         args.scorer,
         args.traces,

@@ -10,6 +10,8 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from distill.files import is_stream
+
 if TYPE_CHECKING:  # --help must answer at once
     from distill.traces import BadLines
 
@@ -102,7 +104,13 @@ def out_file(text: str) -> Path:
     path = Path(text)
     if path.is_dir():
         raise argparse.ArgumentTypeError(f"must be a file, not a folder; got {text!r}")
-    _open_to_writing(path.parent, text)
+    if is_stream(path):  # /dev/stdout, a pipe: written through
+        return path
+    if path.exists() and not path.is_file():
+        raise argparse.ArgumentTypeError(f"must be a regular file, a pipe or a new name; got {text!r}")
+    if path.exists() and not os.access(path, os.W_OK):
+        raise argparse.ArgumentTypeError(f"must be a file that may be written; got {text!r}")
+    _open_to_writing(path.resolve().parent, text)
     return path
 
 

@@ -6,7 +6,7 @@ import argparse
 import textwrap
 from typing import Any
 
-from distill.commands import flags
+from distill.commands import flags, outputs
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -30,6 +30,7 @@ def run(args: argparse.Namespace) -> None:
     from distill.traces import BadLines
     from distill.tree_columns import COLUMNS
 
+    outputs.check_outputs([(args.out, outputs.FAMILY), (args.page, outputs.PAGE)], args.traces)
     bad = BadLines(args.strict)
     figures = infer_files(args.traces, args.out, seed=args.seed, bad=bad).figures
     flags.say_bad_lines(bad)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import argparse
 from typing import Any
 
-from distill.commands import flags
+from distill.commands import flags, outputs
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -26,6 +26,7 @@ def run(args: argparse.Namespace) -> None:
     """Run the command."""
     from distill.look import look
 
+    outputs.check_outputs([(args.page, outputs.PAGE)], [args.dataset])
     figures = look(args.dataset, check=not args.no_check)
     if args.page:
         from distill.report.look_page import write_look_page

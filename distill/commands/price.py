@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from distill.commands import flags
+from distill.commands import flags, outputs
 from distill.errors import DistillError, InputError
 from distill.files import write_atomic
 
@@ -53,6 +53,7 @@ def run(args: argparse.Namespace) -> None:
     from distill import traces, voc
     from distill.query import resolve, to_output
 
+    outputs.check_outputs([(args.out, outputs.PRICED)], args.trees)
     lines: list[str] = []
     bad = traces.BadLines(strict=not args.skip_bad)
     for place, tree in traces.read_many(args.trees, bad):

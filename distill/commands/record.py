@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import argparse
 
-from distill.commands import flags
+from distill.commands import flags, outputs
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -36,6 +36,7 @@ def run(args: argparse.Namespace) -> None:
 
     if (args.problem is None) != (args.policy is None):
         raise InputError("--policy", "goes with --problem, and --problem with it")
+    outputs.check_outputs([(args.out, outputs.TRACES)], [])
     if args.problem is None:
         _played(args)
     else:

@@ -6,7 +6,7 @@ import argparse
 from pathlib import Path
 from typing import Any
 
-from distill.commands import flags
+from distill.commands import flags, outputs
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -36,6 +36,7 @@ def run(args: argparse.Namespace) -> None:
     from distill.report import write_page
     from distill.sheet import FRONT_FILE
 
+    outputs.check_outputs([(args.out, outputs.PAGE)], [args.figures, args.shifts])
     figures = _read(args.figures / FRONT_FILE if args.figures.is_dir() else args.figures)
     if args.shifts is not None:
         shifts = _read(args.shifts).get("shifts")

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import argparse
 
-from distill.commands import flags
+from distill.commands import flags, outputs
 
 __all__ = ["HELP", "add_arguments", "run"]
 
@@ -29,5 +29,13 @@ def run(args: argparse.Namespace) -> None:
     """Run the command."""
     from distill.ship import ship
 
+    outputs.check_outputs(
+        [
+            (args.out, outputs.SCORER),
+            (args.out.with_suffix(".json"), outputs.SHEET),
+            (args.out.with_suffix(".md"), outputs.SHEET_PAGE),
+        ],
+        [args.trained],
+    )
     sheet = ship(args.trained, args.out, latency_us=args.latency, scorer=args.scorer)
     print(f"{args.out}: {sheet['recipe']}, {sheet['chosen']}; its sheet stands beside it as .json and .md")

@@ -6,7 +6,7 @@ import argparse
 import json
 from typing import TYPE_CHECKING, Any
 
-from distill.commands import flags
+from distill.commands import flags, outputs
 from distill.files import write_atomic
 
 if TYPE_CHECKING:
@@ -56,6 +56,7 @@ def run(args: argparse.Namespace) -> None:
         raise InputError("peers", "must have a dataset, whose trees they are measured on")
     if args.dataset is None and args.shift is None:
         raise InputError("validate", "must be given a dataset, --shift, or both")
+    outputs.check_outputs([(args.out, outputs.FIGURES)], [args.scorer, args.dataset, args.shift])
     # A wrong name, and a family that the scorer cannot read, are told before the work.
     family = None if args.shift is None else load_family(family_path(args.shift))
     scorer = Scorer.load(args.scorer)

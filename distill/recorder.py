@@ -150,6 +150,7 @@ class Recorder:
         offset: Any = None,
         action: Any = None,
         cost: Any = None,
+        count: Any = None,
         remaining: Any = None,
         horizon: Any = None,
         batch_size: Any = None,
@@ -162,18 +163,22 @@ class Recorder:
         var_i); a rollout adds noise of variance noise_var_i and costs cost_i >= 0; 0 < gain_i <= 1.
         Win/loss leaves: alpha, beta, low, high instead, X_i = low_i + (high_i - low_i) p_i, p_i ~
         Beta(alpha_i, beta_i).
-        Missing gain is 1, missing offset and cost are 0. remaining : whole rollouts left.
-        horizon (inf allowed), batch_size : those of a scorer's call that has them. extra : an object for JSON
-        to keep beside the tree. The record has the root, a decision node an action in order of position, and
-        the leaves in order, with gain as discount and offset as reward.
+        Missing gain is 1, missing offset and cost are 0. count : rollouts that each leaf had so far, whole
+        numbers. remaining : whole rollouts left. horizon (inf allowed), batch_size : those of a scorer's call
+        that has them. extra : an object for JSON to keep beside the tree. The record has the root, a decision
+        node an action in order of position, and the leaves in order, with gain as discount and offset as
+        reward.
+        Records with `count` and equal `extra`, which must name the `decision`, are stages of one decision, by
+        which `infer` tests drift and noise. Draw the decisions to record yourself then, under sample=1: else
+        each stage is drawn alone, and few decisions have two.
         Never raises (but `strict`): arguments that make no such record are counted as invalid.
         """
         if self._drawn():
             columns = {
                 "mean": mean, "var": var, "noise_var": noise_var,
                 "alpha": alpha, "beta": beta, "low": low, "high": high,
-                "gain": gain, "offset": offset, "action": action, "cost": cost, "remaining": remaining,
-                "horizon": horizon, "batch_size": batch_size,
+                "gain": gain, "offset": offset, "action": action, "cost": cost, "count": count,
+                "remaining": remaining, "horizon": horizon, "batch_size": batch_size,
             }  # fmt: skip
             self._offer(copy_table, columns, extra, unnamed, unknown)
 

@@ -53,9 +53,10 @@ def copy_table(
     columns: dict[str, Any], extra: Any, unnamed: tuple[object, ...], unknown: dict[str, object]
 ) -> Seen:
     """The agent's arrays as they are now. InputError for what is not named or holds no numbers."""
-    if unnamed or unknown:
-        which = f"key {next(iter(unknown))!r}" if unknown else "arguments"
-        raise InputError(which, "must be named, as columns of a leaf table are")
+    if unnamed:
+        raise InputError("arguments", "must be named, as columns of a leaf table are")
+    if unknown:
+        raise InputError(f"key {next(iter(unknown))!r}", f"must be among {', '.join(columns)}, extra")
     copies = {}
     for name, column in columns.items():
         if column is not None:
@@ -215,8 +216,8 @@ def _array(head: list[str], values: NDArray[Any], pause: Callable[[], None]) -> 
     return "[" + ",".join(parts) + "]"
 
 
-def _checked(columns: dict[str, NDArray[Any]]) -> tuple[dict[str, NDArray[np.float64]], NDArray[np.int64]]:
-    """The columns of numbers, and the actions; errors name the row as the agent does."""
+def _checked(columns: dict[str, NDArray[Any]]) -> tuple[dict[str, NDArray[Any]], NDArray[np.int64]]:
+    """The columns of numbers, counts as whole ones, and the actions; errors name the agent's rows."""
     given = [name for name in _BELIEF_KEYS if name in columns]
     coins = bool(given) and given[0] in schema.WIN_LOSS_COLUMNS
     belief: tuple[str, ...] = schema.WIN_LOSS_COLUMNS if coins else schema.GAUSSIAN_COLUMNS
@@ -230,7 +231,7 @@ def _checked(columns: dict[str, NDArray[Any]]) -> tuple[dict[str, NDArray[np.flo
     n = columns[first].size
     if columns[first].ndim != 1 or not 1 <= n <= MAX_LEAVES:
         raise InputError(first, f"must have shape (n,), n from 1 to {MAX_LEAVES}", columns[first].shape)
-    out = {}
+    out: dict[str, NDArray[Any]] = {}
     for name, x in columns.items():
         if name in _CALL_SCALARS:
             continue
@@ -244,6 +245,8 @@ def _checked(columns: dict[str, NDArray[Any]]) -> tuple[dict[str, NDArray[np.flo
             out[name] = x.astype(np.float64)
         ok, rule = _rule(name, out[name])
         _demand(name, out[name], ok, rule)
+        if name == "count":
+            out[name] = out[name].astype(np.int64)
     if coins:
         _demand("high", out["high"], out["high"] > out["low"], "must be above 'low'")
     return out, action.astype(np.int64)
@@ -255,6 +258,10 @@ def _rule(name: str, x: NDArray[np.float64]) -> tuple[NDArray[np.bool_], str]:
         return (x > 0) & (x <= 1), "must be above 0 and at most 1"
     if name == "cost":
         return (x >= 0) & np.isfinite(x), "must be finite and >= 0"
+    if name == "count":
+        return (x >= 0) & (x <= schema.MAX_ROLLOUTS) & (
+            np.floor(x) == x
+        ), "must be a whole number from 0 to 2^53"
     if name in ("alpha", "beta"):
         return (x > 0) & (x <= schema.MAX_ROLLOUTS), "must be > 0 and at most 2^53"
     if name in ("var", "noise_var"):

@@ -86,6 +86,17 @@ def test_lists_float32_and_gaps_between_actions_are_taken(tmp_path):
     assert tree.remaining == 40
 
 
+def test_counts_come_back_as_whole_numbers(tmp_path):
+    with Recorder(tmp_path, strict=True) as recorder:
+        for count in (np.array([3, 0]), [3.0, 0.0], np.array([3, 0], dtype=np.uint16)):
+            recorder.see(**small(), count=count)
+    lines = gzip.decompress((tmp_path / "trace-000001.jsonl.gz").read_bytes()).splitlines()
+    assert [json.loads(line)["count"] for line in lines] == [[None, None, None, 3, 0]] * 3
+    for _, tree in read_trees(tmp_path / "trace-000001.jsonl.gz"):
+        assert tree.count is not None
+        assert tree.count.tolist() == [3, 0]
+
+
 def test_trees_of_every_kind_come_back(tmp_path):
     names = ("cold-store", "shared-aisles", "crossing-traffic", "on-time")
     trees = [draw(load_family(FAMILIES / f"{name}.toml"), 0, i) for name in names for i in range(3)]
@@ -216,6 +227,14 @@ INVALID = [
     ({"var": ["a", "b"]}, "var: must hold numbers"),
     ({"var": [[1.0], 2.0]}, "var: must"),
     ({"var": Hostile()}, "var: must be an array of numbers"),
+    ({"count": [1]}, "count: must have shape (2,)"),
+    ({"count": [0, -1]}, "count[1]: must be a whole number from 0 to 2^53; got -1"),
+    ({"count": [0.5, 1]}, "count[0]: must be a whole number from 0 to 2^53; got 0.5"),
+    ({"count": [2.0**54, 1]}, "count[0]: must be a whole number from 0 to 2^53"),
+    ({"count": [float("nan"), 1]}, "count[0]: must be a whole number from 0 to 2^53; got nan"),
+    ({"count": ["a", "b"]}, "count: must hold numbers"),
+    ({"mean": [], "var": [], "noise_var": [], "action": []}, "mean: must have shape (n,), n from 1"),
+    ({"action": []}, "action: must have shape (2,), as 'mean'; got (0,)"),
     ({"remaining": -1}, "remaining: must be a whole number"),
     ({"remaining": 1.5}, "remaining: must be a whole number"),
     ({"remaining": float("nan")}, "remaining: must be a whole number"),
@@ -225,7 +244,7 @@ INVALID = [
     ({"extra": {"x": float("nan")}}, "extra: must be an object for JSON"),
     ({"extra": {"x": Hostile()}}, "extra: must be an object for JSON"),
     ({"extra": {1: 0, "1": 0}}, "must not occur twice"),
-    ({"depth": [1, 2]}, "key 'depth': must be named"),
+    ({"depth": [1, 2]}, "key 'depth': must be among mean, var, noise_var"),
 ]
 
 

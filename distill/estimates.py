@@ -142,13 +142,13 @@ def two_sample(a: Floats, b: Floats) -> float:
 # --- samples as fields of a family ----------------------------------------------------------------
 
 
-def number_text(x: float) -> str:
-    """A number as TOML has it, to six digits.
+def number_text(x: float, digits: int = 6) -> str:
+    """A number as TOML has it, to so many digits.
 
     >>> number_text(0.123456789), number_text(3.0)
     ('0.123457', '3')
     """
-    return f"{x:.6g}"
+    return f"{x:.{digits}g}"
 
 
 def same_or_spread(typical: float, log_sd: Estimated | float) -> str:
@@ -161,8 +161,12 @@ def same_or_spread(typical: float, log_sd: Estimated | float) -> str:
     return f"{{ log_uniform = [{number_text(ends[0])}, {number_text(ends[1])}] }}"
 
 
-def field_text(values: Sequence[float] | Floats, *, whole: bool = False, most: int = 8) -> str:
+def field_text(
+    values: Sequence[float] | Floats, *, whole: bool = False, most: int = 8, digits: int = 6
+) -> str:
     """Values seen directly as a field: one, a choice of few, or the likelier of uniform and log-uniform.
+
+    digits : of each value.
 
     >>> field_text([2, 2, 3, 2], whole=True)
     '{ choice = [2, 3], weights = [0.75, 0.25] }'
@@ -170,19 +174,19 @@ def field_text(values: Sequence[float] | Floats, *, whole: bool = False, most: i
     x = np.asarray(values, dtype=float)
     distinct, times = np.unique(x, return_counts=True)
     if len(distinct) == 1:
-        return number_text(distinct[0])
+        return number_text(distinct[0], digits)
     if len(distinct) > (_MOST_CHOICES if whole else most):
-        return _range_text(x, whole)
-    numbers = ", ".join(number_text(v) for v in distinct)
+        return _range_text(x, whole, digits)
+    numbers = ", ".join(number_text(v, digits) for v in distinct)
     weights = ", ".join(number_text(w) for w in times / len(x))
     return f"{{ choice = [{numbers}], weights = [{weights}] }}"
 
 
-def _range_text(x: Floats, whole: bool) -> str:
+def _range_text(x: Floats, whole: bool, digits: int) -> str:
     """Uniform or log-uniform between the ends seen, whichever makes the sample likelier."""
     low, high = float(x.min()), float(x.max())
     ends = f"[{number_text(math.floor(low))}, {number_text(math.ceil(high))}]" if whole else None
-    ends = ends or f"[{number_text(low)}, {number_text(high)}]"
+    ends = ends or f"[{number_text(low, digits)}, {number_text(high, digits)}]"
     if low > 0 and np.mean(np.log(x)) + math.log(math.log(high / low)) < math.log(high - low):
         return f"{{ log_uniform = {ends} }}"
     return ends

@@ -35,7 +35,7 @@ from distill.infer_shape import shape_of
 from distill.infer_win_loss import win_loss_beliefs
 from distill.traces import BadLines, read_many
 from distill.tree import BeliefTree, Floats
-from distill.tree_columns import COLUMNS, decision_key, tree_columns
+from distill.tree_columns import COLUMNS, decision_key, path_gains, tree_columns
 
 __all__ = ["INFER_FORMAT", "Estimates", "Inferred", "estimate", "infer", "infer_files", "unit_of"]
 
@@ -178,8 +178,9 @@ def estimate(trees: Sequence[BeliefTree], *, seed: int = 0, source: str = "trace
     budget_toml, budget = _budget(trees, group, seed)
     rules, assumed = _rules(trees, group)
     toml: dict[str, dict[str, str]] = {**shape.toml, **beliefs.toml, "budget": budget_toml, "search": rules}
-    discounts = np.array([np.mean(t.discount[1:]) for t in trees])
-    toml.setdefault("edge", {})["discount"] = field_text(np.round(discounts, 9))
+    gains = [path_gains(t) for t in trees]
+    discounts = np.array([math.exp(logs.sum() / edges.sum()) for logs, edges in gains])
+    toml.setdefault("edge", {})["discount"] = field_text(np.round(discounts, 12), digits=12)
     parameters = {**shape.parameters, **_discount(discounts, group, seed), **beliefs.parameters, **budget}
     return Estimates(parameters, toml, group, priors, assumed)
 

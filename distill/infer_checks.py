@@ -15,9 +15,11 @@ from typing import Any, Final
 
 import numpy as np
 
+from distill import schema
 from distill.estimates import Estimated, bootstrap, by_group
 from distill.infer_beliefs import Prior
 from distill.tree import BeliefTree, Floats
+from distill.tree_columns import path_gains
 
 __all__ = ["MOST_HORIZONS", "Finding", "findings"]
 
@@ -215,8 +217,9 @@ def _drift(moves: Sequence[_Moves], seed: int) -> Iterator[Finding]:
     if sum(len(m.moved) for m in moves) < 20:
         yield Finding(
             about, "untold",
-            "No decision is recorded at several stages (with `extra.decision` and `count`), so nothing tells "
-            "whether leaves drift, how rollouts are distributed, or whether siblings are alike.",
+            "Too few decisions are recorded at several stages (with `count`, and equal `extra` that names "
+            "the `decision`): nothing tells whether leaves drift, how rollouts are distributed, or whether "
+            "siblings are alike.",
         )  # fmt: skip
         return
     ratio = _grouped(
@@ -341,12 +344,13 @@ def _structure(trees: Sequence[BeliefTree], priors: Sequence[Prior] | None) -> I
             "inner nodes with a choice", "contradicts",
             f"{lone:,} inner nodes have a single child; the family's have at least two.",
         )  # fmt: skip
-    uneven = sum(not np.allclose(t.discount[1:], t.discount[1], rtol=1e-9) for t in trees)
+    uneven = sum(map(_is_uneven, trees))
     if uneven:
         yield Finding(
             "one discount a tree", "contradicts",
-            f"Discounts differ between the edges of {uneven:,} of {len(trees):,} trees; the family has one a "
-            "tree and takes their mean.",
+            f"Leaves of {uneven:,} of {len(trees):,} trees are discounted otherwise than by one discount for "
+            "every edge; the family has one a tree, under which the geometric mean of its leaves' gains is "
+            "the recorded one.",
         )  # fmt: skip
     sure = 0 if priors is None else sum(int(np.count_nonzero(p.sd == 0)) for p in priors)
     if sure:
@@ -371,6 +375,15 @@ def _structure(trees: Sequence[BeliefTree], priors: Sequence[Prior] | None) -> I
             "Some records state a finite horizon and others none or an infinite one, in more than "
             f"{MOST_HORIZONS} values, which no range holds; the family leaves it out.",
         )  # fmt: skip
+
+
+def _is_uneven(tree: BeliefTree) -> bool:
+    """Whether one discount for every edge gives other gains, or counts rewards on the way otherwise."""
+    logs, edges = path_gains(tree)
+    if not np.allclose(logs, edges * (logs.sum() / edges.sum()), rtol=1e-9, atol=1e-9):
+        return True
+    on_the_way = np.any(tree.reward[tree.kind != schema.LEAF])
+    return bool(on_the_way) and not np.allclose(tree.discount[1:], tree.discount[1], rtol=1e-9)
 
 
 def _rules(assumed: bool) -> Iterator[Finding]:

@@ -13,7 +13,7 @@ from distill import schema
 from distill.query import scale_of
 from distill.tree import BeliefTree, Floats, Ints
 
-__all__ = ["COLUMNS", "decision_key", "depths", "tree_columns"]
+__all__ = ["COLUMNS", "decision_key", "depths", "path_gains", "tree_columns"]
 
 # Column -> what it says, for people.
 COLUMNS: Final[Mapping[str, str]] = {
@@ -21,7 +21,7 @@ COLUMNS: Final[Mapping[str, str]] = {
     "leaves": "leaves",
     "depth": "edges from the root to the deepest leaf",
     "chance share": "share of inner nodes below the root that are chance nodes",
-    "discount": "mean discount of an edge",
+    "gain": "geometric mean over leaves of the product of discounts from the root",
     "remaining": "rollouts left",
     "spent": "rollouts so far",
     "untried share": "share of leaves without a rollout",
@@ -53,7 +53,7 @@ def _row(tree: BeliefTree) -> dict[str, float]:
         "actions": len(tree.action_nodes),
         "leaves": tree.n_leaves,
         "depth": int(depths(tree).max()),
-        "discount": float(np.mean(tree.discount[1:])),
+        "gain": float(np.exp(np.mean(path_gains(tree)[0]))),
     }
     if len(inner):
         row["chance share"] = float(np.mean(tree.kind[inner] == schema.CHANCE))
@@ -98,6 +98,21 @@ def depths(tree: BeliefTree) -> Ints:
         if c:
             out[c] = out[p] + 1
     return out
+
+
+def path_gains(tree: BeliefTree) -> tuple[Floats, Ints]:
+    """Of each leaf, the log of its gain and the edges from the root; an action with one leaf is that leaf.
+
+    One discount an edge, exp(sum of logs / sum of edges), gives a tree's leaves the same geometric mean gain.
+    """
+    log_gain, action = np.log(tree.discount), np.arange(tree.n_nodes)
+    for c, p in enumerate(tree.parent.tolist()):
+        if p > 0:
+            log_gain[c] += log_gain[p]
+            action[c] = action[p]
+    leaves = tree.leaf_nodes
+    lone = np.bincount(action[leaves], minlength=tree.n_nodes) == 1
+    return log_gain[leaves], np.where(lone[action[leaves]], 1, depths(tree)[leaves])
 
 
 def decision_key(tree: BeliefTree) -> str | None:

@@ -199,7 +199,7 @@ def audit_figures() -> dict[str, Any]:
     columns = {
         "actions": ([6.0] * 5, [2.0, 3.0, 4.0, 5.0, 6.0], 0.8),
         "chance share": ([0.0] * 5, [0.0] * 5, 0.0),
-        "discount": ([0.98] * 5, [0.91, 0.93, 0.95, 0.98, 1.0], 0.79),
+        "gain": ([0.98] * 5, [0.91, 0.93, 0.95, 0.98, 1.0], 0.79),
         "a feature with a name that is far too long to stand": ([-31.0, -2.0, 0.0, 1e3, 2e5], [], 0.27),
     }
     return {

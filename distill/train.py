@@ -10,6 +10,7 @@ import json
 import math
 import os
 import platform
+import tempfile
 import time
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
@@ -28,7 +29,7 @@ from distill.candidates import Candidates, Split, split_by_tree
 from distill.errors import InputError
 from distill.export import export_scorer, mapped_back
 from distill.feature_graph import FeatureGraph, FeatureMatrix
-from distill.files import sha256_of, write_atomic
+from distill.files import read_json, sha256_of, write_atomic
 from distill.learners import BoostingLearner, DenseLearner, LinearLearner
 from distill.metrics import Groups
 from distill.peers import measure_peers, timed_cases
@@ -121,8 +122,9 @@ def train(
     recipes : names in RECIPES, None for all that there are for the dataset's value. Returns what `front.json`
     holds: accuracy of each file on held-out trees, its decision latency, the closed forms on the same trees,
     and the exact methods' time in the same run. The same dataset, seed and versions give the same .onnx
-    bytes with any number of threads. Raises InputError on a dataset too small to split, or a lean recipe for
-    a value that has none.
+    bytes with any number of threads. What an earlier training left in `out` is replaced when all is done, and
+    stays as it was where this one is stopped. Raises InputError on a dataset too small to split, a lean
+    recipe for a value that has none, or a folder that holds the files of something else.
     """
     started = time.perf_counter()
     out = Path(out)
@@ -131,8 +133,12 @@ def train(
     if recipes is None and not FeatureGraph.has_lean(about["value"], data.kind):
         chosen = [recipe for recipe in chosen if not recipe.lean]
     split = split_by_tree(data, seed)
+    _check_folder(out, chosen)
     out.mkdir(parents=True, exist_ok=True)
-    with bar("features", 2 + 2 * len(chosen), "steps", shown=progress) as advance:
+    with (
+        tempfile.TemporaryDirectory(dir=out, prefix=".training-") as made,
+        bar("features", 2 + 2 * len(chosen), "steps", shown=progress) as advance,
+    ):
         graph = FeatureGraph.of_value(about["value"], data.kind)
         first_order = graph.matrix({**split.held_out.columns, "tree": split.held_out.tree}).first_order
         given = {
@@ -144,7 +150,7 @@ def train(
         scorers: list[dict[str, Any]] = []
         for recipe in chosen:
             advance(1, f"train {recipe.name}")
-            path = out / recipe.file
+            path = Path(made) / recipe.file
             fit_seconds = _fit_and_export(recipe, split, given[recipe.lean], about, seed, path)
             advance(1, f"validate {recipe.name}")
             scorers.append(_examine(recipe, path, split, facts, cases, fit_seconds, n_boot, seed))
@@ -157,6 +163,7 @@ def train(
         exact = _exact_times(cases, about["value"])
         backup = time_backup(cases, horizon=float(about["value"]["horizon"])) if data.kind is RECORD else {}
         advance(1)
+        files = {recipe.file: (Path(made) / recipe.file).read_bytes() for recipe in chosen}
     _mark_front(scorers)
     exact_times = {name: t.to_json() for name, t in exact.items()}
     on_front = {e["recipe"]: e for e in scorers if e["on_front"]}
@@ -179,8 +186,23 @@ def train(
         "made_with": _made_with(),
         "train_seconds": round(time.perf_counter() - started, 2),
     }
+    for name, content in files.items():
+        write_atomic(out / name, content)
     write_atomic(out / FRONT_FILE, (json.dumps(front, indent=1, allow_nan=False) + "\n").encode())
     return front
+
+
+def _check_folder(out: Path, recipes: Sequence[Recipe]) -> None:
+    """Refuse a folder with a foreign front, or with scorer files that no training left there."""
+    path = out / FRONT_FILE
+    if path.exists():
+        front = read_json(path)
+        found = front.get("format") if isinstance(front, dict) else front
+        if found != FRONT_FORMAT:
+            raise InputError(f"{path}: format", f"must be {FRONT_FORMAT!r}; choose another folder", found)
+    for file in (out / recipe.file for recipe in recipes):
+        if file.exists() and (not path.exists() or file.with_suffix(".json").exists()):
+            raise InputError(str(file), "must be an earlier training's to be replaced; choose another folder")
 
 
 # --- one recipe ------------------------------------------------------------------------------------

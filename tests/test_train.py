@@ -18,6 +18,7 @@ import pytest
 from small_dataset import labelled
 
 from distill import candidates
+from distill import train as training
 from distill.candidates import Candidates, split_by_tree
 from distill.cli import run
 from distill.errors import InputError
@@ -166,6 +167,68 @@ def test_the_command_names_the_scorer_for_a_time_and_draws_the_front(
     assert ET.parse(out / "front.svg").getroot().tag.endswith("svg")
     with pytest.raises(InputError, match="latency: must be at least"):
         choose(front["scorers"], 0.01)
+
+
+def test_a_time_that_no_scorer_meets_is_said_and_costs_nothing(
+    dataset: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("distill.train.RECIPES", {"linear": RECIPES["linear"]})
+    assert run(["train", str(dataset), "--out", str(tmp_path), "--latency", "0.5us"]) == 0
+    out, err = capsys.readouterr()
+    assert "no scorer decides within 0.5 us; the fastest takes " in out.splitlines()[-1]
+    assert "error" not in err
+    # ship has nothing to ship then.
+    assert run(["ship", str(tmp_path), "--out", str(tmp_path.parent / "no.onnx"), "--latency", "0.5us"]) == 2
+    assert "latency: must be at least" in capsys.readouterr().err
+
+
+def test_a_training_that_is_stopped_leaves_the_earlier_one_whole(
+    dataset: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Stopped after the first new file, which has the name of an old one."""
+    recipes = ["linear", "boosting 25x8"]
+    train(dataset, tmp_path, seed=2, recipes=["linear"], n_boot=2)
+    before = {p.name: p.read_bytes() for p in tmp_path.iterdir()}
+    real = training._fit_and_export
+
+    def stopped(recipe: Any, *rest: Any) -> float:
+        if recipe.name != "linear":
+            raise KeyboardInterrupt
+        return real(recipe, *rest)
+
+    with monkeypatch.context() as change:
+        change.setattr(training, "_fit_and_export", stopped)
+        with pytest.raises(KeyboardInterrupt):
+            train(dataset, tmp_path, seed=3, recipes=recipes, n_boot=2)
+    assert {p.name: p.read_bytes() for p in tmp_path.iterdir()} == before
+    ship(tmp_path, tmp_path.parent / "earlier.onnx")
+    train(dataset, tmp_path, seed=3, recipes=["linear"], n_boot=2)  # a finished one replaces it
+    after = {p.name: p.read_bytes() for p in tmp_path.iterdir()}
+    assert set(after) == set(before)
+    assert all(after[name] != before[name] for name in before)
+
+
+def test_a_folder_of_something_else_is_not_filled(
+    dataset: Path, trained: tuple[Path, dict[str, Any]], tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    front, scorer = tmp_path / "mine", tmp_path / "shipped"
+    for folder in (front, scorer):
+        folder.mkdir()
+    (front / FRONT_FILE).write_text('{"format": "weather/1"}')
+    with pytest.raises(
+        InputError, match=r"front\.json: format: must be 'voc-front/1'; choose another folder"
+    ):
+        train(dataset, front, recipes=["linear"], n_boot=2)
+    ship(trained[0], scorer / "linear.onnx", scorer="linear")
+    with pytest.raises(InputError, match=r"linear\.onnx: must be an earlier training's to be replaced"):
+        train(dataset, scorer, recipes=["linear"], n_boot=2)
+    before = {p.name: p.read_bytes() for p in dataset.iterdir()}
+    for out in (front, dataset):
+        assert run(["train", str(dataset), "--out", str(out)]) == 2
+        assert capsys.readouterr().err.count("\n") == 1
+    assert {p.name: p.read_bytes() for p in dataset.iterdir()} == before
+    assert (front / FRONT_FILE).read_text() == '{"format": "weather/1"}'
+    assert [p.name for p in front.iterdir()] == [FRONT_FILE]
 
 
 @pytest.mark.parametrize(

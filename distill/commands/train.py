@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import argparse
 
-from distill.commands import flags
+from distill.commands import flags, outputs
+from distill.errors import InputError
 from distill.files import write_atomic
 
 __all__ = ["HELP", "add_arguments", "run"]
@@ -31,11 +32,15 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> None:
     """Run the command."""
     from distill.report import front_svg
-    from distill.sheet import accuracy_table, front_table
+    from distill.sheet import FRONT_FILE, accuracy_table, front_table
     from distill.ship import choose
     from distill.terminal_chart import scatter
     from distill.train import train
 
+    written = [(args.out / FRONT_FILE, outputs.FRONT)]
+    if args.show:
+        written.append((args.out / "front.svg", outputs.PICTURE))
+    outputs.check_outputs(written, [args.dataset])
     front = train(args.dataset, args.out, seed=args.seed, progress=True)
     parts = front["parts"]
     whole = sum(part["trees"] for part in parts.values())
@@ -57,5 +62,10 @@ def run(args: argparse.Namespace) -> None:
         write_atomic(args.out / "front.svg", front_svg(front).encode())
         print(f"\n{args.out / 'front.svg'} shows the same")
     if args.latency is not None:
-        entry, why = choose(front["scorers"], args.latency)
-        print(f"\n{why}: {entry['recipe']}, {args.out / entry['file']}")
+        try:
+            entry, why = choose(front["scorers"], args.latency)
+        except InputError:  # what was asked for is there; only no scorer is as fast
+            fastest = min(e["latency"]["p50_us"] for e in front["scorers"])
+            print(f"\nno scorer decides within {args.latency:g} us; the fastest takes {fastest:.1f} us")
+        else:
+            print(f"\n{why}: {entry['recipe']}, {args.out / entry['file']}")

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from operator import index
 from typing import Any
 
 from distill.errors import InputError
@@ -35,9 +36,13 @@ class HeldLeaves:
         InputError, and nothing is written, for a leaf or a column that there is not or no number.
         """
         columns, n = self._buffers.columns, len(self._buffers.action)
+        if type(leaf) is not int:
+            leaf = _position(leaf)
         if not 0 <= leaf < n:
             raise InputError("leaf", f"must be from 0 to {n - 1}", leaf)
         for name, x in values.items():
+            if name in self._buffers.varying:
+                raise InputError(name, "is a number of a call, none of a leaf: `change` takes it")
             if name not in columns:
                 raise InputError(name, f"must be among {', '.join(columns)}")
             if type(x) is not float and number_array(name, x, "f").size != 1:
@@ -57,12 +62,25 @@ class HeldLeaves:
                 raise InputError(name, "must be one number", x)
         self._buffers.vary({name: float(number_array(name, x, "f").item()) for name, x in numbers.items()})
 
-    def pick(self, *, remaining: float, deadline: float | None = None) -> int:
-        """As `Scorer.pick`, with `remaining` rollouts left."""
+    def pick(self, *, remaining: float, deadline: float | None = None, **numbers: float) -> int:
+        """As `Scorer.pick`, with `remaining` rollouts left; `numbers` are changed as by `change`, first."""
         self._buffers.leave(remaining)
+        if numbers:
+            self.change(**numbers)
         return self._pick(self._buffers, deadline)
 
-    def score(self, *, remaining: float, deadline: float | None = None) -> Any:
-        """As `Scorer.score`, with `remaining` rollouts left."""
+    def score(self, *, remaining: float, deadline: float | None = None, **numbers: float) -> Any:
+        """As `Scorer.score`, with `remaining` rollouts left; `numbers` are changed as by `change`, first."""
         self._buffers.leave(remaining)
+        if numbers:
+            self.change(**numbers)
         return self._score(self._buffers, deadline)
+
+
+def _position(leaf: Any) -> int:
+    try:
+        if not isinstance(leaf, bool):
+            return index(leaf)
+    except TypeError:
+        pass
+    raise InputError("leaf", "must be one whole number", leaf)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+import time
 from collections.abc import Mapping
 from typing import Any, Final
 
@@ -12,7 +14,7 @@ from distill import schema
 from distill.errors import InputError
 from distill.scorer_inputs import SCALAR_RULES, InputKind
 
-__all__ = ["MAX_LEAVES", "LeafBuffers", "number_array", "number_arrays", "number_scalars"]
+__all__ = ["MAX_LEAVES", "LeafBuffers", "has_passed", "number_array", "number_arrays", "number_scalars"]
 
 MAX_LEAVES: Final = 2**20
 _OUTPUTS: Final = {
@@ -170,6 +172,18 @@ class LeafBuffers:
                 if not SCALAR_RULES[name].holds(number.item()):
                     raise InputError(name, SCALAR_RULES[name].text, number.item())
         return usable
+
+
+def has_passed(deadline: Any) -> bool:
+    """Whether a time of time.perf_counter() has passed; InputError for what is no finite number."""
+    try:
+        if time.perf_counter() < deadline < math.inf:
+            return False
+        if not isinstance(deadline, bool) and -math.inf < deadline < math.inf:
+            return True
+    except (TypeError, ValueError):
+        pass
+    raise InputError("deadline", "must be a finite time of time.perf_counter()", deadline)
 
 
 def number_array(name: str, value: Any, kind: str) -> NDArray[Any]:

@@ -17,7 +17,6 @@ from __future__ import annotations
 import hashlib
 import os
 import threading
-import time
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Final, NamedTuple
@@ -30,7 +29,14 @@ from distill import schema, scorer_file
 from distill.errors import DistillError, InputError, ScorerFileError
 from distill.fallback import closed_form_bounds, closed_form_values
 from distill.held_leaves import HeldLeaves
-from distill.leaf_buffers import MAX_LEAVES, LeafBuffers, number_array, number_arrays, number_scalars
+from distill.leaf_buffers import (
+    MAX_LEAVES,
+    LeafBuffers,
+    has_passed,
+    number_array,
+    number_arrays,
+    number_scalars,
+)
 from distill.onnx_pruned import pruned
 from distill.scorer_inputs import KINDS, InputKind, kind_of
 
@@ -191,7 +197,8 @@ class Scorer:
 
         remaining : rollouts left. tree : (n,), the rows of a tree side by side; remaining, horizon and
         batch_size may then be arrays of length n, and each tree is scored as if alone.
-        deadline : a time of time.perf_counter(); once it has passed, the closed form answers.
+        deadline : a time of time.perf_counter(), such as time.perf_counter() + 0.02; once it has passed, the
+        closed form answers. A duration alone is a time long past: always late.
         Raises InputError for arrays that form no leaf table (shapes, kinds of numbers); for invalid
         values only if `strict`, else they are flagged and the closed form scores the other rows.
         """
@@ -207,7 +214,8 @@ class Scorer:
     def hold(self, *, remaining: Any, **columns: Any) -> HeldLeaves:
         """The leaves of one tree kept ready: `update` what a rollout changed, then `pick` or `score` again.
 
-        Arguments as for `score`; `change` gives another horizon or batch_size. Saves microseconds a call.
+        Arguments as for `score`; later calls may give another horizon or batch_size, as `change` does. Saves
+        microseconds a call.
         """
         buffers = self._fill_with_care(self._kind_for(columns), columns, remaining, {})
         return HeldLeaves(buffers, self._scored, self._picked)
@@ -259,9 +267,10 @@ class Scorer:
 
     def _run(self, buffers: LeafBuffers, deadline: float | None, binding: Any) -> bool:
         """Run the whole file, or its pick alone; False where the answer needs mending."""
+        late = deadline is not None and has_passed(deadline)
         self.counters.decisions += 1
         buffers.answered = False
-        if deadline is not None and time.perf_counter() >= deadline:
+        if late:
             self.counters.late += 1
         elif self._session is not None and buffers.finite():
             buffers.answered = self._answers(buffers, binding)

@@ -155,6 +155,14 @@ def test_held_leaves_take_another_batch_between_calls(scorer, with_file):
         assert not held.score(remaining=60).voc.any()
     held.change(batch_size=8)
     np.testing.assert_array_equal(held.score(remaining=60).voc, whole.voc)
+    for k in (3, 5):  # with the call itself, and kept
+        want = scorer.score(**{**t, "batch_size": k})
+        np.testing.assert_array_equal(held.score(remaining=60, batch_size=k).voc, want.voc)
+        assert held.pick(remaining=60) == held.pick(remaining=60, batch_size=k) == want.pick
+    with pytest.raises(InputError, match="batch_size: is a number of a call, none of a leaf"):
+        held.update(0, batch_size=2)
+    with pytest.raises(InputError, match="batch_size: must"):
+        held.pick(remaining=60, batch_size="2")
     with pytest.raises(InputError, match="batch_size: is no number of a call of a leaf table"):
         Scorer.load(PLAIN).hold(**table(np.random.default_rng(0), 4, 2)).change(batch_size=3)
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import time
+
 import numpy as np
 import pytest
 from leaf_tables import table
@@ -49,6 +51,13 @@ def test_what_is_invalid_is_flagged_or_refused_and_nothing_is_written():
     for leaf, values, message in (
         (9, {"mean": 1.0}, "leaf: must be from 0 to 8; got 9"),
         (-1, {"mean": 1.0}, "leaf: must be"),
+        ([0, 1], {"mean": 1.0}, r"leaf: must be one whole number; got \[0, 1\]"),
+        (np.array([0, 1]), {"mean": 1.0}, "leaf: must be one whole number"),
+        (1.0, {"mean": 1.0}, "leaf: must be one whole number; got 1.0"),
+        (True, {"mean": 1.0}, "leaf: must be one whole number; got True"),
+        ("0", {"mean": 1.0}, "leaf: must be one whole number; got '0'"),
+        (None, {"mean": 1.0}, "leaf: must be one whole number; got None"),
+        (0, {"mean": None}, "mean: must hold numbers"),
         (0, {"mean": 1.0, "alpha": 2.0}, "alpha: must be among mean, var"),
         (0, {"mean": 1.0, "var": "1"}, "var: must hold numbers"),
         (0, {"mean": [1.0, 2.0]}, "mean: must be one number"),
@@ -65,3 +74,36 @@ def test_what_is_invalid_is_flagged_or_refused_and_nothing_is_written():
     got = held.score(remaining=30)
     assert not got.in_range.any()
     assert got.voc[3] == 0
+
+
+@pytest.mark.parametrize("scorer", [SCORER, Scorer.closed_form()], ids=["file", "closed form"])
+@pytest.mark.parametrize("deadline", ["soon", [0.0], True, float("nan"), float("inf"), -float("inf"), 1j])
+def test_a_deadline_is_a_finite_time(scorer, deadline):
+    t = table(np.random.default_rng(6), 9, 3)
+    held = scorer.hold(**t)
+    before = scorer.counters.decisions
+    for call in (scorer.pick, scorer.score):
+        with pytest.raises(InputError, match="deadline: must be a finite time of"):
+            call(**t, deadline=deadline)
+    with pytest.raises(InputError, match="deadline: must be"):
+        held.pick(remaining=30, deadline=deadline)
+    assert scorer.counters.decisions == before
+
+
+def test_a_duration_is_late_and_a_time_to_come_is_not():
+    t = table(np.random.default_rng(6), 9, 3)
+    late = SCORER.counters.late
+    SCORER.pick(**t, deadline=0.02)
+    assert SCORER.counters.late == late + 1
+    for far in (time.perf_counter() + 60, np.float64(time.perf_counter() + 60), 10**400):
+        assert SCORER.score(**t, deadline=far).in_range.any()
+    assert SCORER.counters.late == late + 1
+
+
+def test_a_number_that_this_input_has_not_is_named():
+    held = SCORER.hold(**table(np.random.default_rng(7), 9, 3))
+    for call in (held.pick, held.score):
+        with pytest.raises(InputError, match="horizon: is no number of a call of a leaf table"):
+            call(remaining=30, horizon=4)
+        with pytest.raises(InputError, match="mean: is no number of a call"):
+            call(remaining=30, mean=[0.0])

@@ -11,49 +11,58 @@ from rich.text import Text
 __all__ = ["scatter"]
 
 Point = tuple[float, float | None, str, bool]  # x, y, name, whether it stands on the front
+_SEVERAL = "*"
 
 
 def scatter(
     points: Sequence[Point], x_label: str, y_label: str, *, width: int = 64, height: int = 16
 ) -> None:
-    """Print the points: letters on a grid, those on the front bold and joined in the legend by a mark.
+    """Print the points: letters on a grid, those on the front bold and told as such in the legend.
 
-    A logarithmic axis has no 0: a y of 0 stands on the lowest row. Points without y are left out.
+    A logarithmic axis has no 0: points whose y is 0 have a row of their own below it. Points that share a
+    cell are one `*`, and a line says which. Points without y are left out.
     """
     shown = sorted((p for p in points if p[1] is not None), key=lambda p: p[0])
     console = Console(highlight=False)
     if not shown:
         console.print(f"no point has a {y_label}")
         return
-    positive = [p[1] for p in shown if p[1]] or [1.0]
-    xs, ys = _axis([p[0] for p in shown]), _axis(positive)
-    grid: list[list[tuple[str, str]]] = [[(" ", "")] * width for _ in range(height)]
-    for letter, (x, y, _, front) in zip(_letters(len(shown)), shown, strict=True):
-        row = height - 1 if not y else height - 1 - _cell(y, ys, height)
-        column = _cell(x, xs, width)
-        while grid[row][column][0] != " " and column + 1 < width:
-            column += 1
-        grid[row][column] = (letter, "bold green" if front else "dim")
-    edge = max(len(f"{v:.3g}") for v in ys)
+    positive = [p[1] for p in shown if p[1]]
+    xs, ys = _axis([p[0] for p in shown]), _axis(positive or [1.0])
+    rows = height - (len(positive) < len(shown))  # of the axis
+    cells: dict[tuple[int, int], list[int]] = {}
+    for i, (x, y, *_) in enumerate(shown):
+        row = rows - 1 - _cell(y, ys, rows) if y else rows
+        cells.setdefault((row, _cell(x, xs, width)), []).append(i)
+    letters = _letters(len(shown))
+    marks = {0: f"{ys[1]:.3g}", rows - 1: f"{ys[0]:.3g}", rows: "0"}
+    if not positive:
+        marks = {rows: "0"}
+    edge = max(map(len, marks.values()))
     console.print(f"{'':{edge}}  {y_label}")
-    for i, cells in enumerate(grid):
-        mark = f"{ys[1]:.3g}" if i == 0 else f"{ys[0]:.3g}" if i == height - 1 else ""
-        line = Text(f"{mark:>{edge}} |")
-        for character, style in cells:
-            line.append(character, style)
+    for row in range(height):
+        line = Text(f"{marks.get(row, ''):>{edge}} |")
+        for column in range(width):
+            here = cells.get((row, column), [])
+            character = " " if not here else letters[here[0]] if len(here) == 1 else _SEVERAL
+            front = any(shown[i][3] for i in here)
+            line.append(character, "" if not here else "bold green" if front else "dim")
         console.print(line, no_wrap=True)
     low, high = f"{xs[0]:.3g}", f"{xs[1]:.3g}"
     console.print(f"{'':{edge}} +{'-' * width}")
     console.print(f"{'':{edge}}  {low}{x_label:^{width - len(low) - len(high)}}{high}")
-    for letter, (x, y, name, front) in zip(_letters(len(shown)), shown, strict=True):
+    for letter, (x, y, name, front) in zip(letters, shown, strict=True):
         where = "on the front" if front else ""
         console.print(f"  {letter}  {name:<20} {x:9.1f} {y:9.4f}  {where}")
+    for together in cells.values():
+        if len(together) > 1:
+            console.print(f"  {_SEVERAL}  in one place: {', '.join(letters[i] for i in together)}")
 
 
 def _letters(n: int) -> list[str]:
-    """One character a point."""
+    """One character a point, + for those beyond the alphabet."""
     alphabet = "abcdefghijklmnopqrstuvwxyzABCDEFGHIJKLMNOPQRSTUVWXYZ"
-    return [alphabet[i] if i < len(alphabet) else "*" for i in range(n)]
+    return [alphabet[i] if i < len(alphabet) else "+" for i in range(n)]
 
 
 def _axis(values: Sequence[float]) -> tuple[float, float]:

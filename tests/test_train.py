@@ -215,9 +215,7 @@ def test_a_folder_of_something_else_is_not_filled(
     for folder in (front, scorer):
         folder.mkdir()
     (front / FRONT_FILE).write_text('{"format": "weather/1"}')
-    with pytest.raises(
-        InputError, match=r"front\.json: format: must be 'voc-front/1'; choose another folder"
-    ):
+    with pytest.raises(InputError, match=r"front\.json: format: must be 'voc-front/1'; choose another"):
         train(dataset, front, recipes=["linear"], n_boot=2)
     ship(trained[0], scorer / "linear.onnx", scorer="linear")
     with pytest.raises(InputError, match=r"linear\.onnx: must be an earlier training's to be replaced"):

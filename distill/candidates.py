@@ -19,6 +19,7 @@ from distill.backup import backup_of
 from distill.errors import InputError
 from distill.files import sha256_of
 from distill.metrics import Groups
+from distill.origins import origins
 from distill.scorer_inputs import (
     ANY_BATCH,
     ANY_HORIZON,
@@ -93,7 +94,7 @@ class Candidates:
                 "source": manifest["source"]["name"],
                 "source_sha256": manifest["source"]["sha256"],
                 "seed": manifest["seed"],
-                "drawn_from": _drawn_from(manifest),
+                "drawn_from": origins(manifest),
                 "dataset_sha256": sha256_of(folder / MANIFEST),
                 "trees": manifest["totals"]["trees"],
                 "candidates": manifest["totals"]["candidates"],
@@ -169,15 +170,6 @@ class Candidates:
             ],
             dtype=np.uint64,
         )
-
-
-def _drawn_from(manifest: Mapping[str, Any]) -> list[str]:
-    """Where the trees come from: a family with its seed, recorded files, parts of a mix, additions."""
-    source = manifest["source"]
-    whole = [source["sha256"]] if source["kind"] == "traces" else [f"{source['sha256']} {manifest['seed']}"]
-    if "family" in source:
-        whole = [f"{source['family']['sha256']} {manifest['seed']}", source["traces"]["sha256"]]
-    return sorted({*whole, *(addition["sha256"] for addition in manifest.get("added", ()))})
 
 
 def _kind_of(rows: Mapping[str, NDArray[Any]]) -> InputKind:

@@ -18,6 +18,7 @@ from distill.errors import DistillError, InputError
 from distill.estimates import two_sample
 from distill.family import Family, draw, load_family
 from distill.feature_graph import FeatureGraph
+from distill.origins import same_family
 from distill.recorded import refused, unlabelled
 from distill.sample_data import family_path
 from distill.scorer_inputs import RECORD, VARIES, InputKind
@@ -44,7 +45,7 @@ def trained_family(facts: Mapping[str, Any]) -> Family | None:
         family = load_family(family_path(str(data.get("source"))))
     except DistillError:
         return None
-    return family if family.sha256 == data.get("source_sha256") else None
+    return family if same_family(family, data) else None
 
 
 @dataclass(frozen=True, eq=False)

@@ -13,6 +13,7 @@ Infinity, in TOML inf, stands for the dynamic value: budget.horizon may be inf, 
 from __future__ import annotations
 
 import hashlib
+import json
 import math
 import os
 import tomllib
@@ -57,6 +58,14 @@ class Distribution:
     def support(self) -> tuple[float, float]:
         """The smallest and the largest value that can be drawn."""
         return (-math.inf, math.inf) if self.kind == "normal" else (min(self.args), max(self.args))
+
+    @property
+    def content(self) -> list[Any]:
+        """What is drawn, as JSON values; the same for two ways to write it."""
+        if self.always is not None:
+            return [float(self.always)]
+        weights = [float(w / self.shares[-1]) for w in self.shares]
+        return [self.kind, self.whole, [float(x) for x in self.args], weights]
 
     def draw(self, rng: np.random.Generator, size: int) -> Floats:
         """`size` independent values, float64."""
@@ -189,6 +198,21 @@ class Family:
     def number(self, key: str) -> float:
         """The value of a plain-number field."""
         return float(self.fields[key].args[0])
+
+    @property
+    def content(self) -> str:
+        """SHA-256 of what is drawn from, whatever the file's comments, order, spelling and name.
+
+        Fields at their default count as left out.
+        """
+        rules = FIELDS[self.belief]
+        said: dict[str, Any] = {}
+        for key, distribution in self.fields.items():
+            section, name = key.split(".")
+            default = rules[section][name].default
+            if default is None or distribution.always != default:
+                said[key] = distribution.content
+        return hashlib.sha256(json.dumps([self.belief, said], sort_keys=True).encode()).hexdigest()
 
 
 def load_family(path: str | os.PathLike[str]) -> Family:

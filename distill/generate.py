@@ -29,6 +29,7 @@ from distill.datasheet import datasheet
 from distill.errors import InputError, WorkersError
 from distill.files import write_atomic
 from distill.labelling import Asked, code_versions, label_shard
+from distill.origins import by_text
 from distill.sources import Batch, Mix, Plan, Source, Traces, plan_trees, tree_key
 from distill.terminal import bar
 from distill.tree import Ints
@@ -320,7 +321,8 @@ def _open(folder: Path, plan: dict[str, Any]) -> dict[str, Any]:
     """The manifest to go on from: a new one, or that of the same plan with its files verified."""
     if (folder / shards.MANIFEST).exists():
         manifest = shards.read_manifest(folder, partial=True)
-        _compare(str(folder / shards.MANIFEST), plan, manifest)
+        wanted, found = ({**x, "source": by_text(x.get("source"))} for x in (plan, manifest))
+        _compare(str(folder / shards.MANIFEST), wanted, found)
         if any(not a["complete"] for a in manifest.get("added", ())):
             raise InputError(str(folder), "must have its addition finished first: run generate --add again")
         _sweep(folder, manifest)

@@ -307,13 +307,18 @@ def _about(source: Source, recorded: int) -> dict[str, Any]:
     """As the manifest keeps it."""
     if not isinstance(source, Mix):
         kind = "family" if isinstance(source, Family) else "traces"
-        return {"kind": kind, "name": source.name, "sha256": source.sha256}
+        content = {"content": source.content} if isinstance(source, Family) else {}
+        return {"kind": kind, "name": source.name, "sha256": source.sha256, **content}
     both = f"{source.family.sha256} {source.traces.sha256} {recorded}"
     return {
         "kind": "mix",
         "name": source.name,
         "sha256": hashlib.sha256(both.encode()).hexdigest(),
-        "family": {"name": source.family.name, "sha256": source.family.sha256},
+        "family": {
+            "name": source.family.name,
+            "sha256": source.family.sha256,
+            "content": source.family.content,
+        },
         "traces": {"name": source.traces.name, "sha256": source.traces.sha256},
         "recorded": recorded,
     }

@@ -13,6 +13,7 @@ from distill.errors import InputError
 from distill.fallback import spreads
 from distill.feature_graph import FeatureGraph
 from distill.metrics import measure, random_forgone
+from distill.origins import share_origin
 from distill.peers import measure_peers, timed_cases
 from distill.query import Query
 from distill.runtime import Scorer
@@ -184,9 +185,7 @@ def validate(
             f"{dataset}: input", f"must be the scorer's, {scorer.kind.name}", candidates.kind.name
         )
     # The split goes by what a tree holds, so it serves whatever else stands in either dataset.
-    same_trees = not set(trained.get("data", {}).get("drawn_from", ())).isdisjoint(
-        about["data"]["drawn_from"]
-    )
+    same_trees = share_origin(trained.get("data", {}).get("drawn_from", ()), about["data"]["drawn_from"])
     if same_trees:
         candidates = split_by_tree(candidates, trained["seed"]).held_out
     graph = FeatureGraph.of_value(about["value"], candidates.kind)

@@ -22,11 +22,12 @@ from distill.errors import InputError, RefusedError
 from distill.family import Family, draw
 from distill.feature_graph import FeatureGraph
 from distill.metrics import picks
+from distill.origins import same_family
 from distill.query import Query
 from distill.recorded import rows_of
 from distill.runtime import Scorer
 from distill.scorer_inputs import LEAF_TABLE, RECORD, VARIES, WIN_LOSS_TABLE, InputKind
-from distill.shifted_families import out_of_reach, shifted, shifts_of
+from distill.shifted_families import GIVEN, out_of_reach, shifted, shifts_of
 from distill.terminal import bar
 from distill.tree import BeliefTree
 from distill.validate import examine, value_of_scorer
@@ -149,6 +150,9 @@ def measure_shifts(
         )
         found = _measured(scorer, candidates, value, n_boot, seed)
         out[name] = found | {"aside": aside, "changed": known[name].words}
+    if GIVEN in out:
+        of_training = same_family(family, scorer.facts.get("about", {}).get("data", {}))
+        out[GIVEN]["changed"] += f", which is {'' if of_training else 'not known to be '}that of training"
     return out
 
 

@@ -15,7 +15,7 @@ from distill.errors import InputError
 from distill.family import Family, parse_family
 from distill.scorer_inputs import RECORD, InputKind
 
-__all__ = ["SHIFTS", "Shift", "out_of_reach", "shifted", "shifts_of"]
+__all__ = ["GIVEN", "SHIFTS", "Shift", "out_of_reach", "shifted", "shifts_of"]
 
 _Text = dict[str, Any]
 _QUARTER: Final = 0.25
@@ -97,7 +97,8 @@ def _correlation(family: _Text) -> None:
 # --- which shifts there are -----------------------------------------------------------------------
 
 
-_SAME: Final = {"as trained": Shift("nothing; fresh trees of the family", _nothing)}
+GIVEN: Final = "as given"  # the base family as it is
+_SAME: Final = {GIVEN: Shift("nothing; fresh trees of the family", _nothing)}
 _SHAPE: Final = {
     "leaves x4": Shift("four times the leaves of each action", _times("shape", "leaves", 4)),
     "one level deeper": Shift("every action one level deeper", _one_level_deeper),

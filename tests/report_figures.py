@@ -82,7 +82,7 @@ def shifts() -> dict[str, Any]:
             "changed": f"what {name} changes",
         }
         for name, share, start, flagged in (
-            ("as trained", 0.0213, 0.77, 0.5),
+            ("as given", 0.0213, 0.77, 0.5),
             ("one level deeper", 0.35, 1.23, None),
             ("correlation", 12.5, 14.2, 61.3),
         )

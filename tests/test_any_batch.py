@@ -246,8 +246,8 @@ def test_audit_asks_each_recorded_tree_at_its_own_batch(shipped, tmp_path):
 
 
 def test_shifts_keep_each_trees_batch(scorer):
-    found = measure_shifts(scorer, family(), names=["as trained", "noise x4"], trees=20, n_boot=10)
-    assert set(found) == {"as trained", "noise x4"}
+    found = measure_shifts(scorer, family(), names=["as given", "noise x4"], trees=20, n_boot=10)
+    assert set(found) == {"as given", "noise x4"}
     assert all(m["forgone_percent"]["value"] < 10 and m["aside"] == 0 for m in found.values())
 
 

@@ -18,6 +18,14 @@ __all__ = ["HELP", "add_arguments", "run"]
 
 HELP = "a scorer file against exact labels"
 
+_SHIFT_WORDS = """\
+Forgone share: value lost because picks are not always the best, of the best value, over all trees together.
+Relative forgone: the same of each tree's own best value, averaged over trees, so that small ones count too.
+First-order start: the forgone share of the formula that the scorer starts from.
+Bound holds: candidates whose exact value is at or below `voc_high`.
+Trees flagged: those with a leaf outside what training saw (`in_range`). Loss flagged: of all that the picks
+forgo, the part in flagged trees; the rest an agent is not warned of."""
+
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
@@ -90,11 +98,13 @@ def _on_dataset(args: argparse.Namespace, scorer: Scorer) -> dict[str, Any]:
 def _on_shifts(args: argparse.Namespace, scorer: Scorer, family: Family, kind: InputKind) -> dict[str, Any]:
     from distill.sheet import shift_table
     from distill.shift import measure_shifts
-    from distill.shifted_families import out_of_reach
+    from distill.shifted_families import GIVEN, out_of_reach
 
     gone = out_of_reach(family, kind)
     figures = measure_shifts(scorer, family, trees=args.trees, seed=args.seed, progress=True)
-    print("\n".join(["", *shift_table(figures)]))
+    print("\n".join(["", *shift_table(figures), "", _SHIFT_WORDS]))
+    if GIVEN in figures:
+        print(f"{GIVEN.capitalize()}: {figures[GIVEN]['changed']}.")
     if gone:
         print("\n".join(["", "Left out:", *(f"- {name}: {why}" for name, why in gone.items())]))
     return {"shifts": figures, "shifts_left_out": gone}

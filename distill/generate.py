@@ -305,8 +305,10 @@ def _compare(place: str, wanted: dict[str, Any], found: dict[str, Any]) -> None:
                 for k in dict.fromkeys([*value, *other])
                 if other.get(k) != value.get(k)
             )
-        rule = "as here" if place == "worker" else "to go on; choose another folder for another dataset"
-        raise InputError(f"{place}: {key}", f"must be {value!r} {rule}", other)
+        if place == "worker":
+            raise InputError(f"{place}: {key}", f"must be {value!r} as here", other)
+        rule = f"must be {other!r}, as it began, to go on; choose another folder for another dataset"
+        raise InputError(f"{place}: {key}", rule, value)
 
 
 def _sweep(folder: Path, manifest: dict[str, Any]) -> None:

@@ -125,7 +125,8 @@ def test_the_command_asks_for_it_and_goes_on_where_it_stopped(tmp_path, capsys):
     assert Candidates.read(tmp_path / "d")[1]["value"] == VALUE
     capsys.readouterr()
     assert run([*given, "--batch", "4"]) == 2
-    assert "asked.batch: must be 4 to go on" in capsys.readouterr().err
+    assert "; got 4" in (err := capsys.readouterr().err)
+    assert "asked.batch: must be " in err
     for wrong in ("leaf", "0", "2.5"):
         with pytest.raises(SystemExit):
             run([*given, "--batch", wrong])

@@ -127,7 +127,9 @@ def test_an_addition_that_was_stopped_goes_on_to_the_same_bytes(dataset, whole, 
             shards.read_candidates(dataset)
         with pytest.raises(InputError, match=r"must have its addition finished first: run generate --add"):
             generate(COLD, dataset, trees=30, seed=1, asked=STATIC, shard_trees=10)
-        with pytest.raises(InputError, match=r"added: name: must be 'other' to go on; .*; got 'audit'"):
+        with pytest.raises(
+            InputError, match=r"added: name: must be 'audit', as it began, to go on; .*; got 'other'"
+        ):
             add(Traces("other", NEW[:9]), dataset)
     add(Traces("audit", NEW), dataset)
     assert _bytes(dataset) == whole

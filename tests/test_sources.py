@@ -89,9 +89,11 @@ def test_a_mixed_dataset_says_where_each_tree_is_from(tmp_path):
     assert "10 of 40 recorded: `agent`" in page
     assert "the family `cold-store`" in page
     assert (tmp_path / "d" / "family.toml").read_text() == COLD.text
-    with pytest.raises(InputError, match=r"source.kind: must be 'family' to go on; .*; got 'mix'"):
+    with pytest.raises(
+        InputError, match=r"source.kind: must be 'mix', as it began, to go on; .*; got 'family'"
+    ):
         generate(COLD, tmp_path / "d", trees=40, asked=ONE, shard_trees=7)
-    with pytest.raises(InputError, match=r"source.sha256: must be .* to go on"):
+    with pytest.raises(InputError, match=r"source.sha256: must be .*, to go on"):
         generate(replace(mix, share=0.2), tmp_path / "d", trees=40, asked=ONE, shard_trees=7)
 
 
@@ -115,7 +117,9 @@ def test_close_calls_are_preferred_among_recorded_trees_too(tmp_path):
 
 def test_another_sampling_is_refused(tmp_path):
     generate(COLD, tmp_path, trees=6, asked=ONE, close_calls=2)
-    with pytest.raises(InputError, match=r"sampling.close_calls: must be 3 to go on; .*; got 2"):
+    with pytest.raises(
+        InputError, match=r"sampling.close_calls: must be 2, as it began, to go on; .*; got 3"
+    ):
         generate(COLD, tmp_path, trees=6, asked=ONE, close_calls=3)
 
 

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import codecs
 import json
 import math
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
@@ -33,6 +35,13 @@ def parse_json(text: str | bytes) -> object:
     Traceback (most recent call last):
     distill.errors.InputError: mean[2]: must be finite; got nan
     """
+    if isinstance(text, bytes):
+        if text.startswith((codecs.BOM_UTF16_LE, codecs.BOM_UTF16_BE)) or b"\0" in text[:4]:
+            raise InputError("record", "must be UTF-8 text; this looks like UTF-16 or UTF-32")
+        try:
+            text = text.decode("utf-8-sig")
+        except UnicodeDecodeError as e:
+            raise InputError(f"byte {e.start}", "must be UTF-8 text") from None
     constants: list[str] = []
 
     def constant(name: str) -> float:
@@ -43,8 +52,6 @@ def parse_json(text: str | bytes) -> object:
         obj: object = json.loads(text, parse_constant=constant, object_pairs_hook=_no_repeats)
     except json.JSONDecodeError as e:
         raise InputError(f"column {e.colno}", f"must be valid JSON ({e.msg})") from None
-    except UnicodeDecodeError as e:
-        raise InputError(f"byte {e.start}", "must be UTF-8 text") from None
     except RecursionError:
         raise InputError("record", "must not be nested so deeply") from None
     except ValueError as e:  # whole numbers of more digits than Python converts
@@ -62,6 +69,28 @@ def from_record(obj: object) -> BeliefTree:
     Traceback (most recent call last):
     distill.errors.InputError: var[1]: must be >= 0; got -1.0
     """
+    try:
+        return _from_record(obj)
+    except InputError as e:
+        if not e.value or not isinstance(e.value[0], (bool, list, dict, type(None))):
+            raise
+        raise InputError(e.place, e.rule, _Json(e.value[0])) from None
+
+
+@dataclass(frozen=True)
+class _Json:
+    """A value that an error shows as it stands in the record: true and null, not True and None."""
+
+    value: object
+
+    def __repr__(self) -> str:
+        try:
+            return json.dumps(self.value, ensure_ascii=False, default=repr)
+        except (TypeError, ValueError, RecursionError):  # what came as Python objects may be no JSON
+            return f"a {type(self.value).__name__}"
+
+
+def _from_record(obj: object) -> BeliefTree:
     if not isinstance(obj, dict):
         raise InputError("record", "must be a JSON object", obj)
     for key in obj:

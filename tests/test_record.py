@@ -41,7 +41,7 @@ MALFORMED = {
     ),
     "boolean parent": (
         flat_record(parent=[-1, False, 1, 1, 0]),
-        r"parent\[1\]: must be a whole number; got False",
+        r"parent\[1\]: must be a whole number; got false",
     ),
     "parent no array": (flat_record(parent="-1"), "parent: must be an array"),
     "short kind": (flat_record(kind=["decision"]), "kind: must have 5 entries, one a node; got 1"),

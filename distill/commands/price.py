@@ -44,7 +44,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     )  # fmt: skip
     bad.add_argument(
         "--skip-bad", action="store_true",
-        help="pass over bad records; their number and lines go to standard error",
+        help="pass over records that are bad or cannot be priced as asked; their number and lines go to "
+        "standard error",
     )  # fmt: skip
 
 
@@ -68,13 +69,19 @@ def run(args: argparse.Namespace) -> None:
             )
             priced = voc.price(tree, query)
         except InputError as e:
-            raise e.at(place) from None
+            bad(e.at(place))
+            continue
         except DistillError as e:
-            raise type(e)(f"{place}: {e}") from None
+            if not args.skip_bad:
+                raise type(e)(f"{place}: {e}") from None
+            bad(InputError(place, str(e)))
+            continue
         if args.table:
             lines.append(_price_table(tree, query, priced))
         else:
             lines.append(json.dumps(to_output(tree, query, priced)))
+    if not lines:
+        raise traces.none_valid(args.trees, bad)
     flags.say_bad_lines(bad)
     _emit("\n".join(lines) + "\n", args.out)
 
@@ -98,6 +105,7 @@ def _price_table(tree: BeliefTree, query: Query, priced: Priced) -> str:
     lines = [
         f"tree {tree.id if tree.id is not None else '-'}: {which} VOC {unit}; {priced.method}",
         "  root action values: " + ", ".join(f"{v:.6g}" for v in priced.value),
+        f"  net: VOC less what {'a rollout' if query.rate else 'the rollouts'} there cost{'s' * query.rate}",
         f"  {'leaf':>{width + 4}}  {'VOC':>12}  {'net':>12}  {'batch':>8}  {'error <':>9}",
     ]
     for i in range(len(net)):

@@ -19,7 +19,7 @@ def main() -> int:
             raise
         print(
             f"voc-distill: error: the command line needs the train extra (no module {e.name!r}): "
-            "pip install 'voc-distill[train]'",
+            "pip install '.[train]' in a checkout of voc-distill",
             file=sys.stderr,
         )
         return 2

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import argparse
 import contextlib
+import errno
 import os
 import sys
 from collections.abc import Sequence
@@ -32,6 +33,7 @@ from distill.errors import DistillError
 
 __all__ = ["run"]
 
+_FULL = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EIO)
 _COMMANDS = (price, infer, generate, look, train, ship, validate, audit, report, rehearse, record, tour)
 
 
@@ -45,14 +47,22 @@ def run(argv: Sequence[str]) -> int:
     except DistillError as e:
         return _fail(str(e))
     except BrokenPipeError:  # the reader of our output has gone; nothing is left to say
-        with contextlib.suppress(OSError):
-            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        _drop_output()
         return 141
     except OSError as e:
         where = f"{e.filename}: " if e.filename else ""
+        if not where and e.errno in _FULL:  # files that we write are named
+            where = "standard output: "
+            _drop_output()
         return _fail(f"{where}{e.strerror or e}")
     except KeyboardInterrupt:
         return _fail("interrupted", 130)
+
+
+def _drop_output() -> None:
+    """What was not written yet would fail again at exit."""
+    with contextlib.suppress(OSError):
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _fail(message: str, code: int = 2) -> int:

@@ -33,6 +33,7 @@ _MAX_NODES: Final = 1000
 _MAX_CASES: Final = 100
 
 _IR_VERSION: Final = 10
+_FIRST_BYTE: Final = b"\x08"  # every writer puts ir_version, field 1 as a whole number, first
 _OPSETS: Final = ({"": 18}, {"": 18, "ai.onnx.ml": 5})
 _METADATA: Final = ("format", "about", "features", "ranges", "self_test", "transform")
 _OPTIONAL: Final = ("measured", "calibration", "input")
@@ -64,7 +65,12 @@ def check(data: bytes) -> dict[str, Any]:
     """
     if len(data) > MAX_BYTES:
         raise ScorerFileError(f"must be at most {MAX_BYTES} bytes; got {len(data)} or more")
-    model = read_model(data)
+    try:
+        model = read_model(data)
+    except ScorerFileError as e:
+        if data[:1] == _FIRST_BYTE:
+            raise
+        raise ScorerFileError(f"is no ONNX file, as train and ship leave them ({e})") from None
     if model.ir_version != _IR_VERSION:
         raise ScorerFileError(f"ir_version must be {_IR_VERSION}; got {model.ir_version}")
     if len(dict(model.opsets)) != len(model.opsets) or dict(model.opsets) not in _OPSETS:

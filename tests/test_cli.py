@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import argparse
 import gzip
 import io
 import json
 import math
+import re
 import subprocess
 import sys
 
@@ -17,7 +19,9 @@ from test_family import family_text
 from test_record import BAD_TEXT, MALFORMED
 
 from distill import voc
+from distill.__main__ import main
 from distill.cli import run
+from distill.commands.flags import microseconds
 from distill.query import Query
 from distill.record import from_record
 
@@ -255,3 +259,105 @@ def test_additions_say_how_many_trees_were_new(trees, tmp_path, capsys):
     more.write_text(trees.read_text() + json.dumps(other) + "\n")
     assert run(["generate", "--add", str(more), "--out", data, "--workers", "1"]) == 0
     assert capsys.readouterr().out.startswith("3 trees given, 1 of them new and labelled")
+
+
+# --- what is wrong is said as the user gave it ------------------------------------------------------
+
+
+def test_a_record_that_cannot_be_priced_as_asked_is_passed_over_too(tmp_path, capsys):
+    path = tmp_path / "mixed.jsonl"
+    records = [flat_record(id=0, remaining=20), flat_record(id=1), flat_record(id=2, remaining=20)]
+    path.write_text("\n".join(map(json.dumps, records)) + "\n{\n")
+    assert run(["price", str(path), "--rate", "--skip-bad"]) == 0
+    out, err = capsys.readouterr()
+    assert [json.loads(line)["id"] for line in out.splitlines()] == [0, 2]
+    assert "2 bad records passed over" in err
+    assert "line 2: remaining: must be given for a rate" in err
+    assert "line 2" in refused(capsys, "price", path, "--rate")
+    path.write_text(json.dumps(records[1]))
+    assert "all 1 are bad" in refused(capsys, "price", path, "--rate", "--skip-bad")
+    # A method that cannot do it is no reason to stop either.
+    path.write_text("\n".join(map(json.dumps, records)))
+    told = refused(capsys, "price", path, "--tolerance", "1e-40", "--skip-bad")
+    assert "all 3 are bad" in told
+
+
+@pytest.mark.parametrize(
+    ("text", "told"),
+    [
+        ('{"format": "belief-tree/1", "parent": true}', "got true"),
+        ('{"format": null}', "got null"),
+        (
+            '{"format": "belief-tree/1", "parent": [null, true]}',
+            "parent[0]: must be a whole number; got null",
+        ),
+        ("[1, [true, null]]", "must be a JSON object; got"),
+        (json.dumps(flat_record()).encode("utf-16"), "UTF-8 text; this looks like UTF-16"),
+        (json.dumps(flat_record()).encode("utf-16-le"), "UTF-8 text; this looks like UTF-16"),
+    ],
+)
+def test_a_bad_record_is_shown_as_it_stands_in_its_file(text, told, tmp_path, capsys):
+    path = tmp_path / "bad.jsonl"
+    path.write_bytes(text if isinstance(text, bytes) else text.encode())
+    assert told in refused(capsys, "price", path)
+
+
+def test_a_byte_order_mark_of_utf_8_is_no_fault(tmp_path, capsys):
+    path = tmp_path / "marked.jsonl"
+    path.write_bytes(json.dumps(flat_record()).encode("utf-8-sig"))
+    assert run(["price", str(path)]) == 0
+    assert json.loads(capsys.readouterr().out)["voc"]
+
+
+def test_what_is_no_scorer_or_no_figures_is_named(tmp_path, capsys):
+    for data in (b"# a page\n", b"\xd2\x07 not at all"):
+        (tmp_path / "s.md").write_bytes(data)
+        assert "s.md: is no ONNX file" in refused(capsys, "validate", tmp_path / "s.md", tmp_path)
+    (tmp_path / "v.json").write_text('{"accuracy": {}, "beside": {}}')
+    (tmp_path / "w.json").write_text('{"format": "voc-sheet/1"}')
+    for name, told in (
+        ("v.json", "v.json: must hold the figures of train"),
+        ("w.json", "w.json: file: is missing"),
+    ):
+        assert told in refused(capsys, "report", tmp_path / name, "--out", tmp_path / "p.html")
+
+
+def test_a_full_disk_behind_standard_output_is_named(trees):
+    with open("/dev/full", "w") as full:  # noqa: PTH123
+        done = subprocess.run(
+            [sys.executable, "-m", "distill", "price", str(trees)],
+            stdout=full, stderr=subprocess.PIPE, text=True, check=False,
+        )  # fmt: skip
+    assert done.returncode == 2
+    assert done.stderr == "voc-distill: error: standard output: No space left on device\n"
+
+
+@pytest.mark.parametrize(
+    ("text", "us"),
+    [("40us", 40.0), ("40", 40.0), ("1ms", 1e3), ("2.5 ms", 2.5e3), ("1e-3s", 1e3), ("7µs", 7)],
+)
+def test_times_take_their_units(text, us):
+    assert microseconds(text) == pytest.approx(us)
+
+
+@pytest.mark.parametrize("text", ["0us", "-1ms", "fast", "1h", "", "us", "1e999s", "nan", "1 2"])
+def test_what_is_no_time_is_shown_as_given(text):
+    with pytest.raises(argparse.ArgumentTypeError, match=re.escape(f"such as 40us; got {text!r}")):
+        microseconds(text)
+
+
+def test_a_file_where_a_folder_is_wanted_is_told_as_one(trees, capsys):
+    with pytest.raises(SystemExit):
+        run(["generate", "--family", "cold-store", "--trees", "3", "--out", str(trees)])
+    assert "--out: must be a folder, and a file is there; got " in capsys.readouterr().err
+
+
+def test_a_light_installation_is_told_where_the_extra_comes_from(capsys, monkeypatch):
+    def missing(*_):
+        raise ModuleNotFoundError("No module named 'sklearn'", name="sklearn")
+
+    monkeypatch.setattr("distill.cli.run", missing)
+    assert main() == 2
+    err = capsys.readouterr().err
+    assert "pip install '.[train]' in a checkout" in err
+    assert "install 'voc-distill" not in err

@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 import math
 import os
+import re
 import sys
 from collections.abc import Callable
 from pathlib import Path
@@ -24,6 +25,9 @@ __all__ = [
     "positive",
     "whole",
 ]
+
+
+_IN_MICROSECONDS = {"us": 1.0, "µs": 1.0, "μs": 1.0, "ms": 1e3, "s": 1e6}
 
 
 def add_query_flags(parser: argparse.ArgumentParser, rate_is_default: bool = False) -> None:
@@ -117,6 +121,8 @@ def out_file(text: str) -> Path:
 def out_folder(text: str) -> Path:
     """A folder to write into; refused before any work where it cannot be."""
     path = Path(text)
+    if path.exists() and not path.is_dir():
+        raise argparse.ArgumentTypeError(f"must be a folder, and a file is there; got {text!r}")
     _open_to_writing(path, text)
     return path
 
@@ -141,6 +147,12 @@ def positive(text: str) -> float:
 
 
 def microseconds(text: str) -> float:
-    """A time such as 40us."""
-    number = text.removesuffix("us").removesuffix("µs").strip()
-    return positive(number)
+    """A time such as 40us or 1ms, in microseconds; a bare number is of microseconds."""
+    found = re.fullmatch(r"\s*([^a-zµμ]+(?:e[+-]?\d+)?)\s*(us|µs|μs|ms|s)?\s*", text)
+    try:
+        us = float(found[1]) * _IN_MICROSECONDS[found[2] or "us"] if found else math.nan
+    except ValueError:
+        us = math.nan
+    if not 0 < us < math.inf:
+        raise argparse.ArgumentTypeError(f"must be a time above 0 in us, ms or s, such as 40us; got {text!r}")
+    return us

@@ -43,7 +43,15 @@ def run(args: argparse.Namespace) -> None:
         if not shifts:
             raise InputError(str(args.shifts), "must hold shifts, as validate --shift --out leaves them")
         figures["shifts"] = shifts
-    write_page(figures, args.out)
+    if "scorer" not in figures and "format" not in figures:
+        rule = "must hold the figures of train, ship or a tour; those of validate --shift go to --shifts"
+        raise InputError(str(args.figures), rule)
+    try:
+        write_page(figures, args.out)
+    except InputError as e:
+        if not e.place.startswith("report"):
+            raise
+        raise InputError(f"{args.figures}{e.place.removeprefix('report')}", e.rule, *e.value) from None
     print(f"{args.out}: one page, no other files needed")
 
 

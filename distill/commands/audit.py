@@ -37,7 +37,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--out", type=flags.out_folder, metavar="FOLDER",
         help="audit.json, audit.html and worth-adding.jsonl.gz go here; generate --add takes the last",
     )  # fmt: skip
-    parser.add_argument("--seed", type=flags.whole(0), default=0, help="of sample and intervals")
+    flags.add_seed_flag(parser, "sample and intervals")
     flags.add_strict_flag(parser)
 
 

@@ -18,6 +18,7 @@ if TYPE_CHECKING:  # --help must answer at once
 
 __all__ = [
     "add_query_flags",
+    "add_seed_flag",
     "add_strict_flag",
     "say_bad_lines",
     "horizon",
@@ -34,10 +35,11 @@ def add_query_flags(parser: argparse.ArgumentParser, rate_is_default: bool = Fal
     """--value, --batch or --rate, --remaining and --tolerance: what is asked of each tree."""
     parser.add_argument(
         "--value", type=horizon, metavar="static|dynamic|H",
-        help="as if no rollouts followed, as if all uncertainty were resolved, or H more rollouts a leaf",
+        help="as if no rollouts followed, as if all uncertainty were resolved, or H more rollouts a leaf "
+        "(default: each tree's own horizon, else dynamic)",
     )  # fmt: skip
     size = parser.add_mutually_exclusive_group()
-    one, rate = ("", " (default)") if rate_is_default else (" (default 1)", "")
+    one, rate = ("", " (default)") if rate_is_default else (" (default: each tree's own, else 1)", "")
     if rate_is_default:
         size.add_argument(
             "--batch", type=_batch, metavar="K|tree",
@@ -48,11 +50,20 @@ def add_query_flags(parser: argparse.ArgumentParser, rate_is_default: bool = Fal
     size.add_argument(
         "--rate", action="store_true", help=f"best VOC a rollout over batches within the rollouts left{rate}"
     )
-    parser.add_argument("--remaining", type=whole(0), metavar="R", help="rollouts left; bounds the rate")
+    parser.add_argument(
+        "--remaining", type=whole(0), metavar="R",
+        help="rollouts left; bounds the rate (default: each tree's own)",
+    )  # fmt: skip
     parser.add_argument(
         "--tolerance", type=positive, metavar="T",
-        help="largest error accepted, as a share of the tree's scale; a method that misses it refuses",
+        help="largest error accepted, as a share of the tree's scale; a method that misses it refuses "
+        "(default: what the method reaches)",
     )  # fmt: skip
+
+
+def add_seed_flag(parser: argparse.ArgumentParser, of: str) -> None:
+    """--seed, 0 by default. of : what it is the seed of."""
+    parser.add_argument("--seed", type=whole(0), default=0, metavar="S", help=f"of {of} (default 0)")
 
 
 def add_strict_flag(parser: argparse.ArgumentParser) -> None:

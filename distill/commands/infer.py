@@ -17,10 +17,14 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
     parser.add_argument("traces", nargs="+", metavar="TRACES", help="recorded trees")
     parser.add_argument(
-        "--out", type=flags.out_file, required=True, metavar="FILE.toml", help="the family file"
+        "--out",
+        type=flags.out_file,
+        required=True,
+        metavar="FILE.toml",
+        help="the family file; only one that infer wrote is replaced",
     )
     parser.add_argument("--page", type=flags.out_file, metavar="FILE.html", help="a page with pictures")
-    parser.add_argument("--seed", type=flags.whole(0), default=0, help="of the intervals and drawn trees")
+    flags.add_seed_flag(parser, "the intervals and drawn trees")
     flags.add_strict_flag(parser)
 
 

@@ -15,7 +15,7 @@ _BAR = 40  # characters of the longest bar
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
-    parser.add_argument("dataset", metavar="DATASET")
+    parser.add_argument("dataset", metavar="DATASET", help="what generate left")
     parser.add_argument("--page", type=flags.out_file, metavar="FILE.html", help="a page with pictures")
     parser.add_argument(
         "--no-check", action="store_true", help="do not compare the files with their hashes first"

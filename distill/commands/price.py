@@ -32,6 +32,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         metavar="TREES",
         help="belief-tree/1 records, .jsonl, .jsonl.gz or .json; - reads standard input",
     )
+    parser.epilog = (
+        "A flag goes before what a record says: --value, --batch and --remaining hold for all of them."
+    )
     flags.add_query_flags(parser)
     parser.add_argument("--table", action="store_true", help="a readable table instead of JSON Lines")
     parser.add_argument(

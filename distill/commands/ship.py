@@ -14,13 +14,20 @@ HELP = "copy one scorer of a trained front, with its sheet, to where agents load
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
     parser.add_argument("trained", metavar="FOLDER", help="what train left")
-    parser.add_argument("--out", type=flags.out_file, required=True, metavar="FILE.onnx")
+    parser.add_argument(
+        "--out",
+        type=flags.out_file,
+        required=True,
+        metavar="FILE.onnx",
+        help="the scorer; its sheet goes beside it as .json and .md",
+    )
     which = parser.add_mutually_exclusive_group()
     which.add_argument(
         "--latency",
         type=flags.microseconds,
         metavar="40us",
-        help="most accurate within this median time a decision",
+        help="only those within this median time a decision (us, ms or s). Without --scorer the fastest of the "
+        "most accurate is shipped, all within a standard error counting as that",
     )
     which.add_argument("--scorer", metavar="NAME", help="by its name on the front")
 

@@ -14,7 +14,14 @@ HELP = "the whole job on the sample data, in a few minutes"
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
-    parser.add_argument("out", type=flags.out_folder, nargs="?", default=Path("tour-out"), metavar="FOLDER")
+    parser.add_argument(
+        "out",
+        type=flags.out_folder,
+        nargs="?",
+        default=Path("tour-out"),
+        metavar="FOLDER",
+        help="what it leaves goes here; an earlier tour's is replaced (default tour-out)",
+    )
 
 
 def run(args: argparse.Namespace) -> None:

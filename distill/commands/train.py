@@ -15,16 +15,16 @@ HELP = "fit the front of scorers on a dataset, validate and time each"
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
-    parser.add_argument("dataset", metavar="DATASET")
+    parser.add_argument("dataset", metavar="DATASET", help="what generate left")
     parser.add_argument(
         "--out", type=flags.out_folder, required=True, metavar="FOLDER", help="scorer files and front.json"
     )
-    parser.add_argument("--seed", type=flags.whole(0), default=0)
+    flags.add_seed_flag(parser, "the split by trees, learners and intervals")
     parser.add_argument(
         "--latency",
         type=flags.microseconds,
         metavar="40us",
-        help="say which scorer is the most accurate within this median time a decision",
+        help="say which scorer is the most accurate within this median time a decision (us, ms or s)",
     )
     parser.add_argument("--show", action="store_true", help="draw the front here, and into FOLDER/front.svg")
 

@@ -39,7 +39,21 @@ def test_the_command_records_what_a_scorer_meets(tmp_path, capsys):
     assert command_line(["record", *flags, "--out", str(out)]) == 0
     assert "10 trees of 2 decisions" in capsys.readouterr().out
     assert [t.extra["policy"] for _, t in read_trees(out)] == 10 * ["cold-store-fast"]
-    assert command_line(["record", "--problem", "taxi", "--decisions", "1", "--out", str(out)]) == 2
+    spare = str(tmp_path / "even.jsonl")
+    flags = ["--problem", PROBLEM.name, "--decisions", "1", "--rollouts", "8", "--out", spare]
+    assert command_line(["record", *flags]) == 0
+    assert [t.extra["policy"] for _, t in read_trees(spare)] == 5 * ["even"]
+    flags = [
+        "--simulator",
+        "taxi",
+        "--policy",
+        "even",
+        "--decisions",
+        "1",
+        "--out",
+        str(tmp_path / "t.jsonl"),
+    ]
+    assert command_line(["record", *flags]) == 2
     assert "--policy: goes with --problem" in capsys.readouterr().err
 
 

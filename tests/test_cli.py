@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import argparse
 import gzip
+import importlib
 import io
 import json
 import math
@@ -21,9 +22,11 @@ from test_record import BAD_TEXT, MALFORMED
 from distill import voc
 from distill.__main__ import main
 from distill.cli import run
+from distill.commands import record
 from distill.commands.flags import microseconds
 from distill.query import Query
 from distill.record import from_record
+from distill.rehearse.catalogue import SIMULATORS
 
 
 @pytest.fixture
@@ -110,6 +113,9 @@ def test_price_table_marks_the_best_leaf(trees, capsys):
     out = capsys.readouterr().out
     assert out.count("<- best") == 2
     assert "dynamic VOC a rollout, best batch" in out
+    assert out.count("net: VOC less what a rollout there costs") == 2
+    assert run(["price", str(trees), "--table", "--batch", "4"]) == 0
+    assert capsys.readouterr().out.count("net: VOC less what the rollouts there cost\n") == 2
 
 
 @pytest.mark.parametrize("name", MALFORMED)
@@ -361,3 +367,28 @@ def test_a_light_installation_is_told_where_the_extra_comes_from(capsys, monkeyp
     err = capsys.readouterr().err
     assert "pip install '.[train]' in a checkout" in err
     assert "install 'voc-distill" not in err
+
+
+# --- what help says --------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    "name",
+    ["price", "infer", "generate", "look", "train", "ship", "validate", "audit", "report", "record", "tour"],
+)
+def test_help_tells_every_default(name):
+    parser = argparse.ArgumentParser()
+    importlib.import_module(f"distill.commands.{name}").add_arguments(parser)
+    for action in parser._actions:
+        if action.default not in (None, False, [], argparse.SUPPRESS):
+            assert "default" in (action.help or ""), action.dest
+        assert action.help or action.required, action.dest
+
+
+def test_help_names_the_simulators_that_there_are():
+    assert record._SIMULATORS.split(", ") == list(SIMULATORS)
+
+
+def test_a_number_of_trees_without_families_to_draw_from_is_refused(capsys):
+    err = refused(capsys, "validate", "models/cold-store.onnx", "datasets/sample", "--trees", "5")
+    assert "--trees: must come with --shift" in err

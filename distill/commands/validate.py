@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 __all__ = ["HELP", "add_arguments", "run"]
 
 HELP = "a scorer file against exact labels"
+_TREES = 300
 
 _SHIFT_WORDS = """\
 Forgone share: value lost because picks are not always the best, of the best value, over all trees together.
@@ -29,7 +30,7 @@ forgo, the part in flagged trees; the rest an agent is not warned of."""
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's flags."""
-    parser.add_argument("scorer", metavar="FILE.onnx")
+    parser.add_argument("scorer", metavar="FILE.onnx", help="as train and ship leave them")
     parser.add_argument("dataset", metavar="DATASET", nargs="?", help="labelled trees")
     parser.add_argument(
         "--shift",
@@ -39,16 +40,15 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--trees",
         type=flags.whole(1),
-        default=300,
         metavar="N",
-        help="of each shift (default 300; a tenth where leaves are correlated)",
+        help=f"of each shift (default {_TREES}; a tenth where leaves are correlated)",
     )
     parser.add_argument(
         "--peers",
         action="store_true",
         help="measure what else could pick on the dataset's trees, and its time",
     )
-    parser.add_argument("--seed", type=flags.whole(0), default=0, help="of the bootstrap and of drawn trees")
+    flags.add_seed_flag(parser, "the bootstrap and of drawn trees")
     parser.add_argument("--out", type=flags.out_file, metavar="FILE.json", help="write the figures here too")
 
 
@@ -62,6 +62,8 @@ def run(args: argparse.Namespace) -> None:
 
     if args.dataset is None and args.peers:
         raise InputError("peers", "must have a dataset, whose trees they are measured on")
+    if args.trees is not None and args.shift is None:
+        raise InputError("--trees", "must come with --shift, whose fresh trees it counts")
     if args.dataset is None and args.shift is None:
         raise InputError("validate", "must be given a dataset, --shift, or both")
     outputs.check_outputs([(args.out, outputs.FIGURES)], [args.scorer, args.dataset, args.shift])
@@ -101,7 +103,7 @@ def _on_shifts(args: argparse.Namespace, scorer: Scorer, family: Family, kind: I
     from distill.shifted_families import GIVEN, out_of_reach
 
     gone = out_of_reach(family, kind)
-    figures = measure_shifts(scorer, family, trees=args.trees, seed=args.seed, progress=True)
+    figures = measure_shifts(scorer, family, trees=args.trees or _TREES, seed=args.seed, progress=True)
     print("\n".join(["", *shift_table(figures), "", _SHIFT_WORDS]))
     if GIVEN in figures:
         print(f"{GIVEN.capitalize()}: {figures[GIVEN]['changed']}.")

@@ -152,7 +152,7 @@ def test_the_command_names_the_scorer_for_a_time_and_draws_the_front(
     printed = capsys.readouterr().out
     front = json.loads((out / FRONT_FILE).read_text())
     entry, why = choose(front["scorers"], 900.0)
-    assert why == "most accurate within 900 us"
+    assert why == "fastest of the most accurate within 900 us"
     assert f"{why}: {entry['recipe']}, {out / entry['file']}" in printed
     assert "forgone share, %" in printed
     assert f"scorers that read the {front['input']}\n" in printed
@@ -167,6 +167,24 @@ def test_the_command_names_the_scorer_for_a_time_and_draws_the_front(
     assert ET.parse(out / "front.svg").getroot().tag.endswith("svg")
     with pytest.raises(InputError, match="latency: must be at least"):
         choose(front["scorers"], 0.01)
+
+
+def test_the_fastest_of_those_as_accurate_as_luck_can_tell_is_chosen() -> None:
+    """The best has 0.10 with a standard error of 0.05."""
+
+    def entry(name: str, us: float, loss: float, low: float, high: float) -> dict[str, Any]:
+        share = {"value": loss, "low": low, "high": high}
+        return {"recipe": name, "latency": {"p50_us": us}, "choose": {"forgone_percent": share}}
+
+    front = [
+        entry("slow", 400.0, 0.10, 0.002, 0.198),
+        entry("quick", 60.0, 0.149, 0.1, 0.2),
+        entry("quicker", 50.0, 0.151, 0.1, 0.2),
+    ]
+    assert choose(front)[0]["recipe"] == "quick"
+    assert choose(front, 55.0)[0]["recipe"] == "quicker"
+    assert choose(front[::-1])[0]["recipe"] == "quick"
+    assert choose(front, name="slow") == (front[0], "by name")
 
 
 def test_a_time_that_no_scorer_meets_is_said_and_costs_nothing(

@@ -26,8 +26,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--latency",
         type=flags.microseconds,
         metavar="40us",
-        help="only those within this median time a decision (us, ms or s). Without --scorer the fastest of the "
-        "most accurate is shipped, all within a standard error counting as that",
+        help="only those within this median time a decision (us, ms or s). Without --scorer the fastest of "
+        "the most accurate is shipped, all within a standard error counting as that",
     )
     which.add_argument("--scorer", metavar="NAME", help="by its name on the front")
 

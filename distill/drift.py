@@ -36,6 +36,25 @@ _WIN_LOSS: Final = {
     "belief strength": "log10 of alpha + beta, median leaf",
     "span": "log10 of high - low, median leaf",
 }
+# Feature of some input -> what it says of a leaf. A batch: the one of the start value, or the one asked for.
+_FEATURES: Final = {
+    "threshold": "how far a leaf must rise to change the choice, or fall, over what the batch moves it",
+    "sibling_help": "what the other leaves of the action take off that distance",
+    "step": "what the batch moves a leaf, over the spread of what its action is worth",
+    "above_siblings": "how far a leaf is above the others of its action, over the spread of the two",
+    "lead": "how far the leaf's action is above its best rival, over the spread of what it is worth",
+    "known": "what is learned of the action without the batch, over what is learned with it",
+    "resolved": "share of the leaf's standard deviation that the batch reveals",
+    "small_or_many": "log of the best value a rollout of up to 8 rollouts over that of more",
+    "large_batch": "log of the best batch where many rollouts add up",
+    "trials": "alpha + beta, at most 60",
+    "odds": "of the result, win or loss, that leads towards a change of choice",
+    "left": "log of the rollouts left over the best batch",
+    "bend": "how the difference of the two actions bends where the choice changes",
+    "slope_now": "log of the slope of that difference at present over the one where the choice changes",
+    "slope_share": "log of the slope where the choice changes over the largest there can be",
+    "other_side": "share of the value that comes from moves the other way",
+} | {f"batch_of_{k}": f"log of the value a rollout of {k} over the best of such" for k in range(1, 9)}
 
 
 def trained_family(facts: Mapping[str, Any]) -> Family | None:
@@ -120,7 +139,8 @@ def drift(
 
 def _meaning(name: str, kind: InputKind) -> str:
     told = COLUMNS.get(name) or _WIN_LOSS.get(name)
-    return told or f"feature {name}, median {'candidate' if kind is RECORD else 'leaf'}"
+    row = "candidate" if kind is RECORD else "leaf"
+    return told or f"feature of the median {row}: {_FEATURES.get(name, name)}"
 
 
 def _columns(trees: Sequence[BeliefTree], candidates: Candidates, graph: FeatureGraph) -> dict[str, Floats]:

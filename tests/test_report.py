@@ -213,7 +213,7 @@ def test_tables_hold_the_right_figures_in_the_right_cells(figures: dict[str, Any
     ]
     if "shifts" in top:
         changed = rows_of(root, "Trees unlike those of training")
-        assert list(changed) == ["as trained", "one level deeper", "correlation"]
+        assert list(changed) == ["as given", "one level deeper", "correlation"]
         assert changed["correlation"] == [
             [1754], spread(estimate(12.5)), spread(estimate(2.1)), [14.2], [95.2], [61.3], [61.3]
         ]  # fmt: skip

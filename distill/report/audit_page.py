@@ -23,7 +23,7 @@ from distill.report.facts import Figures, ends, gaps_refused, known
 from distill.report.frame import document, framed, opening, tile
 from distill.report.spreads import Span
 from distill.report.theme import svg
-from distill.report.words import COLUMNS
+from distill.report.words import AUDIT_WORDS, COLUMNS
 
 __all__ = ["audit_page", "write_audit_page"]
 
@@ -43,6 +43,7 @@ def audit_page(figures: Figures) -> str:
             section("In pictures", element("div", *_pictures(figures), class_="pictures")),
             section("Now and promised", _accuracy(figures), _note(figures)),
             section("Drift by column", _drift(drift), _drift_note(drift)),
+            section("What the words mean", word_list((term, [text]) for term, text in AUDIT_WORDS.items())),
             section("Where it comes from", word_list(_origin(figures))),
         ]
         return document(f"{figures['scorer']['name']}: audit", *parts)

@@ -12,6 +12,7 @@ from distill.report.elements import element, estimate, number, section, table, t
 from distill.report.facts import Figures, gaps_refused
 from distill.report.frame import document, framed, opening, tile
 from distill.report.theme import svg
+from distill.report.words import INFER_WORDS
 from distill.tree_columns import COLUMNS
 
 __all__ = ["infer_page", "write_infer_page"]
@@ -30,6 +31,7 @@ def infer_page(figures: Figures) -> str:
             section("In pictures", element("div", *_pictures(figures), class_="pictures")),
             section("What the columns are", _columns(figures)),
             section("What the traces say", _parameters(figures), _note(figures)),
+            section("What the words mean", word_list((term, [text]) for term, text in INFER_WORDS.items())),
             section("The family file", element("pre", figures["family"])),
         )
 

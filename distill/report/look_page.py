@@ -13,6 +13,7 @@ from distill.report.elements import element, number, section, table, word_list
 from distill.report.facts import Figures, gaps_refused
 from distill.report.frame import document, framed, opening, tile
 from distill.report.theme import svg
+from distill.report.words import LOOK_WORDS
 
 __all__ = ["look_page", "write_look_page"]
 
@@ -27,6 +28,7 @@ def look_page(figures: Figures) -> str:
             section("In pictures", element("div", *_pictures(figures), class_="pictures")),
             section("Labels and error bounds", _quantiles(figures)),
             *slices,
+            section("What the words mean", word_list((term, [text]) for term, text in LOOK_WORDS.items())),
             section("What it is made of", word_list(_origin(figures))),
         )
 

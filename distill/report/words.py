@@ -2,9 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Final
 
-__all__ = ["CAPTIONS", "CAUTION", "COLUMNS", "SHARE_NAMES", "STYLE", "WORDS"]
+__all__ = [
+    "AUDIT_WORDS", "CAPTIONS", "CAUTION", "COLUMNS", "INFER_WORDS", "LOOK_WORDS", "SHARE_NAMES", "STYLE",
+    "WORDS",
+]  # fmt: skip
 
 CAUTION: Final = (
     "The scorer only spends search effort; it is no safety function. Where machines move loads near people, "
@@ -146,7 +150,78 @@ WORDS: Final = {
     "Thompson sampling": "Picks the leaf that is best in one draw of all beliefs; it works out no value.",
     "random pick": "Any candidate with equal chance: what is lost without any judgement.",
     "scale of a tree": "The largest standard deviation that any of its leaves brings to the root.",
+    "slices of trees": (
+        "Parts of the trees, by the number of leaves; by rollouts left; by noise, the variance of a rollout "
+        "over that of its leaf, at the median leaf; by the gap between the best two actions, each counted by "
+        "its best leaf's mean, over the tree's scale; by depth, edges from the root to the deepest leaf; by "
+        "visits, rollouts so far."
+    ),
 }
+_LOOK: Final = {
+    "label": "The exact value of a candidate, with a bound on its error; what a scorer learns.",
+    "aside": "Trees that no exact method prices within the tolerance: counted, kept apart, not labelled.",
+    "weight": (
+        "What a tree counts for where some were drawn with higher chances than others; 1 on average. All of "
+        "them together are worth fewer trees of equal weight, the number that is stated."
+    ),
+    "method": "What worked out the labels of a tree.",
+    "best label": "The largest label of a tree.",
+}
+_INFER: Final = {
+    "decision": "A choice of the agent's; trees recorded at its stages are drawn again together.",
+    "family": "A distribution over trees, in one file; `generate` draws from it.",
+    "prior, prior sd, prior mean": "What a leaf is believed to be worth before its first rollout.",
+    "noise sd": "Standard deviation of one rollout's result around the leaf's true value.",
+    "strength, win rate, span": (
+        "Of leaves that win or lose: alpha + beta before the first rollout, the share of it that is alpha, "
+        "and how much more a win is worth than a loss."
+    ),
+    "gain, discount": (
+        "A leaf counts at the root by the product of the discounts on its way, its gain; a family has one "
+        "discount for every edge of a tree."
+    ),
+    "depth, branching": (
+        "Most edges from the root to a leaf of an action; children of a node above the last level."
+    ),
+    "budget": "Rollouts of the whole search of one decision, spent and left.",
+    "evenness of probabilities": "Parameter of the Dirichlet distribution under chance nodes: large is even.",
+    "correlation, shared part": "Share of a leaf's prior variance that the nodes above it bring.",
+    "fits, does not fit, cannot be told": (
+        "Whether the traces agree with the model that a family stands on, contradict it, or hold too little "
+        "to say."
+    ),
+    "distance": "Largest difference of two distribution functions: 0 alike, 1 apart.",
+}
+_AUDIT: Final = {
+    "promised": "What the scorer's sheet states, measured on held-out trees of its training data.",
+    "margin": "By how many points a loss may exceed the promised one before the scorer counts as worse.",
+    "worth adding": (
+        "Recorded trees with a leaf out of range, or where the pick lost more than a hundredth of the best "
+        "value, or stopping went wrong."
+    ),
+    "drift, distance": (
+        "How far recorded trees are from those of training, column by column: the largest difference of the "
+        "two distribution functions, 0 alike, 1 apart."
+    ),
+    "feature": "A number without unit that the scorer works out of each leaf before its learner sees it.",
+}
+
+
+def _glossary(*terms: str, more: Mapping[str, str]) -> dict[str, str]:
+    """Terms of WORDS and a page's own, with their texts."""
+    return {term: WORDS[term] for term in terms} | dict(more)
+
+
+LOOK_WORDS: Final = _glossary(
+    "rollout", "leaf", "candidate", "value of computation (VOC)", "rate", "static, dynamic, horizon",
+    "scale of a tree", more=_LOOK,
+)  # fmt: skip
+INFER_WORDS: Final = _glossary("rollout", "leaf", "interval", "scale of a tree", more=_INFER)
+AUDIT_WORDS: Final = _glossary(
+    "rollout", "candidate", "value of computation (VOC)", "exact", *SHARE_NAMES.values(),
+    "picks that are best", "rank correlation", "stop loss", "in range", "held-out trees", "interval",
+    "scale of a tree", more=_AUDIT,
+)  # fmt: skip
 
 # No ">" or "&" here: the page is read as HTML and as XML.
 STYLE: Final = """

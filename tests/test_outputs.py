@@ -138,6 +138,24 @@ def test_the_same_command_may_be_given_again(
         assert run(command.split()) == 0
 
 
+def test_a_tour_replaces_an_earlier_one_alone(place: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    done: list[Path] = []
+    monkeypatch.setattr("distill.tour.tour", done.append)
+    (place / "s.onnx").rename(place / "scorer.onnx")
+    assert run(["tour", str(place)]) == 2  # somebody's own
+    (place / "data").rename(place / "dataset")
+    assert run(["tour", str(place)]) == 0  # of a tour that was stopped
+    (place / "summary.json").write_text('{"labels": {}, "scorer": {}, "on traces": {}}')
+    (place / "summary.md").write_text("# voc-distill: the whole job on a cold store's pallet shuttle\n")
+    assert run(["tour", str(place)]) == 0
+    for name in ("summary.json", "summary.md", "report.html"):
+        before = (place / name).read_bytes() if (place / name).exists() else b""
+        (place / name).write_text("{}")
+        assert run(["tour", str(place)]) == 2
+        (place / name).write_bytes(before)
+    assert done == 2 * [place]
+
+
 def test_every_kind_knows_its_own(place: Path) -> None:
     """Files that the slower commands leave: a scorer with its sheet, an audit, figures, a family."""
     (place / "figures.json").write_text('{"part": "all", "accuracy": {}, "beside": {}}')

@@ -19,7 +19,7 @@ from distill.sheet import FRONT_FILE, FRONT_FORMAT, SHEET_FORMAT
 
 __all__ = [
     "AUDIT", "FAMILY", "FIGURES", "FRONT", "PAGE", "PICTURE", "PRICED", "SCORER", "SHEET", "SHEET_PAGE",
-    "SUMMARY", "TRACES", "WORTH_ADDING", "Kind", "check_outputs",
+    "SUMMARY", "SUMMARY_PAGE", "TOUR_SCORER", "TRACES", "WORTH_ADDING", "Kind", "check_outputs",
 ]  # fmt: skip
 
 _WHOLE: Final = (FRONT_FILE, "manifest.json")  # what says that a folder's files belong together
@@ -30,10 +30,11 @@ _MOST_SCORER: Final = 16 * 2**20
 
 @dataclass(frozen=True)
 class Kind:
-    """What a command writes: its name in words, and whether a file that is there is one."""
+    """What a command writes: its name in words, and whether a file that is there is one; None where no file
+    may be replaced."""
 
     words: str
-    is_one: Callable[[Path], bool]
+    is_one: Callable[[Path], bool] | None
 
 
 def check_outputs(outputs: Iterable[tuple[Path | None, Kind]], inputs: Iterable[str | Path | None]) -> None:
@@ -59,7 +60,13 @@ def check_outputs(outputs: Iterable[tuple[Path | None, Kind]], inputs: Iterable[
                     raise InputError(str(path), f"must not lie in {source}, which is an input")
             elif path.exists() and path.samefile(source):
                 raise InputError(str(path), "must be another file than the input, which it would replace")
-        if path.is_file() and path.stat().st_size > 0 and not kind.is_one(path):
+        if not path.is_file() or path.stat().st_size == 0:
+            continue
+        if kind.is_one is None:
+            raise InputError(
+                str(path), f"must be a new or an empty file: {kind.words} are never written over"
+            )
+        if not kind.is_one(path):
             rule = f"must be {kind.words} to be replaced; it holds something else, so choose another name"
             raise InputError(str(path), rule)
 
@@ -100,7 +107,7 @@ def _is_figures(path: Path) -> bool:
 
 def _is_summary(path: Path) -> bool:
     found = _object(path)
-    return {"labels", "on traces"} <= set(found)
+    return {"labels", "scorer", "on traces"} <= set(found)
 
 
 def _is_priced(path: Path) -> bool:
@@ -143,8 +150,7 @@ def _is_worth_adding(path: Path) -> bool:
         return False
 
 
-# Nobody can record the same again.
-TRACES: Final = Kind("empty or a new file, as records are never written over,", lambda _: False)
+TRACES: Final = Kind("records", None)  # nobody can record the same again
 PAGE: Final = Kind("a page of this tool", _is_page)
 PICTURE: Final = Kind("a picture", lambda path: b"<svg" in _head(path))
 FIGURES: Final = Kind("figures that validate left", _is_figures)
@@ -160,3 +166,11 @@ FRONT: Final = Kind("the front of an earlier training", _of_format(FRONT_FORMAT)
 AUDIT: Final = Kind("the figures of an audit", _of_format("voc-audit/1"))
 WORTH_ADDING: Final = Kind("an earlier audit's, with its audit.json beside it,", _is_worth_adding)
 SUMMARY: Final = Kind("an earlier tour's summary", _is_summary)
+SUMMARY_PAGE: Final = Kind(
+    "an earlier tour's summary", lambda path: _head(path).startswith(b"# voc-distill: the whole job on")
+)
+# A tour that was stopped has no summary yet, and may be given again.
+TOUR_SCORER: Final = Kind(
+    "an earlier tour's, with its dataset beside it,",
+    lambda path: (path.parent / "dataset" / "manifest.json").is_file() and _is_scorer(path),
+)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import contextlib
-import hashlib
 import json
 import math
 import os
@@ -20,12 +19,15 @@ import numpy as np
 from distill.allocation import Search as Posterior
 from distill.errors import InputError, RefusedError
 from distill.files import read_json, sha256_of, write_atomic
+from distill.rehearse.against import Against, kind_of
 from distill.rehearse.catalogue import make_problem
 from distill.rehearse.claim import claim
 from distill.rehearse.left_out import CHOICE, DECISION, Reason
 from distill.rehearse.loop import Budget
+from distill.rehearse.places import place_file, played_by, slug
 from distill.rehearse.policies import Policy
 from distill.rehearse.policy_specs import make_policy, scorer_file
+from distill.rehearse.problems import Problem
 from distill.rehearse.rehearsal import Cell, play_stops, rehearse
 from distill.rehearse.remembered import Remembered
 from distill.rehearse.scorer_inputs import ScorerInputs
@@ -120,7 +122,9 @@ class Campaign:
 class Results:
     """Cells of a campaign, the tuning of its baselines, and which policies were left out where and why.
 
-    kinds : problem -> "Gaussian", "win/loss", with ", chance nodes" where its trees have them.
+    kinds : problem -> "Gaussian", "win/loss", with ", chance nodes" where its trees have them, and what its
+        regret is against where that is an estimate.
+    against : problem -> that, whatever it is.
     unsearched : a cell a problem, of the same decisions taken before the first rollout.
     """
 
@@ -129,6 +133,7 @@ class Results:
     tuning: list[dict[str, Any]] = field(default_factory=list)
     left_out: list[dict[str, Any]] = field(default_factory=list)
     kinds: dict[str, str] = field(default_factory=dict)
+    against: dict[str, Against] = field(default_factory=dict)
     unsearched: list[Cell] = field(default_factory=list)
 
 
@@ -149,7 +154,7 @@ def run(
     holds a campaign that this one does not continue.
     """
     folder = Path(folder)
-    campaign = replace(campaign, stop_seeds=claim(folder, asdict(campaign), _checked(campaign)))
+    campaign = replace(campaign, stop_seeds=claim(folder, asdict(campaign), _checked(campaign, folder)))
     parts: dict[str, Results] = {}
     calls = [(_problem, (campaign, name, folder, os.getpid())) for name in campaign.problems]
     with _counted(campaign, folder, progress):
@@ -161,18 +166,20 @@ def run(
         results.tuning.extend(row for row in parts[name].tuning if "regret" in row)
         results.left_out.extend(parts[name].left_out)
         results.kinds.update(parts[name].kinds)
+        results.against.update(parts[name].against)
         results.unsearched.extend(parts[name].unsearched)
     return results
 
 
-def _checked(campaign: Campaign) -> dict[str, str]:
+def _checked(campaign: Campaign, folder: Path) -> dict[str, str]:
     """SHA-256 of each scorer file, after every policy has chosen once: faults are told before the work."""
     names: dict[str, str] = {}
     files: dict[str, str] = {}
 
     @cache
     def tree_of(name: str) -> BeliefTree:
-        return make_problem(name).draw(TUNING_SEED).tree
+        made = _made(name, folder) if (folder / "campaign.json").exists() else make_problem(name)
+        return made.draw(TUNING_SEED).tree
 
     for spec in campaign.all_policies:
         if names.setdefault(name_of(spec), spec) != spec:
@@ -190,13 +197,22 @@ def _checked(campaign: Campaign) -> dict[str, str]:
     return files
 
 
+def _made(name: str, folder: Path) -> Problem:
+    """A problem that keeps there what is dear about its decisions."""
+    made = make_problem(name)
+    if (keep := getattr(made, "keep_in", None)) is not None:
+        keep(folder / "worth" / slug(name))
+    return made
+
+
 def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple[str, Results]:
     """One problem under all budgets."""
     if os.getpid() != starter:
         _end_with(starter)
-    problem = Remembered(make_problem(name))
-    tree = problem.draw(TUNING_SEED).tree
-    out = Results(campaign, kinds={name: _kind(tree)})
+    problem = Remembered(_made(name, folder))
+    first = problem.draw(TUNING_SEED)
+    tree = first.tree
+    out = Results(campaign, kinds={name: kind_of(first)})
     tuned: dict[tuple[int, tuple[str, ...]], dict[str, str]] = {}
 
     def plays(text: str) -> bool:
@@ -215,7 +231,7 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
             out.tuning.extend(rows)
             tuned[rollouts, specs] = {row["policy"]: row["chosen"] for row in rows}
         texts = {spec: tuned[rollouts, specs].get(spec, untuned(spec)) for spec in specs}
-        reasons = _reasons(campaign, name, texts, tree, budget, _place(folder, name, text))
+        reasons = _reasons(campaign, name, texts, tree, budget, place_file(folder, name, text))
         out.left_out.extend(
             {"problem": name, "budget": text, "policy": name_of(spec), **why.as_json()}
             for spec, why in reasons.items()
@@ -228,7 +244,12 @@ def _problem(campaign: Campaign, name: str, folder: Path, starter: int) -> tuple
                 goes_on, price = make_policy(untuned(spec)), price_of(texts[spec])
                 play_stops(problem, goes_on, name_of(spec), price, budget, where, **judged)
         out.cells.extend(rehearse([problem], policies, [budget], where, **judged))
-        write_atomic(_place(folder, name, text).with_suffix(".done"), _played(specs, campaign.seeds))
+        write_atomic(place_file(folder, name, text).with_suffix(".done"), played_by(specs, campaign.seeds))
+    if first.leaf_rollouts:
+        draws = [problem.draw(seed) for seed in range(_FIRST_SEED, _FIRST_SEED + campaign.seeds)]
+        out.against[name] = Against.of(draws)
+    else:
+        out.against[name] = Against()
     return name, out
 
 
@@ -329,24 +350,7 @@ def _one_choice(policy: Policy, tree: BeliefTree) -> float:
     return time.perf_counter() - started
 
 
-def _kind(tree: BeliefTree) -> str:
-    kind = "win/loss" if tree.belief == "win_loss" else "Gaussian"
-    return f"{kind}, chance nodes" if tree.has_chance else kind
-
-
 # --- places ----------------------------------------------------------------------------------------
-
-
-def _place(folder: Path, problem: str, budget: str) -> Path:
-    """The file of a problem under a budget: who plays there. Beside it, `.done` once all have."""
-    key = hashlib.sha256(json.dumps([problem, budget]).encode()).hexdigest()[:12]
-    readable = "".join(c if c.isalnum() else "-" for c in f"{problem}--{budget}")
-    return folder / "places" / f"{readable[:80]}--{key}.json"
-
-
-def _played(specs: tuple[str, ...], seeds: int) -> bytes:
-    """What `.done` holds: an earlier run may have been asked for fewer policies, or decisions."""
-    return (json.dumps({"policies": sorted(specs), "seeds": seeds}) + "\n").encode()
 
 
 @contextlib.contextmanager
@@ -356,7 +360,7 @@ def _counted(campaign: Campaign, folder: Path, progress: Callable[[int, int], No
         yield
         return
     places = {
-        _place(folder, problem, budget).with_suffix(".done"): _played(
+        place_file(folder, problem, budget).with_suffix(".done"): played_by(
             campaign.policies_under(budget), campaign.seeds
         )
         for problem in campaign.problems

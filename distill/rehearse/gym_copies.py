@@ -38,9 +38,9 @@ class GymCopies:
         environment's own `np_random`, as Gymnasium asks; anything else would not repeat under a seed.
     name : stands in traces and tables; by default the environment's id.
 
-    An episode is over when it terminates or is truncated. A step costs a deep copy, tens of
-    microseconds for small environments. Where steps are random, search plans of actions
-    (`Settings(plans=True)`), or sample outcomes.
+    A subclass may add `advise`, which reads `state.observation`. An episode is over when it terminates or is
+    truncated. A step costs a deep copy, tens of microseconds for small environments; a rollout one for all
+    its steps. Where steps are random, search plans of actions (`Settings(plans=True)`), or sample outcomes.
 
     >>> pole = GymCopies("CartPole-v1")
     >>> start = pole.start(np.random.default_rng(0))
@@ -85,8 +85,25 @@ class GymCopies:
 
     def step(self, state: State, action: Action, rng: np.random.Generator) -> tuple[Snapshot, float]:
         """One step of a copy, which draws from `rng`."""
+        return self._step(_copy(state), action, rng)
+
+    @property
+    def private_copy(self) -> Callable[[State], Snapshot]:
+        """Copies a state for a rollout of its own, which `step_private` may change: one copy for all steps.
+
+        Not there where a subclass has steps of its own.
+        """
+        if type(self).step is not GymCopies.step:
+            raise AttributeError("private_copy")
+        return _copy
+
+    def step_private(self, state: State, action: Action, rng: np.random.Generator) -> tuple[Snapshot, float]:
+        """As `step`, with the given state used up."""
         assert isinstance(state, Snapshot)
-        env = copy.deepcopy(state.env, {id(_NO_STREAM): _NO_STREAM})
+        return self._step(state, action, rng)
+
+    def _step(self, state: Snapshot, action: Action, rng: np.random.Generator) -> tuple[Snapshot, float]:
+        env = state.env
         env.unwrapped.np_random = rng
         observation, reward, terminated, truncated, _ = env.step(action)
         env.unwrapped.np_random = _NO_STREAM
@@ -96,3 +113,8 @@ class GymCopies:
         """Whether the episode is over."""
         assert isinstance(state, Snapshot)
         return state.over
+
+
+def _copy(state: State) -> Snapshot:
+    assert isinstance(state, Snapshot)
+    return Snapshot(copy.deepcopy(state.env, {id(_NO_STREAM): _NO_STREAM}), state.observation, state.over)

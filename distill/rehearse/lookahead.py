@@ -178,6 +178,8 @@ class Settings:
         They are the prior's alone: the search's budget and its beliefs at leaves do not count them.
     win_loss : (low, high) where every rollout returns one of these two numbers: leaves then have
         win/loss beliefs. None: Gaussian ones.
+
+    Raises InputError where one is of another type or range.
     """
 
     depth: int = 2
@@ -188,7 +190,15 @@ class Settings:
     win_loss: tuple[float, float] | None = None
 
     def __post_init__(self) -> None:
-        if self.win_loss is not None and not self.win_loss[0] < self.win_loss[1]:
+        for name, least in (("depth", 1), ("length", 0), ("samples", 1)):
+            if not _is_whole(value := getattr(self, name), least):
+                raise InputError(f"settings: {name}", f"must be a whole number of at least {least}", value)
+        if not isinstance(self.plans, bool):
+            raise InputError("settings: plans", "must be True or False", self.plans)
+        pair = self.opening
+        if not isinstance(pair, (tuple, list)) or len(pair) != 2 or not all(_is_whole(x, 0) for x in pair):
+            raise InputError("settings: opening", "must be (leaves, rollouts each), whole numbers", pair)
+        if self.win_loss is not None and not _rises(self.win_loss):
             raise InputError("win_loss", "must be a low and a higher number", self.win_loss)
 
     def tree(self, simulator: Simulator, state: State, rng: np.random.Generator) -> Lookahead:
@@ -196,6 +206,18 @@ class Settings:
         if self.plans:
             return plan_ahead(simulator, state, self.depth, rng)
         return look_ahead(simulator, state, self.depth, rng, samples=self.samples)
+
+
+def _is_whole(x: object, least: int) -> bool:
+    return isinstance(x, (int, np.integer)) and not isinstance(x, bool) and bool(x >= least)
+
+
+def _rises(pair: object) -> bool:
+    if not isinstance(pair, (tuple, list)) or len(pair) != 2:
+        return False
+    low, high = pair
+    numbers = all(isinstance(x, (int, float, np.integer, np.floating)) for x in pair)
+    return numbers and bool(-np.inf < low < high < np.inf)
 
 
 def _root(simulator: Simulator, state: State, depth: int) -> _Node:

@@ -3,12 +3,15 @@
 from __future__ import annotations
 
 import importlib
+import math
 import sys
-from dataclasses import dataclass
+from collections.abc import Callable
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
 from distill.errors import DistillError, InputError
+from distill.rehearse.guarded import called, number_of
 from distill.rehearse.problems import Draw, Problem, SimulatorProblem
 
 __all__ = ["own_problem"]
@@ -16,13 +19,40 @@ __all__ = ["own_problem"]
 
 @dataclass(frozen=True)
 class _Named:
-    """A problem under the text that it was asked for by: every worker makes it from that."""
+    """A problem under the text that it was asked for by: every worker makes it from that.
+
+    What its code raises, when a decision is drawn or a rollout made, is one error under that name.
+    """
 
     problem: Problem
     name: str
 
     def draw(self, seed: int) -> Draw:
-        return self.problem.draw(seed)
+        draw = self._called("draw", self.problem.draw, seed)
+        place = f"problem {self.name}"
+        if not isinstance(draw, Draw):
+            raise InputError(f"{place}: draw", "must return a Draw", draw)
+        won = draw.tree.belief == "win_loss"
+
+        def roll(leaf: int) -> float:
+            found = self._called("roll", draw.roll, leaf)
+            if type(found) is not float or not math.isfinite(found):
+                found = number_of(f"{place}: roll", found)
+            if won and found not in (0.0, 1.0):
+                raise InputError(f"{place}: roll", "must be 1 or 0 where leaves win or lose", found)
+            return float(found)
+
+        return replace(draw, roll=roll)
+
+    def keep_in(self, folder: Path) -> None:
+        if (keep := getattr(self.problem, "keep_in", None)) is not None:
+            keep(folder)
+
+    def _called(self, method: str, function: Callable[..., Any], *arguments: Any) -> Any:
+        try:
+            return called(method, function, *arguments)
+        except InputError as e:
+            raise e.at(f"problem {self.name}") from e
 
 
 def own_problem(text: str) -> Problem:
@@ -43,10 +73,13 @@ def own_problem(text: str) -> Problem:
             found = found()
         if isinstance(found, tuple) and len(found) == 2:
             found = SimulatorProblem(*found)
+    except InputError as e:
+        raise e.at(f"problem {text}") from e
     except DistillError:
         raise
-    except Exception as e:  # whatever the code of others raises
-        raise InputError(f"problem {text}", f"must be made without an error ({type(e).__name__}: {e})") from e
+    except (Exception, SystemExit) as e:  # whatever the code of others raises
+        told = f"{type(e).__name__}: {' '.join(str(e).split())}"
+        raise InputError(f"problem {text}", f"must be made without an error ({told})") from e
     if not callable(getattr(found, "draw", None)):
         rule = "must be a problem, or a function that returns one or (simulator, settings)"
         raise InputError(f"problem {text}", rule, type(found).__name__)

@@ -1,4 +1,4 @@
-"""Decisions with a known optimum: what a rehearsal lets policies search, and judges them by."""
+"""Decisions whose actions' worth is known: what a rehearsal lets policies search, and judges them by."""
 
 from __future__ import annotations
 
@@ -6,22 +6,36 @@ from collections import deque
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from itertools import islice
-from typing import Protocol
+from pathlib import Path
+from typing import Final, NamedTuple, Protocol
 
 import numpy as np
 
 from distill import schema
 from distill.errors import InputError, RefusedError
+from distill.rehearse.agreement import check_steps, check_steps_are_sure
+from distill.rehearse.guarded import check_simulator, guarded
+from distill.rehearse.leaf_means import (
+    LEAF_ROLLOUTS,
+    LeafMeans,
+    keep_means,
+    kept_means,
+    leaf_means,
+    worth_error,
+)
 from distill.rehearse.optimum import solve
 from distill.rehearse.priors import OddsPrior, Prior
 from distill.rehearse.search import Search, Settings, action_values, prior_of
-from distill.rehearse.simulator import Modelled, State, check_simulator
+from distill.rehearse.simulator import Modelled, Simulator, State
 from distill.tree import BeliefTree, Floats
 
 __all__ = ["Draw", "Problem", "SimulatorProblem", "TreeProblem"]
 
 _MOST_TRIES = 1000  # states looked at for one where the choice matters
 _KEPT = 20  # solved parts of a simulator that are remembered
+_FEWEST_LEAF_ROLLOUTS: Final = 100  # from which a standard error is worth its name
+_MOST_ESTIMATES: Final = 50  # states whose worth is estimated for one where it tells the actions apart
+_TOLD_APART: Final = 3.0  # standard errors between the best and the worst action
 
 
 @dataclass(frozen=True, eq=False)
@@ -34,12 +48,16 @@ class Draw:
     worth : shape (n_actions,), what each root action is truly worth, value units.
     believed : whether `worth` was drawn from the very beliefs of `tree`, so that they tell the odds of
         what a search leaves open.
+    leaf_rollouts : at each leaf, from which `worth` was estimated; 0 where it is exact.
+    worth_error : standard error of a regret that this estimate leaves, value units; 0 where it is exact.
     """
 
     tree: BeliefTree
     roll: Callable[[int], float]
     worth: Floats
     believed: bool = False
+    leaf_rollouts: int = 0
+    worth_error: float = 0.0
 
     def regret(self, action: int) -> float:
         """What acting so loses against the best root action, value units."""
@@ -144,7 +162,8 @@ class TreeProblem:
 
 @dataclass(eq=False)
 class SimulatorProblem:
-    """States of a simulator with an exact model; regret is against the exact optimum.
+    """States of a simulator. Regret is against the exact optimum where it has an exact model; else against
+    what unlimited rollouts would choose in the tree that is searched.
 
     States are met by random play of fewer than `most_steps` steps; those where the best and the worst
     action differ by less than `least_gap` (value units) are passed over, since there is nothing to
@@ -153,24 +172,53 @@ class SimulatorProblem:
 
     The optimum is that of the whole problem, while leaves are valued by rollouts of bounded length
     under the simulator's own advice: no policy can be expected to reach regret 0.
+
+    leaf_rollouts : at each leaf, with luck of their own, from which the worth of actions is estimated before
+        the search, once for all policies. None: 4,000 where there is no model, else the model is solved.
+        States where the actions differ by less than 3 standard errors of a first estimate, by half as many
+        other rollouts, are passed over too.
+        Rollouts play by chance or advice from a leaf on, so this regret says nothing of what a better rollout
+        policy or a deeper tree would find.
+    checked : whether every answer of the simulator is looked at, and its steps against its model.
+
+    Without a model, plans (`Settings(plans=True)`) take any simulator. Trees of states need steps without
+    chance, or `samples` of 2 or more: a single sample would pass for the only outcome.
+
+    Raises InputError where the simulator or the settings break a rule, RefusedError where no state with
+    anything to decide is found.
     """
 
-    simulator: Modelled
+    simulator: Simulator
     settings: Settings
     name: str = ""
     least_gap: float = 1e-6
     max_states: int = 200_000
     most_steps: int = 20
-    _prior: Prior | OddsPrior | None = None
-    _solved: deque[Mapping[State, Floats]] = field(default_factory=lambda: deque(maxlen=_KEPT))
-    _decisions: dict[int, tuple[State, Floats]] = field(default_factory=dict)
+    leaf_rollouts: int | None = None
+    checked: bool = True
+    _prior: Prior | OddsPrior | None = field(default=None, init=False)
+    _solved: deque[Mapping[State, Floats]] = field(default_factory=lambda: deque(maxlen=_KEPT), init=False)
+    _decisions: dict[int, tuple[State, Floats]] = field(default_factory=dict, init=False)
+    _estimated: dict[int, _Estimated] = field(default_factory=dict, init=False)
+    _folder: Path | None = field(default=None, init=False)
 
     def __post_init__(self) -> None:
         check_simulator(self.simulator)
-        if not isinstance(self.simulator, Modelled):
-            rule = "must have outcomes, its exact model: regret is against the optimum that this gives"
-            raise InputError(f"simulator {self.simulator.name}", rule)
+        kind = f"simulator {type(self.simulator).__name__}"
+        if not isinstance(self.settings, Settings):
+            raise InputError(f"{kind}: settings", "must be a Settings of distill.rehearse", self.settings)
         self.name = self.name or self.simulator.name
+        if self.checked:
+            self.simulator = guarded(self.simulator)
+        if self.leaf_rollouts is None:
+            self.leaf_rollouts = 0 if isinstance(self.simulator, Modelled) else LEAF_ROLLOUTS
+        elif not isinstance(self.leaf_rollouts, int) or self.leaf_rollouts < _FEWEST_LEAF_ROLLOUTS:
+            rule = f"must be a whole number of at least {_FEWEST_LEAF_ROLLOUTS}"
+            raise InputError(f"{kind}: leaf_rollouts", rule, self.leaf_rollouts)
+        if self.checked and isinstance(self.simulator, Modelled):
+            check_steps(self.simulator, kind)
+        if not isinstance(self.simulator, Modelled) and not self.settings.plans and self.settings.samples < 2:
+            check_steps_are_sure(self.simulator, kind)
 
     @property
     def prior(self) -> Prior | OddsPrior:
@@ -180,15 +228,25 @@ class SimulatorProblem:
             self._prior = prior_of(self.simulator, self.settings, pilot, trees=100)
         return self._prior
 
+    def keep_in(self, folder: Path) -> None:
+        """Estimates of worth go to this folder, and are read from there where they are of the same tree."""
+        self._folder = folder
+
     def draw(self, seed: int) -> Draw:
         """A state where the choice matters, its look-ahead tree, and rollouts of the simulator."""
         state_rng, tree_rng, luck = (
             np.random.default_rng(s) for s in np.random.SeedSequence(seed, spawn_key=(2,)).spawn(3)
         )
-        if seed not in self._decisions:  # every policy asks for it, and to solve is dear
-            self._decisions[seed] = self._decision(state_rng)
-        state, worth = self._decisions[seed]
-        search = Search(self.simulator, state, self.settings, self.prior, tree_rng)
+        error = 0.0
+        if self.leaf_rollouts:
+            if seed not in self._estimated:
+                self._estimated[seed] = self._estimate(seed, state_rng)
+            search, worth, error = self._estimated[seed]
+        else:
+            if seed not in self._decisions:  # every policy asks for it, and to solve is dear
+                self._decisions[seed] = self._decision(state_rng)
+            state, worth = self._decisions[seed]
+            search = Search(self.simulator, state, self.settings, self.prior, tree_rng)
         seeds = luck.integers(2**63, size=search.lookahead.n_leaves)
         streams: dict[int, np.random.Generator] = {}
 
@@ -197,7 +255,7 @@ class SimulatorProblem:
                 streams[leaf] = np.random.default_rng(seeds[leaf])
             return search.rolled(leaf, streams[leaf])
 
-        return Draw(search.tree(), roll, worth)
+        return Draw(search.tree(), roll, worth, leaf_rollouts=self.leaf_rollouts or 0, worth_error=error)
 
     def _decision(self, rng: np.random.Generator) -> tuple[State, Floats]:
         for state in islice(self._states(rng), _MOST_TRIES):
@@ -205,6 +263,39 @@ class SimulatorProblem:
             if np.ptp(worth) >= self.least_gap:
                 return state, worth
         raise RefusedError(f"{self.name}: no state of {_MOST_TRIES} where the choice matters")
+
+    def _estimate(self, seed: int, rng: np.random.Generator) -> _Estimated:
+        """The first state met whose actions these many rollouts tell apart, with its tree."""
+        assert self.leaf_rollouts
+        looked = 0
+        for number, state in enumerate(islice(self._states(rng), _MOST_TRIES)):
+            if len(self.simulator.actions(state)) < 2:
+                continue
+            tree_luck, screen_luck, judge_luck = np.random.SeedSequence(seed, spawn_key=(4, number)).spawn(3)
+            tree_rng = np.random.default_rng(tree_luck)
+            search = Search(self.simulator, state, self.settings, self.prior, tree_rng)
+            tree, name = search.tree(), f"{seed}-{number}"
+            # Other rollouts than those that judge: a gap that is large by their luck would be taken for one.
+            screen = self._means(search, self.leaf_rollouts // 2, screen_luck, f"{name}-screen")
+            if np.ptp(screen.worth(tree)) >= max(self.least_gap, _TOLD_APART * worth_error(tree, screen)):
+                means = self._means(search, self.leaf_rollouts, judge_luck, name)
+                return _Estimated(search, means.worth(tree), worth_error(tree, means))
+            looked += 1
+            if looked == _MOST_ESTIMATES:
+                break
+        rule = f"no state of {looked} where {self.leaf_rollouts:,} rollouts a leaf tell the actions apart"
+        raise RefusedError(f"{self.name}: {rule}")
+
+    def _means(self, search: Search, rollouts: int, luck: np.random.SeedSequence, name: str) -> LeafMeans:
+        """From the folder where it has them, and into it where not."""
+        if self._folder is None:
+            return leaf_means(search, rollouts, luck)
+        path = self._folder / f"{name}.json"
+        means = kept_means(path, search, rollouts)
+        if means is None:
+            means = leaf_means(search, rollouts, luck)
+            keep_means(path, search, rollouts, means)
+        return means
 
     def _states(self, rng: np.random.Generator) -> Iterator[State]:
         """States after a random number of random steps from a start, over and over."""
@@ -223,5 +314,14 @@ class SimulatorProblem:
         for solved in self._solved:
             if state in solved:
                 return solved[state]
+        assert isinstance(self.simulator, Modelled)
         self._solved.append(solve(self.simulator, [state], max_states=self.max_states).action_values)
         return self._solved[-1][state]
+
+
+class _Estimated(NamedTuple):
+    """A decision whose worth comes from rollouts at its leaves. The search is never spent on."""
+
+    search: Search
+    worth: Floats
+    error: float

@@ -11,8 +11,7 @@ import numpy as np
 from distill.errors import InputError
 
 __all__ = [
-    "Action", "Advised", "Modelled", "Outcome", "Simulator", "State", "check_simulator", "outcomes_of",
-    "rollout",
+    "Action", "Advised", "Modelled", "Outcome", "Simulator", "State", "outcomes_of", "rollout",
 ]  # fmt: skip
 
 State = Hashable
@@ -36,7 +35,8 @@ class Simulator(Protocol):
     name : stands in traces and tables.
     discount : 0 < discount <= 1, value of a reward one step later.
 
-    A simulator may also offer `outcomes` (see Modelled) and `advise` (see Advised).
+    A simulator may also offer `outcomes` (see Modelled) and `advise` (see Advised). `guarded.check_simulator`
+    says whether an object is one.
     """
 
     name: str
@@ -69,31 +69,6 @@ class Advised(Protocol):
 
     def advise(self, state: State, rng: np.random.Generator) -> Action:
         """The action a rollout takes here; may be random."""
-
-
-def check_simulator(simulator: Simulator) -> None:
-    """InputError where an object lacks what a simulator must have, with its name and the rule."""
-    kind = type(simulator).__name__
-    for what in ("name", "discount", "start", "actions", "step", "is_terminal"):
-        if not hasattr(simulator, what):
-            raise InputError(
-                f"simulator {kind}", "must have name, discount, start, actions, step and is_terminal", what
-            )
-    if not 0 < simulator.discount <= 1:
-        raise InputError(f"simulator {kind}: discount", "must be above 0 and at most 1", simulator.discount)
-    state = simulator.start(np.random.default_rng(0))
-    try:
-        hash(state)
-    except TypeError:
-        raise InputError(
-            f"simulator {kind}: start", "must return a hashable state, such as a tuple", state
-        ) from None
-    if simulator.is_terminal(state):
-        raise InputError(f"simulator {kind}: start", "must return a state that is not terminal", state)
-    if not len(simulator.actions(state)):
-        raise InputError(
-            f"simulator {kind}: actions", "must give at least one in a state that is not terminal", state
-        )
 
 
 def outcomes_of(
@@ -132,15 +107,19 @@ def rollout(
     """Discounted return of one simulated future, in value units.
 
     The actions of `plan` come first, as far as they are possible; then the simulator's own advice, or
-    uniformly random actions. Ends at a terminal state or after `length` steps beyond the plan.
+    uniformly random actions. Ends at a terminal state or after `length` steps beyond the plan. A simulator
+    that copies its states may offer `private_copy` and `step_private`, which change one copy all the way.
     """
+    step = simulator.step
+    if (private := getattr(simulator, "private_copy", None)) is not None:
+        state, step = private(state), simulator.step_private  # type: ignore[attr-defined]
     total, weight = 0.0, 1.0
     for action in plan:
         if simulator.is_terminal(state):
             return total
         if action not in simulator.actions(state):
             break
-        state, reward = simulator.step(state, action, rng)
+        state, reward = step(state, action, rng)
         total += weight * reward
         weight *= simulator.discount
     advise = simulator.advise if isinstance(simulator, Advised) else None
@@ -152,7 +131,7 @@ def rollout(
         else:
             choices = simulator.actions(state)
             action = choices[int(rng.random() * len(choices))]
-        state, reward = simulator.step(state, action, rng)
+        state, reward = step(state, action, rng)
         total += weight * reward
         weight *= simulator.discount
     return total

@@ -12,7 +12,6 @@ import pytest
 from distill.cli import run
 from distill.errors import InputError
 from distill.rehearse.catalogue import make_problem
-from distill.rehearse.gym_copies import GymCopies
 from distill.rehearse.lookahead import Settings
 from distill.rehearse.problems import SimulatorProblem
 from distill.rehearse.simulator import Outcome
@@ -126,7 +125,6 @@ class Coin:
 @pytest.mark.parametrize(
     ("changes", "message"),
     [
-        ({"outcomes": None}, "simulator coin: must have outcomes, its exact model"),
         ({"discount": 1.5}, "simulator Coin: discount: must be above 0 and at most 1; got 1.5"),
         ({"actions": lambda *_: ()}, "simulator Coin: actions: must give at least one"),
         (
@@ -141,8 +139,3 @@ def test_a_simulator_that_cannot_be_judged_is_refused(changes: dict[str, object]
     with pytest.raises(InputError, match=re.escape(message)):
         SimulatorProblem(kind(), Settings(depth=1))
     SimulatorProblem(Coin(), Settings(depth=1))
-
-
-def test_copied_environments_have_no_optimum_to_be_judged_by() -> None:
-    with pytest.raises(InputError, match="must have outcomes, its exact model"):
-        SimulatorProblem(GymCopies("CartPole-v1"), Settings(depth=1))

@@ -120,6 +120,7 @@ def _rehearsal_lines(r: Mapping[str, Any] | None) -> list[str]:
         f"{r['seeds']} paired decisions in closed-loop search for each problem and budget. Counted: those of",
         "wall-clock time with rollouts of 100 us or more. Ratios are of simple regret: below 1 the scorer",
         "decides better. The `.json` sheet has every problem and budget, with intervals.",
+        *_judged(r["cells"]),
         "",
         "| use | over the | cells | aim | reached | to be avoided | met |",
         "| --- | --- | --- | --- | --- | --- | --- |",
@@ -144,6 +145,17 @@ def _rehearsal_lines(r: Mapping[str, Any] | None) -> list[str]:
         "",
     ]
     return lines
+
+
+def _judged(cells: Sequence[Mapping[str, Any]]) -> list[str]:
+    """What regret is against, where that is not the exact optimum everywhere."""
+    found = {c.get("regret_against"): c["problem"] for c in cells}
+    estimated = sorted({c["problem"] for c in cells if c.get("regret_error")})
+    if not estimated:
+        return []
+    mixed = " (not counted beside problems with an optimum)" if len(found) > 1 else ""
+    names = ", ".join(estimated)
+    return [f"Regret is against many rollouts at each leaf, not the exact optimum, on {names}{mixed}."]
 
 
 def _whole_estimate(k: Mapping[str, Any]) -> str:

@@ -23,6 +23,8 @@ _BEST: Final = {
 CELL_COLUMNS: Final[Described] = {
     "problem": (_TEXT, "what was searched"),
     "kind": (_TEXT, "leaves: Gaussian or win/loss, and whether there are chance nodes"),
+    "regret_against": (_TEXT, "exact optimum, or rollouts at each leaf that tell what actions are worth"),
+    "regret_error": (_F64, "u; standard error of a decision's regret that these leave; 0 for the optimum"),
     "budget": (_TEXT, "what a decision might cost: rollouts, or time at the cost of a rollout"),
     "rollout_seconds": (_F64, "s; stated cost of a rollout, 0 where rollouts are limited"),
     "timed": (pa.bool_(), "whether time was limited"),

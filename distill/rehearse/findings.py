@@ -10,7 +10,8 @@ from typing import Any, Final
 
 import numpy as np
 
-from distill.rehearse.aimed import BEST, LIMITS
+from distill.rehearse.against import Against
+from distill.rehearse.aimed import BEST, FEWEST, LIMITS, TOO_FEW
 from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.left_out import CHOICE, Reason
 from distill.rehearse.loop import Budget
@@ -31,6 +32,7 @@ __all__ = [
     "comparisons",
     "members",
     "places_of",
+    "judged_alike",
     "plain",
     "stopping",
 ]
@@ -105,7 +107,7 @@ def comparisons(results: Results, places: Mapping[tuple[str, Budget], Place]) ->
                 rivals = [name for name in members(results.campaign, group) if name in here]
                 if rivals and rivals != [policy]:
                     (found,) = compare(list(here.values()), policy, rivals)
-                    rows.append({**compared(found), "group": group})
+                    rows.append({**compared(found), "group": group, "decisions": len(here[policy])})
     return rows
 
 
@@ -128,13 +130,28 @@ def _aimed(budget: Budget) -> bool:
     return budget.seconds is not None and budget.rollout_seconds >= _AIM_SECONDS * (1 - 1e-9)
 
 
+def judged_alike(results: Results) -> set[str]:
+    """The problems that figures over several may count: those judged exactly, or if none is, all.
+
+    A regret against an estimate, which its error makes too large, is no number to be put into one mean, or
+    one count, with a regret against the optimum.
+    """
+    problems = set(results.campaign.problems) | {cell.problem for cell in results.cells}
+    return {p for p in problems if not _against(results, p).leaf_rollouts} or problems
+
+
+def _against(results: Results, problem: str) -> Against:
+    return results.against.get(problem, Against())
+
+
 def aims(results: Results, rows: Iterable[Mapping[str, Any]]) -> dict[str, Any]:
     """How often each scorer reaches what it is meant to, of the timed cells where that can be judged.
 
     rows : of `comparisons`. cells : with a wall-clock budget, rollouts of 100 us or more, and, against the
-    exact rate, exact choosing that takes over a fifth of the time. better, worse : of them, those whose
-    interval lies below or above 1. no_choice : cells beside them where one exact choice alone takes longer
-    than the budget.
+    exact rate, exact choosing that takes over a fifth of the time. better, worse : of them, those of at
+    least `FEWEST` decisions whose interval lies below or above 1. no_choice : cells beside them where one
+    exact choice alone takes longer than the budget. Problems judged by an estimate count only where no other
+    is (`judged_alike`).
     """
     slow = {
         (cell.problem, str(cell.budget)) for cell in results.cells
@@ -145,10 +162,11 @@ def aims(results: Results, rows: Iterable[Mapping[str, Any]]) -> dict[str, Any]:
         if x["policy"] == _EXACT and Reason.of(x).too_slow == CHOICE
     }  # fmt: skip
     scorers = {BEST, *members(results.campaign, "scorer")}
+    alike = judged_alike(results)
     found: dict[str, Any] = {}
     for row in rows:
         ratio, group = row["ratio"], row["group"]
-        if row["policy"] not in scorers or not row["timed"] or ratio is None:
+        if row["policy"] not in scorers or not row["timed"] or ratio is None or row["problem"] not in alike:
             continue
         place = row["problem"], row["budget"]
         if row["rollout_seconds"] < _AIM_SECONDS * (1 - 1e-9) or (group == "exact" and place not in slow):
@@ -160,13 +178,15 @@ def aims(results: Results, rows: Iterable[Mapping[str, Any]]) -> dict[str, Any]:
         counts["cells"] += 1
         counts["reached"] += ratio <= at_most
         counts["beyond"] += ratio > never_above
-        counts["better"] += row["high"] is not None and row["high"] < 1
-        counts["worse"] += row["low"] is not None and row["low"] > 1
+        told = row["decisions"] >= FEWEST
+        counts["better"] += told and row["high"] is not None and row["high"] < 1
+        counts["worse"] += told and row["low"] is not None and row["low"] > 1
     for policy, groups in found.items():
         if "exact" in groups:
             played = {
                 (c.problem, str(c.budget)) for c in results.cells
                 if policy in (BEST, c.policy) and _aimed(c.budget) and c.policy in scorers
+                and c.problem in alike
             }  # fmt: skip
             groups["exact"]["no_choice"] = len(late & played)
     return dict(sorted(found.items(), key=lambda item: item[0] != BEST))
@@ -179,7 +199,8 @@ def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list
 
     The closed form is advised wherever the best other policy's 95 % interval of the ratio to it reaches 1;
     which one is the best is decided for each half of the decisions by the other half. Where no policy is
-    so much better than acting before the first rollout, that is advised.
+    so much better than acting before the first rollout, that is advised; and the closed form where all
+    regret is below the error of what it is told against, or there are too few decisions to tell.
     """
     static = members(results.campaign, "static")
     unsearched = {cell.problem: cell for cell in results.unsearched}
@@ -190,12 +211,17 @@ def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list
         if not rivals or not rest:
             continue
         best = min(rest, key=lambda name: float(here[name].measured.mean()))
+        error = _against(results, problem).error
         (found,) = compare([_best([here[n] for n in rest]), *(here[n] for n in rivals)], BEST, rivals)
         better = math.isfinite(found.high) and found.high < 1
         use = best if better else found.rival
         why = "measurably better than the closed form" if better else "nothing measurably better"
         if problem in unsearched and not _pays([here[n] for n in (*rest, *rivals)], unsearched[problem]):
             use, why = NO_SEARCH, "nothing measurably better than to act before the first rollout"
+        if len(here[best]) < FEWEST or (math.isfinite(found.ratio) and not math.isfinite(found.high)):
+            use, why = found.rival, TOO_FEW
+        elif max(found.regret, found.rival_regret) < error:
+            use, why = found.rival, "all regret is below the error of the rollouts that it is told against"
         rows.append(
             {
                 "problem": problem,
@@ -203,6 +229,7 @@ def advice(results: Results, places: Mapping[tuple[str, Budget], Place]) -> list
                 "use": use,
                 "why": why,
                 "best_other": best,
+                "decisions": len(here[best]),
                 "ratio": plain(found.ratio),
                 "low": plain(found.low),
                 "high": plain(found.high),
@@ -227,8 +254,9 @@ def by_kind(results: Results, places: Mapping[tuple[str, Budget], Place]) -> lis
 
     ratio : geometric mean of `BEST` over the better closed form, over the cells of that kind and cost,
     decisions resampled problem by problem. sampling : the same over the better sampling. use : the scorer
-    only where the interval lies below 1. fell_back : share of choices that scorers left to the closed form;
-    where that is nearly all, what differs is luck with the clock.
+    only where the interval lies below 1; nothing is claimed from fewer than `FEWEST` decisions, or where no
+    interval can be told, since in some resamples nobody has any regret. fell_back : share of choices that
+    scorers left to the closed form; where that is nearly all, what differs is luck with the clock.
     """
     grouped: dict[tuple[str, float], list[tuple[str, Place]]] = {}
     for (problem, budget), here in places.items():
@@ -241,7 +269,11 @@ def by_kind(results: Results, places: Mapping[tuple[str, Budget], Place]) -> lis
         low, high = found["static"]["low"], found["static"]["high"]
         shares = [here[BEST].fallback_share for _, here in cells]
         fell_back = math.fsum(shares) / len(shares)
-        if fell_back > _FELL_BACK:
+        decisions = min(len(here[BEST]) for _, here in cells)
+        no_interval = found["static"]["ratio"] is not None and high is None
+        if decisions < FEWEST or no_interval:
+            use, why = "closed form", TOO_FEW
+        elif fell_back > _FELL_BACK:
             use, why = "closed form", "scorers leave nearly every choice to it"
         elif high is not None and high < 1:
             use, why = "scorer", "measurably better than the closed form"
@@ -249,7 +281,7 @@ def by_kind(results: Results, places: Mapping[tuple[str, Budget], Place]) -> lis
             use, why = "closed form", "the scorer is measurably worse"
         else:
             use, why = "closed form", "no measurable difference"
-        more = {"fell_back": plain(fell_back), "use": use, "why": why}
+        more = {"decisions": decisions, "fell_back": plain(fell_back), "use": use, "why": why}
         rows.append({"kind": kind, "rollout_seconds": cost, **found, **more})
     return rows
 
@@ -282,15 +314,16 @@ def break_even(results: Results, places: Mapping[tuple[str, Budget], Place]) -> 
     """Regret against the cost of a rollout: every policy as a multiple of the best sampling one.
 
     A row for each policy, cost and time in rollouts; `ratio` is the geometric mean over the problems that
-    have the policy at each of these costs, and a regret above 0 everywhere.
+    have the policy at each of these costs, a regret above 0 everywhere, and are `judged_alike`.
     """
     campaign = results.campaign
+    alike = judged_alike(results)
     sampling = members(campaign, "sampling")
     names = [*(n for group in (*GROUPS, "scorer") for n in members(campaign, group)), BEST]
     ratios: dict[tuple[int, str], dict[float, dict[str, float]]] = {}
     for (problem, budget), here in places.items():
         rivals = [float(here[name].measured.mean()) for name in sampling if name in here]
-        if budget.seconds is None or not rivals or min(rivals) <= 0:
+        if budget.seconds is None or problem not in alike or not rivals or min(rivals) <= 0:
             continue
         for name in names:
             if name in here and (regret := float(here[name].measured.mean())) > 0:
@@ -313,7 +346,8 @@ def stopping(results: Results, places: Mapping[tuple[str, Budget], Place]) -> li
 
     saved : share of the rollouts. price : of a rollout, in units of the tree's scale, None where no price
     was free of loss in tuning. lost : regret more than that of going on, with `lost_low` and `lost_high`, a
-    95 % paired interval; value units. free : whether that interval reaches down to 0.
+    95 % paired interval; value units. free : whether that interval reaches down to 0, and there are at least
+    `FEWEST` decisions to tell.
     """
     specs = [spec for spec in results.campaign.all_policies if ":stop=" in spec]
     tuned = {(row["problem"], row["rollouts"], row["policy"]): row["chosen"] for row in results.tuning}
@@ -331,12 +365,14 @@ def stopping(results: Results, places: Mapping[tuple[str, Budget], Place]) -> li
                 rows.append(
                     {
                         **compared(found),
+                        "regret_against": str(_against(results, problem)),
                         "saved": plain(saved),
                         "price": price_of(text),
                         "lost": plain(lost.mean()),
                         "lost_low": plain(low),
                         "lost_high": plain(high),
-                        "free": low <= 0,
+                        "decisions": len(ours),
+                        "free": low <= 0 and len(ours) >= FEWEST,
                     }
                 )
     return rows

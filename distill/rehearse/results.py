@@ -16,6 +16,7 @@ from distill import __version__
 from distill.dataset_columns import described_schema
 from distill.files import sha256_of, write_atomic
 from distill.rehearse import findings
+from distill.rehearse.against import Against
 from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.cell_columns import CELL_COLUMNS
 from distill.rehearse.findings import plain
@@ -35,6 +36,8 @@ def summarise(results: Results) -> dict[str, Any]:
     rows : a cell each, with its ratios to the best policy of each group, and "best scorer": of either half
     of the decisions the scorer that did best on the other half. comparisons : the same ratios, one a row.
     unsearched : the regret of each problem's decisions taken before the first rollout.
+    against : a problem each, what its regret is against: the exact optimum, or rollouts at each leaf, whose
+    error is the standard error of one decision's regret. counted : the problems of `aims` and `break_even`.
     aims : a scorer each, counted over cells with a wall-clock budget and rollouts of 100 us or more.
     by_kind : scorer or closed form for each kind of problem and cost of a rollout.
     stopping : policies that stop early against themselves without. scorers : the files, and their names.
@@ -46,7 +49,8 @@ def summarise(results: Results) -> dict[str, Any]:
     for row in comparisons:
         found = {key: row[key] for key in ("rival", "ratio", "low", "high")}
         ratios.setdefault((row["problem"], row["budget"], row["policy"]), {})[row["group"]] = found
-    rows = [_row(cell, results.kinds) for here in places.values() for cell in here.values()]
+    rows = [_row(cell, results) for here in places.values() for cell in here.values()]
+    alike = findings.judged_alike(results)
     for row in rows:
         row["ratios"] = ratios.get((row["problem"], row["budget"], row["policy"]), {})
     return {
@@ -54,6 +58,8 @@ def summarise(results: Results) -> dict[str, Any]:
         "made_with": {"voc-distill": __version__},
         "campaign": json.loads(json.dumps(asdict(campaign))),  # lists, as they are read back
         "kinds": results.kinds,
+        "against": {name: x.as_json() for name, x in results.against.items()},
+        "counted": [name for name in campaign.problems if name in alike],
         "scorers": _files(campaign),
         "measure": "expected regret given all that was seen where known, else regret; value units",
         "rows": rows,
@@ -88,11 +94,14 @@ def write_results(results: Results, folder: Path) -> dict[str, Any]:
     return summary
 
 
-def _row(cell: Cell, kinds: Mapping[str, str]) -> dict[str, Any]:
+def _row(cell: Cell, results: Results) -> dict[str, Any]:
     low, high = interval(cell.measured)
+    against = results.against.get(cell.problem, Against())
     return {
         "problem": cell.problem,
-        "kind": kinds.get(cell.problem),
+        "kind": results.kinds.get(cell.problem),
+        "regret_against": str(against),
+        "regret_error": against.error,
         "budget": str(cell.budget),
         "rollout_seconds": cell.budget.rollout_seconds,
         "timed": cell.budget.seconds is not None,
@@ -150,7 +159,7 @@ def _processor_seconds(results: Results) -> dict[str, dict[str, float]]:
     def spent(problem: str, on: str, seconds: float) -> None:
         out.setdefault(problem, {"cells": 0.0, "tuning": 0.0})[on] += seconds
 
-    for cell in results.cells:
+    for cell in (*results.unsearched, *results.cells):  # the former are the first to draw the decisions
         spent(cell.problem, "cells", float(cell.processor.sum()))
     for row in results.tuning:  # of problems too where all that was tuned was then left out
         spent(row["problem"], "cells" if "spent" in row else "tuning", row["processor_seconds"])

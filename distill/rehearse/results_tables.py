@@ -5,7 +5,8 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any, Final
 
-from distill.rehearse.aimed import BEST, SAVED
+from distill.rehearse.against import against_sentences
+from distill.rehearse.aimed import BEST, FEWEST, SAVED, TOO_FEW
 from distill.rehearse.findings import GROUPS
 from distill.rehearse.left_out import Reason
 
@@ -34,6 +35,12 @@ def short_table(summary: Figures) -> list[str]:
     """What the whole rehearsal says: counts of the aims, and scorer or closed form by kind and cost."""
     campaign, best = summary["campaign"], summary["aims"].get(BEST, {})
     lines = [f"{len(campaign['problems'])} problems, {campaign['seeds']} paired decisions a cell."]
+    if campaign["seeds"] < FEWEST:
+        lines.append(
+            f"These are {TOO_FEW}, and nothing is claimed: below {FEWEST}, 95 % intervals of resampled "
+            "decisions are much too narrow."
+        )
+    lines += against_sentences(summary)
     if best:
         head = "regret of the best scorer over that of the | cells | aim | reached | to be avoided | met"
         lines += [
@@ -51,14 +58,16 @@ def short_table(summary: Figures) -> list[str]:
             f"| {c['better']} | {c['worse']} |"
         )
     if summary["by_kind"]:
+        ratios_to = "to the closed form | to the better sampling"
         lines += [
             "",
-            "| leaves | a rollout | cells | to the closed form | to the better sampling | use | why |",
-            "| --- | --- | --- | --- | --- | --- | --- |",
+            f"| leaves | a rollout | cells | decisions each | {ratios_to} | use | why |",
+            "| --- | --- | --- | --- | --- | --- | --- | --- |",
         ]
         lines += [
             f"| {row['kind']} | {_cost(row['rollout_seconds'])} | {row['static']['cells']} "
-            f"| {_ratio(row['static'])} | {_ratio(row['sampling'])} | {row['use']} | {row['why']} |"
+            f"| {row['decisions']} | {_ratio(row['static'])} | {_ratio(row['sampling'])} | {row['use']} "
+            f"| {row['why']} |"
             for row in summary["by_kind"]
         ]
         lines += ["", "Ratios here are geometric means over the cells, 95 % intervals in square brackets."]
@@ -68,15 +77,22 @@ def short_table(summary: Figures) -> list[str]:
 def _stopping_lines(rows: Sequence[Figures]) -> list[str]:
     """Stopping early: where it saves much and costs nothing that could be measured, by budget."""
     lines = []
-    for budget in dict.fromkeys(row["budget"] for row in rows):
-        here = [row for row in rows if row["budget"] == budget]
+    for budget, against in dict.fromkeys((row["budget"], row["regret_against"]) for row in rows):
+        here = [row for row in rows if (row["budget"], row["regret_against"]) == (budget, against)]
+        decisions = min(row["decisions"] for row in here)
+        if decisions < FEWEST:
+            lines.append(
+                f"Stopping early at a budget of {budget}: {decisions} decisions, {TOO_FEW} (below {FEWEST})."
+            )
+            continue
         saves = [row for row in here if row["free"] and row["saved"] is not None and row["saved"] >= SAVED]
         problems, some = {row["problem"] for row in here}, {row["problem"] for row in saves}
         better = {row["problem"] for row in saves if row["high"] is not None and row["high"] < 1}
         also = f", on {len(better)} of them with surely less" if better else ""
         lines.append(
             f"Stopping early at a budget of {budget} saves at least {100 * SAVED:.0f} % of the rollouts, "
-            f"with no measurable loss of regret, on {len(some)} of {len(problems)} problems{also}."
+            f"with no measurable loss of regret, on {len(some)} of {len(problems)} problems{also} "
+            f"({decisions} decisions each)."
         )
     return lines
 
@@ -169,7 +185,9 @@ def time_table(summary: Figures, seeds: int, tuning_seeds: int, workers: int = 2
 
 
 def _ratio(row: Figures) -> str:
-    return _estimate(row["ratio"], row, ".2f") if row["ratio"] is not None else "none"
+    if row["ratio"] is None:
+        return "none"
+    return _estimate(row["ratio"], row, ".2f") + (" [no interval]" if row["high"] is None else "")
 
 
 def _estimate(value: float | None, ends: Figures, form: str = ".3g") -> str:

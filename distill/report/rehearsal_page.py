@@ -10,7 +10,8 @@ from typing import Final
 
 from distill.errors import InputError
 from distill.files import write_atomic
-from distill.rehearse.aimed import BEST
+from distill.rehearse.against import EXACT, against_sentences
+from distill.rehearse.aimed import BEST, FEWEST
 from distill.rehearse.left_out import Reason
 from distill.report import rehearsal_pictures as pictures
 from distill.report.elements import Child, element, estimate, number, section, table, text_of, word_list
@@ -31,7 +32,11 @@ _AGAINST: Final = {
 }
 _TO: Final = ("to the better sampling", "to the closed form", "to the exact rate")
 _WORDS: Final = {
-    "regret": "How much worse the chosen action is than the best one, in the problem's own unit.",
+    "regret": (
+        "How much worse the chosen action is than the best one, in the problem's own unit. Against the exact "
+        "optimum, or, for a simulator without a model, against what many rollouts at each leaf of the "
+        "searched tree, with luck of their own, tell of its actions."
+    ),
     "expected regret": (
         "Regret averaged over all that the rollouts seen leave open. Known where the beliefs are those that "
         "the truth was drawn from; it has the same mean as regret and far less noise, and is compared then."
@@ -43,7 +48,8 @@ _WORDS: Final = {
     "ratio": (
         "A policy's mean regret over that of the best policy of the group, on the same decisions; the best "
         "one is picked on these very decisions, which favours it. Below 1 the policy decides better. "
-        "Intervals: 95 %, decisions resampled in pairs."
+        "Intervals: 95 %, decisions resampled in pairs; none can be told where in some resamples nobody has "
+        f"any regret. From fewer than {FEWEST} decisions nothing is claimed: such intervals are too narrow."
     ),
     "best scorer": (
         "For either half of the decisions the scorer, file and use, that did best on the other half: the "
@@ -98,6 +104,7 @@ def _opening(summary: Figures) -> ET.Element:
         "header",
         element("h1", "Rehearsal: who decides better, at which cost"),
         element("p", *told),
+        *(element("p", sentence) for sentence in against_sentences(summary)),
         element("p", CAUTION, class_="caution"),
     )
 
@@ -127,7 +134,7 @@ _CAPTIONS: Final = {
     ),
     "stopping": (
         "What stopping early saves",
-        "Share of the rollouts; hollow: with measurably more regret than going on. Dashed: 30 %.",
+        "Share of the rollouts; hollow: more regret, measurably, or too few decisions to tell. Dashed: 30 %.",
     ),
 }  # fmt: skip
 
@@ -180,11 +187,20 @@ def _tables(summary: Figures) -> Iterator[ET.Element]:
 def _by_kind(kinds: Sequence[Figures]) -> ET.Element:
     rows: dict[str, Sequence[Child]] = {
         f"{k['kind']}, {1e6 * k['rollout_seconds']:,.0f} µs a rollout": [
-            number(k["static"]["cells"]), _ratio(k["static"]), _ratio(k["sampling"]), k["use"], k["why"],
+            number(k["static"]["cells"]), number(k.get("decisions")), _ratio(k["static"]),
+            _ratio(k["sampling"]), k["use"], k["why"],
         ]
         for k in kinds
     }  # fmt: skip
-    return _table(["cells", "best scorer to the closed form", "to the better sampling", "use", "why"], rows)
+    head = [
+        "cells",
+        "decisions each",
+        "best scorer to the closed form",
+        "to the better sampling",
+        "use",
+        "why",
+    ]
+    return _table(head, rows)
 
 
 def _aims(aims: Mapping[str, Mapping[str, Figures]]) -> ET.Element:
@@ -230,16 +246,18 @@ def _stopping(rows: Sequence[Figures]) -> ET.Element:
 def _figures(cells: Sequence[Figures]) -> Iterator[ET.Element]:
     """A table a problem and budget."""
     places: dict[str, dict[str, Sequence[Child]]] = {}
+    against: dict[str, str] = {}
     for c in cells:
         regret = {"value": c["measured"], **c["interval"]}
         acted = _two(number(c["regret"]), number(c["regret_by_mean"]), " by mean")
         choosing = _two(_percent(c["choosing_share"]), number(c["choosing_us"]), " µs a rollout")
         rest: list[Child] = [acted, number(c["rollouts"]), choosing, _percent(c["fallback_share"])]
-        place = places.setdefault(f"{c['problem']}, {c['budget']}", {})
+        place = places.setdefault(title := f"{c['problem']}, {c['budget']}", {})
+        against[title] = c.get("regret_against", EXACT)
         place[c["policy"]] = [estimate(regret), *_ratios(c), *rest]
     head = ["regret, expected where known", *_TO, "regret", "rollouts", "time choosing", "fell back"]
     for title, rows in places.items():
-        yield element("h3", title)
+        yield element("h3", f"{title} (regret against: {against[title]})")
         yield _table(head, rows)
 
 
@@ -274,6 +292,8 @@ def _ratios(row: Figures) -> list[Child]:
 
 
 def _ratio(row: Figures) -> ET.Element:
+    if row["ratio"] is not None and row["high"] is None:
+        return element("span", number(row["ratio"]), element("span", "no interval", class_="interval"))
     return estimate({"value": row["ratio"], "low": row["low"], "high": row["high"]})
 
 

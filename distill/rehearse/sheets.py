@@ -8,6 +8,7 @@ from typing import Any
 
 from distill.errors import InputError
 from distill.files import read_json, sha256_of
+from distill.rehearse.against import EXACT
 from distill.sheet import SHEET_FORMAT, write_sheet
 
 __all__ = ["add_to_sheet", "add_to_sheets", "figures_of", "read_summary"]
@@ -69,6 +70,8 @@ def _in_short(row: Mapping[str, Any]) -> dict[str, Any]:
     }
     return {
         **{key: row[key] for key in ("problem", "kind", "budget", "policy")},
+        "regret_against": row.get("regret_against", EXACT),  # earlier versions knew nothing else
+        "regret_error": _rounded(row.get("regret_error", 0.0)),
         "regret": {
             "value": _rounded(row["measured"]),
             **{k: _rounded(x) for k, x in row["interval"].items()},
@@ -87,8 +90,14 @@ def add_to_sheet(summary: Mapping[str, Any], scorer_file: Path) -> dict[str, Any
     """Write a rehearsal's figures into the sheet beside a scorer file, JSON and page; returns the sheet.
 
     The rest of the sheet stays as it is. Raises InputError where there is no sheet, the sheet is not that
-    of the file, or the file was not rehearsed.
+    of the file, the file was not rehearsed, or the sheet holds a rehearsal with cells that the new one lacks.
     """
+    sheet = _with_figures(summary, scorer_file)
+    write_sheet(sheet, scorer_file)
+    return sheet
+
+
+def _with_figures(summary: Mapping[str, Any], scorer_file: Path) -> dict[str, Any]:
     path = scorer_file.with_suffix(".json")
     if not scorer_file.is_file():
         raise InputError(str(scorer_file), "must be a scorer file")
@@ -100,9 +109,19 @@ def add_to_sheet(summary: Mapping[str, Any], scorer_file: Path) -> dict[str, Any
         raise InputError(
             f"{path}: file: sha256", "must be that of the file beside it", sheet["file"]["sha256"]
         )
-    sheet["rehearsal"] = figures_of(summary, sha256)
-    write_sheet(sheet, scorer_file)
-    return sheet
+    new = figures_of(summary, sha256)
+    held = {_place(cell) for cell in (sheet.get("rehearsal") or {}).get("cells", [])}
+    if lost := sorted(held - {_place(cell) for cell in new["cells"]}):
+        rule = (
+            f"holds {len(held)} cells, {len(lost)} of which the new rehearsal lacks; rehearse these "
+            "problems, budgets and policies too, or take the part out of the sheet first. Lacking"
+        )
+        raise InputError(f"{path}: rehearsal", rule, ", ".join(lost[0]))
+    return {**sheet, "rehearsal": new}
+
+
+def _place(cell: Mapping[str, Any]) -> tuple[str, str, str]:
+    return cell["problem"], cell["budget"], cell["policy"]
 
 
 def add_to_sheets(folder: Path, scorer_files: Iterable[Path]) -> list[Path]:
@@ -110,10 +129,7 @@ def add_to_sheets(folder: Path, scorer_files: Iterable[Path]) -> list[Path]:
     all of them are known to be in it. Returns the files.
     """
     summary, files = read_summary(folder), list(scorer_files)
-    for file in files:
-        if not file.is_file():
-            raise InputError(str(file), "must be a scorer file")
-        figures_of(summary, sha256_of(file))
-    for file in files:
-        add_to_sheet(summary, file)
+    sheets = [_with_figures(summary, file) for file in files]
+    for file, sheet in zip(files, sheets, strict=True):
+        write_sheet(sheet, file)
     return files

@@ -6,7 +6,7 @@ import json
 import re
 import shutil
 import xml.etree.ElementTree as ET
-from dataclasses import replace
+from dataclasses import fields, replace
 from pathlib import Path
 
 import numpy as np
@@ -14,6 +14,7 @@ import pytest
 from ladder import CLOSED_FORM
 
 from distill.errors import InputError
+from distill.rehearse.aimed import FEWEST, TOO_FEW
 from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.findings import BEST, NO_SEARCH, places_of
 from distill.rehearse.left_out import CHOICE, DECISION, Reason
@@ -157,7 +158,7 @@ def test_tables_say_what_the_summary_does():
     summary = summarise(results([4, 0.5, 1.1]))
     short = "\n".join(short_table(summary))
     assert "| static closed form | 4 | <= 0.95 | 2 (50%) | > 1.05 | 0 | 2 | 0 |" in short
-    assert "| Gaussian | 20 us | 1 | 3.64 [3.64, 3.64] | 4.00 [4.00, 4.00] | closed form |" in short
+    assert "| Gaussian | 20 us | 1 | 40 | 3.64 [3.64, 3.64] | 4.00 [4.00, 4.00] | closed form |" in short
     assert len(every_cell(summary)) == 2 + 6
     taxi = next(line for line in time_table(summary, 400, 100) if "taxi" in line)
     # 18 cells of 40 decisions at 0.01 s, ten times as many decisions; tuning 5 s, ten times
@@ -168,6 +169,76 @@ def test_tables_say_what_the_summary_does():
     assert taxi == f"| taxi | {18 * 400 * 0.01 + 30:.0f} | 50 |"
 
 
+def without(file):
+    """Take the rehearsal out of a sheet."""
+    sheet = json.loads(file.with_suffix(".json").read_text())
+    file.with_suffix(".json").write_text(json.dumps({k: v for k, v in sheet.items() if k != "rehearsal"}))
+
+
+def test_a_rehearsal_with_fewer_cells_does_not_replace_the_one_in_a_sheet(tmp_path):
+    for end in ("onnx", "json", "md"):
+        shutil.copy(MODELS / f"cold-store-fast.{end}", tmp_path)
+    file = tmp_path / "cold-store-fast.onnx"
+    sheet = file.with_suffix(".json")
+    summary = summarise(results([4, 0.5, 1.1]))
+    kept = sheet.read_bytes()
+    held = len(json.loads(kept)["rehearsal"]["cells"])
+    with pytest.raises(InputError, match=f"rehearsal: holds {held} cells, {held} of which the new"):
+        add_to_sheet(summary, file)
+    assert sheet.read_bytes() == kept
+    without(file)
+    add_to_sheet(summary, file)
+    kept = sheet.read_bytes()
+    add_to_sheet(summary, file)  # the same cells again
+    found = results([4, 0.5, 1.1])
+    fewer = [c for c in found.cells if c.problem == "taxi"]
+    (tmp_path / "summary.json").write_text(json.dumps(summarise(replace(found, cells=fewer))))
+    with pytest.raises(InputError, match="holds 12 cells, 6 of which the new rehearsal lacks"):
+        add_to_sheets(tmp_path, [file])
+    assert sheet.read_bytes() == kept
+
+
+def test_few_decisions_claim_nothing():
+    """39 decisions with half the regret on each: an interval without width, and nothing is said."""
+
+    def told(n):
+        found = results([0.5, 0.5, 0.5])
+        names = [f.name for f in fields(Cell) if f.name not in ("problem", "budget", "policy")]
+        cells = [replace(c, **{name: getattr(c, name)[:n] for name in names}) for c in found.cells]
+        stops = [replace(c, policy="a-stops", rollouts=c.rollouts / 2) for c in cells if c.policy == "a"]
+        campaign = replace(CAMPAIGN, seeds=n)
+        return summarise(replace(found, cells=[*cells, *stops], campaign=campaign))
+
+    few, enough = told(FEWEST - 1), told(FEWEST)
+    for rows in (few["by_kind"], few["advice"]):
+        assert {row["why"] for row in rows} == {TOO_FEW}
+        assert {row["decisions"] for row in rows} == {FEWEST - 1}
+    assert {row["use"] for row in few["by_kind"]} == {"closed form"}
+    assert {row["use"] for row in enough["by_kind"]} == {"scorer"}
+    assert not any(row["free"] for row in few["stopping"])
+    assert all(row["free"] for row in enough["stopping"])
+    assert few["aims"][BEST]["static"]["better"] == 0 < enough["aims"][BEST]["static"]["better"]
+    assert f"39 decisions, {TOO_FEW} (below 40)" in short_table(few)[-1]
+    assert "nothing is claimed" in short_table(few)[1]
+    assert not any(TOO_FEW in line for line in short_table(enough))
+
+
+def test_where_no_interval_can_be_told_nothing_is_claimed():
+    """The closed form errs in one decision of 40: in a third of the resamples in none."""
+    found = results([1.0, 1.0, 1.0])
+    once = np.where(np.arange(N) == 3, 1.0, 0.0)
+    cells = [
+        replace(c, regret=once, regret_by_mean=once, expected_regret=once) if c.policy == "static_rate" else c
+        for c in found.cells
+    ]
+    summary = summarise(replace(found, cells=cells))
+    (row, *_) = summary["by_kind"]
+    assert (row["static"]["ratio"], row["static"]["low"]) == (pytest.approx(40.0, rel=CLOSED_FORM), None)
+    assert (row["use"], row["why"]) == ("closed form", TOO_FEW)
+    assert any("40.00 [no interval]" in line for line in short_table(summary))
+    assert "no interval" in rehearsal_page(summary)
+
+
 def test_figures_go_into_the_sheets_of_the_files_that_were_rehearsed(tmp_path):
     for name in ("cold-store-fast", "on-time"):
         for end in ("onnx", "json", "md"):
@@ -175,6 +246,7 @@ def test_figures_go_into_the_sheets_of_the_files_that_were_rehearsed(tmp_path):
     summary = summarise(results([4, 0.5, 1.1]))
     file = tmp_path / "cold-store-fast.onnx"
     before = json.loads(file.with_suffix(".json").read_text())
+    without(file)
     add_to_sheet(summary, file)
     sheet = json.loads(file.with_suffix(".json").read_text())
     found = sheet.pop("rehearsal")
@@ -221,8 +293,8 @@ def test_what_stopping_saves_is_told_and_drawn():
     assert (rows["taxi"]["lost"], rows["taxi"]["lost_low"]) == (0, 0)
     assert not rows["tree-3x2^1-noise1"]["free"]
     assert rows["tree-3x2^1-noise1"]["lost_low"] == pytest.approx(0.5, rel=CLOSED_FORM)
-    told = "saves at least 30 % of the rollouts, with no measurable loss of regret, on 1 of 2 problems."
-    assert short_table(summary)[-1] == f"Stopping early at a budget of {budget} {told}"
+    told = "saves at least 30 % of the rollouts, with no measurable loss of regret, on 1 of 2 problems "
+    assert short_table(summary)[-1] == f"Stopping early at a budget of {budget} {told}(40 decisions each)."
     assert "| 60 | 1.00 [1.00, 1.00] | 0.01 |" in "".join(stopping_table(summary))
     assert "What stopping early saves" in rehearsal_page(summary)
     drawn = ET.tostring(rehearsal_pictures(summary)["stopping"], encoding="unicode")

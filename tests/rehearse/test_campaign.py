@@ -164,7 +164,7 @@ def test_where_every_policy_is_left_out_all_is_told_nevertheless(tmp_path, capsy
     assert command_line(["rehearse", *flags, "--tuning-seeds", "2", "--out", str(tmp_path)]) == 0
     summary = json.loads((tmp_path / "summary.json").read_text())
     assert (summary["rows"], len(summary["left_out"])) == ([], 1)
-    assert summary["processor_seconds"]["tree-2x2^1-noise1"]["cells"] == 0
+    assert summary["processor_seconds"]["tree-2x2^1-noise1"]["cells"] > 0  # of deciding before a search
     assert "0 cells of 2 decisions" in capsys.readouterr().out
     assert "one choice takes" in json.dumps(summary["left_out"])
 

@@ -39,8 +39,8 @@ _COMMANDS = (price, infer, generate, look, train, ship, validate, audit, report,
 
 def run(argv: Sequence[str]) -> int:
     """Run one command; returns the exit code. No traceback reaches the user for what they can mend."""
-    args = _parser().parse_args(argv)
     try:
+        args = _parser().parse_args(argv)  # which looks at the places to write to
         code: int = args.command(args) or 0
         sys.stdout.flush()
         return code

@@ -18,7 +18,7 @@ from distill.errors import InputError
 __all__ = ["is_stream", "read_json", "sha256_of", "write_atomic"]
 
 _STANDARD: Final = re.compile(r"/dev/(?:stdout|stderr|fd/(\d+))")
-_LONGEST: Final = 100  # characters of a name that the temporary one repeats; a file system takes 255
+_LONGEST: Final = 50  # characters of a name that the temporary one repeats; a file system takes 255 bytes
 
 
 def write_atomic(path: str | os.PathLike[str], data: bytes) -> None:

@@ -96,6 +96,12 @@ def test_a_link_stays_and_its_target_is_replaced(tmp_path: Path) -> None:
     assert target.read_bytes() == b"new"
 
 
+def test_a_name_may_be_as_long_as_the_file_system_takes(tmp_path: Path) -> None:
+    path = tmp_path / ("ä" * 125 + ".json")
+    write_atomic(path, b"new")
+    assert path.read_bytes() == b"new"
+
+
 def test_a_pipe_and_a_device_are_written_through_and_stay(tmp_path: Path) -> None:
     pipe, link = tmp_path / "pipe", tmp_path / "null"
     os.mkfifo(pipe)

@@ -79,6 +79,7 @@ RECORD = "record --simulator taxi --decisions 1"
         ("validate s.onnx data --out hand.json", FOREIGN),
         ("validate s.onnx data --out trees.jsonl", FOREIGN),
         ("ship trained --out trained/dense-32-32.onnx", INSIDE),
+        ("ship trained --out hand.json", "out: must end in .onnx"),
         ("ship trained --out hand.onnx", "hand.json: must be a scorer's sheet"),
         ("audit s.onnx audited/worth-adding.jsonl.gz --out audited", INPUTS),
         ("audit s.onnx trees.jsonl --dataset data --out data", INSIDE),
@@ -109,6 +110,9 @@ def test_what_is_no_file_is_refused_before_any_work(
         with pytest.raises(SystemExit):
             run(["price", "none.jsonl", "--out", str(tmp_path / "socket")])
     assert "--out: must be a regular file, a pipe or a new name" in capsys.readouterr().err
+    (tmp_path / "loop").symlink_to("loop")
+    assert run(["price", "none.jsonl", "--out", str(tmp_path / "loop")]) == 2
+    assert "Too many levels of symbolic links" in capsys.readouterr().err
     # A pipe may be written through: the command goes on to its input, which is not there.
     assert run(["price", "none.jsonl", "--out", str(tmp_path / "pipe")]) == 2
     assert "none.jsonl" in capsys.readouterr().err

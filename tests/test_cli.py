@@ -27,6 +27,7 @@ from distill.commands.flags import microseconds
 from distill.query import Query
 from distill.record import from_record
 from distill.rehearse.catalogue import SIMULATORS
+from distill.rehearse.plans import plan
 
 
 @pytest.fixture
@@ -374,7 +375,20 @@ def test_a_light_installation_is_told_where_the_extra_comes_from(capsys, monkeyp
 
 @pytest.mark.parametrize(
     "name",
-    ["price", "infer", "generate", "look", "train", "ship", "validate", "audit", "report", "record", "tour"],
+    [
+        "price",
+        "infer",
+        "generate",
+        "look",
+        "train",
+        "ship",
+        "validate",
+        "audit",
+        "report",
+        "record",
+        "rehearse",
+        "tour",
+    ],
 )
 def test_help_tells_every_default(name):
     parser = argparse.ArgumentParser()
@@ -383,6 +397,17 @@ def test_help_tells_every_default(name):
         if action.default not in (None, False, [], argparse.SUPPRESS):
             assert "default" in (action.help or ""), action.dest
         assert action.help or action.required, action.dest
+
+
+def test_help_tells_the_sizes_of_rehearsals(capsys, monkeypatch):
+    monkeypatch.setenv("COLUMNS", "200")  # no text broken at a hyphen
+    with pytest.raises(SystemExit):
+        run(["rehearse", "--help"])
+    told = " ".join(capsys.readouterr().out.split())
+    own, quick = plan(None, problems=["taxi"], budgets=["8"]), plan("quick")
+    assert own.seeds == plan("full").seeds
+    assert f"decisions a cell (default {own.seeds}, --quick {quick.seeds})" in told
+    assert f"(default {own.tuning_seeds}, --quick {quick.tuning_seeds})" in told
 
 
 def test_help_names_the_simulators_that_there_are():

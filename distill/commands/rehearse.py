@@ -46,11 +46,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--out", type=flags.out_folder, required=True, metavar="FOLDER", help="goes on where it was"
     )
-    parser.add_argument("--quick", action="store_true", help="a small rehearsal of under a minute")
+    parser.add_argument("--quick", action="store_true", help="a small rehearsal, of about ten seconds")
     parser.add_argument("--full", action="store_true", help="the whole grid; half an hour on two cores")
     parser.add_argument(
         "--stops", action="store_true",
-        help="play 4,096 rollouts with and without stopping early too; beside --full 25 minutes more",
+        help="play 4,096 rollouts a decision too, on every problem, with and without stopping early; needs "
+        "--scorer, whose first file of each kind of input plays them; beside --full 25 minutes more",
     )  # fmt: skip
     again = "again for more; with --quick or --full in place of theirs"
     parser.add_argument(
@@ -71,10 +72,18 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--seeds",
         type=flags.whole(2),
         metavar="N",
-        help="decisions a cell; more than --out holds plays the further ones, by constants tuned before",
+        help="decisions a cell (default 400, --quick 60); more than --out holds plays the further ones, by "
+        "constants tuned before",
     )
-    parser.add_argument("--tuning-seeds", type=flags.whole(0), metavar="N", help="0 tunes nothing")
-    parser.add_argument("--workers", type=flags.whole(1), default=1, metavar="N", help="processes")
+    parser.add_argument(
+        "--tuning-seeds",
+        type=flags.whole(0),
+        metavar="N",
+        help="decisions that constants are tuned on; 0 tunes nothing (default 100, --quick 0)",
+    )
+    parser.add_argument(
+        "--workers", type=flags.whole(1), default=1, metavar="N", help="processes (default 1)"
+    )
     other = parser.add_mutually_exclusive_group()
     other.add_argument(
         "--estimate",

@@ -28,6 +28,7 @@ from distill import schema
 from distill.errors import InputError
 from distill.estimates import Estimated, bootstrap, by_group, field_text, number_text, same_or_spread
 from distill.tree import BeliefTree, Floats, Ints
+from distill.tree_columns import EdgeRewards, edge_rewards
 
 __all__ = ["NOTHING", "Beliefs", "Prior", "gaussian_beliefs", "normal_text", "prior_of", "uniform_moment"]
 
@@ -127,16 +128,18 @@ def gaussian_beliefs(
     whole = math.hypot(unit_spread.value, level)
     follow = unit_spread.value**2 / whole**2 if whole > 0 and unit_spread.low > 0 else 0.0
     centre = math.log(unit.value)
+    rewards, at_leaves = edge_rewards(trees)
     moments = []
     for i, row in zip(usable, logs, strict=True):
         norm = math.exp(centre + follow * (row["L"] - centre))
-        moments.append({**row, **_moments(trees[i], priors[i], norm)})
+        moments.append({**row, **_moments(trees[i], priors[i], rewards[i], norm)})
     sums = by_group(moments, member)
     found = bootstrap(sums, lambda s: {**_log_spreads(s), **_spreads(s, follow, centre)}, seed=seed)
     if not any(np.any(trees[i].cost) for i in usable):  # type: ignore[arg-type]
         for name in [name for name in found if name.startswith("cost")]:
             del found[name]
-    toml = _gaussian_toml(found, np.concatenate(sure), [trees[i] for i in usable])
+    alike = None if at_leaves else np.concatenate([rewards[i].values for i in usable])
+    toml = _gaussian_toml(found, np.concatenate(sure), alike)
     shares = [(g, priors[i].shared) for g, i in zip(member, usable, strict=True)]
     known = [(g, s) for g, s in shares if s is not None and math.isfinite(s)]
     if known:
@@ -197,7 +200,7 @@ def _log_spreads(s: Mapping[str, Any]) -> dict[str, Any]:
     }
 
 
-def _moments(tree: BeliefTree, prior: Prior, norm: float) -> dict[str, float]:
+def _moments(tree: BeliefTree, prior: Prior, rewards: EdgeRewards, norm: float) -> dict[str, float]:
     """Sums of first and second moments of prior means and rewards, in units of `norm`."""
     assert tree.mean is not None
     kept = np.isfinite(prior.sd) & (prior.sd > 0)
@@ -210,7 +213,7 @@ def _moments(tree: BeliefTree, prior: Prior, norm: float) -> dict[str, float]:
     # Half squared differences: what all leaves of a tree share moves no decision, and drops out.
     half = ((x[:, None] - x) ** 2 - own[:, None] - own + 2 * extra) / 2
     n = len(x)
-    reward = tree.reward[1:] / norm
+    reward = rewards.values / norm
     return {
         "x": float(x.sum()),
         "same": float(half[same].sum()) / n,
@@ -220,6 +223,8 @@ def _moments(tree: BeliefTree, prior: Prior, norm: float) -> dict[str, float]:
         "r": float(reward.sum()),
         "rr": float(reward @ reward),
         "n r": float(len(reward)),
+        "w r": rewards.weights,
+        "ww r": rewards.squares,
     }
 
 
@@ -240,13 +245,15 @@ def _spreads(s: Mapping[str, Any], follow: float, centre: float) -> dict[str, An
     lone, single = s["n same"] == 0, s["n other"] == 0
     between_actions = np.where(lone | single, 0.0, (other - same) / square)
     between_leaves = np.where(lone, np.where(single, 0.0, other), same) / square
-    r = s["r"] / s["n r"]
+    # Values are weighted sums over edges: a mean goes with the weights, a variance with their squares.
+    r, value = s["r"] / s["w r"], s["r"] / s["n r"]
+    spread = np.maximum(s["rr"] / s["n r"] / square - (value / first) ** 2, 0) * (s["n r"] / s["ww r"])
     return {
         "prior mean": s["x"] / s["n"] / first,
         "prior mean, sd between actions": np.sqrt(np.maximum(between_actions, 0)),
         "prior mean, sd between leaves": np.sqrt(np.maximum(between_leaves, 0)),
         "reward": r / first,
-        "reward, sd": np.sqrt(np.maximum(s["rr"] / s["n r"] / square - (r / first) ** 2, 0)),
+        "reward, sd": np.sqrt(spread),
     }
 
 
@@ -272,8 +279,9 @@ def normal_text(mean: Estimated | None, sd: Estimated) -> str:
 
 
 def _gaussian_toml(
-    found: Mapping[str, Estimated], sure: Any, trees: Sequence[BeliefTree]
+    found: Mapping[str, Estimated], sure: Any, rewards: Floats | None
 ) -> dict[str, dict[str, str]]:
+    """rewards : those of single edges; None where they are not known one by one."""
     prior = {
         "scale": same_or_spread(found["prior sd, typical"].value, found["unit, spread of log between trees"]),
         "action": normal_text(None, found["prior mean, sd between actions"]),
@@ -291,9 +299,8 @@ def _gaussian_toml(
             "sd": same_or_spread(noise, found["noise sd, spread of log between leaves"]),
         },
     }
-    rewards = np.concatenate([t.reward[1:] for t in trees])
     same_unit = found["unit, spread of log between trees"].low <= 0
-    if len(np.unique(rewards)) <= 8 and same_unit:
+    if rewards is not None and len(np.unique(rewards)) <= 8 and same_unit:
         toml["edge"] = {"reward": field_text(np.round(rewards / found["prior sd, typical"].value, 9))}
     else:
         toml["edge"] = {"reward": normal_text(found["reward"], found["reward, sd"])}

@@ -18,6 +18,7 @@ from distill.errors import InputError
 from distill.estimates import Estimated, bootstrap, by_group, field_text, number_text, same_or_spread
 from distill.infer_beliefs import NOTHING, Beliefs, normal_text, uniform_moment
 from distill.tree import BeliefTree, Floats
+from distill.tree_columns import EdgeRewards, edge_rewards
 
 __all__ = ["win_loss_beliefs"]
 
@@ -32,15 +33,14 @@ def win_loss_beliefs(trees: Sequence[BeliefTree], group: Sequence[int], seed: in
     centre = math.log(float(spreads["span, typical"][0]))
     unit, leaf = (float(spreads[key][0]) ** 2 for key in (_UNIT, "span, spread of log between leaves"))
     strengths = []
-    for row, tree in zip(rows, trees, strict=True):
+    for row, tree, rewards in zip(rows, trees, edge_rewards(trees)[0], strict=True):
         # The level of a tree is its unit's, and that of its few spans: as much of it as is likely the unit's.
         noise = leaf * row["1/n"]
         share = unit / (unit + noise) if unit + noise > 0 else 0.0
         norm = math.exp(centre + share * (row["L"] - centre))
         rest = math.sqrt(unit * (1 - share))  # sd of log of unit / norm
-        row |= _values(
-            tree, norm * uniform_moment(1, rest), uniform_moment(2, rest) / uniform_moment(1, rest) ** 2
-        )
+        first, second = uniform_moment(1, rest), uniform_moment(2, rest)
+        row |= _values(tree, rewards, norm * first, second / first**2)
         strengths.append(_strength(tree))
     found = bootstrap(by_group(rows, group), lambda s: {**_spreads(s), **_moments(s)}, seed=seed)
     if not any(np.any(t.cost) for t in trees):  # type: ignore[arg-type]
@@ -95,13 +95,14 @@ def _row(tree: BeliefTree) -> dict[str, float]:
     }  # fmt: skip
 
 
-def _values(tree: BeliefTree, norm: float, square: float) -> dict[str, float]:
+def _values(tree: BeliefTree, rewards: EdgeRewards, norm: float, square: float) -> dict[str, float]:
     """Sums of rewards and of the values of a loss in units of `norm`; squares are too large by `square`."""
     assert tree.low is not None
-    low, reward = tree.low / norm, tree.reward[1:] / norm
+    low, reward = tree.low / norm, rewards.values / norm
     return {
         "low": float(low.sum()), "low2": float(low @ low) / square,
         "r": float(reward.sum()), "rr": float(reward @ reward) / square, "n r": float(len(reward)),
+        "w r": rewards.weights, "ww r": rewards.squares,
     }  # fmt: skip
 
 
@@ -125,12 +126,12 @@ def _spreads(s: Mapping[str, Any]) -> dict[str, Any]:
 
 
 def _moments(s: Mapping[str, Any]) -> dict[str, Any]:
-    low, reward = s["low"] / s["n"], s["r"] / s["n r"]
+    low, value = s["low"] / s["n"], s["r"] / s["n r"]
     return {
         "value of a loss": low,
         "value of a loss, sd": _root(s["low2"] / s["n"] - low**2),
-        "reward": reward,
-        "reward, sd": _root(s["rr"] / s["n r"] - reward**2),
+        "reward": s["r"] / s["w r"],
+        "reward, sd": _root((s["rr"] / s["n r"] - value**2) * (s["n r"] / s["ww r"])),
     }
 
 

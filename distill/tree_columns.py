@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import math
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
@@ -13,7 +14,7 @@ from distill import schema
 from distill.query import scale_of
 from distill.tree import BeliefTree, Floats, Ints
 
-__all__ = ["COLUMNS", "decision_key", "depths", "path_gains", "tree_columns"]
+__all__ = ["COLUMNS", "EdgeRewards", "decision_key", "depths", "edge_rewards", "path_gains", "tree_columns"]
 
 # Column -> what it says, for people.
 COLUMNS: Final[Mapping[str, str]] = {
@@ -28,7 +29,7 @@ COLUMNS: Final[Mapping[str, str]] = {
     "noise": "log10 of a rollout's sd over the leaf's present sd, median leaf",
     "sd spread": "sd of log10 of the leaves' present sds",
     "mean spread": "sd of the leaves' means over the tree's scale",
-    "reward spread": "sd of the edges' rewards over the tree's scale",
+    "offset spread": "sd over leaves of the discounted rewards from the root, over the tree's scale",
     "cost": "log10 of the mean cost of a rollout over the tree's scale",
     "scale": "log10 of the tree's scale",
 }
@@ -67,7 +68,7 @@ def _row(tree: BeliefTree) -> dict[str, float]:
     if scale > 0:
         row["scale"] = math.log10(scale)
         row["mean spread"] = float(np.std(mean)) / scale
-        row["reward spread"] = float(np.std(tree.reward[1:])) / scale
+        row["offset spread"] = float(np.std(_offsets(tree))) / scale
         assert tree.cost is not None
         if np.any(tree.cost > 0):
             row["cost"] = math.log10(float(np.mean(tree.cost)) / scale)
@@ -113,6 +114,49 @@ def path_gains(tree: BeliefTree) -> tuple[Floats, Ints]:
     leaves = tree.leaf_nodes
     lone = np.bincount(action[leaves], minlength=tree.n_nodes) == 1
     return log_gain[leaves], np.where(lone[action[leaves]], 1, depths(tree)[leaves])
+
+
+def _offsets(tree: BeliefTree) -> Floats:
+    gain, offset = np.ones(tree.n_nodes), np.zeros(tree.n_nodes)
+    for c, p in enumerate(tree.parent.tolist()):
+        if c:
+            gain[c] = gain[p] * tree.discount[c]
+            offset[c] = offset[p] + gain[p] * tree.reward[c]
+    return np.asarray(offset[tree.leaf_nodes])
+
+
+@dataclass(frozen=True, eq=False)
+class EdgeRewards:
+    """What a tree tells of rewards that are alike on every edge: each of `values` is a sum of such rewards,
+    weighted; `weights`, `squares` : sums of these weights and of their squares, over all values."""
+
+    values: Floats
+    weights: float
+    squares: float
+
+
+def edge_rewards(trees: Sequence[BeliefTree]) -> tuple[list[EdgeRewards], bool]:
+    """Of each tree the rewards of its edges; or, and then True, the offsets of its leaves.
+
+    Where no node above a leaf has a reward in any tree, the records are tables, which have a leaf's whole
+    offset on its last edge: that is the sum over a path.
+    """
+    inner = [np.flatnonzero(t.kind != schema.LEAF)[1:] for t in trees]
+    nodes = sum(len(at) for at in inner)
+    at_leaves = nodes > 0 and not any(np.any(t.reward[at]) for t, at in zip(trees, inner, strict=True))
+    at_leaves = at_leaves and any(np.any(t.reward) for t in trees)
+    if not at_leaves:
+        return [EdgeRewards(t.reward[1:], t.n_nodes - 1.0, t.n_nodes - 1.0) for t in trees], False
+    out = []
+    for tree in trees:
+        logs, edges = path_gains(tree)
+        before = [np.exp(logs.sum() / edges.sum()) ** np.arange(k) for k in edges]
+        out.append(
+            EdgeRewards(
+                _offsets(tree), float(sum(w.sum() for w in before)), float(sum(w @ w for w in before))
+            )
+        )
+    return out, True
 
 
 def decision_key(tree: BeliefTree) -> str | None:

@@ -6,7 +6,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from ladder import CLOSED_FORM
+from ladder import CLOSED_FORM, STANDARD_ERRORS
 
 from distill.family import draw
 from distill.infer import Inferred, infer
@@ -94,3 +94,30 @@ def test_gains_that_one_discount_does_not_give_are_named_and_kept_on_average(tmp
     seen = found.figures["compared"]["columns"]["gain"]
     assert seen["traces"][2] == pytest.approx(np.exp(np.log(gains).mean()), rel=1e-5)
     assert seen["drawn"][2] == pytest.approx(np.exp(np.median(drawn)), rel=1e-5)
+
+
+@pytest.mark.parametrize("win_loss", [False, True])
+def test_trees_of_the_inferred_family_have_offsets_like_the_recorded_ones(
+    tmp_path: Path, win_loss: bool
+) -> None:
+    """A table's record has the whole offset on the edge of the leaf; a family has rewards on every edge."""
+    rng = np.random.default_rng(1)
+    action, n = np.repeat(np.arange(3), 4), 12
+    ones = np.ones(n)
+    beliefs = (
+        {"alpha": ones, "beta": ones, "low": 0 * ones, "high": ones}
+        if win_loss
+        else {"mean": 0 * ones, "var": ones, "noise_var": 4 * ones}
+    )
+    with Recorder(tmp_path, strict=True) as recorder:
+        for _ in range(200):
+            offset = 3 + 0.5 * rng.standard_normal(n)
+            recorder.see(
+                **beliefs, gain=0.9 * ones, offset=offset, action=action, count=0 * action, remaining=8
+            )
+    found = infer([tree for _, tree in read_many(list(tmp_path.glob("*.jsonl.gz")), BadLines(strict=True))])
+    drawn = [leaf_table(draw(found.family, 0, i)).offset for i in range(400)]
+    means = np.array([x.mean() for x in drawn])
+    assert abs(means.mean() - 3) < STANDARD_ERRORS * (means.std() / 20 + 0.5 / np.sqrt(200 * n))
+    squares = np.array([np.mean((x - 3) ** 2) for x in drawn])
+    assert abs(squares.mean() - 0.25) < STANDARD_ERRORS * (squares.std() / 20 + 0.25 * np.sqrt(2 / (200 * n)))

@@ -379,7 +379,7 @@ class Scorer:
         }
         for name, x in {**arrays, "tree": labels, **scalars}.items():
             if x.shape != (n,) or n == 0:
-                raise InputError(name, f"must have shape ({n},), at least one leaf", x.shape)
+                raise InputError(name, f"must have shape ({n or 'n'},), at least one leaf", x.shape)
         starts = np.flatnonzero(np.r_[True, labels[1:] != labels[:-1]]).tolist()
         if len(np.unique(labels)) != len(starts):
             raise InputError("tree", "rows of one tree must be side by side")

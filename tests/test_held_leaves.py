@@ -107,3 +107,17 @@ def test_a_number_that_this_input_has_not_is_named():
             call(remaining=30, horizon=4)
         with pytest.raises(InputError, match="mean: is no number of a call"):
             call(remaining=30, mean=[0.0])
+
+
+@pytest.mark.parametrize("scorer", [SCORER, Scorer.closed_form()], ids=["file", "closed form"])
+def test_no_leaves_are_told_by_their_shape(scorer):
+    """NumPy takes [] for floats, which is no reason to speak of whole numbers."""
+    none = {name: [] for name in ("mean", "var", "noise_var", "gain", "offset", "cost", "action")}
+    for call in (scorer.pick, scorer.score, scorer.hold):
+        with pytest.raises(InputError, match=r"mean: must have shape \(n,\), n from 1 to .*; got \(0,\)"):
+            call(**none, remaining=5)
+    with pytest.raises(InputError, match=r"mean: must have shape \(n,\), at least one leaf; got \(0,\)"):
+        scorer.score(**none, remaining=5, tree=[])
+    some = {**none, **{name: [1.0, 1.0] for name in none if name != "action"}}
+    with pytest.raises(InputError, match=r"action: must have shape \(2,\), as 'mean'; got \(0,\)"):
+        scorer.pick(**some, remaining=5)

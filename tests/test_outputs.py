@@ -40,6 +40,8 @@ def place(tmp_path: Path) -> Path:
     audited.mkdir()
     shutil.copy(tmp_path / "packed.jsonl.gz", audited / "worth-adding.jsonl.gz")
     (audited / "audit.json").write_text('{"format": "voc-audit/1"}')
+    (tmp_path / "tour").mkdir()
+    (tmp_path / "tour" / "summary.json").write_text("{}")
     (tmp_path / "linked.jsonl").symlink_to(tmp_path / "trees.jsonl")
     return tmp_path
 
@@ -83,6 +85,7 @@ RECORD = "record --simulator taxi --decisions 1"
         ("ship trained --out hand.onnx", "hand.json: must be a scorer's sheet"),
         ("audit s.onnx audited/worth-adding.jsonl.gz --out audited", INPUTS),
         ("audit s.onnx trees.jsonl --dataset data --out data", INSIDE),
+        ("rehearse --quick --out tour", "summary.json: must be an earlier rehearsal's"),
         (f"{RECORD} --out trees.jsonl", "records are never written over"),
         (f"{RECORD} --out packed.jsonl.gz", "records are never written over"),
     ],

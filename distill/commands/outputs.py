@@ -18,8 +18,8 @@ from distill.files import is_stream
 from distill.sheet import FRONT_FILE, FRONT_FORMAT, SHEET_FORMAT
 
 __all__ = [
-    "AUDIT", "FAMILY", "FIGURES", "FRONT", "PAGE", "PICTURE", "PRICED", "SCORER", "SHEET", "SHEET_PAGE",
-    "SUMMARY", "SUMMARY_PAGE", "TOUR_SCORER", "TRACES", "WORTH_ADDING", "Kind", "check_outputs",
+    "AUDIT", "FAMILY", "FIGURES", "FRONT", "PAGE", "PICTURE", "PRICED", "REHEARSAL", "SCORER", "SHEET",
+    "SHEET_PAGE", "SUMMARY", "SUMMARY_PAGE", "TOUR_SCORER", "TRACES", "WORTH_ADDING", "Kind", "check_outputs",
 ]  # fmt: skip
 
 _WHOLE: Final = (FRONT_FILE, "manifest.json")  # what says that a folder's files belong together
@@ -150,6 +150,10 @@ def _is_worth_adding(path: Path) -> bool:
         return False
 
 
+REHEARSAL: Final = Kind(
+    "an earlier rehearsal's, with its campaign.json beside it,",
+    lambda path: path.with_name("campaign.json").is_file(),
+)
 TRACES: Final = Kind("records", None)  # nobody can record the same again
 PAGE: Final = Kind("a page of this tool", _is_page)
 PICTURE: Final = Kind("a picture", lambda path: b"<svg" in _head(path))

@@ -10,12 +10,13 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 
-from distill.commands import flags
+from distill.commands import flags, outputs
 
 __all__ = ["HELP", "add_arguments", "run"]
 
 HELP = "policies compared in closed-loop search, at equal rollouts and at equal time"
 _FEW = 6  # decisions a cell, to see how long one takes
+_LEFT = ("summary.json", "cells.parquet", "table.md", "cells.md", "stopping.md", "rehearsal.html")
 _SAY_SECONDS = 60.0
 _PLAYING = ("quick", "full", "stops", "problem", "budget", "policy", "scorer", "seeds", "tuning_seeds")
 _EPILOG = """\
@@ -147,6 +148,7 @@ def _rehearse(args: argparse.Namespace) -> None:
         seeds = campaign.seeds, campaign.tuning_seeds
         print("\n".join(time_table(summarise(results), *seeds, workers=args.workers)))
         return
+    outputs.check_outputs([(args.out / name, outputs.REHEARSAL) for name in _LEFT], [])
     with _told("rehearsing", places) as progress:
         results = rehearse(campaign, args.out, workers=args.workers, progress=progress)
     summary = write_results(results, args.out)

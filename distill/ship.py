@@ -36,6 +36,8 @@ def ship(
         raise InputError("out", "must end in .onnx", str(out))
     front = _read_front(Path(trained))
     entry, why = choose(front["scorers"], latency_us, scorer)
+    if out.resolve() in {(Path(trained) / e["file"]).resolve() for e in front["scorers"]}:
+        raise InputError("out", "must be another file than those of the front", str(out))
     source = Path(trained) / entry["file"]
     if sha256_of(source) != entry["sha256"]:
         raise InputError(str(source), f"must be the file that {FRONT_FILE} measured", "another SHA-256")

@@ -226,6 +226,16 @@ def test_a_training_that_is_stopped_leaves_the_earlier_one_whole(
     assert all(after[name] != before[name] for name in before)
 
 
+def test_a_file_of_the_front_is_not_shipped_over(trained: tuple[Path, dict[str, Any]]) -> None:
+    folder, front = trained
+    before = {e["file"]: (folder / e["file"]).read_bytes() for e in front["scorers"]}
+    for entry in front["scorers"]:
+        with pytest.raises(InputError, match="out: must be another file than those of the front"):
+            ship(folder, folder / entry["file"], scorer="linear")
+    assert {name: (folder / name).read_bytes() for name in before} == before
+    assert not (folder / "linear.json").exists()
+
+
 def test_a_folder_of_something_else_is_not_filled(
     dataset: Path, trained: tuple[Path, dict[str, Any]], tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:

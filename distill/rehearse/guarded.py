@@ -17,6 +17,7 @@ from distill.rehearse.simulator import Action, Advised, Modelled, Outcome, Simul
 __all__ = ["Guarded", "called", "check_simulator", "guarded", "number_of"]
 
 _PROB_SUM_SLACK: Final = 1e-9  # the belief tree record's own rule
+_OURS: Final = str(Path(__file__).parents[1])
 _NEEDED: Final = "name", "discount", "start", "actions", "step", "is_terminal"
 
 
@@ -35,10 +36,10 @@ def called(place: str, method: Callable[..., Any], *arguments: Any) -> Any:
 
 
 def _told(e: BaseException) -> str:
-    """An error in one line, with the last place in the code of others that it went through."""
+    """An error in one line, with the last place that it went through in code that is no package's."""
     text = " ".join(str(e).split())
-    frames = traceback.extract_tb(e.__traceback__)[1:]
-    own = [frame for frame in frames if frame.filename == frames[0].filename]
+    frames = traceback.extract_tb(e.__traceback__)
+    own = [f for f in frames if not f.filename.startswith(_OURS) and "site-packages" not in f.filename]
     where = f" ({Path(own[-1].filename).name} line {own[-1].lineno})" if own else ""
     return f"{type(e).__name__}{': ' if text else ''}{text}{where}"
 

@@ -311,11 +311,16 @@ class SimulatorProblem:
 
     def _worth_of(self, state: State) -> Floats:
         """Exact action values; what was solved for one state answers for all that it leads to."""
-        for solved in self._solved:
-            if state in solved:
-                return solved[state]
+        for known in self._solved:
+            if state in known:
+                return known[state]
         assert isinstance(self.simulator, Modelled)
-        self._solved.append(solve(self.simulator, [state], max_states=self.max_states).action_values)
+        try:
+            solved = solve(self.simulator, [state], max_states=self.max_states)
+        except RefusedError as e:
+            hint = f"leaf_rollouts={LEAF_ROLLOUTS} tells regret against rollouts, without the optimum"
+            raise type(e)(f"{e}; {hint}") from e
+        self._solved.append(solved.action_values)
         return self._solved[-1][state]
 
 

@@ -34,7 +34,8 @@ def left_out_lines(summary: Figures) -> list[str]:
 def short_table(summary: Figures) -> list[str]:
     """What the whole rehearsal says: counts of the aims, and scorer or closed form by kind and cost."""
     campaign, best = summary["campaign"], summary["aims"].get(BEST, {})
-    lines = [f"{len(campaign['problems'])} problems, {campaign['seeds']} paired decisions a cell."]
+    n = len(campaign["problems"])
+    lines = [f"{n} problem{'s' * (n != 1)}, {campaign['seeds']} paired decisions a cell."]
     if campaign["seeds"] < FEWEST:
         lines.append(
             f"These are {TOO_FEW}, and nothing is claimed: below {FEWEST}, 95 % intervals of resampled "

@@ -14,6 +14,7 @@ import pytest
 from ladder import CLOSED_FORM
 
 from distill.errors import InputError
+from distill.rehearse.against import Against
 from distill.rehearse.aimed import FEWEST, TOO_FEW
 from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.findings import BEST, NO_SEARCH, places_of
@@ -221,6 +222,20 @@ def test_few_decisions_claim_nothing():
     assert f"39 decisions, {TOO_FEW} (below 40)" in short_table(few)[-1]
     assert "nothing is claimed" in short_table(few)[1]
     assert not any(TOO_FEW in line for line in short_table(enough))
+
+
+def test_regret_below_the_error_of_its_judge_advises_nothing():
+    """The scorer has 0.5, the closed form 1.1; told against rollouts whose error is 2, neither is known."""
+    judged = replace(results([0.5, 0.5, 0.5]), against={"taxi": Against(4000, 2.0)})
+    summary = summarise(judged)
+    told = {row["problem"]: (row["use"], row["why"].split(" ")[0]) for row in summary["advice"]}
+    assert told == {"taxi": ("static_rate", "all"), "tree-3x2^1-noise1": ("a", "measurably")}
+    assert summary["counted"] == ["tree-3x2^1-noise1"]
+    assert summary["aims"][BEST]["static"]["cells"] == 2
+    assert {row["problems"] for row in summary["break_even"]} == {1}
+    alone = summarise(replace(judged, against={p: Against(4000, 2.0) for p in CAMPAIGN.problems}))
+    assert alone["counted"] == list(CAMPAIGN.problems)
+    assert alone["aims"][BEST]["static"]["cells"] == 4
 
 
 def test_where_no_interval_can_be_told_nothing_is_claimed():

@@ -63,7 +63,7 @@ FAULTS = {
         "step: reward: must be a finite number; got inf"
     ),
     "def step(self, state, action, rng): return 1 / 0": (
-        "step: must not raise; it raised ZeroDivisionError: division by zero (mine.py line "
+        "step: must not raise; it raised ZeroDivisionError: division by zero (mine.py line 23)"
     ),
     "def step(self, state, action, rng): sys.exit(7)": "step: must not raise; it raised SystemExit: 7",
     "def start(self, rng): raise ValueError('two\\nlines')": (

@@ -19,15 +19,15 @@ import os
 import threading
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any, Final, NamedTuple
+from typing import Any, Final
 
 import numpy as np
 import onnxruntime as ort
 from numpy.typing import NDArray
 
 from distill import schema, scorer_file
+from distill.answers import Counters, Scores, bounds, mended, mended_scores
 from distill.errors import DistillError, InputError, ScorerFileError
-from distill.fallback import closed_form_bounds, closed_form_values
 from distill.held_leaves import HeldLeaves
 from distill.leaf_buffers import (
     MAX_LEAVES,
@@ -48,53 +48,6 @@ _KEPT_SIZES: Final = 32  # sets of buffers kept a thread, one a number of leaves
 # A leaf next to a split of a tree ensemble may fall on its other side on another processor.
 _SELF_TEST_SLACK: Final = 1e-4  # of the largest value of a case
 _SELF_TEST_SHARE: Final = 0.1  # of the leaves of a case that may be further off
-
-
-class Scores(NamedTuple):
-    """What a scorer says of each leaf of one tree.
-
-    voc : (n,), the value it was trained on, by default the rate, u a rollout; gross of cost.
-    batch : (n,), the rollouts that value assumes. voc_high : (n,), calibrated upper bound, gross of cost:
-    the exact value lies at or below it as often as `facts["calibration"]` states. in_range : (n,), False
-    where the leaf is unlike those of training, or where the file had no answer and `voc` is the closed-form
-    static rate. There, and with files that have none, `voc_high` is a bound that no value of such a leaf
-    exceeds, or `voc` where that is larger. pick : position of the largest voc - cost, the first on ties;
-    where the value is of k rollouts together, of voc - k cost. worth_it : whether that is above 0. With
-    `tree`, pick (a position within its tree) and worth_it have one entry a tree.
-    """
-
-    voc: Floats
-    batch: NDArray[np.int64]
-    voc_high: Floats
-    in_range: NDArray[np.bool_]
-    pick: Any
-    worth_it: Any
-
-
-@dataclass
-class Counters:
-    """How often what happened since the scorer was loaded; approximate when threads share it.
-
-    decisions : calls answered. out_of_range : calls with some leaf unlike those of training.
-    invalid : calls with values that a leaf table cannot hold. late : calls after their deadline.
-    fallback : calls that the closed form answered alone.
-    """
-
-    decisions: int = 0
-    out_of_range: int = 0
-    invalid: int = 0
-    late: int = 0
-    fallback: int = 0
-
-
-class _Mended(NamedTuple):
-    """Of each leaf: if its values may be so, if the file's answer stands, value, batch, value less cost."""
-
-    usable: NDArray[np.bool_]
-    kept: NDArray[np.bool_]
-    voc: Floats
-    batch: NDArray[np.int64]
-    net: Floats
 
 
 class _Local(threading.local):
@@ -224,14 +177,14 @@ class Scorer:
 
     def _scored(self, buffers: LeafBuffers, deadline: float | None) -> Scores:
         if not self._run(buffers, deadline, buffers.binding):
-            return self._mend(buffers)
+            return mended_scores(buffers, self.strict, self._batch, self.counters)
         out = buffers.out
         return Scores(
             out["voc"].copy(),
             out["batch"].copy(),
             out["voc_high"].copy()
             if buffers.has_bound
-            else np.maximum(self._bounds(buffers, slice(None)), out["voc"]),
+            else np.maximum(bounds(buffers, slice(None), self._batch), out["voc"]),
             out["in_range"].copy(),
             int(out["pick"]),
             bool(out["worth_it"]),
@@ -242,7 +195,7 @@ class Scorer:
             return int(buffers.pick)
         if buffers.answered:  # mending needs the values too
             buffers.answered = self._answers(buffers, buffers.binding)
-        return int(self._mended(buffers).net.argmax())
+        return int(mended(buffers, self.strict, self._batch, self.counters).net.argmax())
 
     def _kind_for(self, columns: dict[str, Any]) -> InputKind:
         """The file's kind, or without a file that of the columns; InputError where they are not its own."""
@@ -313,59 +266,6 @@ class Scorer:
             kept[n] = LeafBuffers(n, kind, self._session, self._picker)
         kept[n].fill_with_care(arrays, scalars)
         return kept[n]
-
-    def _mend(self, buffers: LeafBuffers) -> Scores:
-        """What is said where the file's answer is missing or deserves less trust."""
-        usable, kept, voc, batch, net = self._mended(buffers)
-        in_range = buffers.in_range & kept
-        high = np.zeros(len(voc))
-        if usable.any():
-            high[usable] = self._bounds(buffers, usable)
-        high = np.maximum(high, voc)
-        if buffers.has_bound:
-            high[in_range] = buffers.out["voc_high"][in_range]
-        pick = int(net.argmax())
-        return Scores(voc, batch, high, in_range, pick, bool(net[pick] > 0))
-
-    def _mended(self, buffers: LeafBuffers) -> _Mended:
-        """The values, from the closed form where the file's answer is missing; counted.
-
-        Leaves unlike those of training keep the file's answer: their features, cut to the ranges of
-        training, led it closer to the exact value than the static rate comes.
-        """
-        usable = buffers.usable(self.strict)
-        sound = bool(usable.all())
-        out, n = buffers.out, len(usable)
-        # One bad leaf spoils the features of the others.
-        kept = np.isfinite(out["voc"]) if buffers.answered and sound else np.zeros(n, dtype=bool)
-        some = bool(kept.any())
-        self.counters.invalid += not sound
-        self.counters.out_of_range += some
-        self.counters.fallback += not some
-        together = buffers.batch_size or self._batch
-        given = buffers.kind, buffers.columns, float(buffers.remaining), together
-        if some and kept.all():
-            voc, batch = out["voc"].copy(), out["batch"].copy()
-        elif sound:
-            voc, batch = closed_form_values(*given)
-        else:
-            voc, batch = np.zeros(n), np.zeros(n, dtype=np.int64)
-            if usable.any():
-                rows = {name: x[usable] for name, x in buffers.columns.items()}
-                voc[usable], batch[usable] = closed_form_values(given[0], rows, *given[2:])
-        if some:
-            voc[kept], batch[kept] = out["voc"][kept], out["batch"][kept]
-        net = voc - buffers.columns["cost"] * (together or 1)
-        if not sound:
-            net[~usable] = -np.inf
-        return _Mended(usable, kept, voc, batch, net)
-
-    def _bounds(self, buffers: LeafBuffers, rows: Any) -> Floats:
-        """The bound that no value exceeds; 0 for a rate where nothing is left to roll out."""
-        batch = buffers.batch_size or self._batch
-        if batch is None and buffers.remaining < 1:
-            return np.zeros(len(buffers.action[rows]))
-        return closed_form_bounds(buffers.kind, {k: x[rows] for k, x in buffers.columns.items()}, batch or 1)
 
     def _score_many(
         self, kind: InputKind, columns: dict[str, Any], remaining: Any, tree: Any, deadline: float | None

@@ -61,7 +61,7 @@ def test_workers_stand_where_their_caller_stands_now(tmp_path, monkeypatch):
 
 
 def test_an_interrupt_is_for_the_caller_to_take():
-    """Ctrl-C in a terminal goes to all processes; workers that took it died with a crash dump now and then."""
+    """Ctrl-C in a terminal goes to all processes; workers that took it crashed now and then."""
     assert set(run_calls([(signal.getsignal, (signal.SIGINT,))] * 3, workers=2)) == {signal.SIG_IGN}
     assert signal.getsignal(signal.SIGINT) is signal.default_int_handler
 

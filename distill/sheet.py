@@ -149,11 +149,14 @@ def _rehearsal_lines(r: Mapping[str, Any] | None) -> list[str]:
 
 def _judged(cells: Sequence[Mapping[str, Any]]) -> list[str]:
     """What regret is against, where that is not the exact optimum everywhere."""
-    found = {c.get("regret_against"): c["problem"] for c in cells}
     estimated = sorted({c["problem"] for c in cells if c.get("regret_error")})
     if not estimated:
         return []
-    mixed = " (not counted beside problems with an optimum)" if len(found) > 1 else ""
+    mixed = (
+        " (not counted beside problems with an optimum)"
+        if any(not c.get("regret_error") for c in cells)
+        else ""
+    )
     names = ", ".join(estimated)
     return [f"Regret is against many rollouts at each leaf, not the exact optimum, on {names}{mixed}."]
 

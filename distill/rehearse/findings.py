@@ -15,7 +15,7 @@ from distill.rehearse.aimed import BEST, FEWEST, LIMITS, TOO_FEW
 from distill.rehearse.campaign import Campaign, Results
 from distill.rehearse.left_out import CHOICE, Reason
 from distill.rehearse.loop import Budget
-from distill.rehearse.rehearsal import Cell, Compared, compare, interval, resampled
+from distill.rehearse.rehearsal import Cell, Compared, compare, ends_of, interval, resampled
 from distill.rehearse.tuning import name_of, price_of
 from distill.tree import Floats
 
@@ -255,7 +255,7 @@ def by_kind(results: Results, places: Mapping[tuple[str, Budget], Place]) -> lis
     ratio : geometric mean of `BEST` over the better closed form, over the cells of that kind and cost,
     decisions resampled problem by problem. sampling : the same over the better sampling. use : the scorer
     only where the interval lies below 1; nothing is claimed from fewer than `FEWEST` decisions, or where no
-    interval can be told, since in some resamples nobody has any regret. fell_back : share of choices that
+    interval can be told (`ends_of`). fell_back : share of choices that
     scorers left to the closed form; where that is nearly all, what differs is luck with the clock.
     """
     grouped: dict[tuple[str, float], list[tuple[str, Place]]] = {}
@@ -305,8 +305,9 @@ def _together(results: Results, cells: Sequence[tuple[str, Place]], group: str) 
         out["ratio"] = math.exp(math.fsum(at) / len(at))
         with np.errstate(invalid="ignore"):
             mean: Floats = np.mean(resamples, axis=0)
-        if np.isfinite(mean).all():
-            out["low"], out["high"] = (float(x) for x in np.exp(np.quantile(mean, [0.025, 0.975])))
+        low, high = ends_of(mean, -np.inf)
+        if math.isfinite(high):
+            out["low"], out["high"] = math.exp(low), math.exp(high)
     return out
 
 

@@ -25,7 +25,7 @@ from distill.rehearse.remembered import Remembered
 from distill.tree import BeliefTree, Floats
 from distill.workers import local_pool
 
-__all__ = ["Cell", "Compared", "compare", "interval", "play_stops", "rehearse", "resampled"]
+__all__ = ["Cell", "Compared", "compare", "ends_of", "interval", "play_stops", "rehearse", "resampled"]
 
 _RESAMPLES = 2000
 
@@ -220,7 +220,7 @@ def compare(
         with np.errstate(divide="ignore", invalid="ignore"):
             ratios = (times @ ours) / (times @ theirs)
             ratio = float(ours.mean() / theirs.mean()) if theirs.mean() > 0 else float("nan")
-        low, high = np.quantile(ratios, [0.025, 0.975]) if np.all(np.isfinite(ratios)) else (np.nan, np.nan)
+        low, high = ends_of(ratios) if np.isfinite(ratio) else (np.nan, np.nan)
         out.append(
             Compared(
                 problem, budget, policy, rival,
@@ -228,6 +228,21 @@ def compare(
             )
         )  # fmt: skip
     return out
+
+
+def ends_of(resampled: Floats, least: float = 0.0) -> tuple[float, float]:
+    """95 % percentile interval of resampled ratios (their logarithms: `least` -inf); nan where it has no end.
+
+    Resamples in which the rival has no regret have no ratio, or an infinite one: such a ratio counts below
+    the lower end and above the upper one. Where there are over 2.5 % of them no interval can be told.
+    """
+    if np.all(np.isfinite(resampled)):
+        low, high = np.quantile(resampled, [0.025, 0.975])
+        return float(low), float(high)
+    unknown = np.isnan(resampled)
+    low = np.quantile(np.where(unknown, least, resampled), 0.025, method="lower")
+    high = np.quantile(np.where(unknown, np.inf, resampled), 0.975, method="higher")
+    return (float(low), float(high)) if np.isfinite(high) else (np.nan, np.nan)
 
 
 def interval(x: Floats) -> tuple[float, float]:

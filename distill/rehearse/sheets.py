@@ -114,9 +114,10 @@ def _with_figures(summary: Mapping[str, Any], scorer_file: Path) -> dict[str, An
     if lost := sorted(held - {_place(cell) for cell in new["cells"]}):
         rule = (
             f"holds {len(held)} cells, {len(lost)} of which the new rehearsal lacks; rehearse these "
-            "problems, budgets and policies too, or take the part out of the sheet first. Lacking"
+            "problems, budgets and policies too, or take the part out of the sheet first. "
+            f"Lacking: {', '.join(lost[0])}"
         )
-        raise InputError(f"{path}: rehearsal", rule, ", ".join(lost[0]))
+        raise InputError(f"{path}: rehearsal", rule)
     return {**sheet, "rehearsal": new}
 
 

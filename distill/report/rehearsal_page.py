@@ -48,8 +48,9 @@ _WORDS: Final = {
     "ratio": (
         "A policy's mean regret over that of the best policy of the group, on the same decisions; the best "
         "one is picked on these very decisions, which favours it. Below 1 the policy decides better. "
-        "Intervals: 95 %, decisions resampled in pairs; none can be told where in some resamples nobody has "
-        f"any regret. From fewer than {FEWEST} decisions nothing is claimed: such intervals are too narrow."
+        "Intervals: 95 %, decisions resampled in pairs; none can be told where the rival has no regret "
+        f"in over 2.5 % of the resamples. From fewer than {FEWEST} decisions nothing is claimed: such "
+        "intervals are too narrow."
     ),
     "best scorer": (
         "For either half of the decisions the scorer, file and use, that did best on the other half: the "

@@ -17,7 +17,7 @@ from distill.rehearse.lookahead import Settings
 from distill.rehearse.loop import Budget, posterior_means
 from distill.rehearse.policies import ByRule
 from distill.rehearse.problems import SimulatorProblem, TreeProblem
-from distill.rehearse.rehearsal import Cell, compare, rehearse
+from distill.rehearse.rehearsal import Cell, compare, ends_of, rehearse
 from distill.rehearse.simulator import Outcome
 from distill.rehearse.value_policies import ByValue
 
@@ -214,6 +214,20 @@ def test_intervals_cover_the_true_ratio():
         (found,) = compare(cells, "ours", ["rival"])
         covered += found.low <= 0.8 <= found.high
     assert 178 <= covered <= 200
+
+
+def test_resamples_without_a_ratio_widen_the_interval_and_end_it_where_they_are_many():
+    """Regret in 5 of 40 decisions: in (35/40)^40, half a per cent, of resamples the rival has none."""
+    some, once = np.zeros(40), np.zeros(40)
+    some[:5], once[:1] = 1.0, 1.0
+    (found,) = compare([cell("ours", some / 2), cell("rival", some)], "ours", ["rival"])
+    assert (found.low, found.ratio, found.high) == (0.5, 0.5, 0.5)
+    (found,) = compare([cell("ours", some[::-1]), cell("rival", some)], "ours", ["rival"])
+    assert found.low < 0.3 < 1 < 3 < found.high < np.inf
+    (found,) = compare([cell("ours", once), cell("rival", once)], "ours", ["rival"])
+    assert found.ratio == 1
+    assert np.isnan([found.low, found.high]).all()
+    assert ends_of(np.log([0.5] * 99 + [1e-300]), -np.inf)[1] == pytest.approx(np.log(0.5), rel=CLOSED_FORM)
 
 
 def test_no_regret_gives_no_ratio():

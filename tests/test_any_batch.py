@@ -242,7 +242,7 @@ def test_audit_asks_each_recorded_tree_at_its_own_batch(shipped, tmp_path):
     assert found["now"]["forgone_percent"]["value"] < 2
     assert not found["worse"]
     step = found["drift"]["columns"]["step"]
-    assert step["meaning"] == "feature step, median leaf"
+    assert step["meaning"].startswith("feature of the median leaf: ")
     assert not step["drifted"]
 
 

@@ -94,7 +94,7 @@ def _cluster(address: str) -> Iterator[_Watch]:
     try:
         from distributed import Client
     except ImportError:
-        raise InputError("dask", "needs the cluster extra: pip install 'voc-distill[cluster]'") from None
+        raise InputError("dask", "needs the cluster extra: in the checkout, pip install '.[cluster]'") from None
     with _quiet("distributed", "distributed.client", "tornado.application"):
         try:
             client = Client(address, timeout=_CONNECT_SECONDS, set_as_default=False)

@@ -12,6 +12,7 @@ import pytest
 from distill.cli import run
 from distill.family import draw, load_family
 from distill.record import parse_record, to_record
+from distill.runtime import Scorer
 from distill.sample_data import FAMILIES
 
 ROOT = Path(__file__).parents[1]
@@ -41,10 +42,8 @@ def test_the_records_of_the_data_page_are_valid():
     ]
 
 
-def test_the_embedding_runs(monkeypatch):
-    (code,) = (block for block in blocks("python") if "scorer.score" in block)
-    monkeypatch.chdir(ROOT)
-    scope = {
+def leaves():
+    return {
         "mean": np.array([3.1, 2.4, 2.9]),
         "var": np.array([0.2, 1.1, 0.8]),
         "noise": np.full(3, 4.0),
@@ -53,15 +52,27 @@ def test_the_embedding_runs(monkeypatch):
         "action": np.array([1, 0, 0]),
         "cost": np.zeros(3),
     }
-    arguments = re.search(r"scorer\.pick\((.*?)\n\)", code, flags=re.S)
-    assert arguments is not None
-    for call in ("score", "hold"):
-        code = code.replace(f"scorer.{call}(...)", f"scorer.{call}({arguments[1]}\n)")
-    code = code.replace("held.update(", "first = leaf\nheld.update(")
-    exec(code, scope)
+
+
+def test_the_embedding_runs(monkeypatch):
+    (code,) = (block for block in blocks("python") if "scorer.score" in block)
+    monkeypatch.chdir(ROOT)
+    scope = leaves()
+    exec(code.replace("held.update(", "first = leaf\nheld.update("), scope)
     assert scope["first"] == scope["scores"].pick
     assert 0 <= scope["leaf"] < 3
     assert scope["scores"].voc.shape == (3,)
+
+
+@pytest.mark.parametrize(("remaining", "who"), [(60, "scorer"), (59, "closed"), (1, "scorer")])
+def test_the_hand_over_runs(remaining, who):
+    """In turns while half a rollout a leaf is left, then the scorer alone."""
+    (code,) = (block for block in blocks("python") if "Scorer.closed_form()" in block)
+    scope = {**leaves(), "remaining": remaining, "Scorer": Scorer}
+    scope["scorer"] = Scorer.load(ROOT / "models" / "cold-store.onnx")
+    exec(code, scope)
+    assert scope["chooser"] is scope[who]
+    assert 0 <= scope["leaf"] < 3
 
 
 def test_the_backup_runs(monkeypatch):

@@ -94,7 +94,8 @@ def _cluster(address: str) -> Iterator[_Watch]:
     try:
         from distributed import Client
     except ImportError:
-        raise InputError("dask", "needs the cluster extra: in the checkout, pip install '.[cluster]'") from None
+        rule = "needs the cluster extra: pip install '.[cluster]' in a checkout of voc-distill"
+        raise InputError("dask", rule) from None
     with _quiet("distributed", "distributed.client", "tornado.application"):
         try:
             client = Client(address, timeout=_CONNECT_SECONDS, set_as_default=False)

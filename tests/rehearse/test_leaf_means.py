@@ -105,7 +105,7 @@ HAND = [0.3 + 0.5 * 0.45, 0.6 + 0.5 * 0.45]  # the first toss, then a random one
 
 
 def test_means_are_those_of_rollouts_and_their_error_is_the_one_that_they_have():
-    """Against values by hand; and the error of a regret against its spread over 150 estimates."""
+    """Against values by hand; and the error of a regret against its spread over 80 estimates."""
     settings = Settings(depth=1, length=5, plans=True)
     problem = SimulatorProblem(Toss(), settings, most_steps=1, leaf_rollouts=4000)
     draw = problem.draw(0)
@@ -114,10 +114,10 @@ def test_means_are_those_of_rollouts_and_their_error_is_the_one_that_they_have()
     assert draw.worth_error == pytest.approx(np.sqrt(sum(per_rollout) / 4000), rel=0.1)
     assert np.all(np.abs(draw.worth - HAND) < STANDARD_ERRORS * np.sqrt(np.array(per_rollout) / 4000))
     few = replace(problem, leaf_rollouts=100)
-    gaps = [np.diff(few.draw(seed).worth)[0] for seed in range(150)]
+    gaps = [np.diff(few.draw(seed).worth)[0] for seed in range(80)]
     said = few.draw(0).worth_error
     # The spread of n normals has a relative standard error of 1 / sqrt(2 n).
-    assert abs(np.std(gaps) / said - 1) < STANDARD_ERRORS / np.sqrt(2 * 150) + 0.1
+    assert abs(np.std(gaps) / said - 1) < STANDARD_ERRORS / np.sqrt(2 * 80) + 0.1
 
 
 def test_the_estimate_of_a_draw_is_none_of_its_luck_and_the_same_for_all():
@@ -255,13 +255,13 @@ def test_counts_and_means_never_mix_what_regret_is_against(dock):
 
 
 def test_a_real_environment_without_a_table_is_rehearsed(tmp_path, monkeypatch, capsys):
-    """CartPole by copies of its state, plans of two pushes."""
+    """CartPole by copies of its state, plans of one push."""
     (tmp_path / "pole.py").write_text(
         "from distill.rehearse.gym_copies import GymCopies\n"
         "from distill.rehearse.lookahead import Settings\n"
         "from distill.rehearse.problems import SimulatorProblem\n"
         "def problem():\n"
-        "    settings = Settings(depth=2, length=8, plans=True)\n"
+        "    settings = Settings(depth=1, length=6, plans=True)\n"
         "    return SimulatorProblem(GymCopies('CartPole-v1', discount=0.98), settings, leaf_rollouts=100)\n"
     )
     monkeypatch.chdir(tmp_path)

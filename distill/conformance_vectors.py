@@ -177,4 +177,7 @@ def _scorer(path: Path, name: str) -> dict[str, Any]:
 
 
 if __name__ == "__main__":
+    if len(sys.argv) != 2:
+        print("usage: python -m distill.conformance_vectors FOLDER", file=sys.stderr)
+        sys.exit(2)
     print(make(sys.argv[1]))

@@ -18,7 +18,7 @@ from distill.learners import TARGETS, BoostingLearner, DenseLearner, LinearLearn
 
 # Sizes at which the common checks' small data sets can be learned.
 COMMON = [
-    BoostingLearner(n_trees=100, min_leaf=5),
+    BoostingLearner(n_trees=40, min_leaf=5),
     DenseLearner(epochs=60, batch=32),
     LinearLearner(),
 ]

@@ -75,7 +75,7 @@ def test_agrees_with_the_oracle_on_500_more_trees(first):
 
 
 def test_relative_accuracy_and_bounds_against_80_bit_arithmetic():
-    shares = [check_against_80_bits(seed)[0] for seed in range(1000, 1008)]
+    shares = [check_against_80_bits(seed)[0] for seed in range(1000, 1004)]
     assert max(shares) <= 1
 
 

@@ -91,23 +91,33 @@ def _closed_quietly(results: Any) -> Iterator[Any]:
 
 @contextlib.contextmanager
 def _cluster(address: str) -> Iterator[_Watch]:
-    try:
-        from distributed import Client
-    except ImportError:
-        rule = "needs the cluster extra: pip install '.[cluster]' in a checkout of voc-distill"
-        raise InputError("dask", rule) from None
     with _quiet("distributed", "distributed.client", "tornado.application"):
-        try:
-            client = Client(address, timeout=_CONNECT_SECONDS, set_as_default=False)
-        except (OSError, ValueError, TypeError) as e:
-            reason = " ".join(str(e).split())
-            rule = f"must be the address of a running scheduler ({reason})"
-            raise InputError("dask", rule, address) from None
+        client = _client(address)
         try:
             yield _Watch(client, address)
         finally:
             with contextlib.suppress(OSError):
                 client.close(timeout=2)
+
+
+def _client(address: str) -> Any:
+    try:
+        from distributed import Client
+    except ImportError:
+        rule = "needs the cluster extra: pip install '.[cluster]' in a checkout of voc-distill"
+        raise InputError("dask", rule) from None
+    stalled = False
+    while True:
+        try:
+            return Client(address, timeout=_CONNECT_SECONDS, set_as_default=False)
+        except (OSError, ValueError, TypeError) as e:
+            reason = " ".join(str(e).split())
+            rule = f"must be the address of a running scheduler ({reason})"
+            raise InputError("dask", rule, address) from None
+        except AssertionError:  # Its own thread has not come up in 10 s: this machine stood still.
+            if stalled:
+                raise WorkersError("this machine is too busy to ask the scheduler") from None
+            stalled = True
 
 
 @contextlib.contextmanager

@@ -11,6 +11,7 @@ import threading
 import time
 from pathlib import Path
 
+import distributed
 import numpy as np
 import psutil
 import pytest
@@ -111,6 +112,27 @@ def test_the_work_is_done_on_the_cluster_from_its_first_worker_on(tmp_path):
     with dask_cluster(tmp_path, workers=1) as cluster:
         found = set(run_calls(((os.getpid, ()) for _ in range(30)), dask=cluster.address))
         assert found == {cluster.workers[0].pid}
+
+
+@pytest.mark.parametrize("stalls", [1, 2])
+def test_a_machine_that_stands_still_is_given_a_second_chance(stalls, tmp_path, monkeypatch):
+    """As the client does where its own thread does not come up in time."""
+    real, left = distributed.Client, [stalls]
+
+    def client(*args, **kwargs):
+        if left[0]:
+            left[0] -= 1
+            raise AssertionError
+        return real(*args, **kwargs)
+
+    monkeypatch.setattr(distributed, "Client", client)
+    with dask_cluster(tmp_path, workers=1) as cluster:
+        calls = run_calls([(divmod, (7, 2))], dask=cluster.address)
+        if stalls == 1:
+            assert list(calls) == [(3, 1)]
+        else:
+            with pytest.raises(WorkersError, match="this machine is too busy to ask the scheduler"):
+                list(calls)
 
 
 def test_no_worker_is_one_clear_error(tmp_path, monkeypatch):

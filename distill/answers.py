@@ -95,16 +95,12 @@ def mended(buffers: LeafBuffers, strict: bool, batch: int | None, counters: Coun
     counters.out_of_range += some
     counters.fallback += not some
     together = buffers.batch_size or batch
-    given = buffers.kind, buffers.columns, float(buffers.remaining), together
-    if some and kept.all():
-        voc, batches = out["voc"].copy(), out["batch"].copy()
-    elif sound:
-        voc, batches = closed_form_values(*given)
-    else:
-        voc, batches = np.zeros(n), np.zeros(n, dtype=np.int64)
-        if usable.any():
-            rows = {name: x[usable] for name, x in buffers.columns.items()}
-            voc[usable], batches[usable] = closed_form_values(given[0], rows, *given[2:])
+    voc, batches = np.zeros(n), np.zeros(n, dtype=np.int64)
+    if usable.any() and not (some and kept.all()):
+        at: Any = slice(None) if sound else usable
+        rows = {name: x[at] for name, x in buffers.columns.items()}
+        remaining = float(buffers.remaining)
+        voc[at], batches[at] = closed_form_values(buffers.kind, rows, remaining, together)
     if some:
         voc[kept], batches[kept] = out["voc"][kept], out["batch"][kept]
     net = voc - buffers.columns["cost"] * (together or 1)

@@ -28,6 +28,7 @@ from distill.labelling import OWN_BATCH, Asked
 from distill.metrics import picks
 from distill.recorded import label
 from distill.runtime import Scorer
+from distill.schema import AUDIT_FORMAT
 from distill.scorer_inputs import LEAF_TABLE, VARIES
 from distill.sheet import SHEET_FORMAT
 from distill.sources import tree_key
@@ -35,9 +36,8 @@ from distill.traces import BadLines, read_many, write_trees
 from distill.tree import BeliefTree, Floats
 from distill.validate import examine, sample_pairs
 
-__all__ = ["AUDIT_FORMAT", "WORTH_ADDING", "Audit", "audit", "sample_trees", "write_audit"]
+__all__ = ["WORTH_ADDING", "Audit", "audit", "sample_trees", "write_audit"]
 
-AUDIT_FORMAT: Final = "voc-audit/1"
 WORTH_ADDING: Final = "worth-adding.jsonl.gz"
 _JUDGED: Final = {
     "forgone_percent": "forgone share",

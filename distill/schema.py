@@ -10,6 +10,7 @@ from typing import Final
 
 TREE_FORMAT: Final = "belief-tree/1"
 DATASET_FORMAT: Final = "voc-dataset/1"
+AUDIT_FORMAT: Final = "voc-audit/1"
 SCORER_FORMAT: Final = "voc-scorer/2"  # 2: with the output voc_high
 FAMILY_FORMAT: Final = "tree-family/1"
 

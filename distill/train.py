@@ -142,7 +142,9 @@ def train(
         graph = FeatureGraph.of_value(about["value"], data.kind)
         first_order = graph.matrix({**split.held_out.columns, "tree": split.held_out.tree}).first_order
         given = {
-            lean: _Given.of(FeatureGraph.of_value(about["value"], data.kind, lean=lean), split)
+            lean: _Given.of(
+                FeatureGraph.of_value(about["value"], data.kind, lean=True) if lean else graph, split
+            )
             for lean in {recipe.lean for recipe in chosen}
         }
         cases = timed_cases(split.held_out, about["value"], _LEAVES, seed)

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from distill import schema
 from distill.errors import RefusedError
 
-__all__ = ["BeliefTree", "LeafTable", "leaf_table"]
+__all__ = ["BeliefTree", "LeafTable", "leaf_paths", "leaf_table"]
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -113,10 +113,30 @@ class LeafTable:
     high: Floats | None = None
 
 
-def leaf_table(tree: BeliefTree) -> LeafTable:
-    """The leaf table of a decision-only tree with independent leaves, in leaf order.
+def leaf_paths(tree: BeliefTree) -> tuple[Floats, Floats, Ints]:
+    """Of each leaf, in leaf order: gain, offset and root action.
 
     gain = product of discounts on the way, offset = sum of reward times the discounts before it.
+    """
+    n = tree.n_nodes
+    gain, offset = np.ones(n), np.zeros(n)
+    action = np.full(n, -1, dtype=np.int64)
+    actions = tree.action_nodes
+    action[actions] = np.arange(len(actions))
+    parent = tree.parent.tolist()
+    for c in range(1, n):
+        p = parent[c]
+        offset[c] = offset[p] + gain[p] * tree.reward[c]
+        gain[c] = gain[p] * tree.discount[c]
+        if p > 0:
+            action[c] = action[p]
+    leaves = tree.leaf_nodes
+    return gain[leaves], offset[leaves], action[leaves]
+
+
+def leaf_table(tree: BeliefTree) -> LeafTable:
+    """The leaf table of a decision-only tree with independent leaves, in leaf order; see `leaf_paths`.
+
     Raises RefusedError for chance nodes or `cov`, which a leaf table cannot hold.
 
     >>> from distill.record import from_record
@@ -131,19 +151,6 @@ def leaf_table(tree: BeliefTree) -> LeafTable:
         raise RefusedError("a leaf table holds decision nodes only; this tree has chance nodes")
     if tree.cov is not None:
         raise RefusedError("a leaf table holds independent leaves; this tree has 'cov'")
-    n = tree.n_nodes
-    gain, offset = np.ones(n), np.zeros(n)
-    action = np.full(n, -1, dtype=np.int64)
-    actions = tree.action_nodes
-    action[actions] = np.arange(len(actions))
-    parent = tree.parent.tolist()
-    for c in range(1, n):
-        p = parent[c]
-        offset[c] = offset[p] + gain[p] * tree.reward[c]
-        gain[c] = gain[p] * tree.discount[c]
-        if p > 0:
-            action[c] = action[p]
-    leaves = tree.leaf_nodes
     assert tree.cost is not None
     columns = {name: getattr(tree, name) for name in (*schema.GAUSSIAN_COLUMNS, *schema.WIN_LOSS_COLUMNS)}
-    return LeafTable(gain[leaves], offset[leaves], action[leaves], tree.cost, **columns)
+    return LeafTable(*leaf_paths(tree), tree.cost, **columns)

@@ -12,7 +12,7 @@ import numpy as np
 
 from distill import schema
 from distill.query import scale_of
-from distill.tree import BeliefTree, Floats, Ints
+from distill.tree import BeliefTree, Floats, Ints, leaf_paths
 
 __all__ = ["COLUMNS", "EdgeRewards", "decision_key", "depths", "edge_rewards", "path_gains", "tree_columns"]
 
@@ -68,7 +68,7 @@ def _row(tree: BeliefTree) -> dict[str, float]:
     if scale > 0:
         row["scale"] = math.log10(scale)
         row["mean spread"] = float(np.std(mean)) / scale
-        row["offset spread"] = float(np.std(_offsets(tree))) / scale
+        row["offset spread"] = float(np.std(leaf_paths(tree)[1])) / scale
         assert tree.cost is not None
         if np.any(tree.cost > 0):
             row["cost"] = math.log10(float(np.mean(tree.cost)) / scale)
@@ -116,15 +116,6 @@ def path_gains(tree: BeliefTree) -> tuple[Floats, Ints]:
     return log_gain[leaves], np.where(lone[action[leaves]], 1, depths(tree)[leaves])
 
 
-def _offsets(tree: BeliefTree) -> Floats:
-    gain, offset = np.ones(tree.n_nodes), np.zeros(tree.n_nodes)
-    for c, p in enumerate(tree.parent.tolist()):
-        if c:
-            gain[c] = gain[p] * tree.discount[c]
-            offset[c] = offset[p] + gain[p] * tree.reward[c]
-    return np.asarray(offset[tree.leaf_nodes])
-
-
 @dataclass(frozen=True, eq=False)
 class EdgeRewards:
     """What a tree tells of rewards that are alike on every edge: each of `values` is a sum of such rewards,
@@ -153,7 +144,7 @@ def edge_rewards(trees: Sequence[BeliefTree]) -> tuple[list[EdgeRewards], bool]:
         before = [np.exp(logs.sum() / edges.sum()) ** np.arange(k) for k in edges]
         out.append(
             EdgeRewards(
-                _offsets(tree), float(sum(w.sum() for w in before)), float(sum(w @ w for w in before))
+                leaf_paths(tree)[1], float(sum(w.sum() for w in before)), float(sum(w @ w for w in before))
             )
         )
     return out, True

@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 from ladder import CLOSED_FORM, QUADRATURE
 from leaf_tables import table
-from small_dataset import FAMILY, labelled
+from small_dataset import FAMILY, forgone, labelled
 
 from distill.audit import audit
 from distill.candidates import Candidates
@@ -22,7 +22,7 @@ from distill.family import draw, load_family, parse_family
 from distill.generate import add, generate
 from distill.infer import infer
 from distill.labelling import OWN_BATCH, Asked
-from distill.metrics import picks, ratio_over_trees
+from distill.metrics import ratio_over_trees
 from distill.peers import (
     FIRST_ORDER,
     MOMENTS,
@@ -250,15 +250,6 @@ def test_shifts_keep_each_trees_batch(scorer):
     found = measure_shifts(scorer, family(), names=["as given", "noise x4"], trees=20, n_boot=10)
     assert set(found) == {"as given", "noise x4"}
     assert all(m["forgone_percent"]["value"] < 10 and m["aside"] == 0 for m in found.values())
-
-
-def forgone(path: Path, dataset: Path) -> tuple[np.ndarray, np.ndarray]:
-    """What the picks of a scorer file lose at each tree, and the best there is, u."""
-    scorer = Scorer.load(path)
-    rows, _ = Candidates.read(dataset, like=scorer.kind)
-    best = rows.groups.highest(rows.label)
-    score = scorer.score(**rows.columns, tree=rows.tree).voc
-    return best - rows.label[picks(rows.groups, score)], best
 
 
 @pytest.mark.slow

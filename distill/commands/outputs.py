@@ -15,6 +15,8 @@ from typing import Any, Final
 
 from distill.errors import InputError, ScorerFileError
 from distill.files import is_stream
+from distill.schema import AUDIT_FORMAT, SCORER_FORMAT
+from distill.scorer_file import MAX_BYTES
 from distill.sheet import FRONT_FILE, FRONT_FORMAT, SHEET_FORMAT
 
 __all__ = [
@@ -25,7 +27,6 @@ __all__ = [
 _WHOLE: Final = (FRONT_FILE, "manifest.json")  # what says that a folder's files belong together
 _HEAD: Final = 4096  # bytes that tell a page or a line of text
 _MOST_JSON: Final = 64 * 2**20
-_MOST_SCORER: Final = 16 * 2**20
 
 
 @dataclass(frozen=True)
@@ -126,12 +127,13 @@ def _is_priced(path: Path) -> bool:
 def _is_scorer(path: Path) -> bool:
     from distill.onnx_reader import read_model
 
-    if path.stat().st_size > _MOST_SCORER:
+    if path.stat().st_size > MAX_BYTES:
         return False
     try:
-        return read_model(path.read_bytes()).metadata.get("format", "").startswith("voc-scorer/")
+        found = read_model(path.read_bytes()).metadata.get("format", "")
     except ScorerFileError:
         return False
+    return found.partition("/")[0] == SCORER_FORMAT.partition("/")[0]  # of any version
 
 
 def _is_sheet_page(path: Path) -> bool:
@@ -141,7 +143,7 @@ def _is_sheet_page(path: Path) -> bool:
 
 def _is_worth_adding(path: Path) -> bool:
     """An audit's: it stands beside that audit's figures."""
-    if not _of_format("voc-audit/1")(path.with_name("audit.json")):
+    if not _of_format(AUDIT_FORMAT)(path.with_name("audit.json")):
         return False
     try:
         with gzip.open(path) as f:
@@ -167,7 +169,7 @@ SCORER: Final = Kind("a scorer file", _is_scorer)
 SHEET: Final = Kind("a scorer's sheet", _of_format(SHEET_FORMAT))
 SHEET_PAGE: Final = Kind("a scorer's sheet", _is_sheet_page)
 FRONT: Final = Kind("the front of an earlier training", _of_format(FRONT_FORMAT))
-AUDIT: Final = Kind("the figures of an audit", _of_format("voc-audit/1"))
+AUDIT: Final = Kind("the figures of an audit", _of_format(AUDIT_FORMAT))
 WORTH_ADDING: Final = Kind("an earlier audit's, with its audit.json beside it,", _is_worth_adding)
 SUMMARY: Final = Kind("an earlier tour's summary", _is_summary)
 SUMMARY_PAGE: Final = Kind(
